@@ -1,0 +1,133 @@
+"""What every test may ask for.  Heavy things are made once in a session."""
+
+import csv
+import os
+from collections.abc import Callable, Iterator
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+ROOT = Path(__file__).resolve().parent.parent
+EVIDENCE_ROWS: dict[tuple[str, str], dict[str, str]] = {}
+
+
+def pytest_addoption(parser: pytest.Parser) -> None:
+    parser.addoption("--browser", action="store_true", help="run the tests that drive a real Chromium")
+
+
+def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item]) -> None:
+    if config.getoption("--browser"):
+        return
+    skip = pytest.mark.skip(reason="needs --browser and a Chromium")
+    for item in items:
+        if "browser" in item.keywords:
+            item.add_marker(skip)
+
+
+def open_data_folder() -> Path:
+    """The folder of real measurement files: SKYLAG_OPEN_DATA, or the usual place beside the project."""
+    return Path(os.environ.get("SKYLAG_OPEN_DATA", ROOT.parent / "shared" / "open-data"))
+
+
+@pytest.fixture(scope="session")
+def open_data() -> Path:
+    """The folder of real measurement files; skips where it is absent."""
+    folder = open_data_folder()
+    if not folder.is_dir():
+        pytest.skip(f"no real measurement files at {folder}; set SKYLAG_OPEN_DATA to the folder that holds them")
+    return folder
+
+
+@pytest.fixture(scope="session")
+def sample_folder() -> Path:
+    """The invented network's files."""
+    return ROOT / "sample_data"
+
+
+@pytest.fixture
+def rng() -> np.random.Generator:
+    """A generator with a fixed seed."""
+    return np.random.default_rng(20240917)
+
+
+Evidence = Callable[..., None]
+
+
+@pytest.fixture
+def evidence(request: pytest.FixtureRequest) -> Evidence:
+    """Record a check against the outside world in tests/EVIDENCE.md, and assert it."""
+
+    def check(
+        subject: str, *, source: str, expected: float, got: float, tolerance: float, unit: str = "", at_most: bool = False
+    ) -> None:
+        """Assert |got - expected| <= tolerance, or got <= expected when `at_most`; the row is written either way."""
+        good = got <= expected if at_most else abs(got - expected) <= tolerance
+        EVIDENCE_ROWS[(request.node.nodeid.split("::")[0], subject)] = {
+            "subject": subject,
+            "source": source,
+            "expected": f"{'at most ' if at_most else ''}{expected:.12g}",
+            "got": f"{got:.12g}",
+            "tolerance": "" if at_most else f"{tolerance:.3g}",
+            "unit": unit,
+            "verdict": "met" if good else "NOT MET",
+        }
+        assert good, f"{subject}: expected {expected}, got {got}, tolerance {tolerance} {unit} ({source})"
+
+    return check
+
+
+def pytest_sessionfinish(session: pytest.Session) -> None:
+    """Write the table of outside checks: rows of files not run this time are kept from the last run."""
+    if not EVIDENCE_ROWS:
+        return
+    path = ROOT / "tests" / "EVIDENCE.md"
+    ran = {str(item.nodeid.split("::")[0]) for item in session.items}
+    write_evidence(path, EVIDENCE_ROWS, ran)
+
+
+_COLUMNS = ("test file", "subject", "source", "expected", "got", "tolerance", "unit", "verdict")
+
+
+def write_evidence(path: Path, rows: dict[tuple[str, str], dict[str, str]], ran: set[str]) -> None:
+    """Merge new rows into the table on disk, sorted by file and subject."""
+    merged: dict[tuple[str, str], dict[str, str]] = {}
+    if path.is_file():
+        for line in path.read_text(encoding="utf-8").splitlines():
+            cells = [c.strip().replace("&#124;", "|") for c in line.strip().strip("|").split("|")]
+            if len(cells) == len(_COLUMNS) and cells[0].startswith("tests/"):
+                old = dict(zip(_COLUMNS, cells, strict=True))
+                if old["test file"] not in ran and (path.parent.parent / old["test file"]).is_file():
+                    merged[(old["test file"], old["subject"])] = old
+    for (file, subject), row in rows.items():
+        merged[(file, subject)] = {"test file": file, **row}
+    lines = [
+        "# Checks against the outside world",
+        "",
+        "Written by the test run. Each row: what was checked, the published source (or \"common practice\", or \"from",
+        "memory\"), the expected value, the value got, the tolerance.",
+        "",
+        "| " + " | ".join(_COLUMNS) + " |",
+        "|" + "---|" * len(_COLUMNS),
+    ]
+    for key in sorted(merged):
+        lines.append("| " + " | ".join(merged[key][c].replace("|", "&#124;") for c in _COLUMNS) + " |")
+    text = "\n".join(lines) + "\n"
+    if not path.is_file() or path.read_text(encoding="utf-8") != text:
+        path.write_text(text, encoding="utf-8")
+
+
+def reference_rows(name: str) -> list[dict[str, str]]:
+    """The rows of a table of published values under tests/reference; lines starting with # name the source."""
+    path = ROOT / "tests" / "reference" / name
+    with path.open(encoding="utf-8") as lines:
+        return list(csv.DictReader(line for line in lines if not line.startswith("#")))
+
+
+@pytest.fixture
+def quiet_environment(monkeypatch: pytest.MonkeyPatch) -> Iterator[None]:
+    """No setting of this machine leaks into a test."""
+    for name in list(os.environ):
+        if name.startswith("SKYLAG_") and name != "SKYLAG_OPEN_DATA":
+            monkeypatch.delenv(name)
+    yield
