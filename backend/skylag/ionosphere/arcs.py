@@ -6,6 +6,7 @@ change is not cut to shreds.  Loss-of-lock bits lower the thresholds; alone they
 starts a new arc and says why.  Needs no orbits; elevations, where given, only weight the levelling.
 """
 
+import itertools
 from dataclasses import dataclass
 
 import numpy as np
@@ -24,7 +25,7 @@ class ArcChoices:
 
     longest_gap_s   a longer silence of a satellite ends the arc (common practice: 2 to 5 minutes)
     shortest_arc_s  shorter arcs cannot be levelled and are dropped (common practice: 10 to 30 minutes)
-    phase_step_tecu smallest geometry-free step called a slip; equal slips (1, 1) are 0.45 to 0.52 TECU on the usual pairs
+    phase_step_tecu smallest geometry-free step called a slip; equal slips (1, 1) make 0.45 to 0.52 TECU
     noise_factor    how many times the running scatter a step must exceed
     level_block_s   code multipath is taken as common within a block of this length (common practice: 5 to 15 minutes)
     """
@@ -162,7 +163,7 @@ def _breaks(
     why[1:][gap > max(choices.longest_gap_s, 1.5 * interval_s)] = _GAP
     why[1:][np.diff(resets) > 0] = _RESET
     edges = [*np.flatnonzero(why >= 0), len(phase)]
-    for start, end in zip(edges[:-1], edges[1:], strict=True):
+    for start, end in itertools.pairwise(edges):
         part = slice(start, end)
         slips = _slips(
             phase[part], wide[part], seconds[part], lost[part], interval_s, choices, wavelength1_m, wavelength2_m
