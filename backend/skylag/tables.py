@@ -191,6 +191,7 @@ class Ephemerides:
     channels: Ints
     group_delays_s: Floats
     ionosphere: Mapping[str, tuple[float, ...]] = field(default_factory=dict)
+    rates: Floats | None = None  # (N, 2) change of the semi-major axis [m/s] and of delta_n [rad/s^2]; None = all zero
 
     KEPLER = ("sqrt_a", "e", "i0", "idot", "omega0", "omega_dot", "omega", "m0", "delta_n",
               "cuc", "cus", "crc", "crs", "cic", "cis", "toe_s")  # fmt: skip
@@ -280,7 +281,7 @@ class Thresholds:
     """What makes a state of a place: slope limits [mm/km] and delay-uncertainty limits; see `impact.states`."""
 
     strained_mm_per_km: float = 8.0
-    broken_mm_per_km: float = 30.0
+    broken_mm_per_km: float = 25.5
     strained_roti: float = 0.5  # TECU/min
     broken_roti: float = 1.0
     unseen_sigma_m: float = 1.5  # delay sigma [m] from which a cell is not seen
@@ -410,7 +411,14 @@ class Calibration:
     ray_bias_sigma: Floats
     receiver_sigma: Floats  # (receivers,) sigma [TECU] of the level common to all rays of a receiver
     summary: Mapping[str, Any]
+    arc_sigma: Floats  # (rays,) sigma [TECU] of the level of the ray's arc after the adjustment
+    ray_bias_rows: Ints  # (rays, 2) rows of `biases`: the receiver's and the satellite's
+    ray_per_ns: Floats  # (rays,) levelled slant content [TECU] per ns of either bias (negative)
+    covariance: Floats  # (biases, biases) [ns^2]
+    datum_of_row: tuple[str, ...]  # per bias, how its level was chosen
+    shell_height_sigma_m: float
     high_layer: Floats | None = None  # (rays,) slant content [TECU] above the shell's reach, taken off before mapping
+    high_layer_vertical: Floats | None = None  # (rays,) the same, straight up at the pierce point
 
 
 @dataclass(frozen=True)
@@ -427,9 +435,13 @@ class Samples:
     sigma: Floats
     arc_sigma: Floats  # vertical, shared along the arc
     receiver_sigma: Floats  # vertical, shared by the receiver
+    own_sigma: Floats  # vertical, the ray's own: noise and mapping
+    bias_rows: Ints  # (N, 2) the two biases in each ray, rows of `bias_covariance`
+    bias_factor: Floats  # vertical content [TECU] per ns of bias
+    bias_covariance: Floats  # [ns^2]
 
     def __post_init__(self) -> None:
-        _same_length(self, "rays", "stec", "vtec", "sigma", "arc_sigma", "receiver_sigma")
+        _same_length(self, "rays", "stec", "vtec", "sigma", "arc_sigma", "receiver_sigma", "own_sigma", "bias_rows")
 
 
 @dataclass(frozen=True)
@@ -549,3 +561,238 @@ def concatenate(parts: Sequence[Rays]) -> Rays:
         interval_s=max(p.interval_s for p in parts),
         **{name: np.concatenate(values) for name, values in columns.items()},
     )
+
+
+# ---------------------------------------------------------------------------------------------- what is not smooth
+
+# The ways a slope is seen (codes of `Slopes.way`).
+SLOPE_WAYS = ("pair", "pair change", "path", "field")
+
+
+@dataclass(frozen=True)
+class Slopes:
+    """Steep slopes, one row per witness and epoch; slopes are vertical, mm/km on 1575.42 MHz, never negative.
+
+    way        codes of SLOPE_WAYS: two receivers on one satellite; the same, as departure from its own median over the
+               common arc (free of biases); one satellite's pierce point along its path (mixes time and space)
+    time; receiver, other (row numbers of receivers, other is -1 for a path); satellite (row number)
+    lat, lon   [deg] middle of the two pierce points; distance_km between them; bearing_deg of the growth
+    slope, sigma [mm/km]; slant [mm/km] as a user at the first receiver would see it on that line of sight
+    claims     what the witnesses together say
+    summary    plain facts: how many looked at, quantiles, how well the three ways agree
+    """
+
+    way: Bytes
+    time: Times
+    receiver: Ints
+    other: Ints
+    satellite: Ints
+    lat: Floats
+    lon: Floats
+    distance_km: Floats
+    bearing_deg: Floats
+    slope: Floats
+    sigma: Floats
+    slant: Floats
+    claims: "tuple[SlopeClaim, ...]"
+    summary: Mapping[str, Any]
+
+    COLUMNS = ("way", "time", "receiver", "other", "satellite", "lat", "lon", "distance_km", "bearing_deg", "slope",
+               "sigma", "slant")  # fmt: skip
+
+    def __post_init__(self) -> None:
+        _same_length(self, *self.COLUMNS)
+
+    def __len__(self) -> int:
+        return len(self.time)
+
+
+@dataclass(frozen=True)
+class SlopeClaim:
+    """Witnesses of a steep slope that touch in space and time, taken together.
+
+    start, end; lat, lon of the steepest; slope, sigma [mm/km] of the steepest well-known witness; counts of pairs,
+    receivers, satellites; confirmed: no single receiver explains all witnesses, and two pairs or satellites agree.
+    cell_time, cell_lat, cell_lon, cell_slope, cell_sigma: where and when, on a grid of 5 minutes and 50 km.
+    """
+
+    start: np.datetime64
+    end: np.datetime64
+    lat: float
+    lon: float
+    slope: float
+    sigma: float
+    pairs: int
+    receivers: tuple[str, ...]
+    satellites: tuple[str, ...]
+    ways: tuple[str, ...]
+    confirmed: bool
+    why: str
+    cell_time: Times
+    cell_lat: Floats
+    cell_lon: Floats
+    cell_slope: Floats
+    cell_sigma: Floats
+
+
+@dataclass(frozen=True)
+class Onsets:
+    """Steep runs of vertical content along lines of sight, one row each.
+
+    start, time, end   first epoch, middle (centre of the change), last epoch
+    receiver, satellite (row numbers); lat, lon [deg] of the pierce point at `time`; elevation [deg]
+    east_speed, north_speed [m/s on the ground] of the pierce point
+    jump [TECU, signed], rate [TECU/s, signed, steepest], rate_sigma; time_sigma_s
+    front      row number of the front it belongs to, -1 for none
+    """
+
+    start: Times
+    time: Times
+    end: Times
+    receiver: Ints
+    satellite: Ints
+    lat: Floats
+    lon: Floats
+    elevation: Floats
+    east_speed: Floats
+    north_speed: Floats
+    jump: Floats
+    rate: Floats
+    rate_sigma: Floats
+    time_sigma_s: Floats
+    front: Ints
+
+    COLUMNS = ("start", "time", "end", "receiver", "satellite", "lat", "lon", "elevation", "east_speed", "north_speed",
+               "jump", "rate", "rate_sigma", "time_sigma_s", "front")  # fmt: skip
+
+    def __post_init__(self) -> None:
+        _same_length(self, *self.COLUMNS)
+
+    def __len__(self) -> int:
+        return len(self.time)
+
+    def where(self, chosen: npt.NDArray[Any]) -> "Onsets":
+        """The rows chosen by a mask or by row numbers."""
+        return replace(self, **{name: getattr(self, name)[chosen] for name in self.COLUMNS})
+
+
+@dataclass(frozen=True)
+class Front:
+    """A moving wall: a straight line over the local map with constant velocity, seen from start to end.
+
+    At time t it lies where the distance [km] from `centre` (lat, lon) toward heading_deg is
+    offset_km + speed_m_s * seconds since `epoch` / 1000.  Sigmas are standard errors.
+    slope [mm/km, vertical], width_km from foot to head, jump_tecu (signed: what it brings);
+    reach_km: how far it was seen to its left (negative) and right along the wall, from the foot of that distance
+    track      (time, lat, lon) of its nearest point to the centre, every few minutes
+    sweep_km   scatter of the lines of sight about the line
+    """
+
+    start: np.datetime64
+    end: np.datetime64
+    epoch: np.datetime64
+    centre: tuple[float, float]
+    offset_km: float
+    offset_sigma_km: float
+    speed_m_s: float
+    speed_sigma_m_s: float
+    heading_deg: float
+    heading_sigma_deg: float
+    slope: float
+    slope_sigma: float
+    width_km: float
+    width_sigma_km: float
+    jump_tecu: float
+    jump_sigma_tecu: float
+    reach_km: tuple[float, float]
+    sweep_km: float
+    onsets: int
+    receivers: tuple[str, ...]
+    satellites: tuple[str, ...]
+    confirmed: bool
+    covariance: Floats  # (3, 3) of offset_km, km/s toward north of the centre line..., see `fronts`
+    track: tuple[tuple[np.datetime64, float, float], ...]
+
+
+@dataclass(frozen=True)
+class Fronts:
+    """All fronts of a day and the onsets they were fitted to."""
+
+    fronts: tuple[Front, ...]
+    onsets: Onsets
+
+
+@dataclass(frozen=True)
+class Arrival:
+    """When a front is expected at a place, said at `made` from what was seen until then; and what came of it.
+
+    sigma_s is the spread; `seen` is when it did pass (NaT when nobody saw), came_true None while unknown.
+    """
+
+    front: int
+    place: str
+    made: np.datetime64
+    expected: np.datetime64
+    sigma_s: float
+    seen: np.datetime64
+    came_true: bool | None
+
+
+@dataclass(frozen=True)
+class Patch:
+    """A place and span where content fluctuates: irregular, not merely steep.
+
+    index [TECU/min]: the highest and the median ROTI inside; radius_km holds nine tenths of the ragged windows;
+    slips and losses: arcs broken and signals lost inside; planar: (chi-square, limit) of the planar fit around it,
+    NaN where too few; drift [m/s] and direction [deg, toward] are NaN where they cannot be told.
+    """
+
+    start: np.datetime64
+    end: np.datetime64
+    lat: float
+    lon: float
+    radius_km: float
+    index_highest: float
+    index_median: float
+    windows: int
+    receivers: tuple[str, ...]
+    satellites: tuple[str, ...]
+    slips: int
+    losses: int
+    planar: tuple[float, float]
+    drift_m_s: float
+    drift_sigma_m_s: float
+    drift_heading_deg: float
+    confirmed: bool
+
+
+@dataclass(frozen=True)
+class Patches:
+    """All patches of a day, the ragged windows behind them, and the index over the whole day.
+
+    times (B,) starts of 5-minute windows; index (B, C) ROTI [TECU/min] per line of sight, NaN where unknown;
+    receiver, satellite (C,); lat, lon (B, C) pierce points; aatr (receivers, hours) [TECU/min].
+    """
+
+    patches: tuple[Patch, ...]
+    times: Times
+    receiver: Ints
+    satellite: Ints
+    index: Floats
+    lat: Floats
+    lon: Floats
+    aatr: Floats
+    breaks: Ints  # (B, receivers) arcs broken without a long silence
+    losses: Ints  # (B, receivers) signals lost above the elevation limit
+
+
+@dataclass(frozen=True)
+class Fault:
+    """A receiver whose data disagree with its neighbours for a span: never weather."""
+
+    start: np.datetime64
+    end: np.datetime64
+    receiver: str
+    lat: float
+    lon: float
+    why: str
