@@ -710,7 +710,7 @@ class Front:
     receivers: tuple[str, ...]
     satellites: tuple[str, ...]
     confirmed: bool
-    covariance: Floats  # (3, 3) of offset_km, km/s toward north of the centre line..., see `fronts`
+    covariance: Floats  # (3, 3) of offset [km], speed [km/s], heading [rad]
     track: tuple[tuple[np.datetime64, float, float], ...]
 
 
