@@ -1,0 +1,6 @@
+"""The database, and nothing but the database: takes and gives tables, never rows or sessions."""
+
+from skylag.archive.records import DayHead, DayRecord, SiteStates
+from skylag.archive.store import Archive, open_archive
+
+__all__ = ["Archive", "DayHead", "DayRecord", "SiteStates", "open_archive"]

@@ -1,0 +1,123 @@
+"""The tables of the database, the same on SQLite and PostgreSQL, and the number of their present form.
+
+Numbers of type time are GPS-time nanoseconds as 64-bit integers; days are text like 2031-05-11, GPS-time days.
+A product row is one version of one region's day and is never changed after it was written, but for its pin.
+Never opens a connection.
+"""
+
+from sqlalchemy import (
+    BigInteger,
+    Boolean,
+    Column,
+    DateTime,
+    Float,
+    ForeignKey,
+    Index,
+    Integer,
+    LargeBinary,
+    MetaData,
+    String,
+    Table,
+    Text,
+    UniqueConstraint,
+    func,
+)
+
+SCHEMA_VERSION = 1
+
+metadata = MetaData()
+
+schema_version = Table(
+    "schema_version",
+    metadata,
+    Column("version", Integer, primary_key=True),
+    Column("since", DateTime(timezone=True), server_default=func.current_timestamp(), nullable=False),
+)
+
+region = Table(
+    "region",
+    metadata,
+    Column("name", String(200), primary_key=True),
+    Column("saves", Integer, nullable=False),  # counted up by every save, which also makes saves of a region take turns
+)
+
+product = Table(
+    "product",
+    metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("region", String(200), ForeignKey("region.name"), nullable=False),
+    Column("day", String(10), nullable=False),
+    Column("version", Integer, nullable=False),
+    Column("pinned", Boolean, nullable=False, default=False),
+    Column("saved_at", DateTime(timezone=True), server_default=func.current_timestamp(), nullable=False),
+    Column("simulated", Boolean, nullable=False),
+    Column("summary", Text, nullable=False),  # JSON: what a list of days shows
+    Column("record", Text, nullable=False),  # JSON: region, receivers, grid, origin, calibration facts
+    Column("slant_sha256", String(64), nullable=False),
+    Column("slant_rows", Integer, nullable=False),
+    UniqueConstraint("region", "day", "version", name="one_row_per_version"),
+)
+
+# Whole arrays of a product: times, site states, reasons.
+document = Table(
+    "document",
+    metadata,
+    Column("product", Integer, ForeignKey("product.id", ondelete="CASCADE"), primary_key=True),
+    Column("name", String(40), primary_key=True),
+    Column("dtype", String(20), nullable=False),
+    Column("shape", String(60), nullable=False),
+    Column("data", LargeBinary, nullable=False),
+    Column("sha256", String(64), nullable=False),
+)
+
+# One layer of the maps over one hour.
+chunk = Table(
+    "chunk",
+    metadata,
+    Column("product", Integer, ForeignKey("product.id", ondelete="CASCADE"), primary_key=True),
+    Column("layer", String(40), primary_key=True),
+    Column("hour", Integer, primary_key=True, autoincrement=False),
+    Column("dtype", String(20), nullable=False),
+    Column("shape", String(60), nullable=False),
+    Column("data", LargeBinary, nullable=False),
+    Column("sha256", String(64), nullable=False),
+)
+
+flag = Table(
+    "flag",
+    metadata,
+    Column("product", Integer, ForeignKey("product.id", ondelete="CASCADE"), primary_key=True),
+    Column("number", Integer, primary_key=True, autoincrement=False),
+    Column("start_ns", BigInteger, nullable=False),
+    Column("end_ns", BigInteger, nullable=False),
+    Column("lat", Float(53), nullable=False),
+    Column("lon", Float(53), nullable=False),
+    Column("kind", String(20), nullable=False),
+    Column("slope_mm_per_km", Float(53)),
+    Column("sigma_mm_per_km", Float(53)),
+    Column("speed_m_s", Float(53)),
+    Column("heading_deg", Float(53)),
+    Column("state", String(20), nullable=False),
+    Column("evidence", Text, nullable=False),
+    Column("confirmed", Boolean, nullable=False),
+    Column("track", Text, nullable=False),  # JSON: [[ns, lat, lon], ...]
+)
+
+bias = Table(
+    "bias",
+    metadata,
+    Column("product", Integer, ForeignKey("product.id", ondelete="CASCADE"), primary_key=True),
+    Column("number", Integer, primary_key=True, autoincrement=False),
+    Column("kind", String(20), nullable=False),
+    Column("name", String(40), nullable=False),
+    Column("system", String(4), nullable=False),
+    Column("code1", String(8), nullable=False),
+    Column("code2", String(8), nullable=False),
+    Column("value_ns", Float(53)),
+    Column("sigma_ns", Float(53)),
+    Column("start_ns", BigInteger),
+    Column("end_ns", BigInteger),
+)
+
+Index("flag_by_kind", flag.c.kind, flag.c.start_ns)
+Index("bias_by_name", bias.c.name)
