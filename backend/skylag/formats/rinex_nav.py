@@ -2,7 +2,7 @@
 
 Knows where each message keeps its numbers, brings all times to GPS time, and keeps group delays, health, accuracy,
 GLONASS channels and ionospheric coefficients.  Records of other systems (satellite-based augmentation, NavIC) are
-counted and skipped.  A broken record is a `Problem`, and reading goes on.  Never opens a file, never computes a position.
+counted and skipped.  A broken record is a `Problem`, and reading goes on.  Never opens a file or computes a position.
 
 Layouts: RINEX 2.11 (Gurtner and Estey 2007) tables A4, A10; RINEX 3.05 tables A5 to A14; RINEX 4.00 tables A9 to A32.
 """
@@ -14,7 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from skylag.errors import FormatError
-from skylag.tables import Ephemerides, Floats, Ints, Problem, Reading, Times
+from skylag.tables import Bools, Ephemerides, Floats, Ints, Problem, Reading, Times
 from skylag.timescales import BDT_BEHIND_GPS_S, utc_to_gps
 
 _WIDTH = 80
@@ -33,7 +33,7 @@ _LINES_OTHERWISE = 8
 # counted from 0.
 _KEPLER_AT = {"sqrt_a": 7, "e": 5, "i0": 12, "idot": 16, "omega0": 10, "omega_dot": 15, "omega": 14, "m0": 3,
               "delta_n": 2, "cuc": 4, "cus": 6, "crc": 13, "crs": 1, "cic": 9, "cis": 11, "toe_s": 8}  # fmt: skip
-# health, accuracy, first and second group delay, transmission time; -1 = the message has none, or in an index of its own
+# health, accuracy, first and second group delay, transmission time; -1 = the message has none, or another meaning of it
 _MORE_AT = {
     "G": (21, 20, 22, -1, 24), "J": (21, 20, 22, -1, 24), "E": (21, 20, 22, 23, 24), "C": (21, 20, 22, 23, 24),
     "CNAV": (21, -1, 22, -1, 28), "CNV2 of GPS": (21, -1, 22, -1, 32),
@@ -92,7 +92,7 @@ def parse(data: bytes, name: str) -> Reading:
 
 
 def _header(lines: list[bytes], name: str) -> tuple[float, str, int, dict[str, tuple[float, ...]], int | None]:
-    """Version, system letter of a RINEX 2 file, first line behind the header, ionospheric coefficients, leap seconds."""
+    """Version, system letter of a RINEX 2 file, line behind the header, ionospheric coefficients, leap seconds."""
     if not lines or b"RINEX VERSION" not in lines[0][60:80]:
         raise FormatError(
             f"{name}: line 1 lacks RINEX VERSION / TYPE in columns 61-80; a RINEX navigation file must begin with it",
@@ -262,7 +262,7 @@ def _numbers(chars: npt.NDArray[np.uint8], start: int, width: int, count: int) -
 def _epochs(chars: npt.NDArray[np.uint8], layout: _Layout) -> Times:
     """Epochs of first lines as they are written, in their own time scale; NaT where impossible."""
     parts = np.column_stack([_numbers(chars, start, width, 1)[:, 0] for start, width in layout.epoch])
-    usable = np.isfinite(parts).all(axis=1)
+    usable: Bools = np.asarray(np.isfinite(parts).all(axis=1))
     year, month, day, hour, minute, second = np.where(usable[:, None], parts, [2000.0, 1, 1, 0, 0, 0]).T
     if layout.two_digit_years:
         year = np.where(year < 80, year + 2000, np.where(year < 100, year + 1900, year))

@@ -1,9 +1,9 @@
-"""Tabulated precise orbits (SP3-a, -c and -d) to `PreciseOrbits` and back from no other form.
+"""Tabulated precise orbits (SP3-a, -c and -d) to `PreciseOrbits`.
 
-Positions in metres, clocks in seconds, epochs in GPS time; missing positions and clocks are NaN.  Velocities and accuracy
-codes are passed over.  A broken line is a `Problem`, and reading goes on.  Never opens a file, never interpolates.
+Positions in metres, clocks in seconds, epochs in GPS time; missing positions and clocks are NaN.  Velocities and
+accuracy codes are passed over.  A broken line is a `Problem`, and reading goes on.  Never opens a file or interpolates.
 
-Layout: the SP3-d description (Hilla 2016): epoch lines `*`, position lines `P` of columns 5-60, header lines `##`, `%c`.
+Layout: the SP3-d description (Hilla 2016): epoch lines `*`, position lines `P` of columns 5-60, header line `%c`.
 """
 
 import numpy as np

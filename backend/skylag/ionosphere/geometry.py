@@ -1,10 +1,10 @@
 """Directions to satellites, points where rays pierce the shell, and the mapping from slant to vertical.
 
-The shell is a sphere concentric with a spherical Earth, as in maps of vertical content (IONEX 1.0; RTCA DO-229, A.4.4.10).
-Elevation and azimuth are geodetic: against the normal of the ellipsoid at the receiver.  The receiver's geodetic latitude
-and longitude then stand for its place on the sphere, so pierce points are in the same latitude as receivers and coast
-lines.  Against a strictly geocentric reckoning this moves pierce points by up to 0.19 degrees of latitude, all alike in
-one region.  Never reads a file.
+The shell is a sphere concentric with a spherical Earth, as in maps of vertical content (IONEX 1.0; RTCA DO-229,
+A.4.4.10).  Elevation and azimuth are geodetic: against the normal of the ellipsoid at the receiver.  The receiver's
+geodetic latitude and longitude then stand for its place on the sphere, so pierce points are in the same latitude as
+receivers and coast lines.  Against a strictly geocentric reckoning this moves pierce points by up to 0.19 degrees of
+latitude, all alike in one region.  Never reads a file.
 """
 
 from collections.abc import Sequence
@@ -79,12 +79,13 @@ def pierce(
     return np.degrees(pierce_lat_rad), pierce_lon
 
 
-def earth_angle(elevation: npt.ArrayLike, shell_height_m: float, earth_radius_m: float = SHELL_EARTH_RADIUS_M) -> Floats:
+def earth_angle(
+    elevation: npt.ArrayLike, shell_height_m: float, earth_radius_m: float = SHELL_EARTH_RADIUS_M
+) -> Floats:  # fmt: skip
     """Angle [deg] at the Earth's centre between receiver and pierce point."""
     elevation_rad = np.radians(elevation)
-    return np.degrees(
-        np.pi / 2 - elevation_rad - np.arcsin(earth_radius_m * np.cos(elevation_rad) / (earth_radius_m + shell_height_m))
-    )
+    at_shell_rad = np.arcsin(earth_radius_m * np.cos(elevation_rad) / (earth_radius_m + shell_height_m))
+    return np.asarray(np.degrees(np.pi / 2 - elevation_rad - at_shell_rad))
 
 
 def mapping(elevation: npt.ArrayLike, shell_height_m: float, earth_radius_m: float = SHELL_EARTH_RADIUS_M) -> Floats:

@@ -1,8 +1,8 @@
 """Where satellites are at any epoch, from broadcast records or precise tables.
 
 Broadcast: Kepler orbits with corrections (GPS, QZSS, Galileo, BeiDou with its geostationary rotation) and numerical
-integration (GLONASS).  Precise: a polynomial through eleven tabulated positions.  Stale or unhealthy records are refused,
-never stretched: such places are NaN, and `refused` counts why.  Positions are in the Earth-fixed frame, metres; the
+integration (GLONASS).  Precise: a polynomial through eleven tabulated positions.  Stale or unhealthy records are
+refused, never stretched: such places are NaN, and `refused` counts why.  Positions are Earth-fixed, in metres; the
 realisations (WGS 84, PZ-90, ITRF ...) agree to centimetres and are not told apart.  Never reads a file.
 """
 
@@ -14,7 +14,7 @@ import numpy.typing as npt
 
 from skylag.constants import EARTH_ROTATION_RAD_S, SPEED_OF_LIGHT_M_S
 from skylag.errors import NotEnough
-from skylag.tables import Ephemerides, Floats, Ints, PreciseOrbits, Times
+from skylag.tables import Bools, Ephemerides, Floats, Ints, PreciseOrbits, Times
 
 Source = Ephemerides | PreciseOrbits
 
@@ -39,7 +39,9 @@ _FEWEST_POINTS = 9  # at the ends of short tables
 REASONS = ("used", "no record", "too old", "unhealthy")
 
 
-def positions(source: Source | Sequence[Source], satellites: Sequence[str] | npt.NDArray[np.str_], times: Times) -> Floats:
+def positions(
+    source: Source | Sequence[Source], satellites: Sequence[str] | npt.NDArray[np.str_], times: Times
+) -> Floats:  # fmt: skip
     """Positions (T, S, 3) [m], Earth-fixed at the epoch itself, NaN where no valid record or table covers it.
 
     source      one source, or several: precise ones serve first, broadcast ones fill what they lack
@@ -126,7 +128,7 @@ def channels(source: Source | Sequence[Source]) -> dict[str, int]:
     found: dict[str, int] = {}
     for part in parts:
         if isinstance(part, Ephemerides):
-            rows = np.flatnonzero(np.char.startswith(part.satellites, "R")) if len(part.satellites) else []
+            rows: Ints = np.flatnonzero(np.char.startswith(part.satellites.astype(str), "R"))
             found.update({str(part.satellites[row]): int(part.channels[row]) for row in rows})
     return found
 
@@ -229,8 +231,8 @@ def _kepler(source: Ephemerides, satellite: str, rows: Ints, instants: Times) ->
 
 
 def _acceleration(state: Floats, luni_solar: Floats) -> Floats:
-    """Time derivative (N, 6) of GLONASS states (N, 6); GLONASS ICD 5.1, appendix: central, J2, rotation, Sun and Moon."""
-    x, y, z, vx, vy, vz = state.T
+    """Time derivative of GLONASS states (N, 6); GLONASS ICD 5.1, appendix: centre, J2, rotation, Sun and Moon."""
+    x, y, z, vx, vy = state[:, :5].T
     square = x**2 + y**2 + z**2
     central = -_MU["R"] / square**1.5
     flattening = 1.5 * _GLONASS_J2 * _MU["R"] * _GLONASS_AXIS_M**2 / square**2.5
@@ -304,7 +306,7 @@ def _join_tables(parts: Sequence[PreciseOrbits]) -> PreciseOrbits:
     clock = np.full((len(times), len(satellites)), np.nan)
     for part in ordered:
         place = np.ix_(np.searchsorted(times, part.times), np.searchsorted(satellites, part.satellites))
-        told = np.isfinite(part.position_m).all(axis=-1)
+        told: Bools = np.asarray(np.isfinite(part.position_m).all(axis=-1))
         position[place] = np.where(told[..., None], part.position_m, position[place])
         clock[place] = np.where(told, part.clock_s, clock[place])
     return replace(ordered[0], times=times, satellites=satellites, position_m=position, clock_s=clock)
@@ -347,8 +349,9 @@ def _polynomial(track: Floats, place: Floats) -> Floats:
     signs = np.array([(-1.0) ** k for k in range(points)])
     binomial = np.cumprod([1.0] + [(points - 1 - k) / (k + 1) for k in range(points - 1)])
     away = (place - first)[:, None] - np.arange(points)
-    exact = np.abs(away) < 1e-10
+    exact: Bools = np.abs(away) < 1e-10
     weight = signs * binomial / np.where(exact, 1.0, away)
-    weight = np.where(exact.any(axis=1)[:, None], exact, weight)
+    hit: Bools = np.asarray(exact.any(axis=1))
+    weight = np.where(hit[:, None], exact, weight)
     weight /= weight.sum(axis=1, keepdims=True)
-    return np.einsum("nk,nkd->nd", weight, track[first[:, None] + np.arange(points)])
+    return np.asarray(np.einsum("nk,nkd->nd", weight, track[first[:, None] + np.arange(points)]))
