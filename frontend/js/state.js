@@ -1,0 +1,155 @@
+/**
+ * What the user is looking at, kept in the URL: a link is a view, and the back button goes to the view before.
+ * Never fetches, never draws. Listeners hear "change" with the names of what changed.
+ */
+
+/** @typedef {"delay"|"uncertainty"|"slope"|"state"} Layer */
+/**
+ * @typedef {object} View
+ * @property {string} region   key of the region, "" until known
+ * @property {string} day      YYYY-MM-DD, "" until known
+ * @property {number|null} minute  minutes since 00:00 UTC of that day; null = choose for me
+ * @property {Layer} layer
+ * @property {[number, number]|null} place  latitude, longitude [deg]
+ * @property {Set<string>} show  of SHOWABLE
+ * @property {"utc"|"local"} clock
+ */
+
+/** @type {Layer[]} */
+export const LAYERS = ["delay", "uncertainty", "slope", "state"];
+export const SHOWABLE = ["receivers", "rays", "sites", "veil"];
+const SHOWN_AT_FIRST = ["receivers", "sites", "veil"];
+
+/** @returns {View} */
+export function firstView() {
+  return {
+    region: "",
+    day: "",
+    minute: null,
+    layer: "delay",
+    place: null,
+    show: new Set(SHOWN_AT_FIRST),
+    clock: "utc",
+  };
+}
+
+/** @param {number} minute */
+export function clockText(minute) {
+  const m = Math.round(minute);
+  const sign = m < 0 ? "-" : "";
+  const a = Math.abs(m);
+  return `${sign}${String(Math.floor(a / 60)).padStart(2, "0")}:${String(a % 60).padStart(2, "0")}`;
+}
+
+/**
+ * The query of a view; what is at its first value stays out.
+ * @param {View} view
+ */
+export function toQuery(view) {
+  const parts = [];
+  if (view.region) parts.push(["region", view.region]);
+  if (view.day) parts.push(["day", view.day]);
+  if (view.minute !== null) parts.push(["time", clockText(view.minute)]);
+  if (view.layer !== "delay") parts.push(["layer", view.layer]);
+  if (view.place) parts.push(["at", view.place.map((v) => String(Number(v.toFixed(3)))).join(",")]);
+  const show = SHOWABLE.filter((name) => view.show.has(name));
+  if (show.join() !== SHOWABLE.filter((name) => SHOWN_AT_FIRST.includes(name)).join()) {
+    parts.push(["show", show.join(",") || "none"]);
+  }
+  if (view.clock !== "utc") parts.push(["clock", view.clock]);
+  const text = parts.map(([key, value]) => `${key}=${encodeURIComponent(value).replace(/%2C/g, ",").replace(/%3A/g, ":")}`);
+  return text.length ? `?${text.join("&")}` : "";
+}
+
+/**
+ * The view of a query. What cannot be understood is left at its first value: a damaged link still opens.
+ * @param {string} query
+ * @returns {View}
+ */
+export function fromQuery(query) {
+  const given = new URLSearchParams(query);
+  const view = firstView();
+  view.region = given.get("region") ?? "";
+  const day = given.get("day") ?? "";
+  if (/^\d{4}-\d{2}-\d{2}$/.test(day)) view.day = day;
+  const time = /^(\d{1,2}):(\d{2})$/.exec(given.get("time") ?? "");
+  if (time && Number(time[1]) < 24 && Number(time[2]) < 60) view.minute = Number(time[1]) * 60 + Number(time[2]);
+  const layer = /** @type {Layer} */ (given.get("layer"));
+  if (LAYERS.includes(layer)) view.layer = layer;
+  const at = (given.get("at") ?? "").split(",").map(Number);
+  if (given.get("at") && at.length === 2 && Math.abs(at[0]) <= 90 && Math.abs(at[1]) <= 360) view.place = [at[0], at[1]];
+  if (given.has("show")) {
+    const names = (given.get("show") ?? "").split(",");
+    view.show = new Set(SHOWABLE.filter((name) => names.includes(name)));
+  }
+  if (given.get("clock") === "local") view.clock = "local";
+  return view;
+}
+
+/**
+ * Two values of a view alike?
+ * @param {unknown} a
+ * @param {unknown} b
+ */
+function alike(a, b) {
+  if (a instanceof Set && b instanceof Set) return a.size === b.size && [...a].every((x) => b.has(x));
+  if (Array.isArray(a) && Array.isArray(b)) return a.length === b.length && a.every((x, i) => x === b[i]);
+  return a === b;
+}
+
+/** Holds the view and the window's history together. */
+export class State extends EventTarget {
+  /** @type {View} */ #view;
+  #history;
+  #lastQuiet = -Infinity;
+  #clock;
+
+  /**
+   * @param {{history: History, location: Location, listen: (type: string, f: () => void) => void, clock?: () => number}} world
+   */
+  constructor({ history, location, listen, clock = () => performance.now() }) {
+    super();
+    this.#history = history;
+    this.#clock = clock;
+    this.#view = fromQuery(location.search);
+    listen("popstate", () => this.#take(fromQuery(location.search)));
+  }
+
+  /** @returns {Readonly<View>} */
+  get view() {
+    return this.#view;
+  }
+
+  /**
+   * Change some of the view. A run of moves in time is one step of the history.
+   * @param {Partial<View>} changes
+   * @param {{step?: "new"|"none"}} [options]  "none" writes over the present step of the history
+   */
+  change(changes, { step = "new" } = {}) {
+    const names = Object.keys(changes).filter((name) => !alike(this.#view[name], changes[name]));
+    if (!names.length) return;
+    const onlyTime = names.length === 1 && names[0] === "minute";
+    const now = this.#clock();
+    const sameRun = onlyTime && now - this.#lastQuiet < 1200;
+    this.#lastQuiet = onlyTime ? now : -Infinity;
+    this.#view = { ...this.#view, ...changes };
+    const url = toQuery(this.#view) || "?";
+    if (step === "none" || sameRun) this.#history.replaceState(null, "", url);
+    else this.#history.pushState(null, "", url);
+    this.#tell(names);
+  }
+
+  /** @param {View} view */
+  #take(view) {
+    const filled = { ...view, region: view.region || this.#view.region, day: view.day || this.#view.day };
+    const names = Object.keys(filled).filter((name) => !alike(this.#view[name], filled[name]));
+    this.#lastQuiet = -Infinity;
+    this.#view = filled;
+    if (names.length) this.#tell(names);
+  }
+
+  /** @param {string[]} names */
+  #tell(names) {
+    this.dispatchEvent(new CustomEvent("change", { detail: new Set(names) }));
+  }
+}

@@ -1,0 +1,234 @@
+/**
+ * Every visible sentence of the page, and how numbers, places and times are written.
+ * Pure: never touches the document. Times are milliseconds since 1970 in UTC.
+ */
+
+/** @typedef {import("./colour.js").StateName} StateName */
+
+export const LAYER_WORDS = {
+  delay: { name: "Delay", title: "Vertical delay on 1575.42 MHz", unit: "m" },
+  uncertainty: { name: "Uncertainty", title: "Uncertainty of the vertical delay (one sigma)", unit: "m" },
+  slope: { name: "Slope", title: "Slope of the vertical delay", unit: "mm/km" },
+  state: { name: "State", title: "Do corrections hold?", unit: "" },
+};
+
+/** @type {Record<StateName, {name: string, means: string}>} */
+export const STATE_WORDS = {
+  holds: { name: "holds", means: "corrections hold" },
+  strained: { name: "strained", means: "corrections lose accuracy over distance" },
+  broken: { name: "broken", means: "corrections must not be relied on" },
+  unseen: { name: "unseen", means: "not enough data to say" },
+};
+
+export const KIND_WORDS = {
+  slope: { name: "Steep slope", short: "slope" },
+  front: { name: "Moving front", short: "front" },
+  irregular: { name: "Irregular patch", short: "irregular" },
+  fault: { name: "Fault in the data", short: "fault" },
+};
+
+export const WORDS = {
+  caution:
+    "Planning aid, not for navigation. Official notices and the service provider decide.",
+  simulated: "Simulated data: an invented network, invented days. Nothing here happened.",
+  loadingDay: "Opening the day …",
+  loadingReading: "Reading the archive at this place …",
+  emptyArchive: "The archive holds no day yet.",
+  emptyArchiveHow: "Process one with “skylag day”, or run “skylag demo” for the invented sample days.",
+  choosePlace: "Click the map, or choose a site, to ask about a place.",
+  noFlags: "No flag was raised on this day.",
+  noFlagsNear: "No flag was raised near here within the hour.",
+  noFlagsNow: "no flag at this time",
+  noSites: "No sites are named for this region; the strip shows the worst state of the map.",
+  offline: "The page cannot reach the service on this machine. Is it still running?",
+  tryAgain: "Try again",
+  sigma: "± is one standard deviation.",
+};
+
+const MINUS = "\u2212";
+
+/**
+ * A number with a fixed count of decimals and a true minus sign.
+ * @param {number} value
+ * @param {number} decimals
+ */
+export function fixed(value, decimals) {
+  if (!Number.isFinite(value)) return "–";
+  const text = Math.abs(value).toFixed(decimals);
+  return value < 0 && Number(text) !== 0 ? MINUS + text : text;
+}
+
+/**
+ * Decimals that suit an uncertainty: two figures below 2 of its leading place, else one.
+ * @param {number} sigma
+ */
+export function decimalsFor(sigma) {
+  if (!(sigma > 0) || !Number.isFinite(sigma)) return 1;
+  const power = Math.floor(Math.log10(sigma));
+  const leading = sigma / 10 ** power;
+  return Math.min(6, Math.max(0, (leading < 1.95 ? 1 : 0) - power));
+}
+
+/**
+ * "38 ± 6 mm/km": a value, its sigma, its unit. Without a sigma the words say so.
+ * @param {number} value
+ * @param {number} sigma
+ * @param {string} unit
+ * @param {number} [most]  the most decimals worth showing
+ */
+export function withSigma(value, sigma, unit, most = 2) {
+  if (!Number.isFinite(value)) return "not known";
+  if (!Number.isFinite(sigma)) return `${fixed(value, Math.min(most, 1))} ${unit}, uncertainty not known`.trim();
+  const decimals = Math.min(most, decimalsFor(sigma));
+  return `${fixed(value, decimals)} ± ${fixed(sigma, decimals)} ${unit}`.trim();
+}
+
+/** @param {number} lat */
+export function latText(lat, decimals = 2) {
+  return `${Math.abs(lat).toFixed(decimals)}° ${lat < 0 ? "S" : "N"}`;
+}
+
+/** @param {number} lon */
+export function lonText(lon, decimals = 2) {
+  const l = ((((lon + 180) % 360) + 360) % 360) - 180;
+  return `${Math.abs(l).toFixed(decimals)}° ${l < 0 ? "W" : "E"}`;
+}
+
+/** @param {number} lat @param {number} lon */
+export function placeText(lat, lon, decimals = 2) {
+  return `${latText(lat, decimals)}, ${lonText(lon, decimals)}`;
+}
+
+const WINDS = ["north", "north-east", "east", "south-east", "south", "south-west", "west", "north-west"];
+
+/** @param {number} heading  degrees from north through east, toward */
+export function compass(heading) {
+  return WINDS[Math.round((((heading % 360) + 360) % 360) / 45) % 8];
+}
+
+/** @param {string} zone  IANA name */
+export function zoneName(zone) {
+  if (!zone || zone === "UTC" || zone === "Etc/UTC") return "UTC";
+  return `${zone.split("/").pop()?.replaceAll("_", " ")} time`;
+}
+
+/** @type {Map<string, Intl.DateTimeFormat>} */
+const formats = new Map();
+
+/** @param {string} zone @param {Intl.DateTimeFormatOptions} options */
+function format(zone, options) {
+  const key = zone + JSON.stringify(options);
+  let found = formats.get(key);
+  if (!found) {
+    try {
+      found = new Intl.DateTimeFormat("en-GB", { timeZone: zone, hourCycle: "h23", ...options });
+    } catch {
+      found = new Intl.DateTimeFormat("en-GB", { timeZone: "UTC", hourCycle: "h23", ...options });
+    }
+    formats.set(key, found);
+  }
+  return found;
+}
+
+/** Epochs on GPS time lie a few leap seconds beside the whole minute of UTC: written to the nearest minute. */
+const nearestMinute = (ms) => Math.round(ms / 60000) * 60000;
+
+/** @param {number} ms @param {string} [zone] "14:35" */
+export function hourText(ms, zone = "UTC") {
+  return format(zone, { hour: "2-digit", minute: "2-digit" }).format(nearestMinute(ms));
+}
+
+/** @param {number} ms @param {string} [zone] "14 March 2031" */
+export function dateText(ms, zone = "UTC") {
+  return format(zone, { day: "numeric", month: "long", year: "numeric" }).format(nearestMinute(ms));
+}
+
+/** @param {string} day YYYY-MM-DD */
+export function dayText(day) {
+  const ms = Date.parse(`${day}T00:00:00Z`);
+  return format("UTC", { weekday: "short", day: "numeric", month: "long", year: "numeric" }).format(ms);
+}
+
+/**
+ * "14:35 UTC" or "01:35 Hobart time".
+ * @param {number} ms
+ * @param {{clock?: "utc"|"local", zone?: string}} [how]
+ */
+export function timeText(ms, { clock = "utc", zone = "UTC" } = {}) {
+  return clock === "local" && zone !== "UTC" ? `${hourText(ms, zone)} ${zoneName(zone)}` : `${hourText(ms)} UTC`;
+}
+
+/**
+ * Both clocks: "14:35 UTC · 01:35 Hobart time, 15 March 2031".
+ * @param {number} ms
+ * @param {string} zone
+ */
+export function bothClocks(ms, zone) {
+  if (!zone || zone === "UTC") return `${hourText(ms)} UTC`;
+  const sameDay = dateText(ms) === dateText(ms, zone);
+  return `${hourText(ms)} UTC · ${hourText(ms, zone)} ${zoneName(zone)}${sameDay ? "" : `, ${dateText(ms, zone)}`}`;
+}
+
+/**
+ * How long ago, in words.
+ * @param {number} ms
+ */
+export function agoText(ms) {
+  const minutes = Math.round(ms / 60000);
+  if (minutes < 2) return "a moment ago";
+  if (minutes < 90) return `${minutes} minutes ago`;
+  const hours = Math.round(minutes / 60);
+  if (hours < 36) return `${hours} hours ago`;
+  return `${Math.round(hours / 24)} days ago`;
+}
+
+/**
+ * The sentence that answers "do corrections hold here?".
+ * @param {{state: StateName, slope: number, slopeSigma: number, reason?: string}} reading
+ */
+export function leadSentence(reading) {
+  const steep = withSigma(reading.slope, reading.slopeSigma, "mm per km", 0);
+  const known = Number.isFinite(reading.slope);
+  switch (reading.state) {
+    case "holds":
+      return known ? `Corrections hold here. The delay changes by ${steep}.` : "Corrections hold here.";
+    case "strained":
+      return known
+        ? `Corrections are strained here: the delay changes by ${steep}.`
+        : "Corrections are strained here.";
+    case "broken":
+      return known ? `Corrections are broken here: the delay changes by ${steep}.` : "Corrections are broken here.";
+    default:
+      return "Not enough data to say what holds here. Do not take silence for good news.";
+  }
+}
+
+/**
+ * One line for a flag: what it is, where it goes, how steep.
+ * @param {import("./api.js").Flag} flag
+ */
+export function flagSentence(flag) {
+  const parts = [KIND_WORDS[flag.kind]?.name ?? flag.kind];
+  if (Number.isFinite(flag.slope)) parts.push(withSigma(flag.slope, flag.sigma, "mm/km", 0));
+  if (Number.isFinite(flag.speed) && Number.isFinite(flag.heading)) {
+    parts.push(`moving ${compass(flag.heading)} at ${fixed(flag.speed, 0)} m/s`);
+  }
+  return parts.join(", ");
+}
+
+/**
+ * What the strip says of a site at a time.
+ * @param {string} site
+ * @param {StateName} state
+ * @param {string} reason
+ */
+export function siteSentence(site, state, reason) {
+  const plain = `${site}: ${STATE_WORDS[state].name}`;
+  if (!reason) return state === "holds" ? `${plain}.` : `${plain}, ${STATE_WORDS[state].means}.`;
+  return `${plain}. ${reason}`;
+}
+
+/** @param {number} count @param {string} one @param {string} [many] */
+export function countText(count, one, many = `${one}s`) {
+  return `${count} ${count === 1 ? one : many}`;
+}
