@@ -1,0 +1,325 @@
+"""The command line: day, demo, serve.  Thin: parses, calls, prints.
+
+Exit status: 0 all went well; 1 done, but some inputs were left out (each is named); 2 the command was not understood;
+3 no result.
+"""
+
+import argparse
+import os
+import sys
+import threading
+import time
+import webbrowser
+from collections.abc import Sequence
+from datetime import date
+from pathlib import Path
+from typing import TextIO
+
+from skylag import settings
+from skylag.chain import Choices
+from skylag.errors import SkylagError
+from skylag.formats import results
+from skylag.ionosphere.pairs import USABLE_PAIRS, parse_wanted
+from skylag.jobs import work
+from skylag.jobs.executor import open_executor
+from skylag.tables import STATE_NAMES, Products
+
+CAUTION = (
+    "Planning aid, not for navigation. Official notices, the service provider's and the receiver maker's information, "
+    "local rules and licensed practice come first."
+)
+_STAGES = {
+    "look": (0.00, "looking at the files"),
+    "orbits": (0.03, "orbits and biases"),
+    "receivers": (0.06, "reading receivers"),
+    "biases": (0.55, "finding biases"),
+    "maps": (0.65, "making maps"),
+    "slopes": (0.85, "measuring slopes"),
+    "fronts": (0.90, "looking for fronts"),
+    "irregular": (0.95, "looking for irregular patches"),
+    "states": (0.98, "judging states"),
+}
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run one command; returns the exit status."""
+    parser = _parser()
+    options = parser.parse_args(arguments)
+    if not hasattr(options, "run"):
+        parser.print_help()
+        return 2
+    try:
+        return int(options.run(options))
+    except SkylagError as trouble:
+        print(f"skylag: {trouble.message}", file=sys.stderr)
+        return 3
+    except KeyboardInterrupt:
+        print("skylag: stopped; nothing unfinished was kept", file=sys.stderr)
+        return 130
+    except OSError as trouble:
+        where = f"{trouble.filename}: " if trouble.filename else ""
+        print(f"skylag: {where}{trouble.strerror or trouble}", file=sys.stderr)
+        return 3
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="skylag",
+        description="What the ionosphere does to satellite positioning in a region: from the RINEX files of a network "
+        "of dual-frequency receivers to delay maps with an uncertainty, and to the places and times where "
+        "corrections stop holding.",
+        epilog=f"{CAUTION} Start with `skylag demo`.",
+    )
+    parser.add_argument("--version", action="version", version=f"skylag {work.own_version()}")
+    commands = parser.add_subparsers(title="commands", metavar="")
+    _day_parser(commands)
+    _demo_parser(commands)
+    _serve_parser(commands)
+    return parser
+
+
+def _day_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]") -> None:
+    pairs = "\n".join(
+        f"  {system}  " + ", ".join("-".join(pair) for pair in usable) for system, usable in USABLE_PAIRS.items()
+    )
+    parser = commands.add_parser(
+        "day",
+        help="compute one network day from files or folders",
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+        description="Compute one network day: observation files of any number of receivers (RINEX 2, 3, 4; plain or\n"
+        "compressed; Hatanaka too), with at least one navigation or SP3 file, and bias files if you have them.\n"
+        "Kinds are told by content, so you may simply give a folder.",
+        epilog="examples:\n"
+        "  skylag day june-25/ --out results/\n"
+        "  skylag day base.rnx nav.rnx --out results/ --signals G=C1C-C2W,E=C1C-C5Q\n"
+        "  skylag day archive/ --date 2031-03-12 --region region.toml --out results/ --archive skylag-archive\n\n"
+        "signal pairs, best first; without --signals the first that a receiver brings is used:\n" + pairs + "\n\n"
+        "results in DIR: biases.csv, slant.parquet, field.nc, flags.csv, day.json (columns: README).\n"
+        "exit status: 0 all inputs used; 1 done, some inputs left out (each named); 2 bad command; 3 no result.\n\n"
+        + CAUTION,
+    )
+    parser.add_argument("inputs", nargs="+", type=Path, metavar="FILES_OR_FOLDERS", help="files or folders, mixed")
+    parser.add_argument("--out", type=Path, required=True, metavar="DIR", help="folder for the results")
+    parser.add_argument("--region", type=Path, metavar="FILE", help="region.toml; without it, around the receivers")
+    parser.add_argument("--date", type=_date, metavar="YYYY-MM-DD", help="the GPS-time day; else the one most files are of")
+    parser.add_argument("--signals", default="", metavar="LIST", help="signal pairs, e.g. G=C1W-C2W,E=C1C-C5Q")
+    parser.add_argument("--every", type=_minutes, default=5.0, metavar="MINUTES", help="a map every 1 to 60 min (5)")
+    parser.add_argument("--archive", default="", metavar="PLACE", help="also keep the day in this archive")
+    parser.add_argument("--workers", default="", metavar="SPEC", help="local:N, threads:N or dask://host:port")
+    parser.add_argument("--quiet", action="store_true", help="no progress, only what went wrong")
+    parser.set_defaults(run=_day)
+
+
+def _demo_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]") -> None:
+    parser = commands.add_parser(
+        "demo",
+        help="compute the invented sample days and open the page",
+        description="Compute the three invented sample days (calm, storm, recovery) into an embedded archive and open "
+        "the page on the loopback address. Days already there are not computed again.",
+        epilog=CAUTION,
+    )
+    parser.add_argument("--archive", default="skylag-demo", metavar="PLACE", help="folder of the archive (skylag-demo)")
+    parser.add_argument("--port", default="", metavar="PORT", help="port of the page (8017; 0 takes a free one)")
+    parser.add_argument("--workers", default="", metavar="SPEC", help="local:N or threads:N")
+    parser.add_argument("--no-browser", action="store_true", help="print the address, open nothing")
+    parser.add_argument("--no-serve", action="store_true", help="compute the days and stop")
+    parser.set_defaults(run=_demo)
+
+
+def _serve_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]") -> None:
+    parser = commands.add_parser(
+        "serve",
+        help="serve what an archive holds",
+        description="Serve the page over what the archive holds. Settings may come from the environment: "
+        "SKYLAG_ARCHIVE, SKYLAG_HOST, SKYLAG_PORT.",
+        epilog=CAUTION,
+    )
+    parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
+    parser.add_argument("--host", default="", help="address to listen on (127.0.0.1)")
+    parser.add_argument("--port", default="", help="port (8017; 0 takes a free one)")
+    parser.set_defaults(run=_serve)
+
+
+def _date(text: str) -> date:
+    try:
+        return date.fromisoformat(text)
+    except ValueError:
+        raise argparse.ArgumentTypeError(f"{text!r} is no date; write it as 2031-03-12") from None
+
+
+def _minutes(text: str) -> float:
+    try:
+        minutes = float(text)
+    except ValueError:
+        raise argparse.ArgumentTypeError(f"{text!r} is no number of minutes") from None
+    if not 1 <= minutes <= 60:
+        raise argparse.ArgumentTypeError(f"{text} is outside 1 to 60 minutes")
+    return minutes
+
+
+# ---------------------------------------------------------------------------------------------- commands
+
+
+def _day(options: argparse.Namespace) -> int:
+    region = settings.read_region(options.region) if options.region else None
+    choices = Choices(signals=parse_wanted(options.signals), epoch_step_s=options.every * 60.0)
+    bar = _Bar("day", quiet=options.quiet)
+    with open_executor(options.workers or settings.default_workers()) as executor:
+        made = work.network_day(
+            options.inputs, region=region, day=options.date, choices=choices, executor=executor, progress=bar.tell
+        )
+    bar.close()
+    for item in made.left_out:
+        print(f"left out: {item}", file=sys.stderr)
+    if made.problems:
+        shown = made.problems[:10]
+        for problem in shown:
+            print(f"noticed: {problem}", file=sys.stderr)
+        if len(made.problems) > len(shown):
+            print(f"noticed: {len(made.problems) - len(shown)} more such places", file=sys.stderr)
+    paths = results.write(made.products, options.out)
+    if options.archive:
+        from skylag.archive import open_archive  # a database is opened only where one is asked for
+
+        with open_archive(options.archive) as archive:
+            archive.save(made.products)
+    if not options.quiet:
+        _tell_day(made.products)
+        print("results: " + ", ".join(str(path) for path in paths))
+    return 1 if made.left_out else 0
+
+
+def _tell_day(products: Products) -> None:
+    """A day in a few lines."""
+    counts = products.origin.counts
+    fields = products.fields
+    print(
+        f"{products.day} {products.region.name}: {counts['receivers']} receivers, {counts['rays']} lines of sight, "
+        f"{counts['arcs']} arcs ({counts['slips']} began with a slip), {counts['maps']} maps"
+    )
+    seen = fields.state > 0
+    if seen.any():
+        from skylag.constants import L1_M_PER_TECU
+
+        delay = fields.vtec[seen] * L1_M_PER_TECU
+        print(
+            f"vertical delay on 1575.42 MHz where seen: {delay.min():.1f} to {delay.max():.1f} m "
+            f"({fields.vtec[seen].min():.1f} to {fields.vtec[seen].max():.1f} TECU)"
+        )
+    shares = [f"{name} {100.0 * float((fields.state == code).mean()):.1f} %" for code, name in enumerate(STATE_NAMES)]
+    print("cells over the day: " + ", ".join(shares))
+    for flag in [f for f in products.flags if f.state == "broken" or f.kind == "fault"][:12]:
+        print(f"  {flag.kind}: {flag.evidence}")
+    for warning in products.origin.warnings:
+        if not warning.startswith("left out:"):
+            print(f"note: {warning}")
+
+
+def sample_folder() -> Path:
+    """The invented network beside the package of a checkout.
+
+    Raises SkylagError where the program was installed without it.
+    """
+    folder = Path(__file__).resolve().parents[2] / "sample_data"
+    if not (folder / "region.toml").is_file():
+        raise SkylagError(
+            f"{folder}: the sample days are not here; run `skylag demo` from a checkout installed with `pip install -e .`"
+        )
+    return folder
+
+
+def _demo(options: argparse.Namespace) -> int:
+    from skylag.archive import open_archive
+
+    folder = sample_folder()
+    region = settings.read_region(folder / "region.toml")
+    days = sorted(p for p in folder.iterdir() if p.is_dir() and _is_date(p.name))
+    with open_archive(options.archive) as archive:
+        there = {str(head.day) for head in archive.days() if head.region == region.name}
+        todo = [path for path in days if path.name not in there]
+        if todo:
+            began = time.perf_counter()
+            with open_executor(options.workers or settings.default_workers()) as executor:
+                for number, path in enumerate(todo):
+                    bar = _Bar(f"{path.name} ({number + 1} of {len(todo)})")
+                    made = work.network_day(
+                        [path], region=region, executor=executor, simulated=True, progress=bar.tell
+                    )
+                    archive.save(made.products)
+                    bar.close()
+            print(f"{len(todo)} sample days computed in {time.perf_counter() - began:.0f} s, kept in {options.archive}")
+    if options.no_serve:
+        return 0
+    return _open_page(options.archive, "127.0.0.1", options.port, browser=not options.no_browser)
+
+
+def _is_date(name: str) -> bool:
+    try:
+        date.fromisoformat(name)
+    except ValueError:
+        return False
+    return True
+
+
+def _serve(options: argparse.Namespace) -> int:
+    given = settings.from_environment()
+    return _open_page(options.archive or given.archive, options.host or given.host, options.port, browser=False)
+
+
+def _open_page(place: str, host: str, port: str, *, browser: bool) -> int:
+    from skylag.archive import open_archive
+    from skylag.web.app import create_app, serve
+
+    number = settings.port_number(port) if port else settings.from_environment().port
+    with open_archive(place) as archive:
+        app = create_app(archive)
+
+        def ready(address: str) -> None:
+            print(f"the page is at {address} (stop with Ctrl-C). {CAUTION}", flush=True)
+            if browser:
+                threading.Thread(target=webbrowser.open, args=(address,), daemon=True).start()
+
+        serve(app, host, number, ready)
+    return 0
+
+
+class _Bar:
+    """Progress of one day on standard error: a bar on a terminal, a line per stage elsewhere."""
+
+    def __init__(self, title: str, *, quiet: bool = False, out: TextIO | None = None) -> None:
+        self._title, self._quiet = title, quiet
+        self._out = out or sys.stderr
+        self._live = self._out.isatty() and os.environ.get("TERM") != "dumb"
+        self._stage = ""
+        self._began = time.perf_counter()
+
+    def tell(self, stage: str, share: float, word: str) -> None:
+        """Show the share of the whole day that is done."""
+        if self._quiet:
+            return
+        names = list(_STAGES)
+        start, words = _STAGES[stage]
+        number = names.index(stage)
+        end = _STAGES[names[number + 1]][0] if number + 1 < len(names) else 1.0
+        whole = start + (end - start) * share
+        if self._live:
+            filled = round(24 * whole)
+            text = f"\r{self._title} [{'=' * filled}{' ' * (24 - filled)}] {100 * whole:3.0f} % {words} {word}"
+            self._out.write(f"{text:<110}"[:110])
+            self._out.flush()
+        elif stage != self._stage:
+            print(f"{self._title}: {words}", file=self._out)
+        self._stage = stage
+
+    def close(self) -> None:
+        """End the line and tell how long it took."""
+        if self._quiet:
+            return
+        seconds = time.perf_counter() - self._began
+        if self._live:
+            self._out.write("\r" + " " * 110 + "\r")
+        print(f"{self._title}: done in {seconds:.1f} s", file=self._out)
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -1,0 +1,86 @@
+"""Result tables for people who script: biases.csv, flags.csv, slant.parquet.
+
+Names and columns are a contract: they are documented in the README and do not change within a major version.  Times are
+GPS time unless the column says UTC.  Never decides what is in the tables.
+"""
+
+import csv
+import io
+from collections.abc import Sequence
+from pathlib import Path
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+from skylag.tables import Calibration, Flag, Samples
+from skylag.timescales import gps_to_utc
+
+BIAS_COLUMNS = ("kind", "name", "system", "code1", "code2", "bias_ns", "sigma_ns", "datum")
+FLAG_COLUMNS = ("start", "end", "lat_deg", "lon_deg", "kind", "slope_mm_per_km", "sigma_mm_per_km", "speed_m_s",
+                "heading_deg", "state", "evidence")  # fmt: skip
+SLANT_COLUMNS = ("time", "receiver", "satellite", "arc", "elevation_deg", "azimuth_deg", "pierce_lat_deg",
+                 "pierce_lon_deg", "stec_tecu", "vtec_tecu", "sigma_tecu")  # fmt: skip
+
+
+def biases_csv(calibration: Calibration) -> str:
+    """biases.csv: bias of code1 minus bias of code2 [ns], as in Bias-SINEX differential records."""
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    writer.writerow(BIAS_COLUMNS)
+    table = calibration.biases
+    for row in range(len(table)):
+        writer.writerow([
+            table.kind[row], table.name[row], table.system[row], table.code1[row], table.code2[row],
+            f"{table.value_ns[row]:.4f}", f"{table.sigma_ns[row]:.4f}", calibration.datum_of_row[row],
+        ])  # fmt: skip
+    return out.getvalue()
+
+
+def flags_csv(flags: Sequence[Flag]) -> str:
+    """flags.csv: one row per flag, start and end in UTC (ISO 8601)."""
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    writer.writerow(FLAG_COLUMNS)
+    for flag in flags:
+        writer.writerow([
+            utc_text(flag.start), utc_text(flag.end), f"{flag.lat:.3f}", f"{flag.lon:.3f}", flag.kind,
+            _number(flag.slope_mm_per_km, 1), _number(flag.sigma_mm_per_km, 1), _number(flag.speed_m_s, 0),
+            _number(flag.heading_deg, 0), flag.state, flag.evidence,
+        ])  # fmt: skip
+    return out.getvalue()
+
+
+def utc_text(gps: np.datetime64) -> str:
+    """ISO 8601 UTC, to the second, of a GPS time."""
+    return str(np.asarray(gps_to_utc(gps)).astype("datetime64[s]")) + "Z"
+
+
+def _number(value: float, digits: int) -> str:
+    return f"{value:.{digits}f}" if np.isfinite(value) else ""
+
+
+def write_slants(samples: Samples, path: Path) -> None:
+    """slant.parquet: one row per line of sight; time is GPS time without a zone."""
+    rays = samples.rays
+    names = np.array([receiver.name for receiver in rays.receivers])
+    table = pa.table({
+        "time": pa.array(rays.time.astype("datetime64[ns]")),
+        "receiver": pa.DictionaryArray.from_arrays(pa.array(rays.receiver.astype(np.int32)), pa.array(names)),
+        "satellite": pa.DictionaryArray.from_arrays(
+            pa.array(rays.satellite.astype(np.int32)), pa.array(rays.satellites)
+        ),
+        "arc": pa.array(rays.arc.astype(np.int32)),
+        "elevation_deg": pa.array(rays.elevation.astype(np.float32)),
+        "azimuth_deg": pa.array(rays.azimuth.astype(np.float32)),
+        "pierce_lat_deg": pa.array(rays.pierce_lat.astype(np.float32)),
+        "pierce_lon_deg": pa.array(rays.pierce_lon.astype(np.float32)),
+        "stec_tecu": pa.array(samples.stec.astype(np.float32)),
+        "vtec_tecu": pa.array(samples.vtec.astype(np.float32)),
+        "sigma_tecu": pa.array(samples.sigma.astype(np.float32)),
+    })  # fmt: skip
+    table = table.replace_schema_metadata({
+        "time_system": "GPS", "shell_height_m": f"{rays.shell_height_m:g}",
+        "sigma_tecu": "of vtec_tecu, one sigma, noise, levelling, biases and mapping together",
+    })  # fmt: skip
+    pq.write_table(table, path, compression="zstd")

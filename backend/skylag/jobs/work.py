@@ -1,0 +1,448 @@
+"""The units of work: one receiver-day, one network day.  Reads with `formats`, computes with `chain`.
+
+Units are top-level functions with picklable arguments, so that any standard Executor can run them.  A bad input file is
+named and left out; the rest goes on.  Never writes to the archive: whoever asked keeps the products.
+"""
+
+import platform
+import re
+import time
+from collections import Counter
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from concurrent.futures import Executor, as_completed
+from dataclasses import asdict, dataclass, field, replace
+from datetime import date
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from skylag import chain, formats
+from skylag.chain import Choices, ReceiverDay
+from skylag.errors import FormatError, NotEnough, SkylagError
+from skylag.ionosphere.pairs import wanted_codes
+from skylag.tables import (
+    Biases,
+    Ephemerides,
+    Origin,
+    PreciseOrbits,
+    Problem,
+    Products,
+    Region,
+    Signals,
+    concatenate,
+)
+from skylag.timescales import day_of
+
+# Told the stage, the share of it done (0 to 1), and a word on what is being done.
+Progress = Callable[[str, float, str], None]
+
+_STATION_NAME = re.compile(r"^([A-Z0-9]{4}\d{2}[A-Z]{3})_|^([A-Za-z0-9]{4})\d{3}[0-9a-xA-X]\d{0,2}\.", re.ASCII)
+_LIBRARIES = ("numpy", "scipy", "hatanaka", "pandas", "xarray", "sqlalchemy")
+
+
+@dataclass(frozen=True)
+class LeftOut:
+    """An input that was not used, and why."""
+
+    path: str
+    line: int
+    reason: str
+
+    def __str__(self) -> str:
+        return f"{self.path}:{self.line}: {self.reason}" if self.line else f"{self.path}: {self.reason}"
+
+
+@dataclass(frozen=True)
+class Inputs:
+    """The files of a job, sorted by what they hold."""
+
+    observations: Mapping[str, tuple[str, ...]]  # station key of the name -> paths
+    orbits: tuple[str, ...]
+    biases: tuple[str, ...]
+    left_out: tuple[LeftOut, ...]
+    files: tuple[Mapping[str, Any], ...]
+
+
+@dataclass(frozen=True)
+class DayResult:
+    """The products of a day, and what was left out or noticed on the way."""
+
+    products: Products
+    left_out: tuple[LeftOut, ...]
+    problems: tuple[Problem, ...]
+
+
+@dataclass
+class _Clock:
+    """Wall-clock seconds per stage."""
+
+    seconds: dict[str, float] = field(default_factory=dict)
+    stage: str = ""
+    since: float = 0.0
+
+    def enter(self, stage: str) -> None:
+        now = time.perf_counter()
+        if self.stage:
+            self.seconds[self.stage] = self.seconds.get(self.stage, 0.0) + now - self.since
+        self.stage, self.since = stage, now
+
+
+def sort_inputs(paths: Iterable[Path]) -> Inputs:
+    """Look into every file (folders are searched) and sort by kind; what is of no use is left out with a reason.
+
+    Raises FormatError where a path does not exist.
+    """
+    observations: dict[str, list[str]] = {}
+    orbits: list[str] = []
+    biases: list[str] = []
+    left_out: list[LeftOut] = []
+    files: list[Mapping[str, Any]] = []
+    seen: dict[str, str] = {}
+    for path in _all_files(paths):
+        try:
+            kind = formats.kind_of_file(path)
+            mark = formats.fingerprint(path)
+        except SkylagError as trouble:
+            left_out.append(LeftOut(str(path), int(trouble.details.get("line", 0)), _reason(trouble, path)))
+            continue
+        except OSError as trouble:
+            left_out.append(LeftOut(str(path), 0, f"cannot be read ({trouble.strerror})"))
+            continue
+        if mark["sha256"] in seen:
+            left_out.append(LeftOut(str(path), 0, f"is the same file as {seen[mark['sha256']]}"))
+            continue
+        seen[mark["sha256"]] = str(path)
+        files.append({**mark, "name": path.name, "kind": kind})
+        if kind == "observation":
+            observations.setdefault(_station_key(path), []).append(str(path))
+        elif kind in ("navigation", "sp3"):
+            orbits.append(str(path))
+        elif kind == "biases":
+            biases.append(str(path))
+        else:
+            left_out.append(LeftOut(str(path), 0, f"is of no use here (looks like {kind})"))
+    return Inputs(
+        {key: tuple(sorted(names)) for key, names in sorted(observations.items())}, tuple(orbits), tuple(biases),
+        tuple(left_out), tuple(files),
+    )  # fmt: skip
+
+
+def _all_files(paths: Iterable[Path]) -> list[Path]:
+    found: list[Path] = []
+    for path in paths:
+        if path.is_dir():
+            # A folder may hold the region, notes and truth beside the data: hidden files and these are passed over.
+            found += [
+                p for p in sorted(path.rglob("*"))
+                if p.is_file() and not p.name.startswith(".") and p.suffix not in (".toml", ".md", ".txt", ".py", ".npz")
+            ]  # fmt: skip
+        elif path.exists():
+            found.append(path)
+        else:
+            raise FormatError(f"{path}: there is no such file or folder", path=str(path), line=0)
+    return list(dict.fromkeys(found))
+
+
+def _station_key(path: Path) -> str:
+    """What of the name tells the receiver, in both naming conventions; the whole name where neither is followed."""
+    match = _STATION_NAME.match(path.name)
+    return (match.group(1) or match.group(2)).upper() if match else path.name
+
+
+def _reason(trouble: SkylagError, path: Path) -> str:
+    """The message without the path it may begin with."""
+    text = trouble.message
+    for start in (f"{path}:", f"{path.name}:"):
+        if text.startswith(start):
+            text = text[len(start) :].lstrip("0123456789: ")
+    return text
+
+
+def read_orbits(paths: Sequence[str]) -> tuple[list[Ephemerides | PreciseOrbits], list[Problem], list[LeftOut]]:
+    """Orbit sources, tabulated ones first; problems met; files left out."""
+    tabulated: list[Ephemerides | PreciseOrbits] = []
+    broadcast: list[Ephemerides | PreciseOrbits] = []
+    problems: list[Problem] = []
+    left_out: list[LeftOut] = []
+    for path in paths:
+        try:
+            reading = formats.read(Path(path))
+        except SkylagError as trouble:
+            left_out.append(LeftOut(path, int(trouble.details.get("line", 0)), _reason(trouble, Path(path))))
+            continue
+        problems += reading.problems
+        if isinstance(reading.table, PreciseOrbits):
+            tabulated.append(reading.table)
+        elif isinstance(reading.table, Ephemerides):
+            broadcast.append(reading.table)
+    return tabulated + broadcast, problems, left_out
+
+
+def read_biases(paths: Sequence[str]) -> tuple[Biases | None, list[Problem], list[LeftOut]]:
+    """All published biases as one table, None where there are none."""
+    tables: list[Biases] = []
+    problems: list[Problem] = []
+    left_out: list[LeftOut] = []
+    for path in paths:
+        try:
+            reading = formats.read(Path(path))
+        except SkylagError as trouble:
+            left_out.append(LeftOut(path, int(trouble.details.get("line", 0)), _reason(trouble, Path(path))))
+            continue
+        problems += reading.problems
+        if isinstance(reading.table, Biases):
+            tables.append(reading.table)
+    if not tables:
+        return None, problems, left_out
+    columns = ("kind", "name", "system", "code1", "code2", "value_ns", "sigma_ns", "start", "end")
+    joined = Biases(
+        **{name: np.concatenate([getattr(table, name) for table in tables]) for name in columns},
+        source=", ".join(dict.fromkeys(table.source for table in tables)),
+        datum="as published",
+    )
+    return joined, problems, left_out
+
+
+@dataclass(frozen=True)
+class ReceiverResult:
+    """What one receiver-day unit gives back: small enough to travel between processes."""
+
+    key: str
+    day: ReceiverDay | None
+    problems: tuple[Problem, ...]
+    left_out: tuple[LeftOut, ...]
+
+
+def receiver_unit(
+    key: str,
+    paths: Sequence[str],
+    day: np.datetime64,
+    sources: Sequence[Ephemerides | PreciseOrbits],
+    choices: Choices,
+    shell_height_m: float,
+) -> ReceiverResult:
+    """Read the files of one receiver and take the wanted day to rays."""
+    problems: list[Problem] = []
+    left_out: list[LeftOut] = []
+    pieces: list[Signals] = []
+    wanted = wanted_codes(choices.signals)
+    for path in paths:
+        try:
+            reading = formats.read(Path(path), wanted=wanted, thin_to_s=choices.thin_to_s)
+            signals = reading.table
+            if not isinstance(signals, Signals):
+                raise FormatError(f"{path}: is no observation file", path=path, line=0)
+            kept = _on_day(signals, day)
+            if kept is None:
+                days = sorted({str(d) for d in day_of(signals.times)})
+                raise FormatError(
+                    f"{path}: is of another day ({', '.join(days)}, not {day}); give --date to choose", path=path, line=0
+                )
+            problems += reading.problems
+            pieces.append(kept)
+        except SkylagError as trouble:
+            left_out.append(LeftOut(path, int(trouble.details.get("line", 0)), _reason(trouble, Path(path))))
+    if not pieces:
+        return ReceiverResult(key, None, tuple(problems), tuple(left_out))
+    try:
+        signals = formats.merge(pieces) if len(pieces) > 1 else pieces[0]
+        made = chain.receiver_day(signals, sources, choices, shell_height_m)
+    except SkylagError as trouble:
+        left_out.append(LeftOut(paths[0], 0, trouble.message))
+        return ReceiverResult(key, None, tuple(problems), tuple(left_out))
+    return ReceiverResult(key, made, tuple(problems), tuple(left_out))
+
+
+def _on_day(signals: Signals, day: np.datetime64) -> Signals | None:
+    """The epochs of one GPS-time day; None where there are fewer than ten."""
+    inside = day_of(signals.times) == day
+    if inside.sum() < 10:
+        return None
+    if inside.all():
+        return signals
+    return replace(
+        signals, times=signals.times[inside], resets=signals.resets[inside],
+        values={name: values[inside] for name, values in signals.values.items()},
+        lock={name: values[inside] for name, values in signals.lock.items()},
+    )  # fmt: skip
+
+
+def likely_day(inputs: Inputs) -> np.datetime64:
+    """The day that most observation files begin on.
+
+    Raises NotEnough where there is no observation file.
+    """
+    days: Counter[np.datetime64] = Counter()
+    for paths in inputs.observations.values():
+        for path in paths:
+            try:
+                days[formats.first_day(Path(path))] += 1
+            except SkylagError:
+                continue  # it will be named with its reason when it is read
+    if not days:
+        raise NotEnough(
+            "no observation file that can be read is among the inputs; give RINEX observation files or folders of them",
+            had=0, needed=1, where="inputs",
+        )  # fmt: skip
+    most = max(days.values())
+    return min(day for day, count in days.items() if count == most)
+
+
+def network_day(
+    paths: Iterable[Path],
+    *,
+    region: Region | None = None,
+    day: date | None = None,
+    choices: Choices | None = None,
+    executor: Executor,
+    simulated: bool = False,
+    progress: Progress | None = None,
+) -> DayResult:
+    """From files and folders to the products of one network day.
+
+    Raises NotEnough where no receiver can be used, FormatError where a path does not exist.
+    """
+    tell = progress or (lambda stage, share, word: None)
+    choices = choices or Choices()
+    clock = _Clock()
+    clock.enter("look")
+    tell("look", 0.0, "looking at the files")
+    inputs = sort_inputs(paths)
+    if not inputs.observations:
+        raise NotEnough(
+            "no observation file is among the inputs; give RINEX observation files or folders of them"
+            + "".join(f"\n  {item}" for item in inputs.left_out),
+            had=0, needed=1, where="inputs", left_out=[str(item) for item in inputs.left_out],
+        )  # fmt: skip
+    wanted_day = np.datetime64(day.isoformat(), "D") if day is not None else likely_day(inputs)
+    clock.enter("orbits")
+    tell("orbits", 0.0, "orbits and biases")
+    sources, problems, left_out = read_orbits(inputs.orbits)
+    prior, more_problems, more_left_out = read_biases(inputs.biases)
+    problems += more_problems
+    left_out = [*inputs.left_out, *left_out, *more_left_out]
+    if not sources:
+        raise NotEnough(
+            "no usable navigation or SP3 file is among the inputs; without orbits nothing can be placed"
+            + "".join(f"\n  {item}" for item in left_out),
+            had=0, needed=1, where="inputs", left_out=[str(item) for item in left_out],
+        )  # fmt: skip
+    clock.enter("receivers")
+    shell_height_m = (region.shell_height_km if region else 400.0) * 1000.0
+    results = _receivers(inputs, wanted_day, sources, choices, shell_height_m, executor, tell)
+    for result in results:
+        problems += result.problems
+        left_out += result.left_out
+    usable = [result.day for result in results if result.day is not None]
+    usable = _one_of_each(usable, left_out)
+    if not usable:
+        raise NotEnough(
+            f"no receiver of {wanted_day} can be used" + "".join(f"\n  {item}" for item in left_out),
+            had=0, needed=1, where=str(wanted_day), left_out=[str(item) for item in left_out],
+        )  # fmt: skip
+    rays = concatenate([item.rays for item in usable])
+    receivers = tuple(item.receiver for item in usable)
+    place = region or chain.region_around(receivers)
+    channels = chain.channels_of(sources)
+
+    def stage(name: str, share: float) -> None:
+        if share == 0.0:
+            clock.enter(name)
+        tell(name, share, "")
+
+    made = chain.estimate(rays, place, wanted_day, choices, prior, channels, stage)
+    clock.enter("")
+    warnings = [*made.warnings, *(note for item in usable for note in item.notes)]
+    warnings += [f"left out: {item}" for item in left_out]
+    origin = Origin(
+        inputs=_with_use(inputs.files, left_out),
+        options=_options(choices, place, wanted_day),
+        versions=versions(),
+        timings_s={name: round(seconds, 3) for name, seconds in clock.seconds.items()},
+        counts={
+            "receivers": len(receivers), "rays": len(rays), "arcs": int(sum(item.facts["arcs"] for item in usable)),
+            "slips": int(sum(item.facts["slips"] for item in usable)), "maps": len(made.fields.times),
+            "flags": len(made.flags), "problems": len(problems), "left_out": len(left_out),
+            "by_receiver": [dict(item.facts) for item in usable], **dict(made.facts),
+        },
+        warnings=tuple(warnings),
+        simulated=simulated,
+    )  # fmt: skip
+    products = Products(
+        region=place, day=wanted_day, receivers=receivers, calibration=made.calibration, samples=made.samples,
+        fields=made.fields, flags=made.flags, site_states=made.site_states, site_reasons=made.site_reasons, origin=origin,
+    )  # fmt: skip
+    return DayResult(products, tuple(left_out), tuple(problems))
+
+
+def _receivers(
+    inputs: Inputs, day: np.datetime64, sources: Sequence[Ephemerides | PreciseOrbits], choices: Choices,
+    shell_height_m: float, executor: Executor, tell: Progress,
+) -> list[ReceiverResult]:  # fmt: skip
+    """All receiver-day units, run side by side, in the order of their names."""
+    total = len(inputs.observations)
+    tell("receivers", 0.0, f"{total} receivers")
+    waiting = {
+        executor.submit(receiver_unit, key, paths, day, sources, choices, shell_height_m): key
+        for key, paths in inputs.observations.items()
+    }
+    done: dict[str, ReceiverResult] = {}
+    for future in as_completed(waiting):
+        key = waiting[future]
+        done[key] = future.result()
+        tell("receivers", len(done) / total, key)
+    return [done[key] for key in inputs.observations]
+
+
+def _one_of_each(days: list[ReceiverDay], left_out: list[LeftOut]) -> list[ReceiverDay]:
+    """One entry per receiver name: two files of one receiver under unlike names must not count as two witnesses."""
+    kept: dict[str, ReceiverDay] = {}
+    for item in sorted(days, key=lambda d: -len(d.rays)):
+        name = item.receiver.name
+        if name in kept:
+            left_out.append(LeftOut(name, 0, "a second set of files tells the same marker; the fuller one is used"))
+        else:
+            kept[name] = item
+    return sorted(kept.values(), key=lambda d: d.receiver.name)
+
+
+def _with_use(files: Sequence[Mapping[str, Any]], left_out: Sequence[LeftOut]) -> tuple[Mapping[str, Any], ...]:
+    why = {Path(item.path).name: item.reason for item in left_out}
+    return tuple({**mark, "used": mark["name"] not in why, "why_not": why.get(mark["name"], "")} for mark in files)
+
+
+def _options(choices: Choices, region: Region, day: np.datetime64) -> dict[str, Any]:
+    return {
+        "day": str(day),
+        "region": asdict(region),
+        "signals": {system: "-".join(pair) for system, pair in choices.signals.items()},
+        "minimum_elevation_deg": choices.minimum_elevation,
+        "epoch_step_s": choices.epoch_step_s,
+        "arcs": asdict(choices.arcs),
+        "adjustment": asdict(choices.adjustment),
+        "field": asdict(choices.field),
+        "slopes": asdict(choices.slopes),
+        "fronts": asdict(choices.fronts),
+        "irregularity": asdict(choices.irregularity),
+    }
+
+
+def versions() -> dict[str, str]:
+    """Versions of this program, Python, and the libraries that numbers pass through."""
+    found = {"skylag": own_version(), "python": platform.python_version()}
+    for name in _LIBRARIES:
+        try:
+            found[name] = version(name)
+        except PackageNotFoundError:
+            continue
+    return found
+
+
+def own_version() -> str:
+    """The installed version of this program."""
+    try:
+        return version("skylag")
+    except PackageNotFoundError:
+        return "unknown"
