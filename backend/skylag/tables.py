@@ -640,7 +640,7 @@ class Onsets:
     """Steep runs of vertical content along lines of sight, one row each.
 
     start, time, end   first epoch, middle (centre of the change), last epoch
-    receiver, satellite (row numbers); lat, lon [deg] of the pierce point at `time`; elevation [deg]
+    receiver, satellite (row numbers); lat, lon [deg] of the pierce point at `time`; elevation, azimuth [deg]
     east_speed, north_speed [m/s on the ground] of the pierce point
     jump [TECU, signed], rate [TECU/s, signed, steepest], rate_sigma; time_sigma_s
     front      row number of the front it belongs to, -1 for none
@@ -654,6 +654,7 @@ class Onsets:
     lat: Floats
     lon: Floats
     elevation: Floats
+    azimuth: Floats
     east_speed: Floats
     north_speed: Floats
     jump: Floats
@@ -662,8 +663,8 @@ class Onsets:
     time_sigma_s: Floats
     front: Ints
 
-    COLUMNS = ("start", "time", "end", "receiver", "satellite", "lat", "lon", "elevation", "east_speed", "north_speed",
-               "jump", "rate", "rate_sigma", "time_sigma_s", "front")  # fmt: skip
+    COLUMNS = ("start", "time", "end", "receiver", "satellite", "lat", "lon", "elevation", "azimuth", "east_speed",
+               "north_speed", "jump", "rate", "rate_sigma", "time_sigma_s", "front")  # fmt: skip
 
     def __post_init__(self) -> None:
         _same_length(self, *self.COLUMNS)
@@ -685,7 +686,7 @@ class Front:
     slope [mm/km, vertical], width_km from foot to head, jump_tecu (signed: what it brings);
     reach_km: how far it was seen to its left (negative) and right along the wall, from the foot of that distance
     track      (time, lat, lon) of its nearest point to the centre, every few minutes
-    sweep_km   scatter of the lines of sight about the line
+    sweep_km   scatter of the lines of sight about the line; height_km of the wall's middle, as the lines of sight tell
     """
 
     start: np.datetime64
@@ -706,6 +707,8 @@ class Front:
     jump_sigma_tecu: float
     reach_km: tuple[float, float]
     sweep_km: float
+    height_km: float
+    height_sigma_km: float
     onsets: int
     receivers: tuple[str, ...]
     satellites: tuple[str, ...]

@@ -1,7 +1,6 @@
 """Rays laid out dense, epoch by line of sight, so that slopes, fronts and patches run along time without loops.
 
-A line of sight is one receiver and one satellite over the whole day.  Also holds the flat local map and the distances
-that those three share.  Never estimates anything.
+A line of sight is one receiver and one satellite over the whole day.  Never estimates anything.
 """
 
 from dataclasses import dataclass
@@ -64,28 +63,13 @@ def lay_out(rays: Rays, step_s: float | None = None) -> Sightlines:
     return Sightlines(times, own_s * every, lines % len(rays.receivers), lines // len(rays.receivers), row)
 
 
-def to_plane(lat: npt.ArrayLike, lon: npt.ArrayLike, centre: tuple[float, float]) -> tuple[Floats, Floats]:
-    """East and north [km on the ground] of places [deg] on the azimuthal equidistant map about a centre (lat, lon).
-
-    Distances from the centre are true; others are long by at most 0.5 % within 1000 km.
-    """
-    lat_rad, lon_rad = np.radians(np.asarray(lat, dtype=np.float64)), np.radians(np.asarray(lon, dtype=np.float64))
-    lat0_rad, lon0_rad = np.radians(centre[0]), np.radians(centre[1])
-    across = np.cos(lat_rad) * np.sin(lon_rad - lon0_rad)
-    up = np.cos(lat0_rad) * np.sin(lat_rad) - np.sin(lat0_rad) * np.cos(lat_rad) * np.cos(lon_rad - lon0_rad)
-    along = np.sin(lat0_rad) * np.sin(lat_rad) + np.cos(lat0_rad) * np.cos(lat_rad) * np.cos(lon_rad - lon0_rad)
-    sine = np.hypot(across, up)
-    scale = EARTH_RADIUS_KM * np.where(sine > 1e-12, np.arctan2(sine, along) / np.maximum(sine, 1e-12), 1.0)
-    return np.asarray(across * scale), np.asarray(up * scale)
-
-
 def from_plane(east_km: npt.ArrayLike, north_km: npt.ArrayLike, centre: tuple[float, float]) -> tuple[Floats, Floats]:
-    """Latitude and longitude [deg] of places on the map of `to_plane`."""
+    """Latitude and longitude [deg] of places on the flat map of `field.plane_km`."""
     east, north = np.asarray(east_km, dtype=np.float64), np.asarray(north_km, dtype=np.float64)
     distance = np.hypot(east, north)
     angle = distance / EARTH_RADIUS_KM
     safe = np.maximum(distance, 1e-9)
-    lat0_rad, lon0_rad = np.radians(centre[0]), np.radians(centre[1])
+    lat0_rad = np.radians(centre[0])
     sine = np.cos(angle) * np.sin(lat0_rad) + north / safe * np.sin(angle) * np.cos(lat0_rad)
     lat = np.degrees(np.arcsin(np.clip(sine, -1.0, 1.0)))
     lon = centre[1] + np.degrees(

@@ -7,8 +7,8 @@
    time and space: a wall that moves toward the pierce point looks steeper, one that moves along looks flatter.
 3. From the map (`Fields.slope`), made elsewhere; here it is only compared with the other two.
 
-Distances are between pierce points on the shell, which is close to the distance of two users on the ground who look at
-the same satellite.  Never blames the ionosphere on the word of one receiver: see `SlopeClaim.confirmed`.
+Distances are between the places on the ground below the pierce points, as everywhere in this program (on the shell they
+are h/R longer, 6 % at 400 km).  Never blames the ionosphere on the word of one receiver: see `SlopeClaim.confirmed`.
 """
 
 import itertools
@@ -22,8 +22,9 @@ from scipy.sparse.csgraph import connected_components
 from scipy.spatial import cKDTree
 
 from skylag.constants import L1_M_PER_TECU, SHELL_EARTH_RADIUS_M
-from skylag.ionosphere.sightlines import Sightlines, lay_out, middle, to_plane
-from skylag.tables import SLOPE_WAYS, Bools, Fields, Floats, Ints, Rays, Receiver, SlopeClaim, Slopes, Times
+from skylag.ionosphere.field import plane_km
+from skylag.ionosphere.sightlines import Sightlines, lay_out, middle
+from skylag.tables import SLOPE_WAYS, Bools, Fields, Floats, Ints, Rays, Receiver, Samples, SlopeClaim, Slopes, Times
 
 MM_PER_TECU = L1_M_PER_TECU * 1000.0  # 162.372448 mm of delay on 1575.42 MHz per TECU
 PAIR, PAIR_CHANGE, PATH, FIELD = (SLOPE_WAYS.index(way) for way in SLOPE_WAYS)
@@ -82,7 +83,7 @@ class SlopeChoices:
     join_s: float = 600.0
 
 
-def measure(rays: Rays, samples: "Any", fields: Fields | None = None, choices: SlopeChoices | None = None) -> Slopes:
+def measure(rays: Rays, samples: Samples, fields: Fields | None = None, choices: SlopeChoices | None = None) -> Slopes:
     """Witnesses of steep slopes of a network day, and what they claim together.
 
     rays, samples  of the network day, row by row the same (`samples.vtec`, `arc_sigma`, `receiver_sigma` are used)
@@ -99,9 +100,8 @@ def measure(rays: Rays, samples: "Any", fields: Fields | None = None, choices: S
         "noise": lines.layer(rays.noise_sigma / rays.mapping),
     }
     arcs = lines.numbers(rays.arc)
-    scale = 1.0 + rays.shell_height_m / SHELL_EARTH_RADIUS_M
-    pairs, pair_facts = _pairs(lines, layers, arcs, scale, choices)
-    paths, path_facts = _paths(rays, samples, scale, choices)
+    pairs, pair_facts = _pairs(lines, layers, arcs, choices)
+    paths, path_facts = _paths(rays, samples, choices)
     columns = {name: np.concatenate([pairs[name], paths[name]]) for name in Slopes.COLUMNS}
     order = np.argsort(columns["time"], kind="stable")
     columns = {name: values[order] for name, values in columns.items()}
@@ -111,7 +111,7 @@ def measure(rays: Rays, samples: "Any", fields: Fields | None = None, choices: S
 
 
 def _pairs(
-    lines: Sightlines, layers: Mapping[str, Floats], arcs: Ints, scale: float, choices: SlopeChoices
+    lines: Sightlines, layers: Mapping[str, Floats], arcs: Ints, choices: SlopeChoices
 ) -> tuple[dict[str, Any], dict[str, Any]]:
     """Slopes between receivers, absolute and as departures from the arc pair's median; and facts about all of them."""
     first, second = _pair_columns(lines)
@@ -123,9 +123,9 @@ def _pairs(
         return layers[name][epoch, one], layers[name][epoch, two]
 
     lat, lon = at("lat"), at("lon")
-    north = (lat[1] - lat[0]) * (np.pi / 180.0) * SHELL_EARTH_RADIUS_M / 1000.0 * scale
+    north = (lat[1] - lat[0]) * (np.pi / 180.0) * SHELL_EARTH_RADIUS_M / 1000.0
     turn = (lon[1] - lon[0] + 180.0) % 360.0 - 180.0
-    east = turn * (np.pi / 180.0) * SHELL_EARTH_RADIUS_M / 1000.0 * scale * np.cos(np.radians(0.5 * (lat[0] + lat[1])))
+    east = turn * (np.pi / 180.0) * SHELL_EARTH_RADIUS_M / 1000.0 * np.cos(np.radians(0.5 * (lat[0] + lat[1])))
     distance = np.hypot(east, north)
     kept = (distance >= choices.nearest_km) & (distance <= choices.farthest_km)
     epoch, pair, one, two = epoch[kept], pair[kept], one[kept], two[kept]
@@ -203,7 +203,7 @@ def _quantile(values: Floats, share: float) -> float:
     return float(np.quantile(values, share)) if len(values) else float("nan")
 
 
-def _paths(rays: Rays, samples: "Any", scale: float, choices: SlopeChoices) -> tuple[dict[str, Any], dict[str, Any]]:
+def _paths(rays: Rays, samples: Samples, choices: SlopeChoices) -> tuple[dict[str, Any], dict[str, Any]]:
     """Slopes along the pierce points' paths (time-step method): same arc, path_step_s apart."""
     lines = lay_out(rays, choices.path_step_s)
     vtec = lines.layer(np.where(rays.elevation >= choices.elevation_deg, samples.vtec, np.nan))
@@ -211,7 +211,7 @@ def _paths(rays: Rays, samples: "Any", scale: float, choices: SlopeChoices) -> t
     noise = lines.layer(rays.noise_sigma / rays.mapping)
     mapping = lines.layer(rays.mapping)
     arcs = lines.numbers(rays.arc)
-    km = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0 * scale
+    km = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
     north = np.diff(lat, axis=0) * km
     east = ((np.diff(lon, axis=0) + 180.0) % 360.0 - 180.0) * km * np.cos(np.radians(lat[1:]))
     distance = np.hypot(east, north)
@@ -253,7 +253,7 @@ def _claims(columns: Mapping[str, Any], rays: Rays, choices: SlopeChoices) -> tu
     """Witnesses that touch in space and time, joined."""
     if len(columns["time"]) == 0:
         return ()
-    east, north = to_plane(columns["lat"], columns["lon"], middle(rays))
+    east, north = plane_km(columns["lat"], columns["lon"], middle(rays))
     seconds = columns["time"].astype("datetime64[ns]").astype(np.int64) / 1e9
     five = np.floor(seconds / 300.0).astype(np.int64)
     column, line = (np.floor(v / choices.cell_km).astype(np.int64) for v in (east, north))

@@ -1,0 +1,587 @@
+"""Moving walls of content: found on many lines of sight, fitted to a straight line on the move, followed and foretold.
+
+Each line of sight that a wall sweeps over shows one steep run of its vertical content (phase only: no bias matters).
+The middles of the runs are points in space and time; a wall is a plane through them.  The plane is sought by trying
+many triples of points (RANSAC: Fischler and Bolles 1981) and polished by least squares, together with the height at
+which the wall stands, since a shell of another height shifts the pierce points of low lines of sight.  Speed and
+direction from arrival times at three stations are common practice for such walls and carry about 30 % (Radio Science
+48, 2013); many lines of sight do better and say how much.
+Never calls a wall what a single receiver or satellite saw, nor what chance makes as good.
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
+
+from skylag.constants import SHELL_EARTH_RADIUS_M
+from skylag.ionosphere.field import plane_km
+from skylag.ionosphere.sightlines import Sightlines, from_plane, lay_out, middle
+from skylag.ionosphere.slopes import MM_PER_TECU
+from skylag.tables import Arrival, Bools, Floats, Front, Fronts, Ints, Onsets, Rays, Samples, Site, Slopes, Times
+
+_KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
+
+
+@dataclass(frozen=True)
+class FrontChoices:
+    """How onsets and walls are found.
+
+    elevation_deg     lowest elevation of a line of sight
+    rate_tecu_min     a run is steep from this rate above its background on: a disturbance of 0.5 TECU amplitude and 15
+                      minutes period changes by 0.21 TECU/min at most
+    noise_factor      and from so many times the line's own scatter on
+    least_jump_tecu   smaller runs are left alone
+    dominance         a run must change content by so much more than any opposite run of its line within 15 minutes
+    place_km, height_share_km   scatter allowed of a run's place: at zenith, and per unit of tan(zenith angle)
+    fewest, fewest_receivers, fewest_satellites   what a wall needs
+    fastest_m_s       walls faster than this are not sought
+    tries, seed       triples tried, and where their draw starts
+    """
+
+    elevation_deg: float = 15.0
+    rate_tecu_min: float = 0.35
+    noise_factor: float = 6.0
+    least_jump_tecu: float = 1.5
+    dominance: float = 1.5
+    place_km: float = 12.0
+    height_share_km: float = 12.0
+    height_sigma_km: float = 60.0
+    fewest: int = 6
+    fewest_receivers: int = 3
+    fewest_satellites: int = 2
+    fastest_m_s: float = 1500.0
+    apart_s: float = 2400.0
+    tries: int = 2500
+    seed: int = 20_031_120
+    track_step_s: float = 300.0
+
+
+def track(
+    rays: Rays, samples: Samples, slopes: Slopes | None = None, choices: FrontChoices | None = None
+) -> Fronts:
+    """The fronts of a network day and the onsets behind them.
+
+    slopes  not needed for finding; where given, a front whose place pairs witness gains nothing but agreement
+    """
+    choices = choices or FrontChoices()
+    onsets = find_onsets(rays, samples, choices)
+    return fit_walls(onsets, rays, choices)
+
+
+# ---------------------------------------------------------------------------------------------- onsets
+
+
+def find_onsets(rays: Rays, samples: Samples, choices: FrontChoices | None = None) -> Onsets:
+    """Steep runs of vertical content on every line of sight."""
+    choices = choices or FrontChoices()
+    lines = lay_out(rays)
+    vtec = lines.layer(np.where(rays.elevation >= choices.elevation_deg, samples.vtec, np.nan))
+    arcs = lines.numbers(rays.arc)
+    if len(lines.times) < 8:
+        return _no_onsets()
+    minute, three = (rate_over(vtec, arcs, lines.step_s, span) for span in (60.0, 180.0))
+    background = _background(three, lines.step_s)
+    excess, slow = minute - background, three - background
+    scatter = 1.4826 * _median_down(np.abs(excess))
+    limit = np.maximum(choices.rate_tecu_min / 60.0, choices.noise_factor * _median_down(np.abs(slow)) * 1.4826)
+    with np.errstate(invalid="ignore"):
+        sign = np.where(np.abs(slow) > limit, np.sign(slow), 0.0)
+    return _runs(lines, rays, sign, excess, slow, scatter, choices)
+
+
+def rate_over(values: Floats, arcs: Ints, step_s: float, span_s: float) -> Floats:
+    """Central rate of change per second over about `span_s` (T, C), NaN where the arc does not reach both sides."""
+    half = max(1, round(0.5 * span_s / step_s))
+    rate = np.full(values.shape, np.nan)
+    if len(values) > 2 * half:
+        same = (arcs[2 * half :] == arcs[: -2 * half]) & (arcs[2 * half :] >= 0)
+        rate[half:-half] = np.where(same, (values[2 * half :] - values[: -2 * half]) / (2 * half * step_s), np.nan)
+    return rate
+
+
+def _median_down(values: Floats) -> Floats:
+    """Median of each column, NaN left out; 0 for a column without values."""
+    ordered = np.sort(values, axis=0)  # NaN goes last
+    count = np.isfinite(ordered).sum(axis=0)
+    at = np.maximum(count // 2, 0).clip(max=len(values) - 1)
+    return np.where(count > 0, np.nan_to_num(ordered[at, np.arange(values.shape[1])]), 0.0)
+
+
+def _background(rate: Floats, step_s: float, block_s: float = 300.0, blocks: int = 25) -> Floats:
+    """The running rate: median over two hours of five-minute medians (T, C); 0 where too little is known."""
+    size = max(1, round(block_s / step_s))
+    count = -(-len(rate) // size)
+    padded = np.full((count * size, rate.shape[1]), np.nan)
+    padded[: len(rate)] = rate
+    ordered = np.sort(padded.reshape(count, size, -1), axis=1)
+    known = np.isfinite(ordered).sum(axis=1)
+    coarse = np.take_along_axis(ordered, (np.maximum(known - 1, 0) // 2)[:, None, :], axis=1)[:, 0, :]
+    wide = np.full((count + blocks - 1, rate.shape[1]), np.nan)
+    wide[blocks // 2 : blocks // 2 + count] = coarse
+    windows = np.sort(sliding_window_view(wide, blocks, axis=0), axis=2)
+    enough = np.isfinite(windows).sum(axis=2)
+    middle_one = np.take_along_axis(windows, (np.maximum(enough - 1, 0) // 2)[:, :, None], axis=2)[:, :, 0]
+    smooth = np.where(enough >= 4, middle_one, 0.0)
+    return np.repeat(smooth, size, axis=0)[: len(rate)]
+
+
+def _no_onsets() -> Onsets:
+    empty: dict[str, Any] = {name: np.zeros(0) for name in Onsets.COLUMNS}
+    for name in ("start", "time", "end"):
+        empty[name] = np.zeros(0, dtype="datetime64[ns]")
+    for name in ("receiver", "satellite", "front"):
+        empty[name] = np.zeros(0, dtype=np.int64)
+    return Onsets(**empty)
+
+
+def _runs(
+    lines: Sightlines, rays: Rays, sign: Floats, excess: Floats, slow: Floats, scatter: Floats, choices: FrontChoices
+) -> Onsets:
+    """Stretches of one sign, each with its middle, jump and steepest rate."""
+    # One long row, line of sight after line of sight, so that a run is a stretch of equal sign.
+    flat_sign = np.vstack([sign, np.zeros((1, sign.shape[1]))]).T.ravel()
+    height = len(sign) + 1
+    edges = np.flatnonzero(np.diff(np.concatenate([[0.0], flat_sign, [0.0]])) != 0)
+    starts, ends = edges[:-1], edges[1:]  # stretches [start, end) of one value
+    steep = flat_sign[starts] != 0
+    starts, ends = starts[steep], ends[steep]
+    if len(starts) == 0:
+        return _no_onsets()
+    flat_excess = np.vstack([np.nan_to_num(excess), np.zeros((1, sign.shape[1]))]).T.ravel()
+    flat_slow = np.vstack([np.nan_to_num(slow), np.zeros((1, sign.shape[1]))]).T.ravel()
+    # A central rate over three minutes reaches past the run itself; the sums go by the one-minute rate inside.
+    bounds = np.stack([starts, ends], axis=1).ravel()
+    bounds = np.minimum(bounds, len(flat_excess) - 1)
+    toward = flat_sign[starts]
+    rate = flat_excess * flat_sign
+    jump = np.add.reduceat(np.maximum(rate, 0.0) * lines.step_s, bounds)[::2]
+    seconds = np.tile(np.arange(height) * lines.step_s, sign.shape[1])
+    when = np.add.reduceat(np.maximum(rate, 0.0) * seconds * lines.step_s, bounds)[::2] / np.maximum(jump, 1e-9)
+    peak_fine = np.maximum.reduceat(rate, bounds)[::2]
+    peak_slow = np.maximum.reduceat(flat_slow * flat_sign, bounds)[::2]
+    lasting = (ends - starts) * lines.step_s
+    peak = np.where(lasting > 600.0, peak_slow, peak_fine)
+    line = starts // height
+    kept = (jump >= choices.least_jump_tecu) & (lasting >= 2 * lines.step_s)
+    kept &= _dominant(line, when, toward, jump, choices)
+    line, when, toward, jump, peak, starts, ends = (
+        v[kept] for v in (line, when, toward, jump, peak, starts, ends)
+    )  # fmt: skip
+    epoch = np.clip(np.rint(when / lines.step_s).astype(np.int64), 0, len(lines.times) - 1)
+    place = _places(lines, rays, epoch, line, when)
+    noise = scatter[line]
+    spread = np.maximum(lines.step_s / np.sqrt(12.0), noise * 2.0 * lines.step_s / np.maximum(peak, 1e-9))
+    return Onsets(
+        start=lines.times[np.minimum(starts % height, len(lines.times) - 1)],
+        time=lines.times[0] + np.rint(when * 1e9).astype(np.int64).astype("timedelta64[ns]"),
+        end=lines.times[np.minimum((ends - 1) % height, len(lines.times) - 1)],
+        receiver=lines.receiver[line],
+        satellite=lines.satellite[line],
+        jump=toward * jump,
+        rate=toward * peak,
+        rate_sigma=np.maximum(noise, 1e-5),
+        time_sigma_s=spread,
+        front=np.full(len(line), -1, dtype=np.int64),
+        **place,
+    )
+
+
+def _dominant(line: Ints, when: Floats, toward: Floats, jump: Floats, choices: FrontChoices) -> Bools:
+    """Runs not matched by an opposite run of the same line within 15 minutes: a wall changes content one way."""
+    good = np.ones(len(line), dtype=bool)
+    for shift in range(1, 9):  # neighbours in time on the same line; runs come in order of line, then time
+        for a, b in ((slice(None, -shift), slice(shift, None)), (slice(shift, None), slice(None, -shift))):
+            if shift >= len(line):
+                continue
+            rival = (line[a] == line[b]) & (toward[a] != toward[b]) & (np.abs(when[a] - when[b]) < 900.0)
+            good[a] &= ~(rival & (jump[a] < choices.dominance * jump[b]))
+    return good
+
+
+def _places(lines: Sightlines, rays: Rays, epoch: Ints, line: Ints, when: Floats) -> dict[str, Floats]:
+    """Pierce point, its speed, elevation and azimuth at the middles of the runs."""
+    row = lines.row[epoch, line]
+    # The middle of a run may fall on an epoch without a ray: take the nearest ray of the line near it.
+    for shift in (1, -1, 2, -2, 3, -3):
+        missing = row < 0
+        row[missing] = lines.row[np.clip(epoch[missing] + shift, 0, len(lines.times) - 1), line[missing]]
+    ahead = lines.row[np.clip(epoch + 4, 0, len(lines.times) - 1), line]
+    behind = lines.row[np.clip(epoch - 4, 0, len(lines.times) - 1), line]
+    ahead, behind = np.where(ahead < 0, row, ahead), np.where(behind < 0, row, behind)
+    span = (rays.time[ahead] - rays.time[behind]).astype(np.int64) / 1e9
+    span = np.where(span > 0, span, np.nan)
+    turn = (rays.pierce_lon[ahead] - rays.pierce_lon[behind] + 180.0) % 360.0 - 180.0
+    shrink = np.cos(np.radians(rays.pierce_lat[row]))
+    north = np.nan_to_num((rays.pierce_lat[ahead] - rays.pierce_lat[behind]) * _KM_PER_DEG * 1000.0 / span)
+    east = np.nan_to_num(turn * _KM_PER_DEG * 1000.0 * shrink / span)
+    late = when - (rays.time[row] - lines.times[0]).astype(np.int64) / 1e9
+    return {
+        "lat": rays.pierce_lat[row] + north * late / (_KM_PER_DEG * 1000.0),
+        "lon": rays.pierce_lon[row] + east * late / (_KM_PER_DEG * 1000.0 * shrink),
+        "elevation": rays.elevation[row],
+        "azimuth": rays.azimuth[row],
+        "east_speed": east,
+        "north_speed": north,
+    }
+
+
+# ---------------------------------------------------------------------------------------------- walls
+
+
+@dataclass(frozen=True)
+class _Points:
+    """Onsets on the local map: km, seconds since the epoch, and the shift of place per km of wall height."""
+
+    x: Floats
+    y: Floats
+    t: Floats
+    lean_x: Floats
+    lean_y: Floats
+    place_sigma: Floats
+    time_sigma: Floats
+    receiver: Ints
+    satellite: Ints
+
+
+@dataclass(frozen=True)
+class _Wall:
+    """A line on the move: heading [rad, from north to east], speed [km/s], offset [km] at t = 0, height [km] above the
+    shell; covariance in that order; which points lie on it; chi-square per degree of freedom."""
+
+    heading: float
+    speed: float
+    offset: float
+    height: float
+    covariance: Floats
+    inside: Bools
+    misfit: float
+
+    def distance(self, points: _Points) -> Floats:
+        """How far [km] each point lies ahead of the wall at its time."""
+        east, north = np.sin(self.heading), np.cos(self.heading)
+        x, y = points.x + self.height * points.lean_x, points.y + self.height * points.lean_y
+        return np.asarray(x * east + y * north - self.speed * points.t - self.offset)
+
+
+def fit_walls(onsets: Onsets, rays: Rays, choices: FrontChoices | None = None) -> Fronts:
+    """Walls through the onsets, best first within each stretch of time; rising and falling content are kept apart."""
+    choices = choices or FrontChoices()
+    centre = middle(rays)
+    belongs = np.full(len(onsets), -1, dtype=np.int64)
+    found: list[tuple[_Wall, Ints]] = []
+    for rows in _stretches(onsets, choices):
+        left = rows
+        while len(left) >= choices.fewest:
+            points = _points(onsets.where(left), centre, rays.shell_height_m, choices)
+            wall = _best_wall(points, choices)
+            if wall is None:
+                break
+            found.append((wall, left[wall.inside]))
+            left = left[~wall.inside]
+    found.sort(key=lambda item: onsets.time[item[1]].min())
+    fronts = []
+    for number, (wall, rows) in enumerate(found):
+        belongs[rows] = number
+        fronts.append(_front(wall, onsets.where(rows), rays, centre, choices))
+    return Fronts(tuple(fronts), replace(onsets, front=belongs))
+
+
+def _stretches(onsets: Onsets, choices: FrontChoices) -> list[Ints]:
+    """Row numbers of onsets of one sign without a long silence between them."""
+    stretches: list[Ints] = []
+    for toward in (1.0, -1.0):
+        rows = np.flatnonzero(np.sign(onsets.jump) == toward)
+        rows = rows[np.argsort(onsets.time[rows], kind="stable")]
+        if len(rows) == 0:
+            continue
+        gaps = np.diff(onsets.time[rows]).astype("timedelta64[ns]").astype(np.int64) / 1e9
+        stretches.extend(np.split(rows, np.flatnonzero(gaps > choices.apart_s) + 1))
+    return stretches
+
+
+def _points(
+    onsets: Onsets, centre: tuple[float, float], shell_height_m: float, choices: FrontChoices, epoch: Any = None
+) -> _Points:
+    """Onsets on the local map; time runs from `epoch`, by default their mean."""
+    x, y = plane_km(onsets.lat, onsets.lon, centre)
+    epoch = _mean_time(onsets.time) if epoch is None else epoch
+    # Zenith angle at the shell, and how the pierce point moves outward per km of height.
+    ratio = SHELL_EARTH_RADIUS_M / (SHELL_EARTH_RADIUS_M + shell_height_m)
+    zenith_rad = np.arcsin(np.clip(ratio * np.cos(np.radians(onsets.elevation)), 0.0, 1.0))
+    lean = np.tan(zenith_rad) * ratio
+    azimuth_rad = np.radians(onsets.azimuth)
+    return _Points(
+        x=x,
+        y=y,
+        t=(onsets.time - epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9,
+        lean_x=lean * np.sin(azimuth_rad),
+        lean_y=lean * np.cos(azimuth_rad),
+        place_sigma=np.hypot(choices.place_km, choices.height_share_km * lean),
+        time_sigma=onsets.time_sigma_s,
+        receiver=onsets.receiver,
+        satellite=onsets.satellite,
+    )
+
+
+def _mean_time(times: Times) -> np.datetime64:
+    first = times.min().astype("datetime64[ns]")
+    mean_ns = int((times - first).astype("timedelta64[ns]").astype(np.int64).mean())
+    return np.datetime64(first + np.timedelta64(mean_ns, "ns"))
+
+
+def _best_wall(points: _Points, choices: FrontChoices) -> _Wall | None:
+    """The wall with most points on it, polished; None where chance does as well or too few saw it."""
+    rng = np.random.default_rng(choices.seed)
+    start = _try_triples(points, points.t, rng, choices)
+    if start is None:
+        return None
+    wall = _polish(points, start, choices)
+    if wall is None or wall.inside.sum() < choices.fewest:
+        return None
+    if len(np.unique(points.receiver[wall.inside])) < choices.fewest_receivers:
+        return None
+    if len(np.unique(points.satellite[wall.inside])) < choices.fewest_satellites:
+        return None
+    # The same places with their times dealt out anew: what a plane catches there is chance.
+    chance = 0
+    for _ in range(3):
+        dealt = _try_triples(points, rng.permutation(points.t), rng, choices)
+        chance = max(chance, 0 if dealt is None else int(dealt.inside.sum()))
+    if wall.inside.sum() - 3 < 1.7 * (chance - 3):
+        return None
+    return wall
+
+
+def _try_triples(points: _Points, t: Floats, rng: np.random.Generator, choices: FrontChoices) -> _Wall | None:
+    """The best of many planes, each through three points."""
+    count = len(t)
+    picks = rng.integers(0, count, size=(choices.tries, 3))
+    a, b, c = picks.T
+    dx = np.stack([points.x[b] - points.x[a], points.x[c] - points.x[a]], axis=1)
+    dy = np.stack([points.y[b] - points.y[a], points.y[c] - points.y[a]], axis=1)
+    dt = np.stack([t[b] - t[a], t[c] - t[a]], axis=1)
+    area = dx[:, 0] * dy[:, 1] - dx[:, 1] * dy[:, 0]
+    # Three places well off one line, or the direction is anybody's guess.
+    longest = np.maximum(np.hypot(dx[:, 0], dy[:, 0]), np.hypot(dx[:, 1], dy[:, 1]))
+    usable = (np.abs(area) > 0.15 * longest**2) & (longest > 60.0)
+    usable &= points.receiver[a] != points.receiver[b]
+    if not usable.any():
+        return None
+    dx, dy, dt, area, a = dx[usable], dy[usable], dt[usable], area[usable], a[usable]
+    slow_x = (dt[:, 0] * dy[:, 1] - dt[:, 1] * dy[:, 0]) / area  # slowness [s/km]
+    slow_y = (dx[:, 0] * dt[:, 1] - dx[:, 1] * dt[:, 0]) / area
+    slowness = np.maximum(np.hypot(slow_x, slow_y), 1e-9)
+    speed = 1.0 / slowness
+    able = speed * 1000.0 <= choices.fastest_m_s
+    if not able.any():
+        return None
+    speed, east, north, a = speed[able], (slow_x / slowness)[able], (slow_y / slowness)[able], a[able]
+    offset = points.x[a] * east + points.y[a] * north - speed * t[a]
+    away = np.abs(
+        points.x[None, :] * east[:, None] + points.y[None, :] * north[:, None] - speed[:, None] * t - offset[:, None]
+    )
+    allowed = np.hypot(points.place_sigma[None, :], speed[:, None] * points.time_sigma[None, :])
+    cost = np.minimum((away / allowed) ** 2, 9.0).sum(axis=1)
+    best = int(np.argmin(cost))
+    return _Wall(
+        float(np.arctan2(east[best], north[best])), float(speed[best]), float(offset[best]), 0.0,
+        np.zeros((4, 4)), (away / allowed)[best] < 3.0, float("nan"),
+    )  # fmt: skip
+
+
+def _polish(points: _Points, start: _Wall, choices: FrontChoices) -> _Wall | None:
+    """Least squares for heading, speed, offset and height of the wall, points far off weighted down (Huber)."""
+    wall = start
+    for _ in range(12):
+        east, north = np.sin(wall.heading), np.cos(wall.heading)
+        x, y = points.x + wall.height * points.lean_x, points.y + wall.height * points.lean_y
+        away = wall.distance(points)
+        sigma = np.hypot(points.place_sigma, wall.speed * points.time_sigma)
+        inside = np.abs(away) < 3.0 * sigma
+        if inside.sum() < max(4, choices.fewest - 1):
+            return None
+        pull = np.minimum(1.0, 1.5 / np.maximum(np.abs(away / sigma), 1e-9))
+        weight = np.where(inside, pull, 0.0) / sigma**2
+        design = np.stack(
+            [x * north - y * east, -points.t, -np.ones(len(x)), points.lean_x * east + points.lean_y * north], axis=1
+        )
+        normal = design.T @ (design * weight[:, None])
+        right = -design.T @ (away * weight)
+        normal[3, 3] += 1.0 / choices.height_sigma_km**2
+        right[3] -= wall.height / choices.height_sigma_km**2
+        scale = np.sqrt(np.maximum(np.diag(normal), 1e-12))
+        scaled = normal / scale[:, None] / scale[None, :]
+        if np.linalg.cond(scaled) > 1e10:
+            return None
+        step = np.linalg.solve(scaled, right / scale) / scale
+        misfit = float((away[inside] ** 2 * weight[inside]).sum() / max(1, inside.sum() - 4))
+        wall = _Wall(
+            wall.heading + float(np.clip(step[0], -0.5, 0.5)), wall.speed + float(step[1]),
+            wall.offset + float(step[2]), wall.height + float(step[3]),
+            np.linalg.inv(scaled) / scale[:, None] / scale[None, :] * max(1.0, misfit), inside, misfit,
+        )  # fmt: skip
+    if wall.speed < 0.0:
+        wall = replace(wall, heading=wall.heading + np.pi, speed=-wall.speed, offset=-wall.offset)
+    return wall if wall.speed * 1000.0 <= choices.fastest_m_s else None
+
+
+def _front(
+    wall: _Wall, onsets: Onsets, rays: Rays, centre: tuple[float, float], choices: FrontChoices
+) -> Front:
+    """A wall with its slope, width, reach and track."""
+    epoch = _mean_time(onsets.time)
+    # The wall was fitted with time from the mean of all points of its stretch: fit it anew to its own.
+    points = _points(onsets, centre, rays.shell_height_m, choices)
+    wall = replace(wall, offset=wall.offset + float(np.median(wall.distance(points))))
+    wall = _polish(points, wall, choices) or wall
+    east, north = np.sin(wall.heading), np.cos(wall.heading)
+    x, y = points.x + wall.height * points.lean_x, points.y + wall.height * points.lean_y
+    offset = wall.offset
+    along = x * north - y * east  # to the right of the heading
+    slope, slope_sigma, width, width_sigma = steepness(wall, onsets, points)
+    jumps = np.abs(onsets.jump)
+    jump = float(np.median(jumps)) * float(np.sign(onsets.jump[0]))
+    lean_start, lean_end = onsets.time.min(), onsets.time.max()
+    steps = np.arange(lean_start, lean_end + np.timedelta64(1, "s"), np.timedelta64(round(choices.track_step_s), "s"))
+    away = offset + wall.speed * ((steps - epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9)
+    lat, lon = from_plane(away * east, away * north, centre)
+    sigma = np.sqrt(np.diag(wall.covariance))
+    receivers = tuple(rays.receivers[number].name for number in np.unique(onsets.receiver))
+    satellites = tuple(str(rays.satellites[number]) for number in np.unique(onsets.satellite))
+    return Front(
+        start=lean_start,
+        end=lean_end,
+        epoch=epoch,
+        centre=centre,
+        offset_km=offset,
+        offset_sigma_km=float(sigma[2]),
+        speed_m_s=wall.speed * 1000.0,
+        speed_sigma_m_s=float(sigma[1]) * 1000.0,
+        heading_deg=float(np.degrees(wall.heading) % 360.0),
+        heading_sigma_deg=float(np.degrees(sigma[0])),
+        slope=slope,
+        slope_sigma=slope_sigma,
+        width_km=width,
+        width_sigma_km=width_sigma,
+        jump_tecu=jump,
+        jump_sigma_tecu=float(1.2533 * 1.4826 * np.median(np.abs(jumps - np.median(jumps))) / np.sqrt(len(jumps))),
+        reach_km=(float(along.min()), float(along.max())),
+        sweep_km=float(np.sqrt(np.mean(wall.distance(points) ** 2))),
+        height_km=rays.shell_height_m / 1000.0 + wall.height,
+        height_sigma_km=float(sigma[3]),
+        onsets=len(onsets),
+        receivers=receivers,
+        satellites=satellites,
+        confirmed=True,
+        covariance=wall.covariance[np.ix_([2, 1, 0], [2, 1, 0])],
+        track=tuple(zip(steps, lat.tolist(), lon.tolist(), strict=True)),
+    )
+
+
+def steepness(wall: _Wall, onsets: Onsets, points: _Points) -> tuple[float, float, float, float]:
+    """Slope [mm/km, vertical] and width [km] of a wall with their sigmas, from how fast each line of sight crossed it.
+
+    A pierce point that moves with the wall sees it pass slowly, so the steepest rate is divided by the relative speed
+    along the heading.  A slanting line of sight meets a standing wall over a stretch of its own length and sees it too
+    wide and too flat; only the third of the lines that lean least toward or away from it count (at least five).
+    """
+    east, north = np.sin(wall.heading), np.cos(wall.heading)
+    relative = np.abs(wall.speed * 1000.0 - (onsets.east_speed * east + onsets.north_speed * north)) / 1000.0
+    lean = np.abs(points.lean_x * east + points.lean_y * north)
+    usable = np.flatnonzero(relative > 0.03)
+    if len(usable) == 0:
+        return float("nan"), float("nan"), float("nan"), float("nan")
+    usable = usable[np.argsort(lean[usable], kind="stable")][: max(5, len(usable) // 3)]
+    slope = np.abs(onsets.rate[usable]) / relative[usable] * MM_PER_TECU
+    width = np.abs(onsets.jump[usable]) * MM_PER_TECU / slope
+    speed_share = np.sqrt(wall.covariance[1, 1]) / np.median(relative[usable])
+    middle_slope, middle_width = float(np.median(slope)), float(np.median(width))
+
+    def spread(values: Floats) -> float:
+        scatter = 1.2533 * 1.4826 * float(np.median(np.abs(values - np.median(values)))) / np.sqrt(len(values))
+        return float(np.hypot(scatter, speed_share * np.median(values)))
+
+    return middle_slope, spread(slope), middle_width, spread(width)
+
+
+# ---------------------------------------------------------------------------------------------- arrivals
+
+
+def position(front: Front, time: Any) -> Floats:
+    """Distance [km] of the wall from the centre of its map toward its heading, at times."""
+    elapsed = (np.asarray(time) - front.epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9
+    return np.asarray(front.offset_km + front.speed_m_s / 1000.0 * elapsed)
+
+
+def ahead_km(front: Front, lat: Any, lon: Any, time: Any) -> tuple[Floats, Floats]:
+    """How far [km] places lie ahead of the wall at times (negative: passed), and how far right of its middle line."""
+    x, y = plane_km(np.asarray(lat, dtype=np.float64), np.asarray(lon, dtype=np.float64), front.centre)
+    heading_rad = np.radians(front.heading_deg)
+    east, north = np.sin(heading_rad), np.cos(heading_rad)
+    return np.asarray(x * east + y * north - position(front, time)), np.asarray(x * north - y * east)
+
+
+def expected_at(front: Front, lat: float, lon: float) -> tuple[np.datetime64, float]:
+    """When the wall's middle is at a place, and the spread [s]; NaT where it stands still.
+
+    The spread holds the sigmas of line and speed and the scatter of the lines of sight about the line.
+    """
+    if front.speed_m_s < 5.0:
+        return np.datetime64("NaT"), float("nan")
+    distance, right = ahead_km(front, lat, lon, front.epoch)
+    speed = front.speed_m_s / 1000.0
+    elapsed = float(distance) / speed
+    derivative = np.array([-1.0, -elapsed, float(right)])  # of the distance left, by offset, speed, heading
+    variance = float(derivative @ front.covariance @ derivative) + front.sweep_km**2
+    return front.epoch + np.timedelta64(round(elapsed * 1e9), "ns"), float(np.sqrt(variance) / speed)
+
+
+def arrivals(
+    fronts: Fronts,
+    rays: Rays,
+    sites: Sequence[Site],
+    choices: FrontChoices | None = None,
+    every_s: float = 900.0,
+    horizon_s: float = 3600.0,
+) -> tuple[Arrival, ...]:
+    """What could be foretold at each quarter hour from the onsets until then, for the sites, and what came of it.
+
+    Each forecast refits the walls to the onsets of the two hours before: nothing later is used.  What came of it is
+    told by the front as known at the end of the day, near the site.
+    """
+    choices = choices or FrontChoices()
+    told: list[Arrival] = []
+    for number, front in enumerate(fronts.fronts):
+        toward = np.sign(front.jump_tecu)
+        made = front.start + np.timedelta64(round(every_s), "s")
+        while made <= front.end + np.timedelta64(round(every_s), "s"):
+            known = (fronts.onsets.end <= made) & (fronts.onsets.end > made - np.timedelta64(7200, "s"))
+            known &= np.sign(fronts.onsets.jump) == toward
+            then = fit_walls(fronts.onsets.where(known), rays, choices).fronts if known.sum() >= choices.fewest else ()
+            for earlier in then[:1] if len(then) == 1 else sorted(then, key=lambda f: -f.onsets)[:1]:
+                told.extend(_foretold(number, front, earlier, made, sites, horizon_s))
+            made = made + np.timedelta64(round(every_s), "s")
+    return tuple(told)
+
+
+def _foretold(
+    number: int, front: Front, earlier: Front, made: np.datetime64, sites: Sequence[Site], horizon_s: float
+) -> list[Arrival]:
+    """Forecasts of one moment, with the outcome by the final front."""
+    rows = []
+    for site in sites:
+        expected, sigma = expected_at(earlier, site.lat, site.lon)
+        if np.isnat(expected) or not made < expected <= made + np.timedelta64(round(horizon_s), "s"):
+            continue
+        seen, seen_sigma = expected_at(front, site.lat, site.lon)
+        _, right = ahead_km(front, site.lat, site.lon, front.epoch)
+        watched = front.start <= seen <= front.end and front.reach_km[0] - 100 <= right <= front.reach_km[1] + 100
+        miss = abs((expected - seen).astype("timedelta64[ns]").astype(np.int64) / 1e9)
+        verdict = bool(miss <= 2.0 * np.hypot(sigma, seen_sigma)) if watched else None
+        rows.append(
+            Arrival(number, site.name, made, expected, sigma, seen if watched else np.datetime64("NaT"), verdict)
+        )
+    return rows
