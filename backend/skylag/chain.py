@@ -42,12 +42,12 @@ class Choices:
     minimum_elevation: float = 10.0
     epoch_step_s: float = 300.0
     thin_to_s: float | None = None
-    arcs: ArcChoices = ArcChoices()
-    adjustment: adjustment.AdjustmentChoices = adjustment.AdjustmentChoices()
-    field: vertical_field.FieldChoices = vertical_field.FieldChoices()
-    slopes: slopes.SlopeChoices = slopes.SlopeChoices()
-    fronts: fronts.FrontChoices = fronts.FrontChoices()
-    irregularity: irregularity.IrregularityChoices = irregularity.IrregularityChoices()
+    arcs: ArcChoices = field(default_factory=ArcChoices)
+    adjustment: adjustment.AdjustmentChoices = field(default_factory=adjustment.AdjustmentChoices)
+    maps: vertical_field.FieldChoices = field(default_factory=vertical_field.FieldChoices)
+    slopes: slopes.SlopeChoices = field(default_factory=slopes.SlopeChoices)
+    fronts: fronts.FrontChoices = field(default_factory=fronts.FrontChoices)
+    irregularity: irregularity.IrregularityChoices = field(default_factory=irregularity.IrregularityChoices)
 
 
 @dataclass(frozen=True)
@@ -96,8 +96,8 @@ def receiver_day(
     rays = geometry.place(arcs, positions, shell_height_m, choices.minimum_elevation)
     if not len(rays):
         raise NotEnough(
-            f"{signals.receiver.name}: no arc above {choices.minimum_elevation:g} deg is long enough with known orbits; "
-            "add navigation or SP3 files of the day, or a longer observation file",
+            f"{signals.receiver.name}: no arc above {choices.minimum_elevation:g} deg is long enough with known "
+            "orbits; add navigation or SP3 files of the day, or a longer observation file",
             had=0, needed=1, where=signals.receiver.name,
         )  # fmt: skip
     seen = np.isfinite(observations.phase1).any(axis=0)
@@ -114,7 +114,7 @@ def receiver_day(
         "arcs": len(arcs.arc_satellite),
         "arcs_began": reasons(arcs),
         "slips": len(slip_list(arcs)),
-        "level_sigma_median_tecu": round(float(np.median(arcs.arc_level_sigma)), 3) if len(arcs.arc_level_sigma) else None,
+        "level_sigma_median_tecu": round(float(np.median(arcs.arc_level_sigma)), 3),
         **arcs.rejected,
     }
     return ReceiverDay(signals.receiver, rays, notes, facts)
@@ -158,7 +158,7 @@ def estimate(
     end = min(last, midnight + np.timedelta64(86_400, "s") - np.timedelta64(1, "ns")) + np.timedelta64(1, "ns")
     epochs = vertical_field.epochs_between(start, end, choices.epoch_step_s)
     fields = vertical_field.fit(
-        samples, region.lats, region.lons, epochs, choices.field, lambda share: tell("maps", share)
+        samples, region.lats, region.lons, epochs, choices.maps, lambda share: tell("maps", share)
     )
     tell("slopes", 0.0)
     steep = slopes.measure(rays, samples, fields, choices.slopes)
@@ -181,20 +181,21 @@ def limits_of_sight(rays: Rays, calibration: Calibration) -> tuple[str, ...]:
     names = sorted({receiver.name for receiver in rays.receivers})
     if len(names) == 1:
         said.append(
-            f"One receiver alone ({names[0]}): no slope between receivers can be measured, no front or patch has a second "
-            "witness, and satellite biases cannot be told apart from the shape of the ionosphere as well as a network "
-            "can. The map beyond its own lines of sight is unseen."
+            f"One receiver alone ({names[0]}): no slope between receivers can be measured, no front or patch has a "
+            "second witness, and satellite biases cannot be told apart from the shape of the ionosphere as well as a "
+            "network can. The map beyond its own lines of sight is unseen."
         )
     elif len(names) < 4:
         said.append(
-            f"{len(names)} receivers: a front needs three receivers to have a speed and a heading, and few places of the "
-            "map have a second witness."
+            f"{len(names)} receivers: a front needs three receivers to have a speed and a heading, and few places of "
+            "the map have a second witness."
         )
     datum = str(calibration.summary.get("datum", ""))
     if "zero mean" in datum:
         said.append(
-            "No satellite biases were given for every signal: the sum of the satellite biases of each signal pair is set "
-            "to zero. Maps do not depend on it; single biases compare with a product only after both are brought to one mean."
+            "No satellite biases were given for every signal pair: where none were, the satellites' mean is set to "
+            "zero. Maps do not depend on it; single biases compare with a product only after both are brought to one "
+            "mean."
         )
     return tuple(said)
 

@@ -101,7 +101,7 @@ def _day_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]")
     parser.add_argument("inputs", nargs="+", type=Path, metavar="FILES_OR_FOLDERS", help="files or folders, mixed")
     parser.add_argument("--out", type=Path, required=True, metavar="DIR", help="folder for the results")
     parser.add_argument("--region", type=Path, metavar="FILE", help="region.toml; without it, around the receivers")
-    parser.add_argument("--date", type=_date, metavar="YYYY-MM-DD", help="the GPS-time day; else the one most files are of")
+    parser.add_argument("--date", type=_date, metavar="YYYY-MM-DD", help="the GPS-time day; else that of most files")
     parser.add_argument("--signals", default="", metavar="LIST", help="signal pairs, e.g. G=C1W-C2W,E=C1C-C5Q")
     parser.add_argument("--every", type=_minutes, default=5.0, metavar="MINUTES", help="a map every 1 to 60 min (5)")
     parser.add_argument("--archive", default="", metavar="PLACE", help="also keep the day in this archive")
@@ -223,7 +223,8 @@ def sample_folder() -> Path:
     folder = Path(__file__).resolve().parents[2] / "sample_data"
     if not (folder / "region.toml").is_file():
         raise SkylagError(
-            f"{folder}: the sample days are not here; run `skylag demo` from a checkout installed with `pip install -e .`"
+            f"{folder}: the sample days are not here; run `skylag demo` from a checkout that was installed with "
+            "`pip install -e .`"
         )
     return folder
 

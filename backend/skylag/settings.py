@@ -49,8 +49,9 @@ def port_number(text: str) -> int:
     """A port from text; 0 means any free one.  Raises Refused outside 0 to 65535."""
     if not text.isdigit() or int(text) > 65535:
         raise Refused(
-            f"port: {text!r} is not a port; give a whole number from 0 to 65535", name="port", value=text, allowed="0-65535"
-        )
+            f"port: {text!r} is not a port; give a whole number from 0 to 65535",
+            name="port", value=text, allowed="0-65535",
+        )  # fmt: skip
     return int(text)
 
 

@@ -1,10 +1,10 @@
 """The vertical-content field: best linear unbiased estimation from calibrated pierce points, with its uncertainty.
 
 At each epoch the field is a plane plus a correlated residual whose variance and reach are found from the data of that
-hour, seen through noise of three kinds: a ray's own, an arc's level, and the bias errors that all rays of a receiver or a
-satellite share (they do not average out).  Slopes are differences of the same field over a stated length, so that they
-too carry an honest sigma.  Never smooths over time beyond the window of an epoch, never fills a gap with a guess that
-looks like a measurement: where no ray is near, support is 0.
+hour, seen through noise of three kinds: a ray's own, an arc's level, and the bias errors that all rays of a receiver
+or a satellite share (they do not average out).  Slopes are differences of the same field over a stated length, so that
+they too carry an honest sigma.  Never smooths over time beyond the window of an epoch, never fills a gap with a guess
+that looks like a measurement: where no ray is near, support is 0.
 """
 
 import itertools
@@ -93,7 +93,8 @@ def fit(
     grid_lon, grid_lat = np.meshgrid(lons, lats)
     gx, gy = plane_km(grid_lat.ravel(), grid_lon.ravel(), middle)
     shape = (len(epochs), len(lats), len(lons))
-    layers = {name: np.full(shape, np.nan, dtype=np.float32) for name in Fields.LAYERS if name not in ("support", "state")}
+    real = [name for name in Fields.LAYERS if name not in ("support", "state")]
+    layers = {name: np.full(shape, np.nan, dtype=np.float32) for name in real}
     support = np.zeros(shape, dtype=np.uint16)
     hour = ((epochs - epochs[0]) // np.timedelta64(3600, "s")).astype(int)
     parameters: dict[int, tuple[float, float, float]] = {}

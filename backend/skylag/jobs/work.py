@@ -39,6 +39,7 @@ from skylag.timescales import day_of
 Progress = Callable[[str, float, str], None]
 
 _STATION_NAME = re.compile(r"^([A-Z0-9]{4}\d{2}[A-Z]{3})_|^([A-Za-z0-9]{4})\d{3}[0-9a-xA-X]\d{0,2}\.", re.ASCII)
+_NOT_DATA = (".toml", ".md")  # a region file and a note may lie beside the data
 _LIBRARIES = ("numpy", "scipy", "hatanaka", "pandas", "xarray", "sqlalchemy")
 
 
@@ -136,7 +137,7 @@ def _all_files(paths: Iterable[Path]) -> list[Path]:
             # A folder may hold the region, notes and truth beside the data: hidden files and these are passed over.
             found += [
                 p for p in sorted(path.rglob("*"))
-                if p.is_file() and not p.name.startswith(".") and p.suffix not in (".toml", ".md", ".txt", ".py", ".npz")
+                if p.is_file() and not p.name.startswith(".") and p.suffix not in _NOT_DATA
             ]  # fmt: skip
         elif path.exists():
             found.append(path)
@@ -238,8 +239,9 @@ def receiver_unit(
             if kept is None:
                 days = sorted({str(d) for d in day_of(signals.times)})
                 raise FormatError(
-                    f"{path}: is of another day ({', '.join(days)}, not {day}); give --date to choose", path=path, line=0
-                )
+                    f"{path}: is of another day ({', '.join(days)}, not {day}); give --date to choose",
+                    path=path, line=0,
+                )  # fmt: skip
             problems += reading.problems
             pieces.append(kept)
         except SkylagError as trouble:
@@ -372,7 +374,8 @@ def network_day(
     )  # fmt: skip
     products = Products(
         region=place, day=wanted_day, receivers=receivers, calibration=made.calibration, samples=made.samples,
-        fields=made.fields, flags=made.flags, site_states=made.site_states, site_reasons=made.site_reasons, origin=origin,
+        fields=made.fields, flags=made.flags, site_states=made.site_states, site_reasons=made.site_reasons,
+        origin=origin,
     )  # fmt: skip
     return DayResult(products, tuple(left_out), tuple(problems))
 
@@ -422,7 +425,7 @@ def _options(choices: Choices, region: Region, day: np.datetime64) -> dict[str, 
         "epoch_step_s": choices.epoch_step_s,
         "arcs": asdict(choices.arcs),
         "adjustment": asdict(choices.adjustment),
-        "field": asdict(choices.field),
+        "maps": asdict(choices.maps),
         "slopes": asdict(choices.slopes),
         "fronts": asdict(choices.fronts),
         "irregularity": asdict(choices.irregularity),
