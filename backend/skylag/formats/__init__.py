@@ -1,0 +1,111 @@
+"""Text to tables and back: the one door through which files come in.
+
+`read` opens a file, takes it out of whatever it is wrapped in, tells from the content what it is, and hands it to the
+parser of that format.  Nothing else in the program opens a measurement file or decompresses one.  Never computes with
+what it read, and never trusts the name of a file.
+"""
+
+import hashlib
+import importlib
+import re
+from collections.abc import Collection, Mapping
+from pathlib import Path
+from typing import Any
+
+from skylag.errors import FormatError
+from skylag.formats.joining import merge, thin
+from skylag.formats.wrappers import is_hatanaka, unwrap
+from skylag.tables import Reading
+
+__all__ = ["fingerprint", "kind_of", "merge", "read", "thin"]
+
+# What a file can be, and which module parses it: each has parse(data, name) -> Reading.
+PARSERS = {
+    "observations": "rinex_obs",
+    "navigation": "rinex_nav",
+    "orbits": "sp3",
+    "biases": "biases",
+    "ionex": "ionex",
+    "indices": "indices",
+}
+
+_YEAR_FIRST = re.compile(rb"^(19|20)\d\d +\d{1,2} +\d{1,2} ")
+
+
+def read(
+    path: str | Path,
+    *,
+    wanted: Mapping[str, Collection[str]] | None = None,
+    thin_to_s: float | None = None,
+) -> Reading:
+    """The table a file holds, the problems met, and facts of its header.
+
+    path       a file of any known format, plain or wrapped (.gz, .Z, .bz2, .zip, Hatanaka)
+    wanted     for observations: system letter -> code observables to keep, with the phases and strengths of their
+               bands; None keeps all
+    thin_to_s  for observations: keep the epochs on multiples of so many seconds
+    Raises FormatError when the file cannot be read, is empty, or is nothing this program knows; a bad line only
+    becomes a problem of the reading.
+    """
+    place = Path(path)
+    packed = _bytes_of(place)
+    if not packed.strip():
+        raise FormatError(f"{place.name}: the file is empty; fetch it again", path=str(path), line=0)
+    data, wrapping = unwrap(packed, str(path))
+    del packed
+    kind = kind_of(data)
+    if kind == "unknown":
+        beginning = data[:60].split(b"\n")[0].decode("latin-1")
+        raise FormatError(
+            f"{place.name}: begins with {beginning!r}, which is no format known here; RINEX observations and navigation, "
+            "SP3, Bias-SINEX, monthly code biases, IONEX and daily indices are",
+            path=str(path), line=1,
+        )  # fmt: skip
+    parser = importlib.import_module(f"skylag.formats.{PARSERS[kind]}")
+    choices: dict[str, Any] = {"wanted": wanted, "thin_to_s": thin_to_s} if kind == "observations" else {}
+    reading: Reading = parser.parse(data, str(path), **choices)
+    return Reading(reading.table, (*wrapping, *reading.problems), {**reading.header, "kind": kind})
+
+
+def kind_of(data: bytes) -> str:
+    """What a text is, by its first lines: a key of PARSERS, or "unknown"."""
+    if is_hatanaka(data):
+        return "observations"
+    head = data[:4096]
+    lines = head.splitlines()[:40]
+    for line in lines:
+        label = line[60:80].strip()
+        if label == b"RINEX VERSION / TYPE":
+            letter = line[20:21].upper()
+            if letter == b"O":
+                return "observations"
+            # RINEX 2 has one kind per constellation (N, G, H; L and others in later practice), 3 and 4 have N for all.
+            return "navigation" if letter in b"NGHLJCQPE" and letter else "unknown"
+        if label == b"IONEX VERSION / TYPE":
+            return "ionex"
+    if head[:1] == b"#" and head[1:2] in b"abcd" and head[2:3] in (b"P", b"V"):
+        return "orbits"
+    if head[:5] == b"%=BIA":
+        return "biases"
+    if b"DCB SOLUTION" in head or b"CODE BIASES FOR" in head:
+        return "biases"
+    for line in lines:
+        if not line.startswith(b"#"):
+            return "indices" if _YEAR_FIRST.match(line) else "unknown"
+    return "indices" if b"ap" in head.lower() and b"kp" in head.lower() else "unknown"
+
+
+def fingerprint(path: str | Path) -> dict[str, Any]:
+    """Which file it was: name, sha256 of its bytes as they lie on disk, and how many there are."""
+    packed = _bytes_of(Path(path))
+    return {"name": Path(path).name, "sha256": hashlib.sha256(packed).hexdigest(), "bytes": len(packed)}
+
+
+def _bytes_of(path: Path) -> bytes:
+    try:
+        return path.read_bytes()
+    except OSError as error:
+        raise FormatError(
+            f"{path.name}: cannot be opened: {error.strerror or error}; check that the file is there and may be read",
+            path=str(path), line=0,
+        ) from error  # fmt: skip

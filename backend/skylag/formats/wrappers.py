@@ -1,0 +1,198 @@
+"""What a file is wrapped in: gzip, compress, bzip2, zip, Hatanaka compression; bytes in, text out.
+
+Told from the content, never from the name; wrappers within wrappers are opened too.  A wrapper that is cut short gives
+what it held up to there, and a problem.  A wrapper that swells beyond reason is refused before it fills the memory.
+Never opens a file.
+"""
+
+import bz2
+import io
+import warnings
+import zipfile
+import zlib
+from typing import NamedTuple
+
+import hatanaka
+import ncompress
+
+from skylag.errors import FormatError
+from skylag.tables import Problem
+
+LARGEST_TEXT = 2 * 2**30  # bytes; a day of one-second data of five constellations is about half of it
+_SWELLS = 200  # times: text written by receivers shrinks 3 to 30 times, a trap a thousand times and more
+_HARMLESS = 64 * 2**20  # bytes, below which nobody asks how much it swelled
+_DEEPEST = 4  # wrappers within wrappers
+
+
+class Unwrapped(NamedTuple):
+    """The text, and what was wrong with its wrapping."""
+
+    data: bytes
+    problems: list[Problem]
+
+
+def unwrap(data: bytes, name: str) -> Unwrapped:
+    """The text within all wrappers.
+
+    Raises FormatError for a wrapper that holds nothing, more than one file, or more than can be real.
+    """
+    problems: list[Problem] = []
+    for _ in range(_DEEPEST):
+        if data[:2] == b"\x1f\x8b":
+            data = _gzip(data, name, problems)
+        elif data[:2] == b"\x1f\x9d":
+            data = _compress(data, name)
+        elif data[:3] == b"BZh":
+            data = _bzip2(data, name, problems)
+        elif data[:4] in (b"PK\x03\x04", b"PK\x05\x06"):
+            data = _zip(data, name, problems)
+        elif is_hatanaka(data):
+            return Unwrapped(_hatanaka(data, name, problems), problems)
+        else:
+            return Unwrapped(data, problems)
+    raise FormatError(
+        f"{name}: more than {_DEEPEST} wrappers within each other; unpack it by hand", path=name, line=0
+    )
+
+
+def is_hatanaka(data: bytes) -> bool:
+    """Whether the text is a Compact RINEX file (Hatanaka 2008), version 1.0 or 3.0."""
+    return b"CRINEX VERS   / TYPE" in data[:100]
+
+
+def _check_size(size: int, packed: int, name: str) -> None:
+    if size > LARGEST_TEXT or (size > _HARMLESS and size > _SWELLS * packed):
+        raise FormatError(
+            f"{name}: {packed} bytes swell to more than {size}; no observation file does, and at most {LARGEST_TEXT} "
+            "are read; split it by hours if it is real",
+            path=name, line=0,
+        )  # fmt: skip
+
+
+def _cut(name: str, what: str, got: int, problems: list[Problem]) -> None:
+    if not got:
+        raise FormatError(f"{name}: the {what} holds nothing that can be unpacked; fetch the file again", path=name, line=0)
+    problems.append(Problem(name, 0, f"the {what} is cut short or damaged", f"took the {got} bytes before that"))
+
+
+def _gzip(data: bytes, name: str, problems: list[Problem]) -> bytes:
+    parts: list[bytes] = []
+    size, rest = 0, data
+    while rest[:2] == b"\x1f\x8b":
+        member = zlib.decompressobj(wbits=31)
+        waiting = rest
+        try:
+            while not member.eof:
+                part = member.decompress(waiting, _HARMLESS)
+                waiting = member.unconsumed_tail
+                parts.append(part)
+                size += len(part)
+                _check_size(size, len(data), name)
+                if not part and not waiting and not member.eof:
+                    break
+        except zlib.error:
+            _cut(name, "gzip file", size, problems)
+            break
+        if not member.eof:
+            _cut(name, "gzip file", size, problems)
+            break
+        rest = member.unused_data.lstrip(b"\0")
+    return b"".join(parts) if len(parts) != 1 else parts[0]
+
+
+def _bzip2(data: bytes, name: str, problems: list[Problem]) -> bytes:
+    parts: list[bytes] = []
+    size, rest = 0, data
+    while rest[:3] == b"BZh":
+        member = bz2.BZ2Decompressor()
+        waiting = rest
+        try:
+            while not member.eof:
+                part = member.decompress(waiting, _HARMLESS)
+                waiting = b""
+                parts.append(part)
+                size += len(part)
+                _check_size(size, len(data), name)
+                if not part and member.needs_input:
+                    break
+        except (OSError, ValueError):
+            _cut(name, "bzip2 file", size, problems)
+            break
+        if not member.eof:
+            _cut(name, "bzip2 file", size, problems)
+            break
+        rest = member.unused_data
+    return b"".join(parts)
+
+
+class _Bounded(io.BytesIO):
+    """A buffer that refuses to grow beyond reason."""
+
+    def __init__(self, packed: int, name: str) -> None:
+        super().__init__()
+        self.packed, self.name = packed, name
+
+    def write(self, part: bytes, /) -> int:  # type: ignore[override]
+        _check_size(self.tell() + len(part), self.packed, self.name)
+        return super().write(part)
+
+
+def _compress(data: bytes, name: str) -> bytes:
+    out = _Bounded(len(data), name)
+    try:
+        ncompress.decompress(data, out)
+    except FormatError:
+        raise
+    except Exception as error:
+        raise FormatError(f"{name}: the compress (.Z) file is damaged: {error}; fetch it again", path=name, line=0) from error
+    return out.getvalue()
+
+
+def _zip(data: bytes, name: str, problems: list[Problem]) -> bytes:
+    try:
+        with zipfile.ZipFile(io.BytesIO(data)) as folder:
+            members = [entry for entry in folder.infolist() if not entry.is_dir()]
+            if len(members) != 1:
+                raise FormatError(
+                    f"{name}: the zip file holds {len(members)} files, one is wanted; unpack it and give the files",
+                    path=name, line=0,
+                )  # fmt: skip
+            parts: list[bytes] = []
+            size = 0
+            with folder.open(members[0]) as member:
+                try:
+                    while part := member.read(_HARMLESS // 4):
+                        parts.append(part)
+                        size += len(part)
+                        _check_size(size, len(data), name)
+                except (zipfile.BadZipFile, zlib.error, EOFError):
+                    _cut(name, "zip file", size, problems)
+            return b"".join(parts)
+    except (zipfile.BadZipFile, zlib.error, NotImplementedError, RuntimeError, OSError, ValueError) as error:
+        raise FormatError(f"{name}: the zip file cannot be unpacked: {error}", path=name, line=0) from error
+
+
+def _hatanaka(data: bytes, name: str, problems: list[Problem]) -> bytes:
+    """Plain RINEX.  Where the decoder gives up, once more skipping what it cannot follow, then up to there only."""
+    with warnings.catch_warnings(record=True) as said:
+        warnings.simplefilter("always")
+        try:
+            text: bytes = hatanaka.crx2rnx(data)
+        except hatanaka.HatanakaException as first:
+            try:
+                text = hatanaka.crx2rnx(data, skip_strange_epochs=True)
+            except hatanaka.HatanakaException as error:
+                raise FormatError(
+                    f"{name}: the Hatanaka compression cannot be undone: {_one_line(str(error))}; fetch the file again",
+                    path=name, line=0,
+                ) from error  # fmt: skip
+            problems.append(
+                Problem(name, 0, f"the Hatanaka compression is damaged: {_one_line(str(first))}", "skipped what it spoils")
+            )
+    for warning in said[:20]:
+        problems.append(Problem(name, 0, f"Hatanaka decoder: {_one_line(str(warning.message))}", "kept the rest"))
+    return text
+
+
+def _one_line(sentence: str) -> str:
+    return " ".join(sentence.split())[:200]
