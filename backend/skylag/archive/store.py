@@ -227,22 +227,22 @@ class Archive:
             **layers,
         )
 
+    def cell_at(self, record: DayRecord, lat: float, lon: float, time: np.datetime64) -> Fields:
+        """One map of one cell: the cell that holds a place, at a time of `record.times`.  Outside the grid: unseen."""
+        cell = record.cell_of(lat, lon)
+        if cell is None:
+            return _nothing_seen(np.array([time]).astype("datetime64[ns]"), lat, lon)
+        one = np.timedelta64(1, "ns")
+        head = record.head
+        return _cut(self.fields(head.region, head.day, time, time + one, head.version), cell)
+
     def series(self, region: str, day: Day, lat: float, lon: float, version: int | None = None) -> Fields:
         """The day at the cell that holds a place: maps of one cell.  Outside the grid all of it is unseen."""
         record = self.day(region, day, version)
         cell = record.cell_of(lat, lon)
         if cell is None:
-            shape = (len(record.times), 1, 1)
-            nothing = np.full(shape, np.nan, dtype=np.float32)
-            return Fields(
-                times=record.times, lats=np.array([lat]), lons=np.array([lon]), vtec=nothing, vtec_sigma=nothing,
-                support=np.zeros(shape, dtype=np.uint16), slope=nothing, slope_sigma=nothing, slope_east=nothing,
-                slope_north=nothing, state=np.full(shape, UNSEEN, dtype=np.uint8),
-            )  # fmt: skip
-        whole = self.fields(region, day, version=record.head.version)
-        row, column = slice(cell[0], cell[0] + 1), slice(cell[1], cell[1] + 1)
-        layers = {name: getattr(whole, name)[:, row, column] for name in Fields.LAYERS}
-        return Fields(times=whole.times, lats=whole.lats[row], lons=whole.lons[column], **layers)
+            return _nothing_seen(record.times, lat, lon)
+        return _cut(self.fields(region, day, version=record.head.version), cell)
 
     def flags(self, region: str, day: Day, version: int | None = None) -> tuple[Flag, ...]:
         """The flags of a day, in the order they were saved."""
@@ -448,6 +448,24 @@ class Archive:
                 )  # fmt: skip
             layers[name] = whole[first - offset : last - offset]
         return layers
+
+
+def _cut(fields: Fields, cell: tuple[int, int]) -> Fields:
+    """Maps of one cell of the grid."""
+    row, column = slice(cell[0], cell[0] + 1), slice(cell[1], cell[1] + 1)
+    layers = {name: getattr(fields, name)[:, row, column] for name in Fields.LAYERS}
+    return Fields(times=fields.times, lats=fields.lats[row], lons=fields.lons[column], **layers)
+
+
+def _nothing_seen(times: Times, lat: float, lon: float) -> Fields:
+    """Maps of one place where nothing is known."""
+    shape = (len(times), 1, 1)
+    nothing = np.full(shape, np.nan, dtype=np.float32)
+    return Fields(
+        times=times, lats=np.array([lat]), lons=np.array([lon]), vtec=nothing, vtec_sigma=nothing,
+        support=np.zeros(shape, dtype=np.uint16), slope=nothing, slope_sigma=nothing, slope_east=nothing,
+        slope_north=nothing, state=np.full(shape, UNSEEN, dtype=np.uint8),
+    )  # fmt: skip
 
 
 @contextmanager

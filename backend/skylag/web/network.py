@@ -1,0 +1,37 @@
+"""Routes about days and the network: what is stored, the facts of a day, biases, the vocabulary."""
+
+from fastapi import APIRouter, Request
+from fastapi.responses import Response
+
+from skylag.archive import Archive
+from skylag.web import asking, payloads
+
+router = APIRouter()
+
+
+@router.get("/api/days", summary="Stored days")
+def days(request: Request, region: str | None = None) -> Response:
+    """All stored days, or those of one region, newest first."""
+    archive: Archive = request.app.state.archive
+    return payloads.reply(payloads.days(archive.days(region)))
+
+
+@router.get("/api/quantities", summary="Vocabulary")
+def vocabulary() -> Response:
+    """Name, unit, label and meaning of every quantity; names of states; layers."""
+    return payloads.reply(payloads.vocabulary())
+
+
+@router.get("/api/days/{region}/{day}", summary="Facts of a day")
+def day(request: Request, region: str, day: str, version: int | None = None) -> Response:
+    """Region, receivers, sites, grid, times, scales, counts, warnings and origin of a day."""
+    archive: Archive = request.app.state.archive
+    record = archive.day(region, asking.day(day), version)
+    return payloads.reply(payloads.day(record, archive.days(region)))
+
+
+@router.get("/api/days/{region}/{day}/biases", summary="Code biases of a day")
+def biases(request: Request, region: str, day: str, version: int | None = None) -> Response:
+    """Satellite and receiver biases with their uncertainty."""
+    archive: Archive = request.app.state.archive
+    return payloads.reply(payloads.biases(archive.biases(region, asking.day(day), version)))

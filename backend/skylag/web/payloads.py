@@ -1,0 +1,427 @@
+"""Every JSON shape of the web interface, and the only file in web that encodes.
+
+Leaving here, GPS time becomes UTC (ISO 8601 with Z; the key says `_utc`), content becomes metres of delay where a user
+thinks in metres, and what is not known becomes null.  Days are GPS-time days.  A number array of the maps is an object
+    {"dtype": "float32" | "uint16" | "uint8", "shape": [T, rows, columns], "base64": text}
+of little-endian values in C order, not-a-number where nothing is known.  A cell without a value is never given a state
+other than `unseen`.
+"""
+
+import base64
+import csv
+import io
+import json
+import math
+from collections.abc import Callable, Sequence
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+from fastapi.responses import Response
+
+from skylag import quantities, timescales
+from skylag.archive import DayHead, DayRecord, SiteStates
+from skylag.constants import L1_M_PER_TECU
+from skylag.tables import STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Rays, Region
+from skylag.web import nearby, sentences
+
+
+def honest_state(fields: Fields) -> Bytes:
+    """The states as stored, but unseen wherever no value or no line of sight stands behind them."""
+    known = np.isfinite(fields.vtec) & (fields.support > 0)
+    return np.where(known, fields.state, UNSEEN).astype(np.uint8)
+
+
+def _metres(values: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
+    return np.asarray(values * np.float32(L1_M_PER_TECU))
+
+
+# Layer name, as in the vocabulary, -> how it follows from the stored maps.
+LAYERS: dict[str, Callable[[Fields], npt.NDArray[Any]]] = {
+    "vertical_delay": lambda fields: _metres(fields.vtec),
+    "vertical_delay_sigma": lambda fields: _metres(fields.vtec_sigma),
+    "vtec": lambda fields: fields.vtec,
+    "vtec_sigma": lambda fields: fields.vtec_sigma,
+    "support": lambda fields: fields.support,
+    "slope": lambda fields: fields.slope,
+    "slope_sigma": lambda fields: fields.slope_sigma,
+    "slope_east": lambda fields: fields.slope_east,
+    "slope_north": lambda fields: fields.slope_north,
+    "state": honest_state,
+}
+USUAL_LAYERS = ("vertical_delay", "vertical_delay_sigma", "slope", "state")
+
+# ---------------------------------------------------------------------------------------------- small pieces
+
+
+def reply(content: Any, status: int = 200, headers: dict[str, str] | None = None) -> Response:
+    """An answer in JSON; a value JSON does not know is a defect and raises."""
+    text = json.dumps(content, ensure_ascii=False, allow_nan=False, separators=(",", ":"))
+    return Response(text, status, headers=headers, media_type="application/json")
+
+
+def utc(time: np.datetime64) -> str | None:
+    """A GPS time as UTC text like 2031-05-11T05:29:42Z; None for no time."""
+    return None if np.isnat(time) else utc_texts(np.array([time]))[0]
+
+
+def utc_texts(times: npt.NDArray[np.datetime64]) -> list[str]:
+    """GPS times as UTC texts, to the second, or to the millisecond where one of them needs it."""
+    instants = timescales.gps_to_utc(times)
+    fine = bool(np.any(instants.astype(np.int64) % 10**9))
+    return [text + "Z" for text in np.datetime_as_string(instants, unit="ms" if fine else "s").tolist()]
+
+
+def _number(value: float) -> float | None:
+    """A float of at most seven figures; None for not-a-number."""
+    return float(f"{value:.7g}") if math.isfinite(value) else None
+
+
+def _numbers(values: npt.NDArray[Any]) -> list[float | None]:
+    return [_number(float(value)) for value in values.reshape(-1)]
+
+
+def array(values: npt.NDArray[Any]) -> dict[str, Any]:
+    """An array as dtype, shape and base64 of its little-endian bytes."""
+    little = np.ascontiguousarray(values).astype(values.dtype.newbyteorder("<"), copy=False)
+    return {
+        "dtype": values.dtype.name,
+        "shape": list(values.shape),
+        "base64": base64.b64encode(little.tobytes()).decode("ascii"),
+    }
+
+
+def _plain(value: Any) -> Any:
+    """Facts of any kind as JSON takes them: not-a-number becomes null, keys become text."""
+    if isinstance(value, dict):
+        return {str(key): _plain(one) for key, one in value.items()}
+    if isinstance(value, list | tuple):
+        return [_plain(one) for one in value]
+    if isinstance(value, float):
+        return value if math.isfinite(value) else None
+    if value is None or isinstance(value, bool | int | str):
+        return value
+    return str(value)
+
+
+# ---------------------------------------------------------------------------------------------- errors
+
+
+def error(sentence: str, kind: str, details: dict[str, Any], status: int) -> Response:
+    """The one shape of every failure."""
+    content = {"ok": False, "error": sentence, "kind": kind, "details": _plain(details), "status": status}
+    return reply(content, status, {"Cache-Control": "no-store"})
+
+
+# ---------------------------------------------------------------------------------------------- days
+
+
+def vocabulary() -> dict[str, Any]:
+    """All quantities, the names of states in the order of their codes, and the layers that can be asked for."""
+    return {
+        "quantities": [
+            {"name": q.name, "unit": q.unit, "dtype": q.dtype, "label": q.label, "meaning": q.meaning}
+            for q in quantities.QUANTITIES
+        ],
+        "states": list(STATE_NAMES),
+        "layers": list(LAYERS),
+        "caution": sentences.CAUTION,
+    }
+
+
+def _head(head: DayHead) -> dict[str, Any]:
+    return {
+        "region": head.region,
+        "day": str(head.day),
+        "version": head.version,
+        "versions": list(head.versions),
+        "pinned": head.pinned,
+        "saved_at_utc": f"{head.saved_at}Z",
+        "simulated": head.simulated,
+        "state_shares": dict(head.state_shares),
+        "site_shares": {name: dict(shares) for name, shares in head.site_shares.items()},
+        "flag_counts": dict(head.flag_counts),
+        "warnings": head.warning_count,
+        "receivers": head.receiver_count,
+        "epochs": head.epoch_count,
+    }
+
+
+def days(heads: Sequence[DayHead]) -> dict[str, Any]:
+    """The list of days, newest first."""
+    return {"days": [_head(head) for head in heads], "regions": sorted({head.region for head in heads})}
+
+
+def _round_up(value: float) -> float:
+    """The next of 1, 2, 3, 5 times a power of ten: a scale end that a person reads at a glance."""
+    if not math.isfinite(value) or value <= 0:
+        return 1.0
+    power = 10.0 ** math.floor(math.log10(value))
+    return next(float(step * power) for step in (1, 2, 3, 5, 10) if value <= step * power * (1 + 1e-9))
+
+
+def scales(heads: Sequence[DayHead]) -> dict[str, list[float]]:
+    """Ends of colour scales for a region: from 0 to what 99 of 100 cells of its worst stored day stay under.
+
+    The same for all days of the region, so that two moments compare.
+    """
+
+    def top(name: str, factor: float = 1.0) -> list[float]:
+        values = [head.highest.get(name, math.nan) for head in heads]
+        finite = [factor * value for value in values if math.isfinite(value)]
+        return [0.0, _round_up(max(finite, default=math.nan))]
+
+    return {
+        "vertical_delay": top("vtec", L1_M_PER_TECU),
+        "vertical_delay_sigma": top("vtec_sigma", L1_M_PER_TECU),
+        "vtec": top("vtec"),
+        "vtec_sigma": top("vtec_sigma"),
+        "slope": top("slope"),
+        "slope_sigma": top("slope_sigma"),
+    }
+
+
+def day(record: DayRecord, heads: Sequence[DayHead]) -> dict[str, Any]:
+    """All plain facts of a day; `heads` are the days of its region, for the scales."""
+    region = record.region
+    notices = list(record.origin.warnings)
+    if record.origin.simulated and sentences.INVENTED not in notices:
+        notices.insert(0, sentences.INVENTED)
+    return {
+        **_head(record.head),
+        "warnings": notices,
+        "region": _region(region),
+        "receivers": [
+            {"name": r.name, "lat": lat, "lon": lon, "height_m": height_m, "antenna": r.antenna, "type": r.type}
+            for r in record.receivers
+            for lat, lon, height_m in [_geodetic(r.position_m)]
+        ],
+        "sites": [
+            {"name": site.name, "lat": site.lat, "lon": site.lon, "kind": site.kind} for site in region.sites
+        ],
+        "grid": {"lats": _numbers(record.lats), "lons": _numbers(record.lons), "step_deg": region.step_deg},
+        "times_utc": utc_texts(record.times),
+        "scales": scales(heads),
+        "calibration": _plain(dict(record.calibration)),
+        "bias_source": record.bias_source,
+        "bias_datum": record.bias_datum,
+        "counts": _plain(dict(record.origin.counts)),
+        "slant_rows": record.slant_rows,
+        "origin": {
+            "inputs": _plain([dict(one) for one in record.origin.inputs]),
+            "options": _plain(dict(record.origin.options)),
+            "versions": _plain(dict(record.origin.versions)),
+            "timings_s": _plain(dict(record.origin.timings_s)),
+        },
+        "caution": sentences.CAUTION,
+    }
+
+
+def _region(region: Region) -> dict[str, Any]:
+    limits = region.thresholds
+    return {
+        "name": region.name, "south": region.south, "north": region.north, "west": region.west, "east": region.east,
+        "shell_height_km": region.shell_height_km, "timezone": region.timezone,
+        "thresholds": {name: getattr(limits, name) for name in type(limits).__dataclass_fields__},
+    }  # fmt: skip
+
+
+def _geodetic(position_m: tuple[float, float, float]) -> tuple[float, float, float]:
+    """Latitude, longitude [deg] and height [m] on WGS 84 of an Earth-fixed position (Bowring 1976, iterated)."""
+    from skylag.constants import WGS84_A_M, WGS84_F
+
+    x, y, z = position_m
+    squared = WGS84_F * (2 - WGS84_F)
+    across = math.hypot(x, y)
+    lat_rad = math.atan2(z, across * (1 - squared))
+    height = 0.0
+    for _ in range(6):
+        normal = WGS84_A_M / math.sqrt(1 - squared * math.sin(lat_rad) ** 2)
+        height = across / math.cos(lat_rad) - normal if abs(math.cos(lat_rad)) > 1e-6 else abs(z) - normal
+        lat_rad = math.atan2(z, across * (1 - squared * normal / (normal + height)))
+    return round(math.degrees(lat_rad), 7), round(math.degrees(math.atan2(y, x)), 7), round(height, 3)
+
+
+# ---------------------------------------------------------------------------------------------- maps
+
+
+def maps(fields: Fields, layers: Sequence[str]) -> dict[str, Any]:
+    """Maps of a span of time."""
+    return {
+        "times_utc": utc_texts(fields.times),
+        "lats": _numbers(fields.lats),
+        "lons": _numbers(fields.lons),
+        "layers": {name: array(LAYERS[name](fields)) for name in layers},
+        "units": {name: quantities.BY_NAME[name].unit for name in layers},
+    }
+
+
+def rays(table: Rays, asked: np.datetime64) -> dict[str, Any]:
+    """Pierce points of one epoch; `time_utc` is null where there are none near the moment asked for."""
+    return {
+        "asked_utc": utc(asked),
+        "time_utc": utc(table.time[0]) if len(table) else None,
+        "shell_height_km": table.shell_height_m / 1000.0,
+        "receiver": [table.receivers[k].name for k in table.receiver],
+        "satellite": [str(table.satellites[k]) for k in table.satellite],
+        "pierce_lat": _numbers(np.round(table.pierce_lat, 4)),
+        "pierce_lon": _numbers(np.round(table.pierce_lon, 4)),
+        "elevation": _numbers(np.round(table.elevation, 2)),
+        "azimuth": _numbers(np.round(table.azimuth, 2)),
+    }
+
+
+def series(cell: Fields, inside: bool) -> dict[str, Any]:
+    """The day at one cell."""
+    return {
+        "times_utc": utc_texts(cell.times),
+        "lat": _number(float(cell.lats[0])),
+        "lon": _number(float(cell.lons[0])),
+        "inside": inside,
+        "vertical_delay": _numbers(_metres(cell.vtec)),
+        "vertical_delay_sigma": _numbers(_metres(cell.vtec_sigma)),
+        "slope": _numbers(cell.slope),
+        "slope_sigma": _numbers(cell.slope_sigma),
+        "support": [int(n) for n in cell.support.reshape(-1)],
+        "state": [STATE_NAMES[int(k)] for k in honest_state(cell).reshape(-1)],
+    }
+
+
+def reading(
+    cell: Fields, inside: bool, lat: float, lon: float, near: Sequence[nearby.NearFlag], simulated: bool
+) -> dict[str, Any]:
+    """What is known at a place and time: `cell` holds one map of one cell."""
+    code = int(honest_state(cell)[0, 0, 0])
+    delay_m, sigma_m = float(_metres(cell.vtec)[0, 0, 0]), float(_metres(cell.vtec_sigma)[0, 0, 0])
+    slope, slope_sigma = float(cell.slope[0, 0, 0]), float(cell.slope_sigma[0, 0, 0])
+    support = int(cell.support[0, 0, 0])
+    seen = code != UNSEEN
+    sentence = sentences.of_state(code, slope, slope_sigma, delay_m, sigma_m, support) if inside else sentences.OUTSIDE
+    return {
+        "lat": lat,
+        "lon": lon,
+        "time_utc": utc(cell.times[0]),
+        "cell": {"lat": _number(float(cell.lats[0])), "lon": _number(float(cell.lons[0]))} if inside else None,
+        "state": STATE_NAMES[code],
+        "sentence": sentence,
+        "vertical_delay": _number(delay_m) if seen else None,
+        "vertical_delay_sigma": _number(sigma_m) if seen else None,
+        "slope": _number(slope) if seen else None,
+        "slope_sigma": _number(slope_sigma) if seen else None,
+        "slope_east": _number(float(cell.slope_east[0, 0, 0])) if seen else None,
+        "slope_north": _number(float(cell.slope_north[0, 0, 0])) if seen else None,
+        "support": support,
+        "flags": [
+            {
+                **_flag(one.flag),
+                "now_lat": _number(one.lat),
+                "now_lon": _number(one.lon),
+                "distance_km": round(one.distance_km, 1),
+                "bearing_deg": round(one.bearing_deg),
+            }
+            for one in near
+        ],
+        "simulated": simulated,
+        "caution": sentences.CAUTION,
+    }
+
+
+def coast(lines: Sequence[npt.NDArray[np.float64]]) -> dict[str, Any]:
+    """Coast lines, each a pair of lists: latitudes and longitudes in degrees."""
+    return {
+        "lines": [
+            {"lat": np.round(line[:, 0], 4).tolist(), "lon": np.round(line[:, 1], 4).tolist()} for line in lines
+        ]
+    }
+
+
+# ---------------------------------------------------------------------------------------------- flags, states, biases
+
+_FLAG_COLUMNS = ("start_utc", "end_utc", "lat_deg", "lon_deg", "kind", "slope_mm_per_km", "sigma_mm_per_km",
+                 "speed_m_s", "heading_deg", "state", "evidence", "confirmed")  # fmt: skip
+
+
+def _flag(flag: Flag) -> dict[str, Any]:
+    return {
+        "start_utc": utc(flag.start), "end_utc": utc(flag.end), "lat_deg": _number(flag.lat),
+        "lon_deg": _number(flag.lon), "kind": flag.kind, "slope_mm_per_km": _number(flag.slope_mm_per_km),
+        "sigma_mm_per_km": _number(flag.sigma_mm_per_km), "speed_m_s": _number(flag.speed_m_s),
+        "heading_deg": _number(flag.heading_deg), "state": flag.state, "evidence": flag.evidence,
+        "confirmed": flag.confirmed,
+    }  # fmt: skip
+
+
+def flags(table: Sequence[Flag]) -> dict[str, Any]:
+    """The flags of a day, each with its track: [[time_utc, lat, lon], ...]."""
+    return {
+        "flags": [
+            {**_flag(flag), "track": [[utc(t), _number(lat), _number(lon)] for t, lat, lon in flag.track]}
+            for flag in table
+        ]
+    }
+
+
+def flags_csv(table: Sequence[Flag], name: str) -> Response:
+    """The flags of a day as a table of text; an unknown number is an empty cell."""
+    text = io.StringIO()
+    writer = csv.DictWriter(text, _FLAG_COLUMNS, lineterminator="\n")
+    writer.writeheader()
+    for flag in table:
+        row = _flag(flag)
+        row["confirmed"] = "true" if flag.confirmed else "false"
+        writer.writerow({key: _harmless(value) for key, value in row.items()})
+    return Response(text.getvalue(), media_type="text/csv", headers=_download(f"{name}-flags.csv"))
+
+
+def _harmless(value: Any) -> Any:
+    """Text that a spreadsheet would take for a formula gets a leading apostrophe."""
+    return "'" + value if isinstance(value, str) and value[:1] in ("=", "+", "@", "-", "\t") else value
+
+
+def flags_geojson(table: Sequence[Flag], name: str, simulated: bool) -> Response:
+    """The flags of a day as GeoJSON (RFC 7946): points, and lines for those with a track; longitude first."""
+    features = []
+    for flag in table:
+        geometry: dict[str, Any] = {"type": "Point", "coordinates": [_number(flag.lon), _number(flag.lat)]}
+        facts = _flag(flag)
+        if len(flag.track) > 1:
+            geometry = {"type": "LineString", "coordinates": [[_number(p[2]), _number(p[1])] for p in flag.track]}
+            facts["track_utc"] = [utc(p[0]) for p in flag.track]
+        features.append({"type": "Feature", "geometry": geometry, "properties": facts})
+    content = {"type": "FeatureCollection", "simulated": simulated, "features": features}
+    answer = reply(content, headers=_download(f"{name}-flags.geojson"))
+    answer.headers["Content-Type"] = "application/geo+json"
+    return answer
+
+
+def _download(name: str) -> dict[str, str]:
+    plain = "".join(c if c.isascii() and (c.isalnum() or c in "-_.") else "_" for c in name)
+    return {"Content-Disposition": f'attachment; filename="{plain}"'}
+
+
+def site_states(states: SiteStates) -> dict[str, Any]:
+    """States of the sites through a day: `codes` is one list per site, `reasons` one list per site, "" where none."""
+    return {
+        "times_utc": utc_texts(states.times),
+        "sites": [{"name": s.name, "lat": s.lat, "lon": s.lon, "kind": s.kind} for s in states.sites],
+        "states": list(STATE_NAMES),
+        "codes": states.codes.T.tolist(),
+        "reasons": [list(one) for one in states.reasons],
+    }
+
+
+def biases(table: Biases) -> dict[str, Any]:
+    """The code biases of a day, one object each."""
+    return {
+        "source": table.source,
+        "datum": table.datum,
+        "biases": [
+            {
+                "kind": str(table.kind[n]), "name": str(table.name[n]), "system": str(table.system[n]),
+                "code1": str(table.code1[n]), "code2": str(table.code2[n]),
+                "bias_ns": _number(float(table.value_ns[n])), "sigma_ns": _number(float(table.sigma_ns[n])),
+                "start_utc": utc(table.start[n]), "end_utc": utc(table.end[n]),
+            }
+            for n in range(len(table))
+        ],
+    }  # fmt: skip
