@@ -139,6 +139,9 @@ def _pairs(
     common = _group(arcs[epoch, one], arcs[epoch, two])
     usual, usual_count = _group_median(growth * distance, common)
     change = growth - usual / distance
+    # What the pair does on its own through the arc is the honest sigma of a departure from its median.
+    restless = 1.4826 * _group_median(np.abs(growth * distance - usual), common)[0] / distance
+    change_sigma = np.hypot(noise_only, restless)
     facts = {
         "pair_slopes": len(growth),
         "pair_slope_median_mm_per_km": _quantile(np.abs(growth), 0.5),
@@ -148,7 +151,7 @@ def _pairs(
     rows: list[dict[str, Any]] = []
     for way, value, spread, able in (
         (PAIR, growth, sigma, np.ones(len(growth), dtype=bool)),
-        (PAIR_CHANGE, change, noise_only, usual_count * choices.step_s >= 2400.0),
+        (PAIR_CHANGE, change, change_sigma, usual_count * choices.step_s >= 2400.0),
     ):
         steep = np.flatnonzero(able & (np.abs(value) - choices.claim_sigmas * spread > choices.claim_mm_per_km))
         uphill = np.where(value[steep] >= 0, 0.0, 180.0)

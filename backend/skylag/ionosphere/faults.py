@@ -1,0 +1,158 @@
+"""Receivers whose data part from their neighbours': slip storms, raggedness and levels that nobody else saw.
+
+Weather is shared by neighbours; a fault is not.  Each test asks that one receiver stands out while the others are calm
+at the same time, so that a storm over the whole network blames nobody.  Never repairs or removes anything.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from skylag.ionosphere.field import plane_km
+from skylag.ionosphere.sightlines import lay_out, middle
+from skylag.tables import Bools, Fault, Floats, Ints, Patches, Rays, Samples
+
+WINDOW_S = 300.0
+
+
+@dataclass(frozen=True)
+class FaultChoices:
+    """When a receiver is called at fault.
+
+    storm_breaks     arcs broken within half an hour, and `storm_times` more than the second worst receiver
+    ragged_share     share of its windows that are ragged, while of the others' fewer than calm_share are
+    level_tecu       its vertical level against a plane through the others', and level_times the second worst
+    level_s          for at least so long
+    join_s           spans nearer than this are one
+    """
+
+    storm_breaks: int = 8
+    storm_times: float = 3.0
+    ragged_tecu_min: float = 0.5
+    ragged_share: float = 0.5
+    calm_share: float = 0.1
+    level_tecu: float = 4.0
+    level_times: float = 2.5
+    level_s: float = 1200.0
+    join_s: float = 1800.0
+
+
+def find(
+    rays: Rays, samples: Samples, patches: Patches, choices: FaultChoices | None = None
+) -> tuple[Fault, ...]:
+    """Faults of a network day; none where fewer than three receivers leave nobody to compare with."""
+    choices = choices or FaultChoices()
+    if len(rays.receivers) < 3 or len(patches.times) == 0:
+        return ()
+    storm = _slip_storms(patches.breaks, choices)
+    ragged = _ragged_alone(patches, len(rays.receivers), choices)
+    level, size = _level_alone(rays, samples, patches, choices)
+    x, y, z = np.array([receiver.position_m for receiver in rays.receivers]).T
+    lat, lon = np.degrees(np.arctan2(z, np.hypot(x, y))), np.degrees(np.arctan2(y, x))
+    faults = []
+    for number, receiver in enumerate(rays.receivers):
+        for first, last in _spans(storm[:, number] | ragged[:, number] | level[:, number], choices.join_s):
+            window = slice(first, last + 1)
+            reasons = []
+            if storm[window, number].any():
+                reasons.append(f"{int(patches.breaks[window, number].sum())} broken arcs")
+            if ragged[window, number].any():
+                reasons.append("phases ragged on most of its lines of sight")
+            if level[window, number].any():
+                reasons.append(f"level off by {np.nanmax(np.abs(size[window, number])):.0f} TECU")
+            faults.append(Fault(
+                start=patches.times[first],
+                end=patches.times[last] + np.timedelta64(round(WINDOW_S), "s"),
+                receiver=receiver.name,
+                lat=float(lat[number]),
+                lon=float(lon[number]),
+                why=f"{receiver.name}: {', '.join(reasons)}, while its neighbours are calm",
+            ))  # fmt: skip
+    return tuple(sorted(faults, key=lambda fault: fault.start))
+
+
+def _second(values: Floats | Ints) -> Floats:
+    """Largest of the other receivers, for each receiver (B, R)."""
+    ordered = np.sort(values, axis=1)
+    top, next_one = ordered[:, -1:], ordered[:, -2:-1]
+    return np.asarray(np.where(values == top, next_one, top), dtype=np.float64)
+
+
+def _slip_storms(breaks: Ints, choices: FaultChoices) -> Bools:
+    """(B, R) windows in whose half hour the receiver breaks many arcs and no other does."""
+    size = max(1, round(1800.0 / WINDOW_S))
+    padded = np.vstack([np.zeros((size // 2, breaks.shape[1]), dtype=np.int64), breaks,
+                        np.zeros((size - size // 2, breaks.shape[1]), dtype=np.int64)])  # fmt: skip
+    running = np.cumsum(padded, axis=0)
+    total = (running[size:] - running[:-size])[: len(breaks)]
+    own = (total >= choices.storm_breaks) & (total > choices.storm_times * _second(total))
+    return np.asarray(own & (breaks > 0))
+
+
+def _ragged_alone(patches: Patches, receivers: int, choices: FaultChoices) -> Bools:
+    """(B, R) windows where most lines of a receiver are ragged and hardly any of the others'."""
+    with np.errstate(invalid="ignore"):
+        high = patches.index >= choices.ragged_tecu_min
+    known = np.isfinite(patches.index)
+    owner = (patches.receiver[:, None] == np.arange(receivers)[None, :]).astype(np.int64)
+    ragged, seen = high.astype(np.int64) @ owner, known.astype(np.int64) @ owner
+    others_ragged, others_seen = ragged.sum(axis=1, keepdims=True) - ragged, seen.sum(axis=1, keepdims=True) - seen
+    share = ragged / np.maximum(seen, 1)
+    others = others_ragged / np.maximum(others_seen, 1)
+    return np.asarray(
+        (seen >= 3) & (share >= choices.ragged_share) & (others_seen >= 6) & (others <= choices.calm_share)
+    )
+
+
+def _level_alone(rays: Rays, samples: Samples, patches: Patches, choices: FaultChoices) -> tuple[Bools, Floats]:
+    """(B, R) windows where a receiver's level is off a plane through the others', and by how much [TECU].
+
+    The level of a receiver is the median over its satellites of its content less the network's median for that
+    satellite; the plane leaves the receiver itself out.
+    """
+    receivers = len(rays.receivers)
+    blocks = len(patches.times)
+    off, size = np.zeros((blocks, receivers), dtype=bool), np.full((blocks, receivers), np.nan)
+    if receivers < 6:
+        return off, size
+    lines = lay_out(rays, WINDOW_S)
+    vtec = lines.layer(np.where(rays.elevation >= 20.0, samples.vtec, np.nan))
+    dense = np.full((len(lines.times), len(rays.satellites), receivers), np.nan)
+    dense[:, lines.satellite, lines.receiver] = vtec
+    ordered = np.sort(dense, axis=2)
+    known = np.isfinite(ordered).sum(axis=2)
+    usual = np.take_along_axis(ordered, (np.maximum(known - 1, 0) // 2)[..., None], axis=2)
+    departure = np.sort(np.where((known >= 5)[..., None], dense - usual, np.nan), axis=1)
+    count = np.isfinite(departure).sum(axis=1)
+    level = np.take_along_axis(departure, (np.maximum(count - 1, 0) // 2)[:, None, :], axis=1)[:, 0, :]
+    level[count < 4] = np.nan
+    x, y, z = np.array([receiver.position_m for receiver in rays.receivers]).T
+    east, north = plane_km(np.degrees(np.arctan2(z, np.hypot(x, y))), np.degrees(np.arctan2(y, x)), middle(rays))
+    design = np.stack([np.ones(receivers), east / 100.0, north / 100.0], axis=1)
+    weight = np.isfinite(level).astype(np.float64)
+    normal = np.einsum("br,ri,rj->bij", weight, design, design) + 1e-6 * np.eye(3)
+    inverse = np.linalg.inv(normal)
+    plane = np.einsum("bij,br,rj->bi", inverse, np.nan_to_num(level), design)
+    share = np.einsum("ri,bij,rj->br", design, inverse, design)
+    left_out = (level - plane @ design.T) / np.maximum(1.0 - share, 0.1)
+    left_out[weight.sum(axis=1) < 6] = np.nan
+    height = np.nan_to_num(np.abs(left_out))
+    bad = (height > choices.level_tecu) & (height > choices.level_times * _second(np.nan_to_num(np.abs(level))))
+    at = np.clip(np.searchsorted(patches.times, lines.times, side="right") - 1, 0, blocks - 1)
+    off[at] = bad
+    size[at] = left_out
+    least = max(1, round(choices.level_s / WINDOW_S))
+    for number in range(receivers):
+        for first, last in _spans(off[:, number], WINDOW_S):
+            if last - first + 1 < least:
+                off[first : last + 1, number] = False
+    return off, size
+
+
+def _spans(flags: Bools, join_s: float) -> list[tuple[int, int]]:
+    """First and last windows of stretches of True, those nearer than join_s taken as one."""
+    at = np.flatnonzero(flags)
+    if len(at) == 0:
+        return []
+    cuts = np.flatnonzero(np.diff(at) * WINDOW_S > join_s)
+    return [(int(part[0]), int(part[-1])) for part in np.split(at, cuts + 1)]
