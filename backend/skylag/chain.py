@@ -15,8 +15,13 @@ from skylag.errors import NotEnough
 from skylag.impact import states
 from skylag.ionosphere import adjustment, fronts, geometry, irregularity, orbits, slopes
 from skylag.ionosphere import field as vertical_field
+from skylag.ionosphere.adjustment import AdjustmentChoices
 from skylag.ionosphere.arcs import ArcChoices, cut, reasons, slip_list
+from skylag.ionosphere.field import FieldChoices
+from skylag.ionosphere.fronts import FrontChoices
+from skylag.ionosphere.irregularity import IrregularityChoices
 from skylag.ionosphere.pairs import choose
+from skylag.ionosphere.slopes import SlopeChoices
 from skylag.tables import (
     Biases,
     Calibration,
@@ -43,11 +48,11 @@ class Choices:
     epoch_step_s: float = 300.0
     thin_to_s: float | None = None
     arcs: ArcChoices = field(default_factory=ArcChoices)
-    adjustment: adjustment.AdjustmentChoices = field(default_factory=adjustment.AdjustmentChoices)
-    maps: vertical_field.FieldChoices = field(default_factory=vertical_field.FieldChoices)
-    slopes: slopes.SlopeChoices = field(default_factory=slopes.SlopeChoices)
-    fronts: fronts.FrontChoices = field(default_factory=fronts.FrontChoices)
-    irregularity: irregularity.IrregularityChoices = field(default_factory=irregularity.IrregularityChoices)
+    adjustment: AdjustmentChoices = field(default_factory=AdjustmentChoices)
+    maps: FieldChoices = field(default_factory=FieldChoices)
+    slopes: SlopeChoices = field(default_factory=SlopeChoices)
+    fronts: FrontChoices = field(default_factory=FrontChoices)
+    irregularity: IrregularityChoices = field(default_factory=IrregularityChoices)
 
 
 @dataclass(frozen=True)
