@@ -1,0 +1,471 @@
+"""What slopes, fronts and patches mean for a place: holds, strained, broken, unseen, each with its reason.
+
+Limits on the slope of the vertical delay (1 mm/km of slope is 1 mm of error per km of baseline), defaults in
+`tables.Thresholds`:
+- strained from 8 mm/km: the top class limit of the hourly index that network operators publish in parts per million of
+  the baseline (Wanninger 2004, ION GNSS, 2849-2854; class limits as two state operators give them).  Half a cycle of
+  1575.42 MHz is reached over 12 km.
+- broken from 25.5 mm/km: the largest standard deviation of the vertical gradient that a ground-based augmentation
+  station can broadcast (8 bits of 0.1 mm/km; ICAO Annex 10, Appendix B to chapter 3).  What is steeper cannot even be
+  announced.
+- patches: index 0.5 and 1.0 TECU/min (Ma and Maruyama 2006 and common classes, from memory).
+A planning aid, not for navigation.  Never turns `unseen` into `holds`; only a confirmed front or patch, or a confirmed
+slope right there, speaks for a place that the map does not see, and then only as a warning.
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+from scipy.ndimage import find_objects, label
+
+from skylag.constants import L1_M_PER_TECU
+from skylag.ionosphere.field import plane_km
+from skylag.ionosphere.fronts import ahead_km, expected_at
+from skylag.tables import (
+    BROKEN,
+    HOLDS,
+    STATE_NAMES,
+    STRAINED,
+    UNSEEN,
+    Arrival,
+    Bools,
+    Bytes,
+    Fault,
+    Fields,
+    Flag,
+    Floats,
+    Front,
+    Fronts,
+    Patch,
+    Patches,
+    Region,
+    SlopeClaim,
+    Slopes,
+    Thresholds,
+)
+
+NOTHING = float("nan")
+
+
+@dataclass(frozen=True)
+class JudgeChoices:
+    """How far a witness speaks for its surroundings.
+
+    sigmas         a slope counts when it is above the limit by so many of its sigmas
+    claim_reach_km, claim_reach_s   a confirmed slope between receivers speaks for cells this near
+    front_margin_km, front_beside_km  added to half the width of a wall on both sides, and to its reach at both ends
+    patch_margin_km added to the radius of a patch
+    least_cells    fewer cell-epochs of steep field make no flag of their own
+    most_unconfirmed  unconfirmed claims listed, steepest first
+    """
+
+    sigmas: float = 1.0
+    claim_reach_km: float = 60.0
+    claim_reach_s: float = 300.0
+    front_margin_km: float = 25.0
+    front_beside_km: float = 100.0
+    patch_margin_km: float = 25.0
+    least_cells: int = 4
+    most_unconfirmed: int = 12
+
+
+@dataclass(frozen=True)
+class Judged:
+    """The maps with their states, states (T, sites) with a reason per site and time ("" where it holds), and flags."""
+
+    fields: Fields
+    site_states: Bytes
+    site_reasons: tuple[tuple[str, ...], ...]
+    flags: tuple[Flag, ...]
+
+
+def state_of_slope(slope: npt.ArrayLike, sigma: npt.ArrayLike, thresholds: Thresholds, sigmas: float = 1.0) -> Bytes:
+    """holds, strained or broken by slope [mm/km] beyond its sigma; unseen where the slope is not known; same shape."""
+    sure = np.asarray(slope, dtype=np.float64) - sigmas * np.asarray(sigma, dtype=np.float64)
+    state = np.full(np.shape(sure), HOLDS, dtype=np.uint8)
+    with np.errstate(invalid="ignore"):
+        state[sure > thresholds.strained_mm_per_km] = STRAINED
+        state[sure > thresholds.broken_mm_per_km] = BROKEN
+    state[~np.isfinite(sure)] = UNSEEN
+    return state
+
+
+def judge(
+    fields: Fields,
+    slopes: Slopes,
+    fronts: Fronts,
+    patches: Patches,
+    region: Region,
+    faults: Sequence[Fault] = (),
+    arrivals: Sequence[Arrival] = (),
+    choices: JudgeChoices | None = None,
+) -> Judged:
+    """States of every cell and site at each epoch of the maps, and the flags of the day."""
+    choices = choices or JudgeChoices()
+    limits = region.thresholds
+    lon_grid, lat_grid = np.meshgrid(fields.lons, fields.lats)
+    cells = _Places(lat_grid.ravel(), lon_grid.ravel())
+    shape = fields.vtec.shape
+
+    by_field = field_states(fields, limits, choices)
+    warned, _ = _warnings(fields.times, cells, slopes, fronts, patches, limits, choices, reasons=False)
+    explained = _reached(fields.times, cells, fronts, patches, choices).reshape(shape)
+    state = np.maximum(by_field, warned.reshape(shape))
+
+    site_states, site_reasons = _judge_sites(fields, state, by_field, slopes, fronts, patches, region, choices)
+    flags = [
+        *(_front_flag(front, limits, number, arrivals) for number, front in enumerate(fronts.fronts)),
+        *(_patch_flag(patch, limits) for patch in patches.patches),
+        *_claim_flags(slopes, fronts, patches, limits, choices),
+        *_field_flags(fields, by_field, explained, slopes, choices),
+        *(_fault_flag(fault) for fault in faults),
+    ]
+    ordered = tuple(sorted(flags, key=lambda flag: (flag.start, flag.kind)))
+    return Judged(replace(fields, state=state), site_states, site_reasons, ordered)
+
+
+def field_states(fields: Fields, limits: Thresholds, choices: JudgeChoices | None = None) -> Bytes:
+    """States by the map alone (T, lat, lon): unseen without content, support, or with too wide a sigma."""
+    choices = choices or JudgeChoices()
+    state = state_of_slope(fields.slope, fields.slope_sigma, limits, choices.sigmas)
+    with np.errstate(invalid="ignore"):
+        seen = np.isfinite(fields.vtec) & (fields.support > 0)
+        seen &= fields.vtec_sigma * L1_M_PER_TECU <= limits.unseen_sigma_m
+    # Content known but not its slope: nothing can be said of corrections there.
+    state[~seen] = UNSEEN
+    return state
+
+
+# ---------------------------------------------------------------------------------------------- what reaches a place
+
+
+@dataclass(frozen=True)
+class _Places:
+    """Places to be judged: cells or sites [deg]."""
+
+    lat: Floats
+    lon: Floats
+
+
+def _front_state(front: Front, limits: Thresholds) -> int:
+    if not front.confirmed:
+        return UNSEEN
+    return int(state_of_slope(np.array(front.slope), np.array(front.slope_sigma), limits))
+
+
+def _patch_state(patch: Patch, limits: Thresholds) -> int:
+    if not patch.confirmed:
+        return UNSEEN
+    return BROKEN if patch.index_highest >= limits.broken_roti else STRAINED
+
+
+def in_front(front: Front, places: Any, times: Any, choices: JudgeChoices) -> Bools:
+    """(T, P) whether a wall's foot-to-head band lies over places, within its span and reach.
+
+    The band is wider by the way the wall makes in half the spacing of epochs, so that no place is skipped.
+    """
+    steps_ns = np.diff(times).astype("timedelta64[ns]").astype(np.int64)
+    step_s = float(np.median(steps_ns)) / 1e9 if len(times) > 1 else 300.0
+    half = 0.5 * front.width_km + choices.front_margin_km + front.speed_m_s / 1000.0 * step_s / 2.0
+    over: Bools = np.zeros((len(times), len(places.lat)), dtype=bool)
+    spare = np.timedelta64(round(step_s * 1e9), "ns")
+    for number in np.flatnonzero((times >= front.start - spare) & (times <= front.end + spare)):
+        away, right = ahead_km(front, places.lat, places.lon, times[number])
+        over[number] = (np.abs(away) <= half) & (right >= front.reach_km[0] - choices.front_beside_km)
+        over[number] &= right <= front.reach_km[1] + choices.front_beside_km
+    return over
+
+
+def in_patch(patch: Patch, places: Any, times: Any, choices: JudgeChoices) -> Bools:
+    """(T, P) whether places lie in a patch, within its span; it moves with its drift where that is known."""
+    over: Bools = np.zeros((len(times), len(places.lat)), dtype=bool)
+    east, north = plane_km(places.lat, places.lon, (patch.lat, patch.lon))
+    half_way = patch.start + (patch.end - patch.start) // 2
+    for number in np.flatnonzero((times >= patch.start) & (times < patch.end)):
+        x, y = 0.0, 0.0
+        if np.isfinite(patch.drift_m_s):
+            way = patch.drift_m_s / 1000.0 * float((times[number] - half_way) / np.timedelta64(1, "s"))
+            heading_rad = np.radians(patch.drift_heading_deg)
+            x, y = way * np.sin(heading_rad), way * np.cos(heading_rad)
+        over[number] = np.hypot(east - x, north - y) <= patch.radius_km + choices.patch_margin_km
+    return over
+
+
+def in_claim(
+    claim: SlopeClaim, places: Any, times: Any, limits: Thresholds, choices: JudgeChoices
+) -> tuple[Bytes, Floats]:
+    """(T, P) state that a confirmed slope between receivers gives to places near its witnesses, and the slope."""
+    state = np.zeros((len(times), len(places.lat)), dtype=np.uint8)
+    steepest = np.zeros(state.shape)
+    if len(claim.cell_time) == 0:
+        return state, steepest
+    each = state_of_slope(claim.cell_slope, claim.cell_sigma, limits, choices.sigmas)
+    reach = np.timedelta64(round(choices.claim_reach_s / 2.0 * 1e9), "ns")
+    half_deg = choices.claim_reach_km / 111.2
+    for number in range(len(times)):
+        now = np.flatnonzero(np.abs(claim.cell_time - times[number]) <= reach)
+        if len(now) == 0:
+            continue
+        dy = places.lat[:, None] - claim.cell_lat[None, now]
+        turn = (places.lon[:, None] - claim.cell_lon[None, now] + 180.0) % 360.0 - 180.0
+        near = np.hypot(dy, turn * np.cos(np.radians(places.lat))[:, None]) <= half_deg
+        state[number] = np.where(near, each[now][None, :], 0).max(axis=1)
+        steepest[number] = np.where(near, claim.cell_slope[now][None, :], 0.0).max(axis=1)
+    return state, steepest
+
+
+def _warnings(
+    times: Any, places: Any, slopes: Slopes, fronts: Fronts, patches: Patches, limits: Thresholds,
+    choices: JudgeChoices, reasons: bool,
+) -> tuple[Bytes, list[list[str]]]:  # fmt: skip
+    """States (T, P) that confirmed fronts, patches and slopes give to places, 0 where none; and why, where wanted."""
+    state = np.zeros((len(times), len(places.lat)), dtype=np.uint8)
+    why = [["" for _ in range(len(times))] for _ in range(len(places.lat) if reasons else 0)]
+
+    def add(given: Bytes, sentence: Any) -> None:
+        if reasons:
+            for number, place in zip(*np.nonzero(given > state), strict=True):
+                why[place][number] = sentence(number, place)
+        np.maximum(state, given, out=state)
+
+    for front in fronts.fronts:
+        level = _front_state(front, limits)
+        if level >= STRAINED:
+            text = front_sentence(front)
+            add(np.where(in_front(front, places, times, choices), level, 0).astype(np.uint8), lambda n, p, t=text: t)
+    for patch in patches.patches:
+        level = _patch_state(patch, limits)
+        if level >= STRAINED:
+            text = patch_sentence(patch)
+            add(np.where(in_patch(patch, places, times, choices), level, 0).astype(np.uint8), lambda n, p, t=text: t)
+    for claim in slopes.claims:
+        if claim.confirmed:
+            given, steepest = in_claim(claim, places, times, limits, choices)
+            given[given < STRAINED] = 0
+            add(given, lambda n, p, c=claim, s=steepest: f"{s[n, p]:.0f} mm/km between receivers nearby: {c.why}")
+    return state, why
+
+
+def _reached(times: Any, places: Any, fronts: Fronts, patches: Patches, choices: JudgeChoices) -> Bools:
+    """(T, P) whether a confirmed front or patch is over places: what the map shows there needs no flag of its own."""
+    over: Bools = np.zeros((len(times), len(places.lat)), dtype=bool)
+    wide = replace(choices, front_margin_km=100.0, front_beside_km=200.0, patch_margin_km=75.0)
+    for front in fronts.fronts:
+        over |= in_front(front, places, times, wide)
+    for patch in patches.patches:
+        if patch.confirmed:
+            over |= in_patch(patch, places, times, wide)
+    return over
+
+
+# ---------------------------------------------------------------------------------------------- sites
+
+
+def _judge_sites(
+    fields: Fields, state: Bytes, by_field: Bytes, slopes: Slopes, fronts: Fronts, patches: Patches, region: Region,
+    choices: JudgeChoices,
+) -> tuple[Bytes, tuple[tuple[str, ...], ...]]:  # fmt: skip
+    """States (T, sites) and reasons: by the site's cell of the map and by what reaches the site itself."""
+    times, sites = fields.times, region.sites
+    if not sites:
+        return np.zeros((len(times), 0), dtype=np.uint8), ()
+    lat = np.array([site.lat for site in sites], dtype=np.float64)
+    lon = np.array([site.lon for site in sites], dtype=np.float64)
+    warned, why = _warnings(times, _Places(lat, lon), slopes, fronts, patches, region.thresholds, choices, reasons=True)
+    row, column, inside = nearest_cells(fields, lat, lon)
+    cell = np.where(inside[None, :], by_field[:, row, column], UNSEEN).astype(np.uint8)
+    states = np.maximum(cell, warned)
+    reasons = []
+    for number in range(len(sites)):
+        sentences = why[number]
+        for epoch in range(len(times)):
+            if warned[epoch, number] >= max(STRAINED, int(cell[epoch, number])):
+                continue
+            sentences[epoch] = _field_sentence(
+                fields, int(cell[epoch, number]), epoch, int(row[number]), int(column[number]),
+                bool(inside[number]), region.thresholds,
+            )  # fmt: skip
+        reasons.append(tuple(sentences))
+    return states, tuple(reasons)
+
+
+def nearest_cells(fields: Fields, lat: Floats, lon: Floats) -> tuple[Any, Any, Bools]:
+    """Row and column of the cell of each place, and whether the map reaches it."""
+    half_lat = 0.5 * abs(float(fields.lats[1] - fields.lats[0])) if len(fields.lats) > 1 else 0.5
+    half_lon = 0.5 * abs(float(fields.lons[1] - fields.lons[0])) if len(fields.lons) > 1 else 0.5
+    row = np.abs(lat[:, None] - fields.lats[None, :]).argmin(axis=1)
+    turn = np.abs((lon[:, None] - fields.lons[None, :] + 180.0) % 360.0 - 180.0)
+    column = turn.argmin(axis=1)
+    inside = np.abs(lat - fields.lats[row]) <= half_lat * 1.001
+    inside &= turn.min(axis=1) <= half_lon * 1.001
+    return row, column, np.asarray(inside)
+
+
+def _field_sentence(
+    fields: Fields, state: int, epoch: int, row: int, column: int, inside: bool, limits: Thresholds
+) -> str:
+    """Why the map gives this state; "" where corrections hold."""
+    if state == HOLDS:
+        return ""
+    if not inside:
+        return "outside the map: nothing can be said"
+    place = (epoch, row, column)
+    if state == UNSEEN:
+        if fields.support[place] == 0:
+            return "no line of sight passes near: nothing can be said"
+        sigma_m = float(fields.vtec_sigma[place]) * L1_M_PER_TECU
+        if np.isfinite(sigma_m) and sigma_m > limits.unseen_sigma_m:
+            return f"vertical delay known to {sigma_m:.1f} m only, {limits.unseen_sigma_m:.1f} m is needed"
+        return "too few lines of sight to tell the slope"
+    limit = limits.broken_mm_per_km if state == BROKEN else limits.strained_mm_per_km
+    return (
+        f"the map slopes by {float(fields.slope[place]):.0f} ± {float(fields.slope_sigma[place]):.0f} mm/km, "
+        f"the limit of {STATE_NAMES[state]} is {limit:g}"
+    )
+
+
+# ---------------------------------------------------------------------------------------------- flags
+
+
+def front_sentence(front: Front) -> str:
+    """A front in one sentence, with its numbers and their uncertainty."""
+    return (
+        f"front of {front.slope:.0f} ± {front.slope_sigma:.0f} mm/km over {front.width_km:.0f} km, moving toward "
+        f"{front.heading_deg:.0f} ± {front.heading_sigma_deg:.0f}° at {front.speed_m_s:.0f} ± "
+        f"{front.speed_sigma_m_s:.0f} m/s: {front.onsets} onsets on {len(front.receivers)} receivers and "
+        f"{len(front.satellites)} satellites agree"
+    )
+
+
+def patch_sentence(patch: Patch) -> str:
+    """A patch in one sentence, with what supports it."""
+    text = (
+        f"ragged content, index up to {patch.index_highest:.1f} TECU/min within {patch.radius_km:.0f} km: "
+        f"{patch.windows} windows on {len(patch.receivers)} receivers and {len(patch.satellites)} satellites"
+    )
+    if patch.slips or patch.losses:
+        text += f", {patch.slips} broken arcs, {patch.losses} lost signals"
+    if np.isfinite(patch.planar[0]):
+        verdict = "fails" if patch.planar[0] > patch.planar[1] else "passes"
+        text += f", planar fit {verdict} (chi-square {patch.planar[0]:.0f}, limit {patch.planar[1]:.0f})"
+    return text if patch.confirmed else f"unconfirmed: one receiver only, {text}"
+
+
+def _front_flag(front: Front, limits: Thresholds, number: int, arrivals: Sequence[Arrival]) -> Flag:
+    """A front as one flag, drawn by its track; how its forecasts fared is part of the evidence."""
+    middle = front.track[len(front.track) // 2] if front.track else (front.epoch, front.centre[0], front.centre[1])
+    own = [arrival for arrival in arrivals if arrival.front == number and arrival.came_true is not None]
+    text = front_sentence(front)
+    if own:
+        good = sum(1 for arrival in own if arrival.came_true)
+        text += f"; {good} of {len(own)} forecasts of its arrival came true within two sigmas"
+    return Flag(
+        start=front.start, end=front.end, lat=float(middle[1]), lon=float(middle[2]), kind="front",
+        slope_mm_per_km=front.slope, sigma_mm_per_km=front.slope_sigma, speed_m_s=front.speed_m_s,
+        heading_deg=front.heading_deg, state=STATE_NAMES[max(HOLDS, _front_state(front, limits))], evidence=text,
+        confirmed=front.confirmed, track=front.track,
+    )  # fmt: skip
+
+
+def _patch_flag(patch: Patch, limits: Thresholds) -> Flag:
+    return Flag(
+        start=patch.start, end=patch.end, lat=patch.lat, lon=patch.lon, kind="irregular", slope_mm_per_km=NOTHING,
+        sigma_mm_per_km=NOTHING, speed_m_s=patch.drift_m_s, heading_deg=patch.drift_heading_deg,
+        state=STATE_NAMES[_patch_state(patch, limits)], evidence=patch_sentence(patch), confirmed=patch.confirmed,
+    )  # fmt: skip
+
+
+def _fault_flag(fault: Fault) -> Flag:
+    return Flag(
+        start=fault.start, end=fault.end, lat=fault.lat, lon=fault.lon, kind="fault", slope_mm_per_km=NOTHING,
+        sigma_mm_per_km=NOTHING, speed_m_s=NOTHING, heading_deg=NOTHING, state=STATE_NAMES[UNSEEN],
+        evidence=fault.why, confirmed=True,
+    )  # fmt: skip
+
+
+def _claim_flags(
+    slopes: Slopes, fronts: Fronts, patches: Patches, limits: Thresholds, choices: JudgeChoices
+) -> list[Flag]:
+    """Slopes between receivers that no front or patch explains; of the unconfirmed the steepest few."""
+    flags: list[Flag] = []
+    doubtful: list[Flag] = []
+    for claim in slopes.claims:
+        if len(claim.cell_time) and claim.confirmed and _mostly_explained(claim, fronts, patches, choices):
+            continue
+        state = int(state_of_slope(np.array(claim.slope), np.array(claim.sigma), limits, choices.sigmas))
+        flag = Flag(
+            start=claim.start, end=claim.end, lat=claim.lat, lon=claim.lon, kind="slope",
+            slope_mm_per_km=claim.slope, sigma_mm_per_km=claim.sigma, speed_m_s=NOTHING, heading_deg=NOTHING,
+            state=STATE_NAMES[state if claim.confirmed else UNSEEN], evidence=claim.why, confirmed=claim.confirmed,
+        )  # fmt: skip
+        (flags if claim.confirmed else doubtful).append(flag)
+    doubtful.sort(key=lambda flag: -flag.slope_mm_per_km)
+    return flags + doubtful[: choices.most_unconfirmed]
+
+
+def _mostly_explained(claim: SlopeClaim, fronts: Fronts, patches: Patches, choices: JudgeChoices) -> bool:
+    """Whether two thirds of a claim's cells lie under a front or patch."""
+    places = _Places(claim.cell_lat, claim.cell_lon)
+    wide = replace(choices, front_margin_km=150.0, front_beside_km=200.0, patch_margin_km=75.0)
+    under = np.zeros(len(claim.cell_lat), dtype=bool)
+    moments = np.unique(claim.cell_time)
+    at = np.searchsorted(moments, claim.cell_time)
+    for front in fronts.fronts:
+        under |= in_front(front, places, moments, wide)[at, np.arange(len(at))]
+    for patch in patches.patches:
+        if patch.confirmed:
+            under |= in_patch(patch, places, moments, wide)[at, np.arange(len(at))]
+    return bool(under.mean() >= 2.0 / 3.0)
+
+
+def _field_flags(
+    fields: Fields, by_field: Bytes, explained: Bools, slopes: Slopes, choices: JudgeChoices
+) -> list[Flag]:
+    """Stretches of steep map that nothing else explains, joined over space and time."""
+    steep = (by_field >= STRAINED) & ~explained
+    marks, _ = label(steep, structure=np.ones((3, 3, 3)))
+    flags = []
+    step = fields.times[1] - fields.times[0] if len(fields.times) > 1 else np.timedelta64(300, "s")
+    for number, box in enumerate(find_objects(marks), start=1):
+        member = marks[box] == number
+        if member.sum() < choices.least_cells:
+            continue
+        height = np.where(member, fields.slope[box] - choices.sigmas * fields.slope_sigma[box], -np.inf)
+        peak = np.unravel_index(int(np.argmax(height)), height.shape)
+        at = tuple(part.start + where for part, where in zip(box, peak, strict=True))
+        start, end = fields.times[box[0].start], fields.times[box[0].stop - 1] + step
+        agree = [
+            claim for claim in slopes.claims
+            if claim.confirmed and claim.start <= end and claim.end >= start
+            and _near(claim, float(fields.lats[at[1]]), float(fields.lons[at[2]]))
+        ]  # fmt: skip
+        text = f"the map is steep over {int(member.any(axis=0).sum())} cells"
+        text += f"; between receivers {agree[0].why}" if agree else "; unconfirmed: no receivers nearby witness it"
+        flags.append(Flag(
+            start=start, end=end, lat=float(fields.lats[at[1]]), lon=float(fields.lons[at[2]]), kind="slope",
+            slope_mm_per_km=float(fields.slope[at]), sigma_mm_per_km=float(fields.slope_sigma[at]),
+            speed_m_s=NOTHING, heading_deg=NOTHING, state=STATE_NAMES[int(by_field[box][member].max())],
+            evidence=text, confirmed=bool(agree),
+        ))  # fmt: skip
+    return flags
+
+
+def _near(claim: SlopeClaim, lat: float, lon: float) -> bool:
+    turn = (claim.cell_lon - lon + 180.0) % 360.0 - 180.0
+    if len(turn) == 0:
+        return False
+    return bool((np.hypot(claim.cell_lat - lat, turn * np.cos(np.radians(lat))) * 111.2).min() <= 300.0)
+
+
+def next_arrivals(fronts: Fronts, region: Region, now: np.datetime64, horizon_s: float = 3600.0) -> list[Arrival]:
+    """When the fronts seen so far reach the region's sites within the hour after `now`, with the spread."""
+    rows = []
+    for number, front in enumerate(fronts.fronts):
+        for site in region.sites:
+            moment, sigma = expected_at(front, site.lat, site.lon)
+            if not np.isnat(moment) and now < moment <= now + np.timedelta64(round(horizon_s), "s"):
+                rows.append(Arrival(number, site.name, now, moment, sigma, np.datetime64("NaT"), None))
+    return rows
