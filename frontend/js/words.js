@@ -32,6 +32,7 @@ export const WORDS = {
     "Planning aid, not for navigation. Official notices and the service provider decide.",
   simulated: "Simulated data: an invented network, invented days. Nothing here happened.",
   loadingDay: "Opening the day …",
+  loadingMap: "Fetching this hour …",
   loadingReading: "Reading the archive at this place …",
   emptyArchive: "The archive holds no day yet.",
   emptyArchiveHow: "Process one with “skylag day”, or run “skylag demo” for the invented sample days.",
@@ -41,6 +42,7 @@ export const WORDS = {
   noFlagsNow: "no flag at this time",
   noSites: "No sites are named for this region; the strip shows the worst state of the map.",
   offline: "The page cannot reach the service on this machine. Is it still running?",
+  strangeAnswer: "The service gave an answer this page does not understand",
   tryAgain: "Try again",
   sigma: "± is one standard deviation.",
 };
@@ -180,27 +182,6 @@ export function agoText(ms) {
   const hours = Math.round(minutes / 60);
   if (hours < 36) return `${hours} hours ago`;
   return `${Math.round(hours / 24)} days ago`;
-}
-
-/**
- * The sentence that answers "do corrections hold here?".
- * @param {{state: StateName, slope: number, slopeSigma: number, reason?: string}} reading
- */
-export function leadSentence(reading) {
-  const steep = withSigma(reading.slope, reading.slopeSigma, "mm per km", 0);
-  const known = Number.isFinite(reading.slope);
-  switch (reading.state) {
-    case "holds":
-      return known ? `Corrections hold here. The delay changes by ${steep}.` : "Corrections hold here.";
-    case "strained":
-      return known
-        ? `Corrections are strained here: the delay changes by ${steep}.`
-        : "Corrections are strained here.";
-    case "broken":
-      return known ? `Corrections are broken here: the delay changes by ${steep}.` : "Corrections are broken here.";
-    default:
-      return "Not enough data to say what holds here. Do not take silence for good news.";
-  }
 }
 
 /**

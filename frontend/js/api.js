@@ -1,0 +1,302 @@
+/**
+ * Every address of the service and every fetch: JSON in, typed arrays and milliseconds (UTC) out.
+ * Never draws, never keeps: what is wanted twice is kept by the caller.
+ */
+
+import { WORDS } from "./words.js";
+
+/**
+ * @typedef {{region: string, day: string, simulated: boolean}} DayEntry
+ * @typedef {{name: string, lat: number, lon: number, kind: string}} Site
+ * @typedef {object} Flag
+ * @property {number} start  ms UTC
+ * @property {number} end
+ * @property {number} lat
+ * @property {number} lon
+ * @property {"slope"|"front"|"irregular"|"fault"} kind
+ * @property {number} slope  mm/km, NaN where it has none
+ * @property {number} sigma
+ * @property {number} speed  m/s
+ * @property {number} heading  degrees, toward
+ * @property {import("./colour.js").StateName} state
+ * @property {string} evidence
+ * @property {boolean} confirmed
+ * @property {{time: number, lat: number, lon: number}[]} track
+ * @property {number} [distanceKm]
+ */
+/**
+ * @typedef {object} Day
+ * @property {string} day
+ * @property {{key: string, name: string, south: number, north: number, west: number, east: number, timezone: string,
+ *   unseenSigma: number, thresholds: Record<string, number>}} region
+ * @property {number} start  00:00 UTC of the day, ms
+ * @property {number[]} times  epochs, ms UTC
+ * @property {{lats: Float64Array, lons: Float64Array}} grid
+ * @property {{delay: [number, number], uncertainty: [number, number], slope: [number, number]}} ends
+ * @property {Site[]} sites
+ * @property {{name: string, lat: number, lon: number}[]} receivers
+ * @property {Flag[]} flags
+ * @property {boolean} simulated
+ * @property {number} processed  ms UTC, 0 where not told
+ * @property {string[]} warnings
+ * @property {string} caution
+ */
+/**
+ * @typedef {object} Window
+ * @property {number[]} times
+ * @property {Float64Array} lats
+ * @property {Float64Array} lons
+ * @property {Record<"delay"|"uncertainty"|"slope"|"state", Float32Array|Uint8Array>} layers  flat (time, lat, lon)
+ */
+/**
+ * @typedef {object} SiteStates
+ * @property {number[]} times
+ * @property {{name: string, codes: number[], reasons: string[]}[]} rows
+ * @property {number} serial
+ * @property {(row: number, time: number) => import("./colour.js").StateName} stateOf
+ * @property {(row: number, time: number) => string} reasonOf
+ */
+/**
+ * @typedef {object} Reading
+ * @property {number} lat
+ * @property {number} lon
+ * @property {number} time
+ * @property {import("./colour.js").StateName} state
+ * @property {string} sentence
+ * @property {number} delay
+ * @property {number} delaySigma
+ * @property {number} slope
+ * @property {number} slopeSigma
+ * @property {number} slopeHeading  degrees toward which the delay grows, NaN where not known
+ * @property {number} support
+ * @property {Flag[]} flags  nearest first
+ */
+/**
+ * @typedef {{lat: number, lon: number, times: number[], delay: number[], sigma: number[], slope: number[],
+ *   slopeSigma: number[], state: import("./colour.js").StateName[]}} Series
+ */
+/** @typedef {{signal?: AbortSignal}} How */
+
+/** A failure the service put into words. */
+export class ServiceError extends Error {
+  /** @param {string} message @param {string} kind @param {number} status */
+  constructor(message, kind, status) {
+    super(message);
+    this.name = "ServiceError";
+    this.kind = kind;
+    this.status = status;
+  }
+}
+
+/** @param {string} address @param {How} [how] */
+async function ask(address, { signal } = {}) {
+  let answer;
+  try {
+    answer = await fetch(address, { signal, headers: { Accept: "application/json" } });
+  } catch (error) {
+    if (error.name === "AbortError") throw error;
+    throw new ServiceError(WORDS.offline, "Offline", 0);
+  }
+  const content = await answer.json().catch((error) => {
+    if (error.name === "AbortError") throw error;
+    return null;
+  });
+  if (!answer.ok || !content) {
+    throw new ServiceError(content?.error ?? `${WORDS.strangeAnswer} (${answer.status})`, content?.kind ?? "", answer.status);
+  }
+  return content;
+}
+
+const milliseconds = (text) => Date.parse(text);
+const number = (value) => (value === null || value === undefined ? NaN : value);
+const numbers = (values) => values.map(number);
+const instant = (ms) => encodeURIComponent(new Date(ms).toISOString());
+const dayAddress = (region, day) => `/api/days/${encodeURIComponent(region)}/${encodeURIComponent(day)}`;
+
+/**
+ * An array as the service packs it: dtype, shape, base64 of little-endian bytes.
+ * @param {{dtype: "float32"|"uint8"|"uint16", base64: string}} packed
+ */
+export function unpack({ dtype, base64 }) {
+  const text = atob(base64);
+  const bytes = new Uint8Array(text.length);
+  for (let i = 0; i < text.length; i++) bytes[i] = text.charCodeAt(i);
+  if (dtype === "uint8") return bytes;
+  const view = new DataView(bytes.buffer);
+  if (dtype === "uint16") return Uint16Array.from({ length: bytes.length / 2 }, (_, i) => view.getUint16(2 * i, true));
+  return Float32Array.from({ length: bytes.length / 4 }, (_, i) => view.getFloat32(4 * i, true));
+}
+
+/** @returns {Flag} */
+function flagOf(raw) {
+  return {
+    start: milliseconds(raw.start_utc),
+    end: milliseconds(raw.end_utc),
+    lat: number(raw.lat_deg),
+    lon: number(raw.lon_deg),
+    kind: raw.kind,
+    slope: number(raw.slope_mm_per_km),
+    sigma: number(raw.sigma_mm_per_km),
+    speed: number(raw.speed_m_s),
+    heading: number(raw.heading_deg),
+    state: raw.state,
+    evidence: raw.evidence,
+    confirmed: raw.confirmed,
+    track: (raw.track ?? []).map(([time, lat, lon]) => ({ time: milliseconds(time), lat, lon })),
+    distanceKm: number(raw.distance_km),
+  };
+}
+
+/** Stored days, newest first. @param {How} [how] @returns {Promise<DayEntry[]>} */
+export async function days(how) {
+  const { days: entries } = await ask("/api/days", how);
+  return entries.map(({ region, day: date, simulated }) => ({ region, day: date, simulated }));
+}
+
+/** The facts of a day, with its flags. @param {string} region @param {string} date @param {How} [how] @returns {Promise<Day>} */
+export async function day(region, date, how) {
+  const [raw, flags] = await Promise.all([
+    ask(dayAddress(region, date), how),
+    ask(`${dayAddress(region, date)}/flags`, how),
+  ]);
+  return {
+    day: raw.day,
+    region: {
+      key: region,
+      name: raw.region.name,
+      south: raw.region.south,
+      north: raw.region.north,
+      west: raw.region.west,
+      east: raw.region.east,
+      timezone: raw.region.timezone,
+      unseenSigma: raw.region.thresholds.unseen_sigma_m,
+      thresholds: raw.region.thresholds,
+    },
+    start: Date.parse(`${raw.day}T00:00:00Z`),
+    times: raw.times_utc.map(milliseconds),
+    grid: { lats: Float64Array.from(raw.grid.lats), lons: Float64Array.from(raw.grid.lons) },
+    ends: { delay: raw.scales.vertical_delay, uncertainty: raw.scales.vertical_delay_sigma, slope: raw.scales.slope },
+    sites: raw.sites,
+    receivers: raw.receivers,
+    flags: flags.flags.map(flagOf).sort((a, b) => a.start - b.start),
+    simulated: raw.simulated,
+    processed: raw.saved_at_utc ? milliseconds(raw.saved_at_utc) : 0,
+    warnings: raw.warnings,
+    caution: raw.caution,
+  };
+}
+
+/**
+ * Maps with from <= time < to.
+ * @param {string} region @param {string} date @param {number} from @param {number} to @param {How} [how]
+ * @returns {Promise<Window>}
+ */
+export async function fields(region, date, from, to, how) {
+  const layers = "vertical_delay,vertical_delay_sigma,slope,state";
+  const raw = await ask(`${dayAddress(region, date)}/fields?from=${instant(from)}&to=${instant(to)}&layers=${layers}`, how);
+  return {
+    times: raw.times_utc.map(milliseconds),
+    lats: Float64Array.from(raw.lats),
+    lons: Float64Array.from(raw.lons),
+    layers: {
+      delay: unpack(raw.layers.vertical_delay),
+      uncertainty: unpack(raw.layers.vertical_delay_sigma),
+      slope: unpack(raw.layers.slope),
+      state: unpack(raw.layers.state),
+    },
+  };
+}
+
+/** Pierce points at a time. @param {string} region @param {string} date @param {number} time @param {How} [how] */
+export async function rays(region, date, time, how) {
+  const raw = await ask(`${dayAddress(region, date)}/rays?time=${instant(time)}`, how);
+  return raw.pierce_lat.map((lat, i) => ({ lat, lon: raw.pierce_lon[i], elevation: raw.elevation[i] }));
+}
+
+/**
+ * What is known at a place and time.
+ * @param {string} region @param {string} date @param {[number, number]} place @param {number} time @param {How} [how]
+ * @returns {Promise<Reading>}
+ */
+export async function reading(region, date, [lat, lon], time, how) {
+  const raw = await ask(`${dayAddress(region, date)}/reading?lat=${lat}&lon=${lon}&time=${instant(time)}`, how);
+  const [east, north] = [number(raw.slope_east), number(raw.slope_north)];
+  return {
+    lat: raw.lat,
+    lon: raw.lon,
+    time: milliseconds(raw.time_utc),
+    state: raw.state,
+    sentence: raw.sentence,
+    delay: number(raw.vertical_delay),
+    delaySigma: number(raw.vertical_delay_sigma),
+    slope: number(raw.slope),
+    slopeSigma: number(raw.slope_sigma),
+    slopeHeading: ((Math.atan2(east, north) * 180) / Math.PI + 360) % 360,
+    support: number(raw.support),
+    flags: raw.flags.map(flagOf),
+  };
+}
+
+/**
+ * The day at a place.
+ * @param {string} region @param {string} date @param {[number, number]} place @param {How} [how]
+ * @returns {Promise<Series>}
+ */
+export async function series(region, date, [lat, lon], how) {
+  const raw = await ask(`${dayAddress(region, date)}/series?lat=${lat}&lon=${lon}`, how);
+  const seen = (values) => values.map((v, i) => (raw.state[i] === "unseen" ? NaN : number(v)));
+  return {
+    lat,
+    lon,
+    times: raw.times_utc.map(milliseconds),
+    delay: seen(raw.vertical_delay),
+    sigma: seen(raw.vertical_delay_sigma),
+    slope: seen(raw.slope),
+    slopeSigma: seen(raw.slope_sigma),
+    state: raw.state,
+  };
+}
+
+let serial = 0;
+
+/** States of the sites through a day. @param {string} region @param {string} date @param {How} [how] @returns {Promise<SiteStates>} */
+export async function siteStates(region, date, how) {
+  const raw = await ask(`${dayAddress(region, date)}/site-states`, how);
+  const times = raw.times_utc.map(milliseconds);
+  const rows = raw.sites.map((site, i) => ({ name: site.name, codes: raw.codes[i], reasons: raw.reasons[i] ?? [] }));
+  const half = times.length > 1 ? (times[1] - times[0]) / 2 : Infinity;
+  /** The epoch that holds a time, or -1 where no epoch is near: then nothing is known. */
+  const epoch = (time) => {
+    let best = -1;
+    for (let i = 0; i < times.length; i++) {
+      if (Math.abs(times[i] - time) <= half && (best < 0 || Math.abs(times[i] - time) < Math.abs(times[best] - time))) best = i;
+    }
+    return best;
+  };
+  serial += 1;
+  return {
+    times,
+    rows,
+    serial,
+    stateOf: (row, time) => raw.states[rows[row]?.codes[epoch(time)] ?? 0],
+    reasonOf: (row, time) => rows[row]?.reasons[epoch(time)] ?? "",
+  };
+}
+
+/**
+ * Coast lines within a box, as lines of lat, lon.
+ * @param {{south: number, north: number, west: number, east: number}} box @param {string} region @param {How} [how]
+ * @returns {Promise<[number, number][][]>}
+ */
+export async function coast({ south, north, west, east }, region, how) {
+  const raw = await ask(
+    `/api/coast?south=${south}&north=${north}&west=${west}&east=${east}&region=${encodeURIComponent(region)}`,
+    how,
+  );
+  return raw.lines.map((line) => line.lat.map((lat, i) => [lat, line.lon[i]]));
+}
+
+/** Address of the day's flags as a file. @param {string} region @param {string} date @param {"csv"|"geojson"} kind */
+export function flagsFile(region, date, kind) {
+  return `${dayAddress(region, date)}/flags.${kind}`;
+}

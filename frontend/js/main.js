@@ -1,0 +1,289 @@
+/**
+ * Makes the state, hands each panel its element, and brings what the state asks for. The only file that acts when
+ * loaded. One direction: URL -> state -> api -> scene -> panels; panels change the state and never call each other.
+ */
+
+import * as api from "./api.js";
+import { frameOf } from "./figures/map.js";
+import { nearest } from "./figures/strip.js";
+import { ChartPanel } from "./panels/chart.js";
+import { ClockPanel } from "./panels/clock.js";
+import { FlagsPanel } from "./panels/flags.js";
+import { LegendPanel } from "./panels/legend.js";
+import { MastheadPanel } from "./panels/masthead.js";
+import { trouble } from "./panels/parts.js";
+import { ReadingPanel } from "./panels/reading.js";
+import { SeriesPanel } from "./panels/series.js";
+import { State } from "./state.js";
+import { WORDS } from "./words.js";
+
+/**
+ * What the panels draw from.
+ * @typedef {object} Scene
+ * @property {import("./state.js").View} view
+ * @property {import("./api.js").Day} day
+ * @property {number} time  ms UTC, an epoch of the day
+ * @property {import("./api.js").Window|null} fields  the hour that holds `time`
+ * @property {number} index  of `time` in `fields`
+ * @property {import("./api.js").SiteStates|null} siteStates
+ * @property {{lat: number, lon: number, elevation: number}[]} rays
+ * @property {[number, number][][]} coast
+ * @property {import("./colour.js").Theme} theme
+ */
+
+const at = (id) => /** @type {any} */ (document.getElementById(id));
+
+const state = new State({ history, location, listen: (type, f) => window.addEventListener(type, f) });
+
+const chart = new ChartPanel({ map: at("map"), title: at("chart-title"), time: at("chart-time"), note: at("map-note") }, state);
+const legend = new LegendPanel(at("legend"), state);
+const clock = new ClockPanel(
+  { strip: at("strip"), names: at("strip-names"), range: at("time"), text: at("time-text"), reason: at("strip-reason"), hint: at("strip-help") },
+  state,
+);
+const reading = new ReadingPanel(
+  { answer: at("answer"), form: at("place-form"), site: at("place-site"), lat: at("place-lat"), lon: at("place-lon"), error: at("place-error") },
+  state,
+);
+const series = new SeriesPanel({ plot: at("series"), table: at("series-table") });
+const flags = new FlagsPanel(at("flag-table"), state);
+const masthead = new MastheadPanel(
+  {
+    name: at("region-name"), day: at("day"), before: at("day-before"), after: at("day-after"), clock: at("clock"), layer: at("layer"),
+    theme: at("theme"), simulated: at("simulated"), age: at("age"), origin: at("origin"), caution: at("caution"),
+    csv: at("flags-csv"), geojson: at("flags-geojson"), png: at("map-png"), announce: at("announce"),
+  },
+  state,
+  { picture: () => chart.picture(), themeChanged: () => showAll() },
+);
+
+/** @type {import("./api.js").DayEntry[]} */ let days = [];
+/** @type {Scene|null} */ let scene = null;
+/** @type {Map<number, Promise<import("./api.js").Window>>} */ const hours = new Map();
+/** @type {Record<string, AbortController>} */ const running = {};
+
+/** A signal for one kind of request; asking again ends the one before, so no reply for an old state is drawn. */
+function only(kind) {
+  running[kind]?.abort();
+  running[kind] = new AbortController();
+  return running[kind].signal;
+}
+
+const gone = (error) => error?.name === "AbortError";
+
+function showAll() {
+  if (!scene) return;
+  scene.theme = masthead.theme;
+  for (const panel of [masthead, chart, legend, clock, reading, series, flags]) panel.show(scene);
+}
+
+/** The first epoch to look at when the link names none: the middle of the day's worst flag, else the day's middle. */
+function firstTime(day) {
+  const rank = { broken: 3, strained: 2, holds: 1, unseen: 0 };
+  const worst = [...day.flags].sort((a, b) => (rank[b.state] ?? 0) - (rank[a.state] ?? 0) || (b.slope || 0) - (a.slope || 0))[0];
+  const wish = worst ? (worst.start + worst.end) / 2 : (day.times[0] + day.times[day.times.length - 1]) / 2;
+  return day.times[nearest(day.times, wish)];
+}
+
+/** The first place to read when the link names none: the first site, else the middle of the region. */
+function firstPlace(day) {
+  const site = day.sites[0];
+  const { south, north, west, east } = day.region;
+  return site ? [site.lat, site.lon] : [Number(((south + north) / 2).toFixed(3)), Number(((west + east) / 2).toFixed(3))];
+}
+
+async function start() {
+  try {
+    days = await api.days({ signal: only("days") });
+  } catch (error) {
+    if (!gone(error)) fail(error, start);
+    return;
+  }
+  masthead.days(days);
+  if (!days.length) {
+    empty();
+    return;
+  }
+  choose();
+  await loadDay();
+}
+
+/** Fill what the link leaves open: the newest day of the first region. */
+function choose() {
+  const { view } = state;
+  const region = days.some((d) => d.region === view.region) ? view.region : days[0].region;
+  const here = days.filter((d) => d.region === region);
+  const day = here.some((d) => d.day === view.day) ? view.day : here.reduce((a, b) => (b.day > a.day ? b : a)).day;
+  state.change({ region, day }, { step: "none" });
+}
+
+async function loadDay() {
+  const { region, day } = state.view;
+  const signal = only("day");
+  for (const kind of ["reading", "series", "rays"]) running[kind]?.abort();
+  hours.clear();
+  chart.note(scene ? WORDS.loadingDay : "");
+  try {
+    const [found, siteStates] = await Promise.all([api.day(region, day, { signal }), api.siteStates(region, day, { signal })]);
+    const sameRegion = scene?.day.region.key === region;
+    const view = state.view;
+    const time = view.minute === null ? firstTime(found) : found.times[nearest(found.times, found.start + view.minute * 60000)];
+    scene = { view, day: found, time, fields: null, index: 0, siteStates, rays: [], coast: sameRegion ? scene.coast : [], theme: masthead.theme };
+    state.change(
+      { minute: Math.round((time - found.start) / 60000), place: view.place ?? /** @type {[number, number]} */ (firstPlace(found)) },
+      { step: "none" },
+    );
+    scene.view = state.view;
+    at("main").dataset.loading = "false";
+    showAll();
+    await Promise.all([loadFields(), sameRegion ? null : loadCoast(signal), loadPlace(), loadRays()]);
+  } catch (error) {
+    if (!gone(error)) fail(error, loadDay);
+  }
+}
+
+/** A chart without its coast still answers; it says that the lines are missing. */
+async function loadCoast(signal) {
+  const mine = scene;
+  try {
+    mine.coast = await api.coast(frameOf(mine.day.grid), mine.day.region.key, { signal });
+    if (mine === scene) chart.show(scene);
+  } catch (error) {
+    if (!gone(error)) chart.note(error.message);
+  }
+}
+
+/** The maps of the hour that holds the time; an hour once fetched stays until the day changes. */
+function hourOf(time) {
+  const { day, view } = scene;
+  const first = day.times[0] - 1000;
+  const number = Math.floor((time - first) / 3600000);
+  let promise = hours.get(number);
+  if (!promise) {
+    const from = first + number * 3600000;
+    promise = api.fields(view.region, view.day, from, from + 3600000);
+    hours.set(number, promise);
+    promise.catch(() => hours.delete(number));
+  }
+  return promise;
+}
+
+async function loadFields() {
+  const mine = scene;
+  const wanted = scene.time;
+  try {
+    const slow = setTimeout(() => mine === scene && wanted === scene.time && chart.note(WORDS.loadingMap), 250);
+    const fields = await hourOf(wanted);
+    clearTimeout(slow);
+    if (mine !== scene || wanted !== scene.time) return;
+    chart.note("");
+    scene.fields = fields;
+    scene.index = nearest(fields.times, wanted);
+    chart.show(scene);
+    // The hours to either side come while the reader looks.
+    const { day } = scene;
+    for (const away of [3600000, -3600000]) {
+      const next = wanted + away;
+      if (next >= day.times[0] && next <= day.times[day.times.length - 1]) hourOf(next).catch(() => {});
+    }
+  } catch (error) {
+    if (mine === scene && wanted === scene.time) chart.note(error.message);
+  }
+}
+
+let readingSoon = 0;
+
+async function loadReading() {
+  clearTimeout(readingSoon);
+  const { view, time } = scene;
+  if (!view.place) return;
+  reading.wait();
+  try {
+    const found = await api.reading(view.region, view.day, view.place, time, { signal: only("reading") });
+    if (scene && scene.time === time) reading.answer(found, scene);
+  } catch (error) {
+    if (!gone(error)) reading.fail(error, loadReading);
+  }
+}
+
+async function loadSeries() {
+  const { view } = scene;
+  if (!view.place) {
+    series.give(null);
+    return;
+  }
+  try {
+    series.give(await api.series(view.region, view.day, view.place, { signal: only("series") }));
+  } catch (error) {
+    if (!gone(error)) {
+      series.give(null);
+      at("announce").textContent = error.message;
+    }
+  }
+}
+
+const loadPlace = () => Promise.all([loadReading(), loadSeries()]);
+
+async function loadRays() {
+  const { view, time } = scene;
+  if (!view.show.has("rays")) {
+    running.rays?.abort();
+    scene.rays = [];
+    return;
+  }
+  try {
+    const rays = await api.rays(view.region, view.day, time, { signal: only("rays") });
+    if (scene.time !== time) return;
+    scene.rays = rays;
+    chart.show(scene);
+  } catch (error) {
+    if (!gone(error)) chart.note(error.message);
+  }
+}
+
+function fail(error, again) {
+  at("main").dataset.loading = "false";
+  at("answer").replaceChildren(trouble(error, () => again()));
+  chart.note("");
+}
+
+function empty() {
+  at("main").dataset.loading = "false";
+  at("region-name").textContent = WORDS.emptyArchive;
+  at("answer").replaceChildren();
+  at("answer").append(Object.assign(document.createElement("p"), { textContent: `${WORDS.emptyArchive} ${WORDS.emptyArchiveHow}` }));
+}
+
+state.addEventListener("change", (event) => {
+  const changed = /** @type {CustomEvent<Set<string>>} */ (event).detail;
+  if (!scene || !days.length) return;
+  if (changed.has("region") || changed.has("day")) {
+    loadDay();
+    return;
+  }
+  scene.view = state.view;
+  if (changed.has("minute")) {
+    const { day } = scene;
+    scene.time = state.view.minute === null ? firstTime(day) : day.times[nearest(day.times, day.start + state.view.minute * 60000)];
+    const held = scene.fields?.times.findIndex((ms) => ms === scene.time) ?? -1;
+    if (held >= 0) scene.index = held;
+    else {
+      scene.index = -1;
+      loadFields();
+    }
+    if (scene.view.show.has("rays")) loadRays();
+    clearTimeout(readingSoon);
+    running.reading?.abort();
+    at("answer").setAttribute("aria-busy", "true");
+    readingSoon = window.setTimeout(loadReading, 120);
+  }
+  if (changed.has("show")) loadRays();
+  if (changed.has("place")) loadPlace();
+  showAll();
+});
+
+window.addEventListener("error", (event) => {
+  at("announce").textContent = event.message;
+});
+
+start();

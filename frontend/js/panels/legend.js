@@ -1,0 +1,109 @@
+/**
+ * The legend beside the map: colours of the layer, patterns of the states, the drawn signs, and what to show.
+ */
+
+import { legendFigure } from "../figures/legend.js";
+import { KIND_WORDS, LAYER_WORDS, STATE_WORDS } from "../words.js";
+import { draft, make, swatch } from "./parts.js";
+
+/** The signs of the chart in small. */
+const SIGN_PATHS = {
+  front: [["sign", "M2 14h30"], ["sign-thin", "M5 14v-7M10 14v-7M15 14v-7M20 14v-7M25 14v-7M30 14v-7"]],
+  irregular: [["sign", "M3 5q3.5-4 7 0t7 0t7 0t7 0M3 10q3.5-4 7 0t7 0t7 0t7 0M3 15q3.5-4 7 0t7 0t7 0t7 0"]],
+  slope: [["sign", "M4 15h26v-11z"]],
+  fault: [["sign", "M3 11h13l3-7M15 14l3-6h13"]],
+};
+
+export class LegendPanel {
+  #element;
+  #state;
+  #shown = "";
+
+  /** @param {HTMLElement} element @param {import("../state.js").State} state */
+  constructor(element, state) {
+    this.#element = element;
+    this.#state = state;
+    element.addEventListener("change", this.#toggle);
+  }
+
+  /** @param {import("../main.js").Scene} scene */
+  show({ view, day, theme }) {
+    const fingerprint = JSON.stringify([view.layer, day.ends, theme, [...view.show]]);
+    if (fingerprint === this.#shown) return;
+    this.#shown = fingerprint;
+    const focused = this.#element.contains(document.activeElement) ? document.activeElement.name : "";
+    const { title, unit } = LAYER_WORDS[view.layer];
+    const colours = make("section", {}, make("h3", { text: unit ? `${title}, ${unit}` : title }));
+    const states = make("ul", { class: "key" });
+    if (view.layer === "state") {
+      for (const state of ["holds", "strained", "broken", "unseen"]) states.append(stateRow(state));
+    } else {
+      colours.append(rampBar(legendFigure(view.layer, day.ends[view.layer], theme)));
+      states.append(stateRow("unseen"));
+    }
+    colours.append(states);
+    const signs = make("section", {}, make("h3", { text: "Flags" }));
+    const list = make("ul", { class: "key" });
+    for (const [kind, words] of Object.entries(KIND_WORDS)) {
+      list.append(make("li", {}, sign(kind), make("span", { text: kind === "front" ? `${words.name}; the comb points where it goes` : words.name })));
+    }
+    signs.append(list);
+    const show = make("section", {}, make("h3", { text: "Show" }));
+    const choices = make("ul", { class: "key" });
+    const rows = [
+      ["receivers", "Receivers", receiverSign()],
+      ["sites", "Sites", siteSign()],
+      ["rays", "Pierce points, larger when higher", raySign()],
+      ["veil", "Fade the delay where it is unsure", veilSign()],
+    ];
+    for (const [name, words, drawn] of rows) {
+      choices.append(
+        make("li", { class: "toggle" }, drawn, make("label", {}, make("input", { type: "checkbox", name, checked: view.show.has(name) }), make("span", { text: words }))),
+      );
+    }
+    show.append(choices);
+    this.#element.replaceChildren(colours, signs, show);
+    if (focused) this.#element.querySelector(`input[name="${focused}"]`)?.focus();
+  }
+
+  close() {
+    this.#element.removeEventListener("change", this.#toggle);
+  }
+
+  #toggle = (event) => {
+    const show = new Set(this.#state.view.show);
+    if (event.target.checked) show.add(event.target.name);
+    else show.delete(event.target.name);
+    this.#state.change({ show });
+  };
+}
+
+function stateRow(state) {
+  const words = STATE_WORDS[state];
+  return make("li", {}, swatch(state), make("span", {}, `${words.name} `, make("small", { text: words.means })));
+}
+
+function rampBar({ colours, marks }) {
+  const bar = make("div", { class: "ramp-bar" });
+  bar.style.background = `linear-gradient(to top, ${colours.join(", ")})`;
+  const numbers = make("div", { class: "ramp-marks" });
+  for (const mark of marks) {
+    const text = make("span", { text: mark.text });
+    text.style.bottom = `${mark.part * 100}%`;
+    numbers.append(text);
+  }
+  return make("div", { class: "ramp" }, bar, numbers);
+}
+
+const drawnSign = (...parts) => draft("svg", { viewBox: "0 0 34 18", width: 34, height: 18, "aria-hidden": "true" }, ...parts);
+
+/** @param {string} kind */
+export function sign(kind) {
+  return drawnSign(...(SIGN_PATHS[kind] ?? []).map(([name, d]) => draft("path", { class: name, d })));
+}
+
+const receiverSign = () => drawnSign(draft("circle", { cx: 17, cy: 9, r: 4, fill: "currentColor" }));
+const siteSign = () => drawnSign(draft("path", { class: "sign-thin", d: "M13 1h8l4 4v8l-4 4h-8l-4-4v-8z" }));
+const raySign = () => drawnSign(...[[8, 1.5], [16, 2.5], [26, 3.6]].map(([cx, r]) => draft("circle", { cx, cy: 9, r, fill: "currentColor" })));
+const veilSign = () =>
+  drawnSign(...[0.9, 0.6, 0.35, 0.12].map((opacity, i) => draft("rect", { x: 1 + i * 8, y: 3, width: 8, height: 12, fill: "currentColor", opacity })));

@@ -1,0 +1,144 @@
+/**
+ * The head of the page and what surrounds the chart: region, day, clock, layer, day or night, exports, cautions.
+ */
+
+import * as api from "../api.js";
+import { agoText, dayText, LAYER_WORDS, WORDS, zoneName } from "../words.js";
+import { make } from "./parts.js";
+
+export class MastheadPanel {
+  #elements;
+  #state;
+  #days = [];
+  #actions;
+
+  /**
+   * @param {Record<string, any>} elements
+   * @param {import("../state.js").State} state
+   * @param {{picture: () => Promise<void>, themeChanged: () => void}} actions
+   */
+  constructor(elements, state, actions) {
+    this.#elements = elements;
+    this.#state = state;
+    this.#actions = actions;
+    elements.day.addEventListener("change", () => this.#choose(elements.day.value));
+    elements.before.addEventListener("click", () => this.#beside(-1));
+    elements.after.addEventListener("click", () => this.#beside(1));
+    elements.clock.addEventListener("change", (event) => state.change({ clock: event.target.value }));
+    elements.layer.addEventListener("change", (event) => state.change({ layer: event.target.value }));
+    elements.png.addEventListener("click", this.#picture);
+    elements.theme.addEventListener("click", this.#turn);
+    window.matchMedia("(prefers-color-scheme: dark)").addEventListener("change", this.#system);
+    this.#name();
+  }
+
+  /** @returns {import("../colour.js").Theme} */
+  get theme() {
+    return document.documentElement.dataset.theme === "night" ? "night" : "day";
+  }
+
+  /** @param {import("../api.js").DayEntry[]} days */
+  days(days) {
+    this.#days = days;
+    const { day } = this.#elements;
+    const regions = [...new Set(days.map((entry) => entry.region))];
+    const options = (region) =>
+      days
+        .filter((entry) => entry.region === region)
+        .sort((a, b) => (a.day < b.day ? 1 : -1))
+        .map((entry) => make("option", { value: `${entry.region}/${entry.day}`, text: dayText(entry.day) }));
+    day.replaceChildren(
+      ...(regions.length > 1
+        ? regions.map((region) => make("optgroup", { label: region }, ...options(region)))
+        : regions.flatMap(options)),
+    );
+    day.disabled = !days.length;
+  }
+
+  /** @param {import("../main.js").Scene} scene */
+  show({ view, day }) {
+    const { name, before, after, clock, layer, simulated, age, origin, csv, geojson } = this.#elements;
+    name.textContent = day.region.name;
+    document.title = `${LAYER_WORDS[view.layer].name}, ${day.region.name}, ${day.day} – Skylag`;
+    this.#elements.day.value = `${view.region}/${view.day}`;
+    before.disabled = !this.#neighbour(-1);
+    after.disabled = !this.#neighbour(1);
+    for (const input of clock.querySelectorAll("input")) input.checked = input.value === view.clock;
+    const zone = day.region.timezone;
+    clock.hidden = zone === "UTC";
+    clock.querySelector("input[value=local] + span").textContent = zoneName(zone);
+    for (const input of layer.querySelectorAll("input")) input.checked = input.value === view.layer;
+    this.#elements.caution.textContent = day.caution;
+    simulated.hidden = !day.simulated;
+    simulated.textContent = day.simulated ? WORDS.simulated : "";
+    age.textContent = day.processed ? `Results written ${agoText(Date.now() - day.processed)}.` : "";
+    origin.textContent = [day.receivers.length ? `${day.receivers.length} receivers.` : "", ...day.warnings.slice(0, 2)].filter(Boolean).join(" ");
+    csv.href = api.flagsFile(view.region, view.day, "csv");
+    geojson.href = api.flagsFile(view.region, view.day, "geojson");
+  }
+
+  close() {
+    window.matchMedia("(prefers-color-scheme: dark)").removeEventListener("change", this.#system);
+  }
+
+  #neighbour(step) {
+    const { region, day } = this.#state.view;
+    const list = this.#days.filter((entry) => entry.region === region).map((entry) => entry.day).sort();
+    return list[list.indexOf(day) + step] ?? null;
+  }
+
+  #beside(step) {
+    const day = this.#neighbour(step);
+    if (day) this.#state.change({ day });
+  }
+
+  #choose(value) {
+    const cut = value.lastIndexOf("/");
+    const region = value.slice(0, cut);
+    const day = value.slice(cut + 1);
+    this.#state.change(region === this.#state.view.region ? { day } : { region, day, place: null, minute: null });
+  }
+
+  #picture = async () => {
+    const { png, announce } = this.#elements;
+    png.disabled = true;
+    try {
+      await this.#actions.picture();
+    } catch (error) {
+      announce.textContent = error.message;
+    } finally {
+      png.disabled = false;
+    }
+  };
+
+  #turn = () => {
+    const next = this.theme === "night" ? "day" : "night";
+    try {
+      localStorage.setItem("skylag.theme", next);
+    } catch {
+      // A browser that keeps nothing still turns the page for this visit.
+    }
+    this.#set(next);
+  };
+
+  #system = (event) => {
+    try {
+      if (localStorage.getItem("skylag.theme")) return;
+    } catch {
+      // no choice kept: follow the system
+    }
+    this.#set(event.matches ? "night" : "day");
+  };
+
+  #set(theme) {
+    document.documentElement.dataset.theme = theme;
+    this.#name();
+    this.#actions.themeChanged();
+  }
+
+  #name() {
+    const night = this.theme === "night";
+    this.#elements.theme.setAttribute("aria-pressed", String(night));
+    this.#elements.theme.textContent = "Night";
+  }
+}

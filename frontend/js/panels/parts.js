@@ -1,0 +1,61 @@
+/**
+ * Small pieces several panels build: elements, state swatches, notices of trouble. Never fetches.
+ */
+
+import { STATE_WORDS, WORDS } from "../words.js";
+
+const SVG = "http://www.w3.org/2000/svg";
+
+/**
+ * @param {string} tag
+ * @param {Record<string, unknown>} [attributes]  "text" sets the text, functions become listeners
+ * @param {...(Node|string)} children
+ */
+export function make(tag, attributes = {}, ...children) {
+  const element = document.createElement(tag);
+  fill(element, attributes);
+  element.append(...children);
+  return element;
+}
+
+/** The same for drawings. @param {string} tag @param {Record<string, unknown>} [attributes] @param {...Node} children */
+export function draft(tag, attributes = {}, ...children) {
+  const element = document.createElementNS(SVG, tag);
+  fill(element, attributes);
+  element.append(...children);
+  return element;
+}
+
+function fill(element, attributes) {
+  for (const [name, value] of Object.entries(attributes)) {
+    if (value === undefined || value === null || value === false) continue;
+    if (name === "text") element.textContent = String(value);
+    else if (typeof value === "function") element.addEventListener(name, value);
+    else element.setAttribute(name, value === true ? "" : String(value));
+  }
+}
+
+/** A swatch with the colour and the pattern of a state. @param {string} state */
+export function swatch(state, width = 34, height = 18) {
+  return draft(
+    "svg",
+    { width, height, viewBox: `0 0 ${width} ${height}`, "aria-hidden": "true" },
+    draft("rect", { x: 0.5, y: 0.5, width: width - 1, height: height - 1, fill: `url(#pattern-${state})`, class: `edge-${state}` }),
+  );
+}
+
+/** A state's word with its swatch. @param {import("../colour.js").StateName} state */
+export function stateWord(state) {
+  return make("span", { class: "state-word" }, swatch(state, 22, 14), STATE_WORDS[state]?.name ?? state);
+}
+
+/**
+ * What went wrong, as the service says it, and the way out.
+ * @param {Error} error
+ * @param {(() => void)|null} again
+ */
+export function trouble(error, again = null) {
+  const box = make("div", { class: "trouble", role: "alert" }, make("p", { text: error.message || WORDS.offline }));
+  if (again) box.append(make("button", { type: "button", text: WORDS.tryAgain, click: again }));
+  return box;
+}

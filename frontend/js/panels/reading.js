@@ -1,0 +1,168 @@
+/**
+ * The reading of the chosen place: the sentence first, the numbers second, the evidence under "why".
+ */
+
+import { bothClocks, compass, countText, flagSentence, KIND_WORDS, latText, lonText, placeText, timeText, withSigma, WORDS } from "../words.js";
+import { make, stateWord, trouble } from "./parts.js";
+
+export class ReadingPanel {
+  #elements;
+  #state;
+  #day = null;
+  #open = false;
+
+  /**
+   * @param {{answer: HTMLElement, form: HTMLFormElement, site: HTMLSelectElement, lat: HTMLInputElement, lon: HTMLInputElement, error: HTMLElement}} elements
+   * @param {import("../state.js").State} state
+   */
+  constructor(elements, state) {
+    this.#elements = elements;
+    this.#state = state;
+    elements.form.addEventListener("submit", this.#submit);
+    elements.site.addEventListener("change", this.#site);
+  }
+
+  /** The controls that choose a place. @param {import("../main.js").Scene} scene */
+  show({ day, view }) {
+    const { site, lat, lon, answer, error } = this.#elements;
+    if (day !== this.#day) {
+      this.#day = day;
+      site.replaceChildren(
+        make("option", { value: "", text: "Chosen on the map" }),
+        ...day.sites.map((s, number) => make("option", { value: number, text: `${s.name} (${s.kind})` })),
+      );
+    }
+    const here = view.place;
+    const number = here ? day.sites.findIndex((s) => Math.abs(s.lat - here[0]) < 5e-4 && Math.abs(s.lon - here[1]) < 5e-4) : -1;
+    site.value = number < 0 ? "" : String(number);
+    if (here && document.activeElement !== lat) lat.value = latText(here[0]);
+    if (here && document.activeElement !== lon) lon.value = lonText(here[1]);
+    error.textContent = "";
+    if (!here) answer.replaceChildren(make("p", { class: "empty", text: WORDS.choosePlace }));
+  }
+
+  /** A new answer is on its way. */
+  wait() {
+    const { answer } = this.#elements;
+    answer.setAttribute("aria-busy", "true");
+    if (!answer.querySelector(".lead")) answer.replaceChildren(make("p", { class: "empty", text: WORDS.loadingReading }));
+  }
+
+  /**
+   * @param {import("../api.js").Reading} reading
+   * @param {import("../main.js").Scene} scene
+   */
+  answer(reading, { day, view, siteStates }) {
+    const { answer } = this.#elements;
+    const zone = day.region.timezone;
+    const site = day.sites.find((s) => Math.abs(s.lat - reading.lat) < 5e-4 && Math.abs(s.lon - reading.lon) < 5e-4);
+    const where = site ? `${site.name}, ${placeText(reading.lat, reading.lon)}` : placeText(reading.lat, reading.lon);
+    const number = site ? day.sites.indexOf(site) : -1;
+    const reason = number >= 0 ? siteStates?.reasonOf(number, reading.time) ?? "" : "";
+    const why = this.#why(reading, reason, day, view);
+    answer.replaceChildren(
+      make("p", { class: "answer-where" }, where, make("br"), bothClocks(reading.time, zone)),
+      make("p", { class: `lead ${reading.state}`, text: reading.sentence }),
+      numbers(reading),
+      make("p", { class: "fine", text: WORDS.sigma }),
+      why,
+    );
+    answer.setAttribute("aria-busy", "false");
+    answer.dataset.time = String(reading.time);
+  }
+
+  /** @param {Error} error @param {() => void} again */
+  fail(error, again) {
+    this.#elements.answer.replaceChildren(trouble(error, again));
+    this.#elements.answer.setAttribute("aria-busy", "false");
+  }
+
+  close() {
+    this.#elements.form.removeEventListener("submit", this.#submit);
+    this.#elements.site.removeEventListener("change", this.#site);
+  }
+
+  #why(reading, reason, day, view) {
+    const list = make("ul");
+    if (reason) list.append(make("li", {}, make("p", { text: reason })));
+    for (const flag of reading.flags) {
+      const how = { clock: view.clock, zone: day.region.timezone };
+      const distance = Number.isFinite(flag.distanceKm) ? `, ${Math.round(flag.distanceKm)} km away` : "";
+      list.append(
+        make("li", {},
+          make("p", {}, make("strong", { text: flagSentence(flag) }), `${distance}, ${timeText(flag.start, how)} to ${timeText(flag.end, how)}.`),
+          make("p", { text: flag.evidence }),
+          make("button", { type: "button", class: "linklike", text: `Go to this ${KIND_WORDS[flag.kind]?.short ?? "flag"}`, click: () => this.#goTo(flag, day) }),
+        ),
+      );
+    }
+    if (!list.children.length) list.append(make("li", {}, make("p", { text: WORDS.noFlagsNear })));
+    const details = make("details", { class: "why", open: this.#open || reading.state === "broken" || reading.state === "strained" }, make("summary", { text: "Why" }), list);
+    details.addEventListener("toggle", () => {
+      this.#open = details.open;
+    });
+    return details;
+  }
+
+  #goTo(flag, day) {
+    const time = Math.max(day.times[0], Math.min(day.times[day.times.length - 1], (flag.start + flag.end) / 2));
+    this.#state.change({ place: [flag.lat, flag.lon], minute: Math.round((time - day.start) / 60000) });
+  }
+
+  #site = () => {
+    const number = this.#elements.site.value;
+    const site = number === "" ? null : this.#day?.sites[Number(number)];
+    if (site) this.#state.change({ place: [site.lat, site.lon] });
+  };
+
+  #submit = (event) => {
+    event.preventDefault();
+    const { lat, lon, error } = this.#elements;
+    const place = [degrees(lat.value, "S"), degrees(lon.value, "W")];
+    const region = this.#day?.region;
+    if (!region || !Number.isFinite(place[0]) || !Number.isFinite(place[1])) {
+      error.textContent = "Write degrees, like 40.25 S and 146.5 E, or −40.25 and 146.5.";
+      (Number.isFinite(place[0]) ? lon : lat).focus();
+      return;
+    }
+    if (place[0] < region.south || place[0] > region.north || place[1] < region.west || place[1] > region.east) {
+      error.textContent = `That is outside the region: ${latText(region.south, 1)} to ${latText(region.north, 1)}, ${lonText(region.west, 1)} to ${lonText(region.east, 1)}.`;
+      return;
+    }
+    this.#state.change({ place: /** @type {[number, number]} */ (place) });
+  };
+}
+
+/**
+ * Degrees as people write them: "40.25 S", "40.25° S", "-40.25", "−40.25".
+ * @param {string} text
+ * @param {"S"|"W"} negative  the letter that turns the sign
+ */
+export function degrees(text, negative) {
+  const found = /^\s*([-−+]?)\s*(\d+(?:[.,]\d+)?)\s*°?\s*([NSEWnsew]?)\s*$/.exec(text);
+  if (!found) return NaN;
+  const letter = found[3].toUpperCase();
+  if (letter && !(negative === "S" ? "NS" : "EW").includes(letter)) return NaN;
+  const value = Number(found[2].replace(",", "."));
+  const minus = (found[1] === "-" || found[1] === "−") !== (letter === negative);
+  return minus ? -value : value;
+}
+
+/** @param {import("../api.js").Reading} reading */
+function numbers(reading) {
+  const row = (name, value, small) =>
+    make("div", {}, make("dt", { text: name }), make("dd", {}, make("strong", { text: value }), ...(small ? [make("small", { text: small })] : [])));
+  const state = make("div", {}, make("dt", { text: "Corrections here" }), make("dd", {}, stateWord(reading.state)));
+  // 40.308193 TECU m² s⁻² over the square of 1575.42 MHz: 0.1624 m of delay for each TECU.
+  const perTecu = 0.1624;
+  const content = Number.isFinite(reading.delay) ? `${withSigma(reading.delay / perTecu, reading.delaySigma / perTecu, "TECU", 1)} of electron content` : "";
+  const toward = Number.isFinite(reading.slopeHeading) && reading.slope > 0 ? `growing toward the ${compass(reading.slopeHeading)}` : "";
+  return make(
+    "dl",
+    { class: "numbers" },
+    row("Vertical delay", withSigma(reading.delay, reading.delaySigma, "m"), content),
+    row("Slope", withSigma(reading.slope, reading.slopeSigma, "mm/km", 1), toward),
+    state,
+    row("Carried by", Number.isFinite(reading.support) ? countText(reading.support, "line of sight", "lines of sight") : "not known"),
+  );
+}
