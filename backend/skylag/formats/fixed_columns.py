@@ -16,7 +16,6 @@ Windows = npt.NDArray[np.void]
 Words64 = npt.NDArray[np.uint64]
 
 FIELD = 16  # characters of one observation with its two digits
-PADDING = b" " * 96  # behind the text, so that a window never runs over its end
 
 _PLAIN = re.compile(rb" *-?[0-9]*\.?[0-9]* *\Z")
 _EACH = 0x0101010101010101
@@ -34,29 +33,42 @@ _KEEP = np.array([(1 << (8 * n)) - 1 for n in range(9)], dtype=np.uint64)
 
 
 def windows(text: Bytes, width: int = FIELD) -> Windows:
-    """Every stretch of `width` bytes of the text as one item: windows(text)[at] copies the stretches that begin `at`."""
+    """Every stretch of `width` bytes of the text as one item: windows(text)[at] copies those that begin `at`."""
     count = max(len(text) - width + 1, 0)
     return np.ndarray((count,), dtype=f"V{width}", buffer=text, strides=(1,))
 
 
-def observations(view: Windows, at: Ints, room: Ints) -> tuple[Floats, Bytes, Ints]:
+def _stretches(text: Bytes, at: Ints) -> Words64:
+    """The sixteen bytes from each `at` on as two words (N, 2); blanks behind the end of the text."""
+    last = len(text) - FIELD
+    if len(at) == 0 or int(at.max()) <= last:
+        return windows(text)[at].view("<u8").reshape(-1, 2)
+    tail_begin = max(last, 0)
+    tail = np.concatenate((text[tail_begin:], np.full(2 * FIELD, 0x20, dtype=np.uint8)))
+    late = at > last
+    pair = np.empty((len(at), 2), dtype="<u8")
+    pair[late] = windows(tail)[np.minimum(at[late], len(text)) - tail_begin].view("<u8").reshape(-1, 2)
+    if not late.all():
+        pair[~late] = windows(text)[at[~late]].view("<u8").reshape(-1, 2)
+    return pair
+
+
+def observations(text: Bytes, at: Ints, room: Ints) -> tuple[Floats, Bytes, Ints]:
     """Values, loss-of-lock digits, and which fields are odd.
 
-    view     windows of 16 over the padded text
+    text     the bytes of the file
     at       (N,) where the fields begin
     room     (N,) characters of the line from there on; none or less: the field is absent
     returns  values (N,), NaN where blank, absent, zero or odd; digits (N,) uint8, 0 where blank; row numbers of fields
              that hold something that is not a number, or a number cut off by the end of the line
     """
-    values = np.full(len(at), np.nan)
-    digits = np.zeros(len(at), dtype=np.uint8)
-    shortest = int(room.min()) if len(room) else 0
+    shortest = int(room.min()) if len(room) else FIELD
     if shortest >= FIELD:
         rows = None
-        pair = view[at].view("<u8").reshape(-1, 2)
+        pair = _stretches(text, at)
     else:
         rows = np.flatnonzero(room > 0)
-        pair = view[at[rows]].view("<u8").reshape(-1, 2)
+        pair = _stretches(text, at[rows])
         # What lies behind the end of the line belongs to the next line: blank it.
         left = np.minimum(room[rows], FIELD)
         keep = _KEEP[np.minimum(left, 8)]
@@ -88,6 +100,8 @@ def observations(view: Windows, at: Ints, room: Ints) -> tuple[Floats, Bytes, In
         if len(cut):
             number[cut] = np.nan
             odd_rows = np.union1d(odd_rows, cut)
+        values = np.full(len(at), np.nan)
+        digits = np.zeros(len(at), dtype=np.uint8)
         values[rows] = number
         digits[rows] = indicator
         odd_rows = rows[odd_rows]

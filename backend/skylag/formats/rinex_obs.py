@@ -22,6 +22,8 @@ _MOST_PROBLEMS = 200  # listed one by one; the rest is counted
 _LONGEST_HEADER = 20_000  # lines
 _SPARSEST = 40  # the dense arrays may take this many bytes per byte of text ...
 _SMALL = 256 * 2**20  # ... once they are larger than this
+_BLOCK = 2**20  # bytes of text looked through at once for line ends
+_FIELDS_AT_ONCE = 30_000  # fields turned into numbers at once; the arrays in between then stay in the cache
 
 _SYSTEM_NUMBER = np.full(256, -1, dtype=np.int64)
 for _letter in SYSTEMS:
@@ -53,7 +55,7 @@ class _Problems(list[Problem]):
 class _Text:
     """The text and where its lines begin and end."""
 
-    data: Bytes  # padded
+    data: Bytes
     begin: Ints
     end: Ints
     raw: bytes
@@ -65,7 +67,8 @@ class _Text:
     def at(self, lines: Ints, column: int) -> Bytes:
         """The byte in that column of each line, a blank where the line is shorter."""
         where = self.begin[lines] + column
-        return np.where(where < self.end[lines], self.data[where], np.uint8(0x20))
+        inside = where < self.end[lines]
+        return np.where(inside, self.data[np.where(inside, where, 0)], np.uint8(0x20))
 
 
 @dataclass
@@ -98,7 +101,7 @@ def parse(
     Raises FormatError when there is no header, no list of observation types, or no epoch that can be read.
     """
     problems = _Problems(name)
-    if not data.strip():
+    if not data[:1000].strip() and not data.strip():
         raise FormatError(f"{name}: the file is empty; an observation file has a header and epochs", path=name, line=0)
     if b"\r" in data:
         data = data.replace(b"\r\n", b"\n").replace(b"\r", b"\n")
@@ -113,13 +116,16 @@ def parse(
 
 
 def _lines(data: bytes) -> _Text:
-    padded = np.frombuffer(data + fixed_columns.PADDING, dtype=np.uint8)
-    breaks = np.flatnonzero(padded[: len(data)] == 10)
+    text = np.frombuffer(data, dtype=np.uint8)
+    # In blocks that stay in the cache: a third of the time of one sweep, and no array as large as the text.
+    breaks = np.concatenate(
+        [np.flatnonzero(text[first : first + _BLOCK] == 10) + first for first in range(0, len(text), _BLOCK)]
+    )
     begin = np.concatenate(([0], breaks + 1))
     end = np.concatenate((breaks, [len(data)]))
     if begin[-1] == len(data):
         begin, end = begin[:-1], end[:-1]
-    return _Text(padded, begin, end, data)
+    return _Text(text, begin, end, data)
 
 
 def _top(text: _Text, name: str, problems: _Problems) -> tuple[Header, int]:
@@ -228,12 +234,10 @@ def _layout_3(text: _Text, body: int, header: Header, problems: _Problems) -> _L
     is_epoch = text.at(lines, 0) == ord(">")
     satellite = _satellites(text, lines, np.zeros(len(lines), dtype=np.int64))
     satellite[is_epoch] = -1
-    comment = text.raw.find(b"COMMENT", int(text.begin[body]) if body < len(text.begin) else len(text.raw))
-    while comment >= 0:
-        number = int(np.searchsorted(text.begin, comment, side="right")) - 1
-        if comment - text.begin[number] == 60:
-            satellite[number - body] = -1
-        comment = text.raw.find(b"COMMENT", comment + 1)
+    # A comment may begin like a satellite record.
+    for k in np.flatnonzero((satellite >= 0) & (text.at(lines, 60) == ord("C"))):
+        if text.line(body + int(k))[60:80].rstrip() == "COMMENT":
+            satellite[k] = -1
     epochs = np.flatnonzero(is_epoch)
     epoch_line = lines[epochs]
     flag, flag_good = fixed_columns.whole(text.data, text.begin[epoch_line] + 31, 1, text.end[epoch_line])
@@ -340,131 +344,169 @@ def _satellites(text: _Text, lines: Ints, column: Ints, blank: int = 0) -> Ints:
 
 
 def _layout_2(text: _Text, body: int, header: Header, problems: _Problems) -> _Layout:
-    """Records have no mark of their own: the lines are walked from epoch to epoch, checked at each step."""
-    lines = np.arange(body, len(text.begin))
-    blank = {k: text.at(lines, k) == 0x20 for k in (0, 2, 3, 5, 6, 8, 9, 10, 11, 12, 14, 18, 26, 27)}
-    column28 = text.at(lines, 28)
-    timed = text.at(lines, 18) == ord(".")
-    for k in (0, 3, 6, 9, 12, 26, 27):
-        timed &= blank[k]
-    for k in (2, 5, 8, 11, 14, 28):
-        figure = text.at(lines, k)
-        timed &= (figure >= 0x30) & (figure <= 0x39)
-    untimed = (column28 >= ord("2")) & (column28 <= ord("5"))
-    for k in (0, 2, 5, 8, 10, 11, 14, 18, 26, 27):
-        untimed &= blank[k]
-    begins = timed | untimed
-    starts = np.flatnonzero(begins)
-    flag_of = np.where(begins, column28.astype(np.int64) - 0x30, -1)
-    count_of = np.zeros(len(lines), dtype=np.int64)
-    count_good = np.zeros(len(lines), dtype=bool)
-    count_of[starts], count_good[starts] = fixed_columns.whole(
-        text.data, text.begin[lines[starts]] + 29, 3, text.end[lines[starts]]
-    )
-    following = np.searchsorted(starts, np.arange(len(lines) + 1), side="left")
-    next_start = np.append(starts, len(lines))[following]  # the first epoch line at or behind each line
+    """Records have no mark of their own: the lines are walked from epoch to epoch, checked at each step.
+
+    Stretches of epochs that are followed by just the lines they announce are taken as one step.
+    """
+    total = len(text.begin) - body
+    starts, timed = _epoch_lines_2(text, body)
+    line = starts + body
+    flag, flag_good = fixed_columns.whole(text.data, text.begin[line] + 28, 1, text.end[line])
+    count, count_good = fixed_columns.whole(text.data, text.begin[line] + 29, 3, text.end[line])
+    good = flag_good & count_good & (flag <= 6)
+    first = starts + np.maximum(1, -(-count // 12))
+    behind = np.append(starts[1:], total)  # the next epoch line, or the end
 
     course = _Course(header, text, problems)
-    epochs: list[tuple[int, int, int]] = []  # line, state, flag
-    good_first: list[int] = []  # per good epoch: its number, first data line, satellites, lines of each
-    good_epoch: list[int] = []
-    good_count: list[int] = []
-    good_step: list[int] = []
-    single: list[tuple[int, int, int]] = []  # epoch number, satellite's place, its first data line
-    step = _lines_each(course.states[-1])
-    begins_list, flag_list, count_list = begins.tolist(), flag_of.tolist(), count_of.tolist()
-    place, total = 0, len(lines)
+    taken = _Taken()
+    step = _lines_each(header)
+    broken = _broken_2(first, behind, count, flag, good, step)
+    place = 0
     while place < total:
-        if not begins_list[place]:
-            stop = int(next_start[place])
+        k = int(np.searchsorted(starts, place))
+        if k == len(starts) or starts[k] != place:  # not at an epoch line
+            stop = int(starts[k]) if k < len(starts) else total
             if _skip_to(text, body, place, stop, course, problems):
                 step = _lines_each(course.states[-1])
+                broken = _broken_2(first, behind, count, flag, good, step)
             place = stop
             continue
-        flag, count = flag_list[place], count_list[place]
-        if flag > 6 or not count_good[place]:
-            problems.note(body + place + 1, "the epoch line has no flag of 0 to 6 or no number of satellites")
+        nearest = int(np.searchsorted(broken, k))
+        until = int(broken[nearest]) if nearest < len(broken) else len(starts)
+        if until > k:  # epochs k to until (not inside) are as they say
+            if course.usable():
+                chosen = np.arange(k, until)[flag[k:until] < 2]
+                taken.stretch(line[chosen], len(course.states) - 1, flag[chosen], body + first[chosen], count[chosen], step)
+            place = int(starts[until]) if until < len(starts) else total
+            continue
+        where = body + place + 1
+        if not good[k]:
+            problems.note(where, "the epoch line has no flag of 0 to 6 or no number of satellites")
             place += 1
-            continue
-        if 2 <= flag <= 5:
-            stop = min(place + 1 + count, total)
-            # A count that would swallow an epoch is wrong.
-            inside = np.flatnonzero(timed[place + 1 : stop])
-            if len(inside):
-                stop = place + 1 + int(inside[0])
-            if stop - place - 1 != count:
-                problems.note(
-                    body + place + 1, f"the event says {count} lines follow, {stop - place - 1} do", "took those that do"
-                )
-            course.event(body + place, flag, stop - place - 1)
-            step = _lines_each(course.states[-1])
+        elif 2 <= flag[k] <= 5:
+            stop = min(place + 1 + int(count[k]), total)
+            epochs_inside = timed[(timed > place) & (timed < stop)]  # a count that would swallow an epoch is wrong
+            if len(epochs_inside):
+                stop = int(epochs_inside[0])
+            if stop - place - 1 != count[k]:
+                problems.note(where, f"the event says {count[k]} lines follow, {stop - place - 1} do", "took those that do")
+            course.event(body + place, int(flag[k]), stop - place - 1)
             place = stop
-            continue
-        first = place + max(1, -(-count // 12))
-        stop = first + count * step
-        keep = flag < 2 and course.usable()
-        if stop == total or (stop < total and begins_list[stop]):
-            if keep:
-                good_epoch.append(len(epochs))
-                good_first.append(body + first)
-                good_count.append(count)
-                good_step.append(step)
-                epochs.append((body + place, len(course.states) - 1, flag))
-            place = stop
-            continue
-        found = int(next_start[place + 1])
-        records = [k for k in range(min(first, found), found) if not _stray(text, body + k)]
-        whole = min(len(records) // step, count) if step else 0
-        fits = len(records) == count * step
-        if not fits and found == total:
-            problems.note(
-                len(text.begin), f"the file ends within an epoch: {whole} of {count} satellites are there",
-                "took those that are",
-            )  # fmt: skip
-            fits = True
-        if fits and keep:
-            for k in range(whole):
-                if records[(k + 1) * step - 1] - records[k * step] == step - 1:
-                    single.append((len(epochs), k, body + records[k * step]))
-                else:
-                    problems.note(body + records[k * step] + 1, "a comment or header line within a satellite's record")
-            epochs.append((body + place, len(course.states) - 1, flag))
-        elif not fits:
-            problems.note(
-                body + place + 1,
-                f"the epoch says {count} satellites of {step} lines, {len(records)} lines follow",
-                "left the epoch out", kind="epochs with another number of lines than they say",
-            )  # fmt: skip
-        if len(records) < found - first and _skip_to(text, body, first, found, course, problems, quiet=True):
+        else:
+            _untidy_2(text, body, k, place, first, behind, count, flag, step, total, course, taken, problems)
+            place = int(behind[k])
+        if _lines_each(course.states[-1]) != step:
             step = _lines_each(course.states[-1])
-        place = found
+            broken = _broken_2(first, behind, count, flag, good, step)
     if course.ended:
         problems.note(course.ended, "another site is occupied from here on", "left out what follows")
+    return taken.layout(text, course.states, header, problems)
 
-    counts = np.array(good_count, dtype=np.int64)
-    begin_of = np.cumsum(counts) - counts
-    row_epoch = np.repeat(np.array(good_epoch, dtype=np.int64), counts)
-    slot = np.arange(int(counts.sum())) - np.repeat(begin_of, counts)
-    row_line = np.repeat(np.array(good_first, dtype=np.int64), counts) + slot * np.repeat(
-        np.array(good_step, dtype=np.int64), counts
-    )
-    if single:
-        more = np.array(single, dtype=np.int64)
-        row_epoch = np.concatenate((row_epoch, more[:, 0]))
-        slot = np.concatenate((slot, more[:, 1]))
-        row_line = np.concatenate((row_line, more[:, 2]))
-    table = np.array(epochs, dtype=np.int64).reshape(-1, 3)
-    letter = header.system if header.system in SYSTEMS else "G"
-    satellite = _satellites(text, table[row_epoch, 0] + slot // 12, 32 + 3 * (slot % 12), ord(letter))
-    for k in np.flatnonzero(satellite < 0)[: 2 * _MOST_PROBLEMS]:
+
+def _epoch_lines_2(text: _Text, body: int) -> tuple[Ints, Ints]:
+    """Lines (counted from the body) that look like an epoch or an event, and those of them that tell a time."""
+    # Column 27 is the dot of a record's second value and blank in an epoch line: few other lines pass.
+    long_enough = np.flatnonzero(text.end[body:] - text.begin[body:] > 28)
+    likely = long_enough[text.data[text.begin[body + long_enough] + 26] == 0x20]
+    begin = text.begin[body + likely]
+    column = {k: text.data[begin + k] for k in (0, 2, 3, 5, 6, 8, 9, 10, 11, 12, 14, 18, 27, 28)}
+    timed = column[18] == ord(".")
+    for k in (0, 3, 6, 9, 12, 27):
+        timed &= column[k] == 0x20
+    for k in (2, 5, 8, 11, 14, 28):
+        timed &= (column[k] >= 0x30) & (column[k] <= 0x39)
+    untimed = (column[28] >= ord("2")) & (column[28] <= ord("5"))  # events need no time
+    for k in (0, 2, 5, 8, 10, 11, 14, 18, 27):
+        untimed &= column[k] == 0x20
+    return likely[timed | untimed], likely[timed]
+
+
+def _broken_2(first: Ints, behind: Ints, count: Ints, flag: Ints, good: Bools, step: int) -> Ints:
+    """Numbers of the epoch lines that are events, or not followed by the lines they announce."""
+    fits = good & ((flag < 2) | (flag == 6)) & (first + count * step == behind)
+    return np.flatnonzero(~fits)
+
+
+class _Taken:
+    """Epochs and records of a RINEX 2 file gathered on the walk."""
+
+    def __init__(self) -> None:
+        self.epochs: list[Ints] = []  # each (n, 3): line, state, flag
+        self.records: list[Ints] = []  # each (n, 3): epoch number, place among the epoch's satellites, first line
+        self.length = 0
+
+    def stretch(self, line: Ints, state: int, flag: Ints, first: Ints, count: Ints, step: int) -> None:
+        """Epochs whose records follow without a gap."""
+        number = self.length + np.arange(len(line))
+        self.epochs.append(np.column_stack((line, np.full(len(line), state), flag)))
+        self.length += len(line)
+        slot = np.arange(int(count.sum())) - np.repeat(np.cumsum(count) - count, count)
+        self.records.append(np.column_stack((np.repeat(number, count), slot, np.repeat(first, count) + slot * step)))
+
+    def single(self, line: int, state: int, flag: int, records: list[tuple[int, int]]) -> None:
+        """One epoch, with the place and the first line of each record."""
+        self.epochs.append(np.array([[line, state, flag]]))
+        if records:
+            self.records.append(np.array([(self.length, place, first) for place, first in records]))
+        self.length += 1
+
+    def layout(self, text: _Text, states: list[Header], header: Header, problems: _Problems) -> _Layout:
+        """All of it, with the satellites' names read from the epoch lines."""
+        nothing = np.empty((0, 3), dtype=np.int64)
+        epochs, records = np.concatenate((nothing, *self.epochs)), np.concatenate((nothing, *self.records))
+        slot = records[:, 1]
+        letter = header.system if header.system in SYSTEMS else "G"
+        name_line = epochs[records[:, 0], 0] + slot // 12
+        satellite = _satellites(text, name_line, 32 + 3 * (slot % 12), ord(letter))
+        nameless = np.flatnonzero(satellite < 0)
+        for k in nameless[: 2 * _MOST_PROBLEMS]:
+            problems.note(int(name_line[k]) + 1, f"satellite {slot[k] + 1} of the epoch has no name",
+                          kind="satellites without a name")  # fmt: skip
+        if len(nameless):
+            records, satellite = records[satellite >= 0], satellite[satellite >= 0]
+        return _Layout(states, epochs[:, 0], epochs[:, 1], epochs[:, 2], records[:, 0], satellite, records[:, 2])
+
+
+def _untidy_2(
+    text: _Text,
+    body: int,
+    k: int,
+    place: int,
+    first: Ints,
+    behind: Ints,
+    count: Ints,
+    flag: Ints,
+    step: int,
+    total: int,
+    course: _Course,
+    taken: _Taken,
+    problems: _Problems,
+) -> None:
+    """Epoch k, which other lines follow than it says: comments within, cut short, or out of step."""
+    begin, found, many = int(first[k]), int(behind[k]), int(count[k])
+    records = [m for m in range(min(begin, found), found) if not _stray(text, body + m)]
+    whole = min(len(records) // step, many) if step else 0
+    fits = len(records) == many * step
+    if not fits and found == total and len(records) < many * step:
+        problems.note(len(text.begin), f"the file ends within an epoch: {whole} of {many} satellites are there",
+                      "took those that are")  # fmt: skip
+        fits = True
+    if fits and flag[k] < 2 and course.usable():
+        unbroken: list[tuple[int, int]] = []
+        for slot in range(whole):
+            if records[(slot + 1) * step - 1] - records[slot * step] == step - 1:
+                unbroken.append((slot, body + records[slot * step]))
+            else:
+                problems.note(body + records[slot * step] + 1, "a header line within a satellite's record",
+                              "left the record out")  # fmt: skip
+        taken.single(body + place, len(course.states) - 1, int(flag[k]), unbroken)
+    elif not fits:
         problems.note(
-            int(table[row_epoch[k], 0] + slot[k] // 12) + 1, f"satellite {slot[k] + 1} of the epoch has no name",
-            kind="satellites without a name",
+            body + place + 1, f"the epoch says {many} satellites of {step} lines, {len(records)} lines follow",
+            "left the epoch out", kind="epochs with another number of lines than they say",
         )  # fmt: skip
-    named = satellite >= 0
-    return _Layout(
-        course.states, table[:, 0], table[:, 1], table[:, 2], row_epoch[named], satellite[named], row_line[named]
-    )
+    if len(records) < found - begin:
+        _skip_to(text, body, begin, found, course, problems, quiet=True)
 
 
 def _lines_each(header: Header) -> int:
@@ -587,7 +629,8 @@ def _assemble(
     exact[kept] = True
 
     system = layout.row_satellite // 100
-    skipped = Counter(chr(letter) for letter in system.tolist() if chr(letter) not in CARRIED) if len(system) else {}
+    letters_met, counts = np.unique(system, return_counts=True)
+    skipped = {chr(k): int(n) for k, n in zip(letters_met, counts, strict=True) if chr(k) not in CARRIED}
     letters = [s for s in CARRIED if wanted is None or s in wanted]
     keep = readable[layout.row_epoch] & np.isin(system, [ord(s) for s in letters])
     epoch = place[layout.row_epoch]
@@ -647,7 +690,7 @@ def _assemble(
         "marker_number": header.marker_number,
         "stated_interval_s": header.interval_s,
         "declared": {s: header.names(s) for s in CARRIED if any(header.names(s))},
-        "skipped_systems": dict(skipped),
+        "skipped_systems": skipped,
         "biases_removed": dict(last.biases_removed),
         "clock_applied": header.clock_applied,
     }
@@ -685,6 +728,33 @@ def _marker_from(name: str) -> str:
     return first.upper() if len(first) == 9 else stem[:4].upper()
 
 
+class _Dense:
+    """The arrays of all codes in one block, of which only the parts that are used take memory."""
+
+    def __init__(self, shape: tuple[int, int], codes: list[str], text_bytes: int, name: str) -> None:
+        self.values: dict[str, Floats] = {}
+        self.lock: dict[str, Bytes] = {}
+        self._shape, self._codes = shape, codes
+        if shape[0] * shape[1] * len(codes) * 9 > max(_SMALL, _SPARSEST * text_bytes):
+            raise FormatError(
+                f"{name}: {shape[0]} epochs of {shape[1]} satellites and {len(codes)} signals, nearly all empty; no "
+                "receiver writes such a file; split it by hours if it is real",
+                path=name, line=0,
+            )  # fmt: skip
+        # One large block comes in large pages: a third of the time of one array per code.
+        self._block = np.empty((len(codes), *shape))
+
+    def of(self, code: str) -> tuple[Floats, Bytes | None]:
+        """Flat arrays of a code, made when first asked for."""
+        if code not in self.values:
+            self.values[code] = self._block[self._codes.index(code)]
+            self.values[code].fill(np.nan)
+            if code[0] == "L":
+                self.lock[code] = np.zeros(self._shape, dtype=np.uint8)
+        lock = self.lock.get(code)
+        return self.values[code].reshape(-1), None if lock is None else lock.reshape(-1)
+
+
 def _columns(
     text: _Text,
     states: list[Header],
@@ -695,69 +765,83 @@ def _columns(
     name: str,
 ) -> tuple[dict[str, Floats], dict[str, Bytes]]:
     """Every wanted column of every constellation, dense."""
-    view = fixed_columns.windows(text.data)
-    size = shape[0] * shape[1]
-    values: dict[str, Floats] = {}
-    lock: dict[str, Bytes] = {}
-    budget = max(_SMALL, _SPARSEST * len(text.raw))
+    jobs: list[tuple[Header, str, Ints, list[int]]] = []  # state, system, rows, columns
     for state_number, state in enumerate(states):
-        of_state = rows.state == state_number if len(states) > 1 else np.ones(len(rows.state), dtype=bool)
         for letter in CARRIED:
-            chosen = np.flatnonzero(of_state & (rows.system == ord(letter)))
-            if not len(chosen):
-                continue
+            chosen = np.flatnonzero((rows.state == state_number) & (rows.system == ord(letter)))
             codes = state.names(letter)
-            if not codes:
+            if len(chosen) and not codes:
                 problems.note(
-                    int(rows.line[chosen[0]]) + 1, f"satellites of {letter}, whose observations the header does not list"
+                    int(rows.line[chosen[0]]) + 1, f"satellites of {letter}, but the header lists no types of {letter}"
                 )
-            for number, code in enumerate(codes):
-                if not _is_wanted(letter, code, wanted):
-                    continue
-                pick = chosen if code[0] == "L" else chosen[rows.valued[chosen]]
-                if state.version >= 3:
-                    line = rows.line[pick]
-                    at = text.begin[line] + (3 + fixed_columns.FIELD * number)
+            columns = [k for k, code in enumerate(codes) if _is_wanted(letter, code, wanted)]
+            if not len(chosen) or not columns:
+                continue
+            jobs.append((state, letter, chosen[rows.valued[chosen]], columns))
+            if not rows.valued[chosen].all():  # of epochs thinned away only lost locks are wanted
+                phases = [k for k in columns if codes[k][0] == "L"]
+                jobs.append((state, letter, chosen[~rows.valued[chosen]], phases))
+    every = sorted({state.names(letter)[k] for state, letter, _, columns in jobs for k in columns})
+    dense = _Dense(shape, every, len(text.raw), name)
+    for state, letter, chosen, columns in jobs:
+        if columns:
+            _sweep(text, state, letter, rows, chosen, columns, dense, problems)
+    return dense.values, dense.lock
+
+
+def _sweep(
+    text: _Text,
+    state: Header,
+    letter: str,
+    rows: _Rows,
+    chosen: Ints,
+    columns: list[int],
+    dense: _Dense,
+    problems: _Problems,
+) -> None:
+    """Some columns of one constellation's records into the dense arrays, a block of records at a time."""
+    codes = state.names(letter)
+    number = np.array(columns)
+    if state.version >= 3:
+        further, offset = np.zeros(len(number), dtype=np.int64), 3 + fixed_columns.FIELD * number
+        divide = [state.scale.get((letter, state.types[letter][k]), state.scale.get((letter, "all"), 1.0))
+                  for k in columns]  # fmt: skip
+    else:
+        further, offset = number // 5, fixed_columns.FIELD * (number % 5)
+        divide = [1.0] * len(columns)
+    block = max(_FIELDS_AT_ONCE // len(columns), 1)
+    for first in range(0, len(chosen), block):
+        pick = chosen[first : first + block]
+        line = rows.line[pick][:, None] + further
+        at = text.begin[np.minimum(line, len(text.begin) - 1)] + offset
+        room = np.where(line < len(text.begin), text.end[np.minimum(line, len(text.begin) - 1)] - at, 0)
+        values, digits, odd = fixed_columns.observations(text.data, at.reshape(-1), room.reshape(-1))
+        listed = odd[: max(_MOST_PROBLEMS - len(problems), 0)]
+        if len(listed) < len(odd):
+            problems.more["values that are no numbers"] += len(odd) - len(listed)
+        for k in listed:
+            row, j = divmod(int(k), len(columns))
+            where = int(at[row, j])
+            said = text.raw[where : where + min(fixed_columns.FIELD, int(room[row, j]))].decode("latin-1")
+            problems.note(int(line[row, j]) + 1, f"{codes[columns[j]]} is no number: {said!r}")
+        into, valued = rows.flat[pick], rows.valued[pick[0]]
+        found, marks = values.reshape(at.shape), digits.reshape(at.shape)
+        for j, k in enumerate(columns):
+            code = codes[k]
+            target, lock = dense.of(code)
+            column = found[:, j] / divide[j] if divide[j] != 1.0 else found[:, j]
+            if lock is not None:
+                if valued:
+                    lock[into] |= marks[:, j]
                 else:
-                    line = rows.line[pick] + number // 5
-                    at = text.begin[line] + fixed_columns.FIELD * (number % 5)
-                room = text.end[line] - at
-                found, digits, odd = fixed_columns.observations(view, at, room)
-                for k in odd[: 2 * _MOST_PROBLEMS]:
-                    where = int(at[k])
-                    field_text = text.raw[where : where + min(fixed_columns.FIELD, int(room[k]))].decode("latin-1")
-                    problems.note(int(line[k]) + 1, f"{code} is no number: {field_text!r}", kind="values that are no numbers")
-                divide = state.scale.get((letter, state.types[letter][number]), state.scale.get((letter, "all"), 1.0)) \
-                    if state.version >= 3 else 1.0  # fmt: skip
-                if divide != 1.0:
-                    found = found / divide
-                if code[0] == "L":
-                    _drop_squared(state, letter, code, rows.satellite[pick], found)
-                if code not in values:
-                    if (len(values) + 1) * size * 9 > budget:
-                        raise FormatError(
-                            f"{name}: {shape[0]} epochs of {shape[1]} satellites, nearly all empty; no receiver writes "
-                            "such a file; split it by hours if it is real",
-                            path=name, line=0,
-                        )  # fmt: skip
-                    values[code] = np.full(shape, np.nan)
-                    if code[0] == "L":
-                        lock[code] = np.zeros(shape, dtype=np.uint8)
-                target = values[code].reshape(-1)
-                where_to = rows.flat[pick]
-                if code[0] == "L":
-                    valued = rows.valued[pick]
-                    lost = where_to[(digits & 1) > 0]
-                    has = np.flatnonzero(valued & (digits > 0))
-                    marks = lock[code].reshape(-1)
-                    marks[where_to[has]] |= digits[has]
-                    marks[lost] |= np.uint8(1)
-                    found, where_to = found[valued], where_to[valued]
-                there = np.isfinite(found)
-                if code in codes[:number]:  # two columns of one meaning: the second fills what the first left
-                    there &= np.isnan(target[where_to])
-                target[where_to[there]] = found[there]
-    return values, lock
+                    lock[into[(marks[:, j] & 1) > 0]] |= np.uint8(1)
+                if state.squared and state.version < 3:
+                    column = _without_squared(state, code, rows.satellite[pick], column)
+            if not valued:
+                continue
+            if code in codes[:k]:  # two columns of one meaning: the second fills what the first left
+                column = np.where(np.isnan(target[into]), column, target[into])
+            target[into] = column
 
 
 def _is_wanted(letter: str, code: str, wanted: Mapping[str, Collection[str]] | None) -> bool:
@@ -769,13 +853,8 @@ def _is_wanted(letter: str, code: str, wanted: Mapping[str, Collection[str]] | N
     return code in codes if code[0] == "C" else any(code[1] == kept[1] for kept in codes)
 
 
-def _drop_squared(state: Header, letter: str, code: str, satellite: Ints, found: Floats) -> None:
+def _without_squared(state: Header, code: str, satellite: Ints, values: Floats) -> Floats:
     """Phases of squaring receivers come in half wavelengths and are not used."""
     who = state.squared.get(code[1], set())
-    if not who or state.version >= 3:
-        return
-    if "" in who:
-        found[:] = np.nan
-    else:
-        numbers = [ord(s[0]) * 100 + int(s[1:]) for s in who if s[1:].isdigit() and s[0] in SYSTEMS]
-        found[np.isin(satellite, numbers)] = np.nan
+    numbers = [ord(s[0]) * 100 + int(s[1:]) for s in who if s[1:].isdigit() and s[0] in SYSTEMS]
+    return np.where(("" in who) | np.isin(satellite, numbers), np.nan, values)
