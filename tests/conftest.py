@@ -2,11 +2,14 @@
 
 import csv
 import os
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Generator, Iterator
 from pathlib import Path
 
 import numpy as np
 import pytest
+from tests.postgres_server import NoServer, PostgresServer
+
+from skylag.archive import Archive, open_archive
 
 ROOT = Path(__file__).resolve().parent.parent
 EVIDENCE_ROWS: dict[tuple[str, str], dict[str, str]] = {}
@@ -23,6 +26,21 @@ def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item
     for item in items:
         if "browser" in item.keywords:
             item.add_marker(skip)
+
+
+@pytest.hookimpl(wrapper=True)
+def pytest_runtest_makereport(item: pytest.Item) -> Generator[None, pytest.TestReport, pytest.TestReport]:
+    """With SKYLAG_NO_SKIPS=1 a skipped browser or database test fails; a real-data one too if its folder is set."""
+    report = yield
+    if report.skipped and not hasattr(report, "wasxfail") and os.environ.get("SKYLAG_NO_SKIPS") == "1":
+        wanted = {"browser", "database"} | ({"open_data"} if os.environ.get("SKYLAG_OPEN_DATA") else set())
+        asked_for = {mark.name for mark in item.iter_markers()} | set(getattr(item, "fixturenames", ()))
+        asked_for |= {"database"} if "postgres_server" in asked_for else set()
+        if wanted & asked_for:
+            reason = report.longrepr[2] if isinstance(report.longrepr, tuple) else str(report.longrepr)
+            report.outcome = "failed"
+            report.longrepr = f"skipped where SKYLAG_NO_SKIPS=1 allows no skip: {reason}"
+    return report
 
 
 def open_data_folder() -> Path:
@@ -51,6 +69,33 @@ def rng() -> np.random.Generator:
     return np.random.default_rng(20240917)
 
 
+@pytest.fixture(scope="session")
+def postgres_server() -> Iterator[PostgresServer]:
+    """A PostgreSQL server of our own, on a socket in a folder of its own; skips where none is installed."""
+    try:
+        server = PostgresServer()
+    except NoServer as absent:
+        pytest.skip(str(absent))
+    with server:
+        yield server
+
+
+@pytest.fixture(params=["sqlite", "postgresql"])
+def archive_place(request: pytest.FixtureRequest, tmp_path: Path) -> str:
+    """Where a new, empty archive can be opened: a SQLite file, and a database of a real PostgreSQL server."""
+    if request.param == "sqlite":
+        return str(tmp_path / "archive.sqlite")
+    server: PostgresServer = request.getfixturevalue("postgres_server")
+    return f"{server.new_database()}&slant_folder={tmp_path / 'slants'}"
+
+
+@pytest.fixture
+def archive(archive_place: str) -> Iterator[Archive]:
+    """An empty archive, on SQLite and on PostgreSQL."""
+    with open_archive(archive_place) as opened:
+        yield opened
+
+
 Evidence = Callable[..., None]
 
 
@@ -59,7 +104,14 @@ def evidence(request: pytest.FixtureRequest) -> Evidence:
     """Record a check against the outside world in tests/EVIDENCE.md, and assert it."""
 
     def check(
-        subject: str, *, source: str, expected: float, got: float, tolerance: float, unit: str = "", at_most: bool = False
+        subject: str,
+        *,
+        source: str,
+        expected: float,
+        got: float,
+        tolerance: float,
+        unit: str = "",
+        at_most: bool = False,
     ) -> None:
         """Assert |got - expected| <= tolerance, or got <= expected when `at_most`; the row is written either way."""
         good = got <= expected if at_most else abs(got - expected) <= tolerance

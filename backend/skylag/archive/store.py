@@ -33,7 +33,8 @@ _Result = TypeVar("_Result")
 def open_archive(place: str | Path, *, slant_folder: str | Path | None = None) -> "Archive":
     """Open an archive, made new where there is none.
 
-    place         path of a SQLite file, or a URL: sqlite:///path, postgresql://user@host/name
+    place         a folder (its archive.sqlite is meant), a file ending in .sqlite or .db, or a URL: sqlite:///path,
+                  postgresql://user@host/name
     slant_folder  where slant tables lie; beside a SQLite file when not given.  A PostgreSQL URL may name it as
                   `?slant_folder=/path`.
     """
@@ -62,7 +63,9 @@ def open_archive(place: str | Path, *, slant_folder: str | Path | None = None) -
 
 def _url_of(place: str | Path) -> URL:
     if isinstance(place, Path) or "://" not in place:
-        return URL.create("sqlite", database=str(place))
+        path = Path(place)
+        file = path if path.is_file() or path.suffix in (".sqlite", ".db") else path / "archive.sqlite"
+        return URL.create("sqlite", database=str(file))
     try:
         url = make_url(place)
     except sa.exc.ArgumentError as cause:
