@@ -57,8 +57,8 @@ def read(
     if kind == "unknown":
         beginning = data[:60].split(b"\n")[0].decode("latin-1")
         raise FormatError(
-            f"{place.name}: begins with {beginning!r}, which is no format known here; RINEX observations and navigation, "
-            "SP3, Bias-SINEX, monthly code biases, IONEX and daily indices are",
+            f"{place.name}: begins with {beginning!r}, which is no format known here; RINEX observations and "
+            "navigation, SP3, Bias-SINEX, monthly code biases, IONEX and daily indices are",
             path=str(path), line=1,
         )  # fmt: skip
     parser = importlib.import_module(f"skylag.formats.{PARSERS[kind]}")

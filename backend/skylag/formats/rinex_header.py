@@ -81,6 +81,10 @@ class Header:
             conversion=dict(self.conversion),
         )  # fmt: skip
 
+    def decoding(self) -> tuple[object, ...]:
+        """What decides how the columns of a record are read."""
+        return self.types, self.scale, self.squared, self.conversion
+
     @property
     def time_scale(self) -> str:
         """The time system of the epochs: as stated, else the own one of a file of a single constellation, else GPS."""

@@ -71,7 +71,7 @@ def _check_size(size: int, packed: int, name: str) -> None:
 
 def _cut(name: str, what: str, got: int, problems: list[Problem]) -> None:
     if not got:
-        raise FormatError(f"{name}: the {what} holds nothing that can be unpacked; fetch the file again", path=name, line=0)
+        raise FormatError(f"{name}: the {what} holds nothing that can be unpacked; fetch it again", path=name, line=0)
     problems.append(Problem(name, 0, f"the {what} is cut short or damaged", f"took the {got} bytes before that"))
 
 
@@ -144,7 +144,9 @@ def _compress(data: bytes, name: str) -> bytes:
     except FormatError:
         raise
     except Exception as error:
-        raise FormatError(f"{name}: the compress (.Z) file is damaged: {error}; fetch it again", path=name, line=0) from error
+        raise FormatError(
+            f"{name}: the compress (.Z) file is damaged: {error}; fetch it again", path=name, line=0
+        ) from error
     return out.getvalue()
 
 
@@ -168,7 +170,7 @@ def _zip(data: bytes, name: str, problems: list[Problem]) -> bytes:
                 except (zipfile.BadZipFile, zlib.error, EOFError):
                     _cut(name, "zip file", size, problems)
             return b"".join(parts)
-    except (zipfile.BadZipFile, zlib.error, NotImplementedError, RuntimeError, OSError, ValueError) as error:
+    except (zipfile.BadZipFile, zlib.error, RuntimeError, OSError, ValueError) as error:
         raise FormatError(f"{name}: the zip file cannot be unpacked: {error}", path=name, line=0) from error
 
 
@@ -186,9 +188,8 @@ def _hatanaka(data: bytes, name: str, problems: list[Problem]) -> bytes:
                     f"{name}: the Hatanaka compression cannot be undone: {_one_line(str(error))}; fetch the file again",
                     path=name, line=0,
                 ) from error  # fmt: skip
-            problems.append(
-                Problem(name, 0, f"the Hatanaka compression is damaged: {_one_line(str(first))}", "skipped what it spoils")
-            )
+            what = f"the Hatanaka compression is damaged: {_one_line(str(first))}"
+            problems.append(Problem(name, 0, what, "skipped what it spoils"))
     for warning in said[:20]:
         problems.append(Problem(name, 0, f"Hatanaka decoder: {_one_line(str(warning.message))}", "kept the rest"))
     return text
