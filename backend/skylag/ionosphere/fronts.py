@@ -246,6 +246,10 @@ class _Points:
     satellite: Ints
 
 
+def _taken(points: _Points, chosen: Bools) -> _Points:
+    return _Points(**{name: getattr(points, name)[chosen] for name in _Points.__dataclass_fields__})
+
+
 @dataclass(frozen=True)
 class _Wall:
     """A line on the move: heading [rad, from north to east], speed [km/s], offset [km] at t = 0, height [km] above the
@@ -280,7 +284,10 @@ def fit_walls(onsets: Onsets, rays: Rays, choices: FrontChoices | None = None) -
             if wall is None:
                 break
             found.append((wall, left[wall.inside]))
-            left = left[~wall.inside]
+            # Broken runs within the wall's own breadth are the same wall, not another beside it.
+            breadth = steepness(wall, onsets.where(left[wall.inside]), _taken(points, wall.inside))[2]
+            within = np.abs(wall.distance(points)) < 0.5 * np.nan_to_num(breadth) + 3.0 * points.place_sigma
+            left = left[~(wall.inside | within)]
     found.sort(key=lambda item: onsets.time[item[1]].min())
     fronts = []
     for number, (wall, rows) in enumerate(found):

@@ -1,0 +1,108 @@
+"""Fronts: found, sized, followed and foretold on a simulated sky; not seen where there is none."""
+
+import numpy as np
+import pytest
+from tests.simulated.moving_wall import CENTRE, PLACES, START, changed, quiet, simulate, wall
+
+from skylag.ionosphere import fronts
+from skylag.tables import Site
+
+
+def with_wall(slope, width, speed, heading, seed, hours=6.0, **options):
+    ramp = wall(slope, width, speed, heading, hours / 2 * 3600)
+    return simulate(lambda x, y, t: quiet(x, y, t) + ramp(x, y, t), np.random.default_rng(seed), hours=hours, **options)
+
+
+@pytest.mark.parametrize(
+    ("slope", "width", "speed", "heading"),
+    [(60, 100, 100, 40), (150, 60, 200, 300), (300, 50, 400, 200), (100, 150, 60, 120), (80, 25, 300, 10)],
+)
+def test_a_wall_is_recovered(slope, width, speed, heading):
+    found = fronts.track(*with_wall(slope, width, speed, heading, seed=slope))
+    assert len(found.fronts) == 1
+    front = found.fronts[0]
+    assert front.confirmed and len(front.receivers) >= 3 and len(front.satellites) >= 2
+    assert front.speed_m_s == pytest.approx(speed, rel=0.05)
+    assert abs((front.heading_deg - heading + 180) % 360 - 180) < 3.0
+    assert front.slope == pytest.approx(slope, rel=0.1)
+    assert front.jump_tecu == pytest.approx(slope * width / 162.372, rel=0.2)
+    moment, sigma_s = fronts.expected_at(front, *CENTRE)
+    miss_s = abs((moment - START) / np.timedelta64(1, "s") - 3 * 3600)
+    assert miss_s < 60.0 and miss_s < 3 * sigma_s + 5
+
+
+def test_errors_over_sigma_look_like_a_unit_normal():
+    over = []
+    for seed in range(12):
+        rng = np.random.default_rng(1000 + seed)
+        slope, width = rng.uniform(60, 300), rng.uniform(30, 120)
+        speed, heading = rng.uniform(60, 500), rng.uniform(0, 360)
+        found = fronts.track(*with_wall(slope, width, speed, heading, seed=seed, hours=4.0)).fronts
+        assert found
+        best = max(found, key=lambda f: f.onsets)
+        over.append((
+            (best.speed_m_s - speed) / best.speed_sigma_m_s,
+            ((best.heading_deg - heading + 180) % 360 - 180) / best.heading_sigma_deg,
+        ))  # fmt: skip
+    # The scatter allowed to a run's place is for thick walls; a thin shell's errors stay below it.
+    assert np.sqrt(np.mean(np.square(over))) < 1.5
+
+
+def test_a_calm_sky_has_no_front():
+    found = fronts.track(*simulate(quiet, np.random.default_rng(3), hours=8.0))
+    assert found.fronts == ()
+
+
+def test_a_receiver_gone_wild_is_no_front():
+    rays, samples = simulate(quiet, np.random.default_rng(4), hours=4.0)
+    rng = np.random.default_rng(40)
+    rows = np.flatnonzero((rays.receiver == 3) & (rays.time > START + np.timedelta64(1, "h"))
+                          & (rays.time < START + np.timedelta64(2, "h")))  # fmt: skip
+    walk = np.cumsum(rng.normal(0, 1.5, len(rows)))
+    found = fronts.track(*changed(rays, samples, rows, walk))
+    assert len(found.onsets) > 0
+    assert found.fronts == ()
+
+
+def test_chance_onsets_make_no_front():
+    rays, samples = simulate(quiet, np.random.default_rng(9), hours=4.0)
+    rng = np.random.default_rng(90)
+    arcs = np.unique(rays.arc)
+    step = np.zeros(len(rays))
+    for arc in rng.choice(arcs, 120):
+        rows = np.flatnonzero(rays.arc == arc)
+        if len(rows) > 60:
+            at = rng.integers(20, len(rows) - 20)
+            step[rows] += 8.0 * np.clip((np.arange(len(rows)) - at) / 6.0, 0, 1) * rays.mapping[rows]
+    found = fronts.track(*changed(rays, samples, np.arange(len(rays)), step))
+    assert len(found.onsets) > 60
+    assert found.fronts == ()
+
+
+def test_two_walls_of_a_day_are_two():
+    rise, fall = wall(120, 60, 150, 330, 2.5 * 3600), wall(120, 60, 250, 60, 6.0 * 3600)
+    rays, samples = simulate(
+        lambda x, y, t: quiet(x, y, t) + rise(x, y, t) - fall(x, y, t) + 60.0, np.random.default_rng(12), hours=8
+    )
+    found = sorted(fronts.track(rays, samples).fronts, key=lambda f: f.start)
+    assert [round(f.speed_m_s / 10) * 10 for f in found] == [150, 250]
+    assert found[0].jump_tecu > 0 > found[1].jump_tecu
+
+
+def test_too_few_receivers_make_no_front():
+    found = fronts.track(*with_wall(150, 60, 200, 300, seed=2, places=PLACES[:2]))
+    assert len(found.onsets) > 10
+    assert found.fronts == ()
+
+
+def test_arrivals_are_foretold_and_come_true():
+    rays, samples = with_wall(150, 60, 150, 300, seed=21, hours=6.0)
+    found = fronts.track(rays, samples)
+    sites = [Site("middle", *CENTRE), Site("north west", -37.8, 143.5)]
+    told = fronts.arrivals(found, rays, sites)
+    known = [one for one in told if one.came_true is not None]
+    assert len(known) >= 4
+    assert np.mean([one.came_true for one in known]) > 0.8
+    assert all(one.made < one.expected <= one.made + np.timedelta64(3600, "s") for one in told)
+    middle = [abs((one.expected - START) / np.timedelta64(1, "s") - 10_800) for one in told if one.place == "middle"]
+    assert max(middle) < 600.0
