@@ -4,18 +4,35 @@
 
 const CONFIG = { displayModeBar: false, scrollZoom: false, doubleClick: false, staticPlot: false, responsive: false };
 
-/** Plotly arrives by its own script; whoever draws first waits for it. @returns {Promise<any>} */
+/** @type {Promise<any>|null} */
 let waiting = null;
+
+/** @type {() => void} */
+let open = () => {};
+const gate = new Promise((resolve) => {
+  open = () => resolve(undefined);
+});
+
+/**
+ * Let plotly begin. Running its script takes longer than all else on the page, so the first map, which needs none of
+ * it, is painted before.
+ */
+export function begin() {
+  requestAnimationFrame(() => setTimeout(open, 0));
+}
+
+/** plotly.js, fetched with the page and run when first wanted: asking the service comes before it. */
 function plotly() {
-  if (window.Plotly) return Promise.resolve(window.Plotly);
   waiting ??= new Promise((resolve, reject) => {
-    const started = performance.now();
-    const look = () => {
-      if (window.Plotly) resolve(window.Plotly);
-      else if (performance.now() - started > 20000) reject(new Error("plotly.js did not load from this server"));
-      else setTimeout(look, 15);
-    };
-    look();
+    const script = document.createElement("script");
+    script.src = "/vendor/plotly.min.js";
+    script.addEventListener("load", () => resolve(window.Plotly));
+    script.addEventListener("error", () => {
+      waiting = null;
+      script.remove();
+      reject(new Error("plotly.js did not load from this server"));
+    });
+    document.head.append(script);
   });
   return waiting;
 }
@@ -26,40 +43,11 @@ function plotly() {
  * @param {{data: object[], layout: object}} figure
  */
 export async function draw(element, figure) {
+  await gate;
   const Plotly = await plotly();
   const layout = { ...figure.layout, width: element.clientWidth, height: element.clientHeight };
   if (!layout.width || !layout.height) return;
   await Plotly.react(element, figure.data, layout, CONFIG);
-}
-
-/**
- * The place under a pointer, or null outside the frame.
- * @param {HTMLElement} element  one that `draw` drew in
- * @param {{clientX: number, clientY: number}} pointer
- * @returns {[number, number]|null}  lat, lon (the figure's y and x)
- */
-export function placeUnder(element, pointer) {
-  const axes = element._fullLayout;
-  if (!axes?.xaxis) return null;
-  const box = element.getBoundingClientRect();
-  const x = pointer.clientX - box.left - axes.xaxis._offset;
-  const y = pointer.clientY - box.top - axes.yaxis._offset;
-  if (x < 0 || y < 0 || x > axes.xaxis._length || y > axes.yaxis._length) return null;
-  return [axes.yaxis.p2d(y), axes.xaxis.p2d(x)];
-}
-
-/**
- * Where a place of the figure lies on the screen: the inverse of `placeUnder`.
- * @param {HTMLElement} element
- * @param {[number, number]} place
- */
-export function pixelOf(element, [lat, lon]) {
-  const axes = element._fullLayout;
-  const box = element.getBoundingClientRect();
-  return {
-    clientX: box.left + axes.xaxis._offset + axes.xaxis.d2p(lon),
-    clientY: box.top + axes.yaxis._offset + axes.yaxis.d2p(lat),
-  };
 }
 
 /** Take a drawing away. @param {HTMLElement} element */

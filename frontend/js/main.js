@@ -4,6 +4,7 @@
  */
 
 import * as api from "./api.js";
+import { begin } from "./drawing.js";
 import { frameOf } from "./figures/map.js";
 import { nearest } from "./figures/strip.js";
 import { ChartPanel } from "./panels/chart.js";
@@ -35,7 +36,7 @@ const at = (id) => /** @type {any} */ (document.getElementById(id));
 
 const state = new State({ history, location, listen: (type, f) => window.addEventListener(type, f) });
 
-const chart = new ChartPanel({ map: at("map"), title: at("chart-title"), time: at("chart-time"), note: at("map-note") }, state);
+const chart = new ChartPanel({ map: at("map"), cells: at("map-cells"), frame: at("map-frame"), title: at("chart-title"), time: at("chart-time"), note: at("map-note") }, state);
 const legend = new LegendPanel(at("legend"), state);
 const clock = new ClockPanel(
   { strip: at("strip"), names: at("strip-names"), range: at("time"), text: at("time-text"), reason: at("strip-reason"), hint: at("strip-help") },
@@ -45,7 +46,7 @@ const reading = new ReadingPanel(
   { answer: at("answer"), form: at("place-form"), site: at("place-site"), lat: at("place-lat"), lon: at("place-lon"), error: at("place-error") },
   state,
 );
-const series = new SeriesPanel({ plot: at("series"), table: at("series-table") });
+const series = new SeriesPanel({ plot: at("series"), line: at("series-now"), table: at("series-table") });
 const flags = new FlagsPanel(at("flag-table"), state);
 const masthead = new MastheadPanel(
   {
@@ -128,11 +129,13 @@ async function loadDay() {
     const sameRegion = scene?.day.region.key === region;
     const view = state.view;
     const time = view.minute === null ? firstTime(found) : found.times[nearest(found.times, found.start + view.minute * 60000)];
+    settling = true;
     scene = { view, day: found, time, fields: null, index: 0, siteStates, rays: [], coast: sameRegion ? scene.coast : [], theme: masthead.theme };
     state.change(
       { minute: Math.round((time - found.start) / 60000), place: view.place ?? /** @type {[number, number]} */ (firstPlace(found)) },
       { step: "none" },
     );
+    settling = false;
     scene.view = state.view;
     at("main").dataset.loading = "false";
     showAll();
@@ -180,6 +183,7 @@ async function loadFields() {
     scene.fields = fields;
     scene.index = nearest(fields.times, wanted);
     chart.show(scene);
+    begin();
     // The hours to either side come while the reader looks.
     const { day } = scene;
     for (const away of [3600000, -3600000]) {
@@ -187,10 +191,13 @@ async function loadFields() {
       if (next >= day.times[0] && next <= day.times[day.times.length - 1]) hourOf(next).catch(() => {});
     }
   } catch (error) {
+    begin();
     if (mine === scene && wanted === scene.time) chart.note(error.message);
   }
 }
 
+/** True while a loaded day fills what the link left open: that is no wish of the reader. */
+let settling = false;
 let readingSoon = 0;
 
 async function loadReading() {
@@ -256,7 +263,7 @@ function empty() {
 
 state.addEventListener("change", (event) => {
   const changed = /** @type {CustomEvent<Set<string>>} */ (event).detail;
-  if (!scene || !days.length) return;
+  if (!scene || settling) return;
   if (changed.has("region") || changed.has("day")) {
     loadDay();
     return;

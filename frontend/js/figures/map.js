@@ -52,8 +52,9 @@ export function aspectOf(frame) {
 }
 
 /**
+ * The chart as a figure. `notes` are words along lines: for plotly they also stand among the layout's annotations.
  * @param {MapContents} contents
- * @returns {{data: object[], layout: object}}
+ * @returns {{data: any[], layout: any, notes: any[]}}
  */
 export function mapFigure(contents) {
   const palette = PALETTES[contents.theme];
@@ -67,8 +68,8 @@ export function mapFigure(contents) {
   const { traces, notes } = flagTraces(contents, palette);
   data.push(...traces, ...placeTraces(contents.place ?? null, contents.frame, palette));
   const layout = layoutOf(contents, palette);
-  layout.annotations.push(...notes);
-  return { data, layout };
+  if (contents.title) layout.annotations.push(...notes.map(({ rim, ...note }) => ({ ...note, font: { ...note.font, shadow: halo(palette) } })));
+  return { data, layout, notes };
 }
 
 const QUIET = { hoverinfo: "skip", showlegend: false };
@@ -170,7 +171,7 @@ function coastTraces(coast, palette) {
   }
   const common = { ...QUIET, type: "scatter", mode: "lines", x, y };
   return [
-    { ...common, name: "coast halo", line: { color: withAlpha(palette.paper, 0.75), width: 3.4, simplify: false } },
+    { ...common, name: "coast halo", line: { color: withAlpha(palette.paper, 0.6), width: 2.8, simplify: false } },
     { ...common, name: "coast", line: { color: palette.ink, width: 1.1, simplify: false } },
   ];
 }
@@ -244,9 +245,10 @@ function siteTraces(contents, palette) {
       name: "site names",
       x: sites.map((site) => site.lon),
       y: sites.map((site) => site.lat),
-      text: sites.map((site) => `<br><br><br>${site.name}${loud(site) || site.state === "unseen" ? ` · ${STATE_WORDS[site.state].name}` : ""}`),
-      textposition: "middle center",
-      textfont: { size: 11, color: palette.ink, shadow: halo(palette) },
+      text: sites.map((site) => `<br>${site.name}${loud(site) || site.state === "unseen" ? ` · ${STATE_WORDS[site.state].name}` : ""}`),
+      textposition: "bottom center",
+      textfont: { size: 12, color: palette.ink, ...(contents.title ? { shadow: halo(palette) } : {}) },
+      meta: { rim: palette.paper },
     },
   ];
 }
@@ -286,7 +288,8 @@ function flagTraces(contents, palette) {
           text: `${fixed(flag.speed, 0)} m/s`,
           textangle: drawn.label.angle,
           showarrow: false,
-          font: { size: 12, color: palette.ink, shadow: halo(palette) },
+          font: { size: 12.5, color: palette.ink },
+          rim: palette.paper,
         });
       }
       continue;
@@ -327,6 +330,21 @@ function placeTraces(place, frame, palette) {
   ];
 }
 
+/** Room around the chart on the screen, for its frame and its degrees. @param {number} width */
+export function marginOf(width) {
+  return width < 480 ? { l: 42, r: 8, t: 8, b: 28 } : { l: 54, r: 10, t: 10, b: 32 };
+}
+
+/**
+ * Height of the chart on the screen that draws it true to shape.
+ * @param {Frame} frame
+ * @param {number} width
+ */
+export function heightOf(frame, width) {
+  const { l, r, t, b } = marginOf(width);
+  return Math.round((width - l - r) / aspectOf(frame)) + t + b;
+}
+
 /** @param {MapContents} contents */
 function layoutOf(contents, palette) {
   const { frame, width = 700 } = contents;
@@ -351,12 +369,12 @@ function layoutOf(contents, palette) {
     ticks: "outside",
     ticklen: 9,
     tickcolor: "rgba(0,0,0,0)",
-    constrain: "domain",
+    ...(printed ? { constrain: "domain" } : {}),
   };
   return {
     paper_bgcolor: printed ? palette.paper : "rgba(0,0,0,0)",
     plot_bgcolor: palette.paper,
-    margin: printed ? { l: 76, r: 40, t: 76, b: 84 } : { l: small ? 40 : 50, r: 10, t: 10, b: 30 },
+    margin: printed ? { l: 76, r: 40, t: 76, b: 84 } : marginOf(width),
     font: { ...font, color: palette.ink },
     showlegend: false,
     hovermode: false,
@@ -370,8 +388,7 @@ function layoutOf(contents, palette) {
     yaxis: {
       ...axis,
       range: [frame.south, frame.north],
-      scaleanchor: "x",
-      scaleratio: 1 / Math.cos((((frame.south + frame.north) / 2) * Math.PI) / 180),
+      ...(printed ? { scaleanchor: "x", scaleratio: 1 / Math.cos((((frame.south + frame.north) / 2) * Math.PI) / 180) } : {}),
       tickvals: lat.values,
       ticktext: lat.values.map((v) => latText(v, decimals(lat.step))),
     },
@@ -407,8 +424,8 @@ function ladder(frame, lon, lat, palette) {
       for (const end of [0, 1]) {
         bars.push(
           horizontal
-            ? { type: "rect", xref: "x", yref: "y", x0: cut[i], x1: cut[i + 1], ysizemode: "pixel", yanchor: end ? frame.north : frame.south, y0: 0, y1: end ? thick : -thick, fillcolor, line, layer: "above" }
-            : { type: "rect", xref: "x", yref: "y", y0: cut[i], y1: cut[i + 1], xsizemode: "pixel", xanchor: end ? frame.east : frame.west, x0: 0, x1: end ? thick : -thick, fillcolor, line, layer: "above" },
+            ? { type: "rect", xref: "x", yref: "y domain", x0: cut[i], x1: cut[i + 1], ysizemode: "pixel", yanchor: end, y0: 0, y1: end ? thick : -thick, fillcolor, line, layer: "above" }
+            : { type: "rect", xref: "x domain", yref: "y", y0: cut[i], y1: cut[i + 1], xsizemode: "pixel", xanchor: end, x0: 0, x1: end ? thick : -thick, fillcolor, line, layer: "above" },
         );
       }
     }

@@ -2,13 +2,12 @@
  * The delay of one place over the day, with its band of uncertainty, as a plotly figure. Pure.
  */
 
-import { PALETTES, withAlpha } from "../colour.js";
+import { PALETTES, roundEnd, withAlpha } from "../colour.js";
 import { hourText } from "../words.js";
 
 /**
  * @param {object} contents
  * @param {{times: number[], delay: number[], sigma: number[], slope: number[]}} contents.series  m, m, mm/km
- * @param {number} contents.time  the present time, ms UTC
  * @param {[number, number]} contents.span  ends of the time axis, as on the strip
  * @param {import("../colour.js").Theme} contents.theme
  * @param {"utc"|"local"} contents.clock
@@ -16,7 +15,7 @@ import { hourText } from "../words.js";
  * @param {number} contents.top  end of the delay axis [m]
  * @param {number} [contents.width]
  */
-export function seriesFigure({ series, time, span, theme, clock, zone, top, width = 700 }) {
+export function seriesFigure({ series, span, theme, clock, zone, top, width = 700 }) {
   const palette = PALETTES[theme];
   const x = series.times.map((ms) => new Date(ms).toISOString());
   const known = series.delay.map((v, i) => Number.isFinite(v) && Number.isFinite(series.sigma[i]));
@@ -61,10 +60,11 @@ export function seriesFigure({ series, time, span, theme, clock, zone, top, widt
         showline: true,
         linecolor: palette.edge,
         tickfont: axisFont,
+        ticklabeloverflow: "allow",
       },
       yaxis: {
         range: [0, highest],
-        nticks: 5,
+        dtick: roundEnd(highest / 5),
         fixedrange: true,
         gridcolor: palette.hairline,
         zeroline: false,
@@ -72,18 +72,6 @@ export function seriesFigure({ series, time, span, theme, clock, zone, top, widt
         ticksuffix: " m",
         tickfont: axisFont,
       },
-      shapes: [
-        {
-          type: "line",
-          xref: "x",
-          yref: "paper",
-          x0: new Date(time).toISOString(),
-          x1: new Date(time).toISOString(),
-          y0: 0,
-          y1: 1,
-          line: { color: palette.accent, width: 1.5 },
-        },
-      ],
     },
   };
 }

@@ -2,8 +2,9 @@
  * The map: draws the scene, turns clicks and arrow keys into a chosen place.
  */
 
-import { draw, erase, placeUnder, takePicture } from "../drawing.js";
-import { aspectOf, frameOf, mapFigure } from "../figures/map.js";
+import { draw, erase, takePicture } from "../drawing.js";
+import { aspectOf, frameOf, heightOf, mapFigure } from "../figures/map.js";
+import { paint, projection } from "../painting.js";
 import { bothClocks, dateText, LAYER_WORDS, WORDS } from "../words.js";
 
 export class ChartPanel {
@@ -14,12 +15,16 @@ export class ChartPanel {
   #note;
   #watcher;
   #scene = null;
-  #drawing = false;
-  #again = false;
+  #cells;
+  #frame;
+  #framed = "";
+  /** @type {import("../painting.js").Projection|null} */ #projection = null;
 
-  /** @param {{map: HTMLElement, title: HTMLElement, time: HTMLElement, note: HTMLElement}} elements @param {import("../state.js").State} state */
-  constructor({ map, title, time, note }, state) {
+  /** @param {{map: HTMLElement, cells: HTMLCanvasElement, frame: HTMLElement, title: HTMLElement, time: HTMLElement, note: HTMLElement}} elements @param {import("../state.js").State} state */
+  constructor({ map, cells, frame, title, time, note }, state) {
     this.#element = map;
+    this.#cells = cells;
+    this.#frame = frame;
     this.#title = title;
     this.#time = time;
     this.#note = note;
@@ -70,7 +75,7 @@ export class ChartPanel {
     this.#watcher.disconnect();
     this.#element.removeEventListener("click", this.#click);
     this.#element.removeEventListener("keydown", this.#key);
-    erase(this.#element);
+    erase(this.#frame);
   }
 
   #contents() {
@@ -97,29 +102,38 @@ export class ChartPanel {
     };
   }
 
-  /** One drawing at a time; what arrives meanwhile is drawn once, as it then stands. */
-  async #paint() {
-    if (this.#drawing) {
-      this.#again = true;
-      return;
-    }
-    this.#drawing = true;
-    try {
-      do {
-        this.#again = false;
-        await draw(this.#element, mapFigure(this.#contents()));
-        this.#element.dataset.time = String(this.#scene.time);
-        this.#element.dataset.drawn = this.#scene.fields ? "fields" : "base";
-        if (this.#scene.fields && !performance.getEntriesByName("first map").length) performance.mark("first map");
-      } while (this.#again);
-    } finally {
-      this.#drawing = false;
+  /** The cells and all that stands on them at once, on canvas; plotly's axes and frame only when they change. */
+  #paint() {
+    if (!this.#scene || !this.#element.clientWidth) return;
+    const contents = this.#contents();
+    const width = this.#element.clientWidth;
+    const height = heightOf(contents.frame, width);
+    this.#element.style.height = `${height}px`;
+    const figure = mapFigure(contents);
+    this.#projection = projection(figure.layout, width, height);
+    paint(this.#cells, figure, this.#projection);
+    this.#element.dataset.time = String(this.#scene.time);
+    this.#element.dataset.flags = contents.flags.map((flag) => flag.kind).join(" ");
+    const complete = contents.fields && contents.index >= 0;
+    this.#element.dataset.drawn = complete ? "fields" : "base";
+    if (complete && !performance.getEntriesByName("first map").length) performance.mark("first map");
+    const key = JSON.stringify([contents.frame, contents.theme, width, height]);
+    if (key !== this.#framed) {
+      this.#framed = key;
+      draw(this.#frame, { data: [], layout: { ...figure.layout, plot_bgcolor: "rgba(0,0,0,0)" } }).catch((error) => {
+        this.#framed = "";
+        this.note(error.message);
+      });
     }
   }
 
   #click = (event) => {
-    const place = placeUnder(this.#element, event);
-    if (place) this.#state.change({ place: [Number(place[0].toFixed(3)), Number(place[1].toFixed(3))] });
+    const p = this.#projection;
+    if (!p) return;
+    const box = this.#element.getBoundingClientRect();
+    const [x, y] = [event.clientX - box.left, event.clientY - box.top];
+    if (x < p.left || x > p.right || y < p.top || y > p.bottom) return;
+    this.#state.change({ place: [Number(p.lat(y).toFixed(3)), Number(p.lon(x).toFixed(3))] });
   };
 
   #key = (event) => {

@@ -13,13 +13,12 @@ export class SeriesPanel {
   #scene = null;
   #series = null;
   #watcher;
-  #drawing = false;
-  #again = false;
+  #drawn = "";
 
-  /** @param {{plot: HTMLElement, table: HTMLElement}} elements */
+  /** @param {{plot: HTMLElement, line: HTMLElement, table: HTMLElement}} elements */
   constructor(elements) {
     this.#elements = elements;
-    this.#watcher = new ResizeObserver(() => this.#series && this.#paint());
+    this.#watcher = new ResizeObserver(() => this.#series && this.#place());
     this.#watcher.observe(elements.plot);
     elements.table.closest("details")?.addEventListener("toggle", this.#fillTable);
   }
@@ -27,7 +26,7 @@ export class SeriesPanel {
   /** @param {import("../main.js").Scene} scene */
   show(scene) {
     this.#scene = scene;
-    if (this.#series) this.#paint();
+    if (this.#series) this.#place();
     else this.#elements.plot.textContent = scene.view.place ? "" : WORDS.choosePlace;
   }
 
@@ -36,7 +35,8 @@ export class SeriesPanel {
     if (series && !this.#series) this.#elements.plot.textContent = "";
     this.#series = series;
     this.#fillTable();
-    if (series) this.#paint();
+    this.#elements.line.hidden = !series;
+    if (series) this.#place();
   }
 
   close() {
@@ -45,40 +45,27 @@ export class SeriesPanel {
     erase(this.#elements.plot);
   }
 
-  async #paint() {
-    if (this.#drawing) {
-      this.#again = true;
-      return;
-    }
-    this.#drawing = true;
-    try {
-      do {
-        this.#again = false;
-        const { day, time, theme, view } = this.#scene;
-        const half = day.times.length > 1 ? (day.times[1] - day.times[0]) / 2 : 0;
-        const series = this.#series;
-        const at = nearest(series.times, time);
-        this.#elements.plot.setAttribute(
-          "aria-label",
-          `Vertical delay at ${placeText(series.lat, series.lon)} over the day; ${withSigma(series.delay[at], series.sigma[at], "m")} at ${timeText(time)}.`,
-        );
-        await draw(
-          this.#elements.plot,
-          seriesFigure({
-            series,
-            time,
-            theme,
-            clock: view.clock,
-            zone: day.region.timezone,
-            span: [day.times[0] - half, day.times[day.times.length - 1] + half],
-            top: day.ends.delay[1],
-            width: this.#elements.plot.clientWidth,
-          }),
-        );
-      } while (this.#again);
-    } finally {
-      this.#drawing = false;
-    }
+  /** The line of now moves at once; the plot is drawn anew only when something else than time changed. */
+  #place() {
+    const { day, time, view, theme } = this.#scene;
+    const { plot, line } = this.#elements;
+    const series = this.#series;
+    const half = day.times.length > 1 ? (day.times[1] - day.times[0]) / 2 : 0;
+    const span = /** @type {[number, number]} */ ([day.times[0] - half, day.times[day.times.length - 1] + half]);
+    line.style.transform = `translateX(${((time - span[0]) / (span[1] - span[0])) * plot.clientWidth - 1}px)`;
+    const at = nearest(series.times, time);
+    plot.setAttribute(
+      "aria-label",
+      `Vertical delay at ${placeText(series.lat, series.lon)} over the day; ${withSigma(series.delay[at], series.sigma[at], "m")} at ${timeText(time)}.`,
+    );
+    const width = plot.clientWidth;
+    const key = JSON.stringify([series.lat, series.lon, day.region.key, day.day, view.clock, theme, width, plot.clientHeight]);
+    if (key === this.#drawn || !width) return;
+    this.#drawn = key;
+    const figure = seriesFigure({ series, theme, clock: view.clock, zone: day.region.timezone, span, top: day.ends.delay[1], width });
+    draw(plot, figure).catch(() => {
+      this.#drawn = "";
+    });
   }
 
   #fillTable = () => {
