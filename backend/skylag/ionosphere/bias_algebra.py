@@ -13,9 +13,9 @@ from skylag.constants import E5B_HZ, L1_HZ, L2_HZ, L5_HZ
 from skylag.tables import Biases, Bools, Ephemerides, Floats, Ints
 
 _NS = 1e9
-# Uncertainty [ns] of differential biases from broadcast group delays: half the last digit of the message at least, and
-# the agreement with precise products (IS-GPS-200 20.3.3.3.3.2: the unit of T_GD is 0.47 ns); common practice.
-_BROADCAST_SIGMA_NS = {"G": 0.5, "J": 0.8, "E": 0.5, "C": 1.0}
+# Uncertainty [ns] of differential biases from broadcast group delays, level of the constellation apart: scatter against
+# published precise biases (GPS 0.75, Galileo 0.68 on 2024-03-30) and, for BeiDou, in one receiver (2.9 on 2020-06-25).
+_BROADCAST_SIGMA_NS = {"G": 0.8, "J": 0.8, "E": 0.7, "C": 3.0}
 # A chain is as good as its variance; where a record tells none, this one [ns] serves to rank chains only.
 _RANK_SIGMA_NS = 0.3
 
