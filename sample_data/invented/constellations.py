@@ -12,6 +12,8 @@ from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
+
+from invented.places import Station, directions
 from skylag.tables import Ephemerides
 from skylag.timescales import week_and_second
 
@@ -145,9 +147,9 @@ def positions(sky: Constellation, seconds: Floats) -> tuple[Floats, Floats]:
     i = sky.i0 + sky.idot * seconds + cic * cosine + cis * sine
     node = sky.node + (sky.node_rate - EARTH_RATE) * seconds
     x, y = r * np.cos(u), r * np.sin(u)
+    across = y * np.cos(i)
     position = np.stack(
-        [x * np.cos(node) - y * np.cos(i) * np.sin(node), x * np.sin(node) + y * np.cos(i) * np.cos(node), y * np.sin(i)],
-        axis=-1,
+        [x * np.cos(node) - across * np.sin(node), x * np.sin(node) + across * np.cos(node), y * np.sin(i)], axis=-1
     )
     relativity = np.array([RELATIVITY[s] for s in sky.system]) * sky.e * np.sqrt(sky.a) * np.sin(anomaly)
     return position, sky.clock_s + sky.clock_rate * seconds + relativity
@@ -176,6 +178,14 @@ def seen_from(
         distance = np.sqrt(((turned - place) ** 2).sum(axis=-1))
         travel = distance / LIGHT_M_S
     return turned, distance, clock
+
+
+def look_from(sky: Constellation, station: Station, seconds: Floats) -> tuple[Floats, Floats, Floats, Floats, Floats]:
+    """Elevation and azimuth [deg] (E, S) at a station at true GPS times (E,), and what `seen_from` gives."""
+    position, distance, clock = seen_from(sky, station.position_m, seconds)
+    unit = (position - np.array(station.position_m)) / distance[..., None]
+    east, north, up = ((unit * axis).sum(axis=-1) for axis in directions(station.lat, station.lon))
+    return np.degrees(np.arcsin(up)), np.degrees(np.arctan2(east, north)) % 360.0, position, distance, clock
 
 
 # ------------------------------------------------------------------------------------------ the navigation message
@@ -241,7 +251,7 @@ def _number(value: float) -> str:
 def navigation_text(sky: Constellation, day: np.datetime64) -> str:
     """RINEX 3.05 navigation file of a day, GPS LNAV and Galileo F/NAV records, without a time of writing."""
     lines = [
-        f"{'     3.05':<20}{'NAVIGATION DATA':<20}{'M: MIXED':<20}RINEX VERSION / TYPE",
+        f"{'     3.05':<20}{'N: GNSS NAV DATA':<20}{'M: MIXED':<20}RINEX VERSION / TYPE",
         f"{'invented network':<20}{'sample data':<20}{'20310101 000000 GPS':<20}PGM / RUN BY / DATE",
         f"{'INVENTED DATA: no satellite ever sent this.':<60}COMMENT",
         f"{'    18':<60}LEAP SECONDS",

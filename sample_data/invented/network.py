@@ -13,13 +13,13 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 from scipy.signal import lfilter
-from skylag.tables import Biases, Ephemerides, Receiver, Signals
 
-from invented import constellations, places, weather
+from invented import constellations, weather
 from invented.constellations import LIGHT_M_S, Constellation
 from invented.places import STATIONS, Station
 from invented.plasma import GPS_HEIGHT_KM, Ionosphere
 from invented.weather import Front, Patch, Scenario
+from skylag.tables import Biases, Ephemerides, Receiver, Signals
 
 Floats = npt.NDArray[np.float64]
 Times = npt.NDArray[np.datetime64]
@@ -144,7 +144,9 @@ class Simulated:
         `top_km=2000` leaves out the greater part of the plasmasphere."""
         return self.ionosphere.vertical(lat, lon, weather.hours_since(time), top_km=top_km)
 
-    def vertical_slope(self, lat: npt.ArrayLike, lon: npt.ArrayLike, time: npt.ArrayLike, step_km: float = 4.0) -> Floats:
+    def vertical_slope(
+        self, lat: npt.ArrayLike, lon: npt.ArrayLike, time: npt.ArrayLike, step_km: float = 4.0
+    ) -> Floats:
         """True slope [mm/km on 1575.42 MHz] of the vertical delay, from columns `step_km` apart."""
         la, lo = np.asarray(lat, dtype=float), np.asarray(lon, dtype=float)
         up, across = step_km / 2 / 111.2, step_km / 2 / (111.2 * np.cos(np.radians(la)))
@@ -231,7 +233,9 @@ def simulate(
     if receivers is not None:
         wanted = [next((s for s in network if m in (s.marker, s.marker[:4])), None) for m in receivers]
         if None in wanted:
-            raise KeyError(f"no such invented receiver among {list(receivers)}; there are {[s.marker for s in network]}")
+            raise KeyError(
+                f"no such invented receiver among {list(receivers)}; there are {[s.marker for s in network]}"
+            )
         network = tuple(s for s in wanted if s is not None)
     start = np.datetime64(day, "D").astype("datetime64[ns]")
     first, last = round(hours[0] * 3600 / interval_s), round(hours[1] * 3600 / interval_s)
@@ -258,6 +262,11 @@ def small_world(
 
 
 # ------------------------------------------------------------------------------------------------- one receiver
+
+
+def _code_steps(metres: Floats) -> Floats:
+    """Codes as these receivers give them: in steps of 5 cm, well below their noise; it spares a tenth of the files."""
+    return np.asarray(np.round(np.round(metres * 20.0) / 20.0, 2))
 
 
 def _noise(rng: np.random.Generator, shape: tuple[int, int], correlation_s: float, interval_s: float) -> Floats:
@@ -311,12 +320,10 @@ def _receiver_day(
     clock_phase, clock_code = _clock(station, day_hours, chance(1))
     clock_phase, clock_code = clock_phase * scenario.clocks, clock_code * scenario.clocks
     seconds = (times - constellations.REFERENCE).astype(np.int64) / 1e9
-    satellite, distance, satellite_clock = constellations.seen_from(sky, position, seconds - clock_code)
-    unit = (satellite - np.array(position)) / distance[..., None]
-    axes = places.directions(position, station.lat, station.lon)
-    east, north, up = ((unit * axis).sum(axis=-1) for axis in axes)
-    elevation = np.degrees(np.arcsin(up))
-    azimuth = np.degrees(np.arctan2(east, north)) % 360.0
+    elevation, azimuth, satellite, distance, satellite_clock = constellations.look_from(
+        sky, station, seconds - clock_code
+    )
+    up = np.sin(np.radians(elevation))
 
     tracked = _tracked(station, elevation, azimuth, day_hours, scenario, day, chance(2))
     stec = np.full(shape, np.nan)
@@ -325,7 +332,11 @@ def _receiver_day(
     in_patch = _in_patch(ionosphere, satellite, position, hours, tracked)
 
     arcs, renewed = _arcs(tracked, interval_s, chance(3))
-    slips, slip1, slip2, told = _slips(station, times, sky, arcs, elevation, in_patch, scenario, interval_s, chance(4))
+    fault = _fault_span(station, day, scenario)
+    in_fault = (day_hours >= fault[0] - 0.05) & (day_hours < fault[1] + 0.05)
+    slips, slip1, slip2, told = _slips(
+        station, times, sky, arcs, elevation, in_patch, in_fault, scenario, interval_s, chance(4)
+    )
 
     # Everything that is not the ionosphere, a code bias or noise [m].
     troposphere = 2.35 * np.exp(-station.height_m / 8000.0) / np.sqrt(up**2 + 0.0021)
@@ -344,8 +355,11 @@ def _receiver_day(
     multipath = {band: _noise(noise, shape, correlation_s, interval_s) for band in "125"}
     carrier = {band: _noise(noise, shape, 180.0, interval_s) for band in "125"}
 
+    no_code, no_phase = _second_losses(shape, float(day_hours[-1] - day_hours[0]), scenario, chance(8))
     for code in code_names:
         band = code[1]
+        code_lost = no_code if band != "1" else np.zeros(shape, dtype=bool)
+        phase_lost = no_phase if band != "1" else np.zeros(shape, dtype=bool)
         owners = np.zeros(shape[1], dtype=bool)
         if code in GPS_CODES[station.gps]:
             owners |= gps
@@ -358,7 +372,7 @@ def _receiver_day(
         reflected = multipath[band] * (0.10 + 0.75 * steep) * scenario.multipath * station.multipath
         value = base + LIGHT_M_S * (clock_code[:, None] + (total_bias + second) * 1e-9)
         value = value + DELAY_M_PER_TECU[band] * stec + white + reflected
-        values[code] = np.where(tracked & owners, np.round(value, 2), np.nan)
+        values[code] = np.where(tracked & owners & ~code_lost, _code_steps(value), np.nan)
 
         phase = phase_of[code]
         # A receiver with both first-frequency codes follows one carrier: L1C for Galileo and civil GPS, else L1W.
@@ -369,10 +383,14 @@ def _receiver_day(
         reflected = carrier[band] * (0.0008 + 0.0030 * steep) * scenario.phase_noise
         metres = base + LIGHT_M_S * clock_phase[:, None] - DELAY_M_PER_TECU[band] * stec + white + reflected
         cycles = metres / length + start_phase[arcs, 0 if band == "1" else 1] + (slip1 if band == "1" else slip2)
-        values[phase] = np.where(tracked & owners, np.round(cycles, 3), np.nan)
-        lock[phase] = np.where(tracked & owners & (told | renewed), 1, 0).astype(np.uint8)
+        values[phase] = np.where(tracked & owners & ~phase_lost, np.round(cycles, 3), np.nan)
+        lock[phase] = np.where(tracked & owners & ~phase_lost & (told | renewed), 1, 0).astype(np.uint8)
     strength = np.round(30.0 + 21.0 * np.sqrt(np.clip(up, 0.0, 1.0)) - 1.5 * np.abs(multipath["1"]) * steep)
-    values["S1W" if "C1W" in code_names and station.gps == "W" else "S1C"] = np.where(tracked, strength, np.nan)
+    if station.gps == "W":
+        values["S1W"] = np.where(tracked & gps, strength, np.nan)
+        values["S1C"] = np.where(tracked & galileo, strength, np.nan)
+    else:
+        values["S1C"] = np.where(tracked, strength, np.nan)
 
     faults = _spoil(station, day, day_hours, values, scenario, chance(7))
     resets = np.zeros(len(times), dtype=bool)
@@ -384,7 +402,7 @@ def _receiver_day(
             back = np.flatnonzero(day_hours >= last)
             if power and len(back):
                 resets[back[0]] = True
-    receiver = Receiver(station.marker, position, antenna="INVENTED DOME    NONE", type="INVENTED")
+    receiver = Receiver(station.marker, position, antenna="INVENTED        NONE", type="INVENTED")
     held = tracked.any(axis=1)
     shown = {name: array[held] for name, array in values.items()}
     signals = Signals(
@@ -392,6 +410,8 @@ def _receiver_day(
         lock={name: array[held] for name, array in lock.items()}, channels={}, resets=resets[held],
         interval_s=float(interval_s),
     )  # fmt: skip
+    # A fault ends every ambiguity: what comes after it is another arc.
+    arcs = np.where(tracked & (day_hours >= fault[1])[:, None] & (fault[1] > 0.0), arcs + 100_000, arcs)
     truth = Truth(
         receiver=receiver, times=times[held], satellites=sky.satellites.copy(), stec=stec[held],
         elevation=elevation[held], azimuth=azimuth[held], ambiguity=np.where(tracked, arcs, -1)[held],
@@ -415,14 +435,29 @@ def _tracked(
     tracked = elevation > horizon
     if not scenario.gaps:
         return np.asarray(tracked)
-    # Short losses of single satellites, one to six epochs, about one in three hours of a receiver.
-    count = rng.poisson(len(day_hours) * 48 / 48 * (day_hours[-1] - day_hours[0]) / max(len(day_hours), 1) / 3.0 * 3)
-    for _ in range(int(count)):
+    # Short losses, one to six epochs, one an hour of a satellite drawn from all: one in three is in sight.
+    for _ in range(int(rng.poisson(float(day_hours[-1] - day_hours[0])))):
         e, s, length = rng.integers(0, len(day_hours)), rng.integers(0, tracked.shape[1]), rng.integers(1, 7)
         tracked[e : e + length, s] = False
     for first, last, _ in _outages(station, day, scenario):
         tracked[(day_hours >= first) & (day_hours < last)] = False
     return np.asarray(tracked)
+
+
+def _second_losses(
+    shape: tuple[int, int], span_h: float, scenario: Scenario, rng: np.random.Generator
+) -> tuple[npt.NDArray[np.bool_], npt.NDArray[np.bool_]]:
+    """(E, S) where the second code, and where the second phase, is missing for one to four epochs.
+
+    The first frequency goes on and the ambiguities hold; half of the losses take the code alone.
+    """
+    no_code, no_phase = np.zeros(shape, dtype=bool), np.zeros(shape, dtype=bool)
+    if scenario.gaps:
+        for _ in range(int(rng.poisson(1.5 * span_h))):
+            e, s, length = rng.integers(0, shape[0]), rng.integers(0, shape[1]), rng.integers(1, 5)
+            no_code[e : e + length, s] = True
+            no_phase[e : e + length, s] = bool(rng.random() < 0.5)
+    return no_code, no_phase
 
 
 def _in_patch(
@@ -475,7 +510,8 @@ def _arcs(
 
 def _slips(
     station: Station, times: Times, sky: Constellation, arcs: npt.NDArray[np.int64], elevation: Floats,
-    in_patch: npt.NDArray[np.bool_], scenario: Scenario, interval_s: float, rng: np.random.Generator,
+    in_patch: npt.NDArray[np.bool_], in_fault: npt.NDArray[np.bool_], scenario: Scenario, interval_s: float,
+    rng: np.random.Generator,
 ) -> tuple[tuple[Slip, ...], npt.NDArray[np.int64], npt.NDArray[np.int64], npt.NDArray[np.bool_]]:  # fmt: skip
     """The slips, their running sums on both carriers (E, S), and the loss-of-lock bits set beside arc starts."""
     shape = arcs.shape
@@ -483,8 +519,11 @@ def _slips(
     told = np.zeros(shape, dtype=bool)
     if not scenario.slips:
         return (), slip1, slip2, told
-    inside = (arcs > 0) & (np.roll(arcs, 1, axis=0) == arcs)
-    inside[0] = False
+    # Not in the first or last three epochs of an arc, where a slip is no more than a shorter arc.
+    inside = (arcs > 0) & ~in_fault[:, None]
+    for step in (-3, -2, -1, 1, 2, 3):
+        inside &= np.roll(arcs, step, axis=0) == arcs
+    inside[:3] = inside[-3:] = False
     good = np.argwhere(inside & (elevation > 10.0))
     taken: list[tuple[int, int, str]] = []
     span_h = len(times) * interval_s / 3600.0
@@ -500,7 +539,7 @@ def _slips(
                 taken.append((int(e), int(columns[0]), where))
     stormy = np.argwhere(inside & in_patch)
     if len(stormy):
-        count = int(rng.binomial(len(stormy), min(1.0, 0.006 * interval_s / 30.0)))
+        count = int(rng.binomial(len(stormy), min(1.0, 0.012 * interval_s / 30.0)))
         for e, s in stormy[rng.integers(0, len(stormy), count)]:
             taken.append((int(e), int(s), "patch"))
     slips, used = [], set()
@@ -525,14 +564,17 @@ def _slips(
     return tuple(sorted(slips, key=lambda slip: (slip.time, slip.satellite))), slip1, slip2, told
 
 
+def _fault_span(station: Station, day: str, scenario: Scenario) -> tuple[float, float]:
+    """First and last hour of the receiver's fault; an empty span where it has none."""
+    return FAULTS.get((day, station.marker), (-1e3, -1e3)) if scenario.faults else (-1e3, -1e3)
+
+
 def _spoil(
     station: Station, day: str, day_hours: Floats, values: dict[str, Floats], scenario: Scenario,
     rng: np.random.Generator,
 ) -> tuple[tuple[np.datetime64, np.datetime64], ...]:  # fmt: skip
     """Corrupt the fault span in place: wild codes, phases stepping and running away together on one carrier."""
-    span = FAULTS.get((day, station.marker))
-    if span is None or not scenario.faults:
-        return ()
+    span = _fault_span(station, day, scenario)
     inside = np.flatnonzero((day_hours >= span[0]) & (day_hours < span[1]))
     if not len(inside):
         return ()
@@ -540,8 +582,8 @@ def _spoil(
     for name in sorted(values):
         shape = (len(inside), satellites)
         if name.startswith("C"):
-            wild = rng.standard_normal(shape) * 12.0 + np.where(rng.random(shape) < 0.15, rng.uniform(-300, 300, shape), 0)
-            values[name][inside] = np.round(values[name][inside] + wild, 2)
+            wild = np.where(rng.random(shape) < 0.15, rng.uniform(-300, 300, shape), 12.0 * rng.standard_normal(shape))
+            values[name][inside] = _code_steps(values[name][inside] + wild)
         elif name.startswith("L"):
             steps = np.where(rng.random(shape) < 0.12, rng.integers(-2000, 2000, shape), 0)
             # A common run-away of the second carrier: looks like a wall to whoever trusts this receiver.

@@ -44,7 +44,7 @@ STATIONS = (
     Station("HLRN00XBS", "Hollerin", -38.71, 143.41, 214.0, clock="slow"),
     Station("TWSK00XBS", "Twinsack", -38.04, 144.33, 38.0, gps="CW"),
     Station("QUDL00XBS", "Quaddle Bay", -38.44, 145.72, 47.0, gps="C"),
-    Station("VANP00XBS", "Vantapool", -38.71, 146.38, 25.0),
+    Station("VANP00XBS", "Vantapool", -38.62, 146.08, 55.0),
     Station("LURB00XBS", "Lurbeck", -37.78, 147.83, 84.0, clock="jumps"),
     Station("EDRO00XBS", "Eddrow", -37.52, 149.62, 133.0),
     Station("OXBR00XBS", "Oxbarren", -36.93, 145.24, 121.0, clock="slow"),
@@ -65,17 +65,17 @@ TIMEZONE = "Etc/GMT-10"
 # name, latitude, longitude, kind
 SITES = (
     ("Cravendell aerodrome", -37.99, 144.62, "aerodrome"),
-    ("Pellbury aerodrome", -38.20, 146.47, "aerodrome"),
-    ("Kelm Isle airstrip", -39.88, 143.88, "aerodrome"),
-    ("Fennock Isle airstrip", -40.10, 148.00, "aerodrome"),
-    ("Stonnet aerodrome", -41.54, 147.20, "aerodrome"),
-    ("Ironmoor aerodrome", -42.84, 147.50, "aerodrome"),
+    ("Pellbury aerodrome", -38.03, 146.72, "aerodrome"),
+    ("Kelm Isle airstrip", -39.80, 143.95, "aerodrome"),
+    ("Fennock Isle airstrip", -40.17, 148.08, "aerodrome"),
+    ("Stonnet aerodrome", -41.68, 147.02, "aerodrome"),
+    ("Ironmoor aerodrome", -42.62, 147.32, "aerodrome"),
     ("Windrace sea-floor survey", -39.60, 146.00, "survey"),
     ("Garnook road survey", -38.33, 143.60, "survey"),
     ("Hobbinstead dam survey", -41.70, 146.35, "survey"),
     ("Eddrow coast survey", -37.60, 149.30, "survey"),
-    ("Port Sallow", -38.35, 144.95, "port"),
-    ("Port Tamsin", -41.10, 146.82, "port"),
+    ("Port Sallow", -38.37, 142.62, "port"),
+    ("Port Tamsin", -41.06, 147.10, "port"),
 )
 
 
@@ -97,7 +97,7 @@ def ecef(lat: Floats, lon: Floats, height_m: Floats) -> Floats:
     return np.stack([across * np.cos(lon_rad), across * np.sin(lon_rad), up * np.ones_like(lon_rad)], axis=-1)
 
 
-def directions(position_m: tuple[float, float, float], lat: float, lon: float) -> Floats:
+def directions(lat: float, lon: float) -> Floats:
     """Unit vectors east, north, up as rows (3, 3) at a place."""
     la, lo = np.radians(lat), np.radians(lon)
     east = [-np.sin(lo), np.cos(lo), 0.0]

@@ -2,8 +2,8 @@
 
 Density = E layer + F layer (skewed Chapman-like profiles whose peak and height follow latitude, local time and the
 scenario), up to 2000 km; plus a plasmasphere aligned with a tilted dipole, from 500 km to the satellites; plus the
-plume of the storm, an upright wall of its own profile.  The irregular patch is a thin sheet.  All forms are invented for
-this purpose: none is a published model.  Points are Earth-fixed; heights are above the WGS 84 ellipsoid.
+plume of the storm, an upright wall of its own profile.  The irregular patch is a thin sheet.  All forms are invented
+for this purpose: none is a published model.  Points are Earth-fixed; heights are above the WGS 84 ellipsoid.
 
 Left out on purpose: bending of rays, the second-order terms of refraction, and phase wind-up.
 """
@@ -75,10 +75,9 @@ def _waves(seed: int) -> tuple[Wave, ...]:
         heading = np.radians(rng.uniform(-50.0, 50.0))  # mostly equatorward, as by day
         period = rng.uniform(0.35, 0.9)
         k = 2 * np.pi / length
-        waves.append(
-            Wave(rng.uniform(0.002, 0.006), k * np.sin(heading), k * np.cos(heading), k * 0.7, -2 * np.pi / period,
-                 rng.uniform(0, 2 * np.pi))  # fmt: skip
-        )
+        amplitude, phase = rng.uniform(0.002, 0.006), rng.uniform(0, 2 * np.pi)
+        turn = -2 * np.pi / period
+        waves.append(Wave(amplitude, k * np.sin(heading), k * np.cos(heading), k * 0.7, turn, phase))
     return tuple(waves)
 
 
@@ -86,7 +85,7 @@ def _waves(seed: int) -> tuple[Wave, ...]:
 class Ionosphere:
     """The invented ionosphere of a scenario.  Times are hours since the first midnight, content is TECU."""
 
-    scenario: Scenario = Scenario()
+    scenario: Scenario = field(default_factory=Scenario)
     seed: int = 2031
     front: Front = field(init=False)
     patch: Patch = field(init=False)

@@ -137,8 +137,8 @@ def place_of(east_km: float, north_km: float) -> tuple[float, float]:
 class FrontNow:
     """The wall at an instant: a point on it (nearest to MIDDLE), where it goes, how high and how steep it is.
 
-    heading [deg, toward which it moves; the content grows toward it], speed [m/s], jump [TECU, vertical], slope_mm_per_km
-    the steepest vertical slope, width_km between 10 and 90 % of the jump.
+    heading [deg, toward which it moves; the content grows toward it], speed [m/s], jump [TECU, vertical],
+    slope_mm_per_km the steepest vertical slope, width_km between 10 and 90 % of the jump.
     """
 
     lat: float
@@ -214,18 +214,18 @@ class Patch:
     scenario: Scenario
     seed: int = 2031
     sheet_km: float = 350.0
-    radius_km: float = 100.0
+    radius_km: float = 115.0
     first_hours: float = 31.0
     last_hours: float = 33.1
     heading_deg: float = 285.0
-    speed_m_s: float = 45.0
-    rms_tecu: float = 0.85
+    speed_m_s: float = 70.0
+    rms_tecu: float = 1.15
 
     def centre_km(self, hours: Floats) -> tuple[Floats, Floats]:
         """Centre on the plane [km]: from the east coast of the southern land across the strait."""
         heading = np.radians(self.heading_deg)
         travelled = self.speed_m_s * 3.6 * (np.asarray(hours) - self.first_hours)
-        return 165.0 + travelled * np.sin(heading), -100.0 + travelled * np.cos(heading)
+        return 230.0 + travelled * np.sin(heading), -85.0 + travelled * np.cos(heading)
 
     def strength(self, hours: Floats) -> Floats:
         """Share of the full amplitude, from 0 to 1: a quarter of an hour to rise, a quarter of an hour to fade."""
