@@ -35,7 +35,7 @@ def pytest_runtest_makereport(item: pytest.Item) -> Generator[None, pytest.TestR
     if report.skipped and not hasattr(report, "wasxfail") and os.environ.get("SKYLAG_NO_SKIPS") == "1":
         wanted = {"browser", "database"} | ({"open_data"} if os.environ.get("SKYLAG_OPEN_DATA") else set())
         asked_for = {mark.name for mark in item.iter_markers()} | set(getattr(item, "fixturenames", ()))
-        asked_for |= {"database"} if "postgres_server" in asked_for else set()
+        asked_for |= {"database"} if asked_for & {"postgres_server", "archive_place"} else set()
         if wanted & asked_for:
             reason = report.longrepr[2] if isinstance(report.longrepr, tuple) else str(report.longrepr)
             report.outcome = "failed"
@@ -86,7 +86,7 @@ def archive_place(request: pytest.FixtureRequest, tmp_path: Path) -> str:
     if request.param == "sqlite":
         return str(tmp_path / "archive.sqlite")
     server: PostgresServer = request.getfixturevalue("postgres_server")
-    return f"{server.new_database()}&slant_folder={tmp_path / 'slants'}"
+    return f"{server.empty_database()}&slant_folder={tmp_path / 'slants'}"
 
 
 @pytest.fixture

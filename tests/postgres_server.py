@@ -7,6 +7,7 @@ import contextlib
 import os
 import pwd
 import shutil
+import signal
 import subprocess
 import tempfile
 import time
@@ -46,12 +47,11 @@ def _other_user() -> dict[str, Any]:
 
 
 class PostgresServer:
-    """One running server; `new_database` gives the URL of a new, empty database."""
+    """One running server; `empty_database` gives the URL of a database with nothing in it."""
 
     def __init__(self) -> None:
         programs, self._user = _program_folder(), _other_user()
         self._folder = Path(tempfile.mkdtemp(prefix="skylag-postgres-"))
-        self._made = 0
         self._process: subprocess.Popen[bytes] | None = None
         if self._user:
             os.chown(self._folder, self._user["user"], self._user["group"])
@@ -89,19 +89,21 @@ class PostgresServer:
                     raise RuntimeError(f"PostgreSQL did not start: {said}") from None
                 time.sleep(0.1)
 
-    def new_database(self) -> str:
-        """URL of a new, empty database."""
-        self._made += 1
-        name = f"trial_{self._made}"
-        engine = sa.create_engine(self.url("postgres"), isolation_level="AUTOCOMMIT", poolclass=sa.NullPool)
+    def empty_database(self) -> str:
+        """URL of the one database of this server, emptied: far quicker than a new one for each test."""
+        url = self.url("postgres")
+        engine = sa.create_engine(url, isolation_level="AUTOCOMMIT", poolclass=sa.NullPool)
         with engine.connect() as connection:
-            connection.exec_driver_sql(f"CREATE DATABASE {name}")
-        return self.url(name)
+            others = "SELECT pg_terminate_backend(pid) FROM pg_stat_activity WHERE pid <> pg_backend_pid()"
+            connection.exec_driver_sql(f"{others} AND backend_type = 'client backend'")
+            connection.exec_driver_sql("DROP SCHEMA public CASCADE")
+            connection.exec_driver_sql("CREATE SCHEMA public")
+        return url
 
     def close(self) -> None:
         """Stop the server and remove its folder."""
         if self._process is not None:
-            self._process.terminate()
+            self._process.send_signal(signal.SIGINT)  # PostgreSQL: end now, do not wait for clients
             try:
                 self._process.wait(timeout=10)
             except subprocess.TimeoutExpired:

@@ -25,6 +25,7 @@ from skylag.tables import UNSEEN, Biases, Fields, Flag, Products, Rays, Samples,
 
 BUSY_WAIT_S = 30.0
 
+_PREPARE_LOCK = 0x536B794C  # any number that is ours
 _HOUR_NS = 3600 * 10**9
 Day = np.datetime64 | str  # a GPS-time day, like 2031-05-11
 _Result = TypeVar("_Result")
@@ -320,6 +321,8 @@ class Archive:
 
     def _prepare(self, connection: Connection) -> None:
         """Make the tables where there are none; refuse a database whose form is newer than this program."""
+        if connection.dialect.name == "postgresql":  # two processes that open a new database take turns
+            connection.execute(sa.select(sa.func.pg_advisory_xact_lock(_PREPARE_LOCK)))
         schema.metadata.create_all(connection)
         found = connection.scalar(sa.select(sa.func.max(schema.schema_version.c.version)))
         if found is None:
