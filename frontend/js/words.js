@@ -28,8 +28,6 @@ export const KIND_WORDS = {
 };
 
 export const WORDS = {
-  caution:
-    "Planning aid, not for navigation. Official notices and the service provider decide.",
   simulated: "Simulated data: an invented network, invented days. Nothing here happened.",
   loadingDay: "Opening the day …",
   loadingMap: "Fetching this hour …",
@@ -44,6 +42,11 @@ export const WORDS = {
   offline: "The page cannot reach the service on this machine. Is it still running?",
   strangeAnswer: "The service gave an answer this page does not understand",
   tryAgain: "Try again",
+  allHold: "Corrections hold at every site.",
+  /** @param {number} count */
+  andMore: (count) => (count === 1 ? "And one more site." : `And ${count} more sites.`),
+  /** @param {number} minutes */
+  stripHelp: (minutes) => `Drag, or use the arrow keys: ${minutes} minutes a step, with shift an hour, Home and End for the ends.`,
   sigma: "± is one standard deviation.",
 };
 
@@ -206,7 +209,8 @@ export function flagSentence(flag) {
 export function siteSentence(site, state, reason) {
   const plain = `${site}: ${STATE_WORDS[state].name}`;
   if (!reason) return state === "holds" ? `${plain}.` : `${plain}, ${STATE_WORDS[state].means}.`;
-  return `${plain}. ${reason}`;
+  const rest = reason.startsWith(`${state}: `) ? reason.slice(state.length + 2) : reason;
+  return `${plain}, ${rest.replace(/[.\s]+$/, "")}.`;
 }
 
 /** @param {number} count @param {string} one @param {string} [many] */

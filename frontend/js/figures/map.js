@@ -58,18 +58,25 @@ export function aspectOf(frame) {
  */
 export function mapFigure(contents) {
   const palette = PALETTES[contents.theme];
+  const k = sizeFactor(contents.width);
   const data = [
     ...fieldTraces(contents),
     ...coastTraces(contents.coast ?? [], palette),
-    ...rayTraces(contents.rays ?? [], palette),
-    ...receiverTraces(contents.receivers ?? [], palette),
-    ...siteTraces(contents, palette),
+    ...rayTraces(contents.rays ?? [], palette, k),
+    ...receiverTraces(contents.receivers ?? [], palette, k),
+    ...placeTraces(contents.place ?? null, contents.frame, palette),
+    ...siteTraces(contents, palette, k),
   ];
-  const { traces, notes } = flagTraces(contents, palette);
-  data.push(...traces, ...placeTraces(contents.place ?? null, contents.frame, palette));
+  const { traces, notes } = flagTraces(contents, palette, k);
+  data.push(...traces);
   const layout = layoutOf(contents, palette);
   if (contents.title) layout.annotations.push(...notes.map(({ rim, ...note }) => ({ ...note, font: { ...note.font, shadow: halo(palette) } })));
   return { data, layout, notes };
+}
+
+/** Signs and words grow a little with the chart. @param {number} [width]  pixels */
+function sizeFactor(width = 700) {
+  return Math.min(1.6, Math.max(1, width / 640));
 }
 
 const QUIET = { hoverinfo: "skip", showlegend: false };
@@ -176,7 +183,7 @@ function coastTraces(coast, palette) {
   ];
 }
 
-function rayTraces(rays, palette) {
+function rayTraces(rays, palette, k) {
   return [
     {
       ...QUIET,
@@ -186,7 +193,7 @@ function rayTraces(rays, palette) {
       x: rays.map((ray) => ray.lon),
       y: rays.map((ray) => ray.lat),
       marker: {
-        size: rays.map((ray) => 2.5 + (5 * Math.max(0, Math.min(90, ray.elevation))) / 90),
+        size: rays.map((ray) => k * (2.5 + (4 * Math.max(0, Math.min(90, ray.elevation))) / 90)),
         color: palette.ink,
         line: { color: palette.paper, width: 0.8 },
         opacity: 0.9,
@@ -195,27 +202,30 @@ function rayTraces(rays, palette) {
   ];
 }
 
-function receiverTraces(receivers, palette) {
+/** A ring, with a point inside where data are there. */
+function receiverTraces(receivers, palette, k) {
+  const fresh = receivers.filter((receiver) => receiver.fresh !== false);
+  const common = { ...QUIET, type: "scatter", mode: "markers" };
   return [
     {
-      ...QUIET,
-      type: "scatter",
-      mode: "markers",
+      ...common,
       name: "receivers",
       x: receivers.map((receiver) => receiver.lon),
       y: receivers.map((receiver) => receiver.lat),
-      marker: {
-        symbol: "circle",
-        size: 7,
-        color: receivers.map((receiver) => (receiver.fresh === false ? palette.paper : palette.ink)),
-        line: { color: receivers.map((receiver) => (receiver.fresh === false ? palette.ink : palette.paper)), width: 1.4 },
-      },
+      marker: { symbol: "circle", size: 10.5 * k, color: palette.raised, line: { color: palette.ink, width: 1.4 * k } },
+    },
+    {
+      ...common,
+      name: "receivers with data",
+      x: fresh.map((receiver) => receiver.lon),
+      y: fresh.map((receiver) => receiver.lat),
+      marker: { symbol: "circle", size: 4.5 * k, color: palette.ink, line: { color: palette.ink, width: 0 } },
     },
   ];
 }
 
 /** @param {MapContents} contents */
-function siteTraces(contents, palette) {
+function siteTraces(contents, palette, k) {
   const sites = contents.sites ?? [];
   const loud = (site) => site.state === "broken" || site.state === "strained";
   return [
@@ -227,13 +237,13 @@ function siteTraces(contents, palette) {
       x: sites.map((site) => site.lon),
       y: sites.map((site) => site.lat),
       text: sites.map((site) => `<b>${site.name.slice(0, 1)}</b>`),
-      textfont: { size: 11, color: sites.map((site) => (site.state === "broken" ? palette.paper : palette.ink)) },
+      textfont: { size: 11 * k, color: sites.map((site) => (site.state === "broken" ? palette.paper : palette.ink)) },
       marker: {
         symbol: "octagon",
-        size: 19,
+        size: 19 * k,
         color: sites.map((site) => (site.state === "broken" ? palette.states.broken.fill : palette.raised)),
         line: {
-          width: sites.map((site) => (loud(site) ? 2.6 : 1.3)),
+          width: sites.map((site) => k * (loud(site) ? 2.6 : 1.3)),
           color: sites.map((site) => (site.state ? palette.states[site.state].edge : palette.ink)),
         },
       },
@@ -247,7 +257,7 @@ function siteTraces(contents, palette) {
       y: sites.map((site) => site.lat),
       text: sites.map((site) => `<br>${site.name}${loud(site) || site.state === "unseen" ? ` · ${STATE_WORDS[site.state].name}` : ""}`),
       textposition: "bottom center",
-      textfont: { size: 12, color: palette.ink, ...(contents.title ? { shadow: halo(palette) } : {}) },
+      textfont: { size: 12 * k, color: palette.ink, ...(contents.title ? { shadow: halo(palette) } : {}) },
       meta: { rim: palette.paper },
     },
   ];
@@ -261,7 +271,7 @@ function halo(palette) {
 }
 
 /** @param {MapContents} contents */
-function flagTraces(contents, palette) {
+function flagTraces(contents, palette, k) {
   const { frame, flags = [], time } = contents;
   const size = widthKm(frame) / 42;
   const loud = { x: [], y: [] };
@@ -288,7 +298,7 @@ function flagTraces(contents, palette) {
           text: `${fixed(flag.speed, 0)} m/s`,
           textangle: drawn.label.angle,
           showarrow: false,
-          font: { size: 12.5, color: palette.ink },
+          font: { size: 12.5 * k, color: palette.ink },
           rim: palette.paper,
         });
       }
@@ -300,12 +310,17 @@ function flagTraces(contents, palette) {
     append(loud, line);
     append(lines[flag.kind === "fault" ? "other" : tone], line);
   }
-  const colours = { broken: palette.states.broken.edge, strained: palette.states.strained.edge, other: palette.ink };
+  // On the layer of states the ground already has the states' colours: there the signs are of ink.
+  const { broken, strained } = palette.states;
+  const colours =
+    contents.layer === "state"
+      ? { broken: palette.ink, strained: palette.ink, other: palette.ink }
+      : { broken: broken.edge, strained: strained.edge, other: palette.ink };
   const common = { ...QUIET, type: "scatter", mode: "lines" };
-  const traces = [{ ...common, name: "flag halo", ...loud, line: { color: withAlpha(palette.paper, 0.9), width: 6.5, simplify: false } }];
+  const traces = [{ ...common, name: "flag halo", ...loud, line: { color: withAlpha(palette.paper, 0.9), width: 6.5 * k, simplify: false } }];
   for (const tone of ["other", "strained", "broken"]) {
-    traces.push({ ...common, name: `flags ${tone}`, ...lines[tone], line: { color: colours[tone], width: 2.6, simplify: false } });
-    traces.push({ ...common, name: `combs ${tone}`, ...combs[tone], line: { color: colours[tone], width: 1.6, simplify: false } });
+    traces.push({ ...common, name: `flags ${tone}`, ...lines[tone], line: { color: colours[tone], width: 2.6 * k, simplify: false } });
+    traces.push({ ...common, name: `combs ${tone}`, ...combs[tone], line: { color: colours[tone], width: 1.7 * k, simplify: false } });
   }
   return { traces, notes };
 }
@@ -317,8 +332,8 @@ function placeTraces(place, frame, palette) {
     const [lat, lon] = place;
     const reach = widthKm(frame) / 40;
     for (const [e, n] of [[-1, 0], [1, 0], [0, -1], [0, 1]]) {
-      const [la1, lo1] = offset(lat, lon, e * reach * 0.45, n * reach * 0.45);
-      const [la2, lo2] = offset(lat, lon, e * reach * 1.3, n * reach * 1.3);
+      const [la1, lo1] = offset(lat, lon, e * reach * 1.1, n * reach * 1.1);
+      const [la2, lo2] = offset(lat, lon, e * reach * 2.1, n * reach * 2.1);
       x.push(lo1, lo2, null);
       y.push(la1, la2, null);
     }
@@ -350,10 +365,10 @@ function layoutOf(contents, palette) {
   const { frame, width = 700 } = contents;
   const printed = Boolean(contents.title);
   const small = width < 480;
-  const lon = gradations(frame.west, frame.east, small ? 4 : 8);
-  const lat = gradations(frame.south, frame.north, small ? 4 : 7);
+  const lon = gradations(frame.west, frame.east, small ? 5 : 8);
+  const lat = gradations(frame.south, frame.north, small ? 5 : 7);
   const decimals = (step) => (step >= 1 ? 0 : step >= 0.1 ? 1 : 2);
-  const font = { family: "system-ui, -apple-system, Segoe UI, Roboto, Liberation Sans, sans-serif", size: small ? 11 : 12, color: palette.muted };
+  const font = { family: "system-ui, -apple-system, Segoe UI, Roboto, Liberation Sans, sans-serif", size: small ? 11 : 12 * Math.min(1.25, sizeFactor(width)), color: palette.muted };
   const axis = {
     showgrid: true,
     gridcolor: withAlpha(palette.ink, 0.16),
@@ -394,7 +409,7 @@ function layoutOf(contents, palette) {
     },
     shapes: [...ladder(frame, lon, lat, palette), ...scaleBar(frame, palette)],
     annotations: [
-      scaleBarNote(frame, palette),
+      scaleBarNote(frame, palette, sizeFactor(width)),
       ...(printed
         ? [
             { xref: "paper", yref: "paper", x: 0, y: 1, xanchor: "left", yanchor: "bottom", yshift: 16, align: "left", showarrow: false, text: contents.title, font: { size: 15, color: palette.ink } },
@@ -460,7 +475,7 @@ function scaleBar(frame, palette) {
   }));
 }
 
-function scaleBarNote(frame, palette) {
+function scaleBarNote(frame, palette, k) {
   const { km, lat, lon } = scaleBarPlace(frame);
   return {
     x: lon,
@@ -471,7 +486,7 @@ function scaleBarNote(frame, palette) {
     xshift: -2,
     showarrow: false,
     text: `${km} km`,
-    font: { size: 11, color: palette.ink, shadow: halo(palette) },
+    font: { size: 11 * k, color: palette.ink, shadow: halo(palette) },
   };
 }
 

@@ -68,7 +68,7 @@ export function seriesFigure({ series, span, theme, clock, zone, top, width = 70
         fixedrange: true,
         gridcolor: palette.hairline,
         zeroline: false,
-        ticklabelposition: "inside",
+        ticklabelposition: "inside top",
         ticksuffix: " m",
         tickfont: axisFont,
       },

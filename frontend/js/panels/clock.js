@@ -3,7 +3,7 @@
  */
 
 import { keyStep, nearest, stepOf, stripFigure } from "../figures/strip.js";
-import { KIND_WORDS, siteSentence, timeText, WORDS } from "../words.js";
+import { KIND_WORDS, siteSentence, timeText, WORDS, zoneName } from "../words.js";
 import { draft, make } from "./parts.js";
 
 export class ClockPanel {
@@ -52,7 +52,7 @@ export class ClockPanel {
     }
     this.#names(rows);
     const minutes = Math.max(5, Math.round(stepOf(day.times) / 60000));
-    this.#elements.hint.textContent = `Drag, or use the arrow keys: ${minutes} minutes a step, with shift an hour, Home and End for the ends.`;
+    this.#elements.hint.textContent = WORDS.stripHelp(minutes);
     const index = nearest(day.times, time);
     range.max = String(day.times.length - 1);
     range.value = String(index);
@@ -63,7 +63,7 @@ export class ClockPanel {
     strip.setAttribute("aria-valuenow", String(index));
     strip.setAttribute("aria-valuetext", words);
     if (this.#line && this.#figure) this.#line.style.transform = `translateX(${this.#figure.x(time) - 1}px)`;
-    if (document.activeElement === strip || this.#dragging) this.#speakSoon();
+    this.#speakSoon();
   }
 
   close() {
@@ -131,8 +131,8 @@ export class ClockPanel {
         ...rows.map((row, number) => make("li", {}, make("button", { type: "button", "data-site": number, text: row.name, title: row.name }))),
       );
       const zone = day.region.timezone;
-      names.append(make("li", {}, make("p", { text: "UTC" })));
-      if (zone !== "UTC") names.append(make("li", {}, make("p", { text: timeText(0, { clock: "local", zone }).slice(6) })));
+      names.append(make("li", { class: "clock-name first", text: "UTC" }));
+      if (zone !== "UTC") names.append(make("li", { class: "clock-name", text: zoneName(zone) }));
     }
     for (const button of names.querySelectorAll("button")) {
       button.setAttribute("aria-pressed", String(chosen(day.sites[Number(button.dataset.site)])));
@@ -186,19 +186,18 @@ export class ClockPanel {
     clearTimeout(this.#speaking);
     this.#speaking = setTimeout(() => {
       if (!this.#scene) return;
-      const { day, siteStates, time, view } = this.#scene;
-      const when = timeText(time, { clock: view.clock, zone: day.region.timezone });
+      const { siteStates, time } = this.#scene;
       if (!siteStates?.rows.length) {
-        this.#elements.reason.textContent = `${when}. ${WORDS.noSites}`;
+        this.#elements.reason.textContent = WORDS.noSites;
         return;
       }
       const rank = { broken: 3, strained: 2, unseen: 1, holds: 0 };
       const said = siteStates.rows.map((row, number) => ({ name: row.name, state: siteStates.stateOf(number, time), reason: siteStates.reasonOf(number, time) }));
       const worst = said.filter((site) => site.state !== "holds").sort((a, b) => rank[b.state] - rank[a.state]);
       const words = worst.length
-        ? worst.slice(0, 2).map((site) => siteSentence(site.name, site.state, site.reason)).join(" ") + (worst.length > 2 ? ` And ${worst.length - 2} more.` : "")
-        : "Corrections hold at every site.";
-      this.#elements.reason.textContent = `${when}. ${words}`;
+        ? worst.slice(0, 2).map((site) => siteSentence(site.name, site.state, site.reason)).join(" ") + (worst.length > 2 ? ` ${WORDS.andMore(worst.length - 2)}` : "")
+        : WORDS.allHold;
+      if (this.#elements.reason.textContent !== words) this.#elements.reason.textContent = words;
     }, 200);
   };
 }

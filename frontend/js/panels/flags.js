@@ -41,6 +41,7 @@ export class FlagsPanel {
       return;
     }
     const how = { clock: view.clock, zone: day.region.timezone };
+    const heads = ["Time", "Kind", "Corrections", "Slope", "Moves", "Place", "Evidence"];
     const body = make("tbody");
     for (const flag of day.flags) {
       body.append(
@@ -48,14 +49,13 @@ export class FlagsPanel {
           make("td", { class: "nowrap" }, make("button", { type: "button", class: "linklike", text: `${timeText(flag.start, how)} – ${timeText(flag.end, how)}`, click: () => this.#go(flag, day) })),
           make("td", { class: "nowrap" }, make("span", { class: "state-word" }, sign(flag.kind), KIND_WORDS[flag.kind]?.name ?? flag.kind)),
           make("td", { class: "nowrap" }, flag.state ? stateWord(flag.state) : ""),
-          make("td", { class: "number", text: Number.isFinite(flag.slope) ? withSigma(flag.slope, flag.sigma, "mm/km", 0) : "–" }),
-          make("td", { class: "nowrap", text: Number.isFinite(flag.speed) ? `${fixed(flag.speed, 0)} m/s to the ${compass(flag.heading)}` : "–" }),
-          make("td", { class: "nowrap", text: placeText(flag.lat, flag.lon, 1) }),
+          make("td", { class: "number", "data-head": heads[3], "data-none": !Number.isFinite(flag.slope), text: Number.isFinite(flag.slope) ? withSigma(flag.slope, flag.sigma, "mm/km", 0) : "–" }),
+          make("td", { class: "nowrap", "data-head": heads[4], "data-none": !Number.isFinite(flag.speed), text: Number.isFinite(flag.speed) ? `${fixed(flag.speed, 0)} m/s to the ${compass(flag.heading)}` : "–" }),
+          make("td", { class: "nowrap", "data-head": heads[5], text: placeText(flag.lat, flag.lon, 1) }),
           make("td", {}, flag.confirmed ? flag.evidence : `Not confirmed. ${flag.evidence}`),
         ),
       );
     }
-    const heads = ["Time", "Kind", "Corrections", "Slope", "Moves", "Place", "Evidence"];
     this.#element.replaceChildren(
       make("table", {},
         make("thead", {}, make("tr", {}, ...heads.map((text, i) => make("th", { scope: "col", text, class: i === 3 ? "number" : undefined })))),

@@ -18,6 +18,7 @@ export class LegendPanel {
   #element;
   #state;
   #shown = "";
+  /** @type {Record<string, boolean>} */ #folds = {};
 
   /** @param {HTMLElement} element @param {import("../state.js").State} state */
   constructor(element, state) {
@@ -42,13 +43,21 @@ export class LegendPanel {
       states.append(stateRow("unseen"));
     }
     colours.append(states);
-    const signs = make("section", {}, make("h3", { text: "Flags" }));
+    const narrow = window.matchMedia("(max-width: 599px)").matches;
+    const foldable = (name, text) => {
+      const details = make("details", { open: this.#folds[name] ?? !narrow }, make("summary", { text }));
+      details.addEventListener("toggle", () => {
+        this.#folds[name] = details.open;
+      });
+      return details;
+    };
+    const signs = foldable("signs", "Flags");
     const list = make("ul", { class: "key" });
     for (const [kind, words] of Object.entries(KIND_WORDS)) {
       list.append(make("li", {}, sign(kind), make("span", { text: kind === "front" ? `${words.name}; the comb points where it goes` : words.name })));
     }
     signs.append(list);
-    const show = make("section", {}, make("h3", { text: "Show" }));
+    const show = foldable("show", "Show");
     const choices = make("ul", { class: "key" });
     const rows = [
       ["receivers", "Receivers", receiverSign()],
@@ -85,11 +94,11 @@ function stateRow(state) {
 
 function rampBar({ colours, marks }) {
   const bar = make("div", { class: "ramp-bar" });
-  bar.style.background = `linear-gradient(to top, ${colours.join(", ")})`;
+  bar.style.setProperty("--ramp", colours.join(", "));
   const numbers = make("div", { class: "ramp-marks" });
   for (const mark of marks) {
     const text = make("span", { text: mark.text });
-    text.style.bottom = `${mark.part * 100}%`;
+    text.style.setProperty("--part", `${mark.part * 100}%`);
     numbers.append(text);
   }
   return make("div", { class: "ramp" }, bar, numbers);
@@ -102,7 +111,7 @@ export function sign(kind) {
   return drawnSign(...(SIGN_PATHS[kind] ?? []).map(([name, d]) => draft("path", { class: name, d })));
 }
 
-const receiverSign = () => drawnSign(draft("circle", { cx: 17, cy: 9, r: 4, fill: "currentColor" }));
+const receiverSign = () => drawnSign(draft("circle", { class: "sign-thin", cx: 17, cy: 9, r: 5 }), draft("circle", { cx: 17, cy: 9, r: 2.2, fill: "currentColor" }));
 const siteSign = () => drawnSign(draft("path", { class: "sign-thin", d: "M13 1h8l4 4v8l-4 4h-8l-4-4v-8z" }));
 const raySign = () => drawnSign(...[[8, 1.5], [16, 2.5], [26, 3.6]].map(([cx, r]) => draft("circle", { cx, cy: 9, r, fill: "currentColor" })));
 const veilSign = () =>
