@@ -60,8 +60,8 @@ def kepler_of(table: Ephemerides, row: int) -> dict[str, float]:
 # An invented satellite: a plausible orbit of 26 560 km.
 INVENTED = {
     "sqrt_a": 5153.7, "e": 0.0123, "i0": 0.958, "idot": 1.1e-10, "omega0": -0.55, "omega_dot": -8.1e-9, "omega": -2.3,
-    "m0": 1.7, "delta_n": 4.9e-9, "cuc": 1.2e-6, "cus": 4.4e-6, "crc": 280.5, "crs": 20.25, "cic": -3.0e-8, "cis": 9.0e-8,
-    "toe_s": 388_800.0,
+    "m0": 1.7, "delta_n": 4.9e-9, "cuc": 1.2e-6, "cus": 4.4e-6, "crc": 280.5, "crs": 20.25, "cic": -3.0e-8,
+    "cis": 9.0e-8, "toe_s": 388_800.0,
 }  # fmt: skip
 GLONASS_STATE_KM = (24328.43896484, -0.7724418640137, 4.656612873077e-9, -5366.442871094, 0.09229373931885,
                     -1.862645149231e-9, 5610.807617188, 3.458779335022, 1.862645149231e-9)  # fmt: skip

@@ -8,12 +8,12 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from tests.conftest import Evidence
+from tests.formats.navigation_text import GLONASS_STATE_KM, INVENTED, NOON, header, kepler_of, orbit_values, record
 
 from skylag.errors import FormatError
 from skylag.formats import rinex_nav
 from skylag.tables import Ephemerides
-from tests.conftest import Evidence
-from tests.formats.navigation_text import GLONASS_STATE_KM, INVENTED, NOON, header, kepler_of, orbit_values, record
 
 
 def table_of(text: str) -> Ephemerides:

@@ -24,9 +24,11 @@ _MU = {"G": 3.986005e14, "J": 3.986005e14, "E": 3.986004418e14, "C": 3.986004418
 _ROTATION = {"G": 7.2921151467e-5, "J": 7.2921151467e-5, "E": 7.2921151467e-5, "C": 7.292115e-5, "R": 7.292115e-5}
 _GLONASS_AXIS_M, _GLONASS_J2 = 6_378_136.0, 1.082_625_7e-3
 
-# How far from its reference time a record may be used [s]: half the fit interval of GPS and QZSS (IS-GPS-200 20.3.4.4);
-# the others common practice, see the record spacing of each system.
-AGE_LIMIT_S = {"G": 7200.0, "J": 7200.0, "E": 7200.0, "C": 3600.0, "R": 900.0}
+# How long before and after its reference time a record may be used [s]: half the fit interval of GPS and QZSS
+# (IS-GPS-200 20.3.4.4); the others common practice, by the record spacing of each system.  Galileo's records are made
+# to run forward: on 2020-06-25 they were 0.9 m from precise orbits up to 2 h after, 5 m 60 to 90 min before, 11 m before.
+AGE_LIMIT_S = {"G": (7200.0, 7200.0), "J": (7200.0, 7200.0), "E": (5400.0, 7200.0), "C": (3600.0, 3600.0),
+               "R": (900.0, 900.0)}  # fmt: skip
 _AGE_SLACK_S = 1.0  # an epoch on the limit stays inside it when light time is taken off
 _WEEK_S = 604_800.0
 _GEOSTATIONARY_BEIDOU = frozenset(f"C{n:02d}" for n in (1, 2, 3, 4, 5, 59, 60, 61, 62, 63))
@@ -51,14 +53,24 @@ def positions(
     names = [str(name) for name in satellites]
     instants = _per_satellite(times, len(names))
     result = np.full((*instants.shape, 3), np.nan)
-    for part in join(source):
+    parts = join(source)
+    tables = [part for part in parts if isinstance(part, PreciseOrbits)]
+    for part in parts:
         if isinstance(part, PreciseOrbits):
-            found = _from_table(part, names, instants)
+            found = _from_table(part, names, instants, beyond=False)
         else:
             found = _from_broadcast(part, names, instants)
-        empty = np.isnan(result[..., 0])
-        result[empty] = found[empty]
+        _fill(result, found)
+    if np.isnan(result).any():
+        for part in tables:  # beyond the ends of a table a broadcast record is better
+            _fill(result, _from_table(part, names, instants, beyond=True))
     return result
+
+
+def _fill(result: Floats, found: Floats) -> None:
+    """Put what was found where there is nothing yet."""
+    empty = np.isnan(result[..., 0])
+    result[empty] = found[empty]
 
 
 def seen_from(
@@ -182,8 +194,9 @@ def _choose(source: Ephemerides, satellite: str, instants: Times) -> tuple[Ints,
     at = instants.astype(np.int64)
     borders = (toe[1:] + toe[:-1]) // 2
     nearest = np.searchsorted(borders, at, side="right")
-    limit_ns = int((AGE_LIMIT_S[satellite[0]] + _AGE_SLACK_S) * 1e9)
-    fresh = np.abs(at - toe[nearest]) <= limit_ns
+    before_ns, after_ns = (int((limit + _AGE_SLACK_S) * 1e9) for limit in AGE_LIMIT_S[satellite[0]])
+    age = at - toe[nearest]
+    fresh = (age >= -before_ns) & (age <= after_ns)
     healthy = source.healthy[own[nearest]]
     reason = np.where(~fresh, 2, np.where(~healthy, 3, 0))
     return np.where(reason == 0, own[nearest], -1), reason
@@ -312,11 +325,11 @@ def _join_tables(parts: Sequence[PreciseOrbits]) -> PreciseOrbits:
     return replace(ordered[0], times=times, satellites=satellites, position_m=position, clock_s=clock)
 
 
-def _from_table(table: PreciseOrbits, satellites: list[str], instants: Times) -> Floats:
+def _from_table(table: PreciseOrbits, satellites: list[str], instants: Times, beyond: bool) -> Floats:
     """Positions (T, S, 3) by polynomial; NaN outside the table, across gaps and where too few epochs stand together.
 
-    The polynomial is read up to one spacing beyond the first and last epoch, so that a table of one day serves the
-    whole day.
+    beyond  the polynomial is read up to one spacing before the first and after the last epoch, so that a table of one
+            day serves the whole day; metres of error there
     """
     result = np.full((*instants.shape, 3), np.nan)
     spacing_ns = int(_spacing_s(table) * 1e9)
@@ -334,8 +347,9 @@ def _from_table(table: PreciseOrbits, satellites: list[str], instants: Times) ->
         for run in np.split(told, breaks):
             if len(run) < _FEWEST_POINTS:
                 continue
-            inside = np.flatnonzero((at > epochs[run[0]] - spacing_ns) & (at < epochs[run[-1]] + spacing_ns))
-            inside = inside[np.isnan(result[inside, column, 0])]
+            before = spacing_ns if beyond and run[0] == 0 else 1
+            after = spacing_ns if beyond and run[-1] == len(epochs) - 1 else 1
+            inside = np.flatnonzero((at > epochs[run[0]] - before) & (at < epochs[run[-1]] + after))
             if len(inside):
                 place = (at[inside] - epochs[run[0]]) / spacing_ns
                 result[inside, column] = _polynomial(track[run], place)
