@@ -16,7 +16,7 @@ _SAME_SHARE = 0.1
 
 
 def kept_when_thinned(times: Times, spacing_s: float) -> Ints:
-    """Which epochs stay, ascending: of each multiple of the spacing the nearest epoch, if within a tenth of the spacing.
+    """Which epochs stay, ascending: of each multiple of the spacing the nearest epoch, if within a tenth of it.
 
     Multiples are counted from midnight of GPS time, or from the first epoch where hardly any epoch lies on those (a
     file kept in another time system).  Raises Refused for a spacing that is not positive.

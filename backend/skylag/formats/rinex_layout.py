@@ -424,6 +424,13 @@ def _untidy_2(
     begin, found, many = int(first[k]), int(behind[k]), int(count[k])
     records = [m for m in range(min(begin, found), found) if not _stray(text, body + m)]
     whole = min(len(records) // step, many) if step else 0
+    surplus = records[many * step :]
+    if surplus and found == total:  # the end of the file: blank lines, or an epoch line cut off
+        cut_off = len(surplus) == 1 and text.end[-1] == len(text.raw)
+        if cut_off:
+            problems.note(body + surplus[0] + 1, "the file ends within an epoch line")
+        if cut_off or not text.raw[text.begin[body + surplus[0]] :].strip():
+            records = records[: many * step]
     fits = len(records) == many * step
     if not fits and found == total and len(records) < many * step:
         problems.note(len(text.begin), f"the file ends within an epoch: {whole} of {many} satellites are there",
