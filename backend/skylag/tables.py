@@ -683,7 +683,8 @@ class Front:
 
     At time t it lies where the distance [km] from `centre` (lat, lon) toward heading_deg is
     offset_km + speed_m_s * seconds since `epoch` / 1000.  Sigmas are standard errors.
-    slope [mm/km, vertical], width_km from foot to head, jump_tecu (signed: what it brings);
+    slope [mm/km, vertical, steepest], width_km (jump over slope), jump_tecu (signed: what it brings), depth_km: how
+    much broader a slanting line of sight sees it, per unit of lean;
     reach_km: how far it was seen to its left (negative) and right along the wall, from the foot of that distance
     track      (time, lat, lon) of its nearest point to the centre, every few minutes
     sweep_km   scatter of the lines of sight about the line; height_km of the wall's middle, as the lines of sight tell
@@ -705,6 +706,7 @@ class Front:
     width_sigma_km: float
     jump_tecu: float
     jump_sigma_tecu: float
+    depth_km: float
     reach_km: tuple[float, float]
     sweep_km: float
     height_km: float

@@ -10,7 +10,7 @@ import numpy as np
 
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.sightlines import lay_out, middle
-from skylag.tables import Bools, Fault, Floats, Ints, Patches, Rays, Samples
+from skylag.tables import Bools, Fault, Floats, Ints, Patches, Rays, Samples, Slopes
 
 WINDOW_S = 300.0
 
@@ -19,7 +19,11 @@ WINDOW_S = 300.0
 class FaultChoices:
     """When a receiver is called at fault.
 
-    storm_breaks     arcs broken within half an hour, and `storm_times` more than the second worst receiver
+    storm_breaks     arcs broken within half an hour, and `storm_times` more than the second worst receiver's and than
+                     its own through the day
+    chronic_breaks   arcs broken in a day, and `storm_times` more than the usual receiver's
+    alone_pairs      steep pair slopes within a window that all include the receiver
+    absent_share, absent_s  lines of sight fewer than this share of the usual receiver's, for so long
     ragged_share     share of its windows that are ragged, while of the others' fewer than calm_share are
     level_tecu       its vertical level against a plane through the others', and level_times the second worst
     level_s          for at least so long
@@ -28,6 +32,10 @@ class FaultChoices:
 
     storm_breaks: int = 8
     storm_times: float = 3.0
+    chronic_breaks: int = 60
+    alone_pairs: int = 8
+    absent_share: float = 0.35
+    absent_s: float = 900.0
     ragged_tecu_min: float = 0.5
     ragged_share: float = 0.5
     calm_share: float = 0.1
@@ -38,7 +46,7 @@ class FaultChoices:
 
 
 def find(
-    rays: Rays, samples: Samples, patches: Patches, choices: FaultChoices | None = None
+    rays: Rays, samples: Samples, patches: Patches, slopes: Slopes | None = None, choices: FaultChoices | None = None
 ) -> tuple[Fault, ...]:
     """Faults of a network day; none where fewer than three receivers leave nobody to compare with."""
     choices = choices or FaultChoices()
@@ -47,17 +55,35 @@ def find(
     storm = _slip_storms(patches.breaks, choices)
     ragged = _ragged_alone(patches, len(rays.receivers), choices)
     level, size = _level_alone(rays, samples, patches, choices)
+    absent = _absent_alone(rays, patches, choices)
+    apart = _slopes_alone(slopes, patches, len(rays.receivers), choices)
     x, y, z = np.array([receiver.position_m for receiver in rays.receivers]).T
     lat, lon = np.degrees(np.arctan2(z, np.hypot(x, y))), np.degrees(np.arctan2(y, x))
     faults = []
+    total = patches.breaks.sum(axis=0)
+    chronic = total > np.maximum(choices.chronic_breaks, choices.storm_times * np.median(total))
+    for number in np.flatnonzero(chronic).tolist():
+        name = rays.receivers[number].name
+        faults.append(Fault(
+            start=patches.times[0],
+            end=patches.times[-1] + np.timedelta64(round(WINDOW_S), "s"),
+            receiver=name,
+            lat=float(lat[number]),
+            lon=float(lon[number]),
+            why=f"{name}: {int(total[number])} arcs broken through the day, the usual receiver {np.median(total):.0f}",
+        ))  # fmt: skip
     for number, receiver in enumerate(rays.receivers):
-        for first, last in _spans(storm[:, number] | ragged[:, number] | level[:, number], choices.join_s):
+        for first, last in _spans((storm | ragged | level | apart | absent)[:, number], choices.join_s):
             window = slice(first, last + 1)
             reasons = []
             if storm[window, number].any():
                 reasons.append(f"{int(patches.breaks[window, number].sum())} broken arcs")
             if ragged[window, number].any():
                 reasons.append("phases ragged on most of its lines of sight")
+            if absent[window, number].any():
+                reasons.append("no or hardly any usable lines of sight")
+            if apart[window, number].any():
+                reasons.append("every steep slope seen includes it")
             if level[window, number].any():
                 reasons.append(f"level off by {np.nanmax(np.abs(size[window, number])):.0f} TECU")
             faults.append(Fault(
@@ -86,7 +112,43 @@ def _slip_storms(breaks: Ints, choices: FaultChoices) -> Bools:
     running = np.cumsum(padded, axis=0)
     total = (running[size:] - running[:-size])[: len(breaks)]
     own = (total >= choices.storm_breaks) & (total > choices.storm_times * _second(total))
+    own &= total > choices.storm_times * total.mean(axis=0, keepdims=True)
     return np.asarray(own & (breaks > 0))
+
+
+def _slopes_alone(slopes: Slopes | None, patches: Patches, receivers: int, choices: FaultChoices) -> Bools:
+    """(B, R) windows where steep slopes to several neighbours or satellites all include one receiver."""
+    off = np.zeros((len(patches.times), receivers), dtype=bool)
+    if slopes is None or len(slopes) == 0:
+        return off
+    window = np.clip(np.searchsorted(patches.times, slopes.time, side="right") - 1, 0, len(patches.times) - 1)
+    pair = slopes.other >= 0
+    count = np.zeros((len(patches.times), receivers))
+    np.add.at(count, (window[pair], slopes.receiver[pair]), 1)
+    np.add.at(count, (window[pair], slopes.other[pair]), 1)
+    all_pairs = count.sum(axis=1, keepdims=True) / 2.0
+    # A wall is between many receivers; whoever is in every pair of the window stands alone.
+    return np.asarray((count >= choices.alone_pairs) & (count >= 0.95 * all_pairs))
+
+
+def _absent_alone(rays: Rays, patches: Patches, choices: FaultChoices) -> Bools:
+    """(B, R) windows of a silence: a receiver has few usable lines of sight where the others have their usual number.
+
+    An outage and data too wild for any arc look alike here.
+    """
+    shape = (len(patches.times), len(rays.receivers))
+    window = np.clip(np.searchsorted(patches.times, rays.time, side="right") - 1, 0, shape[0] - 1)
+    high = rays.elevation >= 20.0
+    count = np.bincount(window[high] * shape[1] + rays.receiver[high], minlength=shape[0] * shape[1]).reshape(shape)
+    usual = np.median(count, axis=1, keepdims=True)
+    few = (count < choices.absent_share * usual) & (usual > 0)
+    few &= few.sum(axis=1, keepdims=True) <= max(1, shape[1] // 4)
+    least = max(1, round(choices.absent_s / WINDOW_S))
+    for number in range(shape[1]):
+        for first, last in _spans(few[:, number], WINDOW_S):
+            if last - first + 1 < least:
+                few[first : last + 1, number] = False
+    return np.asarray(few)
 
 
 def _ragged_alone(patches: Patches, receivers: int, choices: FaultChoices) -> Bools:

@@ -83,13 +83,16 @@ def find_onsets(rays: Rays, samples: Samples, choices: FrontChoices | None = Non
     if len(lines.times) < 8:
         return _no_onsets()
     minute, three = (rate_over(vtec, arcs, lines.step_s, span) for span in (60.0, 180.0))
+    # Walls that pass within minutes are too fast for rates over a minute: one interval is sharper.
+    sharp = np.full(vtec.shape, np.nan)
+    sharp[1:] = np.where((arcs[1:] == arcs[:-1]) & (arcs[1:] >= 0), np.diff(vtec, axis=0) / lines.step_s, np.nan)
     background = _background(three, lines.step_s)
     excess, slow = minute - background, three - background
     scatter = 1.4826 * _median_down(np.abs(excess))
     limit = np.maximum(choices.rate_tecu_min / 60.0, choices.noise_factor * _median_down(np.abs(slow)) * 1.4826)
     with np.errstate(invalid="ignore"):
         sign = np.where(np.abs(slow) > limit, np.sign(slow), 0.0)
-    return _runs(lines, rays, sign, excess, slow, scatter, choices)
+    return _runs(lines, rays, sign, (sharp - background, excess, slow), scatter, choices)
 
 
 def rate_over(values: Floats, arcs: Ints, step_s: float, span_s: float) -> Floats:
@@ -138,8 +141,9 @@ def _no_onsets() -> Onsets:
 
 
 def _runs(
-    lines: Sightlines, rays: Rays, sign: Floats, excess: Floats, slow: Floats, scatter: Floats, choices: FrontChoices
-) -> Onsets:
+    lines: Sightlines, rays: Rays, sign: Floats, rates: tuple[Floats, Floats, Floats], scatter: Floats,
+    choices: FrontChoices,
+) -> Onsets:  # fmt: skip
     """Stretches of one sign, each with its middle, jump and steepest rate."""
     # One long row, line of sight after line of sight, so that a run is a stretch of equal sign.
     flat_sign = np.vstack([sign, np.zeros((1, sign.shape[1]))]).T.ravel()
@@ -150,8 +154,10 @@ def _runs(
     starts, ends = starts[steep], ends[steep]
     if len(starts) == 0:
         return _no_onsets()
-    flat_excess = np.vstack([np.nan_to_num(excess), np.zeros((1, sign.shape[1]))]).T.ravel()
-    flat_slow = np.vstack([np.nan_to_num(slow), np.zeros((1, sign.shape[1]))]).T.ravel()
+    # Rates above the background over one interval, one minute, three minutes.
+    flat_sharp, flat_excess, flat_slow = (
+        np.vstack([np.nan_to_num(rate), np.zeros((1, sign.shape[1]))]).T.ravel() for rate in rates
+    )
     # A central rate over three minutes reaches past the run itself; the sums go by the one-minute rate inside.
     bounds = np.stack([starts, ends], axis=1).ravel()
     bounds = np.minimum(bounds, len(flat_excess) - 1)
@@ -162,9 +168,11 @@ def _runs(
     when = np.add.reduceat(np.maximum(rate, 0.0) * seconds * lines.step_s, bounds)[::2] / np.maximum(jump, 1e-9)
     peak_fine = np.maximum.reduceat(rate, bounds)[::2]
     peak_slow = np.maximum.reduceat(flat_slow * flat_sign, bounds)[::2]
+    peak_sharp = np.maximum.reduceat(flat_sharp * flat_sign, bounds)[::2]
     lasting = (ends - starts) * lines.step_s
-    peak = np.where(lasting > 600.0, peak_slow, peak_fine)
     line = starts // height
+    clear = (lasting <= 420.0) & (peak_sharp > 20.0 * scatter[line])
+    peak = np.where(clear, peak_sharp, np.where(lasting > 600.0, peak_slow, peak_fine))
     kept = (jump >= choices.least_jump_tecu) & (lasting >= 2 * lines.step_s)
     kept &= _dominant(line, when, toward, jump, choices)
     line, when, toward, jump, peak, starts, ends = (
@@ -285,8 +293,9 @@ def fit_walls(onsets: Onsets, rays: Rays, choices: FrontChoices | None = None) -
                 break
             found.append((wall, left[wall.inside]))
             # Broken runs within the wall's own breadth are the same wall, not another beside it.
-            breadth = steepness(wall, onsets.where(left[wall.inside]), _taken(points, wall.inside))[2]
-            within = np.abs(wall.distance(points)) < 0.5 * np.nan_to_num(breadth) + 3.0 * points.place_sigma
+            steep = steepness(wall, onsets.where(left[wall.inside]), _taken(points, wall.inside))
+            lean = points.lean_x * np.sin(wall.heading) + points.lean_y * np.cos(wall.heading)
+            within = np.abs(wall.distance(points)) < 0.5 * steep.seen_width(lean) + 3.0 * points.place_sigma
             left = left[~(wall.inside | within)]
     found.sort(key=lambda item: onsets.time[item[1]].min())
     fronts = []
@@ -448,9 +457,7 @@ def _front(
     x, y = points.x + wall.height * points.lean_x, points.y + wall.height * points.lean_y
     offset = wall.offset
     along = x * north - y * east  # to the right of the heading
-    slope, slope_sigma, width, width_sigma = steepness(wall, onsets, points)
-    jumps = np.abs(onsets.jump)
-    jump = float(np.median(jumps)) * float(np.sign(onsets.jump[0]))
+    steep = steepness(wall, onsets, points, rays.interval_s)
     lean_start, lean_end = onsets.time.min(), onsets.time.max()
     steps = np.arange(lean_start, lean_end + np.timedelta64(1, "s"), np.timedelta64(round(choices.track_step_s), "s"))
     away = offset + wall.speed * ((steps - epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9)
@@ -469,12 +476,13 @@ def _front(
         speed_sigma_m_s=float(sigma[1]) * 1000.0,
         heading_deg=float(np.degrees(wall.heading) % 360.0),
         heading_sigma_deg=float(np.degrees(sigma[0])),
-        slope=slope,
-        slope_sigma=slope_sigma,
-        width_km=width,
-        width_sigma_km=width_sigma,
-        jump_tecu=jump,
-        jump_sigma_tecu=float(1.2533 * 1.4826 * np.median(np.abs(jumps - np.median(jumps))) / np.sqrt(len(jumps))),
+        slope=steep.slope,
+        slope_sigma=steep.slope_sigma,
+        width_km=steep.width,
+        width_sigma_km=steep.width_sigma,
+        jump_tecu=steep.jump * float(np.sign(onsets.jump[0])),
+        jump_sigma_tecu=steep.jump_sigma,
+        depth_km=steep.depth,
         reach_km=(float(along.min()), float(along.max())),
         sweep_km=float(np.sqrt(np.mean(wall.distance(points) ** 2))),
         height_km=rays.shell_height_m / 1000.0 + wall.height,
@@ -488,30 +496,85 @@ def _front(
     )
 
 
-def steepness(wall: _Wall, onsets: Onsets, points: _Points) -> tuple[float, float, float, float]:
-    """Slope [mm/km, vertical] and width [km] of a wall with their sigmas, from how fast each line of sight crossed it.
+@dataclass(frozen=True)
+class Steepness:
+    """Slope [mm/km, vertical], breadth [km] (jump over steepest slope), jump [TECU], with sigmas; depth [km]: how much
+    broader a line of sight sees the wall per unit of its lean, since the wall has a height of its own."""
+
+    slope: float
+    slope_sigma: float
+    width: float
+    width_sigma: float
+    jump: float
+    jump_sigma: float
+    depth: float
+
+    def seen_width(self, lean: Floats) -> Floats:
+        """Breadth [km] that a line of sight of this lean along the heading sees."""
+        return np.hypot(np.nan_to_num(self.width), self.depth * lean)
+
+
+def steepness(wall: _Wall, onsets: Onsets, points: _Points, interval_s: float = 30.0) -> Steepness:
+    """How steep a wall is, from how fast each line of sight crossed it.
 
     A pierce point that moves with the wall sees it pass slowly, so the steepest rate is divided by the relative speed
-    along the heading.  A slanting line of sight meets a standing wall over a stretch of its own length and sees it too
-    wide and too flat; only the third of the lines that lean least toward or away from it count (at least five).
+    along the heading.  A slanting line of sight meets an upright wall over a stretch that grows with its lean, and
+    sees it too broad and too flat: breadth^2 = width^2 + (depth * lean)^2 is fitted over the lines, those of least
+    lean counting most, and the width upright is what counts.  What a wider choice of lines would change is in the
+    sigma.  Broken runs (jump far from the usual) are left out.
     """
     east, north = np.sin(wall.heading), np.cos(wall.heading)
     relative = np.abs(wall.speed * 1000.0 - (onsets.east_speed * east + onsets.north_speed * north)) / 1000.0
     lean = np.abs(points.lean_x * east + points.lean_y * north)
-    usable = np.flatnonzero(relative > 0.03)
-    if len(usable) == 0:
-        return float("nan"), float("nan"), float("nan"), float("nan")
-    usable = usable[np.argsort(lean[usable], kind="stable")][: max(5, len(usable) // 3)]
-    slope = np.abs(onsets.rate[usable]) / relative[usable] * MM_PER_TECU
-    width = np.abs(onsets.jump[usable]) * MM_PER_TECU / slope
-    speed_share = np.sqrt(wall.covariance[1, 1]) / np.median(relative[usable])
-    middle_slope, middle_width = float(np.median(slope)), float(np.median(width))
+    jumps = np.abs(onsets.jump)
+    usual = float(np.median(jumps))
+    whole = (relative > 0.03) & (np.abs(jumps - usual) < 0.4 * usual)
+    nearest = np.sort(lean[whole])[min(int(whole.sum()), max(8, int(whole.sum()) // 2)) - 1] if whole.any() else 0.0
+    used = np.flatnonzero(whole & (lean <= nearest))
+    if len(used) < 3:
+        nothing = float("nan")
+        return Steepness(nothing, nothing, nothing, nothing, usual, nothing, 0.0)
+    seen = jumps[used] * relative[used] / np.maximum(np.abs(onsets.rate[used]), 1e-9)
+    square, square_sigma, depth = _upright(seen, lean[used], 0.1)
+    square_sigma = float(np.hypot(square_sigma, 0.5 * (square - _upright(seen, lean[used], 0.2)[0])))
+    width = float(np.sqrt(square))
+    jump = float(np.median(jumps[used]))
+    jump_sigma = 1.2533 * 1.4826 * float(np.median(np.abs(jumps[used] - jump))) / np.sqrt(len(used))
+    speed_share = float(np.sqrt(wall.covariance[1, 1]) / np.median(relative[used]))
+    # Steepest rates are taken over an interval: a wall that passes as fast is flattened by up to that.
+    blur = min(0.5, float(np.median(relative[used]) * interval_s / width) ** 2 / 12.0)
+    share = float(np.sqrt((0.5 * square_sigma / square) ** 2 + speed_share**2 + blur**2))
+    slope = jump / width * MM_PER_TECU
+    slope_sigma = slope * float(np.hypot(share, jump_sigma / jump))
+    return Steepness(slope, slope_sigma, width, width * share, jump, jump_sigma, depth)
 
-    def spread(values: Floats) -> float:
-        scatter = 1.2533 * 1.4826 * float(np.median(np.abs(values - np.median(values)))) / np.sqrt(len(values))
-        return float(np.hypot(scatter, speed_share * np.median(values)))
 
-    return middle_slope, spread(slope), middle_width, spread(width)
+def _upright(seen: Floats, lean: Floats, least: float) -> tuple[float, float, float]:
+    """Square of the width seen upright, its sigma [km^2], and depth [km] from breadths [km] and leans; robust.
+
+    Lines with a lean above `least` count less and less.
+    """
+    trust = 1.0 / (1.0 + (lean / least) ** 2)
+    design = np.stack([np.ones(len(seen)), lean**2], axis=1)
+    target = seen**2
+    weight = np.sqrt(trust) / np.median(target)
+    covariance = np.zeros((2, 2))
+    answer = np.array([float(np.median(target)), 0.0])
+    for _ in range(8):
+        normal = design.T @ (design * weight[:, None] ** 2) + 1e-18 * np.eye(2)
+        answer = np.linalg.solve(normal, design.T @ (target * weight**2))
+        # Neither a width nor a depth can be imaginary: what would be is held at nothing.
+        if answer[1] < 0.0 or answer[0] < 0.05 * float(np.min(target)):
+            mean = float((target * weight**2).sum() / (weight**2).sum())
+            answer = np.array([mean, 0.0])
+        model = np.maximum(design @ answer, 1.0)
+        over = target / model - 1.0
+        scatter = max(1.4826 * float(np.median(np.abs(over))), 0.01)
+        weight = np.sqrt(trust * np.minimum(1.0, 1.5 / np.maximum(np.abs(over) / scatter, 1e-9))) / model
+        covariance = np.linalg.inv(design.T @ (design * weight[:, None] ** 2) + 1e-18 * np.eye(2)) * scatter**2
+    held = answer[1] == 0.0
+    variance = scatter**2 * answer[0] ** 2 / len(seen) if held else covariance[0, 0]
+    return float(answer[0]), float(np.sqrt(variance)), float(np.sqrt(answer[1]))
 
 
 # ---------------------------------------------------------------------------------------------- arrivals
