@@ -20,7 +20,7 @@ from skylag.constants import SHELL_EARTH_RADIUS_M, SPEED_OF_LIGHT_M_S, carrier_h
 from skylag.errors import NotEnough
 from skylag.ionosphere.arcs import tecu_per_metre
 from skylag.ionosphere.bias_algebra import pair_bias
-from skylag.ionosphere.plasmasphere import slant_shape, vertical_shape
+from skylag.ionosphere.plasmasphere import FOOT_EXPONENT, FOOT_EXPONENT_SIGMA, slant_shape, vertical_shape
 from skylag.tables import Biases, Calibration, Floats, Ints, Rays, Samples
 
 
@@ -34,7 +34,7 @@ class AdjustmentChoices:
     degree_network, degree_single  degree of the polynomial in place, for a network and for one receiver alone
     shell_height_sigma_m  how far the height that a single shell stands for strays; 50 km spans the shell heights in
                         use for the same data, 350 to 450 km (broadcast model, IONEX maps)
-    high_layer, high_layer_sigma  amplitude expected of the plasmasphere model: between drained and saturated
+    high_layer, high_layer_sigma  amplitude expected of the plasmasphere model: between drained and twice saturated
     """
 
     thin_s: float = 300.0
@@ -43,8 +43,8 @@ class AdjustmentChoices:
     degree_network: int = 3
     degree_single: int = 2
     shell_height_sigma_m: float = 50_000.0
-    high_layer: float = 0.75
-    high_layer_sigma: float = 0.5
+    high_layer: float = 1.0
+    high_layer_sigma: float = 1.0
     robust_limit: float = 2.0
     rounds: int = 5
 
@@ -161,8 +161,11 @@ def _unknowns(rays: Rays, channels: Mapping[str, int]) -> _Unknowns:
     """Number the biases: one per receiver, pair and (GLONASS) channel; one per satellite and pair."""
     channel_of = np.array([channels.get(str(s), 0) if str(s)[0] == "R" else 0 for s in rays.satellites], dtype=np.int64)
     channel = channel_of[rays.satellite] if len(rays) else np.zeros(0, dtype=np.int64)
-    receiver_key = np.stack([rays.receiver, rays.pair, channel], axis=1)
-    satellite_key = np.stack([rays.satellite, rays.pair], axis=1)
+    # A code bias belongs to the two codes, whatever phases go with them.
+    codes = [(pair.system, pair.code1, pair.code2) for pair in rays.pairs]
+    same = np.array([codes.index(code) for code in codes], dtype=np.int64)[rays.pair]
+    receiver_key = np.stack([rays.receiver, same, channel], axis=1)
+    satellite_key = np.stack([rays.satellite, same], axis=1)
     receiver_list, receiver_row = np.unique(receiver_key, axis=0, return_inverse=True)
     satellite_list, satellite_row = np.unique(satellite_key, axis=0, return_inverse=True)
     kind = ["receiver"] * len(receiver_list) + ["satellite"] * len(satellite_list)
@@ -205,10 +208,11 @@ def _design(
     receiver_lat, receiver_lon = _spherical_receivers(part)
     high = slant_shape(receiver_lat, receiver_lon, part.elevation, part.azimuth)
     high_column = csr_matrix(high[:, None])
+    other = slant_shape(receiver_lat, receiver_lon, part.elevation, part.azimuth, FOOT_EXPONENT + 0.5)
     design = hstack([bias, diags_array(part.mapping) @ vertical, high_column]).tocsr()
     layout = {
         "biases": biases, "vertical": vertical, "terms": terms.shape[1], "splines": count, "degree": degree,
-        "high": biases + vertical.shape[1], "receivers": places,
+        "high": biases + vertical.shape[1], "receivers": places, "high_change": (other - high) / 0.5,
         "term_degree": np.array([i + j for i in range(degree + 1) for j in range(degree + 1 - i)]),
     }  # fmt: skip
     return design, layout
@@ -295,6 +299,7 @@ class _Estimate:
     arc_numbers: Ints
     model_sigma: Floats
     hour: Ints
+    widened: float
 
 
 def _iterate(
@@ -314,90 +319,110 @@ def _iterate(
     loosen_arc, loosen_row = np.ones(arcs), np.ones(len(part))
     vertical_content = np.zeros(len(part))
     x = np.zeros(design.shape[1])
+    widened = 1.0
     for turn in range(choices.rounds):
         own = part.noise_sigma**2 + (part.mapping * model[hour]) ** 2
         own += (part.mapping * relative * np.maximum(vertical_content, 0.0)) ** 2
-        weight = 1.0 / (own * loosen_row**2)
+        weight = 1.0 / (own * loosen_row**2 * widened)
         arc_variance = (level**2 + model_arc**2) * loosen_arc**2
-        x, normal_factor, effect = _normal_solve(
-            design, part.stec, weight, arc_of_row, arc_variance, prior, layout["biases"], penalty, target
-        )
+        normal = _Normal(design, weight, arc_of_row, arc_variance, prior, layout["biases"], penalty, target)
+        x, effect = normal.solve(part.stec)
         residual = part.stec - design @ x
         inside = residual - effect[arc_of_row]
         vertical_content = layout["vertical"] @ x[layout["biases"] : layout["high"]]
         # How far the smooth content strays from the real one, hour by hour (robust).
         scaled = np.abs(inside) / part.mapping
         model = np.array([
-            max(0.2, 1.4826 * float(np.median(scaled[hour == h]))) if np.any(hour == h) else 1.0
+            max(0.05, 1.4826 * float(np.median(scaled[hour == h]))) if np.any(hour == h) else 1.0
             for h in range(hour.max() + 1)
         ])  # fmt: skip
         model_arc = float(np.sqrt(np.clip(np.median(effect**2) / 0.455 - np.median(level**2), 0.1**2, 5.0**2)))
         ratio = np.abs(inside) / np.sqrt(own)
         loosen_row = np.sqrt(np.maximum(1.0, ratio / choices.robust_limit))
         loosen_row[ratio > 8.0] *= 10.0  # far outside: as good as left out
+        widened = _err_together(part, inside / np.sqrt(own))
         strength = np.abs(effect) / np.sqrt(level**2 + model_arc**2)
         loosen_arc = np.maximum(1.0, strength / choices.robust_limit)
         if turn == 0:
             loosen_row = np.minimum(loosen_row, 3.0)  # the first residuals still hold the whole model
-    covariance = _covariance(design, part, weight, inside, normal_factor, layout)
-    count = np.bincount(arc_of_row, weight, minlength=arcs)
+    amplitude = float(x[layout["high"]])
+    disturbances = [
+        part.mapping * relative * vertical_content,  # the height a single shell stands for
+        amplitude * FOOT_EXPONENT_SIGMA * layout["high_change"],  # the shape of the plasmasphere
+    ]
+    covariance = _covariance(normal, layout, disturbances)
     share = level**2 / (level**2 + model_arc**2)
-    remaining = 1.0 / (1.0 / arc_variance + count)
+    remaining = 1.0 / (1.0 / arc_variance + normal.mass)
     arc_sigma = np.sqrt(level**2 * (1.0 - share) + share**2 * np.minimum(remaining, level**2))
-    return _Estimate(x, covariance, residual, effect, share, arc_sigma, arc_of_row, arc_numbers, model, hour)
+    return _Estimate(
+        x, covariance, residual, effect, share, arc_sigma, arc_of_row, arc_numbers, model, hour, widened
+    )  # fmt: skip
 
 
-def _normal_solve(
-    design: csr_matrix, content: Floats, weight: Floats, arc_of_row: Ints, arc_variance: Floats,
-    prior: tuple[Floats, Floats, Floats], biases: int, penalty: Floats, target: Floats,
-) -> tuple[Floats, Any, Floats]:  # fmt: skip
-    """Normal equations with one random effect per arc eliminated; returns x, the factor, the effects."""
-    rows, arcs = len(content), len(arc_variance)
-    weighted = diags_array(weight) @ design
-    normal = np.asarray((design.T @ weighted).todense())
-    right = np.asarray(weighted.T @ content)
-    gather = csr_matrix((weight, arc_of_row, np.arange(rows + 1)), shape=(rows, arcs)).T.tocsr()
-    coupling = (gather @ design).toarray()  # (arcs, unknowns)
-    mass = np.bincount(arc_of_row, weight, minlength=arcs)
-    inner = 1.0 / (1.0 / arc_variance + mass)
-    sums = np.bincount(arc_of_row, weight * content, minlength=arcs)
-    normal -= coupling.T @ (coupling * inner[:, None])
-    right -= coupling.T @ (inner * sums)
-    normal[np.diag_indices_from(normal)] += penalty
-    right += penalty * target
-    matrix, value, datum_weight = prior
-    normal[:biases, :biases] += matrix.T @ (matrix * datum_weight[:, None])
-    right[:biases] += matrix.T @ (datum_weight * value)
-    factor = cho_factor(normal)
-    x = np.asarray(cho_solve(factor, right))
-    effect = inner * (sums - coupling @ x)
-    return x, factor, effect
+class _Normal:
+    """The normal equations of one round, with one random effect per arc eliminated."""
+
+    def __init__(
+        self, design: csr_matrix, weight: Floats, arc_of_row: Ints, arc_variance: Floats,
+        prior: tuple[Floats, Floats, Floats], biases: int, penalty: Floats, target: Floats,
+    ) -> None:  # fmt: skip
+        rows, arcs = len(weight), len(arc_variance)
+        self._weight, self._arc = weight, arc_of_row
+        self._weighted = (diags_array(weight) @ design).tocsr()
+        normal = np.asarray((design.T @ self._weighted).todense())
+        gather = csr_matrix((weight, arc_of_row, np.arange(rows + 1)), shape=(rows, arcs)).T.tocsr()
+        self._coupling = (gather @ design).toarray()  # (arcs, unknowns)
+        self.mass = np.bincount(arc_of_row, weight, minlength=arcs)
+        self._inner = 1.0 / (1.0 / arc_variance + self.mass)
+        normal -= self._coupling.T @ (self._coupling * self._inner[:, None])
+        normal[np.diag_indices_from(normal)] += penalty
+        matrix, value, datum_weight = prior
+        normal[:biases, :biases] += matrix.T @ (matrix * datum_weight[:, None])
+        self._known = penalty * target
+        self._known[:biases] += matrix.T @ (datum_weight * value)
+        self.factor = cho_factor(normal)
+
+    def _right(self, content: Floats) -> tuple[Floats, Floats]:
+        sums = np.bincount(self._arc, self._weight * content, minlength=len(self._inner))
+        right = np.asarray(self._weighted.T @ content) - self._coupling.T @ (self._inner * sums)
+        return right, sums
+
+    def solve(self, content: Floats) -> tuple[Floats, Floats]:
+        """The unknowns and the arc effects."""
+        right, sums = self._right(content)
+        x = np.asarray(cho_solve(self.factor, right + self._known))
+        return x, self._inner * (sums - self._coupling @ x)
+
+    def respond(self, disturbance: Floats) -> Floats:
+        """How far the unknowns move when the content of each row is off by `disturbance`."""
+        return np.asarray(cho_solve(self.factor, self._right(disturbance)[0]))
 
 
-def _covariance(
-    design: csr_matrix, part: Rays, weight: Floats, inside: Floats, factor: Any, layout: Mapping[str, Any]
-) -> Floats:
-    """Covariance of the biases [ns^2]: what the weights promise, or what the residuals show where that is more.
+def _err_together(part: Rays, normalised: Floats) -> float:
+    """By how much the row variances must grow because neighbours err together.
 
-    Residuals of neighbouring receivers on one satellite, and along a pass, belong together; so the scores of each
-    satellite in each span of three hours are summed before they are squared (cluster-robust covariance, Liang and
-    Zeger 1986).
+    The design effect (Kish 1965) of the residuals: those of all receivers on one satellite within an hour belong
+    together.
+    """
+    hour = ((part.time - part.time.min()).astype("timedelta64[ns]").astype(np.int64) // 3_600_000_000_000).astype(int)
+    cluster = np.unique(part.satellite * (hour.max() + 1) + hour, return_inverse=True)[1].ravel()
+    calm = np.clip(normalised, -4.0, 4.0)
+    return max(1.0, float(np.sum(np.bincount(cluster, calm) ** 2) / np.sum(calm**2)))
+
+
+def _covariance(normal: _Normal, layout: Mapping[str, Any], disturbances: list[Floats]) -> Floats:
+    """Covariance of the biases [ns^2]: what the weights promise, and what the model itself may be off by.
+
+    Each disturbance is one standard deviation of an error that does not average out over the day.
     """
     biases = layout["biases"]
-    span = ((part.time - part.time.min()).astype("timedelta64[ns]").astype(np.int64) // 10_800_000_000_000).astype(int)
-    cluster = np.unique(part.satellite * (span.max() + 1) + span, return_inverse=True)[1].ravel()
-    clusters = int(cluster.max()) + 1
-    scores = csr_matrix((weight * inside, cluster, np.arange(len(cluster) + 1)), shape=(len(cluster), clusters)).T
-    score = (scores.tocsr() @ design).toarray()
-    unit = np.zeros((design.shape[1], biases))
+    unit = np.zeros((layout["high"] + 1, biases))
     unit[np.arange(biases), np.arange(biases)] = 1.0
-    inverse = np.asarray(cho_solve(factor, unit))  # (unknowns, biases)
-    formal = inverse[:biases]
-    spread = score @ inverse
-    robust = spread.T @ spread * clusters / max(clusters - 1, 1)
-    # The wider of the two along each bias, kept positive definite: the formal one plus what the robust one adds.
-    grow = np.sqrt(np.maximum(np.diag(robust) / np.maximum(np.diag(formal), 1e-12), 1.0))
-    return np.asarray(formal * grow[:, None] * grow[None, :])
+    covariance = np.asarray(cho_solve(normal.factor, unit))[:biases]
+    for disturbance in disturbances:
+        moved = normal.respond(disturbance)[:biases]
+        covariance += moved[:, None] * moved[None, :]
+    return covariance
 
 
 # ---------------------------------------------------------------------------------------------- the result
@@ -456,8 +481,9 @@ def _calibration(
         "residual_rms_tecu": float(np.sqrt(np.mean((inside / part.mapping) ** 2))),
         "residual_median_tecu": float(1.4826 * np.median(np.abs(inside / part.mapping))),
         "smooth_content_sigma_by_hour_tecu": hours,
-        "high_layer_amplitude": amplitude,
-        "datum": table.datum,
+        "high_layer_amplitude": round(amplitude, 3),
+        "residuals_err_together": round(estimate.widened, 2),
+        "datum": "; ".join(dict.fromkeys(words.split(" of channel")[0] for words in table.datum.split("; "))),
         "alone": layout["receivers"] == 1,
     }
     return Calibration(

@@ -338,10 +338,12 @@ def _levels(
     """Level of each arc, its sigma and the arc's code scatter [TECU], and how many code points were at fault.
 
     The level is the weighted mean of code minus phase.  Multipath is common within a block, so the sigma comes from the
-    scatter of block means, drawn toward what the point scatter lets expect where blocks are few.
+    scatter of block means, drawn toward what the point scatter lets expect where blocks are few, and is widened by how
+    far the halves of this receiver's long arcs disagree.
     """
     count = len(summary)
     level, sigma, noise = np.zeros(count), np.full(count, np.nan), np.full(count, np.nan)
+    ratios: list[float] = []
     at_fault = 0
     for row in range(count):
         column, start, end = summary[row, 0], summary[row, 1], summary[row, 2]
@@ -354,23 +356,35 @@ def _levels(
         spread = 1.4826 * np.median(np.abs(gap - middle) * np.sqrt(weight)) + 0.05
         good = np.abs(gap - middle) * np.sqrt(weight) < 5.0 * spread
         at_fault += int(np.sum(~good))
-        w = weight * good
-        block = ((seconds[at] - seconds[at[0]]) // choices.level_block_s).astype(np.int64)
-        block_weight = np.bincount(block, w)
-        full = block_weight > 0.2 * np.max(block_weight)
-        block_mean = np.bincount(block, w * gap)[full] / block_weight[full]
-        block_weight = block_weight[full]
-        level[row] = np.sum(block_mean * block_weight) / np.sum(block_weight)
-        scatter = np.sqrt(np.sum(w * (gap - level[row]) ** 2) / np.sum(w))
-        noise[row] = scatter
-        share = block_weight / np.sum(block_weight)
-        effective = 1.0 / np.sum(share**2)
-        expected = (0.5 * scatter) ** 2  # of a block mean; common practice at good sites
-        seen = np.sum(share * (block_mean - level[row]) ** 2)
-        blocks = len(block_mean)
-        of_block = (3.0 * expected + (blocks - 1) * seen * blocks / max(blocks - 1, 1)) / (blocks + 2.0)
-        sigma[row] = np.sqrt(of_block / effective)
+        gap, weight, block = gap[good], weight[good], ((seconds[at] - seconds[at[0]]) // choices.level_block_s)[good]
+        level[row], sigma[row], noise[row], blocks = _one_level(gap, weight, block.astype(np.int64))
+        if blocks >= 6:
+            first = block < np.median(block)
+            one = _one_level(gap[first], weight[first], block[first].astype(np.int64))
+            two = _one_level(gap[~first], weight[~first], (block[~first] - block[~first][0]).astype(np.int64))
+            ratios.append((one[0] - two[0]) ** 2 / (one[1] ** 2 + two[1] ** 2))
+    # How far the halves of long arcs disagree, against what their sigmas promise, tells how much multipath outlives a
+    # block at this receiver on this day.
+    if len(ratios) >= 5:
+        sigma *= np.sqrt(max(1.0, float(np.mean(np.minimum(ratios, 16.0)))))
     return level, sigma, noise, at_fault
+
+
+def _one_level(gap: Floats, weight: Floats, block: Ints) -> tuple[float, float, float, int]:
+    """Weighted mean of code minus phase, its sigma, the scatter of the points, and the number of blocks in use."""
+    block_weight = np.bincount(block, weight)
+    full = block_weight > 0.2 * np.max(block_weight)
+    block_mean = np.bincount(block, weight * gap)[full] / block_weight[full]
+    block_weight = block_weight[full]
+    level = np.sum(block_mean * block_weight) / np.sum(block_weight)
+    scatter = np.sqrt(np.sum(weight * (gap - level) ** 2) / np.sum(weight))
+    share = block_weight / np.sum(block_weight)
+    effective = 1.0 / np.sum(share**2)
+    expected = (0.5 * scatter) ** 2  # of a block mean; common practice at good sites
+    seen = np.sum(share * (block_mean - level) ** 2)
+    blocks = len(block_mean)
+    of_block = (3.0 * expected + seen * blocks) / (blocks + 2.0)
+    return float(level), float(np.sqrt(of_block / effective)), float(scatter), blocks
 
 
 def slip_list(arcs: Arcs) -> tuple[tuple[np.datetime64, str], ...]:

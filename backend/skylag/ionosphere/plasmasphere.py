@@ -11,8 +11,11 @@ from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.tables import Floats
 
 # Saturated plasmasphere: log10 of the equatorial density [cm^-3] falls linearly with L (Carpenter and Anderson 1992,
-# J. Geophys. Res. 97, 1097-1108; coefficients from memory).  Density is taken constant along a field line.
+# J. Geophys. Res. 97, 1097-1108; coefficients from memory).
 _LOG_DENSITY, _LOG_SLOPE = 3.9043, -0.3145
+# Along a field line the density grows toward its feet as a power of (top radius / radius); inside the plasmasphere the
+# exponent is about 1, mostly between 0 and 2 (Denton et al. 2004, J. Geophys. Res. 109, A03215; from memory).
+FOOT_EXPONENT, FOOT_EXPONENT_SIGMA = 1.0, 0.5
 # Outside the plasmapause the density falls by one to two orders of magnitude; a quiet plasmapause lies near L = 4.5
 # (5.6 - 0.46 Kp, the same paper; from memory).
 _PLASMAPAUSE_L, _PLASMAPAUSE_WIDTH = 4.5, 0.3
@@ -22,10 +25,13 @@ BASE_HEIGHT_M, TOP_HEIGHT_M = 1.0e6, 2.02e7
 _NODES = 14
 
 
-def slant_shape(lat: Floats, lon: Floats, elevation: Floats, azimuth: Floats) -> Floats:
+def slant_shape(
+    lat: Floats, lon: Floats, elevation: Floats, azimuth: Floats, foot_exponent: float = FOOT_EXPONENT
+) -> Floats:
     """Slant content [TECU] of the model plasmasphere from 1000 km to the satellites along rays, any one shape.
 
     lat, lon  of the ground end of the ray; elevation, azimuth there [deg]; straight rays, spherical Earth.
+    foot_exponent  how the density grows along a field line toward its feet
     """
     lat_rad, lon_rad = np.radians(lat), np.radians(lon)
     elevation_rad, azimuth_rad = np.radians(elevation), np.radians(azimuth)
@@ -49,6 +55,7 @@ def slant_shape(lat: Floats, lon: Floats, elevation: Floats, azimuth: Floats) ->
         density = 10.0 ** (_LOG_DENSITY + _LOG_SLOPE * np.minimum(shell_l, 20.0)) * 1e6
         density /= 1.0 + np.exp(np.clip((shell_l - _PLASMAPAUSE_L) / _PLASMAPAUSE_WIDTH, -50, 50))
         # ds = dr / sqrt(1 - sin^2) along the ray, dr = r d(log r)
+        density *= (shell_l * SHELL_EARTH_RADIUS_M / r) ** foot_exponent
         total += weight * density * r / np.sqrt(1.0 - sine**2)
     return np.asarray(total * 0.5 * (high - low) / 1e16)
 
