@@ -313,7 +313,7 @@ def _receiver_day(
 
     position = station.position_m
     hours = weather.hours_since(times)
-    day_hours = hours - float(weather.hours_since(np.datetime64(day)))
+    day_hours = (times - np.datetime64(day).astype("datetime64[ns]")).astype(np.int64) / 3.6e12
     shape = (len(times), len(sky.satellites))
 
     # Geometry at the true instant of measurement: the receiver's tag is off by its clock.
