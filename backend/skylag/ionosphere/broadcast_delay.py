@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from skylag.constants import L1_HZ, SPEED_OF_LIGHT_M_S
-from skylag.ionosphere.geometry import pierce
+from skylag.ionosphere.geometry import earth_angle, pierce
 from skylag.tables import Floats, Times
 
 _NIGHT_S = 5e-9
@@ -55,7 +55,11 @@ def ntcm(
     coefficients  ai0, ai1, ai2 of the Galileo message (`ionosphere["GAL"]`)
     lat, lon, elevation, azimuth  degrees, of the receiver and from it; times GPS time, taken as UT
     """
-    pierce_lat, pierce_lon = pierce(lat, lon, elevation, azimuth, _NTCM_HEIGHT_M)
+    # The description takes the arc sine for the longitude, also where a ray passes over the pole; so do its examples.
+    pierce_lat, _ = pierce(lat, lon, elevation, azimuth, _NTCM_HEIGHT_M)
+    away_rad = np.radians(earth_angle(elevation, _NTCM_HEIGHT_M))
+    east = np.sin(away_rad) * np.sin(np.radians(azimuth)) / np.cos(np.radians(pierce_lat))
+    pierce_lon = np.asarray(lon, dtype=np.float64) + np.degrees(np.arcsin(np.clip(east, -1.0, 1.0)))
     vertical = ntcm_vertical(coefficients, pierce_lat, pierce_lon, times)
     zenith_rad = np.radians(90.0 - np.asarray(elevation, dtype=np.float64))
     sine = 6371.0 / (6371.0 + 450.0) * np.sin(0.9782 * zenith_rad)

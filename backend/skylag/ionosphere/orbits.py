@@ -26,7 +26,8 @@ _GLONASS_AXIS_M, _GLONASS_J2 = 6_378_136.0, 1.082_625_7e-3
 
 # How long before and after its reference time a record may be used [s]: half the fit interval of GPS and QZSS
 # (IS-GPS-200 20.3.4.4); the others common practice, by the record spacing of each system.  Galileo's records are made
-# to run forward: on 2020-06-25 they were 0.9 m from precise orbits up to 2 h after, 5 m 60 to 90 min before, 11 m before.
+# to run forward: on 2020-06-25 they were 0.9 m from precise orbits up to 2 h after, but 5 m 60 to 90 min before, and
+# 11 m earlier still.
 AGE_LIMIT_S = {"G": (7200.0, 7200.0), "J": (7200.0, 7200.0), "E": (5400.0, 7200.0), "C": (3600.0, 3600.0),
                "R": (900.0, 900.0)}  # fmt: skip
 _AGE_SLACK_S = 1.0  # an epoch on the limit stays inside it when light time is taken off
