@@ -1,0 +1,83 @@
+// The view and its URL: round trips, damaged links, the history.
+import assert from "node:assert/strict";
+import test from "node:test";
+import { clockText, firstView, fromQuery, LAYERS, SHOWABLE, State, toQuery } from "../../frontend/js/state.js";
+
+test("the first view has an empty query, and an empty query is the first view", () => {
+  assert.equal(toQuery(firstView()), "");
+  assert.deepEqual(fromQuery(""), firstView());
+});
+
+test("every view survives the way through its URL", () => {
+  const views = [];
+  for (const layer of LAYERS) {
+    for (const clock of ["utc", "local"]) {
+      for (let bits = 0; bits < 2 ** SHOWABLE.length; bits++) {
+        views.push({
+          region: "Strait of trials & more/less",
+          day: "2031-05-11",
+          minute: (bits * 97) % 1440,
+          layer,
+          clock,
+          place: bits % 2 ? [-41.125, 147.5] : null,
+          show: new Set(SHOWABLE.filter((_, i) => bits & (1 << i))),
+        });
+      }
+    }
+  }
+  for (const view of views) assert.deepEqual(fromQuery(toQuery(view)), view);
+  assert.equal(new Set(views.map(toQuery)).size, views.length, "two views share a URL");
+});
+
+test("a damaged link opens at first values", () => {
+  const view = fromQuery("?day=yesterday&time=25:99&layer=rainbow&at=900,abc&clock=moon&show=dragons");
+  assert.deepEqual(view, { ...firstView(), show: new Set() });
+});
+
+test("minutes as a clock", () => {
+  assert.deepEqual([0, 875, 1439].map(clockText), ["00:00", "14:35", "23:59"]);
+});
+
+function world(search = "") {
+  const calls = [];
+  let heard = () => {};
+  const location = { search };
+  const history = {
+    pushState: (_a, _b, url) => calls.push(["push", url]),
+    replaceState: (_a, _b, url) => calls.push(["replace", url]),
+  };
+  let now = 0;
+  const state = new State({ history, location, listen: (_type, f) => (heard = f), clock: () => now });
+  return { calls, state, location, back: (query) => ((location.search = query), heard()), wait: (ms) => (now += ms) };
+}
+
+test("a run of moves in time is one step of the history; other changes are a step each", () => {
+  const { calls, state, wait } = world("?region=a&day=2031-05-11");
+  state.change({ minute: 5 });
+  wait(100);
+  state.change({ minute: 10 });
+  wait(5000);
+  state.change({ minute: 15 });
+  state.change({ layer: "slope" });
+  state.change({ minute: 20 });
+  assert.deepEqual(calls.map(([kind]) => kind), ["push", "replace", "push", "push", "push"]);
+});
+
+test("nothing is written or told when nothing changes", () => {
+  const { calls, state } = world("?layer=slope&at=-40,146");
+  let told = 0;
+  state.addEventListener("change", () => told++);
+  state.change({ layer: "slope", place: [-40, 146], show: new Set(["receivers", "sites", "veil"]) });
+  assert.equal(told, 0);
+  assert.equal(calls.length, 0);
+});
+
+test("going back tells exactly what differs", () => {
+  const { state, back } = world("?region=a&day=2031-05-11&time=05:00");
+  state.change({ layer: "state", minute: 330 });
+  let names = null;
+  state.addEventListener("change", (event) => (names = event.detail));
+  back("?region=a&day=2031-05-11&time=05:00");
+  assert.deepEqual([...names].sort(), ["layer", "minute"]);
+  assert.equal(state.view.minute, 300);
+});

@@ -1,0 +1,131 @@
+"""The page's pure functions under node, and what its files may hold.
+
+node is no dependency of the program: without it only the tests that need it are skipped.
+"""
+
+import re
+import shutil
+import subprocess
+from html.parser import HTMLParser
+from pathlib import Path
+
+import pytest
+
+from skylag.web.app import CONTENT_POLICY
+
+ROOT = Path(__file__).resolve().parents[2]
+FRONTEND = ROOT / "frontend"
+TEXT_FILES = sorted(p for p in FRONTEND.rglob("*") if p.suffix in {".html", ".js", ".css", ".svg"})
+
+SCRIPTS = [p for p in TEXT_FILES if p.suffix == ".js"]
+
+
+def test_pure_functions_under_node() -> None:
+    """All of tests/page/*.test.mjs pass; each is a plain module without packages."""
+    node = shutil.which("node")
+    if node is None:
+        pytest.skip("node is not installed; it runs the page's pure functions")
+    files = sorted(str(p) for p in Path(__file__).parent.glob("*.test.mjs"))
+    assert len(files) >= 4
+    done = subprocess.run([node, "--test", *files], capture_output=True, text=True, timeout=120, check=False)
+    assert done.returncode == 0, done.stdout[-6000:] + done.stderr[-2000:]
+    counted = re.search(r"^# pass (\d+)", done.stdout, re.MULTILINE)
+    assert counted is not None
+    assert int(counted.group(1)) >= 50
+
+
+class _Elements(HTMLParser):
+    """Start tags with their attributes, and the text inside script and style elements."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.tags: list[tuple[str, dict[str, str | None]]] = []
+        self.inside: list[str] = []
+        self._open = ""
+
+    def handle_starttag(self, tag: str, attrs: list[tuple[str, str | None]]) -> None:
+        self.tags.append((tag, dict(attrs)))
+        self._open = tag
+
+    def handle_endtag(self, tag: str) -> None:
+        self._open = ""
+
+    def handle_data(self, data: str) -> None:
+        if self._open in {"script", "style"} and data.strip():
+            self.inside.append(data)
+
+
+@pytest.fixture
+def page() -> _Elements:
+    parser = _Elements()
+    parser.feed((FRONTEND / "index.html").read_text(encoding="utf-8"))
+    return parser
+
+
+def test_no_script_or_style_stands_inside_the_page(page: _Elements) -> None:
+    """A strict content policy forbids inline scripts, handlers and styles; the page has none."""
+    assert page.inside == []
+    for tag, attributes in page.tags:
+        for name in attributes:
+            assert not name.startswith("on"), f"<{tag} {name}>"
+            assert name != "style", f"<{tag} style>"
+
+
+def test_content_policy_allows_scripts_from_this_server_only() -> None:
+    """No inline script, no evaluation of text, no other host."""
+    rules = dict(rule.split(" ", 1) for rule in CONTENT_POLICY.split("; "))
+    assert rules["script-src"] == "'self'"
+    assert rules["default-src"] == "'self'"
+    assert rules["connect-src"] == "'self'"
+    assert "http" not in CONTENT_POLICY
+
+
+@pytest.mark.parametrize("path", TEXT_FILES, ids=lambda p: str(p.relative_to(FRONTEND)))
+def test_no_file_names_another_host(path: Path) -> None:
+    """The only addresses with a host are the names of the SVG vocabulary, which nothing fetches."""
+    text = path.read_text(encoding="utf-8").replace("http://www.w3.org/2000/svg", "")
+    assert not re.findall(r"(?:https?|wss?):\/\/[^\s\"')]+|[\"'(]\/\/[a-z0-9.-]+\.[a-z]{2,}", text)
+
+
+@pytest.mark.parametrize("path", SCRIPTS, ids=lambda p: str(p.relative_to(FRONTEND)))
+def test_scripts_put_no_text_in_as_markup(path: Path) -> None:
+    """What the service says enters the page as text, never as markup or as code."""
+    text = path.read_text(encoding="utf-8")
+    assert not re.findall(r"innerHTML|outerHTML|insertAdjacentHTML|document\.write|\beval\(|new Function", text)
+
+
+def test_every_file_the_page_names_is_there(page: _Elements) -> None:
+    """Links, scripts and imports lead to files of this project; plotly.js is served from the Python package."""
+    for _tag, attributes in page.tags:
+        for name in ("src", "href"):
+            target = attributes.get(name) or ""
+            if target and not target.startswith("#") and target != "/vendor/plotly.min.js":
+                assert (FRONTEND / target).is_file(), target
+    for path in FRONTEND.rglob("*.js"):
+        for target in re.findall(r"from \"(\.[^\"]+)\"", path.read_text(encoding="utf-8")):
+            assert (path.parent / target).resolve().is_file(), f"{path.name} imports {target}"
+
+
+def test_every_element_that_the_script_asks_for_is_on_the_page(page: _Elements) -> None:
+    """An id asked for in main.js and missing in index.html would fail only in a browser."""
+    ids = [attributes["id"] for _tag, attributes in page.tags if attributes.get("id")]
+    assert len(ids) == len(set(ids)), "an id is used twice"
+    asked = re.findall(r"\bat\(\"([a-z-]+)\"\)", (FRONTEND / "js" / "main.js").read_text(encoding="utf-8"))
+    assert len(asked) > 20
+    assert set(asked) <= set(ids), set(asked) - set(ids)
+
+
+def test_controls_have_names(page: _Elements) -> None:
+    """Every input and select has a label for it or around it; landmarks are there."""
+    tags = [tag for tag, _attributes in page.tags]
+    for landmark in ("header", "main", "aside", "footer"):
+        assert tags.count(landmark) == 1, landmark
+    labelled = {attributes.get("for") for tag, attributes in page.tags if tag == "label"}
+    for number, (tag, attributes) in enumerate(page.tags):
+        if tag in {"input", "select"} and attributes.get("id") not in labelled:
+            assert page.tags[number - 1][0] == "label", attributes
+
+
+def test_page_is_light() -> None:
+    """Without plotly.js the page weighs under 250 kB, uncompressed (budget of the project)."""
+    assert sum(path.stat().st_size for path in FRONTEND.rglob("*") if path.is_file()) < 250_000

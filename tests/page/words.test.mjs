@@ -1,0 +1,69 @@
+// Numbers, places, times and sentences as the page writes them.
+import assert from "node:assert/strict";
+import test from "node:test";
+import * as words from "../../frontend/js/words.js";
+import { degrees } from "../../frontend/js/panels/reading.js";
+
+const MINUS = "\u2212";
+
+test("a number carries its uncertainty, rounded alike", () => {
+  assert.equal(words.withSigma(38.4, 6.2, "mm/km"), "38 ± 6 mm/km");
+  assert.equal(words.withSigma(3.4261, 0.273, "m"), "3.4 ± 0.3 m");
+  assert.equal(words.withSigma(3.4261, 0.0127, "m", 3), "3.426 ± 0.013 m");
+  assert.equal(words.withSigma(-4.2, 1.2, "m"), `${MINUS}4.2 ± 1.2 m`);
+});
+
+test("what is not known is said, never shown as a number", () => {
+  assert.equal(words.withSigma(NaN, 1, "m"), "not known");
+  assert.match(words.withSigma(3.2, NaN, "m"), /uncertainty not known/);
+  assert.equal(words.fixed(NaN, 1), "–");
+});
+
+test("no minus before a zero", () => assert.equal(words.fixed(-0.004, 2), "0.00"));
+
+test("places name their hemispheres", () => {
+  assert.equal(words.placeText(-41.25, 146.5), "41.25° S, 146.50° E");
+  assert.equal(words.placeText(12, -3.5, 1), "12.0° N, 3.5° W");
+  assert.equal(words.lonText(190, 0), "170° W");
+});
+
+test("compass words for headings", () => {
+  assert.deepEqual([0, 44, 91, 180, 225, 315, 359, 361].map(words.compass), ["north", "north-east", "east", "south", "south-west", "north-west", "north", "north"]);
+});
+
+test("times always name their clock, and epochs of GPS time are written to the nearest minute", () => {
+  const ms = Date.UTC(2031, 4, 11, 5, 29, 42);
+  assert.equal(words.timeText(ms), "05:30 UTC");
+  assert.equal(words.timeText(ms, { clock: "local", zone: "Australia/Hobart" }), "15:30 Hobart time");
+  assert.equal(words.bothClocks(ms, "Australia/Hobart"), "05:30 UTC · 15:30 Hobart time");
+  assert.equal(words.bothClocks(Date.UTC(2031, 4, 11, 20), "Australia/Hobart"), "20:00 UTC · 06:00 Hobart time, 12 May 2031");
+  assert.equal(words.bothClocks(ms, "UTC"), "05:30 UTC");
+});
+
+test("a zone this browser does not know falls back to UTC instead of failing", () => {
+  assert.equal(words.hourText(Date.UTC(2031, 0, 1, 7), "Nowhere/Atall"), "07:00");
+});
+
+test("unseen has its own words, which promise nothing", () => {
+  const sentence = words.siteSentence("Northport", "unseen", "");
+  assert.match(sentence, /unseen/);
+  assert.match(sentence, /not enough data/);
+  assert.doesNotMatch(sentence, /hold/);
+});
+
+test("a reason is joined to its site without saying the state twice", () => {
+  assert.equal(words.siteSentence("Northport", "broken", "broken: the delay changes by 40 mm per km"), "Northport: broken, the delay changes by 40 mm per km.");
+  assert.equal(words.siteSentence("Northport", "holds", ""), "Northport: holds.");
+});
+
+test("flags in a line", () => {
+  const flag = { kind: "front", slope: 95.2, sigma: 9.1, speed: 61.8, heading: 315 };
+  assert.equal(words.flagSentence(flag), "Moving front, 95 ± 9 mm/km, moving north-west at 62 m/s");
+  assert.equal(words.flagSentence({ ...flag, kind: "fault", slope: NaN, speed: NaN }), "Fault in the data");
+});
+
+test("degrees are read as people write them, and refused when they are not degrees", () => {
+  for (const text of ["40.25 S", "40.25° S", "-40.25", `${MINUS}40.25`, "40,25 s"]) assert.equal(degrees(text, "S"), -40.25);
+  assert.equal(degrees("146.5 E", "W"), 146.5);
+  for (const text of ["", "north", "40.25 E", "1e3", "40 15 S"]) assert.ok(Number.isNaN(degrees(text, "S")), text);
+});
