@@ -5,10 +5,11 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 from tests.conftest import Evidence, reference_rows
+from tests.ionosphere.test_orbits import G07, ephemerides, seconds
 
 from skylag.constants import SBAS_EARTH_RADIUS_M, SHELL_EARTH_RADIUS_M
 from skylag.errors import Refused
-from skylag.ionosphere import geometry
+from skylag.ionosphere import geometry, orbits
 from skylag.tables import Arcs, Observations, Receiver, SignalPair
 
 DO_229 = "RTCA DO-229 A.4.4.10.1, equal to ray and sphere in vector form"
@@ -47,12 +48,9 @@ def test_direction_to_a_satellite(evidence: Evidence) -> None:
     """The satellite as seen: its position at transmission, turned by the Earth during light time."""
     receiver = np.array([3582104.9, 532590.2, 5232755.1])
     # G07 of 2020-06-25 at tow 389400, by the published record: see kepler_records.csv.
-    from tests.ionosphere.test_orbits import G07, ephemerides, seconds
-
-    from skylag.ionosphere import orbits
-
     when = np.array([G07["toe"] + seconds(600)])  # type: ignore[operator]
-    elevation, azimuth = geometry.look(receiver.tolist(), orbits.seen_from(ephemerides([G07]), ["G07"], when, receiver.tolist()))
+    seen = orbits.seen_from(ephemerides([G07]), ["G07"], when, receiver.tolist())
+    elevation, azimuth = geometry.look(receiver.tolist(), seen)
     source = "handbook check, computed with pymap3d as second route"
     evidence("elevation of G07 at ESBC", source=source, expected=16.396522600, got=float(elevation[0, 0]),
              tolerance=1e-7, unit="deg")  # fmt: skip
@@ -174,7 +172,8 @@ def small_arcs() -> Arcs:
     )  # fmt: skip
     return Arcs(
         observations=observations,
-        stec=np.array([[10.0, 20.0, 30.0], [11.0, 21.0, 31.0]]), stec_phase=np.array([[1.0, 2.0, 3.0], [2.0, 3.0, 4.0]]),
+        stec=np.array([[10.0, 20.0, 30.0], [11.0, 21.0, 31.0]]),
+        stec_phase=np.array([[1.0, 2.0, 3.0], [2.0, 3.0, 4.0]]),
         arc=np.array([[0, 1, 2], [0, 1, -1]]), arc_satellite=np.array([0, 1, 2]), arc_start=np.zeros(3, dtype=np.int64),
         arc_end=np.array([1, 1, 0]), arc_began=np.zeros(3, dtype=np.uint8), arc_level_sigma=np.array([0.1, 0.2, 0.3]),
         arc_noise=np.full(3, 0.5), arc_points=np.array([2, 2, 1]), rejected={},
@@ -183,7 +182,7 @@ def small_arcs() -> Arcs:
 
 def sky(*directions: tuple[float, float]) -> np.ndarray:
     """Positions (2, satellites, 3) in the given elevations and azimuths from the small arcs' receiver."""
-    lat, lon = np.radians([50.0, 10.0])
+    lon = np.radians(10.0)
     east = np.array([-np.sin(lon), np.cos(lon), 0])
     up = unit(50.0, 10.0)
     north = np.cross(up, east)
@@ -225,8 +224,12 @@ def test_place_passes_over_unknown_positions() -> None:
 
 @pytest.mark.parametrize(
     ("positions", "minimum", "words"),
-    [(np.zeros((2, 2, 3)), 10.0, "needs the shape"), (np.zeros((2, 3, 3)), 0.0, "1 to 80"), (np.zeros((2, 3, 3)), 85.0, "1 to 80")],
-)  # fmt: skip
+    [
+        (np.zeros((2, 2, 3)), 10.0, "needs the shape"),
+        (np.zeros((2, 3, 3)), 0.0, "1 to 80"),
+        (np.zeros((2, 3, 3)), 85.0, "1 to 80"),
+    ],
+)
 def test_place_refuses_what_makes_no_sense(positions: np.ndarray, minimum: float, words: str) -> None:
     with pytest.raises(Refused, match=words):
         geometry.place(small_arcs(), positions, 400e3, minimum)

@@ -318,7 +318,8 @@ def test_broadcast_against_precise_orbits_of_another_day(
     apart = distances(records, table, system)
     assert len(apart) > 800
     evidence(f"broadcast minus precise 2024-03-30, {system}, rms", unit="m",
-             source="CODE final SP3 of the day, real data", expected=asked_m, got=float(np.sqrt((apart**2).mean())), tolerance=0, at_most=True)  # fmt: skip
+             source="CODE final SP3 of the day, real data",
+             expected=asked_m, got=float(np.sqrt((apart**2).mean())), tolerance=0, at_most=True)  # fmt: skip
 
 
 @pytest.mark.open_data
