@@ -519,9 +519,10 @@ def steepness(wall: _Wall, onsets: Onsets, points: _Points, interval_s: float = 
 
     A pierce point that moves with the wall sees it pass slowly, so the steepest rate is divided by the relative speed
     along the heading.  A slanting line of sight meets an upright wall over a stretch that grows with its lean, and
-    sees it too broad and too flat: breadth^2 = width^2 + (depth * lean)^2 is fitted over the lines, those of least
-    lean counting most, and the width upright is what counts.  What a wider choice of lines would change is in the
-    sigma.  Broken runs (jump far from the usual) are left out.
+    sees it too broad and too flat: the square of the breadth per TECU is fitted as a constant (upright) and a part
+    that grows with the square of the lean, those of least lean counting most.  What a wider choice of lines would
+    change, and what the restlessness of the lines adds to a steepest rate, is in the sigma.  Broken runs (jump far from
+    the usual) are left out.
     """
     east, north = np.sin(wall.heading), np.cos(wall.heading)
     relative = np.abs(wall.speed * 1000.0 - (onsets.east_speed * east + onsets.north_speed * north)) / 1000.0
@@ -534,23 +535,27 @@ def steepness(wall: _Wall, onsets: Onsets, points: _Points, interval_s: float = 
     if len(used) < 3:
         nothing = float("nan")
         return Steepness(nothing, nothing, nothing, nothing, usual, nothing, 0.0)
-    seen = jumps[used] * relative[used] / np.maximum(np.abs(onsets.rate[used]), 1e-9)
-    square, square_sigma, depth = _upright(seen, lean[used], 0.1)
-    square_sigma = float(np.hypot(square_sigma, 0.5 * (square - _upright(seen, lean[used], 0.2)[0])))
-    width = float(np.sqrt(square))
-    jump = float(np.median(jumps[used]))
-    jump_sigma = 1.2533 * 1.4826 * float(np.median(np.abs(jumps[used] - jump))) / np.sqrt(len(used))
+    # Kilometres per TECU: the inverse slope, whose square grows with the square of the lean.
+    inverse = relative[used] / np.maximum(np.abs(onsets.rate[used]), 1e-9)
+    square, square_sigma, depth = _upright(inverse, lean[used], 0.1)
+    square_sigma = float(np.hypot(square_sigma, 0.5 * (square - _upright(inverse, lean[used], 0.2)[0])))
+    few = used[np.argsort(lean[used], kind="stable")][: max(5, len(used) // 3)]
+    jump = float(np.median(jumps[few]))
+    jump_sigma = 1.2533 * 1.4826 * float(np.median(np.abs(jumps[few] - jump))) / np.sqrt(len(few))
+    slope, width = MM_PER_TECU / float(np.sqrt(square)), jump * float(np.sqrt(square))
     speed_share = float(np.sqrt(wall.covariance[1, 1]) / np.median(relative[used]))
     # Steepest rates are taken over an interval: a wall that passes as fast is flattened by up to that.
     blur = min(0.5, float(np.median(relative[used]) * interval_s / width) ** 2 / 12.0)
-    share = float(np.sqrt((0.5 * square_sigma / square) ** 2 + speed_share**2 + blur**2))
-    slope = jump / width * MM_PER_TECU
-    slope_sigma = slope * float(np.hypot(share, jump_sigma / jump))
-    return Steepness(slope, slope_sigma, width, width * share, jump, jump_sigma, depth)
+    restless = float(np.median(onsets.rate_sigma[used] / np.abs(onsets.rate[used])))
+    share = float(np.sqrt((0.5 * square_sigma / square) ** 2 + speed_share**2 + blur**2 + restless**2))
+    width_sigma = width * float(np.hypot(share, jump_sigma / jump))
+    return Steepness(slope, slope * share, width, width_sigma, jump, jump_sigma, depth * jump)
 
 
 def _upright(seen: Floats, lean: Floats, least: float) -> tuple[float, float, float]:
-    """Square of the width seen upright, its sigma [km^2], and depth [km] from breadths [km] and leans; robust.
+    """Square of the breadth seen upright, its sigma, and the growth of breadth per unit of lean; robust.
+
+    seen  breadths [km per TECU]; lean  tangent of the angle in which a line of sight slants along the heading.
 
     Lines with a lean above `least` count less and less.
     """
@@ -561,20 +566,26 @@ def _upright(seen: Floats, lean: Floats, least: float) -> tuple[float, float, fl
     covariance = np.zeros((2, 2))
     answer = np.array([float(np.median(target)), 0.0])
     for _ in range(8):
-        normal = design.T @ (design * weight[:, None] ** 2) + 1e-18 * np.eye(2)
+        normal = _normal(design, weight)
         answer = np.linalg.solve(normal, design.T @ (target * weight**2))
         # Neither a width nor a depth can be imaginary: what would be is held at nothing.
         if answer[1] < 0.0 or answer[0] < 0.05 * float(np.min(target)):
             mean = float((target * weight**2).sum() / (weight**2).sum())
             answer = np.array([mean, 0.0])
-        model = np.maximum(design @ answer, 1.0)
+        model = np.maximum(design @ answer, 1e-12)
         over = target / model - 1.0
         scatter = max(1.4826 * float(np.median(np.abs(over))), 0.01)
         weight = np.sqrt(trust * np.minimum(1.0, 1.5 / np.maximum(np.abs(over) / scatter, 1e-9))) / model
-        covariance = np.linalg.inv(design.T @ (design * weight[:, None] ** 2) + 1e-18 * np.eye(2)) * scatter**2
+        covariance = np.linalg.inv(_normal(design, weight)) * scatter**2
     held = answer[1] == 0.0
     variance = scatter**2 * answer[0] ** 2 / len(seen) if held else covariance[0, 0]
     return float(answer[0]), float(np.sqrt(variance)), float(np.sqrt(answer[1]))
+
+
+def _normal(design: Floats, weight: Floats) -> Floats:
+    """Normal matrix, kept away from singular by a trillionth of its diagonal."""
+    normal = design.T @ (design * weight[:, None] ** 2)
+    return np.asarray(normal + 1e-12 * np.diag(np.diag(normal) + 1e-30))
 
 
 # ---------------------------------------------------------------------------------------------- arrivals
