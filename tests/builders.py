@@ -14,6 +14,7 @@ import numpy as np
 
 from skylag.archive import open_archive
 from skylag.constants import L1_M_PER_TECU
+from skylag.ionosphere.geometry import earth_fixed
 from skylag.tables import (
     BROKEN,
     HOLDS,
@@ -61,10 +62,8 @@ _PLACES = {
 
 
 def _receiver(name: str, lat: float, lon: float) -> Receiver:
-    """A receiver on a round Earth: near enough for a picture."""
-    lat_rad, lon_rad = np.deg2rad(lat), np.deg2rad(lon)
-    x, y, z = np.cos(lat_rad) * np.cos(lon_rad), np.cos(lat_rad) * np.sin(lon_rad), np.sin(lat_rad)
-    return Receiver(name, (6.371e6 * float(x), 6.371e6 * float(y), 6.371e6 * float(z)))
+    x, y, z = earth_fixed(lat, lon, 50.0)
+    return Receiver(name, (float(x), float(y), float(z)))
 
 
 RECEIVERS = tuple(_receiver(name, *place) for name, place in _PLACES.items())

@@ -132,13 +132,21 @@ def _geojson_lines(path: Path) -> list[Line]:
         line = getattr(cause, "lineno", 0)
         raise FormatError(f"{path}:{line}: this is no GeoJSON ({cause})", path=str(path), line=line) from cause
     try:
-        lines = [np.array(points, dtype=np.float64)[:, 1::-1] for points in _point_lists(content)]
+        lines = [_line_of(points) for points in _point_lists(content)]
     except (TypeError, KeyError, ValueError, IndexError) as cause:
         raise FormatError(f"{path}: coordinates that are not numbers ({cause})", path=str(path), line=0) from cause
-    good = [np.ascontiguousarray(line) for line in lines if len(line) > 1]
+    good = [line for line in lines if len(line) > 1]
     if not good:
         raise FormatError(f"{path}: holds no line and no polygon, so no coast can be drawn", path=str(path), line=0)
     return good
+
+
+def _line_of(positions: Any) -> Line:
+    """Positions of GeoJSON as latitude and longitude; heights are left out.  Raises ValueError for what is no place."""
+    places = np.array([[position[1], position[0]] for position in positions], dtype=np.float64)
+    if not np.isfinite(places).all():
+        raise ValueError("a coordinate is empty")
+    return places
 
 
 def _point_lists(thing: Any) -> list[Any]:

@@ -31,12 +31,15 @@ Clock = Callable[[], np.datetime64]
 # What each kind of failure is in HTTP.  A FormatError here means damaged stored data: nobody sent a file.
 STATUS: dict[type[SkylagError], int] = {Missing: 404, Refused: 422, NotEnough: 422, Unsolvable: 422, FormatError: 500}
 
-# plotly sets styles on its elements and draws exported pictures from blob: and data: addresses.
+# plotly writes style attributes on what it draws, and makes pictures from blob: and data: addresses.  The page gives
+# plotly's rules itself, so style elements added by script stay forbidden; so does eval, which only WebGL traces try.
 CONTENT_POLICY = "; ".join(
     (
         "default-src 'self'",
         "script-src 'self'",
-        "style-src 'self' 'unsafe-inline'",
+        "style-src 'self' 'unsafe-inline'",  # for browsers that do not know the two finer words below
+        "style-src-elem 'self'",
+        "style-src-attr 'unsafe-inline'",
         "img-src 'self' data: blob:",
         "connect-src 'self'",
         "object-src 'none'",

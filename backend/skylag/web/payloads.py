@@ -22,6 +22,7 @@ from fastapi.responses import Response
 from skylag import quantities, timescales
 from skylag.archive import DayHead, DayRecord, SiteStates
 from skylag.constants import L1_M_PER_TECU
+from skylag.ionosphere.geometry import geodetic
 from skylag.tables import STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Rays, Region
 from skylag.web import nearby, sentences
 
@@ -192,9 +193,12 @@ def day(record: DayRecord, heads: Sequence[DayHead]) -> dict[str, Any]:
         "warnings": notices,
         "region": _region(region),
         "receivers": [
-            {"name": r.name, "lat": lat, "lon": lon, "height_m": height_m, "antenna": r.antenna, "type": r.type}
+            {
+                "name": r.name, "lat": round(float(lat), 6), "lon": round(float(lon), 6),
+                "height_m": round(float(height_m), 2), "antenna": r.antenna, "type": r.type,
+            }
             for r in record.receivers
-            for lat, lon, height_m in [_geodetic(r.position_m)]
+            for lat, lon, height_m in [geodetic(r.position_m)]
         ],
         "sites": [
             {"name": site.name, "lat": site.lat, "lon": site.lon, "kind": site.kind} for site in region.sites
@@ -224,22 +228,6 @@ def _region(region: Region) -> dict[str, Any]:
         "shell_height_km": region.shell_height_km, "timezone": region.timezone,
         "thresholds": {name: getattr(limits, name) for name in type(limits).__dataclass_fields__},
     }  # fmt: skip
-
-
-def _geodetic(position_m: tuple[float, float, float]) -> tuple[float, float, float]:
-    """Latitude, longitude [deg] and height [m] on WGS 84 of an Earth-fixed position (Bowring 1976, iterated)."""
-    from skylag.constants import WGS84_A_M, WGS84_F
-
-    x, y, z = position_m
-    squared = WGS84_F * (2 - WGS84_F)
-    across = math.hypot(x, y)
-    lat_rad = math.atan2(z, across * (1 - squared))
-    height = 0.0
-    for _ in range(6):
-        normal = WGS84_A_M / math.sqrt(1 - squared * math.sin(lat_rad) ** 2)
-        height = across / math.cos(lat_rad) - normal if abs(math.cos(lat_rad)) > 1e-6 else abs(z) - normal
-        lat_rad = math.atan2(z, across * (1 - squared * normal / (normal + height)))
-    return round(math.degrees(lat_rad), 7), round(math.degrees(math.atan2(y, x)), 7), round(height, 3)
 
 
 # ---------------------------------------------------------------------------------------------- maps
