@@ -3,8 +3,10 @@
 `create_app` is given its world and opens nothing.  Content may come from the page's own address only.
 """
 
+import contextlib
 import gzip
 import re
+import socket
 from collections.abc import Awaitable, Callable
 from concurrent.futures import Executor
 from functools import cache
@@ -169,6 +171,39 @@ def _add_errors(app: FastAPI) -> None:
         return answer
 
 
-def serve(app: FastAPI, host: str, port: int) -> None:
-    """Serve until interrupted."""
-    uvicorn.run(app, host=host, port=port, log_level="warning", access_log=False, server_header=False)
+def serve(app: FastAPI, host: str, port: int, ready: Callable[[str], None] | None = None) -> None:
+    """Serve until interrupted; port 0 takes a free one.
+
+    ready  called once with the address of the page, when connections are taken
+    Raises Refused where the port is taken or the host is not an address of this machine.
+    """
+    listening = _listen(host, port)
+    try:
+        if ready is not None:
+            taken = listening.getsockname()[1]
+            ready(f"http://{f'[{host}]' if ':' in host else host}:{taken}/")
+        server = uvicorn.Server(uvicorn.Config(app, log_level="warning", access_log=False, server_header=False))
+        with contextlib.suppress(KeyboardInterrupt):
+            server.run(sockets=[listening])
+    finally:
+        listening.close()
+
+
+def _listen(host: str, port: int) -> socket.socket:
+    """A socket that takes connections from now on: those that come before the server runs wait a moment."""
+    try:
+        family, kind, protocol, _, address = socket.getaddrinfo(host, port, type=socket.SOCK_STREAM)[0]
+        listening = socket.socket(family, kind, protocol)
+        try:
+            listening.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
+            listening.bind(address)
+            listening.listen(256)
+        except OSError:
+            listening.close()
+            raise
+    except OSError as cause:
+        raise Refused(
+            f"cannot listen on {host} port {port}: {cause.strerror}; choose another with --port, or 0 for any free one",
+            name="port", value=port, allowed="a free port of this machine",
+        ) from cause  # fmt: skip
+    return listening

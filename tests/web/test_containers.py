@@ -1,0 +1,85 @@
+"""The files for containers: sound YAML, commands that exist, nothing open that need not be, no secret inside."""
+
+import re
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+import yaml
+
+ROOT = Path(__file__).resolve().parents[2]
+
+
+@pytest.fixture(scope="module")
+def compose() -> dict:
+    return yaml.safe_load((ROOT / "docker-compose.yml").read_text(encoding="utf-8"))
+
+
+def commands(compose: dict) -> list[list[str]]:
+    """Every skylag command line of the compose file and the image."""
+    image = re.search(r"^CMD (\[.*\])$", (ROOT / "Dockerfile").read_text(encoding="utf-8"), re.MULTILINE)
+    assert image is not None
+    found = [yaml.safe_load(image.group(1))]
+    found += [service["command"] for service in compose["services"].values() if "command" in service]
+    return found
+
+
+def test_each_command_exists_with_its_options(compose: dict) -> None:
+    for line in commands(compose):
+        assert line[0] == "skylag"
+        told = subprocess.run(
+            [sys.executable, "-m", "skylag.cli", line[1], "--help"],
+            cwd=ROOT / "backend", capture_output=True, text=True, check=False, timeout=60,
+        )  # fmt: skip
+        assert told.returncode == 0, told.stderr
+        for option in line[2:]:
+            if option.startswith("--"):
+                assert option in told.stdout, f"skylag {line[1]} has no {option}"
+
+
+def test_services_are_healthy_and_wait_for_one_another(compose: dict) -> None:
+    assert set(compose["services"]) == {"db", "web"}
+    for name, service in compose["services"].items():
+        assert "healthcheck" in service and "test" in service["healthcheck"], name
+    assert compose["services"]["web"]["depends_on"]["db"]["condition"] == "service_healthy"
+    named = {volume.split(":")[0] for service in compose["services"].values() for volume in service.get("volumes", ())}
+    assert named == set(compose["volumes"])
+
+
+def test_only_the_loopback_address_is_published(compose: dict) -> None:
+    ports = [port for service in compose["services"].values() for port in service.get("ports", ())]
+    assert ports and all(port.startswith("127.0.0.1:") for port in ports)
+
+
+def test_no_secret_is_written_down() -> None:
+    """Passwords come from the environment, and starting without one fails."""
+    text = (ROOT / "docker-compose.yml").read_text(encoding="utf-8")
+    values = re.findall(r"(?:PASSWORD:|://\w+:)\s*(\S+?)(?:@|\s)", text)
+    assert values and all(value.startswith("${SKYLAG_DB_PASSWORD:?") for value in values), values
+
+
+def test_the_image_runs_without_rights() -> None:
+    text = (ROOT / "Dockerfile").read_text(encoding="utf-8")
+    user = text.index("\nUSER skylag")
+    assert "useradd" in text[:user] and "RUN" not in text[user:]
+
+
+def test_the_archive_url_is_one_that_opens(compose: dict) -> None:
+    """The URL with a password put in is understood, and names a folder inside a volume of the service."""
+    from skylag.archive import store
+
+    web = compose["services"]["web"]
+    url = store._url_of(re.sub(r"\$\{[^}]*\}", "pass", web["environment"]["SKYLAG_ARCHIVE"]))
+    assert (url.host, url.database, url.username) == ("db", "skylag", "skylag")
+    assert url.query["slant_folder"].startswith(web["volumes"][0].split(":")[1])
+
+
+def test_the_ci_script_is_sound_bash() -> None:
+    script = ROOT / ".ci" / "run"
+    assert subprocess.run(["bash", "-n", str(script)], check=False).returncode == 0
+    assert script.stat().st_mode & 0o111, "it must be executable"
+    readme = (ROOT / "README.md").read_text(encoding="utf-8")
+    text = script.read_text(encoding="utf-8")
+    assert "python -m pytest --browser" in readme and "python -m pytest --browser" in text
+    assert "SKYLAG_NO_SKIPS=1" in text
