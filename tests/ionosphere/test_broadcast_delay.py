@@ -67,7 +67,8 @@ def test_ntcm_examples(row: dict[str, str], evidence: Evidence) -> None:
     slant, vertical = broadcast_delay.ntcm(
         SETS[row["set"]], float(row["lat"]), float(row["lon"]), elevation, azimuth, when
     )  # type: ignore[arg-type]
-    evidence(f"NTCM-G slant content, set {row['set']}, {row['ut_h']} UT, {row['lat']} {row['lon']} to {row['satellite_lat']}",
+    which = f"set {row['set']}, {row['ut_h']} UT, {row['lat']} {row['lon']} to {row['satellite_lat']}"
+    evidence(f"NTCM-G slant content, {which}",
              unit="TECU", source="NTCM-G Ionospheric Model Description 1.0 (2022), Annex D",
              expected=float(row["stec"]), got=float(slant), tolerance=1e-4)  # fmt: skip
     assert float(vertical) < float(slant)

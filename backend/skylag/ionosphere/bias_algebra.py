@@ -115,8 +115,9 @@ def from_group_delays(ephemerides: Ephemerides) -> Biases:
         if system not in _BROADCAST_SIGMA_NS:
             continue
         own = ephemerides.satellites == name
-        start = ephemerides.toe[own].min().astype("datetime64[D]")
-        end = ephemerides.toe[own].max().astype("datetime64[D]") + 1
+        # The values change a few times a year, so a record speaks for the days next to its own too.
+        start = ephemerides.toe[own].min().astype("datetime64[D]") - 1
+        end = ephemerides.toe[own].max().astype("datetime64[D]") + 2
         first, second = (_latest(ephemerides, own, column) for column in (0, 1))
         told: list[tuple[str, str, float]] = []
         if system == "G":
