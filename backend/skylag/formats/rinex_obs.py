@@ -32,6 +32,7 @@ _SPARSEST = 40  # the dense arrays may take this many bytes per byte of text ...
 _SMALL = 256 * 2**20  # ... once they are larger than this
 _FIELDS_AT_ONCE = 30_000  # fields turned into numbers at once; the arrays in between then stay in the cache
 
+
 def parse(
     data: bytes,
     name: str,

@@ -50,9 +50,7 @@ def unwrap(data: bytes, name: str) -> Unwrapped:
             return Unwrapped(_hatanaka(data, name, problems), problems)
         else:
             return Unwrapped(data, problems)
-    raise FormatError(
-        f"{name}: more than {_DEEPEST} wrappers within each other; unpack it by hand", path=name, line=0
-    )
+    raise FormatError(f"{name}: more than {_DEEPEST} wrappers within each other; unpack it by hand", path=name, line=0)
 
 
 def is_hatanaka(data: bytes) -> bool:
