@@ -60,7 +60,7 @@ def find(
     x, y, z = np.array([receiver.position_m for receiver in rays.receivers]).T
     lat, lon = np.degrees(np.arctan2(z, np.hypot(x, y))), np.degrees(np.arctan2(y, x))
     faults = []
-    total = patches.breaks.sum(axis=0)
+    total = np.where(storm, 0, patches.breaks).sum(axis=0)
     chronic = total > np.maximum(choices.chronic_breaks, choices.storm_times * np.median(total))
     for number in np.flatnonzero(chronic).tolist():
         name = rays.receivers[number].name

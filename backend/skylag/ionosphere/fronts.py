@@ -563,7 +563,7 @@ def _upright(seen: Floats, lean: Floats, least: float) -> tuple[float, float, fl
     design = np.stack([np.ones(len(seen)), lean**2], axis=1)
     target = seen**2
     weight = np.sqrt(trust) / np.median(target)
-    covariance = np.zeros((2, 2))
+    covariance: Floats = np.zeros((2, 2))
     answer = np.array([float(np.median(target)), 0.0])
     for _ in range(8):
         normal = _normal(design, weight)
@@ -576,7 +576,7 @@ def _upright(seen: Floats, lean: Floats, least: float) -> tuple[float, float, fl
         over = target / model - 1.0
         scatter = max(1.4826 * float(np.median(np.abs(over))), 0.01)
         weight = np.sqrt(trust * np.minimum(1.0, 1.5 / np.maximum(np.abs(over) / scatter, 1e-9))) / model
-        covariance = np.linalg.inv(_normal(design, weight)) * scatter**2
+        covariance = np.asarray(np.linalg.inv(_normal(design, weight)) * scatter**2, dtype=np.float64)
     held = answer[1] == 0.0
     variance = scatter**2 * answer[0] ** 2 / len(seen) if held else covariance[0, 0]
     return float(answer[0]), float(np.sqrt(variance)), float(np.sqrt(answer[1]))
