@@ -21,13 +21,30 @@ export function begin() {
   requestAnimationFrame(() => setTimeout(open, 0));
 }
 
+/**
+ * When its script runs, plotly adds the styles of a tile map, which this page has not and the content policy refuses,
+ * unless an element with the styles' name (64 hexadecimal digits) is there already. Let it find one.
+ * @returns {() => void}  ends the pretence
+ */
+function withoutStyles() {
+  const stand = document.createElement("meta");
+  const find = Document.prototype.getElementById;
+  document.getElementById = (id) => find.call(document, id) ?? (/^[0-9a-f]{64}$/.test(id) ? stand : null);
+  return () => delete document.getElementById;
+}
+
 /** plotly.js, fetched with the page and run when first wanted: asking the service comes before it. */
 function plotly() {
   waiting ??= new Promise((resolve, reject) => {
     const script = document.createElement("script");
     script.src = "/vendor/plotly.min.js";
-    script.addEventListener("load", () => resolve(window.Plotly));
+    const done = withoutStyles();
+    script.addEventListener("load", () => {
+      done();
+      resolve(window.Plotly);
+    });
     script.addEventListener("error", () => {
+      done();
       waiting = null;
       script.remove();
       reject(new Error("plotly.js did not load from this server"));

@@ -29,6 +29,7 @@ export const KIND_WORDS = {
 
 export const WORDS = {
   simulated: "Simulated data: an invented network, invented days. Nothing here happened.",
+  dotted: "Dotted: unseen, not enough data to say.",
   loadingDay: "Opening the day …",
   loadingMap: "Fetching this hour …",
   loadingReading: "Reading the archive at this place …",

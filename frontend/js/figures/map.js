@@ -389,7 +389,7 @@ function layoutOf(contents, palette) {
   return {
     paper_bgcolor: printed ? palette.paper : "rgba(0,0,0,0)",
     plot_bgcolor: palette.paper,
-    margin: printed ? { l: 76, r: 40, t: 76, b: 84 } : marginOf(width),
+    margin: printed ? { l: 76, r: 40, t: 76, b: 96 } : marginOf(width),
     font: { ...font, color: palette.ink },
     showlegend: false,
     hovermode: false,

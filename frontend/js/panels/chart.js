@@ -5,7 +5,13 @@
 import { draw, erase, takePicture } from "../drawing.js";
 import { aspectOf, frameOf, heightOf, mapFigure } from "../figures/map.js";
 import { paint, projection } from "../painting.js";
+import { clockText } from "../state.js";
 import { bothClocks, dateText, LAYER_WORDS, WORDS } from "../words.js";
+
+/** A name fit for a file. @param {string} text */
+function plainName(text) {
+  return text.toLowerCase().replace(/[^\p{L}\p{N}]+/gu, "-").replace(/^-|-$/g, "");
+}
 
 export class ChartPanel {
   #element;
@@ -62,12 +68,12 @@ export class ChartPanel {
       ...contents,
       width: 1200,
       title: `<b>${day.region.name}</b>  ${LAYER_WORDS[view.layer].title}<br>${dateText(time)}, ${bothClocks(time, day.region.timezone)}`,
-      foot: `${day.simulated ? `${WORDS.simulated}<br>` : ""}${day.caution}`,
+      foot: [day.simulated ? WORDS.simulated : "", WORDS.dotted, day.caution].filter(Boolean).join("<br>"),
     });
     await takePicture(figure, {
-      width: Math.round((height - 160) * aspectOf(frame) + 236),
+      width: Math.round((height - 172) * aspectOf(frame) + 236),
       height,
-      name: `skylag-${day.region.key}-${day.day}-${view.layer}.png`,
+      name: `skylag-${plainName(day.region.name)}-${day.day}-${clockText(view.minute ?? 0).replace(":", "")}-${view.layer}.png`,
     });
   }
 
