@@ -6,6 +6,7 @@ They are read when asked for and never copied into the project.  Knows nothing o
 """
 
 import json
+from functools import lru_cache
 from importlib import import_module
 from pathlib import Path
 from typing import Any
@@ -15,7 +16,8 @@ import numpy.typing as npt
 
 from skylag.errors import FormatError, Missing, Refused
 
-Line = npt.NDArray[np.float64]  # (points, 2): latitude, longitude in degrees
+Line = npt.NDArray[np.float64]  # (points, 2): latitude, longitude in degrees; not to be written to
+Box = tuple[float, float, float, float]  # south, north, west, east in degrees
 
 # Levels of rings that are coast: 1 land against sea, 5 the ice front of Antarctica (the others are lakes and their
 # islands, and the line where that ice leaves the ground).
@@ -38,12 +40,21 @@ def read_coast(
             name="box", value=[south, north, west, east], allowed="south < north, west < east",
         )  # fmt: skip
     box = (south, north, west, east)
-    rings = _package_rings(box) if path is None else _geojson_lines(Path(path))
+    return _package_lines(box) if path is None else _clip_all(_geojson_lines(Path(path)), box)
+
+
+@lru_cache(maxsize=16)  # the same few regions are asked for again and again, and a reading takes 0.1 s
+def _package_lines(box: Box) -> tuple[Line, ...]:
+    return _clip_all(_package_rings(box), box)
+
+
+def _clip_all(rings: list[Line], box: Box) -> tuple[Line, ...]:
     lines: list[Line] = []
     for ring in rings:
-        for turn in _turns(ring, west, east):
-            moved = ring if turn == 0 else ring + np.array([0.0, turn])
-            lines.extend(_clip(moved, box))
+        for turn in _turns(ring, box[2], box[3]):
+            lines.extend(_clip(ring if turn == 0 else ring + np.array([0.0, turn]), box))
+    for line in lines:
+        line.flags.writeable = False
     return tuple(lines)
 
 
@@ -63,7 +74,7 @@ def _package_folder() -> Path:
         ) from cause  # fmt: skip
 
 
-def _package_rings(box: tuple[float, float, float, float]) -> list[Line]:
+def _package_rings(box: Box) -> list[Line]:
     """Rings that reach into the latitudes of a box, in the resolution that suits it."""
     folder = _package_folder()
     side = max(box[1] - box[0], box[3] - box[2])
@@ -102,7 +113,7 @@ def _runs(starts: Line, ends: Line, kept: npt.NDArray[np.bool_]) -> list[Line]:
     return [np.vstack([starts[group[:1]], ends[group]]) for group in groups]
 
 
-def _clip(line: Line, box: tuple[float, float, float, float]) -> list[Line]:
+def _clip(line: Line, box: Box) -> list[Line]:
     """The parts of a line inside a box, cut at its edges (Liang and Barsky 1984, on all segments at once)."""
     south, north, west, east = box
     starts, ends = line[:-1], line[1:]
