@@ -7,9 +7,13 @@ Never opens a file.
 
 import bz2
 import io
+import re
+import subprocess
+import sys
 import warnings
 import zipfile
 import zlib
+from importlib import resources
 from typing import NamedTuple
 
 import hatanaka
@@ -173,24 +177,38 @@ def _zip(data: bytes, name: str, problems: list[Problem]) -> bytes:
 
 
 def _hatanaka(data: bytes, name: str, problems: list[Problem]) -> bytes:
-    """Plain RINEX.  Where the decoder gives up, once more skipping what it cannot follow, then up to there only."""
+    """Plain RINEX.  Where the decoder gives up, what it can follow, up to where it can follow it."""
     with warnings.catch_warnings(record=True) as said:
         warnings.simplefilter("always")
         try:
             text: bytes = hatanaka.crx2rnx(data)
-        except hatanaka.HatanakaException as first:
-            try:
-                text = hatanaka.crx2rnx(data, skip_strange_epochs=True)
-            except hatanaka.HatanakaException as error:
+        except hatanaka.HatanakaException as error:
+            text = _salvaged(data)
+            if b"END OF HEADER" not in text:
                 raise FormatError(
                     f"{name}: the Hatanaka compression cannot be undone: {_one_line(str(error))}; fetch the file again",
                     path=name, line=0,
                 ) from error  # fmt: skip
-            what = f"the Hatanaka compression is damaged: {_one_line(str(first))}"
-            problems.append(Problem(name, 0, what, "skipped what it spoils"))
+            what = f"the Hatanaka compression is damaged or cut short: {_one_line(str(error))}"
+            line = re.search(r"line (\d+)", str(error))
+            problems.append(Problem(name, int(line[1]) if line else 0, what, "took what can be followed"))
     for warning in said[:20]:
         problems.append(Problem(name, 0, f"Hatanaka decoder: {_one_line(str(warning.message))}", "kept the rest"))
     return text
+
+
+def _salvaged(data: bytes) -> bytes:
+    """What the library's decoder wrote before it gave up, told to skip epochs that it cannot follow.
+
+    The library itself throws this away, so its program is called without it.
+    """
+    program = "crx2rnx.exe" if sys.platform == "win32" else "crx2rnx"
+    with resources.as_file(resources.files("hatanaka.bin") / program) as decoder:
+        try:
+            done = subprocess.run([decoder, "-", "-s"], input=data, capture_output=True, timeout=60, check=False)
+        except subprocess.TimeoutExpired:
+            return b""
+    return done.stdout
 
 
 def _one_line(sentence: str) -> str:
