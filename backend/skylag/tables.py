@@ -769,6 +769,9 @@ class Patch:
     drift_sigma_m_s: float
     drift_heading_deg: float
     confirmed: bool
+    window_time: Times  # middles of the ragged windows
+    window_lat: Floats
+    window_lon: Floats
 
 
 @dataclass(frozen=True)

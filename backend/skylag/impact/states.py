@@ -57,7 +57,7 @@ class JudgeChoices:
     sigmas         a slope counts when it is above the limit by so many of its sigmas
     claim_reach_km, claim_reach_s   a confirmed slope between receivers speaks for cells this near
     front_margin_km, front_beside_km  added to half the width of a wall on both sides, and to its reach at both ends
-    patch_margin_km added to the radius of a patch
+    patch_margin_km added to the radius of a patch; window_reach_s: how long a ragged window speaks for its surroundings
     least_cells    fewer cell-epochs of steep field make no flag of their own
     most_unconfirmed  unconfirmed claims listed, steepest first
     """
@@ -68,6 +68,7 @@ class JudgeChoices:
     front_margin_km: float = 25.0
     front_beside_km: float = 100.0
     patch_margin_km: float = 25.0
+    window_reach_s: float = 450.0
     least_cells: int = 4
     most_unconfirmed: int = 12
 
@@ -180,17 +181,27 @@ def in_front(front: Front, places: Any, times: Any, choices: JudgeChoices) -> Bo
 
 
 def in_patch(patch: Patch, places: Any, times: Any, choices: JudgeChoices) -> Bools:
-    """(T, P) whether places lie in a patch, within its span; it moves with its drift where that is known."""
+    """(T, P) whether places lie in a patch, within its span, or near one of its ragged windows of that moment.
+
+    It moves with its drift where that is known, and grows with what is not known of it (two sigmas).
+    """
     over: Bools = np.zeros((len(times), len(places.lat)), dtype=bool)
     east, north = plane_km(places.lat, places.lon, (patch.lat, patch.lon))
+    window_east, window_north = plane_km(patch.window_lat, patch.window_lon, (patch.lat, patch.lon))
     half_way = patch.start + (patch.end - patch.start) // 2
-    for number in np.flatnonzero((times >= patch.start) & (times < patch.end)):
-        x, y = 0.0, 0.0
-        if np.isfinite(patch.drift_m_s):
-            way = patch.drift_m_s / 1000.0 * float((times[number] - half_way) / np.timedelta64(1, "s"))
-            heading_rad = np.radians(patch.drift_heading_deg)
-            x, y = way * np.sin(heading_rad), way * np.cos(heading_rad)
-        over[number] = np.hypot(east - x, north - y) <= patch.radius_km + choices.patch_margin_km
+    known = bool(np.isfinite(patch.drift_m_s))
+    heading_rad = np.radians(patch.drift_heading_deg) if known else 0.0
+    reach = np.timedelta64(round(choices.window_reach_s), "s")
+    for number in np.flatnonzero((times >= patch.start - reach) & (times < patch.end + reach)):
+        late_s = float((times[number] - half_way) / np.timedelta64(1, "s"))
+        way = patch.drift_m_s / 1000.0 * late_s if known else 0.0
+        loose = 2.0 * patch.drift_sigma_m_s / 1000.0 * abs(late_s) if known else 0.0
+        away = np.hypot(east - way * np.sin(heading_rad), north - way * np.cos(heading_rad))
+        if patch.start <= times[number] < patch.end:
+            over[number] = away <= patch.radius_km + choices.patch_margin_km + loose
+        now = np.abs(patch.window_time - times[number]) <= reach
+        apart = np.hypot(east[:, None] - window_east[None, now], north[:, None] - window_north[None, now])
+        over[number] |= (apart <= choices.claim_reach_km).any(axis=1)
     return over
 
 
@@ -393,7 +404,7 @@ def _claim_flags(
     flags: list[Flag] = []
     doubtful: list[Flag] = []
     for claim in slopes.claims:
-        if len(claim.cell_time) and claim.confirmed and _mostly_explained(claim, fronts, patches, choices):
+        if _mostly_explained(claim, fronts, patches, choices):
             continue
         state = int(state_of_slope(np.array(claim.slope), np.array(claim.sigma), limits, choices.sigmas))
         flag = Flag(
@@ -408,6 +419,10 @@ def _claim_flags(
 
 def _mostly_explained(claim: SlopeClaim, fronts: Fronts, patches: Patches, choices: JudgeChoices) -> bool:
     """Whether two thirds of a claim's cells lie under a front or patch."""
+    if len(claim.cell_time) == 0:  # paths alone: they have a place but no size
+        claim = replace(
+            claim, cell_time=np.array([claim.start]), cell_lat=np.array([claim.lat]), cell_lon=np.array([claim.lon])
+        )
     places = _Places(claim.cell_lat, claim.cell_lon)
     wide = replace(choices, front_margin_km=150.0, front_beside_km=200.0, patch_margin_km=75.0)
     under = np.zeros(len(claim.cell_lat), dtype=bool)

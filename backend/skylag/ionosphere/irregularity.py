@@ -253,6 +253,7 @@ def _patch(
     turn_rad = np.radians(heading if np.isfinite(heading) else 0.0)
     away = np.hypot(east - x - moved * np.sin(turn_rad), north - y - moved * np.cos(turn_rad))
     where = from_plane(x, y, centre)
+    window_lat, window_lon = from_plane(east, north, centre)
     receivers, satellites = np.unique(lines.receiver[line]), np.unique(lines.satellite[line])
     span = slice(int(block.min()), int(block.max()) + 1)
     start, end = times[block.min()], times[block.max()] + np.timedelta64(round(ROTI_WINDOW_S), "s")
@@ -275,6 +276,9 @@ def _patch(
         drift_sigma_m_s=drift_sigma,
         drift_heading_deg=heading,
         confirmed=len(receivers) >= 2 and _not_one_receiver(lines.receiver[line]),
+        window_time=times[block] + np.timedelta64(round(ROTI_WINDOW_S / 2.0), "s"),
+        window_lat=window_lat,
+        window_lon=window_lon,
     )
 
 
