@@ -6,7 +6,7 @@ refused, never stretched: such places are NaN, and `refused` counts why.  Positi
 realisations (WGS 84, PZ-90, ITRF ...) agree to centimetres and are not told apart.  Never reads a file.
 """
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -333,34 +333,48 @@ def _from_table(table: PreciseOrbits, satellites: list[str], instants: Times, be
             day serves the whole day; metres of error there
     """
     result = np.full((*instants.shape, 3), np.nan)
-    spacing_ns = int(_spacing_s(table) * 1e9)
     column_of = {str(name): column for column, name in enumerate(table.satellites)}
-    epochs = table.times.astype(np.int64)
+    told: Bools = np.asarray(np.isfinite(table.position_m).all(axis=-1))
+    # Satellites tabulated at the same epochs and wanted at the same instants share their weights.
+    alike: dict[tuple[int, bytes], list[int]] = {}
+    shared = instants.strides[1] == 0
     for column, name in enumerate(satellites):
-        if name not in column_of:
-            continue
-        track = table.position_m[:, column_of[name]]
-        told = np.flatnonzero(np.isfinite(track).all(axis=1))
-        if not len(told):
-            continue
-        breaks = np.flatnonzero(np.diff(epochs[told]) != spacing_ns) + 1
-        at = instants[:, column].astype(np.int64)
-        for run in np.split(told, breaks):
-            if len(run) < _FEWEST_POINTS:
-                continue
-            before = spacing_ns if beyond and run[0] == 0 else 1
-            after = spacing_ns if beyond and run[-1] == len(epochs) - 1 else 1
-            inside = np.flatnonzero((at > epochs[run[0]] - before) & (at < epochs[run[-1]] + after))
-            if len(inside):
-                place = (at[inside] - epochs[run[0]]) / spacing_ns
-                result[inside, column] = _polynomial(track[run], place)
+        if name in column_of:
+            key = (0 if shared else column, told[:, column_of[name]].tobytes())
+            alike.setdefault(key, []).append(column)
+    for columns in alike.values():
+        own = [column_of[satellites[column]] for column in columns]
+        at = instants[:, columns[0]].astype(np.int64)
+        for inside, weight, rows in _weights(table, told[:, own[0]], at, beyond):
+            value = weight @ table.position_m[rows][:, own].reshape(len(rows), -1)
+            result[np.ix_(inside, np.array(columns))] = value.reshape(len(inside), len(columns), 3)
     return result
 
 
-def _polynomial(track: Floats, place: Floats) -> Floats:
-    """Values (N, 3) at fractional places of equally spaced tabulated ones (M, 3): Lagrange, barycentric form."""
-    points = min(POINTS, len(track))
-    first = np.clip(np.rint(place).astype(np.int64) - points // 2, 0, len(track) - points)
+def _weights(table: PreciseOrbits, told: Bools, at: Ints, beyond: bool) -> Iterator[tuple[Ints, Floats, Ints]]:
+    """For each unbroken run of told epochs: numbers of the instants it serves, weights (instants, run), the run."""
+    spacing_ns = int(_spacing_s(table) * 1e9)
+    epochs = table.times.astype(np.int64)
+    rows: Ints = np.flatnonzero(told)
+    if not len(rows):
+        return
+    for run in np.split(rows, np.flatnonzero(np.diff(epochs[rows]) != spacing_ns) + 1):
+        if len(run) < _FEWEST_POINTS:
+            continue
+        before = spacing_ns if beyond and run[0] == 0 else 1
+        after = spacing_ns if beyond and run[-1] == len(epochs) - 1 else 1
+        inside: Ints = np.flatnonzero((at > epochs[run[0]] - before) & (at < epochs[run[-1]] + after))
+        if len(inside):
+            yield inside, _lagrange((at[inside] - epochs[run[0]]) / spacing_ns, len(run)), run
+
+
+def _lagrange(place: Floats, nodes: int) -> Floats:
+    """Weights (N, nodes) that give the value at fractional places of equally spaced nodes: barycentric form.
+
+    The polynomial goes through POINTS nodes around the place, at the ends through the last ones.
+    """
+    points = min(POINTS, nodes)
+    first = np.clip(np.rint(place).astype(np.int64) - points // 2, 0, nodes - points)
     signs = np.array([(-1.0) ** k for k in range(points)])
     binomial = np.cumprod([1.0] + [(points - 1 - k) / (k + 1) for k in range(points - 1)])
     away = (place - first)[:, None] - np.arange(points)
@@ -369,4 +383,6 @@ def _polynomial(track: Floats, place: Floats) -> Floats:
     hit: Bools = np.asarray(exact.any(axis=1))
     weight = np.where(hit[:, None], exact, weight)
     weight /= weight.sum(axis=1, keepdims=True)
-    return np.asarray(np.einsum("nk,nkd->nd", weight, track[first[:, None] + np.arange(points)]))
+    spread = np.zeros((len(place), nodes))
+    np.put_along_axis(spread, first[:, None] + np.arange(points), weight, axis=1)
+    return spread
