@@ -4,7 +4,7 @@
 
 import { compass, fixed, KIND_WORDS, placeText, timeText, withSigma, WORDS } from "../words.js";
 import { sign } from "./legend.js";
-import { make, stateWord } from "./parts.js";
+import { make, stateWord, viewOf } from "./parts.js";
 
 export class FlagsPanel {
   #element;
@@ -65,8 +65,7 @@ export class FlagsPanel {
   }
 
   #go(flag, day) {
-    const wish = Math.max(day.times[0], Math.min(day.times[day.times.length - 1], (flag.start + flag.end) / 2));
-    this.#state.change({ minute: Math.round((wish - day.start) / 60000), place: [flag.lat, flag.lon] });
+    this.#state.change(viewOf(flag, day));
     document.getElementById("map")?.scrollIntoView({ block: "nearest" });
   }
 }

@@ -2,6 +2,8 @@
  * Small pieces several panels build: elements, state swatches, notices of trouble. Never fetches.
  */
 
+import { placeAt } from "../figures/signs.js";
+import { nearest } from "../figures/strip.js";
 import { STATE_WORDS, WORDS } from "../words.js";
 
 const SVG = "http://www.w3.org/2000/svg";
@@ -58,4 +60,16 @@ export function trouble(error, again = null) {
   const box = make("div", { class: "trouble", role: "alert" }, make("p", { text: error.message || WORDS.offline }));
   if (again) box.append(make("button", { type: "button", text: WORDS.tryAgain, click: again }));
   return box;
+}
+
+/**
+ * The view that shows a flag best: the middle of its span, and where it then is.
+ * @param {import("../api.js").Flag} flag
+ * @param {import("../api.js").Day} day
+ * @returns {{minute: number, place: [number, number]}}
+ */
+export function viewOf(flag, day) {
+  const time = day.times[nearest(day.times, (flag.start + flag.end) / 2)];
+  const [lat, lon] = placeAt(flag, time);
+  return { minute: Math.round((time - day.start) / 60000), place: [Number(lat.toFixed(3)), Number(lon.toFixed(3))] };
 }

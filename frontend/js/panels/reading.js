@@ -3,7 +3,7 @@
  */
 
 import { bothClocks, compass, countText, flagSentence, KIND_WORDS, latText, lonText, placeText, timeText, withSigma, WORDS } from "../words.js";
-import { make, stateWord, trouble } from "./parts.js";
+import { make, stateWord, trouble, viewOf } from "./parts.js";
 
 export class ReadingPanel {
   #elements;
@@ -92,7 +92,7 @@ export class ReadingPanel {
         make("li", {},
           make("p", {}, make("strong", { text: flagSentence(flag) }), `${distance}, ${timeText(flag.start, how)} to ${timeText(flag.end, how)}.`),
           make("p", { text: flag.evidence }),
-          make("button", { type: "button", class: "linklike", text: `Go to this ${KIND_WORDS[flag.kind]?.short ?? "flag"}`, click: () => this.#goTo(flag, day) }),
+          make("button", { type: "button", class: "linklike", text: `Go to this ${KIND_WORDS[flag.kind]?.short ?? "flag"}`, click: () => this.#state.change(viewOf(tracked(flag, day), day)) }),
         ),
       );
     }
@@ -102,11 +102,6 @@ export class ReadingPanel {
       this.#open = details.open;
     });
     return details;
-  }
-
-  #goTo(flag, day) {
-    const time = Math.max(day.times[0], Math.min(day.times[day.times.length - 1], (flag.start + flag.end) / 2));
-    this.#state.change({ place: [flag.lat, flag.lon], minute: Math.round((time - day.start) / 60000) });
   }
 
   #site = () => {
@@ -131,6 +126,11 @@ export class ReadingPanel {
     }
     this.#state.change({ place: /** @type {[number, number]} */ (place) });
   };
+}
+
+/** A reading tells a flag without its track; the day's own list has it. */
+function tracked(flag, day) {
+  return day.flags.find((one) => one.kind === flag.kind && one.start === flag.start && one.lat === flag.lat && one.lon === flag.lon) ?? flag;
 }
 
 /**
