@@ -4,6 +4,7 @@ import sqlite3
 import subprocess
 import sys
 import threading
+import time
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 from pathlib import Path
@@ -200,6 +201,9 @@ def test_days_newest_first_and_by_region(archive: Archive, storm: Products) -> N
     assert [(head.region, str(head.day)) for head in archive.days()] == [
         ("Elsewhere", "2031-05-11"), (NAME, "2031-05-11"), (NAME, "2031-05-10")]  # fmt: skip
     assert len(archive.days(NAME)) == 2
+    assert [str(head.day) for head in archive.days(NAME, until="2031-05-10")] == ["2031-05-10"]
+    assert [str(head.day) for head in archive.days(NAME, since=STORM_DAY)] == ["2031-05-11"]
+    assert archive.days(NAME, "2031-05-12", "2031-06-01") == ()
     assert archive.regions() == ("Elsewhere", NAME)
 
 
@@ -297,6 +301,71 @@ def test_two_processes_open_and_save_at_once(archive_place: str) -> None:
         assert process.returncode == 0, said
     with open_archive(archive_place) as archive:
         assert archive.days()[0].versions == (1, 2, 3, 4)
+
+
+def test_killed_while_saving(archive_place: str, storm: Products) -> None:
+    """Killed at any moment of a save: each version that is there is whole, and saving goes on."""
+    program = (
+        "import sys; from tests.builders import invented_day; from skylag.archive import open_archive\n"
+        "day = invented_day(step_minutes=5)\n"
+        "with open_archive(sys.argv[1]) as archive:\n"
+        "    while True:\n"
+        "        archive.save(day); print('saved', flush=True)\n"
+    )
+    root, told = Path(__file__).resolve().parents[2], 0
+    for wait_s in (0.0, 0.07, 0.16):
+        process = subprocess.Popen(
+            [sys.executable, "-c", program, archive_place], cwd=root, stdout=subprocess.PIPE, text=True
+        )
+        assert process.stdout is not None
+        assert process.stdout.readline() == "saved\n"
+        time.sleep(wait_s)
+        process.kill()
+        told += 1 + process.communicate()[0].count("saved")
+        with open_archive(archive_place) as archive:
+            (head,) = archive.days()
+            assert len(head.versions) >= told, "what was told as saved is there"
+            for version in head.versions[-2:]:
+                assert archive.fields(NAME, STORM_DAY, version=version).vtec.shape == (288, 15, 17)
+                assert len(archive.flags(NAME, STORM_DAY, version)) == 3
+                assert len(archive.samples(NAME, STORM_DAY, version).rays) == archive.day(NAME, STORM_DAY).slant_rows
+            with archive._reading() as connection:
+                for table in (schema.chunk, schema.document, schema.bias):
+                    kept = connection.scalar(sa.select(sa.func.count(table.c.product.distinct())))
+                    assert kept == len(head.versions), table.name
+            told = len(head.versions)
+    with open_archive(archive_place) as archive:
+        assert archive.save(storm) == told + 1
+
+
+def test_a_full_disk_is_said_in_words(tmp_path: Path, storm: Products) -> None:
+    """SQLite is told to grow no further: the day is refused, what was there stays."""
+    with open_archive(tmp_path / "a.sqlite") as archive:
+        archive.save(storm)
+
+        @sa.event.listens_for(archive._write_engine, "begin", insert=True)
+        def no_more(connection: sa.Connection) -> None:
+            connection.exec_driver_sql("PRAGMA max_page_count=1")  # SQLite takes the present size for it
+
+        with pytest.raises(SkylagError, match="disk is full; nothing was changed"):
+            archive.save(storm)
+        sa.event.remove(archive._write_engine, "begin", no_more)
+        assert archive.days()[0].versions == (1,)
+        same_arrays(storm.fields, archive.fields(NAME, STORM_DAY), Fields.LAYERS)
+
+
+def test_slants_that_cannot_be_written(tmp_path: Path, storm: Products) -> None:
+    (tmp_path / "taken").write_text("a file where a folder should be")
+    with open_archive(tmp_path / "a.sqlite", slant_folder=tmp_path / "taken") as archive:
+        with pytest.raises(SkylagError, match="cannot write a slant table"):
+            archive.save(storm)
+        assert archive.days() == ()
+
+
+@pytest.mark.parametrize("name", ["", "a/b", "tab\there", " blank", "x" * 201])
+def test_names_that_cannot_be_addressed(tmp_path: Path, storm: Products, name: str) -> None:
+    with open_archive(tmp_path / "a.sqlite") as archive, pytest.raises(Refused, match="no slash"):
+        archive.save(replace(storm, region=replace(storm.region, name=name)))
 
 
 # ---------------------------------------------------------------------------------------------- damage is told

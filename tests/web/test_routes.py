@@ -37,6 +37,8 @@ def test_days(client: TestClient) -> None:
     assert all(one["simulated"] for one in listed["days"])
     assert listed["regions"] == [REGION.name]
     assert get(client, "/api/days", region="nowhere")["days"] == []
+    assert len(get(client, "/api/days", since="2031-05-11")["days"]) == 1
+    assert client.get("/api/days", params={"until": "soon"}).status_code == 422
 
 
 def test_the_facts_of_a_day(client: TestClient, small_archive: Archive) -> None:
@@ -51,7 +53,8 @@ def test_the_facts_of_a_day(client: TestClient, small_archive: Archive) -> None:
     worst = max(one.highest["vtec"] for one in small_archive.days()) * L1_M_PER_TECU
     low, high = facts["scales"]["vertical_delay"]
     assert low == 0 and worst <= high <= 2 * worst
-    assert facts["scales"] == get(client, f"/api/days/{REGION.name}/2031-05-10")["scales"], "one scale per region"
+    other = get(client, f"/api/days/{REGION.name}/2031-05-10")
+    assert facts["scales"] == other["scales"], "one scale per region and year"
     assert facts["receivers"][0]["name"] == record.receivers[0].name
     assert (facts["receivers"][0]["lat"], facts["receivers"][0]["lon"]) == (-37.6, 143.9)
 

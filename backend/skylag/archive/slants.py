@@ -17,7 +17,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
-from skylag.errors import FormatError, Missing
+from skylag.errors import FormatError, Missing, SkylagError
 from skylag.tables import Rays, Receiver, Samples, SignalPair
 
 # Column -> type kept.  Angles keep 32 bits (1e-5 deg, one metre); contents keep 64 as they came.
@@ -60,6 +60,18 @@ def write(samples: Samples, folder: Path) -> str:
         "bias_covariance": base64.b64encode(samples.bias_covariance.astype("<f8").tobytes()).decode("ascii"),
     }
     table = pa.table(columns).replace_schema_metadata({"skylag": json.dumps(facts)})
+    try:
+        return _write_table(table, folder)
+    except OSError as cause:
+        raise SkylagError(
+            f"cannot write a slant table into {folder}: {cause.strerror or cause}; nothing was kept; "
+            "check the disk's room and rights",
+            folder=str(folder),
+        ) from cause
+
+
+def _write_table(table: pa.Table, folder: Path) -> str:
+    """Write under a passing name, then give the file its address as a name."""
     folder.mkdir(parents=True, exist_ok=True)
     handle, passing_name = tempfile.mkstemp(prefix="writing-", suffix=".parquet", dir=folder)
     os.close(handle)

@@ -142,6 +142,7 @@ class Archive:
 
     def save(self, products: Products) -> int:
         """Keep a day as a new version of it, whole or not at all; gives the version number, from 1."""
+        _check_name(products.region.name)
         sha256 = slants.write(products.samples, self.slant_folder)
         return self._write(lambda connection: self._save(connection, products, sha256))
 
@@ -166,8 +167,13 @@ class Archive:
         with self._reading() as connection:
             return tuple(connection.scalars(sa.select(schema.region.c.name).order_by(schema.region.c.name)))
 
-    def days(self, region: str | None = None) -> tuple[DayHead, ...]:
-        """The stored days, of one region or of all, newest day first; each in the version that is shown."""
+    def days(
+        self, region: str | None = None, since: Day | None = None, until: Day | None = None
+    ) -> tuple[DayHead, ...]:
+        """The stored days, of one region or of all, newest day first; each in the version that is shown.
+
+        since, until  first and last day wanted, both inside
+        """
         product = schema.product
         query = sa.select(
             product.c.id, product.c.region, product.c.day, product.c.version, product.c.pinned, product.c.saved_at,
@@ -175,6 +181,10 @@ class Archive:
         ).order_by(product.c.day.desc(), product.c.region, product.c.version)  # fmt: skip
         if region is not None:
             query = query.where(product.c.region == region)
+        if since is not None:
+            query = query.where(product.c.day >= _day_text(since))
+        if until is not None:
+            query = query.where(product.c.day <= _day_text(until))
         with self._reading() as connection:
             rows = connection.execute(query).all()
         groups: dict[tuple[str, str], list[Any]] = {}
@@ -499,6 +509,15 @@ def _insert_if_absent(connection: Connection) -> Any:
 
 def _label(key: int, name: str, hour: int | None = None) -> str:
     return f"product {key}, {name}" + ("" if hour is None else f", hour {hour}")
+
+
+def _check_name(name: str) -> None:
+    """A region's name is part of addresses and a key of the database."""
+    if not 0 < len(name) <= 200 or "/" in name or not name.isprintable() or name != name.strip():
+        raise Refused(
+            f"region {name!r}: a name has 1 to 200 printable characters, no slash, no blank at its ends",
+            name="region", value=name, allowed="1 to 200 printable characters without /",
+        )  # fmt: skip
 
 
 def _day_text(day: Day) -> str:

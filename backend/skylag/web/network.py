@@ -10,10 +10,14 @@ router = APIRouter()
 
 
 @router.get("/api/days", summary="Stored days")
-def days(request: Request, region: str | None = None) -> Response:
-    """All stored days, or those of one region, newest first."""
+def days(
+    request: Request, region: str | None = None, since: str | None = None, until: str | None = None
+) -> Response:
+    """All stored days, or those of one region, or from one day to another, newest first."""
     archive: Archive = request.app.state.archive
-    return payloads.reply(payloads.days(archive.days(region)))
+    first = asking.day(since) if since is not None else None
+    last = asking.day(until) if until is not None else None
+    return payloads.reply(payloads.days(archive.days(region, first, last)))
 
 
 @router.get("/api/quantities", summary="Vocabulary")
@@ -27,7 +31,8 @@ def day(request: Request, region: str, day: str, version: int | None = None) -> 
     """Region, receivers, sites, grid, times, scales, counts, warnings and origin of a day."""
     archive: Archive = request.app.state.archive
     record = archive.day(region, asking.day(day), version)
-    return payloads.reply(payloads.day(record, archive.days(region)))
+    year = day[:4]
+    return payloads.reply(payloads.day(record, archive.days(region, f"{year}-01-01", f"{year}-12-31")))
 
 
 @router.get("/api/days/{region}/{day}/biases", summary="Code biases of a day")

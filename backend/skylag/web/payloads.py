@@ -162,9 +162,9 @@ def _round_up(value: float) -> float:
 
 
 def scales(heads: Sequence[DayHead]) -> dict[str, list[float]]:
-    """Ends of colour scales for a region: from 0 to what 99 of 100 cells of its worst stored day stay under.
+    """Ends of colour scales: from 0 to what 99 of 100 cells of the worst of some days stay under.
 
-    The same for all days of the region, so that two moments compare.
+    The same for all those days (a region's days of one year), so that two moments compare.
     """
 
     def top(name: str, factor: float = 1.0) -> list[float]:
@@ -183,7 +183,7 @@ def scales(heads: Sequence[DayHead]) -> dict[str, list[float]]:
 
 
 def day(record: DayRecord, heads: Sequence[DayHead]) -> dict[str, Any]:
-    """All plain facts of a day; `heads` are the days of its region, for the scales."""
+    """All plain facts of a day; `heads` are the days of its region and year, for the scales."""
     region = record.region
     notices = list(record.origin.warnings)
     if record.origin.simulated and sentences.INVENTED not in notices:
