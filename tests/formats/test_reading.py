@@ -84,7 +84,7 @@ def test_every_wrapper(wrapper: str, compact: bool, version: float, tmp_path: Pa
 
 @pytest.mark.parametrize("wrapper", ["gz", "bz2", "zip"])
 def test_a_wrapper_cut_short_gives_what_it_held(wrapper: str, tmp_path: Path, rng: np.random.Generator) -> None:
-    text = simple(satellites=[f"G{n:02d}" for n in range(1, 31)], epochs=3000)
+    text = simple(satellites=[f"G{n:02d}" for n in range(1, 11)], epochs=900)
     for epoch in text.epochs:
         for name, cells in epoch.satellites.items():
             noise = np.round(rng.uniform(2e7, 3e7, len(cells)), 3)
@@ -97,7 +97,7 @@ def test_a_wrapper_cut_short_gives_what_it_held(wrapper: str, tmp_path: Path, rn
             formats.read(place)
         return
     reading = formats.read(place)
-    assert 1000 < len(signals(reading).times) < 2100
+    assert 100 < len(signals(reading).times) < 700
     assert "cut short" in reading.problems[0].what
 
 
@@ -125,10 +125,10 @@ def test_compact_text_with_a_hole_goes_on_where_it_starts_anew(tmp_path: Path) -
 
 @pytest.mark.parametrize("pack", [gzip.compress, bz2.compress, compressed, zipped])
 def test_a_trap_that_swells_is_refused_early(pack: Callable[[bytes], bytes], tmp_path: Path) -> None:
-    """300 MB of one letter packs into a fraction of a thousandth."""
+    """80 MB of one letter pack into a fraction of a hundredth."""
     place = tmp_path / "trap"
-    packed = pack(write(simple()) + b" " * 300_000_000)
-    assert len(packed) < 1_500_000
+    packed = pack(write(simple()) + b" " * 80_000_000)
+    assert len(packed) < 400_000
     place.write_bytes(packed)
     with pytest.raises(FormatError, match="swell"):
         formats.read(place)

@@ -178,6 +178,13 @@ def test_a_broken_record_is_a_problem_and_reading_goes_on(what: str, bad: str) -
     assert problems[0].startswith("made.nav:11:")  # the line the broken record begins at
 
 
+def test_a_file_cut_behind_a_heading() -> None:
+    text = header(4.0) + record("G01", "2020-06-25 12:00:00", gps(), heading="LNAV") + "> EPH G02 LNAV"
+    table, problems = spoiled(text)
+    assert table.satellites.tolist() == ["G01"]
+    assert "record has 0 lines" in problems[0]
+
+
 def test_a_cut_file_keeps_what_is_whole() -> None:
     text = header(3.05) + GOOD + record("G02", "2020-06-25 12:00:00", gps())
     table, problems = spoiled(text[:-300])

@@ -95,7 +95,7 @@ def test_version_2(version: float) -> None:
         assert at(table, "C2P", epoch, "R03") == value_at(epoch, "R03", 2)
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(texts())
 def test_what_is_written_is_read(text: Text) -> None:
     """Every value, digit and epoch of any small file comes back, to the last thousandth."""

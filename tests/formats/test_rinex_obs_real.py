@@ -127,21 +127,26 @@ def _cut(text: bytes, epochs: int, skip: int) -> bytes:
 
 
 CASES = [
-    ("2020-177/obs/ESBC00DNK_R_20201770000_01D_30S_MO.crx.gz", "GECJR", 1486),
+    pytest.param("2020-177/obs/ESBC00DNK_R_20201770000_01D_30S_MO.crx.gz", "GECJR", 1486, marks=pytest.mark.slow),
     ("2018-200/obs/CEBR00ESP_R_20182000000_01D_30S_MO.crx.gz", "GECR", 1900),
     ("2024-090/obs/KIRU00SWE_R_20240900000_01D_30S_MO.rnx.gz", "GECR", 100),
-    ("2024-127/obs/NYA100NOR_S_20241270000_01D_30S_MO.crx.gz", "GECR", 1500),
-    ("2024-209/obs/AJAC00FRA_R_20242090000_01D_30S_MO.crx.gz", "GECR", 2500),
+    pytest.param("2024-127/obs/NYA100NOR_S_20241270000_01D_30S_MO.crx.gz", "GECR", 1500, marks=pytest.mark.slow),
+    pytest.param("2024-209/obs/AJAC00FRA_R_20242090000_01D_30S_MO.crx.gz", "GECR", 2500, marks=pytest.mark.slow),
     ("2021-001/obs/rovn0010.21d.gz", "GR", 1200),
-    ("2021-001/obs/delf0010.21d.gz", "GR", 300),
-    ("2021-001/obs/wsra0010.21d.gz", "GR", 2000),
+    pytest.param("2021-001/obs/delf0010.21d.gz", "GR", 300, marks=pytest.mark.slow),
+    pytest.param("2021-001/obs/wsra0010.21d.gz", "GR", 2000, marks=pytest.mark.slow),
     ("2021-001/obs/zimm0010.21o.gz", "G", 1000),
-    ("2015-235/obs/ZIMM2350.15O.gz", "G", 1800),
+    pytest.param("2015-235/obs/ZIMM2350.15O.gz", "G", 1800, marks=pytest.mark.slow),
     ("2004-001/obs/chpi0010.04o.gz", "G", 600),
 ]
 
 
-@pytest.mark.parametrize(("name", "systems", "skip"), CASES, ids=[case[0][9:] for case in CASES])
+def name_of(case: tuple) -> str:
+    values = getattr(case, "values", case)
+    return str(values[0])[9:]
+
+
+@pytest.mark.parametrize(("name", "systems", "skip"), CASES, ids=[name_of(case) for case in CASES])
 def test_values_equal_georinex(
     name: str, systems: str, skip: int, open_data: Path, tmp_path: Path, evidence: Callable[..., None]
 ) -> None:
