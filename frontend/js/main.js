@@ -207,7 +207,10 @@ async function loadReading() {
   reading.wait();
   try {
     const found = await api.reading(view.region, view.day, view.place, time, { signal: only("reading") });
-    if (scene && scene.time === time) reading.answer(found, scene);
+    if (!scene || scene.time !== time) return;
+    reading.answer(found, scene);
+    // Moving the time speaks through the strip; a new place speaks here.
+    if (document.activeElement !== at("strip") && document.activeElement !== at("time")) at("announce").textContent = found.sentence;
   } catch (error) {
     if (!gone(error)) reading.fail(error, loadReading);
   }

@@ -31,6 +31,7 @@ export const WORDS = {
   simulated: "Simulated data: an invented network, invented days. Nothing here happened.",
   dotted: "Dotted: unseen, not enough data to say.",
   loadingDay: "Opening the day …",
+  lengthUnknown: "the comb points where it goes, its length is not measured",
   loadingMap: "Fetching this hour …",
   loadingReading: "Reading the archive at this place …",
   emptyArchive: "The archive holds no day yet.",
@@ -165,14 +166,25 @@ export function timeText(ms, { clock = "utc", zone = "UTC" } = {}) {
 }
 
 /**
- * Both clocks: "14:35 UTC · 01:35 Hobart time, 15 March 2031".
+ * Both clocks, the chosen one first: "14:35 UTC · 01:35 Hobart time, 15 March 2031".
  * @param {number} ms
  * @param {string} zone
+ * @param {"utc"|"local"} [first]
  */
-export function bothClocks(ms, zone) {
-  if (!zone || zone === "UTC") return `${hourText(ms)} UTC`;
+export function bothClocks(ms, zone, first = "utc") {
+  const utc = `${hourText(ms)} UTC`;
+  if (!zone || zone === "UTC") return utc;
   const sameDay = dateText(ms) === dateText(ms, zone);
-  return `${hourText(ms)} UTC · ${hourText(ms, zone)} ${zoneName(zone)}${sameDay ? "" : `, ${dateText(ms, zone)}`}`;
+  const local = `${hourText(ms, zone)} ${zoneName(zone)}${sameDay ? "" : `, ${dateText(ms, zone)}`}`;
+  return first === "local" ? `${local} · ${utc}` : `${utc} · ${local}`;
+}
+
+/**
+ * What decides a state, in one sentence.
+ * @param {Record<string, number>} limits
+ */
+export function limitsSentence({ strained_mm_per_km: strained, broken_mm_per_km: broken, unseen_sigma_m: unseen }) {
+  return `The limits here: strained from ${strained} mm/km, broken from ${broken} mm/km, unseen where the delay is not known to ${unseen} m.`;
 }
 
 /**

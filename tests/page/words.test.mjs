@@ -67,3 +67,13 @@ test("degrees are read as people write them, and refused when they are not degre
   assert.equal(degrees("146.5 E", "W"), 146.5);
   for (const text of ["", "north", "40.25 E", "1e3", "40 15 S"]) assert.ok(Number.isNaN(degrees(text, "S")), text);
 });
+
+test("the chosen clock comes first", () => {
+  const ms = Date.UTC(2031, 4, 11, 5, 30);
+  assert.equal(words.bothClocks(ms, "Australia/Hobart", "local"), "15:30 Hobart time · 05:30 UTC");
+});
+
+test("the limits are told with their units", () => {
+  const said = words.limitsSentence({ strained_mm_per_km: 8, broken_mm_per_km: 30, unseen_sigma_m: 1.5 });
+  assert.match(said, /strained from 8 mm\/km, broken from 30 mm\/km, unseen .* 1\.5 m/);
+});

@@ -65,10 +65,9 @@ export function mapFigure(contents) {
     ...rayTraces(contents.rays ?? [], palette, k),
     ...receiverTraces(contents.receivers ?? [], palette, k),
     ...placeTraces(contents.place ?? null, contents.frame, palette),
-    ...siteTraces(contents, palette, k),
   ];
   const { traces, notes } = flagTraces(contents, palette, k);
-  data.push(...traces);
+  data.push(...traces, ...siteTraces(contents, palette, k));
   const layout = layoutOf(contents, palette);
   if (contents.title) layout.annotations.push(...notes.map(({ rim, ...note }) => ({ ...note, font: { ...note.font, shadow: halo(palette) } })));
   return { data, layout, notes };

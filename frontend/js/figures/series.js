@@ -5,6 +5,9 @@
 import { PALETTES, roundEnd, withAlpha } from "../colour.js";
 import { hourText } from "../words.js";
 
+/** Room for the numbers of the delay, left of the time axis [pixels]. */
+export const LEFT = 44;
+
 /**
  * @param {object} contents
  * @param {{times: number[], delay: number[], sigma: number[], slope: number[]}} contents.series  m, m, mm/km
@@ -44,7 +47,7 @@ export function seriesFigure({ series, span, theme, clock, zone, top, width = 70
     layout: {
       paper_bgcolor: "rgba(0,0,0,0)",
       plot_bgcolor: "rgba(0,0,0,0)",
-      margin: { l: 0, r: 0, t: 6, b: 22 },
+      margin: { l: LEFT, r: 0, t: 6, b: 22 },
       showlegend: false,
       hovermode: false,
       dragmode: false,
@@ -60,7 +63,6 @@ export function seriesFigure({ series, span, theme, clock, zone, top, width = 70
         showline: true,
         linecolor: palette.edge,
         tickfont: axisFont,
-        ticklabeloverflow: "allow",
       },
       yaxis: {
         range: [0, highest],
@@ -68,7 +70,6 @@ export function seriesFigure({ series, span, theme, clock, zone, top, width = 70
         fixedrange: true,
         gridcolor: palette.hairline,
         zeroline: false,
-        ticklabelposition: "inside top",
         ticksuffix: " m",
         tickfont: axisFont,
       },

@@ -46,8 +46,8 @@ export class ChartPanel {
     this.#scene = scene;
     const { day, view, time } = scene;
     this.#title.textContent = LAYER_WORDS[view.layer].title;
-    this.#time.textContent = `${dateText(time)}, ${bothClocks(time, day.region.timezone)}`;
-    this.#element.setAttribute("aria-label", `Map of ${day.region.name}. ${LAYER_WORDS[view.layer].title}, ${bothClocks(time, day.region.timezone)}`);
+    this.#time.textContent = `${dateText(time)}, ${bothClocks(time, day.region.timezone, view.clock)}`;
+    this.#element.setAttribute("aria-label", `Map of ${day.region.name}. ${LAYER_WORDS[view.layer].title}, ${bothClocks(time, day.region.timezone, view.clock)}`);
     const frame = frameOf(day.grid);
     this.#element.parentElement.style.setProperty("--aspect", aspectOf(frame).toFixed(4));
     this.#paint();
@@ -67,7 +67,7 @@ export class ChartPanel {
     const figure = mapFigure({
       ...contents,
       width: 1200,
-      title: `<b>${day.region.name}</b>  ${LAYER_WORDS[view.layer].title}<br>${dateText(time)}, ${bothClocks(time, day.region.timezone)}`,
+      title: `<b>${day.region.name}</b>  ${LAYER_WORDS[view.layer].title}<br>${dateText(time)}, ${bothClocks(time, day.region.timezone, view.clock)}`,
       foot: [day.simulated ? WORDS.simulated : "", WORDS.dotted, day.caution].filter(Boolean).join("<br>"),
     });
     await takePicture(figure, {

@@ -3,7 +3,7 @@
  */
 
 import { legendFigure } from "../figures/legend.js";
-import { KIND_WORDS, LAYER_WORDS, STATE_WORDS } from "../words.js";
+import { KIND_WORDS, LAYER_WORDS, STATE_WORDS, WORDS } from "../words.js";
 import { draft, make, swatch } from "./parts.js";
 
 /** The signs of the chart in small. */
@@ -54,7 +54,7 @@ export class LegendPanel {
     const signs = foldable("signs", "Flags");
     const list = make("ul", { class: "key" });
     for (const [kind, words] of Object.entries(KIND_WORDS)) {
-      list.append(make("li", {}, sign(kind), make("span", { text: kind === "front" ? `${words.name}; the comb points where it goes` : words.name })));
+      list.append(make("li", {}, sign(kind), make("span", { text: kind === "front" ? `${words.name}; ${WORDS.lengthUnknown}` : words.name })));
     }
     signs.append(list);
     const show = foldable("show", "Show");

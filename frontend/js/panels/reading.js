@@ -2,7 +2,7 @@
  * The reading of the chosen place: the sentence first, the numbers second, the evidence under "why".
  */
 
-import { bothClocks, compass, countText, flagSentence, KIND_WORDS, latText, lonText, placeText, timeText, withSigma, WORDS } from "../words.js";
+import { bothClocks, compass, countText, flagSentence, KIND_WORDS, latText, limitsSentence, lonText, placeText, timeText, withSigma, WORDS } from "../words.js";
 import { make, stateWord, trouble, viewOf } from "./parts.js";
 
 export class ReadingPanel {
@@ -61,7 +61,7 @@ export class ReadingPanel {
     const reason = number >= 0 ? siteStates?.reasonOf(number, reading.time) ?? "" : "";
     const why = this.#why(reading, reason, day, view);
     answer.replaceChildren(
-      make("p", { class: "answer-where" }, where, make("br"), bothClocks(reading.time, zone)),
+      make("p", { class: "answer-where" }, where, make("br"), bothClocks(reading.time, zone, view.clock)),
       make("p", { class: `lead ${reading.state}`, text: reading.sentence }),
       numbers(reading),
       make("p", { class: "fine", text: WORDS.sigma }),
@@ -97,6 +97,7 @@ export class ReadingPanel {
       );
     }
     if (!list.children.length) list.append(make("li", {}, make("p", { text: WORDS.noFlagsNear })));
+    list.append(make("li", {}, make("p", { text: limitsSentence(day.region.thresholds) })));
     const details = make("details", { class: "why", open: this.#open || reading.state === "broken" || reading.state === "strained" }, make("summary", { text: "Why" }), list);
     details.addEventListener("toggle", () => {
       this.#open = details.open;

@@ -3,7 +3,7 @@
  */
 
 import { draw, erase } from "../drawing.js";
-import { seriesFigure } from "../figures/series.js";
+import { LEFT, seriesFigure } from "../figures/series.js";
 import { nearest } from "../figures/strip.js";
 import { placeText, timeText, withSigma, WORDS } from "../words.js";
 import { make } from "./parts.js";
@@ -52,7 +52,8 @@ export class SeriesPanel {
     const series = this.#series;
     const half = day.times.length > 1 ? (day.times[1] - day.times[0]) / 2 : 0;
     const span = /** @type {[number, number]} */ ([day.times[0] - half, day.times[day.times.length - 1] + half]);
-    line.style.transform = `translateX(${((time - span[0]) / (span[1] - span[0])) * plot.clientWidth - 1}px)`;
+    const part = (time - span[0]) / (span[1] - span[0]);
+    line.style.transform = `translateX(${LEFT + part * (plot.clientWidth - LEFT) - 1}px)`;
     const at = nearest(series.times, time);
     plot.setAttribute(
       "aria-label",
