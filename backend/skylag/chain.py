@@ -13,7 +13,7 @@ import numpy as np
 from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.errors import NotEnough
 from skylag.impact import states
-from skylag.ionosphere import adjustment, fronts, geometry, irregularity, orbits, slopes
+from skylag.ionosphere import adjustment, faults, fronts, geometry, irregularity, orbits, slopes
 from skylag.ionosphere import field as vertical_field
 from skylag.ionosphere.adjustment import AdjustmentChoices
 from skylag.ionosphere.arcs import ArcChoices, cut, reasons, slip_list
@@ -171,8 +171,9 @@ def estimate(
     moving = fronts.track(rays, samples, steep, choices.fronts)
     tell("irregular", 0.0)
     ragged = irregularity.assess(rays, moving, choices.irregularity, samples)
+    broken = faults.find(rays, samples, ragged, steep)
     tell("states", 0.0)
-    judged = states.judge(fields, steep, moving, ragged, region)
+    judged = states.judge(fields, steep, moving, ragged, region, broken, fronts.arrivals(moving, rays, region.sites))
     facts = {"calibration": dict(calibration.summary), "slopes": dict(steep.summary)}
     return Estimate(
         calibration, samples, judged.fields, judged.flags, judged.site_states, judged.site_reasons, facts,

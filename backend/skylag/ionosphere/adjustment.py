@@ -164,14 +164,14 @@ def _unknowns(rays: Rays, channels: Mapping[str, int]) -> _Unknowns:
     # A code bias belongs to the two codes, whatever phases go with them.
     codes = [(pair.system, pair.code1, pair.code2) for pair in rays.pairs]
     same = np.array([codes.index(code) for code in codes], dtype=np.int64)[rays.pair]
-    receiver_key = np.stack([rays.receiver, same, channel], axis=1)
-    satellite_key = np.stack([rays.satellite, same], axis=1)
-    receiver_list, receiver_row = np.unique(receiver_key, axis=0, return_inverse=True)
-    satellite_list, satellite_row = np.unique(satellite_key, axis=0, return_inverse=True)
-    kind = ["receiver"] * len(receiver_list) + ["satellite"] * len(satellite_list)
-    name = [rays.receivers[r].name for r, _, _ in receiver_list] + [str(rays.satellites[s]) for s, _ in satellite_list]
-    pair = [int(p) for _, p, _ in receiver_list] + [int(p) for _, p in satellite_list]
-    chans = [int(c) for _, _, c in receiver_list] + [int(channel_of[s]) for s, _ in satellite_list]
+    pairs = len(rays.pairs)
+    receiver_list, receiver_row = np.unique((rays.receiver * pairs + same) * 32 + channel + 8, return_inverse=True)
+    satellite_list, satellite_row = np.unique(rays.satellite * pairs + same, return_inverse=True)
+    r, s = receiver_list // 32 // pairs, satellite_list // pairs
+    kind = ["receiver"] * len(r) + ["satellite"] * len(s)
+    name = [rays.receivers[i].name for i in r] + [str(rays.satellites[i]) for i in s]
+    pair = [int(p) for p in receiver_list // 32 % pairs] + [int(p) for p in satellite_list % pairs]
+    chans = [int(c) - 8 for c in receiver_list % 32] + [int(channel_of[i]) for i in s]
     return _Unknowns(
         kind, name, pair, chans, receiver_row.ravel().astype(np.int64),
         satellite_row.ravel().astype(np.int64) + len(receiver_list),

@@ -17,10 +17,12 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+from threadpoolctl import threadpool_limits
 
 from skylag import chain, formats
 from skylag.chain import Choices, ReceiverDay
 from skylag.errors import FormatError, NotEnough, SkylagError
+from skylag.formats.glance import glance
 from skylag.ionosphere.pairs import wanted_codes
 from skylag.tables import (
     Biases,
@@ -64,6 +66,7 @@ class Inputs:
     biases: tuple[str, ...]
     left_out: tuple[LeftOut, ...]
     files: tuple[Mapping[str, Any], ...]
+    days: Mapping[str, np.datetime64 | None]  # observation file -> day of its first epoch, as far as its header tells
 
 
 @dataclass(frozen=True)
@@ -101,32 +104,37 @@ def sort_inputs(paths: Iterable[Path]) -> Inputs:
     left_out: list[LeftOut] = []
     files: list[Mapping[str, Any]] = []
     seen: dict[str, str] = {}
+    days: dict[str, np.datetime64 | None] = {}
     for path in _all_files(paths):
         try:
-            kind = formats.kind_of_file(path)
-            mark = formats.fingerprint(path)
+            kind, mark, first_day = glance(path)
         except SkylagError as trouble:
-            left_out.append(LeftOut(str(path), int(trouble.details.get("line", 0)), _reason(trouble, path)))
-            continue
-        except OSError as trouble:
-            left_out.append(LeftOut(str(path), 0, f"cannot be read ({trouble.strerror})"))
+            left_out.append(_left_out(path, trouble))
             continue
         if mark["sha256"] in seen:
             left_out.append(LeftOut(str(path), 0, f"is the same file as {seen[mark['sha256']]}"))
             continue
         seen[mark["sha256"]] = str(path)
         files.append({**mark, "name": path.name, "kind": kind})
-        if kind == "observation":
+        if kind == "observations":
             observations.setdefault(_station_key(path), []).append(str(path))
-        elif kind in ("navigation", "sp3"):
+            days[str(path)] = first_day
+        elif kind in ("navigation", "orbits"):
             orbits.append(str(path))
         elif kind == "biases":
             biases.append(str(path))
+        elif kind in ("unknown", "empty"):
+            # The reader knows the line and the reason better than the glance.
+            try:
+                formats.read(path)
+                left_out.append(LeftOut(str(path), 0, "is of no use here"))
+            except SkylagError as trouble:
+                left_out.append(_left_out(path, trouble))
         else:
-            left_out.append(LeftOut(str(path), 0, f"is of no use here (looks like {kind})"))
+            left_out.append(LeftOut(str(path), 0, f"holds {kind}, which a network day does not use"))
     return Inputs(
         {key: tuple(sorted(names)) for key, names in sorted(observations.items())}, tuple(orbits), tuple(biases),
-        tuple(left_out), tuple(files),
+        tuple(left_out), tuple(files), days,
     )  # fmt: skip
 
 
@@ -152,13 +160,13 @@ def _station_key(path: Path) -> str:
     return (match.group(1) or match.group(2)).upper() if match else path.name
 
 
-def _reason(trouble: SkylagError, path: Path) -> str:
-    """The message without the path it may begin with."""
+def _left_out(path: Path, trouble: SkylagError) -> LeftOut:
+    """Path, line and reason of a file that cannot be used; the message without the path it may begin with."""
     text = trouble.message
     for start in (f"{path}:", f"{path.name}:"):
         if text.startswith(start):
             text = text[len(start) :].lstrip("0123456789: ")
-    return text
+    return LeftOut(str(path), int(trouble.details.get("line", 0) or 0), text)
 
 
 def read_orbits(paths: Sequence[str]) -> tuple[list[Ephemerides | PreciseOrbits], list[Problem], list[LeftOut]]:
@@ -171,7 +179,7 @@ def read_orbits(paths: Sequence[str]) -> tuple[list[Ephemerides | PreciseOrbits]
         try:
             reading = formats.read(Path(path))
         except SkylagError as trouble:
-            left_out.append(LeftOut(path, int(trouble.details.get("line", 0)), _reason(trouble, Path(path))))
+            left_out.append(_left_out(Path(path), trouble))
             continue
         problems += reading.problems
         if isinstance(reading.table, PreciseOrbits):
@@ -190,7 +198,7 @@ def read_biases(paths: Sequence[str]) -> tuple[Biases | None, list[Problem], lis
         try:
             reading = formats.read(Path(path))
         except SkylagError as trouble:
-            left_out.append(LeftOut(path, int(trouble.details.get("line", 0)), _reason(trouble, Path(path))))
+            left_out.append(_left_out(Path(path), trouble))
             continue
         problems += reading.problems
         if isinstance(reading.table, Biases):
@@ -225,6 +233,18 @@ def receiver_unit(
     shell_height_m: float,
 ) -> ReceiverResult:
     """Read the files of one receiver and take the wanted day to rays."""
+    with threadpool_limits(1):
+        return _receiver_unit(key, paths, day, sources, choices, shell_height_m)
+
+
+def _receiver_unit(
+    key: str,
+    paths: Sequence[str],
+    day: np.datetime64,
+    sources: Sequence[Ephemerides | PreciseOrbits],
+    choices: Choices,
+    shell_height_m: float,
+) -> ReceiverResult:
     problems: list[Problem] = []
     left_out: list[LeftOut] = []
     pieces: list[Signals] = []
@@ -245,7 +265,7 @@ def receiver_unit(
             problems += reading.problems
             pieces.append(kept)
         except SkylagError as trouble:
-            left_out.append(LeftOut(path, int(trouble.details.get("line", 0)), _reason(trouble, Path(path))))
+            left_out.append(_left_out(Path(path), trouble))
     if not pieces:
         return ReceiverResult(key, None, tuple(problems), tuple(left_out))
     try:
@@ -274,18 +294,12 @@ def _on_day(signals: Signals, day: np.datetime64) -> Signals | None:
 def likely_day(inputs: Inputs) -> np.datetime64:
     """The day that most observation files begin on.
 
-    Raises NotEnough where there is no observation file.
+    Raises NotEnough where no header tells one.
     """
-    days: Counter[np.datetime64] = Counter()
-    for paths in inputs.observations.values():
-        for path in paths:
-            try:
-                days[formats.first_day(Path(path))] += 1
-            except SkylagError:
-                continue  # it will be named with its reason when it is read
+    days = Counter(day for day in inputs.days.values() if day is not None)
     if not days:
         raise NotEnough(
-            "no observation file that can be read is among the inputs; give RINEX observation files or folders of them",
+            "no observation file among the inputs tells its day (TIME OF FIRST OBS); give --date",
             had=0, needed=1, where="inputs",
         )  # fmt: skip
     most = max(days.values())
@@ -354,7 +368,10 @@ def network_day(
             clock.enter(name)
         tell(name, share, "")
 
-    made = chain.estimate(rays, place, wanted_day, choices, prior, channels, stage)
+    # The matrices are small: threads of the linear algebra only get in each other's way (a busy machine took 40 times
+    # the processor time with two of them).
+    with threadpool_limits(1):
+        made = chain.estimate(rays, place, wanted_day, choices, prior, channels, stage)
     clock.enter("")
     warnings = [*made.warnings, *(note for item in usable for note in item.notes)]
     warnings += [f"left out: {item}" for item in left_out]

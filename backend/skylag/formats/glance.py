@@ -1,0 +1,80 @@
+"""What a file is, from its first few kilobytes: kind, fingerprint, and the day of its first observation.
+
+Lets a folder of hundreds of files be sorted without decoding them.  Never reads a measurement.
+"""
+
+import bz2
+import hashlib
+import io
+import zipfile
+import zlib
+from pathlib import Path
+from typing import Any, NamedTuple
+
+import ncompress
+import numpy as np
+
+from skylag.errors import FormatError
+from skylag.formats import kind_of
+
+_PEEK = 65_536
+_DEEPEST = 4
+
+
+class Glance(NamedTuple):
+    """kind as `formats.kind_of` says, or "empty"; mark: name, sha256, bytes; day: of the first observation, or None."""
+
+    kind: str
+    mark: dict[str, Any]
+    day: np.datetime64 | None
+
+
+def glance(path: Path) -> Glance:
+    """Look at a file without decoding it.  Raises FormatError when it cannot be opened."""
+    try:
+        packed = path.read_bytes()
+    except OSError as error:
+        raise FormatError(
+            f"{path}: cannot be opened: {error.strerror or error}; check that it is there and may be read",
+            path=str(path), line=0,
+        ) from error  # fmt: skip
+    mark = {"name": path.name, "sha256": hashlib.sha256(packed).hexdigest(), "bytes": len(packed)}
+    if not packed.strip():
+        return Glance("empty", mark, None)
+    try:
+        head = _head(packed)
+    except (OSError, ValueError, EOFError, zlib.error, zipfile.BadZipFile):
+        return Glance("unknown", mark, None)
+    kind = kind_of(head)
+    return Glance(kind, mark, _first_day(head) if kind == "observations" else None)
+
+
+def _head(data: bytes) -> bytes:
+    """The beginning of the text within all wrappers."""
+    for _ in range(_DEEPEST):
+        if data[:2] == b"\x1f\x8b":
+            data = zlib.decompressobj(wbits=31).decompress(data, _PEEK)
+        elif data[:3] == b"BZh":
+            data = bz2.BZ2Decompressor().decompress(data, _PEEK)
+        elif data[:2] == b"\x1f\x9d":
+            data = ncompress.decompress(data)[:_PEEK]
+        elif data[:2] == b"PK":
+            with zipfile.ZipFile(io.BytesIO(data)) as folder, folder.open(folder.namelist()[0]) as member:
+                data = member.read(_PEEK)
+        else:
+            break
+    return data
+
+
+def _first_day(head: bytes) -> np.datetime64 | None:
+    """The day of the header's TIME OF FIRST OBS."""
+    for line in head.splitlines():
+        if line[60:80].strip() == b"TIME OF FIRST OBS":
+            try:
+                year, month, day = (int(line[start : start + 6]) for start in (0, 6, 12))
+                return np.datetime64(f"{year:04d}-{month:02d}-{day:02d}", "D")
+            except ValueError:
+                return None
+        if line[60:80].strip() == b"END OF HEADER":
+            return None
+    return None
