@@ -1,38 +1,49 @@
 """Write the files of the invented network: `python sample_data/make.py --out DIR --days 2031-03-11 2031-03-12`.
 
-The same seed, the same versions of numpy, scipy, hatanaka and zlib, and the same kind of processor give the same bytes.
-Another processor or another numpy may round a sine differently in its last bit, which can move a written value by one
-unit of its last digit; MADE_WITH.json tells what the committed files were made with.
+The same seed and the same versions of numpy, scipy, hatanaka and zlib give the same bytes.  numpy computes sines and
+exponentials with other code on processors with 512-bit vectors, and the last bit may differ, which moves about one
+written value in ten thousand by one unit of its last digit: so this program switches that code off before numpy starts,
+and the bytes do not depend on the processor's vectors.  They do depend on the C library's sines and exponentials;
+MADE_WITH.json tells what the committed files were made with.
 """
 
-import argparse
-import json
-import time
-import zlib
-from collections.abc import Sequence
-from concurrent.futures import ProcessPoolExecutor
-from dataclasses import replace
-from importlib.metadata import version
-from pathlib import Path
+import os
 
-import numpy as np
+# Names of numpy 2.4 and of older ones; numpy ignores those that it or the processor does not know.
+WIDE_VECTORS = "X86_V4 AVX512_ICL AVX512_SPR AVX512F AVX512CD AVX512_SKX AVX512_CLX AVX512_CNL"
+os.environ["NPY_DISABLE_CPU_FEATURES"] = WIDE_VECTORS
 
-from invented import files, network, places, truth, weather
+import argparse  # noqa: E402  the line above must come before numpy is loaded
+import json  # noqa: E402
+import platform  # noqa: E402
+import time  # noqa: E402
+import warnings  # noqa: E402
+import zlib  # noqa: E402
+from collections.abc import Sequence  # noqa: E402
+from concurrent.futures import ProcessPoolExecutor  # noqa: E402
+from dataclasses import replace  # noqa: E402
+from importlib.metadata import version  # noqa: E402
+from pathlib import Path  # noqa: E402
+
+with warnings.catch_warnings():
+    warnings.simplefilter("ignore")  # numpy remarks on names that it does not know
+    import numpy as np
+
+from invented import files, network, places, truth, weather  # noqa: E402
 
 HERE = Path(__file__).resolve().parent
 
 
 def made_with() -> dict[str, object]:
-    """Versions and processor features that the bytes depend on."""
-    from numpy._core._multiarray_umath import __cpu_features__ as features
-
+    """The versions that the bytes depend on."""
     return {
         "seed": network.SEED,
         "numpy": np.__version__,
         "scipy": version("scipy"),
         "hatanaka": version("hatanaka"),
         "zlib": zlib.ZLIB_RUNTIME_VERSION,
-        "processor": sorted(name for name, there in features.items() if there),
+        "machine": platform.machine(),
+        "c_library": " ".join(platform.libc_ver()),
     }
 
 
@@ -47,6 +58,7 @@ def main(arguments: Sequence[str] | None = None) -> None:
     parser = argparse.ArgumentParser(description="Write the files of the invented network.")
     parser.add_argument("--out", type=Path, default=HERE, help="folder to write to; default: beside this file")
     parser.add_argument("--days", nargs="+", default=list(weather.DAYS), help="days of the scenario")
+    parser.add_argument("--receivers", nargs="+", default=list(places.MARKERS), help="markers; fewer: no truth file")
     parser.add_argument("--processes", type=int, default=2, help="how many at once")
     chosen = parser.parse_args(arguments)
     began = time.perf_counter()
@@ -56,10 +68,8 @@ def main(arguments: Sequence[str] | None = None) -> None:
     with ProcessPoolExecutor(chosen.processes) as pool:
         for day in chosen.days:
             parts = []
-            days = [day] * len(places.MARKERS)
-            for marker, (simulated, content) in zip(
-                places.MARKERS, pool.map(receiver_day, days, places.MARKERS), strict=True
-            ):
+            done = pool.map(receiver_day, [day] * len(chosen.receivers), chosen.receivers)
+            for marker, (simulated, content) in zip(chosen.receivers, done, strict=True):
                 name = files.observation_name(marker, simulated.day, 30.0)
                 total += files.write(chosen.out / day / name, content)
                 parts.append(simulated)
@@ -71,7 +81,8 @@ def main(arguments: Sequence[str] | None = None) -> None:
             )
             name = files.navigation_name(whole.day)
             total += files.write(chosen.out / day / name, files.packed(whole.navigation_text()))
-            total += files.write(chosen.out / "truth" / f"{day}.npz", truth.pack(whole))
+            if tuple(chosen.receivers) == places.MARKERS:
+                total += files.write(chosen.out / "truth" / f"{day}.npz", truth.pack(whole))
     print(f"{total / 1e6:.2f} MB in {time.perf_counter() - began:.1f} s")
 
 

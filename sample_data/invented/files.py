@@ -133,7 +133,9 @@ def packed(text: str) -> bytes:
 
 
 def write(path: Path, content: bytes) -> int:
-    """Write bytes, folders and all; returns their number."""
+    """Write bytes, folders and all, whole or not at all; returns their number."""
     path.parent.mkdir(parents=True, exist_ok=True)
-    path.write_bytes(content)
+    part = path.with_name(path.name + ".part")
+    part.write_bytes(content)
+    part.replace(path)
     return len(content)

@@ -80,6 +80,7 @@ class Truth:
     ambiguity   (E, S) int: arc number of constant ambiguities apart from the listed slips (-1 where not tracked); a
                 new number is a new rise, or a gap after which the phase came back with other ambiguities
     slips, faults (spans of GPS time), outages (spans of GPS time)
+    bursts      (satellite, code, first epoch, epochs) of outlying codes
     receiver_clock_s  (E,) offset as the codes carry it
     bias_ns     (system, code) -> receiver code bias
     """
@@ -93,6 +94,7 @@ class Truth:
     ambiguity: npt.NDArray[np.int64]
     slips: tuple[Slip, ...]
     faults: tuple[tuple[np.datetime64, np.datetime64], ...]
+    bursts: tuple[tuple[str, str, np.datetime64, int], ...]
     outages: tuple[tuple[np.datetime64, np.datetime64], ...]
     receiver_clock_s: Floats
     bias_ns: dict[tuple[str, str], float]
@@ -225,7 +227,8 @@ def simulate(
     scenario   see `weather.Scenario`; single fields of it may be given by name instead: `slips=False, front=False`
     stations   other stations than the committed ones (then `receivers` chooses among these)
 
-    The committed files are exactly `simulate(day)`.  Other hours or intervals draw other noise and slips from the same
+    The committed files are `simulate(day)`, but for one value in ten thousand that may differ by one unit of its last
+    digit between processors (see make.py).  Other hours or intervals draw other noise and slips from the same
     biases, orbits and ionosphere.
     """
     chosen_scenario = replace(scenario or Scenario(), **overrides)
@@ -392,6 +395,7 @@ def _receiver_day(
     else:
         values["S1C"] = np.where(tracked, strength, np.nan)
 
+    bursts = _bursts(values, tracked, times, sky, float(day_hours[-1] - day_hours[0]), scenario, chance(9))
     faults = _spoil(station, day, day_hours, values, scenario, chance(7))
     resets = np.zeros(len(times), dtype=bool)
     outages = []
@@ -415,7 +419,8 @@ def _receiver_day(
     truth = Truth(
         receiver=receiver, times=times[held], satellites=sky.satellites.copy(), stec=stec[held],
         elevation=elevation[held], azimuth=azimuth[held], ambiguity=np.where(tracked, arcs, -1)[held],
-        slips=slips, faults=faults, outages=tuple(outages), receiver_clock_s=clock_code[held], bias_ns=bias,
+        slips=slips, faults=faults, bursts=bursts, outages=tuple(outages), receiver_clock_s=clock_code[held],
+        bias_ns=bias,
     )  # fmt: skip
     return signals, truth
 
@@ -562,6 +567,26 @@ def _slips(
         for e, s in good[rng.integers(0, len(good), round(span_h / 2))]:
             told[e, s] = True
     return tuple(sorted(slips, key=lambda slip: (slip.time, slip.satellite))), slip1, slip2, told
+
+
+def _bursts(
+    values: dict[str, Floats], tracked: npt.NDArray[np.bool_], times: Times, sky: Constellation, span_h: float,
+    scenario: Scenario, rng: np.random.Generator,
+) -> tuple[tuple[str, str, np.datetime64, int], ...]:  # fmt: skip
+    """Put outlying codes in place: one code of one satellite, 6 to 40 m off for two to eight epochs, thrice a day."""
+    bursts = []
+    codes = sorted(name for name in values if name[0] == "C")
+    for _ in range(int(rng.poisson(span_h / 8.0)) if scenario.faults else 0):
+        rows = np.argwhere(tracked)
+        e, s = rows[rng.integers(0, len(rows))]
+        length, code = int(rng.integers(2, 9)), codes[int(rng.integers(0, len(codes)))]
+        size = rng.uniform(6.0, 40.0) * rng.choice([-1.0, 1.0]) + rng.standard_normal(length)
+        part = values[code][e : e + length, s]
+        if not np.isnan(part).all():
+            part += np.round(20.0 * size[: len(part)]) / 20.0
+            part[:] = np.round(part, 2)
+            bursts.append((str(sky.satellites[s]), code, times[e], len(part)))
+    return tuple(bursts)
 
 
 def _fault_span(station: Station, day: str, scenario: Scenario) -> tuple[float, float]:

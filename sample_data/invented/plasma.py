@@ -148,11 +148,11 @@ class Ionosphere:
         across = np.maximum(1.0 - along**2, 0.01)
         line = radius / across  # where the field line crosses the magnetic equator, in Earth radii
         edge = weather.edge_of(hours)
-        equator = 4.6e9 * np.exp(-(line - 2.0) / 0.95) + 1.2e7
+        equator = 2.4e9 * np.exp(-(line - 2.0) / 1.2) + 1.2e7
         equator = equator * (0.03 + 0.97 * 0.5 * (1.0 - np.tanh((line - edge) / 0.35)))
         height = (radius - 1.0) * 6371.0
         # Denser toward the foot of a field line, and fading into the layers below.
-        foot = (line / radius) ** 1.3
+        foot = line / radius
         rise = 1.0 - np.exp(-((np.maximum(height - 450.0, 0.0) / 700.0) ** 2))
         lon_here = np.arctan2(points_m[..., 1], points_m[..., 0])
         daily = 1.0 + 0.10 * np.cos(2 * np.pi * (hours - 15.0) / 24.0 + lon_here)
@@ -161,7 +161,7 @@ class Ionosphere:
     # ------------------------------------------------------------------------------------------------ integrals
 
     def slant(
-        self, receiver_m: npt.ArrayLike, satellites_m: Floats, hours: Floats, *, refine: int = 1, chunk: int = 4000
+        self, receiver_m: npt.ArrayLike, satellites_m: Floats, hours: Floats, *, refine: int = 1, chunk: int = 1200
     ) -> Floats:
         """Slant content [TECU] along straight rays from one receiver to satellite positions (N, 3) at hours (N,).
 
@@ -232,8 +232,8 @@ class Ionosphere:
         shape = lat_.shape
         la, lo, t = lat_.ravel(), lon_.ravel(), hours_.ravel()
         total = np.empty(la.size)
-        for first in range(0, la.size, 4000):
-            part = slice(first, first + 4000)
+        for first in range(0, la.size, 1200):
+            part = slice(first, first + 1200)
             total[part] = self._vertical(la[part], lo[part], t[part], top_km, refine)
         return total.reshape(shape)
 
