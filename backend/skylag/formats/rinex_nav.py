@@ -19,6 +19,7 @@ from skylag.timescales import BDT_BEHIND_GPS_S, utc_to_gps
 
 _WIDTH = 80
 _WEEK_S, _DAY_S = 604_800.0, 86_400.0
+_LARGEST = 1e12  # no number of a record comes near, and squares stay finite
 _KEPLERIAN = "GECJ"
 _SKIPPED = "SI"
 # RINEX 2 has one system per file, told by the letter of the file type.
@@ -188,7 +189,7 @@ def _records(
         needed = _LINES["FDMA"] if system == "R" else _LINES.get(message, _LINES_OTHERWISE)
         if system == "J" and message == "CNV2":
             needed = _LINES["CNV2"]
-        length = borders[after] - number
+        length = borders[min(int(after), len(borders) - 1)] - number
         if system in _SKIPPED:
             needed = 0
         if length < needed:
@@ -241,14 +242,14 @@ def _ion_record(
 
 
 def _numbers(chars: npt.NDArray[np.uint8], start: int, width: int, count: int) -> Floats:
-    """Fixed-width numbers of each line, (lines, count); blanks and broken ones are NaN."""
+    """Fixed-width numbers of each line, (lines, count); blanks, broken and absurdly large ones are NaN."""
     block = np.ascontiguousarray(chars[:, start : start + width * count]).reshape(len(chars), count, width)
     block = np.where((block == ord("D")) | (block == ord("d")), ord("E"), block).astype(np.uint8)
     usable = _ALLOWED[block].all(axis=2) & (block != ord(" ")).any(axis=2)
     words = block.view(f"S{width}")[:, :, 0]
     words = np.where(usable, words, b"nan")
     try:
-        return np.asarray(words.astype(np.float64))
+        values = words.astype(np.float64)
     except ValueError:
         values = np.full(words.shape, np.nan)
         for place in np.ndindex(words.shape):
@@ -256,7 +257,8 @@ def _numbers(chars: npt.NDArray[np.uint8], start: int, width: int, count: int) -
                 values[place] = float(words[place])
             except ValueError:
                 continue
-        return values
+    values[np.abs(values) > _LARGEST] = np.nan
+    return values
 
 
 def _epochs(chars: npt.NDArray[np.uint8], layout: _Layout) -> Times:
