@@ -1,4 +1,4 @@
-"""A small simulated sky for tests: circular orbits over a round Earth, content on a thin shell, known walls and patches.
+"""A small simulated sky for tests: circular orbits over a round Earth, content on a thin shell, known walls.
 
 Made apart from the sample days, so that the finders are not judged only by the world they were grown in.
 """
@@ -64,7 +64,8 @@ def simulate(
         names += [f"{letter}{n + 1:02d}" for n in number]
         rate = np.sqrt(398600.4418 / radius**3)
         node = 2 * np.pi * (number % planes) / planes - 7.2921151467e-5 * t[:, None]
-        u = 2 * np.pi * (number // planes) / (per_constellation // planes) + 0.37 * (number % planes) + rate * t[:, None]
+        slot = 2 * np.pi * (number // planes) / (per_constellation // planes) + 0.37 * (number % planes)
+        u = slot + rate * t[:, None]
         inc = np.radians(55.5)
         x = radius * (np.cos(u) * np.cos(node) - np.sin(u) * np.cos(inc) * np.sin(node))
         y = radius * (np.cos(u) * np.sin(node) + np.sin(u) * np.cos(inc) * np.cos(node))

@@ -23,6 +23,7 @@ from skylag.ionosphere.slopes import MM_PER_TECU
 from skylag.tables import Arrival, Bools, Floats, Front, Fronts, Ints, Onsets, Rays, Samples, Site, Slopes, Times
 
 _KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
+_PIERCE_KM_S = 0.06  # usual speed of a pierce point: even a wall at rest is swept over by them
 
 
 @dataclass(frozen=True)
@@ -181,7 +182,9 @@ def _runs(
     epoch = np.clip(np.rint(when / lines.step_s).astype(np.int64), 0, len(lines.times) - 1)
     place = _places(lines, rays, epoch, line, when)
     noise = scatter[line]
+    # The middle of a run is not known better than to a tenth of its length: its feet drown in the background.
     spread = np.maximum(lines.step_s / np.sqrt(12.0), noise * 2.0 * lines.step_s / np.maximum(peak, 1e-9))
+    spread = np.hypot(spread, 0.1 * jump / np.maximum(peak, 1e-9))
     return Onsets(
         start=lines.times[np.minimum(starts % height, len(lines.times) - 1)],
         time=lines.times[0] + np.rint(when * 1e9).astype(np.int64).astype("timedelta64[ns]"),
@@ -399,7 +402,9 @@ def _try_triples(points: _Points, t: Floats, rng: np.random.Generator, choices: 
     away = np.abs(
         points.x[None, :] * east[:, None] + points.y[None, :] * north[:, None] - speed[:, None] * t - offset[:, None]
     )
-    allowed = np.hypot(points.place_sigma[None, :], speed[:, None] * points.time_sigma[None, :])
+    allowed = np.hypot(
+        points.place_sigma[None, :], np.maximum(speed, _PIERCE_KM_S)[:, None] * points.time_sigma[None, :]
+    )
     cost = np.minimum((away / allowed) ** 2, 9.0).sum(axis=1)
     best = int(np.argmin(cost))
     return _Wall(
@@ -415,7 +420,7 @@ def _polish(points: _Points, start: _Wall, choices: FrontChoices) -> _Wall | Non
         east, north = np.sin(wall.heading), np.cos(wall.heading)
         x, y = points.x + wall.height * points.lean_x, points.y + wall.height * points.lean_y
         away = wall.distance(points)
-        sigma = np.hypot(points.place_sigma, wall.speed * points.time_sigma)
+        sigma = np.hypot(points.place_sigma, max(abs(wall.speed), _PIERCE_KM_S) * points.time_sigma)
         inside = np.abs(away) < 3.0 * sigma
         if inside.sum() < max(4, choices.fewest - 1):
             return None
@@ -439,9 +444,26 @@ def _polish(points: _Points, start: _Wall, choices: FrontChoices) -> _Wall | Non
             wall.offset + float(step[2]), wall.height + float(step[3]),
             np.linalg.inv(scaled) / scale[:, None] / scale[None, :] * max(1.0, misfit), inside, misfit,
         )  # fmt: skip
+    wall = replace(wall, covariance=_widened(wall.covariance, normal, design * (weight * away)[:, None], points))
     if wall.speed < 0.0:
         wall = replace(wall, heading=wall.heading + np.pi, speed=-wall.speed, offset=-wall.offset)
     return wall if wall.speed * 1000.0 <= choices.fastest_m_s else None
+
+
+def _widened(covariance: Floats, normal: Floats, pulls: Floats, points: _Points) -> Floats:
+    """The covariance, no smaller than what the agreement between satellites says.
+
+    Errors are alike along one satellite (shape of the wall, background, how the pierce points run), so that each
+    satellite counts as one witness: the cluster-robust estimate (Liang and Zeger 1986), with correlations kept.
+    pulls  (N, 4) what each point pulls at the parameters
+    """
+    satellites, which = np.unique(points.satellite, return_inverse=True)
+    sums = np.zeros((len(satellites), 4))
+    np.add.at(sums, which, pulls)
+    spread = np.linalg.inv(normal)
+    robust = spread @ (sums.T @ sums) @ spread * len(satellites) / max(1, len(satellites) - 1)
+    growth = np.sqrt(np.maximum(1.0, np.diag(robust) / np.maximum(np.diag(covariance), 1e-30)))
+    return np.asarray(covariance * growth[:, None] * growth[None, :], dtype=np.float64)
 
 
 def _front(
@@ -544,8 +566,9 @@ def steepness(wall: _Wall, onsets: Onsets, points: _Points, interval_s: float = 
     jump_sigma = 1.2533 * 1.4826 * float(np.median(np.abs(jumps[few] - jump))) / np.sqrt(len(few))
     slope, width = MM_PER_TECU / float(np.sqrt(square)), jump * float(np.sqrt(square))
     speed_share = float(np.sqrt(wall.covariance[1, 1]) / np.median(relative[used]))
-    # Steepest rates are taken over an interval: a wall that passes as fast is flattened by up to that.
-    blur = min(0.5, float(np.median(relative[used]) * interval_s / width) ** 2 / 12.0)
+    # Steepest rates are taken over an interval: a wall that passes within two of them is flattened by chance.
+    intervals = float(np.median(relative[used]) * interval_s / width)
+    blur = min(0.5, intervals**2 / 12.0 + 0.25 * min(1.0, max(0.0, 2.0 * intervals - 1.0)))
     restless = float(np.median(onsets.rate_sigma[used] / np.abs(onsets.rate[used])))
     share = float(np.sqrt((0.5 * square_sigma / square) ** 2 + speed_share**2 + blur**2 + restless**2))
     width_sigma = width * float(np.hypot(share, jump_sigma / jump))

@@ -44,7 +44,10 @@ class Sightlines:
 
 
 def lay_out(rays: Rays, step_s: float | None = None) -> Sightlines:
-    """The rays on an even time grid; step_s thins them to that spacing [s] (a multiple of the rays' own interval)."""
+    """The rays on an even time grid; step_s thins them to that spacing [s] (a multiple of the rays' own interval).
+
+    A ray goes to the epoch of the grid within half its interval; of two on one epoch the later row stays.
+    """
     own_s = rays.interval_s
     every = 1 if step_s is None else max(1, round(step_s / own_s))
     step_ns = round(own_s * every * 1e9)
@@ -52,9 +55,13 @@ def lay_out(rays: Rays, step_s: float | None = None) -> Sightlines:
         nothing = np.zeros(0, dtype=np.int64)
         return Sightlines(np.zeros(0, "datetime64[ns]"), own_s * every, nothing, nothing, np.zeros((0, 0), np.int32))
     nanoseconds = rays.time.astype("datetime64[ns]").astype(np.int64)
-    first = int(nanoseconds.min()) // step_ns * step_ns
+    # Most receivers sample on whole multiples of their interval; those that do not keep their own phase.
+    own_ns = round(own_s * 1e9)
+    phases, counts = np.unique(nanoseconds[:: max(1, len(nanoseconds) // 10_000)] % own_ns, return_counts=True)
+    phase = int(phases[np.argmax(counts)])
+    first = (int(nanoseconds.min()) - phase) // step_ns * step_ns + phase
     epoch = np.rint((nanoseconds - first) / step_ns).astype(np.int64)
-    near = np.abs(nanoseconds - first - epoch * step_ns) <= 0.25e9 * own_s
+    near = np.abs(nanoseconds - first - epoch * step_ns) <= own_ns // 2
     lines, line = np.unique(rays.satellite * len(rays.receivers) + rays.receiver, return_inverse=True)
     row = np.full((int(epoch.max()) + 1, len(lines)), -1, dtype=np.int32)
     at = np.flatnonzero(near)
