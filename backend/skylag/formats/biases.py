@@ -25,7 +25,6 @@ _DATUM_MARK = "Datum of the levels: "
 _MONTHLY_CODES = {
     ("G", "P1"): "C1W", ("G", "P2"): "C2W", ("G", "C1"): "C1C", ("G", "C2"): "C2X",
     ("R", "P1"): "C1P", ("R", "P2"): "C2P", ("R", "C1"): "C1C", ("R", "C2"): "C2C",
-    ("E", "P1"): "C1C", ("E", "P2"): "C5Q",
 }  # fmt: skip
 
 

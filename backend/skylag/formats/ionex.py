@@ -190,7 +190,7 @@ def _maps(
                 elif label == "EXPONENT":
                     exponent = _exponent(lines[number])
                 elif label == "LAT/LON1/LON2/DLON/H":
-                    row = round((float(lines[number][2:8]) - header.lat[0]) / header.lat[2])
+                    row = _place(lines[number][2:8], header.lat)
                     if not 0 <= row < shape[0]:
                         raise ValueError("a latitude that is not in the header")
                     count = -(-shape[1] // _PER_LINE)
@@ -209,6 +209,14 @@ def _maps(
             problems.append(Problem(name, begun + 1, f"{kind} map: {said}"))
             number = max(number, begun + 1)
     return content, spread
+
+
+def _place(text: str, lat: tuple[float, float, float]) -> int:
+    """Row of a latitude on the axis of the header; ValueError when it is no number."""
+    place = (float(text) - lat[0]) / lat[2]
+    if not np.isfinite(place):
+        raise ValueError(f"latitude {text.strip()}")
+    return round(place)
 
 
 def _row(lines: list[str], count: int) -> Floats:

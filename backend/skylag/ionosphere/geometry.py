@@ -17,7 +17,8 @@ from skylag.errors import Refused
 from skylag.tables import Arcs, Floats, Rays
 
 # Carrier-phase noise of one frequency [m]: a constant and a part growing with the path through the lower atmosphere,
-# sigma^2 = a^2 + (b / sin elevation)^2.  Common practice for geodetic receivers.
+# sigma^2 = a^2 + (b / sin elevation)^2.  Common practice for geodetic receivers.  The part that is white from epoch to
+# epoch is smaller (0.003 to 0.02 TECU in fourth differences of real receivers); the rest stands for multipath of phase.
 PHASE_NOISE_M = (0.0015, 0.0010)
 
 
