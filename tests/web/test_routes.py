@@ -4,6 +4,7 @@ import base64
 import csv
 import io
 import json
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -13,7 +14,7 @@ from tests.builders import REGION, STORM_DAY
 from skylag import quantities, timescales
 from skylag.archive import Archive
 from skylag.constants import L1_M_PER_TECU
-from skylag.tables import STATE_NAMES
+from skylag.tables import BROKEN, HOLDS, STATE_NAMES, STRAINED, UNSEEN
 from skylag.web import payloads
 
 DAY = f"/api/days/{REGION.name}/{STORM_DAY}"
@@ -222,16 +223,16 @@ def test_big_answers_are_compressed(client: TestClient) -> None:
 # ---------------------------------------------------------------------------------------------- encoding
 
 
-def test_no_value_no_state(small_archive: Archive) -> None:
-    """A cell without a value or without a line of sight is never given as anything but unseen."""
-    from dataclasses import replace
-
+def test_no_value_is_never_said_to_hold(small_archive: Archive) -> None:
+    """A cell without a value or without a line of sight; warnings that reach over it stay."""
     fields = small_archive.fields(REGION.name, STORM_DAY)
-    good = np.ones_like(fields.state)
-    no_value = replace(fields, state=good, vtec=np.full_like(fields.vtec, np.nan))
-    no_sight = replace(fields, state=good, vtec=np.ones_like(fields.vtec), support=np.zeros_like(fields.support))
-    assert not payloads.honest_state(no_value).any()
-    assert not payloads.honest_state(no_sight).any()
+    no_value = {"vtec": np.full_like(fields.vtec, np.nan)}
+    no_sight = {"vtec": np.ones_like(fields.vtec), "support": np.zeros_like(fields.support)}
+    for lack in (no_value, no_sight):
+        for stored, given in ((HOLDS, UNSEEN), (UNSEEN, UNSEEN), (STRAINED, STRAINED), (BROKEN, BROKEN)):
+            told = payloads.honest_state(replace(fields, state=np.full_like(fields.state, stored), **lack))
+            assert (told == given).all(), (stored, given)
+    np.testing.assert_array_equal(payloads.honest_state(fields), fields.state)
 
 
 @pytest.mark.parametrize(

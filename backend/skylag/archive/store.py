@@ -104,6 +104,16 @@ def _sqlite_engine(url: URL, begin: str) -> Engine:
     return engine
 
 
+def _postgresql_engine(url: URL) -> Engine:
+    try:
+        return sa.create_engine(url, pool_pre_ping=True)
+    except ImportError as cause:
+        raise Refused(
+            "a PostgreSQL archive needs the package psycopg; run pip install 'skylag[server]', or name a folder",
+            name="archive", value=url.render_as_string(), allowed="a path, or a PostgreSQL URL with psycopg installed",
+        ) from cause  # fmt: skip
+
+
 class Archive:
     """Days of products.  Safe to share between threads; another process opens its own."""
 
@@ -117,7 +127,7 @@ class Archive:
             self._write_engine = _sqlite_engine(url, "BEGIN IMMEDIATE")
             self._writer = ThreadPoolExecutor(max_workers=1, thread_name_prefix="archive-writer")
         else:
-            self._read_engine = self._write_engine = sa.create_engine(url, pool_pre_ping=True)
+            self._read_engine = self._write_engine = _postgresql_engine(url)
         try:
             self._write(self._prepare)
         except BaseException:

@@ -52,8 +52,7 @@ def reading(
     epoch = _nearest(record, moment)
     cell = archive.cell_at(record, lat, lon, epoch)
     near = nearby.active_near(archive.flags(region, record.head.day, record.head.version), lat, lon, epoch)
-    inside = record.cell_of(lat, lon) is not None
-    return payloads.reply(payloads.reading(cell, inside, lat, lon, near, record.origin.simulated))
+    return payloads.reply(payloads.reading(cell, record, lat, lon, near))
 
 
 @router.get("/api/days/{region}/{day}/series", summary="The day at a place")

@@ -3,8 +3,7 @@
 Leaving here, GPS time becomes UTC (ISO 8601 with Z; the key says `_utc`), content becomes metres of delay where a user
 thinks in metres, and what is not known becomes null.  Days are GPS-time days.  A number array of the maps is an object
     {"dtype": "float32" | "uint16" | "uint8", "shape": [T, rows, columns], "base64": text}
-of little-endian values in C order, not-a-number where nothing is known.  A cell without a value is never given a state
-other than `unseen`.
+of little-endian values in C order, not-a-number where nothing is known.  A cell without a value is never said to hold.
 """
 
 import base64
@@ -23,14 +22,17 @@ from skylag import quantities, timescales
 from skylag.archive import DayHead, DayRecord, SiteStates
 from skylag.constants import L1_M_PER_TECU
 from skylag.ionosphere.geometry import geodetic
-from skylag.tables import STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Rays, Region
+from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Rays, Region
 from skylag.web import nearby, sentences
 
 
 def honest_state(fields: Fields) -> Bytes:
-    """The states as stored, but unseen wherever no value or no line of sight stands behind them."""
+    """The states as stored, but unseen for `holds` without a value or a line of sight behind it.
+
+    Warnings stay: a front or patch seen near by may reach over cells that have no value of their own.
+    """
     known = np.isfinite(fields.vtec) & (fields.support > 0)
-    return np.where(known, fields.state, UNSEEN).astype(np.uint8)
+    return np.where((fields.state == HOLDS) & ~known, UNSEEN, fields.state).astype(np.uint8)
 
 
 def _metres(values: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
@@ -276,15 +278,21 @@ def series(cell: Fields, inside: bool) -> dict[str, Any]:
 
 
 def reading(
-    cell: Fields, inside: bool, lat: float, lon: float, near: Sequence[nearby.NearFlag], simulated: bool
+    cell: Fields, record: DayRecord, lat: float, lon: float, near: Sequence[nearby.NearFlag]
 ) -> dict[str, Any]:
-    """What is known at a place and time: `cell` holds one map of one cell."""
+    """What is known at a place and time: `cell` holds one map of one cell.  Unseen places have no numbers."""
+    inside = record.cell_of(lat, lon) is not None
     code = int(honest_state(cell)[0, 0, 0])
     delay_m, sigma_m = float(_metres(cell.vtec)[0, 0, 0]), float(_metres(cell.vtec_sigma)[0, 0, 0])
     slope, slope_sigma = float(cell.slope[0, 0, 0]), float(cell.slope_sigma[0, 0, 0])
     support = int(cell.support[0, 0, 0])
     seen = code != UNSEEN
-    sentence = sentences.of_state(code, slope, slope_sigma, delay_m, sigma_m, support) if inside else sentences.OUTSIDE
+    sentence = sentences.OUTSIDE
+    if inside:
+        sentence = sentences.of_state(
+            code, slope=slope, slope_sigma=slope_sigma, delay_m=delay_m, delay_sigma_m=sigma_m, support=support,
+            limits=record.region.thresholds, near=near,
+        )  # fmt: skip
     return {
         "lat": lat,
         "lon": lon,
@@ -309,7 +317,7 @@ def reading(
             }
             for one in near
         ],
-        "simulated": simulated,
+        "simulated": record.origin.simulated,
         "caution": sentences.CAUTION,
     }
 

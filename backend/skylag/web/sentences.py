@@ -1,34 +1,91 @@
 """Sentences about a place at a time, made from what is stored: the state, the numbers, the flags near by.
 
-Never decides a state: it says the stored one in words, and says `unseen` wherever a number is missing.
+Never decides a state: it says the stored one in words, names what stands behind it, and says what is not known.
 """
 
 import math
+from collections.abc import Sequence
 
-from skylag.tables import BROKEN, HOLDS, STRAINED, UNSEEN
+from skylag.tables import BROKEN, HOLDS, STATE_NAMES, UNSEEN, Thresholds
+from skylag.web.nearby import NearFlag
 
 CAUTION = (
-    "Planning aid, not for navigation: official notices, the service provider, the receiver maker "
-    "and local rules decide."
+    "Planning aid, not for navigation. Official notices, the service provider's and the receiver maker's information, "
+    "local rules and licensed practice come first."
 )
 INVENTED = "Invented data: nothing here was measured."
+OUTSIDE = "Unseen here: the place lies outside the map of this region."
+_NOT_COVERED = "Treat it as not covered."
+_EIGHT = ("north", "north-east", "east", "south-east", "south", "south-west", "west", "north-west")
 
 
-def of_state(code: int, slope: float, slope_sigma: float, delay_m: float, delay_sigma_m: float, support: int) -> str:
-    """What holds at a cell and why, in one or two sentences; slopes in mm/km, delays in metres."""
-    if code == UNSEEN or not math.isfinite(delay_m):
-        if support > 0:
-            lines = f"{support} lines of sight" if support != 1 else "one line of sight"
-            return f"Unseen here: {lines} cannot say whether corrections hold. Treat it as not covered."
-        return "Unseen here: no line of sight passes near enough to say anything. Treat it as not covered."
-    delay = f"the vertical delay is {with_sigma(delay_m, delay_sigma_m, 'm', 2)}"
+def of_state(
+    code: int,
+    *,
+    slope: float,
+    slope_sigma: float,
+    delay_m: float,
+    delay_sigma_m: float,
+    support: int,
+    limits: Thresholds,
+    near: Sequence[NearFlag] = (),
+) -> str:
+    """What holds at a cell and why, in one to three sentences.
+
+    slope in mm/km, delay in metres, not-a-number where not known; support lines of sight; near the flags active there,
+    nearest first: they are named where the map's own slope does not reach the limit of the state.
+    """
+    known = math.isfinite(delay_m)
+    if code == UNSEEN or (code == HOLDS and not known):
+        return _unseen(delay_m, delay_sigma_m, support, limits)
+    delay = f"the vertical delay is {with_sigma(delay_m, delay_sigma_m, 'm', 2)}" if known else ""
     change = f"the delay changes by {with_sigma(slope, slope_sigma, 'mm per km', 0)}" if math.isfinite(slope) else ""
     if code == HOLDS:
         return f"Corrections hold here: {delay}" + (f", and {change}." if change else ".")
-    word = {STRAINED: "strained", BROKEN: "broken"}[code]
-    if not change:
-        return f"Corrections are {word} here; {delay}."
-    return f"Corrections are {word} here: {change}. {delay[0].upper()}{delay[1:]}."
+    limit = limits.broken_mm_per_km if code == BROKEN else limits.strained_mm_per_km
+    parts = []
+    if change and slope > limit:
+        parts.append(f"Corrections are {STATE_NAMES[code]} here: {change}.")
+    else:
+        parts.append(f"Corrections are {STATE_NAMES[code]} here: {_witness(code, near)}.")
+        if change:
+            parts.append(f"On the map itself {change}.")
+    parts.append(f"{delay[0].upper()}{delay[1:]}." if known else "The vertical delay itself is not known here.")
+    return " ".join(parts)
+
+
+def _unseen(delay_m: float, delay_sigma_m: float, support: int, limits: Thresholds) -> str:
+    if support == 0 or not math.isfinite(delay_m):
+        return f"Unseen here: no line of sight passes near enough to say anything. {_NOT_COVERED}"
+    if math.isfinite(delay_sigma_m) and delay_sigma_m > limits.unseen_sigma_m:
+        return (
+            f"Unseen here: the vertical delay is known to {delay_sigma_m:.1f} m only, "
+            f"and {limits.unseen_sigma_m:.1f} m is needed to say more. {_NOT_COVERED}"
+        )
+    lines = "one line of sight is" if support == 1 else f"{support} lines of sight are"
+    return f"Unseen here: {lines} too few to tell the slope. {_NOT_COVERED}"
+
+
+def _witness(code: int, near: Sequence[NearFlag]) -> str:
+    """What stands behind a state that the map's own slope does not explain."""
+    speaking = [one.flag for one in near if one.flag.kind != "fault" and one.flag.state == STATE_NAMES[code]]
+    speaking += [one.flag for one in near if one.flag.kind != "fault" and one.flag not in speaking]
+    if not speaking:
+        return "receivers near by see more than the map shows"
+    flag = speaking[0]
+    steep = with_sigma(flag.slope_mm_per_km, flag.sigma_mm_per_km, "mm per km", 0)
+    has_slope = math.isfinite(flag.slope_mm_per_km)
+    if flag.kind == "front":
+        moving = f", moving {compass(flag.heading_deg)}" if math.isfinite(flag.heading_deg) else ""
+        return f"a front{f' of {steep}' if has_slope else ''} is near{moving}"
+    if flag.kind == "irregular":
+        return "an irregular patch is near"
+    return f"a slope of {steep} is near" if has_slope else "a steep slope is near"
+
+
+def compass(heading_deg: float) -> str:
+    """The nearest of eight directions, in words."""
+    return _EIGHT[round(heading_deg / 45.0) % 8]
 
 
 def with_sigma(value: float, sigma: float, unit: str, digits: int) -> str:
@@ -37,5 +94,3 @@ def with_sigma(value: float, sigma: float, unit: str, digits: int) -> str:
         return f"{value:.{digits}f} {unit}, uncertainty not known"
     return f"{value:.{digits}f} ± {sigma:.{digits}f} {unit}"
 
-
-OUTSIDE = "Unseen here: the place lies outside the map of this region."
