@@ -27,6 +27,7 @@ import { WORDS } from "./words.js";
  * @property {import("./api.js").Window|null} fields  the hour that holds `time`
  * @property {number} index  of `time` in `fields`
  * @property {import("./api.js").SiteStates|null} siteStates
+ * @property {import("./api.js").Series|null} series  of the chosen place, null while it is on its way
  * @property {{lat: number, lon: number, elevation: number}[]} rays
  * @property {[number, number][][]} coast
  * @property {import("./colour.js").Theme} theme
@@ -130,7 +131,7 @@ async function loadDay() {
     const view = state.view;
     const time = view.minute === null ? firstTime(found) : found.times[nearest(found.times, found.start + view.minute * 60000)];
     settling = true;
-    scene = { view, day: found, time, fields: null, index: 0, siteStates, rays: [], coast: sameRegion ? scene.coast : [], theme: masthead.theme };
+    scene = { view, day: found, time, fields: null, index: 0, siteStates, series: null, rays: [], coast: sameRegion ? scene.coast : [], theme: masthead.theme };
     state.change(
       { minute: Math.round((time - found.start) / 60000), place: view.place ?? /** @type {[number, number]} */ (firstPlace(found)) },
       { step: "none" },
@@ -223,7 +224,10 @@ async function loadSeries() {
     return;
   }
   try {
-    series.give(await api.series(view.region, view.day, view.place, { signal: only("series") }));
+    const found = await api.series(view.region, view.day, view.place, { signal: only("series") });
+    series.give(found);
+    scene.series = found;
+    clock.show(scene);
   } catch (error) {
     if (!gone(error)) {
       series.give(null);

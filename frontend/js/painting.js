@@ -218,6 +218,7 @@ function markers(ctx, trace, p) {
 function words(ctx, trace, p, family) {
   ctx.textAlign = "center";
   const { size } = trace.textfont;
+  /** @type {{left: number, right: number, top: number}[]} */ const taken = [];
   for (let i = 0; i < trace.x.length; i++) {
     const bold = trace.text[i].includes("<b>");
     const down = (trace.text[i].match(/<br>/g) ?? []).length;
@@ -225,7 +226,15 @@ function words(ctx, trace, p, family) {
     ctx.font = `${bold ? 700 : 400} ${size}px ${family}`;
     const below = trace.textposition === "bottom center";
     ctx.textBaseline = below ? "top" : "middle";
-    const [x, y] = [p.x(trace.x[i]), p.y(trace.y[i]) + down * size * 1.25 + (below ? 2 : 0.5)];
+    const y = p.y(trace.y[i]) + down * size * 1.25 + (below ? 2 : 0.5);
+    let x = p.x(trace.x[i]);
+    if (trace.meta?.apart) {
+      const half = ctx.measureText(text).width / 2;
+      x = Math.min(p.right - half - 3, Math.max(p.left + half + 3, x));
+      const box = { left: x - half, right: x + half, top: y };
+      if (taken.some((other) => box.left < other.right && other.left < box.right && Math.abs(box.top - other.top) < size * 1.1)) continue;
+      taken.push(box);
+    }
     if (trace.meta?.rim) {
       ctx.strokeStyle = trace.meta.rim;
       ctx.lineWidth = 3.2;

@@ -39,8 +39,8 @@ export const WORDS = {
   choosePlace: "Click the map, or choose a site, to ask about a place.",
   noFlags: "No flag was raised on this day.",
   noFlagsNear: "No flag was raised near here within the hour.",
-  noFlagsNow: "no flag at this time",
-  noSites: "No sites are named for this region; the strip shows the worst state of the map.",
+  thisPlace: "Chosen place",
+  noSites: "No sites are named for this region.",
   offline: "The page cannot reach the service on this machine. Is it still running?",
   strangeAnswer: "The service gave an answer this page does not understand",
   tryAgain: "Try again",
@@ -92,13 +92,15 @@ export function withSigma(value, sigma, unit, most = 2) {
 
 /** @param {number} lat */
 export function latText(lat, decimals = 2) {
-  return `${Math.abs(lat).toFixed(decimals)}° ${lat < 0 ? "S" : "N"}`;
+  const text = Math.abs(lat).toFixed(decimals);
+  return Number(text) === 0 ? `${text}°` : `${text}° ${lat < 0 ? "S" : "N"}`;
 }
 
 /** @param {number} lon */
 export function lonText(lon, decimals = 2) {
   const l = ((((lon + 180) % 360) + 360) % 360) - 180;
-  return `${Math.abs(l).toFixed(decimals)}° ${l < 0 ? "W" : "E"}`;
+  const text = Math.abs(l).toFixed(decimals);
+  return Number(text) === 0 || Number(text) === 180 ? `${text}°` : `${text}° ${l < 0 ? "W" : "E"}`;
 }
 
 /** @param {number} lat @param {number} lon */
@@ -224,6 +226,17 @@ export function siteSentence(site, state, reason) {
   if (!reason) return state === "holds" ? `${plain}.` : `${plain}, ${STATE_WORDS[state].means}.`;
   const rest = reason.startsWith(`${state}: `) ? reason.slice(state.length + 2) : reason;
   return `${plain}, ${rest.replace(/[.\s]+$/, "")}.`;
+}
+
+/** A sentence out of a reason that began in the middle of one. @param {string} reason */
+export function asSentence(reason) {
+  const text = reason.trim().replace(/[.\s]+$/, "");
+  return text ? `${text[0].toUpperCase()}${text.slice(1)}.` : "";
+}
+
+/** @param {string} text @param {number} most  characters */
+export function shortened(text, most) {
+  return text.length > most ? `${text.slice(0, most - 1).trimEnd()}…` : text;
 }
 
 /** @param {number} count @param {string} one @param {string} [many] */

@@ -77,3 +77,16 @@ test("the limits are told with their units", () => {
   const said = words.limitsSentence({ strained_mm_per_km: 8, broken_mm_per_km: 30, unseen_sigma_m: 1.5 });
   assert.match(said, /strained from 8 mm\/km, broken from 30 mm\/km, unseen .* 1\.5 m/);
 });
+
+test("no hemisphere where there is none", () => {
+  assert.equal(words.lonText(180, 0), "180°");
+  assert.equal(words.lonText(0, 0), "0°");
+  assert.equal(words.latText(0, 1), "0.0°");
+});
+
+test("reasons become sentences, long names are shortened", () => {
+  assert.equal(words.asSentence("too few lines of sight"), "Too few lines of sight.");
+  assert.equal(words.asSentence(" "), "");
+  assert.equal(words.shortened("Very long named place number 4", 12), "Very long n…");
+  assert.equal(words.shortened("Northport", 12), "Northport");
+});

@@ -3,7 +3,7 @@
  */
 
 import { PALETTES, STATES, ramp, scale, withAlpha } from "../colour.js";
-import { fixed, KIND_WORDS, LAYER_WORDS, latText, lonText, STATE_WORDS } from "../words.js";
+import { fixed, KIND_WORDS, LAYER_WORDS, latText, lonText, shortened, STATE_WORDS } from "../words.js";
 import { outline, rowsOf } from "./cells.js";
 import { brokenBar, front, gradations, offset, placeAt, scaleBarKm, waves, wedge, widthKm, within } from "./signs.js";
 
@@ -225,7 +225,9 @@ function receiverTraces(receivers, palette, k) {
 
 /** @param {MapContents} contents */
 function siteTraces(contents, palette, k) {
-  const sites = contents.sites ?? [];
+  // The worst first: where names would lie on each other, theirs is the one that stays.
+  const rank = { broken: 0, strained: 1, unseen: 2, holds: 3 };
+  const sites = [...(contents.sites ?? [])].sort((a, b) => (rank[a.state] ?? 3) - (rank[b.state] ?? 3));
   const loud = (site) => site.state === "broken" || site.state === "strained";
   return [
     {
@@ -254,10 +256,10 @@ function siteTraces(contents, palette, k) {
       name: "site names",
       x: sites.map((site) => site.lon),
       y: sites.map((site) => site.lat),
-      text: sites.map((site) => `<br>${site.name}${loud(site) || site.state === "unseen" ? ` · ${STATE_WORDS[site.state].name}` : ""}`),
+      text: sites.map((site) => `<br>${shortened(site.name, 22)}${loud(site) || site.state === "unseen" ? ` · ${STATE_WORDS[site.state].name}` : ""}`),
       textposition: "bottom center",
       textfont: { size: 12 * k, color: palette.ink, ...(contents.title ? { shadow: halo(palette) } : {}) },
-      meta: { rim: palette.paper },
+      meta: { rim: palette.paper, apart: true },
     },
   ];
 }

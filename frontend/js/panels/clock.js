@@ -2,9 +2,19 @@
  * The day strip, the range control and the day picker: everything that moves time.
  */
 
+import { STATES } from "../colour.js";
 import { keyStep, nearest, stepOf, stripFigure } from "../figures/strip.js";
 import { KIND_WORDS, siteSentence, timeText, WORDS, zoneName } from "../words.js";
 import { draft, make } from "./parts.js";
+
+/**
+ * The rows of the strip: the sites, and last the chosen place.
+ * @param {import("../main.js").Scene} scene
+ */
+function rowsOf({ siteStates, series, day }) {
+  const codes = series ? day.times.map((ms) => STATES.indexOf(series.state[nearest(series.times, ms)])) : day.times.map(() => -1);
+  return [...(siteStates?.rows ?? []), { name: WORDS.thisPlace, codes, reasons: [] }];
+}
 
 export class ClockPanel {
   #elements;
@@ -40,12 +50,12 @@ export class ClockPanel {
   /** @param {import("../main.js").Scene} scene */
   show(scene) {
     this.#scene = scene;
-    const { day, siteStates, time, view } = scene;
+    const { day, series, siteStates, time, view } = scene;
     const { strip, range, text } = this.#elements;
     const zone = day.region.timezone;
-    const rows = siteStates?.rows ?? [];
+    const rows = rowsOf(scene);
     const width = strip.clientWidth;
-    const fingerprint = JSON.stringify([day.region.key, day.day, rows.length, width, siteStates?.serial, zone]);
+    const fingerprint = JSON.stringify([day.region.key, day.day, rows.length, width, siteStates?.serial, zone, series?.lat, series?.lon]);
     if (fingerprint !== this.#drawn && width) {
       this.#drawn = fingerprint;
       this.#drawStrip(rows, width);
@@ -128,7 +138,7 @@ export class ClockPanel {
     if (names.dataset.key !== key) {
       names.dataset.key = key;
       names.replaceChildren(
-        ...rows.map((row, number) => make("li", {}, make("button", { type: "button", "data-site": number, text: row.name, title: row.name }))),
+        ...rows.map((row, number) => make("li", {}, number < day.sites.length ? make("button", { type: "button", "data-site": number, text: row.name, title: row.name }) : make("p", { text: row.name }))),
       );
       const zone = day.region.timezone;
       names.append(make("li", { class: "clock-name first", text: "UTC" }));

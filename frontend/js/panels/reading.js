@@ -2,7 +2,7 @@
  * The reading of the chosen place: the sentence first, the numbers second, the evidence under "why".
  */
 
-import { bothClocks, compass, countText, flagSentence, KIND_WORDS, latText, limitsSentence, lonText, placeText, timeText, withSigma, WORDS } from "../words.js";
+import { asSentence, bothClocks, compass, countText, flagSentence, KIND_WORDS, latText, limitsSentence, lonText, placeText, timeText, withSigma, WORDS } from "../words.js";
 import { make, stateWord, trouble, viewOf } from "./parts.js";
 
 export class ReadingPanel {
@@ -84,7 +84,7 @@ export class ReadingPanel {
 
   #why(reading, reason, day, view) {
     const list = make("ul");
-    if (reason) list.append(make("li", {}, make("p", { text: reason })));
+    if (reason) list.append(make("li", {}, make("p", { text: asSentence(reason) })));
     for (const flag of reading.flags) {
       const how = { clock: view.clock, zone: day.region.timezone };
       const distance = Number.isFinite(flag.distanceKm) ? `, ${Math.round(flag.distanceKm)} km away` : "";
