@@ -14,6 +14,7 @@ from pathlib import Path
 import hatanaka
 import numpy as np
 import pytest
+from tests.conftest import reference_rows
 
 from invented import constellations, files, network, places, plasma, truth, weather
 from invented.weather import Scenario
@@ -191,8 +192,33 @@ def test_nominal_orbits(
     assert len(planes) == {"G": 6, "E": 3}[system]
 
 
+@pytest.mark.parametrize("satellite", ["G07", "E11"])
+def test_kepler_algorithm_on_a_real_record(satellite: str, evidence: Evidence) -> None:
+    """The generator's own orbit code on a published broadcast record, against positions of an independent library."""
+    record = next(r for r in reference_rows("kepler_records.csv") if r["satellite"] == satellite)
+    value = {name: float(text) for name, text in record.items() if name not in ("satellite", "toe_gps")}
+    one = {name: np.zeros(1) for name in ("clock_s", "clock_rate", "group_delay_s")}
+    sky = constellations.Constellation(
+        satellites=np.array([satellite]), system=np.array([satellite[0]]), bias_ns={}, **one,
+        a=np.array([value["sqrt_a"] ** 2]),
+        harmonics=np.array([[value[n] for n in ("cuc", "cus", "crc", "crs", "cic", "cis")]]),
+        node=np.array([value["omega0"] - 7.2921151467e-5 * value["toe_s"]]), node_rate=np.array([value["omega_dot"]]),
+        **{name: np.array([value[name]]) for name in ("e", "i0", "idot", "omega", "m0", "delta_n")},
+    )  # fmt: skip
+    for row in reference_rows("kepler_positions.csv"):
+        if row["satellite"] == satellite:
+            at, _ = constellations.positions(sky, np.array([[float(row["elapsed_s"])]]))
+            off = float(np.sqrt(sum((at[0, 0, k] - float(row[axis])) ** 2 for k, axis in enumerate("xyz"))))
+            evidence(
+                f"generator's orbit code, {satellite} {row['elapsed_s']} s after its reference time",
+                source="broadcast record of 2020-06-25 and positions listed in tests/reference/kepler_positions.csv",
+                expected=0.0, got=off, tolerance=2 * float(row["tolerance_m"]), unit="m",
+            )  # fmt: skip
+
+
 def test_positions_are_those_of_the_navigation_file(folder: Path) -> None:
-    """The house's reader and orbit code on the committed file, against the generator's own positions: under 1 mm."""
+    """The house's reader and orbit code on the committed file, and on the table in memory, against the generator's
+    own positions: under 1 mm."""
     day = np.datetime64(STORM)
     read = formats.read(folder / STORM / files.navigation_name(day))
     assert isinstance(read.table, tables.Ephemerides)
@@ -201,12 +227,17 @@ def test_positions_are_those_of_the_navigation_file(folder: Path) -> None:
     sky = constellations.constellation()
     seconds = (times - constellations.REFERENCE).astype(np.int64) / 1e9
     mine, _ = constellations.positions(sky, np.repeat(seconds[:, None], len(sky.a), axis=1))
-    theirs = orbits.positions(read.table, sky.satellites, times)
-    assert np.abs(mine - theirs).max() < 1e-3
+    for records in (read.table, constellations.ephemerides(sky, day)):
+        theirs = orbits.positions(records, sky.satellites, times)
+        assert np.abs(mine - theirs).max() < 1e-3
 
 
 def test_group_delays_tell_the_satellite_biases(folder: Path, evidence: Evidence) -> None:
     """Broadcast group delays times (1 - gamma) are the code biases put in, to half a step of the message."""
+    given = network.simulate(CALM, ["KELM"], (0.0, 0.1)).satellite_biases()
+    rows = zip(given.name, given.code1, given.code2, given.value_ns, strict=True)
+    now = {(str(name), str(code1), str(code2)): value for name, code1, code2, value in rows}
+    assert now == pytest.approx(truth.load(CALM).satellite_bias, abs=1e-9)
     read = formats.read(folder / CALM / files.navigation_name(np.datetime64(CALM)))
     assert isinstance(read.table, tables.Ephemerides)
     kept = truth.load(CALM)
