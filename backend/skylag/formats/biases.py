@@ -13,7 +13,8 @@ from typing import Any
 import numpy as np
 
 from skylag.errors import FormatError
-from skylag.tables import Biases, Problem, Reading, Times
+from skylag.formats.rinex_layout import Problems
+from skylag.tables import Biases, Reading, Times
 from skylag.timescales import BDT_BEHIND_GPS_S, utc_to_gps
 
 _NEVER = np.datetime64("NaT", "ns")
@@ -67,7 +68,7 @@ def parse(data: bytes, name: str) -> Reading:
 
 def _bias_sinex(lines: list[str], name: str) -> Reading:
     """Rows of the +BIAS/SOLUTION block."""
-    problems: list[Problem] = []
+    problems = Problems(name)
     rows = _Rows()
     skipped: dict[str, int] = {}
     block, agency, mode, system, datum = "", lines[0][11:14].strip(), "", "G", ""
@@ -94,19 +95,17 @@ def _bias_sinex(lines: list[str], name: str) -> Reading:
             try:
                 _solution_line(line, system, rows, skipped)
             except ValueError as what:
-                problems.append(Problem(name, number, f"bias line is broken: {what}"))
+                problems.note(number, f"bias line is broken: {what}", kind="broken bias lines")
     if not ended:
-        problems.append(Problem(name, len(lines), "no %=ENDBIA line; the file is cut", "what came before is used"))
+        problems.note(len(lines), "no %=ENDBIA line; the file is cut", "what came before is used")
     for system in _undetermined(rows):
         rows.rows = [row for row in rows.rows if not (row[0] == "satellite" and row[2] == system)]
-        problems.append(
-            Problem(name, 0, f"all satellite code biases of {system} are exactly 0: a convention, not a determination")
-        )
+        problems.note(0, f"all satellite code biases of {system} are exactly 0: a convention, not a determination")
     if not rows.rows and not problems:
-        problems.append(Problem(name, 0, "no code bias in the file", "nothing to use"))
+        problems.note(0, "no code bias in the file", "nothing to use")
     source = " ".join(filter(None, (agency, name)))
     header: dict[str, Any] = {"version": lines[0][6:10].strip(), "agency": agency, "mode": mode, "skipped": skipped}
-    return Reading(rows.table(source, datum or mode), tuple(problems), header)
+    return Reading(rows.table(source, datum or mode), problems.all(), header)
 
 
 def _undetermined(rows: _Rows) -> list[str]:
@@ -241,7 +240,7 @@ def _monthly(lines: list[str], name: str, first: str, second: str) -> Reading:
     if told and 1 <= int(told.group(2)) <= 12 and 1980 <= int(told.group(1)) < 2200:
         month = np.datetime64(f"{told.group(1)}-{int(told.group(2)):02d}", "M")
         start, end = month.astype("datetime64[ns]"), (month + 1).astype("datetime64[ns]")
-    problems: list[Problem] = []
+    problems = Problems(name)
     rows = _Rows()
     begun = False
     for number, line in enumerate(lines, start=1):
@@ -257,11 +256,12 @@ def _monthly(lines: list[str], name: str, first: str, second: str) -> Reading:
             value = float(numbers[0])
             sigma = float(numbers[1]) if len(numbers) > 1 else np.nan
         except (ValueError, IndexError):
-            problems.append(Problem(name, number, "value or its rms is missing or no number"))
+            problems.note(number, "value or its rms is missing or no number")
             continue
         whole = len(satellite) == 3 and satellite[1:].isdigit()
         if not code1 or not code2 or whole == bool(station):
-            problems.append(Problem(name, number, f"{satellite!r} {station!r}: neither a satellite nor a receiver"))
+            what = f"{satellite!r} {station!r}: neither a satellite nor a receiver"
+            problems.note(number, what, kind="rows of neither a satellite nor a receiver")
             continue
         kind, who = ("satellite", satellite) if whole else ("receiver", station.split()[0])
         rows.rows.append((kind, who, satellite[0], code1, code2, value, sigma, start, end))
@@ -269,4 +269,4 @@ def _monthly(lines: list[str], name: str, first: str, second: str) -> Reading:
         raise FormatError(f"{name}: no mask line *** under the heading; the table is cut", path=name, line=len(lines))
     source = " ".join(filter(None, ("CODE" if title.startswith("CODE") else "", name)))
     datum = "mean of the satellites is zero"
-    return Reading(rows.table(source, datum), tuple(problems), {"pair": f"{first}-{second}"})
+    return Reading(rows.table(source, datum), problems.all(), {"pair": f"{first}-{second}"})

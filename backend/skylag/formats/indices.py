@@ -9,7 +9,8 @@ Layouts: the headings of the GFZ files; WDC form: columns of the Kp card (Bartel
 import numpy as np
 
 from skylag.errors import FormatError
-from skylag.tables import Indices, Problem, Reading
+from skylag.formats.rinex_layout import Problems
+from skylag.tables import Indices, Reading
 
 
 def parse(data: bytes, name: str) -> Reading:
@@ -18,7 +19,7 @@ def parse(data: bytes, name: str) -> Reading:
     Raises FormatError when no line reads as one of the three forms.
     """
     days: dict[np.datetime64, list[float]] = {}
-    problems: list[Problem] = []
+    problems = Problems(name)
     forms: set[str] = set()
     for number, line in enumerate(data.decode("latin-1").splitlines(), start=1):
         if line.startswith("#") or not line.strip():
@@ -37,7 +38,7 @@ def parse(data: bytes, name: str) -> Reading:
             else:
                 raise ValueError("none of the known forms (28 or 10 columns, or the WDC card)")
         except ValueError as what:
-            problems.append(Problem(name, number, str(what)))
+            problems.note(number, str(what), kind="broken lines")
     if not days:
         raise FormatError(
             f"{name}: no line reads as a day of geomagnetic indices; the GFZ tables and the WDC card form are known",
@@ -49,7 +50,7 @@ def parse(data: bytes, name: str) -> Reading:
         day=np.array(order, dtype="datetime64[D]"), kp=rows[:, :8], ap=rows[:, 8:16], daily_ap=rows[:, 16],
         f107_observed=rows[:, 17],
     )  # fmt: skip
-    return Reading(table, tuple(problems), {"forms": sorted(forms)})
+    return Reading(table, problems.all(), {"forms": sorted(forms)})
 
 
 def _day(year: int, month: int, day: int) -> np.datetime64:

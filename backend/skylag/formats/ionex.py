@@ -14,7 +14,8 @@ from typing import Any
 import numpy as np
 
 from skylag.errors import FormatError, Refused
-from skylag.tables import Biases, Fields, Floats, Problem, Reading
+from skylag.formats.rinex_layout import Problems
+from skylag.tables import Biases, Fields, Floats, Reading
 from skylag.timescales import gps_to_utc, utc_to_gps
 
 _NONE = 9999
@@ -45,12 +46,12 @@ def parse(data: bytes, name: str) -> Reading:
     lines = data.decode("latin-1").splitlines()
     if not lines or "IONEX VERSION" not in lines[0][60:80]:
         raise FormatError(f"{name}: line 1 lacks IONEX VERSION / TYPE in columns 61-80", path=name, line=1)
-    problems: list[Problem] = []
+    problems = Problems(name)
     header, end = _header(lines, name, problems)
     lats, lons = _axis(header.lat, name, "LAT"), _axis(header.lon, name, "LON")
     if len(lats) * len(lons) > _MOST_VALUES:
         raise FormatError(f"{name}: {len(lats)} x {len(lons)} nodes are more than a map can have", path=name, line=0)
-    content, spread = _maps(lines, end, (len(lats), len(lons)), header, name, problems)
+    content, spread = _maps(lines, end, (len(lats), len(lons)), header, problems)
     if not content:
         raise FormatError(f"{name}: no whole map of content in the file", path=name, line=len(lines))
     epochs = np.array(sorted(content), dtype="datetime64[ns]")
@@ -71,10 +72,10 @@ def parse(data: bytes, name: str) -> Reading:
         "shell_height_km": header.height[0] if header.height else 450.0,
         "biases": _biases(header, times, name),
     }
-    return Reading(table, tuple(problems), facts)
+    return Reading(table, problems.all(), facts)
 
 
-def _header(lines: list[str], name: str, problems: list[Problem]) -> tuple[_Header, int]:
+def _header(lines: list[str], name: str, problems: Problems) -> tuple[_Header, int]:
     """Facts of the header and the first line behind it."""
     header = _Header()
     pairs = {"G": ("C1W", "C2W"), "R": ("C1P", "C2P"), "E": ("C1C", "C5Q"), "C": ("C2I", "C6I"), "J": ("C1C", "C2L")}
@@ -119,7 +120,7 @@ def _header(lines: list[str], name: str, problems: list[Problem]) -> tuple[_Head
                 header.biases.append((*row, float(text[26:36]), float(text[36:46])))
                 station_pair = None
         except (ValueError, KeyError):
-            problems.append(Problem(name, number, f"{label}: not as the format has it"))
+            problems.note(number, f"{label}: not as the format has it")
     raise FormatError(f"{name}: no END OF HEADER; the file is cut", path=name, line=len(lines))
 
 
@@ -160,7 +161,7 @@ def _epoch(text: str) -> np.datetime64:
 
 
 def _maps(
-    lines: list[str], end: int, shape: tuple[int, int], header: _Header, name: str, problems: list[Problem]
+    lines: list[str], end: int, shape: tuple[int, int], header: _Header, problems: Problems
 ) -> tuple[dict[np.datetime64, Floats], dict[np.datetime64, Floats]]:  # fmt: skip
     """Maps of content and of rms by epoch (UT), rows in the order of the file's latitudes."""
     content: dict[np.datetime64, Floats] = {}
@@ -206,7 +207,7 @@ def _maps(
             number += 1
         except (ValueError, IndexError) as what:
             said = "the file is cut within" if isinstance(what, IndexError) else str(what)
-            problems.append(Problem(name, begun + 1, f"{kind} map: {said}"))
+            problems.note(begun + 1, f"{kind} map: {said}", kind=f"broken {kind} maps")
             number = max(number, begun + 1)
     return content, spread
 

@@ -14,7 +14,8 @@ import numpy as np
 import numpy.typing as npt
 
 from skylag.errors import FormatError
-from skylag.tables import Bools, Ephemerides, Floats, Ints, Problem, Reading, Times
+from skylag.formats.rinex_layout import Problems
+from skylag.tables import Bools, Ephemerides, Floats, Ints, Reading, Times
 from skylag.timescales import BDT_BEHIND_GPS_S, utc_to_gps
 
 _WIDTH = 80
@@ -69,11 +70,9 @@ def parse(data: bytes, name: str) -> Reading:
     lines = data.splitlines()
     version, kind, end, ionosphere, leap_seconds = _header(lines, name)
     layout = _VERSION_2 if version < 3 else _VERSION_3
-    problems: list[Problem] = []
-    starts, messages, extra_ionosphere = _records(lines, end, version, kind, name, problems)
+    problems = Problems(name)
+    starts, messages, extra_ionosphere = _records(lines, end, version, kind, problems)
     ionosphere = {**extra_ionosphere, **ionosphere}
-    chars = np.frombuffer(b"".join(line[:_WIDTH].ljust(_WIDTH) for line in lines[end:]), dtype=np.uint8)
-    chars = chars.reshape(-1, _WIDTH)
     skipped: dict[str, int] = {}
     parts = []
     kinds = sorted({(system, message) for _, _, system, message in messages})
@@ -82,14 +81,18 @@ def parse(data: bytes, name: str) -> Reading:
         if system not in _KEPLERIAN + "R":
             skipped[system] = len(chosen)
             continue
-        first = np.array([starts[k] for k in chosen]) - end
+        first = np.array([starts[k] for k in chosen])
         satellites = np.array([messages[k][1] for k in chosen])
-        part = _convert(chars, first, satellites, system, message, layout, (name, end), problems)
+        rows = _LINES["FDMA"] if system == "R" else _LINES.get(message, _LINES_OTHERWISE)
+        text = b"".join(line[:_WIDTH].ljust(_WIDTH) for start in first for line in lines[start : start + rows])
+        chars = np.frombuffer(text, dtype=np.uint8).reshape(len(first), rows, _WIDTH)
+        part = _convert(chars, first, satellites, system, message, layout, problems)
         if part is not None:
             parts.append(part)
     table = _join(parts, ionosphere)
     header = {"version": version, "leap_seconds": leap_seconds, "skipped_records": skipped}
-    return Reading(table, tuple(sorted(problems, key=lambda p: p.line)), header)
+    problems.sort(key=lambda problem: problem.line)
+    return Reading(table, problems.all(), header)
 
 
 def _header(lines: list[bytes], name: str) -> tuple[float, str, int, dict[str, tuple[float, ...]], int | None]:
@@ -147,7 +150,7 @@ def _coefficients(text: str, width: int) -> tuple[float, ...]:
 
 
 def _records(
-    lines: list[bytes], end: int, version: float, file_system: str, name: str, problems: list[Problem]
+    lines: list[bytes], end: int, version: float, file_system: str, problems: Problems
 ) -> tuple[list[int], list[tuple[int, str, str, str]], dict[str, tuple[float, ...]]]:
     """First lines of the ephemeris records, with (lines in the record, satellite, system, message); checks lengths."""
     found: list[tuple[int, str, str, str]] = []  # line, satellite, system, message
@@ -160,7 +163,8 @@ def _records(
                 borders.append(number)
                 satellite = _satellite(head, file_system)
                 if satellite is None:
-                    problems.append(Problem(name, number + 1, f"no satellite in {head.decode('latin-1')!r}"))
+                    what = f"no satellite in {head.decode('latin-1')!r}"
+                    problems.note(number + 1, what, kind="lines of no satellite")
                 else:
                     found.append((number, satellite, satellite[0], ""))
     else:
@@ -171,14 +175,14 @@ def _records(
             words = lines[number].decode("latin-1").split()
             if len(words) < 4 or words[1] not in ("EPH", "STO", "EOP", "ION"):
                 if len(words) < 2 or words[1] not in ("EPH", "STO", "EOP", "ION"):
-                    problems.append(Problem(name, number + 1, "record heading is not > EPH, STO, EOP or ION"))
+                    problems.note(number + 1, "record heading is not > EPH, STO, EOP or ION")
                 continue
             satellite = _satellite(words[2].encode("latin-1", "replace")[:3].ljust(3), "")
             if words[1] == "ION":
                 _ion_record(lines, number, words[2][:1], words[3], ionosphere)
             elif words[1] == "EPH":
                 if satellite is None:
-                    problems.append(Problem(name, number + 1, f"no satellite in {words[2]!r}"))
+                    problems.note(number + 1, f"no satellite in {words[2]!r}", kind="headings of no satellite")
                 else:
                     found.append((number + 1, satellite, satellite[0], words[3]))
     borders.append(len(lines))
@@ -193,7 +197,8 @@ def _records(
         if system in _SKIPPED:
             needed = 0
         if length < needed:
-            problems.append(Problem(name, number + 1, f"{satellite}: record has {length} lines, {needed} are needed"))
+            what = f"{satellite}: record has {length} lines, {needed} are needed"
+            problems.note(number + 1, what, kind="records with too few lines")
             continue
         starts.append(number)
         records.append((length, satellite, system, message))
@@ -289,23 +294,20 @@ def _near(epoch: Times, second: Floats, period_s: float) -> Times:
 
 def _convert(
     chars: npt.NDArray[np.uint8], first: Ints, satellites: npt.NDArray[np.str_], system: str, message: str,
-    layout: _Layout, where: tuple[str, int], problems: list[Problem],
+    layout: _Layout, problems: Problems,
 ) -> dict[str, Any] | None:  # fmt: skip
     """Columns of the records of one system and message; broken ones become problems.
 
-    first  rows of `chars` with the first lines; where  (file name, lines of the header)
+    chars  (records, lines, columns); first  line numbers of the records, from 0
     """
     def drop(bad: npt.NDArray[np.bool_], what: str) -> None:
-        problems.extend(
-            Problem(where[0], int(row) + where[1] + 1, f"{satellite}: {what}")
-            for row, satellite in zip(first[bad], satellites[bad], strict=True)
-        )  # fmt: skip
+        for row, satellite in zip(first[bad], satellites[bad], strict=True):
+            problems.note(int(row) + 1, f"{satellite}: {what}", kind=f"records with {what}")
 
-    rows = _LINES["FDMA"] if system == "R" else _LINES.get(message, _LINES_OTHERWISE)
-    epoch = _epochs(chars[first], layout)
-    clock = _numbers(chars[first], layout.clock, 19, 3)
+    epoch = _epochs(chars[:, 0], layout)
+    clock = _numbers(chars[:, 0], layout.clock, 19, 3)
     orbit = np.concatenate(
-        [_numbers(chars[first + line], layout.orbit, 19, 4) for line in range(1, rows)], axis=1
+        [_numbers(chars[:, line], layout.orbit, 19, 4) for line in range(1, chars.shape[1])], axis=1
     )  # fmt: skip
     count = len(first)
     part: dict[str, Any] = {

@@ -9,7 +9,8 @@ Layout: the SP3-d description (Hilla 2016): epoch lines `*`, position lines `P` 
 import numpy as np
 
 from skylag.errors import FormatError
-from skylag.tables import PreciseOrbits, Problem, Reading
+from skylag.formats.rinex_layout import Problems
+from skylag.tables import PreciseOrbits, Reading
 from skylag.timescales import BDT_BEHIND_GPS_S, utc_to_gps
 
 _BAD_CLOCK = 999_999.0  # microseconds; this and above mean "none"
@@ -32,7 +33,7 @@ def parse(data: bytes, name: str) -> Reading:
             break
     if system not in ("GPS", "GAL", "QZS", "UTC", "GLO", "BDT", "BDS", "TAI", "IRN"):
         raise FormatError(f"{name}: time system {system!r} of SP3 is not known here", path=name, line=0)
-    problems: list[Problem] = []
+    problems = Problems(name)
     epochs: list[np.datetime64] = []
     rows: list[int] = []
     names: list[str] = []
@@ -45,7 +46,7 @@ def parse(data: bytes, name: str) -> Reading:
             satellite = _satellite(line[1:4])
             numbers = _numbers(line)
             if satellite is None or numbers is None:
-                problems.append(Problem(name, number, "position line is broken"))
+                problems.note(number, "position line is broken")
                 continue
             rows.append(current)
             names.append(satellite)
@@ -54,7 +55,7 @@ def parse(data: bytes, name: str) -> Reading:
             epoch = _epoch(line)
             current = -1
             if epoch is None:
-                problems.append(Problem(name, number, "impossible epoch", "its positions skipped"))
+                problems.note(number, "impossible epoch", "its positions skipped")
                 continue
             epochs.append(epoch)
             current = len(epochs) - 1
@@ -64,10 +65,10 @@ def parse(data: bytes, name: str) -> Reading:
     if not values:
         raise FormatError(f"{name}: no position behind any epoch; the file is cut or empty", path=name, line=len(lines))
     if not ended:
-        problems.append(Problem(name, len(lines), "no EOF line; the file is cut", "what came before is used"))
+        problems.note(len(lines), "no EOF line; the file is cut", "what came before is used")
     table = _table(np.array(epochs), np.array(rows), np.array(names), np.array(values), system)
     header = {"version": head[1], "time_system": system, "agency": head[56:60].strip()}
-    return Reading(table, tuple(problems), header)
+    return Reading(table, problems.all(), header)
 
 
 def _satellite(head: bytes) -> str | None:
