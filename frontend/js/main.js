@@ -184,6 +184,7 @@ async function loadFields() {
     scene.fields = fields;
     scene.index = nearest(fields.times, wanted);
     chart.show(scene);
+    legend.show(scene);
     begin();
     // The hours to either side come while the reader looks.
     const { day } = scene;

@@ -30,6 +30,7 @@ export const KIND_WORDS = {
 export const WORDS = {
   simulated: "Simulated data: an invented network, invented days. Nothing here happened.",
   dotted: "Dotted: unseen, not enough data to say.",
+  bareWarning: "by what was seen near by; no number here",
   loadingDay: "Opening the day …",
   lengthUnknown: "the comb points where it goes, its length is not measured",
   loadingMap: "Fetching this hour …",

@@ -5,7 +5,7 @@ import test from "node:test";
 import { STATES } from "../../frontend/js/colour.js";
 import { outline, rowsOf } from "../../frontend/js/figures/cells.js";
 import { legendFigure } from "../../frontend/js/figures/legend.js";
-import { aspectOf, frameOf, heightOf, mapFigure } from "../../frontend/js/figures/map.js";
+import { aspectOf, bareWarnings, frameOf, heightOf, mapFigure } from "../../frontend/js/figures/map.js";
 import { bandOutline, seriesFigure } from "../../frontend/js/figures/series.js";
 import { front, gradations, offset, placeAt, scaleBarKm, widthKm } from "../../frontend/js/figures/signs.js";
 import { keyStep, nearest, runs, stripFigure } from "../../frontend/js/figures/strip.js";
@@ -80,6 +80,20 @@ test("an unseen cell shows no number, even where the archive has one, and is dot
       assert.equal(named(figure, layer).z[1][1], null);
     }
   }
+});
+
+test("a warning over a cell without a number keeps its pattern; what holds without a number is dotted", () => {
+  const fields = fixture();
+  fields.layers.delay[6] = NaN; // strained
+  fields.layers.delay[9] = NaN; // said to hold
+  assert.deepEqual(bareWarnings(fields, 0, "delay"), ["strained"]);
+  assert.deepEqual(bareWarnings(fields, 0, "slope"), []);
+  assert.deepEqual(bareWarnings(fields, 0, "state"), []);
+  const figure = mapFigure(contents({ fields }));
+  assert.equal(named(figure, "strained").fillpattern.shape, "/");
+  assert.equal(areaOf(named(figure, "strained")), 1);
+  assert.equal(areaOf(named(figure, "unseen")), 3);
+  assert.equal(named(figure, "broken"), undefined);
 });
 
 test("each state has its own colour and pattern, and the four share no cell", () => {

@@ -78,6 +78,23 @@ function sizeFactor(width = 700) {
   return Math.min(1.6, Math.max(1, width / 640));
 }
 
+/**
+ * The warnings that stand over cells without a number on a layer: they are drawn there by their pattern.
+ * @param {import("../api.js").Window|null|undefined} fields
+ * @param {number} index
+ * @param {Layer} layer
+ * @returns {import("../colour.js").StateName[]}
+ */
+export function bareWarnings(fields, index, layer) {
+  if (!fields || index < 0 || layer === "state" || !fields.layers[layer] || !fields.layers.state) return [];
+  const size = fields.lats.length * fields.lons.length;
+  const found = new Set();
+  for (let at = index * size; at < (index + 1) * size; at++) {
+    if (fields.layers.state[at] >= 2 && !Number.isFinite(fields.layers[layer][at])) found.add(STATES[fields.layers.state[at]]);
+  }
+  return ["strained", "broken"].filter((state) => found.has(state));
+}
+
 const QUIET = { hoverinfo: "skip", showlegend: false };
 
 /** @param {MapContents} contents */
@@ -87,6 +104,7 @@ function fieldTraces(contents) {
   const [rows, columns] = [fields.lats.length, fields.lons.length];
   const palette = PALETTES[theme];
   const stateAt = (r, c) => fields.layers.state?.[(index * rows + r) * columns + c] ?? 0;
+  const numberAt = (r, c) => layer === "state" || Number.isFinite(fields.layers[layer]?.[(index * rows + r) * columns + c]);
   const traces = [];
   if (layer === "state") {
     for (const code of [1, 2, 3]) traces.push(stateTrace(STATES[code], (r, c) => stateAt(r, c) === code, fields, palette));
@@ -131,7 +149,11 @@ function fieldTraces(contents) {
       });
     }
   }
-  traces.push(stateTrace("unseen", (r, c) => stateAt(r, c) === 0, fields, palette));
+  // Without a number: dots, or the pattern of a warning that reaches over the cell from what was seen near by.
+  traces.push(stateTrace("unseen", (r, c) => stateAt(r, c) === 0 || (stateAt(r, c) === 1 && !numberAt(r, c)), fields, palette));
+  for (const state of bareWarnings(fields, index, layer)) {
+    traces.push(stateTrace(state, (r, c) => STATES[stateAt(r, c)] === state && !numberAt(r, c), fields, palette));
+  }
   return traces;
 }
 

@@ -2,6 +2,7 @@
  * The legend beside the map: colours of the layer, patterns of the states, the drawn signs, and what to show.
  */
 
+import { bareWarnings } from "../figures/map.js";
 import { legendFigure } from "../figures/legend.js";
 import { KIND_WORDS, LAYER_WORDS, STATE_WORDS, WORDS } from "../words.js";
 import { draft, make, swatch } from "./parts.js";
@@ -28,8 +29,9 @@ export class LegendPanel {
   }
 
   /** @param {import("../main.js").Scene} scene */
-  show({ view, day, theme }) {
-    const fingerprint = JSON.stringify([view.layer, day.ends, theme, [...view.show]]);
+  show({ view, day, theme, fields, index }) {
+    const bare = bareWarnings(fields, index, view.layer);
+    const fingerprint = JSON.stringify([bare, view.layer, day.ends, theme, [...view.show]]);
     if (fingerprint === this.#shown) return;
     this.#shown = fingerprint;
     const focused = this.#element.contains(document.activeElement) ? document.activeElement.name : "";
@@ -41,6 +43,7 @@ export class LegendPanel {
     } else {
       colours.append(rampBar(legendFigure(view.layer, day.ends[view.layer], theme)));
       states.append(stateRow("unseen"));
+      for (const state of bare) states.append(stateRow(state, WORDS.bareWarning));
     }
     colours.append(states);
     const narrow = window.matchMedia("(max-width: 599px)").matches;
@@ -87,9 +90,9 @@ export class LegendPanel {
   };
 }
 
-function stateRow(state) {
+function stateRow(state, means = STATE_WORDS[state].means) {
   const words = STATE_WORDS[state];
-  return make("li", {}, swatch(state), make("span", {}, `${words.name} `, make("small", { text: words.means })));
+  return make("li", {}, swatch(state), make("span", {}, `${words.name} `, make("small", { text: means })));
 }
 
 function rampBar({ colours, marks }) {
