@@ -139,6 +139,7 @@ def invented_samples(region: Region, times: Times, satellites: int, rng: np.rand
         receiver_sigma=np.full(rows, 0.5), own_sigma=np.full(rows, 0.3),
         bias_rows=np.column_stack([satellites + receiver, satellite]).astype(np.int64), bias_factor=-2.854 / mapping,
         bias_covariance=np.eye(satellites + len(RECEIVERS)) * 0.09,
+        lean_shell=np.full(rows, 0.3), lean_high=np.full(rows, 0.2),
     )  # fmt: skip
 
 
@@ -235,6 +236,7 @@ def invented_day(
             covariance=samples.bias_covariance,
             datum_of_row=tuple("mean of satellites" for _ in names),
             shell_height_sigma_m=0.0,
+            leanings=np.stack([samples.lean_shell, samples.lean_high]),
         ),
         samples=samples,
         fields=fields,

@@ -414,9 +414,11 @@ class Calibration:
     arc_sigma: Floats  # (rays,) sigma [TECU] of the level of the ray's arc after the adjustment
     ray_bias_rows: Ints  # (rays, 2) rows of `biases`: the receiver's and the satellite's
     ray_per_ns: Floats  # (rays,) levelled slant content [TECU] per ns of either bias (negative)
-    covariance: Floats  # (biases, biases) [ns^2]
+    covariance: Floats  # (biases, biases) [ns^2], of chance alone: what the model may be off by is in `leanings`
     datum_of_row: tuple[str, ...]  # per bias, how its level was chosen
     shell_height_sigma_m: float
+    leanings: Floats  # (2, rays) vertical content [TECU] by which each ray moves when the model is off by one sigma:
+    # the height the shell stands for; the growth of the plasmasphere toward its feet
     high_layer: Floats | None = None  # (rays,) slant content [TECU] above the shell's reach, taken off before mapping
     high_layer_vertical: Floats | None = None  # (rays,) the same, straight up at the pierce point
 
@@ -438,10 +440,13 @@ class Samples:
     own_sigma: Floats  # vertical, the ray's own: noise and mapping
     bias_rows: Ints  # (N, 2) the two biases in each ray, rows of `bias_covariance`
     bias_factor: Floats  # vertical content [TECU] per ns of bias
-    bias_covariance: Floats  # [ns^2]
+    bias_covariance: Floats  # [ns^2], of chance alone
+    lean_shell: Floats  # how the vertical contents move together when the shell stands one sigma higher
+    lean_high: Floats  # the same when the plasmasphere grows one sigma faster toward its feet
 
     def __post_init__(self) -> None:
-        _same_length(self, "rays", "stec", "vtec", "sigma", "arc_sigma", "receiver_sigma", "own_sigma", "bias_rows")
+        _same_length(self, "rays", "stec", "vtec", "sigma", "arc_sigma", "receiver_sigma", "own_sigma", "bias_rows",
+                     "bias_factor", "lean_shell", "lean_high")  # fmt: skip
 
 
 @dataclass(frozen=True)

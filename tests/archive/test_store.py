@@ -111,7 +111,8 @@ def test_a_region_without_sites_or_flags(archive: Archive) -> None:
 def test_slants_come_back_in_order_of_time(archive: Archive, storm: Products) -> None:
     """Angles and sigmas keep 32 bits, contents all."""
     shuffled = np.random.default_rng(5).permutation(len(storm.samples.rays))
-    columns = ("stec", "vtec", "sigma", "arc_sigma", "receiver_sigma", "own_sigma", "bias_rows", "bias_factor")
+    columns = ("stec", "vtec", "sigma", "arc_sigma", "receiver_sigma", "own_sigma", "bias_rows", "bias_factor",
+               "lean_shell", "lean_high")  # fmt: skip
     mixed = replace(
         storm.samples,
         rays=storm.samples.rays.where(shuffled),
@@ -427,6 +428,27 @@ def test_a_damaged_or_lost_slant_table_is_told(archive: Archive) -> None:
     with pytest.raises(Missing, match="slant table"):
         archive.samples(NAME, STORM_DAY)
     assert len(archive.fields(NAME, STORM_DAY).times) == 96, "maps do not need the slant table"
+
+
+def test_a_check_finds_each_harm(archive: Archive, storm: Products) -> None:
+    archive.save(storm)
+    archive.save(invented_day(CALM_DAY, storm=False))
+    assert archive.check() == ()
+    calm = slants.path_of(archive.slant_folder, archive.day(NAME, CALM_DAY).slant_sha256)
+    calm.unlink()
+    storms = slants.path_of(archive.slant_folder, archive.day(NAME, STORM_DAY).slant_sha256)
+    storms.write_bytes(storms.read_bytes()[:-1] + b"?")
+    (archive.slant_folder / "writing-half.parquet").write_bytes(b"half")
+    with archive._write_engine.begin() as connection:
+        first = schema.chunk.c.product == 1
+        connection.execute(sa.delete(schema.chunk).where(first & (schema.chunk.c.hour == 3)))
+        second = (schema.document.c.product == 2) & (schema.document.c.name == "site_states")
+        connection.execute(sa.update(schema.document).where(second).values(sha256="0" * 64))
+    found = "\n".join(archive.check())
+    assert len(archive.check()) == 5, found
+    for words in (f"{NAME}, day 2031-05-11, version 1: the archive lost part of layer", "site_states do not match",
+                  f"{calm} is not there", f"{storms}: the slant table is not the one", "writing-half"):  # fmt: skip
+        assert words in found, words
 
 
 def test_equal_slants_are_kept_once(archive: Archive, storm: Products) -> None:

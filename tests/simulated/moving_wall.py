@@ -133,7 +133,7 @@ def samples_of(rays: Rays, vtec: np.ndarray, arc_sigma: np.ndarray, receiver_sig
         rays=rays, stec=vtec * rays.mapping, vtec=vtec, sigma=np.sqrt(arc_sigma**2 + receiver_sigma**2 + own**2),
         arc_sigma=arc_sigma, receiver_sigma=receiver_sigma, own_sigma=own,
         bias_rows=np.zeros((len(rays), 2), dtype=np.int64), bias_factor=np.ones(len(rays)),
-        bias_covariance=np.zeros((1, 1)),
+        bias_covariance=np.zeros((1, 1)), lean_shell=np.zeros(len(rays)), lean_high=np.zeros(len(rays)),
     )  # fmt: skip
 
 

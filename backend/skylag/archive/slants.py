@@ -9,6 +9,7 @@ import hashlib
 import json
 import os
 import tempfile
+from collections.abc import Container
 from dataclasses import asdict, replace
 from pathlib import Path
 from typing import Any
@@ -29,7 +30,8 @@ _RAY_TYPES = {
 }  # fmt: skip
 # What calibration adds.  `bias_rows` has two columns; `bias_covariance` is no column and goes with the facts.
 _SAMPLE_TYPES = {"stec": "float64", "vtec": "float64", "sigma": "float32", "arc_sigma": "float32",
-                 "receiver_sigma": "float32", "own_sigma": "float32", "bias_factor": "float64"}  # fmt: skip
+                 "receiver_sigma": "float32", "own_sigma": "float32", "bias_factor": "float64",
+                 "lean_shell": "float32", "lean_high": "float32"}  # fmt: skip
 _ROWS_PER_GROUP = 16_384
 
 
@@ -106,6 +108,11 @@ def verify(folder: Path, sha256: str) -> None:
     path = _existing(folder, sha256)
     if _hash(path) != sha256:
         raise FormatError(f"{path}: the slant table is not the one its address names", path=str(path), line=0)
+
+
+def strays(folder: Path, named: Container[str]) -> list[Path]:
+    """Files of the folder whose address nobody names, or that were never finished; in order."""
+    return sorted(path for path in folder.rglob("*.parquet") if path.stem not in named)
 
 
 def _existing(folder: Path, sha256: str) -> Path:

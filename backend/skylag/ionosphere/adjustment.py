@@ -20,7 +20,7 @@ from skylag.constants import SHELL_EARTH_RADIUS_M, SPEED_OF_LIGHT_M_S, carrier_h
 from skylag.errors import NotEnough
 from skylag.ionosphere.arcs import tecu_per_metre
 from skylag.ionosphere.bias_algebra import pair_bias
-from skylag.ionosphere.plasmasphere import FOOT_EXPONENT, FOOT_EXPONENT_SIGMA, slant_shape, vertical_shape
+from skylag.ionosphere.plasmasphere import FOOT_EXPONENT, FOOT_EXPONENT_SIGMA, slant_shape
 from skylag.tables import Biases, Calibration, Floats, Ints, Rays, Samples
 
 
@@ -119,19 +119,22 @@ def apply(calibration: Calibration, rays: Rays) -> Samples:
         rays.elevation, rays.shell_height_m, calibration.shell_height_sigma_m
     )
     arc_sigma = calibration.arc_sigma / rays.mapping
-    own = np.hypot(rays.noise_sigma / rays.mapping, mapping_sigma)
+    # Half of the mapping's doubt is taken as a ray's own (the profile differs by direction); all of it leans together.
+    own = np.hypot(rays.noise_sigma / rays.mapping, 0.5 * mapping_sigma)
     bias_sigma = calibration.ray_bias_sigma / rays.mapping
     return Samples(
         rays=rays,
         stec=stec,
         vtec=vtec,
-        sigma=np.sqrt(own**2 + arc_sigma**2 + bias_sigma**2),
+        sigma=np.sqrt(own**2 + arc_sigma**2 + bias_sigma**2 + np.sum(calibration.leanings**2, axis=0)),
         arc_sigma=arc_sigma,
         receiver_sigma=calibration.receiver_sigma[rays.receiver] / rays.mapping,
         own_sigma=own,
         bias_rows=calibration.ray_bias_rows,
         bias_factor=calibration.ray_per_ns / rays.mapping,
         bias_covariance=calibration.covariance,
+        lean_shell=calibration.leanings[0],
+        lean_high=calibration.leanings[1],
     )
 
 
@@ -291,6 +294,7 @@ def _penalty(layout: Mapping[str, Any], choices: AdjustmentChoices) -> tuple[Flo
 class _Estimate:
     x: Floats
     covariance: Floats
+    moved: Floats  # (K, unknowns) by one sigma of each thing the model may be off by
     residual: Floats
     arc_effect: Floats  # per arc of the thinned part
     arc_share: Floats  # of the effect, the share that is the arc's own level
@@ -350,12 +354,13 @@ def _iterate(
         part.mapping * relative * vertical_content,  # the height a single shell stands for
         amplitude * FOOT_EXPONENT_SIGMA * layout["high_change"],  # the shape of the plasmasphere
     ]
-    covariance = _covariance(normal, layout, disturbances)
+    moved = np.array([normal.respond(disturbance) for disturbance in disturbances])
+    covariance = _covariance(normal, layout)
     share = level**2 / (level**2 + model_arc**2)
     remaining = 1.0 / (1.0 / arc_variance + normal.mass)
     arc_sigma = np.sqrt(level**2 * (1.0 - share) + share**2 * np.minimum(remaining, level**2))
     return _Estimate(
-        x, covariance, residual, effect, share, arc_sigma, arc_of_row, arc_numbers, model, hour, widened
+        x, covariance, moved, residual, effect, share, arc_sigma, arc_of_row, arc_numbers, model, hour, widened
     )  # fmt: skip
 
 
@@ -410,19 +415,12 @@ def _err_together(part: Rays, normalised: Floats) -> float:
     return max(1.0, float(np.sum(np.bincount(cluster, calm) ** 2) / np.sum(calm**2)))
 
 
-def _covariance(normal: _Normal, layout: Mapping[str, Any], disturbances: list[Floats]) -> Floats:
-    """Covariance of the biases [ns^2]: what the weights promise, and what the model itself may be off by.
-
-    Each disturbance is one standard deviation of an error that does not average out over the day.
-    """
+def _covariance(normal: _Normal, layout: Mapping[str, Any]) -> Floats:
+    """Covariance of the biases [ns^2] that the weights promise."""
     biases = layout["biases"]
     unit = np.zeros((layout["high"] + 1, biases))
     unit[np.arange(biases), np.arange(biases)] = 1.0
-    covariance = np.asarray(cho_solve(normal.factor, unit))[:biases]
-    for disturbance in disturbances:
-        moved = normal.respond(disturbance)[:biases]
-        covariance += moved[:, None] * moved[None, :]
-    return covariance
+    return np.asarray(cho_solve(normal.factor, unit))[:biases]
 
 
 # ---------------------------------------------------------------------------------------------- the result
@@ -434,7 +432,7 @@ def _calibration(
 ) -> Calibration:  # fmt: skip
     biases = layout["biases"]
     value = estimate.x[:biases]
-    sigma = np.sqrt(np.diag(estimate.covariance))
+    sigma = np.sqrt(np.diag(estimate.covariance) + np.sum(estimate.moved[:, :biases] ** 2, axis=0))
     start, end = part.time.min(), part.time.max()
     table = Biases(
         kind=np.array(unknowns.kind),
@@ -462,7 +460,11 @@ def _calibration(
     variance = per_ns**2 * (c[r, r] + c[s, s] + 2.0 * c[r, s])
     lat, lon = _spherical_receivers(rays)
     amplitude = float(estimate.x[layout["high"]])
-    high, above = _on_a_raster(rays, lat, lon)
+    high, above, high_change, above_change = _on_a_raster(rays, lat, lon)
+    leanings = _leanings(
+        rays, per_ns, bias_rows, estimate.moved, amplitude, high, above, high_change, above_change,
+        rays.stec - (-per_ns * (value[r] + value[s])) - amplitude * high, choices,
+    )  # fmt: skip
     receiver_sigma = np.zeros(len(rays.receivers))
     for row in range(biases):
         if unknowns.kind[row] == "receiver":
@@ -500,11 +502,32 @@ def _calibration(
         covariance=estimate.covariance,
         datum_of_row=tuple(datum[row] for row in range(biases)),
         shell_height_sigma_m=choices.shell_height_sigma_m,
+        leanings=leanings,
     )
 
 
-def _on_a_raster(rays: Rays, lat: Floats, lon: Floats) -> tuple[Floats, Floats]:
-    """Slant and vertical plasmasphere shape of every ray, from one value per five minutes of each arc.
+def _leanings(
+    rays: Rays, per_ns: Floats, rows: Ints, moved: Floats, amplitude: float, high: Floats, above: Floats,
+    high_change: Floats, above_change: Floats, low_slant: Floats, choices: AdjustmentChoices,
+) -> Floats:  # fmt: skip
+    """How each ray's vertical content moves when the model is off by one sigma, (2, rays) [TECU].
+
+    First the height that the single shell stands for, second how the plasmasphere grows toward its feet.  Each moves
+    the biases, the amplitude of the high layer, and the way from slant to vertical together.
+    """
+    relative = relative_mapping_sigma(rays.elevation, rays.shell_height_m, choices.shell_height_sigma_m)
+    by_bias = per_ns * (moved[:, rows[:, 0]] + moved[:, rows[:, 1]]) / rays.mapping
+    by_amplitude = moved[:, -1:] * (above - high / rays.mapping)
+    leanings = by_bias + by_amplitude
+    leanings[0] += relative * low_slant / rays.mapping
+    leanings[1] += amplitude * FOOT_EXPONENT_SIGMA * (high_change / rays.mapping - above_change)
+    return np.asarray(leanings)
+
+
+def _on_a_raster(rays: Rays, lat: Floats, lon: Floats) -> tuple[Floats, Floats, Floats, Floats]:
+    """Slant and vertical plasmasphere shape of every ray, and how both change with the foot exponent.
+
+    From one value per five minutes of each arc.
 
     The shape changes slowly along a pass; straight interpolation over five minutes errs below 0.01 TECU.
     """
@@ -518,11 +541,17 @@ def _on_a_raster(rays: Rays, lat: Floats, lon: Floats) -> tuple[Floats, Floats]:
     last[:-1] = arc[1:] != arc[:-1]
     node = np.flatnonzero(new | last)
     at = order[node]
-    slant = slant_shape(lat[at], lon[at], rays.elevation[at], rays.azimuth[at])
-    vertical = vertical_shape(rays.pierce_lat[at], rays.pierce_lon[at])
+    overhead = np.full(len(at), 90.0)
     # One axis for all arcs: arcs stand far apart on it, so that interpolation never reaches across.
     axis = arc * 1e7 + seconds
-    slant_all, vertical_all = np.empty(len(order)), np.empty(len(order))
-    slant_all[order] = np.interp(axis, axis[node], slant)
-    vertical_all[order] = np.interp(axis, axis[node], vertical)
-    return slant_all, vertical_all
+    sought = []
+    for exponent in (FOOT_EXPONENT, FOOT_EXPONENT + 0.5):
+        for values in (
+            slant_shape(lat[at], lon[at], rays.elevation[at], rays.azimuth[at], exponent),
+            slant_shape(rays.pierce_lat[at], rays.pierce_lon[at], overhead, 0.0 * overhead, exponent),
+        ):
+            along = np.empty(len(order))
+            along[order] = np.interp(axis, axis[node], values)
+            sought.append(along)
+    slant, above, slant_other, above_other = sought
+    return slant, above, (slant_other - slant) / 0.5, (above_other - above) / 0.5

@@ -34,8 +34,8 @@ class FieldChoices:
     minimum_elevation: float = 15.0
     window_s: float = 300.0
     reach_km: tuple[float, ...] = (60.0, 125.0, 250.0, 500.0, 1000.0)
-    spread_tecu: tuple[float, ...] = (0.25, 0.5, 1.0, 2.0, 4.0, 8.0, 16.0)
-    grain_tecu: tuple[float, ...] = (0.05, 0.2, 0.6)
+    spread_tecu: tuple[float, ...] = (0.06, 0.12, 0.25, 0.5, 1.0, 2.0, 4.0, 8.0, 16.0)
+    grain_tecu: tuple[float, ...] = (0.02, 0.06, 0.2, 0.6)
     support_km: float = 150.0
     slope_over_km: float = 40.0
     learn_rays: int = 140
@@ -52,6 +52,7 @@ class Epoch:
     arc: Floats
     rows: Ints
     factor: Floats
+    leanings: Floats
 
     def noise(self, covariance: Floats) -> Floats:
         """Covariance of the rays' errors [TECU^2]."""
@@ -173,18 +174,23 @@ def gather(
         "arc": mean(samples.arc_sigma), "factor": mean(samples.bias_factor),
     }  # fmt: skip
     rows = samples.bias_rows[order[start]]
+    leanings = np.stack([mean(samples.lean_shell), mean(samples.lean_high)], axis=1)
     edges = np.searchsorted(key_epoch[start], np.arange(len(epochs) + 1))
     parts: list[Epoch | None] = []
     for first, last in itertools.pairwise(edges):
         if first == last:
             parts.append(None)
             continue
-        parts.append(Epoch(rows=rows[first:last], **{name: values[first:last] for name, values in columns.items()}))
+        own_columns = {name: values[first:last] for name, values in columns.items()}
+        parts.append(Epoch(rows=rows[first:last], leanings=leanings[first:last], **own_columns))
     return parts
 
 
 def learn(parts: list[Epoch], covariance: Floats, choices: FieldChoices) -> tuple[float, float, float]:
-    """Reach [km], spread [TECU] and grain [TECU] of the residual that the data of these epochs make most likely."""
+    """Reach [km], spread [TECU] and grain [TECU] of the residual that the data of these epochs make most likely.
+
+    One of the three is varied at a time, twice round: 36 likelihoods where all combinations would be 180.
+    """
     chosen = [parts[i] for i in np.unique(np.linspace(0, len(parts) - 1, 3).astype(int))]
     prepared = []
     for part in chosen:
@@ -192,25 +198,26 @@ def learn(parts: list[Epoch], covariance: Floats, choices: FieldChoices) -> tupl
         thin = _pick(part, pick)
         distance = np.hypot(thin.x[:, None] - thin.x[None, :], thin.y[:, None] - thin.y[None, :])
         prepared.append((thin, distance, thin.noise(covariance)))
-    best, answer = -np.inf, (choices.reach_km[-1], choices.spread_tecu[2], choices.grain_tecu[1])
-    for reach in choices.reach_km:
-        shapes = [np.exp(-distance / reach) for _, distance, _ in prepared]
-        for grain in choices.grain_tecu:
-            for spread in choices.spread_tecu:
-                total = 0.0
-                for (thin, _, noise), shape in zip(prepared, shapes, strict=True):
-                    matrix = noise + spread**2 * shape
-                    matrix[np.diag_indices_from(matrix)] += grain**2
-                    total += _restricted_likelihood(matrix, thin)
-                if total > best:
-                    best, answer = total, (reach, spread, grain)
-    return answer
+
+    def likelihood(reach: float, spread: float, grain: float) -> float:
+        total = 0.0
+        for thin, distance, noise in prepared:
+            matrix = noise + spread**2 * np.exp(-distance / reach)
+            matrix[np.diag_indices_from(matrix)] += grain**2
+            total += _restricted_likelihood(matrix, thin)
+        return total
+
+    axes = (choices.reach_km, choices.spread_tecu, choices.grain_tecu)
+    answer = [axis[len(axis) // 2] for axis in axes]
+    for _ in range(2):
+        for number in (1, 0, 2):
+            tried = [[*answer[:number], value, *answer[number + 1 :]] for value in axes[number]]
+            answer = max(tried, key=lambda three: likelihood(*three))
+    return answer[0], answer[1], answer[2]
 
 
 def _pick(part: Epoch, rows: Ints | Bools) -> Epoch:
-    return Epoch(
-        part.x[rows], part.y[rows], part.vtec[rows], part.own[rows], part.arc[rows], part.rows[rows], part.factor[rows]
-    )
+    return Epoch(**{name: getattr(part, name)[rows] for name in part.__dataclass_fields__})
 
 
 def _drift(x: Floats, y: Floats) -> Floats:
@@ -255,14 +262,17 @@ def krige(
         except LinAlgError:
             matrix[np.diag_indices_from(matrix)] += 1e-3
             factor = cho_factor(matrix, lower=True, check_finite=False)
-        weighted = cho_solve(factor, np.column_stack([part.vtec, drift]), check_finite=False)
-        normal = drift.T @ weighted[:, 1:]
-        plane = np.linalg.solve(normal, drift.T @ weighted[:, 0])
-        residual_weighted = weighted[:, 0] - weighted[:, 1:] @ plane
+        # The content, and beside it every way in which all contents may lean together: the map leans as they do.
+        data = np.column_stack([part.vtec, part.leanings])
+        weighted = cho_solve(factor, np.column_stack([data, drift]), check_finite=False)
+        of_drift = weighted[:, data.shape[1] :]
+        normal = drift.T @ of_drift
+        plane = np.linalg.solve(normal, drift.T @ weighted[:, : data.shape[1]])
+        residual_weighted = weighted[:, : data.shape[1]] - of_drift @ plane
         if turn == 0:
             # Leave-one-out residuals of the kriging, from the inverse alone (Dubrule 1983).
             inverse_diagonal = _inverse_diagonal(factor, len(part.vtec))
-            strange = np.abs(residual_weighted) / np.sqrt(inverse_diagonal) > 5.0
+            strange = np.abs(residual_weighted[:, 0]) / np.sqrt(inverse_diagonal) > 5.0
             if not strange.any() or (~strange).sum() < 4:
                 break
             part = _pick(part, ~strange)
@@ -278,11 +288,12 @@ def krige(
     normal_inverse = np.linalg.inv(normal)
 
     def functional(k: Floats, f: Floats, own: float) -> tuple[Floats, Floats]:
-        value = k @ residual_weighted + f @ plane
+        answer = k @ residual_weighted + f @ plane
         white = solve_triangular(lower, k.T, lower=True, check_finite=False)  # (rays, places)
         open_drift = f - white.T @ white_drift
         variance = own - np.sum(white**2, axis=0) + np.sum((open_drift @ normal_inverse) * open_drift, axis=1)
-        return value, np.sqrt(np.maximum(variance, 0.0))
+        together = np.sum(answer[:, 1:] ** 2, axis=1)
+        return answer[:, 0], np.sqrt(np.maximum(variance, 0.0) + together)
 
     # A cell's value is that of a place in it, so the unresolved grain is part of its uncertainty.
     value, sigma = functional(covariances(gx, gy), _drift(gx, gy), spread**2 + grain**2)
