@@ -191,8 +191,6 @@ def _records(
     records: list[tuple[int, str, str, str]] = []
     for (number, satellite, system, message), after in zip(found, ends, strict=True):
         needed = _LINES["FDMA"] if system == "R" else _LINES.get(message, _LINES_OTHERWISE)
-        if system == "J" and message == "CNV2":
-            needed = _LINES["CNV2"]
         length = borders[min(int(after), len(borders) - 1)] - number
         if system in _SKIPPED:
             needed = 0

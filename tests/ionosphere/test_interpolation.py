@@ -1,0 +1,113 @@
+"""Content between the nodes and epochs of maps: a worked case, laws, edges."""
+
+import numpy as np
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from tests.conftest import Evidence
+
+from skylag.errors import NotEnough
+from skylag.ionosphere.interpolation import vertical_at
+from skylag.tables import Fields
+
+START = np.datetime64("2024-03-30", "ns")
+
+
+def maps(values: np.ndarray, lats: np.ndarray, lons: np.ndarray, hours: float = 2.0) -> Fields:
+    """Maps (T, lat, lon) every `hours`, their sigma a tenth of the content."""
+    shape = values.shape
+    nothing = np.full(shape, np.nan, dtype=np.float32)
+    times = START + np.rint(np.arange(shape[0]) * hours * 3600).astype(np.int64).astype("timedelta64[s]")
+    return Fields(
+        times=times, lats=lats, lons=lons, vtec=values.astype(np.float32), vtec_sigma=(values / 10).astype(np.float32),
+        support=np.zeros(shape, dtype=np.uint16), slope=nothing, slope_sigma=nothing, slope_east=nothing,
+        slope_north=nothing, state=np.zeros(shape, dtype=np.uint8),
+    )  # fmt: skip
+
+
+WORKED = maps(
+    np.array(
+        [
+            [
+                [12.0, 13.3, 15.1, 16.8, 18.0, 18.6, 18.7, 18.1, 17.0],
+                [10.1, 11.2, 12.7, 14.1, 15.1, 15.6, 15.7, 15.2, 14.3],
+            ],
+            [
+                [17.0, 18.2, 19.5, 20.4, 20.8, 20.5, 19.7, 18.6, 17.2],
+                [14.3, 15.3, 16.4, 17.1, 17.4, 17.2, 16.6, 15.6, 14.5],
+            ],
+        ]
+    ),
+    np.array([47.5, 50.0]),
+    np.arange(0.0, 41.0, 5.0),
+)
+HALF_PAST = START + np.timedelta64(30, "m")
+
+
+@pytest.mark.parametrize(("turning", "expected"), [(False, 17.803), (True, 16.979)])
+def test_a_worked_case(turning: bool, expected: float, evidence: Evidence) -> None:
+    got, sigma = vertical_at(WORKED, 48.5, 27.0, HALF_PAST, turning)
+    evidence(f"content between two small maps, {'turned' if turning else 'not turned'}", unit="TECU",
+             source="IONEX 1.0 section 3, worked case of a handbook by two routes", expected=expected, got=float(got),
+             tolerance=5.1e-4)  # fmt: skip
+    assert float(sigma) == pytest.approx(float(got) / 10, rel=1e-4)
+
+
+GLOBE_LATS, GLOBE_LONS = np.arange(-87.5, 88, 2.5), np.arange(-180.0, 181, 5.0)
+
+
+def globe() -> Fields:
+    """Three maps of a smooth content that stands still under the Sun."""
+    lon = np.radians(GLOBE_LONS)[None, None, :]
+    turn = np.radians(15.0 * 2.0 * np.arange(3))[:, None, None]
+    return maps(20 + 10 * np.cos(lon + turn) * np.cos(np.radians(GLOBE_LATS))[None, :, None], GLOBE_LATS, GLOBE_LONS)
+
+
+@given(st.floats(-87.5, 87.5), st.floats(-540, 540), st.floats(0, 4))
+def test_content_that_stands_under_the_sun_is_met_by_turning(lat: float, lon: float, hours: float) -> None:
+    when = START + np.timedelta64(round(hours * 3.6e12), "ns")
+    truth = 20 + 10 * np.cos(np.radians(lon + 15 * hours)) * np.cos(np.radians(lat))
+    got, _ = vertical_at(globe(), lat, lon, when)
+    assert float(got) == pytest.approx(truth, abs=0.02)  # what straight lines over 2.5 x 5 degrees leave of a cosine
+
+
+@given(st.floats(-87.5, 87.5), st.floats(-180, 180))
+def test_longitudes_go_round(lat: float, lon: float) -> None:
+    here, there = (float(vertical_at(globe(), lat, x, START)[0]) for x in (lon, lon + 360))
+    assert here == pytest.approx(there, abs=1e-4)
+
+
+def test_nodes_are_met_and_arrays_taken() -> None:
+    field = globe()
+    lat, lon = np.meshgrid(field.lats, field.lons, indexing="ij")
+    got, _ = vertical_at(field, lat, lon, field.times[1], turning=False)
+    assert got == pytest.approx(field.vtec[1], abs=1e-4)
+
+
+def test_outside_is_nan() -> None:
+    for lat, lon, when in (
+        (47.4, 20, START), (50.1, 20, START), (48, -0.1, START), (48, 40.1, START),
+        (48, 20, START - np.timedelta64(1, "s")), (48, 20, START + np.timedelta64(7201, "s")),
+    ):  # fmt: skip
+        assert np.isnan(vertical_at(WORKED, lat, lon, when, turning=False)[0])
+    for lat, lon in ((47.5, 0), (50, 40), (50, 0), (47.5, 40)):
+        assert np.isfinite(vertical_at(WORKED, lat, lon, START, turning=False)[0])
+
+
+def test_a_missing_node_is_not_bridged() -> None:
+    values = WORKED.vtec.astype(float)
+    values[0, 0, 4] = np.nan
+    field = maps(values, WORKED.lats, WORKED.lons)
+    assert np.isnan(vertical_at(field, 48.0, 22.0, START, turning=False)[0])
+    assert np.isnan(vertical_at(field, 48.0, 22.0, HALF_PAST, turning=False)[0])
+    assert np.isfinite(vertical_at(field, 48.0, 12.0, START, turning=False)[0])
+    assert np.isfinite(vertical_at(field, 48.0, 22.0, field.times[1], turning=False)[0])
+
+
+def test_one_map_serves_its_own_time_only() -> None:
+    one = maps(WORKED.vtec[:1].astype(float), WORKED.lats, WORKED.lons)
+    assert float(vertical_at(one, 47.5, 10, START)[0]) == pytest.approx(15.1)
+    assert np.isnan(vertical_at(one, 47.5, 10, HALF_PAST)[0])
+    none = maps(np.empty((0, 2, 9)), WORKED.lats, WORKED.lons)
+    with pytest.raises(NotEnough):
+        vertical_at(none, 47.5, 10, START)
