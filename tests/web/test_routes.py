@@ -4,18 +4,20 @@ import base64
 import csv
 import io
 import json
+import re
 from dataclasses import replace
 
 import numpy as np
 import pytest
 from fastapi.testclient import TestClient
-from tests.builders import REGION, STORM_DAY
+from tests.builders import CALM_DAY, REGION, STORM_DAY, invented_day
 
 from skylag import quantities, timescales
 from skylag.archive import Archive
 from skylag.constants import L1_M_PER_TECU
 from skylag.tables import BROKEN, HOLDS, STATE_NAMES, STRAINED, UNSEEN
 from skylag.web import payloads
+from skylag.web.app import create_app
 
 DAY = f"/api/days/{REGION.name}/{STORM_DAY}"
 
@@ -218,6 +220,18 @@ def test_the_page_is_served(client: TestClient) -> None:
 def test_big_answers_are_compressed(client: TestClient) -> None:
     answer = client.get(f"{DAY}/fields")
     assert answer.headers["content-encoding"] == "gzip"
+
+
+def test_the_same_answers_on_both_databases(client: TestClient, archive: Archive, small_archive: Archive) -> None:
+    """SQLite and PostgreSQL give the same text; only when a day was saved differs."""
+    archive.save(invented_day(CALM_DAY, storm=False, seed=10))
+    archive.save(invented_day(STORM_DAY, storm=True, seed=11))
+    other = TestClient(create_app(archive))
+    here = "lat=-41&lon=147&time=2031-05-11T05:14:42Z"
+    for tail in ("", "/fields", "/flags", "/site-states", "/biases", f"/reading?{here}", f"/series?{here}",
+                 f"/rays?{here}", "/flags.csv", "/flags.geojson"):  # fmt: skip
+        texts = [re.sub(r'"saved_at_utc":"[^"]*"', "", one.get(DAY + tail).text) for one in (client, other)]
+        assert texts[0] == texts[1], tail
 
 
 # ---------------------------------------------------------------------------------------------- encoding

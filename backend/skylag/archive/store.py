@@ -20,11 +20,12 @@ from sqlalchemy.engine import URL, Connection, Engine, make_url
 
 from skylag.archive import chunks, records, schema, slants
 from skylag.archive.records import DayHead, DayRecord, SiteStates
-from skylag.errors import Missing, Refused, SkylagError
+from skylag.errors import FormatError, Missing, Refused, SkylagError
 from skylag.tables import UNSEEN, Biases, Fields, Flag, Products, Rays, Samples, Times
 
 BUSY_WAIT_S = 30.0
 
+_POOL = 20  # connections kept, and as many more for a rush: the web serves up to forty requests at a time
 _PREPARE_LOCK = 0x536B794C  # any number that is ours
 _HOUR_NS = 3600 * 10**9
 Day = np.datetime64 | str  # a GPS-time day, like 2031-05-11
@@ -85,7 +86,9 @@ def _url_of(place: str | Path) -> URL:
 
 def _sqlite_engine(url: URL, begin: str) -> Engine:
     """An engine whose transactions open with `begin`; the driver's own habit of late transactions is switched off."""
-    engine = sa.create_engine(url, connect_args={"timeout": BUSY_WAIT_S, "check_same_thread": False})
+    engine = sa.create_engine(
+        url, connect_args={"timeout": BUSY_WAIT_S, "check_same_thread": False}, pool_size=_POOL, max_overflow=_POOL
+    )
 
     @sa.event.listens_for(engine, "connect")
     def _on_connect(connection: Any, _record: Any) -> None:
@@ -106,7 +109,7 @@ def _sqlite_engine(url: URL, begin: str) -> Engine:
 
 def _postgresql_engine(url: URL) -> Engine:
     try:
-        return sa.create_engine(url, pool_pre_ping=True)
+        return sa.create_engine(url, pool_pre_ping=True, pool_size=_POOL, max_overflow=_POOL)
     except ImportError as cause:
         raise Refused(
             "a PostgreSQL archive needs the package psycopg; run pip install 'skylag[server]', or name a folder",
@@ -320,6 +323,39 @@ class Archive:
         with self._reading() as connection:
             row = self._product_row(connection, region, day, version)
         return slants.read_at(self.slant_folder, row.slant_sha256, time).rays
+
+    def check(self) -> tuple[str, ...]:
+        """Everything wrong in the archive, one sentence each: the database itself, all checksums, lost and stray files.
+
+        Reads everything once and changes nothing.  A stray file does no harm: a save was cut off after writing it.
+        """
+        found: list[str] = []
+        named: dict[str, str] = {}
+        with self._reading() as connection:
+            if connection.dialect.name == "sqlite":
+                told = connection.exec_driver_sql("PRAGMA integrity_check").scalars().all()
+                found += [f"database: {line}" for line in told if line != "ok"]
+            products = connection.execute(sa.select(schema.product).order_by(schema.product.c.id)).all()
+            for row in products:
+                where = f"{row.region}, day {row.day}, version {row.version}"
+                named.setdefault(row.slant_sha256, where)
+                try:
+                    times = self._times(connection, row.id)
+                    for name in ("site_states", "site_reasons"):
+                        self._document(connection, row.id, name)
+                    hours = _hours(times, row.day)
+                    for hour in np.unique(hours):
+                        first, last = np.searchsorted(hours, hour, "left"), np.searchsorted(hours, hour, "right")
+                        self._layers(connection, row, hours, int(first), int(last))
+                except (FormatError, Missing) as failure:
+                    found.append(f"{where}: {failure.message}")
+        for sha256, where in named.items():
+            try:
+                slants.verify(self.slant_folder, sha256)
+            except (FormatError, Missing) as failure:
+                found.append(f"{where}: {failure.message}")
+        found += [f"stray file, of no day: {path}" for path in slants.strays(self.slant_folder, named)]
+        return tuple(found)
 
     # ------------------------------------------------------------------------------------------ inner works
 
