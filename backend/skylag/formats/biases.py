@@ -18,6 +18,7 @@ from skylag.tables import Biases, Reading, Times
 from skylag.timescales import BDT_BEHIND_GPS_S, utc_to_gps
 
 _NEVER = np.datetime64("NaT", "ns")
+_SYSTEMS = "GRECJSI"
 _DATUM_MARK = "Datum of the levels: "
 
 # What the letters of the monthly tables mean as RINEX 3 codes.  P1 and P2 of GPS are semi-codeless tracking (W).  C2 of
@@ -143,9 +144,9 @@ def _solution_line(line: str, system: str, rows: _Rows, skipped: dict[str, int])
     if station and len(satellite) > 1:
         skipped["satellite-receiver link"] = skipped.get("satellite-receiver link", 0) + 1
         return
-    if not satellite or not satellite[0].isalpha():
+    if not satellite[:1] or satellite[0] not in _SYSTEMS:
         raise ValueError("no satellite or system")
-    if not station and (len(satellite) != 3 or not satellite[1:].isdigit()):
+    if not station and (len(satellite) != 3 or not satellite[1:].isdecimal()):
         raise ValueError(f"{satellite!r} is no satellite")
     value = float(rest[1])
     sigma = float(rest[2]) if len(rest) > 2 else np.nan
@@ -258,7 +259,7 @@ def _monthly(lines: list[str], name: str, first: str, second: str) -> Reading:
         except (ValueError, IndexError):
             problems.note(number, "value or its rms is missing or no number")
             continue
-        whole = len(satellite) == 3 and satellite[1:].isdigit()
+        whole = len(satellite) == 3 and satellite[1:].isdecimal()
         if not code1 or not code2 or whole == bool(station):
             what = f"{satellite!r} {station!r}: neither a satellite nor a receiver"
             problems.note(number, what, kind="rows of neither a satellite nor a receiver")

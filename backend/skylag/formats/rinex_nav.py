@@ -134,7 +134,8 @@ def _header(lines: list[bytes], name: str) -> tuple[float, str, int, dict[str, t
             values = _coefficients(text[5:53], 12)
             ionosphere.setdefault(key, values[:3] if key == "GAL" else values)
         elif label == b"LEAP SECONDS":
-            leap_seconds = int(text[:6]) if text[:6].strip().isdigit() else None
+            digits = line[:6].strip()
+            leap_seconds = int(digits) if digits.isdigit() else None
     raise FormatError(f"{name}: no END OF HEADER; the file is cut or is no RINEX file", path=name, line=len(lines))
 
 

@@ -13,6 +13,7 @@ from skylag.formats.rinex_layout import Problems
 from skylag.tables import PreciseOrbits, Reading
 from skylag.timescales import BDT_BEHIND_GPS_S, utc_to_gps
 
+_SYSTEMS = "GRECJSIL"
 _BAD_CLOCK = 999_999.0  # microseconds; this and above mean "none"
 
 
@@ -75,7 +76,7 @@ def _satellite(head: bytes) -> str | None:
     """Name like G05 of three columns; a blank letter means GPS (SP3-a)."""
     letter = head[:1].decode("latin-1").strip() or "G"
     digits = head[1:3].strip()
-    return f"{letter}{int(digits):02d}" if letter.isalpha() and digits.isdigit() else None
+    return f"{letter}{int(digits):02d}" if letter in _SYSTEMS and digits.isdigit() else None
 
 
 def _numbers(line: bytes) -> list[float] | None:
