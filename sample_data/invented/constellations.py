@@ -79,11 +79,11 @@ def constellation(seed: int = 2031) -> Constellation:
     rng = np.random.default_rng([seed, 11])
     sidereal = _sidereal_deg(REFERENCE)
     slots: list[tuple[str, float, float]] = []
-    for plane, node in GPS_NODES_DEG.items():
-        slots += [("G", node, u) for u in GPS_SLOTS_DEG[plane]]
+    for plane, plane_node in GPS_NODES_DEG.items():
+        slots += [("G", plane_node, u) for u in GPS_SLOTS_DEG[plane]]
     for plane_number in range(3):
-        node = GALILEO_FIRST_NODE_DEG + 120.0 * plane_number
-        slots += [("E", node, GALILEO_FIRST_SLOT_DEG + 15.0 * plane_number + 45.0 * k) for k in range(8)]
+        plane_node = GALILEO_FIRST_NODE_DEG + 120.0 * plane_number
+        slots += [("E", plane_node, GALILEO_FIRST_SLOT_DEG + 15.0 * plane_number + 45.0 * k) for k in range(8)]
     order = rng.permutation(24)  # satellite numbers are not in the order of the planes
     gps, galileo = [slots[k] for k in order], [slots[24 + k] for k in rng.permutation(24)]
     rows = galileo + gps
@@ -193,7 +193,7 @@ def look_from(sky: Constellation, station: Station, seconds: Floats) -> tuple[Fl
 
 def _records(sky: Constellation, day: np.datetime64) -> list[tuple[int, np.datetime64, dict[str, float]]]:
     """(satellite number, toe, fields) of a day: GPS every two hours, Galileo every hour, both midnights inside."""
-    start = np.datetime64(day, "D").astype("datetime64[ns]")
+    start = day.astype("datetime64[D]").astype("datetime64[ns]")
     rows: list[tuple[int, np.datetime64, dict[str, float]]] = []
     mean_motion = np.sqrt(sky.mu() / sky.a**3) + sky.delta_n
     for hour in range(25):
@@ -231,7 +231,7 @@ def ephemerides(sky: Constellation, day: np.datetime64) -> Ephemerides:
         satellites=sky.satellites[numbers],
         messages=np.where(gps, "LNAV", "FNAV"),
         toe=toe,
-        sent=toe - np.timedelta64(3600, "s"),
+        sent=np.asarray(toe - np.timedelta64(3600, "s"), dtype="datetime64[ns]"),
         healthy=np.ones(len(rows), dtype=bool),
         accuracy_m=np.where(gps, 2.0, 3.12),
         kepler=np.array([[f[name] for name in Ephemerides.KEPLER] for _, _, f in rows]),

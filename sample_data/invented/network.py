@@ -59,7 +59,7 @@ class Slip:
     """A cycle slip put in: from this epoch on, cycles on the first and on the second carrier.
 
     told    the file sets the loss-of-lock bit there
-    hidden  arcs are short there: "start" or "end" within five minutes of an arc's edge, "patch" within the patch, ""
+    where   "start" or "end": three to nine epochs from an arc's edge; "patch": a ray through the patch; "" elsewhere
     """
 
     receiver: str
@@ -509,7 +509,7 @@ def _arcs(
                 # Most receivers tell a new start; one in ten forgets after a short gap.
                 renewed[first, s] = not short or rng.random() < 0.9
             arcs[first : last + 1, s] = number
-            previous_end = last
+            previous_end = int(last)
     return arcs, renewed
 
 
@@ -547,7 +547,8 @@ def _slips(
         count = int(rng.binomial(len(stormy), min(1.0, 0.012 * interval_s / 30.0)))
         for e, s in stormy[rng.integers(0, len(stormy), count)]:
             taken.append((int(e), int(s), "patch"))
-    slips, used = [], set()
+    slips: list[Slip] = []
+    used: set[tuple[int, int]] = set()
     for e, s, where in taken:
         near = {(e + k, s) for k in range(-4, 5)}
         if used & near or not inside[e, s]:

@@ -156,7 +156,7 @@ class Ionosphere:
         rise = 1.0 - np.exp(-((np.maximum(height - 450.0, 0.0) / 700.0) ** 2))
         lon_here = np.arctan2(points_m[..., 1], points_m[..., 0])
         daily = 1.0 + 0.10 * np.cos(2 * np.pi * (hours - 15.0) / 24.0 + lon_here)
-        return self.scenario.plasmasphere * equator * foot * rise * daily
+        return np.asarray(self.scenario.plasmasphere * equator * foot * rise * daily)
 
     # ------------------------------------------------------------------------------------------------ integrals
 
@@ -216,7 +216,7 @@ class Ionosphere:
             at, stretch = points(r)
             x, y = weather.plane_km(at / r[..., None])
             total += self.patch.content(x[:, 0], y[:, 0], hours) * stretch[:, 0]
-        return total
+        return np.asarray(total)
 
     def vertical(
         self, lat: npt.ArrayLike, lon: npt.ArrayLike, hours: npt.ArrayLike, *, top_km: float = GPS_HEIGHT_KM,
@@ -254,4 +254,4 @@ class Ionosphere:
         x_km, y_km = weather.plane_of(lat, lon)
         total += self.front.content(x_km, y_km, hours)
         total += self.patch.content(x_km, y_km, hours)
-        return total
+        return np.asarray(total)

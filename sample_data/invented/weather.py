@@ -166,7 +166,7 @@ class Front:
         """Distance [km] of places on the plane from the wall, positive where it has not yet been."""
         heading = np.radians(self.scenario.front_heading_deg)
         along = east_km * np.sin(heading) + north_km * np.cos(heading)
-        return along - self.scenario.front_speed_m_s * 3.6 * (hours - self.scenario.front_hours)
+        return np.asarray(along - self.scenario.front_speed_m_s * 3.6 * (hours - self.scenario.front_hours))
 
     def content(self, east_km: Floats, north_km: Floats, hours: Floats) -> Floats:
         """Vertical content [TECU] of the plume at places on the plane: full ahead of the wall, none behind it."""
@@ -175,7 +175,7 @@ class Front:
         ahead = self.ahead_km(east_km, north_km, hours)
         reach = np.exp(-((np.maximum(ahead, 0.0) / PLUME_REACH_KM) ** 2))
         step = 0.5 * (1.0 + np.tanh(ahead / self.scale_km))
-        return self.scenario.front_jump_tecu * plume_of(hours) * step * reach
+        return np.asarray(self.scenario.front_jump_tecu * plume_of(hours) * step * reach)
 
     def at(self, time: np.datetime64) -> FrontNow | None:
         """The wall at a GPS time; None where there is none within 1000 km of the middle or it is spent."""
