@@ -134,6 +134,8 @@ def test_header_facts() -> None:
     assert reading.table.ionosphere == {  # type: ignore[union-attr]
         "GPSA": (4.6566e-09, 1.4901e-08, -5.9605e-08, -1.1921e-07), "GAL": (28.25, 0.0078125, 0.010071),
     }  # fmt: skip
+    odd = header(3.05, extra=(("   \x1c18", "LEAP SECONDS"), ("    \xb2\xb3", "LEAP SECONDS")))
+    assert rinex_nav.parse(odd.encode("latin-1"), "x").header["leap_seconds"] is None
     old = header(2.11, extra=(("    0.1118D-07 -0.7451D-08 -0.5961D-07  0.1192D-06", "ION ALPHA"),))
     assert table_of(old).ionosphere == {"GPSA": (0.1118e-07, -0.7451e-08, -0.5961e-07, 0.1192e-06)}
 
