@@ -153,8 +153,9 @@ def test_a_calm_network_blames_nobody(calm):
 def test_a_wall_over_the_network_blames_nobody():
     ramp = wall(200.0, 50.0, 150.0, 30.0, 2 * 3600)
     rays, samples = simulate(lambda x, y, t: quiet(x, y, t) + ramp(x, y, t), np.random.default_rng(64), hours=4.0)
-    found = irregularity.assess(rays, fronts.track(rays, samples))
-    assert faults.find(rays, samples, found, slopes.measure(rays, samples)) == ()
+    moving = fronts.track(rays, samples)
+    found = irregularity.assess(rays, moving)
+    assert faults.find(rays, samples, found, slopes.measure(rays, samples), moving) == ()
 
 
 def test_two_receivers_have_nobody_to_compare_with():

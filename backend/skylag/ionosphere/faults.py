@@ -10,7 +10,7 @@ import numpy as np
 
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.sightlines import lay_out, middle
-from skylag.tables import Bools, Fault, Floats, Ints, Patches, Rays, Samples, Slopes
+from skylag.tables import Bools, Fault, Floats, Fronts, Ints, Patches, Rays, Samples, Slopes
 
 WINDOW_S = 300.0
 
@@ -46,7 +46,12 @@ class FaultChoices:
 
 
 def find(
-    rays: Rays, samples: Samples, patches: Patches, slopes: Slopes | None = None, choices: FaultChoices | None = None
+    rays: Rays,
+    samples: Samples,
+    patches: Patches,
+    slopes: Slopes | None = None,
+    fronts: Fronts | None = None,
+    choices: FaultChoices | None = None,
 ) -> tuple[Fault, ...]:
     """Faults of a network day; none where fewer than three receivers leave nobody to compare with."""
     choices = choices or FaultChoices()
@@ -56,7 +61,7 @@ def find(
     ragged = _ragged_alone(patches, len(rays.receivers), choices)
     level, size = _level_alone(rays, samples, patches, choices)
     absent = _absent_alone(rays, patches, choices)
-    apart = _slopes_alone(slopes, patches, len(rays.receivers), choices)
+    apart = _slopes_alone(slopes, fronts, patches, len(rays.receivers), choices)
     x, y, z = np.array([receiver.position_m for receiver in rays.receivers]).T
     lat, lon = np.degrees(np.arctan2(z, np.hypot(x, y))), np.degrees(np.arctan2(y, x))
     faults = []
@@ -116,19 +121,40 @@ def _slip_storms(breaks: Ints, choices: FaultChoices) -> Bools:
     return np.asarray(own & (breaks > 0))
 
 
-def _slopes_alone(slopes: Slopes | None, patches: Patches, receivers: int, choices: FaultChoices) -> Bools:
-    """(B, R) windows where steep slopes to several neighbours or satellites all include one receiver."""
+def _slopes_alone(
+    slopes: Slopes | None, fronts: Fronts | None, patches: Patches, receivers: int, choices: FaultChoices
+) -> Bools:
+    """(B, R) windows where steep slopes to several neighbours, on several satellites, all include one receiver.
+
+    Slopes on lines of sight that a front is crossing blame nobody: it reaches an outer receiver alone at first.
+    """
     off = np.zeros((len(patches.times), receivers), dtype=bool)
     if slopes is None or len(slopes) == 0:
         return off
-    window = np.clip(np.searchsorted(patches.times, slopes.time, side="right") - 1, 0, len(patches.times) - 1)
-    pair = slopes.other >= 0
-    count = np.zeros((len(patches.times), receivers))
-    np.add.at(count, (window[pair], slopes.receiver[pair]), 1)
-    np.add.at(count, (window[pair], slopes.other[pair]), 1)
-    all_pairs = count.sum(axis=1, keepdims=True) / 2.0
+    pair = (slopes.other >= 0) & ~_crossed(slopes, fronts)
+    window = np.clip(np.searchsorted(patches.times, slopes.time[pair], side="right") - 1, 0, len(patches.times) - 1)
+    satellites = int(slopes.satellite.max()) + 1
+    count = np.zeros((len(patches.times), receivers, satellites))
+    np.add.at(count, (window, slopes.receiver[pair], slopes.satellite[pair]), 1)
+    np.add.at(count, (window, slopes.other[pair], slopes.satellite[pair]), 1)
+    total = count.sum(axis=2)
+    all_pairs = total.sum(axis=1, keepdims=True) / 2.0
     # A wall is between many receivers; whoever is in every pair of the window stands alone.
-    return np.asarray((count >= choices.alone_pairs) & (count >= 0.95 * all_pairs))
+    several = (count > 0).sum(axis=2) >= 2
+    return np.asarray(several & (total >= choices.alone_pairs) & (total >= 0.95 * all_pairs))
+
+
+def _crossed(slopes: Slopes, fronts: Fronts | None) -> Bools:
+    """Witnesses on a line of sight that belongs to a front, within half an hour of its crossing."""
+    crossed = np.zeros(len(slopes), dtype=bool)
+    if fronts is None:
+        return crossed
+    onsets = fronts.onsets.where(fronts.onsets.front >= 0)
+    near = np.timedelta64(1800, "s")
+    for receiver, satellite, time in zip(onsets.receiver, onsets.satellite, onsets.time, strict=True):
+        rows = (slopes.satellite == satellite) & ((slopes.receiver == receiver) | (slopes.other == receiver))
+        crossed |= rows & (np.abs(slopes.time - time) <= near)
+    return crossed
 
 
 def _absent_alone(rays: Rays, patches: Patches, choices: FaultChoices) -> Bools:

@@ -174,17 +174,20 @@ def _runs(
     line = starts // height
     clear = (lasting <= 420.0) & (peak_sharp > 20.0 * scatter[line])
     peak = np.where(clear, peak_sharp, np.where(lasting > 600.0, peak_slow, peak_fine))
+    # A run that begins or ends with its arc is cut: its middle is only the middle of what was seen.
+    known = np.vstack([np.isfinite(rates[2]), np.zeros((1, sign.shape[1]), dtype=bool)]).T.ravel()
+    cut = ~(known[np.maximum(starts - 1, 0)] & known[np.minimum(ends, len(known) - 1)])
     kept = (jump >= choices.least_jump_tecu) & (lasting >= 2 * lines.step_s)
     kept &= _dominant(line, when, toward, jump, choices)
-    line, when, toward, jump, peak, starts, ends = (
-        v[kept] for v in (line, when, toward, jump, peak, starts, ends)
-    )  # fmt: skip
+    line, when, toward, jump, peak, starts, ends, cut = (
+        v[kept] for v in (line, when, toward, jump, peak, starts, ends, cut)
+    )
     epoch = np.clip(np.rint(when / lines.step_s).astype(np.int64), 0, len(lines.times) - 1)
     place = _places(lines, rays, epoch, line, when)
     noise = scatter[line]
     # The middle of a run is not known better than to a tenth of its length: its feet drown in the background.
     spread = np.maximum(lines.step_s / np.sqrt(12.0), noise * 2.0 * lines.step_s / np.maximum(peak, 1e-9))
-    spread = np.hypot(spread, 0.1 * jump / np.maximum(peak, 1e-9))
+    spread = np.hypot(spread, np.where(cut, 0.5 * (ends - starts) * lines.step_s, 0.1 * jump / np.maximum(peak, 1e-9)))
     return Onsets(
         start=lines.times[np.minimum(starts % height, len(lines.times) - 1)],
         time=lines.times[0] + np.rint(when * 1e9).astype(np.int64).astype("timedelta64[ns]"),
@@ -421,7 +424,9 @@ def _polish(points: _Points, start: _Wall, choices: FrontChoices) -> _Wall | Non
         x, y = points.x + wall.height * points.lean_x, points.y + wall.height * points.lean_y
         away = wall.distance(points)
         sigma = np.hypot(points.place_sigma, max(abs(wall.speed), _PIERCE_KM_S) * points.time_sigma)
-        inside = np.abs(away) < 3.0 * sigma
+        # Cut or long runs have wide sigmas: they are weighed by them, but not let in from afar.
+        near = np.hypot(points.place_sigma, max(abs(wall.speed), _PIERCE_KM_S) * np.minimum(points.time_sigma, 120.0))
+        inside = np.abs(away) < 3.0 * near
         if inside.sum() < max(4, choices.fewest - 1):
             return None
         pull = np.minimum(1.0, 1.5 / np.maximum(np.abs(away / sigma), 1e-9))

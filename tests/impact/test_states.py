@@ -1,0 +1,194 @@
+"""States of places: limits, that unseen stays unseen, what a front and a patch reach, reasons, and few flags a day."""
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from tests.simulated.moving_wall import CENTRE, START, quiet, simulate, wall
+
+from skylag.impact import states
+from skylag.ionosphere import faults, fronts, irregularity, slopes
+from skylag.tables import (
+    BROKEN,
+    HOLDS,
+    STRAINED,
+    UNSEEN,
+    Fields,
+    Fronts,
+    Patch,
+    Patches,
+    Region,
+    Site,
+    Thresholds,
+)
+
+LATS, LONS = np.arange(-43.0, -35.9, 0.5), np.arange(141.0, 150.1, 0.5)
+REGION = Region(
+    "strait", -43, -36, 141, 150, sites=(Site("middle", *CENTRE), Site("north", -37.0, 145.5), Site("away", 10.0, 20.0))
+)
+
+
+def flat_fields(hours=4.0, slope=1.0, sigma=0.5, vtec_sigma=1.0, support=5):
+    times = START + np.arange(int(hours * 12)) * np.timedelta64(300, "s")
+    shape = (len(times), len(LATS), len(LONS))
+
+    def full(value):
+        return np.full(shape, value, dtype=np.float32)
+
+    return Fields(
+        times, LATS, LONS, vtec=full(15.0), vtec_sigma=full(vtec_sigma),
+        support=np.full(shape, support, dtype=np.uint16), slope=full(slope), slope_sigma=full(sigma), slope_east=full(slope), slope_north=full(0.0),
+        state=np.zeros(shape, dtype=np.uint8),
+    )  # fmt: skip
+
+
+def nothing():
+    none = irregularity.Patches(
+        (), np.zeros(0, "datetime64[ns]"), *(np.zeros(0, np.int64),) * 2, *(np.zeros((0, 0)),) * 4,
+        *(np.zeros((0, 0), np.int64),) * 2,
+    )  # fmt: skip
+    empty = {name: np.zeros(0) for name in slopes.Slopes.COLUMNS}
+    return slopes.Slopes(**empty, claims=(), summary={}), Fronts((), fronts._no_onsets()), none
+
+
+def some_patch(**changes):
+    ragged = Patch(
+        start=START + np.timedelta64(60, "m"), end=START + np.timedelta64(120, "m"), lat=-39.0, lon=145.5,
+        radius_km=80.0, index_highest=0.8, index_median=0.6, windows=12, receivers=("RX01", "RX02"), satellites=("G05", "E11"), slips=3,
+        losses=1, planar=(80.0, 55.0), drift_m_s=np.nan, drift_sigma_m_s=np.nan, drift_heading_deg=np.nan,
+        confirmed=True, window_time=np.zeros(0, "datetime64[ns]"), window_lat=np.zeros(0), window_lon=np.zeros(0),
+    )  # fmt: skip
+    return replace(ragged, **changes)
+
+
+def test_defaults_are_the_published_limits(evidence):
+    limits = Thresholds()
+    evidence("strained from [mm/km]", source="I95, class 'very strong': Wanninger 2004, ION GNSS, 2849-2854",
+             expected=8.0, got=limits.strained_mm_per_km, tolerance=0, unit="mm/km")  # fmt: skip
+    evidence("broken from [mm/km]", source="largest broadcast vertical gradient sigma, 255 x 0.1 mm/km: ICAO Annex 10",
+             expected=25.5, got=limits.broken_mm_per_km, tolerance=0, unit="mm/km")  # fmt: skip
+    cycle_m = 299_792_458.0 / 1575.42e6
+    evidence("half a cycle over 10 km as a slope", source="references 9 (95.1 mm over 10 km)", expected=9.51,
+             got=cycle_m / 2 * 1000 / 10, tolerance=0.01, unit="mm/km")  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    ("slope", "sigma", "state"),
+    [(2, 1, HOLDS), (8.5, 1, HOLDS), (9.5, 1, STRAINED), (26, 1, STRAINED), (27, 1, BROKEN), (np.nan, 1, UNSEEN),
+     (30, 25, HOLDS), (5, np.nan, UNSEEN)],
+)  # fmt: skip
+def test_a_slope_counts_beyond_its_sigma(slope, sigma, state):
+    assert states.state_of_slope(np.array(slope), np.array(sigma), Thresholds()) == state
+
+
+@given(st.floats(0, 100), st.floats(0, 20), st.floats(1, 30), st.floats(0.1, 30))
+def test_a_higher_limit_never_worsens_a_state(slope, sigma, limit, more):
+    low = Thresholds(strained_mm_per_km=limit, broken_mm_per_km=limit + 10)
+    high = Thresholds(strained_mm_per_km=limit + more, broken_mm_per_km=limit + 10 + more)
+    assert states.state_of_slope(slope, sigma, high) <= states.state_of_slope(slope, sigma, low)
+
+
+@pytest.mark.parametrize(
+    "changes",
+    [{"support": 0}, {"vtec_sigma": 12.0}, {"slope": np.nan}, {"sigma": np.nan}],
+    ids=["no ray", "sigma too wide", "no slope", "no sigma"],
+)
+def test_unseen_is_never_told_as_good(changes):
+    judged = states.judge(flat_fields(**changes), *nothing(), REGION)
+    assert (judged.fields.state == UNSEEN).all()
+    assert (judged.site_states == UNSEEN).all()
+    assert all(reason for reasons in judged.site_reasons for reason in reasons)
+
+
+def test_a_calm_map_holds_and_needs_no_reason():
+    judged = states.judge(flat_fields(), *nothing(), REGION)
+    assert (judged.fields.state == HOLDS).all()
+    assert judged.flags == ()
+    assert judged.site_states[:, :2].min() == judged.site_states[:, :2].max() == HOLDS
+    assert set(judged.site_reasons[0]) == {""}
+    assert (judged.site_states[:, 2] == UNSEEN).all()
+    assert set(judged.site_reasons[2]) == {"outside the map: nothing can be said"}
+
+
+def test_a_steep_stretch_of_map_is_one_unconfirmed_flag():
+    fields = flat_fields()
+    fields.slope[6:12, 4:7, 5:8] = 20.0
+    judged = states.judge(fields, *nothing(), REGION)
+    assert len(judged.flags) == 1
+    flag = judged.flags[0]
+    assert (flag.kind, flag.state, flag.confirmed) == ("slope", "strained", False)
+    assert flag.start == fields.times[6] and flag.end == fields.times[12]
+    assert "unconfirmed" in flag.evidence
+    assert (judged.fields.state[6:12, 4:7, 5:8] == STRAINED).all()
+
+
+@pytest.fixture(scope="module")
+def stormy():
+    ramp = wall(120.0, 60.0, 180.0, 320.0, 2 * 3600)
+    rays, samples = simulate(lambda x, y, t: quiet(x, y, t) + ramp(x, y, t), np.random.default_rng(71), hours=4.0)
+    fields = flat_fields(support=0)  # a map that sees nothing: only the witnesses speak
+    steep = slopes.measure(rays, samples, fields)
+    moving = fronts.track(rays, samples, steep)
+    ragged = irregularity.assess(rays, moving, None, samples)
+    found = faults.find(rays, samples, ragged, steep, moving)
+    told = fronts.arrivals(moving, rays, REGION.sites)
+    return fields, steep, moving, ragged, found, told
+
+
+def test_a_front_breaks_what_it_passes_even_where_the_map_is_blind(stormy):
+    fields, steep, moving, ragged, found, told = stormy
+    judged = states.judge(fields, steep, moving, ragged, REGION, found, told)
+    at = int(np.argmin(np.abs(fields.times - (START + np.timedelta64(2, "h")))))
+    assert judged.site_states[at, 0] == BROKEN
+    assert "mm/km" in judged.site_reasons[0][at] and "receivers" in judged.site_reasons[0][at]
+    early = int(np.argmin(np.abs(fields.times - (START + np.timedelta64(60, "m")))))
+    assert judged.site_states[early, 0] == UNSEEN  # nothing there yet, and the map sees nothing
+    assert not (judged.fields.state == HOLDS).any()
+
+
+def test_a_day_has_few_flags_and_the_front_is_one_with_a_track(stormy):
+    _, steep, moving, ragged, found, told = stormy
+    judged = states.judge(flat_fields(), steep, moving, ragged, REGION, found, told)
+    assert 1 <= len(judged.flags) < 20
+    front = [flag for flag in judged.flags if flag.kind == "front"]
+    assert len(front) == 1
+    assert front[0].state == "broken" and front[0].confirmed
+    assert front[0].speed_m_s == pytest.approx(180, rel=0.05)
+    assert abs(front[0].heading_deg - 320) < 3
+    assert front[0].slope_mm_per_km == pytest.approx(120, abs=4 * front[0].sigma_mm_per_km + 5)
+    times = [point[0] for point in front[0].track]
+    assert len(times) > 5 and times == sorted(times)
+    assert "came true" in front[0].evidence and "satellites agree" in front[0].evidence
+    assert not [flag for flag in judged.flags if flag.kind in ("irregular", "fault")]
+
+
+def test_a_patch_strains_its_place_and_span():
+    steep, moving, none = nothing()
+    ragged = Patches((some_patch(),), *(getattr(none, name) for name in list(Patches.__dataclass_fields__)[1:]))
+    judged = states.judge(flat_fields(), steep, moving, ragged, REGION)
+    lat, lon = int(np.argmin(np.abs(LATS + 39.0))), int(np.argmin(np.abs(LONS - 145.5)))
+    assert set(np.flatnonzero(judged.fields.state[:, lat, lon] == STRAINED)) == set(range(12, 24))
+    assert (judged.fields.state[:, 0, 0] == HOLDS).all()
+    flag = judged.flags[0]
+    assert (flag.kind, flag.state) == ("irregular", "strained")
+    assert "planar fit fails" in flag.evidence and "3 broken arcs" in flag.evidence
+    strong = replace(ragged, patches=(some_patch(index_highest=1.4),))
+    assert states.judge(flat_fields(), steep, moving, strong, REGION).flags[0].state == "broken"
+
+
+def test_what_one_receiver_says_changes_no_state():
+    steep, moving, none = nothing()
+    alone = Patches((some_patch(confirmed=False),), *(getattr(none, n) for n in list(Patches.__dataclass_fields__)[1:]))
+    judged = states.judge(flat_fields(), steep, moving, alone, REGION)
+    assert (judged.fields.state == HOLDS).all()
+    assert judged.flags[0].confirmed is False and "unconfirmed" in judged.flags[0].evidence
+
+
+def test_next_hour_names_the_sites(stormy):
+    moving = stormy[2]
+    soon = states.next_arrivals(moving, REGION, START + np.timedelta64(100, "m"))
+    assert [arrival.place for arrival in soon][:1] == ["middle"]
+    assert abs((soon[0].expected - START) / np.timedelta64(1, "s") - 7200) < 120
+    assert soon[0].sigma_s > 0
