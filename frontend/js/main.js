@@ -87,9 +87,12 @@ function firstTime(day) {
   return day.times[nearest(day.times, wish)];
 }
 
-/** The first place to read when the link names none: the first site, else the middle of the region. */
-function firstPlace(day) {
-  const site = day.sites[0];
+/** The first place to read when the link names none: the worst site at that time, else the middle of the region. */
+function firstPlace(day, siteStates, time) {
+  const rank = { broken: 3, strained: 2, holds: 1, unseen: 0 };
+  const worth = (number) => rank[siteStates.stateOf(number, time)] ?? 0;
+  const [number] = day.sites.map((_site, i) => i).sort((a, b) => worth(b) - worth(a));
+  const site = day.sites[number];
   const { south, north, west, east } = day.region;
   return site ? [site.lat, site.lon] : [Number(((south + north) / 2).toFixed(3)), Number(((west + east) / 2).toFixed(3))];
 }
@@ -133,7 +136,7 @@ async function loadDay() {
     settling = true;
     scene = { view, day: found, time, fields: null, index: 0, siteStates, series: null, rays: [], coast: sameRegion ? scene.coast : [], theme: masthead.theme };
     state.change(
-      { minute: Math.round((time - found.start) / 60000), place: view.place ?? /** @type {[number, number]} */ (firstPlace(found)) },
+      { minute: Math.round((time - found.start) / 60000), place: view.place ?? /** @type {[number, number]} */ (firstPlace(found, siteStates, time)) },
       { step: "none" },
     );
     settling = false;

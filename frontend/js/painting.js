@@ -214,11 +214,38 @@ function markers(ctx, trace, p) {
   ctx.globalAlpha = 1;
 }
 
+/** @typedef {{left: number, right: number, top: number, bottom: number}} Box */
+
+/**
+ * Room for a name beside its sign: below, above, right, left; null where each lies on something else.
+ * @param {number} width @param {number} size @param {number} x @param {number} y @param {Projection} p @param {Box[]} taken
+ * @returns {Box|null}
+ */
+export function freeSpot(width, size, x, y, p, taken) {
+  const clamp = (left) => Math.min(p.right - width - 3, Math.max(p.left + 3, left));
+  const away = size * 0.95;
+  const corners = [
+    [clamp(x - width / 2), y + away],
+    [clamp(x - width / 2), y - away - size],
+    [x + away, y - size / 2],
+    [x - away - width, y - size / 2],
+  ];
+  for (const [left, top] of corners) {
+    const box = { left, right: left + width, top, bottom: top + size };
+    const inside = box.left >= p.left && box.right <= p.right && box.top >= p.top && box.bottom <= p.bottom;
+    if (inside && !taken.some((o) => box.left < o.right && o.left < box.right && box.top < o.bottom && o.top < box.bottom)) return box;
+  }
+  return null;
+}
+
 /** Words with a rim of paper; "<b>" for bold, leading "<br>" for lines to go down. */
 function words(ctx, trace, p, family) {
   ctx.textAlign = "center";
   const { size } = trace.textfont;
-  /** @type {{left: number, right: number, top: number}[]} */ const taken = [];
+  /** @type {Box[]} */
+  const taken = trace.meta?.apart
+    ? trace.x.map((lon, i) => ({ left: p.x(lon) - size * 0.8, right: p.x(lon) + size * 0.8, top: p.y(trace.y[i]) - size * 0.75, bottom: p.y(trace.y[i]) + size * 0.75 }))
+    : [];
   for (let i = 0; i < trace.x.length; i++) {
     const bold = trace.text[i].includes("<b>");
     const down = (trace.text[i].match(/<br>/g) ?? []).length;
@@ -226,14 +253,13 @@ function words(ctx, trace, p, family) {
     ctx.font = `${bold ? 700 : 400} ${size}px ${family}`;
     const below = trace.textposition === "bottom center";
     ctx.textBaseline = below ? "top" : "middle";
-    const y = p.y(trace.y[i]) + down * size * 1.25 + (below ? 2 : 0.5);
+    let y = p.y(trace.y[i]) + down * size * 1.25 + (below ? 2 : 0.5);
     let x = p.x(trace.x[i]);
     if (trace.meta?.apart) {
-      const half = ctx.measureText(text).width / 2;
-      x = Math.min(p.right - half - 3, Math.max(p.left + half + 3, x));
-      const box = { left: x - half, right: x + half, top: y };
-      if (taken.some((other) => box.left < other.right && other.left < box.right && Math.abs(box.top - other.top) < size * 1.1)) continue;
-      taken.push(box);
+      const spot = freeSpot(ctx.measureText(text).width, size, p.x(trace.x[i]), p.y(trace.y[i]), p, taken);
+      if (!spot) continue;
+      taken.push(spot);
+      [x, y] = [(spot.left + spot.right) / 2, spot.top];
     }
     if (trace.meta?.rim) {
       ctx.strokeStyle = trace.meta.rim;

@@ -45,9 +45,11 @@ export const WORDS = {
   offline: "The page cannot reach the service on this machine. Is it still running?",
   strangeAnswer: "The service gave an answer this page does not understand",
   tryAgain: "Try again",
+  notConfirmed: "Not confirmed.",
   allHold: "Corrections hold at every site.",
-  /** @param {number} count */
-  andMore: (count) => (count === 1 ? "And one more site." : `And ${count} more sites.`),
+  /** @param {string[]} names */
+  also: (names) =>
+    names.length < 4 ? `Not good either: ${names.join(", ")}.` : `Not good either: ${names.slice(0, 2).join(", ")} and ${names.length - 2} more sites.`,
   /** @param {number} minutes */
   stripHelp: (minutes) => `Drag, or use the arrow keys: ${minutes} minutes a step, with shift an hour, Home and End for the ends.`,
   sigma: "± is one standard deviation.",
@@ -119,6 +121,9 @@ export function compass(heading) {
 /** @param {string} zone  IANA name */
 export function zoneName(zone) {
   if (!zone || zone === "UTC" || zone === "Etc/UTC") return "UTC";
+  // In these names the sign counts westward: Etc/GMT-10 is ten hours ahead of UTC.
+  const fixedZone = /^Etc\/GMT([+-])(\d+)$/.exec(zone);
+  if (fixedZone) return `UTC${fixedZone[1] === "-" ? "+" : MINUS}${fixedZone[2]}`;
   return `${zone.split("/").pop()?.replaceAll("_", " ")} time`;
 }
 
@@ -166,6 +171,20 @@ export function dayText(day) {
  */
 export function timeText(ms, { clock = "utc", zone = "UTC" } = {}) {
   return clock === "local" && zone !== "UTC" ? `${hourText(ms, zone)} ${zoneName(zone)}` : `${hourText(ms)} UTC`;
+}
+
+/**
+ * A span within a day, its clock named once: "05:20 – 08:15 UTC"; the end of the day is 24:00.
+ * @param {number} start
+ * @param {number} end
+ * @param {{clock?: "utc"|"local", zone?: string}} [how]
+ */
+export function spanText(start, end, { clock = "utc", zone = "UTC" } = {}) {
+  const local = clock === "local" && zone !== "UTC";
+  const [from, to] = [start, end].map((ms) => hourText(ms, local ? zone : "UTC"));
+  const name = local ? zoneName(zone) : "UTC";
+  if (end - start < 60000) return `${from} ${name}`;
+  return `${from} – ${to === "00:00" ? "24:00" : to} ${name}`;
 }
 
 /**
@@ -233,6 +252,12 @@ export function siteSentence(site, state, reason) {
 export function asSentence(reason) {
   const text = reason.trim().replace(/[.\s]+$/, "");
   return text ? `${text[0].toUpperCase()}${text.slice(1)}.` : "";
+}
+
+/** Who saw a flag; one that stands alone says so first. @param {{evidence: string, confirmed: boolean}} flag */
+export function evidenceText({ evidence, confirmed }) {
+  const said = asSentence(evidence);
+  return confirmed || /^unconfirmed|^not confirmed/i.test(said) ? said : `${WORDS.notConfirmed} ${said}`;
 }
 
 /** @param {string} text @param {number} most  characters */

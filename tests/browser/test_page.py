@@ -24,12 +24,12 @@ def _service(server: str, path: str) -> Any:
 
 
 def test_first_visit_shows_map_reading_and_flags(visit: Open) -> None:
-    """Without a link: the newest day, at the middle of its worst flag, read at the first site."""
+    """Without a link: the newest day, at the middle of its worst flag, read at the worst site."""
     v = visit().go()
     assert v.text("#region-name") == "Strait of trials"
     assert "06:00 UTC · 16:00 Hobart time" in v.text("#chart-time")
     assert v.page.get_attribute("#map", "data-flags") == "front"
-    assert v.text(".lead").startswith("Corrections hold here")
+    assert v.text(".lead").startswith("Corrections are strained here")  # the worst site at that time
     assert "Planning aid, not for navigation" in v.text(".caution")
     assert "Simulated data" in v.text("#simulated")
     assert v.page.locator("#flag-table tbody tr").count() == 3

@@ -9,7 +9,7 @@ import { aspectOf, bareWarnings, frameOf, heightOf, mapFigure } from "../../fron
 import { bandOutline, seriesFigure } from "../../frontend/js/figures/series.js";
 import { front, gradations, offset, placeAt, scaleBarKm, widthKm } from "../../frontend/js/figures/signs.js";
 import { keyStep, nearest, runs, stripFigure } from "../../frontend/js/figures/strip.js";
-import { projection } from "../../frontend/js/painting.js";
+import { freeSpot, projection } from "../../frontend/js/painting.js";
 import { unpack } from "../../frontend/js/api.js";
 
 const DAY = Date.UTC(2031, 4, 11);
@@ -285,4 +285,18 @@ test("arrays as the service packs them: little-endian, whatever the machine", ()
 test("rows of a layer are taken at the time asked for", () => {
   const { lats, lons, layers } = fixture();
   assert.ok(Math.abs(rowsOf(layers.delay, 1, lats.length, lons.length)[0][0] - 2.2) < 1e-6);
+});
+
+test("names find a free spot beside their sign, or are left out", () => {
+  const p = { left: 0, right: 200, top: 0, bottom: 100 };
+  const below = freeSpot(40, 10, 100, 50, p, []);
+  assert.ok(below.top > 50 && (below.left + below.right) / 2 === 100);
+  const above = freeSpot(40, 10, 100, 50, p, [below]);
+  assert.ok(above.bottom < 50);
+  const right = freeSpot(40, 10, 100, 50, p, [below, above]);
+  assert.ok(right.left > 100);
+  const left = freeSpot(40, 10, 100, 50, p, [below, above, right]);
+  assert.ok(left.right < 100);
+  assert.equal(freeSpot(40, 10, 100, 50, p, [below, above, right, left]), null);
+  assert.ok(freeSpot(40, 10, 198, 50, p, []).right <= 200, "inside the frame");
 });

@@ -90,3 +90,23 @@ test("reasons become sentences, long names are shortened", () => {
   assert.equal(words.shortened("Very long named place number 4", 12), "Very long n…");
   assert.equal(words.shortened("Northport", 12), "Northport");
 });
+
+test("spans name their clock once; the end of the day is 24:00", () => {
+  const at = (h, m) => Date.UTC(2031, 2, 12, h, m) - 18000;
+  assert.equal(words.spanText(at(5, 20), at(8, 15)), "05:20 – 08:15 UTC");
+  assert.equal(words.spanText(at(0, 0), at(24, 0)), "00:00 – 24:00 UTC");
+  assert.equal(words.spanText(at(9, 30), at(9, 30)), "09:30 UTC");
+  assert.equal(words.spanText(at(5, 20), at(8, 15), { clock: "local", zone: "Etc/GMT-10" }), "15:20 – 18:15 UTC+10");
+});
+
+test("zones named by hours alone turn their sign", () => {
+  assert.equal(words.zoneName("Etc/GMT-10"), "UTC+10");
+  assert.equal(words.zoneName("Etc/GMT+3"), `UTC${MINUS}3`);
+  assert.equal(words.zoneName("Australia/Hobart"), "Hobart time");
+});
+
+test("evidence that stands alone says so once", () => {
+  assert.equal(words.evidenceText({ evidence: "unconfirmed: one satellite", confirmed: false }), "Unconfirmed: one satellite.");
+  assert.equal(words.evidenceText({ evidence: "only HULL sees it", confirmed: false }), "Not confirmed. Only HULL sees it.");
+  assert.equal(words.evidenceText({ evidence: "three agree.", confirmed: true }), "Three agree.");
+});

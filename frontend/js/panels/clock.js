@@ -90,7 +90,12 @@ export class ClockPanel {
   #drawStrip(rows, width) {
     const { day } = this.#scene;
     const { strip, names } = this.#elements;
-    const rowHeight = rows.length > 8 ? 18 : 22;
+    const rowHeight = rows.length > 8 ? 16 : 22;
+    // The names take the room they need, and the map leaves the strip its room on the first screen.
+    const longest = Math.max(...rows.map((row) => row.name.length));
+    const root = document.documentElement.style;
+    root.setProperty("--names", `${Math.min(13, Math.max(6.5, 0.46 * longest + 0.6)).toFixed(1)}rem`);
+    root.setProperty("--strip", `${Math.min(240, rows.length * (rowHeight + 3))}px`);
     names.style.setProperty("--row", `${rowHeight}px`);
     const figure = stripFigure({ rows, times: day.times, flags: day.flags, width, rowHeight, zone: day.region.timezone });
     this.#figure = figure;
@@ -205,7 +210,7 @@ export class ClockPanel {
       const said = siteStates.rows.map((row, number) => ({ name: row.name, state: siteStates.stateOf(number, time), reason: siteStates.reasonOf(number, time) }));
       const worst = said.filter((site) => site.state !== "holds").sort((a, b) => rank[b.state] - rank[a.state]);
       const words = worst.length
-        ? worst.slice(0, 2).map((site) => siteSentence(site.name, site.state, site.reason)).join(" ") + (worst.length > 2 ? ` ${WORDS.andMore(worst.length - 2)}` : "")
+        ? siteSentence(worst[0].name, worst[0].state, worst[0].reason) + (worst.length > 1 ? ` ${WORDS.also(worst.slice(1).map((site) => site.name))}` : "")
         : WORDS.allHold;
       if (this.#elements.reason.textContent !== words) this.#elements.reason.textContent = words;
     }, 200);

@@ -2,7 +2,7 @@
  * The reading of the chosen place: the sentence first, the numbers second, the evidence under "why".
  */
 
-import { asSentence, bothClocks, compass, countText, flagSentence, KIND_WORDS, latText, limitsSentence, lonText, placeText, timeText, withSigma, WORDS } from "../words.js";
+import { asSentence, bothClocks, compass, countText, evidenceText, flagSentence, KIND_WORDS, latText, limitsSentence, lonText, placeText, spanText, withSigma, WORDS } from "../words.js";
 import { make, stateWord, trouble, viewOf } from "./parts.js";
 
 export class ReadingPanel {
@@ -84,14 +84,16 @@ export class ReadingPanel {
 
   #why(reading, reason, day, view) {
     const list = make("ul");
-    if (reason) list.append(make("li", {}, make("p", { text: asSentence(reason) })));
+    // The reason of a site often repeats a flag that follows with all its evidence.
+    const repeated = reading.flags.some((flag) => flag.evidence.slice(0, 40) === reason.slice(0, 40));
+    if (reason && !repeated) list.append(make("li", {}, make("p", { text: asSentence(reason) })));
     for (const flag of reading.flags) {
       const how = { clock: view.clock, zone: day.region.timezone };
       const distance = Number.isFinite(flag.distanceKm) ? `, ${Math.round(flag.distanceKm)} km away` : "";
       list.append(
         make("li", {},
-          make("p", {}, make("strong", { text: flagSentence(flag) }), `${distance}, ${timeText(flag.start, how)} to ${timeText(flag.end, how)}.`),
-          make("p", { text: flag.evidence }),
+          make("p", {}, make("strong", { text: flagSentence(flag) }), `${distance}, ${spanText(flag.start, flag.end, how)}.`),
+          make("p", { text: evidenceText(flag) }),
           make("button", { type: "button", class: "linklike", text: `Go to this ${KIND_WORDS[flag.kind]?.short ?? "flag"}`, click: () => this.#state.change(viewOf(tracked(flag, day), day)) }),
         ),
       );
