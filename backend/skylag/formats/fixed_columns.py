@@ -26,6 +26,8 @@ def _word(value: int) -> np.uint64:
 
 
 _SPACES = _word(0x20 * _EACH)
+_FIGURES = _word(0x0F * _EACH)
+_ONE_BYTE = np.uint64(8)
 _LOW_SIX = _word(0x0000FFFFFFFFFFFF)
 _SIX_SPACES = _word(0x0000202020202020)
 # Masks that keep the first n characters of a word, n from 0 to 8.
@@ -62,85 +64,117 @@ def observations(text: Bytes, at: Ints, room: Ints) -> tuple[Floats, Bytes, Ints
     returns  values (N,), NaN where blank, absent, zero or odd; digits (N,) uint8, 0 where blank; row numbers of fields
              that hold something that is not a number, or a number cut off by the end of the line
     """
-    shortest = int(room.min()) if len(room) else FIELD
-    if shortest >= FIELD:
-        rows = None
-        pair = _stretches(text, at)
-    else:
+    count, rows = len(at), None
+    if len(room) and int(room.min()) < FIELD:
         rows = np.flatnonzero(room > 0)
-        pair = _stretches(text, at[rows])
-        # What lies behind the end of the line belongs to the next line: blank it.
-        left = np.minimum(room[rows], FIELD)
-        keep = _KEEP[np.minimum(left, 8)]
-        pair[:, 0] = (pair[:, 0] & keep) | (_SPACES & ~keep)
-        keep = _KEEP[np.maximum(left - 8, 0)]
-        pair[:, 1] = (pair[:, 1] & keep) | (_SPACES & ~keep)
+        at, room = at[rows], room[rows]
+    pair = _stretches(text, at)
     high, low = np.ascontiguousarray(pair[:, 0]), np.ascontiguousarray(pair[:, 1])
+    if rows is not None:
+        # What lies behind the end of the line belongs to the next line: blank it.
+        partial = np.flatnonzero(room < FIELD)
+        keep = _KEEP[np.minimum(room[partial], 8)]
+        high[partial] = (high[partial] & keep) | (_SPACES & ~keep)
+        keep = _KEEP[np.maximum(room[partial] - 8, 0)]
+        low[partial] = (low[partial] & keep) | (_SPACES & ~keep)
     number, good = _number(high, low)
     indicator = (low >> np.uint64(48)).astype(np.uint8)  # the low byte of the word that is left
     indicator -= np.uint8(0x30)
     plain = indicator < 8
     odd_rows: Ints = np.empty(0, dtype=np.int64)
-    if not good.all():
-        blank = (high == _SPACES) & ((low & _LOW_SIX) == _SIX_SPACES)
-        number[~good] = np.nan
-        rest = np.flatnonzero(~good & ~blank)
+    bad = np.flatnonzero(~good)
+    if len(bad):
+        number[bad] = np.nan
+        rest = bad[(high[bad] != _SPACES) | ((low[bad] & _LOW_SIX) != _SIX_SPACES)]  # not blank
         if len(rest):
             number[rest], odd = _unusual(high[rest], low[rest])
             odd_rows = rest[odd]
-    if not plain.all():
-        strange = ~plain & (indicator != np.uint8(0xF0))  # a blank is 0x20 - 0x30
-        if strange.any():
-            odd_rows = np.union1d(odd_rows, np.flatnonzero(strange))
-        indicator[~plain] = 0
+    strange = np.flatnonzero(~plain)
+    if len(strange):
+        strange = strange[indicator[strange] != np.uint8(0xF0)]  # a blank is 0x20 - 0x30
+        odd_rows = np.union1d(odd_rows, strange) if len(strange) else odd_rows
+        indicator *= plain
+    number[number == 0.0] = np.nan  # RINEX 2.11, table A2: a missing observation is blank or 0.0
     if rows is None:
-        values, digits = number, indicator
-    else:
-        cut = np.flatnonzero((left < 14) & np.isfinite(number))
-        if len(cut):
-            number[cut] = np.nan
-            odd_rows = np.union1d(odd_rows, cut)
-        values = np.full(len(at), np.nan)
-        digits = np.zeros(len(at), dtype=np.uint8)
-        values[rows] = number
-        digits[rows] = indicator
-        odd_rows = rows[odd_rows]
-    values[values == 0.0] = np.nan  # RINEX 2.11, table A2: a missing observation is blank or 0.0
-    return values, digits, odd_rows
+        return number, indicator, odd_rows
+    cut = partial[(room[partial] < 14) & np.isfinite(number[partial])]
+    if len(cut):
+        number[cut] = np.nan
+        odd_rows = np.union1d(odd_rows, cut)
+    values = np.full(count, np.nan)
+    digits = np.zeros(count, dtype=np.uint8)
+    values[rows] = number
+    digits[rows] = indicator
+    return values, digits, rows[odd_rows]
 
 
 def _number(high: Words64, low: Words64) -> tuple[Floats, npt.NDArray[np.bool_]]:
     """F14.3 without a sign, from its words; False where the characters are anything else than blanks and digits."""
-    bit, ones = _word(0x01 * _EACH), np.uint64(8)
     # The five digits of the second word, dot left out, as the last five of eight: "000" + two units + three decimals.
-    tail = (
-        ((low & _word(0xFFFF)) << np.uint64(24))
-        | ((low << np.uint64(16)) & _word(0xFFFFFF0000000000))
-        | _word(0x303030)
-    )  # fmt: skip
-    digit_high, digit_tail = (high >> np.uint64(4)) & bit, (tail >> np.uint64(4)) & bit
-    wrong = (high & _word(0xE0 * _EACH)) ^ _SPACES  # each byte must lie in 0x20..0x3f
-    wrong |= (tail & _word(0xE0 * _EACH)) ^ _SPACES
-    wrong |= ((digit_high ^ bit) * np.uint64(15)) & high  # no digit: must be a blank
-    wrong |= ((digit_tail ^ bit) * np.uint64(15)) & tail
-    figures_high, figures_tail = high & _word(0x0F * _EACH), tail & _word(0x0F * _EACH)
-    wrong |= (figures_high + _word(0x06 * _EACH)) & _word(0x10 * _EACH)  # 0x3a..0x3f are no digits
-    wrong |= (figures_tail + _word(0x06 * _EACH)) & _word(0x10 * _EACH)
-    # Blanks lead: behind a digit comes a digit, also from word to word.
-    wrong |= digit_high & ~(digit_high >> ones) & _word(0x0001010101010101)
-    wrong |= (digit_high >> np.uint64(56)) & ~(digit_tail >> np.uint64(24))
-    wrong |= digit_tail & ~(digit_tail >> ones) & _word(0x0001010101000000)
-    wrong |= ~digit_tail & _word(0x0101010000000000)  # three decimals
-    wrong |= (low & _word(0xFF0000)) ^ _word(0x2E0000)  # the dot
-    total = _eight(figures_high) * np.uint64(100_000) + _eight(figures_tail)
+    tail = low & _word(0xFFFF)
+    tail <<= np.uint64(24)
+    other = low << np.uint64(16)
+    other &= _word(0xFFFFFF0000000000)
+    tail |= other
+    tail |= _word(0x303030)
+    np.bitwise_and(low, _word(0xFF0000), out=other)
+    wrong = other ^ _word(0x2E0000)  # the dot
+    digit_high = _checked(high, wrong)
+    digit_tail = _checked(tail, wrong)
+    # Blanks lead: behind a digit comes a digit, also from word to word, and three decimals are there.
+    np.right_shift(digit_high, _ONE_BYTE, out=other)
+    np.invert(other, out=other)
+    other &= digit_high
+    other &= _word(0x0001010101010101)
+    wrong |= other
+    digit_high >>= np.uint64(56)
+    np.right_shift(digit_tail, np.uint64(24), out=other)
+    np.invert(other, out=other)
+    other &= digit_high
+    wrong |= other
+    np.right_shift(digit_tail, _ONE_BYTE, out=other)
+    np.invert(other, out=other)
+    other &= digit_tail
+    other &= _word(0x0001010101000000)
+    wrong |= other
+    np.invert(digit_tail, out=digit_tail)
+    digit_tail &= _word(0x0101010000000000)
+    wrong |= digit_tail
+    total = _eight(high & _FIGURES)
+    total *= np.uint64(100_000)
+    total += _eight(tail & _FIGURES)
     return total / 1000.0, wrong == 0
 
 
+def _checked(word: Words64, wrong: Words64) -> Words64:
+    """1 in each byte that is a digit; `wrong` gets bits where a byte is neither a digit nor a blank."""
+    digit = word >> np.uint64(4)
+    digit &= _word(_EACH)
+    part = word & _word(0xE0 * _EACH)  # each byte must lie in 0x20..0x3f
+    part ^= _SPACES
+    wrong |= part
+    np.bitwise_xor(digit, _word(_EACH), out=part)  # no digit: must be a blank
+    part *= np.uint64(15)
+    part &= word
+    wrong |= part
+    np.bitwise_and(word, _FIGURES, out=part)  # 0x3a..0x3f are no digits
+    part += _word(0x06 * _EACH)
+    part &= _word(0x10 * _EACH)
+    wrong |= part
+    return digit
+
+
 def _eight(figures: Words64) -> Words64:
-    """The number whose eight decimal figures are the bytes of each word, first figure in the lowest byte."""
-    pairs = ((figures * np.uint64(2561)) >> np.uint64(8)) & _word(0x00FF00FF00FF00FF)
-    fours = ((pairs * np.uint64(6553601)) >> np.uint64(16)) & _word(0x0000FFFF0000FFFF)
-    return (fours * np.uint64(42949672960001)) >> np.uint64(32)
+    """The number whose eight decimal figures are the bytes of each word, the first in the lowest; uses the words up."""
+    figures *= np.uint64(2561)  # in place from here on: pairs, fours, eight
+    figures >>= np.uint64(8)
+    figures &= _word(0x00FF00FF00FF00FF)
+    figures *= np.uint64(6553601)
+    figures >>= np.uint64(16)
+    figures &= _word(0x0000FFFF0000FFFF)
+    figures *= np.uint64(42949672960001)
+    figures >>= np.uint64(32)
+    return figures
 
 
 def _unusual(high: Words64, low: Words64) -> tuple[Floats, npt.NDArray[np.bool_]]:

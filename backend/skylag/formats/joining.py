@@ -16,8 +16,9 @@ _SAME_SHARE = 0.1
 
 
 def kept_when_thinned(times: Times, spacing_s: float) -> Ints:
-    """Which epochs stay, ascending: of each multiple of the spacing the nearest epoch, if within a tenth of it.
+    """Which epochs stay, ascending: of each multiple of the spacing the nearest epoch.
 
+    It must lie within a tenth of the spacing and within three tenths of the usual step from epoch to epoch.
     Multiples are counted from midnight of GPS time, or from the first epoch where hardly any epoch lies on those (a
     file kept in another time system).  Raises Refused for a spacing that is not positive.
     """
@@ -31,6 +32,8 @@ def kept_when_thinned(times: Times, spacing_s: float) -> Ints:
     step = round(spacing_s * 1e9)
     elapsed = (times - times[0].astype("datetime64[D]").astype("datetime64[ns]")).astype(np.int64)
     reach = step // 10
+    if len(times) > 1:  # among dense epochs only the one at the multiple will do, not its neighbour
+        reach = min(reach, int(0.3 * float(np.median(np.diff(elapsed)))))
 
     def on_multiples(phase: int) -> Ints:
         number = np.floor_divide(elapsed - phase + step // 2, step)

@@ -264,13 +264,11 @@ def _satellites(text: Text, lines: Ints, column: Ints, blank: int = 0) -> Ints:
     """
     at = text.begin[lines] + column
     inside = at + 2 < text.end[lines]
-    at = np.where(inside, at, 0)
-    letter = text.data[at].astype(np.int64)
+    name = fixed_columns.windows(text.data, 3)[np.where(inside, at, 0)].view(np.uint8).reshape(-1, 3).astype(np.int64)
+    letter, tens, units = name[:, 0], name[:, 1], name[:, 2] - 0x30
     if blank:
         letter = np.where(letter == 0x20, blank, letter)
-    tens, units = text.data[at + 1].astype(np.int64), text.data[at + 2].astype(np.int64)
     tens = np.where(tens == 0x20, 0x30, tens) - 0x30
-    units = units - 0x30
     number = tens * 10 + units
     good = inside & (_SYSTEM_NUMBER[letter] > 0) & (number > 0)
     good &= (tens >= 0) & (tens <= 9) & (units >= 0) & (units <= 9)

@@ -372,9 +372,7 @@ def _sweep(
     block = max(_FIELDS_AT_ONCE // len(columns), 1)
     for first in range(0, len(chosen), block):
         pick = chosen[first : first + block]
-        line = rows.line[pick][:, None] + further
-        at = text.begin[np.minimum(line, len(text.begin) - 1)] + offset
-        room = np.where(line < len(text.begin), text.end[np.minimum(line, len(text.begin) - 1)] - at, 0)
+        at, room, line = _fields(text, rows.line[pick], further, offset)
         values, digits, odd = fixed_columns.observations(text.data, at.reshape(-1), room.reshape(-1))
         listed = odd[: max(MOST_PROBLEMS - len(problems), 0)]
         if len(listed) < len(odd):
@@ -383,7 +381,7 @@ def _sweep(
             row, j = divmod(int(k), len(columns))
             where = int(at[row, j])
             said = text.raw[where : where + min(fixed_columns.FIELD, int(room[row, j]))].decode("latin-1")
-            problems.note(int(line[row, j]) + 1, f"{codes[columns[j]]} is no number: {said!r}")
+            problems.note(int(line[row] + further[j]) + 1, f"{codes[columns[j]]} is no number: {said!r}")
         into, valued = rows.flat[pick], rows.valued[pick[0]]
         found, marks = values.reshape(at.shape), digits.reshape(at.shape)
         for j, k in enumerate(columns):
@@ -402,6 +400,21 @@ def _sweep(
             if code in codes[:k]:  # two columns of one meaning: the second fills what the first left
                 column = np.where(np.isnan(target[into]), column, target[into])
             target[into] = column
+
+
+def _fields(text: Text, line: Ints, further: Ints, offset: Ints) -> tuple[Ints, Ints, Ints]:
+    """Where the fields of records begin and how much of their line is left there (records, columns), and the lines.
+
+    further, offset   (columns,) lines below the record's first, and characters from the line's beginning
+    """
+    if not further.any():
+        begin = text.begin[line]
+        return begin[:, None] + offset, (text.end[line] - begin)[:, None] - offset, line
+    where = line[:, None] + further
+    inside = where < len(text.begin)
+    where = np.where(inside, where, 0)
+    at = text.begin[where] + offset
+    return at, np.where(inside, text.end[where] - at, 0), line
 
 
 def _is_wanted(letter: str, code: str, wanted: Mapping[str, Collection[str]] | None) -> bool:
