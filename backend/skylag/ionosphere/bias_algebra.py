@@ -101,7 +101,8 @@ def _shortest(edges: dict[str, dict[str, tuple[float, float]]], first: str, last
 def from_group_delays(ephemerides: Ephemerides) -> Biases:
     """Satellite biases told by broadcast group delays, the latest healthy record of each satellite.
 
-    GPS, QZSS   C1W-C2W, C1C-C2L and C1C-C2X: (1 - gamma) T_GD (IS-GPS-200 20.3.3.3.3.2; IS-QZSS-PNT)
+    GPS         C1W-C2W: (1 - gamma) T_GD (IS-GPS-200 20.3.3.3.3.2)
+    QZSS        C1C-C2L and C1C-C2X, likewise (IS-QZSS-PNT; from memory, not met with data here)
     Galileo     C1C-C5Q, C1X-C5X from BGD(E1,E5a), C1C-C7Q, C1X-C7X from BGD(E1,E5b) (Galileo OS SIS ICD 5.1.5)
     BeiDou      C2I-C6I: TGD1; C2I-C7I: TGD1 - TGD2 (BDS-SIS-ICD B1I 5.2.4.10)
     Pilot and combined codes share one broadcast value, so their sigma is what such values are good for.  The level of a
