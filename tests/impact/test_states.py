@@ -39,8 +39,8 @@ def flat_fields(hours=4.0, slope=1.0, sigma=0.5, vtec_sigma=1.0, support=5):
 
     return Fields(
         times, LATS, LONS, vtec=full(15.0), vtec_sigma=full(vtec_sigma),
-        support=np.full(shape, support, dtype=np.uint16), slope=full(slope), slope_sigma=full(sigma), slope_east=full(slope), slope_north=full(0.0),
-        state=np.zeros(shape, dtype=np.uint8),
+        support=np.full(shape, support, dtype=np.uint16), slope=full(slope), slope_sigma=full(sigma),
+        slope_east=full(slope), slope_north=full(0.0), state=np.zeros(shape, dtype=np.uint8),
     )  # fmt: skip
 
 
@@ -56,8 +56,8 @@ def nothing():
 def some_patch(**changes):
     ragged = Patch(
         start=START + np.timedelta64(60, "m"), end=START + np.timedelta64(120, "m"), lat=-39.0, lon=145.5,
-        radius_km=80.0, index_highest=0.8, index_median=0.6, windows=12, receivers=("RX01", "RX02"), satellites=("G05", "E11"), slips=3,
-        losses=1, planar=(80.0, 55.0), drift_m_s=np.nan, drift_sigma_m_s=np.nan, drift_heading_deg=np.nan,
+        radius_km=80.0, index_highest=0.8, index_median=0.6, windows=12, receivers=("RX01", "RX02"),
+        satellites=("G05", "E11"), slips=3, losses=1, planar=(80.0, 55.0), drift_m_s=np.nan, drift_sigma_m_s=np.nan, drift_heading_deg=np.nan,
         confirmed=True, window_time=np.zeros(0, "datetime64[ns]"), window_lat=np.zeros(0), window_lon=np.zeros(0),
     )  # fmt: skip
     return replace(ragged, **changes)
