@@ -58,7 +58,8 @@ def some_patch(**changes):
         start=START + np.timedelta64(60, "m"), end=START + np.timedelta64(120, "m"), lat=-39.0, lon=145.5,
         radius_km=80.0, index_highest=0.8, index_median=0.6, windows=12, receivers=("RX01", "RX02"),
         satellites=("G05", "E11"), slips=3, losses=1, planar=(80.0, 55.0),
-        drift_m_s=np.nan, drift_sigma_m_s=np.nan, drift_heading_deg=np.nan, confirmed=True, window_time=np.zeros(0, "datetime64[ns]"), window_lat=np.zeros(0), window_lon=np.zeros(0),
+        drift_m_s=np.nan, drift_sigma_m_s=np.nan, drift_heading_deg=np.nan, confirmed=True,
+        window_time=np.zeros(0, "datetime64[ns]"), window_lat=np.zeros(0), window_lon=np.zeros(0),
     )  # fmt: skip
     return replace(ragged, **changes)
 
