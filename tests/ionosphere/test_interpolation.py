@@ -1,4 +1,6 @@
-"""Content between the nodes and epochs of maps: a worked case, laws, edges."""
+"""Content between the nodes and epochs of maps: a worked case, laws, edges, and real stations."""
+
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -6,9 +8,12 @@ from hypothesis import given
 from hypothesis import strategies as st
 from tests.conftest import Evidence
 
+from skylag import formats
+from skylag.constants import L1_HZ, L2_HZ, REFRACTION_M3_S2, SPEED_OF_LIGHT_M_S, TECU, WGS84_F
 from skylag.errors import NotEnough
+from skylag.ionosphere import arcs, bias_algebra, geometry, orbits, pairs
 from skylag.ionosphere.interpolation import vertical_at
-from skylag.tables import Fields
+from skylag.tables import Fields, Reading, Signals
 
 START = np.datetime64("2024-03-30", "ns")
 
@@ -111,3 +116,77 @@ def test_one_map_serves_its_own_time_only() -> None:
     none = maps(np.empty((0, 2, 9)), WORKED.lats, WORKED.lons)
     with pytest.raises(NotEnough):
         vertical_at(none, 47.5, 10, START)
+
+
+# ------------------------------------------------------------------------------------------------ a station and a map
+
+
+def content_minus_map(
+    open_data: Path, observations: str, orbit_files: str, satellite_biases: str, map_file: str, receiver: str
+) -> tuple[np.ndarray, np.ndarray]:
+    """Measured vertical content of GPS rays above 20 degrees and the map's at their pierce points.
+
+    Nothing is fitted: levelled phases, published biases of satellites and receiver, the shell height of the map.
+    """
+
+    def read(pattern: str) -> list[Reading]:
+        return [formats.read(path) for path in sorted(open_data.glob(pattern))]
+
+    signals, tables = read(observations)[0].table, [reading.table for reading in read(orbit_files)]
+    published = read(map_file)[0]
+    known = bias_algebra.join([*(reading.table for reading in read(satellite_biases)), published.header["biases"]])
+    assert isinstance(signals, Signals)
+    assert isinstance(published.table, Fields)
+    chosen, _ = pairs.choose(signals)
+    position = orbits.seen_from(tables, chosen.satellites, chosen.times, signals.receiver.position_m)
+    elevation, _ = geometry.look(signals.receiver.position_m, position)
+    rays = geometry.place(arcs.cut(chosen, None, elevation), position, 450e3, 20.0)
+    rays = rays.where(np.char.startswith(rays.satellites, "G")[rays.satellite])
+    pair = chosen.pairs["G"]
+    when = chosen.times[len(chosen.times) // 2]
+    own = bias_algebra.pair_bias(known, "receiver", receiver, "G", *RECEIVER_CODES[receiver], when)
+    assert own is not None
+    of_satellite = {
+        str(name): bias_algebra.pair_bias(known, "satellite", str(name), "G", pair.code1, pair.code2, when)
+        for name in rays.satellites
+    }
+    bias_ns = np.array([(of_satellite[str(name)] or (np.nan,))[0] for name in rays.satellites])[rays.satellite] + own[0]
+    per_tecu_m = REFRACTION_M3_S2 * TECU * (1 / L2_HZ**2 - 1 / L1_HZ**2)
+    measured = (rays.stec + SPEED_OF_LIGHT_M_S * 1e-9 * bias_ns / per_tecu_m) / rays.mapping
+    geocentric = np.degrees(np.arctan((1 - WGS84_F) ** 2 * np.tan(np.radians(rays.pierce_lat))))
+    told, _ = vertical_at(published.table, geocentric, rays.pierce_lon, rays.time)
+    both = np.isfinite(measured) & np.isfinite(told)
+    return measured[both], told[both]
+
+
+# The pair a published receiver bias belongs to, as its file says.
+RECEIVER_CODES = {"ZIMM": ("C1W", "C2W"), "KIRU": ("C1W", "C2W")}
+
+
+@pytest.mark.open_data
+@pytest.mark.parametrize(
+    ("receiver", "files", "rows"),
+    [
+        (
+            "ZIMM",
+            ("2015-235/obs/ZIMM2350*", "2015-235/sp3/*", "2015-235/bias/P1*08.DCB", "2015-235/ionex/*"),
+            15_000,
+        ),
+        (
+            "KIRU",
+            ("2024-090/obs/KIRU*", "2024-090/sp3/*", "2024-090/bias/*", "2024-090/ionex/*"),
+            800,
+        ),
+    ],
+)
+def test_a_station_against_the_map_of_its_day(
+    open_data: Path, evidence: Evidence, receiver: str, files: tuple[str, str, str, str], rows: int
+) -> None:
+    measured, told = content_minus_map(open_data, *files, receiver)
+    assert len(measured) > rows
+    apart = measured - told
+    source = "CODE map of the same day, with CODE biases; such maps are good to 1 to 2.5 TECU (handbook 12)"
+    evidence(f"median of vertical content at {receiver} minus map", source=source, unit="TECU", expected=0.0,
+             got=float(np.median(apart)), tolerance=1.0)  # fmt: skip
+    evidence(f"scatter of vertical content at {receiver} minus map", source=source, unit="TECU", expected=2.5,
+             got=float(np.std(apart)), tolerance=0, at_most=True)  # fmt: skip
