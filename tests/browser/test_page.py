@@ -244,6 +244,18 @@ def test_all_by_keyboard(visit: Open) -> None:
     assert "outside the region" in v.text("#place-error")
 
 
+def test_targets_are_large_enough(visit: Open) -> None:
+    """Buttons, lists and fields are at least 24 pixels high (WCAG 2.2, 2.5.8); links within text are exempt there."""
+    v = visit(width=360, height=780).go(f"{STORM}&time=05:30")
+    v.page.click("#legend details:has(input) summary")
+    small = v.page.evaluate(
+        """() => [...document.querySelectorAll("button:not(.linklike), select, summary, label:has(input), input[type=range]")]
+          .filter((e) => e.offsetParent && e.getBoundingClientRect().height < 24)
+          .map((e) => `${e.tagName} ${e.id} ${e.textContent.trim().slice(0, 30)} ${e.getBoundingClientRect().height}`)"""
+    )
+    assert small == []
+
+
 def test_what_can_be_taken_away(visit: Open) -> None:
     """Flags as CSV and GeoJSON, the map as a picture."""
     v = visit(accept_downloads=True).go(f"{STORM}&time=05:30")

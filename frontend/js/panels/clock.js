@@ -90,7 +90,7 @@ export class ClockPanel {
   #drawStrip(rows, width) {
     const { day } = this.#scene;
     const { strip, names } = this.#elements;
-    const rowHeight = rows.length > 8 ? 16 : 22;
+    const rowHeight = 21; // and 3 between: a name is a target of 24 pixels
     // The names take the room they need, and the map leaves the strip its room on the first screen.
     const longest = Math.max(...rows.map((row) => row.name.length));
     const root = document.documentElement.style;
