@@ -82,14 +82,21 @@ def test_every_wrapper(wrapper: str, compact: bool, version: float, tmp_path: Pa
     assert same(signals(reading), signals(formats.read(plain)))
 
 
-@pytest.mark.parametrize("wrapper", ["gz", "bz2", "zip"])
-def test_a_wrapper_cut_short_gives_what_it_held(wrapper: str, tmp_path: Path, rng: np.random.Generator) -> None:
-    text = simple(satellites=[f"G{n:02d}" for n in range(1, 11)], epochs=900)
+@pytest.fixture(scope="module")
+def noisy_text() -> bytes:
+    """Two megabytes that do not pack well: bzip2 works in blocks of nearly one."""
+    rng = np.random.default_rng(20310510)
+    text = simple(satellites=[f"G{n:02d}" for n in range(1, 11)], epochs=2400)
     for epoch in text.epochs:
         for name, cells in epoch.satellites.items():
             noise = np.round(rng.uniform(2e7, 3e7, len(cells)), 3)
             epoch.satellites[name] = [(float(value), None, None) for value in noise]
-    packed = WRAPPERS[wrapper](write(text))
+    return write(text)
+
+
+@pytest.mark.parametrize("wrapper", ["gz", "bz2", "zip"])
+def test_a_wrapper_cut_short_gives_what_it_held(wrapper: str, tmp_path: Path, noisy_text: bytes) -> None:
+    packed = WRAPPERS[wrapper](noisy_text)
     place = tmp_path / "cut"
     place.write_bytes(packed[: len(packed) * 2 // 3])
     if wrapper == "zip":  # its list of contents is at the end
@@ -97,7 +104,7 @@ def test_a_wrapper_cut_short_gives_what_it_held(wrapper: str, tmp_path: Path, rn
             formats.read(place)
         return
     reading = formats.read(place)
-    assert 100 < len(signals(reading).times) < 700
+    assert 1000 < len(signals(reading).times) < 1700
     assert "cut short" in reading.problems[0].what
 
 
