@@ -194,8 +194,9 @@ def _tell_day(products: Products) -> None:
     counts = products.origin.counts
     fields = products.fields
     print(
-        f"{products.day} {products.region.name}: {counts['receivers']} receivers, {counts['rays']} lines of sight, "
-        f"{counts['arcs']} arcs ({counts['slips']} began with a slip), {counts['maps']} maps"
+        f"{products.day} {products.region.name}: receivers {counts['receivers']}, "
+        f"lines of sight {counts['rays']}, arcs {counts['arcs']} ({counts['slips']} began with a slip), "
+        f"maps {counts['maps']}"
     )
     seen = fields.state > 0
     if seen.any():

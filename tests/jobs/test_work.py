@@ -1,0 +1,170 @@
+"""Units of work: sorting inputs, bad files named while the rest goes on, a day from files to products."""
+
+import shutil
+from collections.abc import Iterator
+from concurrent.futures import Executor, ThreadPoolExecutor
+from datetime import date
+from pathlib import Path
+
+import hatanaka
+import numpy as np
+import pytest
+
+from skylag.errors import FormatError, NotEnough
+from skylag.jobs import work
+from skylag.tables import UNSEEN
+
+DAY = "2031-03-11"
+
+
+@pytest.fixture(scope="module")
+def executor() -> Iterator[Executor]:
+    with ThreadPoolExecutor(2) as pool:
+        yield pool
+
+
+def files(sample_folder: Path, *markers: str, day: str = DAY) -> list[Path]:
+    return [next((sample_folder / day).glob(f"{marker}*")) for marker in markers]
+
+
+def cut_text(path: Path, share: float) -> bytes:
+    text = hatanaka.decompress(path.read_bytes())
+    return text[: int(len(text) * share)]
+
+
+@pytest.fixture(scope="module")
+def messy(sample_folder: Path, tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A folder as people bring it: good files, and one of each kind of bad file."""
+    folder = tmp_path_factory.mktemp("messy")
+    for path in files(sample_folder, "MRGT", "TARN"):
+        shutil.copy(path, folder)
+    shutil.copy(files(sample_folder, "MRGT")[0], folder / "copy of MRGT.crx.gz")
+    shutil.copy(files(sample_folder, "VANP", day="2031-03-12")[0], folder)
+    (folder / "letter.rnx").write_text("Dear surveyor,\nthe files follow tomorrow.\n")
+    (folder / "empty.31o").write_bytes(b"")
+    (folder / "region.toml").write_text("[region]\n")
+    kelm = files(sample_folder, "KELM")[0]
+    (folder / "KELM00XBS_R_20310700000_01D_30S_MO.rnx").write_bytes(cut_text(kelm, 0.3))
+    return folder
+
+
+@pytest.fixture(scope="module")
+def result(messy: Path, executor: Executor) -> work.DayResult:
+    return work.network_day([messy], executor=executor, simulated=True)
+
+
+def test_every_bad_file_is_named_with_its_reason(result: work.DayResult, messy: Path) -> None:
+    reasons = {Path(item.path).name: str(item) for item in result.left_out}
+    assert set(reasons) == {
+        "letter.rnx", "empty.31o", "VANP00XBS_R_20310710000_01D_30S_MO.crx.gz", "MRGT00XBS_R_20310700000_01D_30S_MO.crx.gz",
+    } or set(reasons) == {
+        "letter.rnx", "empty.31o", "VANP00XBS_R_20310710000_01D_30S_MO.crx.gz", "copy of MRGT.crx.gz",
+    }  # fmt: skip
+    assert "letter.rnx:1:" in reasons["letter.rnx"]
+    assert "Dear surveyor" in reasons["letter.rnx"]
+    assert "is empty" in reasons["empty.31o"]
+    assert "another day (2031-03-12, not 2031-03-11)" in reasons["VANP00XBS_R_20310710000_01D_30S_MO.crx.gz"]
+    twin = reasons.get("copy of MRGT.crx.gz") or reasons["MRGT00XBS_R_20310700000_01D_30S_MO.crx.gz"]
+    assert "is the same file as" in twin
+    assert str(messy) in reasons["empty.31o"]
+
+
+def test_the_rest_goes_on(result: work.DayResult) -> None:
+    """The whole receiver and the part of the one cut short are both in the result, and the cut has its line."""
+    names = [receiver.name for receiver in result.products.receivers]
+    assert names == ["KELM00XBS", "MRGT00XBS"]
+    cut = [problem for problem in result.problems if "KELM" in problem.path]
+    assert cut
+    assert all(problem.line > 0 for problem in cut)
+
+
+def test_origin_tells_every_input_and_its_use(result: work.DayResult) -> None:
+    inputs = {item["name"]: item for item in result.products.origin.inputs}
+    assert inputs["letter.rnx"]["used"] is False
+    assert inputs["letter.rnx"]["why_not"]
+    used = [item for item in inputs.values() if item["used"]]
+    assert all(len(item["sha256"]) == 64 and item["bytes"] > 0 for item in used)
+    assert {item["kind"] for item in used} == {"observations", "navigation"}
+    assert set(result.products.origin.timings_s) >= {"look", "receivers", "biases", "maps", "slopes", "fronts", "states"}
+
+
+def test_few_receivers_say_what_they_cannot_know(result: work.DayResult) -> None:
+    said = " ".join(result.products.origin.warnings)
+    assert "three receivers" in said
+    assert "zero" in said
+
+
+def test_unseen_is_where_nobody_looked(result: work.DayResult) -> None:
+    fields = result.products.fields
+    assert np.all(fields.state[fields.support == 0] == UNSEEN)
+
+
+def test_one_receiver_alone_works_and_says_so(sample_folder: Path, executor: Executor) -> None:
+    made = work.network_day(files(sample_folder, "MRGT", "TARN"), executor=executor, simulated=True)
+    assert not made.left_out
+    assert any("One receiver alone (MRGT00XBS)" in warning for warning in made.products.origin.warnings)
+    assert 0.2 < np.mean(made.products.fields.state == UNSEEN) < 0.95
+    assert not [flag for flag in made.products.flags if flag.kind in ("front", "irregular") and flag.confirmed]
+
+
+def test_files_found_under_other_names_and_a_chosen_day(
+    sample_folder: Path, tmp_path: Path, executor: Executor
+) -> None:
+    """Short names, pieces of a day, and plain text: what counts is inside."""
+    whole = hatanaka.decompress(files(sample_folder, "MRGT")[0].read_bytes())
+    head, rest = whole.split(b"END OF HEADER", 1)
+    epochs = rest.split(b"\n> ")
+    start = head + b"END OF HEADER" + epochs[0] + b"\n> "
+    half = len(epochs) // 2
+    (tmp_path / "mrgt070a.31o").write_bytes(start + b"\n> ".join(epochs[1:half]) + b"\n")
+    (tmp_path / "mrgt070m.31o").write_bytes(start + b"\n> ".join(epochs[half - 5 :]))
+    shutil.copy(files(sample_folder, "TARN")[0], tmp_path / "nav.gz")
+    shutil.copy(files(sample_folder, "VANP", day="2031-03-12")[0], tmp_path)
+    made = work.network_day([tmp_path], day=date(2031, 3, 11), executor=executor)
+    (facts,) = made.products.origin.counts["by_receiver"]
+    assert facts["receiver"] == "MRGT00XBS"
+    assert facts["epochs"] == 2880
+
+
+def test_without_orbits_there_is_no_result(sample_folder: Path, executor: Executor) -> None:
+    with pytest.raises(NotEnough, match="no usable navigation or SP3 file"):
+        work.network_day(files(sample_folder, "MRGT"), executor=executor)
+
+
+def test_orbits_of_another_day_leave_the_receiver_out(sample_folder: Path, executor: Executor) -> None:
+    paths = [*files(sample_folder, "MRGT"), *files(sample_folder, "TARN", day="2031-03-13")]
+    with pytest.raises(NotEnough, match=r"no arc .* with known\s+orbits") as caught:
+        work.network_day(paths, executor=executor)
+    assert "MRGT00XBS" in str(caught.value)
+
+
+def test_no_observation_at_all(messy: Path, executor: Executor) -> None:
+    with pytest.raises(NotEnough, match="no observation file") as caught:
+        work.network_day([messy / "letter.rnx"], executor=executor)
+    assert "letter.rnx" in str(caught.value)
+
+
+def test_a_path_that_is_not_there(tmp_path: Path, executor: Executor) -> None:
+    with pytest.raises(FormatError, match="no such file or folder"):
+        work.network_day([tmp_path / "nowhere"], executor=executor)
+
+
+def test_a_day_none_of_the_files_is_of(sample_folder: Path, executor: Executor) -> None:
+    with pytest.raises(NotEnough, match="no receiver of 2031-03-14 can be used") as caught:
+        work.network_day(files(sample_folder, "MRGT", "TARN"), day=date(2031, 3, 14), executor=executor)
+    assert "another day" in str(caught.value)
+
+
+@pytest.mark.parametrize(
+    ("name", "key"),
+    [
+        ("ESBC00DNK_R_20201770000_01D_30S_MO.crx.gz", "ESBC00DNK"),
+        ("delf0010.21d.gz", "DELF"),
+        ("ZIMM2350.15O.gz", "ZIMM"),
+        ("mrgt070a.31o", "MRGT"),
+        ("mrgt070a15.31o", "MRGT"),
+        ("whatever.txt", "whatever.txt"),
+    ],
+)
+def test_the_receiver_is_told_by_the_name(name: str, key: str) -> None:
+    assert work._station_key(Path(name)) == key
