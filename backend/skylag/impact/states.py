@@ -120,7 +120,7 @@ def judge(
     flags = [
         *(_front_flag(front, limits, number, arrivals) for number, front in enumerate(fronts.fronts)),
         *(_patch_flag(patch, limits) for patch in patches.patches),
-        *_claim_flags(slopes, fronts, patches, limits, choices),
+        *_claim_flags(slopes, fronts, patches, faults, limits, choices),
         *_field_flags(fields, by_field, explained, slopes, choices),
         *(_fault_flag(fault) for fault in faults),
     ]
@@ -398,13 +398,13 @@ def _fault_flag(fault: Fault) -> Flag:
 
 
 def _claim_flags(
-    slopes: Slopes, fronts: Fronts, patches: Patches, limits: Thresholds, choices: JudgeChoices
+    slopes: Slopes, fronts: Fronts, patches: Patches, faults: Sequence[Fault], limits: Thresholds, choices: JudgeChoices
 ) -> list[Flag]:
-    """Slopes between receivers that no front or patch explains; of the unconfirmed the steepest few."""
+    """Slopes that no front, patch or receiver at fault explains; of the unconfirmed the steepest few."""
     flags: list[Flag] = []
     doubtful: list[Flag] = []
     for claim in slopes.claims:
-        if _mostly_explained(claim, fronts, patches, choices):
+        if _mostly_explained(claim, fronts, patches, choices) or _by_fault(claim, faults):
             continue
         state = int(state_of_slope(np.array(claim.slope), np.array(claim.sigma), limits, choices.sigmas))
         flag = Flag(
@@ -415,6 +415,15 @@ def _claim_flags(
         (flags if claim.confirmed else doubtful).append(flag)
     doubtful.sort(key=lambda flag: -flag.slope_mm_per_km)
     return flags + doubtful[: choices.most_unconfirmed]
+
+
+def _by_fault(claim: SlopeClaim, faults: Sequence[Fault]) -> bool:
+    """Whether an unconfirmed claim is what a receiver at fault says within the span of its fault."""
+    return not claim.confirmed and any(
+        fault.receiver in claim.receivers and fault.start <= claim.end and claim.start <= fault.end
+        and fault.end - fault.start < np.timedelta64(6, "h")
+        for fault in faults
+    )  # fmt: skip
 
 
 def _mostly_explained(claim: SlopeClaim, fronts: Fronts, patches: Patches, choices: JudgeChoices) -> bool:
