@@ -19,7 +19,7 @@ from tests.properties.rinex_text import Text, labelled, simple, write
 from skylag import formats
 from skylag.errors import FormatError, NotEnough, Refused
 from skylag.formats import PARSERS, kind_of, wrappers
-from skylag.tables import Reading, Signals
+from skylag.tables import Biases, Ephemerides, PreciseOrbits, Reading, Signals
 
 
 def zipped(data: bytes, *names: str) -> bytes:
@@ -207,6 +207,17 @@ def test_every_real_file_is_of_its_folder(open_data: Path) -> None:
             assert kind_of(data) == folders[path.parent.name], path
             seen.add(path.parent.name)
     assert seen == set(folders)
+
+
+def test_every_real_file_comes_in_by_this_door(open_data: Path) -> None:
+    """Whatever is no observation: those have tests of their own."""
+    tables = {"navigation": Ephemerides, "orbits": PreciseOrbits, "biases": Biases}
+    met = set()
+    for path in [*open_data.glob("*/nav/*"), *open_data.glob("*/sp3/*"), *open_data.glob("*/bias/*")]:
+        reading = formats.read(path)
+        met.add(reading.header["kind"])
+        assert isinstance(reading.table, tables[reading.header["kind"]]), path
+    assert met == set(tables)
 
 
 def test_what_is_no_known_format_is_refused(tmp_path: Path) -> None:

@@ -1,6 +1,7 @@
 """RINEX observation text to tables: what each rule of the format asks, and what real files do instead."""
 
 import pickle
+import time
 from typing import Any
 
 import numpy as np
@@ -509,6 +510,19 @@ def test_files_laid_end_to_end_are_read_through(version: float) -> None:
     assert "header lines outside an event" in said(reading)
 
 
+@pytest.mark.parametrize("version", [2.11, 3.04])
+def test_a_comment_between_all_epochs_costs_no_time_to_speak_of(version: float) -> None:
+    text = simple(version, satellites=["G05"], epochs=1500, step_s=1.0)
+    comment = [labelled("AND YET ANOTHER", "COMMENT")]
+    lines = header(text) + [line for epoch in text.epochs for line in [*comment, *epoch_lines(text, epoch)]]
+    begin = time.process_time()
+    reading = read(joined(lines))
+    assert time.process_time() - begin < 2.0
+    assert isinstance(reading.table, Signals)
+    assert len(reading.table.times) == 1500
+    assert not reading.problems, said(reading)
+
+
 def test_more_than_sixty_satellites_in_an_epoch() -> None:
     names = [f"{s}{n:02d}" for s in "GREC" for n in range(1, 25)]
     types = {s: ["C1C", "L1C"] for s in "GREC"}
@@ -615,10 +629,10 @@ def test_a_file_cut_at_any_byte_gives_what_was_there(version: float) -> None:
         assert isinstance(table, Signals)
         assert set(table.times) <= set(whole.times)
         for code, values in table.values.items():
-            for k, time in enumerate(table.times):
+            for k, instant in enumerate(table.times):
                 for j, name in enumerate(table.satellites):
                     if np.isfinite(values[k, j]):
-                        epoch = int(np.flatnonzero(whole.times == time)[0])
+                        epoch = int(np.flatnonzero(whole.times == instant)[0])
                         assert values[k, j] == at(whole, code, epoch, str(name)), (end, code, name)
     assert body < first_value
 

@@ -140,6 +140,15 @@ class _Course:
         if flag == 3:
             self.moving = False
 
+    def outside_events(self, numbers: Ints) -> bool:
+        """Header lines that stand where none may; False where they are comments only and change nothing."""
+        if all(rinex_header.label_of(self.text.line(int(k))) == "COMMENT" for k in numbers):
+            return False
+        self.problems.note(int(numbers[0]) + 1, "header lines outside an event", "taken as said from there on")
+        for first, last in zip(_runs(numbers), _run_ends(numbers), strict=True):
+            self.change(int(first), int(last))
+        return True
+
     @property
     def current(self) -> int:
         """The number of the state that holds now."""
@@ -208,11 +217,8 @@ def layout_3(text: Text, body: int, header: Header, problems: Problems) -> Layou
             stop = run_end[place]
             stray = [m for m in range(place, min(stop, place + LONGEST_HEADER)) if _stray(text, body + m)]
             if stray:
-                course.change(body + stray[0], body + stray[-1] + 1)
-                changes.append((int(behind[place]) + 1, course.current, course.usable()))
-                if any(rinex_header.label_of(text.line(body + m)) != "COMMENT" for m in stray):
-                    problems.note(body + place + 1, "header lines outside an event", "taken as said from there on",
-                                  kind="header lines outside an event")  # fmt: skip
+                if course.outside_events(np.array(stray) + body):
+                    changes.append((int(behind[place]) + 1, course.current, course.usable()))
             elif text.raw[text.begin[body + place] : text.end[body + stop - 1]].strip():
                 problems.note(
                     body + place + 1,
@@ -464,16 +470,7 @@ def _skip_to(
     states = len(course.states)
     stray = [k for k in range(place, min(stop, place + LONGEST_HEADER)) if _stray(text, body + k)]
     if stray:
-        course.change(body + stray[0], body + stray[-1] + 1) if not quiet else _take_each(course, body, stray)
-        if any(rinex_header.label_of(text.line(body + k)) != "COMMENT" for k in stray):
-            problems.note(body + place + 1, "header lines outside an event", "taken as said from there on",
-                          kind="header lines outside an event")  # fmt: skip
+        course.outside_events(np.array(stray) + body)
     elif not quiet and text.raw[text.begin[body + place] : text.end[body + stop - 1]].strip():
         problems.note(body + place + 1, f"{stop - place} lines belong to no epoch", kind="lines of no epoch")
     return len(course.states) > states
-
-
-def _take_each(course: _Course, body: int, stray: list[int]) -> None:
-    numbers = np.array(stray, dtype=np.int64)
-    for first, last in zip(_runs(numbers), _run_ends(numbers), strict=True):
-        course.change(body + int(first), body + int(last))
