@@ -221,6 +221,21 @@ def test_what_is_missing_is_named_with_the_nearest(archive: Archive, storm: Prod
         archive.flags(NAME, "yesterday")
 
 
+@pytest.mark.parametrize("region", ["", "a\x00b", "\ud800", "x" * 300, "a/b"])
+def test_names_no_database_takes_are_missing(archive: Archive, storm: Products, region: str) -> None:
+    archive.save(storm)
+    assert archive.days(region) == ()
+    with pytest.raises(Missing, match=f"it holds {NAME}"):
+        archive.day(region, STORM_DAY)
+
+
+@pytest.mark.parametrize("version", [0, -1, 2**31, 2**63, -(2**63) - 1])
+def test_numbers_no_database_takes_are_missing(archive: Archive, storm: Products, version: int) -> None:
+    archive.save(storm)
+    with pytest.raises(Missing, match=f"version {version}"):
+        archive.fields(NAME, STORM_DAY, version=version)
+
+
 def test_the_day_is_still_there_when_opened_again(archive_place: str, storm: Products) -> None:
     with open_archive(archive_place) as first:
         first.save(storm)

@@ -26,6 +26,7 @@ from skylag.tables import UNSEEN, Biases, Fields, Flag, Products, Rays, Samples,
 BUSY_WAIT_S = 30.0
 
 _POOL = 20  # connections kept, and as many more for a rush: the web serves up to forty requests at a time
+_MOST_VERSIONS = 2**31 - 1  # what the column holds
 _PREPARE_LOCK = 0x536B794C  # any number that is ours
 _HOUR_NS = 3600 * 10**9
 Day = np.datetime64 | str  # a GPS-time day, like 2031-05-11
@@ -193,6 +194,8 @@ class Archive:
             product.c.simulated, product.c.summary,
         ).order_by(product.c.day.desc(), product.c.region, product.c.version)  # fmt: skip
         if region is not None:
+            if not _is_name(region):
+                return ()
             query = query.where(product.c.region == region)
         if since is not None:
             query = query.where(product.c.day >= _day_text(since))
@@ -443,10 +446,13 @@ class Archive:
 
     def _product_row(self, connection: Connection, region: str, day: Day, version: int | None) -> Any:
         product, text = schema.product, _day_text(day)
-        query = sa.select(product).where(product.c.region == region, product.c.day == text)
-        if version is not None:
-            query = query.where(product.c.version == version)
-        row = connection.execute(query.order_by(product.c.pinned.desc(), product.c.version.desc()).limit(1)).first()
+        row = None
+        # What cannot have been kept is not there; the databases need not be asked with numbers or texts they refuse.
+        if _is_name(region) and (version is None or 1 <= version <= _MOST_VERSIONS):
+            query = sa.select(product).where(product.c.region == region, product.c.day == text)
+            if version is not None:
+                query = query.where(product.c.version == version)
+            row = connection.execute(query.order_by(product.c.pinned.desc(), product.c.version.desc()).limit(1)).first()
         if row is None:
             raise self._missing(connection, region, text, version)
         return row
@@ -454,7 +460,7 @@ class Archive:
     def _missing(self, connection: Connection, region: str, day: str, version: int | None) -> Missing:
         product = schema.product
         query = sa.select(product.c.day).where(product.c.region == region).distinct()
-        days = sorted(connection.scalars(query))
+        days = sorted(connection.scalars(query)) if _is_name(region) else []
         what = f"region {region}, day {day}" + ("" if version is None else f", version {version}")
         if not days:
             known = sorted(connection.scalars(sa.select(schema.region.c.name)))
@@ -557,9 +563,13 @@ def _label(key: int, name: str, hour: int | None = None) -> str:
     return f"product {key}, {name}" + ("" if hour is None else f", hour {hour}")
 
 
+def _is_name(name: str) -> bool:
+    """Can this be a region's name: it is part of addresses and a key of the database."""
+    return 0 < len(name) <= 200 and "/" not in name and name.isprintable() and name == name.strip()
+
+
 def _check_name(name: str) -> None:
-    """A region's name is part of addresses and a key of the database."""
-    if not 0 < len(name) <= 200 or "/" in name or not name.isprintable() or name != name.strip():
+    if not _is_name(name):
         raise Refused(
             f"region {name!r}: a name has 1 to 200 printable characters, no slash, no blank at its ends",
             name="region", value=name, allowed="1 to 200 printable characters without /",
