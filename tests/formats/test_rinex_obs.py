@@ -268,6 +268,16 @@ def test_beidou_band_1_of_version_3_02_is_band_2() -> None:
     assert set(table.values) == {"C1X", "L1X", "C5X", "L5X"}
 
 
+def test_a_list_of_types_shorter_than_it_says_is_reported() -> None:
+    for version, few, many in ((2.11, "     6    C1", "     8    C1"), (3.04, "G    5 C1C", "G    7 C1C")):
+        data = write(simple(version)).replace(few.encode(), many.encode())
+        reading = read(data)
+        assert isinstance(reading.table, Signals)
+        assert len(reading.table.times) == 4
+        assert "2 types" in said(reading), said(reading)
+        assert "fewer are listed than announced" in said(reading)
+
+
 def test_conversion_comments_tell_the_tracking() -> None:
     """A RINEX 2 file made from RINEX 3 may say which signal each column was."""
     extra = [labelled("   G C2L -> C2", "COMMENT"), labelled("   G L2W -> L2", "COMMENT")]
@@ -578,6 +588,19 @@ def test_blank_system_letters_and_blank_tens() -> None:
     lines = header(simple(2.11, system="R", time_system="GPS"))
     lines += [" 31  5 10  0  0  0.0000000  0  1  5", cell((2e7, None, None)), ""]
     assert list(signals(joined(lines)).satellites) == ["R05"]
+
+
+@pytest.mark.parametrize("version", [2.11, 3.04])
+def test_a_blank_flag_is_an_ordinary_epoch(version: float) -> None:
+    lines = lines_of(simple(version))
+    for k, line in enumerate(lines):
+        if line.startswith(("> 2031", " 31  5 10")):
+            place = 31 if version >= 3 else 28
+            lines[k] = line[:place] + " " + line[place + 1 :]
+    reading = read(joined(lines))
+    assert isinstance(reading.table, Signals)
+    assert not reading.problems, said(reading)
+    assert len(reading.table.times) == 4
 
 
 @pytest.mark.parametrize("version", [2.11, 3.04])

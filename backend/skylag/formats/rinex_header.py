@@ -71,7 +71,8 @@ class Header:
     biases_removed: dict[str, str] = field(default_factory=dict)  # system -> what the header says removed them
     clock_applied: bool = False
     _open: str = ""  # the system, or "slots", whose continuation lines are being read
-    _to_come: int = 0  # types still announced
+    _to_come: int = 0  # types announced and not yet listed
+    _announced: str = ""  # label of the list of types being read
 
     def copy(self) -> "Header":
         """A state to change without touching this one."""
@@ -130,6 +131,8 @@ def absorb(header: Header, lines: Sequence[tuple[int, str]], path: str) -> list[
     header._open = ""
     header._to_come = 0
     for number, line in lines:
+        if header._announced and not line[60:80].startswith(header._announced):
+            _check_complete(header, number - 1, path, problems)
         label = label_of(line)
         if not label:
             if line.strip():
@@ -141,7 +144,17 @@ def absorb(header: Header, lines: Sequence[tuple[int, str]], path: str) -> list[
             said = f"{label}: {error}"
         if said:
             problems.append(Problem(path, number, said))
+    if header._announced:
+        _check_complete(header, lines[-1][0], path, problems)
     return problems
+
+
+def _check_complete(header: Header, number: int, path: str, problems: list[Problem]) -> None:
+    """Behind a list of types: whether all that were announced were listed."""
+    if header._to_come:
+        what = f"{header._announced}: {header._to_come} types fewer are listed than announced"
+        problems.append(Problem(path, number, what, "took those that are"))
+    header._announced = ""
 
 
 def _take(header: Header, label: str, line: str) -> str:
@@ -203,8 +216,11 @@ def _take_types(header: Header, label: str, body: str) -> str:
         first, key = body[3:6].strip(), body[:1].strip()
         names = [body[start : start + 3].strip() for start in range(7, 59, 4)]
     said = ""
+    if first and header._to_come and header._announced:
+        said = f"{label}: {header._to_come} types of {header._open} fewer are listed than announced"
     if first:
         header._to_come = int(first)
+        header._announced = label
         header._open = key or "all"
         header.types[key] = []
         if not 0 < header._to_come < 1000:

@@ -187,6 +187,7 @@ def layout_3(text: Text, body: int, header: Header, problems: Problems) -> Layou
     flag, flag_good = fixed_columns.whole(text.data, text.begin[epoch_line] + 31, 1, text.end[epoch_line])
     count, count_good = fixed_columns.whole(text.data, text.begin[epoch_line] + 32, 3, text.end[epoch_line])
     # A long count may begin one column early in files of more than 999 lines; none is known to.
+    flag_good |= text.at(epoch_line, 31) == 0x20  # a blank flag is 0
     flag = np.where(flag_good & (flag <= 6), flag, -1)
     for k in np.flatnonzero(flag < 0)[:MOST_PROBLEMS]:
         said = text.line(int(epoch_line[k]))[31:32]
@@ -294,6 +295,7 @@ def layout_2(text: Text, body: int, header: Header, problems: Problems) -> Layou
     line = starts + body
     flag, flag_good = fixed_columns.whole(text.data, text.begin[line] + 28, 1, text.end[line])
     count, count_good = fixed_columns.whole(text.data, text.begin[line] + 29, 3, text.end[line])
+    flag_good |= text.at(line, 28) == 0x20  # a blank flag is 0
     good = flag_good & count_good & (flag <= 6)
     first = starts + np.maximum(1, -(-count // 12))
     behind = np.append(starts[1:], total)  # the next epoch line, or the end
@@ -355,8 +357,9 @@ def _epoch_lines_2(text: Text, body: int) -> tuple[Ints, Ints]:
     timed = column[18] == ord(".")
     for k in (0, 3, 6, 9, 12, 27):
         timed &= column[k] == 0x20
-    for k in (2, 5, 8, 11, 14, 28):
+    for k in (2, 5, 8, 11, 14):
         timed &= (column[k] >= 0x30) & (column[k] <= 0x39)
+    timed &= (column[28] == 0x20) | ((column[28] >= 0x30) & (column[28] <= 0x39))
     untimed = (column[28] >= ord("2")) & (column[28] <= ord("5"))  # events need no time
     for k in (0, 2, 5, 8, 10, 11, 14, 18, 27):
         untimed &= column[k] == 0x20
