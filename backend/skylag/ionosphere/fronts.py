@@ -23,7 +23,7 @@ from skylag.ionosphere.slopes import MM_PER_TECU
 from skylag.tables import Arrival, Bools, Floats, Front, Fronts, Ints, Onsets, Rays, Samples, Site, Slopes, Times
 
 _KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
-_SLOW_KM_S, _SLOW_BIAS_M_S = 0.05, 6.0  # root mean square speed error of simulated walls slower than 50 m/s
+_SLOW_KM_S, _SLOW_BIAS_KM_S = 0.05, 0.006  # root mean square speed error of simulated walls slower than 50 m/s
 _PIERCE_KM_S = 0.06  # usual speed of a pierce point: even a wall at rest is swept over by them
 
 
@@ -490,9 +490,10 @@ def _front(
     steps = np.arange(lean_start, lean_end + np.timedelta64(1, "s"), np.timedelta64(round(choices.track_step_s), "s"))
     away = offset + wall.speed * ((steps - epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9)
     lat, lon = from_plane(away * east, away * north, centre)
-    sigma = np.sqrt(np.diag(wall.covariance))
     # A slow wall takes so long to pass that the running background follows it: its speed is biased by that.
-    slow = _SLOW_BIAS_M_S if wall.speed < _SLOW_KM_S else 0.0
+    covariance = wall.covariance.copy()
+    covariance[1, 1] += (_SLOW_BIAS_KM_S if wall.speed < _SLOW_KM_S else 0.0) ** 2
+    sigma = np.sqrt(np.diag(covariance))
     receivers = tuple(rays.receivers[number].name for number in np.unique(onsets.receiver))
     satellites = tuple(str(rays.satellites[number]) for number in np.unique(onsets.satellite))
     return Front(
@@ -503,7 +504,7 @@ def _front(
         offset_km=offset,
         offset_sigma_km=float(sigma[2]),
         speed_m_s=wall.speed * 1000.0,
-        speed_sigma_m_s=float(np.hypot(sigma[1] * 1000.0, slow)),
+        speed_sigma_m_s=float(sigma[1]) * 1000.0,
         heading_deg=float(np.degrees(wall.heading) % 360.0),
         heading_sigma_deg=float(np.degrees(sigma[0])),
         slope=steep.slope,
@@ -521,7 +522,7 @@ def _front(
         receivers=receivers,
         satellites=satellites,
         confirmed=True,
-        covariance=wall.covariance[np.ix_([2, 1, 0], [2, 1, 0])],
+        covariance=covariance[np.ix_([2, 1, 0], [2, 1, 0])],
         track=tuple(zip(steps, lat.tolist(), lon.tolist(), strict=True)),
     )
 
