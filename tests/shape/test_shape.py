@@ -91,3 +91,10 @@ def test_no_machine_stands_in_the_project() -> None:
             if path != Path(__file__) and marks.search(text):
                 found.append(name)
     assert not found, found
+
+
+def test_the_glossary_is_fresh() -> None:
+    from tests.shape import glossary
+
+    text = glossary.DEVELOPERS.read_text(encoding="utf-8")
+    assert glossary.with_table(text) == text, "run python -m tests.shape.glossary"
