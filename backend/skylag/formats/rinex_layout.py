@@ -111,9 +111,11 @@ class _Course:
         self.ended = 0  # the line from which the file is about another site
 
     def change(self, first: int, last: int) -> None:
-        """Header lines first to last (not inside) hold from here on."""
-        state = self.states[-1].copy()
+        """Header lines first to last (not inside) hold from here on; comments change nothing."""
         lines = [(k + 1, self.text.line(k)) for k in range(first, min(last, first + LONGEST_HEADER))]
+        if all(line[60:67] == "COMMENT" for _, line in lines):
+            return
+        state = self.states[-1].copy()
         for problem in rinex_header.absorb(state, lines, self.problems.path):
             self.problems.note(problem.line, problem.what, kind="line without a header label behind an event")
         before = self.states[-1]
