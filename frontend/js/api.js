@@ -210,7 +210,7 @@ export async function fields(region, date, from, to, how) {
 /** Pierce points at a time. @param {string} region @param {string} date @param {number} time @param {How} [how] */
 export async function rays(region, date, time, how) {
   const raw = await ask(`${dayAddress(region, date)}/rays?time=${instant(time)}`, how);
-  return raw.pierce_lat.map((lat, i) => ({ lat, lon: raw.pierce_lon[i], elevation: raw.elevation[i] }));
+  return raw.pierce_lat.map((lat, i) => ({ lat, lon: raw.pierce_lon[i], elevation: raw.elevation[i], receiver: raw.receiver[i] }));
 }
 
 /**

@@ -28,7 +28,8 @@ import { WORDS } from "./words.js";
  * @property {number} index  of `time` in `fields`
  * @property {import("./api.js").SiteStates|null} siteStates
  * @property {import("./api.js").Series|null} series  of the chosen place, null while it is on its way
- * @property {{lat: number, lon: number, elevation: number}[]} rays
+ * @property {{lat: number, lon: number, elevation: number, receiver: string}[]} rays
+ * @property {number} raysTime  the time they belong to, NaN where none were asked for
  * @property {[number, number][][]} coast
  * @property {import("./colour.js").Theme} theme
  */
@@ -134,7 +135,7 @@ async function loadDay() {
     const view = state.view;
     const time = view.minute === null ? firstTime(found) : found.times[nearest(found.times, found.start + view.minute * 60000)];
     settling = true;
-    scene = { view, day: found, time, fields: null, index: 0, siteStates, series: null, rays: [], coast: sameRegion ? scene.coast : [], theme: masthead.theme };
+    scene = { view, day: found, time, fields: null, index: 0, siteStates, series: null, rays: [], raysTime: NaN, coast: sameRegion ? scene.coast : [], theme: masthead.theme };
     state.change(
       { minute: Math.round((time - found.start) / 60000), place: view.place ?? /** @type {[number, number]} */ (firstPlace(found, siteStates, time)) },
       { step: "none" },
@@ -247,12 +248,14 @@ async function loadRays() {
   if (!view.show.has("rays")) {
     running.rays?.abort();
     scene.rays = [];
+    scene.raysTime = NaN;
     return;
   }
   try {
     const rays = await api.rays(view.region, view.day, time, { signal: only("rays") });
     if (scene.time !== time) return;
     scene.rays = rays;
+    scene.raysTime = time;
     chart.show(scene);
   } catch (error) {
     if (!gone(error)) chart.note(error.message);

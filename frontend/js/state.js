@@ -102,6 +102,8 @@ export class State extends EventTarget {
   /** @type {View} */ #view;
   #history;
   #lastQuiet = -Infinity;
+  #written = -Infinity;
+  /** @type {any} */ #pending;
   #clock;
 
   /**
@@ -132,15 +134,39 @@ export class State extends EventTarget {
     const now = this.#clock();
     const sameRun = onlyTime && now - this.#lastQuiet < 1200;
     this.#lastQuiet = onlyTime ? now : -Infinity;
+    if (!sameRun) this.#finish();
     this.#view = { ...this.#view, ...changes };
-    const url = toQuery(this.#view) || "?";
-    if (step === "none" || sameRun) this.#history.replaceState(null, "", url);
-    else this.#history.pushState(null, "", url);
+    if (sameRun) this.#writeSoon(now);
+    else {
+      const url = toQuery(this.#view) || "?";
+      if (step === "none") this.#history.replaceState(null, "", url);
+      else this.#history.pushState(null, "", url);
+      this.#written = now;
+    }
     this.#tell(names);
+  }
+
+  /** Browsers stop a page that writes its address too often: within a run at most ten times a second, and the last. */
+  #writeSoon(now) {
+    this.#pending ??= setTimeout(() => this.#finish(), Math.max(0, this.#written + 100 - now));
+  }
+
+  /** Write what a run has left to write. */
+  #finish() {
+    if (this.#pending === undefined) return;
+    this.#forget();
+    this.#written = this.#clock();
+    this.#history.replaceState(null, "", toQuery(this.#view) || "?");
+  }
+
+  #forget() {
+    clearTimeout(this.#pending);
+    this.#pending = undefined;
   }
 
   /** @param {View} view */
   #take(view) {
+    this.#forget();
     const filled = { ...view, region: view.region || this.#view.region, day: view.day || this.#view.day };
     const names = Object.keys(filled).filter((name) => !alike(this.#view[name], filled[name]));
     this.#lastQuiet = -Infinity;

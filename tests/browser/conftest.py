@@ -65,7 +65,9 @@ def _chromium() -> str | None:
     named = os.environ.get("SKYLAG_CHROMIUM")
     if named:
         return named
-    return next((path for name in ("chromium", "chromium-browser", "google-chrome") if (path := shutil.which(name))), None)
+    return next(
+        (path for name in ("chromium", "chromium-browser", "google-chrome") if (path := shutil.which(name))), None
+    )
 
 
 @pytest.fixture(scope="session")
@@ -79,6 +81,10 @@ def browser() -> Iterator[Any]:
         )
         yield started
         started.close()
+
+
+# Stands in for plotly.js where a test does not look at what it draws.
+IDLE = "window.Plotly = { react: async () => {}, purge() {} };"
 
 
 @dataclass
@@ -109,7 +115,8 @@ class Visit:
         )
 
     def minute(self) -> str:
-        """The time in the address."""
+        """The time in the address, which follows a run of moves within a tenth of a second."""
+        self.page.wait_for_timeout(130)
         return str(self.page.evaluate("new URLSearchParams(location.search).get('time')"))
 
     def text(self, selector: str) -> str:
@@ -123,15 +130,24 @@ class Visit:
 
 @pytest.fixture
 def visit(browser: Any, page_server: str) -> Iterator[Callable[..., Visit]]:
-    """Opens pages: visit(width=…, height=…, dark=…).  At the end no page may have complained or asked another host."""
+    """Opens pages: visit(width=…, height=…, dark=…).  At the end no page may have complained or asked another host.
+
+    plotly=False spares tests that look neither at axes nor at the plot the second that its script takes to run.
+    """
     opened: list[tuple[Any, Visit]] = []
 
-    def open_page(*, width: int = 1366, height: int = 900, dark: bool = False, **more: Any) -> Visit:
+    def open_page(
+        *, width: int = 1366, height: int = 900, dark: bool = False, plotly: bool = True, **more: Any
+    ) -> Visit:
         context = browser.new_context(
             viewport={"width": width, "height": height}, color_scheme="dark" if dark else "light", **more
         )
         page = context.new_page()
         page.set_default_timeout(15_000)
+        if not plotly:
+            page.route(
+                "**/vendor/plotly.min.js", lambda route: route.fulfill(content_type="text/javascript", body=IDLE)
+            )
         one = Visit(page, page_server)
         page.on("console", lambda m: one.complaints.append(m.text) if m.type in {"error", "warning"} else None)
         page.on("pageerror", lambda failure: one.complaints.append(str(failure)))

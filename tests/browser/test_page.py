@@ -58,7 +58,7 @@ def test_keys_and_slider_move_the_time(visit: Open) -> None:
 
 def test_dragging_the_strip_moves_the_map(visit: Open) -> None:
     """Press at a quarter of the day, drag to a half: the map follows, and the drag is one step of the history."""
-    v = visit().go(f"{STORM}&time=20:00")
+    v = visit(plotly=False).go(f"{STORM}&time=20:00")
     box = v.page.locator("#strip").bounding_box()
     y = box["y"] + 40
     v.page.mouse.move(box["x"] + box["width"] * 0.255, y)
@@ -75,7 +75,7 @@ def test_dragging_the_strip_moves_the_map(visit: Open) -> None:
 
 def test_focus_on_the_strip_reads_the_reason(visit: Open) -> None:
     """A live region tells state and reason of the worst sites when the strip has the focus and the hand rests."""
-    v = visit().go(f"{STORM}&time=05:15")
+    v = visit(plotly=False).go(f"{STORM}&time=05:15")
     v.page.focus("#strip")
     v.page.wait_for_function("() => document.getElementById('strip-reason').textContent.includes('Gannet Field')")
     said = v.text("#strip-reason")
@@ -85,7 +85,7 @@ def test_focus_on_the_strip_reads_the_reason(visit: Open) -> None:
 
 def test_a_click_on_the_map_reads_the_place(visit: Open) -> None:
     """The answer has the service's sentence and numbers for exactly the place in the address."""
-    v = visit().go(f"{STORM}&time=05:30")
+    v = visit(plotly=False).go(f"{STORM}&time=05:30")
     box = v.page.locator("#map").bounding_box()
     v.page.mouse.click(box["x"] + box["width"] * 0.5, box["y"] + box["height"] * 0.62)
     v.page.wait_for_function("() => new URLSearchParams(location.search).has('at')")
@@ -107,7 +107,7 @@ def test_a_click_on_the_map_reads_the_place(visit: Open) -> None:
 
 def test_the_front_and_its_evidence(visit: Open) -> None:
     """A row of the table leads to time and place; there corrections are broken and the evidence stands under why."""
-    v = visit().go(f"{STORM}&time=20:00")
+    v = visit(plotly=False).go(f"{STORM}&time=20:00")
     assert v.page.get_attribute("#map", "data-flags") == ""
     v.page.click("#flag-table tr[data-kind=front] button")
     v.page.wait_for_selector(".lead.broken")
@@ -121,7 +121,7 @@ def test_the_front_and_its_evidence(visit: Open) -> None:
 
 def test_unseen_never_looks_like_holds(visit: Open) -> None:
     """On every layer the unseen corner of the chart has other pixels than a place that holds, and says unseen."""
-    v = visit().go(f"{STORM}&time=20:00&layer=state&at=-42.5,142.5&show=none")
+    v = visit(plotly=False).go(f"{STORM}&time=20:00&layer=state&at=-42.5,142.5&show=none")
     assert v.text(".lead").startswith("Unseen here")
     assert v.page.locator(".lead.unseen").count() == 1
     assert "holds" not in v.text(".numbers")
@@ -153,7 +153,7 @@ def test_unseen_never_looks_like_holds(visit: Open) -> None:
 
 def test_back_and_forward_go_through_views(visit: Open) -> None:
     """Each choice is a step; going back restores time, layer, place and reading."""
-    v = visit().go(f"{STORM}&time=05:30&at=-41.1,147.1")
+    v = visit(plotly=False).go(f"{STORM}&time=05:30&at=-41.1,147.1")
     v.page.click("#layer label:has(input[value=slope])")
     v.page.click("#strip-names button >> nth=2")
     v.settled()
@@ -169,7 +169,9 @@ def test_back_and_forward_go_through_views(visit: Open) -> None:
 
 def test_a_link_is_a_view(visit: Open) -> None:
     """Day, time, layer, place, clock and what is shown all come from the address."""
-    v = visit().go("?region=Strait+of+trials&day=2031-05-10&time=03:15&layer=uncertainty&at=-42.4,147&show=rays&clock=local")
+    v = visit(plotly=False).go(
+        "?region=Strait+of+trials&day=2031-05-10&time=03:15&layer=uncertainty&at=-42.4,147&show=rays&clock=local"
+    )
     assert "10 May 2031" in v.text("#chart-time")
     assert v.page.is_checked("#layer input[value=uncertainty]")
     assert v.page.is_checked("#legend input[name=rays]")
@@ -181,7 +183,7 @@ def test_a_link_is_a_view(visit: Open) -> None:
 
 def test_another_day_is_chosen(visit: Open) -> None:
     """The picker and its neighbours change the day and keep time and place."""
-    v = visit().go(f"{STORM}&time=05:30")
+    v = visit(plotly=False).go(f"{STORM}&time=05:30")
     v.page.click("#day-before")
     v.page.wait_for_function("() => document.getElementById('chart-time').textContent.startsWith('10 May 2031')")
     v.settled()
@@ -193,7 +195,7 @@ def test_another_day_is_chosen(visit: Open) -> None:
 
 def test_night_follows_the_system_and_the_button(visit: Open) -> None:
     """Dark where the system asks for it; the reader's own choice is kept over a reload."""
-    v = visit(dark=True).go(STORM)
+    v = visit(dark=True, plotly=False).go(STORM)
     assert v.paper() == "rgb(18, 22, 31)"
     v.page.click("#theme")
     assert v.paper() == "rgb(251, 248, 241)"
@@ -216,13 +218,14 @@ def test_nothing_is_cut_at_any_width(visit: Open, width: int, tmp_path: Path) ->
 
 def test_all_by_keyboard(visit: Open) -> None:
     """Tab reaches every control with a visible focus; arrows on the map move the place; a place can be typed."""
-    v = visit().go(f"{STORM}&time=20:00&at=-40,146")
+    v = visit(plotly=False).go(f"{STORM}&time=20:00&at=-40,146")
     reached = []
     for _ in range(60):
         v.page.keyboard.press("Tab")
         reached.append(v.page.evaluate("document.activeElement.id || document.activeElement.name || ''"))
         outline = v.page.evaluate(
-            """() => { const e = document.activeElement, s = getComputedStyle(e.closest(".choice label")?.querySelector("span") ?? e);
+            """() => { const e = document.activeElement, word = e.closest(".choice label")?.querySelector("span");
+                       const s = getComputedStyle(word ?? e);
                        return s.outlineStyle !== "none" && parseFloat(s.outlineWidth) >= 2; }"""
         )
         assert outline or reached[-1] == "", f"no visible focus on {reached[-1]}"
@@ -246,12 +249,16 @@ def test_all_by_keyboard(visit: Open) -> None:
 
 def test_targets_are_large_enough(visit: Open) -> None:
     """Buttons, lists and fields are at least 24 pixels high (WCAG 2.2, 2.5.8); links within text are exempt there."""
-    v = visit(width=360, height=780).go(f"{STORM}&time=05:30")
+    v = visit(width=360, height=780, plotly=False).go(f"{STORM}&time=05:30")
     v.page.click("#legend details:has(input) summary")
     small = v.page.evaluate(
-        """() => [...document.querySelectorAll("button:not(.linklike), select, summary, label:has(input), input[type=range]")]
-          .filter((e) => e.offsetParent && e.getBoundingClientRect().height < 24)
-          .map((e) => `${e.tagName} ${e.id} ${e.textContent.trim().slice(0, 30)} ${e.getBoundingClientRect().height}`)"""
+        """() => {
+          const targets = "button:not(.linklike), select, summary, label:has(input), input[type=range]";
+          return [...document.querySelectorAll(targets)]
+            .map((e) => [e, e.getBoundingClientRect().height])
+            .filter(([e, height]) => e.offsetParent && height < 24)
+            .map(([e, height]) => `${e.tagName} ${e.id} ${e.textContent.trim().slice(0, 30)} ${height}`);
+        }"""
     )
     assert small == []
 
@@ -272,7 +279,7 @@ def test_what_can_be_taken_away(visit: Open) -> None:
 
 def test_a_table_stands_behind_the_plot(visit: Open) -> None:
     """The day's delay at the place as rows, with uncertainty; unseen is said in words."""
-    v = visit().go(f"{STORM}&time=05:30&at=-37.8,145")
+    v = visit(plotly=False).go(f"{STORM}&time=05:30&at=-37.8,145")
     v.page.click(".table-behind summary")
     v.page.wait_for_selector("#series-table tbody tr")
     assert v.page.locator("#series-table tbody tr").count() == 96
@@ -281,7 +288,7 @@ def test_a_table_stands_behind_the_plot(visit: Open) -> None:
 
 def test_a_late_reply_for_an_old_place_is_dropped(visit: Open) -> None:
     """The first question is answered last: the page shows the second."""
-    v = visit().go(f"{STORM}&time=20:00&at=-40,146")
+    v = visit(plotly=False).go(f"{STORM}&time=20:00&at=-40,146")
     held: list[Any] = []
     v.page.route("**/reading?lat=-41.1*", lambda route: held.append(route))
     v.page.click("#strip-names button >> nth=1")
@@ -299,7 +306,7 @@ def test_a_late_reply_for_an_old_place_is_dropped(visit: Open) -> None:
 
 def test_an_empty_archive_says_what_to_do(visit: Open) -> None:
     """No day yet: the page says so and names the command."""
-    v = visit()
+    v = visit(plotly=False)
     v.page.route("**/api/days", lambda route: route.fulfill(json={"days": [], "regions": []}))
     v.go(wait=False)
     v.page.wait_for_function("() => document.getElementById('answer').textContent.includes('skylag day')")
@@ -308,7 +315,7 @@ def test_an_empty_archive_says_what_to_do(visit: Open) -> None:
 
 def test_a_failure_is_shown_in_the_services_words_and_can_be_tried_again(visit: Open) -> None:
     """The service's sentence stands on the page with a button; the button works."""
-    v = visit()
+    v = visit(plotly=False)
     words = "the archive is being moved; ask again in a minute"
     content = {"ok": False, "error": words, "kind": "Missing", "details": {}, "status": 503}
     v.page.route("**/api/days/*/2031-05-11", lambda route: route.fulfill(status=503, json=content))
@@ -337,8 +344,9 @@ def test_speed(visit: Open, record_property: Callable[[str, object], None]) -> N
           const strip = document.getElementById("strip"), map = document.getElementById("map"), out = [];
           for (let i = 0; i < 24; i++) {
             const before = map.dataset.time, start = performance.now();
-            strip.dispatchEvent(new KeyboardEvent("keydown", { key: i % 4 < 2 ? "ArrowRight" : "ArrowLeft", bubbles: true }));
-            while (map.dataset.time === before || map.dataset.drawn !== "fields") await new Promise((r) => setTimeout(r, 0));
+            const key = i % 4 < 2 ? "ArrowRight" : "ArrowLeft", moved = () => map.dataset.time !== before;
+            strip.dispatchEvent(new KeyboardEvent("keydown", { key, bubbles: true }));
+            while (!moved() || map.dataset.drawn !== "fields") await new Promise((r) => setTimeout(r, 0));
             await new Promise((r) => requestAnimationFrame(() => setTimeout(r, 0)));
             out.push(performance.now() - start);
           }

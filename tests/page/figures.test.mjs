@@ -300,3 +300,10 @@ test("names find a free spot beside their sign, or are left out", () => {
   assert.equal(freeSpot(40, 10, 100, 50, p, [below, above, right, left]), null);
   assert.ok(freeSpot(40, 10, 198, 50, p, []).right <= 200, "inside the frame");
 });
+
+test("a receiver without data is an empty ring", () => {
+  const receivers = [{ name: "A", lat: -40, lon: 145, fresh: true }, { name: "B", lat: -39, lon: 146, fresh: false }];
+  const figure = mapFigure(contents({ receivers }));
+  assert.deepEqual(named(figure, "receivers").x, [145, 146]);
+  assert.deepEqual(named(figure, "receivers with data").x, [145]);
+});

@@ -51,11 +51,12 @@ function world(search = "") {
   return { calls, state, location, back: (query) => ((location.search = query), heard()), wait: (ms) => (now += ms) };
 }
 
-test("a run of moves in time is one step of the history; other changes are a step each", () => {
+test("a run of moves in time is one step of the history; other changes are a step each", async () => {
   const { calls, state, wait } = world("?region=a&day=2031-05-11");
   state.change({ minute: 5 });
   wait(100);
   state.change({ minute: 10 });
+  await new Promise((resolve) => setTimeout(resolve, 120));
   wait(5000);
   state.change({ minute: 15 });
   state.change({ layer: "slope" });
@@ -80,4 +81,28 @@ test("going back tells exactly what differs", () => {
   back("?region=a&day=2031-05-11&time=05:00");
   assert.deepEqual([...names].sort(), ["layer", "minute"]);
   assert.equal(state.view.minute, 300);
+});
+
+test("a fast run waits to write its address, then writes where it ended", async () => {
+  const { calls, state, wait } = world("?region=a&day=2031-05-11");
+  for (let i = 0; i < 100; i++) {
+    state.change({ minute: i });
+    wait(5);
+  }
+  assert.equal(calls.length, 1, "within one turn of the browser only the first step is written");
+  await new Promise((resolve) => setTimeout(resolve, 150));
+  assert.equal(calls.length, 2);
+  assert.deepEqual([calls[1][0], /time=01:39/.test(calls[1][1])], ["replace", true]);
+});
+
+test("a choice after a run first writes where the run ended, so that back leads there", async () => {
+  const { calls, state, wait } = world("?region=a&day=2031-05-11");
+  state.change({ minute: 1 });
+  wait(5);
+  state.change({ minute: 2 });
+  state.change({ layer: "slope" });
+  await new Promise((resolve) => setTimeout(resolve, 150));
+  assert.deepEqual(calls.map(([kind]) => kind), ["push", "replace", "push"]);
+  assert.match(calls[1][1], /time=00:02$/);
+  assert.match(calls[2][1], /time=00:02&layer=slope/);
 });

@@ -85,7 +85,10 @@ export class ChartPanel {
   }
 
   #contents() {
-    const { day, view, fields, index, time, theme, rays, siteStates, coast } = this.#scene;
+    const { day, view, fields, index, time, theme, rays, raysTime, siteStates, coast } = this.#scene;
+    // Pierce points belong to one moment: those of another are not drawn. Who has none is a receiver without data.
+    const current = view.show.has("rays") && raysTime === time;
+    const heard = new Set(rays.map((ray) => ray.receiver));
     return {
       frame: frameOf(day.grid),
       layer: view.layer,
@@ -96,8 +99,10 @@ export class ChartPanel {
       ends: day.ends,
       unseenSigma: day.region.unseenSigma,
       coast,
-      receivers: view.show.has("receivers") ? day.receivers : [],
-      rays: view.show.has("rays") ? rays : [],
+      receivers: view.show.has("receivers")
+        ? day.receivers.map((receiver) => ({ ...receiver, fresh: !current || heard.has(receiver.name) }))
+        : [],
+      rays: current ? rays : [],
       sites: view.show.has("sites")
         ? day.sites.map((site, number) => ({ ...site, state: siteStates?.stateOf(number, time) }))
         : [],

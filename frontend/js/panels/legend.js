@@ -63,10 +63,10 @@ export class LegendPanel {
     const show = foldable("show", "Show");
     const choices = make("ul", { class: "key" });
     const rows = [
-      ["receivers", "Receivers", receiverSign()],
-      ["sites", "Sites", siteSign()],
-      ["rays", "Pierce points, larger when higher", raySign()],
-      ["veil", "Fade the delay where it is unsure", veilSign()],
+      ["receivers", view.show.has("rays") ? WORDS.receiversHeard : WORDS.receivers, receiverSign()],
+      ["sites", WORDS.sites, siteSign()],
+      ["rays", WORDS.rays, raySign()],
+      ["veil", WORDS.veil, veilSign()],
     ];
     for (const [name, words, drawn] of rows) {
       choices.append(
