@@ -17,7 +17,7 @@ from skylag.formats.joining import merge, thin
 from skylag.formats.wrappers import is_hatanaka, unwrap
 from skylag.tables import Reading
 
-__all__ = ["fingerprint", "kind_of", "merge", "read", "thin"]
+__all__ = ["fingerprint", "kind_of", "merge", "read", "read_bytes", "thin"]
 
 # What a file can be, and which module parses it: each has parse(data, name) -> Reading.
 PARSERS = {
@@ -47,23 +47,33 @@ def read(
     Raises FormatError when the file cannot be read, is empty, or is nothing this program knows; a bad line only
     becomes a problem of the reading.
     """
-    place = Path(path)
-    packed = _bytes_of(place)
-    if not packed.strip():
-        raise FormatError(f"{place.name}: the file is empty; fetch it again", path=str(path), line=0)
-    data, wrapping = unwrap(packed, str(path))
+    return read_bytes(_bytes_of(Path(path)), str(path), wanted=wanted, thin_to_s=thin_to_s)
+
+
+def read_bytes(
+    packed: bytes,
+    name: str,
+    *,
+    wanted: Mapping[str, Collection[str]] | None = None,
+    thin_to_s: float | None = None,
+) -> Reading:
+    """The same for bytes that are already here, as of a file sent in; `name` stands in messages and problems."""
+    short = Path(name).name
+    if not packed[:1000].strip() and not packed.strip():
+        raise FormatError(f"{short}: the file is empty; fetch it again", path=name, line=0)
+    data, wrapping = unwrap(packed, name)
     del packed
     kind = kind_of(data)
     if kind == "unknown":
         beginning = data[:60].split(b"\n")[0].decode("latin-1")
         raise FormatError(
-            f"{place.name}: begins with {beginning!r}, which is no format known here; RINEX observations and "
-            "navigation, SP3, Bias-SINEX, monthly code biases, IONEX and daily indices are",
-            path=str(path), line=1,
+            f"{short}: begins with {beginning!r}, which is no format known here; RINEX observations and navigation, "
+            "SP3, Bias-SINEX, monthly code biases, IONEX and daily indices are",
+            path=name, line=1,
         )  # fmt: skip
     parser = importlib.import_module(f"skylag.formats.{PARSERS[kind]}")
     choices: dict[str, Any] = {"wanted": wanted, "thin_to_s": thin_to_s} if kind == "observations" else {}
-    reading: Reading = parser.parse(data, str(path), **choices)
+    reading: Reading = parser.parse(data, name, **choices)
     return Reading(reading.table, (*wrapping, *reading.problems), {**reading.header, "kind": kind})
 
 
