@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from tests.simulated.moving_wall import PLACES, START, changed, flat, quiet, samples_of, simulate, wall
 
+from skylag import chain, formats
 from skylag.errors import NotEnough
 from skylag.ionosphere import faults, fronts, irregularity, slopes
 from skylag.tables import Onsets
@@ -165,3 +166,20 @@ def test_two_receivers_have_nobody_to_compare_with():
 
 def test_empty_onsets_are_a_table():
     assert len(NO_ONSETS.onsets) == 0 and isinstance(NO_ONSETS.onsets, Onsets)
+
+
+@pytest.mark.open_data
+def test_index_of_a_quiet_day_over_denmark(open_data, evidence):
+    signals = formats.read(open_data / "2020-177/obs/ESBC00DNK_R_20201770000_01D_30S_MO.crx.gz").table
+    orbits = formats.read(open_data / "2020-177/nav/ESBC00DNK_R_20201770000_01D_MN.rnx.gz").table
+    rays = chain.receiver_day(signals, [orbits], chain.Choices(), 400e3).rays
+    found = irregularity.assess(rays)
+    assert found.patches == ()
+    gps = np.char.startswith(rays.satellites[found.satellite], "G")
+    source = "GPS windows of ESBC, 25 June 2020 (Kp 1 and less), worked apart with other code (references 10.1)"
+    for share, expected, tolerance in ((0.5, 0.011, 0.001), (0.95, 0.029, 0.003), (0.99, 0.042, 0.004)):
+        got = float(np.nanquantile(found.index[:, gps], share))
+        evidence(f"quiet-day index above 30 degrees, {share:.0%} quantile", source=source, expected=expected, got=got,
+                 tolerance=tolerance, unit="TECU/min")  # fmt: skip
+    evidence("quiet-day along-arc rate, largest hour", source="ESBC, 25 June 2020, worked apart: 0.020 to 0.050",
+             expected=0.050, got=float(np.nanmax(found.aatr)), tolerance=0.005, unit="TECU/min")  # fmt: skip

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from invented import network
-from skylag import chain
+from skylag import chain, formats
 from skylag.ionosphere import adjustment, faults, fronts, irregularity, slopes
 from skylag.ionosphere.field import plane_km
 from skylag.tables import concatenate
@@ -77,3 +77,19 @@ def test_the_receiver_at_fault_is_no_weather(calm):
     day, ten = np.datetime64("2031-03-11"), np.timedelta64(10, "m")
     assert abs(spans[0].start - day - np.timedelta64(300, "m")) <= ten
     assert abs(spans[0].end - day - np.timedelta64(360, "m")) <= ten
+
+
+@pytest.mark.slow
+@pytest.mark.open_data
+def test_a_quiet_day_of_six_real_receivers_raises_nothing(open_data):
+    orbits = [formats.read(path).table for path in sorted((open_data / "2021-001/nav").glob("*_MN.rnx.gz"))]
+    choices = chain.Choices()
+    signals = [formats.read(path).table for path in sorted((open_data / "2021-001/obs").iterdir())]
+    rays = concatenate([chain.receiver_day(one, orbits, choices, 400e3).rays for one in signals])
+    samples = adjustment.apply(adjustment.solve(rays, None, choices.adjustment, {}), rays)
+    steep = slopes.measure(rays, samples)
+    assert steep.summary["pair_slopes"] > 50_000
+    assert [claim for claim in steep.claims if claim.confirmed] == []
+    moving = fronts.track(rays, samples, steep)
+    assert moving.fronts == ()
+    assert [patch for patch in irregularity.assess(rays, moving, None, samples).patches if patch.confirmed] == []

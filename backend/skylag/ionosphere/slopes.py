@@ -281,6 +281,8 @@ def _claim(columns: Mapping[str, Any], rows: Ints, cell: Ints, rays: Rays) -> Sl
     receiver, other, satellite = columns["receiver"][rows], columns["other"][rows], columns["satellite"][rows]
     way = columns["way"][rows]
     confirmed, why = agreement(way, receiver, other, satellite, rays.receivers)
+    if not confirmed and np.all(way == PAIR):
+        why += "; steady through the arc, so more likely the level of an arc than weather"
     ways = tuple(SLOPE_WAYS[code] for code in np.unique(way))
     # Paths mix time and space: they give no size where a pair does.
     sized = rows[way != PATH] if np.any(way != PATH) else rows
