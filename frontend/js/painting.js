@@ -63,7 +63,7 @@ export function paint(canvas, figure, p) {
     else {
       if (trace.fill === "toself" || trace.mode.includes("lines")) lines(ctx, trace, p, ratio);
       if (trace.mode.includes("markers")) markers(ctx, trace, p);
-      if (trace.mode.includes("text")) words(ctx, trace, p, family);
+      if (trace.mode.includes("text")) words(ctx, trace, p, family, figure.notes ?? []);
     }
   }
   for (const note of figure.notes ?? []) turned(ctx, note, p, family);
@@ -239,13 +239,14 @@ export function freeSpot(width, size, x, y, p, taken) {
 }
 
 /** Words with a rim of paper; "<b>" for bold, leading "<br>" for lines to go down. */
-function words(ctx, trace, p, family) {
+function words(ctx, trace, p, family, notes) {
   ctx.textAlign = "center";
   const { size } = trace.textfont;
   /** @type {Box[]} */
-  const taken = trace.meta?.apart
-    ? trace.x.map((lon, i) => ({ left: p.x(lon) - size * 0.8, right: p.x(lon) + size * 0.8, top: p.y(trace.y[i]) - size * 0.75, bottom: p.y(trace.y[i]) + size * 0.75 }))
-    : [];
+  const taken = notes.map((note) => ({ left: p.x(note.x) - size * 2, right: p.x(note.x) + size * 2, top: p.y(note.y) - size * 1.4, bottom: p.y(note.y) + size * 1.4 }));
+  if (trace.meta?.apart) {
+    taken.push(...trace.x.map((lon, i) => ({ left: p.x(lon) - size * 0.8, right: p.x(lon) + size * 0.8, top: p.y(trace.y[i]) - size * 0.75, bottom: p.y(trace.y[i]) + size * 0.75 })));
+  }
   for (let i = 0; i < trace.x.length; i++) {
     const bold = trace.text[i].includes("<b>");
     const down = (trace.text[i].match(/<br>/g) ?? []).length;

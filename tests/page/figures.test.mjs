@@ -257,8 +257,14 @@ test("the series has no line where nothing is known, and never below zero", () =
 
 test("legend marks run from end to end", () => {
   const { marks, colours } = legendFigure("delay", [0, 10], "day");
-  assert.deepEqual(marks.map((mark) => mark.text), ["0.0", "2.5", "5.0", "7.5", "10.0"]);
+  assert.deepEqual(marks.map((mark) => mark.text), ["0", "2", "4", "6", "8", "10"]);
+  assert.deepEqual([marks[0].part, marks.at(-1).part], [0, 1]);
   assert.equal(colours.length, 7);
+  const texts = (end) => legendFigure("delay", [0, end], "day").marks.map((mark) => mark.text).join(" ");
+  assert.equal(texts(20), "0 5 10 15 20");
+  assert.equal(texts(0.5), "0.0 0.1 0.2 0.3 0.4 0.5");
+  assert.equal(texts(30), "0 10 20 30");
+  assert.equal(texts(0.05), "0.00 0.01 0.02 0.03 0.04 0.05");
 });
 
 test("gradations are round and few; the scale bar is a round length", () => {

@@ -13,9 +13,11 @@ import { fixed } from "../words.js";
  */
 export function legendFigure(layer, ends, theme) {
   const span = ends[1] - ends[0];
-  const count = 4;
+  // The count of steps that makes each a plain number: 1, 2 or 5 times a power of ten.
+  const plain = (step) => [1, 2, 5].some((s) => Math.abs(step / 10 ** Math.floor(Math.log10(step) + 1e-9) - s) < 1e-6);
+  const count = [4, 5, 3, 6].find((n) => plain(span / n)) ?? 4;
   const step = span / count;
-  const decimals = Number.isInteger(step) ? 0 : step >= 0.1 && Number.isInteger(Math.round(step * 1e6) / 1e5) ? 1 : 2;
+  const decimals = Math.max(0, Math.min(3, -Math.floor(Math.log10(step) + 1e-9) + (plain(step) ? 0 : 1)));
   const marks = Array.from({ length: count + 1 }, (_, i) => ({
     part: i / count,
     text: fixed(ends[0] + (span * i) / count, decimals),

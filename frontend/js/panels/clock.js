@@ -95,7 +95,7 @@ export class ClockPanel {
     const longest = Math.max(...rows.map((row) => row.name.length));
     const root = document.documentElement.style;
     root.setProperty("--names", `${Math.min(13, Math.max(6.5, 0.46 * longest + 0.6)).toFixed(1)}rem`);
-    root.setProperty("--strip", `${Math.min(240, rows.length * (rowHeight + 3))}px`);
+    root.setProperty("--strip", `${Math.min(320, rows.length * (rowHeight + 3))}px`);
     names.style.setProperty("--row", `${rowHeight}px`);
     const figure = stripFigure({ rows, times: day.times, flags: day.flags, width, rowHeight, zone: day.region.timezone });
     this.#figure = figure;
