@@ -9,7 +9,6 @@ from tests.simulated.moving_wall import PLACES, START, changed, flat, quiet, sam
 from skylag import chain, formats
 from skylag.errors import NotEnough
 from skylag.ionosphere import faults, fronts, irregularity, slopes
-from skylag.tables import Onsets
 
 SERIES = np.array([20.00, 20.12, 20.30, 20.15, 20.60, 21.30, 21.10, 21.55, 21.70, 22.40, 22.35])
 NO_ONSETS = fronts.Fronts((), fronts._no_onsets())
@@ -164,8 +163,17 @@ def test_two_receivers_have_nobody_to_compare_with():
     assert faults.find(rays, samples, irregularity.assess(rays)) == ()
 
 
-def test_empty_onsets_are_a_table():
-    assert len(NO_ONSETS.onsets) == 0 and isinstance(NO_ONSETS.onsets, Onsets)
+@pytest.mark.parametrize("epochs", [0, 1, 3, 22])
+def test_little_data_raises_nothing_and_breaks_nothing(calm, epochs):
+    rays, samples = calm
+    few = rays.time < START + np.timedelta64(epochs * 30, "s")
+    rays = rays.where(few)
+    samples = samples_of(rays, samples.vtec[few], samples.arc_sigma[few], samples.receiver_sigma[few])
+    steep = slopes.measure(rays, samples)
+    moving = fronts.track(rays, samples, steep)
+    found = irregularity.assess(rays, moving, None, samples)
+    assert faults.find(rays, samples, found, steep, moving) == ()
+    assert found.patches == () and moving.fronts == ()
 
 
 @pytest.mark.open_data

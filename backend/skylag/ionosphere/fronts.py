@@ -31,6 +31,7 @@ _PIERCE_KM_S = 0.06  # usual speed of a pierce point: even a wall at rest is swe
 class FrontChoices:
     """How onsets and walls are found.
 
+    step_s            faster data are thinned to this spacing
     elevation_deg     lowest elevation of a line of sight
     rate_tecu_min     a run is steep from this rate above its background on: a disturbance of 0.5 TECU amplitude and 15
                       minutes period changes by 0.21 TECU/min at most
@@ -43,6 +44,7 @@ class FrontChoices:
     tries, seed       triples tried, and where their draw starts
     """
 
+    step_s: float = 30.0
     elevation_deg: float = 15.0
     rate_tecu_min: float = 0.35
     noise_factor: float = 6.0
@@ -79,7 +81,7 @@ def track(
 def find_onsets(rays: Rays, samples: Samples, choices: FrontChoices | None = None) -> Onsets:
     """Steep runs of vertical content on every line of sight."""
     choices = choices or FrontChoices()
-    lines = lay_out(rays)
+    lines = lay_out(rays, max(choices.step_s, rays.interval_s))
     vtec = lines.layer(np.where(rays.elevation >= choices.elevation_deg, samples.vtec, np.nan))
     arcs = lines.numbers(rays.arc)
     if len(lines.times) < 8:
@@ -485,7 +487,7 @@ def _front(
     x, y = points.x + wall.height * points.lean_x, points.y + wall.height * points.lean_y
     offset = wall.offset
     along = x * north - y * east  # to the right of the heading
-    steep = steepness(wall, onsets, points, rays.interval_s)
+    steep = steepness(wall, onsets, points, max(choices.step_s, rays.interval_s))
     lean_start, lean_end = onsets.time.min(), onsets.time.max()
     steps = np.arange(lean_start, lean_end + np.timedelta64(1, "s"), np.timedelta64(round(choices.track_step_s), "s"))
     away = offset + wall.speed * ((steps - epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9)

@@ -123,6 +123,8 @@ def assess(
     choices = choices or IrregularityChoices()
     lines = lay_out(rays, max(ROTI_STEP_S, rays.interval_s))
     size = max(2, round(ROTI_WINDOW_S / lines.step_s))
+    if len(lines.times) < 2:
+        return _nothing(rays)
     arcs = lines.numbers(rays.arc)
     rot = rate_of_change(lines.layer(rays.stec_phase), lines.step_s)
     rot[(arcs[1:] != arcs[:-1]) | (arcs[1:] < 0)] = np.nan
@@ -150,6 +152,16 @@ def assess(
     aatr = _hourly(along_arc_rate(whole_rot, mapping), lines, len(rays.receivers))
     patches = _patches(index, lat, lon, times, lines, breaks, losses, rays, samples, choices)
     return Patches(patches, times, lines.receiver, lines.satellite, index, lat, lon, aatr, breaks, losses)
+
+
+def _nothing(rays: Rays) -> Patches:
+    """What is known of raggedness from less than two epochs."""
+    none, floats = np.zeros(0, dtype=np.int64), np.zeros((0, 0))
+    counts = np.zeros((0, len(rays.receivers)), dtype=np.int64)
+    rates = np.zeros((len(rays.receivers), 0))
+    return Patches(
+        (), np.zeros(0, dtype="datetime64[ns]"), none, none, floats, floats, floats, rates, counts, counts
+    )
 
 
 def _middle_of(values: Floats) -> Floats:

@@ -373,10 +373,12 @@ def field_slope_at(fields: Fields, time: Times, lat: Floats, lon: Floats) -> tup
     latest = np.minimum(latest, len(fields.times) - 1)
     nearer = np.abs(fields.times[latest] - time) < np.abs(time - fields.times[previous])
     epoch = np.where(nearer, latest, previous)
-    row = np.rint((lat - fields.lats[0]) / (fields.lats[1] - fields.lats[0])).astype(np.int64)
-    turn = (lon - fields.lons[0]) % 360.0
-    column = np.rint(turn / (fields.lons[1] - fields.lons[0])).astype(np.int64)
-    inside = (row >= 0) & (row < len(fields.lats)) & (column >= 0) & (column < len(fields.lons))
+    row = np.abs(lat[:, None] - fields.lats[None, :]).argmin(axis=1)
+    turn = np.abs((lon[:, None] - fields.lons[None, :] + 180.0) % 360.0 - 180.0)
+    column = turn.argmin(axis=1)
+    half_lat = 0.501 * abs(float(fields.lats[1] - fields.lats[0])) if len(fields.lats) > 1 else 0.5
+    half_lon = 0.501 * abs(float(fields.lons[1] - fields.lons[0])) if len(fields.lons) > 1 else 0.5
+    inside = (np.abs(lat - fields.lats[row]) <= half_lat) & (turn.min(axis=1) <= half_lon)
     place = (epoch, np.where(inside, row, 0), np.where(inside, column, 0))
     slope = np.where(inside, fields.slope[place].astype(np.float64), np.nan)
     return slope, np.where(inside, fields.slope_sigma[place].astype(np.float64), np.nan)
