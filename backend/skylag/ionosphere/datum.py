@@ -59,10 +59,15 @@ def number(rays: Rays, channels: Mapping[str, int], block: Ints) -> Unknowns:
     # A code bias belongs to the two codes, whatever phases go with them.
     codes = [(pair.system, pair.code1, pair.code2) for pair in rays.pairs]
     same = np.array([codes.index(code) for code in codes], dtype=np.int64)[rays.pair]
-    receivers = np.stack([rays.receiver, same, channel, block], axis=1)
-    receiver_list, receiver_row = np.unique(receivers, axis=0, return_inverse=True)
-    satellites = np.stack([rays.satellite, same], axis=1)
-    satellite_list, satellite_row = np.unique(satellites, axis=0, return_inverse=True)
+    pairs, blocks = len(rays.pairs), int(block.max(initial=0)) + 1
+    # Channels run from -7 to +6 (ICD GLONASS 5.1); keys are few, so a table of those present beats sorting rays.
+    receiver_key, receiver_row = _present(((rays.receiver * pairs + same) * 32 + channel + 8) * blocks + block)
+    satellite_key, satellite_row = _present(rays.satellite * pairs + same)
+    receiver_list = np.stack(
+        [receiver_key // (blocks * 32 * pairs), receiver_key // (blocks * 32) % pairs,
+         receiver_key // blocks % 32 - 8, receiver_key % blocks], axis=1,
+    )  # fmt: skip
+    satellite_list = np.stack([satellite_key // pairs, satellite_key % pairs], axis=1)
     count = len(receiver_list)
     return Unknowns(
         kind=("receiver",) * count + ("satellite",) * len(satellite_list),
@@ -71,9 +76,16 @@ def number(rays: Rays, channels: Mapping[str, int], block: Ints) -> Unknowns:
         pair=np.concatenate([receiver_list[:, 1], satellite_list[:, 1]]),
         channel=np.concatenate([receiver_list[:, 2], channel_of[satellite_list[:, 0]]]),
         block=np.concatenate([receiver_list[:, 3], np.zeros(len(satellite_list), dtype=np.int64)]),
-        receiver_row=receiver_row.ravel().astype(np.int64),
-        satellite_row=satellite_row.ravel().astype(np.int64) + count,
+        receiver_row=receiver_row,
+        satellite_row=satellite_row + count,
     )  # fmt: skip
+
+
+def _present(key: Ints) -> tuple[Ints, Ints]:
+    """The keys that occur, ascending, and each row's place among them."""
+    occurs = np.zeros(int(key.max(initial=-1)) + 1, dtype=bool)
+    occurs[key] = True
+    return np.flatnonzero(occurs), (np.cumsum(occurs) - 1)[key]
 
 
 @dataclass(frozen=True)

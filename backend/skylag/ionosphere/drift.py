@@ -43,8 +43,10 @@ def wanderings(receiver_row: Ints, arc: Ints, seconds: Floats, residual: Floats,
     block = (seconds // BLOCK_S).astype(np.int64)
     blocks = int(block.max(initial=0)) + 1
     value = residual / factor
-    cell, cell_of_row = np.unique(np.stack([receiver_row, block, arc], axis=1), axis=0, return_inverse=True)
+    arcs = int(arc.max(initial=0)) + 1
+    key, cell_of_row = np.unique((receiver_row * blocks + block) * arcs + arc, return_inverse=True)
     cell_of_row = cell_of_row.ravel()
+    cell = np.stack([key // (arcs * blocks), key // arcs % blocks], axis=1)
     points = np.bincount(cell_of_row)
     mean = np.bincount(cell_of_row, value) / points
     whole = points >= 0.25 * np.median(points)
