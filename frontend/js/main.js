@@ -82,8 +82,10 @@ function showAll() {
 
 /** The first epoch to look at when the link names none: the middle of the day's worst flag, else the day's middle. */
 function firstTime(day) {
-  const rank = { broken: 3, strained: 2, holds: 1, unseen: 0 };
-  const worst = [...day.flags].sort((a, b) => (rank[b.state] ?? 0) - (rank[a.state] ?? 0) || (b.slope || 0) - (a.slope || 0))[0];
+  const rank = { broken: 2, strained: 1 };
+  const [worst] = day.flags
+    .filter((flag) => flag.state in rank)
+    .sort((a, b) => rank[b.state] - rank[a.state] || (b.slope || 0) - (a.slope || 0));
   const wish = worst ? (worst.start + worst.end) / 2 : (day.times[0] + day.times[day.times.length - 1]) / 2;
   return day.times[nearest(day.times, wish)];
 }
