@@ -17,8 +17,9 @@ NUMBERS = st.sampled_from(["<f4", ">f4", "<f8", "<u2", "|u1", "<i8", ">i2", "|i1
 INSTANTS = st.integers(0, 2**62).map(lambda ns: np.datetime64(ns, "ns"))
 # PostgreSQL keeps no zero character in text; nor does anyone write one.
 TEXT = st.text(st.characters(exclude_characters="\x00", exclude_categories=["Cs"]), max_size=40)
-FLOATS = st.floats(allow_infinity=False)
-PLACES = st.floats(-180, 180)
+# Plus nought: SQLite does not keep the sign of zero, and none of these numbers means anything by it.
+FLOATS = st.floats(allow_infinity=False).map(lambda value: value + 0.0)
+PLACES = st.floats(-180, 180).map(lambda value: value + 0.0)
 FLAGS = st.builds(
     Flag, start=INSTANTS, end=INSTANTS, lat=PLACES, lon=PLACES, kind=st.sampled_from(FLAG_KINDS),
     slope_mm_per_km=FLOATS, sigma_mm_per_km=FLOATS, speed_m_s=FLOATS, heading_deg=FLOATS,

@@ -25,7 +25,7 @@ VALUES = ODD | st.text(max_size=12) | st.floats().map(str) | st.integers().map(s
 GOOD = {"region": REGION.name, "day": str(STORM_DAY), "lat": "-41", "lon": "147", "time": "2031-05-11T05:00:00Z",
         "from": "2031-05-11T05:00:00Z", "to": "2031-05-11T06:00:00Z", "layers": "state", "version": "1", "south": "-43",
         "north": "-36", "west": "142", "east": "150", "since": "2031-05-01", "until": "2031-05-31"}  # fmt: skip
-MANY = settings(max_examples=250, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+MANY = settings(max_examples=100, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 
 
 def names_of(route: APIRoute) -> list[str]:
@@ -38,7 +38,7 @@ QUESTIONS = {route.path: names_of(route) for route in routes() if names_of(route
 
 
 @pytest.mark.parametrize("address", QUESTIONS)
-@settings(MANY, max_examples=60)
+@settings(MANY, max_examples=25)
 @given(data=st.data())
 def test_no_question_is_a_defect(client: TestClient, address: str, data: st.DataObject) -> None:
     """Good questions with one or two things wrong."""
