@@ -17,7 +17,7 @@ from typing import TextIO
 
 from skylag import settings
 from skylag.chain import Choices
-from skylag.errors import SkylagError
+from skylag.errors import Refused, SkylagError
 from skylag.formats import results
 from skylag.ionosphere.pairs import USABLE_PAIRS, parse_wanted
 from skylag.jobs import work
@@ -28,6 +28,7 @@ CAUTION = (
     "Planning aid, not for navigation. Official notices, the service provider's and the receiver maker's information, "
     "local rules and licensed practice come first."
 )
+_FIRST_DAY = "2031-03-12"  # of the sample days: the storm has the most to see
 _STAGES = {
     "look": (0.00, "looking at the files"),
     "orbits": (0.03, "orbits and biases"),
@@ -115,7 +116,7 @@ def _demo_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]"
         "demo",
         help="compute the invented sample days and open the page",
         description="Compute the three invented sample days (calm, storm, recovery) into an embedded archive and open "
-        "the page on the loopback address. Days already there are not computed again.",
+        "the page on the loopback address as soon as the first is there. Days already there are not computed again.",
         epilog=CAUTION,
     )
     parser.add_argument("--archive", default="skylag-demo", metavar="PLACE", help="folder of the archive (skylag-demo)")
@@ -235,24 +236,35 @@ def _demo(options: argparse.Namespace) -> int:
 
     folder = sample_folder()
     region = settings.read_region(folder / "region.toml")
-    days = sorted(p for p in folder.iterdir() if p.is_dir() and _is_date(p.name))
+    days = sorted((p for p in folder.iterdir() if p.is_dir() and _is_date(p.name)), key=lambda p: p.name != _FIRST_DAY)
     with open_archive(options.archive) as archive:
         there = {str(head.day) for head in archive.days() if head.region == region.name}
-        todo = [path for path in days if path.name not in there]
-        if todo:
-            began = time.perf_counter()
-            with open_executor(options.workers or settings.default_workers()) as executor:
-                for number, path in enumerate(todo):
-                    bar = _Bar(f"{path.name} ({number + 1} of {len(todo)})")
-                    made = work.network_day(
-                        [path], region=region, executor=executor, simulated=True, progress=bar.tell
-                    )
-                    archive.save(made.products)
-                    bar.close()
-            print(f"{len(todo)} sample days computed in {time.perf_counter() - began:.0f} s, kept in {options.archive}")
+    todo = [path for path in days if path.name not in there]
+
+    def compute(some: Sequence[Path]) -> None:
+        # A connection of its own: the page reads while this writes.
+        with open_archive(options.archive) as own, open_executor(options.workers or settings.default_workers()) as pool:
+            for path in some:
+                bar = _Bar(f"sample day {path.name}")
+                made = work.network_day([path], region=region, executor=pool, simulated=True, progress=bar.tell)
+                own.save(made.products)
+                bar.close()
+
     if options.no_serve:
+        compute(todo)
         return 0
-    return _open_page(options.archive, "127.0.0.1", options.port, browser=not options.no_browser)
+    # The page opens with the first day; the others follow while it is looked at.
+    if not there:
+        compute(todo[:1])
+        todo = todo[1:]
+    if todo:
+        threading.Thread(target=compute, args=(todo,), daemon=True).start()
+    try:
+        return _open_page(options.archive, "127.0.0.1", options.port, browser=not options.no_browser)
+    except Refused:
+        if options.port:
+            raise
+        return _open_page(options.archive, "127.0.0.1", "0", browser=not options.no_browser)
 
 
 def _is_date(name: str) -> bool:

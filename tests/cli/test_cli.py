@@ -29,8 +29,11 @@ def few(sample_folder: Path) -> list[str]:
     return [str(next((sample_folder / DAY).glob(f"{name}*"))) for name in ("FENN", "EDRO", "VANP", "MRGT", "TARN")]
 
 
+Done = tuple[subprocess.CompletedProcess[str], Path]
+
+
 @pytest.fixture(scope="module")
-def done(sample_folder: Path, tmp_path_factory: pytest.TempPathFactory) -> tuple[subprocess.CompletedProcess[str], Path]:
+def done(sample_folder: Path, tmp_path_factory: pytest.TempPathFactory) -> Done:
     out = tmp_path_factory.mktemp("results")
     region = str(sample_folder / "region.toml")
     return run("day", *few(sample_folder), "--out", str(out), "--region", region, "--every", "15"), out
@@ -75,7 +78,7 @@ def test_wrong_words_are_explained(words: list[str], status: int, said: str, tmp
     assert not list(tmp_path.iterdir()), "a command that fails leaves nothing behind"
 
 
-def test_a_day_tells_what_it_did(done: tuple[subprocess.CompletedProcess[str], Path]) -> None:
+def test_a_day_tells_what_it_did(done: Done) -> None:
     answer, out = done
     assert answer.returncode == 0, answer.stderr
     assert "receivers 4" in answer.stdout
@@ -84,7 +87,7 @@ def test_a_day_tells_what_it_did(done: tuple[subprocess.CompletedProcess[str], P
     assert sorted(p.name for p in out.iterdir()) == sorted(results.NAMES)
 
 
-def test_biases_csv_is_the_contract(done: tuple[subprocess.CompletedProcess[str], Path]) -> None:
+def test_biases_csv_is_the_contract(done: Done) -> None:
     with (done[1] / "biases.csv").open(encoding="utf-8") as lines:
         rows = list(csv.DictReader(lines))
     assert tuple(rows[0]) == delimited.BIAS_COLUMNS
@@ -98,7 +101,7 @@ def test_biases_csv_is_the_contract(done: tuple[subprocess.CompletedProcess[str]
         assert abs(np.mean(values)) < 1e-3, "zero mean over the satellites, as the datum says"
 
 
-def test_slant_parquet_is_the_contract(done: tuple[subprocess.CompletedProcess[str], Path]) -> None:
+def test_slant_parquet_is_the_contract(done: Done) -> None:
     table = pd.read_parquet(done[1] / "slant.parquet")
     assert tuple(table.columns) == delimited.SLANT_COLUMNS
     assert table.time.dtype == "datetime64[ns]"
@@ -109,7 +112,7 @@ def test_slant_parquet_is_the_contract(done: tuple[subprocess.CompletedProcess[s
     assert np.isfinite(table.stec_tecu).all()
 
 
-def test_field_nc_is_the_contract(done: tuple[subprocess.CompletedProcess[str], Path]) -> None:
+def test_field_nc_is_the_contract(done: Done) -> None:
     with xr.open_dataset(done[1] / "field.nc", engine="h5netcdf") as held:
         assert held.attrs["Conventions"].startswith("CF-")
         assert dict(held.sizes) == {"time": 96, "lat": 15, "lon": 17}
@@ -131,7 +134,7 @@ def test_field_nc_is_the_contract(done: tuple[subprocess.CompletedProcess[str], 
     assert back.times[0] == np.datetime64(DAY, "ns")
 
 
-def test_flags_csv_is_the_contract(done: tuple[subprocess.CompletedProcess[str], Path]) -> None:
+def test_flags_csv_is_the_contract(done: Done) -> None:
     with (done[1] / "flags.csv").open(encoding="utf-8") as lines:
         rows = list(csv.DictReader(lines))
     assert rows, "the storm day has flags"
@@ -148,7 +151,7 @@ def test_flags_csv_is_the_contract(done: tuple[subprocess.CompletedProcess[str],
     assert all(float(row["speed_m_s"]) > 0 and 0 <= float(row["heading_deg"]) < 360 for row in fronts)
 
 
-def test_day_json_tells_where_numbers_come_from(done: tuple[subprocess.CompletedProcess[str], Path]) -> None:
+def test_day_json_tells_where_numbers_come_from(done: Done) -> None:
     facts = json.loads((done[1] / "day.json").read_text(encoding="utf-8"))
     assert facts["day"] == DAY
     assert len(facts["inputs"]) == 5
@@ -161,7 +164,7 @@ def test_day_json_tells_where_numbers_come_from(done: tuple[subprocess.Completed
 
 
 def test_a_run_that_fails_leaves_old_results_as_they_were(
-    done: tuple[subprocess.CompletedProcess[str], Path], tmp_path: Path
+    done: Done, tmp_path: Path
 ) -> None:
     before = {path.name: path.read_bytes() for path in done[1].iterdir()}
     (tmp_path / "broken.rnx").write_text("nothing of use\n")
