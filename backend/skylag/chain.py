@@ -4,7 +4,7 @@
 file, asks no clock: whoever calls reads (`formats`), keeps (`archive`) and measures time (`jobs`).
 """
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -13,11 +13,12 @@ import numpy as np
 from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.errors import NotEnough
 from skylag.impact import states
-from skylag.ionosphere import adjustment, faults, fronts, geometry, irregularity, orbits, slopes
+from skylag.ionosphere import adjustment, background, faults, fronts, geometry, irregularity, left_out, orbits, slopes
 from skylag.ionosphere import field as vertical_field
 from skylag.ionosphere.adjustment import AdjustmentChoices
 from skylag.ionosphere.arcs import ArcChoices, cut, reasons, slip_list
-from skylag.ionosphere.field import FieldChoices
+from skylag.ionosphere.background import Background
+from skylag.ionosphere.field import FieldChoices, Hour, Made
 from skylag.ionosphere.fronts import FrontChoices
 from skylag.ionosphere.irregularity import IrregularityChoices
 from skylag.ionosphere.pairs import choose
@@ -137,6 +138,12 @@ def channels_of(sources: Sequence[Ephemerides | PreciseOrbits]) -> dict[str, int
     return channels
 
 
+def background_of(sources: Sequence[Ephemerides | PreciseOrbits]) -> Background | None:
+    """The broadcast model of the navigation records, the first that tells one; None where none does."""
+    told = (background.broadcast(source.ionosphere) for source in sources if isinstance(source, Ephemerides))
+    return next((model for model in told if model is not None), None)
+
+
 def estimate(
     rays: Rays,
     region: Region,
@@ -145,11 +152,15 @@ def estimate(
     prior: Biases | None = None,
     channels: Mapping[str, int] | None = None,
     progress: Progress | None = None,
+    beyond: Background | None = None,
+    run: Callable[[Callable[[Hour], Made], Iterable[Hour]], Iterable[Made]] = map,
 ) -> Estimate:
     """All products of one network day from the rays of its receivers.
 
     day       the GPS-time day; maps are made from its first to its last epoch that has data
     progress  told the stage and the share of it done
+    beyond    what the maps fade into where no line of sight passes (`background_of`); a plain model when None
+    run       how the hours of maps are made: `map`, or an executor's
     """
     tell = progress or (lambda stage, share: None)
     tell("biases", 0.0)
@@ -163,18 +174,23 @@ def estimate(
     end = min(last, midnight + np.timedelta64(86_400, "s") - np.timedelta64(1, "ns")) + np.timedelta64(1, "ns")
     epochs = vertical_field.epochs_between(start, end, choices.epoch_step_s)
     fields = vertical_field.fit(
-        samples, region.lats, region.lons, epochs, choices.maps, lambda share: tell("maps", share)
+        samples, region.lats, region.lons, epochs, choices.maps, lambda share: tell("maps", share), beyond, run
     )
+    tell("left out", 0.0)
+    foretold = left_out.check(samples, region.lats, region.lons, epochs, choices.maps)
     tell("slopes", 0.0)
     steep = slopes.measure(rays, samples, fields, choices.slopes)
     tell("fronts", 0.0)
     moving = fronts.track(rays, samples, steep, choices.fronts)
     tell("irregular", 0.0)
     ragged = irregularity.assess(rays, moving, choices.irregularity, samples)
-    broken = faults.find(rays, samples, ragged, steep)
+    broken = faults.find(rays, samples, ragged, steep, moving)
     tell("states", 0.0)
     judged = states.judge(fields, steep, moving, ragged, region, broken, fronts.arrivals(moving, rays, region.sites))
-    facts = {"calibration": dict(calibration.summary), "slopes": dict(steep.summary)}
+    facts = {
+        "calibration": dict(calibration.summary), "slopes": dict(steep.summary), "left_out": dict(foretold.facts()),
+        "beyond_sight": (beyond or background.PLAIN).name,
+    }  # fmt: skip
     return Estimate(
         calibration, samples, judged.fields, judged.flags, judged.site_states, judged.site_reasons, facts,
         limits_of_sight(rays, calibration),

@@ -106,7 +106,7 @@ class Signals:
         shape = (len(self.times), len(self.satellites))
         _require(len(self.resets) == shape[0], self, "resets must have one value per epoch")
         _require(
-            all(a.shape == shape for a in (*self.values.values(), *self.lock.values())),
+            all(a.shape == shape for table in (self.values, self.lock) for a in table.values()),
             self,
             f"each signal must have the shape {shape} (epochs, satellites)",
         )
@@ -312,12 +312,16 @@ class Region:
     @property
     def lats(self) -> Floats:
         """Grid latitudes, south to north."""
-        return self.south + self.step_deg * np.arange(int(np.floor((self.north - self.south) / self.step_deg + 1.0001)))
+        return self._axis(self.south, self.north)
 
     @property
     def lons(self) -> Floats:
         """Grid longitudes, west to east."""
-        return self.west + self.step_deg * np.arange(int(np.floor((self.east - self.west) / self.step_deg + 1.0001)))
+        return self._axis(self.west, self.east)
+
+    def _axis(self, first: float, last: float) -> Floats:
+        count = int(np.floor((last - first) / self.step_deg + 1.0001))
+        return np.asarray(first + self.step_deg * np.arange(count), dtype=np.float64)
 
 
 # ---------------------------------------------------------------------------------------------- the science

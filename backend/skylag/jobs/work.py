@@ -23,6 +23,7 @@ from skylag import chain, formats
 from skylag.chain import Choices, ReceiverDay
 from skylag.errors import FormatError, NotEnough, SkylagError
 from skylag.formats.glance import glance
+from skylag.ionosphere import bias_algebra
 from skylag.ionosphere.pairs import wanted_codes
 from skylag.tables import (
     Biases,
@@ -169,10 +170,9 @@ def _left_out(path: Path, trouble: SkylagError) -> LeftOut:
     return LeftOut(str(path), int(trouble.details.get("line", 0) or 0), text)
 
 
-def read_orbits(paths: Sequence[str]) -> tuple[list[Ephemerides | PreciseOrbits], list[Problem], list[LeftOut]]:
-    """Orbit sources, tabulated ones first; problems met; files left out."""
-    tabulated: list[Ephemerides | PreciseOrbits] = []
-    broadcast: list[Ephemerides | PreciseOrbits] = []
+def _read_each(paths: Sequence[str]) -> tuple[list[Any], list[Problem], list[LeftOut]]:
+    """The tables of the files, the problems met, and the files that could not be read."""
+    tables: list[Any] = []
     problems: list[Problem] = []
     left_out: list[LeftOut] = []
     for path in paths:
@@ -182,36 +182,24 @@ def read_orbits(paths: Sequence[str]) -> tuple[list[Ephemerides | PreciseOrbits]
             left_out.append(_left_out(Path(path), trouble))
             continue
         problems += reading.problems
-        if isinstance(reading.table, PreciseOrbits):
-            tabulated.append(reading.table)
-        elif isinstance(reading.table, Ephemerides):
-            broadcast.append(reading.table)
-    return tabulated + broadcast, problems, left_out
+        tables.append(reading.table)
+    return tables, problems, left_out
+
+
+def read_orbits(paths: Sequence[str]) -> tuple[list[Ephemerides | PreciseOrbits], list[Problem], list[LeftOut]]:
+    """Orbit sources, tabulated ones first; problems met; files left out."""
+    tables, problems, left_out = _read_each(paths)
+    tabulated = [table for table in tables if isinstance(table, PreciseOrbits)]
+    return [*tabulated, *(table for table in tables if isinstance(table, Ephemerides))], problems, left_out
 
 
 def read_biases(paths: Sequence[str]) -> tuple[Biases | None, list[Problem], list[LeftOut]]:
-    """All published biases as one table, None where there are none."""
-    tables: list[Biases] = []
-    problems: list[Problem] = []
-    left_out: list[LeftOut] = []
-    for path in paths:
-        try:
-            reading = formats.read(Path(path))
-        except SkylagError as trouble:
-            left_out.append(_left_out(Path(path), trouble))
-            continue
-        problems += reading.problems
-        if isinstance(reading.table, Biases):
-            tables.append(reading.table)
-    if not tables:
+    """All published biases as one table, None where there are none; problems met; files left out."""
+    tables, problems, left_out = _read_each(paths)
+    known = [table for table in tables if isinstance(table, Biases)]
+    if not known:
         return None, problems, left_out
-    columns = ("kind", "name", "system", "code1", "code2", "value_ns", "sigma_ns", "start", "end")
-    joined = Biases(
-        **{name: np.concatenate([getattr(table, name) for table in tables]) for name in columns},
-        source=", ".join(dict.fromkeys(table.source for table in tables)),
-        datum="as published",
-    )
-    return joined, problems, left_out
+    return replace(bias_algebra.join(known), datum="as published"), problems, left_out
 
 
 @dataclass(frozen=True)
