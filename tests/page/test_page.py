@@ -6,6 +6,7 @@ node is no dependency of the program: without it only the tests that need it are
 import re
 import shutil
 import subprocess
+from collections.abc import Callable
 from html.parser import HTMLParser
 from pathlib import Path
 
@@ -129,3 +130,42 @@ def test_controls_have_names(page: _Elements) -> None:
 def test_page_is_light() -> None:
     """Without plotly.js the page weighs under 250 kB, uncompressed (budget of the project)."""
     assert sum(path.stat().st_size for path in FRONTEND.rglob("*") if path.is_file()) < 250_000
+
+
+def _tokens(theme: str) -> dict[str, str]:
+    css = (FRONTEND / "style" / "tokens.css").read_text(encoding="utf-8")
+    start = css.index(":root {") if theme == "day" else css.index(':root[data-theme="night"]')
+    block = css[css.index("{", start) + 1 : css.index("}", start)]
+    return dict(re.findall(r"--([a-z-]+):\s*(#[0-9a-f]{6})", block))
+
+
+def _contrast(one: str, other: str) -> float:
+    """Contrast ratio of two colours by the definitions of WCAG 2.2; written apart from the page's own function."""
+
+    def luminance(colour: str) -> float:
+        parts = [int(colour[at : at + 2], 16) / 255 for at in (1, 3, 5)]
+        red, green, blue = (c / 12.92 if c <= 0.04045 else ((c + 0.055) / 1.055) ** 2.4 for c in parts)
+        return 0.2126 * red + 0.7152 * green + 0.0722 * blue
+
+    dark, light = sorted((luminance(one), luminance(other)))
+    return (light + 0.05) / (dark + 0.05)
+
+
+@pytest.mark.parametrize("theme", ["day", "night"])
+def test_contrast_of_text_and_of_edges(theme: str, evidence: Callable[..., None]) -> None:
+    """Text reaches 4.5 to 1 on every ground it stands on, edges of controls and states 3 to 1 on paper."""
+    tokens = _tokens(theme)
+    grounds = [tokens[name] for name in ("paper", "paper-raised", "paper-sunk")]
+    texts = [tokens[name] for name in ("ink", "muted", "accent", "broken")]
+    edges = [tokens[name] for name in ("edge", "holds-edge", "strained-edge", "broken-edge", "unseen-edge")]
+    text = min(_contrast(one, ground) for one in texts for ground in grounds)
+    edge = min(_contrast(one, tokens["paper"]) for one in edges)
+    source = "WCAG 2.2, success criteria {}; W3C Recommendation, definitions of contrast ratio and relative luminance"
+    evidence(
+        f"lowest contrast of text by {theme}: what it lacks to 4.5", source=source.format("1.4.3"),
+        expected=0.0, got=max(0.0, 4.5 - text), tolerance=0.0, unit="to 1", at_most=True,
+    )  # fmt: skip
+    evidence(
+        f"lowest contrast of edges by {theme}: what it lacks to 3", source=source.format("1.4.11"),
+        expected=0.0, got=max(0.0, 3.0 - edge), tolerance=0.0, unit="to 1", at_most=True,
+    )  # fmt: skip
