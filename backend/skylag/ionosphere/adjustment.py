@@ -190,8 +190,7 @@ def _design(
     values, first, splines = time_splines(seconds[used], choices.knots_s)
     order = np.lexsort((rays.arc[used], first))
     used, values, first = used[order], values[order], first[order]
-    places = len({receiver.name for receiver in rays.receivers})
-    degree = choices.degree_network if places >= 4 else choices.degree_single
+    degree = choices.degree_network if _places(rays, used) >= 4 else choices.degree_single
     lat, lon = rays.pierce_lat[used], rays.pierce_lon[used]
     terms = place_terms(lat, lon, _middle(lat, lon), degree)
     vertical = (values[:, :, None] * terms[:, None, :]).reshape(len(used), -1)
@@ -201,6 +200,11 @@ def _design(
         high=layer.slant[used], starts=np.concatenate([np.flatnonzero(np.diff(first, prepend=-1)), [len(first)]]),
         biases=len(unknowns), splines=splines, terms=terms.shape[1], degree=degree,
     ), used  # fmt: skip
+
+
+def _places(rays: Rays, used: Ints) -> int:
+    """How many receivers carry the adjustment."""
+    return len({rays.receivers[number].name for number in np.unique(rays.receiver[used])})
 
 
 def _middle(lat: Floats, lon: Floats) -> tuple[float, float]:
@@ -251,19 +255,23 @@ def _iterate(
     arcs = len(arc_numbers)
     first = np.unique(arc_of_row, return_index=True)[1]
     level = part.level_sigma[first]
+    receiver, receiver_of_arc = part.receiver, part.receiver[first]
     hour = ((part.time - part.time.min()).astype("timedelta64[ns]").astype(np.int64) // 3_600_000_000_000).astype(int)
     model = np.full(hour.max() + 1, 1.0)  # vertical, TECU; found from the residuals of each hour
     model_arc = 0.5  # slant-level error of the model along an arc, TECU; found from the scatter of arc effects
     relative = relative_mapping_sigma(part.elevation, part.shell_height_m, choices.shell_height_sigma_m)
     loosen_arc, loosen_row = np.ones(arcs), np.ones(len(part))
+    # A receiver whose levels or rows scatter more than is told of them gets larger sigmas, itself and for the others.
+    worse_arc, worse_row = np.ones(len(part.receivers)), np.ones(len(part.receivers))
     vertical_content = np.zeros(len(part))
     x = np.zeros(design.size)
     widened = 1.0
     for turn in range(choices.rounds):
         own = part.noise_sigma**2 + (part.mapping * model[hour]) ** 2
         own += (part.mapping * relative * np.maximum(vertical_content, 0.0)) ** 2
+        own *= worse_row[receiver] ** 2
         weight = 1.0 / (own * loosen_row**2 * widened)
-        arc_variance = (level**2 + model_arc**2) * loosen_arc**2
+        arc_variance = (level**2 + model_arc**2) * (loosen_arc * worse_arc[receiver_of_arc]) ** 2
         normal = Normal(design, weight, arc_of_row, arc_variance, knowledge)
         x, effect = normal.solve(part.stec)
         residual = part.stec - design.predict(x)
@@ -277,11 +285,15 @@ def _iterate(
         ])  # fmt: skip
         model_arc = float(np.sqrt(np.clip(np.median(effect**2) / 0.455 - np.median(level**2), 0.1**2, 5.0**2)))
         ratio = np.abs(inside) / np.sqrt(own)
+        again = _scatter_by(receiver, ratio, len(worse_row))
+        worse_row, ratio = worse_row * again, ratio / again[receiver]
         loosen_row = np.sqrt(np.maximum(1.0, ratio / choices.robust_limit))
         loosen_row[ratio > 8.0] *= 10.0  # far outside: as good as left out
         widened = _err_together(part, inside / np.sqrt(own))
         strength = np.abs(effect) / np.sqrt(level**2 + model_arc**2)
-        loosen_arc = np.maximum(1.0, strength / choices.robust_limit)
+        worse_arc = _scatter_by(receiver_of_arc, strength, len(worse_arc))
+        strength = strength / worse_arc[receiver_of_arc]
+        loosen_arc = np.sqrt(np.maximum(1.0, strength / choices.robust_limit))
         if turn == 0:
             loosen_row = np.minimum(loosen_row, 3.0)  # the first residuals still hold the whole model
     amplitude = float(x[-1])
@@ -291,12 +303,21 @@ def _iterate(
     ]
     moved = np.array([normal.respond(disturbance) for disturbance in disturbances])
     covariance = normal.covariance()
+    level = level * worse_arc[receiver_of_arc]
     share = level**2 / (level**2 + model_arc**2)
     remaining = 1.0 / (1.0 / arc_variance + normal.mass)
     arc_sigma = np.sqrt(level**2 * (1.0 - share) + share**2 * np.minimum(remaining, level**2))
     return _Estimate(
         x, covariance, moved, residual, effect, share, arc_sigma, arc_of_row, arc_numbers, model, hour, widened
     )  # fmt: skip
+
+
+def _scatter_by(group: Ints, ratio: Floats, groups: int) -> Floats:
+    """By how much the ratios |value| / sigma of a group scatter more than promised: robust, at least 1."""
+    found = np.ones(groups)
+    for number in np.unique(group):
+        found[number] = max(1.0, 1.4826 * float(np.median(ratio[group == number])))
+    return found
 
 
 def _err_together(part: Rays, normalised: Floats) -> float:
@@ -393,7 +414,7 @@ def _summary(
         for h in np.unique(estimate.hour)
     }
     drifts = _drifts(rays, part, used, per_ns, unknowns, estimate)
-    places = len({receiver.name for receiver in rays.receivers})
+    places = _places(rays, used)
     return {
         "rays_used": len(part),
         "receivers": places,

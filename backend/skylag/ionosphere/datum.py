@@ -138,7 +138,9 @@ class _Book:
         self.lines: dict[str, int] = {}
         self.notes: list[str] = []
         self.levelled: list[Ints] = []
-        self.source = (prior.source or "the prior") if prior is not None else ""
+        # The names of files without their folders.
+        words = prior.source.split() if prior is not None else []
+        self.source = " ".join(word.rsplit("/", 1)[-1] for word in words) or "the prior"
 
     def told(self, row: int) -> tuple[float, float] | None:
         """What the prior says of a bias: value and sigma [ns]."""
@@ -173,7 +175,7 @@ class _Book:
         told = {row: found for row in satellites if (found := self.told(row)) is not None}
         pair = self.rays.pairs[self.unknowns.pair[rows[0]]]
         partners = self._partners(satellites)
-        what = f"{pair.system} {pair.name}"
+        what = f"{pair.system} {pair.name}" + (" by channel" if pair.system == "R" else "")
         if told and self.walk is None:
             for row, (value, _) in told.items():
                 self.knowledge.append(known(np.array([row]), np.ones(1), value, _EXACT))
@@ -275,7 +277,8 @@ class _Book:
         columns = np.array([*partners, *partners.values()])
         signs = np.concatenate([np.full(count, 1.0 / count), np.full(count, -1.0 / count)])
         self.knowledge.append(known(columns, signs, 0.0, _EXACT))
-        self._say(rows, what, f"zero mean of the differences of {count} satellites from {second.name}")
+        words = f"zero mean of the differences of {count} satellites from {second.name}"
+        self._say(rows, what, words if count > 1 else f"its one common satellite as on {second.name}")
 
     def _code_gap(self, row: int, other: int) -> float | None:
         """Bias of a row minus that of the same satellite on another pair [ns], where the prior tells both codes."""
@@ -302,7 +305,7 @@ class _Book:
 
     def close(self) -> Datum:
         """All of it; groups with the same words are counted together."""
-        lines = [line if times == 1 else f"{line} ({times} groups)" for line, times in self.lines.items()]
+        lines = [line if times == 1 else f"{line} ({times} times)" for line, times in self.lines.items()]
         return Datum(self.knowledge, tuple(self.words), "; ".join(lines), tuple(self.notes))
 
 
