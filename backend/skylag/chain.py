@@ -176,7 +176,6 @@ def estimate(
     fields = vertical_field.fit(
         samples, region.lats, region.lons, epochs, choices.maps, lambda share: tell("maps", share), beyond, run
     )
-    tell("left out", 0.0)
     foretold = left_out.check(samples, region.lats, region.lons, epochs, choices.maps)
     tell("slopes", 0.0)
     steep = slopes.measure(rays, samples, fields, choices.slopes)
@@ -188,9 +187,11 @@ def estimate(
     tell("states", 0.0)
     judged = states.judge(fields, steep, moving, ragged, region, broken, fronts.arrivals(moving, rays, region.sites))
     facts = {
-        "calibration": dict(calibration.summary), "slopes": dict(steep.summary), "left_out": dict(foretold.facts()),
+        "calibration": dict(calibration.summary),
+        "slopes": dict(steep.summary),
+        "receivers_left_out": dict(foretold.facts()),
         "beyond_sight": (beyond or background.PLAIN).name,
-    }  # fmt: skip
+    }
     return Estimate(
         calibration, samples, judged.fields, judged.flags, judged.site_states, judged.site_reasons, facts,
         limits_of_sight(rays, calibration),

@@ -22,7 +22,7 @@ from skylag.ionosphere.kriging import Estimates, System, at, solve
 from skylag.tables import UNSEEN, Bools, Fields, Floats, Ints, Samples, Times
 
 __all__ = ["FieldChoices", "Hour", "Made", "at_places", "epochs_between", "fit", "join", "make",
-           "plane_km", "prepare"]  # fmt: skip
+           "plane_km", "prepare", "systems"]  # fmt: skip
 
 _HOUR = np.timedelta64(3600, "s")
 _LEAST_RAYS = 4
@@ -158,7 +158,7 @@ def make(hour: Hour) -> Made:
     names = ("vtec", "vtec_sigma", "slope", "slope_sigma", "slope_east", "slope_north")
     layers: dict[str, npt.NDArray[np.float32]] = {name: np.full(shape, np.nan, dtype=np.float32) for name in names}
     support: npt.NDArray[np.uint16] = np.zeros(shape, dtype=np.uint16)
-    for number, system in enumerate(_systems(hour)):
+    for number, system in enumerate(systems(hour)):
         if system is None:
             continue
         answer = _everywhere(system, hour)
@@ -207,7 +207,7 @@ def at_places(
 # ---------------------------------------------------------------------------------------------- one epoch
 
 
-def _systems(hour: Hour) -> Iterable[System | None]:
+def systems(hour: Hour) -> Iterable[System | None]:
     """The solved equations of each epoch of an hour; None where there are too few rays."""
     whole = [part for part in hour.parts if part is not None and len(part) >= _LEAST_RAYS]
     if not whole:
