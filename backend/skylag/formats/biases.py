@@ -185,7 +185,7 @@ def _time_tag(instant: np.datetime64) -> str:
     return f"{year}:{int((day - year.astype('datetime64[D]')).astype(np.int64)) + 1:03d}:{second:05d}"
 
 
-def write_bias_sinex(biases: Biases, created: np.datetime64, agency: str = "XXX", description: str = "") -> str:
+def write_bias_sinex(biases: Biases, created: np.datetime64, agency: str = "SKL", description: str = "") -> str:
     """Bias-SINEX 1.00 text of a table of biases: differential ones as DSB, those of one code as OSB.
 
     created  GPS time written as the time of making; agency  three letters
