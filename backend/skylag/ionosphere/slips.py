@@ -34,6 +34,8 @@ FIRST, GAP, SLIP, RESET = (ARC_BEGAN.index(word) for word in ("first", "gap", "s
 _SMOOTH = 4  # degree of the geometry within a window of a few minutes
 _LEAST = 7  # points a window needs for that degree and a step
 _CLOCK_SATELLITES = 5  # the receiver's clock is the middle of at least so many
+_BLOCK = 40  # epochs over which the noise of phases is taken as one
+_BLOCK_LEAST = 16  # steps that tell the noise of a block
 _FLOOR_M = 0.003  # phases are never trusted beyond this
 _AGREE = 16.0  # chi-square of three steps about the whole numbers that explain them
 
@@ -91,6 +93,10 @@ class _Series:
     f2: Floats
     interval_s: float
     reach: int  # points on either side of a step
+    step: Floats = field(default_factory=lambda: np.zeros((0, 0)))  # of `geometry`, from whole windows
+    fifth: Floats = field(default_factory=lambda: np.zeros((0, 0)))  # fifth differences of `geometry`
+    bend: Floats = field(default_factory=lambda: np.zeros((0, 0)))  # the same of `difference`
+    promise: float = np.nan  # noise of one point over scatter of fifth differences
     unit: dict[str, Floats] = field(default_factory=dict)  # noise of one point, per block of epochs
 
     def runs(self) -> tuple[Ints, Ints]:
@@ -125,15 +131,23 @@ def find(observations: Observations, choices: ArcChoices) -> Stretches:
     series, row_of = _on_grid(observations)
     found: list[tuple[_Steps, _Fit]] = []
     left, right = series.runs()
-    steps = _all_steps(series, left, right)
-    for _ in range(8):
-        slips, fit = _accept(series, steps, left, right, choices)
-        if not len(slips.row):
+    _measure(series, left, right)
+    columns = np.arange(series.present.shape[1])
+    # Slips found make the noise around them known better, so that the satellites that had some are looked at again.
+    for _ in range(3):
+        steps = _worth_a_look(series, left, right, columns)
+        seen = len(found)
+        for _ in range(8):
+            slips, fit = _accept(series, steps, left, right, choices)
+            if not len(slips.row):
+                break
+            found.append((slips, fit))
+            series.begin[slips.row, slips.column] = True
+            left, right = series.runs()
+            steps = _steps_beside(series, slips, left, right)
+        if len(found) == seen:
             break
-        found.append((slips, fit))
-        series.begin[slips.row, slips.column] = True
-        left, right = series.runs()
-        steps = _steps_beside(series, slips, left, right)
+        columns = np.unique(np.concatenate([slips.column for slips, _ in found[seen:]]))
     slipped = np.zeros(series.present.shape, dtype=bool)
     for slips, _ in found:
         slipped[slips.row, slips.column] = True
@@ -269,30 +283,54 @@ def _middle(values: Floats, valid: Bools) -> tuple[Floats, Ints]:
 _SHORT = 4  # points on either side for L1 - L2, which a storm bends
 
 
-def _all_steps(series: _Series, left: Ints, right: Ints) -> _Steps:
-    """Steps at all points worth a look; measures the noise of the combinations on the way."""
+_FIFTH = np.array([-1.0, 5.0, -10.0, 10.0, -5.0, 1.0])  # fifth differences: free of geometry, few epochs long
+
+
+def _measure(series: _Series, left: Ints, right: Ints) -> None:
+    """Steps of L1 - L2 and of the ionosphere-free phase wherever a whole window is at hand (G, S)."""
     reach = series.reach
-    whole = (left >= reach) & (right >= reach)
-    kernel = _kernel(reach, reach, 0, _SMOOTH, reach)
-    step = correlate1d(np.nan_to_num(series.geometry), kernel, axis=0, mode="constant")
-    clock, count = _middle(step, whole)
-    step -= clock[:, None]
-    step[count < _CLOCK_SATELLITES] = np.nan
+    step = correlate1d(
+        np.nan_to_num(series.geometry), _kernel(reach, reach, 0, _SMOOTH, reach), axis=0, mode="constant"
+    )
+    clock, count = _middle(step, (left >= reach) & (right >= reach))
+    step -= np.where(count >= _CLOCK_SATELLITES, clock, np.nan)[:, None]
+    series.step = step
+    fifth = correlate1d(np.nan_to_num(series.geometry), _FIFTH, axis=0, mode="constant")
+    clock, count = _middle(fifth, (left >= 3) & (right >= 3))
+    series.fifth = fifth - np.where(count >= _CLOCK_SATELLITES, clock, np.nan)[:, None]
     short = _kernel(_SHORT, _SHORT, 0, 2, _SHORT)
-    bend = correlate1d(np.nan_to_num(series.difference), short, axis=0, mode="constant")
-    enough = (left >= _SHORT) & (right >= _SHORT)
-    series.unit["geometry"] = _noise(step, whole & np.isfinite(step)) / np.linalg.norm(kernel)
-    series.unit["difference"] = _noise(bend, enough) / np.linalg.norm(short)
-    sigma = _at_epochs(series.unit["geometry"], len(step)) * np.linalg.norm(kernel)
-    bend_sigma = _at_epochs(series.unit["difference"], len(step)) * np.linalg.norm(short)
+    series.bend = correlate1d(np.nan_to_num(series.difference), short, axis=0, mode="constant")
+    shape = (-(-len(step) // _BLOCK), step.shape[1])
+    series.unit = {"geometry": np.full(shape, np.nan), "difference": np.full(shape, np.nan)}
+
+
+def _worth_a_look(series: _Series, left: Ints, right: Ints, columns: Ints) -> _Steps:
+    """Steps of these satellites that stand out, or were measured without a whole window; noise is found on the way."""
+    reach, epochs = series.reach, len(series.present)
+    left_here, right_here = left[:, columns], right[:, columns]
+    step, bend = series.step[:, columns], series.bend[:, columns]
+    whole = (left_here >= reach) & (right_here >= reach)
+    norm = float(np.linalg.norm(_kernel(reach, reach, 0, _SMOOTH, reach)))
+    short_norm = float(np.linalg.norm(_kernel(_SHORT, _SHORT, 0, 2, _SHORT)))
+    unit = _noise(step, whole & np.isfinite(step)) / norm
+    # Slips spoil fifth differences for six epochs only; what they promise of the longer windows is learned on the way.
+    fifth = series.fifth[:, columns]
+    quick = _noise(fifth, (left_here >= 3) & (right_here >= 3) & np.isfinite(fifth))
+    if columns.size == series.present.shape[1]:
+        known = np.isfinite(unit / quick)
+        series.promise = 1.3 * float(np.median((unit / quick)[known])) if known.any() else np.nan
+    unit = np.fmin(unit, series.promise * quick)
+    short_unit = _noise(bend, (left_here >= _SHORT) & (right_here >= _SHORT)) / short_norm
+    series.unit["geometry"][:, columns], series.unit["difference"][:, columns] = unit, short_unit
+    sigma = np.maximum(np.repeat(unit, _BLOCK, axis=0)[:epochs] * norm, _FLOOR_M)
+    bend_sigma = np.maximum(np.repeat(short_unit, _BLOCK, axis=0)[:epochs] * short_norm, _FLOOR_M)
+    blind = np.asarray(~np.isfinite(series.step).any(axis=1))
     with np.errstate(invalid="ignore"):
-        loud = np.abs(step) > 4.5 * np.maximum(sigma, _FLOOR_M)
-        loud |= series.told & (np.abs(step) > 3.0 * np.maximum(sigma, _FLOOR_M))
-        loud |= ~np.isfinite(step) & (np.abs(bend) > 4.5 * np.maximum(bend_sigma, _FLOOR_M))
-    blind = np.isnan(clock) | (count < _CLOCK_SATELLITES)
-    loud |= blind[:, None]
-    row, column = np.nonzero((series.present & (left >= 1) & (right >= 1)) & ((whole & loud) | ~whole))
-    return _steps_at(series, row, column, left, right)
+        loud = np.abs(step) > np.where(series.told[:, columns], 3.0, 4.5) * sigma
+        loud |= ~np.isfinite(step) & (np.abs(bend) > 4.5 * bend_sigma)
+    at_hand = series.present[:, columns] & (left_here >= 1) & (right_here >= 1)
+    row, column = np.nonzero(at_hand & (loud | ~whole | blind[:, None]))
+    return _steps_at(series, row, columns[column], left, right)
 
 
 def _steps_beside(series: _Series, slips: _Steps, left: Ints, right: Ints) -> _Steps:
@@ -307,41 +345,37 @@ def _steps_beside(series: _Series, slips: _Steps, left: Ints, right: Ints) -> _S
     return _steps_at(series, row[fit], column[fit], left, right)
 
 
-def _noise(steps: Floats, valid: Bools, block: int = 40) -> Floats:
+def _noise(steps: Floats, valid: Bools) -> Floats:
     """Robust scatter of steps per block of epochs and satellite (B, S), smoothed over neighbours; NaN filled in.
 
-    A slip touches the steps of up to sixteen epochs: the median of forty stays clean of it.
+    A slip touches six to sixteen epochs of a block: the lower two fifths stay clean of it.
     """
-    blocks = -(-len(steps) // block)
-    padded = np.full((blocks * block, steps.shape[1]), np.inf)
+    blocks = -(-len(steps) // _BLOCK)
+    padded = np.full((blocks * _BLOCK, steps.shape[1]), np.inf)
     padded[: len(steps)] = np.where(valid, np.abs(steps), np.inf)
-    shaped = padded.reshape(blocks, block, -1)
+    shaped = padded.reshape(blocks, _BLOCK, -1)
     shaped.sort(axis=1)
     count = np.isfinite(shaped).sum(axis=1)
-    middle = np.take_along_axis(shaped, np.maximum(count - 1, 0)[:, None, :] // 2, axis=1)[:, 0]
-    square = np.where(count >= 8, middle, 0.0) ** 2
-    weight = np.where(count >= 8, count, 0).astype(float)
+    middle = np.take_along_axis(shaped, (2 * count[:, None, :]) // 5, axis=1)[:, 0]
+    square = np.where(count >= _BLOCK_LEAST, middle, 0.0) ** 2
+    weight = np.where(count >= _BLOCK_LEAST, count, 0).astype(float)
     total, mass = square * weight, weight.copy()
     total[1:] += 0.5 * (square * weight)[:-1]
     total[:-1] += 0.5 * (square * weight)[1:]
     mass[1:] += 0.5 * weight[:-1]
     mass[:-1] += 0.5 * weight[1:]
     with np.errstate(invalid="ignore", divide="ignore"):
-        scatter = 1.4826 * np.sqrt(total / mass)
+        scatter = 1.9069 * np.sqrt(total / mass)  # two fifths of a normal sample lie within 0.5244 sigma
     known = np.isfinite(scatter)
     # A stretch too short to measure itself is taken to be twice as noisy as the receiver's usual one.
     usual = 2.0 * float(np.median(scatter[known])) if known.any() else np.nan
     return np.asarray(np.where(known, scatter, usual))
 
 
-def _at_epochs(of_block: Floats, epochs: int, block: int = 40) -> Floats:
-    return np.repeat(of_block, block, axis=0)[:epochs]
-
-
 def _steps_at(series: _Series, row: Ints, column: Ints, left: Ints, right: Ints) -> _Steps:
     """Steps of all three combinations at given points, each from as many points as the stretch allows."""
     before, after = left[row, column], right[row, column]
-    block = row // 40
+    block = row // _BLOCK
     bend, bend_norm = _short_steps(series, row, column, before, after)
     step, step_norm = _geometry_steps(series, row, column, before, after, left, right)
     wide, wide_sigma = _wide_steps(series, row, column, before, after)
@@ -484,11 +518,14 @@ def _accept(series: _Series, steps: _Steps, left: Ints, right: Ints, choices: Ar
     good = (whole & (~blind | alone)) | broken | torn
     fit.cycles[~whole] = 0
     steps, fit = steps.take(good), fit.take(good)
+    # What no whole numbers explain may be the echo of a slip not yet taken out: it waits until there is none near.
+    odd = ~whole[good]
     keep = np.zeros(len(steps.row), dtype=bool)
     taken: dict[int, list[int]] = {}
-    for k in np.argsort(-fit.none, kind="stable"):
+    for k in np.lexsort((-fit.none, odd)):
         near = taken.setdefault(int(steps.column[k]), [])
-        if all(abs(int(steps.row[k]) - other) > series.reach for other in near):
+        apart = 2 * series.reach if odd[k] else series.reach
+        if all(abs(int(steps.row[k]) - other) > apart for other in near):
             near.append(int(steps.row[k]))
             keep[k] = True
     return steps.take(keep), fit.take(keep)
@@ -533,7 +570,7 @@ def _join(series: _Series, slipped: Bools, choices: ArcChoices) -> tuple[int, li
     step, step_sigma = np.full(count, np.nan), np.full(count, np.nan)
     filled = np.nan_to_num(series.geometry)
     for k in range(count):
-        r, c, h, block = int(row[k]), int(column[k]), int(hole[k]), int(row[k]) // 40
+        r, c, h, block = int(row[k]), int(column[k]), int(hole[k]), int(row[k]) // _BLOCK
         b, a = int(min(before[k], _SHORT)), int(min(after[k], _SHORT))
         if a + b >= 4:
             weights = _kernel(b, a, h, _degree(b, a, 2), _SHORT)[_SHORT - b : _SHORT + a]
