@@ -10,7 +10,7 @@ and only where one pair of whole numbers is left.
 """
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import lru_cache
 from typing import Any
 
@@ -129,7 +129,7 @@ class _Steps:
 def find(observations: Observations, choices: ArcChoices) -> Stretches:
     """The stretches of constant ambiguities of one receiver-day."""
     series, row_of = _on_grid(observations)
-    found: list[tuple[_Steps, _Fit]] = []
+    found: list[_Steps] = []
     left, right = series.runs()
     _measure(series, left, right)
     columns = np.arange(series.present.shape[1])
@@ -138,22 +138,22 @@ def find(observations: Observations, choices: ArcChoices) -> Stretches:
         steps = _worth_a_look(series, left, right, columns)
         seen = len(found)
         for _ in range(8):
-            slips, fit = _accept(series, steps, left, right, choices)
+            slips = _accept(series, steps, left, right, choices)
             if not len(slips.row):
                 break
-            found.append((slips, fit))
+            found.append(slips)
             series.begin[slips.row, slips.column] = True
             left, right = series.runs()
             steps = _steps_beside(series, slips, left, right)
         if len(found) == seen:
             break
-        columns = np.unique(np.concatenate([slips.column for slips, _ in found[seen:]]))
+        columns = np.unique(np.concatenate([slips.column for slips in found[seen:]]))
     slipped = np.zeros(series.present.shape, dtype=bool)
-    for slips, _ in found:
+    for slips in found:
         slipped[slips.row, slips.column] = True
     lonely = _drop_lonely(series, slipped)
-    joined, in_gaps = _join(series, slipped, choices)
-    return _collect(observations, series, row_of, slipped, [*found, *in_gaps], lonely, joined, choices)
+    joined, told = _join(series, slipped, choices)
+    return _collect(observations, series, row_of, slipped, told, lonely, joined, choices)
 
 
 # ---------------------------------------------------------------------------------------------- the grid
@@ -426,6 +426,54 @@ def _geometry_steps(
     return step, norm
 
 
+@lru_cache(maxsize=4096)
+def _remainder(before: int, after: int, hole: int, degree: int) -> tuple[Floats, int]:
+    """Matrix that leaves what a polynomial and a step do not explain of a window's points; its degrees of freedom."""
+    time = np.concatenate([np.arange(-before, 0), np.arange(after) + hole]) + 0.5 - hole / 2.0
+    time = time / (before + after)
+    design = np.stack([time > 0, *(time**power for power in range(degree + 1))], axis=1).astype(float)
+    return np.eye(len(time)) - design @ np.linalg.pinv(design), max(0, before + after - degree - 2)
+
+
+def _widened(series: _Series, steps: _Steps, left: Ints, right: Ints, hole: Ints) -> _Steps:
+    """The steps, with sigmas widened where the points about them scatter more than the block's noise tells.
+
+    Scintillation, and a slip next door, make a window ragged: what it says of a step is worth as much less.  The
+    scatter of few points is drawn toward the block's by three degrees of freedom.
+    """
+    row, column = steps.row, steps.column
+    before, after = left[row - hole - 1, column] + 1, right[row, column]
+    filled = np.nan_to_num(series.geometry)
+    widen = {"difference": np.ones(len(row)), "geometry": np.ones(len(row))}
+    for name, reach, highest in (("difference", _SHORT, 2), ("geometry", series.reach, _SMOOTH)):
+        b, a = np.minimum(before, reach), np.minimum(after, reach)
+        fit = np.isfinite(getattr(steps, name))
+        kind = (hole * 100 + b) * 100 + a
+        unit = np.maximum(series.unit[name][row // _BLOCK, column], 1e-4)
+        for one in np.unique(kind[fit]):
+            a1, b1, h = int(one) % 100, int(one) // 100 % 100, int(one) // 10000
+            matrix, freedom = _remainder(b1, a1, h, _degree(b1, a1, highest))
+            here = np.flatnonzero(fit & (kind == one))
+            place = row[here][:, None] + np.concatenate([np.arange(-b1, 0) - h, np.arange(a1)])
+            if name == "difference":
+                rest = series.difference[place, column[here][:, None]] @ matrix
+            else:
+                every = np.einsum("kl,nls->nks", matrix, filled[place])
+                others = (left[row[here]] >= b1 + h) & (right[row[here]] >= a1)
+                every = np.where(others[:, None, :], every, np.nan)
+                own = np.einsum("kl,nl->nk", matrix, filled[place, column[here][:, None]])
+                count = every.shape[1] * len(here)
+                clock, _ = _middle(every.reshape(count, -1), np.isfinite(every).reshape(count, -1))
+                rest = own - clock.reshape(len(here), -1)
+            variance = (3.0 * unit[here] ** 2 + (rest**2).sum(axis=1)) / (3.0 + freedom)
+            widen[name][here] = np.sqrt(np.maximum(1.0, variance / unit[here] ** 2))
+    return replace(
+        steps,
+        difference_sigma=steps.difference_sigma * widen["difference"],
+        geometry_sigma=steps.geometry_sigma * widen["geometry"],
+    )
+
+
 def _wide_steps(
     series: _Series, row: Ints, column: Ints, before: Ints, after: Ints, span: int = 20
 ) -> tuple[Floats, Floats]:
@@ -493,7 +541,12 @@ def _fit(series: _Series, steps: _Steps) -> _Fit:
     return _Fit(whole[rows, best], lowest, none, next_best)
 
 
-def _accept(series: _Series, steps: _Steps, left: Ints, right: Ints, choices: ArcChoices) -> tuple[_Steps, _Fit]:
+def _agrees(fit: _Fit, needed: Floats | float) -> Bools:
+    """Do the best whole numbers explain the steps: within noise, or roughly where no others come near?"""
+    return np.asarray((fit.chi < _AGREE) | ((fit.chi < 2.5 * _AGREE) & (fit.next_best - fit.chi > 2.0 * needed)))
+
+
+def _accept(series: _Series, steps: _Steps, left: Ints, right: Ints, choices: ArcChoices) -> _Steps:
     """The steps that are slips, the strongest alone among neighbours."""
     with np.errstate(invalid="ignore"):
         in_geometry = np.abs(steps.geometry) / steps.geometry_sigma
@@ -503,20 +556,24 @@ def _accept(series: _Series, steps: _Steps, left: Ints, right: Ints, choices: Ar
         told = series.told[steps.row, steps.column]
         loud = (in_geometry > np.where(told, 3.0, 4.5)) | (blind & ((in_difference > 4.5) | (in_wide > 4.0)))
     steps = steps.take(loud)
-    fit = _fit(series, steps)
     told, blind = told[loud], blind[loud]
     in_geometry, in_difference = in_geometry[loud], np.nan_to_num(in_difference[loud])
-    size = np.nan_to_num(np.abs(steps.difference))
+    size, large = np.nan_to_num(np.abs(steps.difference)), np.nan_to_num(np.abs(steps.geometry))
+    fit = _fit(series, steps)
     needed = np.where(told, choices.told_significance, choices.significance)
+    ragged = np.flatnonzero(fit.none - fit.chi > needed)
+    wide = steps.take(ragged)
+    again = _fit(series, _widened(series, wide, left, right, np.zeros(len(ragged), dtype=np.int64)))
+    whole = np.zeros(len(steps.row), dtype=bool)
+    whole[ragged] = (again.none - again.chi > needed[ragged]) & _agrees(again, needed[ragged])
     with np.errstate(invalid="ignore"):
-        whole = (fit.none - fit.chi > needed) & (fit.chi < _AGREE)
         # No whole numbers, but a step that neither ionosphere nor geometry makes: half cycles, or a receiver at fault.
-        broken = (in_geometry > 8.0) & (np.abs(steps.geometry) > 0.06) & (in_difference > 6.0) & (size > 0.03)
+        broken = (in_geometry > 8.0) & (large > 0.06) & (in_difference > 6.0) & (size > 0.03)
+        broken |= (in_geometry > 8.0) & (large > 1.0)
         # Without the other satellites' help the ionosphere may bend L1 - L2 by itself: it must be a step well outside.
         alone = np.where((in_difference > 6.0) & (size > 0.025), True, np.abs(steps.wide) > 0.7)
         torn = blind & (in_difference > 10.0) & (size > 0.08)
     good = (whole & (~blind | alone)) | broken | torn
-    fit.cycles[~whole] = 0
     steps, fit = steps.take(good), fit.take(good)
     # What no whole numbers explain may be the echo of a slip not yet taken out: it waits until there is none near.
     odd = ~whole[good]
@@ -528,7 +585,7 @@ def _accept(series: _Series, steps: _Steps, left: Ints, right: Ints, choices: Ar
         if all(abs(int(steps.row[k]) - other) > apart for other in near):
             near.append(int(steps.row[k]))
             keep[k] = True
-    return steps.take(keep), fit.take(keep)
+    return steps.take(keep)
 
 
 # ---------------------------------------------------------------------------------------------- gaps
@@ -550,11 +607,14 @@ def _drop_lonely(series: _Series, slipped: Bools) -> int:
     return int(lonely.sum())
 
 
-def _join(series: _Series, slipped: Bools, choices: ArcChoices) -> tuple[int, list[tuple[_Steps, _Fit]]]:
-    """Carry stretches on across short gaps where the phases do; returns how many, and slips told across gaps."""
+def _join(series: _Series, slipped: Bools, choices: ArcChoices) -> tuple[int, tuple[_Steps, _Fit]]:
+    """Carry stretches on across short gaps where the phases do; returns how many, and slips with their whole numbers.
+
+    Slips found are looked at once more, each apart from the others: one that shows no step any more is taken back.
+    """
     reach = series.reach
     left, right = series.runs()
-    row, column = np.nonzero(series.begin & ~slipped)
+    row, column = np.nonzero(series.begin)
     order = np.lexsort((row, column))
     row, column = row[order], column[order]
     rows = np.arange(len(series.present))[:, None]
@@ -589,11 +649,17 @@ def _join(series: _Series, slipped: Bools, choices: ArcChoices) -> tuple[int, li
                 step_sigma[k] = max(float(series.unit["geometry"][block, c] * np.linalg.norm(weights)), _FLOOR_M)
     wide, wide_sigma = _wide_across(series, row, column, hole, before, after)
     steps = _Steps(row, column, bend, bend_sigma, step, step_sigma, wide, wide_sigma)
+    steps = _widened(series, steps, left, right, hole)
     fit = _fit(series, steps)
     quiet = (fit.none < _AGREE) & (fit.chi - fit.none > choices.told_significance) & np.isfinite(bend)
     series.begin[row[quiet], column[quiet]] = False
-    certain = ~quiet & (fit.chi < _AGREE) & (fit.next_best - fit.chi > choices.significance) & np.isfinite(bend + step)
-    return int(quiet.sum()), [(steps.take(certain), fit.take(certain))]
+    was_slip = slipped[row, column]
+    slipped[row[quiet], column[quiet]] = False
+    known = _agrees(fit, choices.significance) & (fit.next_best - fit.chi > choices.told_significance)
+    known &= np.isfinite(bend + step)
+    fit.cycles[~known] = 0
+    told = ~quiet & (known | was_slip)
+    return int((quiet & ~was_slip).sum()), (steps.take(told), fit.take(told))
 
 
 def _seen_elsewhere(
@@ -619,7 +685,7 @@ def _wide_across(
 
 
 def _collect(
-    observations: Observations, series: _Series, row_of: Ints, slipped: Bools, found: list[tuple[_Steps, _Fit]],
+    observations: Observations, series: _Series, row_of: Ints, slipped: Bools, told: tuple[_Steps, _Fit],
     lonely: int, joined: int, choices: ArcChoices,
 ) -> Stretches:  # fmt: skip
     """Reasons, repairs and the list of slips, back on the receiver's own epochs."""
@@ -638,30 +704,30 @@ def _collect(
     repaired = 0
     listed: list[dict[str, Any]] = []
     factor = tecu_per_metre(series.f1, series.f2)
-    for steps, fit in found:
-        effect = slip_effect(fit.cycles[:, 0], fit.cycles[:, 1], series.f1[steps.column], series.f2[steps.column])[0]
-        for k, (row, column) in enumerate(zip(steps.row.tolist(), steps.column.tolist(), strict=True)):
-            if not series.present[row, column] or not series.begin[row, column] or began[row, column] in (FIRST, RESET):
-                continue
-            cycles = (int(fit.cycles[k, 0]), int(fit.cycles[k, 1]))
-            known = cycles != (0, 0)
-            size = float(effect[k]) if known else float(steps.difference[k])
-            shown = {
-                "L1-L2": abs(steps.difference[k]) / steps.difference_sigma[k],
-                "ionosphere-free": abs(steps.geometry[k]) / steps.geometry_sigma[k],
-                "wide lane": abs(steps.wide[k]) / steps.wide_sigma[k],
-            }
-            certain = known and fit.chi[k] < _AGREE and fit.next_best[k] - fit.chi[k] > choices.significance
-            if choices.repair and certain:
-                repair[row:, column] += size
-                began[row, column] = -1
-                repaired += 1
-            listed.append({
-                "time": observations.times[grid_to_epoch[row]], "satellite": str(observations.satellites[column]),
-                "cycles": cycles if known else None, "size_tecu": size * float(factor[column]),
-                "seen_by": tuple(name for name, strength in shown.items() if strength > 4.5),
-                "certain": bool(certain), "repaired": bool(choices.repair and certain),
-            })  # fmt: skip
+    steps, fit = told
+    effect = slip_effect(fit.cycles[:, 0], fit.cycles[:, 1], series.f1[steps.column], series.f2[steps.column])[0]
+    for k, (row, column) in enumerate(zip(steps.row.tolist(), steps.column.tolist(), strict=True)):
+        if not series.present[row, column] or not series.begin[row, column] or began[row, column] in (FIRST, RESET):
+            continue
+        cycles = (int(fit.cycles[k, 0]), int(fit.cycles[k, 1]))
+        known = cycles != (0, 0)
+        size = float(effect[k]) if known else float(steps.difference[k])
+        shown = {
+            "L1-L2": abs(steps.difference[k]) / steps.difference_sigma[k],
+            "ionosphere-free": abs(steps.geometry[k]) / steps.geometry_sigma[k],
+            "wide lane": abs(steps.wide[k]) / steps.wide_sigma[k],
+        }
+        certain = known and fit.chi[k] < _AGREE and fit.next_best[k] - fit.chi[k] > choices.significance
+        if choices.repair and certain:
+            repair[row:, column] += size
+            began[row, column] = -1
+            repaired += 1
+        listed.append({
+            "time": observations.times[grid_to_epoch[row]], "satellite": str(observations.satellites[column]),
+            "cycles": cycles if known else None, "size_tecu": size * float(factor[column]),
+            "seen_by": tuple(name for name, strength in shown.items() if strength > 4.5),
+            "certain": bool(certain), "repaired": bool(choices.repair and certain),
+        })  # fmt: skip
     listed.sort(key=lambda slip: (slip["time"], slip["satellite"]))
     counts = {"gaps joined": joined, "slips repaired": repaired, "lonely points dropped": lonely}
     return Stretches(series.present[row_of], began[row_of], repair[row_of], tuple(listed), counts)
