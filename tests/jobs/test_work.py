@@ -50,7 +50,7 @@ def messy(sample_folder: Path, tmp_path_factory: pytest.TempPathFactory) -> Path
 
 @pytest.fixture(scope="module")
 def result(messy: Path, executor: Executor) -> work.DayResult:
-    return work.network_day([messy], executor=executor, simulated=True)
+    return work.network_day([messy], executor=executor)
 
 
 def test_every_bad_file_is_named_with_its_reason(result: work.DayResult, messy: Path) -> None:
@@ -97,7 +97,7 @@ def test_nothing_holds_where_nobody_looked(result: work.DayResult) -> None:
 
 
 def test_one_receiver_alone_works_and_says_so(sample_folder: Path, executor: Executor) -> None:
-    made = work.network_day(files(sample_folder, "MRGT", "TARN"), executor=executor, simulated=True)
+    made = work.network_day(files(sample_folder, "MRGT", "TARN"), executor=executor)
     assert not made.left_out
     assert any("One receiver alone (MRGT00XBS)" in warning for warning in made.products.origin.warnings)
     assert 0.2 < np.mean(made.products.fields.state == UNSEEN) < 0.95
@@ -163,3 +163,7 @@ def test_a_day_none_of_the_files_is_of(sample_folder: Path, executor: Executor) 
 )
 def test_the_receiver_is_told_by_the_name(name: str, key: str) -> None:
     assert work._station_key(Path(name)) == key
+
+
+def test_invented_data_are_marked_by_their_own_headers(result: work.DayResult) -> None:
+    assert result.products.origin.simulated

@@ -19,14 +19,20 @@ from skylag.formats import kind_of
 
 _PEEK = 65_536
 _DEEPEST = 4
+_INVENTED = b"INVENTED DATA"  # a comment in every observation file of the sample days
 
 
 class Glance(NamedTuple):
-    """kind as `formats.kind_of` says, or "empty"; mark: name, sha256, bytes; day: of the first observation, or None."""
+    """What a file is.
+
+    kind as `formats.kind_of` says, or "empty"; mark: name, sha256, bytes; day: of the first observation, or None;
+    invented: the header says that the data are invented.
+    """
 
     kind: str
     mark: dict[str, Any]
     day: np.datetime64 | None
+    invented: bool = False
 
 
 def glance(path: Path) -> Glance:
@@ -46,7 +52,8 @@ def glance(path: Path) -> Glance:
     except (OSError, ValueError, EOFError, zlib.error, zipfile.BadZipFile):
         return Glance("unknown", mark, None)
     kind = kind_of(head)
-    return Glance(kind, mark, _first_day(head) if kind == "observations" else None)
+    observed = kind == "observations"
+    return Glance(kind, mark, _first_day(head) if observed else None, observed and _INVENTED in head)
 
 
 def _head(data: bytes) -> bytes:

@@ -68,6 +68,7 @@ class Inputs:
     left_out: tuple[LeftOut, ...]
     files: tuple[Mapping[str, Any], ...]
     days: Mapping[str, np.datetime64 | None]  # observation file -> day of its first epoch, as far as its header tells
+    invented: bool  # an observation file says that its data are invented
 
 
 @dataclass(frozen=True)
@@ -106,9 +107,10 @@ def sort_inputs(paths: Iterable[Path]) -> Inputs:
     files: list[Mapping[str, Any]] = []
     seen: dict[str, str] = {}
     days: dict[str, np.datetime64 | None] = {}
+    any_invented = False
     for path in _all_files(paths):
         try:
-            kind, mark, first_day = glance(path)
+            kind, mark, first_day, invented = glance(path)
         except SkylagError as trouble:
             left_out.append(_left_out(path, trouble))
             continue
@@ -120,6 +122,7 @@ def sort_inputs(paths: Iterable[Path]) -> Inputs:
         if kind == "observations":
             observations.setdefault(_station_key(path), []).append(str(path))
             days[str(path)] = first_day
+            any_invented |= invented
         elif kind in ("navigation", "orbits"):
             orbits.append(str(path))
         elif kind == "biases":
@@ -135,7 +138,7 @@ def sort_inputs(paths: Iterable[Path]) -> Inputs:
             left_out.append(LeftOut(str(path), 0, f"holds {kind}, which a network day does not use"))
     return Inputs(
         {key: tuple(sorted(names)) for key, names in sorted(observations.items())}, tuple(orbits), tuple(biases),
-        tuple(left_out), tuple(files), days,
+        tuple(left_out), tuple(files), days, any_invented,
     )  # fmt: skip
 
 
@@ -375,7 +378,7 @@ def network_day(
             "by_receiver": [dict(item.facts) for item in usable], **dict(made.facts),
         },
         warnings=tuple(warnings),
-        simulated=simulated,
+        simulated=simulated or inputs.invented,
     )  # fmt: skip
     products = Products(
         region=place, day=wanted_day, receivers=receivers, calibration=made.calibration, samples=made.samples,
