@@ -23,6 +23,7 @@ from skylag.tables import (
     Site,
     Thresholds,
     Times,
+    Use,
 )
 
 
@@ -180,6 +181,7 @@ def region_from(facts: Mapping[str, Any]) -> Region:
     """A region from its kept facts; keys this program does not know are left out."""
     known = {name: facts[name] for name in Region.__dataclass_fields__ if name in facts}
     known["sites"] = tuple(Site(**site) for site in known.get("sites", ()))
+    known["uses"] = tuple(Use(**use) for use in known.get("uses", ()))
     limits = known.get("thresholds", {})
     known["thresholds"] = Thresholds(**{k: v for k, v in limits.items() if k in Thresholds.__dataclass_fields__})
     return Region(**known)

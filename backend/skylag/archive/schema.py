@@ -2,6 +2,7 @@
 
 Numbers of type time are GPS-time nanoseconds as 64-bit integers; days are text like 2031-05-11, GPS-time days.
 A product row is one version of one region's day and is never changed after it was written, but for its pin.
+Steps from one form to the next are files of `migrations.versions`; a test compares their sum with the tables here.
 Never opens a connection.
 """
 
@@ -20,10 +21,11 @@ from sqlalchemy import (
     Table,
     Text,
     UniqueConstraint,
+    false,
     func,
 )
 
-SCHEMA_VERSION = 1
+SCHEMA_VERSION = 2
 
 metadata = MetaData()
 
@@ -55,6 +57,8 @@ product = Table(
     Column("record", Text, nullable=False),  # JSON: region, receivers, grid, origin, calibration facts
     Column("slant_sha256", String(64), nullable=False),
     Column("slant_rows", Integer, nullable=False),
+    # A day that is still being added to: the next save of the day takes its place.
+    Column("provisional", Boolean, nullable=False, default=False, server_default=false()),
     UniqueConstraint("region", "day", "version", name="one_row_per_version"),
 )
 
@@ -121,3 +125,62 @@ bias = Table(
 
 Index("flag_by_kind", flag.c.kind, flag.c.start_ns)
 Index("bias_by_name", bias.c.name)
+
+# The work queue: one row per network day to be computed.
+task = Table(
+    "task",
+    metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("kind", String(20), nullable=False),
+    Column("title", String(300), nullable=False),
+    Column("spec", Text, nullable=False),  # JSON: what to compute, from which files
+    Column("spec_sha256", String(64), nullable=False),  # the same work is not queued twice at a time
+    Column("state", String(12), nullable=False),
+    Column("attempts", Integer, nullable=False),  # how often it was begun and gave an error
+    Column("losses", Integer, nullable=False),  # how often its holder vanished
+    Column("not_before_ns", BigInteger, nullable=False),  # UTC nanoseconds, as all times of these tables
+    Column("holder", String(200), nullable=False),
+    Column("held_until_ns", BigInteger, nullable=False),
+    Column("stage", String(40), nullable=False),
+    Column("share", Float(53), nullable=False),
+    Column("word", String(300), nullable=False),
+    Column("said", Text, nullable=False),  # the last error, in words
+    Column("result", Text, nullable=False),  # JSON
+    Column("added_ns", BigInteger, nullable=False),
+    Column("changed_ns", BigInteger, nullable=False),
+)
+Index("task_by_state", task.c.state, task.c.not_before_ns)
+
+# Keys that let somebody read or write; only their hash is kept.
+access_key = Table(
+    "access_key",
+    metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("name", String(100), nullable=False, unique=True),
+    Column("scope", String(10), nullable=False),
+    Column("sha256", String(64), nullable=False, unique=True),
+    Column("made_ns", BigInteger, nullable=False),
+    Column("revoked_ns", BigInteger),
+)
+
+# What somebody is to be told, and to whom it was told already.
+notice = Table(
+    "notice",
+    metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("mark", String(64), nullable=False, unique=True),  # the same occasion makes one notice
+    Column("rule", String(100), nullable=False),
+    Column("sentence", Text, nullable=False),
+    Column("facts", Text, nullable=False),  # JSON
+    Column("made_ns", BigInteger, nullable=False),
+)
+delivery = Table(
+    "delivery",
+    metadata,
+    Column("notice", Integer, ForeignKey("notice.id", ondelete="CASCADE"), primary_key=True),
+    Column("target", String(300), primary_key=True),
+    Column("attempts", Integer, nullable=False),
+    Column("not_before_ns", BigInteger, nullable=False),
+    Column("delivered_ns", BigInteger),
+    Column("said", Text, nullable=False),
+)

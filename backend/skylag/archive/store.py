@@ -18,7 +18,7 @@ import numpy.typing as npt
 import sqlalchemy as sa
 from sqlalchemy.engine import URL, Connection, Engine, make_url
 
-from skylag.archive import chunks, records, schema, slants
+from skylag.archive import chunks, forms, records, schema, slants
 from skylag.archive.records import DayHead, DayRecord, SiteStates
 from skylag.errors import FormatError, Missing, Refused, SkylagError
 from skylag.tables import UNSEEN, Biases, Fields, Flag, Products, Rays, Samples, Times
@@ -27,7 +27,6 @@ BUSY_WAIT_S = 30.0
 
 _POOL = 20  # connections kept, and as many more for a rush: the web serves up to forty requests at a time
 _MOST_VERSIONS = 2**31 - 1  # what the column holds
-_PREPARE_LOCK = 0x536B794C  # any number that is ours
 _HOUR_NS = 3600 * 10**9
 Day = np.datetime64 | str  # a GPS-time day, like 2031-05-11
 _Result = TypeVar("_Result")
@@ -133,7 +132,7 @@ class Archive:
         else:
             self._read_engine = self._write_engine = _postgresql_engine(url)
         try:
-            self._write(self._prepare)
+            self._write(lambda connection: forms.bring_up(connection, self.name))
         except BaseException:
             self.close()
             raise
@@ -377,21 +376,6 @@ class Archive:
     def _reading(self) -> Iterator[Connection]:
         with _explained(self.name, "read from"), self._read_engine.begin() as connection:
             yield connection
-
-    def _prepare(self, connection: Connection) -> None:
-        """Make the tables where there are none; refuse a database whose form is newer than this program."""
-        if connection.dialect.name == "postgresql":  # two processes that open a new database take turns
-            connection.execute(sa.select(sa.func.pg_advisory_xact_lock(_PREPARE_LOCK)))
-        schema.metadata.create_all(connection)
-        found = connection.scalar(sa.select(sa.func.max(schema.schema_version.c.version)))
-        if found is None:
-            connection.execute(sa.insert(schema.schema_version).values(version=schema.SCHEMA_VERSION))
-        elif found > schema.SCHEMA_VERSION:
-            raise Refused(
-                f"archive {self.name} has form {found}, this program knows up to {schema.SCHEMA_VERSION}; "
-                "update the program, or name another archive",
-                name="archive", value=found, allowed=schema.SCHEMA_VERSION,
-            )  # fmt: skip
 
     def _save(self, connection: Connection, products: Products, sha256: str) -> int:
         day = _day_text(products.day)
