@@ -115,8 +115,9 @@ def solve(
     design, used = _design(rays, used, per_ns, seconds, unknowns, layer, choices)
     part = rays.where(used)
     knowledge.append(_penalty(design, choices))
-    estimate = _iterate(part, design, layer.slant_change[used], knowledge, choices)
-    return _calibration(rays, part, used, per_ns, unknowns, datum, estimate, design, layer, choices)
+    estimate = _iterate(part, design, spans[used], layer.slant_change[used], knowledge, choices)
+    of_receiver = levels.receiver_values(unknowns, estimate.x, seconds, choices.drift_hours)
+    return _calibration(rays, part, used, per_ns, unknowns, datum, estimate, design, layer, of_receiver, choices)
 
 
 @dataclass(frozen=True)
@@ -188,7 +189,7 @@ def _design(
 ) -> tuple[Design, Ints]:  # fmt: skip
     """The design of the thinned rays: biases [ns], smooth vertical content, high layer; and the rays in its order."""
     values, first, splines = time_splines(seconds[used], choices.knots_s)
-    order = np.lexsort((rays.arc[used], first))
+    order = np.lexsort((seconds[used], rays.arc[used], first))
     used, values, first = used[order], values[order], first[order]
     degree = choices.degree_network if _places(rays, used) >= 4 else choices.degree_single
     lat, lon = rays.pierce_lat[used], rays.pierce_lon[used]
@@ -236,7 +237,7 @@ class _Estimate:
     covariance: Floats
     moved: Floats  # (K, unknowns) by one sigma of each thing the model may be off by
     residual: Floats
-    arc_effect: Floats  # per arc of the thinned part
+    arc_effect: Floats  # per arc of the thinned part, or per piece of it in a span of the day
     arc_share: Floats  # of the effect, the share that is the arc's own level
     arc_sigma: Floats  # of the level after the adjustment
     arc_of_row: Ints
@@ -247,11 +248,18 @@ class _Estimate:
 
 
 def _iterate(
-    part: Rays, design: Design, high_change: Floats, knowledge: list[Knowledge], choices: AdjustmentChoices,
+    part: Rays, design: Design, span: Ints, high_change: Floats, knowledge: list[Knowledge],
+    choices: AdjustmentChoices,
 ) -> _Estimate:  # fmt: skip
-    """Robust, variance-adapting least squares with arc effects eliminated."""
-    arc_numbers, arc_of_row = np.unique(part.arc, return_inverse=True)
-    arc_of_row = arc_of_row.ravel()
+    """Robust, variance-adapting least squares with arc effects eliminated.
+
+    span  (N,) of the day, where receiver biases are found per few hours.  An arc that reaches over several is cut into
+          parts with levels of their own: a bias that moves steadily must be told by the levels of many arcs, since the
+          steps within one arc see only what lies about the boundary.  The parts together weigh as the arc did.
+    """
+    arc_numbers, arc_of_row = np.unique(part.arc * (int(span.max()) + 1) + span, return_inverse=True)
+    arc_of_row, arc_numbers = arc_of_row.ravel(), arc_numbers // (int(span.max()) + 1)
+    pieces = np.bincount(arc_numbers)[arc_numbers]
     arcs = len(arc_numbers)
     first = np.unique(arc_of_row, return_index=True)[1]
     level = part.level_sigma[first]
@@ -271,7 +279,7 @@ def _iterate(
         own += (part.mapping * relative * np.maximum(vertical_content, 0.0)) ** 2
         own *= worse_row[receiver] ** 2
         weight = 1.0 / (own * loosen_row**2 * widened)
-        arc_variance = (level**2 + model_arc**2) * (loosen_arc * worse_arc[receiver_of_arc]) ** 2
+        arc_variance = pieces * (level**2 + model_arc**2) * (loosen_arc * worse_arc[receiver_of_arc]) ** 2
         normal = Normal(design, weight, arc_of_row, arc_variance, knowledge)
         x, effect = normal.solve(part.stec)
         residual = part.stec - design.predict(x)
@@ -337,7 +345,7 @@ def _err_together(part: Rays, normalised: Floats) -> float:
 
 def _calibration(
     rays: Rays, part: Rays, used: Ints, per_ns: Floats, unknowns: Unknowns, datum: Datum, estimate: _Estimate,
-    design: Design, layer: _HighLayer, choices: AdjustmentChoices,
+    design: Design, layer: _HighLayer, of_receiver: Floats, choices: AdjustmentChoices,
 ) -> Calibration:  # fmt: skip
     biases = design.biases
     value = estimate.x[:biases]
@@ -348,7 +356,9 @@ def _calibration(
     r, s = bias_rows[:, 0], bias_rows[:, 1]
     # The level an arc was found to be off, as far as it is the arc's own; arcs below the limit keep their level.
     correction = np.zeros(int(rays.arc.max(initial=-1)) + 1)
-    correction[estimate.arc_numbers] = estimate.arc_effect * estimate.arc_share
+    pieces = np.maximum(np.bincount(estimate.arc_numbers, minlength=len(correction)), 1)
+    of_piece = estimate.arc_effect * estimate.arc_share / pieces[estimate.arc_numbers]
+    np.add.at(correction, estimate.arc_numbers, of_piece)
     arc_sigma = np.full(len(correction), np.nan)
     arc_sigma[estimate.arc_numbers] = estimate.arc_sigma
     of_ray = arc_sigma[rays.arc]
@@ -356,7 +366,7 @@ def _calibration(
     c = estimate.covariance
     variance = per_ns**2 * (c[r, r] + c[s, s] + 2.0 * c[r, s])
     amplitude = float(estimate.x[-1])
-    bias = -per_ns * (value[r] + value[s])
+    bias = -per_ns * (of_receiver + value[s])
     leanings = _leanings(
         rays, per_ns, bias_rows, estimate.moved, amplitude, layer, rays.stec - bias - amplitude * layer.slant, choices
     )

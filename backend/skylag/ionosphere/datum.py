@@ -297,9 +297,9 @@ class _Book:
 
     def _say(self, rows: Ints, what: str, words: str) -> None:
         channel = int(self.unknowns.channel[rows[0]])
-        where = f" of channel {channel:+d}" if what.startswith("R") else ""
+        where = f"channel {channel:+d}: " if what.startswith("R") else ""
         for row in rows:
-            self.words[row] = self.words[row] or words + where
+            self.words[row] = self.words[row] or where + words
         line = f"{what}: {words}"
         self.lines[line] = self.lines.get(line, 0) + 1
 
@@ -323,6 +323,22 @@ def connect_blocks(unknowns: Unknowns, sigma_ns: float) -> list[Knowledge]:
             steps = later[0] - block
             columns = np.array([row, key[name, pair, channel, later[0]]])
             found.append(known(columns, np.array([1.0, -1.0]), 0.0, 1.0 / (steps * sigma_ns**2)))
+    return found
+
+
+def receiver_values(unknowns: Unknowns, value: Floats, seconds: Floats, drift_hours: float | None) -> Floats:
+    """Receiver bias [ns] of every ray: the day's, or drawn straight between the middles of the spans."""
+    found = value[unknowns.receiver_row]
+    if drift_hours is None:
+        return found
+    receivers = np.flatnonzero([kind == "receiver" for kind in unknowns.kind])
+    groups: dict[tuple[str, int, int], list[int]] = {}
+    for row in map(int, receivers):
+        groups.setdefault((unknowns.name[row], int(unknowns.pair[row]), int(unknowns.channel[row])), []).append(row)
+    for rows in groups.values():
+        own = np.isin(unknowns.receiver_row, rows)
+        middles = (unknowns.block[rows] + 0.5) * drift_hours * 3600.0
+        found[own] = np.interp(seconds[own], middles, value[rows])
     return found
 
 
