@@ -77,6 +77,29 @@ def clock_jumps(observations: Observations) -> Ints:
     return _whole_milliseconds(step, len(observations.times), 100.0)  # code noise and slips are far below
 
 
+def millisecond_steps(observations: Observations) -> Ints:
+    """Whole milliseconds by which each satellite's codes have stepped against both its phases so far (E, S).
+
+    A clock set back in the codes steps all satellites; some receivers step the phases of one satellite alone when its
+    ambiguity is resolved anew (seen in a file of 2004).  Either way L1 - L2 stays as it is: no slip.
+    """
+    apart = observations.code1 - observations.phase1
+    difference = observations.phase1 - observations.phase2
+    valid = np.isfinite(apart) & np.isfinite(difference)
+    rows = np.arange(len(apart))[:, None]
+    last = np.full(apart.shape, -1)
+    last[1:] = np.maximum.accumulate(np.where(valid, rows, -1), axis=0)[:-1]
+    row, column = np.nonzero(valid & (last >= 0))
+    before = last[row, column]
+    step = apart[row, column] - apart[before, column]
+    whole = np.rint(step / _MILLISECOND_M)
+    near = (whole != 0) & (np.abs(step - whole * _MILLISECOND_M) < 100.0)
+    near &= np.abs(difference[row, column] - difference[before, column]) < 3.0
+    steps = np.zeros(apart.shape, dtype=np.int64)
+    steps[row[near], column[near]] = whole[near].astype(np.int64)
+    return np.asarray(np.cumsum(steps, axis=0))
+
+
 def tag_jumps(observations: Observations) -> Ints:
     """Whole milliseconds by which the codes of all satellites step, per epoch (E,), whatever the phases do.
 

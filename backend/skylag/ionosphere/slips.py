@@ -20,8 +20,8 @@ from scipy.ndimage import correlate1d
 
 from skylag.constants import SPEED_OF_LIGHT_M_S
 from skylag.ionosphere.combinations import (
-    clock_jumps,
     ionosphere_free,
+    millisecond_steps,
     slip_effect,
     tag_jumps,
     tecu_per_metre,
@@ -188,12 +188,13 @@ def _on_grid(observations: Observations) -> tuple[_Series, Ints]:
         geometry += _rate(geometry, observations.interval_s) * tags_s[at_row][:, None]
     difference = observations.phase1 - observations.phase2
     difference[~present] = np.nan
-    # The jump adds the same metres to both codes: their difference is untouched, the wide lane is not.
-    jump_m = np.cumsum(clock_jumps(observations)) * (SPEED_OF_LIGHT_M_S * 1e-3)
     code1, code2 = observations.code1, observations.code2
     wide = wide_lane(observations.phase1, observations.phase2, *_both_codes(code1, code2, difference, f1, f2), f1, f2)
-    if jump_m.any():
-        wide += jump_m[:, None] * ((f1 - f2) / SPEED_OF_LIGHT_M_S)[None, :]
+    # Whole milliseconds between codes and phases leave L1 - L2 untouched, the others not.
+    milliseconds = millisecond_steps(observations)
+    if milliseconds.any():
+        wide += milliseconds * (1e-3 * (f1 - f2))[None, :]
+        geometry += spread(np.where(present, milliseconds, 0) * (SPEED_OF_LIGHT_M_S * 1e-3))
     wide[~present] = np.nan
     on_grid = np.zeros(shape, dtype=bool)
     on_grid[row_of] = present
