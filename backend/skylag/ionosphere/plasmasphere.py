@@ -86,7 +86,7 @@ def along_rays(rays: Rays, lat: Floats, lon: Floats) -> tuple[Floats, Floats, Fl
     """Shape of every ray, slant and straight up at its pierce point, and how both change per unit of foot exponent.
 
     lat, lon  (rays,) geocentric place of the receiver [deg].  All (rays,) [TECU].  Worked out once in five minutes of
-    each arc: the shape changes slowly along a pass, straight interpolation errs below 0.01 TECU.
+    each arc: the shape changes slowly along a pass, straight interpolation errs by some hundredths of a TECU at most.
     """
     order = np.lexsort((rays.time, rays.arc))
     arc = rays.arc[order]
