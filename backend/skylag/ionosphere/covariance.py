@@ -16,6 +16,11 @@ from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.errors import NotEnough
 from skylag.tables import Bools, Floats, Ints, Samples, Times
 
+# Fall of the logarithm of a likelihood at the edge of a 95 % interval of one parameter (Wilks 1938: half of the
+# chi-square 3.84).
+_NOT_AGAINST = 1.92
+_STEP = float(np.sqrt(2.0))  # steps in which a spread is sought
+
 
 @dataclass(frozen=True)
 class Epoch:
@@ -137,41 +142,71 @@ def gather(
     ]
 
 
+class _Likelihood:
+    """Restricted likelihood of residuals, given some rays of some epochs; what was worked out once is kept."""
+
+    def __init__(self, parts: list[Epoch], covariance: Floats, most_rays: int) -> None:
+        self._prepared: list[tuple[Epoch, Floats, Floats, dict[float, Floats]]] = []
+        self._known: dict[tuple[float, ...], float] = {}
+        for part in parts:
+            thin = part.where(np.unique(np.linspace(0, len(part) - 1, min(most_rays, len(part))).astype(int)))
+            self._prepared.append((thin, thin.distances(), thin.noise(covariance), {}))
+
+    def __call__(self, three: tuple[float, ...]) -> float:
+        if three not in self._known:
+            reach, spread, grain = three
+            total = 0.0
+            for thin, distance, noise, decay in self._prepared:
+                if reach not in decay:
+                    decay[reach] = np.exp(distance / -reach)
+                matrix = spread**2 * decay[reach]
+                matrix += noise
+                matrix[np.diag_indices_from(matrix)] += grain**2
+                total += _restricted_likelihood(matrix, thin)
+            self._known[three] = total
+        return self._known[three]
+
+    def widest(self, residual: Residual, most: float) -> Residual:
+        """With the largest spread that the data do not speak against: few rays hardly tell one."""
+        reach, spread, grain = residual.reach_km, residual.spread, residual.grain
+        best = self((reach, spread, grain))
+        while spread * _STEP <= most * 1.01 and self((reach, spread * _STEP, grain)) >= best - _NOT_AGAINST:
+            spread *= _STEP
+        return Residual(reach, spread, grain)
+
+
 def learn(
     parts: list[Epoch], covariance: Floats, tried: tuple[tuple[float, ...], tuple[float, ...], tuple[float, ...]],
     most_rays: int,
 ) -> Residual:  # fmt: skip
-    """The residual that the data of these epochs (three of them) make most likely (Patterson and Thompson 1971).
+    """The residual that the data of these epochs make most likely (Patterson and Thompson 1971).
 
     tried  reaches, spreads and grains; one of the three is varied at a time, twice round: 36 likelihoods where all
-    combinations would be 180.
+    combinations would be 180.  Three epochs are asked, the first, the last and one between.
     """
-    prepared: list[tuple[Epoch, Floats, Floats, dict[float, Floats]]] = []
-    for part in [parts[i] for i in np.unique(np.linspace(0, len(parts) - 1, 3).astype(int))]:
-        thin = part.where(np.unique(np.linspace(0, len(part) - 1, min(most_rays, len(part))).astype(int)))
-        prepared.append((thin, thin.distances(), thin.noise(covariance), {}))
-    known: dict[tuple[float, ...], float] = {}
-
-    def likelihood(three: tuple[float, ...]) -> float:
-        if three not in known:
-            reach, spread, grain = three
-            total = 0.0
-            for thin, distance, noise, decay in prepared:
-                if reach not in decay:
-                    decay[reach] = np.exp(-distance / reach)
-                matrix = noise + spread**2 * decay[reach]
-                matrix[np.diag_indices_from(matrix)] += grain**2
-                total += _restricted_likelihood(matrix, thin)
-            known[three] = total
-        return known[three]
-
+    likelihood = _Likelihood(
+        [parts[i] for i in np.unique(np.linspace(0, len(parts) - 1, 3).astype(int))], covariance, most_rays
+    )
     answer = tuple(axis[len(axis) // 2] for axis in tried)
     for _ in range(2):
         for number in (1, 0, 2):
             answer = max(
                 [(*answer[:number], value, *answer[number + 1 :]) for value in tried[number]], key=likelihood
             )
-    return Residual(*answer)
+    return likelihood.widest(Residual(*answer), max(tried[1]))
+
+
+def adapt(part: Epoch, covariance: Floats, residual: Residual, spreads: tuple[float, ...], most_rays: int) -> Residual:
+    """The hour's residual with the spread of one epoch: a wall that comes in later leaves the calm epochs calm."""
+    likelihood = _Likelihood([part], covariance, most_rays)
+    reach, spread, grain = residual.reach_km, residual.spread, residual.grain
+    low, high = min(spreads) * 0.99, max(spreads) * 1.01
+    for factor in (1.0 / _STEP, _STEP):
+        while low <= spread * factor <= high and likelihood((reach, spread * factor, grain)) > likelihood(
+            (reach, spread, grain)
+        ):
+            spread *= factor
+    return likelihood.widest(Residual(reach, spread, grain), max(spreads))
 
 
 def _restricted_likelihood(matrix: Floats, part: Epoch) -> float:

@@ -17,15 +17,18 @@ from scipy.stats import chi2
 from skylag.constants import L1_M_PER_TECU
 from skylag.errors import Refused
 from skylag.ionosphere.background import PLAIN, Background
-from skylag.ionosphere.covariance import Epoch, Residual, gather, learn, plane_km
-from skylag.ionosphere.kriging import Estimates, System, at, solve
-from skylag.tables import UNSEEN, Bools, Fields, Floats, Ints, Samples, Times
+from skylag.ionosphere.covariance import Epoch, Residual, adapt, gather, learn, plane_km
+from skylag.ionosphere.kriging import Estimates, System, at, left_out, solve
+from skylag.tables import UNSEEN, Fields, Floats, Ints, Samples, Times
 
 __all__ = ["FieldChoices", "Hour", "Made", "at_places", "epochs_between", "fit", "join", "make",
            "plane_km", "prepare", "systems"]  # fmt: skip
 
 _HOUR = np.timedelta64(3600, "s")
 _LEAST_RAYS = 4
+# Receivers tried as the one at fault: the one that looks worst may be its neighbour.
+_SUSPECTS = 3
+_LEAST_RECEIVERS = 4  # with three, who fits worse than the rest cannot be told
 # A fit so bad by chance is seen once in a thousand epochs: then the hour's covariance is not that of the epoch.
 _MISFIT_CHANCE = 1e-3
 
@@ -44,7 +47,11 @@ class FieldChoices:
     neighbours      rays that speak for a place where there are many more
     strange_sigmas  a ray beyond so many sigmas from what all others say is strange; where one receiver alone explains
                     it, its strange rays are left out
-    alone_km        strange rays of others within this distance: the receiver is not alone, it is weather
+    far_worse       a receiver whose rays fit so many times worse than the median receiver's does not tell how rough
+                    the sky is
+    odd_sigmas, alone_km  rays of others beyond so many sigmas within this distance: the receiver is not alone, it is
+                    weather; 3.5 is met by chance once in 2000 rays
+    fade_km         so far beyond what a ray carries, the field is the background alone
     widen_km        sigmas are widened where the rays within about this distance fit worse than they should
     """
 
@@ -58,7 +65,10 @@ class FieldChoices:
     learn_rays: int = 140
     neighbours: int = 240
     strange_sigmas: float = 5.0
+    far_worse: float = 4.0
+    odd_sigmas: float = 3.5
     alone_km: float = 300.0
+    fade_km: float = 1000.0
     widen_km: float = 75.0
 
 
@@ -162,8 +172,8 @@ def make(hour: Hour) -> Made:
         if system is None:
             continue
         answer = _everywhere(system, hour)
-        support[number] = _near(hour, system.part)
-        value, sigma = _faded(answer, support[number] == 0, hour, number)
+        support[number], nearest_km = _near(hour, system.part)
+        value, sigma = _faded(answer, nearest_km, hour, number)
         slope = np.hypot(answer.east, answer.north)
         along = np.where(slope > 0, slope, 1.0)
         slope_sigma = np.hypot(answer.east * answer.east_sigma, answer.north * answer.north_sigma) / along
@@ -219,51 +229,78 @@ def systems(hour: Hour) -> Iterable[System | None]:
 
 
 def _learn(parts: list[Epoch], hour: Hour) -> Residual:
+    """What the data of some epochs say of the residual, without receivers that fit far worse than the rest.
+
+    One receiver at fault would make the whole sky look rough.  It is left out of the learning only; whether its rays
+    are is decided with its neighbours.
+    """
     choices = hour.choices
     tried = (choices.reach_km, choices.spread_tecu, choices.grain_tecu)
-    return learn(parts, hour.covariance, tried, choices.learn_rays)
+    residual = learn(parts, hour.covariance, tried, choices.learn_rays)
+    for _ in range(2):
+        some = [parts[i] for i in np.unique(np.linspace(0, len(parts) - 1, 3).astype(int))]
+        odd = np.concatenate([solve(part, hour.covariance, residual).strangeness ** 2 for part in some])
+        who, which = np.unique(np.concatenate([part.receiver for part in some]), return_inverse=True)
+        mean = np.bincount(which, odd) / np.bincount(which)
+        worst = mean.argmax()
+        if len(who) < _LEAST_RECEIVERS or mean[worst] < choices.far_worse**2 * np.median(mean):
+            break
+        parts = [part.where(part.receiver != who[worst]) for part in parts]
+        parts = [part for part in parts if len(part) >= _LEAST_RAYS]
+        residual = learn(parts, hour.covariance, tried, choices.learn_rays)
+    return residual
 
 
 def _system(part: Epoch, hour: Hour, residual: Residual) -> System:
     """The equations of an epoch, without rays that only a receiver at fault explains.
 
-    Where the hour's covariance does not fit the epoch, the epoch tells its own.
+    The spread is the epoch's; where even so the hour's covariance does not fit, the epoch tells all of its own.
     """
+    choices = hour.choices
     system = _without_loner(solve(part, hour.covariance, residual), hour)
+    adapted = adapt(system.part, hour.covariance, residual, choices.spread_tecu, choices.learn_rays)
+    if adapted != residual:
+        system = _without_loner(solve(part, hour.covariance, adapted), hour)
     free = max(len(system.part) - 3, 1)
     if system.chi_square > float(chi2.ppf(1.0 - _MISFIT_CHANCE, free)):
         own = _learn([system.part], hour)
-        if own != residual:
+        if own != adapted:
             system = _without_loner(solve(part, hour.covariance, own), hour)
     return system
 
 
 def _without_loner(system: System, hour: Hour) -> System:
-    """The system without the strange rays of one receiver, if nobody near sees anything strange without them.
+    """The system without the strange rays of one receiver, if nobody near sees anything odd once it is left out.
 
-    A wall or a rough sky is seen by several receivers: what is strange to one is strange to its neighbours too, and
-    all stay.  A receiver at fault makes its neighbours look strange only as long as it takes part.
+    A wall or a rough sky is seen by several receivers: what is strange to one is odd to its neighbours too, and all
+    stay.  A receiver at fault makes its neighbours look odd only as long as it takes part, and shows on more than one
+    satellite: a single strange ray may be the first to meet a wall, and stays.  What its rays are off is told by all
+    others together.
     """
-    limit = hour.choices.strange_sigmas
+    choices = hour.choices
+    limit = choices.strange_sigmas
     for _ in range(len(np.unique(system.part.receiver)) // 4):
-        odd = system.strangeness
+        part, odd = system.part, system.strangeness
         strange = np.abs(odd) > limit
         if not strange.any():
-            break
-        guilt = np.bincount(system.part.receiver[strange], odd[strange] ** 2)
-        suspect = system.part.receiver == guilt.argmax()
-        gone = suspect & strange
-        left = system.part.where(~gone)
-        if len(left) < _LEAST_RAYS:
-            break
-        trial = solve(left, hour.covariance, system.residual)
-        still = (np.abs(trial.strangeness) > limit) & ~suspect[~gone]
-        apart = np.hypot(
-            left.x[still][:, None] - system.part.x[gone], left.y[still][:, None] - system.part.y[gone]
-        )
-        if (apart < hour.choices.alone_km).any():
-            break
-        system = trial
+            return system
+        guilt = np.bincount(part.receiver[strange], odd[strange] ** 2)
+        for suspect in [s for s in np.argsort(-guilt)[:_SUSPECTS] if guilt[s] > 0]:
+            own = part.receiver == suspect
+            rest = part.where(~own)
+            if len(rest) < _LEAST_RAYS:
+                continue
+            off, sigma = left_out(system, np.flatnonzero(own))
+            gone = np.flatnonzero(own)[np.abs(off) > limit * sigma]
+            others = solve(rest, hour.covariance, system.residual)
+            still = np.abs(others.strangeness) > choices.odd_sigmas
+            apart = np.hypot(rest.x[still][:, None] - part.x[gone], rest.y[still][:, None] - part.y[gone])
+            if len(gone) > 1 and not (apart < choices.alone_km).any():
+                left = part.where(np.setdiff1d(np.arange(len(part)), gone))
+                system = solve(left, hour.covariance, system.residual)
+                break
+        else:
+            return system
     return system
 
 
@@ -299,25 +336,33 @@ def _tiles(x: Floats, y: Floats, rows: Ints, most: int) -> list[Ints]:
     return [*_tiles(x, y, order[:half], most), *_tiles(x, y, order[half:], most)]
 
 
-def _near(hour: Hour, part: Epoch) -> Ints:
-    """Rays within reach of each place."""
+def _near(hour: Hour, part: Epoch) -> tuple[Ints, Floats]:
+    """Rays within reach of each place, and the distance [km] to the nearest one."""
     east = hour.x[:, None].astype(np.float32) - part.x.astype(np.float32)
     north = hour.y[:, None].astype(np.float32) - part.y.astype(np.float32)
-    return np.asarray(np.count_nonzero(east * east + north * north <= hour.choices.support_km**2, axis=1))
+    away2 = east * east + north * north
+    count = np.count_nonzero(away2 <= hour.choices.support_km**2, axis=1)
+    return np.asarray(count), np.sqrt(away2.min(axis=1).astype(np.float64))
 
 
-def _faded(answer: Estimates, unseen: Bools, hour: Hour, number: int) -> tuple[Floats, Floats]:
-    """Content and sigma, where nobody looks weighted with those of the background by their variances.
+def _faded(answer: Estimates, nearest_km: Floats, hour: Hour, number: int) -> tuple[Floats, Floats]:
+    """Content and sigma; where no ray carries a place, both go over to those of the background.
 
-    The background errs as it does over the network in this hour, or by its stated share, whichever is more.
+    A plane and a local residual say nothing of content a thousand kilometres on: content departs from its mean day
+    alike over one to two thousand kilometres (Klobuchar and Johanson 1977; from memory).  The background takes over
+    with the distance beyond sight, sooner where the field itself knows less than the background; their errors are
+    added, not averaged.  The background errs as it does over the network at this epoch, or by its stated share,
+    whichever is more.
     """
+    choices = hour.choices
+    unseen = nearest_km > choices.support_km
     if not unseen.any():
         return answer.value, answer.sigma
-    time = hour.epochs[number]
-    model = hour.background.vertical(hour.lat, hour.lon, time)
+    model = hour.background.vertical(hour.lat, hour.lon, hour.epochs[number])
     seen = ~unseen
     off = float(np.sqrt(np.mean((answer.value - model)[seen] ** 2))) if seen.any() else 0.0
-    one, two = answer.sigma**2, hour.background.sigma(model, off) ** 2
-    share = np.where(unseen, one / (one + two), 0.0)
-    value = answer.value + share * (model - answer.value)
-    return value, np.where(unseen, np.sqrt(one * two / (one + two)), answer.sigma)
+    model_sigma = hour.background.sigma(model, off)
+    by_distance = np.clip((nearest_km - choices.support_km) / choices.fade_km, 0.0, 1.0)
+    by_sigma = answer.sigma**2 / (answer.sigma**2 + model_sigma**2)
+    share = np.where(unseen, np.maximum(by_distance, by_sigma), 0.0)
+    return answer.value + share * (model - answer.value), answer.sigma + share * (model_sigma - answer.sigma)
