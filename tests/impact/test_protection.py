@@ -111,7 +111,8 @@ def test_where_the_factors_come_from(evidence: Evidence) -> None:
         ("horizontal en route: 5e-9, Rayleigh", rayleigh.isf(5e-9), protection.K_HORIZONTAL_ROUTE),
         ("horizontal approach: 2e-9, two-sided normal", norm.isf(1e-9), protection.K_HORIZONTAL_PRECISION),
     ):
-        evidence(f"k factor, {name}", source="RTCA DO-229 appendix J", expected=printed, got=float(got), tolerance=5.1e-3)
+        evidence(f"k factor, {name}", source="RTCA DO-229 appendix J", expected=printed, got=float(got),
+                 tolerance=5.1e-3)  # fmt: skip
 
 
 def test_correction_variances_follow_their_bounds() -> None:

@@ -124,7 +124,7 @@ class Lattice:
         lon = np.mod(np.asarray(lon, dtype=np.float64) + 180.0, 360.0) - 180.0
         ones = np.ones(len(lat))
         narrow = self._corners(lat, lon, np.floor(lat / 5) * 5, 5 * ones, np.floor(lon / 5) * 5, 5.0)
-        size = np.abs(lat)
+        size = np.minimum(np.abs(lat), 75.0 - 1e-9)
         low = np.where(size < 45, np.floor(size / 10) * 10, np.floor((size - 5) / 10) * 10 + 5)
         high = np.where(size < 40, low + 10, np.where(size < 45, 50.0, low + 10))
         south = np.where(lat >= 0, low, -high)
@@ -138,7 +138,7 @@ class Lattice:
             else:
                 there &= np.take_along_axis(monitored, np.maximum(found, 0), axis=1)
             tried = cell_weights(x, y, there)
-            take = np.isnan(weight[:, 0]) & np.isfinite(tried[:, 0]) & (size <= 75)
+            take = np.isnan(weight[:, 0]) & np.isfinite(tried[:, 0]) & (np.abs(lat) <= 75)
             weight[take], point[take] = tried[take], found[take]
             lost = np.isnan(weight[:, 0]) & (point[:, 0] < 0)
             point[lost] = found[lost]  # named as the cell that failed
