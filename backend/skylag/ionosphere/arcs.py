@@ -49,10 +49,11 @@ def cut(observations: Observations, choices: ArcChoices | None = None, elevation
             arc[at[start:end], column] = len(rows)
             rows.append((column, int(at[start]), int(at[end - 1]), int(why[start]), int(end - start)))
     summary = np.array(rows, dtype=np.int64).reshape(-1, 5)
-    level, level_sigma, noise, at_fault = levels.level(
-        phase, code, arc, summary, seconds, elevation_deg, choices.level_block_s
+    systems = np.unique([str(name)[0] for name in observations.satellites], return_inverse=True)[1]
+    levelled = levels.level(
+        phase, code, arc, len(rows), seconds, systems, elevation_deg, choices.level_block_s, observations.interval_s
     )
-    stec = np.where(arc >= 0, phase + level[arc], np.nan) if len(rows) else np.full(phase.shape, np.nan)
+    stec = np.where(arc >= 0, phase + levelled.level[arc], np.nan) if rows else np.full(phase.shape, np.nan)
     return Arcs(
         observations=observations,
         stec=stec,
@@ -62,13 +63,14 @@ def cut(observations: Observations, choices: ArcChoices | None = None, elevation
         arc_start=summary[:, 1],
         arc_end=summary[:, 2],
         arc_began=summary[:, 3].astype(np.uint8),
-        arc_level_sigma=level_sigma,
-        arc_noise=noise,
+        arc_level_sigma=levelled.sigma,
+        arc_noise=levelled.noise,
         arc_points=summary[:, 4],
         rejected={
             "points of short arcs": short,
             "points of arcs without both codes": without,
-            "code points at fault": at_fault,
+            "code points at fault": levelled.bursts,
+            "code points of bad quarter hours": levelled.bad_blocks,
             **found.counts,
         },
     )
