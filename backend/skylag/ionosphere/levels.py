@@ -105,13 +105,15 @@ def _centre(codes: _Codes, arcs: int) -> tuple[Floats, Floats]:
 
     Starts from the median and takes two steps of a mean over the points near it.
     """
-    order = np.lexsort((codes.gap, codes.arc, ~codes.good))
-    count = np.bincount(codes.arc, codes.good, minlength=arcs).astype(np.int64)
-    first = np.concatenate([[0], np.cumsum(count)[:-1]])
-    middle = codes.gap[order][np.minimum(first + count // 2, len(order) - 1)]
-    off = np.abs(codes.gap - middle[codes.arc]) * np.sqrt(codes.weight)
-    ranked = off[np.lexsort((off, codes.arc, ~codes.good))]
-    spread = 1.4826 * ranked[np.minimum(first + count // 2, len(order) - 1)] + 1e-3
+    middle, spread = np.zeros(arcs), np.ones(arcs)
+    edges = np.searchsorted(codes.arc, np.arange(arcs + 1))
+    for number in range(arcs):  # arcs, not points: a median each
+        part = slice(edges[number], edges[number + 1])
+        good = codes.good[part]
+        if good.any():
+            gap = codes.gap[part][good]
+            middle[number] = np.median(gap)
+            spread[number] = 1.4826 * np.median(np.abs(gap - middle[number]) * np.sqrt(codes.weight[part][good])) + 1e-3
     mean, variance = middle, spread**2
     for _ in range(2):
         near = codes.good & (np.abs(codes.gap - mean[codes.arc]) * np.sqrt(codes.weight) < 4.0 * spread[codes.arc])
