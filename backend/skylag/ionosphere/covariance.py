@@ -49,12 +49,10 @@ class Epoch:
     def noise(self, covariance: Floats) -> Floats:
         """Covariance of the rays' errors [TECU^2]."""
         a, b = self.rows[:, 0], self.rows[:, 1]
-        matrix = covariance[np.ix_(a, a)] + covariance[np.ix_(b, b)]
-        cross = covariance[np.ix_(a, b)]
-        matrix += cross
-        matrix += cross.T
-        matrix *= self.factor[:, None]
-        matrix *= self.factor[None, :]
+        half = (covariance[a] + covariance[b]) * self.factor[:, None]  # (rays, biases)
+        matrix = np.take(half, a, axis=1)
+        matrix += np.take(half, b, axis=1)
+        matrix *= self.factor
         matrix[np.diag_indices_from(matrix)] += self.own**2 + self.arc**2
         return np.asarray(matrix)
 

@@ -28,6 +28,8 @@ _HOUR = np.timedelta64(3600, "s")
 _LEAST_RAYS = 4
 # Receivers tried as the one at fault: the one that looks worst may be its neighbour.
 _SUSPECTS = 3
+_TILE = 220  # places that share a neighbourhood of rays
+_FEW = 1.25  # times the neighbours: so few rays are taken all together
 _LEAST_RECEIVERS = 4  # with three, who fits worse than the rest cannot be told
 # A fit so bad by chance is seen once in a thousand epochs: then the hour's covariance is not that of the epoch.
 _MISFIT_CHANCE = 1e-3
@@ -168,11 +170,11 @@ def make(hour: Hour) -> Made:
     names = ("vtec", "vtec_sigma", "slope", "slope_sigma", "slope_east", "slope_north")
     layers: dict[str, npt.NDArray[np.float32]] = {name: np.full(shape, np.nan, dtype=np.float32) for name in names}
     support: npt.NDArray[np.uint16] = np.zeros(shape, dtype=np.uint16)
-    for number, system in enumerate(systems(hour)):
-        if system is None:
+    for number, looked in enumerate(_looked(hour)):
+        if looked is None:
             continue
-        answer = _everywhere(system, hour)
-        support[number], nearest_km = _near(hour, system.part)
+        answer, part = _everywhere(*looked, hour)
+        support[number], nearest_km = _near(hour, part)
         value, sigma = _faded(answer, nearest_km, hour, number)
         slope = np.hypot(answer.east, answer.north)
         along = np.where(slope > 0, slope, 1.0)
@@ -218,53 +220,70 @@ def at_places(
 
 
 def systems(hour: Hour) -> Iterable[System | None]:
-    """The solved equations of each epoch of an hour; None where there are too few rays."""
+    """The solved equations of each epoch of an hour, of all its rays; None where there are too few."""
+    return (_system(*looked, hour) if looked is not None else None for looked in _looked(hour))
+
+
+def _looked(hour: Hour) -> Iterable[tuple[Epoch, Residual] | None]:
+    """The rays of each epoch with the residual that they tell; None where there are too few rays."""
+    choices = hour.choices
     whole = [part for part in hour.parts if part is not None and len(part) >= _LEAST_RAYS]
     if not whole:
-        return (None for _ in hour.parts)
-    residual = _learn(whole, hour)
-    return (
-        _system(part, hour, residual) if part is not None and len(part) >= _LEAST_RAYS else None for part in hour.parts
-    )
+        return
+    residual, doubtful = _learn(whole, hour)
+    for part in hour.parts:
+        if part is None or len(part) < _LEAST_RAYS:
+            yield None
+            continue
+        believed = part.where(~np.isin(part.receiver, doubtful)) if doubtful else part
+        believed = believed if len(believed) >= _LEAST_RAYS else part
+        yield part, adapt(believed, hour.covariance, residual, choices.spread_tecu, choices.learn_rays)
 
 
-def _learn(parts: list[Epoch], hour: Hour) -> Residual:
+def _learn(parts: list[Epoch], hour: Hour) -> tuple[Residual, list[int]]:
     """What the data of some epochs say of the residual, without receivers that fit far worse than the rest.
 
     One receiver at fault would make the whole sky look rough.  It is left out of the learning only; whether its rays
-    are is decided with its neighbours.
+    are is decided with its neighbours.  Returns their numbers too.
     """
     choices = hour.choices
     tried = (choices.reach_km, choices.spread_tecu, choices.grain_tecu)
+    parts = [parts[i] for i in np.unique(np.linspace(0, len(parts) - 1, 3).astype(int))]
     residual = learn(parts, hour.covariance, tried, choices.learn_rays)
-    for _ in range(2):
-        some = [parts[i] for i in np.unique(np.linspace(0, len(parts) - 1, 3).astype(int))]
+    doubtful: list[int] = []
+    while len(doubtful) < _SUSPECTS:
+        # Some rays of each are enough to see who fits worst.
+        some = [part.where(_spaced(len(part), choices.neighbours)) for part in parts]
         odd = np.concatenate([solve(part, hour.covariance, residual).strangeness ** 2 for part in some])
         who, which = np.unique(np.concatenate([part.receiver for part in some]), return_inverse=True)
         mean = np.bincount(which, odd) / np.bincount(which)
         worst = mean.argmax()
         if len(who) < _LEAST_RECEIVERS or mean[worst] < choices.far_worse**2 * np.median(mean):
             break
-        parts = [part.where(part.receiver != who[worst]) for part in parts]
-        parts = [part for part in parts if len(part) >= _LEAST_RAYS]
+        left = [part.where(part.receiver != who[worst]) for part in parts]
+        parts = [part for part in left if len(part) >= _LEAST_RAYS]
+        if not parts:
+            break
+        doubtful.append(int(who[worst]))
         residual = learn(parts, hour.covariance, tried, choices.learn_rays)
-    return residual
+    return residual, doubtful
 
 
-def _system(part: Epoch, hour: Hour, residual: Residual) -> System:
-    """The equations of an epoch, without rays that only a receiver at fault explains.
+def _spaced(count: int, most: int) -> Ints:
+    """At most so many row numbers, evenly spaced."""
+    return np.unique(np.linspace(0, count - 1, min(most, count)).astype(np.int64))
 
-    The spread is the epoch's; where even so the hour's covariance does not fit, the epoch tells all of its own.
+
+def _system(part: Epoch, residual: Residual, hour: Hour) -> System:
+    """The equations of some rays of an epoch, without those that only a receiver at fault explains.
+
+    Where the residual does not fit these rays, they tell their own.
     """
-    choices = hour.choices
     system = _without_loner(solve(part, hour.covariance, residual), hour)
-    adapted = adapt(system.part, hour.covariance, residual, choices.spread_tecu, choices.learn_rays)
-    if adapted != residual:
-        system = _without_loner(solve(part, hour.covariance, adapted), hour)
     free = max(len(system.part) - 3, 1)
     if system.chi_square > float(chi2.ppf(1.0 - _MISFIT_CHANCE, free)):
-        own = _learn([system.part], hour)
-        if own != adapted:
+        own, _ = _learn([system.part], hour)
+        if own != residual:
             system = _without_loner(solve(part, hour.covariance, own), hour)
     return system
 
@@ -304,26 +323,26 @@ def _without_loner(system: System, hour: Hour) -> System:
     return system
 
 
-def _everywhere(system: System, hour: Hour) -> Estimates:
-    """Estimates at all places: by all rays where they are few, else tile by tile by the rays nearest to it."""
+def _everywhere(part: Epoch, residual: Residual, hour: Hour) -> tuple[Estimates, Epoch]:
+    """Estimates at all places, and the rays they stand on: all at once where they are few, else tile by tile."""
     choices = hour.choices
     over, widen = choices.slope_over_km, choices.widen_km
-    if len(system.part) <= 1.25 * choices.neighbours:
-        return at(system, hour.x, hour.y, over, widen)
+    if len(part) <= _FEW * choices.neighbours:
+        system = _system(part, residual, hour)
+        return at(system, hour.x, hour.y, over, widen), system.part
     answer = Estimates(*(np.empty(len(hour.x)) for _ in Estimates.__dataclass_fields__))
-    for tile in _tiles(hour.x, hour.y, np.arange(len(hour.x)), 100):
+    for tile in _tiles(hour.x, hour.y, np.arange(len(hour.x)), _TILE):
         x, y = hour.x[tile], hour.y[tile]
-        outside_x = np.maximum(np.maximum(x.min() - system.part.x, system.part.x - x.max()), 0.0)
-        outside_y = np.maximum(np.maximum(y.min() - system.part.y, system.part.y - y.max()), 0.0)
+        outside_x = np.maximum(np.maximum(x.min() - part.x, part.x - x.max()), 0.0)
+        outside_y = np.maximum(np.maximum(y.min() - part.y, part.y - y.max()), 0.0)
         # Nearest to the tile, and of those above it the nearest to its middle.
-        middle = np.hypot(system.part.x - np.mean(x), system.part.y - np.mean(y))
+        middle = np.hypot(part.x - np.mean(x), part.y - np.mean(y))
         near = np.hypot(outside_x, outside_y) + 0.25 * middle
         chosen = np.sort(np.argpartition(near, choices.neighbours)[: choices.neighbours])
-        local = solve(system.part.where(chosen), hour.covariance, system.residual)
-        piece = at(local, x, y, over, widen)
+        piece = at(_system(part.where(chosen), residual, hour), x, y, over, widen)
         for name in Estimates.__dataclass_fields__:
             getattr(answer, name)[tile] = getattr(piece, name)
-    return answer
+    return answer, part
 
 
 def _tiles(x: Floats, y: Floats, rows: Ints, most: int) -> list[Ints]:
