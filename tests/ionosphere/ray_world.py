@@ -139,9 +139,10 @@ def make(
             receivers=(receiver,), satellites=mine, pairs=pairs, shell_height_m=400e3, interval_s=300.0,
             **{key: np.concatenate(values) for key, values in columns.items()},
         )  # fmt: skip
-        own = np.array([bias["receiver", receiver.name, rays.pairs[p].name]
-                        + bias["satellite", str(mine[s]), rays.pairs[p].name]
-                        for p, s in zip(rays.pair, rays.satellite, strict=True)])  # fmt: skip
+        of_pair = np.array([[bias.get(("satellite", str(name), pair.name), 0.0) for name in mine]
+                            for pair in rays.pairs])  # fmt: skip
+        of_receiver = np.array([bias["receiver", receiver.name, pair.name] for pair in rays.pairs])
+        own = of_receiver[rays.pair] + of_pair[rays.pair, rays.satellite]
         rays = replace(rays, stec=rays.stec - adjustment.content_per_ns(rays, channels) * own)
         parts.append(rays)
         contents.append(np.concatenate(content))
