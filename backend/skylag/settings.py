@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any
 
 from skylag.errors import FormatError, Refused
-from skylag.tables import Region, Site, Thresholds
+from skylag.tables import USE_KINDS, Region, Site, Thresholds, Use
 
 
 @dataclass(frozen=True)
@@ -61,7 +61,7 @@ def default_workers() -> str:
 
 
 def read_region(path: Path) -> Region:
-    """The region of a region.toml: [region] with its rectangle, [[site]] entries, optional [thresholds].
+    """The region of a region.toml: [region] with its rectangle, [[site]] entries, optional [thresholds] and [[use]].
 
     Raises FormatError where the file is missing or no TOML, Refused where a value is outside its range.
     """
@@ -74,7 +74,7 @@ def read_region(path: Path) -> Region:
     box = content.get("region")
     if not isinstance(box, dict):
         raise FormatError(f"{path}: has no [region] table; see README, 'Your own region'", path=str(path), line=0)
-    known = {item.name for item in fields(Region)} - {"sites", "thresholds"}
+    known = {item.name for item in fields(Region)} - {"sites", "thresholds", "uses"}
     unknown = sorted(set(box) - known)
     if unknown:
         raise Refused(
@@ -96,7 +96,11 @@ def read_region(path: Path) -> Region:
                 name=name, value=limits[name], allowed=sorted(allowed),
             )  # fmt: skip
     thresholds = Thresholds(**{name: _number(path, name, value) for name, value in limits.items()})
-    return Region(**values, sites=sites, thresholds=thresholds)  # type: ignore[arg-type]
+    uses = tuple(_use(path, entry) for entry in content.get("use", []))
+    names = [use.name for use in uses]
+    if len(set(names)) < len(names):
+        raise Refused(f"{path}: two [[use]] have one name", name="use", value=names, allowed="names apart")
+    return Region(**values, sites=sites, thresholds=thresholds, uses=uses)  # type: ignore[arg-type]
 
 
 def _number(path: Path, name: str, value: object) -> float:
@@ -116,3 +120,23 @@ def _site(path: Path, entry: Mapping[str, Any]) -> Site:
             name="site", value=[lat, lon], allowed="-90..90, -180..360",
         )  # fmt: skip
     return Site(name=str(entry["name"]), lat=lat, lon=lon, kind=str(entry.get("kind", "site")))
+
+
+def _use(path: Path, entry: Mapping[str, Any]) -> Use:
+    """One [[use]]: name and kind, and what differs from the published values."""
+    known = {item.name for item in fields(Use)}
+    unknown = sorted(set(entry) - known)
+    if unknown:
+        raise Refused(
+            f"{path}: a [[use]] knows nothing of {', '.join(unknown)}; it may hold {', '.join(sorted(known))}",
+            name=unknown[0], value=entry[unknown[0]], allowed=sorted(known),
+        )  # fmt: skip
+    missing = [name for name in ("name", "kind") if name not in entry]
+    if missing:
+        raise Refused(
+            f"{path}: a [[use]] lacks {', '.join(missing)}; kinds are {', '.join(USE_KINDS)}",
+            name=missing[0], value=None, allowed="a value",
+        )  # fmt: skip
+    words = {name: str(entry[name]) for name in ("name", "kind")}
+    numbers = {name: _number(path, name, value) for name, value in entry.items() if name not in words}
+    return Use(**words, **numbers)  # type: ignore[arg-type]

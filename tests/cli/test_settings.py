@@ -25,6 +25,12 @@ kind = "aerodrome"
 
 [thresholds]
 broken_mm_per_km = 50
+
+[[use]]
+name = "Pipeline survey"
+kind = "differential"
+baseline_km = 25
+spare_mm = 40
 """
 
 
@@ -42,6 +48,9 @@ def test_a_region_is_read(tmp_path: Path) -> None:
     assert region.sites[0].kind == "aerodrome"
     assert region.thresholds.broken_mm_per_km == 50.0
     assert region.thresholds.strained_mm_per_km == 8.0
+    assert [(use.name, use.kind, use.baseline_km, use.spare_mm) for use in region.uses] == [
+        ("Pipeline survey", "differential", 25.0, 40.0)
+    ]
 
 
 @pytest.mark.parametrize(
@@ -57,6 +66,11 @@ def test_a_region_is_read(tmp_path: Path) -> None:
         ("lat = -39.0", "lat = -139.0", Refused, "latitude is -90 to 90"),
         ("broken_mm_per_km", "broken_mm", Refused, "knows nothing of broken_mm"),
         ('name = "Field"', "name = Field", FormatError, "is no TOML"),
+        ("spare_mm = 40", "spare = 40", Refused, "\\[\\[use\\]\\] knows nothing of spare"),
+        ("spare_mm = 40", 'spare_mm = "some"', Refused, "must be a number"),
+        ('kind = "differential"', "", Refused, "\\[\\[use\\]\\] lacks kind"),
+        ('kind = "differential"', 'kind = "sextant"', Refused, "kind must be one of differential, ground"),
+        ("baseline_km = 25", "baseline_km = 0", Refused, "baseline_km must be from"),
     ],
 )
 def test_a_wrong_region_is_explained(

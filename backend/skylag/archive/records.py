@@ -37,6 +37,7 @@ class DayHead:
     state_shares    state name -> share of all cells and times of the day
     site_shares     site name -> state name -> share of the day
     flag_counts     kind -> number of flags
+    provisional     the day is still being added to
     """
 
     region: str
@@ -53,6 +54,7 @@ class DayHead:
     warning_count: int
     receiver_count: int
     epoch_count: int
+    provisional: bool = False
 
 
 @dataclass(frozen=True)
