@@ -20,6 +20,7 @@ from sqlalchemy.engine import URL, Connection, Engine, make_url
 
 from skylag.archive import chunks, forms, records, schema, slants
 from skylag.archive.records import DayHead, DayRecord, SiteStates
+from skylag.archive.tasks import Ending, Tasks, end_in
 from skylag.errors import FormatError, Missing, Refused, SkylagError
 from skylag.tables import UNSEEN, Biases, Fields, Flag, Products, Rays, Samples, Times
 
@@ -125,6 +126,7 @@ class Archive:
         self.name = url.render_as_string(hide_password=True)
         self._writer: ThreadPoolExecutor | None = None
         self._closed = threading.Event()
+        self.tasks = Tasks(self._write, self._reading)
         if url.get_backend_name() == "sqlite":
             self._read_engine = _sqlite_engine(url, "BEGIN")
             self._write_engine = _sqlite_engine(url, "BEGIN IMMEDIATE")
@@ -153,11 +155,22 @@ class Archive:
 
     # ------------------------------------------------------------------------------------------ keeping
 
-    def save(self, products: Products) -> int:
-        """Keep a day as a new version of it, whole or not at all; gives the version number, from 1."""
+    def save(self, products: Products, *, provisional: bool = False, ending: Ending | None = None) -> int:
+        """Keep a day as a new version of it, whole or not at all; gives the version number, from 1.
+
+        provisional  the day is still being added to: its later versions take the place of this one
+        ending       of the task that made it; where its claim was lost nothing is kept and SkylagError is raised
+        """
         _check_name(products.region.name)
         sha256 = slants.write(products.samples, self.slant_folder)
-        return self._write(lambda connection: self._save(connection, products, sha256))
+
+        def keep(connection: Connection) -> int:
+            version = self._save(connection, products, sha256, provisional)
+            if ending is not None:
+                end_in(connection, ending, version)
+            return version
+
+        return self._write(keep)
 
     def pin(self, region: str, day: Day, version: int | None) -> None:
         """Make a version the one that is shown even when newer ones come; None takes the pin off."""
@@ -190,7 +203,7 @@ class Archive:
         product = schema.product
         query = sa.select(
             product.c.id, product.c.region, product.c.day, product.c.version, product.c.pinned, product.c.saved_at,
-            product.c.simulated, product.c.summary,
+            product.c.simulated, product.c.provisional, product.c.summary,
         ).order_by(product.c.day.desc(), product.c.region, product.c.version)  # fmt: skip
         if region is not None:
             if not _is_name(region):
@@ -377,7 +390,7 @@ class Archive:
         with _explained(self.name, "read from"), self._read_engine.begin() as connection:
             yield connection
 
-    def _save(self, connection: Connection, products: Products, sha256: str) -> int:
+    def _save(self, connection: Connection, products: Products, sha256: str, provisional: bool) -> int:
         day = _day_text(products.day)
         # Counting up the region's row makes saves of one region take turns, so that versions never collide.
         counted = sa.update(schema.region).where(schema.region.c.name == products.region.name)
@@ -387,9 +400,13 @@ class Archive:
             connection.execute(counted.values(saves=schema.region.c.saves + 1))
         ours = (schema.product.c.region == products.region.name) & (schema.product.c.day == day)
         version = 1 + (connection.scalar(sa.select(sa.func.max(schema.product.c.version)).where(ours)) or 0)
+        # One older provisional version stays while the day goes on, for those who are just looking at it.
+        oldest = version - 1 if provisional else version
+        passing = ours & schema.product.c.provisional & ~schema.product.c.pinned & (schema.product.c.version < oldest)
+        connection.execute(sa.delete(schema.product).where(passing))
         inserted = connection.execute(
             sa.insert(schema.product).values(
-                region=products.region.name, day=day, version=version, pinned=False,
+                region=products.region.name, day=day, version=version, pinned=False, provisional=provisional,
                 simulated=products.origin.simulated,
                 summary=records.to_text(records.summarise(products)),
                 record=records.to_text(records.record_of(products)),
@@ -589,7 +606,7 @@ def _head(row: Any, versions: Any) -> DayHead:
     return DayHead(
         region=row.region, day=np.datetime64(row.day, "D"), version=row.version, versions=tuple(versions),
         pinned=bool(row.pinned), saved_at=np.datetime64(saved, "s"), simulated=bool(row.simulated),
-        **records.from_text(row.summary),
+        provisional=bool(row.provisional), **records.from_text(row.summary),
     )  # fmt: skip
 
 

@@ -1,0 +1,310 @@
+"""The queue at work: files become tasks, workers take tasks, errors are tried again, vanished workers are replaced.
+
+A task is one network day; its receiver-days run side by side on an executor and are kept, so that a day that was cut
+off goes on where it stopped.  What a task makes and that it is done are written in one transaction: a day is never
+stored twice for one task, and never half.  The clock is handed in.
+"""
+
+import os
+import socket
+import threading
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from concurrent.futures import BrokenExecutor, Executor
+from contextlib import ExitStack
+from dataclasses import asdict, dataclass
+from datetime import date
+from functools import cache
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from skylag.archive import Archive, Ending, Task
+from skylag.archive.records import region_from
+from skylag.chain import Choices
+from skylag.errors import FormatError, NotEnough, Refused, SkylagError, Unsolvable
+from skylag.jobs import kept, work
+from skylag.jobs.executor import open_executor
+from skylag.tables import Products, Region
+
+Clock = Callable[[], np.datetime64]  # present UTC
+Log = Callable[..., None]  # event, facts by name
+
+# The input itself is at fault: trying again cannot help.
+_HOPELESS = (FormatError, NotEnough, Unsolvable, Refused)
+NETWORK_DAY = "network day"
+
+
+@dataclass(frozen=True)
+class Policy:
+    """How patient the queue is.
+
+    held_s        a claim runs out so long after its holder was last heard of
+    most_attempts tries that may end in an error; waits between them grow from first_wait_s by wait_factor
+    most_losses   times the process may vanish in the middle
+    kept_s        so long receiver-days are kept
+    """
+
+    held_s: float = 60.0
+    most_attempts: int = 5
+    first_wait_s: float = 5.0
+    wait_factor: float = 4.0
+    longest_wait_s: float = 3600.0
+    most_losses: int = 10
+    kept_s: float = 3 * 86_400.0
+    beat_s: float = 0.5
+
+    def wait_s(self, attempts: int) -> float:
+        """Wait after the so-manieth failed try, from 1."""
+        return min(self.first_wait_s * self.wait_factor ** (attempts - 1), self.longest_wait_s)
+
+
+class Withdrawn(Exception):
+    """The task was cancelled, or is another worker's by now."""
+
+
+# ---------------------------------------------------------------------------------------------- adding
+
+
+def add(
+    archive: Archive,
+    paths: Iterable[Path],
+    *,
+    now: np.datetime64,
+    region: Region | None = None,
+    day: date | None = None,
+    choices: Choices | None = None,
+    simulated: bool = False,
+) -> tuple[list[int], tuple[work.LeftOut, ...]]:
+    """Queue the network days that files and folders hold, one task per day; gives task numbers and what is of no use.
+
+    Navigation, orbit and bias files go with the days whose observations lie in the same folder, and with all days where
+    a folder has no such files of its own.  Raises NotEnough where no observation file tells its day.
+    """
+    inputs = work.sort_inputs(paths)
+    choices = choices or Choices()
+    days: dict[str, list[str]] = {}
+    for path, first in inputs.days.items():
+        if first is not None and (day is None or str(first) == day.isoformat()):
+            days.setdefault(str(first), []).append(path)
+    if not days:
+        wanted = f"of {day}" if day is not None else "that tells its day"
+        raise NotEnough(
+            f"no observation file {wanted} is among the inputs; give RINEX observation files or folders of them"
+            + "".join(f"\n  {item}" for item in inputs.left_out),
+            had=0, needed=1, where="inputs", left_out=[str(item) for item in inputs.left_out],
+        )  # fmt: skip
+    numbers = []
+    for name, observed in sorted(days.items()):
+        side = [*_beside(observed, inputs.orbits), *_beside(observed, inputs.biases)]
+        spec = {
+            "paths": sorted([*observed, *side]),
+            "day": name,
+            "region": None if region is None else asdict(region),
+            "signals": {system: list(pair) for system, pair in choices.signals.items()},
+            "epoch_step_s": choices.epoch_step_s,
+            "simulated": simulated,
+        }
+        title = f"{name} {region.name if region else 'around its receivers'}, {len(observed)} observation files"
+        numbers.append(archive.tasks.add(NETWORK_DAY, title, spec, now))
+    return numbers, inputs.left_out
+
+
+def _beside(observed: Sequence[str], others: Sequence[str]) -> list[str]:
+    folders = {Path(path).parent for path in observed}
+    near = [path for path in others if Path(path).parent in folders]
+    return near or list(others)
+
+
+def region_of(facts: Mapping[str, Any] | None) -> Region | None:
+    """A region from the facts of a task."""
+    return None if facts is None else region_from(facts)
+
+
+def compute(task: Task, executor: Executor, tell: work.Progress) -> Products:
+    """The products of a task."""
+    spec = task.spec
+    if task.kind != NETWORK_DAY:
+        raise Refused(
+            f"work {task.id} is of kind {task.kind!r}, which this program does not do; update the program",
+            name="kind", value=task.kind, allowed=(NETWORK_DAY,),
+        )  # fmt: skip
+    signals = {system: (pair[0], pair[1]) for system, pair in spec["signals"].items()}
+    return work.network_day(
+        [Path(path) for path in spec["paths"]],
+        region=region_of(spec["region"]), day=date.fromisoformat(spec["day"]),
+        choices=Choices(signals=signals, epoch_step_s=spec["epoch_step_s"]), executor=executor,
+        simulated=spec["simulated"], progress=tell,
+    ).products  # fmt: skip
+
+
+# ---------------------------------------------------------------------------------------------- working
+
+
+class Worker:
+    """Takes tasks one after the other.  Several may work on one archive, in threads, processes or on machines."""
+
+    def __init__(
+        self,
+        archive: Archive,
+        place: str,
+        clock: Clock,
+        policy: Policy | None = None,
+        log: Log | None = None,
+        compute: Callable[[Task, Executor, work.Progress], Products] = compute,
+        name: str = "",
+    ) -> None:
+        self._archive, self._place, self._clock = archive, place, clock
+        self._policy = policy or Policy()
+        self._log: Log = log or (lambda event, **facts: None)
+        self._compute = compute
+        self.name = f"{process_name()}/{name or threading.get_ident()}"
+
+    def run(self, stop: threading.Event, *, until_empty: bool = False, idle_s: float = 0.5) -> int:
+        """Work until told to stop, or until nothing is waiting or running; gives how many tasks were taken."""
+        taken = 0
+        while not stop.is_set():
+            with open_executor(self._place) as executor:
+                try:
+                    while not stop.is_set():
+                        if self.one(executor):
+                            taken += 1
+                            continue
+                        counts = self._archive.tasks.counts()
+                        if until_empty and not counts["waiting"] and not counts["running"]:
+                            return taken
+                        stop.wait(idle_s)
+                except BrokenExecutor as failure:  # one of its processes was ended: take new ones
+                    self._log("executor lost", worker=self.name, why=str(failure))
+        return taken
+
+    def one(self, executor: Executor) -> bool:
+        """Take the next task that is due and do it; False where there is none.
+
+        Raises BrokenExecutor, after giving the task back, where the executor is of no more use.
+        """
+        tasks, policy = self._archive.tasks, self._policy
+        tasks.give_back([one for one in tasks.holders() if is_gone(one)], self._clock())
+        task = tasks.claim(self.name, self._clock(), policy.held_s, policy.most_losses)
+        if task is None:
+            return False
+        self._log("task begun", task=task.id, title=task.title, worker=self.name, losses=task.losses)
+        keeping = kept.KeepingExecutor(executor, kept_folder(self._archive))
+        beat = _Beat(self._archive, task, self.name, self._clock, policy)
+        try:
+            with ExitStack() as stack:
+                stack.callback(beat.end)
+                beat.start()
+                products = self._compute(task, keeping, beat.tell)
+                beat.check()
+            result = {
+                "region": products.region.name, "day": str(products.day), "given": keeping.given,
+                "computed": keeping.computed, "warnings": len(products.origin.warnings),
+            }  # fmt: skip
+            version = self._archive.save(products, ending=Ending(task.id, self.name, self._clock(), result))
+            self._log("task done", task=task.id, title=task.title, version=version, given=keeping.given)
+        except Withdrawn:
+            keeping.drop()
+            self._log("task withdrawn", task=task.id, title=task.title)
+        except BrokenExecutor as failure:
+            self._fail(task, failure)
+            raise
+        except Exception as failure:
+            keeping.drop()
+            self._fail(task, failure)
+        return True
+
+    def _fail(self, task: Task, failure: Exception) -> None:
+        """Write down a failed try, and when the next is due."""
+        said = failure.message if isinstance(failure, SkylagError) else f"{type(failure).__name__}: {failure}"
+        attempts, now = task.attempts + 1, self._clock()
+        hopeless = isinstance(failure, _HOPELESS) or attempts >= self._policy.most_attempts
+        wait = np.timedelta64(round(self._policy.wait_s(attempts) * 1e9), "ns")
+        known = self._archive.tasks.fail(task.id, self.name, said, now, None if hopeless else now + wait)
+        self._log("task failed", task=task.id, title=task.title, why=said, again=not hopeless, known=known)
+
+
+class _Beat:
+    """Tells the queue how far a task is and renews its claim, from a thread of its own."""
+
+    def __init__(self, archive: Archive, task: Task, holder: str, clock: Clock, policy: Policy) -> None:
+        self._archive, self._task, self._holder, self._clock, self._policy = archive, task, holder, clock, policy
+        self._latest: tuple[str, float, str] = ("", 0.0, "")
+        self._ended, self._withdrawn = threading.Event(), threading.Event()
+        self._thread = threading.Thread(target=self._run, name=f"beat-{task.id}", daemon=True)
+
+    def start(self) -> None:
+        self._thread.start()
+
+    def end(self) -> None:
+        self._ended.set()
+        self._thread.join()
+
+    def tell(self, stage: str, share: float, word: str) -> None:
+        """Called by the work itself, as often as it likes; raises Withdrawn where it shall stop."""
+        self._latest = (stage, share, word)
+        self.check()
+
+    def check(self) -> None:
+        if self._withdrawn.is_set():
+            raise Withdrawn(str(self._task.id))
+
+    def _run(self) -> None:
+        told: tuple[str, float, str] | None = None
+        beats = 0
+        while not self._ended.wait(self._policy.beat_s):
+            beats += 1
+            latest = self._latest
+            if latest == told and beats % 4:  # a cancelled task is noticed within four beats
+                continue
+            try:
+                going = self._archive.tasks.keep(
+                    self._task.id, self._holder, self._clock(), self._policy.held_s, *latest
+                )
+            except SkylagError:
+                continue  # the database is away: the claim decides, when it is back
+            told = latest
+            if not going:
+                self._withdrawn.set()
+                return
+
+
+def kept_folder(archive: Archive) -> Path:
+    """Where receiver-days of an archive are kept: beside its slant tables."""
+    return archive.slant_folder.with_name(f"{archive.slant_folder.name}.receivers")
+
+
+# ---------------------------------------------------------------------------------------------- who is alive
+
+
+@cache
+def process_name() -> str:
+    """This process, told apart from any other of this machine, also from an earlier one of the same number."""
+    return f"{socket.gethostname()}/{_boot()}/{os.getpid()}/{_started(os.getpid())}"
+
+
+def is_gone(holder: str) -> bool:
+    """Whether a holder is a process of this machine that has ended.  Of other machines nothing is known: False."""
+    parts = holder.split("/")
+    if len(parts) < 4 or parts[0] != socket.gethostname() or parts[1] != _boot() or not parts[3]:
+        return False
+    return not parts[2].isdigit() or _started(int(parts[2])) != parts[3]
+
+
+@cache
+def _boot() -> str:
+    """What tells this run of the machine and this view of its processes; "" where the system tells neither."""
+    try:
+        boot = Path("/proc/sys/kernel/random/boot_id").read_text(encoding="ascii").strip()
+        return f"{boot}:{Path('/proc/self/ns/pid').readlink()}"
+    except OSError:
+        return ""
+
+
+def _started(number: int) -> str:
+    """When a process began, in ticks since the machine did; "" where it is not there, or dead and not yet buried."""
+    try:
+        rest = Path(f"/proc/{number}/stat").read_text(encoding="utf-8", errors="replace").rpartition(") ")[2].split()
+    except OSError:
+        return ""
+    return "" if rest[0] in "ZX" else rest[19]

@@ -1,0 +1,192 @@
+"""Receiver-days that were computed already, kept on disk, so that only what changed is computed again.
+
+`KeepingExecutor` stands before another executor: a receiver-day whose files, orbits, choices and program are the same
+as before is given at once, to the bit; any other work passes through.  What is kept may be thrown away at any time.
+Kept as plain arrays and JSON: nothing that is read can run.
+"""
+
+import hashlib
+import io
+import json
+import os
+import tempfile
+import zipfile
+from collections.abc import Callable, Sequence
+from concurrent.futures import Executor, Future
+from dataclasses import asdict, fields, is_dataclass
+from functools import cache
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+import skylag
+from skylag.chain import ReceiverDay
+from skylag.jobs import work
+from skylag.tables import Problem, Rays, Receiver, SignalPair
+
+
+class KeepingExecutor(Executor):
+    """An executor that keeps receiver-days in a folder."""
+
+    def __init__(self, inner: Executor, folder: Path) -> None:
+        self._inner, self._folder = inner, folder
+        self._pending: set[Future[Any]] = set()
+        self._sources: tuple[Any, str] | None = None
+        self.given, self.computed = 0, 0  # receiver-days given from the folder, and computed
+
+    def submit(self, function: Callable[..., Any], /, *arguments: Any, **named: Any) -> Future[Any]:
+        """As any executor does."""
+        if function is not work.receiver_unit or named:
+            return self._watched(self._inner.submit(function, *arguments, **named))
+        mark = self._mark(*arguments)
+        there = read(self._folder, mark) if mark else None
+        if there is not None:
+            self.given += 1
+            done: Future[Any] = Future()
+            done.set_result(there)
+            return done
+        self.computed += 1
+        future = self._watched(self._inner.submit(function, *arguments))
+        if mark:
+            future.add_done_callback(lambda one: _keep(self._folder, mark, one))
+        return future
+
+    def drop(self) -> None:
+        """Cancel what has not begun."""
+        for future in tuple(self._pending):
+            future.cancel()
+
+    def _watched(self, future: Future[Any]) -> Future[Any]:
+        self._pending.add(future)
+        future.add_done_callback(self._pending.discard)
+        return future
+
+    def _mark(
+        self, key: str, paths: Sequence[str], day: np.datetime64, sources: Any, choices: Any, shell_height_m: float
+    ) -> str:
+        """What names a receiver-day: everything that its result depends on; "" where a file cannot be read."""
+        if self._sources is None or self._sources[0] is not sources:
+            self._sources = (sources, digest(sources))
+        try:
+            files = [(path, hashlib.sha256(Path(path).read_bytes()).hexdigest()) for path in paths]
+        except OSError:
+            return ""
+        facts = [program(), key, files, str(day), self._sources[1], repr(choices), shell_height_m]
+        return hashlib.sha256(json.dumps(facts).encode()).hexdigest()
+
+
+def digest(value: Any) -> str:
+    """A hash of tables made of arrays, numbers and texts."""
+    found = hashlib.sha256()
+
+    def add(one: Any) -> None:
+        if isinstance(one, np.ndarray):
+            found.update(f"{one.dtype.str}{one.shape}".encode())
+            found.update(np.ascontiguousarray(one).tobytes())
+        elif is_dataclass(one):
+            found.update(type(one).__name__.encode())
+            for item in fields(one):
+                add(getattr(one, item.name))
+        elif isinstance(one, dict):
+            for name, part in one.items():
+                add(name)
+                add(part)
+        elif isinstance(one, list | tuple):
+            found.update(str(len(one)).encode())
+            for part in one:
+                add(part)
+        else:
+            found.update(repr(one).encode())
+
+    add(value)
+    return found.hexdigest()
+
+
+@cache
+def program() -> str:
+    """A hash of this program's own text: a change of it makes all that was kept void."""
+    folder, found = Path(skylag.__file__).parent, hashlib.sha256()
+    for path in sorted(folder.rglob("*.py")):
+        found.update(f"{path.relative_to(folder)}".encode() + path.read_bytes())
+    return found.hexdigest()
+
+
+def _path(folder: Path, mark: str) -> Path:
+    return folder / mark[:2] / f"{mark}.npz"
+
+
+def _keep(folder: Path, mark: str, future: Future[Any]) -> None:
+    if not future.cancelled() and future.exception() is None and future.result().day is not None:
+        try:
+            write(folder, mark, future.result())
+        except OSError:
+            return  # a full disk only costs the time to compute it again
+
+
+def write(folder: Path, mark: str, result: work.ReceiverResult) -> None:
+    """Keep a receiver-day; a half-written file never has its name."""
+    made = result.day
+    assert made is not None  # nothing else is kept
+    rays = made.rays
+    facts = {
+        "key": result.key,
+        "receiver": asdict(made.receiver),
+        "notes": made.notes,
+        "facts": dict(made.facts),
+        "problems": [asdict(one) for one in result.problems],
+        "left_out": [asdict(one) for one in result.left_out],
+        "receivers": [asdict(one) for one in rays.receivers],
+        "pairs": [asdict(one) for one in rays.pairs],
+        "shell_height_m": rays.shell_height_m,
+        "interval_s": rays.interval_s,
+    }
+    arrays = {name: getattr(rays, name) for name in (*Rays.COLUMNS, "satellites")}
+    content = io.BytesIO()
+    np.savez(content, facts=np.frombuffer(json.dumps(facts).encode(), dtype=np.uint8), **arrays)
+    goal = _path(folder, mark)
+    goal.parent.mkdir(parents=True, exist_ok=True)
+    handle, passing = tempfile.mkstemp(dir=goal.parent, prefix="writing-")
+    try:
+        with os.fdopen(handle, "wb") as file:
+            file.write(content.getbuffer())
+        Path(passing).replace(goal)
+    finally:
+        Path(passing).unlink(missing_ok=True)
+
+
+def read(folder: Path, mark: str) -> work.ReceiverResult | None:
+    """A kept receiver-day; None where there is none or it is damaged."""
+    path = _path(folder, mark)
+    try:
+        with np.load(path, allow_pickle=False) as there:
+            arrays = {name: there[name] for name in there.files}
+    except (OSError, ValueError, EOFError, zipfile.BadZipFile):
+        return None
+    facts = json.loads(bytes(arrays.pop("facts")))
+    rays = Rays(
+        receivers=tuple(_receiver(one) for one in facts["receivers"]),
+        pairs=tuple(SignalPair(**one) for one in facts["pairs"]),
+        shell_height_m=facts["shell_height_m"], interval_s=facts["interval_s"], **arrays,
+    )  # fmt: skip
+    return work.ReceiverResult(
+        key=facts["key"],
+        day=ReceiverDay(_receiver(facts["receiver"]), rays, tuple(facts["notes"]), facts["facts"]),
+        problems=tuple(Problem(**one) for one in facts["problems"]),
+        left_out=tuple(work.LeftOut(**one) for one in facts["left_out"]),
+    )
+
+
+def _receiver(facts: dict[str, Any]) -> Receiver:
+    x, y, z = facts["position_m"]
+    return Receiver(facts["name"], (x, y, z), facts["antenna"], facts["type"])
+
+
+def tidy(folder: Path, older_than_s: float, now_s: float) -> int:
+    """Throw away what was written longer ago than a span, by the files' own times; gives how many."""
+    gone = 0
+    for path in folder.rglob("*") if folder.is_dir() else ():
+        if path.is_file() and now_s - path.stat().st_mtime > older_than_s:
+            path.unlink(missing_ok=True)
+            gone += 1
+    return gone
