@@ -382,7 +382,8 @@ def assumptions(
         f"A grid older than {told.time_out_s:g} s is not used. Without a grid (en route to NPA) the receiver assumes "
         "4.5 to 9 m of vertical delay uncertainty, by geomagnetic latitude; the broadcast model's own share is left "
         "out.",
-        f"An outage is put down to geometry where it would remain with grid delays known to {choices.usual_grid_m:g} m.",
+        "An outage is put down to geometry where it would remain with grid delays known to "
+        f"{choices.usual_grid_m:g} m.",
     )
 
 
