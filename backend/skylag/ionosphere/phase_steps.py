@@ -22,6 +22,7 @@ LEAST = 7  # points a window needs for that degree and a step
 CLOCK_SATELLITES = 5  # the receiver's clock is the middle of at least so many
 BLOCK = 40  # epochs over which the noise of phases is taken as one
 _BLOCK_LEAST = 16  # steps that tell the noise of a block
+DIM_M = 0.03  # a noisier ionosphere-free step does not tell the smallest slip, 0.1 m
 FLOOR_M = 0.003  # phases are never trusted beyond this
 
 
@@ -233,8 +234,8 @@ def worth_a_look(series: Series, left: Ints, right: Ints, columns: Ints) -> Step
     fifth = series.fifth[:, columns]
     quick = _noise(fifth, (left_here >= 3) & (right_here >= 3) & np.isfinite(fifth))
     if columns.size == series.present.shape[1]:
-        known = np.isfinite(unit / quick)
-        series.promise = 1.3 * float(np.median((unit / quick)[known])) if known.any() else np.nan
+        known = np.isfinite(unit) & (quick > 0)
+        series.promise = 1.3 * float(np.median(unit[known] / quick[known])) if known.any() else np.nan
     unit = np.fmin(unit, series.promise * quick)
     short_unit = _noise(bend, (left_here >= SHORT) & (right_here >= SHORT)) / short_norm
     series.unit["geometry"][:, columns], series.unit["difference"][:, columns] = unit, short_unit
@@ -243,6 +244,7 @@ def worth_a_look(series: Series, left: Ints, right: Ints, columns: Ints) -> Step
     blind = np.asarray(~np.isfinite(series.step).any(axis=1))
     with np.errstate(invalid="ignore"):
         loud = np.abs(step) > np.where(series.told[:, columns], 3.0, 4.5) * sigma
+        loud |= ~(sigma < DIM_M) & (np.abs(bend) > 4.5 * bend_sigma)
         loud |= ~np.isfinite(step) & (np.abs(bend) > 4.5 * bend_sigma)
     at_hand = series.present[:, columns] & (left_here >= 1) & (right_here >= 1)
     row, column = np.nonzero(at_hand & (loud | ~whole | blind[:, None]))

@@ -21,6 +21,7 @@ from skylag.ionosphere.combinations import slip_effect, tecu_per_metre
 from skylag.ionosphere.phase_steps import (
     BLOCK,
     CLOCK_SATELLITES,
+    DIM_M,
     FLOOR_M,
     LEAST,
     SHORT,
@@ -168,10 +169,12 @@ def _accept(series: Series, steps: Steps, left: Ints, right: Ints, choices: ArcC
         in_difference = np.abs(steps.difference) / steps.difference_sigma
         in_wide = np.abs(steps.wide) / steps.wide_sigma
         blind = ~np.isfinite(in_geometry)
+        dim = blind | (steps.geometry_sigma > DIM_M)
         told = series.told[steps.row, steps.column]
-        loud = (in_geometry > np.where(told, 3.0, 4.5)) | (blind & ((in_difference > 4.5) | (in_wide > 4.0)))
+        loud = in_geometry > np.where(told, 3.0, 4.5)
+        loud |= (dim & (in_difference > 4.5)) | (blind & (in_wide > 4.0))
     steps = steps.take(loud)
-    told, blind = told[loud], blind[loud]
+    told, blind, dim = told[loud], blind[loud], dim[loud]
     in_geometry, in_difference = in_geometry[loud], np.nan_to_num(in_difference[loud])
     size, large = np.nan_to_num(np.abs(steps.difference)), np.nan_to_num(np.abs(steps.geometry))
     fit = _fit(series, steps)
@@ -186,9 +189,9 @@ def _accept(series: Series, steps: Steps, left: Ints, right: Ints, choices: ArcC
         broken = (in_geometry > 8.0) & (large > 0.06) & (in_difference > 6.0) & (size > 0.03)
         broken |= (in_geometry > 8.0) & (large > 1.0)
         # Without the other satellites' help the ionosphere may bend L1 - L2 by itself: it must be a step well outside.
-        alone = np.where((in_difference > 6.0) & (size > 0.025), True, np.abs(steps.wide) > 0.7)
+        alone = (in_geometry > 4.5) | ((in_difference > 6.0) & (size > 0.025)) | (blind & (np.abs(steps.wide) > 0.7))
         torn = blind & (in_difference > 10.0) & (size > 0.08)
-    good = (whole & (~blind | alone)) | broken | torn
+    good = (whole & (~dim | alone)) | broken | torn
     steps, fit = steps.take(good), fit.take(good)
     # What no whole numbers explain may be the echo of a slip not yet taken out: it waits until there is none near.
     odd = ~whole[good]
