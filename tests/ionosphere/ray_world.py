@@ -119,11 +119,7 @@ def make(
                     pierce_lat, pierce_lon = geometry.pierce(lat, lon, elevation, azimuth, 400e3)
                     mapping = geometry.mapping(elevation, 400e3)
                     vertical = smooth_content(pierce_lat, pierce_lon - lon_shift, at)
-                    geocentric = np.degrees(np.arctan2(receiver.position_m[2], np.hypot(*receiver.position_m[:2])))
-                    high = plasmasphere * slant_shape(
-                        np.full(len(at), geocentric), np.full(len(at), lon), elevation, azimuth
-                    )
-                    stec = mapping * vertical + high + rng.normal(0.0, level_sigma) + rng.normal(0.0, noise, len(at))
+                    stec = mapping * vertical + rng.normal(0.0, level_sigma) + rng.normal(0.0, noise, len(at))
                     row = {
                         "time": DAY + (at * 3600e9).astype(np.int64).astype("timedelta64[ns]"),
                         "receiver": 0, "satellite": int(np.searchsorted(mine, name)), "arc": arc, "pair": p,
@@ -143,6 +139,9 @@ def make(
                             for pair in rays.pairs])  # fmt: skip
         of_receiver = np.array([bias["receiver", receiver.name, pair.name] for pair in rays.pairs])
         own = of_receiver[rays.pair] + of_pair[rays.pair, rays.satellite]
+        geocentric = np.degrees(np.arctan2(receiver.position_m[2], np.hypot(*receiver.position_m[:2])))
+        here = (np.full(len(rays), geocentric), np.full(len(rays), lon))
+        rays.stec[:] += plasmasphere * slant_shape(*here, rays.elevation, rays.azimuth)
         rays = replace(rays, stec=rays.stec - adjustment.content_per_ns(rays, channels) * own)
         parts.append(rays)
         contents.append(np.concatenate(content))

@@ -8,6 +8,7 @@ names or datums: what is known beforehand comes in as `Knowledge`.
 
 import itertools
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from scipy.interpolate import BSpline
@@ -56,7 +57,8 @@ class Design:
         """Degree in the place of every term."""
         return np.array([i + j for i in range(self.degree + 1) for j in range(self.degree + 1 - i)])
 
-    def spans(self) -> "list[tuple[slice, slice]]":
+    @cached_property
+    def spans(self) -> list[tuple[slice, slice]]:
         """(rows, columns of the whole system) of every time interval that has rows."""
         width = self.slant.shape[1]
         found = []
@@ -66,17 +68,29 @@ class Design:
                 found.append((slice(int(start), int(end)), slice(column, column + width)))
         return found
 
+    @cached_property
+    def picks(self) -> list[csr_matrix]:
+        """Per interval, (biases, rows): what each row has of each bias."""
+        both = np.stack([self.receiver, self.satellite], axis=1)
+        return [
+            csr_matrix(
+                (np.repeat(self.factor[rows], 2), both[rows].ravel(), np.arange(rows.stop - rows.start + 1) * 2),
+                shape=(rows.stop - rows.start, self.biases),
+            ).T.tocsr()
+            for rows, _ in self.spans
+        ]
+
     def smooth(self, x: Floats) -> Floats:
         """Vertical content [TECU] of the smooth model at every row."""
         found = np.empty(len(self.first))
-        for rows, columns in self.spans():
+        for rows, columns in self.spans:
             found[rows] = self.vertical[rows] @ x[columns]
         return found
 
     def predict(self, x: Floats) -> Floats:
         """Levelled slant content [TECU] of every row."""
         found = self.factor * (x[self.receiver] + x[self.satellite]) + self.high * x[-1]
-        for rows, columns in self.spans():
+        for rows, columns in self.spans:
             found[rows] += self.slant[rows] @ x[columns]
         return np.asarray(found)
 
@@ -122,7 +136,7 @@ class Normal:
 
     def __init__(
         self, design: Design, weight: Floats, arc_of_row: Ints, arc_variance: Floats,
-        knowledge: "list[Knowledge]",
+        knowledge: list[Knowledge],
     ) -> None:  # fmt: skip
         self._design, self._weight, self._arc = design, weight, arc_of_row
         biases, size, arcs = design.biases, design.size, len(arc_variance)
@@ -138,18 +152,13 @@ class Normal:
         normal[-1, -1] = weight @ high**2
         coupling = np.zeros((arcs, upper.shape[1]))
         begins, ends = np.full(arcs, size), np.zeros(arcs, dtype=np.int64)
-        for rows, columns in design.spans():
+        for (rows, columns), pick in zip(design.spans, design.picks, strict=True):
             slant = design.slant[rows]
             weighted = slant * weight[rows, None]
             inside = slice(columns.start - biases, columns.stop - biases)
             normal[columns, columns] += slant.T @ weighted
             normal[columns, -1] += high[rows] @ weighted
-            count = rows.stop - rows.start
-            pick = csr_matrix(
-                (np.repeat(factor[rows], 2), np.stack([receiver[rows], satellite[rows]], axis=1).ravel(),
-                 np.arange(count + 1) * 2), shape=(count, biases),
-            )  # fmt: skip
-            upper[:, inside] += pick.T @ weighted
+            upper[:, inside] += pick @ weighted
             # Rows of an interval are sorted by arc.
             arc = arc_of_row[rows]
             turn = np.flatnonzero(np.concatenate([[True], arc[1:] != arc[:-1]]))
@@ -199,7 +208,7 @@ class Normal:
         right = np.zeros(design.size)
         right[: design.biases] = self._by_bias(heavy * design.factor)
         right[-1] = heavy @ design.high
-        for rows, columns in design.spans():
+        for rows, columns in design.spans:
             right[columns] += heavy[rows] @ design.slant[rows]
         taken = self._inner * sums
         right[: design.biases] -= self._of_bias.T @ taken

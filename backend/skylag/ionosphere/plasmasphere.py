@@ -22,7 +22,8 @@ _PLASMAPAUSE_L, _PLASMAPAUSE_WIDTH = 4.5, 0.3
 # North pole of the centred dipole of 2020 (IGRF coefficients g10, g11, h11).
 _POLE_LAT, _POLE_LON = 80.589, -72.680
 BASE_HEIGHT_M, TOP_HEIGHT_M = 1.0e6, 2.02e7
-_NODES = 14
+# Gauss-Legendre in the logarithm of geocentric radius: dense where the plasma is.
+_NODES = np.polynomial.legendre.leggauss(14)
 
 
 # Between the shape and its neighbour, whose exponent is larger by this, the shape's change is taken.
@@ -46,8 +47,6 @@ def _shape_and_change(
     """The shape, and how it changes per unit of the foot exponent [TECU]."""
     lat_rad, lon_rad = np.radians(lat), np.radians(lon)
     elevation_rad, azimuth_rad = np.radians(elevation), np.radians(azimuth)
-    # Gauss-Legendre in the logarithm of geocentric radius: dense where the plasma is.
-    nodes, weights = np.polynomial.legendre.leggauss(_NODES)
     low = np.log(SHELL_EARTH_RADIUS_M + BASE_HEIGHT_M)
     high = np.log(SHELL_EARTH_RADIUS_M + TOP_HEIGHT_M)
     total, steeper = np.zeros(np.shape(elevation)), np.zeros(np.shape(elevation))
@@ -58,7 +57,7 @@ def _shape_and_change(
     north = np.cos(lat_rad) * np.sin(pole_lat) - np.sin(lat_rad) * np.cos(pole_lat) * np.cos(lon_rad - pole_lon)
     east = -np.cos(pole_lat) * np.sin(lon_rad - pole_lon)
     sin_along = north * np.cos(azimuth_rad) + east * np.sin(azimuth_rad)
-    for node, weight in zip(nodes, weights, strict=True):
+    for node, weight in zip(*_NODES, strict=True):
         r = np.exp(0.5 * (high - low) * node + 0.5 * (high + low))
         sine = SHELL_EARTH_RADIUS_M * cos_e / r
         cosine = np.sqrt(1.0 - sine**2)
