@@ -1,0 +1,249 @@
+"""Ground-based augmentation of an aerodrome: the slope against what such a station may assume.
+
+Three questions per minute of the maps: is the slope within the nominal spread that the station announces; could it be
+announced at all; is it within the published threat space.  And: which front comes next, and when.  A planning aid, not
+for navigation: an approved station has its own monitors and its own threat space, which decide.
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from skylag.errors import Refused
+from skylag.impact.satellite_augmentation import CAUTION, spans
+from skylag.impact.states import nearest_cells
+from skylag.ionosphere.covariance import plane_km
+from skylag.ionosphere.geometry import mapping
+from skylag.tables import UNSEEN, Bools, Fields, Flag, Floats, Site, Times
+
+ANNOUNCED_MOST = 25.5  # mm/km: 255 times 0.1; ICAO Annex 10, Appendix B to chapter 3
+# A spread of 4 mm/km bounds nominal slopes over CONUS: Mayer et al. 2009, ION GNSS, 1091-1099.
+NOMINAL_SIGMA = 4.0
+QUANTILE = 3.29  # 99.9 %: a slope beyond so many spreads is not nominal (our choice of share)
+# Slant slopes [mm/km on 1575.42 MHz] up to which fronts are foreseen: 375 at 15 degrees of elevation to 425 at 65
+# (Datta-Barua et al. 2010, 425 opened; the line between from memory).
+_THREAT_LOW, _THREAT_HIGH = (15.0, 375.0), (65.0, 425.0)
+# Speeds of fronts from few stations carry about 30 % (Radio Science 48, 2013): the spread of an arrival by a flag.
+SPEED_DOUBT = 0.3
+
+
+def threat_mm_per_km(elevation: npt.ArrayLike) -> Floats:
+    """Steepest slant slope [mm/km] of the CONUS threat space at elevations [deg]."""
+    ends, slopes = zip(_THREAT_LOW, _THREAT_HIGH, strict=True)
+    return np.asarray(np.interp(np.asarray(elevation, dtype=np.float64), ends, slopes))
+
+
+def nominal_error_m(
+    factor: npt.ArrayLike, sigma_mm_per_km: float, distance_km: float, speed_m_s: float, smoothing_s: float = 100.0
+) -> Floats:
+    """Sigma [m] of the differential delay of an approaching aircraft on a line of sight.
+
+    factor  slant over vertical; smoothing of 100 s (or 30 s) drags the past along: twice its length times the speed.
+    Source: ICAO Annex 10, Appendix B, 3.6.5.4 (formula from memory).
+    """
+    way_km = distance_km + 2.0 * smoothing_s * speed_m_s / 1000.0
+    return np.asarray(np.asarray(factor, dtype=np.float64) * sigma_mm_per_km * 1e-3 * way_km)
+
+
+def front_error_m(slope_mm_per_km: float, distance_km: float, speed_m_s: float, smoothing_s: float = 100.0) -> float:
+    """Differential delay [m] that a slope makes for an approaching aircraft: slope times the way as above."""
+    return slope_mm_per_km * 1e-3 * (distance_km + 2.0 * smoothing_s * speed_m_s / 1000.0)
+
+
+@dataclass(frozen=True)
+class StationChoices:
+    """What the aerodrome's station and its aircraft are taken to do; printed with every result.
+
+    sigma_mm_per_km  announced spread of the vertical slope; distance_km from station to aircraft, speed_m_s, and
+    smoothing_s of the aircraft; lowest_deg: lowest elevation used, for the slant slope
+    """
+
+    sigma_mm_per_km: float = NOMINAL_SIGMA
+    distance_km: float = 6.0
+    speed_m_s: float = 70.0
+    smoothing_s: float = 100.0
+    lowest_deg: float = 15.0
+
+    def __post_init__(self) -> None:
+        for name, low, high in (
+            ("sigma_mm_per_km", 0.1, ANNOUNCED_MOST), ("distance_km", 0.1, 100.0), ("speed_m_s", 1.0, 200.0),
+            ("smoothing_s", 1.0, 600.0), ("lowest_deg", 5.0, 40.0),
+        ):  # fmt: skip
+            value = getattr(self, name)
+            if not low <= value <= high:
+                raise Refused(
+                    f"{name}: {value:g} is outside {low:g} to {high:g}", name=name, value=value, allowed=(low, high)
+                )
+
+
+@dataclass(frozen=True)
+class Exceeded:
+    """A span in which an assumption of a site's station is exceeded, or nothing is seen; GPS time; why in words.
+
+    what  "nominal", "announced", "threat" or "unseen"
+    """
+
+    site: str
+    start: np.datetime64
+    end: np.datetime64
+    what: str
+    why: str
+
+
+@dataclass(frozen=True)
+class NextFront:
+    """The front that reaches a site next after a time: when, its spread [s], its distance [km] then; in words."""
+
+    expected: np.datetime64
+    sigma_s: float
+    distance_km: float
+    slope_mm_per_km: float
+    words: str
+
+
+@dataclass(frozen=True)
+class StationDay:
+    """An aerodrome's day, (T,) at the epochs of the maps.
+
+    slope, slope_sigma [mm/km, vertical]; seen; error_95_m: 95 % differential delay of an aircraft at the lowest
+    elevation; minutes: per kind of `Exceeded.what`, how many minutes of the day
+    """
+
+    site: Site
+    times: Times
+    slope: Floats
+    slope_sigma: Floats
+    seen: Bools
+    error_95_m: Floats
+    exceeded: tuple[Exceeded, ...]
+    minutes: dict[str, float]
+    assumptions: tuple[str, ...]
+    caution: str = CAUTION
+
+
+def station_day(
+    site: Site, fields: Fields, flags: Sequence[Flag] = (), choices: StationChoices | None = None,
+    shell_height_m: float = 400e3,
+) -> StationDay:  # fmt: skip
+    """The slope at an aerodrome through the day against the station's assumptions.
+
+    A confirmed front that passes within the maps' cell of the site counts with its own slope, which maps smear out.
+    """
+    choices = choices or StationChoices()
+    row, column, inside = nearest_cells(fields, np.array([site.lat]), np.array([site.lon]))
+    place = (slice(None), int(row[0]), int(column[0]))
+    slope = np.asarray(fields.slope[place], dtype=np.float64)
+    sigma = np.asarray(fields.slope_sigma[place], dtype=np.float64)
+    seen = bool(inside[0]) & np.isfinite(slope) & np.isfinite(sigma)
+    seen &= (fields.state[place] != UNSEEN) & (fields.support[place] > 0)
+    step_s = float(np.median(np.diff(fields.times)) / np.timedelta64(1, "s")) if len(fields.times) > 1 else 300.0
+    for flag in flags:
+        over = _front_over(flag, site, fields.times, step_s)
+        steeper = over & (~seen | (flag.slope_mm_per_km > slope))
+        slope = np.where(steeper, flag.slope_mm_per_km, slope)
+        sigma = np.where(steeper, flag.sigma_mm_per_km, sigma)
+        seen = seen | over
+    slope, sigma = np.where(seen, slope, np.nan), np.where(seen, sigma, np.nan)
+    factor = float(mapping(choices.lowest_deg, shell_height_m))
+    way_km = choices.distance_km + 2.0 * choices.smoothing_s * choices.speed_m_s / 1000.0
+    error = factor * (slope + 1.645 * sigma) * 1e-3 * way_km
+    sure = slope - sigma
+    with np.errstate(invalid="ignore"):
+        marks = {
+            "nominal": sure > QUANTILE * choices.sigma_mm_per_km,
+            "announced": sure > ANNOUNCED_MOST,
+            "threat": factor * sure > float(threat_mm_per_km(choices.lowest_deg)),
+            "unseen": ~seen,
+        }
+    return StationDay(
+        site, fields.times, slope, sigma, seen, error,
+        tuple(_exceeded(site, fields.times, slope, sigma, marks, choices, step_s)),
+        {name: float(mark.sum()) * step_s / 60.0 for name, mark in marks.items()},
+        _assumptions(choices, factor, shell_height_m),
+    )  # fmt: skip
+
+
+def _front_over(flag: Flag, site: Site, times: Times, step_s: float) -> Bools:
+    """Epochs at which a confirmed front's line passes a site within half a step of its way, and 25 km."""
+    over: Bools = np.zeros(len(times), dtype=bool)
+    if flag.kind != "front" or not flag.confirmed or not flag.track or not np.isfinite(flag.heading_deg):
+        return over
+    for number in np.flatnonzero((times >= flag.start) & (times <= flag.end)):
+        away = ahead_of(flag, site.lat, site.lon, times[number])
+        over[number] = abs(away) <= 25.0 + 0.5 * flag.speed_m_s * step_s / 1000.0
+    return over
+
+
+def ahead_of(flag: Flag, lat: float, lon: float, time: np.datetime64) -> float:
+    """How far [km] a place lies ahead of a front's line at a time, by the flag's track, speed and heading."""
+    moment, line_lat, line_lon = min(flag.track, key=lambda point: abs(point[0] - time))
+    x, y = plane_km(np.array([lat]), np.array([lon]), (line_lat, line_lon))
+    heading_rad = np.radians(flag.heading_deg)
+    late_s = float((time - moment) / np.timedelta64(1, "s"))
+    return float(x[0] * np.sin(heading_rad) + y[0] * np.cos(heading_rad)) - flag.speed_m_s * late_s / 1000.0
+
+
+def next_front(site: Site, flags: Sequence[Flag], now: np.datetime64, horizon_s: float = 10_800.0) -> NextFront | None:
+    """The nearest confirmed front seen before `now` that still comes toward a site; None where there is none."""
+    found: list[NextFront] = []
+    for flag in flags:
+        if flag.kind != "front" or not flag.confirmed or not flag.track or not flag.start <= now:
+            continue
+        if not flag.speed_m_s >= 5.0 or now > flag.end + np.timedelta64(1, "h"):
+            continue
+        known = tuple(point for point in flag.track if point[0] <= now) or flag.track[:1]
+        away = ahead_of(
+            Flag(**{**{name: getattr(flag, name) for name in flag.__dataclass_fields__}, "track": known}),
+            site.lat, site.lon, now,
+        )  # fmt: skip
+        wait_s = away / flag.speed_m_s * 1000.0
+        if not 0 < wait_s <= horizon_s:
+            continue
+        sigma_s = SPEED_DOUBT * wait_s
+        expected = now + np.timedelta64(round(wait_s * 1e9), "ns")
+        found.append(
+            NextFront(
+                expected, sigma_s, away, flag.slope_mm_per_km,
+                f"front of {flag.slope_mm_per_km:.0f} mm/km, {away:.0f} km away, at {flag.speed_m_s:.0f} m/s toward "
+                f"{flag.heading_deg:.0f} degrees: in {wait_s / 60:.0f} ± {sigma_s / 60:.0f} minutes",
+            )
+        )  # fmt: skip
+    return min(found, key=lambda one: one.expected, default=None)
+
+
+def _exceeded(
+    site: Site, times: Times, slope: Floats, sigma: Floats, marks: dict[str, Bools], choices: StationChoices,
+    step_s: float,
+) -> list[Exceeded]:  # fmt: skip
+    limit = {
+        "nominal": f"{QUANTILE:g} times the announced spread of {choices.sigma_mm_per_km:g} mm/km",
+        "announced": f"the largest spread that can be announced, {ANNOUNCED_MOST:g} mm/km",
+        "threat": f"the threat space, {float(threat_mm_per_km(choices.lowest_deg)):.0f} mm/km of slant slope at "
+        f"{choices.lowest_deg:g} degrees",
+    }
+    step = np.timedelta64(round(step_s * 1e9), "ns")
+    rows = []
+    for what, mark in marks.items():
+        for first, last in spans(mark):
+            why = "the maps do not see the aerodrome: nothing can be said"
+            if what != "unseen":
+                worst = first + int(np.nanargmax(slope[first:last]))
+                why = f"vertical slope up to {slope[worst]:.0f} ± {sigma[worst]:.0f} mm/km is beyond {limit[what]}"
+            rows.append(Exceeded(site.name, times[first], times[last - 1] + step, what, why))
+    return sorted(rows, key=lambda one: (one.start, one.what))
+
+
+def _assumptions(choices: StationChoices, factor: float, shell_height_m: float) -> tuple[str, ...]:
+    return (
+        f"The station announces a spread of {choices.sigma_mm_per_km:g} mm/km of vertical slope; {QUANTILE:g} times "
+        "of it is taken as the end of what is nominal.",
+        f"The aircraft is {choices.distance_km:g} km away at {choices.speed_m_s:g} m/s and smooths over "
+        f"{choices.smoothing_s:g} s; its lowest satellite at {choices.lowest_deg:g} degrees sees {factor:.2f} times "
+        f"the vertical (thin shell at {shell_height_m / 1000:g} km).",
+        "Threat space: that published for CONUS, 375 mm/km at 15 degrees to 425 mm/km at 65 degrees and above; "
+        "the region's own may differ.",
+        "A slope counts where it is beyond a limit by one sigma. Maps smear out walls narrower than their cells; "
+        "fronts that were confirmed count with their own slope.",
+    )

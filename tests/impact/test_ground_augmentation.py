@@ -1,0 +1,127 @@
+"""Ground-based augmentation: published bounds and worked errors, minutes exceeded, fronts on their way."""
+
+import numpy as np
+import pytest
+from tests.conftest import Evidence
+from tests.impact.test_survey import DAY, TIMES, some_fields
+
+from skylag.errors import Refused
+from skylag.impact import ground_augmentation as ground
+from skylag.impact.ground_augmentation import StationChoices
+from skylag.ionosphere.geometry import mapping
+from skylag.tables import UNSEEN, Flag, Site
+
+SITE = Site("Here", -40.0, 146.0, "aerodrome")
+
+
+@pytest.mark.parametrize(("elevation", "expected"), [(5, 375), (15, 375), (30, 390), (40, 400), (65, 425), (90, 425)])
+def test_the_threat_space(elevation: float, expected: float, evidence: Evidence) -> None:
+    evidence(f"threat space at elevation {elevation}", unit="mm/km", expected=expected, tolerance=1e-9,
+             source="Datta-Barua et al. 2010 (425); line from 375 at 15 to 425 at 65 degrees from memory",
+             got=float(ground.threat_mm_per_km(elevation)))  # fmt: skip
+
+
+def test_the_nominal_error(evidence: Evidence) -> None:
+    factor = float(mapping(30.0, 350e3, 6_378_136.3))
+    evidence("nominal differential delay: 30 degrees, 4 mm/km, 6 km, 70 m/s, 100 s", unit="m", tolerance=5.1e-10,
+             source="ICAO Annex 10 App. B 3.6.5.4 (formula from memory)", expected=0.140113688,
+             got=float(ground.nominal_error_m(factor, 4.0, 6.0, 70.0)))  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    ("slope", "smoothing", "speed", "expected", "digit"),
+    [(425, 100, 70, 8.5, 0.05), (425, 30, 70, 4.335, 5e-4), (100, 100, 70, 2.0, 0.05), (100, 30, 70, 1.02, 5e-3),
+     (4, 100, 70, 0.08, 5e-3), (4, 30, 70, 0.041, 5e-4), (425, 100, 0, 2.55, 5e-3)],
+)  # fmt: skip
+def test_errors_from_a_front(
+    slope: float, smoothing: float, speed: float, expected: float, digit: float, evidence: Evidence
+) -> None:
+    evidence(f"error from {slope} mm/km, 6 km, {speed} m/s, {smoothing} s", unit="m", expected=expected,
+             source="slope times (distance + 2 x smoothing x speed)", tolerance=digit * 1.001,
+             got=ground.front_error_m(slope, 6.0, speed, smoothing))  # fmt: skip
+
+
+def test_minutes_beyond_each_limit() -> None:
+    fields = some_fields(1.0, 0.1)
+    for first, slope in ((10, 14.0), (20, 30.0), (30, 300.0)):
+        fields.slope[first : first + 3] = slope
+    fields.state[100:112] = UNSEEN
+    found = ground.station_day(SITE, fields)
+    assert found.minutes == {"nominal": 45.0, "announced": 30.0, "threat": 15.0, "unseen": 60.0}
+    assert {one.what for one in found.exceeded} == {"nominal", "announced", "threat", "unseen"}
+    first = next(one for one in found.exceeded if one.what == "nominal")
+    assert (first.start, first.end) == (TIMES[10], TIMES[13])
+    assert "14 ± 0 mm/km" in first.why
+    assert np.isnan(found.error_95_m[100:112]).all()
+
+
+def test_a_slope_counts_beyond_its_sigma_only() -> None:
+    fields = some_fields(14.0, 2.0)
+    assert ground.station_day(SITE, fields).minutes["nominal"] == 0.0
+    fields.slope_sigma[:] = 0.5
+    assert ground.station_day(SITE, fields).minutes["nominal"] == 1440.0
+
+
+def test_a_smaller_spread_never_shortens() -> None:
+    fields = some_fields(1.0, 0.1)
+    fields.slope[:, :, :] = np.linspace(0, 40, len(TIMES))[:, None, None]
+    minutes = [
+        ground.station_day(SITE, fields, (), StationChoices(sigma_mm_per_km=sigma)).minutes["nominal"]
+        for sigma in (1.0, 2.0, 4.0, 8.0)
+    ]
+    assert minutes == sorted(minutes, reverse=True)
+    assert minutes[0] > minutes[-1] > 0
+
+
+def a_front(confirmed: bool = True) -> Flag:
+    """Moving north at 200 m/s; at 06:00 it lies 300 km south of the site."""
+    start = DAY + np.timedelta64(6, "h")
+    steps = np.arange(0, 50, 5)
+    track = tuple(
+        (start + np.timedelta64(int(k), "m"), -40.0 - (300 - 12.0 * k) / 111.195, 146.0) for k in steps
+    )
+    return Flag(start, track[-1][0], -41.0, 146.0, "front", 60.0, 3.0, 200.0, 0.0, "broken", "seen", confirmed, track)
+
+
+def test_when_the_next_front_comes() -> None:
+    now = DAY + np.timedelta64(365, "m")  # 60 km later: 240 km to go, 20 minutes
+    found = ground.next_front(SITE, [a_front(False), a_front()], now)
+    assert found is not None
+    assert found.distance_km == pytest.approx(240.0, abs=1.0)
+    assert abs(found.expected - (DAY + np.timedelta64(385, "m"))) < np.timedelta64(10, "s")
+    assert found.sigma_s == pytest.approx(0.3 * 1200, rel=0.01)
+    assert "in 20 ± 6 minutes" in found.words
+
+
+@pytest.mark.parametrize("minute", [300, 400, 600])
+def test_no_front_before_it_is_seen_or_after_it_passed(minute: int) -> None:
+    assert ground.next_front(SITE, [a_front()], DAY + np.timedelta64(minute, "m")) is None
+
+
+def test_an_unconfirmed_front_is_not_announced() -> None:
+    assert ground.next_front(SITE, [a_front(False)], DAY + np.timedelta64(365, "m")) is None
+
+
+def test_a_front_over_the_site_counts_with_its_own_slope() -> None:
+    fields = some_fields(5.0, 0.5)
+    quiet = ground.station_day(SITE, fields)
+    assert quiet.minutes["announced"] == 0.0
+    stormy = ground.station_day(SITE, fields, [a_front()])
+    assert stormy.minutes["announced"] == pytest.approx(10.0, abs=5.0)
+    assert np.nanmax(stormy.slope) == 60.0
+    assert ground.station_day(SITE, fields, [a_front(False)]).minutes == quiet.minutes
+
+
+def test_off_the_map_all_is_unseen() -> None:
+    found = ground.station_day(Site("Far", 10.0, 10.0), some_fields())
+    assert found.minutes == {"nominal": 0.0, "announced": 0.0, "threat": 0.0, "unseen": 1440.0}
+
+
+def test_choices_are_bounded_and_printed() -> None:
+    with pytest.raises(Refused, match="outside"):
+        StationChoices(sigma_mm_per_km=30.0)
+    found = ground.station_day(SITE, some_fields(), (), StationChoices(sigma_mm_per_km=6.0, smoothing_s=30.0))
+    text = " ".join(found.assumptions)
+    assert "6 mm/km" in text
+    assert "30 s" in text
+    assert "not for navigation" in found.caution
