@@ -244,8 +244,8 @@ def worth_a_look(series: Series, left: Ints, right: Ints, columns: Ints) -> Step
     blind = np.asarray(~np.isfinite(series.step).any(axis=1))
     with np.errstate(invalid="ignore"):
         loud = np.abs(step) > np.where(series.told[:, columns], 3.0, 4.5) * sigma
-        loud |= ~(sigma < DIM_M) & (np.abs(bend) > 4.5 * bend_sigma)
-        loud |= ~np.isfinite(step) & (np.abs(bend) > 4.5 * bend_sigma)
+        dim = ~np.isfinite(step) | ~(sigma < DIM_M)
+        loud |= (dim | (np.abs(step) > 2.0 * sigma)) & (np.abs(bend) > 5.0 * bend_sigma)
     at_hand = series.present[:, columns] & (left_here >= 1) & (right_here >= 1)
     row, column = np.nonzero(at_hand & (loud | ~whole | blind[:, None]))
     return _steps_at(series, row, columns[column], left, right)

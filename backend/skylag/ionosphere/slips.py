@@ -172,7 +172,7 @@ def _accept(series: Series, steps: Steps, left: Ints, right: Ints, choices: ArcC
         dim = blind | (steps.geometry_sigma > DIM_M)
         told = series.told[steps.row, steps.column]
         loud = in_geometry > np.where(told, 3.0, 4.5)
-        loud |= (dim & (in_difference > 4.5)) | (blind & (in_wide > 4.0))
+        loud |= ((dim | (in_geometry > 2.0)) & (in_difference > 5.0)) | (blind & (in_wide > 4.0))
     steps = steps.take(loud)
     told, blind, dim = told[loud], blind[loud], dim[loud]
     in_geometry, in_difference = in_geometry[loud], np.nan_to_num(in_difference[loud])
@@ -189,9 +189,13 @@ def _accept(series: Series, steps: Steps, left: Ints, right: Ints, choices: ArcC
         broken = (in_geometry > 8.0) & (large > 0.06) & (in_difference > 6.0) & (size > 0.03)
         broken |= (in_geometry > 8.0) & (large > 1.0)
         # Without the other satellites' help the ionosphere may bend L1 - L2 by itself: it must be a step well outside.
-        alone = (in_geometry > 4.5) | ((in_difference > 6.0) & (size > 0.025)) | (blind & (np.abs(steps.wide) > 0.7))
+        # L1 - L2 may be bent by the ionosphere: it decides where the geometry says the same, or cannot tell at all.
+        effect = slip_effect(fit.cycles[:, 0], fit.cycles[:, 1], series.f1[steps.column], series.f2[steps.column])[1]
+        agreed = in_geometry**2 - ((steps.geometry - effect) / steps.geometry_sigma) ** 2
+        borne = (in_geometry > 4.5) | ((in_difference > 6.0) & (size > 0.025) & (dim | (agreed > 6.0)))
+        borne |= blind & (np.abs(steps.wide) > 0.7)
         torn = blind & (in_difference > 10.0) & (size > 0.08)
-    good = (whole & (~dim | alone)) | broken | torn
+    good = (whole & borne) | broken | torn
     steps, fit = steps.take(good), fit.take(good)
     # What no whole numbers explain may be the echo of a slip not yet taken out: it waits until there is none near.
     odd = ~whole[good]
