@@ -73,6 +73,7 @@ def cut(observations: Observations, choices: ArcChoices | None = None, elevation
             "code points of bad quarter hours": levelled.bad_blocks,
             **found.counts,
         },
+        slips=found.slips,
     )
 
 
