@@ -1,15 +1,20 @@
 """Routes about maps: fields, one place, one day at a place, lines of sight, coast.  A route parses, asks, encodes."""
 
+from dataclasses import replace
+from pathlib import Path
+from tempfile import TemporaryDirectory
 from typing import Annotated
 
 import numpy as np
 from fastapi import APIRouter, Query, Request
 from fastapi.responses import Response
 
-from skylag.archive import Archive, DayRecord
+from skylag import timescales
+from skylag.archive import Archive, DayRecord, slants
 from skylag.errors import Missing
-from skylag.formats import coast
-from skylag.web import asking, nearby, payloads
+from skylag.formats import coast, ionex, netcdf
+from skylag.tables import Fields
+from skylag.web import asking, nearby, payloads, sentences, witnesses
 
 router = APIRouter()
 
@@ -64,7 +69,54 @@ def series(
     lat, lon = asking.place(lat, lon)
     record = archive.day(region, asking.day(day), version)
     cell = archive.series(region, record.head.day, lat, lon, record.head.version)
-    return payloads.reply(payloads.series(cell, record.cell_of(lat, lon) is not None))
+    flags = archive.flags(region, record.head.day, record.head.version)
+    near = [nearby.active_near(flags, lat, lon, time) for time in cell.times]
+    return payloads.reply(payloads.series(cell, record, near, record.cell_of(lat, lon) is not None))
+
+
+@router.get("/api/days/{region}/{day}/witnesses", summary="Lines of sight behind what is said of a place")
+def witnesses_near(
+    request: Request, region: str, day: str, lat: float, lon: float, time: str, version: int | None = None
+) -> Response:
+    """Curves of the lines of sight that pass near a place within three quarters of an hour of a UTC instant."""
+    archive: Archive = request.app.state.archive
+    lat, lon = asking.place(lat, lon)
+    moment = asking.instant(time, "time")
+    record = archive.day(region, asking.day(day), version)
+    half = np.timedelta64(45, "m")
+    samples = slants.read(archive.slant_folder, record.slant_sha256, moment - half, moment + half)
+    return payloads.reply(payloads.witnesses(witnesses.near(samples, lat, lon)))
+
+
+@router.get("/api/days/{region}/{day}/field.nc", summary="Maps of a day as NetCDF")
+def field_netcdf(request: Request, region: str, day: str, version: int | None = None) -> Response:
+    """All maps of the day with CF conventions."""
+    archive: Archive = request.app.state.archive
+    record = archive.day(region, asking.day(day), version)
+    held = archive.fields(region, record.head.day, None, None, record.head.version)
+    with TemporaryDirectory() as folder:
+        path = Path(folder) / "field.nc"
+        held = replace(held, state=payloads.honest_state(held))
+        netcdf.write(held, record.region, path, simulated=record.origin.simulated)
+        data = path.read_bytes()
+    return payloads.file(data, f"{region}-{day}-field.nc", "application/x-netcdf")
+
+
+@router.get("/api/days/{region}/{day}/maps.inx", summary="Maps of a day as IONEX")
+def maps_ionex(request: Request, region: str, day: str, version: int | None = None) -> Response:
+    """Maps of content and its uncertainty, every quarter of an hour, as IONEX 1.0."""
+    archive: Archive = request.app.state.archive
+    record = archive.day(region, asking.day(day), version)
+    held = archive.fields(region, record.head.day, None, None, record.head.version)
+    step_s = float(np.min(np.diff(held.times)) / np.timedelta64(1, "s")) if len(held.times) > 1 else 900.0
+    every = slice(None, None, max(1, round(900.0 / step_s)))
+    thin = replace(
+        held, times=held.times[every], **{name: getattr(held, name)[every] for name in Fields.LAYERS}
+    )  # fmt: skip
+    about = f"{record.region.name}. {sentences.INVENTED if record.origin.simulated else ''} {sentences.CAUTION}"
+    saved_at = np.datetime64(timescales.utc_to_gps(record.head.saved_at.astype("datetime64[ns]")).item(), "ns")
+    text = ionex.write(thin, saved_at, record.region.shell_height_km, description=about)
+    return payloads.file(text.encode("ascii", "replace"), f"{region}-{day}.inx", "text/plain")
 
 
 @router.get("/api/coast", summary="Coast lines within a box")

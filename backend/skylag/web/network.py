@@ -4,7 +4,7 @@ from fastapi import APIRouter, Request
 from fastapi.responses import Response
 
 from skylag.archive import Archive
-from skylag.web import asking, payloads
+from skylag.web import asking, payloads, witnesses
 
 router = APIRouter()
 
@@ -40,3 +40,22 @@ def biases(request: Request, region: str, day: str, version: int | None = None) 
     """Satellite and receiver biases with their uncertainty."""
     archive: Archive = request.app.state.archive
     return payloads.reply(payloads.biases(archive.biases(region, asking.day(day), version)))
+
+
+MOST_DAYS = 92
+
+
+@router.get("/api/network", summary="What each receiver gave, day by day")
+def receivers(
+    request: Request, region: str | None = None, since: str | None = None, until: str | None = None
+) -> Response:
+    """Data received, gaps, slips, biases and faults of the receivers on the newest days asked for, 92 at most."""
+    archive: Archive = request.app.state.archive
+    first = asking.day(since) if since is not None else None
+    last = asking.day(until) if until is not None else None
+    days = []
+    for head in archive.days(region, first, last)[:MOST_DAYS]:
+        record = archive.day(head.region, head.day, head.version)
+        biases = archive.biases(head.region, head.day, head.version)
+        days.append(witnesses.network_of(record, biases, archive.flags(head.region, head.day, head.version)))
+    return payloads.reply(payloads.network(days))

@@ -24,6 +24,7 @@ from skylag.constants import L1_M_PER_TECU
 from skylag.ionosphere.geometry import geodetic
 from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Rays, Region
 from skylag.web import nearby, sentences
+from skylag.web.witnesses import DayNetwork, Sightline
 
 
 def honest_state(fields: Fields) -> Bytes:
@@ -144,6 +145,10 @@ def _head(head: DayHead) -> dict[str, Any]:
         "state_shares": dict(head.state_shares),
         "site_shares": {name: dict(shares) for name, shares in head.site_shares.items()},
         "flag_counts": dict(head.flag_counts),
+        "highest": {
+            "vertical_delay": _number(L1_M_PER_TECU * head.highest.get("vtec", math.nan)),
+            "slope": _number(head.highest.get("slope", math.nan)),
+        },
         "warnings": head.warning_count,
         "receivers": head.receiver_count,
         "epochs": head.epoch_count,
@@ -261,19 +266,35 @@ def rays(table: Rays, asked: np.datetime64) -> dict[str, Any]:
     }
 
 
-def series(cell: Fields, inside: bool) -> dict[str, Any]:
-    """The day at one cell."""
+def series(
+    cell: Fields, record: DayRecord, near: Sequence[Sequence[nearby.NearFlag]], inside: bool
+) -> dict[str, Any]:
+    """The day at one cell; `near` holds the flags near it at each of its times."""
+    metres, metres_sigma, state = _metres(cell.vtec), _metres(cell.vtec_sigma), honest_state(cell).reshape(-1)
+    sentence = [sentences.OUTSIDE] * len(cell.times)
+    if inside:
+        sentence = [
+            sentences.of_state(
+                int(state[k]), slope=float(cell.slope[k, 0, 0]), slope_sigma=float(cell.slope_sigma[k, 0, 0]),
+                delay_m=float(metres[k, 0, 0]), delay_sigma_m=float(metres_sigma[k, 0, 0]),
+                support=int(cell.support[k, 0, 0]), limits=record.region.thresholds, near=near[k],
+            )
+            for k in range(len(cell.times))
+        ]  # fmt: skip
     return {
         "times_utc": utc_texts(cell.times),
         "lat": _number(float(cell.lats[0])),
         "lon": _number(float(cell.lons[0])),
         "inside": inside,
-        "vertical_delay": _numbers(_metres(cell.vtec)),
-        "vertical_delay_sigma": _numbers(_metres(cell.vtec_sigma)),
+        "vertical_delay": _numbers(metres),
+        "vertical_delay_sigma": _numbers(metres_sigma),
         "slope": _numbers(cell.slope),
         "slope_sigma": _numbers(cell.slope_sigma),
+        "slope_east": _numbers(cell.slope_east),
+        "slope_north": _numbers(cell.slope_north),
         "support": [int(n) for n in cell.support.reshape(-1)],
-        "state": [STATE_NAMES[int(k)] for k in honest_state(cell).reshape(-1)],
+        "state": [STATE_NAMES[int(k)] for k in state],
+        "sentence": sentence,
     }
 
 
@@ -421,3 +442,53 @@ def biases(table: Biases) -> dict[str, Any]:
             for n in range(len(table))
         ],
     }  # fmt: skip
+
+
+# ---------------------------------------------------------------------------------------------- witnesses, network
+
+
+def witnesses(lines: Sequence[Sightline]) -> dict[str, Any]:
+    """Curves of single lines of sight: vertical delay [m], its uncertainty, where each pierces the shell."""
+    return {
+        "lines": [
+            {
+                "receiver": one.receiver, "satellite": one.satellite, "distance_km": round(one.distance_km, 1),
+                "times_utc": utc_texts(one.times), "vertical_delay": _numbers(np.round(one.delay_m, 4)),
+                "vertical_delay_sigma": _number(round(one.sigma_m, 3)), "change_m": _number(round(one.change_m, 3)),
+                "elevation": _number(round(one.elevation, 1)), "lat": _numbers(np.round(one.lat, 3)),
+                "lon": _numbers(np.round(one.lon, 3)),
+            }
+            for one in lines
+        ]
+    }  # fmt: skip
+
+
+def network(days: Sequence[DayNetwork]) -> dict[str, Any]:
+    """What each receiver gave on each day, newest day first; what is not known is null."""
+    return {
+        "days": [
+            {
+                "region": one.region, "day": str(one.day), "simulated": one.simulated,
+                "receivers": [
+                    {
+                        "name": r.name, "received": _number(round(r.received, 4)), "satellites": r.satellites,
+                        "rays": r.rays, "arcs": r.arcs, "gaps": r.gaps, "slips": r.slips, "resets": r.resets,
+                        "level_sigma_tecu": _number(r.level_sigma_tecu),
+                        "left_out_rms_tecu": _number(r.left_out_rms_tecu),
+                        "faults": list(r.faults),
+                        "biases": [
+                            {"pair": pair, "bias_ns": _number(value), "sigma_ns": _number(sigma)}
+                            for pair, value, sigma in r.biases
+                        ],
+                    }
+                    for r in one.receivers
+                ],
+            }
+            for one in days
+        ]
+    }  # fmt: skip
+
+
+def file(data: bytes, name: str, media_type: str) -> Response:
+    """Bytes as a file to keep."""
+    return Response(data, media_type=media_type, headers=_download(name))
