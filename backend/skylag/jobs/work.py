@@ -24,6 +24,7 @@ from skylag.chain import Choices, ReceiverDay
 from skylag.errors import FormatError, NotEnough, SkylagError
 from skylag.formats.glance import glance
 from skylag.ionosphere import bias_algebra
+from skylag.ionosphere.field import Hour, Made, make
 from skylag.ionosphere.pairs import wanted_codes
 from skylag.tables import (
     Biases,
@@ -228,6 +229,12 @@ def receiver_unit(
         return _receiver_unit(key, paths, day, sources, choices, shell_height_m)
 
 
+def hour_unit(hour: Hour) -> Made:
+    """The maps of one hour, on one thread of linear algebra."""
+    with threadpool_limits(1):
+        return make(hour)
+
+
 def _receiver_unit(
     key: str,
     paths: Sequence[str],
@@ -362,7 +369,10 @@ def network_day(
     # The matrices are small: threads of the linear algebra only get in each other's way (a busy machine took 40 times
     # the processor time with two of them).
     with threadpool_limits(1):
-        made = chain.estimate(rays, place, wanted_day, choices, prior, channels, stage)
+        made = chain.estimate(
+            rays, place, wanted_day, choices, prior, channels, stage, chain.background_of(sources),
+            lambda make, hours: executor.map(hour_unit, hours),
+        )  # fmt: skip
     clock.enter("")
     warnings = [*made.warnings, *(note for item in usable for note in item.notes)]
     warnings += [f"left out: {item}" for item in left_out]
