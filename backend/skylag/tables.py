@@ -287,7 +287,6 @@ class Thresholds:
     unseen_sigma_m: float = 1.5  # delay sigma [m] from which a cell is not seen
 
 
-# Ways of working with corrections; see `impact.uses`.
 USE_KINDS = ("differential", "ground", "satellite", "single")
 
 
@@ -295,8 +294,7 @@ USE_KINDS = ("differential", "ground", "satellite", "single")
 class Use:
     """A way of working with corrections and what it has to spare; what follows from it is in `impact.uses`.
 
-    kind           of USE_KINDS: over a baseline to a reference; ground-based or satellite-based augmentation; single
-                   frequency with a broadcast model
+    kind           over a baseline to a reference; ground-, satellite-based augmentation; single frequency alone
     baseline_km    between user and reference
     spare_mm       delay error the job can bear (differential)
     elevation_deg  lowest line of sight the job still leans on (differential)
@@ -317,11 +315,10 @@ class Use:
     def __post_init__(self) -> None:
         _require(self.kind in USE_KINDS, self, f"kind must be one of {', '.join(USE_KINDS)}, not {self.kind!r}")
         _require(bool(self.name.strip()), self, "name must not be empty")
-        _require(0.1 <= self.baseline_km <= 2000, self, "baseline_km must be from 0.1 to 2000")
-        _require(1 <= self.spare_mm <= 1e6, self, "spare_mm must be from 1 to 1000000")
-        _require(5 <= self.elevation_deg <= 90, self, "elevation_deg must be from 5 to 90")
-        _require(0 <= self.speed_m_s <= 400, self, "speed_m_s must be from 0 to 400")
-        _require(0 <= self.smoothing_s <= 1000, self, "smoothing_s must be from 0 to 1000")
+        ranges = {"baseline_km": (0.1, 2000), "spare_mm": (1, 1e6), "elevation_deg": (5, 90), "speed_m_s": (0, 400),
+                  "smoothing_s": (0, 1000)}  # fmt: skip
+        for name, (least, most) in ranges.items():
+            _require(least <= getattr(self, name) <= most, self, f"{name} must be from {least:g} to {most:g}")
         limits = (self.strained_from, self.broken_from)
         _require(limits == (0, 0) or 0 < limits[0] <= limits[1], self, "own limits: 0 < strained_from <= broken_from")
 
@@ -780,22 +777,6 @@ class Fronts:
 
 
 @dataclass(frozen=True)
-class Arrival:
-    """When a front is expected at a place, said at `made` from what was seen until then; and what came of it.
-
-    sigma_s is the spread; `seen` is when it did pass (NaT when nobody saw), came_true None while unknown.
-    """
-
-    front: int
-    place: str
-    made: np.datetime64
-    expected: np.datetime64
-    sigma_s: float
-    seen: np.datetime64
-    came_true: bool | None
-
-
-@dataclass(frozen=True)
 class Patch:
     """A place and span where content fluctuates: irregular, not merely steep.
 
@@ -844,57 +825,3 @@ class Patches:
     aatr: Floats
     breaks: Ints  # (B, receivers) arcs broken without a long silence
     losses: Ints  # (B, receivers) signals lost above the elevation limit
-
-
-@dataclass(frozen=True)
-class Fault:
-    """A receiver whose data disagree with its neighbours for a span: never weather."""
-
-    start: np.datetime64
-    end: np.datetime64
-    receiver: str
-    lat: float
-    lon: float
-    why: str
-
-
-@dataclass(frozen=True)
-class Event:
-    """A stretch of strained or broken cells that touch in space and time.
-
-    use          name of the use it is judged for
-    start, end   GPS time; south, north, west, east [deg] of the middles of its cells
-    lat, lon, worst_time   where and when it is worst; state: the worst
-    slope, sigma [mm/km] of the worst witness, NaN where there is none
-    cells, cell_epochs, area_km2   cells ever touched, cells times epochs, ground they cover
-    cause        of FLAG_KINDS, or "map" where the map alone says so; reason: the sentence
-    flags        row numbers of the day's flags that stand behind it; confirmed: one of them is confirmed
-    sites        names of the sites it reaches
-    """
-
-    use: str
-    start: np.datetime64
-    end: np.datetime64
-    south: float
-    north: float
-    west: float
-    east: float
-    lat: float
-    lon: float
-    worst_time: np.datetime64
-    state: str
-    slope: float
-    sigma: float
-    cells: int
-    cell_epochs: int
-    area_km2: float
-    cause: str
-    reason: str
-    flags: tuple[int, ...]
-    confirmed: bool
-    sites: tuple[str, ...]
-
-    def __post_init__(self) -> None:
-        _require(self.state in STATE_NAMES[2:], self, "an event is strained or broken")
-        _require(self.cause in (*FLAG_KINDS, "map"), self, f"cause must be map or one of {FLAG_KINDS}")
-        _require(self.start < self.end, self, "an event must last")

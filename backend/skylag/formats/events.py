@@ -11,8 +11,8 @@ from typing import Any
 
 import numpy as np
 
+from skylag.events import Event
 from skylag.formats.delimited import utc_text
-from skylag.tables import Event
 
 COLUMNS = ("use", "start_utc", "end_utc", "state", "cause", "confirmed", "south_deg", "north_deg", "west_deg",
            "east_deg", "worst_lat_deg", "worst_lon_deg", "worst_utc", "slope_mm_per_km", "sigma_mm_per_km", "cells",

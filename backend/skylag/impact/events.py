@@ -11,9 +11,10 @@ import numpy as np
 from scipy.ndimage import distance_transform_edt, find_objects, label
 
 from skylag.constants import SHELL_EARTH_RADIUS_M
+from skylag.events import Event
 from skylag.impact.states import nearest_cells
 from skylag.impact.uses import JudgedUse, owners
-from skylag.tables import STATE_NAMES, STRAINED, Bytes, Event, Fields, Flag, Floats, Ints, Region
+from skylag.tables import STATE_NAMES, STRAINED, Bytes, Fields, Flag, Floats, Ints, Region
 
 _KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
 AS_STORED = "all corrections"  # name of the day's own states, by the region's thresholds

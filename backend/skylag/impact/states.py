@@ -22,6 +22,7 @@ import numpy.typing as npt
 from scipy.ndimage import find_objects, label
 
 from skylag.constants import L1_M_PER_TECU
+from skylag.events import Arrival, Fault
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.fronts import ahead_km, expected_at
 from skylag.tables import (
@@ -30,10 +31,8 @@ from skylag.tables import (
     STATE_NAMES,
     STRAINED,
     UNSEEN,
-    Arrival,
     Bools,
     Bytes,
-    Fault,
     Fields,
     Flag,
     Floats,

@@ -8,9 +8,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from skylag.events import Fault
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.sightlines import lay_out, middle
-from skylag.tables import Bools, Fault, Floats, Fronts, Ints, Patches, Rays, Samples, Slopes
+from skylag.tables import Bools, Floats, Fronts, Ints, Patches, Rays, Samples, Slopes
 
 WINDOW_S = 300.0
 

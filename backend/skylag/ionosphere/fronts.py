@@ -17,10 +17,11 @@ import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
 
 from skylag.constants import SHELL_EARTH_RADIUS_M
+from skylag.events import Arrival
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.sightlines import Sightlines, from_plane, lay_out, middle
 from skylag.ionosphere.slopes import MM_PER_TECU
-from skylag.tables import Arrival, Bools, Floats, Front, Fronts, Ints, Onsets, Rays, Samples, Site, Slopes, Times
+from skylag.tables import Bools, Floats, Front, Fronts, Ints, Onsets, Rays, Samples, Site, Slopes, Times
 
 _KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
 _SLOW_KM_S, _SLOW_BIAS_KM_S = 0.05, 0.006  # root mean square speed error of simulated walls slower than 50 m/s

@@ -26,7 +26,8 @@ from starlette.middleware.gzip import GZipMiddleware
 import skylag
 from skylag.archive import Archive
 from skylag.errors import FormatError, Missing, NotEnough, Refused, SkylagError, Unsolvable
-from skylag.web import advice, maps, network, payloads
+from skylag.web import advice, maps, network, payloads, ways, work
+from skylag.web.access import Access, Gate, Traffic
 
 Clock = Callable[[], np.datetime64]
 
@@ -71,21 +72,28 @@ def create_app(
     executor: Executor | None = None,
     clock: Clock | None = None,
     frontend: Path | None = None,
+    access: Access | None = None,
 ) -> FastAPI:
     """The application over an archive.
 
     executor  runs units of work; None where nothing is to be computed
     clock     gives the present UTC time; None where the age of data is not told
     frontend  folder of the page's files; `frontend_folder()` when None
+    access    who may read and change (`access.for_host`); everybody reads and nobody changes anything when None
     """
     app = FastAPI(title="Skylag", version=_version(), docs_url=None, redoc_url=None, openapi_url="/api/openapi.json")
     app.state.archive = archive
     app.state.executor = executor
     app.state.clock = clock
-    for part in (network.router, maps.router, advice.router):
+    access = access or Access()
+    app.state.traffic = Traffic()
+    app.state.limits = access.limits
+    app.state.feed = work.Feed(archive)
+    for part in (network.router, maps.router, advice.router, ways.router, work.router):
         app.include_router(part)
     _add_small_routes(app)
     _add_errors(app)
+    app.add_middleware(Gate, archive=archive, access=access, traffic=app.state.traffic)
     app.add_middleware(GZipMiddleware, minimum_size=1024, compresslevel=5)
 
     @app.middleware("http")
@@ -182,7 +190,11 @@ def serve(app: FastAPI, host: str, port: int, ready: Callable[[str], None] | Non
         if ready is not None:
             taken = listening.getsockname()[1]
             ready(f"http://{f'[{host}]' if ':' in host else host}:{taken}/")
-        server = uvicorn.Server(uvicorn.Config(app, log_level="warning", access_log=False, server_header=False))
+        config = uvicorn.Config(
+            app, log_level="warning", access_log=False, server_header=False,
+            timeout_graceful_shutdown=3,  # those who follow along never hang up by themselves
+        )  # fmt: skip
+        server = uvicorn.Server(config)
         with contextlib.suppress(KeyboardInterrupt):
             server.run(sockets=[listening])
     finally:

@@ -1,0 +1,77 @@
+"""Routes about ways of working: the uses of a region, sites judged for one of them, and the events of a day.
+
+Worked out from the maps and flags that are kept, when asked.
+"""
+
+from fastapi import APIRouter, Request
+from fastapi.responses import Response
+
+from skylag.archive import Archive, SiteStates
+from skylag.events import Event
+from skylag.formats import events as event_files
+from skylag.impact import events, uses
+from skylag.web import asking, payloads
+
+router = APIRouter()
+
+
+@router.get("/api/days/{region}/{day}/uses", summary="Ways of working a day can be judged for")
+def known_uses(request: Request, region: str, day: str, version: int | None = None) -> Response:
+    """Name, kind and limits of each; the published ones where the region names none."""
+    archive: Archive = request.app.state.archive
+    known = archive.day(region, asking.day(day), version).region
+    rows = []
+    for use in uses.uses_of(known):
+        strained, broken, unit = uses.limits_of(use, known.shell_height_km * 1000.0)
+        rows.append({"name": use.name, "kind": use.kind, "baseline_km": use.baseline_km, "spare_mm": use.spare_mm,
+                     "strained_from": round(strained, 4), "broken_from": round(broken, 4), "unit": unit})  # fmt: skip
+    return payloads.reply({"uses": rows})
+
+
+@router.get("/api/days/{region}/{day}/site-states-for", summary="States of the sites for one use")
+def states_for(request: Request, region: str, day: str, use: str, version: int | None = None) -> Response:
+    """As `site-states`, by the limits of a use; `evidence` lists rows of the day's flags, per site and time."""
+    archive: Archive = request.app.state.archive
+    record = archive.day(region, asking.day(day), version)
+    wanted = uses.find_use(record.region, use)
+    fields = archive.fields(region, record.head.day, version=record.head.version)
+    judged = uses.judge_for(
+        wanted, fields, archive.flags(region, record.head.day, record.head.version), record.region
+    )
+    table = SiteStates(judged.times, record.region.sites, judged.site_states, judged.site_reasons)
+    evidence = [[list(rows) for rows in site] for site in judged.site_evidence]
+    return payloads.reply({"use": wanted.name, **payloads.site_states(table), "evidence": evidence})
+
+
+def _found(
+    archive: Archive, region: str, day: str, use: str, version: int | None
+) -> tuple[tuple[Event, ...], bool]:
+    """The events of a stored day, for a use or by its own states; and whether the day is invented."""
+    record = archive.day(region, asking.day(day), version)
+    fields = archive.fields(region, record.head.day, version=record.head.version)
+    flags = archive.flags(region, record.head.day, record.head.version)
+    if not use:
+        return events.of_day(fields, flags, record.region), record.origin.simulated
+    judged = uses.judge_for(uses.find_use(record.region, use), fields, flags, record.region)
+    return events.of_use(judged, fields, flags, record.region), record.origin.simulated
+
+
+@router.get("/api/days/{region}/{day}/events", summary="Events of a day")
+def listed(request: Request, region: str, day: str, use: str = "", version: int | None = None) -> Response:
+    """Stretches of strained or broken cells with extent, worst value, cause; by the day's own states without `use`."""
+    found, simulated = _found(request.app.state.archive, region, day, use, version)
+    return Response(event_files.to_json(found, simulated), media_type="application/json")
+
+
+@router.get("/api/days/{region}/{day}/events.csv", summary="Events of a day as CSV")
+def as_table(request: Request, region: str, day: str, use: str = "", version: int | None = None) -> Response:
+    """The same, one row each; times are UTC."""
+    found, _ = _found(request.app.state.archive, region, day, use, version)
+    return Response(event_files.to_csv(found), media_type="text/csv; charset=utf-8")
+
+
+@router.get("/api/days/{region}/{day}/events.geojson", summary="Events of a day as GeoJSON")
+def as_shapes(request: Request, region: str, day: str, use: str = "", version: int | None = None) -> Response:
+    """The same as boxes."""
+    found, simulated = _found(request.app.state.archive, region, day, use, version)
+    return Response(event_files.to_geojson(found, simulated), media_type="application/geo+json")
