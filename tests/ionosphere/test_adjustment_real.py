@@ -10,8 +10,9 @@ from tests.conftest import Evidence
 
 from skylag import chain, formats
 from skylag.chain import Choices
-from skylag.ionosphere.adjustment import apply, solve
+from skylag.ionosphere.adjustment import AdjustmentChoices, apply, solve
 from skylag.ionosphere.bias_algebra import from_group_delays, join, pair_bias
+from skylag.ionosphere.geometry import modified_mapping
 from skylag.tables import Biases, Calibration, Ephemerides, Floats, PreciseOrbits, Rays, Signals, concatenate
 
 pytestmark = pytest.mark.open_data
@@ -127,17 +128,23 @@ def test_network_against_a_bias_product(open_data: Path, evidence: Evidence) -> 
 def test_receiver_bias_against_the_published_one(open_data: Path, evidence: Evidence) -> None:
     """ZIMM alone on 2015-08-23, satellites held at CODE's monthly values.
 
-    CODE's receiver bias goes with a single layer without a plasmasphere of its own; leaving ours out moves the bias
-    found here by +0.55 ns, and agencies differ among each other by 0.4 to 0.8 ns.  So 1.5 ns is asked, no more."""
+    With CODE's own modelling, the modified single layer and no plasmasphere of its own, half a nanosecond is asked (a
+    month's mean against one day of one receiver).  With the models used here otherwise, which take a plasmasphere off
+    and lower the content by some 3 TECU, 1.5 ns: what the two ways of modelling differ by, not an error of either."""
     folder = open_data / "2015-235"
     tables = [formats.read(folder / "bias" / name).table for name in ("P1C11508.DCB", "P1P21508_ALL.DCB")]
     product = join([table for table in tables if isinstance(table, Biases)])
     rays, _ = rays_of(sorted((folder / "obs").glob("ZIMM2350*")), sorted((folder / "sp3").glob("*")))
-    calibration = solve(rays, product)
-    table = calibration.biases
-    assert np.abs(beside(calibration, product, "G", "C1C")).max() < 1e-3
-    row = int(np.flatnonzero(table.kind == "receiver")[0])
     told = pair_bias(product, "receiver", "ZIMM", "G", "C1W", "C2W", np.datetime64("2015-08-23T12", "ns"))
     assert told is not None
-    evidence("ZIMM 2015-08-23: receiver bias, satellites held", source="CODE P1P21508_ALL.DCB (monthly, P1-P2)",
-             expected=told[0], got=float(table.value_ns[row]), tolerance=1.5, unit="ns")  # fmt: skip
+    as_code = replace(rays, mapping=modified_mapping(rays.elevation))
+    no_layer = AdjustmentChoices(high_layer=0.0, high_layer_sigma=1e-3)
+    for words, calibration, tolerance in (
+        ("modified single layer, no high layer", solve(as_code, product, no_layer), 0.5),
+        ("single layer and high layer", solve(rays, product), 1.5),
+    ):
+        assert np.abs(beside(calibration, product, "G", "C1C")).max() < 1e-3
+        row = int(np.flatnonzero(calibration.biases.kind == "receiver")[0])
+        evidence(f"ZIMM 2015-08-23: receiver bias, satellites held; {words}",
+                 source="CODE P1P21508_ALL.DCB (monthly, P1-P2)", expected=told[0],
+                 got=float(calibration.biases.value_ns[row]), tolerance=tolerance, unit="ns")  # fmt: skip

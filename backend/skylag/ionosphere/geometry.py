@@ -95,6 +95,21 @@ def mapping(elevation: npt.ArrayLike, shell_height_m: float, earth_radius_m: flo
     return np.asarray(1.0 / np.sqrt(1.0 - sine**2))
 
 
+# Mappings to choose from in `place`.
+SINGLE_LAYER, MODIFIED_SINGLE_LAYER = "single layer", "modified single layer"
+
+
+def modified_mapping(elevation: npt.ArrayLike) -> Floats:
+    """Slant over vertical content of the modified single layer: 1 at the zenith, growing downwards, below a thin shell.
+
+    sin z' = R / (R + 506.7 km) sin(0.9782 z) with R = 6371 km, fitted to a slab with a plasmasphere in it (Schaer 1999,
+    as global maps use it; constants from memory).  To go with no high layer of its own in the adjustment.
+    """
+    share = SHELL_EARTH_RADIUS_M / (SHELL_EARTH_RADIUS_M + 506.7e3)
+    sine = share * np.sin(0.9782 * np.radians(90.0 - np.asarray(elevation, dtype=np.float64)))
+    return np.asarray(1.0 / np.sqrt(1.0 - sine**2))
+
+
 def phase_noise(elevation: Floats, f1_hz: Floats, f2_hz: Floats) -> Floats:
     """Noise [TECU] of slant content from the difference of two phases, each as noisy as PHASE_NOISE_M says."""
     per_tecu_m = REFRACTION_M3_S2 * TECU * np.abs(1 / f2_hz**2 - 1 / f1_hz**2)
@@ -103,12 +118,14 @@ def phase_noise(elevation: Floats, f1_hz: Floats, f2_hz: Floats) -> Floats:
 
 
 def place(
-    arcs: Arcs, satellite_positions: Floats, shell_height_m: float, minimum_elevation_deg: float = 10.0
+    arcs: Arcs, satellite_positions: Floats, shell_height_m: float, minimum_elevation_deg: float = 10.0,
+    mapping_function: str = SINGLE_LAYER,
 ) -> Rays:  # fmt: skip
     """The rays of one receiver: every point of an arc whose satellite stands at the minimum elevation or higher.
 
     satellite_positions  (epochs, satellites, 3) as seen from the receiver (`orbits.seen_from`), NaN where unknown
-    Raises Refused for an elevation outside 1 to 80 degrees or positions of another shape.
+    mapping_function  SINGLE_LAYER at the shell's height, or MODIFIED_SINGLE_LAYER; pierce points are on the shell
+    Raises Refused for an elevation outside 1 to 80 degrees, positions of another shape, an unknown mapping.
     """
     observations = arcs.observations
     shape = observations.code1.shape
@@ -122,6 +139,11 @@ def place(
         raise Refused(
             f"minimum elevation: {minimum_elevation_deg:g} degrees; 1 to 80 can be asked for",
             name="minimum_elevation_deg", value=minimum_elevation_deg, allowed=(1.0, 80.0),
+        )  # fmt: skip
+    if mapping_function not in (SINGLE_LAYER, MODIFIED_SINGLE_LAYER):
+        raise Refused(
+            f"mapping: {mapping_function!r} is none; use {SINGLE_LAYER!r} or {MODIFIED_SINGLE_LAYER!r}",
+            name="mapping_function", value=mapping_function, allowed=(SINGLE_LAYER, MODIFIED_SINGLE_LAYER),
         )  # fmt: skip
     elevation, azimuth = look(observations.receiver.position_m, satellite_positions)
     with np.errstate(invalid="ignore"):
@@ -147,7 +169,9 @@ def place(
         azimuth=azimuth,
         pierce_lat=pierce_lat,
         pierce_lon=pierce_lon,
-        mapping=mapping(elevation, shell_height_m),
+        mapping=(
+            mapping(elevation, shell_height_m) if mapping_function == SINGLE_LAYER else modified_mapping(elevation)
+        ),
         stec=arcs.stec[wanted],
         stec_phase=arcs.stec_phase[wanted],
         noise_sigma=phase_noise(elevation, observations.f1_hz[satellite], observations.f2_hz[satellite]),
