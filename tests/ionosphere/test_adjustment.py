@@ -171,6 +171,20 @@ def test_a_satellite_the_product_lacks_is_found_and_said(world: World) -> None:
     assert any("names no bias of G05" in note for note in calibration.summary["notes"])
 
 
+def test_a_wrong_record_is_told_and_moves_nobody_else(world: World) -> None:
+    """One satellite of the product stands 4 ns too high, as when its number went to another spacecraft."""
+    right, wrong = world.product(GPS), world.product(GPS)
+    wrong.value_ns[wrong.name == "G07"] += 4.0
+    good, bad = by_key(solve(world.rays, right)), by_key(calibration := solve(world.rays, wrong))
+    told = [note for note in calibration.summary["notes"] if "G07" in note]
+    assert len(told) == 1
+    assert float(told[0].split("ask for ")[1].split(" ns")[0]) == pytest.approx(-4.0, abs=0.31)
+    assert solve(world.rays, right).summary["notes"] == []
+    for key, (value, sigma) in good.items():
+        if key[0] == "receiver":
+            assert abs(bad[key][0] - value) < 0.5 * sigma
+
+
 def test_earlier_days_are_drawn_upon_not_held(world: World) -> None:
     """Three hours of one receiver leave biases open; yesterday's close them, as far as they may have walked."""
     rays = world.rays

@@ -17,7 +17,7 @@ from skylag.errors import NotEnough, Refused
 from skylag.ionosphere import datum as levels
 from skylag.ionosphere.arcs import tecu_per_metre
 from skylag.ionosphere.datum import Datum, Unknowns
-from skylag.ionosphere.drift import Drift, outstanding, wanderings
+from skylag.ionosphere.drift import Drift, left_on, outstanding, wanderings
 from skylag.ionosphere.normal import Design, Knowledge, Normal, place_terms, time_splines
 from skylag.ionosphere.plasmasphere import FOOT_EXPONENT_SIGMA, along_rays
 from skylag.tables import Biases, Calibration, Floats, Ints, Rays, Samples, Times
@@ -436,9 +436,33 @@ def _summary(
         "residuals_err_together": round(estimate.widened, 2),
         "datum": datum.summary,
         "drifting": drifts,
-        "notes": [*datum.notes, *(_drift_sentence(one) for one in drifts)],
+        "notes": [
+            *datum.notes,
+            *_wrong_records(part, used, per_ns, unknowns, datum, estimate),
+            *(_drift_sentence(one) for one in drifts),
+        ],
         "alone": places == 1,
     }
+
+
+# A held bias is told to be wrong from so many ns and so many sigmas on.  Receivers of unlike make see one satellite's
+# codes differently by up to about 1 ns (seen here: block IIF on C1C), which is no fault of the record.
+_WRONG_NS, _WRONG_SIGMAS = 1.5, 6.0
+
+
+def _wrong_records(
+    part: Rays, used: Ints, per_ns: Floats, unknowns: Unknowns, datum: Datum, estimate: _Estimate
+) -> list[str]:
+    """Sentences on satellites held at a published bias that the rays contradict."""
+    held = np.array([words.startswith("held at") for words in datum.of_row], dtype=bool)
+    rows = np.intersect1d(np.flatnonzero(held), unknowns.satellite_row[used])
+    left = left_on(unknowns.satellite_row[used], part.arc, estimate.residual, -per_ns[used], rows)
+    return [
+        f"{unknowns.name[row]} {part.pairs[unknowns.pair[row]].name} is {datum.of_row[row]}, but its rays ask for "
+        f"{more:+.1f} ns on top; leave the record out if it is of another day or another satellite of that number"
+        for row, (more, sigma) in left.items()
+        if abs(more) > max(_WRONG_NS, _WRONG_SIGMAS * sigma)
+    ]
 
 
 def _drifts(

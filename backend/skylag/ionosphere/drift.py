@@ -1,4 +1,4 @@
-"""Whether a receiver's bias moved within the day, from what the adjustment left over.
+"""What the adjustment left over: receivers whose bias moved within the day, satellites whose held bias is wrong.
 
 A bias that moves leaves the same residual on all satellites of that receiver and signal pair for hours.  So does an
 error of the smooth content, only weaker and on all pairs and neighbours alike; a receiver is therefore told to drift
@@ -71,6 +71,26 @@ def wanderings(receiver_row: Ints, arc: Ints, seconds: Floats, residual: Floats,
         strength = float(np.sum((middle / sigma) ** 2) / (len(good) - 1))
         rms = float(np.sqrt(max(0.0, np.mean(middle**2) - np.mean(sigma**2))))
         found.append(Drift(int(row), rms, float(np.ptp(middle)), strength, np.asarray(good * BLOCK_S), middle, sigma))
+    return found
+
+
+def left_on(
+    row_of_ray: Ints, arc: Ints, residual: Floats, factor: Floats, rows: Ints
+) -> dict[int, tuple[float, float]]:  # fmt: skip
+    """Per bias row asked for, the bias [ns] its rays would rather have more, and the sigma of that.
+
+    row_of_ray, arc (N,) numbers; residual (N,) slant content [TECU], arc levels included; factor (N,) TECU per ns
+    """
+    found = {}
+    for row in rows:
+        own = row_of_ray == row
+        number, place = np.unique(arc[own], return_inverse=True)
+        if len(number) < _ARCS:
+            continue
+        of_arc = np.bincount(place.ravel(), residual[own] / factor[own]) / np.bincount(place.ravel())
+        middle = float(np.median(of_arc))
+        spread = 1.4826 * float(np.median(np.abs(of_arc - middle))) + 1e-3
+        found[int(row)] = (middle, 1.25 * spread / np.sqrt(len(number)))
     return found
 
 
