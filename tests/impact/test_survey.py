@@ -87,6 +87,15 @@ def test_working_hours_cut_windows() -> None:
     assert [(w.start, w.end) for w in found.windows] == [span]
 
 
+def test_working_hours_beyond_the_maps_are_unseen() -> None:
+    span = (DAY - np.timedelta64(2, "h"), DAY + np.timedelta64(26, "h"))
+    found = survey.advise(a_job(spans=(span,)), some_fields(0.5, 0.1))
+    assert [(w.start, w.end, w.verdict) for w in found.windows] == [
+        (span[0], DAY, survey.NOT_SEEN), (DAY, DAY + np.timedelta64(1, "D"), survey.WORK),
+        (DAY + np.timedelta64(1, "D"), span[1], survey.NOT_SEEN),
+    ]  # fmt: skip
+
+
 def test_a_steep_hour_is_to_be_avoided() -> None:
     fields = some_fields(0.5, 0.1)
     fields.slope_north[72:84] = 30.0

@@ -387,6 +387,7 @@ def _windows(
     found: list[Window] = []
     for start, end in job.spans or ((times[0], times[-1] + step),):
         inside = (times >= start) & (times < end)
+        found += _beyond(start, min(end, times[0]))
         for first, last in spans(inside):  # one run: times increase
             at = first
             while at < last:
@@ -399,6 +400,7 @@ def _windows(
                     window = replace(window, verdict=AVOID, why=f"good for less than {job.least_min:g} minutes only")
                 found.append(window)
                 at = stop
+        found += _beyond(max(start, times[-1] + step), end)
     joined: list[Window] = []
     for window in found:
         if joined and joined[-1].verdict == window.verdict and joined[-1].end == window.start:
@@ -407,6 +409,13 @@ def _windows(
         else:
             joined.append(window)
     return tuple(joined)
+
+
+def _beyond(start: np.datetime64, end: np.datetime64) -> list[Window]:
+    """A span that no map of the day reaches."""
+    if start >= end:
+        return []
+    return [Window(start, end, NOT_SEEN, "no map of the day reaches this time: nothing can be said")]
 
 
 def _most(reasons: Sequence[str]) -> str:

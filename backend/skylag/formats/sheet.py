@@ -1,0 +1,268 @@
+"""A printable sheet: one list of blocks, written as HTML and as PDF.
+
+Blocks are headings, sentences, tables, lists and day charts (rows of coloured spans over a time axis).  The two writers
+know nothing of what the sheet says.  PDF by fpdf2, a pure-Python writer, since a browser is no dependency of this
+program; the standard fonts know Latin-1, other characters are written as their nearest, or as a question mark.
+"""
+
+import html
+import unicodedata
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from fpdf import FPDF
+from fpdf.enums import XPos, YPos
+
+# Fill, edge and hatch of a mark: never colour alone.  Values of the page's own palette.
+MARKS = {
+    "good": ("#cfe3dc", "#4c7a6c", ""),
+    "doubt": ("#e2a63b", "#8a5a00", "/"),
+    "bad": ("#9c1b57", "#9c1b57", "x"),
+    "unseen": ("#fbf8f1", "#5a6070", "."),
+}
+
+
+@dataclass(frozen=True)
+class Heading:
+    """A title (level 1) or heading (2)."""
+
+    text: str
+    level: int = 2
+
+
+@dataclass(frozen=True)
+class Sentence:
+    """A paragraph; strong: the one to read first; small: cautions and sources."""
+
+    text: str
+    kind: str = ""  # "", "strong" or "small"
+
+
+@dataclass(frozen=True)
+class Bullets:
+    """A list."""
+
+    items: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class Table:
+    """Rows of text under a heading; widths are shares of the page."""
+
+    heading: tuple[str, ...]
+    rows: tuple[tuple[str, ...], ...]
+    widths: tuple[float, ...]
+
+
+@dataclass(frozen=True)
+class DayChart:
+    """Rows of spans: label and (from, to, mark) with from and to as shares of the axis; ticks (share, text); a key."""
+
+    title: str
+    rows: tuple[tuple[str, tuple[tuple[float, float, str], ...]], ...]
+    ticks: tuple[tuple[float, str], ...]
+    key: tuple[tuple[str, str], ...]  # mark, its meaning
+
+
+Block = Heading | Sentence | Bullets | Table | DayChart
+
+# Sizes of paper and type; on screen one column, on paper A4.
+STYLE = """
+:root { color-scheme: light; }
+body { max-width: 46rem; margin: 2rem auto; padding: 0 1rem; background: #fbf8f1; color: #1f2430;
+  font: 15px/1.45 system-ui, "Segoe UI", Roboto, "Noto Sans", "Liberation Sans", sans-serif; }
+h1 { font-size: 1.5rem; margin: 0 0 .25rem; }
+h2 { font-size: 1.1rem; margin: 1.4rem 0 .4rem; border-bottom: 1px solid #d9d1bf; }
+p { margin: .3rem 0; } .strong { font-size: 1.15rem; font-weight: 600; } .small { color: #5a6070; font-size: .87rem; }
+table { border-collapse: collapse; width: 100%; font-variant-numeric: tabular-nums; }
+th, td { text-align: left; vertical-align: top; padding: .15rem .6rem .15rem 0; border-bottom: 1px solid #d9d1bf; }
+th { font-weight: 600; } ul { margin: .3rem 0; padding-left: 1.2rem; } figure { margin: .6rem 0; }
+svg { width: 100%; height: auto; display: block; } svg text { fill: #1f2430; font-size: 11px; }
+@media print { @page { size: A4; margin: 14mm; }
+  body { max-width: none; margin: 0; padding: 0; background: none; font-size: 10pt; }
+  h2 { break-after: avoid; } tr, figure, li { break-inside: avoid; }
+  svg { -webkit-print-color-adjust: exact; print-color-adjust: exact; } }
+"""
+
+
+def to_html(title: str, blocks: Sequence[Block], style_address: str = "") -> str:
+    """The sheet as a page; its style inside, or at an address where a policy forbids inline styles."""
+    link = f'<link rel="stylesheet" href="{html.escape(style_address)}">'
+    style = link if style_address else f"<style>{STYLE}</style>"
+    body = "\n".join(_html_block(block, number) for number, block in enumerate(blocks))
+    return (
+        '<!doctype html>\n<html lang="en">\n<head>\n<meta charset="utf-8">\n'
+        '<meta name="viewport" content="width=device-width, initial-scale=1">\n'
+        f"<title>{html.escape(title)}</title>\n{style}\n</head>\n<body>\n<main>\n{body}\n</main>\n</body>\n</html>\n"
+    )
+
+
+def _html_block(block: Block, number: int) -> str:
+    text = html.escape
+    if isinstance(block, Heading):
+        return f"<h{block.level}>{text(block.text)}</h{block.level}>"
+    if isinstance(block, Sentence):
+        return f'<p class="{block.kind}">{text(block.text)}</p>' if block.kind else f"<p>{text(block.text)}</p>"
+    if isinstance(block, Bullets):
+        return "<ul>" + "".join(f"<li>{text(item)}</li>" for item in block.items) + "</ul>"
+    if isinstance(block, Table):
+        head = "".join(f'<th scope="col">{text(cell)}</th>' for cell in block.heading)
+        rows = "".join("<tr>" + "".join(f"<td>{text(cell)}</td>" for cell in row) + "</tr>" for row in block.rows)
+        return f"<table><thead><tr>{head}</tr></thead><tbody>{rows}</tbody></table>"
+    return _svg(block, number)
+
+
+def _svg(chart: DayChart, number: int) -> str:
+    left, width, row_height = 150, 560, 22
+    bottom = 20 + row_height * len(chart.rows)
+    parts = [
+        f'<figure><svg viewBox="0 0 730 {bottom + 46}" role="img" aria-labelledby="chart-{number}">',
+        f'<title id="chart-{number}">{html.escape(chart.title)}</title><defs>',
+    ]
+    for mark, (_, edge, hatch) in MARKS.items():
+        line = {
+            "/": f'<path d="M0 6 L6 0" stroke="{edge}"/>',
+            "x": '<path d="M0 6 L6 0 M0 0 L6 6" stroke="#fbf8f1" stroke-width=".8"/>',
+            ".": f'<circle cx="3" cy="3" r=".9" fill="{edge}"/>',
+        }.get(hatch, "")
+        parts.append(
+            f'<pattern id="{mark}-{number}" width="6" height="6" patternUnits="userSpaceOnUse">{line}</pattern>'
+        )
+    parts.append("</defs>")
+
+    def box(x: float, y: float, wide: float, high: float, mark: str) -> str:
+        fill, edge, _ = MARKS[mark]
+        at = f'x="{x:.1f}" y="{y:.1f}" width="{wide:.1f}" height="{high:.1f}"'
+        return (
+            f'<rect {at} fill="{fill}" stroke="{edge}" stroke-width=".5"/>'
+            f'<rect {at} fill="url(#{mark}-{number})"/>'
+        )
+
+    for row, (label, spans) in enumerate(chart.rows):
+        y = 8 + row * row_height
+        parts.append(f'<text x="{left - 8}" y="{y + 13}" text-anchor="end">{html.escape(label[:26])}</text>')
+        parts += [box(left + a * width, y, max((b - a) * width, 0.5), row_height - 6, mark) for a, b, mark in spans]
+    for share, word in chart.ticks:
+        x = left + share * width
+        parts.append(f'<path d="M{x:.1f} 6 V{bottom - 10}" stroke="#8a8270" stroke-width=".4"/>')
+        parts.append(f'<text x="{x:.1f}" y="{bottom + 4}" text-anchor="middle">{html.escape(word)}</text>')
+    x = float(left)
+    for mark, meaning in chart.key:
+        parts.append(box(x, bottom + 20, 14, 12, mark))
+        parts.append(f'<text x="{x + 19:.0f}" y="{bottom + 30}">{html.escape(meaning)}</text>')
+        x += 34 + 6.2 * len(meaning)
+    return "".join([*parts, "</svg></figure>"])
+
+
+# ---------------------------------------------------------------------------------------------- PDF
+
+
+def to_pdf(title: str, blocks: Sequence[Block]) -> bytes:
+    """The sheet as A4 pages; the same sheet gives the same bytes."""
+    pdf = FPDF(format="A4")
+    pdf.set_creation_date(None)
+    pdf.set_title(_latin(title))
+    pdf.set_margins(14, 14, 14)
+    pdf.set_auto_page_break(True, 14)
+    pdf.add_page()
+    for block in blocks:
+        _pdf_block(pdf, block)
+    return bytes(pdf.output())
+
+
+def _latin(text: str) -> str:
+    """Text in the letters that the standard fonts have."""
+    known = text.replace("−", "-").replace("–", "-").replace("—", "-").replace("≤", "<=").replace("≥", ">=")
+    decomposed = "".join(c if ord(c) < 256 else unicodedata.normalize("NFKD", c) for c in known)
+    return "".join(c for c in decomposed if not unicodedata.combining(c)).encode("latin-1", "replace").decode("latin-1")
+
+
+def _line(pdf: FPDF, text: str, size: float, style: str = "", grey: bool = False) -> None:
+    pdf.set_font("helvetica", style, size)
+    pdf.set_text_color(*(90, 96, 112) if grey else (31, 36, 48))
+    pdf.multi_cell(0, size * 0.46, _latin(text), new_x=XPos.LMARGIN, new_y=YPos.NEXT)
+
+
+def _pdf_block(pdf: FPDF, block: Block) -> None:
+    if isinstance(block, Heading):
+        pdf.ln(1 if block.level == 1 else 3)
+        _line(pdf, block.text, 17 if block.level == 1 else 12, "B")
+        pdf.ln(1)
+    elif isinstance(block, Sentence):
+        size = {"strong": 12.0, "small": 8.0}.get(block.kind, 9.5)
+        _line(pdf, block.text, size, "B" if block.kind == "strong" else "", block.kind == "small")
+        pdf.ln(1)
+    elif isinstance(block, Bullets):
+        for item in block.items:
+            _line(pdf, f"\u00b7 {item}", 9)
+    elif isinstance(block, Table):
+        _pdf_table(pdf, block)
+    else:
+        _pdf_chart(pdf, block)
+
+
+def _pdf_table(pdf: FPDF, block: Table) -> None:
+    pdf.set_font("helvetica", "", 8.5)
+    pdf.set_text_color(31, 36, 48)
+    pdf.set_draw_color(217, 209, 191)
+    total = sum(block.widths)
+    with pdf.table(
+        col_widths=tuple(100 * share / total for share in block.widths), borders_layout="HORIZONTAL_LINES",
+        text_align="LEFT", line_height=4.2, padding=0.5,
+    ) as table:  # fmt: skip
+        for row in (block.heading, *block.rows):
+            cells = table.row()
+            for cell in row:
+                cells.cell(_latin(cell))
+    pdf.ln(1)
+
+
+def _rgb(colour: str) -> tuple[int, int, int]:
+    return int(colour[1:3], 16), int(colour[3:5], 16), int(colour[5:7], 16)
+
+
+def _pdf_mark(pdf: FPDF, x: float, y: float, wide: float, high: float, mark: str) -> None:
+    fill, edge, hatch = MARKS[mark]
+    pdf.set_fill_color(*_rgb(fill))
+    pdf.set_draw_color(*_rgb(edge))
+    pdf.set_line_width(0.1)
+    pdf.rect(x, y, wide, high, style="DF")
+    if hatch == "x":
+        pdf.set_draw_color(251, 248, 241)
+    at = x
+    while hatch and at < x + wide:
+        reach = min(1.5, x + wide - at)
+        if hatch == ".":
+            pdf.line(at, y + high / 2, at + 0.15, y + high / 2)
+        else:
+            pdf.line(at, y + high, at + reach, y + high - high * reach / 1.5)
+        if hatch == "x":
+            pdf.line(at, y, at + reach, y + high * reach / 1.5)
+        at += 1.5
+
+
+def _pdf_chart(pdf: FPDF, chart: DayChart) -> None:
+    left, width, row_height = 56.0, 138.0, 5.5
+    need = row_height * len(chart.rows) + 16
+    if pdf.get_y() + need > pdf.h - 14:
+        pdf.add_page()
+    top = pdf.get_y() + 1
+    pdf.set_font("helvetica", "", 7.5)
+    pdf.set_text_color(31, 36, 48)
+    bottom = top + row_height * len(chart.rows)
+    for row, (label, spans) in enumerate(chart.rows):
+        y = top + row * row_height
+        pdf.text(14, y + 3.2, _latin(label[:30]))
+        for a, b, mark in spans:
+            _pdf_mark(pdf, left + a * width, y, max((b - a) * width, 0.15), row_height - 1.5, mark)
+    for share, word in chart.ticks:
+        x = left + share * width
+        pdf.set_draw_color(138, 130, 112)
+        pdf.line(x, top - 0.5, x, bottom)
+        pdf.text(x - 3, bottom + 3, _latin(word))
+    x = left
+    for mark, meaning in chart.key:
+        _pdf_mark(pdf, x, bottom + 6, 3.5, 3, mark)
+        pdf.text(x + 5, bottom + 8.4, _latin(meaning))
+        x += 10 + pdf.get_string_width(_latin(meaning))
+    pdf.set_y(bottom + 12)
