@@ -24,8 +24,8 @@ ODD = st.sampled_from(
 VALUES = ODD | st.text(max_size=12) | st.floats().map(str) | st.integers().map(str)
 GOOD = {"region": REGION.name, "day": str(STORM_DAY), "lat": "-41", "lon": "147", "time": "2031-05-11T05:00:00Z",
         "from": "2031-05-11T05:00:00Z", "to": "2031-05-11T06:00:00Z", "layers": "state", "version": "1", "south": "-43",
-        "north": "-36", "west": "142", "east": "150", "since": "2031-05-01", "until": "2031-05-31", "state": "done", "number": "1",
-        "batch": "0" * 32, "name": "x.rnx",
+        "north": "-36", "west": "142", "east": "150", "since": "2031-05-01", "until": "2031-05-31", "state": "done",
+        "number": "1", "batch": "0" * 32, "name": "x.rnx",
         "use": "ground"}  # fmt: skip
 MANY = settings(max_examples=100, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 

@@ -19,6 +19,7 @@ import sqlalchemy as sa
 from sqlalchemy.engine import URL, Connection, Engine, make_url
 
 from skylag.archive import chunks, forms, records, schema, slants
+from skylag.archive.keys import Keys
 from skylag.archive.records import DayHead, DayRecord, SiteStates
 from skylag.archive.tasks import Ending, Tasks, end_in
 from skylag.errors import FormatError, Missing, Refused, SkylagError
@@ -127,6 +128,7 @@ class Archive:
         self._writer: ThreadPoolExecutor | None = None
         self._closed = threading.Event()
         self.tasks = Tasks(self._write, self._reading)
+        self.keys = Keys(self._write, self._reading)
         if url.get_backend_name() == "sqlite":
             self._read_engine = _sqlite_engine(url, "BEGIN")
             self._write_engine = _sqlite_engine(url, "BEGIN IMMEDIATE")
@@ -219,6 +221,24 @@ class Archive:
         for row in rows:
             groups.setdefault((row.region, row.day), []).append(row)
         return tuple(_head(_shown(group), [row.version for row in group]) for group in groups.values())
+
+    def newest_versions(self, count: int) -> tuple[tuple[str, str, int], ...]:
+        """Region, day and version of what was saved last, newest first; one entry per day."""
+        product = schema.product.c
+        query = sa.select(product.region, product.day, product.version).order_by(product.id.desc()).limit(4 * count)
+        with self._reading() as connection:
+            rows = connection.execute(query).all()
+        newest: dict[tuple[str, str], int] = {}
+        for row in rows:
+            newest.setdefault((row.region, row.day), int(row.version))
+        return tuple((region, day, version) for (region, day), version in list(newest.items())[:count])
+
+    def size(self) -> tuple[int, int]:
+        """How many days, and how many versions of days, are kept."""
+        days = sa.select(schema.product.c.region, schema.product.c.day).distinct().subquery()
+        with self._reading() as connection:
+            versions = connection.scalar(sa.select(sa.func.count()).select_from(schema.product))
+            return int(connection.scalar(sa.select(sa.func.count()).select_from(days)) or 0), int(versions or 0)
 
     def day(self, region: str, day: Day, version: int | None = None) -> DayRecord:
         """The plain facts of a day; the pinned or newest version when none is named."""

@@ -4,6 +4,7 @@ Lets a folder of hundreds of files be sorted without decoding them.  Never reads
 """
 
 import bz2
+import contextlib
 import hashlib
 import io
 import zipfile
@@ -64,7 +65,7 @@ def _head(data: bytes) -> bytes:
         elif data[:3] == b"BZh":
             data = bz2.BZ2Decompressor().decompress(data, _PEEK)
         elif data[:2] == b"\x1f\x9d":
-            data = ncompress.decompress(data)[:_PEEK]
+            data = _compress_head(data)
         elif data[:2] == b"PK":
             with zipfile.ZipFile(io.BytesIO(data)) as folder, folder.open(folder.namelist()[0]) as member:
                 data = member.read(_PEEK)
@@ -85,3 +86,24 @@ def _first_day(head: bytes) -> np.datetime64 | None:
         if line[60:80].strip() == b"END OF HEADER":
             return None
     return None
+
+
+class _Peek(io.BytesIO):
+    """A buffer that takes a beginning and no more, so that nothing can swell in it."""
+
+    def write(self, part: bytes, /) -> int:  # type: ignore[override]
+        if self.tell() >= _PEEK:
+            raise _Enough
+        return super().write(part[:_PEEK])
+
+
+class _Enough(Exception):
+    """The beginning is there."""
+
+
+def _compress_head(data: bytes) -> bytes:
+    """The beginning of a compress (.Z) file."""
+    out = _Peek()
+    with contextlib.suppress(_Enough):
+        ncompress.decompress(data, out)
+    return out.getvalue()
