@@ -151,13 +151,31 @@ def test_satellites_of_a_product_come_out_exactly_at_it(world: World) -> None:
     for row in np.flatnonzero((table.kind == "satellite") & (table.system == "G")):
         published = float(product.value_ns[product.name == table.name[row]][0])
         assert table.value_ns[row] == pytest.approx(published, abs=1e-4)
-        assert table.sigma_ns[row] < 1e-3
+        assert table.sigma_ns[row] == pytest.approx(0.01, rel=1e-3)  # the record's own
         assert calibration.datum_of_row[row] == "held at product X"
     assert "G C1W-C2W: 14 satellites held at product X" in calibration.summary["datum"]
     assert "E C1C-C5Q: zero mean of 14 satellites" in calibration.summary["datum"]
     others = [w for w, k, s in zip(calibration.datum_of_row, table.kind, table.system, strict=True)
               if (k, s) == ("receiver", "G")]  # fmt: skip
     assert set(others) == {"14 satellites held at product X"}
+
+
+def test_errors_of_held_records_are_in_the_sigmas(world: World) -> None:
+    """A product of 0.8 ns each, errors drawn so: receivers and contents know it, errors are as large as stated."""
+    ratios = []
+    for seed in range(3):
+        product = world.product(GPS, sigma_ns=0.8)
+        product.value_ns[:] += np.random.default_rng(seed).normal(0.0, 0.8, len(product))
+        only = world.only(np.array([p.system for p in world.rays.pairs])[world.rays.pair] == "G")
+        calibration = solve(only.rays, product)
+        table = calibration.biases
+        own = np.sqrt(np.diag(calibration.covariance))
+        satellites = ~receivers(calibration)
+        assert own[satellites] == pytest.approx(0.8, rel=1e-3)
+        # Fourteen satellites: a receiver's bias is off by 0.8 / sqrt(14) at least.
+        assert np.all(own[~satellites] > 0.8 / np.sqrt(14) * 0.9)
+        ratios.append(only.errors(table) / own)
+    assert 0.6 < np.std(np.concatenate(ratios)) < 1.4
 
 
 def test_a_satellite_the_product_lacks_is_found_and_said(world: World) -> None:

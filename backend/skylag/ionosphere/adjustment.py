@@ -7,7 +7,7 @@ as a map: the map is made afterwards from the calibrated rays (`field`).
 """
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -116,6 +116,7 @@ def solve(
     part = rays.where(used)
     knowledge.append(_penalty(design, choices))
     estimate = _iterate(part, design, spans[used], layer.slant_change[used], knowledge, choices)
+    estimate = replace(estimate, covariance=datum.with_records(estimate.covariance))
     of_receiver = levels.receiver_values(unknowns, estimate.x, seconds, choices.drift_hours)
     return _calibration(rays, part, used, per_ns, unknowns, datum, estimate, design, layer, of_receiver, choices)
 

@@ -16,7 +16,7 @@ from skylag.ionosphere.bias_algebra import pair_bias
 from skylag.ionosphere.normal import Knowledge, known
 from skylag.tables import Biases, Floats, Ints, Rays
 
-# Weight [1/ns^2] of what is taken as exact: a hundred-thousandth of a nanosecond.
+# Weight [1/ns^2] of what is held: a hundred-thousandth of a nanosecond.
 _EXACT = 1e10
 # Nothing is known of a bias: GPS receiver biases lie within -22 to +46 ns (product of 2017-001).
 _ANY_BIAS_NS = 100.0
@@ -24,7 +24,7 @@ _ANY_BIAS_NS = 100.0
 # satellites in January 2004, 1.27 ns over 32 in August 2015.
 _FIRST_CODES_SIGMA_NS = 1.3
 _FIRST_CODES = {"C1C", "C1W", "C1P"}
-# Sigma of a record that tells none, where earlier days are drawn upon: scatter of published biases between agencies is
+# Sigma of a record that tells none: scatter of published biases between agencies is
 # some tenths of a nanosecond (common practice).
 _UNTOLD_SIGMA_NS = 0.3
 
@@ -89,13 +89,36 @@ def _present(key: Ints) -> tuple[Ints, Ints]:
 
 
 @dataclass(frozen=True)
+class Held:
+    """A sum of biases held at a published value, and the sigma [ns] of that value."""
+
+    columns: Ints
+    coefficients: Floats
+    sigma_ns: float
+
+
+@dataclass(frozen=True)
 class Datum:
     """What is known of the biases before the rays, in words for every bias, and sentences on what cannot be known."""
 
     knowledge: list[Knowledge]
+    held: tuple[Held, ...]
     of_row: tuple[str, ...]
     summary: str
     notes: tuple[str, ...]
+
+    def with_records(self, covariance: Floats) -> Floats:
+        """The covariance of the biases [ns^2] with the errors of the published values that they were held at.
+
+        Holding makes a bias exact in the equations; its record is not.  An error of the record moves the bias by as
+        much and the others as the equations have it.
+        """
+        if not self.held:
+            return covariance
+        moves = np.stack(
+            [_EXACT * one.sigma_ns * (covariance[:, one.columns] @ one.coefficients) for one in self.held]
+        )  # fmt: skip
+        return np.asarray(covariance + moves.T @ moves)
 
 
 def choose(
@@ -134,6 +157,7 @@ class _Book:
         self.knowledge = [
             Knowledge(np.array([row]), np.full((1, 1), 1.0 / _ANY_BIAS_NS**2), np.zeros(1)) for row in range(count)
         ]
+        self.held: list[Held] = []
         self.words = [""] * count
         self.lines: dict[str, int] = {}
         self.notes: list[str] = []
@@ -141,6 +165,11 @@ class _Book:
         # The names of files without their folders.
         words = prior.source.split() if prior is not None else []
         self.source = " ".join(word.rsplit("/", 1)[-1] for word in words) or "the prior"
+
+    def hold(self, columns: Ints, coefficients: Floats, value: float, sigma: float) -> None:
+        """Hold a sum of biases at a published value."""
+        self.knowledge.append(known(columns, coefficients, value, _EXACT))
+        self.held.append(Held(columns, coefficients, sigma if np.isfinite(sigma) else _UNTOLD_SIGMA_NS))
 
     def told(self, row: int) -> tuple[float, float] | None:
         """What the prior says of a bias: value and sigma [ns]."""
@@ -161,7 +190,7 @@ class _Book:
                 self.words[row] = "not known: no ray above the elevation limit"
                 lost.append(f"{self.unknowns.name[row]} {self.rays.pairs[self.unknowns.pair[row]].name}")
             else:
-                self.knowledge.append(known(np.array([row]), np.ones(1), found[0], _EXACT))
+                self.hold(np.array([row]), np.ones(1), *found)
                 self.words[row] = f"held at {self.source}"
         if lost:
             self.notes.append(
@@ -177,8 +206,8 @@ class _Book:
         partners = self._partners(satellites)
         what = f"{pair.system} {pair.name}" + (" by channel" if pair.system == "R" else "")
         if told and self.walk is None:
-            for row, (value, _) in told.items():
-                self.knowledge.append(known(np.array([row]), np.ones(1), value, _EXACT))
+            for row, (value, sigma) in told.items():
+                self.hold(np.array([row]), np.ones(1), value, sigma)
                 self.words[row] = f"held at {self.source}"
             free = len(satellites) - len(told)
             if free:
@@ -263,9 +292,8 @@ class _Book:
         example = next(iter(partners.items()))
         first, second = (self.rays.pairs[self.unknowns.pair[row]] for row in example)
         if told:
-            for row, gap in told.items():
-                columns = np.array([row, partners[row]])
-                self.knowledge.append(known(columns, np.array([1.0, -1.0]), gap, _EXACT))
+            for row, (value, sigma) in told.items():
+                self.hold(np.array([row, partners[row]]), np.array([1.0, -1.0]), value, sigma)
             self._say(rows, what, f"differences of {len(told)} satellites from {second.name} as in {self.source}")
             return
         small = first.code2 == second.code2 and {first.code1, second.code1} <= _FIRST_CODES
@@ -280,20 +308,21 @@ class _Book:
         words = f"zero mean of the differences of {count} satellites from {second.name}"
         self._say(rows, what, words if count > 1 else f"its one common satellite as on {second.name}")
 
-    def _code_gap(self, row: int, other: int) -> float | None:
-        """Bias of a row minus that of the same satellite on another pair [ns], where the prior tells both codes."""
+    def _code_gap(self, row: int, other: int) -> tuple[float, float] | None:
+        """Bias of a row minus that of the same satellite on another pair, and sigma [ns], where the prior tells it."""
         if self.prior is None:
             return None
         first = self.rays.pairs[self.unknowns.pair[row]]
         second = self.rays.pairs[self.unknowns.pair[other]]
         name = self.unknowns.name[row]
-        total = 0.0
+        total, variance = 0.0, 0.0
         for sign, one, two in ((1.0, first.code1, second.code1), (-1.0, first.code2, second.code2)):
             found = pair_bias(self.prior, "satellite", name, first.system, one, two, self.when)
             if found is None or not np.isfinite(found[0]):
                 return None
             total += sign * found[0]
-        return total
+            variance += found[1] ** 2
+        return total, float(np.sqrt(variance))
 
     def _say(self, rows: Ints, what: str, words: str) -> None:
         channel = int(self.unknowns.channel[rows[0]])
@@ -306,7 +335,7 @@ class _Book:
     def close(self) -> Datum:
         """All of it; groups with the same words are counted together."""
         lines = [line if times == 1 else f"{line} ({times} times)" for line, times in self.lines.items()]
-        return Datum(self.knowledge, tuple(self.words), "; ".join(lines), tuple(self.notes))
+        return Datum(self.knowledge, tuple(self.held), tuple(self.words), "; ".join(lines), tuple(self.notes))
 
 
 def connect_blocks(unknowns: Unknowns, sigma_ns: float) -> list[Knowledge]:
