@@ -9,7 +9,9 @@ import html
 import unicodedata
 from collections.abc import Sequence
 from dataclasses import dataclass
+from datetime import UTC, datetime
 
+import numpy as np
 from fpdf import FPDF
 from fpdf.enums import XPos, YPos
 
@@ -157,10 +159,10 @@ def _svg(chart: DayChart, number: int) -> str:
 # ---------------------------------------------------------------------------------------------- PDF
 
 
-def to_pdf(title: str, blocks: Sequence[Block]) -> bytes:
-    """The sheet as A4 pages; the same sheet gives the same bytes."""
+def to_pdf(title: str, blocks: Sequence[Block], made: np.datetime64) -> bytes:
+    """The sheet as A4 pages; the same sheet, made at the same UTC instant, gives the same bytes."""
     pdf = FPDF(format="A4")
-    pdf.set_creation_date(None)
+    pdf.set_creation_date(datetime.fromtimestamp(int(made.astype("datetime64[s]").astype(np.int64)), UTC))
     pdf.set_title(_latin(title))
     pdf.set_margins(14, 14, 14)
     pdf.set_auto_page_break(True, 14)

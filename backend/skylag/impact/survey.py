@@ -505,7 +505,7 @@ def was_it_the_ionosphere(
         said.append(f"The hour's 95 % differential delay around it was {ppm:.1f} ppm: {index_class(ppm)}.")
     warned = any("is reported here" in advice.reasons[k] for k in at)
     lat, lon = advice.job.places[0]
-    near = [flag for flag in flags if _touches(flag, lat, lon, time, reach)]
+    near = [flag for flag in flags if touches(flag, lat, lon, time, reach)]
     said += [f"{_title(flag)}: {flag.evidence}." for flag in near[:5]]
     if warned and not near:
         said.append("A front, an irregular patch or a steep slope was reported over the place.")
@@ -530,7 +530,7 @@ def _title(flag: Flag) -> str:
     return kind[flag.kind] + ("" if flag.confirmed else " (unconfirmed)")
 
 
-def _touches(flag: Flag, lat: float, lon: float, time: np.datetime64, reach: np.timedelta64) -> bool:
+def touches(flag: Flag, lat: float, lon: float, time: np.datetime64, reach: np.timedelta64) -> bool:
     """Whether a flag was active around a time within 150 km of a place, by its track where it has one."""
     if not flag.start - reach <= time <= flag.end + reach:
         return False

@@ -1,0 +1,303 @@
+"""One site and day on a printable sheet: the verdict first, then chart, evidence, assumptions, cautions.
+
+Puts into words and blocks what `jobs.advising` found; `formats.sheet` writes them.  Never decides anything.
+"""
+
+import itertools
+from collections.abc import Callable, Sequence
+from datetime import UTC, datetime
+from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
+
+import numpy as np
+
+from skylag import timescales
+from skylag.errors import Missing, NotEnough
+from skylag.formats.calendar import Entry
+from skylag.formats.sheet import Block, Bullets, DayChart, Heading, Sentence, Table
+from skylag.impact.ground_augmentation import StationDay
+from skylag.impact.satellite_augmentation import Availability, ServiceChoices
+from skylag.impact.survey import AVOID, NOT_SEEN, WORK, Advice, Job, touches
+from skylag.jobs.advising import DayAdvice
+from skylag.tables import Site
+from skylag.web import sentences
+
+_MARK = {WORK: "good", AVOID: "bad", NOT_SEEN: "unseen"}
+_STATE_MARK = ("unseen", "good", "doubt", "bad")
+_WORDS = {WORK: "Work", AVOID: "Avoid", NOT_SEEN: "Not seen"}
+_MOST_ROWS = 24
+
+
+class Clock:
+    """GPS times as text in UTC and in a region's own time."""
+
+    def __init__(self, timezone: str) -> None:
+        self.zone: ZoneInfo | None
+        try:
+            self.zone = None if timezone == "UTC" else ZoneInfo(timezone)
+        except (ZoneInfoNotFoundError, ValueError):
+            self.zone = None
+
+    def utc(self, time: np.datetime64) -> str:
+        """Hour and minute."""
+        return str(np.datetime_as_string(timescales.gps_to_utc(time + np.timedelta64(500, "ms")), unit="m"))[11:]
+
+    def both(self, time: np.datetime64) -> str:
+        """Hour and minute in UTC, with the local ones where the region has a zone of its own."""
+        if self.zone is None:
+            return self.utc(time)
+        instant = timescales.gps_to_utc(time + np.timedelta64(500, "ms")).astype("datetime64[s]").astype(np.int64)
+        local = datetime.fromtimestamp(int(instant), UTC).astimezone(self.zone)
+        return f"{self.utc(time)} (local {local:%H:%M})"
+
+
+def of_site(
+    day: DayAdvice, site: Site, job: Job | None = None, choices: ServiceChoices | None = None
+) -> tuple[str, list[Block]]:
+    """Title and blocks of a site's sheet: its survey job, and for an aerodrome its approaches."""
+    record = day.record
+    clock = Clock(record.region.timezone)
+    advice = day.survey(job or Job(site.name, ((site.lat, site.lon),)))
+    approaches: Availability | None = None
+    station: StationDay | None = None
+    missing = ""
+    if site.kind == "aerodrome":
+        station = day.station(site)
+        try:
+            approaches = day.approaches([site], choices)
+        except NotEnough as trouble:
+            missing = trouble.message
+    title = f"{site.name}, {record.head.day}"
+    blocks: list[Block] = [Heading(title, 1), Sentence(_place(site, record.region.name), "small")]
+    if record.origin.simulated:
+        blocks.append(Sentence(sentences.INVENTED, "strong"))
+    if approaches is not None:
+        blocks.append(Sentence(approach_verdict(approaches, clock), "strong"))
+    elif missing:
+        blocks.append(Sentence(f"Approaches cannot be judged: {missing}", "strong"))
+    blocks.append(Sentence(survey_verdict(advice, clock), "strong"))
+    if station is not None:
+        blocks.append(Sentence(station_verdict(station), ""))
+    blocks.append(_chart(day, site, advice, approaches, clock))
+    if approaches is not None:
+        blocks += _approach_rows(approaches, clock)
+    blocks += _survey_rows(advice, clock)
+    blocks += _evidence(day, site, advice, clock)
+    blocks += _single(day, site)
+    blocks.append(Heading("What is assumed"))
+    told = [*advice.assumptions]
+    told += [] if approaches is None else approaches.assumptions
+    told += [] if station is None else station.assumptions
+    blocks.append(Bullets(tuple(dict.fromkeys(told))))
+    blocks.append(Heading("Cautions"))
+    cautions = [sentences.CAUTION, advice.caution] + ([approaches.caution] if approaches is not None else [])
+    blocks += [Sentence(one) for one in dict.fromkeys(cautions)]
+    versions = record.origin.versions.get("skylag", "")
+    blocks.append(
+        Sentence(
+            f"Skylag {versions}; version {record.head.version} of the day, from {len(record.origin.inputs)} files and "
+            f"{len(record.receivers)} receivers, kept {record.head.saved_at}Z. Times are UTC unless said.", "small",
+        )
+    )  # fmt: skip
+    return title, blocks
+
+
+def _place(site: Site, region: str) -> str:
+    north, east = "N" if site.lat >= 0 else "S", "E" if site.lon >= 0 else "W"
+    return f"{site.kind.capitalize()} at {abs(site.lat):.2f} {north}, {abs(site.lon):.2f} {east}; region {region}"
+
+
+def _hours(minutes: float) -> str:
+    return f"{minutes / 60:.1f} h" if minutes >= 90 else f"{minutes:.0f} min"
+
+
+def survey_verdict(advice: Advice, clock: Clock) -> str:
+    """A job's day in a sentence or two."""
+    spent = dict.fromkeys((WORK, AVOID, NOT_SEEN), 0.0)
+    for window in advice.windows:
+        spent[window.verdict] += float((window.end - window.start) / np.timedelta64(1, "m"))
+    job = advice.job
+    over = "between the reference stations" if job.method == "network" else f"over {job.baseline_km:g} km"
+    head = (
+        f"Survey ({job.method}, {over}, {job.horizontal_mm:g} mm across and {job.vertical_mm:g} mm in height): "
+        f"{_hours(spent[WORK])} to work, {_hours(spent[AVOID])} to avoid, {_hours(spent[NOT_SEEN])} not seen."
+    )
+    bad = [window for window in advice.windows if window.verdict != WORK]
+    if not bad:
+        return head
+    worst = max(bad, key=lambda window: window.end - window.start)
+    return f"{head} Longest away from work: {clock.utc(worst.start)} to {clock.utc(worst.end)} UTC, {worst.why}."
+
+
+def approach_verdict(found: Availability, clock: Clock) -> str:
+    """An aerodrome's approaches in a sentence or two."""
+    parts = [
+        f"{level.name} {100 * float(found.share[number, 0]):.1f} %" for number, level in enumerate(found.levels)
+    ]
+    head = f"Approaches available of the day: {', '.join(parts)}."
+    if not found.outages:
+        return f"{head} No outage."
+    worst = max(found.outages, key=lambda outage: outage.end - outage.start)
+    return (
+        f"{head} {len(found.outages)} outages; the longest, {worst.level} {clock.utc(worst.start)} to "
+        f"{clock.utc(worst.end)} UTC, is of {'the ' if worst.cause != 'unseen' else ''}"
+        f"{worst.cause if worst.cause != 'unseen' else 'want of data'}."
+    )
+
+
+def station_verdict(found: StationDay) -> str:
+    """An aerodrome's ground-based augmentation in a sentence."""
+    minutes = found.minutes
+    return (
+        f"Ground-based augmentation: slope beyond nominal for {minutes['nominal']:.0f} min, beyond what can be "
+        f"announced for {minutes['announced']:.0f} min, beyond the threat space for "
+        f"{minutes['threat']:.0f} min, not seen for {minutes['unseen']:.0f} min."
+    )
+
+
+# ---------------------------------------------------------------------------------------------- chart and tables
+
+
+def _chart(
+    day: DayAdvice, site: Site, advice: Advice, approaches: Availability | None, clock: Clock
+) -> DayChart:
+    start = day.record.head.day.astype("datetime64[ns]")
+    whole = np.timedelta64(86_400 * 10**9, "ns")
+
+    def share(time: np.datetime64) -> float:
+        return float(np.clip((time - start) / whole, 0.0, 1.0))
+
+    rows: list[tuple[str, tuple[tuple[float, float, str], ...]]] = []
+    rows.append(("Corrections at the site", _state_spans(day, site, share)))
+    rows.append(("Survey", tuple((share(w.start), share(w.end), _MARK[w.verdict]) for w in advice.windows)))
+    if approaches is not None:
+        for level in approaches.levels:
+            spans: list[tuple[float, float, str]] = [(0.0, 1.0, "good")]
+            spans += [
+                (share(one.start), share(one.end), "unseen" if one.cause == "unseen" else "bad")
+                for one in approaches.outages
+                if one.level == level.name
+            ]
+            rows.append((level.name, tuple(spans)))
+    ticks = tuple((k / 24, clock.utc(start + np.timedelta64(k, "h"))[:2]) for k in range(0, 25, 3))
+    key = (("good", "works"), ("doubt", "strained"), ("bad", "avoid, broken, outage"), ("unseen", "not seen"))
+    return DayChart("The day, hours in UTC", tuple(rows), ticks, key)
+
+
+def _state_spans(
+    day: DayAdvice, site: Site, share: Callable[[np.datetime64], float]
+) -> tuple[tuple[float, float, str], ...]:
+    cell = day.record.cell_of(site.lat, site.lon)
+    fields = day.fields
+    if cell is None or not len(fields.times):
+        return ((0.0, 1.0, "unseen"),)
+    codes = fields.state[:, cell[0], cell[1]]
+    edges = [0, *(np.flatnonzero(np.diff(codes)) + 1).tolist(), len(codes)]
+    step = np.median(np.diff(fields.times)) if len(fields.times) > 1 else np.timedelta64(300, "s")
+    return tuple(
+        (share(fields.times[a]), share(fields.times[b - 1] + step), _STATE_MARK[int(codes[a])])
+        for a, b in itertools.pairwise(edges)
+    )
+
+
+def _cut(rows: Sequence[tuple[str, ...]], width: int) -> tuple[tuple[str, ...], ...]:
+    if len(rows) <= _MOST_ROWS:
+        return tuple(rows)
+    rest = (f"and {len(rows) - _MOST_ROWS} more", *([""] * (width - 1)))
+    return (*rows[:_MOST_ROWS], rest)
+
+
+def _approach_rows(found: Availability, clock: Clock) -> list[Block]:
+    rows = [
+        (clock.both(one.start), clock.both(one.end), one.level, one.why) for one in found.outages
+    ]
+    if not rows:
+        return []
+    heading = ("From (UTC)", "To (UTC)", "Level", "Why")
+    return [Heading("Outages of approaches"), Table(heading, _cut(rows, 4), (1.6, 1.6, 0.8, 4.5))]
+
+
+def _survey_rows(advice: Advice, clock: Clock) -> list[Block]:
+    rows = [(clock.both(w.start), clock.both(w.end), _WORDS[w.verdict], w.why) for w in advice.windows]
+    index = [
+        (clock.utc(hour), f"{ppm:.1f}" if np.isfinite(ppm) else "-", word)
+        for hour, ppm, word in zip(advice.hours, advice.index, advice.index_words, strict=True)
+    ]
+    highest = max(index, key=lambda row: float(row[1]) if row[1] != "-" else -1.0, default=None)
+    blocks: list[Block] = [
+        Heading("Windows for survey"),
+        Table(("From (UTC)", "To (UTC)", "", "Why"), _cut(rows, 4), (1.6, 1.6, 0.8, 4.5)),
+    ]
+    if highest is not None:
+        blocks.append(Sentence(
+            "Differential delay that 95 % of the surroundings stay under, by hour (ppm of the baseline): "
+            + ", ".join(f"{hour} {ppm}" for hour, ppm, _ in index)
+            + f". Highest {highest[1]} at {highest[0]} UTC: {highest[2]}."
+        ))  # fmt: skip
+    return blocks
+
+
+def _evidence(day: DayAdvice, site: Site, advice: Advice, clock: Clock) -> list[Block]:
+    middle = day.record.head.day.astype("datetime64[ns]")
+    near = [flag for flag in day.flags if touches(flag, site.lat, site.lon, flag.start + (flag.end - flag.start) // 2,
+                                                  np.timedelta64(1, "m"))]  # fmt: skip
+    near += [flag for flag in day.flags if flag.kind == "front" and flag not in near and flag.confirmed]
+    rows = [
+        (f"{clock.utc(flag.start)} to {clock.utc(flag.end)}", flag.kind, flag.state,
+         flag.evidence if flag.confirmed else f"unconfirmed: {flag.evidence}")
+        for flag in sorted(near, key=lambda flag: (not flag.confirmed, flag.start))[:10]
+    ]  # fmt: skip
+    blocks: list[Block] = [Heading("Evidence")]
+    known = advice.slope[np.isfinite(advice.slope)]
+    if known.size:
+        worst = int(np.nanargmax(advice.slope))
+        blocks.append(Sentence(
+            f"The delay sloped by {float(np.median(known)):.1f} mm/km in the middle of the day's values and by "
+            f"{advice.slope[worst]:.1f} ± {advice.slope_sigma[worst]:.1f} mm/km at the most, at "
+            f"{clock.utc(advice.times[worst])} UTC."
+        ))  # fmt: skip
+    else:
+        blocks.append(Sentence("The maps of this day never saw the site."))
+    if rows:
+        blocks.append(Table(("Time (UTC)", "Kind", "State", "Seen by"), tuple(rows), (1.4, 0.9, 0.9, 5.0)))
+    else:
+        blocks.append(Sentence(f"No slope, front, patch or fault was flagged near on {str(middle)[:10]}."))
+    return blocks
+
+
+def _single(day: DayAdvice, site: Site) -> list[Block]:
+    try:
+        found = day.broadcast_model(site)
+    except (Missing, NotEnough):
+        return []
+    if not np.isfinite(found.day_range_95_m):
+        return []
+    position = (
+        f"; position {found.day_horizontal_95_m:.1f} m across and {found.day_vertical_95_m:.1f} m in height"
+        if np.isfinite(found.day_vertical_95_m)
+        else ""
+    )
+    return [
+        Heading("Users of one frequency"),
+        Sentence(f"The broadcast model leaves {found.day_range_95_m:.1f} m of range (95 %){position}."),
+    ]
+
+
+# ---------------------------------------------------------------------------------------------- calendars
+
+
+def survey_entries(advice: Advice) -> list[Entry]:
+    """Windows to work and to avoid as calendar entries."""
+    job = advice.job
+    return [
+        Entry(w.start, w.end, f"{_WORDS[w.verdict]}: {job.name}", f"{w.why}\n{advice.caution}".strip(), job.name)
+        for w in advice.windows
+    ]
+
+
+def approach_entries(found: Availability) -> list[Entry]:
+    """Outages as calendar entries."""
+    return [
+        Entry(one.start, one.end, f"No {one.level}: {one.site}", f"{one.why}\n{found.caution}", one.site)
+        for one in found.outages
+    ]
+
