@@ -145,4 +145,59 @@ def changed(rays: Rays, samples: Samples, rows: np.ndarray, slant: np.ndarray) -
     return rays, replace(samples, rays=rays, stec=samples.stec + extra, vtec=samples.vtec + extra / rays.mapping)
 
 
-__all__ = ["CENTRE", "PLACES", "START", "changed", "flat", "quiet", "simulate", "wall"]
+def broken_down(rays: Rays, samples: Samples, rng: np.random.Generator) -> tuple[Rays, Samples]:
+    """A day with its receivers' faults, as they show in rays.
+
+    - slips found, ten a receiver in eight hours: the arc ends, the next has a level error of its own
+    - slips not found, four in the network in eight hours: steps of 0.3 to 2 TECU inside an arc
+    - single wild phases not found, ten in the network in eight hours: 2 to 8 TECU at one epoch
+    - one receiver among metal: level errors three times those it admits
+    - one receiver whose phases run away on all satellites for an hour, one whose level jumps by 12 TECU for an hour
+    - outages: one receiver silent for an hour, three satellites lost by a receiver for some minutes
+    """
+    hours = float((rays.time.max() - rays.time.min()) / np.timedelta64(1, "h"))
+    receivers = len(rays.receivers)
+    arc, extra, phase_only = rays.arc.copy(), np.zeros(len(rays)), np.zeros(len(rays))
+    names = rng.permutation(receivers)
+    metal, wild, jumped, silent = names[:4]
+    next_arc = int(arc.max()) + 1
+    rows_of = {number: np.flatnonzero(arc == number) for number in np.unique(arc)}
+    long = [number for number, rows in rows_of.items() if len(rows) > 80]
+    for number in rng.choice(long, max(1, int(receivers * 10 * hours / 8))):  # found slips
+        rows = rows_of[number]
+        after = rows[rng.integers(30, len(rows) - 30) :]
+        arc[after] = next_arc
+        next_arc += 1
+        extra[after] += rng.normal(0, 0.7)
+        phase_only[after] += rng.normal(0, 20.0)
+    for number in rng.choice(long, max(1, int(4 * hours / 8))):  # slips not found
+        rows = rows_of[number]
+        extra[rows[rng.integers(20, len(rows) - 20) :]] += rng.choice([-1, 1]) * rng.uniform(0.3, 2.0)
+    for number in rng.choice(long, max(1, int(10 * hours / 8))):  # wild phases not found
+        extra[rng.choice(rows_of[number])] += rng.choice([-1, 1]) * rng.uniform(2.0, 8.0)
+    level = np.zeros(int(arc.max()) + 1)
+    mine = np.unique(arc[rays.receiver == metal])
+    level[mine] = rng.normal(0, 0.7 * np.sqrt(8.0), len(mine))
+    extra += level[arc]
+    late = (rays.time - rays.time.min()) / np.timedelta64(1, "h")
+    for which, begin in ((wild, rng.uniform(0, hours - 1)), (jumped, rng.uniform(0, hours - 1))):
+        bad = (rays.receiver == which) & (late >= begin) & (late < begin + 1)
+        if which == jumped:
+            extra[bad] += 12.0 * rays.mapping[bad]
+            continue
+        for number in np.unique(arc[bad]):
+            rows = np.flatnonzero(bad & (arc == number))
+            extra[rows] += np.cumsum(rng.normal(0, 0.8, len(rows)))
+    begin = rng.uniform(0, hours - 1)
+    keep = ~((rays.receiver == silent) & (late >= begin) & (late < begin + 1))
+    for number in rng.choice(long, 3):
+        rows = rows_of[number]
+        first = rng.integers(20, len(rows) - 30)
+        keep[rows[first : first + 20]] = False
+    rays = replace(rays, arc=arc, stec_phase=rays.stec_phase + phase_only)
+    rays, samples = changed(rays, samples, np.arange(len(rays)), extra)
+    kept = rays.where(keep)
+    return kept, samples_of(kept, samples.vtec[keep], samples.arc_sigma[keep], samples.receiver_sigma[keep])
+
+
+__all__ = ["CENTRE", "PLACES", "START", "broken_down", "changed", "flat", "quiet", "simulate", "wall"]

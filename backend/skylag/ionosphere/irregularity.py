@@ -38,6 +38,7 @@ class IrregularityChoices:
                     from memory)
     restless_tecu_min  windows beside ragged ones count from here on (common class "weak", from memory); on a quiet
                     mid-latitude day 99 % of windows above 30 degrees are below 0.05
+    steady_share    of restless_tecu_min that must be left without the two wildest rates of a window
     least_rates     rates a window needs
     join_km, join_s ragged windows nearer than this belong together
     fewest, fewest_ragged   windows a patch needs, and ragged ones among them
@@ -48,6 +49,7 @@ class IrregularityChoices:
     elevation_deg: float = 30.0
     ragged_tecu_min: float = 0.5
     restless_tecu_min: float = 0.25
+    steady_share: float = 0.5
     least_rates: int = 6
     join_km: float = 150.0
     join_s: float = 900.0
@@ -70,6 +72,21 @@ def index_of(rot: Floats) -> Floats:
     mean = np.where(known, rot, 0.0).sum(axis=0) / count
     square = np.where(known, (rot - mean) ** 2, 0.0).sum(axis=0) / count
     return np.asarray(np.where(known.any(axis=0), np.sqrt(square), np.nan))
+
+
+def steadily(rot: Floats) -> Floats:
+    """The index without the two rates farthest from the median: small where a slip or a single wild phase made it.
+
+    A step is one wild rate, a wild phase two; in ragged content all of them scatter.
+    """
+    known = np.isfinite(rot)
+    ordered = np.sort(rot, axis=0)
+    count = known.sum(axis=0)
+    at = (np.maximum(count - 1, 0) // 2)[None, ...]
+    centre = np.take_along_axis(ordered, at, axis=0) if len(rot) else np.zeros((1, *rot.shape[1:]))
+    away = np.where(known, np.abs(rot - centre), np.inf)
+    rank = np.argsort(np.argsort(away, axis=0), axis=0)
+    return index_of(np.where(known & (rank < count - 2), rot, np.nan))
 
 
 def along_arc_rate(rot: Floats, mapping: Floats) -> Floats:
@@ -145,12 +162,17 @@ def assess(
     count = np.isfinite(cut).sum(axis=1)
     least = min(choices.least_rates, max(2, size - 2))
     index = np.where(count >= least, index_of(np.swapaxes(cut, 0, 1)), np.nan)
+    ragged = index.copy()  # what patches are made of
+    with np.errstate(invalid="ignore"):
+        blocks_high, lines_high = np.nonzero(index >= choices.restless_tecu_min)
+    few = steadily(cut[blocks_high, :, lines_high].T) < choices.steady_share * choices.restless_tecu_min
+    ragged[blocks_high[few], lines_high[few]] = np.nan
     lat, lon = (_middle_of(blocked(lines.layer(v)[1:])) for v in (rays.pierce_lat, rays.pierce_lon))
     times = lines.times[:-1:size][:blocks]
     breaks, losses = _breaks(lines, rays, arcs, blocks, size, choices)
     mapping = lines.layer(rays.mapping)[1:]
     aatr = _hourly(along_arc_rate(whole_rot, mapping), lines, len(rays.receivers))
-    patches = _patches(index, lat, lon, times, lines, breaks, losses, rays, samples, choices)
+    patches = _patches(ragged, lat, lon, times, lines, breaks, losses, rays, samples, choices)
     return Patches(patches, times, lines.receiver, lines.satellite, index, lat, lon, aatr, breaks, losses)
 
 

@@ -320,8 +320,9 @@ def agreement(
 ) -> tuple[bool, str]:
     """Whether witnesses confirm each other, and the sentence that says so.
 
-    Confirmed when no single receiver is part of every witness (so that no one receiver's fault explains them) and
-    either two satellites or two pairs without a common receiver agree, at least one of them a pair.
+    Confirmed when no single receiver is part of every pair, a lone pair having another receiver's path beside it, so
+    that no one receiver's fault explains them (a chance slip along another receiver's path saves no star of pairs),
+    and either two satellites or two pairs without a common receiver agree.
     """
     couples = np.unique(np.stack([np.minimum(receiver, other), np.maximum(receiver, other)], axis=1), axis=0)
     couples = couples[couples[:, 0] >= 0]
@@ -334,6 +335,10 @@ def agreement(
         return False, f"unconfirmed: only along the paths of {_count(satellites, 'satellite')}, no two receivers agree"
     if len(everywhere) > 0:
         return False, f"unconfirmed: every witness includes {receivers[int(everywhere[0])].name}"
+    hub, spokes = np.unique(couples, return_counts=True)
+    centre = hub[spokes == len(couples)]
+    if len(couples) > 1 and len(centre) > 0:
+        return False, f"unconfirmed: every receiver pair includes {receivers[int(centre[0])].name}"
     apart = any(not set(a) & set(b) for a, b in itertools.combinations(couples.tolist(), 2))
     if satellites < 2 and not apart:
         return False, f"unconfirmed: {_count(len(couples), 'receiver pair')} with a common receiver on one satellite"
