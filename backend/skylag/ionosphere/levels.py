@@ -15,7 +15,7 @@ from skylag.tables import Bools, Floats, Ints
 _BURST = 5.0  # a code so many sigmas off is at fault (common practice: 3 to 5)
 _BAD_SHARE = 0.3  # a block with so many of its codes at fault is left out whole
 _USUAL_RATIO = 0.3  # variance of a block's mean over that of a point, before it is measured (0.55 squared)
-_USUAL_WEIGHT = 10.0  # as if from so many blocks
+_USUAL_WEIGHT = 4.0  # as if from so many blocks
 
 
 @dataclass(frozen=True)
@@ -189,7 +189,8 @@ def _sigmas(
     length = np.maximum(count * interval_s / block_s, 1e-3)
     of_mean = np.minimum(of_whole[of_block] / np.minimum(length, 1.0), np.maximum(variance, of_whole)[of_block]) / usual
     common = _common(of_block, np.sqrt(usual) * (block_mean - mean[of_block]), full, of_whole, freedom)
-    of_mean = of_mean * (1.0 + 2.0 * common * (freedom / (freedom + 1.0)))[of_block]
+    # Beyond its neighbour a block's memory is taken to fade as it began (first-order autoregression).
+    of_mean = of_mean * (1.0 + 2.0 * common / (1.0 - common) * (freedom / (freedom + 1.0)))[of_block]
     total = np.bincount(of_block, mass, minlength=arcs)
     share = np.where(use, mass / np.where(total > 0, total, 1.0)[of_block], 0.0)
     sigma = np.sqrt(np.bincount(of_block, share**2 * of_mean, minlength=arcs))
