@@ -370,6 +370,10 @@ class Archive:
             if connection.dialect.name == "sqlite":
                 told = connection.exec_driver_sql("PRAGMA integrity_check").scalars().all()
                 found += [f"database: {line}" for line in told if line != "ok"]
+            for table in (schema.document, schema.chunk, schema.flag, schema.bias):
+                nobody = table.c.product.not_in(sa.select(schema.product.c.id))
+                lost = connection.scalar(sa.select(sa.func.count()).select_from(table).where(nobody))
+                found += [f"{lost} rows of table {table.name} are of no day"] if lost else []
             products = connection.execute(sa.select(schema.product).order_by(schema.product.c.id)).all()
             for row in products:
                 where = f"{row.region}, day {row.day}, version {row.version}"
@@ -391,6 +395,19 @@ class Archive:
                 found.append(f"{where}: {failure.message}")
         found += [f"stray file, of no day: {path}" for path in slants.strays(self.slant_folder, named)]
         return tuple(found)
+
+    @contextmanager
+    def at_one_moment(self) -> Iterator[Connection]:
+        """A connection that sees the database as it is now, however long it reads; for copying."""
+        with _explained(self.name, "read from"), self._read_engine.connect() as connection:
+            if connection.dialect.name == "postgresql":  # a transaction of SQLite is of one moment by itself
+                connection = connection.execution_options(isolation_level="REPEATABLE READ")
+            with connection.begin():
+                yield connection
+
+    def fill(self, work: Callable[[Connection], _Result]) -> _Result:
+        """Do work on the tables in one transaction; for copying."""
+        return self._write(work)
 
     # ------------------------------------------------------------------------------------------ inner works
 
