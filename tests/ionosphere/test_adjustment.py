@@ -238,6 +238,18 @@ def test_earlier_receivers_tell_only_differences(world: World) -> None:
     assert np.abs(world.errors(calibration.biases)).max() < 0.3
 
 
+def test_earlier_receivers_of_glonass_are_not_drawn_upon() -> None:
+    """A table names a receiver once per channel and does not say which: its numbers must not be taken for any."""
+    world = ray_world.make(np.random.default_rng(9), ((GLONASS,),) * 2)
+    satellites = world.product(GLONASS)
+    names = [r.name for r in world.rays.receivers]
+    nonsense = ray_world.records("receiver", names, "R", "C1P", "C2P", [30.0, -30.0], 0.01, "day before")
+    choices = AdjustmentChoices(prior_walk_ns_per_day=0.1)
+    without = solve(world.rays, satellites, choices, world.channels)
+    found = solve(world.rays, join([satellites, nonsense]), choices, world.channels)
+    assert found.biases.value_ns == pytest.approx(without.biases.value_ns, abs=1e-9)
+
+
 # ---------------------------------------------------------------------------------------------- pairs of codes
 
 

@@ -276,9 +276,9 @@ def _iterate(
     x = np.zeros(design.size)
     widened = 1.0
     for turn in range(choices.rounds):
-        own = part.noise_sigma**2 + (part.mapping * model[hour]) ** 2
-        own += (part.mapping * relative * np.maximum(vertical_content, 0.0)) ** 2
-        own *= worse_row[receiver] ** 2
+        told = part.noise_sigma**2 + (part.mapping * model[hour]) ** 2
+        told += (part.mapping * relative * np.maximum(vertical_content, 0.0)) ** 2
+        own = told * worse_row[receiver] ** 2
         weight = 1.0 / (own * loosen_row**2 * widened)
         arc_variance = pieces * (level**2 + model_arc**2) * (loosen_arc * worse_arc[receiver_of_arc]) ** 2
         normal = Normal(design, weight, arc_of_row, arc_variance, knowledge)
@@ -293,9 +293,9 @@ def _iterate(
             for h in range(hour.max() + 1)
         ])  # fmt: skip
         model_arc = float(np.sqrt(np.clip(np.median(effect**2) / 0.455 - np.median(level**2), 0.1**2, 5.0**2)))
-        ratio = np.abs(inside) / np.sqrt(own)
-        again = _scatter_by(receiver, ratio, len(worse_row))
-        worse_row, ratio = worse_row * again, ratio / again[receiver]
+        ratio = np.abs(inside) / np.sqrt(told)
+        worse_row = _scatter_by(receiver, ratio, len(worse_row))
+        ratio = ratio / worse_row[receiver]
         loosen_row = np.sqrt(np.maximum(1.0, ratio / choices.robust_limit))
         loosen_row[ratio > 8.0] *= 10.0  # far outside: as good as left out
         widened = _err_together(part, inside / np.sqrt(own))

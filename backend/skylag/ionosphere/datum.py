@@ -5,6 +5,7 @@ and a satellite's bias, so each group lacks one level.  It comes from published 
 the same satellites, or from a zero mean, and every bias says which.  Never invents a level silently.
 """
 
+import itertools
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
@@ -235,14 +236,16 @@ class _Book:
     def _lean_on_earlier(self, rows: Ints, told: Mapping[int, tuple[float, float]], walk: float) -> None:
         """Earlier biases as weak knowledge: the mean of the satellites is kept, each may have walked from there.
 
-        Of receivers only the differences are used: what all of them err by together is not known to their sigmas.
+        Of receivers only the differences are used: what all of them err by together is not known to their sigmas.  Of
+        GLONASS not even these, since a table of biases does not tell a receiver's channels apart.
         """
         count = len(told)
         mean = float(np.mean([value for value, _ in told.values()]))
         self.knowledge.append(known(np.array(list(told)), np.full(count, 1.0 / count), mean, _EXACT))
+        by_channel = self.rays.pairs[self.unknowns.pair[rows[0]]].system == "R"
         receivers = {
             int(row): found for row in rows
-            if self.unknowns.kind[row] == "receiver" and (found := self.told(int(row))) is not None
+            if not by_channel and self.unknowns.kind[row] == "receiver" and (found := self.told(int(row))) is not None
         }  # fmt: skip
         for part, only_differences in ((told, False), (receivers, True)):
             if not part:
@@ -341,18 +344,21 @@ class _Book:
 def connect_blocks(unknowns: Unknowns, sigma_ns: float) -> list[Knowledge]:
     """A receiver's bias walks from one span of the day to the next by about `sigma_ns`."""
     found = []
-    receivers = np.array([kind == "receiver" for kind in unknowns.kind])
-    key = {
-        (unknowns.name[r], int(unknowns.pair[r]), int(unknowns.channel[r]), int(unknowns.block[r])): int(r)
-        for r in np.flatnonzero(receivers)
-    }
-    for (name, pair, channel, block), row in key.items():
-        later = sorted(b for n, p, c, b in key if (n, p, c) == (name, pair, channel) and b > block)
-        if later:
-            steps = later[0] - block
-            columns = np.array([row, key[name, pair, channel, later[0]]])
-            found.append(known(columns, np.array([1.0, -1.0]), 0.0, 1.0 / (steps * sigma_ns**2)))
+    for rows in _blocks_of_receivers(unknowns):
+        for row, later in itertools.pairwise(rows):
+            steps = int(unknowns.block[later] - unknowns.block[row])
+            found.append(known(np.array([row, later]), np.array([1.0, -1.0]), 0.0, 1.0 / (steps * sigma_ns**2)))
     return found
+
+
+def _blocks_of_receivers(unknowns: Unknowns) -> list[list[int]]:
+    """The rows of each receiver, pair and channel, one per span of the day, in order of time."""
+    groups: dict[tuple[str, int, int], list[int]] = {}
+    for row in np.argsort(unknowns.block, kind="stable"):
+        if unknowns.kind[row] == "receiver":
+            key = (unknowns.name[row], int(unknowns.pair[row]), int(unknowns.channel[row]))
+            groups.setdefault(key, []).append(int(row))
+    return list(groups.values())
 
 
 def receiver_values(unknowns: Unknowns, value: Floats, seconds: Floats, drift_hours: float | None) -> Floats:
@@ -360,11 +366,7 @@ def receiver_values(unknowns: Unknowns, value: Floats, seconds: Floats, drift_ho
     found = value[unknowns.receiver_row]
     if drift_hours is None:
         return found
-    receivers = np.flatnonzero([kind == "receiver" for kind in unknowns.kind])
-    groups: dict[tuple[str, int, int], list[int]] = {}
-    for row in map(int, receivers):
-        groups.setdefault((unknowns.name[row], int(unknowns.pair[row]), int(unknowns.channel[row])), []).append(row)
-    for rows in groups.values():
+    for rows in _blocks_of_receivers(unknowns):
         own = np.isin(unknowns.receiver_row, rows)
         middles = (unknowns.block[rows] + 0.5) * drift_hours * 3600.0
         found[own] = np.interp(seconds[own], middles, value[rows])
