@@ -365,7 +365,7 @@ def test_bursts_and_a_spoiled_hour(rng: np.random.Generator) -> None:
 def test_sigma_of_levels_is_honest(memory_s: float, least: float, most: float) -> None:
     """Errors of levels over their sigmas, with code noise that fades at once, in minutes, in a quarter of an hour.
 
-    From eight satellites little is learned of the noise: where it fades at once, the sigma stays careful; where it lasts
+    Eight satellites tell little of the noise: where it fades at once, the sigma stays careful; where it lasts
     as long as a block, the sigma is too small by up to four tenths.
     """
     rng = np.random.default_rng(11)
