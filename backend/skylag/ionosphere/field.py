@@ -8,7 +8,7 @@ that looks like a measurement: where no ray is near, support is 0 and the field 
 """
 
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -53,6 +53,8 @@ class FieldChoices:
                     the sky is
     odd_sigmas, alone_km  rays of others beyond so many sigmas within this distance: the receiver is not alone, it is
                     weather; 3.5 is met by chance once in 2000 rays
+    place_sigma_km  how far from its pierce point the content of a ray may belong: 50 km of height, as in
+                    AdjustmentChoices, seen at 45 degrees
     fade_km         so far beyond what a ray carries, the field is the background alone
     widen_km        sigmas are widened where the rays within about this distance fit worse than they should
     """
@@ -70,6 +72,7 @@ class FieldChoices:
     far_worse: float = 4.0
     odd_sigmas: float = 3.5
     alone_km: float = 300.0
+    place_sigma_km: float = 50.0
     fade_km: float = 1000.0
     widen_km: float = 75.0
 
@@ -175,6 +178,7 @@ def make(hour: Hour) -> Made:
             continue
         answer, part = _everywhere(*looked, hour)
         support[number], nearest_km = _near(hour, part)
+        answer = _placed(answer, support[number], hour)
         value, sigma = _faded(answer, nearest_km, hour, number)
         slope = np.hypot(answer.east, answer.north)
         along = np.where(slope > 0, slope, 1.0)
@@ -362,6 +366,21 @@ def _near(hour: Hour, part: Epoch) -> tuple[Ints, Floats]:
     away2 = east * east + north * north
     count = np.count_nonzero(away2 <= hour.choices.support_km**2, axis=1)
     return np.asarray(count), np.sqrt(away2.min(axis=1).astype(np.float64))
+
+
+def _placed(answer: Estimates, support: Ints, hour: Hour) -> Estimates:
+    """The same, with the sigma of content widened by what misplaced lines of sight do where the map is steep.
+
+    A ray crosses a thick layer, not a shell: its content belongs some way before or behind its pierce point.  Beside a
+    wall that is an error of slope times distance, which falls with the rays that carry a place.  The slope that the
+    whole map has in common (the median) is left out: what it does to all rays together is in their leanings.
+    """
+    seen = support > 0
+    if not seen.any():
+        return answer
+    east, north = answer.east - np.median(answer.east[seen]), answer.north - np.median(answer.north[seen])
+    off_km = hour.choices.place_sigma_km / np.sqrt(np.maximum(support, 1))
+    return replace(answer, sigma=np.hypot(answer.sigma, np.hypot(east, north) * off_km))
 
 
 def _faded(answer: Estimates, nearest_km: Floats, hour: Hour, number: int) -> tuple[Floats, Floats]:
