@@ -21,7 +21,7 @@ from skylag.constants import L1_M_PER_TECU
 from skylag.errors import NotEnough
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.sightlines import Sightlines, from_plane, lay_out, middle
-from skylag.tables import Floats, Fronts, Ints, Patch, Patches, Rays, Samples
+from skylag.tables import Bools, Floats, Fronts, Ints, Patch, Patches, Rays, Samples
 
 ROTI_STEP_S = 30.0
 ROTI_WINDOW_S = 300.0
@@ -309,17 +309,18 @@ def _patch(
         drift_m_s=drift,
         drift_sigma_m_s=drift_sigma,
         drift_heading_deg=heading,
-        confirmed=len(receivers) >= 2 and _not_one_receiver(lines.receiver[line]),
+        confirmed=_not_one_receiver(lines.receiver[line], values >= choices.ragged_tecu_min),
         window_time=times[block] + np.timedelta64(round(ROTI_WINDOW_S / 2.0), "s"),
         window_lat=window_lat,
         window_lon=window_lon,
     )
 
 
-def _not_one_receiver(receiver: Ints) -> bool:
-    """Whether the ragged windows remain two or more when any one receiver is left out."""
-    counts = np.unique(receiver, return_counts=True)[1]
-    return bool(len(receiver) - counts.max() >= 2)
+def _not_one_receiver(receiver: Ints, ragged: Bools) -> bool:
+    """Whether two windows or more, a ragged one among them, remain when any one receiver is left out."""
+    windows = np.bincount(receiver)
+    own = np.bincount(receiver, weights=ragged)
+    return bool(np.all(len(receiver) - windows >= 2) and np.all(ragged.sum() - own >= 1))
 
 
 def _drift(
