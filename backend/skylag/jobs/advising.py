@@ -25,6 +25,7 @@ from skylag.impact.satellite_augmentation import Availability, ServiceChoices
 from skylag.impact.single_frequency import LeftOver
 from skylag.impact.sky import Sky
 from skylag.impact.survey import Advice, Explanation, Job
+from skylag.ionosphere.geometry import geodetic
 from skylag.tables import Fields, Flag, Samples, Site
 
 Span = tuple[np.datetime64, np.datetime64]
@@ -91,6 +92,12 @@ class DayAdvice:
             f"{self.record.region.name} has no site {name}; it has {', '.join(known) or 'none'}", what=name,
             nearest=known,
         )  # fmt: skip
+
+    def receiver_places(self) -> list[tuple[float, float]]:
+        """Latitude and longitude of the network's receivers [deg]."""
+        places = np.array([receiver.position_m for receiver in self.record.receivers], dtype=np.float64)
+        lat, lon, _ = geodetic(places)
+        return list(zip(lat.tolist(), lon.tolist(), strict=True))
 
     def survey(self, job: Job) -> Advice:
         """A survey job through the day; without satellites a usual geometry is taken, and said."""

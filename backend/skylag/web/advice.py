@@ -1,12 +1,24 @@
-"""Routes about what to beware of: flags, and the states of sites."""
+"""Routes about what to beware of: flags, the states of sites, and what a day means for work at a site.
+
+A question about work names a site of the region; sizes have sensible defaults, which the answer tells.
+"""
+
+import threading
 
 from fastapi import APIRouter, Request
 from fastapi.responses import Response
 
 from skylag.archive import Archive
-from skylag.web import asking, payloads
+from skylag.formats import calendar, sheet
+from skylag.impact.ground_augmentation import StationChoices, next_front
+from skylag.impact.satellite_augmentation import USUAL_LEVELS, Availability, ServiceChoices
+from skylag.impact.survey import Advice, Job
+from skylag.jobs.advising import DayAdvice, Desk
+from skylag.web import asking, payloads, report
 
 router = APIRouter()
+_DESK_LOCK = threading.Lock()
+_CALENDAR = "text/calendar; charset=utf-8"
 
 
 @router.get("/api/days/{region}/{day}/flags", summary="Flags of a day")
@@ -37,3 +49,139 @@ def site_states(request: Request, region: str, day: str, version: int | None = N
     """One row of states per site, with the reason of each."""
     archive: Archive = request.app.state.archive
     return payloads.reply(payloads.site_states(archive.site_states(region, asking.day(day), version)))
+
+
+# ---------------------------------------------------------------------------------------------- work at a site
+
+
+def _day(request: Request, region: str, day: str, version: int | None) -> DayAdvice:
+    """The day's advice from the application's desk, which remembers the last few days."""
+    with _DESK_LOCK:
+        if not hasattr(request.app.state, "desk"):
+            request.app.state.desk = Desk(request.app.state.archive)
+    desk: Desk = request.app.state.desk
+    return desk.day(region, asking.day(day), version)
+
+
+def _survey(
+    kept: DayAdvice, site: str, method: str, baseline_km: float, horizontal_mm: float, vertical_mm: float, hours: str
+) -> Advice:
+    place = kept.site(site)
+    references = tuple(kept.receiver_places()) if method == "network" else ()
+    job = Job(
+        place.name, ((place.lat, place.lon),), method, baseline_km, references, horizontal_mm, vertical_mm,
+        kept.local_hours(hours),
+    )  # fmt: skip
+    return kept.survey(job)
+
+
+def _approaches(kept: DayAdvice, site: str, levels: str, correction_m: float) -> Availability:
+    sites = [kept.site(site)] if site else [one for one in kept.record.region.sites if one.kind == "aerodrome"]
+    names = tuple(part.strip() for part in levels.split(",") if part.strip()) or USUAL_LEVELS
+    return kept.approaches(sites, ServiceChoices(correction_m=correction_m), names)
+
+
+def _name(kept: DayAdvice, site: str, what: str) -> str:
+    return f"{site or kept.record.region.name}-{kept.record.head.day}-{what}"
+
+
+@router.get("/api/days/{region}/{day}/survey", summary="Survey windows at a site")
+def survey_windows(
+    request: Request, region: str, day: str, site: str, method: str = "rtk", baseline_km: float = 10.0,
+    horizontal_mm: float = 30.0, vertical_mm: float = 50.0, hours: str = "", version: int | None = None,
+) -> Response:  # fmt: skip
+    """Errors, verdicts and windows of a job; method static, rtk, network or dgnss; hours local, like 07:00-16:30."""
+    kept = _day(request, region, day, version)
+    return payloads.reply(
+        payloads.survey(_survey(kept, site, method, baseline_km, horizontal_mm, vertical_mm, hours))
+    )
+
+
+@router.get("/api/days/{region}/{day}/survey.ics", summary="Survey windows as a calendar")
+def survey_calendar(
+    request: Request, region: str, day: str, site: str, method: str = "rtk", baseline_km: float = 10.0,
+    horizontal_mm: float = 30.0, vertical_mm: float = 50.0, hours: str = "", version: int | None = None,
+) -> Response:  # fmt: skip
+    """The same windows as calendar entries (RFC 5545)."""
+    kept = _day(request, region, day, version)
+    found = _survey(kept, site, method, baseline_km, horizontal_mm, vertical_mm, hours)
+    text = calendar.to_ics(report.survey_entries(found), f"Survey at {site}", kept.record.head.saved_at)
+    return payloads.file(text.encode("utf-8"), _name(kept, site, "survey.ics"), _CALENDAR)
+
+
+@router.get("/api/days/{region}/{day}/survey/why", summary="Was it the ionosphere")
+def survey_why(
+    request: Request, region: str, day: str, site: str, time: str, method: str = "rtk", baseline_km: float = 10.0,
+    version: int | None = None,
+) -> Response:  # fmt: skip
+    """For a UTC instant at which fixing failed: verdict and evidence."""
+    kept = _day(request, region, day, version)
+    place = kept.site(site)
+    references = tuple(kept.receiver_places()) if method == "network" else ()
+    job = Job(place.name, ((place.lat, place.lon),), method, baseline_km, references)
+    return payloads.reply(payloads.explanation(kept.explain(job, asking.instant(time, "time"))))
+
+
+@router.get("/api/days/{region}/{day}/approaches", summary="Availability of approaches")
+def approaches(
+    request: Request, region: str, day: str, site: str = "", levels: str = "", correction_m: float = 3.0,
+    version: int | None = None,
+) -> Response:  # fmt: skip
+    """Protection levels, availability, outages with causes, of a site or of all aerodromes; some seconds at first."""
+    kept = _day(request, region, day, version)
+    return payloads.reply(payloads.approaches(_approaches(kept, site, levels, correction_m)))
+
+
+@router.get("/api/days/{region}/{day}/approaches.ics", summary="Outages of approaches as a calendar")
+def approaches_calendar(
+    request: Request, region: str, day: str, site: str = "", levels: str = "", correction_m: float = 3.0,
+    version: int | None = None,
+) -> Response:  # fmt: skip
+    """The same outages as calendar entries (RFC 5545)."""
+    kept = _day(request, region, day, version)
+    found = _approaches(kept, site, levels, correction_m)
+    text = calendar.to_ics(report.approach_entries(found), "Outages of approaches", kept.record.head.saved_at)
+    return payloads.file(text.encode("utf-8"), _name(kept, site, "approaches.ics"), _CALENDAR)
+
+
+@router.get("/api/days/{region}/{day}/ground", summary="Ground-based augmentation at a site")
+def ground(
+    request: Request, region: str, day: str, site: str, sigma_mm_per_km: float = 4.0, time: str = "",
+    version: int | None = None,
+) -> Response:  # fmt: skip
+    """The slope against the station's assumptions; with a UTC instant also the front that comes next."""
+    kept = _day(request, region, day, version)
+    place = kept.site(site)
+    found = kept.station(place, StationChoices(sigma_mm_per_km=sigma_mm_per_km))
+    coming = next_front(place, kept.flags, asking.instant(time, "time")) if time else None
+    return payloads.reply(payloads.station(found, coming))
+
+
+@router.get("/api/days/{region}/{day}/broadcast-model", summary="What the broadcast model leaves at a site")
+def broadcast_model(request: Request, region: str, day: str, site: str, version: int | None = None) -> Response:
+    """Range and position errors of single-frequency users, 95 %, per hour."""
+    kept = _day(request, region, day, version)
+    return payloads.reply(payloads.broadcast_model(kept.broadcast_model(kept.site(site))))
+
+
+@router.get("/api/days/{region}/{day}/sheet", summary="Sheet of a site and day")
+def site_sheet(request: Request, region: str, day: str, site: str, version: int | None = None) -> Response:
+    """One page to print: verdict, chart, evidence, assumptions, cautions."""
+    kept = _day(request, region, day, version)
+    title, blocks = report.of_site(kept, kept.site(site))
+    return payloads.page(sheet.to_html(title, blocks, "/api/sheet.css"))
+
+
+@router.get("/api/days/{region}/{day}/sheet.pdf", summary="Sheet of a site and day as PDF")
+def site_sheet_pdf(request: Request, region: str, day: str, site: str, version: int | None = None) -> Response:
+    """The same as PDF."""
+    kept = _day(request, region, day, version)
+    title, blocks = report.of_site(kept, kept.site(site))
+    content = sheet.to_pdf(title, blocks, kept.record.head.saved_at)
+    return payloads.file(content, _name(kept, site, "sheet.pdf"), "application/pdf")
+
+
+@router.get("/api/sheet.css", summary="Style of sheets", include_in_schema=False)
+def sheet_style() -> Response:
+    """The style of sheets, on screen and on paper."""
+    return Response(sheet.STYLE, media_type="text/css")

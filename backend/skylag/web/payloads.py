@@ -21,6 +21,10 @@ from fastapi.responses import Response
 from skylag import quantities, timescales
 from skylag.archive import DayHead, DayRecord, SiteStates
 from skylag.constants import L1_M_PER_TECU
+from skylag.impact.ground_augmentation import NextFront, StationDay
+from skylag.impact.satellite_augmentation import Availability
+from skylag.impact.single_frequency import LeftOver
+from skylag.impact.survey import Advice, Explanation
 from skylag.ionosphere.geometry import geodetic
 from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Rays, Region
 from skylag.web import nearby, sentences
@@ -492,3 +496,118 @@ def network(days: Sequence[DayNetwork]) -> dict[str, Any]:
 def file(data: bytes, name: str, media_type: str) -> Response:
     """Bytes as a file to keep."""
     return Response(data, media_type=media_type, headers=_download(name))
+
+
+# ---------------------------------------------------------------------------------------------- advice
+
+
+def _span(start: np.datetime64, end: np.datetime64) -> dict[str, Any]:
+    return {"start_utc": utc(start), "end_utc": utc(end)}
+
+
+def survey(advice: Advice) -> dict[str, Any]:
+    """A survey job through a day: errors and verdicts per epoch, hourly index, windows, assumptions."""
+    job = advice.job
+    return {
+        "job": {
+            "name": job.name, "places": [list(place) for place in job.places], "method": job.method,
+            "baseline_km": job.baseline_km, "horizontal_mm": job.horizontal_mm, "vertical_mm": job.vertical_mm,
+            "mask_deg": job.mask_deg, "least_satellites": job.least_satellites, "most_dilution": job.most_dilution,
+            "fixing_chance": job.fixing_chance,
+        },
+        "times_utc": utc_texts(advice.times),
+        **{
+            name: _numbers(getattr(advice, name))
+            for name in ("slope", "slope_sigma", "differential_68", "differential_95", "horizontal_68",
+                         "horizontal_95", "vertical_68", "vertical_95", "longest_km", "fixing", "dilution")
+        },
+        "satellites": [int(n) if n >= 0 else None for n in advice.count],
+        "verdict": [str(one) for one in advice.verdict],
+        "reasons": list(advice.reasons),
+        "hours_utc": utc_texts(advice.hours),
+        "index_ppm": _numbers(advice.index),
+        "index_words": list(advice.index_words),
+        "windows": [{**_span(w.start, w.end), "verdict": w.verdict, "why": w.why} for w in advice.windows],
+        "assumptions": list(advice.assumptions),
+        "caution": advice.caution,
+    }  # fmt: skip
+
+
+def explanation(found: Explanation) -> dict[str, Any]:
+    """Was it the ionosphere: verdict and evidence."""
+    return {"time_utc": utc(found.time), "verdict": found.verdict, "evidence": list(found.evidence),
+            "caution": found.caution}  # fmt: skip
+
+
+def approaches(found: Availability) -> dict[str, Any]:
+    """Protection levels, availability and outages of sites; minutes in which a level is available are 1."""
+    return {
+        "times_utc": utc_texts(found.times),
+        "levels": [
+            {"name": level.name, "horizontal_m": level.horizontal_m, "vertical_m": _number(level.vertical_m),
+             "source": level.source}
+            for level in found.levels
+        ],
+        "sites": [
+            {
+                "name": site.name,
+                "share": {level.name: _number(float(found.share[n, k])) for n, level in enumerate(found.levels)},
+                "available": {
+                    level.name: found.available[n, k].astype(int).tolist() for n, level in enumerate(found.levels)
+                },
+                "vertical_m": _numbers(found.vertical_m[k]),
+                "horizontal_m": _numbers(found.horizontal_m[k]),
+                "horizontal_route_m": _numbers(found.route_m[k]),
+                "in_view": found.in_view[k].tolist(),
+                "with_grid": found.used[k].tolist(),
+            }
+            for k, site in enumerate(found.sites)
+        ],
+        "outages": [
+            {**_span(one.start, one.end), "site": one.site, "level": one.level, "cause": one.cause, "why": one.why,
+             "highest_vertical_m": _number(one.highest[0]), "highest_horizontal_m": _number(one.highest[1])}
+            for one in found.outages
+        ],
+        "assumptions": list(found.assumptions),
+        "caution": found.caution,
+    }  # fmt: skip
+
+
+def station(found: StationDay, coming: NextFront | None) -> dict[str, Any]:
+    """An aerodrome's ground-based augmentation through a day, and the front that comes next, if any."""
+    return {
+        "site": found.site.name,
+        "times_utc": utc_texts(found.times),
+        "slope": _numbers(found.slope),
+        "slope_sigma": _numbers(found.slope_sigma),
+        "error_95_m": _numbers(found.error_95_m),
+        "minutes": dict(found.minutes),
+        "exceeded": [{**_span(one.start, one.end), "what": one.what, "why": one.why} for one in found.exceeded],
+        "next_front": None if coming is None else {
+            "expected_utc": utc(coming.expected), "sigma_s": round(coming.sigma_s), "words": coming.words,
+            "distance_km": _number(coming.distance_km), "slope_mm_per_km": _number(coming.slope_mm_per_km),
+        },
+        "assumptions": list(found.assumptions),
+        "caution": found.caution,
+    }  # fmt: skip
+
+
+def broadcast_model(found: LeftOver) -> dict[str, Any]:
+    """What the broadcast model leaves at a site, per epoch and per hour."""
+    return {
+        "site": found.site.name,
+        "times_utc": utc_texts(found.times),
+        "range_m": _numbers(found.range_m), "horizontal_m": _numbers(found.horizontal_m),
+        "vertical_m": _numbers(found.vertical_m), "measured": found.measured.tolist(),
+        "in_view": found.in_view.tolist(), "hours_utc": utc_texts(found.hours),
+        "range_95_m": _numbers(found.range_95_m), "horizontal_95_m": _numbers(found.horizontal_95_m),
+        "vertical_95_m": _numbers(found.vertical_95_m), "day_range_95_m": _number(found.day_range_95_m),
+        "day_horizontal_95_m": _number(found.day_horizontal_95_m),
+        "day_vertical_95_m": _number(found.day_vertical_95_m),
+        "assumptions": list(found.assumptions), "caution": found.caution,
+    }  # fmt: skip
+
+
+def page(text: str) -> Response:
+    """A page of its own."""
+    return Response(text, media_type="text/html; charset=utf-8")

@@ -6,6 +6,7 @@ Puts into words and blocks what `jobs.advising` found; `formats.sheet` writes th
 import itertools
 from collections.abc import Callable, Sequence
 from datetime import UTC, datetime
+from typing import TypeVar
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 import numpy as np
@@ -15,8 +16,8 @@ from skylag.errors import Missing, NotEnough
 from skylag.formats.calendar import Entry
 from skylag.formats.sheet import Block, Bullets, DayChart, Heading, Sentence, Table
 from skylag.impact.ground_augmentation import StationDay
-from skylag.impact.satellite_augmentation import Availability, ServiceChoices
-from skylag.impact.survey import AVOID, NOT_SEEN, WORK, Advice, Job, touches
+from skylag.impact.satellite_augmentation import Availability, Outage, ServiceChoices
+from skylag.impact.survey import AVOID, NOT_SEEN, WORK, Advice, Job, Window, touches
 from skylag.jobs.advising import DayAdvice
 from skylag.tables import Site
 from skylag.web import sentences
@@ -24,7 +25,11 @@ from skylag.web import sentences
 _MARK = {WORK: "good", AVOID: "bad", NOT_SEEN: "unseen"}
 _STATE_MARK = ("unseen", "good", "doubt", "bad")
 _WORDS = {WORK: "Work", AVOID: "Avoid", NOT_SEEN: "Not seen"}
-_MOST_ROWS = 24
+_MOST_ROWS = 10
+_HALF_MINUTE = np.timedelta64(30 * 10**9, "ns")
+
+
+_Span = TypeVar("_Span", Outage, Window)
 
 
 class Clock:
@@ -38,16 +43,23 @@ class Clock:
             self.zone = None
 
     def utc(self, time: np.datetime64) -> str:
-        """Hour and minute."""
-        return str(np.datetime_as_string(timescales.gps_to_utc(time + np.timedelta64(500, "ms")), unit="m"))[11:]
+        """Hour and minute, to the nearest."""
+        return str(np.datetime_as_string(timescales.gps_to_utc(time + _HALF_MINUTE), unit="m"))[11:]
 
-    def both(self, time: np.datetime64) -> str:
-        """Hour and minute in UTC, with the local ones where the region has a zone of its own."""
-        if self.zone is None:
-            return self.utc(time)
-        instant = timescales.gps_to_utc(time + np.timedelta64(500, "ms")).astype("datetime64[s]").astype(np.int64)
-        local = datetime.fromtimestamp(int(instant), UTC).astimezone(self.zone)
-        return f"{self.utc(time)} (local {local:%H:%M})"
+    def local(self, time: np.datetime64) -> str:
+        """The same in the region's own time; as UTC where it has none."""
+        instant = timescales.gps_to_utc(time + _HALF_MINUTE).astype("datetime64[s]").astype(np.int64)
+        return f"{datetime.fromtimestamp(int(instant), UTC).astimezone(self.zone or UTC):%H:%M}"
+
+    def span(self, start: np.datetime64, end: np.datetime64) -> tuple[str, ...]:
+        """Cells of a table: the span in UTC, and in local time where the region has one."""
+        cells = (f"{self.utc(start)} - {self.utc(end)}", f"{self.local(start)} - {self.local(end)}")
+        return cells[:1] if self.zone is None else cells
+
+    def table(self, heading: tuple[str, ...], rows: Sequence[tuple[str, ...]], widths: tuple[float, ...]) -> Table:
+        """A table whose rows begin with the cells of `span`."""
+        names = ("UTC",) if self.zone is None else ("UTC", "Local")
+        return Table((*names, *heading), tuple(rows), (*(1.5,) * len(names), *widths))
 
 
 def of_site(
@@ -199,25 +211,25 @@ def _state_spans(
     )
 
 
-def _cut(rows: Sequence[tuple[str, ...]], width: int) -> tuple[tuple[str, ...], ...]:
-    if len(rows) <= _MOST_ROWS:
-        return tuple(rows)
-    rest = (f"and {len(rows) - _MOST_ROWS} more", *([""] * (width - 1)))
-    return (*rows[:_MOST_ROWS], rest)
+def _longest(spans: Sequence[_Span]) -> tuple[list[_Span], str]:
+    """The longest few, in order of time, and what was left out in words."""
+    most = sorted(spans, key=lambda one: one.start - one.end)[:_MOST_ROWS]
+    left = len(spans) - len(most)
+    return sorted(most, key=lambda one: one.start), f"{left} shorter ones are not listed." if left else ""
 
 
 def _approach_rows(found: Availability, clock: Clock) -> list[Block]:
-    rows = [
-        (clock.both(one.start), clock.both(one.end), one.level, one.why) for one in found.outages
-    ]
-    if not rows:
+    shown, rest = _longest(found.outages)
+    if not shown:
         return []
-    heading = ("From (UTC)", "To (UTC)", "Level", "Why")
-    return [Heading("Outages of approaches"), Table(heading, _cut(rows, 4), (1.6, 1.6, 0.8, 4.5))]
+    rows = [(*clock.span(one.start, one.end), one.level, one.why) for one in shown]
+    blocks: list[Block] = [Heading("Outages of approaches"), clock.table(("Level", "Why"), rows, (0.9, 5.5))]
+    return [*blocks, Sentence(rest, "small")] if rest else blocks
 
 
 def _survey_rows(advice: Advice, clock: Clock) -> list[Block]:
-    rows = [(clock.both(w.start), clock.both(w.end), _WORDS[w.verdict], w.why) for w in advice.windows]
+    shown, rest = _longest(advice.windows)
+    rows = [(*clock.span(one.start, one.end), _WORDS[one.verdict], one.why) for one in shown]
     index = [
         (clock.utc(hour), f"{ppm:.1f}" if np.isfinite(ppm) else "-", word)
         for hour, ppm, word in zip(advice.hours, advice.index, advice.index_words, strict=True)
@@ -225,8 +237,10 @@ def _survey_rows(advice: Advice, clock: Clock) -> list[Block]:
     highest = max(index, key=lambda row: float(row[1]) if row[1] != "-" else -1.0, default=None)
     blocks: list[Block] = [
         Heading("Windows for survey"),
-        Table(("From (UTC)", "To (UTC)", "", "Why"), _cut(rows, 4), (1.6, 1.6, 0.8, 4.5)),
+        clock.table(("", "Why"), rows, (0.9, 5.5)),
     ]
+    if rest:
+        blocks.append(Sentence(rest, "small"))
     if highest is not None:
         blocks.append(Sentence(
             "Differential delay that 95 % of the surroundings stay under, by hour (ppm of the baseline): "
