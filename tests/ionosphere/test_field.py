@@ -213,7 +213,7 @@ def test_a_wall_that_several_receivers_see_stays_whole() -> None:
 
 def test_sigmas_grow_at_a_wall() -> None:
     """Between receivers 100 km apart nobody knows where in between a wall stands: errors have long tails there, and of
-    cells within 60 km of one some three quarters lie within 95 % intervals, not more."""
+    the cells within 60 km of a wall seven in eight lie within 95 % intervals."""
     far_error, near_error, near_sigma, far_sigma = [], [], [], []
     for seed in range(3):
         _, samples = sky(storm, seed=seed)
@@ -232,7 +232,7 @@ def test_sigmas_grow_at_a_wall() -> None:
         far_sigma.append(got.vtec_sigma[far])
     assert np.sqrt(np.mean(np.concatenate(far_error) ** 2)) < 1.5
     assert np.median(np.concatenate(near_sigma)) > 1.25 * np.median(np.concatenate(far_sigma))
-    assert np.mean(np.abs(np.concatenate(near_error)) < 1.96) > 0.68
+    assert np.mean(np.abs(np.concatenate(near_error)) < 1.96) > 0.85
 
 
 def test_a_receiver_at_fault_alone_does_not_bend_the_map() -> None:

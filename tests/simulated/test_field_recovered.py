@@ -15,9 +15,10 @@ import pytest
 from scipy.spatial import Delaunay
 from tests.simulated.day_results import CALM, RECOVERY, STORM, day, truth_of
 
-from invented import weather
-from skylag.ionosphere import field, geometry, left_out
-from skylag.tables import Fields
+from invented import network, weather
+from skylag import chain
+from skylag.ionosphere import adjustment, field, geometry, left_out
+from skylag.tables import Fields, concatenate
 
 WITHIN_95 = 1.959964
 
@@ -62,6 +63,25 @@ def rms(values: np.ndarray) -> float:
     return float(np.sqrt(np.mean(values**2)))
 
 
+def test_three_hours_of_eight_receivers() -> None:
+    """A short stretch through the same way: biases found from three hours alone are poor, and sigmas have to say so."""
+    markers = ["VANP", "KELM", "FENN", "BRIM", "SKAR", "TWSK", "EDRO", "QUDL"]
+    world = network.simulate(CALM, markers, (2.0, 5.0), 120.0)
+    choices = chain.Choices()
+    rays = concatenate([chain.receiver_day(s, [world.ephemerides], choices, 400e3).rays for s in world.signals])
+    samples = adjustment.apply(adjustment.solve(rays, None, choices.adjustment, {}), rays)
+    lats, lons = np.arange(-42.5, -36.9, 1.0), np.arange(143.0, 149.1, 1.0)
+    maps = field.fit(samples, lats, lons, world.times[::15])
+    lon, lat = np.meshgrid(lons, lats)
+    error = maps.vtec - np.stack([world.vertical_content(lat, lon, time) for time in maps.times])
+    seen = maps.support > 0
+    assert seen.mean() > 0.9
+    assert rms(error[seen]) < 3.0
+    assert np.mean(np.abs(error[seen]) <= WITHIN_95 * maps.vtec_sigma[seen]) >= 0.93
+    level = np.array([one[here].mean() for one, here in zip(error, seen, strict=True)])[:, None, None]
+    assert rms((error - level)[seen]) < 0.4
+
+
 @pytest.mark.slow
 @pytest.mark.parametrize("name", [CALM, RECOVERY])
 def test_content_inside_the_network_on_calm_days(name: str) -> None:
@@ -81,7 +101,7 @@ def test_content_inside_the_network_on_the_storm_day() -> None:
     near = inside & (got["wall"] <= 150.0)
     assert near.sum() > 100
     assert np.median(got["sigma"][near]) > 2.0 * np.median(got["sigma"][inside & (got["wall"] > 150.0)])
-    assert np.mean(np.abs(got["error"][near]) <= WITHIN_95 * got["sigma"][near]) >= 0.88
+    assert np.mean(np.abs(got["error"][near]) <= WITHIN_95 * got["sigma"][near]) >= 0.92
 
 
 @pytest.mark.slow
@@ -96,14 +116,20 @@ def test_content_outside_the_network_where_it_is_seen(name: str) -> None:
 
 @pytest.mark.slow
 def test_the_part_of_chance_has_honest_sigmas_on_the_calm_day() -> None:
-    """Differences from the day's mean error over sigmas without the common part: a unit normal, nearly."""
+    """Errors over sigmas without the common part lie between two bounds.
+
+    From the day's mean error: it still holds how the common part changes from day to night, so it may be somewhat
+    above one.  From each map's mean error: it lacks the part of the biases that is common to a map, so it is below one.
+    """
     got = compared(CALM, with_leanings=False)
-    for region in (got["hull"], ~got["hull"]):
-        rows = region & (got["support"] > 0)
-        off = got["error"][rows] - got["error"][got["hull"]].mean()
-        z = off / got["sigma"][rows]
-        assert 0.8 < np.std(z) < 1.3, np.std(z)
-        assert 0.85 <= np.mean(np.abs(z) <= WITHIN_95) <= 0.99, np.mean(np.abs(z) <= WITHIN_95)
+    inside = got["hull"] & (got["support"] > 0)
+    of_map = np.array([error[here].mean() for error, here in zip(got["error"], inside, strict=True)])[:, None, None]
+    for rows in (inside, ~got["hull"] & (got["support"] > 0)):
+        from_day = ((got["error"] - got["error"][inside].mean()) / got["sigma"])[rows]
+        from_map = ((got["error"] - of_map) / got["sigma"])[rows]
+        assert np.std(from_map) < 1.0 < np.std(from_day) < 1.6
+        assert np.mean(np.abs(from_day) <= WITHIN_95) >= 0.80
+        assert np.mean(np.abs(from_map) <= WITHIN_95) >= 0.93
 
 
 @pytest.mark.slow
