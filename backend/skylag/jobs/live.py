@@ -1,0 +1,305 @@
+"""Today, as its files come in: a folder is watched, each arrival brings the day's maps up to date, silence is noticed.
+
+`step` is a pure fold over a closed list of events, so that a recorded day can be replayed at any speed; `Watch` owns
+folder and clock and only makes events and carries out what is asked.  A receiver-day is computed again only when its
+files changed; the network's maps are then made from all rays.  A day that goes on is kept as provisional.
+"""
+
+import threading
+from collections.abc import Callable, Mapping, Sequence
+from concurrent.futures import Executor
+from dataclasses import dataclass, field, replace
+from datetime import date
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from skylag.archive import Archive
+from skylag.chain import Choices
+from skylag.errors import SkylagError
+from skylag.formats.glance import glance
+from skylag.jobs import alerts, board, kept, work
+from skylag.tables import UNSEEN, Fields, Products, Region
+from skylag.timescales import utc_to_gps
+
+_DAY = np.timedelta64(1, "D")
+
+
+@dataclass(frozen=True)
+class Patience:
+    """How long is waited: s without new files before computing (and at most so long after the first), without data
+    before a receiver is silent, after the end of a day before it is final; days back that still count as live."""
+
+    calm_s: float = 1.0
+    at_most_s: float = 5.0
+    silent_s: float = 2700.0
+    settle_s: float = 7200.0
+    days_back: int = 2
+
+
+# ---------------------------------------------------------------------------------------------- events, asked for
+
+
+@dataclass(frozen=True)
+class FileCame:
+    """A file is whole or has changed: its path, the GPS-time day it begins on (None for orbits and biases), now."""
+
+    path: str
+    day: np.datetime64 | None
+    now: np.datetime64
+
+
+@dataclass(frozen=True)
+class DayMade:
+    """A day was computed: the last epoch (GPS time) of each receiver."""
+
+    day: np.datetime64
+    last: Mapping[str, np.datetime64]
+
+
+@dataclass(frozen=True)
+class Tick:
+    """Time goes on."""
+
+    now: np.datetime64
+
+
+@dataclass(frozen=True)
+class Make:
+    """Asked for: compute a day and keep it, for good where `final`."""
+
+    day: np.datetime64
+    final: bool
+
+
+@dataclass(frozen=True)
+class Fell:
+    """Asked for: tell that a receiver fell silent, since a GPS time."""
+
+    receiver: str
+    since: np.datetime64
+
+
+Event = FileCame | DayMade | Tick
+Asked = Make | Fell
+
+
+@dataclass(frozen=True)
+class State:
+    """What is known: days that go on, when their files began and last came (not computed yet), last data of receivers,
+    who is silent."""
+
+    open_days: frozenset[np.datetime64] = frozenset()
+    waiting: Mapping[np.datetime64, tuple[np.datetime64, np.datetime64]] = field(default_factory=dict)
+    last: Mapping[str, np.datetime64] = field(default_factory=dict)
+    silent: frozenset[str] = frozenset()
+    told: Mapping[np.datetime64, np.datetime64] = field(default_factory=dict)  # day -> when silence was last drawn
+
+
+def step(state: State, event: Event, patience: Patience) -> tuple[State, tuple[Asked, ...]]:
+    """What is known after an event, and what is asked for.  Pure; times are GPS time."""
+    if isinstance(event, FileCame):
+        today = event.now.astype("datetime64[D]")
+        days = state.open_days if event.day is None else frozenset({event.day})
+        days = frozenset(day for day in days if day >= today - patience.days_back * _DAY)
+        waiting = {**state.waiting}
+        for day in days:
+            first, _ = waiting.get(day, (event.now, event.now))
+            waiting[day] = (first, event.now)
+        return replace(state, open_days=state.open_days | days, waiting=waiting), ()
+    if isinstance(event, DayMade):
+        last = {**state.last}
+        for name, time in event.last.items():
+            last[name] = max(time, last.get(name, time))
+        back = {name for name in state.silent if last[name] > state.last[name]}
+        return replace(state, last=last, silent=state.silent - back), ()
+    asked: list[Asked] = []
+    waiting, told = {**state.waiting}, {**state.told}
+    for day, (first, latest) in sorted(state.waiting.items()):
+        if event.now - latest >= _s(patience.calm_s) or event.now - first >= _s(patience.at_most_s):
+            asked.append(Make(day, False))
+            del waiting[day]
+    fallen = {
+        name: time for name, time in state.last.items()
+        if name not in state.silent and event.now - time >= _s(patience.silent_s)
+    }  # fmt: skip
+    asked += [Fell(name, time) for name, time in sorted(fallen.items())]
+    silent = state.silent | fallen.keys()
+    over = {day for day in state.open_days if event.now >= day + _DAY + _s(patience.settle_s) and day not in waiting}
+    asked = [one for one in asked if not (isinstance(one, Make) and one.day in over)]
+    asked += [Make(day, True) for day in sorted(over)]
+    # While all are silent nothing comes that would bring the maps up to date: they are drawn unseen until now.
+    today = event.now.astype("datetime64[D]")
+    all_silent = bool(state.last) and silent >= state.last.keys()
+    still_open = today in state.open_days - over - waiting.keys()
+    if all_silent and still_open and event.now - told.get(today, event.now - _DAY) >= _s(600.0):
+        told[today] = event.now
+        if Make(today, False) not in asked:
+            asked.append(Make(today, False))
+    told = {day: time for day, time in told.items() if day not in over}
+    known = {name: t for name, t in state.last.items() if event.now - t < patience.days_back * _DAY}
+    new = State(state.open_days - over, waiting, known, frozenset(silent & known.keys()), told)
+    return new, tuple(asked)
+
+
+def _s(seconds: float) -> np.timedelta64:
+    return np.timedelta64(round(seconds * 1e9), "ns")
+
+
+def unseen_until(products: Products, now: np.datetime64, silent_s: float) -> Products:
+    """The day with maps that say unseen from the last one on until now, where none came for longer than a span.
+
+    Pure; never past the end of the day.
+    """
+    times = products.fields.times
+    until = min(now, (products.day + _DAY).astype("datetime64[ns]") - np.timedelta64(1, "ns"))
+    if not len(times) or until - times[-1] < _s(silent_s):
+        return products
+    every = np.min(np.diff(times)) if len(times) > 1 else np.timedelta64(300, "s")
+    more = np.arange(times[-1] + every, until + np.timedelta64(1, "ns"), every).astype("datetime64[ns]")
+    if not len(more):
+        return products
+    layers: dict[str, Any] = {}
+    for name in Fields.LAYERS:
+        layer = getattr(products.fields, name)
+        fill = np.nan if layer.dtype.kind == "f" else UNSEEN if name == "state" else 0
+        layers[name] = np.concatenate([layer, np.full((len(more), *layer.shape[1:]), fill, dtype=layer.dtype)])
+    since = f"no data since {np.datetime_as_string(times[-1], unit='m')} GPS time"
+    return replace(
+        products,
+        fields=replace(products.fields, times=np.concatenate([times, more]), **layers),
+        site_states=np.concatenate(
+            [products.site_states, np.full((len(more), products.site_states.shape[1]), UNSEEN, dtype=np.uint8)]
+        ),
+        site_reasons=tuple((*one, *(since for _ in more)) for one in products.site_reasons),
+    )
+
+
+# ---------------------------------------------------------------------------------------------- the folder
+
+
+class Folder:
+    """Files of a folder that are whole: of the same size and time at two looks in a row."""
+
+    def __init__(self, path: Path) -> None:
+        self._path = path
+        self._growing: dict[Path, tuple[int, int]] = {}
+        self._known: dict[Path, tuple[int, int]] = {}
+
+    def look(self) -> list[Path]:
+        """Files that are new or changed, and whole since the last look."""
+        came, growing = [], {}
+        for path in sorted(self._path.rglob("*")):
+            if path.name.startswith(".") or path.suffix in (".toml", ".md", ".part", ".tmp"):
+                continue
+            try:
+                found = path.stat()
+            except OSError:
+                continue  # gone again
+            if not path.is_file() or self._known.get(path) == (mark := (found.st_size, found.st_mtime_ns)):
+                continue
+            if self._growing.get(path) == mark and found.st_size:
+                self._known[path] = mark
+                came.append(path)
+            else:
+                growing[path] = mark
+        self._growing = growing
+        return came
+
+
+class Watch:
+    """A watched folder, and an archive that follows it."""
+
+    def __init__(
+        self,
+        archive: Archive,
+        path: Path,
+        executor: Executor,
+        clock: Callable[[], np.datetime64],
+        *,
+        region: Region | None = None,
+        choices: Choices | None = None,
+        patience: Patience | None = None,
+        rules: Sequence[alerts.Rule] = (),
+        simulated: bool = False,
+        log: board.Log | None = None,
+    ) -> None:
+        self._archive, self._clock, self._region, self._rules = archive, clock, region, rules
+        self._executor = kept.KeepingExecutor(executor, board.kept_folder(archive))
+        self._choices, self._patience = choices or Choices(), patience or Patience()
+        self._simulated = simulated
+        self._log: board.Log = log or (lambda event, **facts: None)
+        self._folder = Folder(path)
+        self._days: dict[str, np.datetime64 | None] = {}  # file -> day
+        self.state = State()
+
+    def run(self, stop: threading.Event, every_s: float = 0.5) -> None:
+        """Follow the folder until told to stop."""
+        while not stop.is_set():
+            self.turn()
+            stop.wait(every_s)
+
+    def turn(self) -> int:
+        """One look at the folder and at the clock; gives how many days were made."""
+        for path in self._folder.look():
+            self._came(path)
+        made = 0
+        for one in self._step(Tick(self._now())):
+            if isinstance(one, Make):
+                made += self._make(one)
+            else:
+                self._log("receiver silent", receiver=one.receiver, since=str(one.since))
+                told = alerts.silences(self._rules, one.receiver, one.since, self._now())
+                alerts.keep(self._archive, told, self._clock())
+        if self._rules:
+            alerts.deliver(self._archive, self._clock, self._log)
+        return made
+
+    def _now(self) -> np.datetime64:
+        return np.datetime64(utc_to_gps(self._clock().astype("datetime64[ns]")).item(), "ns")
+
+    def _step(self, event: Event) -> tuple[Asked, ...]:
+        self.state, asked = step(self.state, event, self._patience)
+        return asked
+
+    def _came(self, path: Path) -> None:
+        try:
+            found = glance(path)
+        except SkylagError as failure:
+            self._log("file left out", file=path.name, why=failure.message)
+            return
+        if found.kind in ("unknown", "empty"):
+            self._log("file left out", file=path.name, why=f"is {found.kind}")
+            return
+        self._days[str(path)] = found.day
+        self._log("file came", file=path.name, kind=found.kind, day=str(found.day))
+        self._step(FileCame(str(path), found.day, self._now()))
+
+    def _make(self, asked: Make) -> int:
+        """Compute a day from all its files and keep it; gives 1 where that went well."""
+        paths = [Path(path) for path, day in self._days.items() if day in (asked.day, None) and Path(path).is_file()]
+        before = (self._executor.given, self._executor.computed)
+        try:
+            made = work.network_day(
+                paths, region=self._region, day=date.fromisoformat(str(asked.day)), choices=self._choices,
+                executor=self._executor, simulated=self._simulated,
+            ).products  # fmt: skip
+            products = unseen_until(made, self._now(), self._patience.silent_s) if not asked.final else made
+            version = self._archive.save(products, provisional=not asked.final)
+        except SkylagError as failure:
+            self._log("day not made", day=str(asked.day), why=failure.message)
+            return 0
+        self._log(
+            "day made", day=str(asked.day), final=asked.final, version=version,
+            given=self._executor.given - before[0], computed=self._executor.computed - before[1],
+        )  # fmt: skip
+        rays = made.samples.rays
+        ends = {
+            receiver.name: rays.time[rays.receiver == number].max()
+            for number, receiver in enumerate(rays.receivers) if np.any(rays.receiver == number)
+        }  # fmt: skip
+        self._step(DayMade(asked.day, ends))
+        if not asked.final:
+            alerts.keep(self._archive, alerts.occasions(self._rules, products), self._clock())
+        return 1
