@@ -15,7 +15,7 @@ from datetime import date
 from pathlib import Path
 from typing import TextIO
 
-from skylag import settings
+from skylag import advice_door, settings
 from skylag.chain import Choices
 from skylag.errors import Refused, SkylagError
 from skylag.formats import results
@@ -76,6 +76,7 @@ def _parser() -> argparse.ArgumentParser:
     _day_parser(commands)
     _demo_parser(commands)
     _serve_parser(commands)
+    advice_door.add(commands, CAUTION)
     return parser
 
 

@@ -264,18 +264,22 @@ def _off_network(
     known = inside & np.isfinite(delay[:, station_row, station_column]).any(axis=0)
     left = np.full(slope.shape, np.nan)
     sigma = left.copy()
+    # Stations and place stand in the middle of their cells here, since it is there that the delays are known.
+    cell_lat, cell_lon = fields.lats[station_row[known]], fields.lons[station_column[known]]
     for number, place in enumerate(job.places):
-        x, y = plane_km(lat[known], lon[known], place)
-        if len(x) < 3:
+        away_km = np.hypot(*plane_km(lat[known], lon[known], place))
+        if len(away_km) < 3:
             continue
-        near = np.argsort(np.hypot(x, y))[:6]
+        middle = (float(fields.lats[row[number]]), float(fields.lons[column[number]]))
+        x, y = plane_km(cell_lat, cell_lon, middle)
+        near = np.argsort(away_km)[:6]
         design = np.stack([np.ones(len(near)), x[near], y[near]], axis=1)
         if np.linalg.matrix_rank(design / np.array([1.0, 100.0, 100.0])) < 3:
             continue
         share = np.linalg.pinv(design)[0]
         stations = delay[:, station_row[known][near], station_column[known][near]]
         left[number] = np.abs(delay[:, row[number], column[number]] - stations @ share)
-        sigma[number] = slope_sigma[number] * np.hypot(x, y).min()
+        sigma[number] = slope_sigma[number] * away_km.min()
     return np.where(np.isfinite(slope), left, np.nan), sigma
 
 
@@ -385,7 +389,9 @@ def _windows(
     step = np.median(np.diff(times)) if len(times) > 1 else np.timedelta64(300, "s")
     least = np.timedelta64(round(job.least_min * 60e9), "ns")
     found: list[Window] = []
-    for start, end in job.spans or ((times[0], times[-1] + step),):
+    edges = np.append(times, times[-1] + step)
+    for start, end in job.spans or ((edges[0], edges[-1]),):
+        start, end = _snapped(start, edges), _snapped(end, edges)
         inside = (times >= start) & (times < end)
         found += _beyond(start, min(end, times[0]))
         for first, last in spans(inside):  # one run: times increase
@@ -409,6 +415,12 @@ def _windows(
         else:
             joined.append(window)
     return tuple(joined)
+
+
+def _snapped(time: np.datetime64, edges: Times) -> np.datetime64:
+    """The edge of a map within half a minute of a time, since UTC and GPS time differ by seconds; else the time."""
+    nearest: np.datetime64 = edges[int(np.argmin(np.abs(edges - time)))]
+    return nearest if abs(nearest - time) <= np.timedelta64(30, "s") else time
 
 
 def _beyond(start: np.datetime64, end: np.datetime64) -> list[Window]:

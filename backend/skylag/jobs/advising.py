@@ -4,6 +4,7 @@ One `DayAdvice` per day holds what several questions share (satellites, grid con
 keeps the last few.  Never changes the archive, never judges: `impact` does.
 """
 
+import contextlib
 import threading
 from collections import OrderedDict
 from collections.abc import Sequence
@@ -99,13 +100,25 @@ class DayAdvice:
         lat, lon, _ = geodetic(places)
         return list(zip(lat.tolist(), lon.tolist(), strict=True))
 
-    def survey(self, job: Job) -> Advice:
-        """A survey job through the day; without satellites a usual geometry is taken, and said."""
+    @property
+    def known_sky(self) -> Sky | None:
+        """The same as `sky`, None where the network tracked no satellite."""
         try:
-            seen: Sky | None = self.sky
+            return self.sky
         except NotEnough:
-            seen = None
-        return survey.advise(job, self.fields, seen, self.record.region.thresholds, self.shell_height_m)
+            return None
+
+    def survey(self, job: Job, beside: "Sequence[DayAdvice]" = ()) -> Advice:
+        """A survey job through the day, and through days beside it that its hours reach into.
+
+        Without satellites a usual geometry is taken, and said.
+        """
+        days = sorted((self, *beside), key=lambda one: one.record.head.day)
+        days = [one for one in days if _same_grid(one.record, self.record)]
+        fields = _joined_fields([one.fields for one in days])
+        skies = [one.known_sky for one in days]
+        whole = None if any(one is None for one in skies) else _joined_sky([one for one in skies if one is not None])
+        return survey.advise(job, fields, whole, self.record.region.thresholds, self.shell_height_m)
 
     def explain(self, job: Job, time: np.datetime64) -> Explanation:
         """Was it the ionosphere, at the job's place and a time."""
@@ -134,6 +147,33 @@ class DayAdvice:
         An end at or before the start is of the next date.  Raises Refused where they cannot be read.
         """
         return (local_span(text, str(self.record.head.day), self.record.region.timezone),) if text.strip() else ()
+
+
+def _joined_fields(parts: Sequence[Fields]) -> Fields:
+    """Maps of days on one grid, one after another."""
+    if len(parts) == 1:
+        return parts[0]
+    layers = {name: np.concatenate([getattr(one, name) for one in parts]) for name in Fields.LAYERS}
+    return Fields(np.concatenate([one.times for one in parts]), parts[0].lats, parts[0].lons, **layers)
+
+
+def _same_grid(one: DayRecord, other: DayRecord) -> bool:
+    return np.array_equal(one.lats, other.lats) and np.array_equal(one.lons, other.lons)
+
+
+def _joined_sky(parts: Sequence[Sky]) -> Sky:
+    """Satellites of days, one after another."""
+    if len(parts) == 1:
+        return parts[0]
+    names = np.unique(np.concatenate([one.satellites for one in parts]))
+    times = np.concatenate([one.times for one in parts])
+    position = np.full((len(times), len(names), 3), np.nan)
+    first = 0
+    for one in parts:
+        last = first + len(one.times)
+        position[first:last, np.searchsorted(names, one.satellites)] = one.position_m
+        first = last
+    return Sky(times, names, position, parts[0].source)
 
 
 def _sky_of(samples: Samples, day: np.datetime64) -> Sky:
@@ -179,5 +219,16 @@ class Desk:
             while len(self._days) > self._most:
                 self._days.popitem(last=False)
             return self._days[key]
+
+    def survey(self, day: DayAdvice, job: Job) -> Advice:
+        """A survey job on its day; where its hours reach into the days beside it, with those that are kept."""
+        beside = []
+        own = day.record.head.day
+        for other in (own - np.timedelta64(1, "D"), own + np.timedelta64(1, "D")):
+            begin = other.astype("datetime64[ns]")
+            if any(start < begin + np.timedelta64(1, "D") and end > begin for start, end in job.spans):
+                with contextlib.suppress(Missing):
+                    beside.append(self.day(day.record.head.region, str(other)))
+        return day.survey(job, beside)
 
 

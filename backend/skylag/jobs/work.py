@@ -386,6 +386,7 @@ def network_day(
             "slips": int(sum(item.facts["slips"] for item in usable)), "maps": len(made.fields.times),
             "flags": len(made.flags), "problems": len(problems), "left_out": len(left_out),
             "by_receiver": [dict(item.facts) for item in usable], **dict(made.facts),
+            "broadcast_ionosphere": _broadcast_ionosphere(sources),
         },
         warnings=tuple(warnings),
         simulated=simulated or inputs.invented,
@@ -396,6 +397,16 @@ def network_day(
         origin=origin,
     )  # fmt: skip
     return DayResult(products, tuple(left_out), tuple(problems))
+
+
+def _broadcast_ionosphere(sources: Sequence[Ephemerides | PreciseOrbits]) -> dict[str, list[float]]:
+    """Coefficients of the broadcast models, as the first navigation file that tells each has them."""
+    found: dict[str, list[float]] = {}
+    for source in sources:
+        if isinstance(source, Ephemerides):
+            for name, values in source.ionosphere.items():
+                found.setdefault(name, [float(value) for value in values])
+    return found
 
 
 def _receivers(

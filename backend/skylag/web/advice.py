@@ -54,25 +54,30 @@ def site_states(request: Request, region: str, day: str, version: int | None = N
 # ---------------------------------------------------------------------------------------------- work at a site
 
 
-def _day(request: Request, region: str, day: str, version: int | None) -> DayAdvice:
-    """The day's advice from the application's desk, which remembers the last few days."""
+def _desk(request: Request) -> Desk:
+    """The application's desk, which remembers the last few days."""
     with _DESK_LOCK:
         if not hasattr(request.app.state, "desk"):
             request.app.state.desk = Desk(request.app.state.archive)
     desk: Desk = request.app.state.desk
-    return desk.day(region, asking.day(day), version)
+    return desk
+
+
+def _day(request: Request, region: str, day: str, version: int | None) -> DayAdvice:
+    return _desk(request).day(region, asking.day(day), version)
 
 
 def _survey(
-    kept: DayAdvice, site: str, method: str, baseline_km: float, horizontal_mm: float, vertical_mm: float, hours: str
-) -> Advice:
+    desk: Desk, kept: DayAdvice, site: str, method: str, baseline_km: float, horizontal_mm: float, vertical_mm: float,
+    hours: str,
+) -> Advice:  # fmt: skip
     place = kept.site(site)
     references = tuple(kept.receiver_places()) if method == "network" else ()
     job = Job(
         place.name, ((place.lat, place.lon),), method, baseline_km, references, horizontal_mm, vertical_mm,
         kept.local_hours(hours),
     )  # fmt: skip
-    return kept.survey(job)
+    return desk.survey(kept, job)
 
 
 def _approaches(kept: DayAdvice, site: str, levels: str, correction_m: float) -> Availability:
@@ -92,9 +97,8 @@ def survey_windows(
 ) -> Response:  # fmt: skip
     """Errors, verdicts and windows of a job; method static, rtk, network or dgnss; hours local, like 07:00-16:30."""
     kept = _day(request, region, day, version)
-    return payloads.reply(
-        payloads.survey(_survey(kept, site, method, baseline_km, horizontal_mm, vertical_mm, hours))
-    )
+    found = _survey(_desk(request), kept, site, method, baseline_km, horizontal_mm, vertical_mm, hours)
+    return payloads.reply(payloads.survey(found))
 
 
 @router.get("/api/days/{region}/{day}/survey.ics", summary="Survey windows as a calendar")
@@ -104,7 +108,7 @@ def survey_calendar(
 ) -> Response:  # fmt: skip
     """The same windows as calendar entries (RFC 5545)."""
     kept = _day(request, region, day, version)
-    found = _survey(kept, site, method, baseline_km, horizontal_mm, vertical_mm, hours)
+    found = _survey(_desk(request), kept, site, method, baseline_km, horizontal_mm, vertical_mm, hours)
     text = calendar.to_ics(report.survey_entries(found), f"Survey at {site}", kept.record.head.saved_at)
     return payloads.file(text.encode("utf-8"), _name(kept, site, "survey.ics"), _CALENDAR)
 

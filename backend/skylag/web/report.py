@@ -63,12 +63,12 @@ class Clock:
 
 
 def of_site(
-    day: DayAdvice, site: Site, job: Job | None = None, choices: ServiceChoices | None = None
+    day: DayAdvice, site: Site, advice: Advice | None = None, choices: ServiceChoices | None = None
 ) -> tuple[str, list[Block]]:
-    """Title and blocks of a site's sheet: its survey job, and for an aerodrome its approaches."""
+    """Title and blocks of a site's sheet: its survey job (a usual one without), and for an aerodrome its approaches."""
     record = day.record
     clock = Clock(record.region.timezone)
-    advice = day.survey(job or Job(site.name, ((site.lat, site.lon),)))
+    advice = advice or day.survey(Job(site.name, ((site.lat, site.lon),)))
     approaches: Availability | None = None
     station: StationDay | None = None
     missing = ""
