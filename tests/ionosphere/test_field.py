@@ -13,6 +13,7 @@ from skylag.ionosphere import augmentation_grid, field, kriging, left_out
 from skylag.ionosphere.background import PLAIN, Background, broadcast
 from skylag.ionosphere.covariance import Epoch, Residual, gather, plane_terms
 from skylag.ionosphere.field import FieldChoices, epochs_between, fit
+from skylag.ionosphere.interpolation import slant_at
 from skylag.tables import HOLDS, UNSEEN, Fields, Samples
 
 # A grid whose middle is the middle of the small world's plane, so that a plane is a plane in both.
@@ -393,6 +394,26 @@ def test_values_at_places_are_those_of_the_maps() -> None:
     np.testing.assert_array_equal(value.reshape(whole.vtec.shape), whole.vtec)
     np.testing.assert_array_equal(sigma.reshape(whole.vtec.shape), whole.vtec_sigma)
     np.testing.assert_array_equal(support.reshape(whole.vtec.shape), whole.support)
+
+
+def test_slant_content_of_any_line_of_sight() -> None:
+    """Lines of sight of the small world's own receivers, asked of the maps: what they measured, within the sigmas."""
+    rays, samples = sky(quiet, hours=0.5)
+    maps = fit(samples, LATS, LONS, epochs(0.5))
+    places = np.array([receiver.position_m for receiver in rays.receivers])
+    lat, lon = np.degrees(np.arcsin(places[:, 2] / 6_371_000.0)), np.degrees(np.arctan2(places[:, 1], places[:, 0]))
+    content, sigma = slant_at(
+        maps, lat[rays.receiver], lon[rays.receiver], rays.elevation, rays.azimuth, rays.time, 400_000.0
+    )
+    told = np.isfinite(content)
+    assert told.sum() > 1000 and told.mean() < 0.5  # most lines of sight pierce the shell beyond the maps
+    x, y = flat(rays.pierce_lat[told], rays.pierce_lon[told])
+    true = quiet(x, y, (rays.time[told] - START) / np.timedelta64(1, "s")) * rays.mapping[told]
+    off = content[told] - true
+    assert np.sqrt(np.mean((off / rays.mapping[told]) ** 2)) < 0.5
+    assert np.mean(np.abs(off) < 1.96 * sigma[told]) > 0.93
+    below, _ = slant_at(maps, -39.0, 145.0, [-5.0, 0.0, 90.0], 0.0, maps.times[1], 400_000.0)
+    assert np.array_equal(np.isfinite(below), [False, False, True])
 
 
 # ---------------------------------------------------------------------------------------------- receivers left out

@@ -12,6 +12,7 @@ from threadpoolctl import threadpool_limits
 
 from skylag.ionosphere import field, left_out
 from skylag.ionosphere.field import epochs_between, fit
+from skylag.ionosphere.interpolation import slant_at
 from skylag.tables import Samples
 
 pytestmark = pytest.mark.speed
@@ -82,6 +83,21 @@ def test_one_more_hour() -> None:
         taken = time.process_time() - start
     print(f"one more hour: {taken:.2f} s")
     assert taken < 2.0
+
+
+def test_a_hundred_thousand_questions_a_second() -> None:
+    samples = network(16, 2.0)
+    maps = fit(samples, LATS, LONS, epochs(2.0))
+    rng = np.random.default_rng(6)
+    count = 100_000
+    lat, lon = rng.uniform(CENTRE[0] - 3, CENTRE[0] + 3, count), rng.uniform(CENTRE[1] - 3, CENTRE[1] + 3, count)
+    when = START + rng.integers(0, 6900, count).astype("timedelta64[s]")
+    start = time.process_time()
+    content, _ = slant_at(maps, lat, lon, rng.uniform(30, 90, count), rng.uniform(0, 360, count), when, 400_000.0)
+    taken = time.process_time() - start
+    print(f"{count} questions for slant content: {taken:.2f} s")
+    assert np.isfinite(content).mean() > 0.8
+    assert taken < 1.0
 
 
 def test_the_check_of_receivers_left_out() -> None:

@@ -9,6 +9,7 @@ import numpy as np
 import numpy.typing as npt
 
 from skylag.errors import NotEnough
+from skylag.ionosphere.geometry import mapping, pierce
 from skylag.tables import Fields, Floats, Ints, Times
 
 _DEGREES_PER_SECOND = 360.0 / 86_400.0
@@ -45,6 +46,24 @@ def vertical_at(
             value = value + np.where(weight == 0, 0.0, weight * node)  # a map of no weight may lack the place
         results.append(np.where(inside, value, np.nan))
     return results[0], results[1]
+
+
+def slant_at(
+    maps: Fields, lat: npt.ArrayLike, lon: npt.ArrayLike, elevation: npt.ArrayLike, azimuth: npt.ArrayLike,
+    times: Times, shell_height_m: float, turning: bool = False,
+) -> tuple[Floats, Floats]:  # fmt: skip
+    """Slant content and its sigma [TECU] for receivers at places [deg] looking up at elevation and azimuth [deg].
+
+    The vertical content where the line of sight pierces the maps' shell, times the shell's mapping; arrays of one
+    shape.  Sigma is the map's at the pierce point, mapped: what a single shell cannot say of a slanting line beside a
+    wall is in it only as far as the map's own sigma holds it.  NaN at or below the horizon and outside the maps.
+    """
+    up = np.asarray(elevation, dtype=np.float64)
+    seen = np.where(up > 0.0, up, np.nan)
+    pierce_lat, pierce_lon = pierce(lat, lon, seen, azimuth, shell_height_m)
+    content, sigma = vertical_at(maps, pierce_lat, pierce_lon, times, turning)
+    factor = mapping(seen, shell_height_m)
+    return content * factor, sigma * factor
 
 
 def _between_nodes(maps: Fields, layer: npt.NDArray[np.float32], number: Ints, lat: Floats, lon: Floats) -> Floats:
