@@ -22,6 +22,20 @@ def test_index_of_a_known_series(evidence):
              expected=0.621948551, got=float(irregularity.index_of(rot)), tolerance=1e-9, unit="TECU/min")  # fmt: skip
 
 
+def test_a_step_or_a_wild_phase_is_not_steady():
+    rng = np.random.default_rng(3)
+    noise = rng.normal(0, 0.02, (10, 2))
+    step, wild = noise.copy(), noise.copy()
+    step[4] += 3.0
+    wild[4] += 5.0
+    wild[5] -= 5.0
+    for rot in (step, wild):
+        assert (irregularity.index_of(rot) > 0.5).all()
+        assert (irregularity.steadily(rot) < 0.05).all()
+    scattered = rng.normal(0, 0.6, (10, 50))
+    assert (irregularity.steadily(scattered) > 0.125).mean() > 0.95
+
+
 def test_along_arc_rate_of_a_known_series(evidence):
     elevation = 40.0 + 0.3 * np.arange(10)  # at the middle of each interval
     mapping = 1.0 / np.sqrt(1.0 - (6371.0 / 6721.0 * np.cos(np.radians(elevation))) ** 2)
@@ -156,6 +170,28 @@ def test_a_wall_over_the_network_blames_nobody():
     moving = fronts.track(rays, samples)
     found = irregularity.assess(rays, moving)
     assert faults.find(rays, samples, found, slopes.measure(rays, samples), moving) == ()
+
+
+@pytest.mark.parametrize("speed", [60.0, 150.0, 400.0])
+def test_a_wall_over_a_wide_network_blames_nobody_even_unrecognised(speed):
+    ramp = wall(150.0, 80.0, speed, 325.0, 2 * 3600)
+    wide = [PLACES[0], PLACES[8], PLACES[10], PLACES[13]]
+    rays, samples = simulate(
+        lambda x, y, t: quiet(x, y, t) + ramp(x, y, t), np.random.default_rng(66), hours=4.0, places=wide
+    )
+    found = irregularity.assess(rays)
+    assert faults.find(rays, samples, found, slopes.measure(rays, samples), None) == ()
+
+
+def test_a_lone_slope_is_blamed_where_a_neighbour_looked_at_the_same_place(calm):
+    rays, samples = calm
+    late = (rays.time >= START + np.timedelta64(60, "m")) & (rays.time < START + np.timedelta64(75, "m"))
+    rows = np.flatnonzero((rays.receiver == 5) & late)  # too short for the test of levels
+    rays, samples = changed(rays, samples, rows, 14.0 * rays.mapping[rows])
+    steep = slopes.measure(rays, samples)
+    blamed = faults.find(rays, samples, irregularity.assess(rays), steep)
+    assert {fault.receiver for fault in blamed} == {"RX05"}
+    assert any("every steep slope seen includes it" in fault.why for fault in blamed)
 
 
 def test_two_receivers_have_nobody_to_compare_with():

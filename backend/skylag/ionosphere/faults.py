@@ -8,12 +8,14 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.events import Fault
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.sightlines import lay_out, middle
 from skylag.tables import Bools, Floats, Fronts, Ints, Patches, Rays, Samples, Slopes
 
 WINDOW_S = 300.0
+_KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
 
 
 @dataclass(frozen=True)
@@ -24,8 +26,10 @@ class FaultChoices:
                      its own through the day
     chronic_breaks   arcs broken in a day, and `storm_times` more than the usual receiver's
     alone_pairs      steep pair slopes within a window that all include the receiver
+    same_place_km    and another receiver's line of sight, whose pierce point is that near, says otherwise by level_tecu
     absent_share, absent_s  lines of sight fewer than this share of the usual receiver's, for so long
     ragged_share     share of its windows that are ragged, while of the others' fewer than calm_share are
+    ragged_s         for at least so long: a wall passes sooner, and over an outer receiver alone
     level_tecu       its vertical level against a plane through the others', and level_times the second worst
     level_s          for at least so long
     join_s           spans nearer than this are one
@@ -35,11 +39,13 @@ class FaultChoices:
     storm_times: float = 3.0
     chronic_breaks: int = 60
     alone_pairs: int = 8
+    same_place_km: float = 100.0
     absent_share: float = 0.35
     absent_s: float = 900.0
     ragged_tecu_min: float = 0.5
     ragged_share: float = 0.5
     calm_share: float = 0.1
+    ragged_s: float = 900.0
     level_tecu: float = 4.0
     level_times: float = 2.5
     level_s: float = 1200.0
@@ -63,6 +69,7 @@ def find(
     level, size = _level_alone(rays, samples, patches, choices)
     absent = _absent_alone(rays, patches, choices)
     apart = _slopes_alone(slopes, fronts, patches, len(rays.receivers), choices)
+    apart &= _contradicted(apart, rays, samples, patches, choices)
     x, y, z = np.array([receiver.position_m for receiver in rays.receivers]).T
     lat, lon = np.degrees(np.arctan2(z, np.hypot(x, y))), np.degrees(np.arctan2(y, x))
     faults = []
@@ -145,6 +152,40 @@ def _slopes_alone(
     return np.asarray(several & (total >= choices.alone_pairs) & (total >= 0.95 * all_pairs))
 
 
+def _contradicted(apart: Bools, rays: Rays, samples: Samples, patches: Patches, choices: FaultChoices) -> Bools:
+    """(B, R) windows of `apart` in which others looked at the same place and saw something else.
+
+    In a wide network a front may reach one receiver's lines of sight alone: whoever has no neighbour that looked where
+    it looked cannot be contradicted, and is not blamed.  Most of its lines that have such a neighbour must differ from
+    the nearest one, on two satellites at least.
+    """
+    told = np.zeros(apart.shape, dtype=bool)
+    middle_ns = np.timedelta64(round(WINDOW_S * 0.5e9), "ns")
+    half = np.timedelta64(round(max(0.5 * rays.interval_s, 0.5) * 1e9), "ns")
+    order = np.argsort(rays.time, kind="stable")
+    ordered = rays.time[order]
+    for window in np.flatnonzero(apart.any(axis=1)):
+        moment = patches.times[window] + middle_ns
+        first, last = np.searchsorted(ordered, [moment - half, moment + half])
+        now = order[first:last]
+        now = now[rays.elevation[now] >= 20.0]
+        for receiver in np.flatnonzero(apart[window]):
+            own, others = now[rays.receiver[now] == receiver], now[rays.receiver[now] != receiver]
+            if len(own) == 0 or len(others) == 0:
+                continue
+            turn = (rays.pierce_lon[own][:, None] - rays.pierce_lon[others][None, :] + 180.0) % 360.0 - 180.0
+            north = rays.pierce_lat[own][:, None] - rays.pierce_lat[others][None, :]
+            away = np.hypot(north, turn * np.cos(np.radians(rays.pierce_lat[own]))[:, None]) * _KM_PER_DEG
+            nearest = others[away.argmin(axis=1)]
+            beside = away.min(axis=1) <= choices.same_place_km
+            differs = np.abs(samples.vtec[own] - samples.vtec[nearest]) > choices.level_tecu
+            told[window, receiver] = (
+                beside.any() and differs[beside].mean() > 0.5
+                and len(np.unique(rays.satellite[own[beside & differs]])) >= 2
+            )  # fmt: skip
+    return told
+
+
 def _crossed(slopes: Slopes, fronts: Fronts | None) -> Bools:
     """Witnesses on a line of sight that belongs to a front, within half an hour of its crossing."""
     crossed = np.zeros(len(slopes), dtype=bool)
@@ -170,12 +211,7 @@ def _absent_alone(rays: Rays, patches: Patches, choices: FaultChoices) -> Bools:
     usual = np.median(count, axis=1, keepdims=True)
     few = (count < choices.absent_share * usual) & (usual > 0)
     few &= few.sum(axis=1, keepdims=True) <= max(1, shape[1] // 4)
-    least = max(1, round(choices.absent_s / WINDOW_S))
-    for number in range(shape[1]):
-        for first, last in _spans(few[:, number], WINDOW_S):
-            if last - first + 1 < least:
-                few[first : last + 1, number] = False
-    return np.asarray(few)
+    return _lasting(few, choices.absent_s)
 
 
 def _ragged_alone(patches: Patches, receivers: int, choices: FaultChoices) -> Bools:
@@ -188,9 +224,8 @@ def _ragged_alone(patches: Patches, receivers: int, choices: FaultChoices) -> Bo
     others_ragged, others_seen = ragged.sum(axis=1, keepdims=True) - ragged, seen.sum(axis=1, keepdims=True) - seen
     share = ragged / np.maximum(seen, 1)
     others = others_ragged / np.maximum(others_seen, 1)
-    return np.asarray(
-        (seen >= 3) & (share >= choices.ragged_share) & (others_seen >= 6) & (others <= choices.calm_share)
-    )
+    alone = (seen >= 3) & (share >= choices.ragged_share) & (others_seen >= 6) & (others <= choices.calm_share)
+    return _lasting(alone, choices.ragged_s)
 
 
 def _level_alone(rays: Rays, samples: Samples, patches: Patches, choices: FaultChoices) -> tuple[Bools, Floats]:
@@ -230,12 +265,18 @@ def _level_alone(rays: Rays, samples: Samples, patches: Patches, choices: FaultC
     at = np.clip(np.searchsorted(patches.times, lines.times, side="right") - 1, 0, blocks - 1)
     off[at] = bad
     size[at] = left_out
-    least = max(1, round(choices.level_s / WINDOW_S))
-    for number in range(receivers):
-        for first, last in _spans(off[:, number], WINDOW_S):
+    return _lasting(off, choices.level_s), size
+
+
+def _lasting(flags: Bools, least_s: float) -> Bools:
+    """The stretches of True (B, R) that last so long."""
+    lasting = np.array(flags)
+    least = max(1, round(least_s / WINDOW_S))
+    for number in range(flags.shape[1]):
+        for first, last in _spans(flags[:, number], WINDOW_S):
             if last - first + 1 < least:
-                off[first : last + 1, number] = False
-    return off, size
+                lasting[first : last + 1, number] = False
+    return lasting
 
 
 def _spans(flags: Bools, join_s: float) -> list[tuple[int, int]]:
