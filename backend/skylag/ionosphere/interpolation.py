@@ -59,10 +59,10 @@ def slant_at(
     wall is in it only as far as the map's own sigma holds it.  NaN at or below the horizon and outside the maps.
     """
     up = np.asarray(elevation, dtype=np.float64)
-    seen = np.where(up > 0.0, up, np.nan)
-    pierce_lat, pierce_lon = pierce(lat, lon, seen, azimuth, shell_height_m)
+    upward = np.where(up > 0.0, up, 90.0)
+    pierce_lat, pierce_lon = pierce(lat, lon, upward, azimuth, shell_height_m)
     content, sigma = vertical_at(maps, pierce_lat, pierce_lon, times, turning)
-    factor = mapping(seen, shell_height_m)
+    factor = np.where(up > 0.0, mapping(upward, shell_height_m), np.nan)
     return content * factor, sigma * factor
 
 
