@@ -19,8 +19,9 @@ from skylag.archive import Archive
 from skylag.chain import Choices
 from skylag.errors import SkylagError
 from skylag.formats.glance import glance
+from skylag.ionosphere.geometry import geodetic
 from skylag.jobs import alerts, board, kept, work
-from skylag.tables import UNSEEN, Fields, Products, Region
+from skylag.tables import HOLDS, UNSEEN, Fields, Products, Region
 from skylag.timescales import utc_to_gps
 
 _DAY = np.timedelta64(1, "D")
@@ -120,9 +121,10 @@ def step(state: State, event: Event, patience: Patience) -> tuple[State, tuple[A
         if event.now - latest >= _s(patience.calm_s) or event.now - first >= _s(patience.at_most_s):
             asked.append(Make(day, False))
             del waiting[day]
+    # Files that came and are not computed yet may be of one who seems silent: that is asked at the next tick.
     fallen = {
         name: time for name, time in state.last.items()
-        if name not in state.silent and event.now - time >= _s(patience.silent_s)
+        if name not in state.silent and event.now - time >= _s(patience.silent_s) and not state.waiting
     }  # fmt: skip
     asked += [Fell(name, time) for name, time in sorted(fallen.items())]
     silent = state.silent | fallen.keys()
@@ -173,6 +175,51 @@ def unseen_until(products: Products, now: np.datetime64, silent_s: float) -> Pro
             [products.site_states, np.full((len(more), products.site_states.shape[1]), UNSEEN, dtype=np.uint8)]
         ),
         site_reasons=tuple((*one, *(since for _ in more)) for one in products.site_reasons),
+    )
+
+
+def silent_areas(products: Products, silent_s: float) -> Products:
+    """The day with cells and sites unseen, where they would hold, while the receiver nearest to them is silent.
+
+    Silent: it gave data before, and none for longer than a span.  Neighbours may still look across such a place from
+    afar, but what is small and near the ground of the silent one would pass unnoticed.  Warnings stay.  Pure.
+    """
+    fields, rays, region = products.fields, products.samples.rays, products.region
+    receivers = rays.receivers
+    if not len(fields.times) or not receivers:
+        return products
+    silent = np.zeros((len(fields.times), len(receivers)), dtype=bool)
+    since = np.zeros(silent.shape, dtype="datetime64[ns]")
+    for number in range(len(receivers)):
+        had = np.unique(rays.time[rays.receiver == number])
+        before = np.searchsorted(had, fields.times, side="right") - 1
+        known = before >= 0
+        since[known, number] = had[before[known]]
+        silent[known, number] = fields.times[known] - since[known, number] > _s(silent_s)
+    if not silent.any():
+        return products
+    places = np.array([geodetic(np.asarray(one.position_m))[:2] for one in receivers], dtype=np.float64)
+
+    def nearest(lats: Any, lons: Any) -> Any:
+        """Row number of the receiver nearest to each place."""
+        lats, lons = np.asarray(lats, dtype=np.float64)[..., None], np.asarray(lons, dtype=np.float64)[..., None]
+        east = (lons - places[:, 1] + 180.0) % 360.0 - 180.0
+        return np.argmin(np.hypot(lats - places[:, 0], east * np.cos(np.radians(lats))), axis=-1)
+
+    cells = silent[:, nearest(fields.lats[:, None], fields.lons[None, :])]
+    state = np.where(cells & (fields.state == HOLDS), UNSEEN, fields.state).astype(np.uint8)
+    codes, reasons = products.site_states.copy(), []
+    for column, site in enumerate(region.sites):
+        number = int(nearest(site.lat, site.lon))
+        turned = silent[:, number] & (codes[:, column] == HOLDS)
+        codes[turned, column] = UNSEEN
+        told = list(products.site_reasons[column])
+        for row in np.flatnonzero(turned):
+            last = np.datetime_as_string(since[row, number], unit="m")
+            told[row] = f"{receivers[number].name}, the nearest receiver, has been silent since {last} GPS time"
+        reasons.append(tuple(told))
+    return replace(
+        products, fields=replace(fields, state=state), site_states=codes, site_reasons=tuple(reasons)
     )
 
 
@@ -285,7 +332,9 @@ class Watch:
                 paths, region=self._region, day=date.fromisoformat(str(asked.day)), choices=self._choices,
                 executor=self._executor, simulated=self._simulated,
             ).products  # fmt: skip
-            products = unseen_until(made, self._now(), self._patience.silent_s) if not asked.final else made
+            products = silent_areas(made, self._patience.silent_s)
+            if not asked.final:
+                products = unseen_until(products, self._now(), self._patience.silent_s)
             version = self._archive.save(products, provisional=not asked.final)
         except SkylagError as failure:
             self._log("day not made", day=str(asked.day), why=failure.message)
