@@ -24,6 +24,7 @@ from skylag.ionosphere.slopes import MM_PER_TECU
 from skylag.tables import Bools, Floats, Front, Fronts, Ints, Onsets, Rays, Samples, Site, Slopes, Times
 
 _KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
+_TWO_WAYS_KM_S = 0.1  # pierce points overtake walls slower than this and see them from the other side
 _SLOW_KM_S, _SLOW_BIAS_KM_S = 0.05, 0.006  # root mean square speed error of simulated walls slower than 50 m/s
 _PIERCE_KM_S = 0.06  # usual speed of a pierce point: even a wall at rest is swept over by them
 
@@ -262,6 +263,9 @@ class _Points:
     time_sigma: Floats
     receiver: Ints
     satellite: Ints
+    toward: Floats  # +1 where content grew
+    east_speed: Floats  # of the pierce point [km/s]
+    north_speed: Floats
 
 
 def _taken(points: _Points, chosen: Bools) -> _Points:
@@ -280,6 +284,18 @@ class _Wall:
     covariance: Floats
     inside: Bools
     misfit: float
+    brings: float = 0.0  # +1 where it brings content, -1 where it takes it, 0 where not asked
+
+    def side(self, points: _Points) -> Floats:
+        """What the wall brings by each point: a line of sight that overtakes it sees the reverse; 0 where it keeps up
+        with the wall so closely that either may be seen."""
+        along = points.east_speed * np.sin(self.heading) + points.north_speed * np.cos(self.heading)
+        relative = self.speed - along
+        return np.asarray(np.where(np.abs(relative) < 0.02, 0.0, points.toward * np.sign(relative)))
+
+    def fits(self, points: _Points) -> Bools:
+        """Points whose change of content is the wall's own, all where that is not asked."""
+        return np.asarray((self.brings == 0.0) | (self.side(points) * self.brings >= 0.0))
 
     def distance(self, points: _Points) -> Floats:
         """How far [km] each point lies ahead of the wall at its time."""
@@ -289,24 +305,41 @@ class _Wall:
 
 
 def fit_walls(onsets: Onsets, rays: Rays, choices: FrontChoices | None = None) -> Fronts:
-    """Walls through the onsets, best first within each stretch of time; rising and falling content are kept apart."""
+    """Walls through the onsets, best first within each stretch of time.
+
+    Rising and falling content are kept apart at first.  A slow wall is seen as a rise by lines of sight that it
+    overtakes and as a fall by those that overtake it: it takes both, and walls that hardly move are sought among both.
+    """
     choices = choices or FrontChoices()
     centre = middle(rays)
     belongs = np.full(len(onsets), -1, dtype=np.int64)
+    free = np.ones(len(onsets), dtype=bool)
     found: list[tuple[_Wall, Ints]] = []
-    for rows in _stretches(onsets, choices):
-        left = rows
+
+    def seek(rows: Ints, two_ways: bool) -> None:
+        left = rows[free[rows]]
         while len(left) >= choices.fewest:
-            points = _points(onsets.where(left), centre, rays.shell_height_m, choices)
-            wall = _best_wall(points, choices)
+            epoch = _mean_time(onsets.time[left])
+            points = _points(onsets.where(left), centre, rays.shell_height_m, choices, epoch)
+            wall = _best_wall(points, choices, two_ways)
             if wall is None:
                 break
+            if wall.speed < _TWO_WAYS_KM_S:
+                left = _reachable(onsets, left, free, points, choices)
+                points = _points(onsets.where(left), centre, rays.shell_height_m, choices, epoch)
+                wall = _both_ways(points, wall, choices)
             found.append((wall, left[wall.inside]))
             # Broken runs within the wall's own breadth are the same wall, not another beside it.
             steep = steepness(wall, onsets.where(left[wall.inside]), _taken(points, wall.inside))
             lean = points.lean_x * np.sin(wall.heading) + points.lean_y * np.cos(wall.heading)
             within = np.abs(wall.distance(points)) < 0.5 * steep.seen_width(lean) + 3.0 * points.place_sigma
-            left = left[~(wall.inside | within)]
+            free[left[wall.inside | within]] = False
+            left = rows[free[rows]]
+
+    for rows in _stretches(onsets, choices, (1.0, -1.0)):
+        seek(rows, two_ways=False)
+    for rows in _stretches(onsets, choices, (0.0,)):
+        seek(rows, two_ways=True)
     found.sort(key=lambda item: onsets.time[item[1]].min())
     fronts = []
     for number, (wall, rows) in enumerate(found):
@@ -315,11 +348,29 @@ def fit_walls(onsets: Onsets, rays: Rays, choices: FrontChoices | None = None) -
     return Fronts(tuple(fronts), replace(onsets, front=belongs))
 
 
-def _stretches(onsets: Onsets, choices: FrontChoices) -> list[Ints]:
-    """Row numbers of onsets of one sign without a long silence between them."""
+def _reachable(onsets: Onsets, rows: Ints, free: Bools, points: _Points, choices: FrontChoices) -> Ints:
+    """Rows of a stretch and of all free onsets of either sign within its span."""
+    spare = np.timedelta64(round(choices.apart_s), "s")
+    times = onsets.time[rows]
+    near = free & (onsets.time >= times.min() - spare) & (onsets.time <= times.max() + spare)
+    return np.union1d(rows, np.flatnonzero(near))
+
+
+def _both_ways(points: _Points, wall: _Wall, choices: FrontChoices) -> _Wall:
+    """A slow wall with the points that see it from its other side."""
+    near = np.abs(wall.distance(points)) < 3.0 * points.place_sigma
+    side = wall.side(points)[near]
+    wall = replace(wall, brings=1.0 if (side > 0).sum() >= (side < 0).sum() else -1.0)
+    own = near & wall.fits(points)
+    polished = _polish(points, replace(wall, inside=own), choices)
+    return replace(wall, inside=own) if polished is None else polished
+
+
+def _stretches(onsets: Onsets, choices: FrontChoices, signs: tuple[float, ...]) -> list[Ints]:
+    """Row numbers of onsets of one sign (0: either) without a long silence between them."""
     stretches: list[Ints] = []
-    for toward in (1.0, -1.0):
-        rows = np.flatnonzero(np.sign(onsets.jump) == toward)
+    for toward in signs:
+        rows = np.flatnonzero((toward == 0.0) | (np.sign(onsets.jump) == toward))
         rows = rows[np.argsort(onsets.time[rows], kind="stable")]
         if len(rows) == 0:
             continue
@@ -349,6 +400,9 @@ def _points(
         time_sigma=onsets.time_sigma_s,
         receiver=onsets.receiver,
         satellite=onsets.satellite,
+        toward=np.sign(onsets.jump),
+        east_speed=onsets.east_speed / 1000.0,
+        north_speed=onsets.north_speed / 1000.0,
     )
 
 
@@ -358,65 +412,91 @@ def _mean_time(times: Times) -> np.datetime64:
     return np.datetime64(first + np.timedelta64(mean_ns, "ns"))
 
 
-def _best_wall(points: _Points, choices: FrontChoices) -> _Wall | None:
-    """The wall with most points on it, polished; None where chance does as well or too few saw it."""
+def _best_wall(points: _Points, choices: FrontChoices, two_ways: bool = False) -> _Wall | None:
+    """The wall with most points on it, polished; None where chance does as well or too few saw it.
+
+    two_ways  seek among rises and falls; only walls that pierce points overtake are taken then
+    """
     rng = np.random.default_rng(choices.seed)
-    start = _try_triples(points, points.t, rng, choices)
+    start = _try_triples(points, rng, choices, two_ways)
     if start is None:
         return None
     wall = _polish(points, start, choices)
     if wall is None or wall.inside.sum() < choices.fewest:
         return None
+    if two_ways and wall.speed >= _PIERCE_KM_S:
+        return None
     if len(np.unique(points.receiver[wall.inside])) < choices.fewest_receivers:
         return None
     if len(np.unique(points.satellite[wall.inside])) < choices.fewest_satellites:
         return None
-    # The same places with their times dealt out anew: what a plane catches there is chance.
+    # The same places with their times dealt out anew: what a plane catches there is chance.  A wall at rest stays where
+    # it is whatever the times, so the places are turned about their middle instead, each by an angle of its own.
     chance = 0
     for _ in range(3):
-        dealt = _try_triples(points, rng.permutation(points.t), rng, choices)
-        chance = max(chance, 0 if dealt is None else int(dealt.inside.sum()))
+        dealt = _turned(points, rng) if two_ways else replace(points, t=rng.permutation(points.t))
+        caught = _try_triples(dealt, rng, choices, two_ways)
+        chance = max(chance, 0 if caught is None else int(caught.inside.sum()))
     if wall.inside.sum() - 3 < 1.7 * (chance - 3):
         return None
     return wall
 
 
-def _try_triples(points: _Points, t: Floats, rng: np.random.Generator, choices: FrontChoices) -> _Wall | None:
-    """The best of many planes, each through three points."""
-    count = len(t)
-    picks = rng.integers(0, count, size=(choices.tries, 3))
-    a, b, c = picks.T
-    dx = np.stack([points.x[b] - points.x[a], points.x[c] - points.x[a]], axis=1)
-    dy = np.stack([points.y[b] - points.y[a], points.y[c] - points.y[a]], axis=1)
-    dt = np.stack([t[b] - t[a], t[c] - t[a]], axis=1)
-    area = dx[:, 0] * dy[:, 1] - dx[:, 1] * dy[:, 0]
+def _turned(points: _Points, rng: np.random.Generator) -> _Points:
+    """The points, each turned about their middle by a random angle."""
+    angle = rng.uniform(0.0, 2.0 * np.pi, len(points.x))
+    x, y = points.x - points.x.mean(), points.y - points.y.mean()
+    return replace(points, x=x * np.cos(angle) - y * np.sin(angle), y=x * np.sin(angle) + y * np.cos(angle))
+
+
+def _try_triples(points: _Points, rng: np.random.Generator, choices: FrontChoices, two_ways: bool) -> _Wall | None:
+    """The best of many planes, each through three points in space and time.
+
+    Times count as kilometres at a tenth of a km per second, so that a wall at rest is a plane like any other.
+    """
+    pace = 0.1
+    places = np.stack([points.x, points.y, points.t * pace], axis=1)
+    a, b, c = rng.integers(0, len(places), size=(choices.tries, 3)).T
+    one, two = places[b] - places[a], places[c] - places[a]
+    normal = np.cross(one, two)
+    area = np.linalg.norm(normal, axis=1)
+    level = np.hypot(normal[:, 0], normal[:, 1])
     # Three places well off one line, or the direction is anybody's guess.
-    longest = np.maximum(np.hypot(dx[:, 0], dy[:, 0]), np.hypot(dx[:, 1], dy[:, 1]))
-    usable = (np.abs(area) > 0.15 * longest**2) & (longest > 60.0)
-    usable &= points.receiver[a] != points.receiver[b]
+    longest = np.maximum(np.linalg.norm(one, axis=1), np.linalg.norm(two, axis=1))
+    reach = np.maximum(np.hypot(one[:, 0], one[:, 1]), np.hypot(two[:, 0], two[:, 1]))
+    usable = (area > 0.15 * longest**2) & (reach > 60.0) & (points.receiver[a] != points.receiver[b])
+    usable &= np.abs(normal[:, 2]) * pace * 1000.0 <= choices.fastest_m_s * level
+    if two_ways:
+        usable &= np.abs(normal[:, 2]) * pace <= 2.0 * _PIERCE_KM_S * level
     if not usable.any():
         return None
-    dx, dy, dt, area, a = dx[usable], dy[usable], dt[usable], area[usable], a[usable]
-    slow_x = (dt[:, 0] * dy[:, 1] - dt[:, 1] * dy[:, 0]) / area  # slowness [s/km]
-    slow_y = (dx[:, 0] * dt[:, 1] - dx[:, 1] * dt[:, 0]) / area
-    slowness = np.maximum(np.hypot(slow_x, slow_y), 1e-9)
-    speed = 1.0 / slowness
-    able = speed * 1000.0 <= choices.fastest_m_s
-    if not able.any():
-        return None
-    speed, east, north, a = speed[able], (slow_x / slowness)[able], (slow_y / slowness)[able], a[able]
-    offset = points.x[a] * east + points.y[a] * north - speed * t[a]
+    normal, level, a = normal[usable], level[usable], a[usable]
+    speed = -normal[:, 2] * pace / level
+    ahead = np.where(speed < 0.0, -1.0, 1.0)
+    east, north, speed = ahead * normal[:, 0] / level, ahead * normal[:, 1] / level, np.abs(speed)
+    offset = points.x[a] * east + points.y[a] * north - speed * points.t[a]
     away = np.abs(
-        points.x[None, :] * east[:, None] + points.y[None, :] * north[:, None] - speed[:, None] * t - offset[:, None]
-    )
+        points.x[None, :] * east[:, None] + points.y[None, :] * north[:, None] - speed[:, None] * points.t
+        - offset[:, None]
+    )  # fmt: skip
     allowed = np.hypot(
         points.place_sigma[None, :], np.maximum(speed, _PIERCE_KM_S)[:, None] * points.time_sigma[None, :]
     )
-    cost = np.minimum((away / allowed) ** 2, 9.0).sum(axis=1)
-    best = int(np.argmin(cost))
+    cost = np.minimum((away / allowed) ** 2, 9.0)
+    brings = 0.0
+    if two_ways:
+        relative = speed[:, None] - points.east_speed * east[:, None] - points.north_speed * north[:, None]
+        side = np.where(np.abs(relative) < 0.02, 0.0, points.toward * np.sign(relative))
+        gain, loss = (np.where(side * way < 0.0, 9.0, cost).sum(axis=1) for way in (1.0, -1.0))
+        brings = 1.0 if gain.min() <= loss.min() else -1.0
+        best = int(np.argmin(gain if brings > 0.0 else loss))
+        inside = ((away / allowed)[best] < 3.0) & (side[best] * brings >= 0.0)
+    else:
+        best = int(np.argmin(cost.sum(axis=1)))
+        inside = (away / allowed)[best] < 3.0
     return _Wall(
         float(np.arctan2(east[best], north[best])), float(speed[best]), float(offset[best]), 0.0,
-        np.zeros((4, 4)), (away / allowed)[best] < 3.0, float("nan"),
+        np.zeros((4, 4)), inside, float("nan"), brings,
     )  # fmt: skip
 
 
@@ -430,7 +510,7 @@ def _polish(points: _Points, start: _Wall, choices: FrontChoices) -> _Wall | Non
         sigma = np.hypot(points.place_sigma, max(abs(wall.speed), _PIERCE_KM_S) * points.time_sigma)
         # Cut or long runs have wide sigmas: they are weighed by them, but not let in from afar.
         near = np.hypot(points.place_sigma, max(abs(wall.speed), _PIERCE_KM_S) * np.minimum(points.time_sigma, 120.0))
-        inside = np.abs(away) < 3.0 * near
+        inside = (np.abs(away) < 3.0 * near) & wall.fits(points)
         if inside.sum() < max(4, choices.fewest - 1):
             return None
         pull = np.minimum(1.0, 1.5 / np.maximum(np.abs(away / sigma), 1e-9))
@@ -451,11 +531,14 @@ def _polish(points: _Points, start: _Wall, choices: FrontChoices) -> _Wall | Non
         wall = _Wall(
             wall.heading + float(np.clip(step[0], -0.5, 0.5)), wall.speed + float(step[1]),
             wall.offset + float(step[2]), wall.height + float(step[3]),
-            np.linalg.inv(scaled) / scale[:, None] / scale[None, :] * max(1.0, misfit), inside, misfit,
+            np.linalg.inv(scaled) / scale[:, None] / scale[None, :] * max(1.0, misfit), inside, misfit, wall.brings,
         )  # fmt: skip
     wall = replace(wall, covariance=_widened(wall.covariance, normal, design * (weight * away)[:, None], points))
     if wall.speed < 0.0:
-        wall = replace(wall, heading=wall.heading + np.pi, speed=-wall.speed, offset=-wall.offset)
+        # The other way round it takes what it brought.
+        wall = replace(
+            wall, heading=wall.heading + np.pi, speed=-wall.speed, offset=-wall.offset, brings=-wall.brings
+        )
     return wall if wall.speed * 1000.0 <= choices.fastest_m_s else None
 
 
@@ -514,7 +597,7 @@ def _front(
         slope_sigma=steep.slope_sigma,
         width_km=steep.width,
         width_sigma_km=steep.width_sigma,
-        jump_tecu=steep.jump * float(np.sign(onsets.jump[0])),
+        jump_tecu=steep.jump * (wall.brings or float(np.sign(onsets.jump[0]))),
         jump_sigma_tecu=steep.jump_sigma,
         depth_km=steep.depth,
         reach_km=(float(along.min()), float(along.max())),
