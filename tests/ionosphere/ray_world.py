@@ -72,6 +72,7 @@ def make(
     satellites: int = 14,
     level_sigma: float = 0.3,
     plasmasphere: float = 1.0,
+    foot_exponent: float = 1.0,
     lon_shift: float = 0.0,
     noise: float = 0.02,
 ) -> World:
@@ -141,7 +142,7 @@ def make(
         own = of_receiver[rays.pair] + of_pair[rays.pair, rays.satellite]
         geocentric = np.degrees(np.arctan2(receiver.position_m[2], np.hypot(*receiver.position_m[:2])))
         here = (np.full(len(rays), geocentric), np.full(len(rays), lon))
-        rays.stec[:] += plasmasphere * slant_shape(*here, rays.elevation, rays.azimuth)
+        rays.stec[:] += plasmasphere * slant_shape(*here, rays.elevation, rays.azimuth, foot_exponent)
         rays = replace(rays, stec=rays.stec - adjustment.content_per_ns(rays, channels) * own)
         parts.append(rays)
         contents.append(np.concatenate(content))

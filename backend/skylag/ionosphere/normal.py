@@ -216,6 +216,12 @@ class Normal:
         right[-1] -= self._of_high @ taken
         return right, sums
 
+    def weigh(self, content: Floats) -> Floats:
+        """The inverse covariance of the rows, arc effects and all, times a vector of rows."""
+        heavy = self._weight * content
+        sums = np.bincount(self._arc, heavy, minlength=len(self._inner))
+        return np.asarray(heavy - self._weight * (self._inner * sums)[self._arc])
+
     def solve(self, content: Floats) -> tuple[Floats, Floats]:
         """The unknowns and the arc effects."""
         right, sums = self._right(content)

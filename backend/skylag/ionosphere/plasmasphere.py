@@ -5,10 +5,12 @@ around a thousand kilometres, reaches to the satellites, and thins away from the
 gives is only a shape; its amplitude is found from the data of the day.  Never used as truth.
 """
 
+from dataclasses import dataclass
+
 import numpy as np
 
 from skylag.constants import SHELL_EARTH_RADIUS_M
-from skylag.tables import Floats, Rays
+from skylag.tables import Floats, Ints, Rays
 
 # Saturated plasmasphere: log10 of the equatorial density [cm^-3] falls linearly with L (Carpenter and Anderson 1992,
 # J. Geophys. Res. 97, 1097-1108; coefficients from memory).
@@ -26,8 +28,11 @@ BASE_HEIGHT_M, TOP_HEIGHT_M = 1.0e6, 2.02e7
 _NODES = np.polynomial.legendre.leggauss(14)
 
 
-# Between the shape and its neighbour, whose exponent is larger by this, the shape's change is taken.
-_EXPONENT_STEP = 0.5
+# Once a day's data have told the exponent, it still differs by hour and field line within the network: half of how it
+# strays from day to day is kept (judgement).
+FOOT_EXPONENT_REST = 0.25
+# Exponents at which shapes are worked out; between them the logarithm of a shape is taken as a parabola.
+_EXPONENTS = (0.0, 1.0, 2.0)
 
 
 def slant_shape(
@@ -38,18 +43,18 @@ def slant_shape(
     lat, lon  of the ground end of the ray; elevation, azimuth there [deg]; straight rays, spherical Earth.
     foot_exponent  how the density grows along a field line toward its feet
     """
-    return _shape_and_change(lat, lon, elevation, azimuth, foot_exponent)[0]
+    return np.asarray(_shapes(lat, lon, elevation, azimuth, (foot_exponent,))[0])
 
 
-def _shape_and_change(
-    lat: Floats, lon: Floats, elevation: Floats, azimuth: Floats, foot_exponent: float = FOOT_EXPONENT
-) -> tuple[Floats, Floats]:
-    """The shape, and how it changes per unit of the foot exponent [TECU]."""
+def _shapes(
+    lat: Floats, lon: Floats, elevation: Floats, azimuth: Floats, exponents: tuple[float, ...]
+) -> Floats:
+    """The shape for each exponent, (exponents, ...) [TECU]."""
     lat_rad, lon_rad = np.radians(lat), np.radians(lon)
     elevation_rad, azimuth_rad = np.radians(elevation), np.radians(azimuth)
     low = np.log(SHELL_EARTH_RADIUS_M + BASE_HEIGHT_M)
     high = np.log(SHELL_EARTH_RADIUS_M + TOP_HEIGHT_M)
-    total, steeper = np.zeros(np.shape(elevation)), np.zeros(np.shape(elevation))
+    total = np.zeros((len(exponents), *np.shape(elevation)))
     cos_e, sin_e = np.cos(elevation_rad), np.sin(elevation_rad)
     pole_lat, pole_lon = np.radians(_POLE_LAT), np.radians(_POLE_LON)
     # The sine of magnetic latitude is linear in the unit vector: its share straight up and its share along the ray.
@@ -69,11 +74,10 @@ def _shape_and_change(
         density /= 1.0 + np.exp(np.clip((shell_l - _PLASMAPAUSE_L) / _PLASMAPAUSE_WIDTH, -50, 50))
         # ds = dr / sqrt(1 - sin^2) along the ray, dr = r d(log r)
         foot = shell_l * SHELL_EARTH_RADIUS_M / r
-        density *= weight * r / cosine * foot**foot_exponent
-        total += density
-        steeper += density * foot**_EXPONENT_STEP
-    scale = 0.5 * (high - low) / 1e16
-    return total * scale, (steeper - total) * (scale / _EXPONENT_STEP)
+        density *= weight * r / cosine
+        for number, exponent in enumerate(exponents):
+            total[number] += density * foot**exponent
+    return np.asarray(total * (0.5 * (high - low) / 1e16))
 
 
 def vertical_shape(lat: Floats, lon: Floats) -> Floats:
@@ -81,11 +85,43 @@ def vertical_shape(lat: Floats, lon: Floats) -> Floats:
     return slant_shape(lat, lon, np.full(np.shape(lat), 90.0), np.zeros(np.shape(lat)))
 
 
-def along_rays(rays: Rays, lat: Floats, lon: Floats) -> tuple[Floats, Floats, Floats, Floats]:
-    """Shape of every ray, slant and straight up at its pierce point, and how both change per unit of foot exponent.
+@dataclass(frozen=True)
+class HighLayer:
+    """The shape of rays, for any foot exponent: logarithms at three of them, each (3, N).
 
-    lat, lon  (rays,) geocentric place of the receiver [deg].  All (rays,) [TECU].  Worked out once in five minutes of
-    each arc: the shape changes slowly along a pass, straight interpolation errs by some hundredths of a TECU at most.
+    slant_log  along the rays; above_log straight up at their pierce points
+    """
+
+    slant_log: Floats
+    above_log: Floats
+
+    def slant(self, exponent: float) -> tuple[Floats, Floats]:
+        """Slant shape (N,) [TECU] and its change per unit of the exponent."""
+        return _between(self.slant_log, exponent)
+
+    def above(self, exponent: float) -> tuple[Floats, Floats]:
+        """Vertical shape at the pierce points (N,) [TECU] and its change per unit of the exponent."""
+        return _between(self.above_log, exponent)
+
+    def where(self, chosen: Ints) -> "HighLayer":
+        """The rays chosen by row numbers."""
+        return HighLayer(self.slant_log[:, chosen], self.above_log[:, chosen])
+
+
+def _between(logs: Floats, exponent: float) -> tuple[Floats, Floats]:
+    """Value and derivative of the parabola through the logarithms at 0, 1, 2, as a value."""
+    bend = 0.5 * (logs[0] - 2.0 * logs[1] + logs[2])
+    tilt = 0.5 * (logs[2] - logs[0])
+    away = exponent - _EXPONENTS[1]
+    value = np.exp(logs[1] + away * (tilt + away * bend))
+    return value, value * (tilt + 2.0 * away * bend)
+
+
+def along_rays(rays: Rays, lat: Floats, lon: Floats) -> HighLayer:
+    """The shape of every ray.
+
+    lat, lon  (rays,) geocentric place of the receiver [deg].  Worked out once in five minutes of each arc: the shape
+    changes slowly along a pass, straight interpolation errs by some hundredths of a TECU at most.
     """
     order = np.lexsort((rays.time, rays.arc))
     arc = rays.arc[order]
@@ -100,11 +136,10 @@ def along_rays(rays: Rays, lat: Floats, lon: Floats) -> tuple[Floats, Floats, Fl
     overhead = np.full(len(at), 90.0)
     # One axis for all arcs: arcs stand far apart on it, so that interpolation never reaches across.
     axis = arc * 1e7 + seconds
-    slant, slant_change = _shape_and_change(lat[at], lon[at], rays.elevation[at], rays.azimuth[at])
-    above, above_change = _shape_and_change(rays.pierce_lat[at], rays.pierce_lon[at], overhead, 0.0 * overhead)
-    found = []
-    for values in (slant, above, slant_change, above_change):
-        along = np.empty(len(order))
-        along[order] = np.interp(axis, axis[node], values)
-        found.append(along)
-    return found[0], found[1], found[2], found[3]
+    slant = _shapes(lat[at], lon[at], rays.elevation[at], rays.azimuth[at], _EXPONENTS)
+    above = _shapes(rays.pierce_lat[at], rays.pierce_lon[at], overhead, 0.0 * overhead, _EXPONENTS)
+    found = np.empty((6, len(order)))
+    for number, values in enumerate((*slant, *above)):
+        # Far outside the plasmapause next to nothing is left; a millionth of a TECU keeps the logarithm.
+        found[number, order] = np.interp(axis, axis[node], np.log(np.maximum(values, 1e-6)))
+    return HighLayer(found[:3], found[3:])
