@@ -6,7 +6,7 @@ Never decides what is a slip: that is for `slips`.
 """
 
 from dataclasses import dataclass, field, replace
-from functools import lru_cache
+from functools import cached_property, lru_cache
 from typing import Any
 
 import numpy as np
@@ -47,14 +47,20 @@ class Series:
     promise: float = np.nan  # noise of one point over scatter of fifth differences
     unit: dict[str, Floats] = field(default_factory=dict)  # noise of one point, per block of epochs
 
-    def runs(self) -> tuple[Ints, Ints]:
-        """Points of the same stretch before each point, and from it on, itself counted (G, S)."""
-        rows = np.arange(len(self.present), dtype=np.int32)[:, None]
-        start = np.maximum.accumulate(np.where(self.begin, rows, 0), axis=0)
-        last = self.present.copy()
-        last[:-1] &= ~self.present[1:] | self.begin[1:]
+    @cached_property
+    def filled(self) -> Floats:
+        """The ionosphere-free phase with zeros where there is none."""
+        return np.asarray(np.nan_to_num(self.geometry))
+
+    def runs(self, columns: Ints | slice = slice(None)) -> tuple[Ints, Ints]:
+        """Points of the same stretch before each point, and from it on, itself counted (G, columns)."""
+        present, begin = self.present[:, columns], self.begin[:, columns]
+        rows = np.arange(len(present), dtype=np.int32)[:, None]
+        start = np.maximum.accumulate(np.where(begin, rows, 0), axis=0)
+        last = present.copy()
+        last[:-1] &= ~present[1:] | begin[1:]
         end = np.minimum.accumulate(np.where(last, rows, len(rows) - 1)[::-1], axis=0)[::-1]
-        return np.where(self.present, rows - start, 0), np.where(self.present, end - rows + 1, 0)
+        return np.where(present, rows - start, 0), np.where(present, end - rows + 1, 0)
 
 
 @dataclass
@@ -208,11 +214,11 @@ _FIFTH = np.array([-1.0, 5.0, -10.0, 10.0, -5.0, 1.0])  # fifth differences: fre
 def measure(series: Series, left: Ints, right: Ints) -> None:
     """Steps of L1 - L2 and of the ionosphere-free phase wherever a whole window is at hand (G, S)."""
     reach = series.reach
-    step = correlate1d(np.nan_to_num(series.geometry), kernel(reach, reach, 0, SMOOTH, reach), axis=0, mode="constant")
+    step = correlate1d(series.filled, kernel(reach, reach, 0, SMOOTH, reach), axis=0, mode="constant")
     clock, count = _middle(step, (left >= reach) & (right >= reach))
     step -= np.where(count >= CLOCK_SATELLITES, clock, np.nan)[:, None]
     series.step = step
-    fifth = correlate1d(np.nan_to_num(series.geometry), _FIFTH, axis=0, mode="constant")
+    fifth = correlate1d(series.filled, _FIFTH, axis=0, mode="constant")
     clock, count = _middle(fifth, (left >= 3) & (right >= 3))
     series.fifth = fifth - np.where(count >= CLOCK_SATELLITES, clock, np.nan)[:, None]
     short = kernel(SHORT, SHORT, 0, 2, SHORT)
@@ -327,7 +333,7 @@ def _geometry_steps(
     step, norm = np.full(len(row), np.nan), np.full(len(row), np.nan)
     b, a = np.minimum(before, reach), np.minimum(after, reach)
     fit = (b >= 2) & (a >= 2) & (a + b >= LEAST)
-    filled = np.nan_to_num(series.geometry)
+    filled = series.filled
     kind = b * 100 + a
     for one in np.unique(kind[fit]):
         b1, a1 = divmod(int(one), 100)
@@ -361,7 +367,7 @@ def widened(series: Series, steps: Steps, left: Ints, right: Ints, hole: Ints) -
     """
     row, column = steps.row, steps.column
     before, after = left[row - hole - 1, column] + 1, right[row, column]
-    filled = np.nan_to_num(series.geometry)
+    filled = series.filled
     widen = {"difference": np.ones(len(row)), "geometry": np.ones(len(row))}
     for name, reach, highest in (("difference", SHORT, 2), ("geometry", series.reach, SMOOTH)):
         b, a = np.minimum(before, reach), np.minimum(after, reach)
@@ -376,10 +382,10 @@ def widened(series: Series, steps: Steps, left: Ints, right: Ints, hole: Ints) -
             if name == "difference":
                 rest = series.difference[place, column[here][:, None]] @ matrix
             else:
-                every = np.einsum("kl,nls->nks", matrix, filled[place])
+                every = np.matmul(matrix, filled[place])
                 others = (left[row[here]] >= b1 + h) & (right[row[here]] >= a1)
                 every = np.where(others[:, None, :], every, np.nan)
-                own = np.einsum("kl,nl->nk", matrix, filled[place, column[here][:, None]])
+                own = filled[place, column[here][:, None]] @ matrix.T
                 count = every.shape[1] * len(here)
                 clock, _ = _middle(every.reshape(count, -1), np.isfinite(every).reshape(count, -1))
                 rest = own - clock.reshape(len(here), -1)

@@ -99,7 +99,8 @@ def find(observations: Observations, choices: ArcChoices) -> Stretches:
                 break
             found.append(slips)
             series.begin[slips.row, slips.column] = True
-            left, right = series.runs()
+            touched = np.unique(slips.column)
+            left[:, touched], right[:, touched] = series.runs(touched)
             steps = steps_beside(series, slips, left, right)
         if len(found) == seen:
             break
@@ -173,12 +174,13 @@ def _accept(series: Series, steps: Steps, left: Ints, right: Ints, choices: ArcC
         told = series.told[steps.row, steps.column]
         loud = in_geometry > np.where(told, 3.0, 4.5)
         loud |= ((dim | (in_geometry > 2.0)) & (in_difference > 5.0)) | (blind & (in_wide > 4.0))
+        needed = np.where(told, choices.told_significance, choices.significance)
+        loud &= sum(np.nan_to_num(part) ** 2 for part in (in_geometry, in_difference, in_wide)) > needed
     steps = steps.take(loud)
-    told, blind, dim = told[loud], blind[loud], dim[loud]
+    blind, dim, needed = blind[loud], dim[loud], needed[loud]
     in_geometry, in_difference = in_geometry[loud], np.nan_to_num(in_difference[loud])
     size, large = np.nan_to_num(np.abs(steps.difference)), np.nan_to_num(np.abs(steps.geometry))
     fit = _fit(series, steps)
-    needed = np.where(told, choices.told_significance, choices.significance)
     ragged = np.flatnonzero(fit.none - fit.chi > needed)
     wide = steps.take(ragged)
     again = _fit(series, widened(series, wide, left, right, np.zeros(len(ragged), dtype=np.int64)))
@@ -250,7 +252,7 @@ def _join(series: Series, slipped: Bools, choices: ArcChoices) -> tuple[int, tup
     count = len(row)
     bend, bend_sigma = np.full(count, np.nan), np.full(count, np.nan)
     step, step_sigma = np.full(count, np.nan), np.full(count, np.nan)
-    filled = np.nan_to_num(series.geometry)
+    filled = series.filled
     for k in range(count):
         r, c, h, block = int(row[k]), int(column[k]), int(hole[k]), int(row[k]) // BLOCK
         b, a = int(min(before[k], SHORT)), int(min(after[k], SHORT))
