@@ -80,7 +80,7 @@ def test_along_rays_interpolates_finely(rng: np.random.Generator) -> None:
         exact = slant_shape(lat, lon, rays.elevation, rays.azimuth, exponent)
         assert slant == pytest.approx(exact, abs=0.015, rel=0.01)
         overhead = slant_shape(rays.pierce_lat, rays.pierce_lon, np.full(len(rays), 90.0), 0.0 * lat, exponent)
-        assert above == pytest.approx(overhead, abs=0.02, rel=0.01)
+        assert above == pytest.approx(overhead, abs=0.03, rel=0.01)
         steeper = slant_shape(lat, lon, rays.elevation, rays.azimuth, exponent + 0.01)
         assert slant_change == pytest.approx((steeper - exact) / 0.01, abs=0.03, rel=0.05)
         assert np.all(above_change > 0)

@@ -6,7 +6,7 @@ every arc is a random effect of known size, so a badly levelled arc cannot pull 
 as a map: the map is made afterwards from the calibrated rays (`field`).
 """
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -320,7 +320,7 @@ def _iterate(
     amplitude = float(x[-1])
     disturbances = [
         part.mapping * relative * vertical_content,  # the height a single shell stands for
-        amplitude * exponent_sigma * layer.slant(exponent)[1],  # the shape of the plasmasphere
+        amplitude * _one_sigma(layer.slant, exponent, exponent_sigma),  # the shape of the plasmasphere
     ]
     moved = np.array([normal.respond(disturbance) for disturbance in disturbances])
     covariance = normal.covariance()
@@ -355,6 +355,11 @@ def _foot_step(
     asked = float(change @ normal.weigh(residual)) + told * (FOOT_EXPONENT - exponent)
     rest = min(FOOT_EXPONENT_REST, choices.foot_exponent_sigma)
     return asked / known, float(np.hypot(known**-0.5, rest))
+
+
+def _one_sigma(shape: Callable[[float], tuple[Floats, Floats]], exponent: float, sigma: float) -> Floats:
+    """How a shape changes when it grows one sigma faster toward its feet, the larger of the two ways [TECU]."""
+    return shape(exponent + sigma)[0] - shape(exponent)[0]
 
 
 def _scatter_by(group: Ints, ratio: Floats, groups: int) -> Floats:
@@ -546,11 +551,12 @@ def _leanings(
     """
     relative = relative_mapping_sigma(rays.elevation, rays.shell_height_m, choices.shell_height_sigma_m)
     moved, amplitude = estimate.moved, float(estimate.x[-1])
-    slant, slant_change = layer.slant(estimate.exponent)
-    above, above_change = layer.above(estimate.exponent)
+    slant, above = layer.slant(estimate.exponent)[0], layer.above(estimate.exponent)[0]
+    slant_step = _one_sigma(layer.slant, estimate.exponent, estimate.exponent_sigma)
+    above_step = _one_sigma(layer.above, estimate.exponent, estimate.exponent_sigma)
     by_bias = per_ns * (moved[:, rows[:, 0]] + moved[:, rows[:, 1]]) / rays.mapping
     by_amplitude = moved[:, -1:] * (above - slant / rays.mapping)
     leanings = by_bias + by_amplitude
     leanings[0] += relative * low_slant / rays.mapping
-    leanings[1] += amplitude * estimate.exponent_sigma * (slant_change / rays.mapping - above_change)
+    leanings[1] += amplitude * (slant_step / rays.mapping - above_step)
     return np.asarray(leanings)
