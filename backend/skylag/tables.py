@@ -825,3 +825,45 @@ class Patches:
     aatr: Floats
     breaks: Ints  # (B, receivers) arcs broken without a long silence
     losses: Ints  # (B, receivers) signals lost above the elevation limit
+
+
+# ---------------------------------------------------------------------------------------------- the day ahead
+
+
+@dataclass(frozen=True)
+class Outlook:
+    """What is expected at places for the hours ahead, made when a day was in and the next was not.
+
+    known_until    the last day used; hours (H,) GPS time, starts of the hours spoken of
+    names (P,)     of sites, "" for cells; lats, lons (P,) [deg]
+    delay (H, P)   expected vertical delay on 1575.42 MHz [m]
+    levels (Q,)    of delay_quantiles (H, P, Q) [m]; slope_levels (S,) of slope_quantiles (H, P, S) [mm/km]
+    uses (U,)      names; strained, broken (U, H, P) chance that the hour is strained or worse, and broken
+    phases (H,)    where each hour stands in a storm, as told
+    seen_days (P,) of the last 27 days on which the place was seen at all
+    basis          what it rests on, in words
+    """
+
+    known_until: np.datetime64
+    hours: Times
+    names: Words
+    lats: Floats
+    lons: Floats
+    delay: Floats
+    levels: Floats
+    delay_quantiles: Floats
+    slope_levels: Floats
+    slope_quantiles: Floats
+    uses: Words
+    strained: Floats
+    broken: Floats
+    phases: Words
+    seen_days: Floats
+    basis: tuple[str, ...]
+
+    def __post_init__(self) -> None:
+        shape = (len(self.hours), len(self.lats))
+        _require(self.delay.shape == shape, self, f"delay must have the shape {shape}")
+        _require(self.delay_quantiles.shape == (*shape, len(self.levels)), self, "one delay quantile per level")
+        _require(self.slope_quantiles.shape == (*shape, len(self.slope_levels)), self, "one slope quantile per level")
+        _require(self.strained.shape == self.broken.shape == (len(self.uses), *shape), self, "one chance per use")
