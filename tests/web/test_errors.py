@@ -28,7 +28,7 @@ def routes() -> list[APIRoute]:
 
 
 ADDRESSES = sorted(route.path for route in routes())
-GOOD = {"lat": "-41", "lon": "147", "time": "2031-05-11T05:00:00Z"}
+GOOD = {"lat": "-41", "lon": "147", "time": "2031-05-11T05:00:00Z", "site": "Gannet Field", "use": "ground"}
 
 
 def check_shape(answer, status: int, kind: str) -> dict:

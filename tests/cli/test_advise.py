@@ -1,0 +1,67 @@
+"""The commands advise and sites."""
+
+from pathlib import Path
+
+import pytest
+from tests.builders import write_archive
+
+from skylag import settings
+from skylag.cli import main
+
+
+@pytest.fixture(scope="module")
+def place(tmp_path_factory: pytest.TempPathFactory) -> str:
+    return str(write_archive(tmp_path_factory.mktemp("advise")))
+
+
+def test_all_sites_in_a_line_each(place: str, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["advise", "--archive", place]) == 0
+    told = capsys.readouterr().out
+    for name in ("Northport", "Gannet Field", "Kelp Island", "Southmere quarry"):
+        assert f"{name}: Survey (rtk, over 10 km" in told
+    assert told.startswith("Invented data")
+
+
+def test_a_site_with_sheet_and_calendar(place: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    paper, page, dates = tmp_path / "a.pdf", tmp_path / "a.html", tmp_path / "a.ics"
+    asked = ["advise", "--archive", place, "--day", "2031-05-11", "--site", "Gannet Field", "--hours", "07:00-17:00"]
+    failed = ["--failed", "2031-05-11T05:10:00Z"]
+    assert main([*asked, *failed, "--sheet", str(paper), "--calendar", str(dates)]) == 0
+    told = capsys.readouterr().out
+    for word in ("Approaches available", "Ground-based augmentation", "Was it the ionosphere", "Assumed:", "GPSA",
+                 "not for navigation"):  # fmt: skip
+        assert word in told
+    assert paper.read_bytes().startswith(b"%PDF-")
+    assert dates.read_bytes().startswith(b"BEGIN:VCALENDAR\r\n")
+    assert main([*asked, "--sheet", str(page)]) == 0
+    assert "<style>" in page.read_text(encoding="utf-8")
+
+
+def test_a_place_that_is_no_site(place: str, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["advise", "--archive", place, "--at", "-40", "146.5"]) == 0
+    assert "-40, 146.5" in capsys.readouterr().out
+
+
+@pytest.mark.parametrize(
+    ("more", "word"),
+    [(["--day", "2031-01-01"], "keeps no such day"), (["--site", "Atlantis"], "has no site"),
+     (["--at", "95", "0"], "lat"), (["--site", "Northport", "--baseline", "-1"], "baseline_km")],
+)  # fmt: skip
+def test_what_cannot_be_answered(place: str, more: list[str], word: str, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["advise", "--archive", place, *more]) == 3
+    assert word in capsys.readouterr().err
+
+
+def test_sites_into_a_region(sample_folder: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    region = tmp_path / "region.toml"
+    region.write_text((sample_folder / "region.toml").read_text(encoding="utf-8"), encoding="utf-8")
+    table = tmp_path / "sites.csv"
+    table.write_text('name,lat,lon\n"Old ""brook"" \\ east",-40.5,146\nPort Sallow,0,0\nbad,x,1\n', encoding="utf-8")
+    assert main(["sites", str(table), "--region", str(region), "--kind", "aerodrome"]) == 1
+    told = capsys.readouterr()
+    assert "bad has no place" in told.err
+    assert "left as it is: Port Sallow" in told.err
+    sites = settings.read_region(region).sites
+    assert (sites[-1].name, sites[-1].lat, sites[-1].kind) == ('Old "brook" \\ east', -40.5, "aerodrome")
+    assert len(sites) == len(settings.read_region(sample_folder / "region.toml").sites) + 1
+    assert main(["sites", str(tmp_path / "none.csv"), "--region", str(region)]) == 3
