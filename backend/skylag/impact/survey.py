@@ -340,7 +340,8 @@ def hourly_index(fields: Fields, places: Sequence[tuple[float, float]]) -> tuple
 def _verdicts(
     job: Job, seen: Bools, warned: npt.NDArray[np.uint8], told: dict[str, Floats], count: Ints, dilution: Floats
 ) -> tuple[npt.NDArray[np.str_], tuple[str, ...]]:
-    """Verdict and reason per epoch: the first of unseen, warnings, satellites, height, horizontal, fixing."""
+    """Verdict and reason per epoch: the first of unseen, warnings, satellites, an unknown slope, height, horizontal,
+    fixing."""
     known = count >= 0
     over = f"over {job.baseline_km:g} km" if job.method != "network" else "between the reference stations"
     reasons = []
@@ -352,13 +353,13 @@ def _verdicts(
             why = "the map does not see the place: nothing can be said"
         elif warned[t]:
             why = f"{STATE_NAMES[int(warned[t])]}: a front, an irregular patch or a steep slope is reported here"
-        elif _only_sigma(job, told, t):
-            seen_well = False
-            why = f"the slope is known to ± {told['slope_sigma'][t]:.0f} mm/km only: nothing can be said"
         elif known[t] and count[t] < job.least_satellites:
             why = f"{int(count[t])} satellites above {job.mask_deg:g} degrees, {job.least_satellites} are needed"
         elif known[t] and not dilution[t] <= job.most_dilution:
             why = f"dilution of position {float(dilution[t]):.1f}, {job.most_dilution:g} is the most"
+        elif _only_sigma(job, told, t):
+            seen_well = False
+            why = f"the slope is known to ± {told['slope_sigma'][t]:.0f} mm/km only: nothing can be said"
         elif not told["vertical_95"][t] <= job.vertical_mm:
             why = f"height error {told['vertical_95'][t]:.0f} mm (95 %) {over}, tolerance {job.vertical_mm:g} mm"
         elif not told["horizontal_95"][t] <= job.horizontal_mm:
