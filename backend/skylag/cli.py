@@ -15,7 +15,7 @@ from datetime import date
 from pathlib import Path
 from typing import TextIO
 
-from skylag import advice_door, settings
+from skylag import advice_door, settings, work_door
 from skylag.chain import Choices
 from skylag.errors import Refused, SkylagError
 from skylag.formats import results
@@ -77,6 +77,7 @@ def _parser() -> argparse.ArgumentParser:
     _demo_parser(commands)
     _serve_parser(commands)
     advice_door.add(commands, CAUTION)
+    work_door.add(commands, CAUTION, _date, _minutes)
     return parser
 
 
@@ -139,6 +140,8 @@ def _serve_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]
     parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
     parser.add_argument("--host", default="", help="address to listen on (127.0.0.1)")
     parser.add_argument("--port", default="", help="port (8017; 0 takes a free one)")
+    parser.add_argument("--reading", choices=("open", "key"), default="open", help="off loopback, who may read (open)")
+    parser.add_argument("--work", action="store_true", help="also work on the queue, in this process")
     parser.set_defaults(run=_serve)
 
 
@@ -278,23 +281,40 @@ def _is_date(name: str) -> bool:
 
 def _serve(options: argparse.Namespace) -> int:
     given = settings.from_environment()
-    return _open_page(options.archive or given.archive, options.host or given.host, options.port, browser=False)
+    workers = (given.workers or settings.default_workers()) if options.work else ""
+    return _open_page(
+        options.archive or given.archive, options.host or given.host, options.port, browser=False,
+        reading=options.reading, workers=workers,
+    )  # fmt: skip
 
 
-def _open_page(place: str, host: str, port: str, *, browser: bool) -> int:
+def _open_page(
+    place: str, host: str, port: str, *, browser: bool, reading: str = "open", workers: str = ""
+) -> int:
     from skylag.archive import open_archive
+    from skylag.jobs.board import Worker
+    from skylag.web.access import for_host
     from skylag.web.app import create_app, serve
 
     number = settings.port_number(port) if port else settings.from_environment().port
     with open_archive(place) as archive:
-        app = create_app(archive)
+        app = create_app(archive, clock=work_door.clock, access=for_host(host, reading))
+        stop = threading.Event()
+        helper = threading.Thread(target=Worker(archive, workers, work_door.clock).run, args=(stop,))
 
         def ready(address: str) -> None:
             print(f"the page is at {address} (stop with Ctrl-C). {CAUTION}", flush=True)
             if browser:
                 threading.Thread(target=webbrowser.open, args=(address,), daemon=True).start()
+            if workers:
+                helper.start()
 
-        serve(app, host, number, ready)
+        try:
+            serve(app, host, number, ready)
+        finally:
+            stop.set()
+            if helper.is_alive():
+                helper.join()
     return 0
 
 

@@ -280,9 +280,9 @@ def test_sixteen_receivers_within_twenty_seconds(
         for piece in pieces:
             piece.write(incoming, 0, 23)
         assert turn_until_made(watch) == 1
+        clock.set("23:30:00")
         for piece in pieces:
             piece.write(incoming, 23, 24)
-        clock.set("23:59:55")
         began, busy = time.perf_counter(), time.process_time()
         assert turn_until_made(watch, 3) == 1
         wall_s, busy_s = time.perf_counter() - began, time.process_time() - busy
