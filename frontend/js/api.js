@@ -6,7 +6,21 @@
 import { WORDS } from "./words.js";
 
 /**
- * @typedef {{region: string, day: string, simulated: boolean}} DayEntry
+ * @typedef {object} DayEntry
+ * @property {string} region
+ * @property {string} day
+ * @property {boolean} simulated
+ * @property {string} saved   when it was written
+ * @property {Record<string, number>} shares  state -> share of all cells and times
+ * @property {Record<string, Record<string, number>>} siteShares
+ * @property {number} slope   mm/km that 99 of 100 seen cells stay under, NaN where not told
+ * @property {number} flags
+ */
+/**
+ * @typedef {{receiver: string, satellite: string, times: number[], delay: number[], sigma: number, change: number,
+ *   distance: number, elevation: number}} Sightline
+ */
+/**
  * @typedef {{name: string, lat: number, lon: number, kind: string}} Site
  * @typedef {object} Flag
  * @property {number} start  ms UTC
@@ -73,7 +87,8 @@ import { WORDS } from "./words.js";
  */
 /**
  * @typedef {{lat: number, lon: number, times: number[], delay: number[], sigma: number[], slope: number[],
- *   slopeSigma: number[], state: import("./colour.js").StateName[]}} Series
+ *   slopeSigma: number[], slopeHeading: number[], support: number[], sentence: string[],
+ *   place: [number, number], state: import("./colour.js").StateName[]}} Series
  */
 /** @typedef {{signal?: AbortSignal}} How */
 
@@ -150,7 +165,16 @@ function flagOf(raw) {
 /** Stored days, newest first. @param {How} [how] @returns {Promise<DayEntry[]>} */
 export async function days(how) {
   const { days: entries } = await ask("/api/days", how);
-  return entries.map(({ region, day: date, simulated }) => ({ region, day: date, simulated }));
+  return entries.map((raw) => ({
+    region: raw.region,
+    day: raw.day,
+    simulated: raw.simulated,
+    saved: `${raw.saved_at_utc} ${raw.version}`,
+    shares: raw.state_shares,
+    siteShares: raw.site_shares,
+    slope: number(raw.highest?.slope),
+    flags: Object.values(raw.flag_counts).reduce((a, b) => a + b, 0),
+  }));
 }
 
 /** The facts of a day, with its flags. @param {string} region @param {string} date @param {How} [how] @returns {Promise<Day>} */
@@ -213,6 +237,9 @@ export async function rays(region, date, time, how) {
   return raw.pierce_lat.map((lat, i) => ({ lat, lon: raw.pierce_lon[i], elevation: raw.elevation[i], receiver: raw.receiver[i] }));
 }
 
+/** Degrees from north through east. */
+const headingOf = (east, north) => ((Math.atan2(east, north) * 180) / Math.PI + 360) % 360;
+
 /**
  * What is known at a place and time.
  * @param {string} region @param {string} date @param {[number, number]} place @param {number} time @param {How} [how]
@@ -220,7 +247,6 @@ export async function rays(region, date, time, how) {
  */
 export async function reading(region, date, [lat, lon], time, how) {
   const raw = await ask(`${dayAddress(region, date)}/reading?lat=${lat}&lon=${lon}&time=${instant(time)}`, how);
-  const [east, north] = [number(raw.slope_east), number(raw.slope_north)];
   return {
     lat: raw.lat,
     lon: raw.lon,
@@ -231,7 +257,7 @@ export async function reading(region, date, [lat, lon], time, how) {
     delaySigma: number(raw.vertical_delay_sigma),
     slope: number(raw.slope),
     slopeSigma: number(raw.slope_sigma),
-    slopeHeading: ((Math.atan2(east, north) * 180) / Math.PI + 360) % 360,
+    slopeHeading: headingOf(number(raw.slope_east), number(raw.slope_north)),
     support: number(raw.support),
     flags: raw.flags.map(flagOf),
   };
@@ -242,17 +268,21 @@ export async function reading(region, date, [lat, lon], time, how) {
  * @param {string} region @param {string} date @param {[number, number]} place @param {How} [how]
  * @returns {Promise<Series>}
  */
-export async function series(region, date, [lat, lon], how) {
-  const raw = await ask(`${dayAddress(region, date)}/series?lat=${lat}&lon=${lon}`, how);
+export async function series(region, date, [lat0, lon0], how) {
+  const raw = await ask(`${dayAddress(region, date)}/series?lat=${lat0}&lon=${lon0}`, how);
   const seen = (values) => values.map((v, i) => (raw.state[i] === "unseen" ? NaN : number(v)));
   return {
-    lat,
-    lon,
+    lat: lat0,
+    lon: lon0,
     times: raw.times_utc.map(milliseconds),
     delay: seen(raw.vertical_delay),
     sigma: seen(raw.vertical_delay_sigma),
     slope: seen(raw.slope),
     slopeSigma: seen(raw.slope_sigma),
+    slopeHeading: raw.slope_east.map((east, i) => headingOf(number(east), number(raw.slope_north[i]))),
+    support: raw.support,
+    sentence: raw.sentence,
+    place: [lat0, lon0],
     state: raw.state,
   };
 }
@@ -299,4 +329,50 @@ export async function coast({ south, north, west, east }, region, how) {
 /** Address of the day's flags as a file. @param {string} region @param {string} date @param {"csv"|"geojson"} kind */
 export function flagsFile(region, date, kind) {
   return `${dayAddress(region, date)}/flags.${kind}`;
+}
+
+/** Addresses of the whole day's maps as files. @param {string} region @param {string} date @param {"field.nc"|"maps.inx"} name */
+export function dayFile(region, date, name) {
+  return `${dayAddress(region, date)}/${name}`;
+}
+
+/**
+ * Lines of sight that pass near a place around a time.
+ * @param {string} region @param {string} date @param {[number, number]} place @param {number} time @param {How} [how]
+ * @returns {Promise<Sightline[]>}
+ */
+export async function witnesses(region, date, [lat, lon], time, how) {
+  const { lines } = await ask(`${dayAddress(region, date)}/witnesses?lat=${lat}&lon=${lon}&time=${instant(time)}`, how);
+  return lines.map((raw) => ({
+    receiver: raw.receiver,
+    satellite: raw.satellite,
+    times: raw.times_utc.map(milliseconds),
+    delay: numbers(raw.vertical_delay),
+    sigma: number(raw.vertical_delay_sigma),
+    change: number(raw.change_m),
+    distance: raw.distance_km,
+    elevation: number(raw.elevation),
+  }));
+}
+
+/**
+ * What each receiver gave, newest day first.
+ * @param {string} region @param {How} [how]
+ */
+export async function network(region, how) {
+  const raw = await ask(`/api/network?region=${encodeURIComponent(region)}`, how);
+  return raw.days.map(({ day: date, receivers }) => ({
+    day: date,
+    receivers: receivers.map((one) => ({
+      name: one.name,
+      received: number(one.received),
+      gaps: number(one.gaps),
+      slips: number(one.slips),
+      arcs: number(one.arcs),
+      level: number(one.level_sigma_tecu),
+      leftOut: number(one.left_out_rms_tecu),
+      faults: one.faults,
+      biases: one.biases.map((bias) => ({ pair: bias.pair, value: number(bias.bias_ns), sigma: number(bias.sigma_ns) })),
+    })),
+  }));
 }

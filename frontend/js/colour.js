@@ -53,14 +53,20 @@ const DELAY = ["#f7f0e0", "#cfe0cf", "#8fbfb4", "#4f96a0", "#256a87", "#1c4169",
 const SLOPE = ["#f7f0e0", "#f0d49b", "#e0a458", "#c56a35", "#9a3a35", "#661a3c", "#33102f"];
 const UNCERTAINTY = ["#f7f0e0", "#e3dccb", "#c6c0b6", "#a29ea0", "#7c7b87", "#55586b", "#2e3549"];
 
+const DIFFERENCE = {
+  day: ["#14485a", "#4f8c9b", "#aac9c9", "#f7f0e0", "#e3b9a0", "#b9695c", "#742b3c"],
+  night: ["#a6d4dd", "#5b9aa9", "#2b5a67", "#1a1e28", "#63333c", "#b9695c", "#f2c0ae"],
+};
+
 /**
  * The colours of a layer from its low end to its high end. By day more is darker, by night more is lighter, so that
  * the ground always means "little".
- * @param {"delay"|"uncertainty"|"slope"} layer
+ * @param {"delay"|"uncertainty"|"slope"|"difference"} layer
  * @param {Theme} theme
  * @returns {string[]}
  */
 export function ramp(layer, theme) {
+  if (layer === "difference") return DIFFERENCE[theme];
   const colours = { delay: DELAY, uncertainty: UNCERTAINTY, slope: SLOPE }[layer];
   return theme === "night" ? [...colours].reverse() : colours;
 }

@@ -75,11 +75,11 @@ export function erase(element) {
 /**
  * A picture of a figure as a file to keep.
  * @param {{data: object[], layout: object}} figure
- * @param {{width: number, height: number, name: string}} how
+ * @param {{width: number, height: number, name: string, format: "png"|"svg"}} how
  */
-export async function takePicture(figure, { width, height, name }) {
+export async function takePicture(figure, { width, height, name, format }) {
   const Plotly = await plotly();
-  const url = await Plotly.toImage({ data: figure.data, layout: { ...figure.layout, width, height } }, { format: "png", width, height, scale: 2 });
+  const url = await Plotly.toImage({ data: figure.data, layout: { ...figure.layout, width, height } }, { format, width, height, scale: format === "png" ? 2 : 1 });
   const link = document.createElement("a");
   link.href = url;
   link.download = name;

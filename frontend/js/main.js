@@ -5,18 +5,25 @@
 
 import * as api from "./api.js";
 import { begin } from "./drawing.js";
+import { medianMap, sameGrid } from "./figures/compare.js";
 import { frameOf } from "./figures/map.js";
 import { nearest } from "./figures/strip.js";
+import { quietDays } from "./figures/year.js";
 import { ChartPanel } from "./panels/chart.js";
 import { ClockPanel } from "./panels/clock.js";
+import { CurvesPanel } from "./panels/curves.js";
 import { FlagsPanel } from "./panels/flags.js";
 import { LegendPanel } from "./panels/legend.js";
 import { MastheadPanel } from "./panels/masthead.js";
+import { NetworkPanel } from "./panels/network.js";
 import { trouble } from "./panels/parts.js";
-import { ReadingPanel } from "./panels/reading.js";
+import { PlayerPanel } from "./panels/player.js";
+import { PresentPanel } from "./panels/present.js";
+import { ReadingPanel, readingOf } from "./panels/reading.js";
 import { SeriesPanel } from "./panels/series.js";
+import { YearPanel } from "./panels/year.js";
 import { State } from "./state.js";
-import { WORDS } from "./words.js";
+import { dayText, WORDS } from "./words.js";
 
 /**
  * What the panels draw from.
@@ -28,6 +35,7 @@ import { WORDS } from "./words.js";
  * @property {number} index  of `time` in `fields`
  * @property {import("./api.js").SiteStates|null} siteStates
  * @property {import("./api.js").Series|null} series  of the chosen place, null while it is on its way
+ * @property {{fields?: import("./api.js").Window, index?: number, label?: string, trouble?: string}|null} other  the map compared with
  * @property {{lat: number, lon: number, elevation: number, receiver: string}[]} rays
  * @property {number} raysTime  the time they belong to, NaN where none were asked for
  * @property {[number, number][][]} coast
@@ -38,10 +46,10 @@ const at = (id) => /** @type {any} */ (document.getElementById(id));
 
 const state = new State({ history, location, listen: (type, f) => window.addEventListener(type, f) });
 
-const chart = new ChartPanel({ map: at("map"), cells: at("map-cells"), frame: at("map-frame"), title: at("chart-title"), time: at("chart-time"), note: at("map-note") }, state);
+const chart = new ChartPanel({ map: at("map"), cells: at("map-cells"), frame: at("map-frame"), title: at("chart-title"), time: at("chart-time"), note: at("map-note"), other: at("other-box"), compared: at("compared"), table: at("map-table") }, state);
 const legend = new LegendPanel(at("legend"), state);
 const clock = new ClockPanel(
-  { strip: at("strip"), names: at("strip-names"), range: at("time"), text: at("time-text"), reason: at("strip-reason"), hint: at("strip-help") },
+  { strip: at("strip"), names: at("strip-names"), range: at("time"), text: at("time-text"), reason: at("strip-reason"), hint: at("strip-help"), table: at("strip-table") },
   state,
 );
 const reading = new ReadingPanel(
@@ -50,19 +58,33 @@ const reading = new ReadingPanel(
 );
 const series = new SeriesPanel({ plot: at("series"), line: at("series-now"), table: at("series-table") });
 const flags = new FlagsPanel(at("flag-table"), state);
+const year = new YearPanel(
+  {
+    strip: at("year-strip"), marks: at("year-marks"), who: at("year-who"), span: at("year-span"), worst: at("year-worst"), table: at("year-table"),
+    note: at("year-note"), versus: at("versus"), how: at("versus-how"),
+  },
+  state,
+);
+const present = new PresentPanel({ age: at("present-age"), back: at("present-back"), fails: at("present-fails"), flags: at("present-flags"), next: at("present-next"), note: at("present-if") }, state);
+const network = new NetworkPanel({ said: at("network-said"), table: at("network-table") }, state);
+const curves = new CurvesPanel(at("curves"), at("curves-body"));
+const player = new PlayerPanel({ button: at("play"), rate: at("rate") }, state, () => Boolean(scene?.fields) && scene.index >= 0);
 const masthead = new MastheadPanel(
   {
     name: at("region-name"), day: at("day"), before: at("day-before"), after: at("day-after"), clock: at("clock"), layer: at("layer"),
     theme: at("theme"), simulated: at("simulated"), age: at("age"), origin: at("origin"), caution: at("caution"),
-    csv: at("flags-csv"), geojson: at("flags-geojson"), png: at("map-png"), announce: at("announce"),
+    csv: at("flags-csv"), geojson: at("flags-geojson"), png: at("map-png"), svg: at("map-svg"), print: at("print"),
+    netcdf: at("day-netcdf"), ionex: at("day-ionex"), asks: at("asks"), announce: at("announce"),
   },
   state,
-  { picture: () => chart.picture(), themeChanged: () => showAll() },
+  { picture: (format) => chart.picture(format), themeChanged: () => showAll() },
 );
+at("map-csv").addEventListener("click", () => chart.textTable());
+at("series-csv").addEventListener("click", () => series.textTable());
 
 /** @type {import("./api.js").DayEntry[]} */ let days = [];
 /** @type {Scene|null} */ let scene = null;
-/** @type {Map<number, Promise<import("./api.js").Window>>} */ const hours = new Map();
+/** @type {Map<string, Promise<import("./api.js").Window>>} */ const hours = new Map();
 /** @type {Record<string, AbortController>} */ const running = {};
 
 /** A signal for one kind of request; asking again ends the one before, so no reply for an old state is drawn. */
@@ -77,11 +99,16 @@ const gone = (error) => error?.name === "AbortError";
 function showAll() {
   if (!scene) return;
   scene.theme = masthead.theme;
-  for (const panel of [masthead, chart, legend, clock, reading, series, flags]) panel.show(scene);
+  at("main").dataset.ask = scene.view.ask;
+  for (const panel of [masthead, year, present, network, chart, legend, clock, reading, series, flags, curves, player]) panel.show(scene);
 }
 
-/** The first epoch to look at when the link names none: the middle of the day's worst flag, else the day's middle. */
+/**
+ * The first epoch to look at when the link names none: now, the newest; else the middle of the day's worst flag, or the
+ * day's middle.
+ */
 function firstTime(day) {
+  if (state.view.ask === "now") return day.times[day.times.length - 1];
   const rank = { broken: 2, strained: 1 };
   const [worst] = day.flags
     .filter((flag) => flag.state in rank)
@@ -108,6 +135,7 @@ async function start() {
     return;
   }
   masthead.days(days);
+  year.days(days);
   if (!days.length) {
     empty();
     return;
@@ -121,7 +149,9 @@ function choose() {
   const { view } = state;
   const region = days.some((d) => d.region === view.region) ? view.region : days[0].region;
   const here = days.filter((d) => d.region === region);
-  const day = here.some((d) => d.day === view.day) ? view.day : here.reduce((a, b) => (b.day > a.day ? b : a)).day;
+  const newest = here.reduce((a, b) => (b.day > a.day ? b : a)).day;
+  const follows = view.ask === "now" && view.minute === null;
+  const day = !follows && here.some((d) => d.day === view.day) ? view.day : newest;
   state.change({ region, day }, { step: "none" });
 }
 
@@ -137,16 +167,16 @@ async function loadDay() {
     const view = state.view;
     const time = view.minute === null ? firstTime(found) : found.times[nearest(found.times, found.start + view.minute * 60000)];
     settling = true;
-    scene = { view, day: found, time, fields: null, index: 0, siteStates, series: null, rays: [], raysTime: NaN, coast: sameRegion ? scene.coast : [], theme: masthead.theme };
+    scene = { view, day: found, time, fields: null, index: 0, siteStates, series: null, rays: [], raysTime: NaN, other: null, coast: sameRegion ? scene.coast : [], theme: masthead.theme };
     state.change(
-      { minute: Math.round((time - found.start) / 60000), place: view.place ?? /** @type {[number, number]} */ (firstPlace(found, siteStates, time)) },
+      { minute: view.ask === "now" && view.minute === null ? null : Math.round((time - found.start) / 60000), place: view.place ?? /** @type {[number, number]} */ (firstPlace(found, siteStates, time)) },
       { step: "none" },
     );
     settling = false;
     scene.view = state.view;
     at("main").dataset.loading = "false";
     showAll();
-    await Promise.all([loadFields(), sameRegion ? null : loadCoast(signal), loadPlace(), loadRays()]);
+    await Promise.all([loadFields(), sameRegion ? null : loadCoast(signal), loadPlace(), loadRays(), loadOther()]);
   } catch (error) {
     if (!gone(error)) fail(error, loadDay);
   }
@@ -163,19 +193,55 @@ async function loadCoast(signal) {
   }
 }
 
-/** The maps of the hour that holds the time; an hour once fetched stays until the day changes. */
-function hourOf(time) {
+/** The maps of the hour that holds the time, of this day or of another; an hour once fetched stays until the day changes. */
+function hourOf(time, other = "") {
   const { day, view } = scene;
+  const date = other || view.day;
+  const shift = other ? Date.parse(other) - Date.parse(view.day) : 0;
   const first = day.times[0] - 1000;
   const number = Math.floor((time - first) / 3600000);
-  let promise = hours.get(number);
+  const key = `${date} ${number}`;
+  let promise = hours.get(key);
   if (!promise) {
-    const from = first + number * 3600000;
-    promise = api.fields(view.region, view.day, from, from + 3600000);
-    hours.set(number, promise);
-    promise.catch(() => hours.delete(number));
+    const from = first + number * 3600000 + shift;
+    promise = api.fields(view.region, date, from, from + 3600000);
+    hours.set(key, promise);
+    promise.catch(() => hours.delete(key));
   }
   return promise;
+}
+
+/** The map to compare with, at the same time of day: of one day, or the median of the quiet days around. */
+async function loadOther() {
+  const mine = scene;
+  const { view, time } = mine;
+  if (!view.versus || view.ask !== "past") {
+    mine.other = null;
+    return;
+  }
+  const here = days.filter((entry) => entry.region === view.region);
+  const dates = view.versus === "quiet" ? quietDays(here, view.day) : [view.versus];
+  const label = view.versus === "quiet" ? WORDS.quietMedian(dates.length) : dayText(view.versus);
+  try {
+    if (!dates.length) throw new Error(WORDS.noQuiet);
+    const windows = await Promise.all(dates.map((date) => hourOf(time, date)));
+    const maps = windows
+      .map((fields, i) => {
+        const wish = time + Date.parse(dates[i]) - Date.parse(view.day);
+        return { fields, index: nearest(fields.times, wish), wish };
+      })
+      .filter(({ fields, index, wish }) => Math.abs(fields.times[index] - wish) <= 1800000);
+    if (!maps.length) throw new Error(WORDS.otherMissing);
+    const own = await hourOf(time);
+    if (mine !== scene || scene.time !== time || scene.view.versus !== view.versus) return;
+    if (!maps.every(({ fields }) => sameGrid(fields, own))) throw new Error(WORDS.otherGrid);
+    mine.other = { ...(view.versus === "quiet" ? medianMap(maps) : maps[0]), label };
+  } catch (error) {
+    if (mine !== scene || scene.time !== time) return;
+    mine.other = { trouble: error.message };
+  }
+  chart.show(scene);
+  legend.show(scene);
 }
 
 async function loadFields() {
@@ -235,12 +301,23 @@ async function loadSeries() {
     series.give(found);
     scene.series = found;
     clock.show(scene);
+    readNow();
   } catch (error) {
     if (!gone(error)) {
       series.give(null);
       at("announce").textContent = error.message;
     }
   }
+}
+
+/** The reading from the numbers already here. @returns {boolean}  were they here */
+function readNow() {
+  const found = readingOf(scene);
+  if (!found) return false;
+  clearTimeout(readingSoon);
+  running.reading?.abort();
+  reading.answer(found, scene);
+  return true;
 }
 
 const loadPlace = () => Promise.all([loadReading(), loadSeries()]);
@@ -280,7 +357,11 @@ function empty() {
 state.addEventListener("change", (event) => {
   const changed = /** @type {CustomEvent<Set<string>>} */ (event).detail;
   if (!scene || settling) return;
-  if (changed.has("region") || changed.has("day")) {
+  if (changed.has("ask") && state.view.ask === "now" && state.view.minute === null) {
+    follow();
+    choose();
+  }
+  if (state.view.region !== scene.view.region || state.view.day !== scene.day.day) {
     loadDay();
     return;
   }
@@ -296,14 +377,42 @@ state.addEventListener("change", (event) => {
     }
     if (scene.view.show.has("rays")) loadRays();
     clearTimeout(readingSoon);
-    running.reading?.abort();
-    at("answer").setAttribute("aria-busy", "true");
-    readingSoon = window.setTimeout(loadReading, 120);
+    if (!readNow()) {
+      running.reading?.abort();
+      at("answer").setAttribute("aria-busy", "true");
+      readingSoon = window.setTimeout(loadReading, 120);
+    }
+  }
+  if (changed.has("ask") || changed.has("versus") || (changed.has("minute") && scene.view.versus)) {
+    if (changed.has("versus")) scene.other = null;
+    loadOther();
   }
   if (changed.has("show")) loadRays();
   if (changed.has("place")) loadPlace();
   showAll();
 });
+
+/** Now follows the newest day: a new one, or one written anew, is opened; nothing is asked while nobody looks. */
+async function follow() {
+  if (!scene || document.hidden || state.view.ask !== "now" || state.view.minute !== null) return;
+  try {
+    const found = await api.days({ signal: only("days") });
+    if (JSON.stringify(found) === JSON.stringify(days)) return;
+    days = found;
+    masthead.days(days);
+    year.days(days);
+    network.renew();
+    settling = true;
+    choose();
+    settling = false;
+    await loadDay();
+  } catch (error) {
+    if (!gone(error)) at("announce").textContent = error.message;
+  }
+}
+
+setInterval(follow, 30000);
+document.addEventListener("visibilitychange", follow);
 
 window.addEventListener("error", (event) => {
   at("announce").textContent = event.message;

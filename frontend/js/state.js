@@ -4,6 +4,7 @@
  */
 
 /** @typedef {"delay"|"uncertainty"|"slope"|"state"} Layer */
+/** @typedef {"past"|"now"|"network"} Ask */
 /**
  * @typedef {object} View
  * @property {string} region   key of the region, "" until known
@@ -13,10 +14,18 @@
  * @property {[number, number]|null} place  latitude, longitude [deg]
  * @property {Set<string>} show  of SHOWABLE
  * @property {"utc"|"local"} clock
+ * @property {Ask} ask        which question the page answers
+ * @property {string} versus  the day to compare with: "" none, "quiet" the quiet days around, or YYYY-MM-DD
+ * @property {boolean} beside two maps side by side, or their difference
+ * @property {string} who     the site whose days the year shows, "" the region
+ * @property {string} span    of the year: "", a year, or a season
+ * @property {string} worst   days of the year that are at least so bad
  */
 
 /** @type {Layer[]} */
 export const LAYERS = ["delay", "uncertainty", "slope", "state"];
+/** @type {Ask[]} */
+export const ASKS = ["past", "now", "network"];
 export const SHOWABLE = ["receivers", "rays", "sites", "veil"];
 const SHOWN_AT_FIRST = ["receivers", "sites", "veil"];
 
@@ -30,6 +39,12 @@ export function firstView() {
     place: null,
     show: new Set(SHOWN_AT_FIRST),
     clock: "utc",
+    ask: "past",
+    versus: "",
+    beside: true,
+    who: "",
+    span: "",
+    worst: "",
   };
 }
 
@@ -47,6 +62,7 @@ export function clockText(minute) {
  */
 export function toQuery(view) {
   const parts = [];
+  if (view.ask !== "past") parts.push(["ask", view.ask]);
   if (view.region) parts.push(["region", view.region]);
   if (view.day) parts.push(["day", view.day]);
   if (view.minute !== null) parts.push(["time", clockText(view.minute)]);
@@ -57,6 +73,9 @@ export function toQuery(view) {
     parts.push(["show", show.join(",") || "none"]);
   }
   if (view.clock !== "utc") parts.push(["clock", view.clock]);
+  if (view.versus) parts.push(["versus", view.versus]);
+  if (!view.beside) parts.push(["as", "difference"]);
+  for (const name of ["who", "span", "worst"]) if (view[name]) parts.push([name, view[name]]);
   const text = parts.map(([key, value]) => `${key}=${encodeURIComponent(value).replace(/%2C/g, ",").replace(/%3A/g, ":")}`);
   return text.length ? `?${text.join("&")}` : "";
 }
@@ -83,6 +102,14 @@ export function fromQuery(query) {
     view.show = new Set(SHOWABLE.filter((name) => names.includes(name)));
   }
   if (given.get("clock") === "local") view.clock = "local";
+  const ask = /** @type {Ask} */ (given.get("ask"));
+  if (ASKS.includes(ask)) view.ask = ask;
+  const versus = given.get("versus") ?? "";
+  if (versus === "quiet" || /^\d{4}-\d{2}-\d{2}$/.test(versus)) view.versus = versus;
+  view.beside = given.get("as") !== "difference";
+  view.who = given.get("who") ?? "";
+  if (/^(\d{4}|dec-feb|mar-may|jun-aug|sep-nov)$/.test(given.get("span") ?? "")) view.span = given.get("span") ?? "";
+  if (["strained", "broken"].includes(given.get("worst") ?? "")) view.worst = given.get("worst") ?? "";
   return view;
 }
 

@@ -20,6 +20,9 @@ export const STATE_WORDS = {
   unseen: { name: "unseen", means: "not enough data to say" },
 };
 
+/** Seasons by their months, so that they mean the same in both halves of the world. */
+export const SEASON_WORDS = { "dec-feb": "December to February", "mar-may": "March to May", "jun-aug": "June to August", "sep-nov": "September to November" };
+
 export const KIND_WORDS = {
   slope: { name: "Steep slope", short: "slope" },
   front: { name: "Moving front", short: "front" },
@@ -57,7 +60,70 @@ export const WORDS = {
     names.length < 4 ? `Not good either: ${names.join(", ")}.` : `Not good either: ${names.slice(0, 2).join(", ")} and ${names.length - 2} more sites.`,
   /** @param {number} minutes */
   stripHelp: (minutes) => `Drag, or use the arrow keys: ${minutes} minutes a step, with shift an hour, Home and End for the ends.`,
+  /** @param {string} sentence */
+  mapAlone: (sentence) => `The map’s own cell alone would say: ${sentence}`,
   sigma: "± is one standard deviation.",
+  wholeRegion: "The whole region",
+  allDays: "All stored days",
+  noOther: "No other day",
+  quietDays: "Median of the quiet days around",
+  slopeTo: "slope, to",
+  notAmongThese: "not among the days shown",
+  noSuchDay: "No stored day is like that; choose another span or state.",
+  yearCaption: "Shares are of all cells and times, or of the site’s time; the slope is what 99 of 100 seen cells stay under.",
+  /** @param {string} slope */
+  slopeUpTo: (slope) => `slope up to ${slope} mm/km`,
+  /** @param {number} shown @param {number} all */
+  yearSpan: (shown, all) => `${shown === all ? "All" : `${shown} of`} ${all} stored ${all === 1 ? "day" : "days"}. State: the worst that was seen at any time; bars: the slope that 99 of 100 seen cells stay under.`,
+  /** @param {string} what @param {boolean} difference */
+  comparedWith: (what, difference) => (difference ? `This day less ${what}, at the same time of day.` : `Right: ${what}, at the same time of day.`),
+  /** @param {number} count */
+  quietMedian: (count) => `the median of ${count} quiet ${count === 1 ? "day" : "days"}`,
+  noQuiet: "No quiet day within twenty days is stored: there is nothing to compare with.",
+  otherGrid: "That day’s maps stand on another grid: they cannot be compared cell by cell.",
+  otherMissing: "That day has no map for this time of day.",
+  noDifferenceOfStates: "States have no difference: both days stand side by side.",
+  lessThat: "less",
+  oneLessOther: "this day less the other",
+  /** @param {string} at @param {string} ago */
+  fresh: (at, ago) => `Newest data: ${at}, ${ago}.`,
+  /** @param {string} at @param {string} ago */
+  stale: (at, ago) => `Newest data: ${at}, ${ago}. This is not the present: nothing newer has come in.`,
+  /** @param {string} at */
+  aheadOfClock: (at) => `Newest data: ${at}, later than this machine’s clock. Invented or wrongly dated days look so; this is not the present.`,
+  /** @param {number} minutes */
+  lookingBack: (minutes) => `You look at ${minutes < 120 ? `${minutes} minutes` : `${Math.round(minutes / 60)} hours`} before that.`,
+  noFlagsNow: "No flag is raised at this time.",
+  noArrivals: "No front is on its way to a named site within three hours.",
+  /** @param {number} minutes */
+  inMinutes: (minutes) => `in ${minutes} minutes`,
+  /** @param {string} from @param {string} speed */
+  frontFrom: (from, speed) => `a front from the ${from} at ${speed} m/s`,
+  /** @param {string} fronts */
+  ifItKeeps: (fronts) => `By ${fronts}, if course, speed and strength stay; how long a front is was not measured.`,
+  loadingNetwork: "Asking what each receiver gave …",
+  noNetworkDay: "Of this day nothing is kept about the receivers.",
+  disagrees: "disagrees with the others",
+  /** @param {string[]} names @param {number} all @param {boolean} checked */
+  disagree: (names, all, checked) =>
+    names.length
+      ? `${names.join(", ")} ${names.length === 1 ? "stands" : "stand"} out of ${all} receivers; see below why.`
+      : `None of ${all} receivers stands out${checked ? "" : "; how well the others foretell each was not kept for this day"}.`,
+  /** @param {number} count */
+  networkCaption: (count) =>
+    `${count > 1 ? `Small bars and points: the last ${count} stored days, the chosen one in ink. ` : ""}Left out: how far the field of all the others misses this receiver’s lines of sight. A dash: not kept.`,
+  /** @param {number} count */
+  overDays: (count) => `over ${count} days`,
+  noCurves: "No line of sight passed near this place within three quarters of an hour.",
+  curvesAbout: "Vertical delay along single lines of sight that pass within 250 km, 45 minutes to either side; most changed satellites first. A true wall passes one receiver after the other; a fault shows on one line only.",
+  curvesTable: "Lines of sight as a table",
+  /** @param {string} satellite @param {string} lines */
+  curvesOf: (satellite, lines) => `Vertical delay along lines of sight to ${satellite}; change within the span: ${lines}.`,
+  verticalDelayM: "vertical delay, m",
+  asTable: "As a table",
+  play: "Play",
+  pause: "Pause",
+  mapCaption: (what, when) => `${what}, ${when}. Rows: latitude; columns: longitude; “unseen” where not enough data say anything.`,
 };
 
 const MINUS = "\u2212";
@@ -167,6 +233,18 @@ export function dateText(ms, zone = "UTC") {
 export function dayText(day) {
   const ms = Date.parse(`${day}T00:00:00Z`);
   return format("UTC", { weekday: "short", day: "numeric", month: "long", year: "numeric" }).format(ms);
+}
+
+/** "May 2031". @param {string} month  YYYY-MM */
+export function monthText(month) {
+  return format("UTC", { month: "short", year: "numeric" }).format(Date.parse(`${month}-01T00:00:00Z`));
+}
+
+/** A share as per cent; what is more than nothing is never written as nothing. @param {number|undefined} share */
+export function shareText(share) {
+  if (share === undefined || !Number.isFinite(share)) return "–";
+  if (share > 0 && share < 0.001) return "< 0.1 %";
+  return `${(100 * share).toFixed(share < 0.1 || (share > 0.995 && share < 1) ? 1 : 0)} %`;
 }
 
 /**

@@ -280,7 +280,7 @@ def test_what_can_be_taken_away(visit: Open) -> None:
 def test_a_table_stands_behind_the_plot(visit: Open) -> None:
     """The day's delay at the place as rows, with uncertainty; unseen is said in words."""
     v = visit(plotly=False).go(f"{STORM}&time=05:30&at=-37.8,145")
-    v.page.click(".table-behind summary")
+    v.page.click(".through-day .table-behind summary")
     v.page.wait_for_selector("#series-table tbody tr")
     assert v.page.locator("#series-table tbody tr").count() == 96
     assert "±" in v.text("#series-table tbody tr >> nth=20")

@@ -1,7 +1,7 @@
 // The view and its URL: round trips, damaged links, the history.
 import assert from "node:assert/strict";
 import test from "node:test";
-import { clockText, firstView, fromQuery, LAYERS, SHOWABLE, State, toQuery } from "../../frontend/js/state.js";
+import { ASKS, clockText, firstView, fromQuery, LAYERS, SHOWABLE, State, toQuery } from "../../frontend/js/state.js";
 
 test("the first view has an empty query, and an empty query is the first view", () => {
   assert.equal(toQuery(firstView()), "");
@@ -21,6 +21,12 @@ test("every view survives the way through its URL", () => {
           clock,
           place: bits % 2 ? [-41.125, 147.5] : null,
           show: new Set(SHOWABLE.filter((_, i) => bits & (1 << i))),
+          ask: ASKS[bits % ASKS.length],
+          versus: ["", "quiet", "2031-05-10"][bits % 3],
+          beside: bits % 5 < 3,
+          who: bits % 2 ? "Gannet Field & more" : "",
+          span: ["", "2031", "dec-feb"][(bits >> 1) % 3],
+          worst: ["", "strained", "broken"][(bits >> 2) % 3],
         });
       }
     }
@@ -30,7 +36,7 @@ test("every view survives the way through its URL", () => {
 });
 
 test("a damaged link opens at first values", () => {
-  const view = fromQuery("?day=yesterday&time=25:99&layer=rainbow&at=900,abc&clock=moon&show=dragons");
+  const view = fromQuery("?ask=why&versus=tomorrow&span=spring&worst=ever&day=yesterday&time=25:99&layer=rainbow&at=900,abc&clock=moon&show=dragons");
   assert.deepEqual(view, { ...firstView(), show: new Set() });
 });
 

@@ -27,6 +27,7 @@ import { brokenBar, front, gradations, offset, placeAt, scaleBarKm, waves, wedge
  * @property {{name: string, lat: number, lon: number, state?: import("../colour.js").StateName}[]} [sites]
  * @property {import("../api.js").Flag[]} [flags]  those raised at this time
  * @property {[number, number]|null} [place]
+ * @property {boolean} [difference]  the fields are one day less another
  * @property {boolean} [veil]  let the paper show through where the delay is unsure
  * @property {number} [width]  pixels, for the count of gradations and signs
  * @property {string} [title]  for a printed chart: adds title, colour bar and caution
@@ -112,7 +113,7 @@ function fieldTraces(contents) {
     const values = fields.layers[layer];
     if (!values) return [];
     const ends = contents.ends[layer];
-    const colours = ramp(layer, theme);
+    const colours = ramp(contents.difference ? "difference" : layer, theme);
     traces.push({
       ...QUIET,
       type: "heatmap",

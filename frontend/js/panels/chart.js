@@ -2,11 +2,15 @@
  * The map: draws the scene, turns clicks and arrow keys into a chosen place.
  */
 
+import { STATES } from "../colour.js";
 import { draw, erase, takePicture } from "../drawing.js";
+import { csvText, MAP_HEADS, mapRows, save } from "../exporting.js";
+import { differenceEnds, differenceMap } from "../figures/compare.js";
 import { aspectOf, frameOf, heightOf, mapFigure } from "../figures/map.js";
 import { paint, projection } from "../painting.js";
 import { clockText } from "../state.js";
-import { bothClocks, dateText, LAYER_WORDS, WORDS } from "../words.js";
+import { bothClocks, dateText, fixed, LAYER_WORDS, latText, lonText, STATE_WORDS, timeText, WORDS } from "../words.js";
+import { make } from "./parts.js";
 
 /** A name fit for a file. @param {string} text */
 function plainName(text) {
@@ -25,9 +29,16 @@ export class ChartPanel {
   #frame;
   #framed = "";
   /** @type {import("../painting.js").Projection|null} */ #projection = null;
+  #other;
+  #compared;
+  #table;
 
-  /** @param {{map: HTMLElement, cells: HTMLCanvasElement, frame: HTMLElement, title: HTMLElement, time: HTMLElement, note: HTMLElement}} elements @param {import("../state.js").State} state */
-  constructor({ map, cells, frame, title, time, note }, state) {
+  /** @param {Record<"map"|"cells"|"frame"|"title"|"time"|"note"|"other"|"compared"|"table", any>} elements @param {import("../state.js").State} state */
+  constructor({ map, cells, frame, title, time, note, other, compared, table }, state) {
+    this.#other = { box: other, element: other.querySelector(".map-other"), cells: other.querySelector("canvas"), frame: other.querySelector(".map-other-frame"), framed: "" };
+    this.#compared = compared;
+    this.#table = table;
+    table.closest("details").addEventListener("toggle", () => this.#fillTable());
     this.#element = map;
     this.#cells = cells;
     this.#frame = frame;
@@ -49,8 +60,21 @@ export class ChartPanel {
     this.#time.textContent = `${dateText(time)}, ${bothClocks(time, day.region.timezone, view.clock)}`;
     this.#element.setAttribute("aria-label", `Map of ${day.region.name}. ${LAYER_WORDS[view.layer].title}, ${bothClocks(time, day.region.timezone, view.clock)}`);
     const frame = frameOf(day.grid);
-    this.#element.parentElement.style.setProperty("--aspect", aspectOf(frame).toFixed(4));
+    this.#element.closest(".chart-body").style.setProperty("--aspect", aspectOf(frame).toFixed(4));
+    this.#compare();
     this.#paint();
+    this.#fillTable();
+  }
+
+  /** Two maps side by side, or the difference, or one map. */
+  #compare() {
+    const { view, other } = this.#scene;
+    const difference = differs(this.#scene);
+    this.#other.box.hidden = !view.versus || difference || view.ask !== "past";
+    this.#element.closest(".chart-body").classList.toggle("two", !this.#other.box.hidden);
+    this.#compared.hidden = !view.versus || view.ask !== "past";
+    const states = view.layer === "state" && !view.beside ? ` ${WORDS.noDifferenceOfStates}` : "";
+    this.#compared.textContent = view.versus ? other?.trouble || (other?.label ? WORDS.comparedWith(other.label, difference) + states : WORDS.loadingMap) : "";
   }
 
   /** @param {string} text */
@@ -58,8 +82,38 @@ export class ChartPanel {
     this.#note.textContent = text;
   }
 
-  /** A picture of the chart as it stands, with title, colour bar and caution. */
-  async picture() {
+  /** The numbers of the map as a text table. */
+  textTable() {
+    const { fields, index } = this.#scene;
+    if (fields && index >= 0) save(csvText(MAP_HEADS, mapRows(fields, index, STATES)), this.#name("map.csv"), "text/csv");
+  }
+
+  #name(ending) {
+    const { day, view } = this.#scene;
+    return `skylag-${plainName(day.region.name)}-${day.day}-${clockText(view.minute ?? 0).replace(":", "")}-${ending}`;
+  }
+
+  #fillTable() {
+    const details = this.#table.closest("details");
+    if (!details.open || !this.#scene) return;
+    const { difference, fields, index, layer } = this.#contents();
+    if (!fields || index < 0) return;
+    const { lats, lons, layers } = fields;
+    const rows = Array.from(lats, (_, r) => r).reverse();
+    const decimals = { delay: 2, uncertainty: 2, slope: 1 }[layer];
+    const text = (at) => (layer === "state" ? STATE_WORDS[STATES[layers.state[at]]].name : layers.state[at] === 0 ? STATE_WORDS.unseen.name : Number.isFinite(layers[layer][at]) ? fixed(layers[layer][at], decimals) : STATE_WORDS[STATES[layers.state[at]]].name);
+    const { title, unit } = LAYER_WORDS[layer];
+    const what = `${title}${unit ? `, ${unit}` : ""}${difference ? `, ${WORDS.lessThat} ${this.#scene.other.label}` : ""}`;
+    const body = make("tbody");
+    for (const r of rows) {
+      body.append(make("tr", {}, make("th", { scope: "row", text: latText(lats[r]) }), ...Array.from(lons, (_, c) => make("td", { class: "number", text: text((index * lats.length + r) * lons.length + c) }))));
+    }
+    this.#table.replaceChildren(make("table", {}, make("caption", { text: WORDS.mapCaption(what, timeText(this.#scene.time)) }),
+      make("thead", {}, make("tr", {}, make("td"), ...Array.from(lons, (lon) => make("th", { scope: "col", class: "number", text: lonText(lon) })))), body));
+  }
+
+  /** A picture of the chart as it stands, with title, colour bar and caution. @param {"png"|"svg"} format */
+  async picture(format) {
     const { day, view, time } = this.#scene;
     const contents = this.#contents();
     const frame = contents.frame;
@@ -67,13 +121,14 @@ export class ChartPanel {
     const figure = mapFigure({
       ...contents,
       width: 1200,
-      title: `<b>${day.region.name}</b>  ${LAYER_WORDS[view.layer].title}<br>${dateText(time)}, ${bothClocks(time, day.region.timezone, view.clock)}`,
+      title: `<b>${day.region.name}</b>  ${LAYER_WORDS[view.layer].title}${contents.difference ? `, ${WORDS.lessThat} ${this.#scene.other.label}` : ""}<br>${dateText(time)}, ${bothClocks(time, day.region.timezone, view.clock)}`,
       foot: [day.simulated ? WORDS.simulated : "", WORDS.dotted, day.caution].filter(Boolean).join("<br>"),
     });
     await takePicture(figure, {
       width: Math.round((height - 172) * aspectOf(frame) + 236),
       height,
-      name: `skylag-${plainName(day.region.name)}-${day.day}-${clockText(view.minute ?? 0).replace(":", "")}-${view.layer}.png`,
+      format,
+      name: this.#name(`${view.layer}.${format}`),
     });
   }
 
@@ -82,10 +137,13 @@ export class ChartPanel {
     this.#element.removeEventListener("click", this.#click);
     this.#element.removeEventListener("keydown", this.#key);
     erase(this.#frame);
+    erase(this.#other.frame);
   }
 
   #contents() {
-    const { day, view, fields, index, time, theme, rays, raysTime, siteStates, coast } = this.#scene;
+    const { day, view, fields, index, time, theme, rays, raysTime, siteStates, coast, other } = this.#scene;
+    const difference = differs(this.#scene) && Boolean(other?.fields && fields && index >= 0);
+    const less = difference ? differenceMap({ fields, index }, other) : null;
     // Pierce points belong to one moment: those of another are not drawn. Who has none is a receiver without data.
     const current = view.show.has("rays") && raysTime === time;
     const heard = new Set(rays.map((ray) => ray.receiver));
@@ -94,9 +152,10 @@ export class ChartPanel {
       layer: view.layer,
       theme,
       time,
-      fields,
-      index,
-      ends: day.ends,
+      fields: less ? less.fields : fields,
+      index: less ? less.index : index,
+      difference,
+      ends: less ? differenceEnds(day.ends) : day.ends,
       unseenSigma: day.region.unseenSigma,
       coast,
       receivers: view.show.has("receivers")
@@ -108,7 +167,7 @@ export class ChartPanel {
         : [],
       flags: day.flags.filter((flag) => flag.start <= time && time <= flag.end),
       place: view.place,
-      veil: view.show.has("veil"),
+      veil: view.show.has("veil") && !difference,
       width: this.#element.clientWidth,
     };
   }
@@ -128,6 +187,7 @@ export class ChartPanel {
     const complete = contents.fields && contents.index >= 0;
     this.#element.dataset.drawn = complete ? "fields" : "base";
     if (complete && !performance.getEntriesByName("first map").length) performance.mark("first map");
+    this.#paintOther(contents);
     const key = JSON.stringify([contents.frame, contents.theme, width, height]);
     if (key !== this.#framed) {
       this.#framed = key;
@@ -136,6 +196,26 @@ export class ChartPanel {
         this.note(error.message);
       });
     }
+  }
+
+  /** The other day's map beside: the same frame and scale, without this day's flags and states. */
+  #paintOther(contents) {
+    const { box, element, cells, frame, framed } = this.#other;
+    const width = element.clientWidth;
+    if (box.hidden || !width) return;
+    const { other } = this.#scene;
+    const height = heightOf(contents.frame, width);
+    element.style.height = `${height}px`;
+    const sites = contents.sites.map(({ state, ...site }) => site);
+    const figure = mapFigure({ ...contents, fields: other?.fields ?? null, index: other?.index ?? -1, flags: [], rays: [], sites, width });
+    paint(cells, figure, projection(figure.layout, width, height));
+    element.dataset.drawn = other?.fields ? "fields" : "base";
+    const key = JSON.stringify([contents.frame, contents.theme, width, height]);
+    if (key === framed) return;
+    this.#other.framed = key;
+    draw(frame, { data: [], layout: { ...figure.layout, plot_bgcolor: "rgba(0,0,0,0)" } }).catch(() => {
+      this.#other.framed = "";
+    });
   }
 
   #click = (event) => {
@@ -160,4 +240,9 @@ export class ChartPanel {
     const lon = clamp(from[1] + move[1] * step, region.west, region.east);
     this.#state.change({ place: [Number(lat.toFixed(3)), Number(lon.toFixed(3))] });
   };
+}
+
+/** Is the difference of two days shown? States have none. @param {import("../main.js").Scene} scene */
+export function differs({ view }) {
+  return Boolean(view.versus && !view.beside && view.layer !== "state" && view.ask === "past");
 }

@@ -4,8 +4,8 @@
 
 import { STATES } from "../colour.js";
 import { keyStep, nearest, stepOf, stripFigure } from "../figures/strip.js";
-import { KIND_WORDS, siteSentence, timeText, WORDS, zoneName } from "../words.js";
-import { draft, make } from "./parts.js";
+import { asSentence, KIND_WORDS, siteSentence, spanText, timeText, WORDS, zoneName } from "../words.js";
+import { draft, make, stateWord } from "./parts.js";
 
 /**
  * The rows of the strip: the sites, and last the chosen place.
@@ -28,7 +28,7 @@ export class ClockPanel {
   #speaking = 0;
 
   /**
-   * @param {{strip: HTMLElement, names: HTMLElement, range: HTMLInputElement, hint: HTMLElement, text: HTMLElement, reason: HTMLElement}} elements
+   * @param {{strip: HTMLElement, names: HTMLElement, range: HTMLInputElement, hint: HTMLElement, table: HTMLElement, text: HTMLElement, reason: HTMLElement}} elements
    * @param {import("../state.js").State} state
    */
   constructor(elements, state) {
@@ -43,6 +43,7 @@ export class ClockPanel {
     strip.addEventListener("focus", this.#speakSoon);
     range.addEventListener("input", this.#range);
     names.addEventListener("click", this.#name);
+    elements.table.closest("details").addEventListener("toggle", () => this.#fillTable());
     this.#watcher = new ResizeObserver(() => this.#scene && this.show(this.#scene));
     this.#watcher.observe(strip);
   }
@@ -59,6 +60,7 @@ export class ClockPanel {
     if (fingerprint !== this.#drawn && width) {
       this.#drawn = fingerprint;
       this.#drawStrip(rows, width);
+      this.#fillTable();
     }
     this.#names(rows);
     const minutes = Math.max(5, Math.round(stepOf(day.times) / 60000));
@@ -132,6 +134,20 @@ export class ClockPanel {
     this.#line = make("div", { class: "now-line" });
     this.#line.style.bottom = `${axis}px`;
     strip.replaceChildren(svg, this.#line);
+  }
+
+  /** The strip in words: one row for each run of equal state of a site. */
+  #fillTable() {
+    const { table } = this.#elements;
+    if (!table.closest("details").open || !this.#scene || !this.#figure) return;
+    const { day, view } = this.#scene;
+    const how = { clock: view.clock, zone: day.region.timezone };
+    const rows = rowsOf(this.#scene);
+    const body = make("tbody");
+    for (const bar of this.#figure.bars) {
+      body.append(make("tr", {}, make("th", { scope: "row", text: rows[bar.row].name }), make("td", { class: "nowrap", text: spanText(Math.max(bar.from, day.times[0]), bar.to, how) }), make("td", {}, stateWord(bar.state)), make("td", { text: asSentence(bar.reason ?? "") })));
+    }
+    table.replaceChildren(make("table", {}, make("thead", {}, make("tr", {}, ...["Site", "Span", "Corrections", "Reason"].map((text) => make("th", { scope: "col", text })))), body));
   }
 
   #names(rows) {

@@ -3,8 +3,10 @@
  */
 
 import { bareWarnings } from "../figures/map.js";
+import { differenceEnds } from "../figures/compare.js";
 import { legendFigure } from "../figures/legend.js";
 import { KIND_WORDS, LAYER_WORDS, STATE_WORDS, WORDS } from "../words.js";
+import { differs } from "./chart.js";
 import { draft, make, swatch } from "./parts.js";
 
 /** The signs of the chart in small. */
@@ -29,19 +31,21 @@ export class LegendPanel {
   }
 
   /** @param {import("../main.js").Scene} scene */
-  show({ view, day, theme, fields, index }) {
-    const bare = bareWarnings(fields, index, view.layer);
-    const fingerprint = JSON.stringify([bare, view.layer, day.ends, theme, [...view.show]]);
+  show(scene) {
+    const { view, day, theme, fields, index } = scene;
+    const difference = differs(scene);
+    const bare = difference ? [] : bareWarnings(fields, index, view.layer);
+    const fingerprint = JSON.stringify([bare, difference, view.layer, day.ends, theme, [...view.show]]);
     if (fingerprint === this.#shown) return;
     this.#shown = fingerprint;
     const focused = this.#element.contains(document.activeElement) ? document.activeElement.name : "";
     const { title, unit } = LAYER_WORDS[view.layer];
-    const colours = make("section", {}, make("h3", { text: unit ? `${title}, ${unit}` : title }));
+    const colours = make("section", {}, make("h3", { text: `${title}${unit ? `, ${unit}` : ""}${difference ? `: ${WORDS.oneLessOther}` : ""}` }));
     const states = make("ul", { class: "key" });
     if (view.layer === "state") {
       for (const state of ["holds", "strained", "broken", "unseen"]) states.append(stateRow(state));
     } else {
-      colours.append(rampBar(legendFigure(view.layer, day.ends[view.layer], theme)));
+      colours.append(rampBar(legendFigure(view.layer, (difference ? differenceEnds(day.ends) : day.ends)[view.layer], theme, difference)));
       states.append(stateRow("unseen"));
       for (const state of bare) states.append(stateRow(state, WORDS.bareWarning));
     }

@@ -4,6 +4,7 @@
 
 import * as api from "../api.js";
 import { agoText, dayText, LAYER_WORDS, WORDS, zoneName } from "../words.js";
+import { toQuery } from "../state.js";
 import { make } from "./parts.js";
 
 export class MastheadPanel {
@@ -15,7 +16,7 @@ export class MastheadPanel {
   /**
    * @param {Record<string, any>} elements
    * @param {import("../state.js").State} state
-   * @param {{picture: () => Promise<void>, themeChanged: () => void}} actions
+   * @param {{picture: (format: "png"|"svg") => Promise<void>, themeChanged: () => void}} actions
    */
   constructor(elements, state, actions) {
     this.#elements = elements;
@@ -26,7 +27,10 @@ export class MastheadPanel {
     elements.after.addEventListener("click", () => this.#beside(1));
     elements.clock.addEventListener("change", (event) => state.change({ clock: event.target.value }));
     elements.layer.addEventListener("change", (event) => state.change({ layer: event.target.value }));
-    elements.png.addEventListener("click", this.#picture);
+    elements.png.addEventListener("click", () => this.#picture("png"));
+    elements.svg.addEventListener("click", () => this.#picture("svg"));
+    elements.print.addEventListener("click", () => window.print());
+    elements.asks.addEventListener("click", this.#ask);
     elements.theme.addEventListener("click", this.#turn);
     window.matchMedia("(prefers-color-scheme: dark)").addEventListener("change", this.#system);
     this.#name();
@@ -57,7 +61,12 @@ export class MastheadPanel {
 
   /** @param {import("../main.js").Scene} scene */
   show({ view, day }) {
-    const { name, before, after, clock, layer, simulated, age, origin, csv, geojson } = this.#elements;
+    const { name, before, after, clock, layer, simulated, age, origin, csv, geojson, netcdf, ionex, asks } = this.#elements;
+    for (const link of asks.querySelectorAll("a")) {
+      if (link.dataset.ask === view.ask) link.setAttribute("aria-current", "page");
+      else link.removeAttribute("aria-current");
+      link.setAttribute("href", toQuery({ ...view, ask: link.dataset.ask, ...(link.dataset.ask === "now" ? { minute: null } : {}) }) || "?");
+    }
     name.textContent = day.region.name;
     document.title = `${LAYER_WORDS[view.layer].name}, ${day.region.name}, ${day.day} – Skylag`;
     this.#elements.day.value = `${view.region}/${view.day}`;
@@ -75,6 +84,8 @@ export class MastheadPanel {
     origin.textContent = [day.receivers.length ? `${day.receivers.length} receivers.` : "", ...day.warnings.slice(0, 2)].filter(Boolean).join(" ");
     csv.href = api.flagsFile(view.region, view.day, "csv");
     geojson.href = api.flagsFile(view.region, view.day, "geojson");
+    netcdf.href = api.dayFile(view.region, view.day, "field.nc");
+    ionex.href = api.dayFile(view.region, view.day, "maps.inx");
   }
 
   close() {
@@ -99,15 +110,25 @@ export class MastheadPanel {
     this.#state.change(region === this.#state.view.region ? { day } : { region, day, place: null, minute: null });
   }
 
-  #picture = async () => {
-    const { png, announce } = this.#elements;
-    png.disabled = true;
+  /** A click on a question stays on the page; with a modifier the link opens as links do. */
+  #ask = (event) => {
+    const link = event.target.closest("a[data-ask]");
+    if (!link || event.ctrlKey || event.metaKey || event.shiftKey) return;
+    event.preventDefault();
+    const ask = link.dataset.ask;
+    this.#state.change(ask === "now" ? { ask, minute: null } : { ask });
+  };
+
+  #picture = async (format) => {
+    const { announce } = this.#elements;
+    const button = this.#elements[format];
+    button.disabled = true;
     try {
-      await this.#actions.picture();
+      await this.#actions.picture(format);
     } catch (error) {
       announce.textContent = error.message;
     } finally {
-      png.disabled = false;
+      button.disabled = false;
     }
   };
 

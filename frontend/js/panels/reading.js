@@ -2,8 +2,36 @@
  * The reading of the chosen place: the sentence first, the numbers second, the evidence under "why".
  */
 
-import { asSentence, bothClocks, compass, countText, evidenceText, flagSentence, KIND_WORDS, latText, limitsSentence, lonText, placeText, spanText, withSigma, WORDS } from "../words.js";
+import { asSentence, bothClocks, compass, countText, evidenceText, flagSentence, KIND_WORDS, latText, limitsSentence, lonText, placeText, siteSentence, spanText, withSigma, WORDS } from "../words.js";
+import { away } from "../figures/arrivals.js";
+import { placeAt } from "../figures/signs.js";
 import { make, stateWord, trouble, viewOf } from "./parts.js";
+
+const RANK = { holds: 0, unseen: 1, strained: 2, broken: 3 };
+
+/** Flags up to this distance are told with a place, as the service does. */
+const REACH_KM = 300;
+
+/**
+ * The reading at a time from the day's numbers already here; null where they are of another place or time.
+ * @param {import("../main.js").Scene} scene
+ * @returns {import("../api.js").Reading|null}
+ */
+export function readingOf({ series, view, time, day }) {
+  if (!series || !view.place || series.place[0] !== view.place[0] || series.place[1] !== view.place[1]) return null;
+  const i = series.times.indexOf(time);
+  if (i < 0) return null;
+  const [lat, lon] = view.place;
+  const flags = day.flags
+    .filter((flag) => flag.start <= time && time <= flag.end)
+    .map((flag) => ({ ...flag, distanceKm: Math.hypot(...away(lat, lon, ...placeAt(flag, time))) }))
+    .filter((flag) => flag.distanceKm <= REACH_KM)
+    .sort((a, b) => a.distanceKm - b.distanceKm);
+  return {
+    lat, lon, time, state: series.state[i], sentence: series.sentence[i], delay: series.delay[i], delaySigma: series.sigma[i],
+    slope: series.slope[i], slopeSigma: series.slopeSigma[i], slopeHeading: series.slopeHeading[i], support: series.support[i], flags,
+  };
+}
 
 export class ReadingPanel {
   #elements;
@@ -59,11 +87,17 @@ export class ReadingPanel {
     const where = site ? `${site.name}, ${placeText(reading.lat, reading.lon)}` : placeText(reading.lat, reading.lon);
     const number = site ? day.sites.indexOf(site) : -1;
     const reason = number >= 0 ? siteStates?.reasonOf(number, reading.time) ?? "" : "";
-    const why = this.#why(reading, reason, day, view);
+    // A site is judged by all that was seen near it, the map's cell by its own number: the worse of the two speaks first.
+    const judged = number >= 0 ? siteStates?.stateOf(number, reading.time) ?? reading.state : reading.state;
+    const worse = RANK[judged] > RANK[reading.state];
+    const lead = worse ? [siteSentence(site.name, judged, reason), WORDS.mapAlone(reading.sentence)] : [reading.sentence];
+    const state = worse ? judged : reading.state;
+    const why = this.#why({ ...reading, state }, worse ? "" : reason, day, view);
     answer.replaceChildren(
       make("p", { class: "answer-where" }, where, make("br"), bothClocks(reading.time, zone, view.clock)),
-      make("p", { class: `lead ${reading.state}`, text: reading.sentence }),
-      numbers(reading),
+      make("p", { class: `lead ${state}`, text: lead[0] }),
+      ...lead.slice(1).map((text) => make("p", { class: "reason", text })),
+      numbers({ ...reading, state }),
       make("p", { class: "fine", text: WORDS.sigma }),
       why,
     );

@@ -3,6 +3,7 @@
  */
 
 import { draw, erase } from "../drawing.js";
+import { csvText, save, SERIES_HEADS, seriesRows } from "../exporting.js";
 import { LEFT, seriesFigure } from "../figures/series.js";
 import { nearest } from "../figures/strip.js";
 import { placeText, timeText, withSigma, WORDS } from "../words.js";
@@ -37,6 +38,12 @@ export class SeriesPanel {
     this.#fillTable();
     this.#elements.line.hidden = !series;
     if (series) this.#place();
+  }
+
+  /** The day at this place as a text table. */
+  textTable() {
+    const { day } = this.#scene ?? {};
+    if (this.#series) save(csvText(SERIES_HEADS, seriesRows(this.#series)), `skylag-${day.day}-${this.#series.lat}-${this.#series.lon}-day.csv`, "text/csv");
   }
 
   close() {

@@ -1,0 +1,46 @@
+/**
+ * What is on the screen as files to keep: text tables made here from the numbers already loaded.
+ */
+
+/** @param {string|number|null} value  a number is written as it is; text that a spreadsheet would compute is defused */
+function cellText(value) {
+  if (value === null || (typeof value === "number" && !Number.isFinite(value))) return "";
+  if (typeof value === "number") return String(Number(value.toPrecision(6)));
+  const text = /^[=+@\-\t]/.test(value) ? `'${value}` : value;
+  return /[",\n]/.test(text) ? `"${text.replaceAll('"', '""')}"` : text;
+}
+
+/** @param {string[]} heads @param {(string|number|null)[][]} rows */
+export function csvText(heads, rows) {
+  return `${[heads, ...rows].map((row) => row.map(cellText).join(",")).join("\n")}\n`;
+}
+
+/** One map as rows: every cell with all its layers. @param {import("./api.js").Window} fields @param {number} index @param {string[]} states */
+export function mapRows(fields, index, states) {
+  const { lats, lons, layers } = fields;
+  const size = lats.length * lons.length;
+  const time = new Date(fields.times[index]).toISOString();
+  return Array.from({ length: size }, (_, k) => {
+    const at = index * size + k;
+    return [time, lats[Math.floor(k / lons.length)], lons[k % lons.length], layers.delay[at], layers.uncertainty[at], layers.slope[at], states[layers.state[at]]];
+  });
+}
+
+export const MAP_HEADS = ["time_utc", "lat_deg", "lon_deg", "vertical_delay_m", "vertical_delay_sigma_m", "slope_mm_per_km", "state"];
+export const SERIES_HEADS = ["time_utc", "vertical_delay_m", "vertical_delay_sigma_m", "slope_mm_per_km", "slope_sigma_mm_per_km", "state"];
+
+/** @param {import("./api.js").Series} series */
+export function seriesRows(series) {
+  return series.times.map((ms, i) => [new Date(ms).toISOString(), series.delay[i], series.sigma[i], series.slope[i], series.slopeSigma[i], series.state[i]]);
+}
+
+/** Hand a text to the reader as a file. @param {string} text @param {string} name @param {string} type */
+export function save(text, name, type) {
+  const link = document.createElement("a");
+  link.href = URL.createObjectURL(new Blob([text], { type }));
+  link.download = name;
+  document.body.append(link);
+  link.click();
+  link.remove();
+  setTimeout(() => URL.revokeObjectURL(link.href), 10000);
+}

@@ -1,0 +1,78 @@
+/**
+ * Now: how old the newest data are, what fails, and what is predicted to arrive. Follows the newest day.
+ */
+
+import { arrivals } from "../figures/arrivals.js";
+import { agoText, compass, dateText, fixed, flagSentence, KIND_WORDS, timeText, WORDS } from "../words.js";
+import { make, stateWord, viewOf } from "./parts.js";
+
+/** Data older than this are not the present. */
+export const STALE_AFTER = 20 * 60000;
+
+export class PresentPanel {
+  #elements;
+  #state;
+  #scene = null;
+  #timer = 0;
+  #shown = "";
+
+  /** @param {{age: HTMLElement, back: HTMLButtonElement, fails: HTMLElement, flags: HTMLElement, next: HTMLElement, note: HTMLElement}} elements @param {import("../state.js").State} state */
+  constructor(elements, state) {
+    this.#elements = elements;
+    this.#state = state;
+    elements.back.addEventListener("click", () => state.change({ minute: null }));
+    this.#timer = window.setInterval(() => this.#age(), 10000);
+  }
+
+  /** @param {import("../main.js").Scene} scene */
+  show(scene) {
+    this.#scene = scene;
+    if (scene.view.ask !== "now") return;
+    this.#age();
+    const { day, time, view, siteStates } = scene;
+    const key = JSON.stringify([day.region.key, day.day, time, view.clock, siteStates?.serial]);
+    if (key === this.#shown) return;
+    this.#shown = key;
+    const how = { clock: view.clock, zone: day.region.timezone };
+    const { fails, flags, next, note } = this.#elements;
+    const bad = day.sites
+      .map((site, number) => ({ site, state: siteStates?.stateOf(number, time) ?? "unseen" }))
+      .filter(({ state }) => state !== "holds");
+    fill(fails, bad.map(({ site, state }) => make("li", {}, stateWord(state), " ", make("button", { type: "button", class: "linklike", text: site.name, click: () => this.#state.change({ place: [site.lat, site.lon] }) }))), day.sites.length ? WORDS.allHold : WORDS.noSites);
+    const active = day.flags.filter((flag) => flag.start <= time && time <= flag.end);
+    fill(flags, active.map((flag) => make("li", {}, make("button", { type: "button", class: "linklike", text: KIND_WORDS[flag.kind]?.name ?? flag.kind, click: () => this.#state.change({ place: viewOf(flag, day).place }) }), ` ${flagSentence(flag).split(", ").slice(1).join(", ") || flag.evidence.split(/[:;]/)[0]}`)), WORDS.noFlagsNow);
+    const coming = arrivals(day.flags, day.sites, time);
+    fill(
+      next,
+      coming.map((one) => make("li", {}, make("strong", { text: timeText(one.time, how) }), ` ${one.site}, ${WORDS.inMinutes(Math.round((one.time - time) / 60000))}`)),
+      WORDS.noArrivals,
+    );
+    const fronts = [...new Set(coming.map((one) => WORDS.frontFrom(compass(one.flag.heading + 180), fixed(one.flag.speed, 0))))];
+    note.hidden = !coming.length;
+    note.textContent = WORDS.ifItKeeps(fronts.join(", "));
+  }
+
+  close() {
+    clearInterval(this.#timer);
+  }
+
+  #age() {
+    if (!this.#scene || this.#scene.view.ask !== "now") return;
+    const { day, time, view } = this.#scene;
+    const { age, back } = this.#elements;
+    const newest = day.times[day.times.length - 1];
+    const old = Date.now() - newest;
+    const at = `${timeText(newest, { clock: view.clock, zone: day.region.timezone })}, ${dateText(newest)}`;
+    const words = old < 0 ? WORDS.aheadOfClock(at) : old > STALE_AFTER ? WORDS.stale(at, agoText(old)) : WORDS.fresh(at, agoText(old));
+    const behind = newest - time;
+    const text = behind > 60000 ? `${words} ${WORDS.lookingBack(Math.round(behind / 60000))}` : words;
+    if (age.textContent !== text) age.textContent = text;
+    age.classList.toggle("stale", old < 0 || old > STALE_AFTER);
+    back.hidden = behind <= 60000;
+  }
+}
+
+/** @param {HTMLElement} list @param {Node[]} items @param {string} none */
+function fill(list, items, none) {
+  list.replaceChildren(...(items.length ? items : [make("li", { class: "empty", text: none })]));
+}
