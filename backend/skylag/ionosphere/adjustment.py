@@ -43,7 +43,7 @@ class AdjustmentChoices:
     high_layer, high_layer_sigma  amplitude expected of the plasmasphere model: between drained and twice saturated
     foot_exponent, foot_exponent_sigma  how the plasmasphere grows toward its feet (see `plasmasphere`); None: found
                         from the rays of the day, about 1.  Invented networks are much the better for that; on a real
-                        active day one receiver (ZIMM, 2015-08-23) moves by -0.4 ns, away from the published bias, since
+                        active day one receiver (ZIMM, 2015-08-23) moves by -0.3 ns, away from the published bias, since
                         it takes up horizontal structure.  So it is held unless asked for, and its sigma leans on all
     drift_hours         None: one bias per receiver and day; otherwise one per so many hours, walking by about
                         drift_sigma_ns from one span to the next (receivers are seen to move by 0.5 to 3 ns in a day)
