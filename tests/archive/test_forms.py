@@ -15,14 +15,16 @@ from tests.builders import REGION, STORM_DAY, invented_day
 from skylag.archive import Archive, forms, open_archive, schema
 from skylag.errors import SkylagError
 
-NEW_TABLES = ("delivery", "notice", "task", "access_key", "alembic_version")
+NEW_TABLES = ("outlook_score", "outlook", "delivery", "notice", "task", "access_key", "alembic_version")
 
 
 def make_old(archive: Archive) -> None:
     """Take an archive back to form 1, as programs before the steps made it: their tables and one line of form."""
     with archive._write_engine.begin() as connection:
-        for name in NEW_TABLES:
-            connection.exec_driver_sql(f"DROP TABLE {name}")
+        for table in reversed(schema.metadata.sorted_tables):
+            if table.name not in FORM_1:
+                connection.exec_driver_sql(f"DROP TABLE {table.name}")
+        connection.exec_driver_sql("DROP TABLE alembic_version")
         connection.exec_driver_sql("ALTER TABLE product DROP COLUMN provisional")
         connection.exec_driver_sql("DELETE FROM schema_version WHERE version > 1")
 

@@ -25,7 +25,7 @@ from sqlalchemy import (
     func,
 )
 
-SCHEMA_VERSION = 2
+SCHEMA_VERSION = 3
 
 metadata = MetaData()
 
@@ -183,4 +183,26 @@ delivery = Table(
     Column("not_before_ns", BigInteger, nullable=False),
     Column("delivered_ns", BigInteger),
     Column("said", Text, nullable=False),
+)
+
+# Outlooks as they were made, one for each occasion, and their scores once the days they speak of are in.
+outlook = Table(
+    "outlook",
+    metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("region", String(200), nullable=False),
+    Column("known_until", String(10), nullable=False),  # the last day used
+    Column("entered", String(64), nullable=False),  # what marks the inputs it was made from
+    Column("made_at", DateTime(timezone=True), server_default=func.current_timestamp(), nullable=False),
+    Column("facts", Text, nullable=False),  # JSON: what are no arrays
+    Column("data", LargeBinary, nullable=False),
+    Column("sha256", String(64), nullable=False),
+    UniqueConstraint("region", "known_until", "entered", name="one_outlook_per_occasion"),
+)
+outlook_score = Table(
+    "outlook_score",
+    metadata,
+    Column("outlook", Integer, ForeignKey("outlook.id", ondelete="CASCADE"), primary_key=True),
+    Column("days", Integer, primary_key=True, autoincrement=False),  # how many of its days were in
+    Column("facts", Text, nullable=False),  # JSON
 )

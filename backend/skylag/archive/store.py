@@ -21,6 +21,7 @@ from sqlalchemy.engine import URL, Connection, Engine, make_url
 from skylag.archive import chunks, forms, records, schema, slants
 from skylag.archive.keys import Keys
 from skylag.archive.notices import Notices
+from skylag.archive.outlooks import Outlooks
 from skylag.archive.records import DayHead, DayRecord, SiteStates
 from skylag.archive.tasks import Ending, Tasks, end_in
 from skylag.errors import FormatError, Missing, Refused, SkylagError
@@ -131,6 +132,7 @@ class Archive:
         self.tasks = Tasks(self._write, self._reading)
         self.keys = Keys(self._write, self._reading)
         self.notices = Notices(self._write, self._reading)
+        self.outlooks = Outlooks(self._write, self._reading)
         if url.get_backend_name() == "sqlite":
             self._read_engine = _sqlite_engine(url, "BEGIN")
             self._write_engine = _sqlite_engine(url, "BEGIN IMMEDIATE")

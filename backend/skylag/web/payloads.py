@@ -11,7 +11,7 @@ import csv
 import io
 import json
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from typing import Any
 
 import numpy as np
@@ -20,12 +20,14 @@ from fastapi.responses import Response
 
 from skylag import quantities, timescales
 from skylag.archive import DayHead, DayRecord, SiteStates
+from skylag.archive.outlooks import Kept
 from skylag.constants import L1_M_PER_TECU
 from skylag.impact.ground_augmentation import NextFront, StationDay
 from skylag.impact.satellite_augmentation import Availability
 from skylag.impact.single_frequency import LeftOver
 from skylag.impact.survey import Advice, Explanation
 from skylag.ionosphere.geometry import geodetic
+from skylag.ionosphere.outlook import RANGES, Span
 from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Rays, Region
 from skylag.web import nearby, sentences
 from skylag.web.witnesses import DayNetwork, Sightline
@@ -611,3 +613,58 @@ def broadcast_model(found: LeftOver) -> dict[str, Any]:
 def page(text: str) -> Response:
     """A page of its own."""
     return Response(text, media_type="text/html; charset=utf-8")
+
+
+# ---------------------------------------------------------------------------------------------- the day ahead
+
+
+def outlook_at(
+    kept: Kept, place: int, away_km: float, use: int, spans: Sequence[Span], advice: Sequence[str], simulated: bool
+) -> dict[str, Any]:
+    """The outlook at one of its places for one of its uses; hours are starts, UTC."""
+    made = kept.outlook
+
+    def ends(low: float, high: float) -> dict[str, list[float | None]]:
+        columns = [int(np.argmin(np.abs(made.levels - level))) for level in (low, high)]
+        return {
+            name: _numbers(np.round(made.delay_quantiles[:, place, column], 4))
+            for name, column in zip(("low", "high"), columns, strict=True)
+        }
+
+    return {
+        "region": kept.region,
+        "known_until": str(made.known_until),
+        "made_utc": f"{np.datetime_as_string(kept.made_at, unit='s')}Z",
+        "name": str(made.names[place]),
+        "lat": _number(float(made.lats[place])),
+        "lon": _number(float(made.lons[place])),
+        "distance_km": round(away_km, 1),
+        "use": str(made.uses[use]),
+        "hours_utc": utc_texts(made.hours),
+        "vertical_delay": _numbers(np.round(made.delay[:, place], 4)),
+        "ranges": {str(share): ends(*levels) for share, levels in RANGES.items()},
+        "slope": {
+            str(level): _numbers(np.round(made.slope_quantiles[:, place, number], 3))
+            for number, level in enumerate(made.slope_levels)
+        },
+        "chance_strained": _numbers(np.round(made.strained[use, :, place], 4)),
+        "chance_broken": _numbers(np.round(made.broken[use, :, place], 4)),
+        "storm_phase": [str(word) for word in made.phases],
+        "seen_days": int(made.seen_days[place]),
+        "windows": [
+            {
+                "start_utc": utc(span.start), "end_utc": utc(span.end), "kind": span.kind,
+                "chance_strained": _number(span.strained), "chance_broken": _number(span.broken),
+            }
+            for span in spans
+        ],
+        "advice": list(advice),
+        "basis": list(made.basis),
+        "simulated": simulated,
+        "caution": sentences.CAUTION,
+    }  # fmt: skip
+
+
+def outlook_record(region: str, facts: Mapping[str, Any]) -> dict[str, Any]:
+    """What became of the outlooks of a region."""
+    return {"region": region, **_plain(dict(facts)), "caution": sentences.CAUTION}

@@ -1,0 +1,150 @@
+"""Outlooks in the database: kept when made and never changed, with what became of them.  Never makes or scores one."""
+
+import hashlib
+import io
+import zipfile
+from collections.abc import Callable
+from contextlib import AbstractContextManager
+from dataclasses import dataclass, fields
+from typing import Any
+
+import numpy as np
+import sqlalchemy as sa
+from sqlalchemy.engine import Connection
+
+from skylag.archive import records, schema
+from skylag.errors import FormatError
+from skylag.tables import Outlook
+
+
+@dataclass(frozen=True)
+class Kept:
+    """An outlook as it was made: number, region, the mark of its inputs, when (UTC), and itself."""
+
+    number: int
+    region: str
+    entered: str
+    made_at: np.datetime64
+    outlook: Outlook
+
+
+class Outlooks:
+    """The outlooks of an archive."""
+
+    def __init__(
+        self,
+        write: Callable[[Callable[[Connection], Any]], Any],
+        reading: Callable[[], AbstractContextManager[Connection]],
+    ) -> None:
+        self._write, self._reading = write, reading
+
+    def keep(self, region: str, outlook: Outlook, entered: str = "") -> int:
+        """Keep an outlook; gives its number.  One of the same region, day and inputs is there for good: it stays.
+
+        entered  what marks the inputs, up to 64 characters: versions of the days, activity entered
+        """
+        facts, data = _pack(outlook)
+        values = {
+            "region": region, "known_until": str(outlook.known_until), "entered": entered, "facts": facts, "data": data,
+            "sha256": _digest(facts, data),
+        }  # fmt: skip
+
+        def insert(connection: Connection) -> int:
+            table = schema.outlook
+            ours = (
+                (table.c.region == region)
+                & (table.c.known_until == values["known_until"])
+                & (table.c.entered == entered)
+            )
+            found = connection.scalar(sa.select(table.c.id).where(ours))
+            if found is not None:
+                return int(found)
+            connection.execute(sa.insert(table).values(**values))
+            return int(connection.scalar(sa.select(table.c.id).where(ours)) or 0)
+
+        return int(self._write(insert))
+
+    def find(self, region: str, known_until: np.datetime64, entered: str = "") -> Kept | None:
+        """The outlook of a region, made after a day from marked inputs; None where there is none."""
+        table = schema.outlook
+        query = sa.select(table).where(
+            table.c.region == region, table.c.known_until == str(known_until), table.c.entered == entered
+        )
+        with self._reading() as connection:
+            row = connection.execute(query).first()
+        return None if row is None else _kept(row)
+
+    def unscored(self, region: str, days: int = 2) -> tuple[Kept, ...]:
+        """Outlooks that were not scored with so many of their days in, oldest first."""
+        table, score = schema.outlook, schema.outlook_score
+        done = sa.select(score.c.outlook).where(score.c.days >= days)
+        query = sa.select(table).where(table.c.region == region, table.c.id.not_in(done))
+        with self._reading() as connection:
+            rows = connection.execute(query.order_by(table.c.known_until, table.c.id)).all()
+        return tuple(_kept(row) for row in rows)
+
+    def keep_score(self, number: int, days: int, facts: Any) -> None:
+        """Keep what became of an outlook when so many of its days were in; the first score stays."""
+
+        def insert(connection: Connection) -> None:
+            table = schema.outlook_score
+            ours = (table.c.outlook == number) & (table.c.days == days)
+            if connection.scalar(sa.select(table.c.outlook).where(ours)) is None:
+                values = {"outlook": number, "days": days, "facts": records.to_text(facts)}
+                connection.execute(sa.insert(table).values(**values))
+
+        self._write(insert)
+
+    def scores(self, region: str, newest: int = 120) -> tuple[Any, ...]:
+        """The fullest score of each of the newest outlooks of a region, newest first."""
+        table, score = schema.outlook, schema.outlook_score
+        query = (
+            sa.select(table.c.id, score.c.days, score.c.facts)
+            .join(score, score.c.outlook == table.c.id)
+            .where(table.c.region == region)
+            .order_by(table.c.known_until.desc(), table.c.id.desc(), score.c.days.desc())
+        )
+        with self._reading() as connection:
+            rows = connection.execute(query.limit(2 * newest)).all()
+        best: dict[int, Any] = {}
+        for row in rows:
+            best.setdefault(row.id, row.facts)
+        return tuple(records.from_text(text) for text in list(best.values())[:newest])
+
+
+def _digest(facts: str, data: bytes) -> str:
+    checksum = hashlib.sha256(facts.encode())
+    checksum.update(data)
+    return checksum.hexdigest()
+
+
+_SMALL = ("delay", "delay_quantiles", "slope_quantiles", "strained", "broken")  # single precision is plenty
+
+
+def _pack(outlook: Outlook) -> tuple[str, bytes]:
+    arrays = {item.name: getattr(outlook, item.name) for item in fields(Outlook)}
+    facts = {"known_until": str(arrays.pop("known_until")), "basis": list(arrays.pop("basis"))}
+    goal = io.BytesIO()
+    small = {name: value.astype(np.float32) if name in _SMALL else value for name, value in arrays.items()}
+    np.savez_compressed(goal, **small)
+    return records.to_text(facts), goal.getvalue()
+
+
+def _kept(row: Any) -> Kept:
+    """Raises FormatError where the bytes are not those that were kept."""
+    if _digest(row.facts, row.data) != row.sha256:
+        raise FormatError(
+            f"the outlook kept for {row.region} after {row.known_until} does not match its checksum and is not used; "
+            "restore the archive from a backup",
+            path=row.region, line=0,
+        )  # fmt: skip
+    facts = records.from_text(row.facts)
+    try:
+        with np.load(io.BytesIO(row.data), allow_pickle=False) as arrays:
+            known = {name: arrays[name] for name in arrays.files}
+    except (ValueError, zipfile.BadZipFile) as cause:
+        raise FormatError(f"the outlook kept for {row.region} after {row.known_until} cannot be read",
+                          path=row.region, line=0) from cause  # fmt: skip
+    known = {name: value.astype(np.float64) if name in _SMALL else value for name, value in known.items()}
+    outlook = Outlook(known_until=np.datetime64(facts["known_until"], "D"), basis=tuple(facts["basis"]), **known)
+    return Kept(row.id, row.region, row.entered, np.datetime64(row.made_at.replace(tzinfo=None), "s"), outlook)

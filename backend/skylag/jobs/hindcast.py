@@ -1,0 +1,289 @@
+"""Outlooks over an archive: its days as a history, the outlook after the newest, its record, and a replay of the past.
+
+Reads with `archive` and `formats`, computes with `ionosphere.outlook`.  An outlook is kept when it is made; when its
+days are in, it is scored once.  A replay keeps nothing.  Never lets an outlook see a day after the one it is made on.
+"""
+
+import hashlib
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from skylag.archive import Archive, DayHead
+from skylag.archive.outlooks import Kept
+from skylag.constants import L1_M_PER_TECU
+from skylag.errors import Missing, NotEnough, Refused
+from skylag.impact import uses
+from skylag.impact.states import nearest_cells
+from skylag.ionosphere import outlook_score
+from skylag.ionosphere.outlook import Drivers, History, Limits, no_drivers, replay, tomorrow
+from skylag.ionosphere.outlook_score import Tally
+from skylag.tables import HOLDS, STRAINED, UNSEEN, Bools, Bytes, Fields, Floats, Indices, Region
+
+MOST_DAYS = 400  # further back an outlook does not look
+MOST_CELLS = 600  # of the grid; every second, third ... row and column where it has more
+CALM_AP = 7.0  # ap of an outlook that tells of no storm
+
+Progress = Callable[[int, int], None]
+
+
+@dataclass(frozen=True)
+class Hour:
+    """The hours of one day at the places: delay, sigma [m], slope (24, P), states (uses, 24, P)."""
+
+    delay: Floats
+    sigma: Floats
+    slope: Floats
+    states: Bytes
+
+
+def limits_for(region: Region) -> tuple[Limits, ...]:
+    """First guesses of what makes a state, per use of a region."""
+    known = []
+    for use in uses.uses_of(region):
+        strained, broken, unit = uses.limits_of(use, region.shell_height_km * 1000.0)
+        if unit == "mm/km":
+            known.append(Limits(use.name, "slope", strained, broken))
+        else:
+            # What a model leaves is about half of the delay, what a plane misses about a tenth (first guesses only:
+            # the archive's own states teach the rest).
+            share = 0.5 if use.kind == "single" else 0.1
+            known.append(Limits(use.name, "delay", strained / share, broken / share))
+    return tuple(known)
+
+
+def _hours_of(fields: Fields, wanted: Sequence[Bytes], rows: Any, columns: Any, day: np.datetime64) -> Hour:
+    """Maps of a day as hours: means of delay and sigma, the steepest slope, the worst state.
+
+    An hour is unseen for a use where fewer than half of its maps see the place and none warns.
+    """
+    hour = ((fields.times - day.astype("datetime64[ns]")) / np.timedelta64(1, "h")).astype(np.int64)
+    inside = (hour >= 0) & (hour < 24)
+    count, places = 24, len(rows)
+    seen: Bools = np.isfinite(fields.vtec) & (fields.support > 0)
+    delay, sigma, slope = (np.full((count, places), np.nan) for _ in range(3))
+    states = np.zeros((len(wanted), count, places), dtype=np.uint8)
+    content = np.where(seen, fields.vtec, np.nan)[:, rows, columns].astype(np.float64) * L1_M_PER_TECU
+    spread = np.where(seen, fields.vtec_sigma, np.nan)[:, rows, columns].astype(np.float64) * L1_M_PER_TECU
+    steep = np.where(seen, fields.slope, np.nan)[:, rows, columns].astype(np.float64)
+    for number in range(count):  # hours, not observations
+        now = np.flatnonzero(inside & (hour == number))
+        if len(now) == 0:
+            continue
+        parts = ((delay, content, np.nanmean), (sigma, spread, np.nanmean), (slope, steep, np.nanmax))
+        for goal, source, make in parts:
+            known = np.isfinite(source[now]).sum(axis=0) * 2 >= len(now)
+            if known.any():
+                goal[number, known] = make(source[now][:, known], axis=0)
+        for use, codes in enumerate(wanted):
+            mine = codes[now][:, rows, columns]
+            worst = mine.max(axis=0)
+            enough = (mine != UNSEEN).sum(axis=0) * 2 >= len(now)
+            states[use, number] = np.where(worst >= STRAINED, worst, np.where(enough & (worst == HOLDS), HOLDS, UNSEEN))
+    return Hour(delay, sigma, slope, states)
+
+
+def history_of(
+    archive: Archive, region: str, until: np.datetime64 | None = None, since: np.datetime64 | None = None,
+    progress: Progress | None = None,
+) -> tuple[History, tuple[DayHead, ...]]:  # fmt: skip
+    """The stored days of a region as a history that ends on `until` (or its newest day), and which versions it holds.
+
+    Sites come first, cells after them.  Raises Missing where the region has no day.
+    """
+    heads = [head for head in archive.days(region, since, until) if not head.provisional]
+    if not heads:
+        raise Missing(f"region {region}: the archive has no whole day of it in that span; compute one with "
+                      "`skylag day`", what=region, nearest=archive.regions())  # fmt: skip
+    heads = sorted(heads, key=lambda head: head.day)
+    last = heads[-1].day if until is None else until.astype("datetime64[D]")
+    first = max(heads[0].day, last - np.timedelta64(MOST_DAYS - 1, "D"))
+    heads = [head for head in heads if head.day >= first]
+    if not heads:
+        raise Missing(f"region {region}: no day within {MOST_DAYS} days before {last}", what=region, nearest=())
+    newest = archive.day(region, heads[-1].day)
+    places = newest.region
+    lat_axis, lon_axis = newest.lats, newest.lons
+    step = int(np.ceil(np.sqrt(len(lat_axis) * len(lon_axis) / MOST_CELLS)))
+    lon, lat = np.meshgrid(lon_axis[::step], lat_axis[::step])
+    sites = places.sites
+    names = np.array([site.name for site in sites] + [""] * lat.size, dtype=np.str_)
+    lats = np.concatenate([[site.lat for site in sites], lat.ravel()])
+    lons = np.concatenate([[site.lon for site in sites], lon.ravel()])
+    limits = limits_for(places)
+    days = np.arange(first, last + np.timedelta64(1, "D")).astype("datetime64[D]")
+    shape = (len(days), 24, len(lats))
+    delay, sigma, slope = (np.full(shape, np.nan) for _ in range(3))
+    states = np.zeros((len(limits), *shape), dtype=np.uint8)
+    for number, head in enumerate(heads):
+        if progress is not None:
+            progress(number, len(heads))
+        fields = archive.fields(region, head.day, version=head.version)
+        flags = archive.flags(region, head.day, head.version)
+        judged = [uses.judge_for(use, fields, flags, places).states for use in uses.uses_of(places)]
+        rows, columns, inside = nearest_cells(fields, lats, lons)
+        found = _hours_of(fields, judged, rows, columns, head.day)
+        row = int((head.day - first) / np.timedelta64(1, "D"))
+        delay[row], sigma[row], slope[row] = (np.where(inside, part, np.nan) for part in (
+            found.delay, found.sigma, found.slope))  # fmt: skip
+        states[:, row] = np.where(inside, found.states, UNSEEN)
+    return History(days, names, lats, lons, delay, sigma, slope, states, limits), tuple(heads)
+
+
+def drivers_of(days: Any, indices: Indices | None, expected_ap: Floats | None = None) -> Drivers:
+    """What is known of Sun and field on the days of a history.
+
+    indices      measured ap and F10.7; None where none are at hand
+    expected_ap  (2, 8) or (2,) entered for the two days after the last; NaN where nothing is said
+    Past outlooks of activity are not kept: a replay is told none.
+    """
+    drivers = no_drivers(len(days))
+    if indices is not None:
+        row = {day: number for number, day in enumerate(indices.day)}
+        for number, day in enumerate(days):
+            if day in row:
+                drivers.ap[number] = indices.ap[row[day]]
+                drivers.flux[number] = indices.f107_observed[row[day]]
+    if expected_ap is not None:
+        entered = np.asarray(expected_ap, dtype=np.float64)
+        if entered.shape == (2,):
+            entered = np.repeat(entered[:, None], 8, axis=1)
+        if entered.shape != (2, 8) or np.any((entered < 0) | (entered > 400)):
+            raise Refused("expected ap: give one value from 0 to 400 for each of the two days ahead, or eight",
+                          name="expected_ap", value=str(expected_ap)[:60], allowed="0 to 400")  # fmt: skip
+        drivers.expected[-1] = entered
+    return drivers
+
+
+def _mark(heads: Sequence[DayHead], drivers: Drivers) -> str:
+    """Marks the inputs of an outlook: which versions of which days, and what was known of Sun and field."""
+    checksum = hashlib.sha256()
+    for head in heads:
+        checksum.update(f"{head.day} {head.version}\n".encode())
+    for part in (drivers.ap, drivers.expected, drivers.flux):
+        checksum.update(np.nan_to_num(part, nan=-1.0).tobytes())
+    return checksum.hexdigest()[:32]
+
+
+def newest(
+    archive: Archive, region: str, indices: Indices | None = None, expected_ap: Floats | None = None
+) -> Kept:
+    """The outlook after the newest day of a region: the one that is kept, or made now and kept.
+
+    Outlooks whose days have come in the meantime are scored on the way.  Raises Missing where the region has no day.
+    """
+    heads = sorted((head for head in archive.days(region) if not head.provisional), key=lambda head: head.day)
+    if heads:
+        last = heads[-1].day
+        first = max(heads[0].day, last - np.timedelta64(MOST_DAYS - 1, "D"))
+        used = [head for head in heads if head.day >= first]
+        days = np.arange(first, last + np.timedelta64(1, "D"))
+        kept = archive.outlooks.find(region, last, _mark(used, drivers_of(days, indices, expected_ap)))
+        if kept is not None:
+            return kept
+    history, used_heads = history_of(archive, region)
+    drivers = drivers_of(history.days, indices, expected_ap)
+    score_due(archive, region, history, drivers)
+    made = tomorrow(history, drivers)
+    mark = _mark(used_heads, drivers)
+    archive.outlooks.keep(region, made, mark)
+    kept = archive.outlooks.find(region, made.known_until, mark)
+    if kept is None:
+        raise Missing(f"the outlook of {region} was not kept", what=region, nearest=())
+    return kept
+
+
+def score_due(archive: Archive, region: str, history: History, drivers: Drivers | None = None) -> int:
+    """Score the kept outlooks whose days are in; gives how many.  Scored when the last of their days is in or past."""
+    done = 0
+    for kept in archive.outlooks.unscored(region):
+        made = kept.outlook
+        days_in = int((history.days[-1] - made.known_until) / np.timedelta64(1, "D"))
+        if days_in < 1 or made.known_until < history.days[0] or not np.array_equal(made.lats, history.lats):
+            continue
+        try:
+            tally = outlook_score.score(made, history, drivers)
+        except NotEnough:
+            continue
+        archive.outlooks.keep_score(kept.number, min(days_in, len(made.hours) // 24), tally.facts())
+        done += 1
+    return done
+
+
+def track_record(archive: Archive, region: str, most: int = 120) -> Tally:
+    """What became of the newest kept outlooks of a region, together."""
+    total = Tally()
+    for facts in archive.outlooks.scores(region, most):
+        total.add(outlook_score.from_facts(facts))
+    return total
+
+
+@dataclass(frozen=True)
+class Hindcast:
+    """What a replay found: first and last day foretold, the score, and how many days had data."""
+
+    region: str
+    first: np.datetime64
+    last: np.datetime64
+    days_with_data: int
+    tally: Tally
+
+
+def hindcast(
+    archive: Archive, region: str, first: np.datetime64, last: np.datetime64, indices: Indices | None = None,
+    progress: Progress | None = None,
+) -> Hindcast:  # fmt: skip
+    """Replay the archive as if it were then: an outlook before each day from `first` to `last`, scored with that day.
+
+    Raises Refused where last is before first, NotEnough where no outlook can be scored.
+    """
+    if last < first:
+        raise Refused(f"hindcast: {last} is before {first}; give the earlier day first", name="to", value=str(last),
+                      allowed=f"from {first}")  # fmt: skip
+    history, _ = history_of(archive, region, until=last, progress=progress)
+    return Hindcast(region, first, last, int(np.isfinite(history.delay).any(axis=(1, 2)).sum()),
+                    replay_scored(history, drivers_of(history.days, indices), first))  # fmt: skip
+
+
+def replay_scored(history: History, drivers: Drivers, first: np.datetime64) -> Tally:
+    """Scores of the outlooks for the days of a history from `first` on, each made the evening before."""
+    start = max(0, int((first - history.days[0]) / np.timedelta64(1, "D")) - 1)
+    total = Tally()
+    for number, made in enumerate(replay(history, drivers, start)):
+        if start + number + 1 >= len(history.days):
+            break
+        try:
+            total.add(outlook_score.score(made, history, drivers))
+        except NotEnough:
+            continue  # the network was down on that day
+    if total.outlooks == 0:
+        raise NotEnough(
+            f"hindcast: no day from {first} on follows a stored one and has data itself; give an earlier day, or "
+            "compute more days",
+            had=len(history.days), needed=2, where=str(first),
+        )  # fmt: skip
+    return total
+
+
+def summary(tally: Tally) -> Mapping[str, Any]:
+    """A tally as a page or a table shows it: what was reached, per lead; reliability and Brier scores per use."""
+    leads = {}
+    for lead in ("1", "2"):
+        found = outlook_score.verdict(tally, lead)
+        if found is not None:
+            leads[lead] = {
+                "hours": found.hours, "mean_error_m": found.mean_error, "rms_m": found.rms,
+                "absolute_m": found.absolute, "crps_m": found.crps, "inside": dict(found.inside),
+                "against": {name: vars(one) for name, one in found.against.items()},
+            }  # fmt: skip
+    states: dict[str, Any] = {}
+    for use, levels in tally.brier.items():
+        states[use] = {}
+        for level, (count, own, often, same) in levels.items():
+            tenths = [vars(tenth) for tenth in outlook_score.reliability(tally, use, level)]
+            scores = [value / count if count else None for value in (own, often, same)]
+            states[use][level] = {"cases": int(count), "brier": scores[0], "brier_frequency": scores[1],
+                                  "brier_persistence": scores[2], "tenths": tenths}  # fmt: skip
+    return {"outlooks": tally.outlooks, "leads": leads, "states": states}

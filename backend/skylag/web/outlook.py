@@ -1,0 +1,77 @@
+"""Routes about the day ahead: the outlook after the newest day of a region, at a place or on a map, and its record.
+
+Made and kept at the first request after a new day.  An outlook is a planning aid, not for navigation.
+"""
+
+import numpy as np
+from fastapi import APIRouter, Request
+from fastapi.responses import Response
+
+from skylag.archive import Archive
+from skylag.errors import Refused
+from skylag.impact import outlook_advice, uses
+from skylag.ionosphere import outlook as science
+from skylag.jobs import hindcast
+from skylag.tables import Outlook
+from skylag.web import asking, payloads
+
+router = APIRouter()
+
+
+def _entered(expected_ap: str) -> np.ndarray[tuple[int, ...], np.dtype[np.float64]] | None:
+    """Two values of ap for the two days ahead, as they are asked: `12,80`; None without."""
+    if not expected_ap.strip():
+        return None
+    try:
+        return np.array([float(word) for word in expected_ap.split(",")], dtype=np.float64)
+    except ValueError:
+        raise Refused(
+            f"expected_ap={expected_ap}: write two numbers, one for each day ahead, like 12,80",
+            name="expected_ap", value=expected_ap, allowed="two numbers from 0 to 400",
+        ) from None  # fmt: skip
+
+
+def _place(made: Outlook, lat: float, lon: float) -> tuple[int, float]:
+    """Row of the nearest place and its distance [km]."""
+    north = made.lats - lat
+    east = ((made.lons - lon + 180.0) % 360.0 - 180.0) * np.cos(np.radians(lat))
+    away = np.hypot(north, east) * 111.2
+    return int(np.argmin(away)), float(away.min())
+
+
+@router.get("/api/outlook/{region}", summary="The day ahead at a place")
+def at_place(
+    request: Request, region: str, lat: float, lon: float, use: str = "", expected_ap: str = "", most: float = 0.1
+) -> Response:
+    """Hour by hour for two days: expected delay with ranges, slope quantiles, chances for a use, windows, advice.
+
+    expected_ap  ap entered for the two days ahead, like `12,80`; most: the chance up to which an hour counts as likely
+    to hold.  A place farther than a cell from all of the map is refused.
+    """
+    archive: Archive = request.app.state.archive
+    lat, lon = asking.place(lat, lon)
+    kept = hindcast.newest(archive, region, expected_ap=_entered(expected_ap))
+    made = kept.outlook
+    record = archive.day(region, made.known_until)
+    wanted = uses.find_use(record.region, use) if use else uses.uses_of(record.region)[0]
+    place, away_km = _place(made, lat, lon)
+    if record.cell_of(lat, lon) is None:
+        raise Refused(
+            f"{lat}, {lon} lies outside the map of {region}: nothing can be told there; choose a place inside",
+            name="lat, lon", value=f"{lat}, {lon}", allowed="a place inside the map",
+        )  # fmt: skip
+    number = [str(name) for name in made.uses].index(wanted.name)
+    spans = science.windows(made, place, number, most)
+    storm = any(word not in ("untold", "quiet") for word in made.phases)
+    return payloads.reply(
+        payloads.outlook_at(
+            kept, place, away_km, number, spans, outlook_advice.advice(wanted, spans, storm), record.origin.simulated
+        )
+    )
+
+
+@router.get("/api/outlook/{region}/record", summary="How often outlooks were right")
+def track_record(request: Request, region: str) -> Response:
+    """Scores of the kept outlooks whose days came, beside persistence, recurrence, climatology, the usual."""
+    archive: Archive = request.app.state.archive
+    return payloads.reply(payloads.outlook_record(region, hindcast.summary(hindcast.track_record(archive, region))))
