@@ -32,6 +32,37 @@ def test_a_wall_is_recovered(slope, width, speed, heading):
     assert miss_s < 60.0 and miss_s < 3 * sigma_s + 5
 
 
+@pytest.mark.parametrize(
+    ("slope", "width", "speed", "heading"),
+    [(80, 60, 0, 40), (120, 100, 10, 300), (200, 50, 15, 120), (300, 40, 20, 10)],
+)
+def test_a_wall_that_hardly_moves_is_one_front(slope, width, speed, heading):
+    found = fronts.track(*with_wall(slope, width, speed, heading, seed=slope, hours=6.0))
+    assert len(found.fronts) == 1
+    front = found.fronts[0]
+    assert abs(front.speed_m_s - speed) < max(3.0, 2 * front.speed_sigma_m_s)
+    turned = (front.heading_deg - heading + 180) % 360 - 180
+    if speed == 0:  # a wall at rest has no front and back: the other way round it takes what it brought
+        turned = (turned + 90) % 180 - 90
+    else:
+        assert front.jump_tecu > 0
+    assert abs(turned) < 3.0
+    assert front.slope == pytest.approx(slope, rel=0.1)
+    # Lines of sight on both sides of its speed saw it: rises and falls alike belong to it.
+    assert len(np.unique(np.sign(found.onsets.jump[found.onsets.front == 0]))) == 2
+
+
+def test_two_breadths_add_somewhere_between_plainly_and_as_squares():
+    lean = np.linspace(0.1, 1.0, 40)
+    for power in (1.0, 2.0):
+        seen = (2.0**power + (5.0 * lean) ** power) ** (1.0 / power)
+        breadth, sigma, growth = fronts._upright(seen, lean, 0.1, power)
+        assert breadth == pytest.approx(2.0, rel=1e-6) and growth == pytest.approx(5.0, rel=1e-6)
+        assert sigma < 0.2
+    plain = fronts._upright((2.0**2 + (5.0 * lean) ** 2) ** 0.5, lean, 0.1, 1.0)[0]
+    assert plain < 2.0  # the two answers stand on both sides of what is true
+
+
 def test_errors_over_sigma_look_like_a_unit_normal():
     over = []
     for seed in range(6):
@@ -45,8 +76,7 @@ def test_errors_over_sigma_look_like_a_unit_normal():
             (best.speed_m_s - speed) / best.speed_sigma_m_s,
             ((best.heading_deg - heading + 180) % 360 - 180) / best.heading_sigma_deg,
         ))  # fmt: skip
-    # The scatter allowed to a run's place is for thick walls; a thin shell's errors stay below it.
-    assert np.sqrt(np.mean(np.square(over))) < 1.5
+    assert 0.3 < np.sqrt(np.mean(np.square(over))) < 1.8
 
 
 def test_a_calm_sky_has_no_front():

@@ -47,6 +47,7 @@ def test_the_wall_of_the_storm(storm):
     # Content grows toward the heading: the wall brings a fall.
     assert front.jump_tecu == pytest.approx(-truth.jump_tecu, rel=0.08)
     assert front.slope == pytest.approx(truth.slope_mm_per_km, rel=0.15)
+    assert abs(front.slope - truth.slope_mm_per_km) < 2 * front.slope_sigma
     moment, sigma_s = fronts.expected_at(front, truth.lat, truth.lon)
     miss_s = abs((moment - front.epoch) / np.timedelta64(1, "s"))
     assert miss_s < 120.0 and miss_s < 3 * sigma_s

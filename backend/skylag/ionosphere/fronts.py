@@ -24,8 +24,9 @@ from skylag.ionosphere.slopes import MM_PER_TECU
 from skylag.tables import Bools, Floats, Front, Fronts, Ints, Onsets, Rays, Samples, Site, Slopes, Times
 
 _KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
+_LEAST_MISFIT = 0.05  # the scatter allowed to a run's place is for thick walls; agreement makes sigmas smaller, not nil
 _TWO_WAYS_KM_S = 0.1  # pierce points overtake walls slower than this and see them from the other side
-_SLOW_KM_S, _SLOW_BIAS_KM_S = 0.05, 0.006  # root mean square speed error of simulated walls slower than 50 m/s
+_SLOW_KM_S, _SLOW_BIAS_KM_S = 0.1, 0.005  # speed error of a wall near rest, less and less up to 100 m/s (simulated)
 _PIERCE_KM_S = 0.06  # usual speed of a pierce point: even a wall at rest is swept over by them
 
 
@@ -531,7 +532,8 @@ def _polish(points: _Points, start: _Wall, choices: FrontChoices) -> _Wall | Non
         wall = _Wall(
             wall.heading + float(np.clip(step[0], -0.5, 0.5)), wall.speed + float(step[1]),
             wall.offset + float(step[2]), wall.height + float(step[3]),
-            np.linalg.inv(scaled) / scale[:, None] / scale[None, :] * max(1.0, misfit), inside, misfit, wall.brings,
+            np.linalg.inv(scaled) / scale[:, None] / scale[None, :] * max(_LEAST_MISFIT, misfit), inside, misfit,
+            wall.brings,
         )  # fmt: skip
     wall = replace(wall, covariance=_widened(wall.covariance, normal, design * (weight * away)[:, None], points))
     if wall.speed < 0.0:
@@ -571,14 +573,15 @@ def _front(
     x, y = points.x + wall.height * points.lean_x, points.y + wall.height * points.lean_y
     offset = wall.offset
     along = x * north - y * east  # to the right of the heading
+    # A slow wall takes so long to pass that the running background follows it: its speed is biased by that.
+    covariance = wall.covariance.copy()
+    covariance[1, 1] += (_SLOW_BIAS_KM_S * max(0.0, 1.0 - wall.speed / _SLOW_KM_S)) ** 2
+    wall = replace(wall, covariance=covariance)
     steep = steepness(wall, onsets, points, max(choices.step_s, rays.interval_s))
     lean_start, lean_end = onsets.time.min(), onsets.time.max()
     steps = np.arange(lean_start, lean_end + np.timedelta64(1, "s"), np.timedelta64(round(choices.track_step_s), "s"))
     away = offset + wall.speed * ((steps - epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9)
     lat, lon = from_plane(away * east, away * north, centre)
-    # A slow wall takes so long to pass that the running background follows it: its speed is biased by that.
-    covariance = wall.covariance.copy()
-    covariance[1, 1] += (_SLOW_BIAS_KM_S if wall.speed < _SLOW_KM_S else 0.0) ** 2
     sigma = np.sqrt(np.diag(covariance))
     receivers = tuple(rays.receivers[number].name for number in np.unique(onsets.receiver))
     satellites = tuple(str(rays.satellites[number]) for number in np.unique(onsets.satellite))
@@ -636,10 +639,11 @@ def steepness(wall: _Wall, onsets: Onsets, points: _Points, interval_s: float = 
 
     A pierce point that moves with the wall sees it pass slowly, so the steepest rate is divided by the relative speed
     along the heading.  A slanting line of sight meets an upright wall over a stretch that grows with its lean, and
-    sees it too broad and too flat: the square of the breadth per TECU is fitted as a constant (upright) and a part
-    that grows with the square of the lean, those of least lean counting most.  What a wider choice of lines would
-    change, and what the restlessness of the lines adds to a steepest rate, is in the sigma.  Broken runs (jump far from
-    the usual) are left out.
+    sees it too broad and too flat: the breadth per TECU is taken as that of the wall upright and a part that grows with
+    the lean, those of least lean counting most.  How the two add depends on shapes that are not known: as squares when
+    both are bells, plainly when they have long tails; the truth lies between, so the mean of both is taken and half
+    their difference is in the sigma, as is what a wider choice of lines would change, and what the restlessness of the
+    lines adds to a steepest rate.  Broken runs (jump far from the usual) are left out.
     """
     east, north = np.sin(wall.heading), np.cos(wall.heading)
     relative = np.abs(wall.speed * 1000.0 - (onsets.east_speed * east + onsets.north_speed * north)) / 1000.0
@@ -654,39 +658,43 @@ def steepness(wall: _Wall, onsets: Onsets, points: _Points, interval_s: float = 
         return Steepness(nothing, nothing, nothing, nothing, usual, nothing, 0.0)
     # Kilometres per TECU: the inverse slope, whose square grows with the square of the lean.
     inverse = relative[used] / np.maximum(np.abs(onsets.rate[used]), 1e-9)
-    square, square_sigma, depth = _upright(inverse, lean[used], 0.1)
-    square_sigma = float(np.hypot(square_sigma, 0.5 * (square - _upright(inverse, lean[used], 0.2)[0])))
+    bells, bells_sigma, depth = _upright(inverse, lean[used], 0.1, 2.0)
+    tails = _upright(inverse, lean[used], 0.1, 1.0)[0]
+    breadth = 2.0 / (1.0 / bells + 1.0 / tails)
+    unknown = np.array([0.5 * (bells - tails), 0.5 * (bells - _upright(inverse, lean[used], 0.2, 2.0)[0]), bells_sigma])
+    breadth_sigma = float(np.sqrt((unknown**2).sum()))
     few = used[np.argsort(lean[used], kind="stable")][: max(5, len(used) // 3)]
     jump = float(np.median(jumps[few]))
     jump_sigma = 1.2533 * 1.4826 * float(np.median(np.abs(jumps[few] - jump))) / np.sqrt(len(few))
-    slope, width = MM_PER_TECU / float(np.sqrt(square)), jump * float(np.sqrt(square))
+    slope, width = MM_PER_TECU / breadth, jump * breadth
     speed_share = float(np.sqrt(wall.covariance[1, 1]) / np.median(relative[used]))
     # Steepest rates are taken over an interval: a wall that passes within two of them is flattened by chance.
     intervals = float(np.median(relative[used]) * interval_s / width)
     blur = min(0.5, intervals**2 / 12.0 + 0.25 * min(1.0, max(0.0, 2.0 * intervals - 1.0)))
     restless = float(np.median(onsets.rate_sigma[used] / np.abs(onsets.rate[used])))
-    share = float(np.sqrt((0.5 * square_sigma / square) ** 2 + speed_share**2 + blur**2 + restless**2))
+    share = float(np.sqrt((breadth_sigma / breadth) ** 2 + speed_share**2 + blur**2 + restless**2))
     width_sigma = width * float(np.hypot(share, jump_sigma / jump))
     return Steepness(slope, slope * share, width, width_sigma, jump, jump_sigma, depth * jump)
 
 
-def _upright(seen: Floats, lean: Floats, least: float) -> tuple[float, float, float]:
-    """Square of the breadth seen upright, its sigma, and the growth of breadth per unit of lean; robust.
+def _upright(seen: Floats, lean: Floats, least: float, power: float) -> tuple[float, float, float]:
+    """Breadth seen upright, its sigma, and the growth of breadth per unit of lean; robust.
 
-    seen  breadths [km per TECU]; lean  tangent of the angle in which a line of sight slants along the heading.
+    seen   breadths [km per TECU]; lean  tangent of the angle in which a line of sight slants along the heading
+    power  the breadths of wall and slant add as such powers
 
     Lines with a lean above `least` count less and less.
     """
     trust = 1.0 / (1.0 + (lean / least) ** 2)
-    design = np.stack([np.ones(len(seen)), lean**2], axis=1)
-    target = seen**2
+    design = np.stack([np.ones(len(seen)), lean**power], axis=1)
+    target = seen**power
     weight = np.sqrt(trust) / np.median(target)
     covariance: Floats = np.zeros((2, 2))
     answer = np.array([float(np.median(target)), 0.0])
     for _ in range(8):
         normal = _normal(design, weight)
         answer = np.linalg.solve(normal, design.T @ (target * weight**2))
-        # Neither a width nor a depth can be imaginary: what would be is held at nothing.
+        # Neither a width nor a depth can be negative: what would be is held at nothing.
         if answer[1] < 0.0 or answer[0] < 0.05 * float(np.min(target)):
             mean = float((target * weight**2).sum() / (weight**2).sum())
             answer = np.array([mean, 0.0])
@@ -697,7 +705,8 @@ def _upright(seen: Floats, lean: Floats, least: float) -> tuple[float, float, fl
         covariance = np.asarray(np.linalg.inv(_normal(design, weight)) * scatter**2, dtype=np.float64)
     held = answer[1] == 0.0
     variance = scatter**2 * answer[0] ** 2 / len(seen) if held else covariance[0, 0]
-    return float(answer[0]), float(np.sqrt(variance)), float(np.sqrt(answer[1]))
+    breadth, growth = float(answer[0] ** (1.0 / power)), float(answer[1] ** (1.0 / power))
+    return breadth, float(np.sqrt(variance)) * breadth / (power * float(answer[0])), growth
 
 
 def _normal(design: Floats, weight: Floats) -> Floats:
