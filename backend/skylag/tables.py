@@ -737,6 +737,7 @@ class Front:
     reach_km: how far it was seen to its left (negative) and right along the wall, from the foot of that distance
     track      (time, lat, lon) of its nearest point to the centre, every few minutes
     sweep_km   scatter of the lines of sight about the line; height_km of the wall's middle, as the lines of sight tell
+    segments   (K, 7) stretches of half an hour: middle [s after epoch], offset [km], speed [km/s], heading [rad], sigmas
     """
 
     start: np.datetime64
@@ -766,6 +767,7 @@ class Front:
     confirmed: bool
     covariance: Floats  # (3, 3) of offset [km], speed [km/s], heading [rad]
     track: tuple[tuple[np.datetime64, float, float], ...]
+    segments: Floats = field(default_factory=lambda: np.zeros((0, 7)))
 
 
 @dataclass(frozen=True)

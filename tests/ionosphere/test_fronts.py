@@ -52,6 +52,41 @@ def test_a_wall_that_hardly_moves_is_one_front(slope, width, speed, heading):
     assert len(np.unique(np.sign(found.onsets.jump[found.onsets.front == 0]))) == 2
 
 
+def bending(x, y, t):
+    """A wall of 150 mm/km over 60 km that speeds up from 140 to 260 m/s and turns by 16 degrees in two hours."""
+    late = t - 2 * 3600
+    turn = np.radians(300.0 + 8.0 * np.clip(late / 3600.0, -1, 1))
+    way = 0.2 * late + 0.06 * np.clip(late, -3600, 3600) ** 2 / 7200.0
+    return 150.0 / 162.372448 * np.clip(30.0 - (x * np.sin(turn) + y * np.cos(turn) - way), 0.0, 60.0)
+
+
+def test_a_front_that_turns_and_speeds_up_is_followed():
+    rays, samples = simulate(lambda x, y, t: quiet(x, y, t) + bending(x, y, t), np.random.default_rng(23), hours=4.0)
+    front = max(fronts.track(rays, samples).fronts, key=lambda f: f.onsets)
+    assert len(front.segments) >= 3
+    speed, heading = 1000.0 * front.segments[:, 2], np.degrees(front.segments[:, 3]) % 360.0
+    middle_s = front.segments[:, 0] + (front.epoch - START) / np.timedelta64(1, "s") - 7200.0
+    inside = np.abs(middle_s) < 3600
+    # The pace of a line that turns differs along it; at its foot it is what was put in.
+    assert np.abs(speed - (200.0 + 60.0 * middle_s / 3600.0))[inside].max() < 40.0
+    assert np.abs(heading - (300.0 + 8.0 * middle_s / 3600.0))[inside].max() < 4.0
+    assert speed[inside][-1] > speed[inside][0] + 20.0 and heading[inside][-1] > heading[inside][0] + 3.0
+    straight = fronts.replace(front, segments=np.zeros((0, 7)))
+    late = front.epoch + (np.arange(-2, 3) * 900).astype("timedelta64[s]")
+    true = [0.2 * s + 0.06 * np.clip(s, -3600, 3600) ** 2 / 7200.0 for s in
+            (late - START) / np.timedelta64(1, "s") - 7200.0]  # fmt: skip
+    miss = [float(np.abs(fronts.position(one, late) - true).max()) for one in (front, straight)]
+    assert miss[0] < 20.0 and miss[0] < miss[1] + 1.0
+
+
+def test_a_steady_front_keeps_its_pace_in_all_stretches():
+    front = fronts.track(*with_wall(100, 60, 100, 40, seed=5, hours=4.0)).fronts[0]
+    assert len(front.segments) >= 4
+    over = (front.segments[:, 2] - 0.1) / front.segments[:, 5]
+    assert np.sqrt(np.mean(over**2)) < 2.5
+    assert np.abs(np.degrees(front.segments[:, 3]) % 360.0 - 40.0).max() < 3.0
+
+
 def test_two_breadths_add_somewhere_between_plainly_and_as_squares():
     lean = np.linspace(0.1, 1.0, 40)
     for power in (1.0, 2.0):

@@ -19,6 +19,7 @@ from numpy.lib.stride_tricks import sliding_window_view
 from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.events import Arrival
 from skylag.ionosphere.field import plane_km
+from skylag.ionosphere.front_segments import follow, line_at
 from skylag.ionosphere.sightlines import Sightlines, from_plane, lay_out, middle
 from skylag.ionosphere.slopes import MM_PER_TECU
 from skylag.tables import Bools, Floats, Front, Fronts, Ints, Onsets, Rays, Samples, Site, Slopes, Times
@@ -580,8 +581,11 @@ def _front(
     steep = steepness(wall, onsets, points, max(choices.step_s, rays.interval_s))
     lean_start, lean_end = onsets.time.min(), onsets.time.max()
     steps = np.arange(lean_start, lean_end + np.timedelta64(1, "s"), np.timedelta64(round(choices.track_step_s), "s"))
-    away = offset + wall.speed * ((steps - epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9)
-    lat, lon = from_plane(away * east, away * north, centre)
+    whole = (offset, wall.speed, wall.heading)
+    late = np.hypot(points.place_sigma, max(wall.speed, _PIERCE_KM_S) * points.time_sigma)
+    segments = follow(along, wall.distance(points), late, points.t, whole, wall.misfit)
+    away, turned = line_at(segments, whole, (steps - epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9)
+    lat, lon = from_plane(away * np.sin(turned), away * np.cos(turned), centre)
     sigma = np.sqrt(np.diag(covariance))
     receivers = tuple(rays.receivers[number].name for number in np.unique(onsets.receiver))
     satellites = tuple(str(rays.satellites[number]) for number in np.unique(onsets.satellite))
@@ -613,6 +617,7 @@ def _front(
         confirmed=True,
         covariance=covariance[np.ix_([2, 1, 0], [2, 1, 0])],
         track=tuple(zip(steps, lat.tolist(), lon.tolist(), strict=True)),
+        segments=segments,
     )
 
 
@@ -718,18 +723,24 @@ def _normal(design: Floats, weight: Floats) -> Floats:
 # ---------------------------------------------------------------------------------------------- arrivals
 
 
+def line_of(front: Front, time: Any) -> tuple[Floats, Floats]:
+    """Distance [km] of the wall's line from the centre of its map, and its heading [rad], at times."""
+    elapsed = (np.asarray(time) - front.epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9
+    whole = (front.offset_km, front.speed_m_s / 1000.0, float(np.radians(front.heading_deg)))
+    return line_at(front.segments, whole, elapsed)
+
+
 def position(front: Front, time: Any) -> Floats:
     """Distance [km] of the wall from the centre of its map toward its heading, at times."""
-    elapsed = (np.asarray(time) - front.epoch).astype("timedelta64[ns]").astype(np.int64) / 1e9
-    return np.asarray(front.offset_km + front.speed_m_s / 1000.0 * elapsed)
+    return line_of(front, time)[0]
 
 
 def ahead_km(front: Front, lat: Any, lon: Any, time: Any) -> tuple[Floats, Floats]:
     """How far [km] places lie ahead of the wall at times (negative: passed), and how far right of its middle line."""
     x, y = plane_km(np.asarray(lat, dtype=np.float64), np.asarray(lon, dtype=np.float64), front.centre)
-    heading_rad = np.radians(front.heading_deg)
+    offset, heading_rad = line_of(front, time)
     east, north = np.sin(heading_rad), np.cos(heading_rad)
-    return np.asarray(x * east + y * north - position(front, time)), np.asarray(x * north - y * east)
+    return np.asarray(x * east + y * north - offset), np.asarray(x * north - y * east)
 
 
 def expected_at(front: Front, lat: float, lon: float) -> tuple[np.datetime64, float]:
@@ -739,12 +750,19 @@ def expected_at(front: Front, lat: float, lon: float) -> tuple[np.datetime64, fl
     """
     if front.speed_m_s < 5.0:
         return np.datetime64("NaT"), float("nan")
-    distance, right = ahead_km(front, lat, lon, front.epoch)
     speed = front.speed_m_s / 1000.0
-    elapsed = float(distance) / speed
+    moment, right = front.epoch, 0.0
+    for _ in range(6):  # the line may change its pace and heading on the way
+        left, aside = ahead_km(front, lat, lon, moment)
+        right = float(aside)
+        moment = moment + np.timedelta64(round(float(np.clip(left / speed, -1e5, 1e5)) * 1e9), "ns")
+    elapsed = float((moment - front.epoch).astype("timedelta64[ns]").astype(np.int64)) / 1e9
     derivative = np.array([-1.0, -elapsed, float(right)])  # of the distance left, by offset, speed, heading
     variance = float(derivative @ front.covariance @ derivative) + front.sweep_km**2
-    return front.epoch + np.timedelta64(round(elapsed * 1e9), "ns"), float(np.sqrt(variance) / speed)
+    if len(front.segments):  # where it is foretold, by the pace of its latest stretch
+        latest = front.segments[-1]
+        variance += (max(0.0, elapsed - float(latest[0])) * float(latest[5])) ** 2
+    return moment, float(np.sqrt(variance) / speed)
 
 
 def arrivals(
