@@ -5,7 +5,9 @@ looks into the work or its results.
 """
 
 import multiprocessing
+import multiprocessing.connection
 import os
+import threading
 from collections.abc import Iterator
 from concurrent.futures import Executor, ProcessPoolExecutor, ThreadPoolExecutor
 from contextlib import contextmanager
@@ -29,11 +31,24 @@ def open_executor(place: str) -> Iterator[Executor]:
         return
     count = _count(place, rest)
     if kind == "local":
-        yield from _pool(ProcessPoolExecutor(count, mp_context=multiprocessing.get_context(_start_method())))
+        world = multiprocessing.get_context(_start_method())
+        yield from _pool(ProcessPoolExecutor(count, mp_context=world, initializer=_end_with_parent))
     elif kind == "threads":
         yield from _pool(ThreadPoolExecutor(count, thread_name_prefix="work"))
     else:
         raise _refusal(place)
+
+
+def _end_with_parent() -> None:
+    """In a process of the pool: end when the one who made it is gone, also when that was killed."""
+    parent = multiprocessing.parent_process()
+
+    def watch() -> None:
+        if parent is not None:
+            multiprocessing.connection.wait([parent.sentinel])
+            os._exit(1)
+
+    threading.Thread(target=watch, name="parent-watch", daemon=True).start()
 
 
 def _start_method() -> str:
@@ -82,7 +97,13 @@ def _dask(place: str) -> Iterator[Executor]:
             "start one, correct the address, or write local:N",
             workers=place,
         ) from cause
+    executor = client.get_executor()
     try:
-        yield from _pool(client.get_executor())
+        yield executor
+    except BaseException:
+        executor.shutdown(wait=False)  # which cancels what has not begun
+        raise
+    else:
+        executor.shutdown(wait=True)
     finally:
         client.close()
