@@ -41,6 +41,8 @@ from skylag.tables import ARC_BEGAN, Bools, Floats, Ints, Observations
 
 FIRST, GAP, SLIP, RESET = (ARC_BEGAN.index(word) for word in ("first", "gap", "slip", "reset"))
 
+# No ionosphere changes slant content faster (J. Global Positioning Systems 2018, 16:5): what does is a slip or a fault.
+FASTEST_TECU_S = 0.35
 _AGREE = 16.0  # chi-square of three steps about the whole numbers that explain them
 
 
@@ -86,6 +88,8 @@ def find(observations: Observations, choices: ArcChoices) -> Stretches:
     """The stretches of constant ambiguities of one receiver-day."""
     series, row_of = on_grid(observations)
     found: list[Steps] = []
+    impossible = _impossible(series)
+    series.begin |= impossible
     left, right = series.runs()
     measure(series, left, right)
     columns = np.arange(series.present.shape[1])
@@ -105,12 +109,22 @@ def find(observations: Observations, choices: ArcChoices) -> Stretches:
         if len(found) == seen:
             break
         columns = np.unique(np.concatenate([slips.column for slips in found[seen:]]))
-    slipped = np.zeros(series.present.shape, dtype=bool)
+    slipped = impossible
     for slips in found:
         slipped[slips.row, slips.column] = True
     lonely = _drop_lonely(series, slipped)
     joined, told = _join(series, slipped, choices)
     return _collect(observations, series, row_of, slipped, told, lonely, joined, choices)
+
+
+def _impossible(series: Series) -> Bools:
+    """Epochs into which L1 - L2 changes faster than any ionosphere makes it; the epoch before is there too."""
+    change = np.diff(series.difference, axis=0) * tecu_per_metre(series.f1, series.f2)
+    with np.errstate(invalid="ignore"):
+        return np.vstack([
+            np.zeros((1, series.difference.shape[1]), dtype=bool),
+            np.abs(change) > FASTEST_TECU_S * series.interval_s + 1.0,
+        ])  # fmt: skip
 
 
 # ---------------------------------------------------------------------------------------------- decisions
