@@ -15,6 +15,8 @@ from datetime import date
 from pathlib import Path
 from typing import TextIO
 
+import numpy as np
+
 from skylag import advice_door, settings, work_door
 from skylag.chain import Choices
 from skylag.errors import Refused, SkylagError
@@ -22,7 +24,7 @@ from skylag.formats import results
 from skylag.ionosphere.pairs import USABLE_PAIRS, parse_wanted
 from skylag.jobs import work
 from skylag.jobs.executor import open_executor
-from skylag.tables import STATE_NAMES, Products
+from skylag.tables import STATE_NAMES, Indices, Products
 
 CAUTION = (
     "Planning aid, not for navigation. Official notices, the service provider's and the receiver maker's information, "
@@ -76,6 +78,7 @@ def _parser() -> argparse.ArgumentParser:
     _day_parser(commands)
     _demo_parser(commands)
     _serve_parser(commands)
+    _hindcast_parser(commands)
     advice_door.add(commands, CAUTION)
     work_door.add(commands, CAUTION, _date, _minutes)
     return parser
@@ -143,6 +146,23 @@ def _serve_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]
     parser.add_argument("--reading", choices=("open", "key"), default="open", help="off loopback, who may read (open)")
     parser.add_argument("--work", action="store_true", help="also work on the queue, in this process")
     parser.set_defaults(run=_serve)
+
+
+def _hindcast_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]") -> None:
+    parser = commands.add_parser(
+        "hindcast",
+        help="replay outlooks over an archive and tell how often they were right",
+        description="For each day from FROM to TO, make the outlook as it would have been made the evening before, "
+        "from earlier days alone, and score it with the day itself: errors, ranges, chances, beside persistence, "
+        "recurrence after 27 days, climatology, and the usual of the last 27 days. Keeps no outlook.",
+        epilog=CAUTION,
+    )
+    parser.add_argument("first", type=_date, metavar="FROM", help="first day foretold, YYYY-MM-DD")
+    parser.add_argument("last", type=_date, metavar="TO", help="last day foretold")
+    parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
+    parser.add_argument("--region", default="", metavar="NAME", help="region; not needed where the archive has one")
+    parser.add_argument("--indices", type=Path, metavar="FILE", help="measured Kp, ap and F10.7, GFZ or WDC form")
+    parser.set_defaults(run=_hindcast)
 
 
 def _date(text: str) -> date:
@@ -315,6 +335,31 @@ def _open_page(
             stop.set()
             if helper.is_alive():
                 helper.join()
+    return 0
+
+
+def _hindcast(options: argparse.Namespace) -> int:
+    from skylag import formats
+    from skylag.archive import open_archive
+    from skylag.jobs import hindcast
+
+    indices: Indices | None = None
+    if options.indices:
+        table = formats.read(options.indices).table
+        if isinstance(table, Indices):
+            indices = table
+        else:
+            raise Refused(f"{options.indices}: holds no geomagnetic indices; give a GFZ table or WDC cards",
+                          name="indices", value=str(options.indices), allowed="GFZ or WDC form")  # fmt: skip
+    first, last = (np.datetime64(day.isoformat(), "D") for day in (options.first, options.last))
+    with open_archive(options.archive or settings.from_environment().archive) as archive:
+        known = archive.regions()
+        if not options.region and len(known) != 1:
+            raise Refused(f"name a region with --region: the archive has {', '.join(known) or 'none'}", name="region",
+                          value="", allowed=known)  # fmt: skip
+        found = hindcast.hindcast(archive, options.region or known[0], first, last, indices)
+    print("\n".join(hindcast.told(found)))
+    print(CAUTION)
     return 0
 
 

@@ -2,13 +2,13 @@
 
 import hashlib
 import io
-import zipfile
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from contextlib import AbstractContextManager
 from dataclasses import dataclass, fields
 from typing import Any
 
 import numpy as np
+import numpy.typing as npt
 import sqlalchemy as sa
 from sqlalchemy.engine import Connection
 
@@ -111,6 +111,47 @@ class Outlooks:
             best.setdefault(row.id, row.facts)
         return tuple(records.from_text(text) for text in list(best.values())[:newest])
 
+    def keep_hours(
+        self, region: str, day: str, version: int, mark: str, arrays: Mapping[str, npt.NDArray[Any]]
+    ) -> None:
+        """Keep the hours of a day at the places that a mark stands for; those already there stay."""
+        data = _bytes_of(arrays)
+        key = {"region": region, "day": day, "version": version, "mark": mark}
+
+        def insert(connection: Connection) -> None:
+            table = schema.day_digest
+            ours = sa.and_(*(table.c[name] == value for name, value in key.items()))
+            if connection.scalar(sa.select(table.c.day).where(ours)) is None:
+                connection.execute(sa.insert(table).values(**key, data=data, sha256=_digest(_label(key), data)))
+
+        self._write(insert)
+
+    def hours(self, region: str, day: str, version: int, mark: str) -> dict[str, npt.NDArray[Any]] | None:
+        """The hours kept for a day; None where there are none, or not those that were kept: they can be made again."""
+        key = {"region": region, "day": day, "version": version, "mark": mark}
+        table = schema.day_digest
+        query = sa.select(table).where(*(table.c[name] == value for name, value in key.items()))
+        with self._reading() as connection:
+            row = connection.execute(query).first()
+        if row is None or _digest(_label(key), row.data) != row.sha256:
+            return None
+        return _arrays_of(row.data)
+
+
+def _label(key: Mapping[str, Any]) -> str:
+    return records.to_text(dict(key))
+
+
+def _bytes_of(arrays: Mapping[str, npt.NDArray[Any]]) -> bytes:
+    goal = io.BytesIO()
+    np.savez_compressed(goal, **dict(arrays))  # type: ignore[arg-type]
+    return goal.getvalue()
+
+
+def _arrays_of(data: bytes) -> dict[str, npt.NDArray[Any]]:
+    with np.load(io.BytesIO(data), allow_pickle=False) as arrays:
+        return {name: arrays[name] for name in arrays.files}
+
 
 def _digest(facts: str, data: bytes) -> str:
     checksum = hashlib.sha256(facts.encode())
@@ -124,10 +165,8 @@ _SMALL = ("delay", "delay_quantiles", "slope_quantiles", "strained", "broken")  
 def _pack(outlook: Outlook) -> tuple[str, bytes]:
     arrays = {item.name: getattr(outlook, item.name) for item in fields(Outlook)}
     facts = {"known_until": str(arrays.pop("known_until")), "basis": list(arrays.pop("basis"))}
-    goal = io.BytesIO()
     small = {name: value.astype(np.float32) if name in _SMALL else value for name, value in arrays.items()}
-    np.savez_compressed(goal, **small)
-    return records.to_text(facts), goal.getvalue()
+    return records.to_text(facts), _bytes_of(small)
 
 
 def _kept(row: Any) -> Kept:
@@ -139,12 +178,9 @@ def _kept(row: Any) -> Kept:
             path=row.region, line=0,
         )  # fmt: skip
     facts = records.from_text(row.facts)
-    try:
-        with np.load(io.BytesIO(row.data), allow_pickle=False) as arrays:
-            known = {name: arrays[name] for name in arrays.files}
-    except (ValueError, zipfile.BadZipFile) as cause:
-        raise FormatError(f"the outlook kept for {row.region} after {row.known_until} cannot be read",
-                          path=row.region, line=0) from cause  # fmt: skip
-    known = {name: value.astype(np.float64) if name in _SMALL else value for name, value in known.items()}
+    arrays = _arrays_of(row.data)
+    known: dict[str, Any] = {
+        name: value.astype(np.float64) if name in _SMALL else value for name, value in arrays.items()
+    }
     outlook = Outlook(known_until=np.datetime64(facts["known_until"], "D"), basis=tuple(facts["basis"]), **known)
     return Kept(row.id, row.region, row.entered, np.datetime64(row.made_at.replace(tzinfo=None), "s"), outlook)

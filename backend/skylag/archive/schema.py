@@ -206,3 +206,14 @@ outlook_score = Table(
     Column("days", Integer, primary_key=True, autoincrement=False),  # how many of its days were in
     Column("facts", Text, nullable=False),  # JSON
 )
+# Hours of a day at the places of an outlook: follows from the day and can be made again, but not quickly.
+day_digest = Table(
+    "day_digest",
+    metadata,
+    Column("region", String(200), primary_key=True),
+    Column("day", String(10), primary_key=True),
+    Column("version", Integer, primary_key=True, autoincrement=False),
+    Column("mark", String(64), primary_key=True),  # of the places and uses
+    Column("data", LargeBinary, nullable=False),
+    Column("sha256", String(64), nullable=False),
+)

@@ -22,7 +22,7 @@ def advice(use: Use, spans: tuple[Span, ...], storm_told: bool) -> tuple[str, ..
     if kinds == {_HOLDS}:
         return ()
     if kinds == {_UNKNOWN}:
-        return ("Nothing was seen here lately: treat the place as not covered, whatever the climatology says.",)
+        return ("Too few days were seen here lately: treat the place as not covered, whatever the climatology says.",)
     said = []
     good = [span for span in spans if span.kind == _HOLDS]
     if good:

@@ -27,6 +27,7 @@ LEVELS = np.array([0.01, 0.025, 0.05, 0.1, 0.2, 0.25, 0.3, 0.4, 0.5, 0.6, 0.7, 0
 SLOPE_LEVELS = np.array([0.5, 0.8, 0.95, 0.99])
 RANGES = {50: (0.25, 0.75), 80: (0.1, 0.9), 95: (0.025, 0.975)}
 USUAL_FLUX = 120.0  # F10.7 where none is told: about its mean over a solar cycle (from memory)
+LEAST_DAYS = 7  # seen at a place before a stretch of hours is called likely to hold
 ROTATION = 27  # days of the Sun as seen from Earth
 
 _LEAST_DELAY_M, _LEAST_SLOPE = 0.05, 0.02
@@ -509,13 +510,13 @@ def windows(outlook: Outlook, place: int, use: int, most: float = 0.1) -> tuple[
     """Spans of hours for a place and use (row numbers), by the chance that an hour is strained or worse.
 
     most  the chance up to which an hour counts as likely to hold; from one half on it is `likely not`
-    A place that was never seen in the last 27 days has no window: it is `not known`.
+    A place seen on fewer than seven of the last 27 days has no window: it is `not known`.
     """
     if not 0.0 < most < 0.5:
         raise Refused(f"most: {most:g} is no chance between 0 and 0.5", name="most", value=most, allowed="0 to 0.5")
     strained, broken = outlook.strained[use, :, place], outlook.broken[use, :, place]
     kind = np.where(strained <= most, 0, np.where(strained < 0.5, 1, 2))
-    if outlook.seen_days[place] == 0:
+    if outlook.seen_days[place] < LEAST_DAYS:
         kind = np.full(len(kind), 3)
     edges = np.flatnonzero(np.diff(kind)) + 1
     hour = np.timedelta64(3600, "s")

@@ -85,6 +85,25 @@ def _hours_of(fields: Fields, wanted: Sequence[Bytes], rows: Any, columns: Any, 
     return Hour(delay, sigma, slope, states)
 
 
+def _hours(archive: Archive, head: DayHead, places: Region, lats: Floats, lons: Floats, mark: str) -> Hour:
+    """The hours of a stored day: those kept under the mark of the places and uses, or made now and kept."""
+    kept = archive.outlooks.hours(head.region, str(head.day), head.version, mark)
+    if kept is None:
+        fields = archive.fields(head.region, head.day, version=head.version)
+        flags = archive.flags(head.region, head.day, head.version)
+        judged = [uses.judge_for(use, fields, flags, places).states for use in uses.uses_of(places)]
+        rows, columns, inside = nearest_cells(fields, lats, lons)
+        found = _hours_of(fields, judged, rows, columns, head.day)
+        kept = {
+            name: np.where(inside, getattr(found, name), np.nan).astype(np.float32)
+            for name in ("delay", "sigma", "slope")
+        }
+        kept["states"] = np.where(inside, found.states, UNSEEN).astype(np.uint8)
+        archive.outlooks.keep_hours(head.region, str(head.day), head.version, mark, kept)
+    delay, sigma, slope = (kept[name].astype(np.float64) for name in ("delay", "sigma", "slope"))
+    return Hour(delay, sigma, slope, kept["states"].astype(np.uint8))
+
+
 def history_of(
     archive: Archive, region: str, until: np.datetime64 | None = None, since: np.datetime64 | None = None,
     progress: Progress | None = None,
@@ -113,6 +132,7 @@ def history_of(
     lats = np.concatenate([[site.lat for site in sites], lat.ravel()])
     lons = np.concatenate([[site.lon for site in sites], lon.ravel()])
     limits = limits_for(places)
+    mark = hashlib.sha256(f"{places.thresholds} {uses.uses_of(places)} {lats.tolist()} {lons.tolist()}".encode())
     days = np.arange(first, last + np.timedelta64(1, "D")).astype("datetime64[D]")
     shape = (len(days), 24, len(lats))
     delay, sigma, slope = (np.full(shape, np.nan) for _ in range(3))
@@ -120,15 +140,9 @@ def history_of(
     for number, head in enumerate(heads):
         if progress is not None:
             progress(number, len(heads))
-        fields = archive.fields(region, head.day, version=head.version)
-        flags = archive.flags(region, head.day, head.version)
-        judged = [uses.judge_for(use, fields, flags, places).states for use in uses.uses_of(places)]
-        rows, columns, inside = nearest_cells(fields, lats, lons)
-        found = _hours_of(fields, judged, rows, columns, head.day)
+        found = _hours(archive, head, places, lats, lons, mark.hexdigest()[:32])
         row = int((head.day - first) / np.timedelta64(1, "D"))
-        delay[row], sigma[row], slope[row] = (np.where(inside, part, np.nan) for part in (
-            found.delay, found.sigma, found.slope))  # fmt: skip
-        states[:, row] = np.where(inside, found.states, UNSEEN)
+        delay[row], sigma[row], slope[row], states[:, row] = found.delay, found.sigma, found.slope, found.states
     return History(days, names, lats, lons, delay, sigma, slope, states, limits), tuple(heads)
 
 
@@ -168,9 +182,12 @@ def _mark(heads: Sequence[DayHead], drivers: Drivers) -> str:
 
 
 def newest(
-    archive: Archive, region: str, indices: Indices | None = None, expected_ap: Floats | None = None
-) -> Kept:
+    archive: Archive, region: str, indices: Indices | None = None, expected_ap: Floats | None = None,
+    keep: bool = True,
+) -> Kept:  # fmt: skip
     """The outlook after the newest day of a region: the one that is kept, or made now and kept.
+
+    keep  False: one with entered activity is made and not kept, so that asking what if fills no archive
 
     Outlooks whose days have come in the meantime are scored on the way.  Raises Missing where the region has no day.
     """
@@ -188,6 +205,8 @@ def newest(
     score_due(archive, region, history, drivers)
     made = tomorrow(history, drivers)
     mark = _mark(used_heads, drivers)
+    if expected_ap is not None and not keep:
+        return Kept(0, region, mark, np.datetime64("NaT", "s"), made)
     archive.outlooks.keep(region, made, mark)
     kept = archive.outlooks.find(region, made.known_until, mark)
     if kept is None:
@@ -287,3 +306,38 @@ def summary(tally: Tally) -> Mapping[str, Any]:
             states[use][level] = {"cases": int(count), "brier": scores[0], "brier_frequency": scores[1],
                                   "brier_persistence": scores[2], "tenths": tenths}  # fmt: skip
     return {"outlooks": tally.outlooks, "leads": leads, "states": states}
+
+
+def told(found: Hindcast) -> tuple[str, ...]:
+    """What a replay found, in lines."""
+    facts = summary(found.tally)
+    lines = [
+        f"{found.region}, {found.first} to {found.last}: {facts['outlooks']} outlooks scored; the archive has data on "
+        f"{found.days_with_data} of the days up to then"
+    ]
+    for lead, name in (("1", "the day ahead"), ("2", "the day after it")):
+        one = facts["leads"].get(lead)
+        if one is None:
+            continue
+        inside = ", ".join(f"{share} % range held {100 * held:.1f} %" for share, held in one["inside"].items())
+        lines.append(
+            f"{name}: delay RMS {one['rms_m']:.3f} m, mean error {one['mean_error_m']:+.3f} m, "
+            f"CRPS {one['crps_m']:.3f} m over {one['hours']} hours and places; {inside}"
+        )
+        lines += [
+            f"  beside {other}: RMS {row['rms']:.3f} against {row['other_rms']:.3f} m, "
+            f"{100 * row['better_rms']:+.1f} % ({row['hours']} hours and places)"
+            for other, row in one["against"].items()
+        ]
+    for use, levels in facts["states"].items():
+        for level, row in levels.items():
+            if row["brier"] is None:
+                continue
+            tenths = ", ".join(
+                f"{100 * tenth['told']:.0f} -> {100 * tenth['came']:.0f} ({tenth['cases']})" for tenth in row["tenths"]
+            )
+            lines.append(
+                f"{use}, {level}: Brier {row['brier']:.4f}, frequency {row['brier_frequency']:.4f}, persistence "
+                f"{row['brier_persistence']:.4f}; chance told -> came in per cent (cases): {tenths}"
+            )
+    return tuple(lines)

@@ -45,12 +45,13 @@ def at_place(
 ) -> Response:
     """Hour by hour for two days: expected delay with ranges, slope quantiles, chances for a use, windows, advice.
 
-    expected_ap  ap entered for the two days ahead, like `12,80`; most: the chance up to which an hour counts as likely
-    to hold.  A place farther than a cell from all of the map is refused.
+    expected_ap  ap entered for the two days ahead, like `12,80` (such an outlook is not kept)
+    most         the chance up to which an hour counts as likely to hold
+    A place outside the map is refused.
     """
     archive: Archive = request.app.state.archive
     lat, lon = asking.place(lat, lon)
-    kept = hindcast.newest(archive, region, expected_ap=_entered(expected_ap))
+    kept = hindcast.newest(archive, region, expected_ap=_entered(expected_ap), keep=False)
     made = kept.outlook
     record = archive.day(region, made.known_until)
     wanted = uses.find_use(record.region, use) if use else uses.uses_of(record.region)[0]

@@ -634,7 +634,7 @@ def outlook_at(
     return {
         "region": kept.region,
         "known_until": str(made.known_until),
-        "made_utc": f"{np.datetime_as_string(kept.made_at, unit='s')}Z",
+        "made_utc": None if np.isnat(kept.made_at) else f"{np.datetime_as_string(kept.made_at, unit='s')}Z",
         "name": str(made.names[place]),
         "lat": _number(float(made.lats[place])),
         "lon": _number(float(made.lons[place])),

@@ -1,4 +1,4 @@
-"""Form 3: outlooks as they were made, and what became of them."""
+"""Form 3: outlooks as they were made, what became of them, and the hours of days they rest on."""
 
 import sqlalchemy as sa
 from alembic import op
@@ -10,7 +10,7 @@ depends_on = None
 
 
 def upgrade() -> None:
-    """Add two tables; nothing that is there changes."""
+    """Add three tables; nothing that is there changes."""
     op.create_table(
         "outlook",
         sa.Column("id", sa.Integer, primary_key=True, autoincrement=True),
@@ -28,6 +28,15 @@ def upgrade() -> None:
         sa.Column("outlook", sa.Integer, sa.ForeignKey("outlook.id", ondelete="CASCADE"), primary_key=True),
         sa.Column("days", sa.Integer, primary_key=True, autoincrement=False),
         sa.Column("facts", sa.Text, nullable=False),
+    )
+    op.create_table(
+        "day_digest",
+        sa.Column("region", sa.String(200), primary_key=True),
+        sa.Column("day", sa.String(10), primary_key=True),
+        sa.Column("version", sa.Integer, primary_key=True, autoincrement=False),
+        sa.Column("mark", sa.String(64), primary_key=True),
+        sa.Column("data", sa.LargeBinary, nullable=False),
+        sa.Column("sha256", sa.String(64), nullable=False),
     )
     op.execute("INSERT INTO schema_version (version) VALUES (3)")
 
