@@ -93,6 +93,8 @@ def test_one_receiver_alone_confirms_nothing():
         ([(0, 1)], [5], False),
         ([(0, -1), (1, -1)], [5, 6], False),  # paths alone
         ([(0, 1), (0, 2), (3, -1)], [5, 5, 6], False),  # a star of receiver 0 and a chance slip elsewhere
+        ([(0, 1), (0, 2)] * 9 + [(1, 2)], [5, 6] * 9 + [7], False),  # the same with one short pair elsewhere
+        ([(0, 1), (0, 2)] * 15 + [(1, 2), (2, 3), (1, 3)], [5, 6] * 15 + [7, 8, 8], True),  # the rest agrees by itself
         ([(0, 1), (2, -1)], [5, 6], True),  # a pair and another receiver's path on another satellite
     ],
 )

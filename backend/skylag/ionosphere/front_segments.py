@@ -42,7 +42,7 @@ def follow(
             over = (ahead[members] - design @ change) / sigma[members]
             weight = np.minimum(1.0, 1.5 / np.maximum(np.abs(over), 1e-9)) / sigma[members] ** 2 / max(scatter, 0.05)
             normal = design.T @ (design * weight[:, None]) + prior
-            change = np.linalg.solve(normal, design.T @ (weight * ahead[members]))
+            change = np.asarray(np.linalg.solve(normal, design.T @ (weight * ahead[members])), dtype=np.float64)
         spread = np.sqrt(np.diag(np.linalg.inv(normal)))
         rows.append([
             middle, offset + speed * middle + change[0], speed + change[2], heading + change[1],

@@ -54,6 +54,9 @@ def along_path(change_m: Floats, path_speed_m_s: Floats, step_s: float) -> Float
     return np.abs(np.asarray(change_m)) * 1e6 / (np.asarray(path_speed_m_s) * step_s)
 
 
+_NEARLY_ALL = 0.9  # share of witnesses with one receiver, above which the rest must do without it
+
+
 @dataclass(frozen=True)
 class SlopeChoices:
     """How slopes are measured and claimed.
@@ -322,7 +325,8 @@ def agreement(
 
     Confirmed when no single receiver is part of every pair, a lone pair having another receiver's path beside it, so
     that no one receiver's fault explains them (a chance slip along another receiver's path saves no star of pairs),
-    and either two satellites or two pairs without a common receiver agree.
+    and either two satellites or two pairs without a common receiver agree.  Where one receiver is part of nearly all
+    witnesses the rest has to confirm itself.
     """
     couples = np.unique(np.stack([np.minimum(receiver, other), np.maximum(receiver, other)], axis=1), axis=0)
     couples = couples[couples[:, 0] >= 0]
@@ -339,6 +343,11 @@ def agreement(
     centre = hub[spokes == len(couples)]
     if len(couples) > 1 and len(centre) > 0:
         return False, f"unconfirmed: every receiver pair includes {receivers[int(centre[0])].name}"
+    top = members[np.argmax(counts)]
+    if counts.max() >= _NEARLY_ALL * len(receiver):
+        rest = (receiver != top) & (other != top)
+        if not agreement(way[rest], receiver[rest], other[rest], satellite[rest], receivers)[0]:
+            return False, f"unconfirmed: nearly every witness includes {receivers[int(top)].name}"
     apart = any(not set(a) & set(b) for a, b in itertools.combinations(couples.tolist(), 2))
     if satellites < 2 and not apart:
         return False, f"unconfirmed: {_count(len(couples), 'receiver pair')} with a common receiver on one satellite"
