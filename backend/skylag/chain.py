@@ -46,6 +46,7 @@ class Choices:
 
     signals: Mapping[str, tuple[str, str]] = field(default_factory=dict)
     minimum_elevation: float = 10.0
+    mapping_function: str = geometry.SINGLE_LAYER
     epoch_step_s: float = 300.0
     thin_to_s: float | None = None
     arcs: ArcChoices = field(default_factory=ArcChoices)
@@ -99,7 +100,7 @@ def receiver_day(
     positions = orbits.positions(sources, observations.satellites, observations.times)
     elevation, _ = geometry.look(signals.receiver.position_m, positions)
     arcs = cut(observations, choices.arcs, elevation)
-    rays = geometry.place(arcs, positions, shell_height_m, choices.minimum_elevation)
+    rays = geometry.place(arcs, positions, shell_height_m, choices.minimum_elevation, choices.mapping_function)
     if not len(rays):
         raise NotEnough(
             f"{signals.receiver.name}: no arc above {choices.minimum_elevation:g} deg is long enough with known "
@@ -220,6 +221,7 @@ def limits_of_sight(rays: Rays, calibration: Calibration) -> tuple[str, ...]:
             "zero. Maps do not depend on it; single biases compare with a product only after both are brought to one "
             "mean."
         )
+    said += [str(note) for note in calibration.summary.get("notes", ())]
     return tuple(said)
 
 
