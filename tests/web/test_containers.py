@@ -39,12 +39,55 @@ def test_each_command_exists_with_its_options(compose: dict) -> None:
 
 
 def test_services_are_healthy_and_wait_for_one_another(compose: dict) -> None:
-    assert set(compose["services"]) == {"db", "web"}
+    assert set(compose["services"]) == {"db", "web", "worker", "watch"}
     for name, service in compose["services"].items():
         assert "healthcheck" in service and "test" in service["healthcheck"], name
-    assert compose["services"]["web"]["depends_on"]["db"]["condition"] == "service_healthy"
+        if name != "db":
+            assert service["depends_on"]["db"]["condition"] == "service_healthy"
+            assert service["read_only"] and service["cap_drop"] == ["ALL"], name
+            assert service["environment"] == compose["services"]["web"]["environment"], "one archive"
+            assert "data:/data" in service["volumes"], "one folder of slant tables and of what was sent"
     named = {volume.split(":")[0] for service in compose["services"].values() for volume in service.get("volumes", ())}
-    assert named == set(compose["volumes"])
+    assert {name for name in named if re.fullmatch(r"[a-z]+", name)} == set(compose["volumes"])
+
+
+# Words of the Compose Specification (compose-spec.io: services, volumes) that this file may use, and their shapes.
+DURATION = re.compile(r"(\d+(us|ms|s|m|h))+")
+SERVICE_WORDS = {
+    "image": str, "build": str, "restart": str, "environment": dict, "command": list, "ports": list, "volumes": list,
+    "depends_on": dict, "healthcheck": dict, "read_only": bool, "tmpfs": list, "cap_drop": list, "security_opt": list,
+    "stop_grace_period": str,
+}  # fmt: skip
+HEALTH_WORDS = {"test", "interval", "timeout", "retries", "start_period"}
+
+
+def test_the_words_are_those_of_the_specification(compose: dict) -> None:
+    assert set(compose) == {"services", "volumes"}, "`version` is obsolete"
+    for name, service in compose["services"].items():
+        assert re.fullmatch(r"[a-zA-Z0-9._-]+", name)
+        assert ("image" in service) != ("build" in service)
+        for word, value in service.items():
+            assert isinstance(value, SERVICE_WORDS[word]), (name, word)
+        assert service["restart"] in ("no", "always", "on-failure", "unless-stopped")
+        health = service["healthcheck"]
+        assert set(health) <= HEALTH_WORDS and health["test"][0] in ("CMD", "CMD-SHELL") and len(health["test"]) > 1
+        spans = [health.get(word, "1s") for word in ("interval", "timeout", "start_period")]
+        assert all(DURATION.fullmatch(span) for span in [*spans, service.get("stop_grace_period", "1s")])
+        assert isinstance(health["retries"], int)
+        for other, how in service.get("depends_on", {}).items():
+            assert other in compose["services"]
+            assert how["condition"] in ("service_started", "service_healthy", "service_completed_successfully")
+        for volume in service.get("volumes", ()):
+            source, target, *mode = re.sub(r"\$\{[^}]*\}", "./folder", volume).split(":")
+            assert target.startswith("/") and mode in ([], ["ro"], ["rw"]), volume
+            assert source.startswith(("./", "/")) or source in compose["volumes"], volume
+        for port in service.get("ports", ()):
+            assert re.fullmatch(r"(\d+\.){3}\d+:\d+:\d+", port)
+        assert all(isinstance(value, str) for value in service.get("environment", {}).values())
+        assert all(isinstance(word, str) for word in service.get("command", ()))
+    text = (ROOT / "docker-compose.yml").read_text(encoding="utf-8")
+    for asked in re.findall(r"\$\{([^}]*)\}", text):
+        assert re.fullmatch(r"[A-Z_]+(:?[-?+].*)?", asked), asked
 
 
 def test_only_the_loopback_address_is_published(compose: dict) -> None:
