@@ -170,7 +170,7 @@ def test_a_patch_strains_its_place_and_span():
     ragged = Patches((some_patch(),), *(getattr(none, name) for name in list(Patches.__dataclass_fields__)[1:]))
     judged = states.judge(flat_fields(), steep, moving, ragged, REGION)
     lat, lon = int(np.argmin(np.abs(LATS + 39.0))), int(np.argmin(np.abs(LONS - 145.5)))
-    assert set(np.flatnonzero(judged.fields.state[:, lat, lon] == STRAINED)) == set(range(12, 24))
+    assert set(np.flatnonzero(judged.fields.state[:, lat, lon] == STRAINED)) == set(range(11, 25))
     assert (judged.fields.state[:, 0, 0] == HOLDS).all()
     flag = judged.flags[0]
     assert (flag.kind, flag.state) == ("irregular", "strained")

@@ -56,7 +56,8 @@ class JudgeChoices:
     sigmas         a slope counts when it is above the limit by so many of its sigmas
     claim_reach_km, claim_reach_s   a confirmed slope between receivers speaks for cells this near
     front_margin_km, front_beside_km  added to half the width of a wall on both sides, and to its reach at both ends
-    patch_margin_km added to the radius of a patch; window_reach_s: how long a ragged window speaks for its surroundings
+    patch_margin_km added to the radius of a patch, patch_spare_s to its span at both ends; window_reach_s: how long a
+                   ragged window speaks for its surroundings
     least_cells    fewer cell-epochs of steep field make no flag of their own
     most_unconfirmed  unconfirmed claims listed, steepest first
     """
@@ -67,6 +68,7 @@ class JudgeChoices:
     front_margin_km: float = 25.0
     front_beside_km: float = 100.0
     patch_margin_km: float = 25.0
+    patch_spare_s: float = 300.0
     window_reach_s: float = 450.0
     least_cells: int = 4
     most_unconfirmed: int = 12
@@ -191,12 +193,14 @@ def in_patch(patch: Patch, places: Any, times: Any, choices: JudgeChoices) -> Bo
     known = bool(np.isfinite(patch.drift_m_s))
     heading_rad = np.radians(patch.drift_heading_deg) if known else 0.0
     reach = np.timedelta64(round(choices.window_reach_s), "s")
+    spare = np.timedelta64(round(choices.patch_spare_s), "s")
     for number in np.flatnonzero((times >= patch.start - reach) & (times < patch.end + reach)):
         late_s = float((times[number] - half_way) / np.timedelta64(1, "s"))
         way = patch.drift_m_s / 1000.0 * late_s if known else 0.0
         loose = 2.0 * patch.drift_sigma_m_s / 1000.0 * abs(late_s) if known else 0.0
         away = np.hypot(east - way * np.sin(heading_rad), north - way * np.cos(heading_rad))
-        if patch.start <= times[number] < patch.end:
+        # Raggedness is told from five minutes of rates and from four windows: it was there a little before and after.
+        if patch.start - spare <= times[number] < patch.end + spare:
             over[number] = away <= patch.radius_km + choices.patch_margin_km + loose
         now = np.abs(patch.window_time - times[number]) <= reach
         apart = np.hypot(east[:, None] - window_east[None, now], north[:, None] - window_north[None, now])
