@@ -17,7 +17,7 @@ from typing import TextIO
 
 import numpy as np
 
-from skylag import advice_door, settings, work_door
+from skylag import advice_door, events_door, settings, work_door
 from skylag.chain import Choices
 from skylag.errors import Refused, SkylagError
 from skylag.formats import results
@@ -80,6 +80,7 @@ def _parser() -> argparse.ArgumentParser:
     _serve_parser(commands)
     _hindcast_parser(commands)
     advice_door.add(commands, CAUTION)
+    events_door.add(commands, CAUTION)
     work_door.add(commands, CAUTION, _date, _minutes)
     return parser
 
@@ -231,6 +232,12 @@ def _tell_day(products: Products) -> None:
         print(
             f"vertical delay on 1575.42 MHz where seen: {delay.min():.1f} to {delay.max():.1f} m "
             f"({fields.vtec[seen].min():.1f} to {fields.vtec[seen].max():.1f} TECU)"
+        )
+    foretold = counts.get("receivers_left_out", {})
+    if foretold.get("lines_of_sight"):
+        print(
+            f"checked against receivers left out: {foretold['rms_tecu']:.2f} TECU RMS over "
+            f"{foretold['lines_of_sight']} lines of sight, {100.0 * foretold['within_95']:.1f} % within 95 %"
         )
     shares = [f"{name} {100.0 * float((fields.state == code).mean()):.1f} %" for code, name in enumerate(STATE_NAMES)]
     print("cells over the day: " + ", ".join(shares))
