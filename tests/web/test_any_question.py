@@ -26,8 +26,9 @@ GOOD = {"region": REGION.name, "day": str(STORM_DAY), "lat": "-41", "lon": "147"
         "from": "2031-05-11T05:00:00Z", "to": "2031-05-11T06:00:00Z", "layers": "state", "version": "1", "south": "-43",
         "north": "-36", "west": "142", "east": "150", "since": "2031-05-01", "until": "2031-05-31", "state": "done",
         "number": "1", "batch": "0" * 32, "name": "x.rnx",
-        "use": "ground", "site": "Gannet Field", "method": "rtk", "baseline_km": "10", "horizontal_mm": "30", "vertical_mm": "50",
-        "hours": "07:00-16:00", "levels": "LPV-200", "correction_m": "3", "sigma_mm_per_km": "4"}  # fmt: skip
+        "use": "ground", "site": "Gannet Field", "method": "rtk", "baseline_km": "10", "horizontal_mm": "30",
+        "vertical_mm": "50", "hours": "07:00-16:00", "levels": "LPV-200", "correction_m": "3", "sigma_mm_per_km": "4",
+        "expected_ap": "", "most": "0.1"}  # fmt: skip
 MANY = settings(max_examples=100, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 
 

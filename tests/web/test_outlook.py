@@ -1,0 +1,66 @@
+"""The day ahead over HTTP: a place, a use, entered activity, the record, and what is refused."""
+
+import json
+from typing import Any
+
+import pytest
+from fastapi.testclient import TestClient
+from tests.builders import REGION, STORM_DAY
+
+SITE = REGION.sites[1]
+ADDRESS = f"/api/outlook/{REGION.name}"
+
+
+def get(client: TestClient, **asked: object) -> Any:
+    answer = client.get(ADDRESS, params={"lat": SITE.lat, "lon": SITE.lon, **asked})
+    assert answer.status_code == 200, answer.text
+    return json.loads(answer.text)
+
+
+def test_a_site_hour_by_hour(client: TestClient) -> None:
+    told = get(client, use="ground")
+    assert told["known_until"] == str(STORM_DAY) and told["name"] == SITE.name
+    assert len(told["hours_utc"]) == len(told["vertical_delay"]) == len(told["chance_strained"]) == 48
+    assert told["hours_utc"][0] == "2031-05-11T23:59:42Z"  # midnight of GPS time
+    for hour in range(48):
+        ends = [told["ranges"][share][end][hour] for share, end in (
+            ("95", "low"), ("80", "low"), ("50", "low"), ("50", "high"), ("80", "high"), ("95", "high"))]  # fmt: skip
+        assert ends == sorted(ends)
+        assert told["chance_broken"][hour] <= told["chance_strained"][hour]
+    assert told["use"] == "ground-based augmentation"
+    assert told["simulated"] is True and "not for navigation" in told["caution"]
+
+
+def test_two_days_do_not_make_a_window(client: TestClient) -> None:
+    told = get(client)
+    assert {span["kind"] for span in told["windows"]} == {"not known"}
+    assert told["seen_days"] <= 2 and any("first guesses" in sentence for sentence in told["basis"])
+    assert any("not covered" in sentence for sentence in told["advice"])
+
+
+def test_entered_activity_is_used_and_said(client: TestClient) -> None:
+    told = get(client, expected_ap="120,20")
+    assert told["storm_phase"][0] == "onset" and told["made_utc"] is None
+    assert any("storm or its aftermath told" in sentence for sentence in told["basis"])
+    assert get(client)["storm_phase"][0] == "untold"
+
+
+def test_the_record_of_nothing_is_empty(client: TestClient) -> None:
+    told = client.get(f"{ADDRESS}/record").json()
+    assert told["outlooks"] == 0 and told["leads"] == {}
+
+
+@pytest.mark.parametrize(
+    ("asked", "status", "said"),
+    [
+        ({"expected_ap": "12,much"}, 422, "write two numbers"),
+        ({"expected_ap": "12,900"}, 422, "from 0 to 400"),
+        ({"expected_ap": "12"}, 422, "for each of the two days"),
+        ({"most": "0.9"}, 422, "between 0 and 0.5"),
+        ({"use": "sextant"}, 422, "choose from"),
+        ({"lat": 10.0}, 422, "outside the map"),
+    ],
+)
+def test_refusals(client: TestClient, asked: dict[str, object], status: int, said: str) -> None:
+    answer = client.get(ADDRESS, params={"lat": SITE.lat, "lon": SITE.lon, **asked})
+    assert answer.status_code == status and said in answer.json()["error"]
