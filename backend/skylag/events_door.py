@@ -1,0 +1,66 @@
+"""The command `events`: the bad stretches of a kept day, by its own states or for one use, as CSV, GeoJSON or JSON.
+
+Thin: parses, calls, prints or writes one file.
+"""
+
+import argparse
+from pathlib import Path
+from typing import Any
+
+from skylag import settings
+from skylag.errors import Missing
+from skylag.formats import events as event_files
+from skylag.impact import events, uses
+
+
+def add(commands: Any, caution: str) -> None:
+    """Add the command to the command line."""
+    parser = commands.add_parser(
+        "events",
+        help="list the bad stretches of a kept day",
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+        description="Stretches of strained or broken cells that touch in space and time, parted by their cause, with\n"
+        "extent, worst value, sites reached and reason; for one use where asked.",
+        epilog="uses where the region names none: " + ", ".join(use.name for use in uses.PUBLISHED) + "\n\nexample:\n"
+        "  skylag events --archive skylag-demo --day 2031-03-12 --use ground --format geojson --out storm.geojson\n\n"
+        + caution,
+    )
+    parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
+    parser.add_argument("--region", default="", metavar="NAME", help="of several regions in the archive, this one")
+    parser.add_argument("--day", default="", metavar="YYYY-MM-DD", help="the newest day without")
+    parser.add_argument("--use", default="", metavar="NAME", help="a use or its kind; the day's own states without")
+    parser.add_argument("--format", default="csv", choices=("csv", "geojson", "json"))
+    parser.add_argument("--out", type=Path, metavar="FILE", help="write here; printed without")
+    parser.set_defaults(run=_events)
+
+
+def _events(options: argparse.Namespace) -> int:
+    from skylag.archive import open_archive  # a database is opened only where one is asked for
+
+    place = options.archive or settings.from_environment().archive
+    with open_archive(place) as archive:
+        heads = [
+            head for head in archive.days()
+            if options.region in ("", head.region) and options.day in ("", str(head.day))
+        ]  # fmt: skip
+        if not heads:
+            wanted = " ".join(part for part in (options.region, options.day) if part) or "any day"
+            raise Missing(f"{place}: {wanted} is not kept here; see `skylag day --archive`", what=wanted, nearest=None)
+        newest = max(heads, key=lambda head: head.day)
+        record = archive.day(newest.region, newest.day)
+        fields, flags = archive.fields(newest.region, newest.day), archive.flags(newest.region, newest.day)
+    if options.use:
+        judged = uses.judge_for(uses.find_use(record.region, options.use), fields, flags, record.region)
+        found = events.of_use(judged, fields, flags, record.region)
+    else:
+        found = events.of_day(fields, flags, record.region)
+    simulated = record.origin.simulated
+    text = {
+        "csv": lambda: event_files.to_csv(found), "geojson": lambda: event_files.to_geojson(found, simulated) + "\n",
+        "json": lambda: event_files.to_json(found, simulated) + "\n",
+    }[options.format]()  # fmt: skip
+    if options.out:
+        options.out.write_text(text, encoding="utf-8")
+    else:
+        print(text, end="")
+    return 0
