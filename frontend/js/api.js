@@ -376,3 +376,35 @@ export async function network(region, how) {
     })),
   }));
 }
+
+const spanOf = (raw) => ({ ...raw, start: milliseconds(raw.start_utc), end: milliseconds(raw.end_utc) });
+const jobQuery = (job) => (job ? `&method=${job.method}&baseline_km=${job.km}` : "");
+
+/** Address of a site's sheet or calendar. @param {string} region @param {string} date @param {string} site @param {string} file @param {{method: string, km: number}|null} job */
+export function siteFile(region, date, site, file, job) {
+  return `${dayAddress(region, date)}/${file}?site=${encodeURIComponent(site)}${file.startsWith("survey") ? jobQuery(job) : ""}`;
+}
+
+/** Windows of survey work. @param {string} region @param {string} date @param {string} site @param {{method: string, km: number}} job @param {How} [how] */
+export async function survey(region, date, site, job, how) {
+  const raw = await ask(siteFile(region, date, site, "survey", job), how);
+  return { windows: raw.windows.map(spanOf), assumptions: raw.assumptions };
+}
+
+/** Approaches of an aerodrome. @param {string} region @param {string} date @param {string} site @param {How} [how] */
+export async function approaches(region, date, site, how) {
+  const raw = await ask(siteFile(region, date, site, "approaches", null), how);
+  return { levels: raw.levels.map((one) => one.name), share: raw.sites[0]?.share ?? {}, outages: raw.outages.map(spanOf), assumptions: raw.assumptions };
+}
+
+/** The outlook at a place. @param {string} region @param {[number, number]} place @param {How} [how] */
+export async function outlook(region, [lat, lon], how) {
+  const raw = await ask(`/api/outlook/${encodeURIComponent(region)}?lat=${lat}&lon=${lon}`, how);
+  return {
+    name: raw.name, lat: raw.lat, lon: raw.lon, use: raw.use, knownUntil: raw.known_until, seenDays: raw.seen_days, hours: raw.hours_utc.map(milliseconds),
+    delay: numbers(raw.vertical_delay), low: numbers(raw.ranges["95"]?.low ?? []), high: numbers(raw.ranges["95"]?.high ?? []), slope: numbers(raw.slope["0.95"] ?? []),
+    strained: numbers(raw.chance_strained), broken: numbers(raw.chance_broken), phase: raw.storm_phase,
+    windows: raw.windows.map((one) => ({ ...spanOf(one), strained: number(one.chance_strained), broken: number(one.chance_broken) })),
+    advice: raw.advice, basis: raw.basis,
+  };
+}

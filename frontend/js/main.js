@@ -15,12 +15,14 @@ import { CurvesPanel } from "./panels/curves.js";
 import { FlagsPanel } from "./panels/flags.js";
 import { LegendPanel } from "./panels/legend.js";
 import { MastheadPanel } from "./panels/masthead.js";
+import { AheadPanel } from "./panels/ahead.js";
 import { NetworkPanel } from "./panels/network.js";
 import { trouble } from "./panels/parts.js";
 import { PlayerPanel } from "./panels/player.js";
 import { PresentPanel } from "./panels/present.js";
 import { ReadingPanel, readingOf } from "./panels/reading.js";
 import { SeriesPanel } from "./panels/series.js";
+import { WorkPanel } from "./panels/work.js";
 import { YearPanel } from "./panels/year.js";
 import { State } from "./state.js";
 import { dayText, WORDS } from "./words.js";
@@ -67,6 +69,8 @@ const year = new YearPanel(
 );
 const present = new PresentPanel({ age: at("present-age"), back: at("present-back"), fails: at("present-fails"), flags: at("present-flags"), next: at("present-next"), note: at("present-if") }, state);
 const network = new NetworkPanel({ said: at("network-said"), table: at("network-table") }, state);
+const ahead = new AheadPanel(at("ahead-body"));
+const work = new WorkPanel(at("work"), at("work-body"));
 const curves = new CurvesPanel(at("curves"), at("curves-body"));
 const player = new PlayerPanel({ button: at("play"), rate: at("rate") }, state, () => Boolean(scene?.fields) && scene.index >= 0);
 const masthead = new MastheadPanel(
@@ -100,7 +104,7 @@ function showAll() {
   if (!scene) return;
   scene.theme = masthead.theme;
   at("main").dataset.ask = scene.view.ask;
-  for (const panel of [masthead, year, present, network, chart, legend, clock, reading, series, flags, curves, player]) panel.show(scene);
+  for (const panel of [masthead, year, present, network, chart, legend, clock, reading, series, flags, ahead, work, curves, player]) panel.show(scene);
 }
 
 /**
@@ -402,6 +406,7 @@ async function follow() {
     masthead.days(days);
     year.days(days);
     network.renew();
+    ahead.renew();
     settling = true;
     choose();
     settling = false;

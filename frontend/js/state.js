@@ -4,7 +4,7 @@
  */
 
 /** @typedef {"delay"|"uncertainty"|"slope"|"state"} Layer */
-/** @typedef {"past"|"now"|"network"} Ask */
+/** @typedef {"past"|"now"|"ahead"|"network"} Ask */
 /**
  * @typedef {object} View
  * @property {string} region   key of the region, "" until known
@@ -25,7 +25,7 @@
 /** @type {Layer[]} */
 export const LAYERS = ["delay", "uncertainty", "slope", "state"];
 /** @type {Ask[]} */
-export const ASKS = ["past", "now", "network"];
+export const ASKS = ["past", "now", "ahead", "network"];
 export const SHOWABLE = ["receivers", "rays", "sites", "veil"];
 const SHOWN_AT_FIRST = ["receivers", "sites", "veil"];
 

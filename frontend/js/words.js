@@ -20,6 +20,9 @@ export const STATE_WORDS = {
   unseen: { name: "unseen", means: "not enough data to say" },
 };
 
+/** @type {Record<string, string>} */
+export const VERDICT_WORDS = { work: "work", avoid: "avoid", unseen: "unseen, not enough data to say" };
+
 /** Seasons by their months, so that they mean the same in both halves of the world. */
 export const SEASON_WORDS = { "dec-feb": "December to February", "mar-may": "March to May", "jun-aug": "June to August", "sep-nov": "September to November" };
 
@@ -59,7 +62,7 @@ export const WORDS = {
   also: (names) =>
     names.length < 4 ? `Not good either: ${names.join(", ")}.` : `Not good either: ${names.slice(0, 2).join(", ")} and ${names.length - 2} more sites.`,
   /** @param {number} minutes */
-  stripHelp: (minutes) => `Drag, or use the arrow keys: ${minutes} minutes a step, with shift an hour, Home and End for the ends.`,
+  stripHelp: (minutes) => `Drag, or arrow keys: ${minutes} minutes a step, with shift an hour; Home, End.`,
   /** @param {string} sentence */
   mapAlone: (sentence) => `The map’s own cell alone would say: ${sentence}`,
   sigma: "± is one standard deviation.",
@@ -101,6 +104,31 @@ export const WORDS = {
   frontFrom: (from, speed) => `a front from the ${from} at ${speed} m/s`,
   /** @param {string} fronts */
   ifItKeeps: (fronts) => `By ${fronts}, if course, speed and strength stay; how long a front is was not measured.`,
+  working: "Working it out …",
+  /** @param {string} site */
+  surveyAt: (site) => `Survey at ${site}`,
+  /** @param {string} site */
+  approachesAt: (site) => `Approaches at ${site}`,
+  assumptions: "Assumptions",
+  methods: { rtk: "RTK from an own base", static: "static", network: "network corrections", dgnss: "DGNSS, one frequency" },
+  method: "Method",
+  baseline: "baseline",
+  noWindows: "No window could be told for this day.",
+  noOutages: "No outage on this day.",
+  /** @param {string} share */
+  ofTheDay: (share) => `${share} of the day`,
+  /** @param {number} count */
+  more: (count) => `and ${count} more: see the sheet.`,
+  noOutlook: "No outlook can be given yet.",
+  /** @param {string} place @param {string} use @param {string} until @param {number} seen */
+  outlookFor: (place, use, until, seen) => `At ${place}, for ${use}; known until ${until}, this place seen on ${countText(seen, "day")}.`,
+  /** @param {string} strained @param {string} broken */
+  chances: (strained, broken) => `chance of strained ${strained}, of broken ${broken}`,
+  /** @param {string} end @param {string} kind */
+  firstSpan: (end, kind) => `Until ${end}: ${kind}.`,
+  chancesAbout: "Chances hour by hour of being at least strained, and of being broken",
+  hourByHour: "Hour by hour",
+  basis: "What this rests on",
   loadingNetwork: "Asking what each receiver gave …",
   noNetworkDay: "Of this day nothing is kept about the receivers.",
   disagrees: "disagrees with the others",
