@@ -45,7 +45,8 @@ def _advise_parser(commands: Any, caution: str) -> None:
     parser.add_argument("--region", default="", metavar="NAME", help="of several regions in the archive, this one")
     parser.add_argument("--day", default="", metavar="YYYY-MM-DD", help="the newest day without")
     parser.add_argument("--site", default="", metavar="NAME", help="a site of the region; without, all in a line each")
-    parser.add_argument("--at", nargs=2, type=float, metavar=("LAT", "LON"), help="a place that is no site")
+    parser.add_argument("--at", nargs=2, type=float, action="append", metavar=("LAT", "LON"),
+                        help="a place that is no site; several for an area or a route: all must be workable")  # fmt: skip
     parser.add_argument("--method", default="rtk", choices=tuple(METHODS))
     parser.add_argument("--baseline", type=float, default=10.0, metavar="KM", help="to the base or reference (10)")
     parser.add_argument("--tolerance", nargs=2, type=float, default=(30.0, 50.0), metavar=("ACROSS", "HEIGHT"),
@@ -102,10 +103,11 @@ def _advise(options: argparse.Namespace) -> int:
 
 
 def _job(day: "DayAdvice", site: Site, options: argparse.Namespace) -> Job:
+    places = tuple((lat, lon) for lat, lon in options.at) if options.at else ((site.lat, site.lon),)
     references = tuple(day.receiver_places()) if options.method == "network" else ()
     across, height = options.tolerance
     return Job(
-        site.name, ((site.lat, site.lon),), options.method, options.baseline, references, across, height,
+        site.name, places, options.method, options.baseline, references, across, height,
         day.local_hours(options.hours),
     )  # fmt: skip
 
@@ -117,8 +119,9 @@ def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
     if day.record.origin.simulated:
         print("Invented data: nothing here was measured.")
     if options.at:
-        lat, lon = asking.place(*options.at)
-        site = Site(options.site or f"{lat:g}, {lon:g}", lat, lon)
+        lat, lon = [asking.place(*pair) for pair in options.at][0]
+        more = f" and {len(options.at) - 1} more" if len(options.at) > 1 else ""
+        site = Site(options.site or f"{lat:g}, {lon:g}{more}", lat, lon)
     elif options.site:
         site = day.site(options.site)
     else:

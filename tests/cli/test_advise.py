@@ -40,6 +40,10 @@ def test_a_site_with_sheet_and_calendar(place: str, tmp_path: Path, capsys: pyte
 def test_a_place_that_is_no_site(place: str, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["advise", "--archive", place, "--at", "-40", "146.5"]) == 0
     assert "-40, 146.5" in capsys.readouterr().out
+    assert main(["advise", "--archive", place, "--at", "-40", "146.5", "--at", "-20", "146.5"]) == 0
+    told = capsys.readouterr().out
+    assert "-40, 146.5 and 1 more" in told
+    assert " 0 min to work" in told  # the second place is off the map
 
 
 @pytest.mark.parametrize(
