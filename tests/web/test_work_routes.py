@@ -15,6 +15,8 @@ import httpx
 import numpy as np
 import pytest
 from fastapi.testclient import TestClient
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 from tests.builders import REGION, STORM_DAY, invented_day
 from tests.web.test_serve import ROOT
 
@@ -189,9 +191,16 @@ def test_followers_are_told_what_changes(own: Archive) -> None:
         if number == 2:
             own.save(invented_day(STORM_DAY))
 
-    told = follow(Feed(own, look_s=0.02), 3, act)
+        if number == 3:
+            own.notices.tell("port", "It is broken.", {"start_ns": 1, "end_ns": 2}, ['{"webhook": "https://s"}'], 0, T0)
+
+    told = follow(Feed(own, look_s=0.02), 4, act)
     assert [(event, facts.get("state", facts.get("version"))) for event, facts in told] == [
-        ("work", "waiting"), ("work", "cancelled"), ("day", 1)]  # fmt: skip
+        ("work", "waiting"), ("work", "cancelled"), ("day", 1), ("notice", None)]  # fmt: skip
+    assert told[3][1]["deliveries"] == [{"way": "webhook", "attempts": 0, "delivered_utc": None}]
+    client = TestClient(create_app(own))
+    assert client.get("/api/notices").json()["notices"] == [told[3][1]], "addresses may hold secrets: not told"
+    assert "skylag_deliveries_waiting 1" in client.get("/metrics").text
 
 
 def test_nobody_looks_while_nobody_follows(own: Archive) -> None:
@@ -272,6 +281,28 @@ def test_figures_are_in_the_prometheus_text_format(own: Archive, client: TestCli
     assert values['skylag_http_request_seconds_bucket{le="+Inf"}'] == values["skylag_http_request_seconds_count"] == 3
     steps = [v for k, v in values.items() if k.startswith("skylag_http_request_seconds_bucket")]
     assert steps == sorted(steps)
+
+
+ASKED = st.sampled_from(["1", "0", "-1", "77", str(2**63), "x", "..", "%00", "0" * 32, "a", "2031-05-11", "", "1e3", "٣"])
+
+
+@settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(
+    way=st.sampled_from([
+        ("POST", "/api/work/{a}/cancel"), ("POST", "/api/work/{a}/again"), ("PUT", "/api/batches/{a}/files?name={b}"),
+        ("POST", "/api/batches/{a}/work?region={b}&day={c}"), ("PUT", "/api/pins/{a}/{b}?version={c}"),
+        ("POST", "/api/batches"),
+    ]),
+    a=ASKED, b=ASKED, c=ASKED, body=st.binary(max_size=60), length=st.sampled_from([None, "-1", "x", "9" * 30]),
+)  # fmt: skip
+def test_no_change_that_is_asked_for_is_a_defect(
+    client: TestClient, way: tuple[str, str], a: str, b: str, c: str, body: bytes, length: str | None
+) -> None:
+    headers = {} if length is None else {"Content-Length": length}
+    answer = client.request(way[0], way[1].format(a=a, b=b, c=c), content=body, headers=headers)
+    assert answer.status_code < 500, (way, a, b, c, answer.text)
+    if answer.status_code >= 400:
+        assert set(answer.json()) == {"ok", "error", "kind", "details", "status"}
 
 
 def test_a_list_of_one_state(own: Archive, client: TestClient) -> None:

@@ -6,7 +6,7 @@ parses, asks and encodes; the gate has asked for the key already.
 
 import asyncio
 import contextlib
-from collections.abc import AsyncIterator, Callable
+from collections.abc import AsyncIterator, Callable, Sequence
 from pathlib import Path
 from typing import Annotated, Any
 
@@ -17,6 +17,7 @@ from starlette.concurrency import run_in_threadpool
 from starlette.requests import ClientDisconnect
 
 from skylag.archive import Archive, Task
+from skylag.archive.notices import Delivery, Notice
 from skylag.errors import Refused, SkylagError
 from skylag.jobs import board
 from skylag.jobs.guard import Inbox, Limits
@@ -71,7 +72,26 @@ def task_shape(task: Task) -> dict[str, Any]:
     }  # fmt: skip
 
 
+def notice_shape(notice: Notice, ways: Sequence[Delivery]) -> dict[str, Any]:
+    """A notice as JSON shows it; where it goes to is told by its way alone: addresses may hold secrets."""
+    return {
+        "id": notice.id, "subject": notice.subject, "sentence": notice.sentence, "made_utc": _utc(notice.made),
+        "facts": {name: value for name, value in notice.facts.items() if not name.endswith("_ns")},
+        "deliveries": [
+            {"way": way.target.split('"')[1], "attempts": way.attempts, "delivered_utc": _utc(way.delivered)}
+            for way in ways
+        ],
+    }  # fmt: skip
+
+
 # ---------------------------------------------------------------------------------------------- the queue
+
+
+@router.get("/api/notices", summary="Alerts")
+def notices(request: Request) -> Response:
+    """What alerts had to tell, newest first, and how each was delivered."""
+    archive: Archive = request.app.state.archive
+    return payloads.reply({"notices": [notice_shape(one, ways) for one, ways in archive.notices.newest(_SHOWN)]})
 
 
 @router.get("/api/work", summary="The work queue")
@@ -237,6 +257,8 @@ class Feed:
         found = {f"task {t.id}": ("work", text(task_shape(t))) for t in self._archive.tasks.newest(_SHOWN)}
         for region, day, version in self._archive.newest_versions(20):
             found[f"{region} {day}"] = ("day", text({"region": region, "day": day, "version": version}))
+        for notice, ways in self._archive.notices.newest(20):
+            found[f"notice {notice.id}"] = ("notice", text(notice_shape(notice, ways)))
         return found
 
 
@@ -258,6 +280,7 @@ def metrics(request: Request) -> Response:
     tell("tasks", "gauge", "Tasks by state.", [(f'{{state="{state}"}}', n) for state, n in counts.items()])
     days, versions = archive.size()
     tell("days", "gauge", "Days of all regions in the archive.", [("", days)])
+    tell("deliveries_waiting", "gauge", "Alerts not delivered yet.", [("", archive.notices.undelivered())])
     tell("versions", "gauge", "Versions of days in the archive.", [("", versions)])
     with traffic.lock:
         answers, buckets, seconds = dict(traffic.answers), dict(traffic.buckets), traffic.seconds
