@@ -283,7 +283,7 @@ def test_figures_are_in_the_prometheus_text_format(own: Archive, client: TestCli
     assert steps == sorted(steps)
 
 
-ASKED = st.sampled_from(["1", "0", "-1", "77", str(2**63), "x", "..", "%00", "0" * 32, "a", "2031-05-11", "", "1e3", "٣"])
+ASKED = st.sampled_from(["1", "0", "-1", "77", str(2**63), "x", "..", "%00", "0" * 32, "a", "2031-05-11", "", "1e3"])
 
 
 @settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
