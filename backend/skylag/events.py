@@ -1,6 +1,7 @@
-"""Nouns of what happens: arrivals of fronts, receivers at fault, and events in a day's states.
+"""Nouns of what happens: ragged patches, arrivals of fronts, receivers at fault, and events in a day's states.
 
-Never finds or writes one itself: see `ionosphere.fronts`, `ionosphere.faults`, `impact.events`, `formats.events`.
+Never finds or writes one itself: see `irregularity`, `fronts` and `faults` in `ionosphere`, `impact.events`,
+`formats.events`.
 """
 
 from dataclasses import dataclass
@@ -8,7 +9,58 @@ from dataclasses import dataclass
 import numpy as np
 
 from skylag.errors import Refused
-from skylag.tables import FLAG_KINDS, STATE_NAMES
+from skylag.tables import FLAG_KINDS, STATE_NAMES, Floats, Ints, Times
+
+
+@dataclass(frozen=True)
+class Patch:
+    """A place and span where content fluctuates: irregular, not merely steep.
+
+    index [TECU/min]: the highest and the median ROTI inside; radius_km holds nine tenths of the ragged windows;
+    slips and losses: arcs broken and signals lost inside; planar: (chi-square, limit) of the planar fit around it,
+    NaN where too few; drift [m/s] and direction [deg, toward] are NaN where they cannot be told.
+    """
+
+    start: np.datetime64
+    end: np.datetime64
+    lat: float
+    lon: float
+    radius_km: float
+    index_highest: float
+    index_median: float
+    windows: int
+    receivers: tuple[str, ...]
+    satellites: tuple[str, ...]
+    slips: int
+    losses: int
+    planar: tuple[float, float]
+    drift_m_s: float
+    drift_sigma_m_s: float
+    drift_heading_deg: float
+    confirmed: bool
+    window_time: Times  # middles of the ragged windows
+    window_lat: Floats
+    window_lon: Floats
+
+
+@dataclass(frozen=True)
+class Patches:
+    """All patches of a day, the ragged windows behind them, and the index over the whole day.
+
+    times (B,) starts of 5-minute windows; index (B, C) ROTI [TECU/min] per line of sight, NaN where unknown;
+    receiver, satellite (C,); lat, lon (B, C) pierce points; aatr (receivers, hours) [TECU/min].
+    """
+
+    patches: tuple[Patch, ...]
+    times: Times
+    receiver: Ints
+    satellite: Ints
+    index: Floats
+    lat: Floats
+    lon: Floats
+    aatr: Floats
+    breaks: Ints  # (B, receivers) arcs broken without a long silence
+    losses: Ints  # (B, receivers) signals lost above the elevation limit
 
 
 @dataclass(frozen=True)

@@ -737,7 +737,8 @@ class Front:
     reach_km: how far it was seen to its left (negative) and right along the wall, from the foot of that distance
     track      (time, lat, lon) of its nearest point to the centre, every few minutes
     sweep_km   scatter of the lines of sight about the line; height_km of the wall's middle, as the lines of sight tell
-    segments   (K, 7) stretches of half an hour: middle [s after epoch], offset [km], speed [km/s], heading [rad], sigmas
+    segments   (K, 7) stretches of half an hour: middle [s after epoch], offset [km], speed [km/s], heading [rad], and
+               the sigmas of these three
     """
 
     start: np.datetime64
@@ -776,57 +777,6 @@ class Fronts:
 
     fronts: tuple[Front, ...]
     onsets: Onsets
-
-
-@dataclass(frozen=True)
-class Patch:
-    """A place and span where content fluctuates: irregular, not merely steep.
-
-    index [TECU/min]: the highest and the median ROTI inside; radius_km holds nine tenths of the ragged windows;
-    slips and losses: arcs broken and signals lost inside; planar: (chi-square, limit) of the planar fit around it,
-    NaN where too few; drift [m/s] and direction [deg, toward] are NaN where they cannot be told.
-    """
-
-    start: np.datetime64
-    end: np.datetime64
-    lat: float
-    lon: float
-    radius_km: float
-    index_highest: float
-    index_median: float
-    windows: int
-    receivers: tuple[str, ...]
-    satellites: tuple[str, ...]
-    slips: int
-    losses: int
-    planar: tuple[float, float]
-    drift_m_s: float
-    drift_sigma_m_s: float
-    drift_heading_deg: float
-    confirmed: bool
-    window_time: Times  # middles of the ragged windows
-    window_lat: Floats
-    window_lon: Floats
-
-
-@dataclass(frozen=True)
-class Patches:
-    """All patches of a day, the ragged windows behind them, and the index over the whole day.
-
-    times (B,) starts of 5-minute windows; index (B, C) ROTI [TECU/min] per line of sight, NaN where unknown;
-    receiver, satellite (C,); lat, lon (B, C) pierce points; aatr (receivers, hours) [TECU/min].
-    """
-
-    patches: tuple[Patch, ...]
-    times: Times
-    receiver: Ints
-    satellite: Ints
-    index: Floats
-    lat: Floats
-    lon: Floats
-    aatr: Floats
-    breaks: Ints  # (B, receivers) arcs broken without a long silence
-    losses: Ints  # (B, receivers) signals lost above the elevation limit
 
 
 # ---------------------------------------------------------------------------------------------- the day ahead

@@ -8,6 +8,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from tests.simulated.moving_wall import CENTRE, START, quiet, simulate, wall
 
+from skylag.events import Patch, Patches
 from skylag.impact import states
 from skylag.ionosphere import faults, fronts, irregularity, slopes
 from skylag.tables import (
@@ -17,8 +18,6 @@ from skylag.tables import (
     UNSEEN,
     Fields,
     Fronts,
-    Patch,
-    Patches,
     Region,
     Site,
     Thresholds,

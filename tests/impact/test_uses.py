@@ -12,11 +12,12 @@ from tests.simulated.moving_wall import CENTRE, START, quiet, simulate, wall
 
 from skylag.constants import L1_M_PER_TECU
 from skylag.errors import Refused
+from skylag.events import Patches
 from skylag.formats import events as event_files
 from skylag.impact import events, states, uses
 from skylag.ionosphere import fronts, irregularity, slopes
 from skylag.ionosphere.background import Background
-from skylag.tables import BROKEN, HOLDS, STRAINED, UNSEEN, Patches, Use
+from skylag.tables import BROKEN, HOLDS, STRAINED, UNSEEN, Use
 
 DIFFERENTIAL, GROUND, SATELLITE, SINGLE = uses.PUBLISHED
 

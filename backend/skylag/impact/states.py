@@ -22,7 +22,7 @@ import numpy.typing as npt
 from scipy.ndimage import find_objects, label
 
 from skylag.constants import L1_M_PER_TECU
-from skylag.events import Arrival, Fault
+from skylag.events import Arrival, Fault, Patch, Patches
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.fronts import ahead_km, expected_at
 from skylag.tables import (
@@ -38,8 +38,6 @@ from skylag.tables import (
     Floats,
     Front,
     Fronts,
-    Patch,
-    Patches,
     Region,
     SlopeClaim,
     Slopes,

@@ -9,10 +9,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from skylag.constants import SHELL_EARTH_RADIUS_M
-from skylag.events import Fault
+from skylag.events import Fault, Patches
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.sightlines import lay_out, middle
-from skylag.tables import Bools, Floats, Fronts, Ints, Patches, Rays, Samples, Slopes
+from skylag.tables import Bools, Floats, Fronts, Ints, Rays, Samples, Slopes
 
 WINDOW_S = 300.0
 _KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0

@@ -19,9 +19,10 @@ from scipy.stats import chi2
 
 from skylag.constants import L1_M_PER_TECU
 from skylag.errors import NotEnough
+from skylag.events import Patch, Patches
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.sightlines import Sightlines, from_plane, lay_out, middle
-from skylag.tables import Bools, Floats, Fronts, Ints, Patch, Patches, Rays, Samples
+from skylag.tables import Bools, Floats, Fronts, Ints, Rays, Samples
 
 ROTI_STEP_S = 30.0
 ROTI_WINDOW_S = 300.0
