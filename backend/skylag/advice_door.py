@@ -46,7 +46,7 @@ def _advise_parser(commands: Any, caution: str) -> None:
     parser.add_argument("--day", default="", metavar="YYYY-MM-DD", help="the newest day without")
     parser.add_argument("--site", default="", metavar="NAME", help="a site of the region; without, all in a line each")
     parser.add_argument("--at", nargs=2, type=float, action="append", metavar=("LAT", "LON"),
-                        help="a place that is no site; several for an area or a route: all must be workable")  # fmt: skip
+                        help="a place that is no site; several make an area or a route")  # fmt: skip
     parser.add_argument("--method", default="rtk", choices=tuple(METHODS))
     parser.add_argument("--baseline", type=float, default=10.0, metavar="KM", help="to the base or reference (10)")
     parser.add_argument("--tolerance", nargs=2, type=float, default=(30.0, 50.0), metavar=("ACROSS", "HEIGHT"),
@@ -119,7 +119,8 @@ def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
     if day.record.origin.simulated:
         print("Invented data: nothing here was measured.")
     if options.at:
-        lat, lon = [asking.place(*pair) for pair in options.at][0]
+        places = [asking.place(*pair) for pair in options.at]
+        lat, lon = places[0]
         more = f" and {len(options.at) - 1} more" if len(options.at) > 1 else ""
         site = Site(options.site or f"{lat:g}, {lon:g}{more}", lat, lon)
     elif options.site:

@@ -42,9 +42,10 @@ class Sentence:
 
 @dataclass(frozen=True)
 class Bullets:
-    """A list."""
+    """A list; small: what need not be read first."""
 
     items: tuple[str, ...]
+    kind: str = ""
 
 
 @dataclass(frozen=True)
@@ -81,7 +82,9 @@ th, td { text-align: left; vertical-align: top; padding: .15rem .6rem .15rem 0; 
 th { font-weight: 600; } ul { margin: .3rem 0; padding-left: 1.2rem; } figure { margin: .6rem 0; }
 svg { width: 100%; height: auto; display: block; } svg text { fill: #1f2430; font-size: 11px; }
 @media print { @page { size: A4; margin: 14mm; }
-  body { max-width: none; margin: 0; padding: 0; background: none; font-size: 10pt; }
+  body { max-width: none; margin: 0; padding: 0; background: none; font-size: 8.5pt; line-height: 1.3; }
+  h1 { font-size: 15pt; } h2 { font-size: 10.5pt; margin: .6rem 0 .2rem; } .strong { font-size: 10.5pt; }
+  td, th { padding: .05rem .5rem .05rem 0; } .small { font-size: 7.2pt; } figure { max-width: 80%; }
   h2 { break-after: avoid; } tr, figure, li { break-inside: avoid; }
   svg { -webkit-print-color-adjust: exact; print-color-adjust: exact; } }
 """
@@ -106,7 +109,8 @@ def _html_block(block: Block, number: int) -> str:
     if isinstance(block, Sentence):
         return f'<p class="{block.kind}">{text(block.text)}</p>' if block.kind else f"<p>{text(block.text)}</p>"
     if isinstance(block, Bullets):
-        return "<ul>" + "".join(f"<li>{text(item)}</li>" for item in block.items) + "</ul>"
+        kind = f' class="{block.kind}"' if block.kind else ""
+        return f"<ul{kind}>" + "".join(f"<li>{text(item)}</li>" for item in block.items) + "</ul>"
     if isinstance(block, Table):
         head = "".join(f'<th scope="col">{text(cell)}</th>' for cell in block.heading)
         rows = "".join("<tr>" + "".join(f"<td>{text(cell)}</td>" for cell in row) + "</tr>" for row in block.rows)
@@ -164,8 +168,8 @@ def to_pdf(title: str, blocks: Sequence[Block], made: np.datetime64) -> bytes:
     pdf = FPDF(format="A4")
     pdf.set_creation_date(datetime.fromtimestamp(int(made.astype("datetime64[s]").astype(np.int64)), UTC))
     pdf.set_title(_latin(title))
-    pdf.set_margins(14, 14, 14)
-    pdf.set_auto_page_break(True, 14)
+    pdf.set_margins(14, 11, 14)
+    pdf.set_auto_page_break(True, 10)
     pdf.add_page()
     for block in blocks:
         _pdf_block(pdf, block)
@@ -187,16 +191,16 @@ def _line(pdf: FPDF, text: str, size: float, style: str = "", grey: bool = False
 
 def _pdf_block(pdf: FPDF, block: Block) -> None:
     if isinstance(block, Heading):
-        pdf.ln(1 if block.level == 1 else 3)
-        _line(pdf, block.text, 17 if block.level == 1 else 12, "B")
-        pdf.ln(1)
+        pdf.ln(0 if block.level == 1 else 1.5)
+        _line(pdf, block.text, 15 if block.level == 1 else 10.5, "B")
+        pdf.ln(0.5)
     elif isinstance(block, Sentence):
-        size = {"strong": 12.0, "small": 8.0}.get(block.kind, 9.5)
+        size = {"strong": 10.5, "small": 7.2}.get(block.kind, 8.5)
         _line(pdf, block.text, size, "B" if block.kind == "strong" else "", block.kind == "small")
-        pdf.ln(1)
+        pdf.ln(0.6)
     elif isinstance(block, Bullets):
         for item in block.items:
-            _line(pdf, f"\u00b7 {item}", 9)
+            _line(pdf, f"\u00b7 {item}", 7.2 if block.kind == "small" else 9)
     elif isinstance(block, Table):
         _pdf_table(pdf, block)
     else:
@@ -204,13 +208,13 @@ def _pdf_block(pdf: FPDF, block: Block) -> None:
 
 
 def _pdf_table(pdf: FPDF, block: Table) -> None:
-    pdf.set_font("helvetica", "", 8.5)
+    pdf.set_font("helvetica", "", 7.5)
     pdf.set_text_color(31, 36, 48)
     pdf.set_draw_color(217, 209, 191)
     total = sum(block.widths)
     with pdf.table(
         col_widths=tuple(100 * share / total for share in block.widths), borders_layout="HORIZONTAL_LINES",
-        text_align="LEFT", line_height=4.2, padding=0.5,
+        text_align="LEFT", line_height=3.4, padding=0.4,
     ) as table:  # fmt: skip
         for row in (block.heading, *block.rows):
             cells = table.row()

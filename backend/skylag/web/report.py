@@ -14,7 +14,7 @@ import numpy as np
 from skylag import timescales
 from skylag.errors import Missing, NotEnough
 from skylag.formats.calendar import Entry
-from skylag.formats.sheet import Block, Bullets, DayChart, Heading, Sentence, Table
+from skylag.formats.sheet import Block, DayChart, Heading, Sentence, Table
 from skylag.impact.ground_augmentation import StationDay
 from skylag.impact.satellite_augmentation import Availability, Outage, ServiceChoices
 from skylag.impact.survey import AVOID, NOT_SEEN, WORK, Advice, Job, Window, touches
@@ -25,7 +25,7 @@ from skylag.web import sentences
 _MARK = {WORK: "good", AVOID: "bad", NOT_SEEN: "unseen"}
 _STATE_MARK = ("unseen", "good", "doubt", "bad")
 _WORDS = {WORK: "Work", AVOID: "Avoid", NOT_SEEN: "Not seen"}
-_MOST_ROWS = 10
+_MOST_ROWS = 6
 _HALF_MINUTE = np.timedelta64(30 * 10**9, "ns")
 
 
@@ -99,10 +99,10 @@ def of_site(
     told = [*advice.assumptions]
     told += [] if approaches is None else approaches.assumptions
     told += [] if station is None else station.assumptions
-    blocks.append(Bullets(tuple(dict.fromkeys(told))))
+    blocks.append(Sentence(" ".join(dict.fromkeys(told)), "small"))
     blocks.append(Heading("Cautions"))
     cautions = [sentences.CAUTION, advice.caution] + ([approaches.caution] if approaches is not None else [])
-    blocks += [Sentence(one) for one in dict.fromkeys(cautions)]
+    blocks.append(Sentence(" ".join(dict.fromkeys(cautions))))
     versions = record.origin.versions.get("skylag", "")
     blocks.append(
         Sentence(
@@ -218,11 +218,28 @@ def _longest(spans: Sequence[_Span]) -> tuple[list[_Span], str]:
     return sorted(most, key=lambda one: one.start), f"{left} shorter ones are not listed." if left else ""
 
 
+def _brief(text: str, most: int = 150) -> str:
+    """The first parts of a long sentence, and how many more there are; the whole is in the answers of the API."""
+    parts = text.split("; ")
+    kept = 1
+    while kept < len(parts) and len("; ".join(parts[: kept + 1])) <= most:
+        kept += 1
+    rest = len(parts) - kept
+    return "; ".join(parts[:kept]) + (f"; {rest} more" if rest else "")
+
+
 def _approach_rows(found: Availability, clock: Clock) -> list[Block]:
-    shown, rest = _longest(found.outages)
+    alike: dict[tuple[str, str, str], list[Outage]] = {}
+    for one in found.outages:
+        alike.setdefault((str(one.start), str(one.end), one.why), []).append(one)
+    shown, rest = _longest([group[0] for group in alike.values()])
     if not shown:
         return []
-    rows = [(*clock.span(one.start, one.end), one.level, one.why) for one in shown]
+    rows = [
+        (*clock.span(one.start, one.end),
+         ", ".join(other.level for other in alike[str(one.start), str(one.end), one.why]), _brief(one.why))
+        for one in shown
+    ]  # fmt: skip
     blocks: list[Block] = [Heading("Outages of approaches"), clock.table(("Level", "Why"), rows, (0.9, 5.5))]
     return [*blocks, Sentence(rest, "small")] if rest else blocks
 
@@ -257,8 +274,8 @@ def _evidence(day: DayAdvice, site: Site, advice: Advice, clock: Clock) -> list[
     near += [flag for flag in day.flags if flag.kind == "front" and flag not in near and flag.confirmed]
     rows = [
         (f"{clock.utc(flag.start)} to {clock.utc(flag.end)}", flag.kind, flag.state,
-         flag.evidence if flag.confirmed else f"unconfirmed: {flag.evidence}")
-        for flag in sorted(near, key=lambda flag: (not flag.confirmed, flag.start))[:10]
+         _brief(flag.evidence if flag.confirmed else f"unconfirmed: {flag.evidence}"))
+        for flag in sorted(near, key=lambda flag: (not flag.confirmed, flag.start))[:4]
     ]  # fmt: skip
     blocks: list[Block] = [Heading("Evidence")]
     known = advice.slope[np.isfinite(advice.slope)]
