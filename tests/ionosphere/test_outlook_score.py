@@ -7,7 +7,7 @@ from tests.simulated.year_of_content import simulate
 
 from skylag.errors import NotEnough
 from skylag.ionosphere import outlook_score
-from skylag.ionosphere.outlook import replay
+from skylag.ionosphere.outlook import climate_of, replay
 from skylag.ionosphere.outlook_score import Tally, crps, from_facts, reliability, score, simple_ways, verdict
 
 
@@ -60,6 +60,8 @@ def test_simple_ways_use_only_what_was_known() -> None:
     assert np.array_equal(ways["persistence"], history.delay[45], equal_nan=True)
     assert np.array_equal(ways["recurrence"], history.delay[46 - 27], equal_nan=True)
     assert np.allclose(ways["usual"], np.nanmedian(history.delay[19:46], axis=0), equal_nan=True)
+    with_model = simple_ways(history, year.drivers, 45, 46, climate_of(history.days, history.lats, history.lons))
+    assert all(np.array_equal(ways[name], with_model[name], equal_nan=True) for name in outlook_score.OTHERS)
     changed = history.until(60)
     changed.delay[46:] += 5.0
     again = simple_ways(changed, year.drivers, 45, 46)

@@ -12,7 +12,7 @@ from tests.conftest import Evidence
 from tests.simulated.year_of_content import Year, simulate
 
 from skylag.ionosphere import outlook_score
-from skylag.ionosphere.outlook import Drivers, replay
+from skylag.ionosphere.outlook import Drivers, climate_of, replay
 from skylag.ionosphere.outlook_score import Tally, reliability, score, verdict
 
 SEED = 20310321
@@ -20,12 +20,13 @@ FIRST, LAST = 119, 239  # outlooks after these days: days 120 to 239 are foretol
 
 
 def record(year: Year, drivers: Drivers) -> Tally:
+    climate = climate_of(year.history.days, year.history.lats, year.history.lons)
     total = Tally()
     for number, made in enumerate(replay(year.history, drivers, FIRST)):
         if FIRST + number >= LAST:
             break
         if np.isfinite(year.history.delay[FIRST + number + 1]).any():
-            total.add(score(made, year.history, drivers))
+            total.add(score(made, year.history, drivers, climate))
     return total
 
 
@@ -88,8 +89,9 @@ def test_without_indices_it_still_beats_simple_ways(year: Year) -> None:
 def test_chances_come_as_often_as_told(evidence: Evidence) -> None:
     """Ten such spans of 120 days, pooled, since the hours and places of one storm are one case, not hundreds.
 
-    Up to one half told and came agree within five points in every tenth of more than 200 cases that hold twenty hours
-    of several spans; above, too bold chances of the rarest states are known and bounded here.
+    The project's aim is five points in every tenth of more than 200 cases.  It is met up to one half where cases are
+    many; above, chances are too bold by six to ten points, and tenths of a few hundred cases, which are a storm or two,
+    stray farther.  The limit here keeps what is reached: six points in tenths of more than 2000 cases.
     """
     pooled = Tally()
     for number in range(10):
@@ -105,7 +107,7 @@ def test_chances_come_as_often_as_told(evidence: Evidence) -> None:
     evidence(
         "chances of states, ten spans of 120 invented days, tenths of more than 2000 cases: farthest from what came",
         source="invented world, seeds not used while making the method; limit is wider than the project's aim of 5",
-        expected=10.0, got=worst, tolerance=0, unit="points", at_most=True,
+        expected=6.5, got=worst, tolerance=0, unit="points", at_most=True,
     )  # fmt: skip
 
 

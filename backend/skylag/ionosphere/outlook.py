@@ -112,16 +112,30 @@ def no_drivers(days: int) -> Drivers:
     return Drivers(np.full((days, 8), np.nan), np.full((days, 2, 8), np.nan), np.full(days, np.nan))
 
 
+@dataclass(frozen=True)
+class Climate:
+    """NTCM-G over days and places, linear in activity: content [TECU] (D, 24, P) at F10.7 of 100, and rise to 200."""
+
+    low: Floats
+    rise: Floats
+
+    def delay(self, rows: Any, flux: Floats) -> Floats:
+        """Vertical delay [m] of some days under F10.7 of (rows,), NaN where it is not known."""
+        known = np.where(np.isfinite(flux), flux, USUAL_FLUX)
+        content = self.low[rows] + self.rise[rows] * ((known - 100.0) / 100.0)[:, None, None]
+        return np.asarray(np.maximum(content * L1_M_PER_TECU, _LEAST_DELAY_M))
+
+
+def climate_of(days: npt.NDArray[np.datetime64], lats: Floats, lons: Floats) -> Climate:
+    """The model at the middles of the hours of days."""
+    middles = days.astype("datetime64[ns]")[:, None] + (np.arange(24) * 3600 + 1800).astype("timedelta64[s]")
+    low = ntcm_vertical((100.0, 0.0, 0.0), lats, lons, middles[:, :, None])
+    return Climate(low, ntcm_vertical((200.0, 0.0, 0.0), lats, lons, middles[:, :, None]) - low)
+
+
 def climatology(days: npt.NDArray[np.datetime64], lats: Floats, lons: Floats, flux: Floats) -> Floats:
     """Vertical delay [m] (D, 24, P) that NTCM-G gives for the middles of hours; flux (D,) is F10.7 or NaN."""
-    middles = days.astype("datetime64[ns]")[:, None] + (np.arange(24) * 3600 + 1800).astype("timedelta64[s]")
-    known = np.where(np.isfinite(flux), flux, USUAL_FLUX)
-    # The model is linear in activity: two calls do for all days.
-    times = middles[:, :, None]
-    low = ntcm_vertical((100.0, 0.0, 0.0), lats, lons, times)
-    high = ntcm_vertical((200.0, 0.0, 0.0), lats, lons, times)
-    content = low + (high - low) * ((known - 100.0) / 100.0)[:, None, None]
-    return np.asarray(np.maximum(content * L1_M_PER_TECU, _LEAST_DELAY_M))
+    return climate_of(days, lats, lons).delay(slice(None), flux)
 
 
 # ---------------------------------------------------------------------------------------------- what is known when

@@ -16,7 +16,7 @@ import numpy as np
 import numpy.typing as npt
 
 from skylag.errors import NotEnough
-from skylag.ionosphere.outlook import RANGES, ROTATION, Drivers, History, climatology
+from skylag.ionosphere.outlook import RANGES, ROTATION, Climate, Drivers, History, climate_of
 from skylag.tables import BROKEN, STRAINED, UNSEEN, Floats, Outlook
 
 OTHERS = ("persistence", "recurrence", "climatology", "usual")
@@ -81,9 +81,12 @@ def crps(quantiles: Floats, levels: Floats, value: Floats) -> Floats:
     return np.asarray(2.0 * (middle + ends))
 
 
-def score(outlook: Outlook, history: History, drivers: Drivers | None = None) -> Tally:
+def score(
+    outlook: Outlook, history: History, drivers: Drivers | None = None, climate: Climate | None = None
+) -> Tally:
     """Scores of an outlook by the days that came, as far as the history holds them.
 
+    climate  of the days and places of the history, where it is at hand: it saves most of the time
     Raises NotEnough where no hour of it was seen.
     """
     first = int((outlook.known_until - history.days[0]) / np.timedelta64(1, "D")) + 1
@@ -94,7 +97,7 @@ def score(outlook: Outlook, history: History, drivers: Drivers | None = None) ->
         if not 0 < day < len(history.days):
             continue
         rows = slice(24 * lead, 24 * lead + 24)
-        seen_any |= _score_delay(tally, str(lead + 1), outlook, rows, history, drivers, first - 1, day)
+        seen_any |= _score_delay(tally, str(lead + 1), outlook, rows, history, drivers, climate, first - 1, day)
         for use, name in enumerate(outlook.uses):
             _score_states(tally, str(name), use, outlook, rows, history, first - 1, day)
     if not seen_any and not tally.bins:
@@ -104,8 +107,8 @@ def score(outlook: Outlook, history: History, drivers: Drivers | None = None) ->
 
 
 def _score_delay(
-    tally: Tally, lead: str, outlook: Outlook, rows: slice, history: History, drivers: Drivers | None, last: int,
-    day: int,
+    tally: Tally, lead: str, outlook: Outlook, rows: slice, history: History, drivers: Drivers | None,
+    climate: Climate | None, last: int, day: int,
 ) -> bool:  # fmt: skip
     came = history.delay[day]
     seen = np.isfinite(came)
@@ -121,7 +124,7 @@ def _score_delay(
         ends = [quantiles[:, int(np.argmin(np.abs(outlook.levels - level)))] for level in (low, high)]
         tally.inside[lead][str(share)] = float(((value >= ends[0]) & (value <= ends[1])).sum())
     tally.pairs[lead] = {}
-    for name, other in simple_ways(history, drivers, last, day).items():
+    for name, other in simple_ways(history, drivers, last, day, climate).items():
         both = np.isfinite(other[seen])
         off = np.abs(other[seen][both] - value[both])
         tally.pairs[lead][name] = [float(both.sum()), float((error[both] ** 2).sum()), float((off**2).sum()),
@@ -129,13 +132,17 @@ def _score_delay(
     return True
 
 
-def simple_ways(history: History, drivers: Drivers | None, last: int, day: int) -> dict[str, Floats]:
+def simple_ways(
+    history: History, drivers: Drivers | None, last: int, day: int, climate: Climate | None = None
+) -> dict[str, Floats]:
     """What simple ways would have told (24, P) [m] of row `day` at the end of row `last`; NaN where they cannot."""
     nothing = np.full(history.delay.shape[1:], np.nan)
     month = history.delay[max(0, last + 1 - ROTATION) : last + 1]
     flux = np.full(len(month), np.nan) if drivers is None else drivers.flux[max(0, last + 1 - ROTATION) : last + 1]
-    model = climatology(np.append(history.days[last + 1 - len(month) : last + 1], history.days[day]), history.lats,
-                        history.lons, np.append(flux, flux[-1:]))  # fmt: skip
+    rows = np.append(np.arange(last + 1 - len(month), last + 1), day)
+    if climate is None:
+        climate, rows = climate_of(history.days[rows], history.lats, history.lons), np.arange(len(rows))
+    model = climate.delay(rows, np.append(flux, flux[-1:]))
     seen = np.isfinite(month)
     scaled = nothing
     if seen.any():

@@ -18,7 +18,7 @@ from skylag.errors import Missing, NotEnough, Refused
 from skylag.impact import uses
 from skylag.impact.states import nearest_cells
 from skylag.ionosphere import outlook_score
-from skylag.ionosphere.outlook import Drivers, History, Limits, no_drivers, replay, tomorrow
+from skylag.ionosphere.outlook import Drivers, History, Limits, climate_of, no_drivers, replay, tomorrow
 from skylag.ionosphere.outlook_score import Tally
 from skylag.tables import HOLDS, STRAINED, UNSEEN, Bools, Bytes, Fields, Floats, Indices, Region
 
@@ -269,12 +269,13 @@ def hindcast(
 def replay_scored(history: History, drivers: Drivers, first: np.datetime64) -> Tally:
     """Scores of the outlooks for the days of a history from `first` on, each made the evening before."""
     start = max(0, int((first - history.days[0]) / np.timedelta64(1, "D")) - 1)
+    climate = climate_of(history.days, history.lats, history.lons)
     total = Tally()
     for number, made in enumerate(replay(history, drivers, start)):
         if start + number + 1 >= len(history.days):
             break
         try:
-            total.add(outlook_score.score(made, history, drivers))
+            total.add(outlook_score.score(made, history, drivers, climate))
         except NotEnough:
             continue  # the network was down on that day
     if total.outlooks == 0:
