@@ -28,6 +28,8 @@ export class ChartPanel {
   #cells;
   #frame;
   #framed = "";
+  /** Kept, since asking for it costs a layout of the page at each step. */
+  #width = 0;
   /** @type {import("../painting.js").Projection|null} */ #projection = null;
   #other;
   #compared;
@@ -48,7 +50,10 @@ export class ChartPanel {
     this.#state = state;
     map.addEventListener("click", this.#click);
     map.addEventListener("keydown", this.#key);
-    this.#watcher = new ResizeObserver(() => this.#scene && this.#paint());
+    this.#watcher = new ResizeObserver(() => {
+      this.#width = map.clientWidth;
+      if (this.#scene) this.#paint();
+    });
     this.#watcher.observe(map);
   }
 
@@ -168,17 +173,18 @@ export class ChartPanel {
       flags: day.flags.filter((flag) => flag.start <= time && time <= flag.end),
       place: view.place,
       veil: view.show.has("veil") && !difference,
-      width: this.#element.clientWidth,
+      width: this.#width,
     };
   }
 
   /** The cells and all that stands on them at once, on canvas; plotly's axes and frame only when they change. */
   #paint() {
-    if (!this.#scene || !this.#element.clientWidth) return;
+    this.#width ||= this.#element.clientWidth;
+    const width = this.#width;
+    if (!this.#scene || !width) return;
     const contents = this.#contents();
-    const width = this.#element.clientWidth;
     const height = heightOf(contents.frame, width);
-    this.#element.style.height = `${height}px`;
+    if (this.#element.style.height !== `${height}px`) this.#element.style.height = `${height}px`;
     const figure = mapFigure(contents);
     this.#projection = projection(figure.layout, width, height);
     paint(this.#cells, figure, this.#projection);
@@ -201,8 +207,8 @@ export class ChartPanel {
   /** The other day's map beside: the same frame and scale, without this day's flags and states. */
   #paintOther(contents) {
     const { box, element, cells, frame, framed } = this.#other;
-    const width = element.clientWidth;
-    if (box.hidden || !width) return;
+    const width = box.hidden ? 0 : element.clientWidth;
+    if (!width) return;
     const { other } = this.#scene;
     const height = heightOf(contents.frame, width);
     element.style.height = `${height}px`;

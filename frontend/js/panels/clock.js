@@ -25,6 +25,7 @@ export class ClockPanel {
   #drawn = "";
   #line = null;
   #dragging = false;
+  #width = 0;
   #speaking = 0;
 
   /**
@@ -44,7 +45,10 @@ export class ClockPanel {
     range.addEventListener("input", this.#range);
     names.addEventListener("click", this.#name);
     elements.table.closest("details").addEventListener("toggle", () => this.#fillTable());
-    this.#watcher = new ResizeObserver(() => this.#scene && this.show(this.#scene));
+    this.#watcher = new ResizeObserver(() => {
+      this.#width = strip.clientWidth;
+      if (this.#scene) this.show(this.#scene);
+    });
     this.#watcher.observe(strip);
   }
 
@@ -55,7 +59,7 @@ export class ClockPanel {
     const { strip, range, text } = this.#elements;
     const zone = day.region.timezone;
     const rows = rowsOf(scene);
-    const width = strip.clientWidth;
+    const width = this.#width;
     const fingerprint = JSON.stringify([day.region.key, day.day, rows.length, width, siteStates?.serial, zone, series?.lat, series?.lon]);
     if (fingerprint !== this.#drawn && width) {
       this.#drawn = fingerprint;

@@ -15,11 +15,15 @@ export class SeriesPanel {
   #series = null;
   #watcher;
   #drawn = "";
+  #size = [0, 0];
 
   /** @param {{plot: HTMLElement, line: HTMLElement, table: HTMLElement}} elements */
   constructor(elements) {
     this.#elements = elements;
-    this.#watcher = new ResizeObserver(() => this.#series && this.#place());
+    this.#watcher = new ResizeObserver(() => {
+      this.#size = [elements.plot.clientWidth, elements.plot.clientHeight];
+      if (this.#series) this.#place();
+    });
     this.#watcher.observe(elements.plot);
     elements.table.closest("details")?.addEventListener("toggle", this.#fillTable);
   }
@@ -60,14 +64,14 @@ export class SeriesPanel {
     const half = day.times.length > 1 ? (day.times[1] - day.times[0]) / 2 : 0;
     const span = /** @type {[number, number]} */ ([day.times[0] - half, day.times[day.times.length - 1] + half]);
     const part = (time - span[0]) / (span[1] - span[0]);
-    line.style.transform = `translateX(${LEFT + part * (plot.clientWidth - LEFT) - 1}px)`;
+    line.style.transform = `translateX(${LEFT + part * (this.#size[0] - LEFT) - 1}px)`;
     const at = nearest(series.times, time);
     plot.setAttribute(
       "aria-label",
       `Vertical delay at ${placeText(series.lat, series.lon)} over the day; ${withSigma(series.delay[at], series.sigma[at], "m")} at ${timeText(time)}.`,
     );
-    const width = plot.clientWidth;
-    const key = JSON.stringify([series.lat, series.lon, day.region.key, day.day, view.clock, theme, width, plot.clientHeight]);
+    const [width, height] = this.#size;
+    const key = JSON.stringify([series.lat, series.lon, day.region.key, day.day, view.clock, theme, width, height]);
     if (key === this.#drawn || !width) return;
     this.#drawn = key;
     const figure = seriesFigure({ series, theme, clock: view.clock, zone: day.region.timezone, span, top: day.ends.delay[1], width });

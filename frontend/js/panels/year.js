@@ -13,6 +13,8 @@ export class YearPanel {
   #scene = null;
   #figure = null;
   #drawn = "";
+  #told = "";
+  #width = 0;
   #filled = "";
   #watcher;
 
@@ -32,14 +34,17 @@ export class YearPanel {
     versus.addEventListener("change", () => state.change({ versus: versus.value }));
     how.addEventListener("change", (event) => state.change({ beside: event.target.value === "beside" }));
     table.closest("details").addEventListener("toggle", () => this.#fillTable());
-    this.#watcher = new ResizeObserver(() => this.#scene && this.show(this.#scene));
+    this.#watcher = new ResizeObserver(() => {
+      this.#width = strip.clientWidth;
+      if (this.#scene) this.show(this.#scene);
+    });
     this.#watcher.observe(strip);
   }
 
   /** @param {import("../api.js").DayEntry[]} days */
   days(days) {
     this.#days = days;
-    this.#drawn = this.#filled = "";
+    this.#drawn = this.#filled = this.#told = "";
     if (this.#scene) this.show(this.#scene);
   }
 
@@ -48,6 +53,10 @@ export class YearPanel {
     this.#scene = scene;
     const { view, day } = scene;
     if (view.ask !== "past") return;
+    // A step in time concerns nothing here, and asking for sizes would cost a layout of the page each time.
+    const told = JSON.stringify([view.region, day.day, view.who, view.span, view.worst, view.versus, view.beside, this.#width]);
+    if (told === this.#told) return;
+    this.#told = told;
     const { strip, who, span, worst, versus, how, note } = this.#elements;
     const here = this.#days.filter((entry) => entry.region === view.region);
     const sites = [...new Set(here.flatMap((entry) => Object.keys(entry.siteShares)))];
@@ -74,7 +83,7 @@ export class YearPanel {
     how.hidden = !view.versus;
     for (const input of how.querySelectorAll("input")) input.checked = (input.value === "beside") === view.beside;
     const chosen = chosenDays(here, view, who.value);
-    const width = strip.clientWidth;
+    const width = this.#width;
     const key = JSON.stringify([chosen.map((entry) => entry.day), who.value, width, here.length]);
     if (key !== this.#drawn && width) {
       this.#drawn = key;
