@@ -101,7 +101,7 @@ def test_every_file_the_page_names_is_there(page: _Elements) -> None:
     for _tag, attributes in page.tags:
         for name in ("src", "href"):
             target = attributes.get(name) or ""
-            if target and not target.startswith("#") and target != "/vendor/plotly.min.js":
+            if target and not target.startswith(("#", "?")) and target != "/vendor/plotly.min.js":
                 assert (FRONTEND / target).is_file(), target
     for path in FRONTEND.rglob("*.js"):
         for target in re.findall(r"from \"(\.[^\"]+)\"", path.read_text(encoding="utf-8")):
