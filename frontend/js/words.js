@@ -63,6 +63,8 @@ export const WORDS = {
     names.length < 4 ? `Not good either: ${names.join(", ")}.` : `Not good either: ${names.slice(0, 2).join(", ")} and ${names.length - 2} more sites.`,
   /** @param {number} minutes */
   stripHelp: (minutes) => `Drag, or arrow keys: ${minutes} minutes a step, with shift an hour; Home, End.`,
+  /** @param {string} state */
+  siteIs: (state) => (state === "unseen" ? "Unseen here: not enough data near this site to say. Treat it as not covered." : `Corrections are ${state} here, by what was seen near this site.`),
   /** @param {string} sentence */
   mapAlone: (sentence) => `The map’s own cell alone would say: ${sentence}`,
   sigma: "± is one standard deviation.",

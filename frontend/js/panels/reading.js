@@ -2,7 +2,7 @@
  * The reading of the chosen place: the sentence first, the numbers second, the evidence under "why".
  */
 
-import { asSentence, bothClocks, compass, countText, evidenceText, flagSentence, KIND_WORDS, latText, limitsSentence, lonText, placeText, siteSentence, spanText, withSigma, WORDS } from "../words.js";
+import { asSentence, bothClocks, compass, countText, evidenceText, flagSentence, KIND_WORDS, latText, limitsSentence, lonText, placeText, spanText, STATE_WORDS, withSigma, WORDS } from "../words.js";
 import { away } from "../figures/arrivals.js";
 import { placeAt } from "../figures/signs.js";
 import { make, stateWord, trouble, viewOf } from "./parts.js";
@@ -90,7 +90,7 @@ export class ReadingPanel {
     // A site is judged by all that was seen near it, the map's cell by its own number: the worse of the two speaks first.
     const judged = number >= 0 ? siteStates?.stateOf(number, reading.time) ?? reading.state : reading.state;
     const worse = RANK[judged] > RANK[reading.state];
-    const lead = worse ? [siteSentence(site.name, judged, reason), WORDS.mapAlone(reading.sentence)] : [reading.sentence];
+    const lead = worse ? [WORDS.siteIs(STATE_WORDS[judged].name), asSentence(reason), WORDS.mapAlone(reading.sentence)].filter(Boolean) : [reading.sentence];
     const state = worse ? judged : reading.state;
     const why = this.#why({ ...reading, state }, worse ? "" : reason, day, view);
     answer.replaceChildren(
