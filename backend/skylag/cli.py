@@ -290,12 +290,13 @@ def _demo(options: argparse.Namespace) -> int:
         todo = todo[1:]
     if todo:
         threading.Thread(target=compute, args=(todo,), daemon=True).start()
+    workers = options.workers or settings.default_workers()  # for files that are sent from the page
     try:
-        return _open_page(options.archive, "127.0.0.1", options.port, browser=not options.no_browser)
+        return _open_page(options.archive, "127.0.0.1", options.port, browser=not options.no_browser, workers=workers)
     except Refused:
         if options.port:
             raise
-        return _open_page(options.archive, "127.0.0.1", "0", browser=not options.no_browser)
+        return _open_page(options.archive, "127.0.0.1", "0", browser=not options.no_browser, workers=workers)
 
 
 def _is_date(name: str) -> bool:
