@@ -1,5 +1,6 @@
 """Outlooks in the database: kept when made and never changed, with what became of them.  Never makes or scores one."""
 
+import contextlib
 import hashlib
 import io
 from collections.abc import Callable, Mapping
@@ -59,7 +60,7 @@ class Outlooks:
             found = connection.scalar(sa.select(table.c.id).where(ours))
             if found is not None:
                 return int(found)
-            connection.execute(sa.insert(table).values(**values))
+            _insert_once(connection, sa.insert(table).values(**values))
             return int(connection.scalar(sa.select(table.c.id).where(ours)) or 0)
 
         return int(self._write(insert))
@@ -91,7 +92,7 @@ class Outlooks:
             ours = (table.c.outlook == number) & (table.c.days == days)
             if connection.scalar(sa.select(table.c.outlook).where(ours)) is None:
                 values = {"outlook": number, "days": days, "facts": records.to_text(facts)}
-                connection.execute(sa.insert(table).values(**values))
+                _insert_once(connection, sa.insert(table).values(**values))
 
         self._write(insert)
 
@@ -122,7 +123,8 @@ class Outlooks:
             table = schema.day_digest
             ours = sa.and_(*(table.c[name] == value for name, value in key.items()))
             if connection.scalar(sa.select(table.c.day).where(ours)) is None:
-                connection.execute(sa.insert(table).values(**key, data=data, sha256=_digest(_label(key), data)))
+                row = sa.insert(table).values(**key, data=data, sha256=_digest(_label(key), data))
+                _insert_once(connection, row)
 
         self._write(insert)
 
@@ -136,6 +138,12 @@ class Outlooks:
         if row is None or _digest(_label(key), row.data) != row.sha256:
             return None
         return _arrays_of(row.data)
+
+
+def _insert_once(connection: Connection, statement: Any) -> None:
+    """Insert, unless another process has put the same row there in this very moment."""
+    with contextlib.suppress(sa.exc.IntegrityError), connection.begin_nested():
+        connection.execute(statement)
 
 
 def _label(key: Mapping[str, Any]) -> str:
