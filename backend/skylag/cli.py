@@ -328,7 +328,7 @@ def _open_page(
     with open_archive(place) as archive:
         app = create_app(archive, clock=work_door.clock, access=for_host(host, reading))
         stop = threading.Event()
-        helper = threading.Thread(target=Worker(archive, workers, work_door.clock).run, args=(stop,))
+        helper = threading.Thread(target=Worker(archive, workers, work_door.clock).run, args=(stop,), daemon=True)
 
         def ready(address: str) -> None:
             print(f"the page is at {address} (stop with Ctrl-C). {CAUTION}", flush=True)
@@ -342,7 +342,7 @@ def _open_page(
         finally:
             stop.set()
             if helper.is_alive():
-                helper.join()
+                helper.join(10)  # what is cut off is taken up again at the next start
     return 0
 
 
