@@ -117,6 +117,7 @@ def receiver_day(
         "interval_s": observations.interval_s,
         "satellites": int(seen.sum()),
         "pairs": {system: pair.name for system, pair in observations.pairs.items()},
+        "glonass_channels": dict(signals.channels),
         "rays": len(rays),
         "arcs": len(arcs.arc_satellite),
         "arcs_began": reasons(arcs),

@@ -42,7 +42,8 @@ def said(code: int, slope: float, slope_sigma: float, delay: float, sigma: float
          "Unseen here: the vertical delay is known to 2.0 m only, and 1.5 m is needed to say more. "
          "Treat it as not covered."),
         (UNSEEN, (NAN, NAN, 1.5, 1.0, 1),
-         "Unseen here: one line of sight is too few to tell the slope. Treat it as not covered."),
+         "Unseen here: what one line of sight tells of the slope is too little to say that corrections hold. "
+         "Treat it as not covered."),
         (UNSEEN, (NAN, NAN, NAN, NAN, 0),
          "Unseen here: no line of sight passes near enough to say anything. Treat it as not covered."),
     ],

@@ -40,7 +40,7 @@ def dataset(fields: Fields, region: Region, *, simulated: bool = False) -> xr.Da
                 fields.vtec, "1e16 m-2", "vertical total electron content",
             ),
             "support": layer(fields.support, "1", "lines of sight that carry the cell"),
-            "slope": layer(fields.slope, "mm km-1", "horizontal slope of vertical_delay"),
+            "slope": layer(fields.slope, "mm km-1", "slope of vertical_delay over 40 km of ground"),
             "slope_sigma": layer(fields.slope_sigma, "mm km-1", "standard error of slope"),
             "state": layer(
                 fields.state, "1", "do corrections hold here",

@@ -72,6 +72,9 @@ class JudgeChoices:
     most_unconfirmed: int = 12
 
 
+_ONE_SIDED_95 = 1.645  # quantile of the normal distribution
+
+
 @dataclass(frozen=True)
 class Judged:
     """The maps with their states, states (T, sites) with a reason per site and time ("" where it holds), and flags."""
@@ -128,15 +131,31 @@ def judge(
 
 
 def field_states(fields: Fields, limits: Thresholds, choices: JudgeChoices | None = None) -> Bytes:
-    """States by the map alone (T, lat, lon): unseen without content, support, or with too wide a sigma."""
+    """States by the map alone (T, lat, lon): unseen without content, support, or with too wide a sigma.
+
+    That corrections hold is a claim too: it is made only where the slope stays under the limit with 95 % confidence.
+    Where a slope beyond the limit is neither seen nor excluded, the cell is unseen.
+    """
     choices = choices or JudgeChoices()
     state = state_of_slope(fields.slope, fields.slope_sigma, limits, choices.sigmas)
-    with np.errstate(invalid="ignore"):
-        seen = np.isfinite(fields.vtec) & (fields.support > 0)
-        seen &= fields.vtec_sigma * L1_M_PER_TECU <= limits.unseen_sigma_m
     # Content known but not its slope: nothing can be said of corrections there.
-    state[~seen] = UNSEEN
+    state[~content_known(fields, limits)] = UNSEEN
+    state[(state == HOLDS) & ~stays_under(fields.slope, fields.slope_sigma, limits.strained_mm_per_km)] = UNSEEN
     return state
+
+
+def content_known(fields: Fields, limits: Thresholds) -> Bools:
+    """Where the content is seen, and known well enough to say anything (T, lat, lon)."""
+    with np.errstate(invalid="ignore"):
+        near: Bools = fields.vtec_sigma * L1_M_PER_TECU <= limits.unseen_sigma_m
+    near &= np.isfinite(fields.vtec) & (fields.support > 0)
+    return near
+
+
+def stays_under(value: npt.ArrayLike, sigma: npt.ArrayLike, limit: float) -> Bools:
+    """Where a value is below a limit with 95 % confidence; False where it is not known."""
+    with np.errstate(invalid="ignore"):
+        return np.asarray(np.asarray(value) + _ONE_SIDED_95 * np.asarray(sigma) <= limit)
 
 
 # ---------------------------------------------------------------------------------------------- what reaches a place
@@ -331,7 +350,7 @@ def _field_sentence(
         sigma_m = float(fields.vtec_sigma[place]) * L1_M_PER_TECU
         if np.isfinite(sigma_m) and sigma_m > limits.unseen_sigma_m:
             return f"vertical delay known to {sigma_m:.1f} m only, {limits.unseen_sigma_m:.1f} m is needed"
-        return "too few lines of sight to tell the slope"
+        return f"slope known to ± {float(fields.slope_sigma[place]):.0f} mm/km only: nothing can be said"
     limit = limits.broken_mm_per_km if state == BROKEN else limits.strained_mm_per_km
     return (
         f"the map slopes by {float(fields.slope[place]):.0f} ± {float(fields.slope_sigma[place]):.0f} mm/km, "

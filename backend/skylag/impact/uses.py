@@ -25,7 +25,7 @@ import numpy as np
 
 from skylag.constants import L1_M_PER_TECU
 from skylag.errors import Refused
-from skylag.impact.states import JudgeChoices, field_states, nearest_cells
+from skylag.impact.states import JudgeChoices, content_known, field_states, nearest_cells, stays_under
 from skylag.ionosphere.background import ERROR_SHARE, Background
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.geometry import mapping
@@ -145,11 +145,12 @@ def judge_for(
     choices = choices or JudgeChoices()
     strained, broken, unit = limits_of(use, region.shell_height_km * 1000.0)
     measure, sigma = _measured(use, fields, model)
-    seen = _seen(use, fields, region)
+    seen = content_known(fields, region.thresholds) & np.isfinite(measure)
     with np.errstate(invalid="ignore"):
         sure = measure - choices.sigmas * sigma
         state = np.where(sure > broken, BROKEN, np.where(sure > strained, STRAINED, HOLDS)).astype(np.uint8)
     state[~seen | ~np.isfinite(sure)] = UNSEEN
+    state[(state == HOLDS) & ~stays_under(measure, sigma, strained)] = UNSEEN
     owner = owners(fields, flags, region, choices)
     given = _given(use, fields, flags, owner, (strained, broken), choices)
     flag_of = np.where(given > state, owner, -1)
@@ -178,15 +179,6 @@ def _measured(use: Use, fields: Fields, model: Background | None) -> tuple[Float
     lon, lat = np.meshgrid(fields.lons, fields.lats)
     told = [model.vertical(lat, lon, time) * L1_M_PER_TECU for time in fields.times]
     return np.abs(delay - np.array(told).reshape(delay.shape)), sigma
-
-
-def _seen(use: Use, fields: Fields, region: Region) -> Bools:
-    if use.kind in ("differential", "ground"):
-        return np.asarray(field_states(fields, region.thresholds) != UNSEEN)
-    with np.errstate(invalid="ignore"):
-        near: Bools = fields.vtec_sigma * L1_M_PER_TECU <= region.thresholds.unseen_sigma_m
-    near &= np.isfinite(fields.vtec) & (fields.support > 0)
-    return near
 
 
 def off_plane(delay_m: Floats, sigma_m: Floats, seen: Bools, lats: Floats, lons: Floats) -> Floats:

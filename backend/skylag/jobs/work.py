@@ -360,6 +360,8 @@ def network_day(
     receivers = tuple(item.receiver for item in usable)
     place = region or chain.region_around(receivers)
     channels = chain.channels_of(sources)
+    for item in usable:  # the receiver's own header knows best, as in choosing its signals
+        channels.update(item.facts.get("glonass_channels", {}))
 
     def stage(name: str, share: float) -> None:
         if share == 0.0:

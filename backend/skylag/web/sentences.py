@@ -62,8 +62,8 @@ def _unseen(delay_m: float, delay_sigma_m: float, support: int, limits: Threshol
             f"Unseen here: the vertical delay is known to {delay_sigma_m:.1f} m only, "
             f"and {limits.unseen_sigma_m:.1f} m is needed to say more. {_NOT_COVERED}"
         )
-    lines = "one line of sight is" if support == 1 else f"{support} lines of sight are"
-    return f"Unseen here: {lines} too few to tell the slope. {_NOT_COVERED}"
+    lines = "one line of sight tells" if support == 1 else f"{support} lines of sight tell"
+    return f"Unseen here: what {lines} of the slope is too little to say that corrections hold. {_NOT_COVERED}"
 
 
 def _witness(code: int, near: Sequence[NearFlag]) -> str:
