@@ -51,7 +51,13 @@ def test_a_wrong_method(client: TestClient, address: str) -> None:
     check_shape(client.post(re.sub(r"\{\w+\}", "x", address)), 405, "Refused")
 
 
-@pytest.mark.parametrize("address", [a for a in ADDRESSES if "{region}" in a and "/pins/" not in a])
+@pytest.mark.parametrize("address", [a for a in ADDRESSES if "{region}" in a and "{day}" not in a])
+def test_an_unknown_region(client: TestClient, address: str) -> None:
+    there = address.replace("{region}", "nowhere")
+    assert REGION.name in check_shape(client.get(there, params=GOOD), 404, "Missing")["error"]
+
+
+@pytest.mark.parametrize("address", [a for a in ADDRESSES if "{day}" in a and "/pins/" not in a])
 def test_an_unknown_region_and_a_wrong_day(client: TestClient, address: str) -> None:
     there = address.replace("{region}", "nowhere").replace("{day}", "2031-05-11")
     assert REGION.name in check_shape(client.get(there, params=GOOD), 404, "Missing")["error"]

@@ -8,7 +8,7 @@ from fastapi import APIRouter, Request
 from fastapi.responses import Response
 
 from skylag.archive import Archive
-from skylag.errors import Refused
+from skylag.errors import Missing, Refused
 from skylag.impact import outlook_advice, uses
 from skylag.ionosphere import outlook as science
 from skylag.jobs import hindcast
@@ -39,6 +39,17 @@ def _place(made: Outlook, lat: float, lon: float) -> tuple[int, float]:
     return int(np.argmin(away)), float(away.min())
 
 
+def _known(archive: Archive, region: str) -> str:
+    """The region, where the archive has days of it; Missing elsewhere."""
+    there = archive.regions()
+    if region not in there:
+        raise Missing(
+            f"region {region}: the archive has no day of it; it has {', '.join(there) or 'none yet'}",
+            what=region, nearest=list(there),
+        )  # fmt: skip
+    return region
+
+
 @router.get("/api/outlook/{region}", summary="The day ahead at a place")
 def at_place(
     request: Request, region: str, lat: float, lon: float, use: str = "", expected_ap: str = "", most: float = 0.1
@@ -51,7 +62,7 @@ def at_place(
     """
     archive: Archive = request.app.state.archive
     lat, lon = asking.place(lat, lon)
-    kept = hindcast.newest(archive, region, expected_ap=_entered(expected_ap), keep=False)
+    kept = hindcast.newest(archive, _known(archive, region), expected_ap=_entered(expected_ap), keep=False)
     made = kept.outlook
     record = archive.day(region, made.known_until)
     wanted = uses.find_use(record.region, use) if use else uses.uses_of(record.region)[0]
@@ -75,4 +86,5 @@ def at_place(
 def track_record(request: Request, region: str) -> Response:
     """Scores of the kept outlooks whose days came, beside persistence, recurrence, climatology, the usual."""
     archive: Archive = request.app.state.archive
-    return payloads.reply(payloads.outlook_record(region, hindcast.summary(hindcast.track_record(archive, region))))
+    scores = hindcast.summary(hindcast.track_record(archive, _known(archive, region)))
+    return payloads.reply(payloads.outlook_record(region, scores))
