@@ -25,11 +25,8 @@ from skylag.ionosphere.pairs import USABLE_PAIRS, parse_wanted
 from skylag.jobs import work
 from skylag.jobs.executor import open_executor
 from skylag.tables import STATE_NAMES, Indices, Products
+from skylag.web.sentences import CAUTION
 
-CAUTION = (
-    "Planning aid, not for navigation. Official notices, the service provider's and the receiver maker's information, "
-    "local rules and licensed practice come first."
-)
 _FIRST_DAY = "2031-03-12"  # of the sample days: the storm has the most to see
 _STAGES = {
     "look": (0.00, "looking at the files"),

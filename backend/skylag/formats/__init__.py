@@ -17,7 +17,7 @@ from skylag.formats.joining import merge, thin
 from skylag.formats.wrappers import is_hatanaka, unwrap
 from skylag.tables import Reading
 
-__all__ = ["fingerprint", "kind_of", "merge", "read", "read_bytes", "thin"]
+__all__ = ["fingerprint", "kind_of", "mark_of", "merge", "read", "read_bytes", "thin"]
 
 # What a file can be, and which module parses it: each has parse(data, name) -> Reading.
 PARSERS = {
@@ -107,8 +107,12 @@ def kind_of(data: bytes) -> str:
 
 def fingerprint(path: str | Path) -> dict[str, Any]:
     """Which file it was: name, sha256 of its bytes as they lie on disk, and how many there are."""
-    packed = _bytes_of(Path(path))
-    return {"name": Path(path).name, "sha256": hashlib.sha256(packed).hexdigest(), "bytes": len(packed)}
+    return mark_of(_bytes_of(Path(path)), Path(path).name)
+
+
+def mark_of(packed: bytes, name: str) -> dict[str, Any]:
+    """The same of bytes already read: name, sha256, and how many there are."""
+    return {"name": name, "sha256": hashlib.sha256(packed).hexdigest(), "bytes": len(packed)}
 
 
 def _bytes_of(path: Path) -> bytes:

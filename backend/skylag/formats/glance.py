@@ -5,7 +5,6 @@ Lets a folder of hundreds of files be sorted without decoding them.  Never reads
 
 import bz2
 import contextlib
-import hashlib
 import io
 import zipfile
 import zlib
@@ -16,7 +15,7 @@ import ncompress
 import numpy as np
 
 from skylag.errors import FormatError
-from skylag.formats import kind_of
+from skylag.formats import kind_of, mark_of
 
 _PEEK = 65_536
 _DEEPEST = 4
@@ -45,7 +44,7 @@ def glance(path: Path) -> Glance:
             f"{path}: cannot be opened: {error.strerror or error}; check that it is there and may be read",
             path=str(path), line=0,
         ) from error  # fmt: skip
-    mark = {"name": path.name, "sha256": hashlib.sha256(packed).hexdigest(), "bytes": len(packed)}
+    mark = mark_of(packed, path.name)
     if not packed.strip():
         return Glance("empty", mark, None)
     try:
