@@ -70,9 +70,9 @@ def _chromium() -> str | None:
     )
 
 
-@pytest.fixture(scope="session")
+@pytest.fixture(scope="module")
 def browser() -> Iterator[Any]:
-    """One headless Chromium for all tests."""
+    """One headless Chromium for the tests of a file.  Its event loop ends with it: the tests that follow run their own."""
     from playwright.sync_api import sync_playwright
 
     with sync_playwright() as playwright:
