@@ -43,7 +43,7 @@ _STAGES = {
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """Run one command; returns the exit status."""
-    parser = _parser()
+    parser = command_parser()
     options = parser.parse_args(arguments)
     if not hasattr(options, "run"):
         parser.print_help()
@@ -62,7 +62,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return 3
 
 
-def _parser() -> argparse.ArgumentParser:
+def command_parser() -> argparse.ArgumentParser:
+    """The whole command line."""
     parser = argparse.ArgumentParser(
         prog="skylag",
         description="What the ionosphere does to satellite positioning in a region: from the RINEX files of a network "

@@ -98,3 +98,10 @@ def test_the_glossary_is_fresh() -> None:
 
     text = glossary.DEVELOPERS.read_text(encoding="utf-8")
     assert glossary.with_table(text) == text, "run python -m tests.shape.glossary"
+
+
+def test_the_references_are_fresh() -> None:
+    from tests.shape import references
+
+    for path, made in ((references.COMMANDS, references.commands()), (references.ROUTES, references.routes())):
+        assert path.read_text(encoding="utf-8") == made, f"{path.name}: run python -m tests.shape.references"
