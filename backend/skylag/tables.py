@@ -550,6 +550,7 @@ class Flag:
     confirmed: bool = True
     # A front is drawn as a line: (time, lat, lon) of its nearest point to the region's middle, every few minutes.
     track: tuple[tuple[np.datetime64, float, float], ...] = ()
+    speed_sigma_m_s: float = float("nan")  # of the speed, where it is known
 
     def __post_init__(self) -> None:
         _require(self.kind in FLAG_KINDS, self, f"kind must be one of {FLAG_KINDS}")

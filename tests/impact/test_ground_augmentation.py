@@ -1,7 +1,11 @@
 """Ground-based augmentation: published bounds and worked errors, minutes exceeded, fronts on their way."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from tests.conftest import Evidence
 from tests.impact.test_survey import DAY, TIMES, some_fields
 
@@ -9,7 +13,7 @@ from skylag.errors import Refused
 from skylag.impact import ground_augmentation as ground
 from skylag.impact.ground_augmentation import StationChoices
 from skylag.ionosphere.geometry import mapping
-from skylag.tables import UNSEEN, Flag, Site
+from skylag.tables import BROKEN, HOLDS, STRAINED, UNSEEN, Flag, Site
 
 SITE = Site("Here", -40.0, 146.0, "aerodrome")
 
@@ -47,7 +51,8 @@ def test_minutes_beyond_each_limit() -> None:
         fields.slope[first : first + 3] = slope
     fields.state[100:112] = UNSEEN
     found = ground.station_day(SITE, fields)
-    assert found.minutes == {"nominal": 45.0, "announced": 30.0, "threat": 15.0, "unseen": 60.0}
+    exceeded = {"nominal": 45.0, "announced": 30.0, "threat": 15.0, "unseen": 60.0}
+    assert found.minutes == {"within": 1440.0 - 45.0 - 60.0, **exceeded}
     assert {one.what for one in found.exceeded} == {"nominal", "announced", "threat", "unseen"}
     first = next(one for one in found.exceeded if one.what == "nominal")
     assert (first.start, first.end) == (TIMES[10], TIMES[13])
@@ -55,11 +60,34 @@ def test_minutes_beyond_each_limit() -> None:
     assert np.isnan(found.error_95_m[100:112]).all()
 
 
-def test_a_slope_counts_beyond_its_sigma_only() -> None:
-    fields = some_fields(14.0, 2.0)
-    assert ground.station_day(SITE, fields).minutes["nominal"] == 0.0
-    fields.slope_sigma[:] = 0.5
-    assert ground.station_day(SITE, fields).minutes["nominal"] == 1440.0
+@pytest.mark.parametrize(
+    ("slope", "sigma", "state", "what"),
+    [
+        (14.0, 2.0, UNSEEN, "unseen"), (14.0, 0.5, STRAINED, "nominal"), (12.0, 0.5, HOLDS, "within"),
+        (12.0, 0.8, UNSEEN, "unseen"),  # 12 + 1.645 x 0.8 is beyond 3.29 x 4 = 13.16
+        (1.0, 20.0, UNSEEN, "unseen"), (30.0, 1.0, BROKEN, "announced"),
+    ],
+)  # fmt: skip
+def test_within_is_only_said_where_the_slope_excludes_worse(slope: float, sigma: float, state: int, what: str) -> None:
+    found = ground.station_day(SITE, some_fields(slope, sigma))
+    assert set(found.state.tolist()) == {state}
+    assert found.minutes[what] == 1440.0
+    assert found.minutes["within"] == (1440.0 if what == "within" else 0.0)
+    assert found.minutes["unseen"] == (1440.0 if what == "unseen" else 0.0)
+    if what == "unseen":
+        assert f"known to ± {sigma:.0f} mm/km only" in found.exceeded[0].why
+
+
+@settings(max_examples=50, deadline=None)
+@given(st.floats(0, 60), st.floats(0.01, 30), st.floats(0, 10))
+def test_more_doubt_never_makes_a_slope_nominal(slope: float, sigma: float, more: float) -> None:
+    """Nor does a smaller announced spread; and every minute has exactly one state."""
+    one = ground.station_day(SITE, some_fields(slope, sigma))
+    two = ground.station_day(SITE, some_fields(slope, sigma + more))
+    less = ground.station_day(SITE, some_fields(slope, sigma), (), StationChoices(sigma_mm_per_km=2.0))
+    for other in (two, less):
+        assert not ((other.state == HOLDS) & (one.state != HOLDS)).any()
+    assert one.minutes["within"] + one.minutes["unseen"] + one.minutes["nominal"] >= 1440.0
 
 
 def test_a_smaller_spread_never_shortens() -> None:
@@ -91,6 +119,10 @@ def test_when_the_next_front_comes() -> None:
     assert abs(found.expected - (DAY + np.timedelta64(385, "m"))) < np.timedelta64(10, "s")
     assert found.sigma_s == pytest.approx(0.3 * 1200, rel=0.01)
     assert "in 20 ± 6 minutes" in found.words
+    # A front that tells the sigma of its own speed: 20 minutes times 25 over 200.
+    known = ground.next_front(SITE, [replace(a_front(), speed_sigma_m_s=25.0)], now)
+    assert known is not None
+    assert known.sigma_s == pytest.approx(1200 * 25 / 200, rel=0.01)
 
 
 @pytest.mark.parametrize("minute", [300, 400, 600])
@@ -114,7 +146,8 @@ def test_a_front_over_the_site_counts_with_its_own_slope() -> None:
 
 def test_off_the_map_all_is_unseen() -> None:
     found = ground.station_day(Site("Far", 10.0, 10.0), some_fields())
-    assert found.minutes == {"nominal": 0.0, "announced": 0.0, "threat": 0.0, "unseen": 1440.0}
+    assert found.minutes == {"within": 0.0, "nominal": 0.0, "announced": 0.0, "threat": 0.0, "unseen": 1440.0}
+    assert not found.state.any()
 
 
 def test_choices_are_bounded_and_printed() -> None:

@@ -6,7 +6,7 @@ for navigation: an approved station has its own monitors and its own threat spac
 """
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -16,7 +16,7 @@ from skylag.impact.satellite_augmentation import CAUTION, spans
 from skylag.impact.states import nearest_cells
 from skylag.ionosphere.covariance import plane_km
 from skylag.ionosphere.geometry import mapping
-from skylag.tables import UNSEEN, Bools, Fields, Flag, Floats, Site, Times
+from skylag.tables import BROKEN, HOLDS, STRAINED, UNSEEN, Bools, Bytes, Fields, Flag, Floats, Site, Times
 
 ANNOUNCED_MOST = 25.5  # mm/km: 255 times 0.1; ICAO Annex 10, Appendix B to chapter 3
 # A spread of 4 mm/km bounds nominal slopes over CONUS: Mayer et al. 2009, ION GNSS, 1091-1099.
@@ -25,8 +25,9 @@ QUANTILE = 3.29  # 99.9 %: a slope beyond so many spreads is not nominal (our ch
 # Slant slopes [mm/km on 1575.42 MHz] up to which fronts are foreseen: 375 at 15 degrees of elevation to 425 at 65
 # (Datta-Barua et al. 2010, 425 opened; the line between from memory).
 _THREAT_LOW, _THREAT_HIGH = (15.0, 375.0), (65.0, 425.0)
-# Speeds of fronts from few stations carry about 30 % (Radio Science 48, 2013): the spread of an arrival by a flag.
+# Speeds of fronts from few stations carry about 30 % (Radio Science 48, 2013): for flags that tell no sigma of theirs.
 SPEED_DOUBT = 0.3
+_ONE_SIDED_95 = 1.645  # of a normal error: what holds is said with this confidence, as for the states of a map
 
 
 def threat_mm_per_km(elevation: npt.ArrayLike) -> Floats:
@@ -108,7 +109,9 @@ class StationDay:
     """An aerodrome's day, (T,) at the epochs of the maps.
 
     slope, slope_sigma [mm/km, vertical]; seen; error_95_m: 95 % differential delay of an aircraft at the lowest
-    elevation; minutes: per kind of `Exceeded.what`, how many minutes of the day
+    elevation; state: holds where the slope stays within what is nominal with 95 % confidence, strained beyond it by one
+    sigma, broken beyond what can be announced, unseen where neither can be said; minutes: per kind of `Exceeded.what`,
+    and "within", how many minutes of the day
     """
 
     site: Site
@@ -117,6 +120,7 @@ class StationDay:
     slope_sigma: Floats
     seen: Bools
     error_95_m: Floats
+    state: Bytes
     exceeded: tuple[Exceeded, ...]
     minutes: dict[str, float]
     assumptions: tuple[str, ...]
@@ -148,19 +152,25 @@ def station_day(
     slope, sigma = np.where(seen, slope, np.nan), np.where(seen, sigma, np.nan)
     factor = float(mapping(choices.lowest_deg, shell_height_m))
     way_km = choices.distance_km + 2.0 * choices.smoothing_s * choices.speed_m_s / 1000.0
-    error = factor * (slope + 1.645 * sigma) * 1e-3 * way_km
+    most = slope + _ONE_SIDED_95 * sigma
+    error = factor * most * 1e-3 * way_km
     sure = slope - sigma
+    nominal = QUANTILE * choices.sigma_mm_per_km
     with np.errstate(invalid="ignore"):
+        within = most <= min(nominal, ANNOUNCED_MOST)
         marks = {
-            "nominal": sure > QUANTILE * choices.sigma_mm_per_km,
+            "nominal": sure > nominal,
             "announced": sure > ANNOUNCED_MOST,
             "threat": factor * sure > float(threat_mm_per_km(choices.lowest_deg)),
-            "unseen": ~seen,
         }
+        marks["unseen"] = ~(within | marks["nominal"] | marks["announced"])  # neither can be said
+    state = np.full(len(slope), UNSEEN, dtype=np.uint8)
+    for mark, code in ((within, HOLDS), (marks["nominal"], STRAINED), (marks["announced"], BROKEN)):
+        state[mark] = code
     return StationDay(
-        site, fields.times, slope, sigma, seen, error,
+        site, fields.times, slope, sigma, seen, error, state,
         tuple(_exceeded(site, fields.times, slope, sigma, marks, choices, step_s)),
-        {name: float(mark.sum()) * step_s / 60.0 for name, mark in marks.items()},
+        {name: float(mark.sum()) * step_s / 60.0 for name, mark in {"within": within, **marks}.items()},
         _assumptions(choices, factor, shell_height_m),
     )  # fmt: skip
 
@@ -194,14 +204,12 @@ def next_front(site: Site, flags: Sequence[Flag], now: np.datetime64, horizon_s:
         if not flag.speed_m_s >= 5.0 or now > flag.end + np.timedelta64(1, "h"):
             continue
         known = tuple(point for point in flag.track if point[0] <= now) or flag.track[:1]
-        away = ahead_of(
-            Flag(**{**{name: getattr(flag, name) for name in flag.__dataclass_fields__}, "track": known}),
-            site.lat, site.lon, now,
-        )  # fmt: skip
+        away = ahead_of(replace(flag, track=known), site.lat, site.lon, now)
         wait_s = away / flag.speed_m_s * 1000.0
         if not 0 < wait_s <= horizon_s:
             continue
-        sigma_s = SPEED_DOUBT * wait_s
+        known_speed = np.isfinite(flag.speed_sigma_m_s)
+        sigma_s = (flag.speed_sigma_m_s / flag.speed_m_s if known_speed else SPEED_DOUBT) * wait_s
         expected = now + np.timedelta64(round(wait_s * 1e9), "ns")
         found.append(
             NextFront(
@@ -228,6 +236,12 @@ def _exceeded(
     for what, mark in marks.items():
         for first, last in spans(mark):
             why = "the maps do not see the aerodrome: nothing can be said"
+            run = sigma[first:last]
+            if what == "unseen" and np.isfinite(run).any():
+                why = (
+                    f"the slope is known to ± {np.nanmax(run):.0f} mm/km only: that it is within {limit['nominal']} "
+                    "cannot be said"
+                )
             if what != "unseen":
                 worst = first + int(np.nanargmax(slope[first:last]))
                 why = f"vertical slope up to {slope[worst]:.0f} ± {sigma[worst]:.0f} mm/km is beyond {limit[what]}"
@@ -244,6 +258,7 @@ def _assumptions(choices: StationChoices, factor: float, shell_height_m: float) 
         f"the vertical (thin shell at {shell_height_m / 1000:g} km).",
         "Threat space: that published for CONUS, 375 mm/km at 15 degrees to 425 mm/km at 65 degrees and above; "
         "the region's own may differ.",
-        "A slope counts where it is beyond a limit by one sigma. Maps smear out walls narrower than their cells; "
-        "fronts that were confirmed count with their own slope.",
+        "A slope counts where it is beyond a limit by one sigma; it is within where 95 % of its chances are, and "
+        "between the two nothing is said. Maps smear out walls narrower than their cells; fronts that were confirmed "
+        "count with their own slope.",
     )

@@ -397,7 +397,7 @@ def _front_flag(front: Front, limits: Thresholds, number: int, arrivals: Sequenc
         start=front.start, end=front.end, lat=float(middle[1]), lon=float(middle[2]), kind="front",
         slope_mm_per_km=front.slope, sigma_mm_per_km=front.slope_sigma, speed_m_s=front.speed_m_s,
         heading_deg=front.heading_deg, state=STATE_NAMES[max(HOLDS, _front_state(front, limits))], evidence=text,
-        confirmed=front.confirmed, track=front.track,
+        confirmed=front.confirmed, track=front.track, speed_sigma_m_s=front.speed_sigma_m_s,
     )  # fmt: skip
 
 
@@ -406,6 +406,7 @@ def _patch_flag(patch: Patch, limits: Thresholds) -> Flag:
         start=patch.start, end=patch.end, lat=patch.lat, lon=patch.lon, kind="irregular", slope_mm_per_km=NOTHING,
         sigma_mm_per_km=NOTHING, speed_m_s=patch.drift_m_s, heading_deg=patch.drift_heading_deg,
         state=STATE_NAMES[_patch_state(patch, limits)], evidence=patch_sentence(patch), confirmed=patch.confirmed,
+        speed_sigma_m_s=patch.drift_sigma_m_s,
     )  # fmt: skip
 
 

@@ -160,9 +160,9 @@ def station_verdict(found: StationDay) -> str:
     """An aerodrome's ground-based augmentation in a sentence."""
     minutes = found.minutes
     return (
-        f"Ground-based augmentation: slope beyond nominal for {minutes['nominal']:.0f} min, beyond what can be "
-        f"announced for {minutes['announced']:.0f} min, beyond the threat space for "
-        f"{minutes['threat']:.0f} min, not seen for {minutes['unseen']:.0f} min."
+        f"Ground-based augmentation: slope within nominal for {_hours(minutes['within'])}, beyond nominal for "
+        f"{_hours(minutes['nominal'])}, beyond what can be announced for {_hours(minutes['announced'])}, beyond the "
+        f"threat space for {_hours(minutes['threat'])}, not known for {_hours(minutes['unseen'])}."
     )
 
 
