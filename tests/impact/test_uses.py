@@ -17,25 +17,66 @@ from skylag.formats import events as event_files
 from skylag.impact import events, states, uses
 from skylag.ionosphere import fronts, irregularity, slopes
 from skylag.ionosphere.background import Background
-from skylag.tables import BROKEN, HOLDS, STRAINED, UNSEEN, Use
+from skylag.tables import BROKEN, HOLDS, STATE_NAMES, STRAINED, UNSEEN, Use
 
 DIFFERENTIAL, GROUND, SATELLITE, SINGLE = uses.PUBLISHED
 
 
-def test_limits_are_the_published_ones(evidence):
-    cycle_mm = 299_792_458.0 / 1575.42e6 * 1000.0
-    evidence("differential: half a cycle over 10 km", source="half a wavelength of 1575.42 MHz (IS-GPS-200)",
-             expected=cycle_mm / 2 / 10, got=uses.limits_of(DIFFERENTIAL)[1], tolerance=0.01, unit="mm/km")  # fmt: skip
-    evidence("ground: nominal slopes bounded by", source="Mayer et al. 2009, ION GNSS, 1091-1099", expected=4.0,
-             got=uses.limits_of(GROUND)[0], tolerance=0, unit="mm/km")  # fmt: skip
-    evidence("ground: largest slope sigma that can be sent", source="ICAO Annex 10 App. B: 8 bits of 0.1 mm/km",
-             expected=25.5, got=uses.limits_of(GROUND)[1], tolerance=0, unit="mm/km")  # fmt: skip
-    evidence("satellite: 3.29 spreads of 0.35 m", source="Walter et al. 2000 (from memory); 99.9 % of a normal",
-             expected=1.1515, got=uses.limits_of(SATELLITE)[1], tolerance=1e-9, unit="m")  # fmt: skip
-    for number, expected in ((0, 4.5), (1, 9.0)):
-        evidence(f"single: sigma of the broadcast model, {('middle', 'low')[number]} latitudes",
-                 source="RTCA DO-229, J.2.3 (from memory)", expected=expected, got=uses.limits_of(SINGLE)[number],
-                 tolerance=0, unit="m")  # fmt: skip
+def first_with(state, judged_at, low, high):
+    """The smallest value, between two, from which a judged thing has a state: what is done, not what is said."""
+    assert judged_at(low) < state <= judged_at(high)
+    for _ in range(45):
+        middle = 0.5 * (low + high)
+        low, high = (low, middle) if judged_at(middle) >= state else (middle, high)
+    return high
+
+
+def by_slope(use):
+    """The state of a site whose map slopes by so many mm/km, known exactly."""
+    return lambda slope: int(uses.judge_for(use, flat_fields(hours=0.25, slope=slope, sigma=0.0), (), REGION)
+                             .site_states[0, 0])  # fmt: skip
+
+
+def by_content(use, shape):
+    """The state at the middle cell of a map whose vertical delay is so many metres times a shape, known exactly."""
+
+    def state(metres):
+        fields = flat_fields(hours=0.25, vtec_sigma=0.0)
+        fields.vtec[:] = metres / L1_M_PER_TECU * shape
+        return int(uses.judge_for(use, fields, (), REGION).states[0, 7, 9])
+
+    return state
+
+
+def test_states_begin_at_published_limits(evidence):
+    """Each limit found by trying what makes a site or cell strained or broken."""
+    evidence("differential over 10 km breaks from", source="half a cycle of 1575.42 MHz, 95.1 mm, over 10 km: 9.51 ppm "
+             "(references 9)", expected=9.51, got=first_with(BROKEN, by_slope(DIFFERENTIAL), 1.0, 40.0),
+             tolerance=0.006, unit="mm/km")  # fmt: skip
+    evidence("ground-based is strained from", source="nominal slopes are bounded by 4 mm/km: Mayer et al. 2009, ION "
+             "GNSS, 1091-1099", expected=4.0, got=first_with(STRAINED, by_slope(GROUND), 1.0, 20.0), tolerance=1e-5,
+             unit="mm/km")  # fmt: skip
+    evidence("ground-based breaks from", source="largest slope sigma that can be sent, 2.55e-5 m/m: ICAO Annex 10 "
+             "App. B", expected=2.55e-5 * 1e6, got=first_with(BROKEN, by_slope(GROUND), 5.0, 60.0), tolerance=1e-5,
+             unit="mm/km")  # fmt: skip
+    for state, expected in ((STRAINED, 4.5), (BROKEN, 9.0)):
+        half_removed = first_with(state, by_content(SINGLE, 2.0), 0.5, 20.0)  # half of the delay is left by the model
+        evidence(f"single frequency is {STATE_NAMES[state]} from, of delay left", expected=expected, got=half_removed,
+                 source=f"vertical sigma of receivers at {('middle', 'low')[state == BROKEN]} latitudes: RTCA DO-229, "
+                 "J.2.3 (from memory)", tolerance=1e-5, unit="m")  # fmt: skip
+    lon, lat = np.meshgrid(LONS, LATS)
+    spike = (np.abs(lat - LATS[7]) < 0.1) & (np.abs(lon - LONS[9]) < 0.1)
+    off = {}
+    for state, source, expected in (
+        (STRAINED, "two nominal spreads of 0.35 m about a plane: Walter et al. 2000 (from memory)", 0.70),
+        (BROKEN, "3.29 spreads (99.9 %, as GIVE is announced: DO-229 table A-17) of 0.35 m", 1.1515),
+    ):
+        height = first_with(state, by_content(SATELLITE, 1.0 * spike), 0.1, 5.0)
+        # A spike of one cell in 285 pulls the plane up by little: its foot is where the others are.
+        off[state] = height
+        evidence(f"satellite-based is {STATE_NAMES[state]} from, above a plane", source=source, expected=expected,
+                 got=height, tolerance=0.015 * expected, unit="m")  # fmt: skip
+    assert off[BROKEN] / off[STRAINED] == pytest.approx(3.29 / 2.0, rel=1e-4)
 
 
 @pytest.mark.parametrize(("slope", "smoothing_s", "expected"), [(425, 100, 8.5), (425, 30, 4.335), (100, 100, 2.0),
@@ -198,6 +239,46 @@ def test_events_leave_as_csv_geojson_and_json(stormy):
     assert ring[0] == ring[-1] and len(ring) == 5 and 140 < ring[0][0] < 151
     told = json.loads(event_files.to_json(listed, simulated=False))["events"]
     assert told[0]["state"] == "broken" and told[0]["reason"].startswith("front of")
+
+
+@pytest.mark.parametrize(
+    ("west", "east", "south", "north", "kind", "coordinates", "bounds"),
+    [
+        (178.5, 182.0, -41.0, -40.0, "MultiPolygon",
+         [[[[178.5, -41.0], [180.0, -41.0], [180.0, -40.0], [178.5, -40.0], [178.5, -41.0]]],
+          [[[-180.0, -41.0], [-178.0, -41.0], [-178.0, -40.0], [-180.0, -40.0], [-180.0, -41.0]]]],
+         [178.5, -41.0, -178.0, -40.0]),
+        (179.0, 181.0, -41.0, -41.0, "MultiLineString",
+         [[[179.0, -41.0], [180.0, -41.0]], [[-180.0, -41.0], [-179.0, -41.0]]], [179.0, -41.0, -179.0, -41.0]),
+        (182.0, 182.0, -41.0, -40.0, "LineString", [[-178.0, -41.0], [-178.0, -40.0]], [-178.0, -41.0, -178.0, -40.0]),
+        (182.0, 182.0, -41.0, -41.0, "Point", [-178.0, -41.0], [-178.0, -41.0, -178.0, -41.0]),
+        (183.0, 185.0, -41.0, -40.0, "Polygon",
+         [[[-177.0, -41.0], [-175.0, -41.0], [-175.0, -40.0], [-177.0, -40.0], [-177.0, -41.0]]],
+         [-177.0, -41.0, -175.0, -40.0]),
+        (178.0, 180.0, 1.0, 2.0, "Polygon",
+         [[[178.0, 1.0], [180.0, 1.0], [180.0, 2.0], [178.0, 2.0], [178.0, 1.0]]], [178.0, 1.0, 180.0, 2.0]),
+    ],
+)  # fmt: skip
+def test_geojson_is_cut_at_the_antimeridian(stormy, west, east, south, north, kind, coordinates, bounds):
+    """RFC 7946: no part crosses the antimeridian (3.1.9), the outer ring runs against the clock (3.1.6), bbox (5.2)."""
+    event = replace(events.of_day(*stormy, REGION)[0], west=west, east=east, south=south, north=north)
+    (feature,) = json.loads(event_files.to_geojson([event], simulated=False))["features"]
+    assert feature["geometry"] == {"type": kind, "coordinates": coordinates}
+    assert feature["bbox"] == bounds
+
+
+def test_a_wall_over_the_antimeridian_is_one_event_cut_for_geojson():
+    fields = flat_fields()
+    fields.slope[6:12, 4:7, 5:12] = 20.0
+    moved = replace(fields, lons=LONS + 180.0 - LONS[8])
+    region = replace(REGION, west=float(moved.lons[0]), east=float(moved.lons[-1]), sites=())
+    judged = states.judge(moved, *nothing(), region)
+    (event,) = events.of_day(judged.fields, judged.flags, region)
+    assert event.west < 180.0 < event.east
+    (feature,) = json.loads(event_files.to_geojson([event], simulated=False))["features"]
+    assert feature["geometry"]["type"] == "MultiPolygon"
+    longitudes = [[p[0] for p in part[0]] for part in feature["geometry"]["coordinates"]]
+    assert [(min(part), max(part)) for part in longitudes] == [(178.5, 180.0), (-180.0, -178.5)]
 
 
 def test_uses_by_name_and_kind():

@@ -48,18 +48,50 @@ def to_csv(events: Sequence[Event]) -> str:
 
 
 def to_geojson(events: Sequence[Event], simulated: bool) -> str:
-    """A feature per event: the box around the middles of its cells, longitude first; east past 180 is cut by nobody."""
-    features = []
-    for event in events:
-        s, n, w, e = (_round(v, 3) for v in (event.south, event.north, event.west, event.east))
-        box = [[[w, s], [e, s], [e, n], [w, n], [w, s]]]
-        geometry: dict[str, Any] = {"type": "Polygon", "coordinates": box}
-        if s == n or w == e:  # one row or one cell of the map has no area
-            geometry = {"type": "Point", "coordinates": [w, s]}
-            if (s, w) != (n, e):
-                geometry = {"type": "LineString", "coordinates": [[w, s], [e, n]]}
-        features.append({"type": "Feature", "geometry": geometry, "properties": facts(event)})
+    """A feature per event: the box around the middles of its cells, longitude first, from -180 to 180.
+
+    A box across the antimeridian is cut there in two, so that no part crosses it (RFC 7946, section 3.1.9); its `bbox`
+    then has a western edge greater than the eastern one (section 5.2).
+    """
+    features = [
+        {"type": "Feature", "bbox": _bounds(event), "geometry": _shape(event), "properties": facts(event)}
+        for event in events
+    ]
     return json.dumps({"type": "FeatureCollection", "simulated": simulated, "features": features}, allow_nan=False)
+
+
+def _bounds(event: Event) -> list[float]:
+    """West, south, east, north [deg]; west is greater than east where the antimeridian lies between."""
+    west, east = _spans(event)[0][0], _spans(event)[-1][1]
+    return [west, round(event.south, 3), east, round(event.north, 3)]
+
+
+def _spans(event: Event) -> list[tuple[float, float]]:
+    """Spans of longitude [deg] within -180 to 180 that an event covers, west to east: one, or two where it is cut."""
+    width = event.east - event.west
+    if width >= 360.0:
+        return [(-180.0, 180.0)]
+    west = (event.west + 180.0) % 360.0 - 180.0
+    east = west + width
+    if width > 0.0 and east > 180.0:
+        return [(round(west, 3), 180.0), (-180.0, round(east - 360.0, 3))]
+    return [(round(west, 3), round(east, 3))]
+
+
+def _shape(event: Event) -> dict[str, Any]:
+    """The box as GeoJSON: a polygon, or a line or point where it has one row or one cell; several parts where cut."""
+    s, n = round(event.south, 3), round(event.north, 3)
+    spans = _spans(event)
+    parts: list[Any]
+    if s == n and event.west == event.east:
+        return {"type": "Point", "coordinates": [spans[0][0], s]}
+    if s == n or event.west == event.east:
+        whole, parts = "LineString", [[[w, s], [e, n]] for w, e in spans]
+    else:  # the outer ring runs against the clock (section 3.1.6)
+        whole, parts = "Polygon", [[[[w, s], [e, s], [e, n], [w, n], [w, s]]] for w, e in spans]
+    if len(parts) == 1:
+        return {"type": whole, "coordinates": parts[0]}
+    return {"type": f"Multi{whole}", "coordinates": parts}
 
 
 def to_json(events: Sequence[Event], simulated: bool) -> str:
