@@ -3,9 +3,12 @@
 import json
 from typing import Any
 
+import numpy as np
 import pytest
 from fastapi.testclient import TestClient
 from tests.builders import REGION, STORM_DAY
+
+from skylag.tables import Indices
 
 SITE = REGION.sites[1]
 ADDRESS = f"/api/outlook/{REGION.name}"
@@ -64,3 +67,17 @@ def test_the_record_of_nothing_is_empty(client: TestClient) -> None:
 def test_refusals(client: TestClient, asked: dict[str, object], status: int, said: str) -> None:
     answer = client.get(ADDRESS, params={"lat": SITE.lat, "lon": SITE.lon, **asked})
     assert answer.status_code == status and said in answer.json()["error"]
+
+
+def test_the_list_of_days_tells_their_activity(client: TestClient) -> None:
+    """What the year view filters by: null where no indices of the day were imported, and within where one lacks."""
+    archive = client.app.state.archive  # type: ignore[attr-defined]
+    ap = np.array([[2.0, 3, 4, 5, 6, 7, 80, 9]])
+    kp = np.array([[0.667, 1, 1.333, 1.667, 1.667, 2, 6, 2.333]])
+    day = np.array([STORM_DAY])
+    table = Indices(day, kp, ap, np.array([15.0]), np.array([np.nan]))
+    archive.activity.keep_measured(table, "", np.datetime64(1, "s"))
+    listed = {one["day"]: one["activity"] for one in client.get("/api/days").json()["days"]}
+    assert listed[str(STORM_DAY)] == {"kp_highest": 6.0, "ap_daily": 15.0, "f107": None}
+    assert listed[str(STORM_DAY - 1)] is None
+    assert client.get("/api/days", params={"since": str(STORM_DAY)}).json()["days"][0]["activity"]["kp_highest"] == 6.0

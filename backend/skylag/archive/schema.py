@@ -25,7 +25,7 @@ from sqlalchemy import (
     func,
 )
 
-SCHEMA_VERSION = 3
+SCHEMA_VERSION = 4
 
 metadata = MetaData()
 
@@ -217,3 +217,26 @@ day_digest = Table(
     Column("data", LargeBinary, nullable=False),
     Column("sha256", String(64), nullable=False),
 )
+
+# Activity of a UTC day: what was measured, what was foretold of it.  Rows are added, never changed; the newest counts.
+activity = Table(
+    "activity",
+    metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("day", String(10), nullable=False),
+    Column("facts", Text, nullable=False),  # JSON: kp, ap (8), daily_ap, f107
+    Column("source", String(200), nullable=False),
+    Column("entered_ns", BigInteger, nullable=False),  # UTC
+)
+activity_outlook = Table(
+    "activity_outlook",
+    metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("day", String(10), nullable=False),  # spoken of
+    Column("made_ns", BigInteger, nullable=False),  # UTC, when it was foretold
+    Column("facts", Text, nullable=False),  # JSON: ap (8)
+    Column("source", String(200), nullable=False),
+    Column("entered_ns", BigInteger, nullable=False),
+)
+Index("activity_by_day", activity.c.day)
+Index("activity_outlook_by_day", activity_outlook.c.day, activity_outlook.c.made_ns)

@@ -19,6 +19,7 @@ import sqlalchemy as sa
 from sqlalchemy.engine import URL, Connection, Engine, make_url
 
 from skylag.archive import chunks, forms, records, schema, slants
+from skylag.archive.activity import Activity
 from skylag.archive.keys import Keys
 from skylag.archive.notices import Notices
 from skylag.archive.outlooks import Outlooks
@@ -133,6 +134,7 @@ class Archive:
         self.keys = Keys(self._write, self._reading)
         self.notices = Notices(self._write, self._reading)
         self.outlooks = Outlooks(self._write, self._reading)
+        self.activity = Activity(self._write, self._reading)
         if url.get_backend_name() == "sqlite":
             self._read_engine = _sqlite_engine(url, "BEGIN")
             self._write_engine = _sqlite_engine(url, "BEGIN IMMEDIATE")

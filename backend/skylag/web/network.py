@@ -13,11 +13,15 @@ router = APIRouter()
 def days(
     request: Request, region: str | None = None, since: str | None = None, until: str | None = None
 ) -> Response:
-    """All stored days, or those of one region, or from one day to another, newest first."""
+    """All stored days, or those of one region, or from one day to another, newest first.
+
+    `activity` of a day is what was measured of Sun and magnetic field: `kp_highest` of its eight Kp, `ap_daily`,
+    `f107`; null where no indices of the day were imported.
+    """
     archive: Archive = request.app.state.archive
     first = asking.day(since) if since is not None else None
     last = asking.day(until) if until is not None else None
-    return payloads.reply(payloads.days(archive.days(region, first, last)))
+    return payloads.reply(payloads.days(archive.days(region, first, last), archive.activity.by_day(first, last)))
 
 
 @router.get("/api/quantities", summary="Vocabulary")

@@ -20,6 +20,7 @@ from fastapi.responses import Response
 
 from skylag import quantities, timescales
 from skylag.archive import DayHead, DayRecord, SiteStates
+from skylag.archive.activity import DayActivity
 from skylag.archive.outlooks import Kept
 from skylag.constants import L1_M_PER_TECU
 from skylag.impact.ground_augmentation import NextFront, StationDay
@@ -161,9 +162,20 @@ def _head(head: DayHead) -> dict[str, Any]:
     }
 
 
-def days(heads: Sequence[DayHead]) -> dict[str, Any]:
-    """The list of days, newest first."""
-    return {"days": [_head(head) for head in heads], "regions": sorted({head.region for head in heads})}
+def days(heads: Sequence[DayHead], activity: Mapping[str, DayActivity]) -> dict[str, Any]:
+    """The list of days, newest first.
+
+    Each carries `activity`: `kp_highest` (highest of the eight Kp of the UTC day), `ap_daily` (its mean ap), `f107`
+    (observed F10.7), each null where not told; `activity` itself is null where no indices of the day were imported.
+    """
+    listed = [{**_head(head), "activity": _activity(activity.get(str(head.day)))} for head in heads]
+    return {"days": listed, "regions": sorted({head.region for head in heads})}
+
+
+def _activity(told: DayActivity | None) -> dict[str, Any] | None:
+    if told is None:
+        return None
+    return {name: _number(getattr(told, name)) for name in ("kp_highest", "ap_daily", "f107")}
 
 
 def _round_up(value: float) -> float:
