@@ -60,7 +60,7 @@ import { WORDS } from "./words.js";
  * @property {number[]} times
  * @property {Float64Array} lats
  * @property {Float64Array} lons
- * @property {Record<"delay"|"uncertainty"|"slope"|"state", Float32Array|Uint8Array>} layers  flat (time, lat, lon)
+ * @property {Record<"delay"|"uncertainty"|"slope"|"support"|"state", Float32Array|Uint16Array|Uint8Array>} layers  flat (time, lat, lon)
  */
 /**
  * @typedef {object} SiteStates
@@ -216,7 +216,7 @@ export async function day(region, date, how) {
  * @returns {Promise<Window>}
  */
 export async function fields(region, date, from, to, how) {
-  const layers = "vertical_delay,vertical_delay_sigma,slope,state";
+  const layers = "vertical_delay,vertical_delay_sigma,slope,support,state";
   const raw = await ask(`${dayAddress(region, date)}/fields?from=${instant(from)}&to=${instant(to)}&layers=${layers}`, how);
   return {
     times: raw.times_utc.map(milliseconds),
@@ -226,6 +226,7 @@ export async function fields(region, date, from, to, how) {
       delay: unpack(raw.layers.vertical_delay),
       uncertainty: unpack(raw.layers.vertical_delay_sigma),
       slope: unpack(raw.layers.slope),
+      support: unpack(raw.layers.support),
       state: unpack(raw.layers.state),
     },
   };
@@ -264,21 +265,24 @@ export async function reading(region, date, [lat, lon], time, how) {
 }
 
 /**
- * The day at a place.
- * @param {string} region @param {string} date @param {[number, number]} place @param {How} [how]
+ * The day at a place. Where it is unseen whether corrections hold, the delay may still be known: seen, and to within the
+ * limit of its sigma. The slope then tells too little.
+ * @param {string} region @param {string} date @param {[number, number]} place @param {number} unseenSigma  m @param {How} [how]
  * @returns {Promise<Series>}
  */
-export async function series(region, date, [lat0, lon0], how) {
+export async function series(region, date, [lat0, lon0], unseenSigma, how) {
   const raw = await ask(`${dayAddress(region, date)}/series?lat=${lat0}&lon=${lon0}`, how);
-  const seen = (values) => values.map((v, i) => (raw.state[i] === "unseen" ? NaN : number(v)));
+  const known = raw.state.map((state, i) => state !== "unseen" || (raw.support[i] > 0 && number(raw.vertical_delay_sigma[i]) <= unseenSigma));
+  const seen = (values) => values.map((v, i) => (known[i] ? number(v) : NaN));
+  const steep = (values) => values.map((v, i) => (raw.state[i] === "unseen" ? NaN : number(v)));
   return {
     lat: lat0,
     lon: lon0,
     times: raw.times_utc.map(milliseconds),
     delay: seen(raw.vertical_delay),
     sigma: seen(raw.vertical_delay_sigma),
-    slope: seen(raw.slope),
-    slopeSigma: seen(raw.slope_sigma),
+    slope: steep(raw.slope),
+    slopeSigma: steep(raw.slope_sigma),
     slopeHeading: raw.slope_east.map((east, i) => headingOf(number(east), number(raw.slope_north[i]))),
     support: raw.support,
     sentence: raw.sentence,

@@ -2,6 +2,8 @@
  * What is on the screen as files to keep: text tables made here from the numbers already loaded.
  */
 
+import { told } from "./figures/map.js";
+
 /** @param {string|number|null} value  a number is written as it is; text that a spreadsheet would compute is defused */
 function cellText(value) {
   if (value === null || (typeof value === "number" && !Number.isFinite(value))) return "";
@@ -15,14 +17,18 @@ export function csvText(heads, rows) {
   return `${[heads, ...rows].map((row) => row.map(cellText).join(",")).join("\n")}\n`;
 }
 
-/** One map as rows: every cell with all its layers. @param {import("./api.js").Window} fields @param {number} index @param {string[]} states */
-export function mapRows(fields, index, states) {
+/**
+ * One map as rows: every cell with all that is told of it. @param {import("./api.js").Window} fields @param {number} index
+ * @param {string[]} states @param {number} unseenSigma
+ */
+export function mapRows(fields, index, states, unseenSigma) {
   const { lats, lons, layers } = fields;
   const size = lats.length * lons.length;
   const time = new Date(fields.times[index]).toISOString();
   return Array.from({ length: size }, (_, k) => {
     const at = index * size + k;
-    return [time, lats[Math.floor(k / lons.length)], lons[k % lons.length], layers.delay[at], layers.uncertainty[at], layers.slope[at], states[layers.state[at]]];
+    const values = ["delay", "uncertainty", "slope"].map((layer) => (told(fields, at, layer, unseenSigma) ? layers[layer][at] : null));
+    return [time, lats[Math.floor(k / lons.length)], lons[k % lons.length], ...values, states[layers.state[at]]];
   });
 }
 

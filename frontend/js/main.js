@@ -239,7 +239,7 @@ async function loadOther() {
     const own = await hourOf(time);
     if (mine !== scene || scene.time !== time || scene.view.versus !== view.versus) return;
     if (!maps.every(({ fields }) => sameGrid(fields, own))) throw new Error(WORDS.otherGrid);
-    mine.other = { ...(view.versus === "quiet" ? medianMap(maps) : maps[0]), label };
+    mine.other = { ...(view.versus === "quiet" ? medianMap(maps, mine.day.region.unseenSigma) : maps[0]), label };
   } catch (error) {
     if (mine !== scene || scene.time !== time) return;
     mine.other = { trouble: error.message };
@@ -286,7 +286,7 @@ async function loadReading() {
   try {
     const found = await api.reading(view.region, view.day, view.place, time, { signal: only("reading") });
     if (!scene || scene.time !== time) return;
-    reading.answer(found, scene);
+    reading.answer(readingOf(scene) ?? found, scene);
     // Moving the time speaks through the strip; a new place speaks here.
     if (document.activeElement !== at("strip") && document.activeElement !== at("time")) at("announce").textContent = found.sentence;
   } catch (error) {
@@ -301,7 +301,7 @@ async function loadSeries() {
     return;
   }
   try {
-    const found = await api.series(view.region, view.day, view.place, { signal: only("series") });
+    const found = await api.series(view.region, view.day, view.place, scene.day.region.unseenSigma, { signal: only("series") });
     series.give(found);
     scene.series = found;
     clock.show(scene);

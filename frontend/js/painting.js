@@ -137,7 +137,7 @@ function lines(ctx, trace, p, ratio) {
   const filled = trace.fill === "toself";
   path(ctx, trace.x, trace.y, p, filled);
   if (filled) {
-    ctx.fillStyle = trace.fillpattern?.shape ? tile(ctx, trace.fillpattern, ratio) : trace.fillcolor;
+    ctx.fillStyle = trace.fillpattern?.shape ? tile(ctx, { ...trace.fillpattern, second: trace.meta?.second }, ratio) : trace.fillcolor;
     ctx.fill();
   }
   if (trace.line?.width) {
@@ -154,7 +154,7 @@ function tile(ctx, pattern, ratio) {
   const key = JSON.stringify([pattern, ratio]);
   const found = tiles.get(key);
   if (found) return found;
-  const { shape, size, fgcolor, bgcolor } = pattern;
+  const { shape, size, fgcolor, bgcolor, second } = pattern;
   const canvas = document.createElement("canvas");
   canvas.width = canvas.height = Math.round(size * ratio);
   const t = /** @type {CanvasRenderingContext2D} */ (canvas.getContext("2d"));
@@ -164,12 +164,12 @@ function tile(ctx, pattern, ratio) {
   t.fillStyle = t.strokeStyle = fgcolor;
   t.lineWidth = shape === "/" ? 1.7 : 1.1;
   if (shape === ".") {
-    t.beginPath();
-    for (const [x, y] of [[size / 4, size / 4], [(3 * size) / 4, (3 * size) / 4]]) {
-      t.moveTo(x + 0.75, y);
-      t.arc(x, y, 0.75, 0, 2 * Math.PI);
+    for (const [at, colour] of [[size / 4, fgcolor], [(3 * size) / 4, second ?? fgcolor]]) {
+      t.beginPath();
+      t.arc(at, at, 0.75, 0, 2 * Math.PI);
+      t.fillStyle = colour;
+      t.fill();
     }
-    t.fill();
   } else {
     // Drawn beyond the tile's corners, so that strokes meet those of the next tile.
     t.beginPath();

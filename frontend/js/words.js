@@ -35,7 +35,8 @@ export const KIND_WORDS = {
 
 export const WORDS = {
   simulated: "Simulated data: an invented network, invented days. Nothing here happened.",
-  dotted: "Dotted: unseen, not enough data to say.",
+  dotted: "Dotted: unseen, not enough data to say; dots over a colour: the delay is known, not whether corrections hold.",
+  dotsOver: "over a colour: delay known, not whether corrections hold",
   bareWarning: "by what was seen near by; no number here",
   receivers: "Receivers",
   receiversHeard: "Receivers; empty where no data came",
@@ -153,7 +154,7 @@ export const WORDS = {
   asTable: "As a table",
   play: "Play",
   pause: "Pause",
-  mapCaption: (what, when) => `${what}, ${when}. Rows: latitude; columns: longitude; “unseen” where not enough data say anything.`,
+  mapCaption: (what, when) => `${what}, ${when}. Rows: latitude; columns: longitude; “unseen” where not enough data say anything, * where the delay is known but not whether corrections hold.`,
 };
 
 const MINUS = "\u2212";

@@ -4,12 +4,14 @@ import { readdirSync, readFileSync } from "node:fs";
 import test from "node:test";
 import { STATES } from "../../frontend/js/colour.js";
 import { outline, rowsOf } from "../../frontend/js/figures/cells.js";
+import { differenceMap, medianMap } from "../../frontend/js/figures/compare.js";
 import { legendFigure } from "../../frontend/js/figures/legend.js";
-import { aspectOf, bareWarnings, frameOf, heightOf, mapFigure } from "../../frontend/js/figures/map.js";
+import { aspectOf, bareWarnings, dottedNumbers, frameOf, heightOf, mapFigure } from "../../frontend/js/figures/map.js";
 import { bandOutline, seriesFigure } from "../../frontend/js/figures/series.js";
 import { front, gradations, offset, placeAt, scaleBarKm, widthKm } from "../../frontend/js/figures/signs.js";
 import { keyStep, nearest, runs, stripFigure } from "../../frontend/js/figures/strip.js";
 import { freeSpot, projection } from "../../frontend/js/painting.js";
+import { mapRows } from "../../frontend/js/exporting.js";
 import { unpack } from "../../frontend/js/api.js";
 
 const DAY = Date.UTC(2031, 4, 11);
@@ -28,7 +30,8 @@ function fixture() {
   state[5] = 0;
   const uncertainty = Float32Array.from({ length: 2 * cells }, () => 0.3);
   const slope = Float32Array.from({ length: 2 * cells }, () => 4);
-  return { times: TIMES.slice(0, 2), lats, lons, layers: { delay, uncertainty, slope, state } };
+  const support = Uint16Array.from({ length: 2 * cells }, (_, i) => (i % cells === 0 || i % cells === 5 ? 0 : 6));
+  return { times: TIMES.slice(0, 2), lats, lons, layers: { delay, uncertainty, slope, support, state } };
 }
 
 const FLAG = {
@@ -67,7 +70,7 @@ test("field cells are drawn as they are: no smoothing, scale ends of the day", (
   assert.ok(Math.abs(cells.z[2][3] - 2.1) < 1e-6);
 });
 
-test("an unseen cell shows no number, even where the archive has one, and is dotted on every layer", () => {
+test("an unseen cell out of the network's sight shows no number, even where the archive has one, and is dotted on every layer", () => {
   for (const layer of ["delay", "uncertainty", "slope", "state"]) {
     const figure = mapFigure(contents({ layer }));
     const unseen = named(figure, "unseen");
@@ -78,8 +81,48 @@ test("an unseen cell shows no number, even where the archive has one, and is dot
     if (layer !== "state") {
       assert.equal(named(figure, layer).z[0][0], null);
       assert.equal(named(figure, layer).z[1][1], null);
+      assert.equal(named(figure, "dots").x.length, 0);
     }
   }
+});
+
+test("a known delay is shown under dots where it is unseen whether corrections hold; its slope and its state are not", () => {
+  const fields = fixture();
+  fields.layers.support[0] = 3; // cell (0, 0) is unseen, its delay known to 0.3 m
+  for (const layer of ["delay", "uncertainty"]) {
+    const figure = mapFigure(contents({ layer, fields }));
+    assert.ok(Math.abs(named(figure, layer).z[0][0] - fields.layers[layer][0]) < 1e-6);
+    assert.equal(areaOf(named(figure, "dots")), 1);
+    assert.equal(areaOf(named(figure, "unseen")), 1);
+    assert.match(named(figure, "dots").fillpattern.bgcolor, /^rgba\(.*,0\.25\)$/);
+    assert.ok(dottedNumbers(contents({ layer, fields })));
+  }
+  assert.equal(named(mapFigure(contents({ layer: "slope", fields })), "slope").z[0][0], null);
+  assert.equal(areaOf(named(mapFigure(contents({ layer: "state", fields })), "unseen")), 2);
+  const [row] = mapRows(fields, 0, STATES, 1.5);
+  assert.deepEqual([row[3] > 0, row[4] > 0, row[5], row[6]], [true, true, null, "unseen"]);
+  // Known to 1.6 m only, where 1.5 m is needed: no number.
+  fields.layers.uncertainty[0] = 1.6;
+  assert.equal(named(mapFigure(contents({ fields })), "delay").z[0][0], null);
+  assert.equal(mapRows(fields, 0, STATES, 1.5)[0][3], null);
+  assert.equal(dottedNumbers(contents({ fields })), false);
+});
+
+test("a median tells what most tell, a difference what both tell", () => {
+  const [a, b, c] = [fixture(), fixture(), fixture()];
+  b.layers.delay.forEach((v, i, all) => { all[i] = v + 2; });
+  c.layers.delay.forEach((v, i, all) => { all[i] = v + 9; });
+  for (const one of [a, b, c]) one.layers.delay[5] = 4;
+  a.layers.support[5] = b.layers.support[5] = 2; // unseen in all three, known in two; cell 0 is out of sight in all
+  const middle = medianMap([a, b, c].map((fields) => ({ fields, index: 0 })), 1.5);
+  assert.ok(Math.abs(middle.fields.layers.delay[1] - 3.1) < 1e-6);
+  assert.equal(middle.fields.layers.state[5], 0);
+  assert.equal(middle.fields.layers.delay[5], 4);
+  assert.ok(Number.isNaN(middle.fields.layers.delay[0]));
+  const less = differenceMap({ fields: b, index: 0 }, { fields: a, index: 0 }, 1.5);
+  assert.ok(Math.abs(less.fields.layers.delay[1] - 2) < 1e-6);
+  assert.equal(less.fields.layers.delay[5], 0);
+  assert.ok(Number.isNaN(less.fields.layers.delay[0]) && Number.isNaN(less.fields.layers.slope[5]));
 });
 
 test("a warning over a cell without a number keeps its pattern; what holds without a number is dotted", () => {

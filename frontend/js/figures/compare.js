@@ -3,26 +3,31 @@
  */
 
 import { roundEnd } from "../colour.js";
+import { told } from "./map.js";
 import { median } from "./year.js";
 
 const NUMBERS = ["delay", "uncertainty", "slope"];
 
+/** Layers of one map, empty. @param {number} size */
+const blank = (size) => ({ state: new Uint8Array(size), support: new Uint16Array(size), delay: new Float32Array(size).fill(NaN), uncertainty: new Float32Array(size).fill(NaN), slope: new Float32Array(size).fill(NaN) });
+
 /**
- * One map: the median over maps of the same grid, cell by cell. Where fewer than half have a number it is unseen.
- * @param {{fields: import("../api.js").Window, index: number}[]} maps
+ * One map: the median over maps of the same grid, cell by cell, of what they tell. Where fewer than half tell a number
+ * there is none; where fewer than half see that corrections hold, it is unseen.
+ * @param {{fields: import("../api.js").Window, index: number}[]} maps @param {number} unseenSigma
  * @returns {{fields: import("../api.js").Window, index: number}}
  */
-export function medianMap(maps) {
+export function medianMap(maps, unseenSigma) {
   const { lats, lons } = maps[0].fields;
   const size = lats.length * lons.length;
-  const layers = { state: new Uint8Array(size), delay: new Float32Array(size), uncertainty: new Float32Array(size), slope: new Float32Array(size) };
+  const layers = blank(size);
   for (let at = 0; at < size; at++) {
     for (const name of NUMBERS) {
-      const values = maps.map(({ fields, index }) => fields.layers[name][index * size + at]).filter(Number.isFinite);
-      layers[name][at] = 2 * values.length > maps.length ? median(values) : NaN;
+      const values = maps.filter(({ fields, index }) => told(fields, index * size + at, name, unseenSigma)).map(({ fields, index }) => fields.layers[name][index * size + at]);
+      if (2 * values.length > maps.length) layers[name][at] = median(values);
     }
-    // Quiet days hold wherever they are seen.
-    layers.state[at] = Number.isFinite(layers.delay[at]) ? 1 : 0;
+    layers.state[at] = 2 * maps.filter(({ fields, index }) => fields.layers.state[index * size + at] > 0).length > maps.length ? 1 : 0;
+    layers.support[at] = Number.isFinite(layers.delay[at]) ? 1 : 0;
   }
   return { fields: { times: [maps[0].fields.times[maps[0].index]], lats, lons, layers }, index: 0 };
 }
@@ -34,19 +39,21 @@ export function sameGrid(a, b) {
 }
 
 /**
- * The first map less the second; unseen wherever one of them is.
+ * The first map less the second, where both tell a number; dotted elsewhere.
  * @param {{fields: import("../api.js").Window, index: number}} first
  * @param {{fields: import("../api.js").Window, index: number}} second
+ * @param {number} unseenSigma
  */
-export function differenceMap(first, second) {
+export function differenceMap(first, second, unseenSigma) {
   const { lats, lons, times } = first.fields;
   const size = lats.length * lons.length;
-  const layers = { state: new Uint8Array(size), delay: new Float32Array(size), uncertainty: new Float32Array(size), slope: new Float32Array(size) };
+  const layers = blank(size);
   for (let at = 0; at < size; at++) {
     const [a, b] = [first.index * size + at, second.index * size + at];
-    const seen = first.fields.layers.state[a] > 0 && second.fields.layers.state[b] > 0;
-    for (const name of NUMBERS) layers[name][at] = seen ? first.fields.layers[name][a] - second.fields.layers[name][b] : NaN;
-    layers.state[at] = seen ? 1 : 0;
+    for (const name of NUMBERS) {
+      if (told(first.fields, a, name, unseenSigma) && told(second.fields, b, name, unseenSigma)) layers[name][at] = first.fields.layers[name][a] - second.fields.layers[name][b];
+    }
+    layers.state[at] = Number.isFinite(layers.delay[at]) ? 1 : 0;
   }
   return { fields: { times: [times[first.index]], lats, lons, layers }, index: 0 };
 }

@@ -96,6 +96,32 @@ export function bareWarnings(fields, index, layer) {
   return ["strained", "broken"].filter((state) => found.has(state));
 }
 
+/**
+ * Is the number of a cell shown on a layer? Where the state is unseen, the delay may still be known well enough: seen by
+ * lines of sight and within the limit of its sigma. Then it is shown, under dots. Out of the network's sight, or where
+ * the number says too little, nothing is.
+ * @param {import("../api.js").Window} fields
+ * @param {number} at  the cell, counted through all times
+ * @param {Layer} layer
+ * @param {number} unseenSigma
+ */
+export function told(fields, at, layer, unseenSigma) {
+  const { layers } = fields;
+  if (layer === "state" || !layers[layer] || !Number.isFinite(layers[layer][at])) return false;
+  if (layers.state?.[at] !== 0) return true;
+  return layer !== "slope" && Number.isFinite(layers.delay[at]) && layers.support?.[at] > 0 && layers.uncertainty[at] <= unseenSigma;
+}
+
+/** Are there unseen cells of which the layer tells a number? @param {MapContents} contents */
+export function dottedNumbers({ fields, index = 0, layer, unseenSigma }) {
+  if (!fields || index < 0 || layer === "state") return false;
+  const size = fields.lats.length * fields.lons.length;
+  for (let at = index * size; at < (index + 1) * size; at++) {
+    if (fields.layers.state[at] === 0 && told(fields, at, layer, unseenSigma)) return true;
+  }
+  return false;
+}
+
 const QUIET = { hoverinfo: "skip", showlegend: false };
 
 /** @param {MapContents} contents */
@@ -105,7 +131,8 @@ function fieldTraces(contents) {
   const [rows, columns] = [fields.lats.length, fields.lons.length];
   const palette = PALETTES[theme];
   const stateAt = (r, c) => fields.layers.state?.[(index * rows + r) * columns + c] ?? 0;
-  const numberAt = (r, c) => layer === "state" || Number.isFinite(fields.layers[layer]?.[(index * rows + r) * columns + c]);
+  const shown = (r, c) => told(fields, (index * rows + r) * columns + c, layer, contents.unseenSigma);
+  const numberAt = (r, c) => layer === "state" || shown(r, c);
   const traces = [];
   if (layer === "state") {
     for (const code of [1, 2, 3]) traces.push(stateTrace(STATES[code], (r, c) => stateAt(r, c) === code, fields, palette));
@@ -120,8 +147,8 @@ function fieldTraces(contents) {
       name: layer,
       x: Array.from(fields.lons),
       y: Array.from(fields.lats),
-      // A state of unseen wins over any number: what cannot be said is not drawn as if it could.
-      z: rowsOf(values, index, rows, columns, (v, at) => (Number.isFinite(v) && fields.layers.state?.[at] !== 0 ? v : null)),
+      // What cannot be said is not drawn as if it could.
+      z: rowsOf(values, index, rows, columns, (v, at) => (told(fields, at, layer, contents.unseenSigma) ? v : null)),
       zmin: ends[0],
       zmax: ends[1],
       zsmooth: false,
@@ -151,7 +178,9 @@ function fieldTraces(contents) {
     }
   }
   // Without a number: dots, or the pattern of a warning that reaches over the cell from what was seen near by.
-  traces.push(stateTrace("unseen", (r, c) => stateAt(r, c) === 0 || (stateAt(r, c) === 1 && !numberAt(r, c)), fields, palette));
+  const dotted = (r, c) => layer !== "state" && stateAt(r, c) === 0 && shown(r, c);
+  traces.push(stateTrace("unseen", (r, c) => (stateAt(r, c) === 0 && !dotted(r, c)) || (stateAt(r, c) === 1 && !numberAt(r, c)), fields, palette));
+  if (layer !== "state") traces.push(stateTrace("unseen", dotted, fields, palette, "dots"));
   for (const state of bareWarnings(fields, index, layer)) {
     traces.push(stateTrace(state, (r, c) => STATES[stateAt(r, c)] === state && !numberAt(r, c), fields, palette));
   }
@@ -162,9 +191,10 @@ function fieldTraces(contents) {
  * Cells of one state as one outline with its pattern.
  * @param {import("../colour.js").StateName} state
  */
-function stateTrace(state, inside, fields, palette) {
+function stateTrace(state, inside, fields, palette, name = state) {
   const { x, y } = outline(inside, fields.lats, fields.lons);
-  const colours = palette.states[state];
+  // Dots over a number: of ink and of paper by turns, on a thin veil, so that they show on every colour of the ramp.
+  const colours = name === "dots" ? { fill: withAlpha(palette.paper, 0.25), edge: palette.states.unseen.edge, line: palette.ink } : palette.states[state];
   const pattern = {
     unseen: { shape: ".", size: 7, solidity: 0.12 },
     holds: { shape: "" },
@@ -175,9 +205,10 @@ function stateTrace(state, inside, fields, palette) {
     ...QUIET,
     type: "scatter",
     mode: "lines",
-    name: state,
+    name,
     x,
     y,
+    ...(name === "dots" ? { meta: { second: palette.paper } } : {}),
     fill: "toself",
     fillcolor: colours.fill,
     fillpattern: pattern.shape

@@ -6,7 +6,7 @@ import { STATES } from "../colour.js";
 import { draw, erase, takePicture } from "../drawing.js";
 import { csvText, MAP_HEADS, mapRows, save } from "../exporting.js";
 import { differenceEnds, differenceMap } from "../figures/compare.js";
-import { aspectOf, frameOf, heightOf, mapFigure } from "../figures/map.js";
+import { aspectOf, frameOf, heightOf, mapFigure, told } from "../figures/map.js";
 import { paint, projection } from "../painting.js";
 import { clockText } from "../state.js";
 import { bothClocks, dateText, fixed, LAYER_WORDS, latText, lonText, STATE_WORDS, timeText, WORDS } from "../words.js";
@@ -90,7 +90,7 @@ export class ChartPanel {
   /** The numbers of the map as a text table. */
   textTable() {
     const { fields, index } = this.#scene;
-    if (fields && index >= 0) save(csvText(MAP_HEADS, mapRows(fields, index, STATES)), this.#name("map.csv"), "text/csv");
+    if (fields && index >= 0) save(csvText(MAP_HEADS, mapRows(fields, index, STATES, this.#scene.day.region.unseenSigma)), this.#name("map.csv"), "text/csv");
   }
 
   #name(ending) {
@@ -101,12 +101,12 @@ export class ChartPanel {
   #fillTable() {
     const details = this.#table.closest("details");
     if (!details.open || !this.#scene) return;
-    const { difference, fields, index, layer } = this.#contents();
+    const { difference, fields, index, layer, unseenSigma } = this.#contents();
     if (!fields || index < 0) return;
     const { lats, lons, layers } = fields;
     const rows = Array.from(lats, (_, r) => r).reverse();
     const decimals = { delay: 2, uncertainty: 2, slope: 1 }[layer];
-    const text = (at) => (layer === "state" ? STATE_WORDS[STATES[layers.state[at]]].name : layers.state[at] === 0 ? STATE_WORDS.unseen.name : Number.isFinite(layers[layer][at]) ? fixed(layers[layer][at], decimals) : STATE_WORDS[STATES[layers.state[at]]].name);
+    const text = (at) => (told(fields, at, layer, unseenSigma) ? `${fixed(layers[layer][at], decimals)}${layers.state[at] ? "" : "*"}` : STATE_WORDS[STATES[layers.state[at]]].name);
     const { title, unit } = LAYER_WORDS[layer];
     const what = `${title}${unit ? `, ${unit}` : ""}${difference ? `, ${WORDS.lessThat} ${this.#scene.other.label}` : ""}`;
     const body = make("tbody");
@@ -148,7 +148,7 @@ export class ChartPanel {
   #contents() {
     const { day, view, fields, index, time, theme, rays, raysTime, siteStates, coast, other } = this.#scene;
     const difference = differs(this.#scene) && Boolean(other?.fields && fields && index >= 0);
-    const less = difference ? differenceMap({ fields, index }, other) : null;
+    const less = difference ? differenceMap({ fields, index }, other, day.region.unseenSigma) : null;
     // Pierce points belong to one moment: those of another are not drawn. Who has none is a receiver without data.
     const current = view.show.has("rays") && raysTime === time;
     const heard = new Set(rays.map((ray) => ray.receiver));

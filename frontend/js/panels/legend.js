@@ -2,7 +2,7 @@
  * The legend beside the map: colours of the layer, patterns of the states, the drawn signs, and what to show.
  */
 
-import { bareWarnings } from "../figures/map.js";
+import { bareWarnings, dottedNumbers } from "../figures/map.js";
 import { differenceEnds } from "../figures/compare.js";
 import { legendFigure } from "../figures/legend.js";
 import { KIND_WORDS, LAYER_WORDS, STATE_WORDS, WORDS } from "../words.js";
@@ -35,7 +35,8 @@ export class LegendPanel {
     const { view, day, theme, fields, index } = scene;
     const difference = differs(scene);
     const bare = difference ? [] : bareWarnings(fields, index, view.layer);
-    const fingerprint = JSON.stringify([bare, difference, view.layer, day.ends, theme, [...view.show]]);
+    const dots = !difference && dottedNumbers({ fields, index, layer: view.layer, unseenSigma: day.region.unseenSigma });
+    const fingerprint = JSON.stringify([bare, dots, difference, view.layer, day.ends, theme, [...view.show]]);
     if (fingerprint === this.#shown) return;
     this.#shown = fingerprint;
     const focused = this.#element.contains(document.activeElement) ? document.activeElement.name : "";
@@ -47,6 +48,7 @@ export class LegendPanel {
     } else {
       colours.append(rampBar(legendFigure(view.layer, (difference ? differenceEnds(day.ends) : day.ends)[view.layer], theme, difference)));
       states.append(stateRow("unseen"));
+      if (dots) states.append(make("li", {}, dotsSign(), make("small", { text: WORDS.dotsOver })));
       for (const state of bare) states.append(stateRow(state, WORDS.bareWarning));
     }
     colours.append(states);
@@ -118,6 +120,7 @@ export function sign(kind) {
   return drawnSign(...(SIGN_PATHS[kind] ?? []).map(([name, d]) => draft("path", { class: name, d })));
 }
 
+const dotsSign = () => drawnSign(draft("rect", { class: "dots-ground", x: 0.5, y: 0.5, width: 33, height: 17 }), ...Array.from({ length: 10 }, (_, i) => draft("circle", { class: i % 2 ? "dot-paper" : "dot-ink", cx: 4 + 6.5 * (i % 5), cy: i < 5 ? 6 : 12, r: 1 })));
 const receiverSign = () => drawnSign(draft("circle", { class: "sign-thin", cx: 17, cy: 9, r: 5 }), draft("circle", { cx: 17, cy: 9, r: 2.2, fill: "currentColor" }));
 const siteSign = () => drawnSign(draft("path", { class: "sign-thin", d: "M13 1h8l4 4v8l-4 4h-8l-4-4v-8z" }));
 const raySign = () => drawnSign(...[[8, 1.5], [16, 2.5], [26, 3.6]].map(([cx, r]) => draft("circle", { cx, cy: 9, r, fill: "currentColor" })));
