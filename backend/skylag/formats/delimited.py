@@ -13,7 +13,8 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
-from skylag.tables import Calibration, Flag, Samples
+from skylag.errors import FormatError
+from skylag.tables import Biases, Calibration, Flag, Samples
 from skylag.timescales import gps_to_utc
 
 BIAS_COLUMNS = ("kind", "name", "system", "code1", "code2", "bias_ns", "sigma_ns", "datum")
@@ -35,6 +36,22 @@ def biases_csv(calibration: Calibration) -> str:
             f"{table.value_ns[row]:.4f}", f"{table.sigma_ns[row]:.4f}", calibration.datum_of_row[row],
         ])  # fmt: skip
     return out.getvalue()
+
+
+def read_biases_csv(text: str, name: str) -> Biases:
+    """The biases of a biases.csv; their span is not in it.  Raises FormatError where a column or a number is amiss."""
+    rows = list(csv.DictReader(io.StringIO(text)))
+    try:
+        words = {column: np.array([row[column] for row in rows], dtype=np.str_) for column in BIAS_COLUMNS[:5]}
+        value, sigma = (np.array([float(row[column]) for row in rows]) for column in ("bias_ns", "sigma_ns"))
+    except (KeyError, TypeError, ValueError) as trouble:
+        raise FormatError(
+            f"{name}: is not a biases.csv that `skylag day` wrote ({trouble}); its columns are "
+            f"{', '.join(BIAS_COLUMNS)}",
+            path=name, line=0,
+        ) from trouble  # fmt: skip
+    never = np.full(len(rows), np.datetime64("NaT", "ns"))
+    return Biases(**words, value_ns=value, sigma_ns=sigma, start=never, end=never, source=name, datum="")
 
 
 def flags_csv(flags: Sequence[Flag]) -> str:

@@ -5,12 +5,14 @@ TECU, time in UTC seconds.
 """
 
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import xarray as xr
 
 from skylag.constants import L1_M_PER_TECU
-from skylag.tables import STATE_NAMES, Fields, Region
+from skylag.errors import FormatError
+from skylag.tables import STATE_NAMES, Fields, Floats, Region, Times
 from skylag.timescales import gps_to_utc, utc_to_gps
 
 _CAUTION = (
@@ -74,19 +76,59 @@ def write(fields: Fields, region: Region, path: Path, *, simulated: bool = False
 
 def read(path: Path) -> Fields:
     """The maps of a field.nc; slope components are not in the file and come back as NaN."""
-    with xr.open_dataset(path, engine="h5netcdf", mask_and_scale=True) as held:
-        shape = held["vtec"].shape
-        nothing = np.full(shape, np.nan, dtype=np.float32)
-        return Fields(
-            times=utc_to_gps(held["time"].values),
-            lats=held["lat"].values,
-            lons=held["lon"].values,
-            vtec=held["vtec"].values.astype(np.float32),
-            vtec_sigma=(held["vertical_delay_sigma"].values / L1_M_PER_TECU).astype(np.float32),
-            support=held["support"].values.astype(np.uint16),
-            slope=held["slope"].values.astype(np.float32),
-            slope_sigma=held["slope_sigma"].values.astype(np.float32),
-            slope_east=nothing,
-            slope_north=nothing.copy(),
-            state=held["state"].values.astype(np.uint8),
-        )
+    return read_with_facts(path)[0]
+
+
+def read_with_facts(path: Path) -> tuple[Fields, dict[str, Any]]:
+    """The maps of a field.nc and what the file says of itself.  Raises FormatError where it is no such file."""
+    try:
+        with xr.open_dataset(path, engine="h5netcdf", mask_and_scale=True) as held:
+            return _fields(held), dict(held.attrs)
+    except (OSError, KeyError, ValueError) as trouble:
+        raise FormatError(
+            f"{path}: is not a field.nc that `skylag day` wrote ({trouble}); compute the day again", path=str(path),
+            line=0,
+        ) from trouble  # fmt: skip
+
+
+def _fields(held: xr.Dataset) -> Fields:
+    shape = held["vtec"].shape
+    nothing = np.full(shape, np.nan, dtype=np.float32)
+    return Fields(
+        times=utc_to_gps(held["time"].values),
+        lats=held["lat"].values,
+        lons=held["lon"].values,
+        vtec=held["vtec"].values.astype(np.float32),
+        vtec_sigma=(held["vertical_delay_sigma"].values / L1_M_PER_TECU).astype(np.float32),
+        support=held["support"].values.astype(np.uint16),
+        slope=held["slope"].values.astype(np.float32),
+        slope_sigma=held["slope_sigma"].values.astype(np.float32),
+        slope_east=nothing,
+        slope_north=nothing.copy(),
+        state=held["state"].values.astype(np.uint8),
+    )
+
+
+def write_difference(
+    path: Path, times: Times, lats: Floats, lons: Floats, ours: np.ndarray, theirs: np.ndarray, sigma: np.ndarray,
+    name: str,
+) -> None:  # fmt: skip
+    """A NetCDF file of two maps of content [TECU] and their difference, ours minus the published one of that name."""
+    axes = ("time", "lat", "lon")
+    held = xr.Dataset(
+        {
+            "difference": (axes, ours - theirs, {"units": "1e16 m-2", "long_name": "our content minus the published"}),
+            "difference_sigma": (axes, sigma, {"units": "1e16 m-2", "long_name": "standard error of difference"}),
+            "vtec": (axes, ours, {"units": "1e16 m-2", "long_name": "vertical total electron content, ours"}),
+            "published_vtec": (axes, theirs, {"units": "1e16 m-2", "long_name": f"the same of {name}"}),
+        },
+        coords={
+            "time": ("time", gps_to_utc(times), {"standard_name": "time", "long_name": "time, UTC"}),
+            "lat": ("lat", lats, {"standard_name": "latitude", "units": "degrees_north"}),
+            "lon": ("lon", lons, {"standard_name": "longitude", "units": "degrees_east"}),
+        },
+        attrs={"Conventions": "CF-1.11", "title": f"Content beside {name}", "source": "skylag", "comment": _CAUTION},
+    )
+    time = {"time": {"units": "seconds since 1980-01-06 00:00:00", "calendar": "standard", "dtype": "int64"}}
+    packing = {str(layer): {"zlib": True, "complevel": 4} for layer in held.data_vars}
+    held.to_netcdf(path, engine="h5netcdf", encoding={**packing, **time})

@@ -27,6 +27,7 @@ from skylag.impact.ground_augmentation import NextFront, StationDay
 from skylag.impact.satellite_augmentation import Availability
 from skylag.impact.single_frequency import LeftOver
 from skylag.impact.survey import Advice, Explanation
+from skylag.ionosphere.beside import Beside
 from skylag.ionosphere.geometry import geodetic
 from skylag.ionosphere.outlook import RANGES, Span
 from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Rays, Region
@@ -595,6 +596,7 @@ def station(found: StationDay, coming: NextFront | None) -> dict[str, Any]:
         "slope": _numbers(found.slope),
         "slope_sigma": _numbers(found.slope_sigma),
         "error_95_m": _numbers(found.error_95_m),
+        "state": [STATE_NAMES[int(code)] for code in found.state],
         "minutes": dict(found.minutes),
         "exceeded": [{**_span(one.start, one.end), "what": one.what, "why": one.why} for one in found.exceeded],
         "next_front": None if coming is None else {
@@ -680,3 +682,23 @@ def outlook_at(
 def outlook_record(region: str, facts: Mapping[str, Any]) -> dict[str, Any]:
     """What became of the outlooks of a region."""
     return {"region": region, **_plain(dict(facts)), "caution": sentences.CAUTION}
+
+
+# ---------------------------------------------------------------------------------------------- a published map
+
+
+def beside(found: Beside, said: Sequence[str], name: str) -> dict[str, Any]:
+    """A published map beside a day: sentences, facts, hours, and hourly maps of ours minus theirs [m of delay]."""
+    start, mean, rms, count = found.hourly()
+    return {
+        "name": name,
+        "said": list(said),
+        "facts": found.facts(),
+        "hours": {
+            "start_utc": utc_texts(start), "mean_tecu": _numbers(mean), "rms_tecu": _numbers(rms),
+            "cells": [int(one) for one in count],
+        },
+        "lats": _numbers(found.lats),
+        "lons": _numbers(found.lons),
+        "difference_m": array(_metres(found.hourly_maps())),
+    }  # fmt: skip
