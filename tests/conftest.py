@@ -2,8 +2,10 @@
 
 import csv
 import os
+import shutil
 from collections.abc import Callable, Generator, Iterator
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -78,6 +80,29 @@ def postgres_server() -> Iterator[PostgresServer]:
         pytest.skip(str(absent))
     with server:
         yield server
+
+
+def _chromium() -> str | None:
+    """Chromium of the system, where there is one; else what Playwright brought itself."""
+    named = os.environ.get("SKYLAG_CHROMIUM")
+    if named:
+        return named
+    return next(
+        (path for name in ("chromium", "chromium-browser", "google-chrome") if (path := shutil.which(name))), None
+    )
+
+
+@pytest.fixture(scope="module")
+def browser() -> Iterator[Any]:
+    """One headless Chromium for the tests of a file; its event loop ends with it, so that tests after it run their own."""
+    from playwright.sync_api import sync_playwright
+
+    with sync_playwright() as playwright:
+        started = playwright.chromium.launch(
+            executable_path=_chromium(), args=["--no-sandbox", "--disable-background-networking"]
+        )
+        yield started
+        started.close()
 
 
 @pytest.fixture(params=["sqlite", "postgresql"])

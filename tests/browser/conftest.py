@@ -3,8 +3,6 @@
 Only for tests marked `browser`; nothing of it is imported or started otherwise.
 """
 
-import os
-import shutil
 import socket
 import subprocess
 import sys
@@ -58,29 +56,6 @@ def _wait_until_well(address: str, process: "subprocess.Popen[bytes]", log: Path
         except (urllib.error.URLError, OSError):
             time.sleep(0.1)
     pytest.fail(f"the page server was not ready within 60 s:\n{log.read_text()[-3000:]}")
-
-
-def _chromium() -> str | None:
-    """Chromium of the system, where there is one; else what Playwright brought itself."""
-    named = os.environ.get("SKYLAG_CHROMIUM")
-    if named:
-        return named
-    return next(
-        (path for name in ("chromium", "chromium-browser", "google-chrome") if (path := shutil.which(name))), None
-    )
-
-
-@pytest.fixture(scope="module")
-def browser() -> Iterator[Any]:
-    """One headless Chromium for the tests of a file.  Its event loop ends with it: the tests that follow run their own."""
-    from playwright.sync_api import sync_playwright
-
-    with sync_playwright() as playwright:
-        started = playwright.chromium.launch(
-            executable_path=_chromium(), args=["--no-sandbox", "--disable-background-networking"]
-        )
-        yield started
-        started.close()
 
 
 # Stands in for plotly.js where a test does not look at what it draws.

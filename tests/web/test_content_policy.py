@@ -1,9 +1,9 @@
 """The page in a real Chromium under the real headers: it draws, breaks no rule of the content policy, and asks no other
 host for anything."""
 
-import shutil
 import threading
 from collections.abc import Iterator
+from typing import Any
 
 import pytest
 
@@ -39,41 +39,32 @@ def address(small_archive: Archive) -> Iterator[str]:
     yield told[0]
 
 
-def test_the_page_keeps_the_policy(address: str) -> None:
-    chromium = shutil.which("chromium") or shutil.which("chromium-browser")
-    if chromium is None:
-        pytest.skip("needs an installed Chromium")
-    from playwright.sync_api import sync_playwright
+def test_the_page_keeps_the_policy(address: str, browser: Any) -> None:
+    page = browser.new_page()
+    asked: list[str] = []
+    failed: list[str] = []
+    page.on("request", lambda request: asked.append(request.url))
+    page.on("response", lambda answer: failed.append(answer.url) if answer.status >= 400 else None)
+    page.on("pageerror", lambda error: failed.append(str(error)))
+    page.add_init_script(WATCH)
+    page.goto(address)
+    page.locator(".js-plotly-plot .main-svg").first.wait_for(state="attached", timeout=60_000)
+    page.wait_for_load_state("networkidle")
+    assert page.evaluate("window.stopped") == []
+    assert failed == []
+    elsewhere = [url for url in asked if not url.startswith((address, "data:", "blob:"))]
+    assert elsewhere == [] and any("/fields?" in url for url in asked)
 
-    with sync_playwright() as play:
-        browser = play.chromium.launch(
-            executable_path=chromium, args=["--no-sandbox", "--disable-background-networking"]
-        )
-        page = browser.new_page()
-        asked: list[str] = []
-        failed: list[str] = []
-        page.on("request", lambda request: asked.append(request.url))
-        page.on("response", lambda answer: failed.append(answer.url) if answer.status >= 400 else None)
-        page.on("pageerror", lambda error: failed.append(str(error)))
-        page.add_init_script(WATCH)
-        page.goto(address)
-        page.locator(".js-plotly-plot .main-svg").first.wait_for(state="attached", timeout=60_000)
-        page.wait_for_load_state("networkidle")
-        assert page.evaluate("window.stopped") == []
-        assert failed == []
-        elsewhere = [url for url in asked if not url.startswith((address, "data:", "blob:"))]
-        assert elsewhere == [] and any("/fields?" in url for url in asked)
-
-        # The watch itself sees: what the policy forbids is stopped and told.
-        page.evaluate("""() => {
-          const script = document.createElement("script");
-          script.textContent = "window.ran = true";
-          document.body.append(script);
-          fetch("http://192.0.2.1/").catch(() => {});
-        }""")
-        page.wait_for_timeout(500)
-        told = page.evaluate("window.stopped")
-        assert any(line.startswith("script-src") for line in told), told
-        assert any("connect-src" in line and "192.0.2.1" in line for line in told), told
-        assert page.evaluate("window.ran === undefined")
-        browser.close()
+    # The watch itself sees: what the policy forbids is stopped and told.
+    page.evaluate("""() => {
+      const script = document.createElement("script");
+      script.textContent = "window.ran = true";
+      document.body.append(script);
+      fetch("http://192.0.2.1/").catch(() => {});
+    }""")
+    page.wait_for_timeout(500)
+    told = page.evaluate("window.stopped")
+    assert any(line.startswith("script-src") for line in told), told
+    assert any("connect-src" in line and "192.0.2.1" in line for line in told), told
+    assert page.evaluate("window.ran === undefined")
+    page.close()
