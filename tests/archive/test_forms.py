@@ -26,6 +26,7 @@ def make_old(archive: Archive) -> None:
                 connection.exec_driver_sql(f"DROP TABLE {table.name}")
         connection.exec_driver_sql("DROP TABLE alembic_version")
         connection.exec_driver_sql("ALTER TABLE product DROP COLUMN provisional")
+        connection.exec_driver_sql("ALTER TABLE flag DROP COLUMN speed_sigma_m_s")
         connection.exec_driver_sql("DELETE FROM schema_version WHERE version > 1")
 
 

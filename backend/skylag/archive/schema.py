@@ -25,7 +25,7 @@ from sqlalchemy import (
     func,
 )
 
-SCHEMA_VERSION = 4
+SCHEMA_VERSION = 5
 
 metadata = MetaData()
 
@@ -105,6 +105,7 @@ flag = Table(
     Column("evidence", Text, nullable=False),
     Column("confirmed", Boolean, nullable=False),
     Column("track", Text, nullable=False),  # JSON: [[ns, lat, lon], ...]
+    Column("speed_sigma_m_s", Float(53)),
 )
 
 bias = Table(
@@ -240,3 +241,14 @@ activity_outlook = Table(
 )
 Index("activity_by_day", activity.c.day)
 Index("activity_outlook_by_day", activity_outlook.c.day, activity_outlook.c.made_ns)
+
+# What people changed about the sites of a region's own file: every state of it stays, the newest counts.
+site_change = Table(
+    "site_change",
+    metadata,
+    Column("region", String(200), primary_key=True),
+    Column("revision", Integer, primary_key=True, autoincrement=False),  # from 1
+    Column("made_at", DateTime(timezone=True), server_default=func.current_timestamp(), nullable=False),
+    Column("said", String(300), nullable=False),  # what was done, in words
+    Column("facts", Text, nullable=False),  # JSON: sites that are there instead or besides, names taken away
+)

@@ -10,6 +10,7 @@ import threading
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
 from contextlib import contextmanager
+from dataclasses import replace
 from pathlib import Path
 from typing import Any, Self, TypeVar
 
@@ -24,6 +25,7 @@ from skylag.archive.keys import Keys
 from skylag.archive.notices import Notices
 from skylag.archive.outlooks import Outlooks
 from skylag.archive.records import DayHead, DayRecord, SiteStates
+from skylag.archive.sites import Sites, newest
 from skylag.archive.tasks import Ending, Tasks, end_in
 from skylag.errors import FormatError, Missing, Refused, SkylagError
 from skylag.tables import UNSEEN, Biases, Fields, Flag, Products, Rays, Samples, Times
@@ -135,6 +137,7 @@ class Archive:
         self.notices = Notices(self._write, self._reading)
         self.outlooks = Outlooks(self._write, self._reading)
         self.activity = Activity(self._write, self._reading)
+        self.sites = Sites(self._write, self._reading)
         if url.get_backend_name() == "sqlite":
             self._read_engine = _sqlite_engine(url, "BEGIN")
             self._write_engine = _sqlite_engine(url, "BEGIN IMMEDIATE")
@@ -247,18 +250,23 @@ class Archive:
             return int(connection.scalar(sa.select(sa.func.count()).select_from(days)) or 0), int(versions or 0)
 
     def day(self, region: str, day: Day, version: int | None = None) -> DayRecord:
-        """The plain facts of a day; the pinned or newest version when none is named."""
+        """The plain facts of a day; the pinned or newest version when none is named.
+
+        The sites are those in force now, whatever the day was computed with (`site_states` has these).
+        """
         with self._reading() as connection:
             row = self._product_row(connection, region, day, version)
+            changes = newest(connection, row.region)
             times = self._times(connection, row.id)
             ours = (schema.product.c.region == row.region) & (schema.product.c.day == row.day)
             versions = connection.scalars(
                 sa.select(schema.product.c.version).where(ours).order_by(schema.product.c.version)
             ).all()
         facts = records.from_text(row.record)
+        own = records.region_from(facts["region"])
         return DayRecord(
             head=_head(row, versions),
-            region=records.region_from(facts["region"]),
+            region=replace(own, sites=changes.over(own.sites)),
             receivers=tuple(records.receiver_from(one) for one in facts["receivers"]),
             times=times,
             lats=np.array(facts["lats"], dtype=np.float64),
@@ -343,7 +351,7 @@ class Archive:
         )  # fmt: skip
 
     def site_states(self, region: str, day: Day, version: int | None = None) -> SiteStates:
-        """The states of the region's sites through a day, with their reasons."""
+        """The states of the sites that the region had when the day was computed, with their reasons."""
         with self._reading() as connection:
             row = self._product_row(connection, region, day, version)
             times = self._times(connection, row.id)
@@ -677,6 +685,7 @@ def _flag_row(flag: Flag) -> dict[str, Any]:
         "speed_m_s": _or_none(flag.speed_m_s), "heading_deg": _or_none(flag.heading_deg),
         "state": flag.state, "evidence": flag.evidence, "confirmed": bool(flag.confirmed),
         "track": records.to_text([[_nanoseconds(t), float(lat), float(lon)] for t, lat, lon in flag.track]),
+        "speed_sigma_m_s": _or_none(flag.speed_sigma_m_s),
     }  # fmt: skip
 
 
@@ -687,6 +696,7 @@ def _flag(row: Any) -> Flag:
         speed_m_s=_number(row.speed_m_s), heading_deg=_number(row.heading_deg), state=row.state,
         evidence=row.evidence, confirmed=bool(row.confirmed),
         track=tuple((_instant(t), float(lat), float(lon)) for t, lat, lon in records.from_text(row.track)),
+        speed_sigma_m_s=_number(row.speed_sigma_m_s),
     )  # fmt: skip
 
 
