@@ -94,7 +94,7 @@ def _chromium() -> str | None:
 
 @pytest.fixture(scope="module")
 def browser() -> Iterator[Any]:
-    """One headless Chromium for the tests of a file; its event loop ends with it, so that tests after it run their own."""
+    """One headless Chromium for the tests of a file; its event loop ends with it, as later tests run their own."""
     from playwright.sync_api import sync_playwright
 
     with sync_playwright() as playwright:
