@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from tests.conftest import Evidence
 
 from invented import network
 from skylag import chain
@@ -68,3 +69,32 @@ def test_below_the_mask_nothing_counts() -> None:
     found = sky.spread(np.array([[90.0, 10.0, 10.0, 10.0]]), np.array([[0.0, 0.0, 120.0, 240.0]]), 15.0)
     assert found.count.tolist() == [1]
     assert np.isnan(found.position[0])
+
+
+def test_the_nominal_constellation_keeps_what_is_promised_of_it(rng: np.random.Generator, evidence: Evidence) -> None:
+    """Dilution of position over the whole Earth and a day, above 5 degrees."""
+    world = sky.nominal()
+    places = zip(np.degrees(np.arcsin(rng.uniform(-1, 1, 60))), rng.uniform(-180, 180, 60), strict=True)
+    good = [sky.spread(*world.look(lat, lon), 5.0).position <= 6.0 for lat, lon in places]
+    source = "GPS SPS Performance Standard: dilution of position of 6 or less, 98 % of the globe at least (from memory)"
+    evidence("share of globe and day with dilution of position beyond 6, nominal constellation", source=source,
+             expected=0.02, got=float(1 - np.mean(good)), tolerance=0.0, at_most=True)  # fmt: skip
+    assert min(sky.spread(*world.look(lat, 10.0), 5.0).count.min() for lat in range(-90, 91, 15)) >= 4
+
+
+def test_the_nominal_constellation_goes_round_as_satellites_do() -> None:
+    """Height, inclination, two turns in a sidereal day, planes 60 degrees apart."""
+    world = sky.nominal(60.0)
+    radius = np.linalg.norm(world.position_m, axis=-1)
+    assert radius == pytest.approx(26_559.7e3)
+    highest = np.degrees(np.arcsin(np.abs(world.position_m[..., 2]).max(axis=0) / 26_559.7e3))
+    assert highest == pytest.approx(55.0, abs=0.2)
+    turn = 2 * np.pi * np.arange(len(world.times)) / len(world.times)  # undo the Earth's own turn
+    x, y, z = np.moveaxis(world.position_m, -1, 0)
+    fixed = np.stack([x * np.cos(turn)[:, None] - y * np.sin(turn)[:, None],
+                      x * np.sin(turn)[:, None] + y * np.cos(turn)[:, None], z], axis=-1)  # fmt: skip
+    assert fixed[0] == pytest.approx(fixed[len(fixed) // 2], abs=1e3)
+    normal = np.cross(fixed[0], fixed[60])
+    node = np.degrees(np.arctan2(normal[:, 0], -normal[:, 1])).reshape(6, 4)
+    assert np.ptp(node, axis=1) == pytest.approx(0, abs=1e-6)
+    assert np.diff(node[:, 0]) % 360 == pytest.approx(60.0, abs=1e-6)

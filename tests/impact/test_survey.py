@@ -63,17 +63,52 @@ def test_quantile_of_a_size(middle: float, sigma: float, share: float) -> None:
 
 
 def test_size_of_errors_by_hand() -> None:
-    """2 mm/km, known exactly, over 10 km: 20 mm of vertical delay; 2.0 and 3.5 times that without satellites."""
+    """2 mm/km, known exactly, over 10 km: 20 mm of vertical delay, and what the nominal constellation makes of it."""
     found = survey.advise(a_job(), some_fields(2.0, 0.0))
+    across, height = survey.nominal_factors(PLACE, 15.0, 400e3)
     assert found.differential_95 == pytest.approx(20.0, abs=1e-3)
-    assert found.horizontal_95 == pytest.approx(40.0, abs=1e-2)
-    assert found.vertical_95 == pytest.approx(70.0, abs=1e-2)
-    # 50 mm of height allow 50 / (3.5 * 2) km, 30 mm of horizontal 30 / (2 * 2) km.
-    assert found.longest_km == pytest.approx(50 / 7, abs=1e-3)
+    assert found.horizontal_95 == pytest.approx(20 * across, abs=1e-2)
+    assert found.vertical_95 == pytest.approx(20 * height, abs=1e-2)
+    assert found.longest_km == pytest.approx(min(50 / (2 * height), 30 / (2 * across)), abs=1e-3)
     assert set(found.verdict) == {survey.AVOID}
     assert found.index == pytest.approx(2.0)
     assert set(found.index_words) == {"negligible"}
-    assert "usual" in " ".join(found.assumptions) or "No satellites are known" in " ".join(found.assumptions)
+    assert f"{across:.1f} m across and {height:.1f} m of height" in " ".join(found.assumptions)
+
+
+def test_the_sky_of_the_region_does_not_differ_much_from_the_nominal_one() -> None:
+    """On two invented days 2.02 and 3.15 were the middle values at 40 S, from satellites that were tracked."""
+    elevation, azimuth = sky.nominal().look(*PLACE)
+    across, height = survey._factors(elevation, azimuth, 15.0, 400e3)
+    assert np.median(across) == pytest.approx(2.02, rel=0.1)
+    assert np.median(height) == pytest.approx(3.15, rel=0.1)
+    high = survey.nominal_factors(PLACE, 15.0, 400e3)
+    assert (across <= high[0]).mean() >= 0.95
+    assert (height <= high[1]).mean() >= 0.95
+
+
+def test_errors_follow_the_geometry_of_each_satellite() -> None:
+    """Horizontal and height from one line of sight at a time, by plain least squares."""
+    rng = np.random.default_rng(11)
+    elevation = np.degrees(np.arcsin(rng.uniform(np.sin(np.radians(16)), 1, 8)))
+    azimuth = rng.uniform(0, 360, 8)
+    across, height = survey._factors(elevation[None], azimuth[None], 15.0, 400e3)
+    e, a = np.radians(elevation), np.radians(azimuth)
+    rows = np.stack([np.cos(e) * np.sin(a), np.cos(e) * np.cos(a), np.sin(e), -np.ones(8)], axis=1)
+    root = np.sin(e)
+    slant = 1 / np.sqrt(1 - (6371.0 / 6771.0 * np.cos(e)) ** 2)
+    moved = np.linalg.lstsq(rows * root[:, None], np.diag(slant) * root[:, None], rcond=None)[0]
+    alike = moved.sum(axis=1)
+    apart = np.sqrt((moved**2).sum(axis=1))
+    assert across[0] == pytest.approx(max(np.hypot(*apart[:2]), np.hypot(*alike[:2])), rel=1e-3)
+    assert height[0] == pytest.approx(max(apart[2], abs(alike[2])), rel=1e-3)
+
+
+def test_a_mask_that_leaves_no_position_stops_work() -> None:
+    found = survey.advise(a_job(mask_deg=40.0), some_fields(0.5, 0.1))
+    assert set(found.verdict) == {survey.AVOID}
+    assert "do not always give a position" in found.reasons[0]
+    assert found.longest_km.max() == 0.0
 
 
 def test_a_quiet_day_is_one_window() -> None:

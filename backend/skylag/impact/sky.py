@@ -22,6 +22,17 @@ _SYNCHRONOUS_BEIDOU = frozenset(
     f"C{n:02d}" for n in (*range(1, 11), 13, 16, 31, 38, 39, 40, 56, *range(59, 64))
 )  # as broadcast by 2025; from memory
 
+# The 24 slots of the GPS baseline constellation: per plane, right ascension of the ascending node and arguments of
+# latitude [deg] at 1 July 1993 00:00 UTC, when Greenwich stood at 18 h 36 min 14.4 s; semi-major axis, inclination.
+# Source: GPS Standard Positioning Service Performance Standard, table of baseline slots (figures from memory).
+_SLOTS = (
+    (272.847, (268.126, 161.786, 11.676, 41.806)), (332.847, (80.956, 173.336, 309.976, 204.376)),
+    (32.847, (111.876, 11.796, 339.666, 241.556)), (92.847, (135.226, 265.446, 35.136, 167.356)),
+    (152.847, (197.046, 302.596, 66.066, 333.686)), (212.847, (238.886, 345.226, 105.206, 135.346)),
+)  # fmt: skip
+_SLOT_RADIUS_M, _SLOT_INCLINATION_DEG, _SLOT_GREENWICH_DEG = 26_559.7e3, 55.0, 279.06
+_SIDEREAL_DAY_S = 86_164.1
+
 
 @dataclass(frozen=True)
 class Sky:
@@ -40,6 +51,29 @@ class Sky:
     def look(self, lat: float, lon: float, height_m: float = 0.0) -> tuple[Floats, Floats]:
         """Elevation and azimuth [deg], (T, S), from a place; NaN where a satellite is not known."""
         return geometry.look(geometry.earth_fixed(lat, lon, height_m).tolist(), self.position_m)
+
+
+def nominal(step_s: float = 300.0) -> Sky:
+    """The 24 slots of the GPS baseline constellation through one turn of the Earth, after which all repeats.
+
+    It has no date: its times count from zero.  For days on which no satellite is known.
+    """
+    count = round(_SIDEREAL_DAY_S / step_s)
+    turn_rad = np.arange(count) * (2.0 * np.pi / count)
+    node = np.repeat([slot[0] for slot in _SLOTS], [len(slot[1]) for slot in _SLOTS])
+    argument = np.concatenate([slot[1] for slot in _SLOTS])
+    # Two revolutions of a satellite to one turn of the Earth.
+    u_rad = np.radians(argument)[None, :] + 2.0 * turn_rad[:, None]
+    node_rad = np.radians(node - _SLOT_GREENWICH_DEG)[None, :] - turn_rad[:, None]
+    tilt_rad = np.radians(_SLOT_INCLINATION_DEG)
+    x, y = np.cos(u_rad), np.sin(u_rad) * np.cos(tilt_rad)
+    position = _SLOT_RADIUS_M * np.stack(
+        [x * np.cos(node_rad) - y * np.sin(node_rad), x * np.sin(node_rad) + y * np.cos(node_rad),
+         np.sin(u_rad) * np.sin(tilt_rad)], axis=-1,
+    )  # fmt: skip
+    times = np.datetime64(0, "ns") + (np.arange(count) * (_SIDEREAL_DAY_S / count * 1e9)).astype("timedelta64[ns]")
+    names = np.array([f"G{number:02d}" for number in range(1, len(node) + 1)])
+    return Sky(times, names, position, "the 24 slots of the GPS baseline constellation")
 
 
 def from_orbits(

@@ -41,9 +41,7 @@ INDEX_CLASSES = ((2.0, "negligible"), (4.0, "weak"), (8.0, "strong"), (np.inf, "
 INDEX_REACH_KM = 150.0
 LONGEST_KM = 100.0  # baselines beyond are not spoken of
 _FIX_ELEVATION_DEG = 30.0
-# Metres of position per metre of differential vertical delay where no satellites are known: a usual sky (medians of
-# 2.02 and 3.15 over two invented days; our choice).
-_USUAL_HORIZONTAL, _USUAL_VERTICAL = 2.0, 3.5
+_OF_THE_DAY = 0.95  # where no satellites are known: what this share of a day stays under counts
 
 
 @dataclass(frozen=True)
@@ -172,7 +170,7 @@ def advise(
 ) -> Advice:
     """A job through the day of the maps.
 
-    sky  satellites at the epochs of the maps; without it a usual geometry is taken, and said
+    sky  satellites at the epochs of the maps; without it the geometry is that of the nominal constellation, and said
     """
     limits = thresholds or Thresholds()
     seen, warned, middle, sigma, own = _differential(job, fields, limits)
@@ -291,16 +289,23 @@ def _geometry(
     Weights are the squared sine of the elevation (common practice).  The larger of two cases counts: delays of the
     satellites unrelated to each other, and all alike.
     """
-    ones = np.ones(len(times))
     if sky is None:
-        return _USUAL_HORIZONTAL * ones, _USUAL_VERTICAL * ones, np.full(len(times), -1), np.nan * ones
+        across, height = nominal_factors(place, job.mask_deg, shell_height_m)
+        ones = np.ones(len(times))
+        return across * ones, height * ones, np.full(len(times), -1), np.nan * ones
     at = np.clip(np.searchsorted(sky.times, times), 0, len(sky.times) - 1)
     elevation, azimuth = (values[at] for values in sky.look(*place))
     off = np.abs(sky.times[at] - times) > np.timedelta64(120, "s")
     elevation[off] = np.nan
     spread = satellites.spread(elevation, azimuth, job.mask_deg)
+    horizontal, vertical = _factors(elevation, azimuth, job.mask_deg, shell_height_m)
+    return horizontal, vertical, spread.count, spread.position
+
+
+def _factors(elevation: Floats, azimuth: Floats, mask_deg: float, shell_height_m: float) -> tuple[Floats, Floats]:
+    """Metres of horizontal and of height (T,) per metre of differential vertical delay on satellites (T, S)."""
     with np.errstate(invalid="ignore"):
-        above = elevation >= job.mask_deg
+        above = elevation >= mask_deg
     rows = satellites.rows_of(elevation, azimuth)
     weight = np.where(above, np.sin(np.radians(np.where(above, elevation, 90.0))) ** 2, 0.0)
     solve = np.einsum("tij,tsj,ts->tis", satellites.position_covariance(rows, weight), rows, weight)
@@ -308,7 +313,15 @@ def _geometry(
     apart = np.sqrt(np.einsum("tis,ts->ti", solve**2, factor**2))
     alike = np.abs(np.einsum("tis,ts->ti", solve, factor))
     horizontal = np.maximum(np.hypot(apart[:, 0], apart[:, 1]), np.hypot(alike[:, 0], alike[:, 1]))
-    return horizontal, np.maximum(apart[:, 2], alike[:, 2]), spread.count, spread.position
+    return horizontal, np.maximum(apart[:, 2], alike[:, 2])
+
+
+def nominal_factors(place: tuple[float, float], mask_deg: float, shell_height_m: float) -> tuple[float, float]:
+    """The same two for the nominal constellation: what 95 % of a day stays under; infinite where they give nothing."""
+    elevation, azimuth = satellites.nominal().look(*place)
+    found = _factors(elevation, azimuth, mask_deg, shell_height_m)
+    high = [float(np.quantile(np.nan_to_num(one, nan=np.inf), _OF_THE_DAY, method="higher")) for one in found]
+    return high[0], high[1]
 
 
 def hourly_index(fields: Fields, places: Sequence[tuple[float, float]]) -> tuple[Times, Floats]:
@@ -357,6 +370,8 @@ def _verdicts(
             why = f"{int(count[t])} satellites above {job.mask_deg:g} degrees, {job.least_satellites} are needed"
         elif known[t] and not dilution[t] <= job.most_dilution:
             why = f"dilution of position {float(dilution[t]):.1f}, {job.most_dilution:g} is the most"
+        elif not np.isfinite(told["vertical_95"][t] + told["horizontal_95"][t]):
+            why = f"the satellites above {job.mask_deg:g} degrees do not always give a position"
         elif _only_sigma(job, told, t):
             seen_well = False
             why = f"the slope is known to ± {told['slope_sigma'][t]:.0f} mm/km only: nothing can be said"
@@ -445,8 +460,7 @@ def _assumptions(job: Job, sky: Sky | None, shell_height_m: float) -> tuple[str,
         f"Satellites: {sky.source}, above {job.mask_deg:g} degrees, weighted by the squared sine of the elevation; "
         "their delays unrelated or all alike, whichever hurts more."
         if sky is not None
-        else f"No satellites are known for this day: {_USUAL_HORIZONTAL:g} m of horizontal and {_USUAL_VERTICAL:g} m "
-        "of height per metre of vertical delay are taken."
+        else _without_sky(job, shell_height_m)
     )
     network = (
         "What interpolation leaves: the place's vertical delay against the plane through the nearest reference "
@@ -464,6 +478,15 @@ def _assumptions(job: Job, sky: Sky | None, shell_height_m: float) -> tuple[str,
         f"half a cycle, {HALF_CYCLE_MM:.1f} mm on 1575.42 MHz (9.5 ppm over 10 km); thin shell at "
         f"{shell_height_m / 1000:g} km.",
         "Tolerances are compared with what 95 % of errors stay under.",
+    )
+
+
+def _without_sky(job: Job, shell_height_m: float) -> str:
+    across, height = np.max([nominal_factors(place, job.mask_deg, shell_height_m) for place in job.places], axis=0)
+    return (
+        f"No satellites are known for this day: the 24 slots of the GPS baseline constellation are taken, above "
+        f"{job.mask_deg:g} degrees; 95 % of a day they make at most {across:.1f} m across and {height:.1f} m of height "
+        "from a metre of vertical delay."
     )
 
 
