@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+from tests.journeys.newcomer import Newcomer, demo
 from tests.postgres_server import NoServer, PostgresServer
 
 from skylag.archive import Archive, open_archive
@@ -103,6 +104,12 @@ def browser() -> Iterator[Any]:
         )
         yield started
         started.close()
+
+
+@pytest.fixture(scope="session")
+def newcomer(tmp_path_factory: pytest.TempPathFactory) -> Newcomer:
+    """The README's first command, run once; its archive of the three sample days is to be copied, not changed."""
+    return demo(tmp_path_factory.mktemp("newcomer"))
 
 
 @pytest.fixture(params=["sqlite", "postgresql"])

@@ -14,7 +14,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from skylag.errors import FormatError
-from skylag.tables import Biases, Calibration, Flag, Samples
+from skylag.tables import Biases, Bools, Calibration, Flag, Samples
 from skylag.timescales import gps_to_utc
 
 BIAS_COLUMNS = ("kind", "name", "system", "code1", "code2", "bias_ns", "sigma_ns", "datum")
@@ -75,6 +75,24 @@ def utc_text(gps: np.datetime64) -> str:
 
 def _number(value: float, digits: int) -> str:
     return f"{value:.{digits}f}" if np.isfinite(value) else ""
+
+
+def slants_csv(samples: Samples, chosen: Bools) -> str:
+    """The columns of slant.parquet as text, a row per chosen line of sight (N,), by time; GPS time without a zone."""
+    rays = samples.rays
+    names = np.array([receiver.name for receiver in rays.receivers])
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    writer.writerow(SLANT_COLUMNS)
+    rows = np.flatnonzero(chosen)
+    for i in rows[np.argsort(rays.time[rows], kind="stable")]:
+        writer.writerow([
+            str(rays.time[i].astype("datetime64[s]")), names[rays.receiver[i]], rays.satellites[int(rays.satellite[i])],
+            int(rays.arc[i]), f"{rays.elevation[i]:.2f}", f"{rays.azimuth[i]:.2f}", f"{rays.pierce_lat[i]:.4f}",
+            f"{rays.pierce_lon[i]:.4f}", _number(samples.stec[i], 3), _number(samples.vtec[i], 3),
+            _number(samples.sigma[i], 3),
+        ])  # fmt: skip
+    return out.getvalue()
 
 
 def write_slants(samples: Samples, path: Path) -> None:

@@ -50,7 +50,7 @@ def near(samples: Samples, lat: float, lon: float) -> tuple[Sightline, ...]:
     rays = samples.rays
     if not len(rays):
         return ()
-    away_km = _distance_km(rays.pierce_lat, rays.pierce_lon, lat, lon)
+    away_km = distance_km(rays.pierce_lat, rays.pierce_lon, lat, lon)
     every = max(1, round(THIN_TO_S / max(rays.interval_s, 1.0)))
     # The same epochs for every line, so that two receivers compare.
     _, epoch = np.unique(rays.time, return_inverse=True)
@@ -87,7 +87,7 @@ def near(samples: Samples, lat: float, lon: float) -> tuple[Sightline, ...]:
     return tuple(line for group in worth[:MOST_SATELLITES] for line in group[:MOST_OF_ONE_SATELLITE])
 
 
-def _distance_km(lats: Floats, lons: Floats, lat: float, lon: float) -> Floats:
+def distance_km(lats: Floats, lons: Floats, lat: float, lon: float) -> Floats:
     """Great-circle distances on the mean sphere [km]."""
     a, b = np.deg2rad(lats), np.deg2rad(lat)
     half = np.sin((a - b) / 2) ** 2 + np.cos(a) * np.cos(b) * np.sin(np.deg2rad(lons - lon) / 2) ** 2
