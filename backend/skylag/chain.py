@@ -5,7 +5,7 @@ file, asks no clock: whoever calls reads (`formats`), keeps (`archive`) and meas
 """
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -18,7 +18,7 @@ from skylag.ionosphere import field as vertical_field
 from skylag.ionosphere.adjustment import AdjustmentChoices
 from skylag.ionosphere.arcs import ArcChoices, cut, reasons, slip_list
 from skylag.ionosphere.background import Background
-from skylag.ionosphere.field import FieldChoices, Hour, Made
+from skylag.ionosphere.field import FieldChoices, Hour
 from skylag.ionosphere.fronts import FrontChoices
 from skylag.ionosphere.irregularity import IrregularityChoices
 from skylag.ionosphere.pairs import choose
@@ -40,13 +40,29 @@ from skylag.tables import (
 Progress = Callable[[str, float], None]
 
 
+# What becomes of published satellite biases: the adjustment holds them, draws upon them, or does without.
+HOLD, DRAW, IGNORE = "hold", "draw", "ignore"
+
+
 @dataclass(frozen=True)
 class Choices:
-    """Everything a person may choose about a day, with defaults that suit a regional network."""
+    """Everything a person may choose about a day, with defaults that suit a regional network.
+
+    mapping_function   `geometry.SINGLE_LAYER` or `geometry.MODIFIED_SINGLE_LAYER`
+    shell_height_km    of the thin shell; None: as the region says
+    published_biases   HOLD, DRAW or IGNORE
+    earlier_days       how far back the archive may be asked for biases of an earlier day, 0: not at all; they are
+                       drawn upon where no published ones are in use
+    bias_walk_ns_per_day  by how much a bias that is drawn upon may have walked in a day (`AdjustmentChoices`)
+    """
 
     signals: Mapping[str, tuple[str, str]] = field(default_factory=dict)
     minimum_elevation: float = 10.0
     mapping_function: str = geometry.SINGLE_LAYER
+    shell_height_km: float | None = None
+    published_biases: str = HOLD
+    earlier_days: int = 0
+    bias_walk_ns_per_day: float = 0.1
     epoch_step_s: float = 300.0
     thin_to_s: float | None = None
     arcs: ArcChoices = field(default_factory=ArcChoices)
@@ -155,14 +171,14 @@ def estimate(
     channels: Mapping[str, int] | None = None,
     progress: Progress | None = None,
     beyond: Background | None = None,
-    run: Callable[[Callable[[Hour], Made], Iterable[Hour]], Iterable[Made]] = map,
+    run: Callable[[Callable[[Hour], Any], Iterable[Hour]], Iterable[Any]] = map,
 ) -> Estimate:
     """All products of one network day from the rays of its receivers.
 
     day       the GPS-time day; maps are made from its first to its last epoch that has data
     progress  told the stage and the share of it done
     beyond    what the maps fade into where no line of sight passes (`background_of`); a plain model when None
-    run       how the hours of maps are made: `map`, or an executor's
+    run       how hours are made, of maps and of checks of them: `map`, or an executor's
     """
     tell = progress or (lambda stage, share: None)
     tell("biases", 0.0)
@@ -178,7 +194,7 @@ def estimate(
     fields = vertical_field.fit(
         samples, region.lats, region.lons, epochs, choices.maps, lambda share: tell("maps", share), beyond, run
     )
-    foretold = left_out.check(samples, region.lats, region.lons, epochs, choices.maps)
+    foretold = left_out.check(samples, region.lats, region.lons, epochs, choices.maps, run=run)
     tell("slopes", 0.0)
     steep = slopes.measure(rays, samples, fields, choices.slopes)
     tell("fronts", 0.0)
@@ -198,6 +214,28 @@ def estimate(
         calibration, samples, judged.fields, judged.flags, judged.site_states, judged.site_reasons, facts,
         limits_of_sight(rays, calibration),
     )  # fmt: skip
+
+
+def known_biases(
+    choices: Choices, published: Biases | None, earlier: Biases | None
+) -> tuple[Biases | None, AdjustmentChoices, tuple[str, ...]]:
+    """What the adjustment is told of biases: the table, its choices with the way to use it, and sentences to tell.
+
+    published  of bias files; earlier  of an earlier day
+    """
+    walk = replace(choices.adjustment, prior_walk_ns_per_day=choices.bias_walk_ns_per_day)
+    said: list[str] = []
+    if published is not None and choices.published_biases == IGNORE:
+        said.append(f"bias files are there but not used, as asked for: {published.source}")
+        published = None
+    if published is not None:
+        if earlier is not None:
+            said.append(f"biases of {earlier.source} are not drawn upon, since bias files are in use")
+        drawn = choices.published_biases == DRAW
+        return published, walk if drawn else choices.adjustment, tuple(said)
+    if earlier is not None:
+        return earlier, walk, tuple(said)
+    return None, choices.adjustment, tuple(said)
 
 
 def limits_of_sight(rays: Rays, calibration: Calibration) -> tuple[str, ...]:

@@ -5,6 +5,7 @@ Exit status: 0 all went well; 1 done, but some inputs were left out (each is nam
 """
 
 import argparse
+import contextlib
 import os
 import sys
 import threading
@@ -17,7 +18,7 @@ from typing import TextIO
 
 import numpy as np
 
-from skylag import advice_door, events_door, settings, work_door
+from skylag import advice_door, compare_door, events_door, settings, work_door
 from skylag.chain import Choices
 from skylag.errors import Refused, SkylagError
 from skylag.formats import results
@@ -79,6 +80,7 @@ def command_parser() -> argparse.ArgumentParser:
     _hindcast_parser(commands)
     advice_door.add(commands, CAUTION)
     events_door.add(commands, CAUTION)
+    compare_door.add(commands, CAUTION)
     work_door.add(commands, CAUTION, _date, _minutes)
     return parser
 
@@ -97,7 +99,8 @@ def _day_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]")
         epilog="examples:\n"
         "  skylag day june-25/ --out results/\n"
         "  skylag day base.rnx nav.rnx --out results/ --signals G=C1C-C2W,E=C1C-C5Q\n"
-        "  skylag day archive/ --date 2031-03-12 --region region.toml --out results/ --archive skylag-archive\n\n"
+        "  skylag day archive/ --date 2031-03-12 --region region.toml --out results/ --archive skylag-archive\n"
+        "  skylag day tuesday/ --region region.toml --out results/ --archive skylag-archive --earlier-days 7\n\n"
         "signal pairs, best first; without --signals the first that a receiver brings is used:\n" + pairs + "\n\n"
         "results in DIR: biases.csv, slant.parquet, field.nc, flags.csv, day.json (columns: README).\n"
         "exit status: 0 all inputs used; 1 done, some inputs left out (each named); 2 bad command; 3 no result.\n\n"
@@ -112,6 +115,7 @@ def _day_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]")
     parser.add_argument("--archive", default="", metavar="PLACE", help="also keep the day in this archive")
     parser.add_argument("--workers", default="", metavar="SPEC", help="local:N, threads:N or dask://host:port")
     parser.add_argument("--quiet", action="store_true", help="no progress, only what went wrong")
+    settings.add_estimation(parser)
     parser.set_defaults(run=_day)
 
 
@@ -186,12 +190,16 @@ def _minutes(text: str) -> float:
 
 def _day(options: argparse.Namespace) -> int:
     region = settings.read_region(options.region) if options.region else None
-    choices = Choices(signals=parse_wanted(options.signals), epoch_step_s=options.every * 60.0)
+    choices = settings.estimation_from(options, options.region).choices(
+        Choices(signals=parse_wanted(options.signals), epoch_step_s=options.every * 60.0)
+    )
     bar = _Bar("day", quiet=options.quiet)
-    with open_executor(options.workers or settings.default_workers()) as executor:
+    with contextlib.ExitStack() as opened:
+        executor = opened.enter_context(open_executor(options.workers or settings.default_workers()))
         made = work.network_day(
-            options.inputs, region=region, day=options.date, choices=choices, executor=executor, progress=bar.tell
-        )
+            options.inputs, region=region, day=options.date, choices=choices, executor=executor, progress=bar.tell,
+            earlier=_earlier(opened, options.archive, choices.earlier_days),
+        )  # fmt: skip
     bar.close()
     for item in made.left_out:
         print(f"left out: {item}", file=sys.stderr)
@@ -211,6 +219,23 @@ def _day(options: argparse.Namespace) -> int:
         _tell_day(made.products)
         print("results: " + ", ".join(str(path) for path in paths))
     return 1 if made.left_out else 0
+
+
+def _earlier(opened: contextlib.ExitStack, place: str, days: int) -> work.Earlier | None:
+    """Where biases of earlier days are asked for; None where they are not wanted.
+
+    Raises Refused where no archive is named.
+    """
+    if not days:
+        return None
+    if not place:
+        raise Refused(
+            "earlier_days: the days before are kept in an archive; name it with --archive",
+            name="earlier_days", value=days, allowed="with --archive",
+        )  # fmt: skip
+    from skylag.archive import open_archive  # a database is opened only where one is asked for
+
+    return work.earlier_biases(opened.enter_context(open_archive(place)), days)
 
 
 def _tell_day(products: Products) -> None:

@@ -3,14 +3,17 @@
 The only place that reads environment variables and region files.  Never reaches into the science.
 """
 
+import argparse
 import os
 import tomllib
 from collections.abc import Mapping
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 from pathlib import Path
-from typing import Any
+from typing import Any, NoReturn
 
+from skylag.chain import DRAW, HOLD, IGNORE, Choices
 from skylag.errors import FormatError, Refused
+from skylag.ionosphere.geometry import MODIFIED_SINGLE_LAYER, SINGLE_LAYER
 from skylag.tables import USE_KINDS, Region, Site, Thresholds, Use
 
 
@@ -27,6 +30,136 @@ class Settings:
     host: str = "127.0.0.1"
     port: int = 8017
     workers: str = ""
+
+
+@dataclass(frozen=True)
+class Estimation:
+    """How biases and levels are found, in words that a command line, a region file and a queued task can hold.
+
+    mapping              from slant to vertical: "single" layer, or "modified" single layer (then without a high layer)
+    shell_height_km      of the shell, 100 to 1000; 0: the region's
+    published_biases     satellites of bias files: "hold" at them, "draw" upon them as of another day, or "ignore" them
+    earlier_days         0, or how many days back the archive is asked for biases to draw upon
+    bias_walk_ns_per_day  by how much a bias that is drawn upon may have walked in a day, 0.01 to 5
+    drift_hours          0: one bias per receiver and day; or one per so many hours, 1 to 24
+    repair_slips         repair cycle slips whose whole numbers are certain, instead of cutting the arc
+    """
+
+    mapping: str = "single"
+    shell_height_km: float = 0.0
+    published_biases: str = HOLD
+    earlier_days: int = 0
+    bias_walk_ns_per_day: float = 0.1
+    drift_hours: float = 0.0
+    repair_slips: bool = False
+
+    def __post_init__(self) -> None:
+        for name, allowed in WORDS.items():
+            if getattr(self, name) not in allowed:
+                _refuse(name, getattr(self, name), " or ".join(allowed))
+        for name, (least, most, zero) in RANGES.items():
+            value = getattr(self, name)
+            if isinstance(value, bool) or not isinstance(value, int | float):
+                _refuse(name, value, "a number")
+            if not (least <= value <= most or (zero and value == 0)):
+                _refuse(name, value, f"{least:g} to {most:g}" + (", or 0" if zero else ""))
+        if self.earlier_days != int(self.earlier_days):
+            _refuse("earlier_days", self.earlier_days, "a whole number of days")
+        if not isinstance(self.repair_slips, bool):
+            _refuse("repair_slips", self.repair_slips, "true or false")
+
+    def choices(self, base: Choices | None = None) -> Choices:
+        """The choices of a day that say the same."""
+        base = base or Choices()
+        adjustment = replace(base.adjustment, drift_hours=self.drift_hours or None)
+        if self.mapping == "modified":
+            # This mapping was fitted with a plasmasphere in it: a high layer beside it would count it twice.
+            adjustment = replace(adjustment, high_layer=0.0, high_layer_sigma=1e-3)
+        return replace(
+            base,
+            mapping_function=MODIFIED_SINGLE_LAYER if self.mapping == "modified" else SINGLE_LAYER,
+            shell_height_km=self.shell_height_km or None,
+            published_biases=self.published_biases,
+            earlier_days=int(self.earlier_days),
+            bias_walk_ns_per_day=self.bias_walk_ns_per_day,
+            adjustment=adjustment,
+            arcs=replace(base.arcs, repair=self.repair_slips),
+        )
+
+
+WORDS = {"mapping": ("single", "modified"), "published_biases": (HOLD, DRAW, IGNORE)}
+# Least, most, and whether 0 says "not at all".
+RANGES = {
+    "shell_height_km": (100.0, 1000.0, True), "earlier_days": (1, 60, True),
+    "bias_walk_ns_per_day": (0.01, 5.0, False), "drift_hours": (1.0, 24.0, True),
+}  # fmt: skip
+
+
+def _refuse(name: str, value: object, allowed: str) -> NoReturn:
+    raise Refused(f"{name}: {value!r}; it may be {allowed}", name=name, value=value, allowed=allowed)
+
+
+def read_estimation(path: Path) -> Estimation:
+    """The [estimation] table of a region file, the usual way where there is none.
+
+    Raises FormatError where the file is missing or no TOML, Refused where a value is outside its range.
+    """
+    content = _toml(path).get("estimation", {})
+    known = {item.name for item in fields(Estimation)}
+    unknown = sorted(set(content) - known) if isinstance(content, dict) else ["it is no table"]
+    if unknown:
+        raise Refused(
+            f"{path}: [estimation] knows nothing of {', '.join(unknown)}; it may hold {', '.join(sorted(known))}",
+            name=unknown[0], value=content, allowed=sorted(known),
+        )  # fmt: skip
+    try:
+        return Estimation(**content)
+    except Refused as trouble:
+        raise Refused(f"{path}: [estimation] {trouble.message}", **trouble.details) from None
+
+
+def add_estimation(parser: argparse.ArgumentParser) -> None:
+    """Add the options of `Estimation` to a command; what is not given is as the region file says, or as usual."""
+    group = parser.add_argument_group(
+        "how biases and levels are found",
+        "Defaults suit a network of the middle latitudes. A region file may hold the same\n"
+        "in a table [estimation] (README, Your own region); what is given here wins.",
+    )
+    group.add_argument(
+        "--mapping", choices=WORDS["mapping"],
+        help="slant to vertical: single thin layer, with a plasmasphere above it found from the data (single); or the "
+        "modified single layer of global maps, without one",
+    )  # fmt: skip
+    group.add_argument("--shell-height-km", type=float, metavar="KM", help="of the thin shell, 100 to 1000 (400)")
+    group.add_argument(
+        "--published-biases", choices=WORDS["published_biases"],
+        help="satellites in bias files: hold them there (hold), draw upon them as biases of another day that may have "
+        "walked since (draw), or do without (ignore)",
+    )  # fmt: skip
+    group.add_argument(
+        "--earlier-days", type=int, metavar="DAYS",
+        help="draw upon the biases of the newest day of this region that the archive keeps from up to so many days "
+        "before, 1 to 60 (0: do not); bias files in use come first",
+    )  # fmt: skip
+    group.add_argument(
+        "--bias-walk-ns-per-day", type=float, metavar="NS",
+        help="how far a bias that is drawn upon may walk in a day, 0.01 to 5 (0.1)",
+    )  # fmt: skip
+    group.add_argument(
+        "--drift-hours", type=float, metavar="HOURS",
+        help="a receiver bias per so many hours, 1 to 24, for receivers that are told to drift (0: one a day)",
+    )  # fmt: skip
+    group.add_argument(
+        "--repair-slips", action=argparse.BooleanOptionalAction, default=None,
+        help="repair cycle slips whose whole numbers are certain, instead of cutting there (no)",
+    )  # fmt: skip
+
+
+def estimation_from(options: argparse.Namespace, region: Path | None) -> Estimation:
+    """What the command line gives, on top of the region file's [estimation].  Raises as `read_estimation` does."""
+    found = read_estimation(region) if region else Estimation()
+    given = {item.name: getattr(options, item.name, None) for item in fields(Estimation)}
+    return replace(found, **{name: value for name, value in given.items() if value is not None})
 
 
 def from_environment(environment: Mapping[str, str] | None = None) -> Settings:
@@ -65,12 +198,7 @@ def read_region(path: Path) -> Region:
 
     Raises FormatError where the file is missing or no TOML, Refused where a value is outside its range.
     """
-    try:
-        content = tomllib.loads(path.read_text(encoding="utf-8"))
-    except OSError as trouble:
-        raise FormatError(f"{path}: cannot be read ({trouble.strerror})", path=str(path), line=0) from trouble
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as trouble:
-        raise FormatError(f"{path}: is no TOML ({trouble})", path=str(path), line=0) from trouble
+    content = _toml(path)
     box = content.get("region")
     if not isinstance(box, dict):
         raise FormatError(f"{path}: has no [region] table; see README, 'Your own region'", path=str(path), line=0)
@@ -101,6 +229,15 @@ def read_region(path: Path) -> Region:
     if len(set(names)) < len(names):
         raise Refused(f"{path}: two [[use]] have one name", name="use", value=names, allowed="names apart")
     return Region(**values, sites=sites, thresholds=thresholds, uses=uses)  # type: ignore[arg-type]
+
+
+def _toml(path: Path) -> dict[str, Any]:
+    try:
+        return tomllib.loads(path.read_text(encoding="utf-8"))
+    except OSError as trouble:
+        raise FormatError(f"{path}: cannot be read ({trouble.strerror})", path=str(path), line=0) from trouble
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as trouble:
+        raise FormatError(f"{path}: is no TOML ({trouble})", path=str(path), line=0) from trouble
 
 
 def _number(path: Path, name: str, value: object) -> float:

@@ -39,6 +39,7 @@ def add(
         parser.add_argument("--region", type=Path, metavar="FILE", help="region.toml; without it, around the receivers")
         parser.add_argument("--every", type=minutes, default=5.0, metavar="MINUTES", help="a map every 1 to 60 min (5)")
         parser.add_argument("--simulated", action="store_true", help="invented data: said wherever the day shows")
+        settings.add_estimation(parser)
     for parser in (working, watch):
         parser.add_argument("--workers", default="", metavar="SPEC", help="local:N, threads:N or dask://host:port")
     check = commands.add_parser("check", help="look for damage in an archive; changes nothing")
@@ -90,6 +91,7 @@ def _add(options: argparse.Namespace) -> int:
         numbers, left_out = board.add(
             archive, [path.resolve() for path in options.inputs], now=clock(), region=region, day=options.date,
             choices=Choices(epoch_step_s=options.every * 60.0), simulated=options.simulated,
+            estimation=settings.estimation_from(options, options.region),
         )  # fmt: skip
         for number in numbers:
             print(f"queued {number}: {archive.tasks.one(number).title}")
@@ -122,7 +124,10 @@ def _watch(options: argparse.Namespace) -> int:
     with _opened(options) as archive, open_executor(_workers(options)) as executor:
         watch = live.Watch(
             archive, options.folder.resolve(), executor, clock, region=region, rules=rules,
-            choices=Choices(epoch_step_s=options.every * 60.0), simulated=options.simulated,
+            choices=settings.estimation_from(options, options.region).choices(
+                Choices(epoch_step_s=options.every * 60.0)
+            ),
+            simulated=options.simulated,
             patience=live.Patience(silent_s=options.silent * 60.0), log=Journal(sys.stderr, clock),
         )  # fmt: skip
         watch.run(_stopping())

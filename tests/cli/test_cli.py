@@ -66,6 +66,8 @@ def test_no_command_prints_help_and_fails() -> None:
         (["day", ".", "--out", "x", "--every", "90"], 2, "outside 1 to 60"),
         (["day", ".", "--out", "x", "--signals", "G=C1W"], 3, "write system=code1-code2"),
         (["day", ".", "--out", "x", "--region", "nowhere.toml"], 3, "cannot be read"),
+        (["day", ".", "--out", "x", "--earlier-days", "7"], 3, "name it with --archive"),
+        (["day", ".", "--out", "x", "--drift-hours", "30"], 3, "1 to 24"),
         (["serve", "--port", "eighty"], 3, "not a port"),
         (["fly"], 2, "invalid choice"),
     ],

@@ -1,10 +1,12 @@
 """Region files and the environment."""
 
+import argparse
 from pathlib import Path
 
 import pytest
 
 from skylag import settings
+from skylag.chain import Choices
 from skylag.errors import FormatError, Refused
 
 GOOD = """
@@ -92,3 +94,54 @@ def test_the_sample_region_is_read(sample_folder: Path) -> None:
     region = settings.read_region(sample_folder / "region.toml")
     assert len(region.sites) >= 5
     assert all(region.south < site.lat < region.north and region.west < site.lon < region.east for site in region.sites)
+
+
+# ---------------------------------------------------------------------------------------------- how biases are found
+
+
+def command(*words: str) -> argparse.Namespace:
+    parser = argparse.ArgumentParser()
+    settings.add_estimation(parser)
+    return parser.parse_args(words)
+
+
+def test_command_line_wins_over_the_region_file_wins_over_the_usual(tmp_path: Path) -> None:
+    path = write(tmp_path, GOOD + '[estimation]\nmapping = "modified"\ndrift_hours = 3\nrepair_slips = true\n')
+    assert settings.read_region(path).shell_height_km == 350.0, "the table does not disturb the region"
+    found = settings.estimation_from(command("--drift-hours", "6", "--no-repair-slips"), path)
+    assert found == settings.Estimation(mapping="modified", drift_hours=6.0)
+    assert settings.estimation_from(command(), None) == settings.Estimation()
+    assert settings.estimation_from(command(), write(tmp_path, GOOD)) == settings.Estimation()
+    assert settings.Estimation().choices() == Choices()
+
+
+def test_choices_say_what_was_asked_for() -> None:
+    made = settings.estimation_from(command(
+        "--mapping", "modified", "--shell-height-km", "500", "--published-biases", "draw", "--earlier-days", "5",
+        "--bias-walk-ns-per-day", "0.3", "--drift-hours", "2", "--repair-slips"), None).choices()  # fmt: skip
+    assert (made.mapping_function, made.shell_height_km) == ("modified single layer", 500.0)
+    assert (made.published_biases, made.earlier_days, made.bias_walk_ns_per_day) == ("draw", 5, 0.3)
+    assert made.adjustment.drift_hours == 2.0 and made.arcs.repair
+    assert made.adjustment.high_layer == 0.0, "this mapping has a plasmasphere in it"
+
+
+@pytest.mark.parametrize(
+    ("text", "said"),
+    [
+        ("shell_height_km = 50", r"shell_height_km: 50; it may be 100 to 1000, or 0"),
+        ("drift_hours = 0.5", "1 to 24, or 0"),
+        ("drift_hours = nan", "1 to 24, or 0"),
+        ("bias_walk_ns_per_day = 0", "0.01 to 5"),
+        ("earlier_days = 2.5", "a whole number of days"),
+        ('earlier_days = "many"', "a number"),
+        ('mapping = "cosine"', "single or modified"),
+        ('published_biases = "believe"', "hold or draw or ignore"),
+        ("repair_slips = 1", "true or false"),
+        ("height = 3", "knows nothing of height"),
+    ],
+)
+def test_estimation_out_of_range_is_refused_with_what_is_allowed(text: str, said: str, tmp_path: Path) -> None:
+    path = write(tmp_path, f"{GOOD}\n[estimation]\n{text}\n")
+    with pytest.raises(Refused, match=said) as refused:
+        settings.read_estimation(path)
+    assert str(path) in refused.value.message

@@ -3,15 +3,22 @@
 import shutil
 from collections.abc import Iterator
 from concurrent.futures import Executor, ThreadPoolExecutor
+from dataclasses import replace
 from datetime import date
 from pathlib import Path
 
 import hatanaka
 import numpy as np
 import pytest
+from tests.ionosphere.ray_world import records
 
+from skylag import chain
+from skylag.archive import open_archive
+from skylag.chain import Choices
 from skylag.errors import FormatError, NotEnough
+from skylag.ionosphere.geometry import modified_mapping
 from skylag.jobs import work
+from skylag.settings import Estimation
 from skylag.tables import HOLDS, UNSEEN
 
 DAY = "2031-03-11"
@@ -102,6 +109,74 @@ def test_one_receiver_alone_works_and_says_so(sample_folder: Path, executor: Exe
     assert any("One receiver alone (MRGT00XBS)" in warning for warning in made.products.origin.warnings)
     assert 0.2 < np.mean(made.products.fields.state == UNSEEN) < 0.95
     assert not [flag for flag in made.products.flags if flag.kind in ("front", "irregular") and flag.confirmed]
+
+
+# ---------------------------------------------------------------------------------------------- choices of biases
+
+
+def test_choices_reach_the_day_and_earlier_biases_come_from_the_archive(
+    sample_folder: Path, tmp_path: Path, executor: Executor
+) -> None:
+    """The first day is kept; the second draws upon its biases, with every other choice of the estimation made too."""
+    hourly = Choices(epoch_step_s=3600.0)
+    asked = Estimation(mapping="modified", shell_height_km=450.0, earlier_days=3, drift_hours=6.0, repair_slips=True)
+    with open_archive(tmp_path) as archive:
+        first = work.network_day(files(sample_folder, "MRGT", "TARN"), executor=executor, choices=hourly)
+        archive.save(first.products)
+        second = work.network_day(
+            files(sample_folder, "MRGT", "TARN", day="2031-03-12"), executor=executor, choices=asked.choices(hourly),
+            earlier=work.earlier_biases(archive, 3),
+        )  # fmt: skip
+        name = first.products.region.name
+        ask = work.earlier_biases(archive, 3)
+        assert ask(name, np.datetime64("2031-03-11")) is None, "not of the day itself"
+        assert ask(name, np.datetime64("2031-03-15")) is None, "four days back"
+        assert ask("Elsewhere", np.datetime64("2031-03-12")) is None
+        found = ask(name, np.datetime64("2031-03-14"))
+        assert found is not None and found.source == "network day 2031-03-11"
+    calibration, rays = second.products.calibration, second.products.samples.rays
+    assert {words for words in calibration.datum_of_row if "network day" in words} == {
+        "mean of 24 satellites as in network day 2031-03-11"
+    }
+    assert rays.shell_height_m == 450e3 and second.products.region.shell_height_km == 450.0
+    assert rays.mapping == pytest.approx(modified_mapping(rays.elevation))
+    assert abs(calibration.summary["high_layer_amplitude"]) < 0.01
+    assert calibration.biases.kind.tolist().count("receiver") == 4 * 2, "four spans of six hours, two constellations"
+    options = second.products.origin.options
+    assert (options["mapping_function"], options["earlier_days"]) == ("modified single layer", 3)
+    assert options["arcs"]["repair"] and options["adjustment"]["drift_hours"] == 6.0
+    # Of the same satellites: what was drawn upon is not copied, nor far from what the day itself says.
+    of_satellite = calibration.biases.kind == "satellite"
+    before = dict(zip(first.products.calibration.biases.name, first.products.calibration.biases.value_ns, strict=True))
+    moved = np.array([v - before[n] for n, v in zip(
+        calibration.biases.name[of_satellite], calibration.biases.value_ns[of_satellite], strict=True)])  # fmt: skip
+    assert 0.0 < np.std(moved) < 0.3
+
+
+def test_where_no_earlier_day_is_kept_it_is_said(sample_folder: Path, executor: Executor) -> None:
+    made = work.network_day(
+        files(sample_folder, "MRGT", "TARN"), executor=executor, earlier=lambda region, day: None,
+        choices=Estimation(earlier_days=7).choices(Choices(epoch_step_s=3600.0)),
+    )  # fmt: skip
+    assert any("within 7 days before is kept" in warning for warning in made.products.origin.warnings)
+    assert all("zero mean" in words for words in made.products.calibration.datum_of_row)
+
+
+@pytest.mark.parametrize(
+    ("word", "used", "walk", "said"),
+    [("hold", "files", None, "network day 2031-03-10 are not drawn upon"), ("draw", "files", 0.2, "not drawn upon"),
+     ("ignore", "network day 2031-03-10", 0.2, "not used, as asked for: files")],
+)  # fmt: skip
+def test_files_come_before_earlier_days(word: str, used: str, walk: float | None, said: str) -> None:
+    choices = Estimation(published_biases=word, bias_walk_ns_per_day=0.2).choices()
+    published = earlier = records("satellite", ["G01"], "G", "C1W", "C2W", [1.0])
+    prior, adjustment, notes = chain.known_biases(
+        choices, replace(published, source="files"), replace(earlier, source="network day 2031-03-10")
+    )
+    assert prior is not None and prior.source == used
+    assert adjustment.prior_walk_ns_per_day == walk
+    assert said in " ".join(notes)
+    assert chain.known_biases(choices, None, None)[0] is None
 
 
 def test_pieces_under_short_names(sample_folder: Path, tmp_path: Path, executor: Executor) -> None:

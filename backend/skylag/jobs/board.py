@@ -13,7 +13,7 @@ from concurrent.futures import BrokenExecutor, Executor
 from contextlib import ExitStack
 from dataclasses import asdict, dataclass
 from datetime import date
-from functools import cache
+from functools import cache, partial
 from pathlib import Path
 from typing import Any
 
@@ -25,6 +25,7 @@ from skylag.chain import Choices
 from skylag.errors import FormatError, NotEnough, Refused, SkylagError, Unsolvable
 from skylag.jobs import kept, work
 from skylag.jobs.executor import open_executor
+from skylag.settings import Estimation
 from skylag.tables import Products, Region
 
 Clock = Callable[[], np.datetime64]  # present UTC
@@ -75,6 +76,7 @@ def add(
     day: date | None = None,
     choices: Choices | None = None,
     simulated: bool = False,
+    estimation: Estimation | None = None,
 ) -> tuple[list[int], tuple[work.LeftOut, ...]]:
     """Queue the network days that files and folders hold, one task per day; gives task numbers and what is of no use.
 
@@ -97,7 +99,7 @@ def add(
     numbers = []
     for name, observed in sorted(days.items()):
         side = [*_beside(observed, inputs.orbits), *_beside(observed, inputs.biases)]
-        spec = {
+        spec: dict[str, Any] = {
             "paths": sorted([*observed, *side]),
             "day": name,
             "region": None if region is None else asdict(region),
@@ -105,6 +107,8 @@ def add(
             "epoch_step_s": choices.epoch_step_s,
             "simulated": simulated,
         }
+        if estimation is not None and estimation != Estimation():
+            spec["estimation"] = asdict(estimation)
         title = f"{name} {region.name if region else 'around its receivers'}, {len(observed)} observation files"
         numbers.append(archive.tasks.add(NETWORK_DAY, title, spec, now))
     return numbers, inputs.left_out
@@ -121,8 +125,11 @@ def region_of(facts: Mapping[str, Any] | None) -> Region | None:
     return None if facts is None else region_from(facts)
 
 
-def compute(task: Task, executor: Executor, tell: work.Progress) -> Products:
-    """The products of a task."""
+def compute(task: Task, executor: Executor, tell: work.Progress, archive: Archive | None = None) -> Products:
+    """The products of a task.
+
+    archive  where biases of earlier days are kept, for tasks that draw upon them
+    """
     spec = task.spec
     if task.kind != NETWORK_DAY:
         raise Refused(
@@ -130,15 +137,21 @@ def compute(task: Task, executor: Executor, tell: work.Progress) -> Products:
             name="kind", value=task.kind, allowed=(NETWORK_DAY,),
         )  # fmt: skip
     signals = {system: (pair[0], pair[1]) for system, pair in spec["signals"].items()}
+    choices = Estimation(**spec.get("estimation", {})).choices(
+        Choices(signals=signals, epoch_step_s=spec["epoch_step_s"])
+    )
     return work.network_day(
         [Path(path) for path in spec["paths"]],
-        region=region_of(spec["region"]), day=date.fromisoformat(spec["day"]),
-        choices=Choices(signals=signals, epoch_step_s=spec["epoch_step_s"]), executor=executor,
+        region=region_of(spec["region"]), day=date.fromisoformat(spec["day"]), choices=choices, executor=executor,
         simulated=spec["simulated"], progress=tell,
+        earlier=None if archive is None else work.earlier_biases(archive, choices.earlier_days),
     ).products  # fmt: skip
 
 
 # ---------------------------------------------------------------------------------------------- working
+
+
+_compute = compute  # a worker's own argument has the same name
 
 
 class Worker:
@@ -151,13 +164,13 @@ class Worker:
         clock: Clock,
         policy: Policy | None = None,
         log: Log | None = None,
-        compute: Callable[[Task, Executor, work.Progress], Products] = compute,
+        compute: Callable[[Task, Executor, work.Progress], Products] | None = None,
         name: str = "",
     ) -> None:
         self._archive, self._place, self._clock = archive, place, clock
         self._policy = policy or Policy()
         self._log: Log = log or (lambda event, **facts: None)
-        self._compute = compute
+        self._compute = compute or partial(_compute, archive=archive)
         self.name = f"{process_name()}/{name or threading.get_ident()}"
 
     def run(self, stop: threading.Event, *, until_empty: bool = False, idle_s: float = 0.5) -> int:

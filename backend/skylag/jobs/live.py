@@ -331,6 +331,7 @@ class Watch:
             made = work.network_day(
                 paths, region=self._region, day=date.fromisoformat(str(asked.day)), choices=self._choices,
                 executor=self._executor, simulated=self._simulated,
+                earlier=work.earlier_biases(self._archive, self._choices.earlier_days),
             ).products  # fmt: skip
             products = silent_areas(made, self._patience.silent_s)
             if not asked.final:

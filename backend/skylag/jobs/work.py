@@ -14,7 +14,7 @@ from dataclasses import asdict, dataclass, field, replace
 from datetime import date
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from threadpoolctl import threadpool_limits
@@ -39,6 +39,11 @@ from skylag.tables import (
 )
 from skylag.timescales import day_of
 
+if TYPE_CHECKING:
+    from skylag.archive import Archive  # workers need no database
+
+# Biases of an earlier day, by the name of the region and the day; None where there are none (`earlier_biases`).
+Earlier = Callable[[str, np.datetime64], Biases | None]
 # Told the stage, the share of it done (0 to 1), and a word on what is being done.
 Progress = Callable[[str, float, str], None]
 
@@ -206,6 +211,23 @@ def read_biases(paths: Sequence[str]) -> tuple[Biases | None, list[Problem], lis
     return replace(bias_algebra.join(known), datum="as published"), problems, left_out
 
 
+def earlier_biases(archive: "Archive", within_days: int) -> Earlier:
+    """What tells the biases of the newest day kept before a day, if it is at most so many days back.
+
+    Days that are still being added to are passed over.  The source of the table says which day it is.
+    """
+
+    def ask(region: str, day: np.datetime64) -> Biases | None:
+        first, last = day - np.timedelta64(within_days, "D"), day - np.timedelta64(1, "D")
+        whole = [head for head in archive.days(region, first, last) if not head.provisional]
+        if not whole:
+            return None
+        found = archive.biases(region, whole[0].day, whole[0].version)
+        return replace(found, source=f"network day {whole[0].day}") if len(found) else None
+
+    return ask
+
+
 @dataclass(frozen=True)
 class ReceiverResult:
     """What one receiver-day unit gives back: small enough to travel between processes."""
@@ -313,9 +335,11 @@ def network_day(
     executor: Executor,
     simulated: bool = False,
     progress: Progress | None = None,
+    earlier: Earlier | None = None,
 ) -> DayResult:
     """From files and folders to the products of one network day.
 
+    earlier  where biases of an earlier day are asked for, if `choices.earlier_days` wants them (`earlier_biases`)
     Raises NotEnough where no receiver can be used, FormatError where a path does not exist.
     """
     tell = progress or (lambda stage, share, word: None)
@@ -344,7 +368,7 @@ def network_day(
             had=0, needed=1, where="inputs", left_out=[str(item) for item in left_out],
         )  # fmt: skip
     clock.enter("receivers")
-    shell_height_m = (region.shell_height_km if region else 400.0) * 1000.0
+    shell_height_m = 1000.0 * (choices.shell_height_km or (region.shell_height_km if region else 400.0))
     results = _receivers(inputs, wanted_day, sources, choices, shell_height_m, executor, tell)
     for result in results:
         problems += result.problems
@@ -358,10 +382,16 @@ def network_day(
         )  # fmt: skip
     rays = concatenate([item.rays for item in usable])
     receivers = tuple(item.receiver for item in usable)
-    place = region or chain.region_around(receivers)
+    place = replace(region or chain.region_around(receivers), shell_height_km=shell_height_m / 1000.0)
     channels = chain.channels_of(sources)
     for item in usable:  # the receiver's own header knows best, as in choosing its signals
         channels.update(item.facts.get("glonass_channels", {}))
+
+    before = earlier(place.name, wanted_day) if earlier is not None and choices.earlier_days else None
+    prior, of_adjustment, said = chain.known_biases(choices, prior, before)
+    choices = replace(choices, adjustment=of_adjustment)
+    if choices.earlier_days and prior is None:
+        said += (f"no day of {place.name} within {choices.earlier_days} days before is kept: no earlier biases",)
 
     def stage(name: str, share: float) -> None:
         if share == 0.0:
@@ -376,7 +406,7 @@ def network_day(
             lambda make, hours: executor.map(hour_unit, hours),
         )  # fmt: skip
     clock.enter("")
-    warnings = [*made.warnings, *(note for item in usable for note in item.notes)]
+    warnings = [*made.warnings, *said, *(note for item in usable for note in item.notes)]
     warnings += [f"left out: {item}" for item in left_out]
     origin = Origin(
         inputs=_with_use(inputs.files, left_out),
@@ -454,6 +484,9 @@ def _options(choices: Choices, region: Region, day: np.datetime64) -> dict[str, 
         "signals": {system: "-".join(pair) for system, pair in choices.signals.items()},
         "minimum_elevation_deg": choices.minimum_elevation,
         "mapping_function": choices.mapping_function,
+        "published_biases": choices.published_biases,
+        "earlier_days": choices.earlier_days,
+        "bias_walk_ns_per_day": choices.bias_walk_ns_per_day,
         "epoch_step_s": choices.epoch_step_s,
         "arcs": asdict(choices.arcs),
         "adjustment": asdict(choices.adjustment),
