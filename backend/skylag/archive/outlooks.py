@@ -75,11 +75,13 @@ class Outlooks:
             row = connection.execute(query).first()
         return None if row is None else _kept(row)
 
-    def unscored(self, region: str, days: int = 2) -> tuple[Kept, ...]:
-        """Outlooks that were not scored with so many of their days in, oldest first."""
+    def unscored(self, region: str, days: int = 2, since: np.datetime64 | None = None) -> tuple[Kept, ...]:
+        """Outlooks that were not scored with so many of their days in, oldest first; made after `since` or on it."""
         table, score = schema.outlook, schema.outlook_score
         done = sa.select(score.c.outlook).where(score.c.days >= days)
         query = sa.select(table).where(table.c.region == region, table.c.id.not_in(done))
+        if since is not None:
+            query = query.where(table.c.known_until >= str(since))
         with self._reading() as connection:
             rows = connection.execute(query.order_by(table.c.known_until, table.c.id)).all()
         return tuple(_kept(row) for row in rows)
@@ -97,20 +99,24 @@ class Outlooks:
         self._write(insert)
 
     def scores(self, region: str, newest: int = 120) -> tuple[Any, ...]:
-        """The fullest score of each of the newest outlooks of a region, newest first."""
+        """The fullest score of the outlook made last after each day of a region, newest first.
+
+        newest  so many days at most
+        """
         table, score = schema.outlook, schema.outlook_score
         query = (
-            sa.select(table.c.id, score.c.days, score.c.facts)
+            sa.select(table.c.id, table.c.known_until, score.c.facts)
             .join(score, score.c.outlook == table.c.id)
             .where(table.c.region == region)
             .order_by(table.c.known_until.desc(), table.c.id.desc(), score.c.days.desc())
         )
+        best: dict[str, Any] = {}
         with self._reading() as connection:
-            rows = connection.execute(query.limit(2 * newest)).all()
-        best: dict[int, Any] = {}
-        for row in rows:
-            best.setdefault(row.id, row.facts)
-        return tuple(records.from_text(text) for text in list(best.values())[:newest])
+            for row in connection.execute(query):
+                if len(best) == newest and row.known_until not in best:
+                    break
+                best.setdefault(row.known_until, row.facts)
+        return tuple(records.from_text(text) for text in best.values())
 
     def keep_hours(
         self, region: str, day: str, version: int, mark: str, arrays: Mapping[str, npt.NDArray[Any]]

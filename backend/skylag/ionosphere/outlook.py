@@ -28,6 +28,7 @@ SLOPE_LEVELS = np.array([0.5, 0.8, 0.95, 0.99])
 RANGES = {50: (0.25, 0.75), 80: (0.1, 0.9), 95: (0.025, 0.975)}
 USUAL_FLUX = 120.0  # F10.7 where none is told: about its mean over a solar cycle (from memory)
 LEAST_DAYS = 7  # seen at a place before a stretch of hours is called likely to hold
+LEARNING_PLACES = 60  # more of them tell little new of one day, and take time
 ROTATION = 27  # days of the Sun as seen from Earth
 
 _LEAST_DELAY_M, _LEAST_SLOPE = 0.05, 0.02

@@ -1,12 +1,13 @@
 """Outlooks over an archive: its days as a history, the outlook after the newest, its record, and a replay of the past.
 
-Reads with `archive` and `formats`, computes with `ionosphere.outlook`.  An outlook is kept when it is made; when its
-days are in, it is scored once.  A replay keeps nothing.  Never lets an outlook see a day after the one it is made on.
+Reads with `archive`, computes with `ionosphere.outlook`.  When a day is kept, its hours at the places of the outlook are
+made and kept, outlooks whose days are in are scored, once, and the next outlook is made and kept (`day_kept`).  A replay
+keeps nothing.  Never lets an outlook see a day after the one it is made on, nor an outlook of activity made after it.
 """
 
 import hashlib
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -14,7 +15,7 @@ import numpy as np
 from skylag.archive import Archive, DayHead
 from skylag.archive.outlooks import Kept
 from skylag.constants import L1_M_PER_TECU
-from skylag.errors import Missing, NotEnough, Refused
+from skylag.errors import Missing, NotEnough, Refused, SkylagError
 from skylag.impact import uses
 from skylag.impact.states import nearest_cells
 from skylag.ionosphere import outlook_score
@@ -22,6 +23,8 @@ from skylag.ionosphere.outlook import Drivers, History, Limits, climate_of, no_d
 from skylag.ionosphere.outlook_score import Tally
 from skylag.tables import HOLDS, STRAINED, UNSEEN, Bools, Bytes, Fields, Floats, Indices, Region
 
+SCORED_WITHIN = 60  # days after which an outlook whose days never came is given up
+HOURS_FORM = "1"  # of what is kept of a day; another one makes all of them anew
 MOST_DAYS = 400  # further back an outlook does not look
 MOST_CELLS = 600  # of the grid; every second, third ... row and column where it has more
 CALM_AP = 7.0  # ap of an outlook that tells of no storm
@@ -132,7 +135,7 @@ def history_of(
     lats = np.concatenate([[site.lat for site in sites], lat.ravel()])
     lons = np.concatenate([[site.lon for site in sites], lon.ravel()])
     limits = limits_for(places)
-    mark = hashlib.sha256(f"{places.thresholds} {uses.uses_of(places)} {lats.tolist()} {lons.tolist()}".encode())
+    mark = hashlib.sha256(f"{HOURS_FORM} {places.thresholds} {uses.uses_of(places)} {lats.tolist()} {lons.tolist()}".encode())
     days = np.arange(first, last + np.timedelta64(1, "D")).astype("datetime64[D]")
     shape = (len(days), 24, len(lats))
     delay, sigma, slope = (np.full(shape, np.nan) for _ in range(3))
@@ -151,7 +154,6 @@ def drivers_of(days: Any, indices: Indices | None, expected_ap: Floats | None = 
 
     indices      measured ap and F10.7; None where none are at hand
     expected_ap  (2, 8) or (2,) entered for the two days after the last; NaN where nothing is said
-    Past outlooks of activity are not kept: a replay is told none.
     """
     drivers = no_drivers(len(days))
     if indices is not None:
@@ -171,6 +173,45 @@ def drivers_of(days: Any, indices: Indices | None, expected_ap: Floats | None = 
     return drivers
 
 
+def known_then(
+    archive: Archive, days: Any, indices: Indices | None = None, expected_ap: Floats | None = None, now: bool = False
+) -> tuple[Drivers, tuple[str, ...]]:  # fmt: skip
+    """What was known of Sun and field at the end of each day of a history, and in words what was foretold at its end.
+
+    indices      measured, beside those kept in the archive and before them
+    expected_ap  entered for the two days after the last, as in `drivers_of`; before what is kept
+    now          the last day is today's newest: an outlook of activity made after it counts for the days that had not
+                 begun when it was made.  Of the other days only what was made before their end counts.
+    Days of the indices are UTC days, those of the history begin 18 s earlier; that is taken for the same.
+    """
+    known = archive.activity.measured(days[0], days[-1])
+    drivers = drivers_of(days, known)
+    if indices is not None:
+        given = drivers_of(days, indices)
+        drivers = Drivers(*(np.where(np.isfinite(a), a, b) for a, b in (
+            (given.ap, drivers.ap), (given.expected, drivers.expected), (given.flux, drivers.flux))))  # fmt: skip
+    said: dict[int, str] = {}
+    one_day = np.timedelta64(1, "D")
+    for told in archive.activity.foretold(days[0] + one_day, days[-1] + 2 * one_day):  # in the order they were made
+        for lead in (1, 2):
+            row = int((told.day - days[0]) / one_day) - lead
+            if not 0 <= row < len(days):
+                continue
+            end = told.day if now and row == len(days) - 1 else days[row] + one_day
+            if told.made <= end.astype("datetime64[ns]"):
+                drivers.expected[row, lead - 1] = told.ap
+                if row == len(days) - 1:
+                    when = np.datetime_as_string(told.made, unit="m").replace("T", " ")
+                    said[lead] = (
+                        f"ap of {told.day} as foretold {when} UTC{f' ({told.source})' if told.source else ''}: "
+                        f"up to {told.ap.max():g}"
+                    )
+    if expected_ap is not None:
+        drivers.expected[-1] = drivers_of(days, None, expected_ap).expected[-1]
+        said = {0: "ap of the two days ahead as entered"}
+    return drivers, tuple(said[lead] for lead in sorted(said))
+
+
 def _mark(heads: Sequence[DayHead], drivers: Drivers) -> str:
     """Marks the inputs of an outlook: which versions of which days, and what was known of Sun and field."""
     checksum = hashlib.sha256()
@@ -179,6 +220,22 @@ def _mark(heads: Sequence[DayHead], drivers: Drivers) -> str:
     for part in (drivers.ap, drivers.expected, drivers.flux):
         checksum.update(np.nan_to_num(part, nan=-1.0).tobytes())
     return checksum.hexdigest()[:32]
+
+
+def day_kept(archive: Archive, region: str, log: Callable[..., None] | None = None) -> Kept | None:
+    """After a day of a region was kept: its hours, scores that are due, the next outlook.  None where that failed.
+
+    log  told what happened; a failure is told there and raises nothing, since the day itself is kept
+    """
+    try:
+        made = newest(archive, region)
+    except SkylagError as failure:
+        if log is not None:
+            log("outlook not made", region=region, why=failure.message)
+        return None
+    if log is not None:
+        log("outlook made", region=region, known_until=str(made.outlook.known_until), number=made.number)
+    return made
 
 
 def newest(
@@ -197,13 +254,16 @@ def newest(
         first = max(heads[0].day, last - np.timedelta64(MOST_DAYS - 1, "D"))
         used = [head for head in heads if head.day >= first]
         days = np.arange(first, last + np.timedelta64(1, "D"))
-        kept = archive.outlooks.find(region, last, _mark(used, drivers_of(days, indices, expected_ap)))
+        kept = archive.outlooks.find(
+            region, last, _mark(used, known_then(archive, days, indices, expected_ap, now=True)[0])
+        )
         if kept is not None:
             return kept
     history, used_heads = history_of(archive, region)
-    drivers = drivers_of(history.days, indices, expected_ap)
+    drivers, said = known_then(archive, history.days, indices, expected_ap, now=True)
     score_due(archive, region, history, drivers)
     made = tomorrow(history, drivers)
+    made = replace(made, basis=(*made.basis, *said))
     mark = _mark(used_heads, drivers)
     if expected_ap is not None and not keep:
         return Kept(0, region, mark, np.datetime64("NaT", "s"), made)
@@ -215,9 +275,12 @@ def newest(
 
 
 def score_due(archive: Archive, region: str, history: History, drivers: Drivers | None = None) -> int:
-    """Score the kept outlooks whose days are in; gives how many.  Scored when the last of their days is in or past."""
+    """Score the kept outlooks whose days are in; gives how many.  Scored when the last of their days is in or past.
+
+    An outlook of places that the region no longer has is left unscored.
+    """
     done = 0
-    for kept in archive.outlooks.unscored(region):
+    for kept in archive.outlooks.unscored(region, since=history.days[-1] - np.timedelta64(SCORED_WITHIN, "D")):
         made = kept.outlook
         days_in = int((history.days[-1] - made.known_until) / np.timedelta64(1, "D"))
         if days_in < 1 or made.known_until < history.days[0] or not np.array_equal(made.lats, history.lats):
@@ -232,7 +295,7 @@ def score_due(archive: Archive, region: str, history: History, drivers: Drivers 
 
 
 def track_record(archive: Archive, region: str, most: int = 120) -> Tally:
-    """What became of the newest kept outlooks of a region, together."""
+    """What became of the newest kept outlooks of a region, together: of each day the one that was made last."""
     total = Tally()
     for facts in archive.outlooks.scores(region, most):
         total.add(outlook_score.from_facts(facts))
@@ -262,8 +325,9 @@ def hindcast(
         raise Refused(f"hindcast: {last} is before {first}; give the earlier day first", name="to", value=str(last),
                       allowed=f"from {first}")  # fmt: skip
     history, _ = history_of(archive, region, until=last, progress=progress)
+    drivers, _ = known_then(archive, history.days, indices)
     return Hindcast(region, first, last, int(np.isfinite(history.delay).any(axis=(1, 2)).sum()),
-                    replay_scored(history, drivers_of(history.days, indices), first))  # fmt: skip
+                    replay_scored(history, drivers, first))  # fmt: skip
 
 
 def replay_scored(history: History, drivers: Drivers, first: np.datetime64) -> Tally:
