@@ -5,13 +5,13 @@ biases stay those of the whole day's adjustment, in which the receiver took part
 not the calibration.  Never changes a map.
 """
 
-from collections.abc import Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
-from skylag.ionosphere.field import FieldChoices, prepare, systems
+from skylag.ionosphere.field import FieldChoices, Hour, prepare, systems
 from skylag.ionosphere.kriging import left_out
 from skylag.tables import Floats, Ints, Samples, Times
 
@@ -64,36 +64,46 @@ class LeftOut:
         }
 
 
+Rows = tuple[tuple[Times, Ints, Floats, Floats, Floats, Floats], ...]  # columns of `LeftOut`, piece by piece
+
+
 def check(
     samples: Samples, lat: Floats, lon: Floats, epochs: Times, choices: FieldChoices | None = None,
-    every_s: float = 1800.0,
+    every_s: float = 1800.0, run: Callable[[Callable[[Hour], Rows], Iterable[Hour]], Iterable[Rows]] = map,
 ) -> LeftOut:  # fmt: skip
     """Every receiver against the field without it, at some of the maps' epochs.
 
     lat, lon  places whose middle is the middle of the map, e.g. the axes of the grid
     every_s   spacing of the epochs that are checked
+    run       `map`, or an executor's: hours are checked side by side, each by itself (`of_hour`)
     Covariances are those of the maps (learned from the hours' three checked epochs at most, instead of all).
     """
     step = max(1, round(every_s / max(float(np.median(np.diff(epochs).astype(np.int64))) / 1e9, 1.0))) \
         if len(epochs) > 1 else 1  # fmt: skip
     chosen = epochs[step // 2 :: step] if len(epochs) > step // 2 else epochs
     corner_lat, corner_lon = np.meshgrid([lat[0], lat[-1]], [lon[0], lon[-1]])
-    rows: list[tuple[Times, Ints, Floats, Floats, Floats, Floats]] = []
-    for hour in prepare(samples, corner_lat.ravel(), corner_lon.ravel(), chosen, choices or FieldChoices()):
-        for number, system in enumerate(systems(hour)):
-            if system is None:
-                continue
-            part = system.part
-            for receiver in np.unique(part.receiver):
-                own = np.flatnonzero(part.receiver == receiver)
-                if len(part) - len(own) < 4:
-                    continue
-                off, sigma = left_out(system, own)
-                time = np.full(len(own), hour.epochs[number])
-                rows.append((time, part.receiver[own], part.x[own], part.y[own], off, sigma))
+    hours = prepare(samples, corner_lat.ravel(), corner_lon.ravel(), chosen, choices or FieldChoices())
+    rows = [row for found in run(of_hour, hours) for row in found]
     names = tuple(receiver.name for receiver in samples.rays.receivers)
     if not rows:
         none = np.zeros(0)
         return LeftOut(names, np.zeros(0, "datetime64[ns]"), np.zeros(0, np.int64), none, none, none, none)
     time, number_of, x, y, off, sigma = (np.concatenate(columns) for columns in zip(*rows, strict=True))
     return LeftOut(names, time, number_of, x, y, off, sigma)
+
+
+def of_hour(hour: Hour) -> Rows:
+    """The epochs of one hour: the lines of sight of each receiver, foretold by all others."""
+    rows = []
+    for number, system in enumerate(systems(hour)):
+        if system is None:
+            continue
+        part = system.part
+        for receiver in np.unique(part.receiver):
+            own = np.flatnonzero(part.receiver == receiver)
+            if len(part) - len(own) < 4:
+                continue
+            off, sigma = left_out(system, own)
+            time = np.full(len(own), hour.epochs[number])
+            rows.append((time, part.receiver[own], part.x[own], part.y[own], off, sigma))
+    return tuple(rows)

@@ -24,6 +24,7 @@ from skylag.chain import Choices, ReceiverDay
 from skylag.errors import FormatError, NotEnough, SkylagError
 from skylag.formats.glance import glance
 from skylag.ionosphere import bias_algebra
+from skylag.ionosphere import left_out as left_out_receivers
 from skylag.ionosphere.field import Hour, Made, make
 from skylag.ionosphere.pairs import wanted_codes
 from skylag.tables import (
@@ -257,6 +258,18 @@ def hour_unit(hour: Hour) -> Made:
         return make(hour)
 
 
+def left_out_unit(hour: Hour) -> left_out_receivers.Rows:
+    """The receivers of one hour, each foretold by all others, on one thread of linear algebra."""
+    with threadpool_limits(1):
+        return left_out_receivers.of_hour(hour)
+
+
+# What the recipe makes hour by hour -> the unit of work that does so in another process.
+_UNITS: Mapping[Callable[[Hour], Any], Callable[[Hour], Any]] = {
+    make: hour_unit, left_out_receivers.of_hour: left_out_unit,
+}  # fmt: skip
+
+
 def _receiver_unit(
     key: str,
     paths: Sequence[str],
@@ -403,7 +416,7 @@ def network_day(
     with threadpool_limits(1):
         made = chain.estimate(
             rays, place, wanted_day, choices, prior, channels, stage, chain.background_of(sources),
-            lambda make, hours: executor.map(hour_unit, hours),
+            lambda make, hours: executor.map(_UNITS[make], hours),
         )  # fmt: skip
     clock.enter("")
     warnings = [*made.warnings, *said, *(note for item in usable for note in item.notes)]
