@@ -10,10 +10,13 @@ import { WORDS } from "./words.js";
  * @property {string} region
  * @property {string} day
  * @property {boolean} simulated
+ * @property {number} version
  * @property {string} saved   when it was written
  * @property {Record<string, number>} shares  state -> share of all cells and times
  * @property {Record<string, Record<string, number>>} siteShares
  * @property {number} slope   mm/km that 99 of 100 seen cells stay under, NaN where not told
+ * @property {number} kp      the highest of the day, NaN where no indices were imported
+ * @property {number} ap      the day's mean
  * @property {number} flags
  */
 /**
@@ -103,11 +106,35 @@ export class ServiceError extends Error {
   }
 }
 
-/** @param {string} address @param {How} [how] */
-async function ask(address, { signal } = {}) {
+/** The key of a server that asks for one: kept for this tab, until it closes. */
+let key = "";
+try {
+  key = sessionStorage.getItem("skylag.key") ?? "";
+} catch {
+  // A browser that keeps nothing asks again after a reload.
+}
+
+/** @param {string} text */
+export function useKey(text) {
+  key = text.trim();
+  try {
+    sessionStorage.setItem("skylag.key", key);
+  } catch {
+    // kept for this page alone
+  }
+}
+
+/** Is a key in use? Then a plain link to a file would be refused: it is fetched with the key. */
+export const hasKey = () => key !== "";
+
+/** @param {string} [accept] @returns {Record<string, string>} */
+const headers = (accept = "application/json") => (key ? { Accept: accept, Authorization: `Bearer ${key}` } : { Accept: accept });
+
+/** @param {string} address @param {How & {method?: string}} [how] */
+async function ask(address, { signal, method = "GET" } = {}) {
   let answer;
   try {
-    answer = await fetch(address, { signal, headers: { Accept: "application/json" } });
+    answer = await fetch(address, { method, signal, headers: headers() });
   } catch (error) {
     if (error.name === "AbortError") throw error;
     throw new ServiceError(WORDS.offline, "Offline", 0);
@@ -162,17 +189,118 @@ function flagOf(raw) {
   };
 }
 
+/** A file of the service, fetched with the key. @param {string} address */
+export async function fileOf(address) {
+  const answer = await fetch(address, { headers: headers("*/*") });
+  if (!answer.ok) throw new ServiceError((await answer.json().catch(() => null))?.error ?? `${WORDS.strangeAnswer} (${answer.status})`, "", answer.status);
+  return answer.blob();
+}
+
+/** Begin to send files. @param {How} [how] */
+export async function openBatch(how) {
+  const raw = await ask("/api/batches", { ...how, method: "POST" });
+  return { batch: raw.batch, fileBytes: raw.file_bytes, batchBytes: raw.batch_bytes, batchFiles: raw.batch_files };
+}
+
+/**
+ * Send one file as it is; `progress` hears the share that is sent.
+ * @param {string} batch @param {File} file @param {{signal: AbortSignal, progress: (share: number) => void}} how
+ * @returns {Promise<{kind: string, keptAs: string}>}
+ */
+export function sendFile(batch, file, { signal, progress }) {
+  return new Promise((resolve, reject) => {
+    const request = new XMLHttpRequest(); // fetch does not tell how much is sent
+    request.open("PUT", `/api/batches/${batch}/files?name=${encodeURIComponent(file.name.slice(-200))}`);
+    for (const [name, value] of Object.entries(headers())) request.setRequestHeader(name, value);
+    request.responseType = "json";
+    request.upload.addEventListener("progress", ({ loaded, total }) => progress(total ? loaded / total : 0));
+    request.addEventListener("load", () => {
+      const content = request.response;
+      if (request.status === 201) resolve({ kind: content.kind, keptAs: content.kept_as });
+      else reject(new ServiceError(content?.error ?? `${WORDS.strangeAnswer} (${request.status})`, content?.kind ?? "", request.status));
+    });
+    request.addEventListener("error", () => reject(new ServiceError(WORDS.offline, "Offline", 0)));
+    request.addEventListener("abort", () => reject(new DOMException("", "AbortError")));
+    signal.addEventListener("abort", () => request.abort());
+    request.send(file);
+  });
+}
+
+/**
+ * @typedef {{id: number, title: string, state: "waiting"|"running"|"done"|"failed"|"cancelled", stage: string, share: number, word: string,
+ *   said: string, day: string, files: string[], resultRegion: string, changed: number, nextTry: number}} Task
+ */
+
+/** @returns {Task} */
+function taskOf(raw) {
+  return {
+    id: raw.id, title: raw.title, state: raw.state, stage: raw.stage, share: raw.share, word: raw.word, said: raw.said, day: raw.day ?? "", files: raw.files,
+    resultRegion: raw.result.region ?? "", changed: milliseconds(raw.changed_utc), nextTry: raw.next_try_utc ? milliseconds(raw.next_try_utc) : NaN,
+  };
+}
+
+/** Queue the days of what was sent. @param {string} batch @param {string} region  "" draws one around the receivers @param {How} [how] */
+export async function beginWork(batch, region, how) {
+  const raw = await ask(`/api/batches/${batch}/work?region=${encodeURIComponent(region)}`, { ...how, method: "POST" });
+  return { tasks: raw.tasks.map(taskOf), leftOut: raw.left_out };
+}
+
+/** The queue, newest first. @param {How} [how] @returns {Promise<Task[]>} */
+export async function work(how) {
+  return (await ask("/api/work", how)).tasks.map(taskOf);
+}
+
+/** Take a task off the queue, or queue it once more. @param {number} id @param {"cancel"|"again"} what @returns {Promise<Task>} */
+export async function changeTask(id, what) {
+  return taskOf(await ask(`/api/work/${id}/${what}`, { method: "POST" }));
+}
+
+/** @typedef {{id: number, subject: string, sentence: string, made: number, facts: Record<string, any>, deliveries: {way: string, delivered_utc: string|null}[]}} Notice */
+/** @returns {Notice} */
+const noticeOf = (raw) => ({ ...raw, made: milliseconds(raw.made_utc) });
+
+/** What alerts told, newest first. @param {How} [how] @returns {Promise<Notice[]>} */
+export async function notices(how) {
+  return (await ask("/api/notices", how)).notices.map(noticeOf);
+}
+
+/**
+ * Follow along until the server hangs up: tasks, days and notices that change. Read by fetch, since an EventSource cannot
+ * send a key.
+ * @param {(kind: "work"|"day"|"notice", what: any) => void} hear @param {AbortSignal} signal
+ */
+export async function news(hear, signal) {
+  const answer = await fetch("/api/work/news", { signal, headers: headers("text/event-stream") });
+  if (!answer.ok || !answer.body) throw new ServiceError(`${WORDS.strangeAnswer} (${answer.status})`, "", answer.status);
+  const reader = answer.body.pipeThrough(new TextDecoderStream()).getReader();
+  for (let rest = ""; ; ) {
+    const { done, value } = await reader.read();
+    if (done) return;
+    const parts = (rest + value).split("\n\n");
+    rest = parts.pop() ?? "";
+    for (const part of parts) {
+      const found = /^event: (\w+)\ndata: (.*)$/.exec(part);
+      if (!found) continue;
+      const raw = JSON.parse(found[2]);
+      hear(/** @type {any} */ (found[1]), found[1] === "work" ? taskOf(raw) : found[1] === "notice" ? noticeOf(raw) : raw);
+    }
+  }
+}
+
 /** Stored days, newest first. @param {How} [how] @returns {Promise<DayEntry[]>} */
 export async function days(how) {
   const { days: entries } = await ask("/api/days", how);
   return entries.map((raw) => ({
     region: raw.region,
     day: raw.day,
+    version: raw.version,
     simulated: raw.simulated,
     saved: `${raw.saved_at_utc} ${raw.version}`,
     shares: raw.state_shares,
     siteShares: raw.site_shares,
     slope: number(raw.highest?.slope),
+    kp: number(raw.activity?.kp_highest),
+    ap: number(raw.activity?.ap_daily),
     flags: Object.values(raw.flag_counts).reduce((a, b) => a + b, 0),
   }));
 }

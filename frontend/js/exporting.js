@@ -40,10 +40,10 @@ export function seriesRows(series) {
   return series.times.map((ms, i) => [new Date(ms).toISOString(), series.delay[i], series.sigma[i], series.slope[i], series.slopeSigma[i], series.state[i]]);
 }
 
-/** Hand a text to the reader as a file. @param {string} text @param {string} name @param {string} type */
-export function save(text, name, type) {
+/** Hand a text or a file to the reader. @param {string|Blob} what @param {string} name @param {string} [type] */
+export function save(what, name, type) {
   const link = document.createElement("a");
-  link.href = URL.createObjectURL(new Blob([text], { type }));
+  link.href = URL.createObjectURL(typeof what === "string" ? new Blob([what], { type }) : what);
   link.download = name;
   document.body.append(link);
   link.click();

@@ -5,27 +5,24 @@
 
 import * as api from "./api.js";
 import { begin } from "./drawing.js";
+import { save } from "./exporting.js";
 import { medianMap, sameGrid } from "./figures/compare.js";
 import { frameOf } from "./figures/map.js";
 import { nearest } from "./figures/strip.js";
+import { Live } from "./live.js";
 import { quietDays } from "./figures/year.js";
 import { ChartPanel } from "./panels/chart.js";
 import { ClockPanel } from "./panels/clock.js";
-import { CurvesPanel } from "./panels/curves.js";
 import { FlagsPanel } from "./panels/flags.js";
 import { LegendPanel } from "./panels/legend.js";
 import { MastheadPanel } from "./panels/masthead.js";
-import { AheadPanel } from "./panels/ahead.js";
-import { NetworkPanel } from "./panels/network.js";
-import { trouble } from "./panels/parts.js";
+import { make, trouble } from "./panels/parts.js";
 import { PlayerPanel } from "./panels/player.js";
-import { PresentPanel } from "./panels/present.js";
 import { ReadingPanel, readingOf } from "./panels/reading.js";
 import { SeriesPanel } from "./panels/series.js";
-import { WorkPanel } from "./panels/work.js";
 import { YearPanel } from "./panels/year.js";
 import { State } from "./state.js";
-import { dayText, WORDS } from "./words.js";
+import { dayText, FILE_WORDS, WORDS } from "./words.js";
 
 /**
  * What the panels draw from.
@@ -67,11 +64,57 @@ const year = new YearPanel(
   },
   state,
 );
-const present = new PresentPanel({ age: at("present-age"), back: at("present-back"), fails: at("present-fails"), flags: at("present-flags"), next: at("present-next"), note: at("present-if") }, state);
-const network = new NetworkPanel({ said: at("network-said"), table: at("network-table") }, state);
-const ahead = new AheadPanel(at("ahead-body"));
-const work = new WorkPanel(at("work"), at("work-body"));
-const curves = new CurvesPanel(at("curves"), at("curves-body"));
+const live = new Live();
+
+/**
+ * A panel whose script comes when it is first looked at.
+ * @param {(view: import("./state.js").View) => boolean} wanted @param {() => Promise<any>} bring
+ */
+function later(wanted, bring) {
+  /** @type {any} */ let panel = null;
+  /** @type {Promise<void>|null} */ let coming = null;
+  return {
+    /** @param {Scene} now */
+    show(now) {
+      if (panel) panel.show(now);
+      else if (wanted(now.view)) {
+        coming ??= bring().then(
+          (made) => {
+            panel = made;
+            if (scene) panel.show(scene);
+          },
+          () => {
+            coming = null;
+            at("announce").textContent = WORDS.offline;
+          },
+        );
+      }
+    },
+    renew: () => panel?.renew(),
+  };
+}
+
+const present = later((view) => view.ask === "now", async () => {
+  const { PresentPanel } = await import("./panels/present.js");
+  return new PresentPanel({ age: at("present-age"), back: at("present-back"), fails: at("present-fails"), flags: at("present-flags"), next: at("present-next"), note: at("present-if"), alerts: at("present-alerts") }, state, live);
+});
+const network = later((view) => view.ask === "network", async () => {
+  const { NetworkPanel } = await import("./panels/network.js");
+  return new NetworkPanel({ said: at("network-said"), table: at("network-table") }, state);
+});
+const ahead = later((view) => view.ask === "ahead", async () => {
+  const { AheadPanel } = await import("./panels/ahead.js");
+  return new AheadPanel(at("ahead-body"));
+});
+const work = later(() => at("work").open, async () => {
+  const { WorkPanel } = await import("./panels/work.js");
+  return new WorkPanel(at("work"), at("work-body"));
+});
+const curves = later(() => at("curves").open, async () => {
+  const { CurvesPanel } = await import("./panels/curves.js");
+  return new CurvesPanel(at("curves"), at("curves-body"));
+});
+for (const fold of ["work", "curves"]) at(fold).addEventListener("toggle", () => scene && (fold === "work" ? work : curves).show(scene));
 const player = new PlayerPanel({ button: at("play"), rate: at("rate") }, state, () => Boolean(scene?.fields) && scene.index >= 0);
 const masthead = new MastheadPanel(
   {
@@ -83,6 +126,54 @@ const masthead = new MastheadPanel(
   state,
   { picture: (format) => chart.picture(format), themeChanged: () => showAll() },
 );
+/** @type {Promise<import("./panels/files.js")>|null} */ let filesScript = null;
+/** @type {import("./panels/files.js").FilesPanel|null} */ let files = null;
+
+/** The sending of files, open or not; it works without any day. */
+async function showFiles() {
+  if (!state.view.files && !files) return null;
+  filesScript ??= import("./panels/files.js");
+  const { FilesPanel } = await filesScript;
+  files ??= new FilesPanel(at("files"), state, live);
+  files.show(scene, state.view.files, [...new Set(days.map((one) => one.region))]);
+  return files;
+}
+
+at("files-open").addEventListener("click", () => state.change({ files: true }));
+at("drop-veil").textContent = FILE_WORDS.drop;
+const carriesFiles = (event) => [...(event.dataTransfer?.types ?? [])].includes("Files");
+window.addEventListener("dragover", (event) => {
+  if (!carriesFiles(event)) return;
+  event.preventDefault();
+  at("drop-veil").hidden = false;
+});
+window.addEventListener("dragleave", (event) => {
+  if (!event.relatedTarget) at("drop-veil").hidden = true;
+});
+window.addEventListener("drop", async (event) => {
+  if (!carriesFiles(event) || !event.dataTransfer) return;
+  event.preventDefault();
+  at("drop-veil").hidden = true;
+  filesScript ??= import("./panels/files.js");
+  // What is carried can be read during this event alone.
+  const carried = [...event.dataTransfer.items].filter((one) => one.kind === "file").map((one) => ({ entry: one.webkitGetAsEntry?.() ?? null, file: one.getAsFile() }));
+  const { filesOf } = await filesScript;
+  state.change({ files: true });
+  (await showFiles())?.take(await filesOf(carried));
+});
+
+/** Where a key is in use, a file is fetched with it: a plain link would be refused. */
+document.addEventListener("click", async (event) => {
+  const link = /** @type {HTMLElement} */ (event.target).closest?.("a[href^='/api/']");
+  if (!link || !api.hasKey()) return;
+  event.preventDefault();
+  try {
+    const address = link.getAttribute("href") ?? "";
+    save(await api.fileOf(address), decodeURIComponent(address.split("?")[0].split("/").pop() ?? "file"));
+  } catch (error) {
+    at("announce").textContent = error.message;
+  }
+});
 at("map-csv").addEventListener("click", () => chart.textTable());
 at("series-csv").addEventListener("click", () => series.textTable());
 
@@ -104,6 +195,8 @@ function showAll() {
   if (!scene) return;
   scene.theme = masthead.theme;
   at("main").dataset.ask = scene.view.ask;
+  live.want("now", scene.view.ask === "now");
+  if (files) showFiles();
   for (const panel of [masthead, year, present, network, chart, legend, clock, reading, series, flags, ahead, work, curves, player]) panel.show(scene);
 }
 
@@ -140,6 +233,7 @@ async function start() {
   }
   masthead.days(days);
   year.days(days);
+  showFiles();
   if (!days.length) {
     empty();
     return;
@@ -355,11 +449,12 @@ function empty() {
   at("main").dataset.loading = "false";
   at("region-name").textContent = WORDS.emptyArchive;
   at("answer").replaceChildren();
-  at("answer").append(Object.assign(document.createElement("p"), { textContent: `${WORDS.emptyArchive} ${WORDS.emptyArchiveHow}` }));
+  at("answer").append(make("p", { text: WORDS.emptyArchiveHow }), make("button", { type: "button", text: FILE_WORDS.title, click: () => state.change({ files: true }) }));
 }
 
 state.addEventListener("change", (event) => {
   const changed = /** @type {CustomEvent<Set<string>>} */ (event).detail;
+  if (changed.has("files")) showFiles();
   if (!scene || settling) return;
   if (changed.has("ask") && state.view.ask === "now" && state.view.minute === null) {
     follow();
@@ -396,17 +491,23 @@ state.addEventListener("change", (event) => {
   showAll();
 });
 
+/** Ask which days are stored; true where that changed. */
+async function renewDays() {
+  const found = await api.days({ signal: only("days") });
+  if (JSON.stringify(found) === JSON.stringify(days)) return false;
+  days = found;
+  masthead.days(days);
+  year.days(days);
+  network.renew();
+  ahead.renew();
+  return true;
+}
+
 /** Now follows the newest day: a new one, or one written anew, is opened; nothing is asked while nobody looks. */
 async function follow() {
   if (!scene || document.hidden || state.view.ask !== "now" || state.view.minute !== null) return;
   try {
-    const found = await api.days({ signal: only("days") });
-    if (JSON.stringify(found) === JSON.stringify(days)) return;
-    days = found;
-    masthead.days(days);
-    year.days(days);
-    network.renew();
-    ahead.renew();
+    if (!(await renewDays())) return;
     settling = true;
     choose();
     settling = false;
@@ -418,6 +519,20 @@ async function follow() {
 
 setInterval(follow, 30000);
 document.addEventListener("visibilitychange", follow);
+
+/** A day is new, or was computed anew: the lists know it at once, and Now shows it. */
+let daysSoon = 0;
+live.addEventListener("day", (event) => {
+  const { region, day, version } = /** @type {CustomEvent} */ (event).detail;
+  const known = days.find((one) => one.region === region && one.day === day);
+  if (known?.version === version) return;
+  clearTimeout(daysSoon);
+  daysSoon = window.setTimeout(async () => {
+    if (state.view.ask === "now" && state.view.minute === null && scene) await follow();
+    else if (!scene) await start();
+    else if (await renewDays().catch(() => false)) showAll();
+  }, 300);
+});
 
 window.addEventListener("error", (event) => {
   at("announce").textContent = event.message;

@@ -20,12 +20,16 @@
  * @property {string} who     the site whose days the year shows, "" the region
  * @property {string} span    of the year: "", a year, or a season
  * @property {string} worst   days of the year that are at least so bad
+ * @property {string} field   days of the year by the magnetic field: "", "quiet", "disturbed", "storm"
+ * @property {boolean} files  is the sending of files open
  */
 
 /** @type {Layer[]} */
 export const LAYERS = ["delay", "uncertainty", "slope", "state"];
 /** @type {Ask[]} */
 export const ASKS = ["past", "now", "ahead", "network"];
+/** How the magnetic field was, by the highest Kp of the day. */
+export const FIELD = ["quiet", "disturbed", "storm"];
 export const SHOWABLE = ["receivers", "rays", "sites", "veil"];
 const SHOWN_AT_FIRST = ["receivers", "sites", "veil"];
 
@@ -45,6 +49,8 @@ export function firstView() {
     who: "",
     span: "",
     worst: "",
+    field: "",
+    files: false,
   };
 }
 
@@ -75,7 +81,8 @@ export function toQuery(view) {
   if (view.clock !== "utc") parts.push(["clock", view.clock]);
   if (view.versus) parts.push(["versus", view.versus]);
   if (!view.beside) parts.push(["as", "difference"]);
-  for (const name of ["who", "span", "worst"]) if (view[name]) parts.push([name, view[name]]);
+  for (const name of ["who", "span", "worst", "field"]) if (view[name]) parts.push([name, view[name]]);
+  if (view.files) parts.push(["files", "open"]);
   const text = parts.map(([key, value]) => `${key}=${encodeURIComponent(value).replace(/%2C/g, ",").replace(/%3A/g, ":")}`);
   return text.length ? `?${text.join("&")}` : "";
 }
@@ -110,6 +117,8 @@ export function fromQuery(query) {
   view.who = given.get("who") ?? "";
   if (/^(\d{4}|dec-feb|mar-may|jun-aug|sep-nov)$/.test(given.get("span") ?? "")) view.span = given.get("span") ?? "";
   if (["strained", "broken"].includes(given.get("worst") ?? "")) view.worst = given.get("worst") ?? "";
+  if (FIELD.includes(given.get("field") ?? "")) view.field = given.get("field") ?? "";
+  view.files = given.get("files") === "open";
   return view;
 }
 

@@ -48,7 +48,7 @@ export const WORDS = {
   loadingMap: "Fetching this hour …",
   loadingReading: "Reading the archive at this place …",
   emptyArchive: "The archive holds no day yet.",
-  emptyArchiveHow: "Process one with “skylag day”, or run “skylag demo” for the invented sample days.",
+  emptyArchiveHow: "The archive holds no day yet. Send your files here, process a day with “skylag day”, or run “skylag demo” for the invented sample days.",
   choosePlace: "Click the map, or choose a site, to ask about a place.",
   noFlags: "No flag was raised on this day.",
   noFlagsNear: "No flag was raised near here within the hour.",
@@ -107,6 +107,11 @@ export const WORDS = {
   frontFrom: (from, speed) => `a front from the ${from} at ${speed} m/s`,
   /** @param {string} fronts */
   ifItKeeps: (fronts) => `By ${fronts}, if course, speed and strength stay; how long a front is was not measured.`,
+  loadingAlerts: "Asking for alerts …",
+  noAlerts: "No alert was raised. Rules for alerts are given to “skylag watch”.",
+  /** @param {number} count */
+  olderAlerts: (count) => `and ${count} earlier.`,
+  simulatedShort: "(simulated data)",
   working: "Working it out …",
   /** @param {string} site */
   surveyAt: (site) => `Survey at ${site}`,
@@ -155,6 +160,52 @@ export const WORDS = {
   play: "Play",
   pause: "Pause",
   mapCaption: (what, when) => `${what}, ${when}. Rows: latitude; columns: longitude; “unseen” where not enough data say anything, * where the delay is known but not whether corrections hold.`,
+};
+
+/** Sending files, and the work that is made of them. */
+export const FILE_WORDS = {
+  title: "Your files",
+  close: "Close",
+  about: "RINEX observations of any number of receivers, and at least one navigation or SP3 file of the day; bias files if there are any. Plain or compressed; kinds are told by content. They stay on this server.",
+  choose: "Choose files",
+  orDrop: "or drop files or folders anywhere on the page.",
+  region: "for the region",
+  drawn: "drawn around the receivers",
+  begin: "Compute these days",
+  work: "Work",
+  noWork: "Nothing was computed from files yet.",
+  waiting: "waits",
+  looking: "being looked at …",
+  sendAgain: "Send again",
+  empty: "the file is empty",
+  /** @param {string} most */
+  tooLarge: (most) => `larger than the ${most} that this server takes`,
+  /** @param {string} share */
+  sending: (share) => `sending, ${share}`,
+  /** @param {string} what */
+  progressOf: (what) => `Progress of ${what}`,
+  kinds: { observations: "observations", navigation: "navigation data", orbits: "orbits", biases: "biases", ionex: "a map", indices: "indices of activity" },
+  /** @param {number} sent @param {number} refused @param {number} all */
+  soFar: (sent, refused, all) => `${sent} of ${countText(all, "file")} sent${refused ? `, ${refused} refused` : ""}.`,
+  leftOut: "Left out",
+  /** @param {string} file @param {number} line @param {string} reason */
+  because: (file, line, reason) => `${file}${line ? `, line ${line}` : ""}: ${reason}`,
+  /** @param {string} days */
+  queued: (days) => `${days} queued; the work is told below.`,
+  inQueue: "waits for its turn",
+  /** @param {number} seconds */
+  nextTry: (seconds) => `failed once; tried again in ${seconds < 90 ? countText(Math.max(1, Math.round(seconds)), "second") : countText(Math.round(seconds / 60), "minute")}`,
+  /** @param {string} stage @param {string} word */
+  stage: (stage, word) => [stage || "starting", word].filter(Boolean).join(": "),
+  done: "done",
+  failed: "failed",
+  cancelled: "cancelled",
+  cancel: "Cancel",
+  /** @param {string} day */
+  open: (day) => `Open ${dayText(day)}`,
+  drop: "Drop to send these files",
+  key: "Key of this server",
+  useKey: "Use this key",
 };
 
 const MINUS = "\u2212";
@@ -377,6 +428,12 @@ export function evidenceText({ evidence, confirmed }) {
 /** @param {string} text @param {number} most  characters */
 export function shortened(text, most) {
   return text.length > most ? `${text.slice(0, most - 1).trimEnd()}…` : text;
+}
+
+/** @param {number} bytes */
+export function bytesText(bytes) {
+  if (bytes < 1000) return countText(bytes, "byte");
+  return bytes < 1e6 ? `${fixed(bytes / 1e3, bytes < 1e4 ? 1 : 0)} kB` : `${fixed(bytes / 1e6, bytes < 1e7 ? 1 : 0)} MB`;
 }
 
 /** @param {number} count @param {string} one @param {string} [many] */

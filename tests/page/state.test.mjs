@@ -1,7 +1,7 @@
 // The view and its URL: round trips, damaged links, the history.
 import assert from "node:assert/strict";
 import test from "node:test";
-import { ASKS, clockText, firstView, fromQuery, LAYERS, SHOWABLE, State, toQuery } from "../../frontend/js/state.js";
+import { ASKS, clockText, firstView, fromQuery, LAYERS, SHOWABLE, State, toQuery, FIELD } from "../../frontend/js/state.js";
 
 test("the first view has an empty query, and an empty query is the first view", () => {
   assert.equal(toQuery(firstView()), "");
@@ -27,6 +27,8 @@ test("every view survives the way through its URL", () => {
           who: bits % 2 ? "Gannet Field & more" : "",
           span: ["", "2031", "dec-feb"][(bits >> 1) % 3],
           worst: ["", "strained", "broken"][(bits >> 2) % 3],
+          field: ["", ...FIELD][(bits >> 1) % 4],
+          files: bits % 7 === 3,
         });
       }
     }
@@ -36,7 +38,7 @@ test("every view survives the way through its URL", () => {
 });
 
 test("a damaged link opens at first values", () => {
-  const view = fromQuery("?ask=why&versus=tomorrow&span=spring&worst=ever&day=yesterday&time=25:99&layer=rainbow&at=900,abc&clock=moon&show=dragons");
+  const view = fromQuery("?ask=why&versus=tomorrow&span=spring&worst=ever&field=corn&files=shut&day=yesterday&time=25:99&layer=rainbow&at=900,abc&clock=moon&show=dragons");
   assert.deepEqual(view, { ...firstView(), show: new Set() });
 });
 

@@ -5,6 +5,7 @@ guessed back (common practice for keys that are not chosen by people).  A name t
 path.  The clock is handed in.
 """
 
+import contextlib
 import hashlib
 import os
 import re
@@ -134,7 +135,10 @@ class Inbox:
     def receive(self, batch: str, name: str, announced: int | None) -> "Receiving":
         """Begin to take a file; `announced` bytes are to come, None where that is not told."""
         folder, limits = self.path_of(batch), self.limits
-        there = [path.stat().st_size for path in folder.iterdir()]
+        there = []
+        for path in folder.iterdir():
+            with contextlib.suppress(FileNotFoundError):  # another file of the batch has just been put in its place
+                there.append(path.stat().st_size)
         room = min(limits.file_bytes, limits.batch_bytes - sum(there))
         if len(there) >= limits.batch_files:
             raise Refused(

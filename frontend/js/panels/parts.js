@@ -2,9 +2,10 @@
  * Small pieces several panels build: elements, state swatches, notices of trouble. Never fetches.
  */
 
+import { useKey } from "../api.js";
 import { placeAt } from "../figures/signs.js";
 import { nearest } from "../figures/strip.js";
-import { STATE_WORDS, WORDS } from "../words.js";
+import { FILE_WORDS, STATE_WORDS, WORDS } from "../words.js";
 
 const SVG = "http://www.w3.org/2000/svg";
 
@@ -58,8 +59,21 @@ export function stateWord(state) {
  */
 export function trouble(error, again = null) {
   const box = make("div", { class: "trouble", role: "alert" }, make("p", { text: error.message || WORDS.offline }));
-  if (again) box.append(make("button", { type: "button", text: WORDS.tryAgain, click: again }));
+  if (error.status === 401 && again) box.append(keyForm(again));
+  else if (again) box.append(make("button", { type: "button", text: WORDS.tryAgain, click: again }));
   return box;
+}
+
+/** Where the server asks for a key. @param {() => void} then */
+function keyForm(then) {
+  const input = make("input", { type: "password", name: "key", autocomplete: "off", required: true });
+  const form = make("form", { class: "key-form" }, make("label", {}, FILE_WORDS.key, " ", input), make("button", { text: FILE_WORDS.useKey }));
+  form.addEventListener("submit", (event) => {
+    event.preventDefault();
+    useKey(input.value);
+    then();
+  });
+  return form;
 }
 
 /**

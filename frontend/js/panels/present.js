@@ -2,9 +2,13 @@
  * Now: how old the newest data are, what fails, and what is predicted to arrive. Follows the newest day.
  */
 
+import * as api from "../api.js";
 import { arrivals } from "../figures/arrivals.js";
 import { agoText, compass, dateText, fixed, flagSentence, KIND_WORDS, timeText, WORDS } from "../words.js";
-import { make, stateWord, viewOf } from "./parts.js";
+import { make, stateWord, trouble, viewOf } from "./parts.js";
+
+/** So many alerts are shown; the rest is counted. */
+const MOST_ALERTS = 8;
 
 /** Data older than this are not the present. */
 export const STALE_AFTER = 20 * 60000;
@@ -15,9 +19,17 @@ export class PresentPanel {
   #scene = null;
   #timer = 0;
   #shown = "";
+  /** @type {Map<number, import("../api.js").Notice>|null} */ #notices = null;
+  #asked = false;
+  #live;
 
-  /** @param {{age: HTMLElement, back: HTMLButtonElement, fails: HTMLElement, flags: HTMLElement, next: HTMLElement, note: HTMLElement}} elements @param {import("../state.js").State} state */
-  constructor(elements, state) {
+  /**
+   * @param {{age: HTMLElement, back: HTMLButtonElement, fails: HTMLElement, flags: HTMLElement, next: HTMLElement, note: HTMLElement, alerts: HTMLElement}} elements
+   * @param {import("../state.js").State} state @param {import("../live.js").Live} live
+   */
+  constructor(elements, state, live) {
+    this.#live = live;
+    live.addEventListener("notice", this.#heard);
     this.#elements = elements;
     this.#state = state;
     elements.back.addEventListener("click", () => state.change({ minute: null }));
@@ -29,6 +41,7 @@ export class PresentPanel {
     this.#scene = scene;
     if (scene.view.ask !== "now") return;
     this.#age();
+    if (!this.#asked) this.#ask();
     const { day, time, view, siteStates } = scene;
     const key = JSON.stringify([day.region.key, day.day, time, view.clock, siteStates?.serial]);
     if (key === this.#shown) return;
@@ -54,6 +67,40 @@ export class PresentPanel {
 
   close() {
     clearInterval(this.#timer);
+    this.#live.removeEventListener("notice", this.#heard);
+  }
+
+  async #ask() {
+    this.#asked = true;
+    const { alerts } = this.#elements;
+    alerts.replaceChildren(make("li", { class: "empty", text: WORDS.loadingAlerts }));
+    try {
+      const found = await api.notices();
+      this.#notices = new Map([...found, ...(this.#notices?.values() ?? [])].map((one) => [one.id, one]));
+      this.#alert();
+    } catch (error) {
+      this.#asked = false;
+      alerts.replaceChildren(make("li", {}, trouble(error, () => this.#ask())));
+    }
+  }
+
+  #heard = (event) => {
+    const notice = /** @type {CustomEvent} */ (event).detail;
+    const known = this.#notices?.get(notice.id);
+    if (!this.#notices || JSON.stringify(known) === JSON.stringify(notice)) return;
+    this.#notices.set(notice.id, notice);
+    this.#alert();
+  };
+
+  /** Newest first; what came in the meantime is read aloud. */
+  #alert() {
+    const { alerts } = this.#elements;
+    const found = [...(this.#notices?.values() ?? [])].sort((a, b) => b.made - a.made || b.id - a.id);
+    const zone = this.#scene.day.region.timezone;
+    const how = { clock: this.#scene.view.clock, zone };
+    const item = (one) => make("li", {}, make("strong", { text: `${dateText(one.made, how.clock === "local" ? zone : "UTC")}, ${timeText(one.made, how)}` }), ` ${one.sentence}`, ...(one.facts.simulated ? [make("small", { text: ` ${WORDS.simulatedShort}` })] : []));
+    fill(alerts, found.slice(0, MOST_ALERTS).map(item), WORDS.noAlerts);
+    if (found.length > MOST_ALERTS) alerts.append(make("li", { class: "fine", text: WORDS.olderAlerts(found.length - MOST_ALERTS) }));
   }
 
   #age() {
