@@ -8,6 +8,7 @@ this is what a service with just these receivers could say.
 """
 
 from dataclasses import dataclass, field
+from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
@@ -92,12 +93,14 @@ def cell_weights(x: Floats, y: Floats, there: Bools) -> Floats:
 
 
 class Lattice:
-    """Finds the cell of the grid around places, by RTCA DO-229, A.4.4.10.2, up to 75 degrees of latitude.
+    """Finds the cell of the grid around places, by RTCA DO-229, A.4.4.10.2, for bands 0 to 8.
 
     Up to 60 degrees: the cell of 5 by 5 degrees with four or three monitored corners, else that of 10 by 10; bands 0 to
     8 have no rows between 55 and 65 and between 65 and 75, so only wide cells there.  Wide cells lie between
     multiples of ten degrees of longitude; of latitude too, save from 45 to 75 where the rows are 45, 55, 65, 75.
-    Places beyond 75 degrees cannot be used: the rules of the polar caps are not in here.
+    From 75 to 85: two points at 75 and, between the points at 85 which stand 90 degrees apart, values interpolated to
+    their longitudes.  Beyond: the four points at 85, with x and y of their own.  Both need all four points (the rules
+    of the caps from memory).  The denser bands 9 and 10, which a service may send instead, are not in here.
     """
 
     _SOUTH = -90
@@ -143,7 +146,43 @@ class Lattice:
             weight[take], point[take] = tried[take], found[take]
             lost = np.isnan(weight[:, 0]) & (point[:, 0] < 0)
             point[lost] = found[lost]  # named as the cell that failed
+        polar = np.abs(lat) > 75
+        if polar.any():
+            chosen = monitored if monitored.ndim == 1 else monitored[polar]
+            point[polar], weight[polar] = self._cap(lat[polar], lon[polar], chosen)
         return Corners(point, weight)
+
+    def _cap(self, lat: Floats, lon: Floats, monitored: Bools) -> tuple[Ints, Floats]:
+        """Corners and shares of places beyond 75 degrees; the southern points at 85 stand 40 degrees farther east."""
+        north = lat >= 0
+        size = np.abs(lat)
+        first = np.where(north, -180.0, -140.0)
+        before = np.floor((lon - first) / 90.0) * 90.0 + first  # the point at 85 to the west
+        west = np.floor(lon / 10.0) * 10.0
+        row85 = np.where(north, 35, 1)
+        row75 = np.where(north, 33, 3)
+
+        def at(row: Ints, longitude: Floats) -> Ints:
+            return np.asarray(self._index[row, ((longitude + 180.0) // 5).astype(np.int64) % 72])
+
+        # 75 to 85: a value at 85 over the western corner, and one over the eastern, each from the two points there.
+        x, y = (lon - west) / 10.0, (size - 75.0) / 10.0
+        over_west, over_east = (west - before) / 90.0, (west + 10.0 - before) / 90.0
+        belt = np.stack([at(row75, west), at(row75, west + 10.0), at(row85, before), at(row85, before + 90.0)], axis=1)
+        eastern = (1 - x) * y * over_west + x * y * over_east
+        belt_share = np.stack([(1 - x) * (1 - y), x * (1 - y), y - eastern, eastern], axis=1)
+        # Beyond 85: the point to the west, the one to the east, and the two across the pole from them.
+        up = (size - 85.0) / 10.0
+        along = (lon - before) / 90.0 * (1.0 - 2.0 * up) + up
+        top = np.stack([at(row85, before + 90.0 * quarter) for quarter in (0, 1, 3, 2)], axis=1)
+        top_share = np.stack([(1 - along) * (1 - up), along * (1 - up), (1 - along) * up, along * up], axis=1)
+        high = (size > 85.0)[:, None]
+        point, share = np.where(high, top, belt), np.where(high, top_share, belt_share)
+        safe = np.maximum(point, 0)
+        there = point >= 0
+        there &= monitored[safe] if monitored.ndim == 1 else np.take_along_axis(monitored, safe, axis=1)
+        whole = np.all(there, axis=1)
+        return point, np.where(whole[:, None], share, np.nan)
 
 
 # ---------------------------------------------------------------------------------------------- the service's side
@@ -247,7 +286,20 @@ def _points_near(pierce_lat: Floats, pierce_lon: Floats) -> tuple[Ints, Ints]:
     own = np.mod(lon - middle + 180.0, 360.0) - 180.0
     near = (lat >= pierce_lat.min() - 10) & (lat <= pierce_lat.max() + 10) & (np.abs(lat) <= 75)
     near &= (own >= turn.min() - 10) & (own <= turn.max() + 10)
+    # Around the caps all that stands at 85 is near, and beyond them all longitudes of 75.
+    for side in (1, -1):
+        reach = float((side * pierce_lat).max())
+        near |= (side * lat == 85) & (reach > 75)
+        near |= (side * lat == 75) & (reach > 85)
     return lat[near], lon[near]
+
+
+@lru_cache(maxsize=16)
+def _test_table(false_alarm: float, missed: float, most: int) -> tuple[Floats, Floats]:
+    """Limit of chi-square and inflation of sigma by the count of lines of sight in a fit, up to `most`."""
+    freedom = np.maximum(np.arange(most + 1) - 3, 1)
+    limit = chi2.ppf(1.0 - false_alarm, freedom)
+    return limit, np.sqrt(limit / chi2.ppf(missed, freedom))
 
 
 def judge_points(
@@ -257,31 +309,34 @@ def judge_points(
 
     Inflation is NaN where the point cannot be monitored.
     """
-    distance = np.hypot(part.x[None, :] - gx[:, None], part.y[None, :] - gy[:, None])
-    ordered = np.sort(distance, axis=1)
-    wanted = ordered[:, min(choices.enough, ordered.shape[1]) - 1]
+    away2 = (part.x[None, :] - gx[:, None]) ** 2 + (part.y[None, :] - gy[:, None]) ** 2
+    last = min(choices.enough, away2.shape[1]) - 1
+    nearest_km = np.sqrt(away2.min(axis=1))
+    wanted = np.sqrt(np.partition(away2, last, axis=1)[:, last])
     radius = np.clip(wanted, choices.first_km, choices.last_km)
-    member = distance <= radius[:, None]
+    member = away2 <= (radius**2 * (1.0 + 1e-12))[:, None]
     count = member.sum(axis=1)
-    noise_m = np.sqrt(np.diagonal(part.noise(covariance))) * L1_M_PER_TECU
-    weight = member / (choices.decorrelation_m**2 + noise_m**2)[None, :]
-    east = (part.x[None, :] - gx[:, None]) / 1000.0
-    north = (part.y[None, :] - gy[:, None]) / 1000.0
-    design = np.stack([np.ones(east.shape), east, north], axis=-1)
     value = part.vtec * L1_M_PER_TECU
-    normal = np.einsum("pni,pn,pnj->pij", design, weight, design, optimize=True)
-    right = np.einsum("pni,pn,n->pi", design, weight, value, optimize=True)
+    weight = 1.0 / (choices.decorrelation_m**2 + np.diagonal(part.noise(covariance)) * L1_M_PER_TECU**2)
+    # Sums over the members in one product; the plane in thousands of km and about the middle of all values.
+    middle = float((weight * value).sum() / weight.sum())
+    x, y, v = part.x / 1000.0, part.y / 1000.0, value - middle
+    columns = weight * np.stack([np.ones(len(x)), x, y, x * x, x * y, y * y, v, x * v, y * v, v * v])
+    n, sx, sy, sxx, sxy, syy, sv, sxv, syv, svv = (member.astype(np.float64) @ columns.T).T
+    px, py = gx / 1000.0, gy / 1000.0  # and shifted to each point
+    east, north = sx - px * n, sy - py * n
+    east2, north2 = sxx - 2 * px * sx + px**2 * n, syy - 2 * py * sy + py**2 * n
+    both = sxy - px * sy - py * sx + px * py * n
+    normal = np.stack([n, east, north, east, east2, both, north, both, north2], axis=1).reshape(-1, 3, 3)
+    right = np.stack([sv, sxv - px * sv, syv - py * sv], axis=1)
     enough = count >= max(choices.fewest, 4)
     normal = np.where(enough[:, None, None], normal, np.eye(3))
     plane = np.linalg.solve(normal, right[:, :, None])[:, :, 0]
-    residual = value[None, :] - np.einsum("pni,pi->pn", design, plane)
-    chi_square = (weight * residual**2).sum(axis=1)
-    freedom = np.maximum(count - 3, 1)
-    limit = chi2.ppf(1.0 - choices.false_alarm, freedom)
-    raised = np.sqrt(limit / chi2.ppf(choices.missed, freedom))
-    total = np.maximum(weight.sum(axis=1), 1e-300)
-    centre_km = 1000.0 * np.hypot((weight * east).sum(axis=1), (weight * north).sum(axis=1)) / total
-    way_km = np.maximum(centre_km, ordered[:, 0])
-    near = ordered[:, 0] <= choices.nearest_km
+    chi_square = svv - (plane * right).sum(axis=1)
+    limits, inflations = _test_table(choices.false_alarm, choices.missed, 100 * (len(x) // 100 + 1))
+    limit, raised = limits[count], inflations[count]  # a copy
+    centre_km = 1000.0 * np.hypot(east, north) / np.maximum(n, 1e-300)
+    way_km = np.maximum(centre_km, nearest_km)
+    near = nearest_km <= choices.nearest_km
     raised[~(enough & near)] = np.nan
     return count, enough & (chi_square > limit), raised, choices.missed_mm_per_km * way_km / 1000.0
