@@ -14,6 +14,8 @@ import numpy as np
 
 from skylag.archive import open_archive
 from skylag.constants import L1_M_PER_TECU
+from skylag.events import Arrival
+from skylag.impact import arrivals
 from skylag.ionosphere.geometry import earth_fixed
 from skylag.tables import (
     BROKEN,
@@ -171,6 +173,19 @@ def _invented_flags(day: np.datetime64) -> tuple[Flag, ...]:
     )  # fmt: skip
 
 
+def _invented_arrivals(day: np.datetime64) -> tuple[Arrival, ...]:
+    """Two forecasts of the front: one that came true, one that nobody could check yet."""
+    start, never = day.astype("datetime64[ns]"), np.datetime64("NaT", "ns")
+
+    def at(minutes: int) -> np.datetime64:
+        return np.datetime64(start + np.timedelta64(minutes, "m"))
+
+    return (
+        Arrival(0, "Gannet Field", at(300), at(345), 240.0, at(347), True),
+        Arrival(0, "Northport", at(480), at(525), 600.0, never, None),
+    )
+
+
 def invented_day(
     day: np.datetime64 = STORM_DAY,
     *,
@@ -248,7 +263,11 @@ def invented_day(
             options={"step_minutes": step_minutes},
             versions={"skylag": "0.1.0"},
             timings_s={"all": 0.1},
-            counts={"rays": len(samples.rays), "receivers": len(RECEIVERS)},
+            counts={
+                "rays": len(samples.rays),
+                "receivers": len(RECEIVERS),
+                "arrivals": arrivals.facts(_invented_arrivals(np.datetime64(day, "D")) if storm else ()),
+            },
             warnings=("Invented data: nothing here was measured.",),
             simulated=True,
         ),

@@ -12,7 +12,7 @@ import numpy as np
 
 from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.errors import NotEnough
-from skylag.impact import states
+from skylag.impact import arrivals, states
 from skylag.ionosphere import adjustment, background, faults, fronts, geometry, irregularity, left_out, orbits, slopes
 from skylag.ionosphere import field as vertical_field
 from skylag.ionosphere.adjustment import AdjustmentChoices
@@ -203,10 +203,12 @@ def estimate(
     ragged = irregularity.assess(rays, moving, choices.irregularity, samples)
     broken = faults.find(rays, samples, ragged, steep, moving)
     tell("states", 0.0)
-    judged = states.judge(fields, steep, moving, ragged, region, broken, fronts.arrivals(moving, rays, region.sites))
+    told = fronts.arrivals(moving, rays, region.sites)
+    judged = states.judge(fields, steep, moving, ragged, region, broken, told)
     facts = {
         "calibration": dict(calibration.summary),
         "slopes": dict(steep.summary),
+        "arrivals": arrivals.facts(told),
         "receivers_left_out": dict(foretold.facts()),
         "beyond_sight": (beyond or background.PLAIN).name,
     }

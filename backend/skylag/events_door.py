@@ -1,16 +1,22 @@
-"""The command `events`: the bad stretches of a kept day, by its own states or for one use, as CSV, GeoJSON or JSON.
+"""The command `events`: the bad stretches of a kept day, by its own states or for one use, as CSV, GeoJSON or JSON; or
+when its fronts were foretold at the sites, and what came of it.
 
 Thin: parses, calls, prints or writes one file.
 """
 
 import argparse
+from collections.abc import Sequence
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from skylag import settings
-from skylag.errors import Missing
+from skylag.errors import Missing, Refused
 from skylag.formats import events as event_files
-from skylag.impact import events, uses
+from skylag.impact import arrivals, events, uses
+from skylag.tables import Flag
+
+if TYPE_CHECKING:
+    from skylag.archive import DayRecord
 
 
 def add(commands: Any, caution: str) -> None:
@@ -20,7 +26,8 @@ def add(commands: Any, caution: str) -> None:
         help="list the bad stretches of a kept day",
         formatter_class=argparse.RawDescriptionHelpFormatter,
         description="Stretches of strained or broken cells that touch in space and time, parted by their cause, with\n"
-        "extent, worst value, sites reached and reason; for one use where asked.",
+        "extent, worst value, sites reached and reason; for one use where asked.  With --arrivals: when fronts were\n"
+        "foretold at the sites within the hour, with the spread, and whether they came within two spreads.",
         epilog="uses where the region names none: " + ", ".join(use.name for use in uses.PUBLISHED) + "\n\nexample:\n"
         "  skylag events --archive skylag-demo --day 2031-03-12 --use ground --format geojson --out storm.geojson\n\n"
         + caution,
@@ -30,6 +37,7 @@ def add(commands: Any, caution: str) -> None:
     parser.add_argument("--day", default="", metavar="YYYY-MM-DD", help="the newest day without")
     parser.add_argument("--use", default="", metavar="NAME", help="a use or its kind; the day's own states without")
     parser.add_argument("--format", default="csv", choices=("csv", "geojson", "json"))
+    parser.add_argument("--arrivals", action="store_true", help="foretold arrivals of fronts instead, as CSV or JSON")
     parser.add_argument("--out", type=Path, metavar="FILE", help="write here; printed without")
     parser.set_defaults(run=_events)
 
@@ -49,18 +57,37 @@ def _events(options: argparse.Namespace) -> int:
         newest = max(heads, key=lambda head: head.day)
         record = archive.day(newest.region, newest.day)
         fields, flags = archive.fields(newest.region, newest.day), archive.flags(newest.region, newest.day)
+    simulated = record.origin.simulated
+    if options.arrivals:
+        _write(_arrivals(record, flags, options), options.out)
+        return 0
     if options.use:
         judged = uses.judge_for(uses.find_use(record.region, options.use), fields, flags, record.region)
         found = events.of_use(judged, fields, flags, record.region)
     else:
         found = events.of_day(fields, flags, record.region)
-    simulated = record.origin.simulated
     text = {
         "csv": lambda: event_files.to_csv(found), "geojson": lambda: event_files.to_geojson(found, simulated) + "\n",
         "json": lambda: event_files.to_json(found, simulated) + "\n",
     }[options.format]()  # fmt: skip
-    if options.out:
-        options.out.write_text(text, encoding="utf-8")
+    _write(text, options.out)
+    return 0
+
+
+def _arrivals(record: "DayRecord", flags: Sequence[Flag], options: argparse.Namespace) -> str:
+    if options.format == "geojson" or options.use:
+        raise Refused(
+            "events --arrivals: forecasts are the same for every use and have no shape; leave --use out, and choose "
+            "--format csv or json", name="arrivals", value=options.format, allowed=("csv", "json"),
+        )  # fmt: skip
+    told, rows = arrivals.of_facts(record.origin.counts), arrivals.flag_rows(flags)
+    if options.format == "json":
+        return event_files.arrivals_to_json(told, rows, record.origin.simulated) + "\n"
+    return event_files.arrivals_to_csv(told, rows)
+
+
+def _write(text: str, out: Path | None) -> None:
+    if out:
+        out.write_text(text, encoding="utf-8")
     else:
         print(text, end="")
-    return 0

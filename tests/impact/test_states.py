@@ -191,11 +191,3 @@ def test_what_one_receiver_says_changes_no_state():
     judged = states.judge(flat_fields(), steep, moving, alone, REGION)
     assert (judged.fields.state == HOLDS).all()
     assert judged.flags[0].confirmed is False and "unconfirmed" in judged.flags[0].evidence
-
-
-def test_next_hour_names_the_sites(stormy):
-    moving = stormy[2]
-    soon = states.next_arrivals(moving, REGION, START + np.timedelta64(100, "m"))
-    assert [arrival.place for arrival in soon][:1] == ["middle"]
-    assert abs((soon[0].expected - START) / np.timedelta64(1, "s") - 7200) < 120
-    assert soon[0].sigma_s > 0

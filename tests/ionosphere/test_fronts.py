@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from tests.simulated.moving_wall import CENTRE, PLACES, START, changed, quiet, simulate, wall
+from tests.simulated.moving_wall import CENTRE, PLACES, START, changed, quiet, samples_of, simulate, wall
 
 from skylag.ionosphere import fronts
 from skylag.tables import Site
@@ -172,3 +172,21 @@ def test_arrivals_are_foretold_and_come_true():
     assert all(one.made < one.expected <= one.made + np.timedelta64(3600, "s") for one in told)
     middle = [abs((one.expected - START) / np.timedelta64(1, "s") - 10_800) for one in told if one.place == "middle"]
     assert max(middle) < 600.0
+
+
+def test_where_the_data_end_the_next_hour_is_foretold():
+    rays, samples = with_wall(150, 60, 150, 300, seed=21, hours=6.0)
+    now = START + np.timedelta64(170, "m")
+    seen = rays.time <= now
+    rays = rays.where(seen)
+    until = fronts.track(
+        rays, samples_of(rays, samples.vtec[seen], samples.arc_sigma[seen], samples.receiver_sigma[seen])
+    )
+    sites = [Site("middle", *CENTRE), Site("north west", -37.8, 143.5), Site("behind", -42.5, 148.5)]
+    told = fronts.arrivals(until, rays, sites)
+    newest = [one for one in told if one.made == now]
+    assert {one.place for one in newest} == {"middle", "north west"}
+    assert max(one.made for one in told) == now  # never made later than the data reach
+    middle = next(one for one in newest if one.place == "middle")
+    assert middle.came_true is None and np.isnat(middle.seen)
+    assert abs((middle.expected - START) / np.timedelta64(1, "s") - 10_800) < 2 * middle.sigma_s + 30

@@ -42,3 +42,18 @@ def test_events_three_ways(client: TestClient) -> None:
     assert [shape["properties"]["cause"] for shape in shapes["features"]] == [event["cause"] for event in told]
     for_use = get(client, f"{DAY}/events?use=single")["events"]
     assert all(event["use"] == "single frequency" for event in for_use)
+
+
+def test_foretold_arrivals_and_what_came_of_them(client: TestClient) -> None:
+    told = get(client, f"{DAY}/arrivals")
+    assert (told["told"], told["checked"], told["came_true"], told["simulated"]) == (2, 1, 1, True)
+    true, open_one = told["arrivals"]
+    assert (true["flag"], true["site"], true["sigma_s"], true["came_true"]) == (0, "Gannet Field", 240, True)
+    # GPS time is 18 s ahead of UTC.
+    assert (true["made_utc"], true["expected_utc"], true["seen_utc"]) == tuple(
+        f"{STORM_DAY}T{clock}Z" for clock in ("04:59:42", "05:44:42", "05:46:42")
+    )
+    assert open_one["came_true"] is None and open_one["seen_utc"] is None
+    rows = list(csv.DictReader(io.StringIO(client.get(f"{DAY}/arrivals.csv?site=Northport").text)))
+    assert [(row["site"], row["seen_utc"], row["came_true"]) for row in rows] == [("Northport", "", "")]
+    assert get(client, f"/api/days/{REGION.name}/2031-05-10/arrivals")["arrivals"] == []

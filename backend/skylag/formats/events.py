@@ -1,4 +1,4 @@
-"""Events as files for people who script: CSV, GeoJSON (RFC 7946) and JSON.
+"""Events, and arrivals of fronts, as files for people who script: CSV, GeoJSON (RFC 7946) and JSON.
 
 Times leave as UTC, unknown numbers as empty cells or null.  Never decides what an event is.
 """
@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from skylag.events import Event
+from skylag.events import Arrival, Event
 from skylag.formats.delimited import utc_text
 
 COLUMNS = ("use", "start_utc", "end_utc", "state", "cause", "confirmed", "south_deg", "north_deg", "west_deg",
@@ -97,6 +97,42 @@ def _shape(event: Event) -> dict[str, Any]:
 def to_json(events: Sequence[Event], simulated: bool) -> str:
     """A list of objects under `events`."""
     return json.dumps({"simulated": simulated, "events": [facts(event) for event in events]}, allow_nan=False)
+
+
+ARRIVAL_COLUMNS = ("flag", "site", "made_utc", "expected_utc", "sigma_s", "seen_utc", "came_true")
+
+
+def arrival_facts(arrival: Arrival, flag_rows: Sequence[int]) -> dict[str, Any]:
+    """One forecast; None for what nobody saw.  flag_rows: row numbers of the day's flags that are its fronts."""
+    known = arrival.front < len(flag_rows)
+    return {
+        "flag": flag_rows[arrival.front] if known else None, "site": arrival.place,
+        "made_utc": utc_text(arrival.made), "expected_utc": utc_text(arrival.expected),
+        "sigma_s": _round(arrival.sigma_s, 0), "seen_utc": None if np.isnat(arrival.seen) else utc_text(arrival.seen),
+        "came_true": arrival.came_true,
+    }  # fmt: skip
+
+
+def arrivals_to_csv(arrivals: Sequence[Arrival], flag_rows: Sequence[int]) -> str:
+    """One row per forecast; came_true is empty while unknown."""
+    out = io.StringIO()
+    writer = csv.DictWriter(out, ARRIVAL_COLUMNS, lineterminator="\n")
+    writer.writeheader()
+    for arrival in arrivals:
+        row = arrival_facts(arrival, flag_rows)
+        row["came_true"] = "" if arrival.came_true is None else str(arrival.came_true).lower()
+        writer.writerow({key: _harmless("" if value is None else value) for key, value in row.items()})
+    return out.getvalue()
+
+
+def arrivals_to_json(arrivals: Sequence[Arrival], flag_rows: Sequence[int], simulated: bool) -> str:
+    """How many were told, could be checked and came true within two sigmas, and a list of objects under `arrivals`."""
+    checked = [one for one in arrivals if one.came_true is not None]
+    table = [arrival_facts(arrival, flag_rows) for arrival in arrivals]
+    return json.dumps({
+        "simulated": simulated, "told": len(arrivals), "checked": len(checked),
+        "came_true": sum(1 for one in checked if one.came_true), "arrivals": table,
+    }, allow_nan=False)  # fmt: skip
 
 
 def _round(value: float, digits: int) -> float | None:

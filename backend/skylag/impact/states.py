@@ -24,7 +24,7 @@ from scipy.ndimage import find_objects, label
 from skylag.constants import L1_M_PER_TECU
 from skylag.events import Arrival, Fault, Patch, Patches
 from skylag.ionosphere.field import plane_km
-from skylag.ionosphere.fronts import ahead_km, expected_at
+from skylag.ionosphere.fronts import ahead_km
 from skylag.tables import (
     BROKEN,
     HOLDS,
@@ -503,14 +503,3 @@ def _near(claim: SlopeClaim, lat: float, lon: float) -> bool:
     if len(turn) == 0:
         return False
     return bool((np.hypot(claim.cell_lat - lat, turn * np.cos(np.radians(lat))) * 111.2).min() <= 300.0)
-
-
-def next_arrivals(fronts: Fronts, region: Region, now: np.datetime64, horizon_s: float = 3600.0) -> list[Arrival]:
-    """When the fronts seen so far reach the region's sites within the hour after `now`, with the spread."""
-    rows = []
-    for number, front in enumerate(fronts.fronts):
-        for site in region.sites:
-            moment, sigma = expected_at(front, site.lat, site.lon)
-            if not np.isnat(moment) and now < moment <= now + np.timedelta64(round(horizon_s), "s"):
-                rows.append(Arrival(number, site.name, now, moment, sigma, np.datetime64("NaT"), None))
-    return rows

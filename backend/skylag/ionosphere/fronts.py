@@ -776,20 +776,26 @@ def arrivals(
     """What could be foretold at each quarter hour from the onsets until then, for the sites, and what came of it.
 
     Each forecast refits the walls to the onsets of the two hours before: nothing later is used.  What came of it is
-    told by the front as known at the end of the day, near the site.
+    told by the front as known at the end of the day, near the site.  Where the data end while a front is about, the
+    last forecast is made from all of them: what it says of the next hour nobody can check yet.
     """
     choices = choices or FrontChoices()
     told: list[Arrival] = []
+    if not len(rays):
+        return ()
+    newest = rays.time.max().astype("datetime64[ns]")
+    step = np.timedelta64(round(every_s * 1e9), "ns")
     for number, front in enumerate(fronts.fronts):
         toward = np.sign(front.jump_tecu)
-        made = front.start + np.timedelta64(round(every_s), "s")
-        while made <= front.end + np.timedelta64(round(every_s), "s"):
+        moments = list(np.arange(front.start + step, min(front.end + step, newest) + np.timedelta64(1, "ns"), step))
+        if newest <= front.end + np.timedelta64(round(horizon_s), "s") and newest not in moments:
+            moments.append(newest)
+        for made in moments:
             known = (fronts.onsets.end <= made) & (fronts.onsets.end > made - np.timedelta64(7200, "s"))
             known &= np.sign(fronts.onsets.jump) == toward
             then = fit_walls(fronts.onsets.where(known), rays, choices).fronts if known.sum() >= choices.fewest else ()
             for earlier in then[:1] if len(then) == 1 else sorted(then, key=lambda f: -f.onsets)[:1]:
                 told.extend(_foretold(number, front, earlier, made, sites, horizon_s))
-            made = made + np.timedelta64(round(every_s), "s")
     return tuple(told)
 
 

@@ -1,4 +1,4 @@
-"""Routes about ways of working: the uses of a region, sites judged for one of them, and the events of a day.
+"""Routes about ways of working: uses of a region, sites judged for one of them, events and foretold arrivals of a day.
 
 Worked out from the maps and flags that are kept, when asked.
 """
@@ -7,9 +7,9 @@ from fastapi import APIRouter, Request
 from fastapi.responses import Response
 
 from skylag.archive import Archive, SiteStates
-from skylag.events import Event
+from skylag.events import Arrival, Event
 from skylag.formats import events as event_files
-from skylag.impact import events, uses
+from skylag.impact import arrivals, events, uses
 from skylag.web import asking, payloads
 
 router = APIRouter()
@@ -75,3 +75,27 @@ def as_shapes(request: Request, region: str, day: str, use: str = "", version: i
     """The same as boxes."""
     found, simulated = _found(request.app.state.archive, region, day, use, version)
     return Response(event_files.to_geojson(found, simulated), media_type="application/geo+json")
+
+
+def _told(
+    archive: Archive, region: str, day: str, site: str, version: int | None
+) -> tuple[list[Arrival], list[int], bool]:
+    """Forecasts of a stored day, row numbers of the flags that are its fronts, and whether the day is invented."""
+    record = archive.day(region, asking.day(day), version)
+    rows = arrivals.flag_rows(archive.flags(region, record.head.day, record.head.version))
+    told = [one for one in arrivals.of_facts(record.origin.counts) if site in ("", one.place)]
+    return told, rows, record.origin.simulated
+
+
+@router.get("/api/days/{region}/{day}/arrivals", summary="When fronts were foretold at the sites, and what came of it")
+def foretold(request: Request, region: str, day: str, site: str = "", version: int | None = None) -> Response:
+    """Forecasts for the hour ahead, made each quarter hour from what was seen until then; of one site with `site`."""
+    told, rows, simulated = _told(request.app.state.archive, region, day, site, version)
+    return Response(event_files.arrivals_to_json(told, rows, simulated), media_type="application/json")
+
+
+@router.get("/api/days/{region}/{day}/arrivals.csv", summary="Foretold arrivals of fronts as CSV")
+def foretold_table(request: Request, region: str, day: str, site: str = "", version: int | None = None) -> Response:
+    """The same, one row each; times are UTC, `sigma_s` is the spread."""
+    told, rows, _ = _told(request.app.state.archive, region, day, site, version)
+    return Response(event_files.arrivals_to_csv(told, rows), media_type="text/csv; charset=utf-8")
