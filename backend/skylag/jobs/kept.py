@@ -1,8 +1,9 @@
-"""Receiver-days that were computed already, kept on disk, so that only what changed is computed again.
+"""Files read and receiver-days computed already, kept on disk, so that only what changed is computed again.
 
 `KeepingExecutor` stands before another executor: a receiver-day whose files, orbits, choices and program are the same
-as before is given at once, to the bit; any other work passes through.  What is kept may be thrown away at any time.
-Kept as plain arrays and JSON: nothing that is read can run.
+as before is given at once, to the bit; so are, to one that is told so, hours whose rays hardly moved
+(`closed_hours`).  Any other work passes through.  What is kept may be thrown away at any time.  Kept as plain arrays
+and JSON: nothing that is read can run.
 """
 
 import hashlib
@@ -22,34 +23,57 @@ import numpy as np
 
 import skylag
 from skylag.chain import ReceiverDay
+from skylag.ionosphere.field import Hour
 from skylag.jobs import work
+from skylag.jobs.closed_hours import ClosedHours
 from skylag.tables import Problem, Rays, Receiver, SignalPair
 
 
 class KeepingExecutor(Executor):
-    """An executor that keeps receiver-days in a folder."""
+    """An executor that keeps receiver-days in a folder, and hours of maps in memory where it is given a place for them.
 
-    def __init__(self, inner: Executor, folder: Path) -> None:
+    Its user is one thread.
+    """
+
+    def __init__(self, inner: Executor, folder: Path, hours: ClosedHours | None = None) -> None:
         self._inner, self._folder = inner, folder
+        self.hours = hours  # None: every hour is made
         self._pending: set[Future[Any]] = set()
         self._sources: tuple[Any, str] | None = None
         self.given, self.computed = 0, 0  # receiver-days given from the folder, and computed
+        self.hours_given, self.hours_made = 0, 0  # hours of maps
 
     def submit(self, function: Callable[..., Any], /, *arguments: Any, **named: Any) -> Future[Any]:
         """As any executor does."""
+        if self.hours is not None and function in (work.hour_unit, work.left_out_unit):
+            return self._hour(self.hours, function, *arguments)
         if function is not work.receiver_unit or named:
             return self._watched(self._inner.submit(function, *arguments, **named))
         mark = self._mark(*arguments)
         there = read(self._folder, mark) if mark else None
         if there is not None:
             self.given += 1
-            done: Future[Any] = Future()
-            done.set_result(there)
-            return done
+            return _done(there)
         self.computed += 1
         future = self._watched(self._inner.submit(function, *arguments))
         if mark:
             future.add_done_callback(lambda one: _keep(self._folder, mark, one))
+        return future
+
+    def _hour(self, hours: ClosedHours, unit: Callable[[Hour], Any], hour: Hour) -> Future[Any]:
+        there = hours.given(unit.__name__, hour)
+        maps = unit is work.hour_unit
+        self.hours_given += maps and there is not None
+        self.hours_made += maps and there is None
+        if there is not None:
+            return _done(there)
+        future = self._watched(self._inner.submit(unit, hour))
+
+        def keep(one: Future[Any]) -> None:
+            if not one.cancelled() and one.exception() is None:
+                hours.keep(unit.__name__, hour, one.result())
+
+        future.add_done_callback(keep)
         return future
 
     def drop(self) -> None:
@@ -74,6 +98,12 @@ class KeepingExecutor(Executor):
             return ""
         facts = [program(), key, files, str(day), self._sources[1], repr(choices), shell_height_m]
         return hashlib.sha256(json.dumps(facts).encode()).hexdigest()
+
+
+def _done(result: Any) -> Future[Any]:
+    done: Future[Any] = Future()
+    done.set_result(result)
+    return done
 
 
 def digest(value: Any) -> str:

@@ -1,8 +1,9 @@
 """Today, as its files come in: a folder is watched, each arrival brings the day's maps up to date, silence is noticed.
 
 `step` is a pure fold over a closed list of events, so that a recorded day can be replayed at any speed; `Watch` owns
-folder and clock and only makes events and carries out what is asked.  A receiver-day is computed again only when its
-files changed; the network's maps are then made from all rays.  A day that goes on is kept as provisional.
+folder and clock and only makes events and carries out what is asked.  A file is read once, a receiver-day is computed
+again only when its files changed, and an hour of maps is made again only when its rays moved (`closed_hours`).  A day
+that goes on is kept as provisional; once it is over it is made whole.
 """
 
 import threading
@@ -21,6 +22,7 @@ from skylag.errors import SkylagError
 from skylag.formats.glance import glance
 from skylag.ionosphere.geometry import geodetic
 from skylag.jobs import alerts, board, kept, work
+from skylag.jobs.closed_hours import ClosedHours, Nearness
 from skylag.tables import HOLDS, UNSEEN, Fields, Products, Region
 from skylag.timescales import utc_to_gps
 
@@ -268,12 +270,14 @@ class Watch:
         region: Region | None = None,
         choices: Choices | None = None,
         patience: Patience | None = None,
+        nearness: Nearness | None = None,
         rules: Sequence[alerts.Rule] = (),
         simulated: bool = False,
         log: board.Log | None = None,
     ) -> None:
         self._archive, self._clock, self._region, self._rules = archive, clock, region, rules
-        self._executor = kept.KeepingExecutor(executor, board.kept_folder(archive))
+        self._hours = ClosedHours(nearness)
+        self._executor = kept.KeepingExecutor(executor, board.kept_folder(archive), self._hours)
         self._choices, self._patience = choices or Choices(), patience or Patience()
         self._simulated = simulated
         self._log: board.Log = log or (lambda event, **facts: None)
@@ -326,7 +330,9 @@ class Watch:
     def _make(self, asked: Make) -> int:
         """Compute a day from all its files and keep it; gives 1 where that went well."""
         paths = [Path(path) for path, day in self._days.items() if day in (asked.day, None) and Path(path).is_file()]
-        before = (self._executor.given, self._executor.computed)
+        before = (self._executor.given, self._executor.computed, self._executor.hours_given, self._executor.hours_made)
+        if asked.final:
+            self._hours.forget(asked.day)  # made whole, once more
         try:
             made = work.network_day(
                 paths, region=self._region, day=date.fromisoformat(str(asked.day)), choices=self._choices,
@@ -340,9 +346,13 @@ class Watch:
         except SkylagError as failure:
             self._log("day not made", day=str(asked.day), why=failure.message)
             return 0
+        finally:
+            if asked.final:
+                self._hours.forget(asked.day)
         self._log(
             "day made", day=str(asked.day), final=asked.final, version=version,
             given=self._executor.given - before[0], computed=self._executor.computed - before[1],
+            hours_given=self._executor.hours_given - before[2], hours_made=self._executor.hours_made - before[3],
         )  # fmt: skip
         rays = made.samples.rays
         ends = {
