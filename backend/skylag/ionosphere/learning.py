@@ -78,12 +78,17 @@ class Shifts:
 
     def now(self, phase: npt.NDArray[Any]) -> Floats:
         """Shift (24,) of the hours of a day whose phases (24,) are told."""
-        # A block of few analogues leans on the whole phase.
+        told = (self.told_sum + self.few * self.trust * self._seen()) / (self.told_count + self.few)
+        return np.asarray(np.where(_stormy(phase), told[phase, _BLOCK_OF_HOUR], 0.0))
+
+    def usual(self, phase: npt.NDArray[Any]) -> Floats:
+        """What hours (24,) of phases that were measured did before: the part of a day that passes with its storm."""
+        return np.asarray(np.where(_stormy(phase), self._seen()[phase, _BLOCK_OF_HOUR], 0.0))
+
+    def _seen(self) -> Floats:
+        """Shifts by measured phase; a block of few analogues leans on the whole phase."""
         whole = self.seen_sum.sum(axis=1) / (self.seen_count.sum(axis=1) + 4.0 * self.few)
-        seen = (self.seen_sum + self.few * whole[:, None]) / (self.seen_count + self.few)
-        told = (self.told_sum + self.few * self.trust * seen) / (self.told_count + self.few)
-        stormy = (phase >= ONSET) & (phase <= LATER)
-        return np.asarray(np.where(stormy, told[phase, _BLOCK_OF_HOUR], 0.0))
+        return np.asarray((self.seen_sum + self.few * whole[:, None]) / (self.seen_count + self.few))
 
     def learn(self, error: Floats, told: npt.NDArray[Any], seen: npt.NDArray[Any]) -> None:
         """Show a day: error (24, P) before any shift, NaN where unseen; phases (24,) told and measured."""
@@ -96,6 +101,10 @@ class Shifts:
         ):
             np.add.at(total, (phase, _BLOCK_OF_HOUR), share * mean)
             np.add.at(count, (phase, _BLOCK_OF_HOUR), share)
+
+
+def _stormy(phase: npt.NDArray[Any]) -> Bools:
+    return np.asarray((phase >= ONSET) & (phase <= LATER))
 
 
 _EDGES = np.linspace(-8.0, 8.0, 321)
@@ -229,6 +238,5 @@ class Chances:
 
 
 def storm_columns(phase: npt.NDArray[Any]) -> Floats:
-    """(24, 3): told storm, first day after, second day after."""
-    columns = [np.isin(phase, (ONSET, MAIN)), phase == AFTER, phase == LATER]
-    return np.stack(columns, axis=1).astype(np.float64)
+    """(24, 4): told onset, main phase, first day after, second day after."""
+    return np.stack([phase == one for one in (ONSET, MAIN, AFTER, LATER)], axis=1).astype(np.float64)

@@ -4,7 +4,8 @@ What is foretold is the logarithm of delay over a climatological value (NTCM-G, 
 and time of day come from the model and the rest from the archive: the mean of the last 27 days at the same hour, recent
 days weighted toward the newest, the same day one solar rotation (27 days) before.  Their weights are learned from the
 archive itself.  Geomagnetic activity told beforehand shifts hours to analogues: what earlier hours of the same storm
-phase did (`activity`).  Ranges come from the past errors of the same method.  With an empty archive the climatology
+phase did (`activity`); what they did on the last day, where that was one of storm, is taken off before it is carried
+on.  Ranges come from the past errors of the same method.  With an empty archive the climatology
 speaks alone, with a wide range, and says so.
 A planning aid, not for navigation.  Never looks past the day it is made on, never counts an unseen hour as holding.
 """
@@ -195,17 +196,22 @@ def _trailing(values: Floats, days: int) -> Floats:
     return summed
 
 
-def _beforehand(series: _Series, last: int, lead: int) -> Floats:
-    """What is known at the end of day `last` of the day `lead` after it (24, P, K)."""
+def _beforehand(series: _Series, last: int, lead: int, storm: Floats) -> Floats:
+    """What is known at the end of day `last` of the day `lead` after it (24, P, K).
+
+    storm  (24,) what its storm usually does to hours of the last day, and which does not last into the next
+    """
     shape = (*series.value.shape[1:], _KNOWN)
     known = np.zeros(shape)
     turn = last + lead - ROTATION
     known[..., 0] = 1.0
     known[..., 1] = series.month[last]
     known[..., 2] = series.recent[last]
-    known[..., 3] = series.last[last]
-    known[..., 4] = series.whole[last]
-    known[..., 5] = series.late[last]
+    passing = np.where(np.isfinite(series.value[last]), storm[:, None], 0.0)
+    seen = np.isfinite(series.value[last]).sum(axis=1)
+    known[..., 3] = series.last[last] - passing
+    known[..., 4] = series.whole[last] - passing.sum() / max(int(seen.sum()), 1)
+    known[..., 5] = series.late[last] - passing[18:].sum() / max(int(seen[18:].sum()), 1)
     around = [series.turn[day] for day in (turn - 1, turn, turn + 1) if 0 <= day <= last]
     if around:
         known[..., 6] = np.mean(around, axis=0)
@@ -247,8 +253,11 @@ class _Quantity:
         self.weights = Weights(_PRIOR, _PRIOR_SIGMA, self.scatter)
         self.spread = Spread(self.scatter)
 
-    def foretell(self, series: _Series, last: int, lead: int, told: npt.NDArray[Any]) -> _Told:
-        known = _beforehand(series, last, lead)
+    def foretell(
+        self, series: _Series, last: int, lead: int, told: npt.NDArray[Any], measured: npt.NDArray[Any]
+    ) -> _Told:  # fmt: skip
+        """From phases (24,) as told of the day and as measured of the last one."""
+        known = _beforehand(series, last, lead, self.shifts.usual(measured))
         first = known @ self.weights.now()
         middle = first + self.shifts.now(told)[:, None]
         sigma = self.spread.sigma(told, known.shape[1])
@@ -266,8 +275,10 @@ class _Quantity:
         self.weights.learn(rows, np.where(weight > 0, value, 0.0).ravel(), (weight * calm[:, None]).ravel())
 
 
-_CHANCE_PRIOR = np.array([0.0, 1.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0])
-_CHANCE_SIGMA = np.array([1.0, 0.3, 0.7, 0.7, 0.7, 0.5, 0.5, 0.3, 0.3, 0.3, 0.3])
+# Columns of `_Lead.columns`: one, guess, four phases, how often, lately (calm, storm), slope, delay, time of day (two).
+_CHANCE_PRIOR = np.array([0.0, 1.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0])
+_CHANCE_SIGMA = np.array([1.0, 0.3, 0.7, 0.7, 0.7, 0.7, 0.5, 0.5, 0.5, 0.3, 0.3, 0.3, 0.3])
+_PASSING = (activity.ONSET, activity.MAIN, activity.AFTER)
 
 
 def _odds(chance: Floats) -> Floats:
@@ -285,32 +296,34 @@ class _Lead:
         self.limits = limits
         self.chances = [[Chances(_CHANCE_PRIOR, _CHANCE_SIGMA) for _ in (STRAINED, BROKEN)] for _ in limits]
 
-    def columns(self, world: "_World", last: int, told: npt.NDArray[Any], delay: _Told, slope: _Told, use: int,
-                broken: bool) -> Floats:  # fmt: skip
-        """What is known beforehand of a state (24 x P, K)."""
+    def columns(
+        self, world: "_World", last: int, told: npt.NDArray[Any], delay: _Told, slope: _Told, use: int, broken: bool,
+        places: Any,
+    ) -> Floats:  # fmt: skip
+        """What is known beforehand of a state at some places (24, places, K)."""
         limits = self.limits[use]
         limit = limits.broken if broken else limits.strained
-        day = last + self.lead
         if limits.of == "slope":
             what, quantity, base = slope, self.slope, world.slope_base
-            middle = what.middle + base
         else:
-            what, quantity = delay, self.delay
-            middle = what.middle + np.log(world.climate[day])
-        guess = _odds(quantity.spread.above((np.log(limit) - middle) / what.whole))
+            what, quantity, base = delay, self.delay, np.log(world.climate[last + self.lead][:, places])
+        steep_middle = slope.middle[:, places] + world.slope_base
+        guess = _odds(quantity.spread.above((np.log(limit) - what.middle[:, places] - base) / what.whole[:, places]))
         shape = guess.shape
-        turn = 2.0 * np.pi * (np.arange(24)[:, None] + 0.5 + world.local_h) / 24.0
+        turn = 2.0 * np.pi * (np.arange(24)[:, None] + 0.5 + world.local_h[:, places]) / 24.0
         bad = world.bad[use][1 if broken else 0]
-        often, lately, overall = bad.month[last], bad.day[last], bad.overall[last]
-        steep = np.log1p(np.exp(np.clip(slope.middle + world.slope_base, -5, 5)))
+        usual = _odds(bad.overall[last])
+        often, lately = _odds(bad.month[last][:, places]) - usual, _odds(bad.day[last]) - usual
+        # What was bad on a day of storm or after it passes with the storm: told apart from other bad days.
+        storm = float(np.isin(world.measured[last], _PASSING).mean())
         parts = [
             np.ones(shape), guess,
             *(np.broadcast_to(column[:, None], shape) for column in storm_columns(told).T),
-            _odds(often) - _odds(overall), np.broadcast_to(_odds(lately) - _odds(overall), shape),
-            steep - np.log(2.0), delay.middle,
+            often, np.broadcast_to(lately * (1.0 - storm), shape), np.broadcast_to(lately * storm, shape),
+            np.log1p(np.exp(np.clip(steep_middle, -5, 5))) - np.log(2.0), delay.middle[:, places],
             np.broadcast_to(np.sin(turn), shape), np.broadcast_to(np.cos(turn), shape),
         ]  # fmt: skip
-        return np.stack(parts, axis=-1).reshape(-1, len(parts))
+        return np.stack(parts, axis=-1)
 
 
 @dataclass(frozen=True)
@@ -360,6 +373,8 @@ class _World:
             for use in range(len(history.limits))
         ]
         self.local_h = (history.lons / 15.0)[None, :]
+        places = len(history.lats)
+        self.sample = np.unique(np.linspace(0, places - 1, min(places, LEARNING_PLACES)).round().astype(np.int64))
 
     def told(self, last: int) -> npt.NDArray[Any]:
         """Phases (2, 24) of the two days after `last`, as told then."""
@@ -399,7 +414,7 @@ def replay(history: History, drivers: Drivers | None = None, first: int = 0, ahe
         told = world.told(last)
         days = []
         for lead in leads:
-            what = _foretell(world, lead, last, told[lead.lead - 1])
+            what = _foretell(world, lead, last, told[lead.lead - 1], last >= first)
             waiting.setdefault(last + lead.lead, []).append((lead, what))
             days.append(what)
         if last >= first:
@@ -414,22 +429,27 @@ def tomorrow(history: History, drivers: Drivers | None = None, ahead_days: int =
 
 @dataclass
 class _Day:
-    """What was foretold of a day: both quantities, told phases (24,), and the columns behind each chance."""
+    """What was foretold of a day: both quantities, told phases (24,), and the columns behind each chance.
+
+    whole  the columns are of all places, not only of those that are learned from
+    """
 
     delay: _Told
     slope: _Told
     told: npt.NDArray[Any]
     columns: list[list[Floats]]
+    whole: bool
 
 
-def _foretell(world: _World, lead: _Lead, last: int, told: npt.NDArray[Any]) -> _Day:
-    delay = lead.delay.foretell(world.delay, last, lead.lead, told)
-    slope = lead.slope.foretell(world.slope, last, lead.lead, told)
+def _foretell(world: _World, lead: _Lead, last: int, told: npt.NDArray[Any], whole: bool) -> _Day:
+    delay = lead.delay.foretell(world.delay, last, lead.lead, told, world.measured[last])
+    slope = lead.slope.foretell(world.slope, last, lead.lead, told, world.measured[last])
+    places = slice(None) if whole else world.sample
     columns = [
-        [lead.columns(world, last, told, delay, slope, use, broken) for broken in (False, True)]
+        [lead.columns(world, last, told, delay, slope, use, broken, places) for broken in (False, True)]
         for use in range(len(lead.limits))
     ]
-    return _Day(delay, slope, told, columns)
+    return _Day(delay, slope, told, columns, whole)
 
 
 def _learn(world: _World, lead: _Lead, what: _Day, day: int) -> None:
@@ -438,9 +458,11 @@ def _learn(world: _World, lead: _Lead, what: _Day, day: int) -> None:
     lead.delay.learn(what.delay, world.delay, day, what.told, measured)
     lead.slope.learn(what.slope, world.slope, day, what.told, measured)
     for use in range(len(lead.limits)):
-        states = world.history.states[use, day].ravel()
+        states = world.history.states[use, day][:, world.sample].ravel()
         for number, least in enumerate((STRAINED, BROKEN)):
-            lead.chances[use][number].learn(what.columns[use][number], states >= least, states != UNSEEN)
+            columns = what.columns[use][number]
+            rows = (columns[:, world.sample] if what.whole else columns).reshape(len(states), -1)
+            lead.chances[use][number].learn(rows, states >= least, states != UNSEEN)
 
 
 def _outlook(
@@ -464,7 +486,8 @@ def _outlook(
         for use in range(uses):
             for level in range(2):
                 usual = float(_odds(world.bad[use][level].overall[last, 0, 0]))
-                chance = lead.chances[use][level].now(what.columns[use][level], usual)
+                columns = what.columns[use][level]
+                chance = lead.chances[use][level].now(columns.reshape(24 * places, -1), usual)
                 chances[level, use, rows] = chance.reshape(24, places)
     start = (history.days[last] + np.timedelta64(1, "D")).astype("datetime64[ns]")
     hours: Times = start + np.arange(24 * len(leads)) * np.timedelta64(3600, "s")

@@ -1,8 +1,8 @@
 """Outlooks over an archive: its days as a history, the outlook after the newest, its record, and a replay of the past.
 
-Reads with `archive`, computes with `ionosphere.outlook`.  When a day is kept, its hours at the places of the outlook are
-made and kept, outlooks whose days are in are scored, once, and the next outlook is made and kept (`day_kept`).  A replay
-keeps nothing.  Never lets an outlook see a day after the one it is made on, nor an outlook of activity made after it.
+Reads with `archive`, computes with `ionosphere.outlook`.  When a day is kept, its hours at the places of the outlook
+are made and kept, outlooks whose days are in are scored, once, and the next outlook is made and kept (`day_kept`).  A
+replay keeps nothing.  Never lets an outlook see a day after the one it is made on, nor an outlook of activity made after it.
 """
 
 import hashlib
@@ -135,7 +135,8 @@ def history_of(
     lats = np.concatenate([[site.lat for site in sites], lat.ravel()])
     lons = np.concatenate([[site.lon for site in sites], lon.ravel()])
     limits = limits_for(places)
-    mark = hashlib.sha256(f"{HOURS_FORM} {places.thresholds} {uses.uses_of(places)} {lats.tolist()} {lons.tolist()}".encode())
+    of_places = f"{places.thresholds} {uses.uses_of(places)} {lats.tolist()} {lons.tolist()}"
+    mark = hashlib.sha256(f"{HOURS_FORM} {of_places}".encode())
     days = np.arange(first, last + np.timedelta64(1, "D")).astype("datetime64[D]")
     shape = (len(days), 24, len(lats))
     delay, sigma, slope = (np.full(shape, np.nan) for _ in range(3))
