@@ -529,14 +529,27 @@ export async function approaches(region, date, site, how) {
   return { levels: raw.levels.map((one) => one.name), share: raw.sites[0]?.share ?? {}, outages: raw.outages.map(spanOf), assumptions: raw.assumptions };
 }
 
-/** The outlook at a place. @param {string} region @param {[number, number]} place @param {How} [how] */
-export async function outlook(region, [lat, lon], how) {
-  const raw = await ask(`/api/outlook/${encodeURIComponent(region)}?lat=${lat}&lon=${lon}`, how);
+/** Ways of working a day can be judged for. @param {string} region @param {string} date @param {How} [how] @returns {Promise<{name: string}[]>} */
+export async function uses(region, date, how) {
+  return (await ask(`${dayAddress(region, date)}/uses`, how)).uses;
+}
+
+/** The outlook at a place, for a use. @param {string} region @param {[number, number]} place @param {string} use  "" the first @param {How} [how] */
+export async function outlook(region, [lat, lon], use, how) {
+  const raw = await ask(`/api/outlook/${encodeURIComponent(region)}?lat=${lat}&lon=${lon}&use=${encodeURIComponent(use)}`, how);
   return {
     name: raw.name, lat: raw.lat, lon: raw.lon, use: raw.use, knownUntil: raw.known_until, seenDays: raw.seen_days, hours: raw.hours_utc.map(milliseconds),
-    delay: numbers(raw.vertical_delay), low: numbers(raw.ranges["95"]?.low ?? []), high: numbers(raw.ranges["95"]?.high ?? []), slope: numbers(raw.slope["0.95"] ?? []),
-    strained: numbers(raw.chance_strained), broken: numbers(raw.chance_broken), phase: raw.storm_phase,
+    delay: numbers(raw.vertical_delay), ranges: Object.fromEntries(Object.entries(raw.ranges).map(([share, { low, high }]) => [share, { low: numbers(low), high: numbers(high) }])),
+    slope: numbers(raw.slope["0.95"] ?? []), strained: numbers(raw.chance_strained), broken: numbers(raw.chance_broken), phase: raw.storm_phase,
     windows: raw.windows.map((one) => ({ ...spanOf(one), strained: number(one.chance_strained), broken: number(one.chance_broken) })),
     advice: raw.advice, basis: raw.basis,
   };
+}
+
+/**
+ * What became of the newest outlooks whose days came. @param {string} region @param {number} newest  so many at most @param {How} [how]
+ * @returns {Promise<{outlooks: number, leads: Record<string, any>, states: Record<string, Record<string, any>>}>}
+ */
+export function outlookRecord(region, newest, how) {
+  return ask(`/api/outlook/${encodeURIComponent(region)}/record?newest=${newest}`, how);
 }

@@ -50,3 +50,31 @@ export function save(what, name, type) {
   link.remove();
   setTimeout(() => URL.revokeObjectURL(link.href), 10000);
 }
+
+export const OUTLOOK_HEADS = ["hour_start_utc", "vertical_delay_m", "low_95_m", "high_95_m", "low_80_m", "high_80_m", "low_50_m", "high_50_m", "slope_95_mm_per_km", "chance_strained", "chance_broken", "storm_phase"];
+
+/** The hours of an outlook. @param {any} outlook */
+export function outlookRows({ hours, delay, ranges, slope, strained, broken, phase }) {
+  return hours.map((ms, i) => [new Date(ms).toISOString(), delay[i], ...["95", "80", "50"].flatMap((share) => [ranges[share]?.low[i] ?? null, ranges[share]?.high[i] ?? null]), slope[i] ?? null, strained[i], broken[i], phase[i]]);
+}
+
+/**
+ * Spans as a calendar (iCalendar, RFC 5545: lines of at most 75 bytes, folded; text escaped; times in UTC).
+ * @param {{start: number, end: number, summary: string, about: string}[]} spans @param {number} now  ms UTC
+ */
+export function calendarText(spans, now) {
+  const stamp = (ms) => new Date(Math.round(ms / 60000) * 60000).toISOString().replace(/[-:]|\.\d{3}/g, "");
+  const plain = (text) => text.replace(/[\\;,]/g, "\\$&").replace(/\n/g, "\\n");
+  const fold = (line) => {
+    let [out, size] = ["", 0];
+    for (const letter of line) {
+      const bytes = new TextEncoder().encode(letter).length;
+      if (size + bytes > 73) [out, size] = [`${out}\r\n `, 1];
+      out += letter;
+      size += bytes;
+    }
+    return out;
+  };
+  const events = spans.flatMap(({ start, end, summary, about }, i) => ["BEGIN:VEVENT", `UID:${stamp(start)}-${stamp(now)}-${i}@skylag`, `DTSTAMP:${stamp(now)}`, `DTSTART:${stamp(start)}`, `DTEND:${stamp(end)}`, `SUMMARY:${plain(summary)}`, `DESCRIPTION:${plain(about)}`, "TRANSP:TRANSPARENT", "END:VEVENT"]);
+  return `${["BEGIN:VCALENDAR", "VERSION:2.0", "PRODID:-//Skylag//outlook//EN", ...events, "END:VCALENDAR"].map(fold).join("\r\n")}\r\n`;
+}

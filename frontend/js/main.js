@@ -104,7 +104,7 @@ const network = later((view) => view.ask === "network", async () => {
 });
 const ahead = later((view) => view.ask === "ahead", async () => {
   const { AheadPanel } = await import("./panels/ahead.js");
-  return new AheadPanel(at("ahead-body"));
+  return new AheadPanel(at("ahead-body"), state);
 });
 const work = later(() => at("work").open, async () => {
   const { WorkPanel } = await import("./panels/work.js");

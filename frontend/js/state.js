@@ -21,6 +21,7 @@
  * @property {string} span    of the year: "", a year, or a season
  * @property {string} worst   days of the year that are at least so bad
  * @property {string} field   days of the year by the magnetic field: "", "quiet", "disturbed", "storm"
+ * @property {string} use     what the outlook is for, "" the first of the region
  * @property {boolean} files  is the sending of files open
  */
 
@@ -50,6 +51,7 @@ export function firstView() {
     span: "",
     worst: "",
     field: "",
+    use: "",
     files: false,
   };
 }
@@ -81,7 +83,7 @@ export function toQuery(view) {
   if (view.clock !== "utc") parts.push(["clock", view.clock]);
   if (view.versus) parts.push(["versus", view.versus]);
   if (!view.beside) parts.push(["as", "difference"]);
-  for (const name of ["who", "span", "worst", "field"]) if (view[name]) parts.push([name, view[name]]);
+  for (const name of ["who", "span", "worst", "field", "use"]) if (view[name]) parts.push([name, view[name]]);
   if (view.files) parts.push(["files", "open"]);
   const text = parts.map(([key, value]) => `${key}=${encodeURIComponent(value).replace(/%2C/g, ",").replace(/%3A/g, ":")}`);
   return text.length ? `?${text.join("&")}` : "";
@@ -118,6 +120,7 @@ export function fromQuery(query) {
   if (/^(\d{4}|dec-feb|mar-may|jun-aug|sep-nov)$/.test(given.get("span") ?? "")) view.span = given.get("span") ?? "";
   if (["strained", "broken"].includes(given.get("worst") ?? "")) view.worst = given.get("worst") ?? "";
   if (FIELD.includes(given.get("field") ?? "")) view.field = given.get("field") ?? "";
+  view.use = given.get("use") ?? "";
   view.files = given.get("files") === "open";
   return view;
 }

@@ -153,13 +153,45 @@ export const WORDS = {
   noCurves: "No line of sight passed near this place within three quarters of an hour.",
   curvesAbout: "Vertical delay along single lines of sight that pass within 250 km, 45 minutes to either side; most changed satellites first. A true wall passes one receiver after the other; a fault shows on one line only.",
   curvesTable: "Lines of sight as a table",
+  curvesFile: "these lines of sight, CSV",
   /** @param {string} satellite @param {string} lines */
   curvesOf: (satellite, lines) => `Vertical delay along lines of sight to ${satellite}; change within the span: ${lines}.`,
   verticalDelayM: "vertical delay, m",
   asTable: "As a table",
+  takeAway: "Take away:",
+  print: "print",
   play: "Play",
   pause: "Pause",
   mapCaption: (what, when) => `${what}, ${when}. Rows: latitude; columns: longitude; “unseen” where not enough data say anything, * where the delay is known but not whether corrections hold.`,
+};
+
+/** The day ahead and its record. */
+export const AHEAD_WORDS = {
+  for: "For",
+  hoursCsv: "hours, CSV",
+  windowsIcs: "windows, calendar",
+  heads: ["Hour", "Vertical delay", "95 in 100 within", "Slope, 95 of 100 under", "Strained", "Broken", "Storm phase"],
+  chartKey: "Above: the expected vertical delay with the ranges that hold 50, 80 and 95 of 100 outcomes. Below: the chance of being at least strained, and of being broken.",
+  /** @param {string} from @param {string} to */
+  chartAbout: (from, to) => `Expected vertical delay hour by hour from ${from} to ${to}, with its ranges.`,
+  record: "How outlooks turned out",
+  noRecord: "No outlook’s day has come yet. Each is kept when it is made, and scored when its day is in the archive.",
+  /** @param {string} own @param {string} others @param {string} inside */
+  lastOne: (own, others, inside) => `The last outlook whose day came was off by ${own} m (root mean square)${others ? `; beside it ${others}` : ""}. Its 95 % range held ${inside} of the hours.`,
+  beside: { persistence: "the day before again", recurrence: "27 days before again", climatology: "climatology", usual: "the usual of late" },
+  /** @param {string} outlooks */
+  over: (outlooks) => `All together, ${outlooks}, over all places of the map; delay errors as root mean squares.`,
+  leads: ["The day ahead", "The day after"],
+  lead: "Of",
+  cases: "Hours",
+  own: "Outlook",
+  crps: "Ranked probability",
+  insides: ["Within 50 %", "Within 80 %", "Within 95 %"],
+  /** @param {string} level @param {string} use */
+  reliability: (level, use) => `Chances of ${level}, told and come, for ${use}`,
+  /** @param {string} own @param {string} often @param {string} same */
+  brier: (own, often, same) => `Brier score ${own}; telling the usual frequency ${often}, the day before again ${same}. Smaller is better.`,
+  tenths: ["Cases", "Chance told", "Came true"],
 };
 
 /** Sending files, and the work that is made of them. */

@@ -28,6 +28,7 @@ test("every view survives the way through its URL", () => {
           span: ["", "2031", "dec-feb"][(bits >> 1) % 3],
           worst: ["", "strained", "broken"][(bits >> 2) % 3],
           field: ["", ...FIELD][(bits >> 1) % 4],
+          use: bits % 6 === 1 ? "RTK, 20 km" : "",
           files: bits % 7 === 3,
         });
       }

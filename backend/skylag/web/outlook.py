@@ -3,8 +3,10 @@
 Made and kept at the first request after a new day.  An outlook is a planning aid, not for navigation.
 """
 
+from typing import Annotated
+
 import numpy as np
-from fastapi import APIRouter, Request
+from fastapi import APIRouter, Query, Request
 from fastapi.responses import Response
 
 from skylag.archive import Archive
@@ -83,8 +85,11 @@ def at_place(
 
 
 @router.get("/api/outlook/{region}/record", summary="How often outlooks were right")
-def track_record(request: Request, region: str) -> Response:
-    """Scores of the kept outlooks whose days came, beside persistence, recurrence, climatology, the usual."""
+def track_record(request: Request, region: str, newest: Annotated[int, Query(ge=1, le=120)] = 120) -> Response:
+    """Scores of the newest kept outlooks whose days came, beside persistence, recurrence, climatology, the usual.
+
+    newest  so many at most; 1 tells of the last one alone
+    """
     archive: Archive = request.app.state.archive
-    scores = hindcast.summary(hindcast.track_record(archive, _known(archive, region)))
+    scores = hindcast.summary(hindcast.track_record(archive, _known(archive, region), newest))
     return payloads.reply(payloads.outlook_record(region, scores))

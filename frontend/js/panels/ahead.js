@@ -1,20 +1,31 @@
 /**
- * Ahead: the outlook for the two days after the newest, at the chosen place: advice first, hours second.
+ * Ahead: the outlook for the two days after the newest, at the chosen place: advice first, hours with their spread
+ * second, and how outlooks turned out.
  */
 
 import * as api from "../api.js";
-import { dateText, fixed, placeText, shareText, timeText, WORDS } from "../words.js";
-import { draft, make, trouble } from "./parts.js";
+import { calendarText, csvText, OUTLOOK_HEADS, outlookRows, save } from "../exporting.js";
+import { outlookFigure } from "../figures/outlook.js";
+import { AHEAD_WORDS, countText, dateText, fixed, placeText, shareText, timeText, WORDS } from "../words.js";
+import { draft, make, tableOf, trouble } from "./parts.js";
 
 export class AheadPanel {
   #body;
+  #state;
   #drawn = "";
   #asking = null;
   #scene = null;
+  #found = null;
+  #chart = make("div", { class: "outlook-chart" });
+  #watcher;
+  #uses = { key: "", list: /** @type {{name: string}[]} */ ([]) };
 
-  /** @param {HTMLElement} body */
-  constructor(body) {
+  /** @param {HTMLElement} body @param {import("../state.js").State} state */
+  constructor(body, state) {
     this.#body = body;
+    this.#state = state;
+    this.#watcher = new ResizeObserver(() => this.#found && this.#drawChart());
+    this.#watcher.observe(this.#chart);
   }
 
   /** @param {import("../main.js").Scene} scene */
@@ -22,7 +33,7 @@ export class AheadPanel {
     this.#scene = scene;
     const { view } = scene;
     if (view.ask !== "ahead" || !view.place) return;
-    const key = JSON.stringify([view.region, view.place, view.clock]);
+    const key = JSON.stringify([view.region, view.place, view.clock, view.use]);
     if (key !== this.#drawn) this.#load(key);
   }
 
@@ -33,67 +44,121 @@ export class AheadPanel {
 
   close() {
     this.#asking?.abort();
+    this.#watcher.disconnect();
   }
 
   async #load(key) {
-    const { view } = this.#scene;
+    const { view, day } = this.#scene;
     this.#drawn = key;
     this.#asking?.abort();
     this.#asking = new AbortController();
+    const how = { signal: this.#asking.signal };
     this.#body.setAttribute("aria-busy", "true");
     if (!this.#body.children.length) this.#body.append(make("p", { class: "empty", text: WORDS.working }));
     try {
-      this.#draw(await api.outlook(view.region, view.place, { signal: this.#asking.signal }));
+      if (this.#uses.key !== `${view.region} ${day.day}`) this.#uses = { key: `${view.region} ${day.day}`, list: await api.uses(view.region, day.day, how) };
+      const use = this.#uses.list.some((one) => one.name === view.use) ? view.use : "";
+      const found = await api.outlook(view.region, view.place, use, how);
+      // The record is asked for after the outlook: asking for that scores what came due.
+      const [last, all] = await Promise.all([api.outlookRecord(view.region, 1, how), api.outlookRecord(view.region, 120, how)]);
+      this.#draw(found, last, all);
     } catch (error) {
       if (error?.name === "AbortError") return;
       this.#drawn = "";
+      this.#found = null;
       this.#body.replaceChildren(make("p", { class: "network-said", text: WORDS.noOutlook }), trouble(error, () => this.show(this.#scene)));
     } finally {
       this.#body.setAttribute("aria-busy", "false");
     }
   }
 
-  #draw(found) {
+  #when(ms) {
     const { view, day } = this.#scene;
-    const how = { clock: view.clock, zone: day.region.timezone };
-    const when = (ms) => `${dateText(ms, how.clock === "local" ? how.zone : "UTC")}, ${timeText(ms, how)}`;
-    const heads = ["Hour", "Vertical delay", "95 in 100 within", "Slope, 95 of 100 under", "Strained", "Broken", "Storm phase"];
-    const body = make("tbody");
-    found.hours.forEach((ms, i) => {
-      body.append(make("tr", {}, make("th", { scope: "row", class: "nowrap", text: when(ms) }),
-        make("td", { class: "number", text: `${fixed(found.delay[i], 2)} m` }),
-        make("td", { class: "number", text: `${fixed(found.low[i], 2)} – ${fixed(found.high[i], 2)} m` }),
-        make("td", { class: "number", text: Number.isFinite(found.slope[i]) ? `${fixed(found.slope[i], 1)} mm/km` : "–" }),
-        make("td", { class: "number", text: shareText(found.strained[i]) }), make("td", { class: "number", text: shareText(found.broken[i]) }),
-        make("td", { text: found.phase[i] })));
-    });
+    return `${dateText(ms, view.clock === "local" ? day.region.timezone : "UTC")}, ${timeText(ms, { clock: view.clock, zone: day.region.timezone })}`;
+  }
+
+  #draw(found, last, all) {
+    this.#found = found;
+    const { day } = this.#scene;
+    const where = found.name || placeText(found.lat, found.lon);
+    const name = `skylag-outlook-${found.knownUntil}-${where.toLowerCase().replace(/[^\p{L}\p{N}]+/gu, "-")}`;
+    const use = make("select", { id: "ahead-use" }, ...this.#uses.list.map((one) => make("option", { value: one.name, text: one.name, selected: one.name === found.use })));
+    use.addEventListener("change", () => this.#state.change({ use: use.value }));
+    const spans = found.windows.map((one) =>
+      make("li", {}, make("strong", { text: `${this.#when(one.start)} – ${this.#when(one.end)}` }), `: ${one.kind}, ${WORDS.chances(shareText(one.strained), shareText(one.broken))}`));
     this.#body.replaceChildren(
-      make("p", { class: "network-said", text: found.windows.length ? WORDS.firstSpan(when(found.windows[0].end), found.windows[0].kind) : WORDS.noOutlook }),
-      make("p", { class: "fine", text: WORDS.outlookFor(found.name || placeText(found.lat, found.lon), found.use, found.knownUntil, found.seenDays) }),
-      chances(found, when),
-      make("ul", { class: "spans" }, ...found.windows.map((one) => make("li", {}, make("strong", { text: `${when(one.start)} – ${timeText(one.end, how)}` }), `: ${one.kind}, ${WORDS.chances(shareText(one.strained), shareText(one.broken))}`))),
+      make("p", { class: "network-said", text: found.windows.length ? WORDS.firstSpan(this.#when(found.windows[0].end), found.windows[0].kind) : WORDS.noOutlook }),
+      make("p", { class: "job" }, make("label", {}, AHEAD_WORDS.for, " ", use)),
+      make("p", { class: "fine", text: WORDS.outlookFor(where, found.use, found.knownUntil, found.seenDays) }),
+      this.#chart,
+      make("ul", { class: "spans" }, ...spans),
       make("p", { class: "fine", text: found.advice.join(" ") }),
-      make("details", { class: "table-behind" }, make("summary", { text: WORDS.asTable }), make("div", { class: "scroll", tabindex: 0, role: "region", "aria-label": WORDS.hourByHour },
-        make("table", {}, make("thead", {}, make("tr", {}, ...heads.map((text, i) => make("th", { scope: "col", text, class: i && i < 6 ? "number" : undefined })))), body))),
+      make("p", { class: "exports" }, WORDS.takeAway,
+        make("button", { type: "button", class: "linklike", id: "ahead-csv", text: AHEAD_WORDS.hoursCsv, click: () => save(csvText(OUTLOOK_HEADS, outlookRows(found)), `${name}.csv`, "text/csv") }),
+        make("button", { type: "button", class: "linklike", id: "ahead-ics", text: AHEAD_WORDS.windowsIcs, click: () => save(calendarText(found.windows.map((one) => ({ start: one.start, end: one.end, summary: `${where}: ${one.kind}`, about: `${found.use}. ${WORDS.chances(shareText(one.strained), shareText(one.broken))}. ${day.caution}` })), Date.now()), `${name}.ics`, "text/calendar") }),
+        make("button", { type: "button", class: "linklike", text: WORDS.print, click: () => window.print() })),
+      make("details", { class: "table-behind" }, make("summary", { text: WORDS.asTable }), tableOf({
+        label: WORDS.hourByHour, heads: AHEAD_WORDS.heads, numbers: [1, 2, 3, 4, 5],
+        rows: found.hours.map((ms, i) => [this.#when(ms), `${fixed(found.delay[i], 2)} m`, `${fixed(found.ranges["95"]?.low[i], 2)} – ${fixed(found.ranges["95"]?.high[i], 2)} m`,
+          Number.isFinite(found.slope[i]) ? `${fixed(found.slope[i], 1)} mm/km` : "–", shareText(found.strained[i]), shareText(found.broken[i]), found.phase[i]]),
+      })),
       make("details", {}, make("summary", { text: WORDS.basis }), make("ul", {}, ...found.basis.map((text) => make("li", { text })))),
+      record(last, all, found.use),
     );
+    this.#drawChart();
+  }
+
+  #drawChart() {
+    const width = this.#chart.clientWidth;
+    const { view, day } = this.#scene;
+    if (!width) return;
+    const figure = outlookFigure({ outlook: this.#found, width, zone: view.clock === "local" ? day.region.timezone : "UTC" });
+    const { left, delayHeight, base } = figure;
+    const svg = draft("svg", { class: "chances", width, height: figure.height, viewBox: `0 0 ${width} ${figure.height}`, role: "img", "aria-label": `${AHEAD_WORDS.chartAbout(this.#when(figure.span[0]), this.#when(figure.span[1]))} ${WORDS.chancesAbout}` });
+    for (const mark of figure.marks) svg.append(draft("path", { class: "grid", d: `M${left} ${mark.y}H${width}` }), draft("text", { x: left - 5, y: mark.y + 4, "text-anchor": "end", text: `${fixed(mark.value, mark.value % 1 ? 1 : 0)} m` }));
+    for (const part of figure.parts) svg.append(draft("path", { class: "grid", d: `M${left} ${part.y}H${width}` }), draft("text", { x: left - 5, y: part.y + 4, "text-anchor": "end", text: `${100 * part.value} %` }));
+    for (const tick of figure.ticks) {
+      svg.append(draft("path", { class: tick.day ? "tick" : "grid", d: `M${tick.x} 4V${delayHeight}M${tick.x} ${delayHeight + 22}V${base + 4}` }), draft("text", { x: tick.x + 2, y: base + 16, text: tick.text }));
+      if (tick.day) svg.append(draft("text", { class: "day-name", x: tick.x + 2, y: base + 30, text: tick.day }));
+    }
+    for (const one of figure.bands) svg.append(draft("path", { class: `spread spread-${one.share}`, d: one.path }));
+    svg.append(draft("path", { class: "curve", d: figure.line }));
+    figure.columns.forEach((one, i) => {
+      const { ranges } = this.#found;
+      const words = `${this.#when(one.ms)}: ${fixed(this.#found.delay[i], 2)} m (${fixed(ranges["95"]?.low[i], 2)} – ${fixed(ranges["95"]?.high[i], 2)}), ${WORDS.chances(shareText(this.#found.strained[i]), shareText(this.#found.broken[i]))}`;
+      svg.append(draft("g", {}, draft("title", { text: words }), draft("rect", { x: one.x, y: 0, width: one.width, height: base, fill: "transparent" }),
+        draft("rect", { x: one.x + 0.5, y: one.strained.y, width: Math.max(1, one.width - 1), height: one.strained.tall, fill: "url(#pattern-strained)" }),
+        draft("rect", { x: one.x + 0.5, y: one.broken.y, width: Math.max(1, one.width - 1), height: one.broken.tall, fill: "url(#pattern-broken)" })));
+    });
+    this.#chart.replaceChildren(make("p", { class: "fine", text: AHEAD_WORDS.chartKey }), svg);
   }
 }
 
-/** The hours as columns: full height is certain; the broken part stands on the ground, the strained on it. */
-function chances(found, when) {
-  const [width, tall] = [960, 72];
-  const step = width / Math.max(1, found.hours.length);
-  const svg = draft("svg", { class: "chances", viewBox: `0 0 ${width} ${tall + 18}`, role: "img", "aria-label": WORDS.chancesAbout });
-  for (const part of [0, 0.5, 1]) svg.append(draft("path", { class: "grid", d: `M0 ${tall - part * tall + 0.5}H${width}` }));
-  found.hours.forEach((ms, i) => {
-    const broken = (found.broken[i] || 0) * tall;
-    const strained = Math.max(broken, (found.strained[i] || 0) * tall);
-    svg.append(draft("g", {}, draft("title", { text: `${when(ms)}: ${WORDS.chances(shareText(found.strained[i]), shareText(found.broken[i]))}` }),
-      draft("rect", { x: i * step + 1, y: 0, width: step - 2, height: tall, fill: "transparent" }),
-      draft("rect", { x: i * step + 1, y: tall - strained, width: step - 2, height: strained - broken, fill: "url(#pattern-strained)" }),
-      draft("rect", { x: i * step + 1, y: tall - broken, width: step - 2, height: broken, fill: "url(#pattern-broken)" })));
-    if (i % 6 === 0) svg.append(draft("text", { x: i * step + 1, y: tall + 15, text: when(ms).split(", ").pop() }));
+/** How outlooks turned out, the last one first; for the use that is asked. */
+function record(last, all, use) {
+  const words = AHEAD_WORDS;
+  const box = make("section", { class: "record", "aria-labelledby": "record-title" }, make("h3", { id: "record-title", text: words.record }));
+  if (!all.outlooks) {
+    box.append(make("p", { class: "empty", text: words.noRecord }));
+    return box;
+  }
+  const names = Object.keys(words.beside);
+  const best = last.leads["1"];
+  if (best) {
+    const others = names.filter((name) => best.against[name]).map((name) => `${words.beside[name]} ${fixed(best.against[name].other_rms, 2)} m`);
+    box.append(make("p", { class: "record-said", text: words.lastOne(fixed(best.rms_m, 2), others.join(", "), shareText(best.inside["95"])) }));
+  }
+  const rows = [["1", words.leads[0]], ["2", words.leads[1]]].filter(([lead]) => all.leads[lead]).map(([lead, text]) => {
+    const one = all.leads[lead];
+    return [text, String(one.hours), `${fixed(one.rms_m, 2)} m`, ...names.map((name) => (one.against[name] ? `${fixed(one.against[name].other_rms, 2)} m` : "–")), `${fixed(one.crps_m, 2)} m`, ...["50", "80", "95"].map((share) => shareText(one.inside[share]))];
   });
-  return svg;
+  box.append(make("p", { class: "fine", text: words.over(countText(all.outlooks, "outlook")) }),
+    tableOf({ label: words.record, heads: [words.lead, words.cases, words.own, ...names.map((name) => words.beside[name]), words.crps, ...words.insides], numbers: [1, 2, 3, 4, 5, 6, 7, 8, 9, 10], rows }));
+  for (const [level, one] of Object.entries(all.states[use] ?? {})) {
+    if (!one.cases) continue;
+    box.append(make("details", {}, make("summary", { text: words.reliability(level, use) }),
+      make("p", { class: "fine", text: words.brier(fixed(one.brier, 4), fixed(one.brier_frequency, 4), fixed(one.brier_persistence, 4)) }),
+      tableOf({ label: words.reliability(level, use), heads: words.tenths, numbers: [0, 1, 2], rows: one.tenths.map((tenth) => [String(tenth.cases), shareText(tenth.told), shareText(tenth.came)]) })));
+  }
+  return box;
 }

@@ -99,6 +99,8 @@ export class CurvesPanel {
       make("div", { class: "scroll", tabindex: 0, role: "region", "aria-label": WORDS.curvesTable },
         make("table", {}, make("caption", { text: `${countText(lines.length, "line")} of sight, ${timeText(span[0], how)} – ${timeText(span[1], how)}` }),
           make("thead", {}, make("tr", {}, ...["Line", "First", "Last", "Change", "Elevation"].map((text, i) => make("th", { scope: "col", text, class: i ? "number" : undefined })))), body)));
-    this.#body.replaceChildren(...out, table);
+    const { view, day } = this.#scene;
+    const file = `${api.dayFile(view.region, day.day, "slant.csv")}?${new URLSearchParams({ lat: String(view.place[0]), lon: String(view.place[1]), time: new Date(time).toISOString(), minutes: String(HALF / 60000), reach_km: "250" })}`;
+    this.#body.replaceChildren(...out, table, make("p", { class: "fine" }, make("a", { href: file, download: "", text: WORDS.curvesFile })));
   }
 }

@@ -53,6 +53,17 @@ export function stateWord(state) {
 }
 
 /**
+ * A table that scrolls in its own box.
+ * @param {{label: string, heads: string[], rows: (string|Node)[][], numbers?: number[], caption?: string}} contents  numbers: columns that hold them
+ */
+export function tableOf({ label, heads, rows, numbers = [], caption = "" }) {
+  const kind = (i) => (numbers.includes(i) ? "number" : undefined);
+  const body = make("tbody", {}, ...rows.map((row) => make("tr", {}, ...row.map((cell, i) => make(i ? "td" : "th", { class: kind(i), scope: i ? undefined : "row" }, cell)))));
+  return make("div", { class: "scroll", tabindex: 0, role: "region", "aria-label": label },
+    make("table", {}, ...(caption ? [make("caption", { text: caption })] : []), make("thead", {}, make("tr", {}, ...heads.map((text, i) => make("th", { scope: "col", class: kind(i), text })))), body));
+}
+
+/**
  * What went wrong, as the service says it, and the way out.
  * @param {Error} error
  * @param {(() => void)|null} again
