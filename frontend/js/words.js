@@ -154,6 +154,7 @@ export const WORDS = {
   curvesAbout: "Vertical delay along single lines of sight that pass within 250 km, 45 minutes to either side; most changed satellites first. A true wall passes one receiver after the other; a fault shows on one line only.",
   curvesTable: "Lines of sight as a table",
   curvesFile: "these lines of sight, CSV",
+  curvesFile: "these lines of sight, CSV",
   /** @param {string} satellite @param {string} lines */
   curvesOf: (satellite, lines) => `Vertical delay along lines of sight to ${satellite}; change within the span: ${lines}.`,
   verticalDelayM: "vertical delay, m",
