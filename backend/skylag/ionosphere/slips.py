@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from skylag.constants import SPEED_OF_LIGHT_M_S
+from skylag.constants import L1_M_PER_TECU, SPEED_OF_LIGHT_M_S
 from skylag.ionosphere.combinations import slip_effect, tecu_per_metre
 from skylag.ionosphere.phase_steps import (
     BLOCK,
@@ -41,8 +41,10 @@ from skylag.tables import ARC_BEGAN, Bools, Floats, Ints, Observations
 
 FIRST, GAP, SLIP, RESET = (ARC_BEGAN.index(word) for word in ("first", "gap", "slip", "reset"))
 
-# No ionosphere changes slant content faster (J. Global Positioning Systems 2018, 16:5): what does is a slip or a fault.
-FASTEST_TECU_S = 0.35
+# No wall of the published threat space changes slant content faster: 425 mm/km (Datta-Barua et al. 2010) at 750 m/s
+# (from memory) is 0.32 m/s of delay on 1575.42 MHz.  What does is a slip or a fault.  Seen were 0.35 TECU/s (J. Global
+# Positioning Systems 2018, 16:5); a limit there tears walls of 200 mm/km at 300 m/s to pieces.
+FASTEST_TECU_S = 0.425 * 0.75 / L1_M_PER_TECU
 _AGREE = 16.0  # chi-square of three steps about the whole numbers that explain them
 
 
