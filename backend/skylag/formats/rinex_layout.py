@@ -1,21 +1,32 @@
 """Where the epochs and satellite records of a RINEX observation file lie.
 
 Finds every line, tells epochs, records, events and header lines apart, and follows header changes along the file; all
-by line numbers.  Never reads an observation.
+by line numbers.  What no receiver does a hundred thousand times is given up after so many times, so that a hostile file
+costs no more than an honest one.  Never reads an observation.
 """
 
+import bisect
 from collections import Counter
 from dataclasses import dataclass
 
 import numpy as np
 
+from skylag.errors import FormatError
 from skylag.formats import fixed_columns, rinex_header
 from skylag.formats.rinex_header import SYSTEMS, Header
 from skylag.tables import Bools, Bytes, Ints, Problem
 
 MOST_PROBLEMS = 200  # listed one by one; the rest is counted
 LONGEST_HEADER = 20_000  # lines
+MOST_CHANGES = 5_000  # header changes in one file: a day of minutes laid end to end has 1440
+MOST_STATES = 100  # different meanings of the columns in one file
+MOST_ODD_STEPS = 100_000  # epochs of RINEX 2 with anything but their records behind them: a day has 86,400 seconds
+_MANY_LINES, _SHORTEST_MEAN = 2**20, 16  # more lines than this must be longer than that in the mean
 _BLOCK = 2**20  # bytes of text looked through at once for line ends
+
+# What problems are counted as once their list is full.
+_RUBBISH = "lines that are neither an epoch nor a satellite record"
+_OTHER_EVENTS = "events of another length than they say"
 
 _SYSTEM_NUMBER = np.full(256, -1, dtype=np.int64)
 for _letter in SYSTEMS:
@@ -76,12 +87,25 @@ class Layout:
     row_line: Ints  # the line where the first column is
 
 
-def lines_of(data: bytes) -> Text:
+def lines_of(data: bytes, name: str) -> Text:
+    """The lines of a text.
+
+    Raises FormatError where nearly all of millions of lines are empty: they would take fifty times the text's memory.
+    """
     text = np.frombuffer(data, dtype=np.uint8)
     # In blocks that stay in the cache: a third of the time of one sweep, and no array as large as the text.
-    breaks = np.concatenate(
-        [np.flatnonzero(text[first : first + _BLOCK] == 10) + first for first in range(0, len(text), _BLOCK)]
-    )
+    parts: list[Ints] = []
+    count = 0
+    for first in range(0, len(text), _BLOCK):
+        parts.append(np.flatnonzero(text[first : first + _BLOCK] == 10) + first)
+        count += len(parts[-1])
+        if count > _MANY_LINES and min(first + _BLOCK, len(text)) < _SHORTEST_MEAN * count:
+            raise FormatError(
+                f"{name}: the first {count} lines are empty or of a few characters; observation files have lines of 40 "
+                "characters and more; fetch the file again",
+                path=name, line=count,
+            )  # fmt: skip
+    breaks = np.concatenate(parts)
     begin = np.concatenate(([0], breaks + 1))
     end = np.concatenate((breaks, [len(data)]))
     if begin[-1] == len(data):
@@ -106,19 +130,26 @@ class _Course:
 
     def __init__(self, header: Header, text: Text, problems: Problems) -> None:
         self.states = [header]
+        self.current = 0  # the number of the state that holds now
         self.text, self.problems = text, problems
         self.moving = False
-        self.ended = 0  # the line from which the file is about another site
+        self.changes = 0
+        self.ended = 0  # the line from which nothing is read any more
+        self.why = ""
 
     def change(self, first: int, last: int) -> None:
         """Header lines first to last (not inside) hold from here on; comments change nothing."""
         lines = [(k + 1, self.text.line(k)) for k in range(first, min(last, first + LONGEST_HEADER))]
         if all(line[60:67] == "COMMENT" for _, line in lines):
             return
-        state = self.states[-1].copy()
+        self.changes += 1
+        if self.changes > MOST_CHANGES:
+            self.end(first + 1, f"more than {MOST_CHANGES} header changes in one file, as no receiver writes")
+            return
+        before = self.states[self.current]
+        state = before.copy()
         for problem in rinex_header.absorb(state, lines, self.problems.path):
             self.problems.note(problem.line, problem.what, kind="line without a header label behind an event")
-        before = self.states[-1]
         if (state.version >= 3) != (before.version >= 3):
             self.problems.note(first + 1, "another major RINEX version in mid-file", "read on as before")
             state.version = before.version
@@ -126,11 +157,28 @@ class _Course:
             state.types = dict(before.types)
         state.marker = state.marker or before.marker
         if (before.marker and state.marker.split() != before.marker.split()) or _apart(state, before) > 100.0:
-            self.ended = self.ended or first + 1
-        if state.decoding() == before.decoding():
-            self.states[-1] = state
+            self.end(first + 1, "another site is occupied from here on")
+        # A state whose columns mean what those of an earlier one did takes its place.
+        decoding = state.decoding()
+        alike = (k for k, earlier in enumerate(self.states) if earlier.decoding() == decoding)
+        self.current = next(alike, len(self.states))
+        if self.current < len(self.states):
+            self.states[self.current] = state
+        elif self.current == MOST_STATES:
+            self.current -= 1
+            self.end(first + 1, f"more than {MOST_STATES} different lists of types in one file, as no receiver writes")
         else:
             self.states.append(state)
+
+    def end(self, line: int, why: str) -> None:
+        """Nothing from this line on is taken."""
+        if not self.ended:
+            self.ended, self.why = line, why
+
+    def tell_end(self) -> None:
+        """Where and why the reading ended before the file did."""
+        if self.ended:
+            self.problems.note(self.ended, self.why, "left out what follows", kind=self.why)
 
     def event(self, line: int, flag: int, count: int) -> None:
         """An epoch of flag 2 to 5 with `count` special lines behind it (RINEX 3.05 table A3)."""
@@ -151,11 +199,6 @@ class _Course:
             self.change(int(first), int(last))
         return True
 
-    @property
-    def current(self) -> int:
-        """The number of the state that holds now."""
-        return len(self.states) - 1
-
     def usable(self) -> bool:
         """Whether observations from here on belong to the site the file began with."""
         return not self.moving and not self.ended
@@ -168,7 +211,16 @@ def _apart(a: Header, b: Header) -> float:
 
 
 def _stray(text: Text, number: int) -> bool:
-    return text.end[number] - text.begin[number] > 60 and bool(rinex_header.label_of(text.line(number)))
+    return bool(text.end[number] - text.begin[number] > 60 and rinex_header.label_of(text.line(number)))
+
+
+def _comments(text: Text, lines: Ints) -> Bools:
+    """Which lines are comments by their label."""
+    is_comment = text.end[lines] - text.begin[lines] >= 67
+    for column, letter in enumerate(b"COMMENT", start=60):
+        some = np.flatnonzero(is_comment)
+        is_comment[some] = text.data[text.begin[lines[some]] + column] == letter
+    return is_comment
 
 
 # ------------------------------------------------------------------------------------------------ RINEX 3 and 4
@@ -195,45 +247,17 @@ def layout_3(text: Text, body: int, header: Header, problems: Problems) -> Layou
         said = text.line(int(epoch_line[k]))[31:32]
         problems.note(int(epoch_line[k]) + 1, f"the epoch flag {said!r} is none of 0 to 6")
     behind = np.cumsum(is_epoch) - 1  # the epoch each line belongs to
-    # Lines that are neither epochs nor satellite records, and events, change the course; there are few.
     course = _Course(header, text, problems)
-    epoch_state = np.zeros(len(epochs), dtype=np.int64)
-    usable = np.ones(len(epochs), dtype=bool)
     last = np.append(epochs[1:], len(lines))  # the line behind each epoch's records
     special = (flag >= 2) & (flag <= 5)
     in_special = (behind >= 0) & special[np.maximum(behind, 0)] if len(epochs) else np.zeros(len(lines), dtype=bool)
     other = np.flatnonzero(~is_epoch & (satellite < 0) & ~in_special)
-    points = [(int(k), False) for k in _runs(other)] + [(int(epochs[k]), True) for k in np.flatnonzero(special)]
-    points.sort()
-    run_end = dict(zip(_runs(other).tolist(), _run_ends(other).tolist(), strict=True))
-    changes: list[tuple[int, int, bool]] = []  # from this epoch on: state, usable
-    for place, is_event in points:
-        if is_event:
-            event = int(behind[place])
-            have = int(last[event] - epochs[event] - 1)
-            if count_good[event] and have != count[event]:
-                what = f"the event says {count[event]} lines follow, {have} do"
-                problems.note(int(epoch_line[event]) + 1, what, "took those that do")
-            course.event(int(epoch_line[event]), int(flag[event]), have)
-            changes.append((event + 1, course.current, course.usable()))
-        else:
-            stop = run_end[place]
-            stray = [m for m in range(place, min(stop, place + LONGEST_HEADER)) if _stray(text, body + m)]
-            if stray:
-                if course.outside_events(np.array(stray) + body):
-                    changes.append((int(behind[place]) + 1, course.current, course.usable()))
-            elif text.raw[text.begin[body + place] : text.end[body + stop - 1]].strip():
-                problems.note(
-                    body + place + 1,
-                    f"{stop - place} lines are neither an epoch nor a satellite record"
-                    if stop - place > 1 else "the line is neither an epoch nor a satellite record",
-                    kind="lines that are neither an epoch nor a satellite record",
-                )  # fmt: skip
-    for first, state, good in changes:
-        epoch_state[first:] = state
-        usable[first:] = good
-    if course.ended:
-        problems.note(course.ended, "another site is occupied from here on", "left out what follows")
+    for k in np.flatnonzero(special & count_good & (count != last - epochs - 1))[: 2 * MOST_PROBLEMS]:
+        what = f"the event says {count[k]} lines follow, {last[k] - epochs[k] - 1} do"
+        problems.note(int(epoch_line[k]) + 1, what, "took those that do", kind=_OTHER_EVENTS)
+    events = np.flatnonzero(special)
+    epoch_state, usable = _follow(text, body, events, epochs, last, flag, other, behind, course, problems)
+    course.tell_end()
     observed = ((flag == 0) | (flag == 1)) & usable
     rows = np.flatnonzero((satellite >= 0) & (behind >= 0))
     rows = rows[observed[behind[rows]]] if len(epochs) else rows[:0]
@@ -254,6 +278,75 @@ def layout_3(text: Text, body: int, header: Header, problems: Problems) -> Layou
         course.states, epoch_line[keep], epoch_state[keep], flag[keep],
         renumber[behind[rows]], satellite[rows], lines[rows],
     )  # fmt: skip
+
+
+def _follow(
+    text: Text,
+    body: int,
+    events: Ints,
+    epochs: Ints,
+    last: Ints,
+    flag: Ints,
+    other: Ints,
+    behind: Ints,
+    course: _Course,
+    problems: Problems,
+) -> tuple[Ints, Bools]:
+    """State and usability of each epoch: what events and lines that are neither epochs nor records change on the way.
+
+    Lines are counted from the body.  Events and stretches of lines that change nothing (external events, comments,
+    rubbish) are told from the others at once; the others are taken one by one.
+    """
+    # An event of comments alone, or of an external signal, changes nothing.
+    special = np.zeros(len(epochs) + 1, dtype=bool)  # the last one stands for lines before the first epoch
+    special[events] = True
+    inner = np.flatnonzero(special[behind]) if len(events) else events
+    comments = np.bincount(behind[inner[_comments(text, inner + body)]], minlength=len(epochs))
+    quiet = (flag[events] == 5) | ((flag[events] == 4) & (comments[events] == last[events] - epochs[events] - 1))
+    loud_events = events[~quiet]
+    # So does a stretch without any label but comments.
+    first, stop = _runs(other), _run_ends(other)
+    size = text.end[other + body] - text.begin[other + body]
+    comment = _comments(text, other + body)
+    run = np.repeat(np.arange(len(first)), stop - first)
+    loud_runs = np.unique(run[(size > 60) & ~comment])
+    rubbish = np.setdiff1d(np.unique(run[(size > 0) & ~comment]), loud_runs)
+    rubbish = np.setdiff1d(rubbish, np.unique(run[comment]))
+    for k in rubbish[: 2 * MOST_PROBLEMS]:
+        _note_rubbish(text, body, int(first[k]), int(stop[k]), problems)
+    if len(rubbish) > 2 * MOST_PROBLEMS:
+        problems.more[_RUBBISH] += len(rubbish) - 2 * MOST_PROBLEMS
+    points = [(int(epochs[k]), int(k), True) for k in loud_events] + [(int(first[k]), int(k), False) for k in loud_runs]
+    points.sort()
+    begins: list[int] = [0]  # from this epoch on: state, usable
+    states: list[int] = [0]
+    goods: list[bool] = [True]
+    for place, k, is_event in points:
+        if is_event:
+            course.event(int(epochs[k]) + body, int(flag[k]), int(last[k] - epochs[k] - 1))
+            begins.append(k + 1)
+        else:
+            until = min(int(stop[k]), place + LONGEST_HEADER)
+            stray = [m for m in range(place, until) if _stray(text, body + m)]
+            if not stray:
+                _note_rubbish(text, body, place, int(stop[k]), problems)
+                continue
+            if not course.outside_events(np.array(stray) + body):
+                continue
+            begins.append(int(behind[place]) + 1)
+        states.append(course.current)
+        goods.append(course.usable())
+        if course.ended:
+            break
+    which = np.searchsorted(np.array(begins), np.arange(len(epochs)), side="right") - 1
+    return np.array(states)[which], np.array(goods)[which]
+
+
+def _note_rubbish(text: Text, body: int, first: int, stop: int, problems: Problems) -> None:
+    if len(problems) >= MOST_PROBLEMS or text.raw[text.begin[body + first] : text.end[body + stop - 1]].strip():
+        what = f"{stop - first} lines are neither an epoch nor a satellite record"
+        alone = "the line is neither an epoch nor a satellite record"
+        problems.note(body + first + 1, what if stop - first > 1 else alone, kind=_RUBBISH)
 
 
 def _runs(numbers: Ints) -> Ints:
@@ -305,47 +398,62 @@ def layout_2(text: Text, body: int, header: Header, problems: Problems) -> Layou
     course = _Course(header, text, problems)
     taken = _Taken()
     step = _lines_each(header)
-    broken = _broken_2(first, behind, count, flag, good, step)
-    place = 0
-    while place < total:
-        k = int(np.searchsorted(starts, place))
-        if k == len(starts) or starts[k] != place:  # not at an epoch line
-            stop = int(starts[k]) if k < len(starts) else total
+    broken_of: dict[int, list[int]] = {}  # lines per satellite -> numbers of the epoch lines that need a closer look
+
+    def broken_for(lines_each: int) -> list[int]:
+        if lines_each not in broken_of:
+            broken_of[lines_each] = _broken_2(first, behind, count, flag, good, lines_each).tolist()
+        return broken_of[lines_each]
+
+    broken = broken_for(step)
+    all_starts, all_timed = starts.tolist(), timed.tolist()
+    place = odd = k = 0
+    while place < total and not course.ended:
+        k = bisect.bisect_left(all_starts, place, k)
+        if k == len(all_starts) or all_starts[k] != place:  # not at an epoch line
+            stop = all_starts[k] if k < len(all_starts) else total
             if _skip_to(text, body, place, stop, course, problems):
-                step = _lines_each(course.states[-1])
-                broken = _broken_2(first, behind, count, flag, good, step)
+                step = _lines_each(course.states[course.current])
+                broken = broken_for(step)
             place = stop
             continue
-        nearest = int(np.searchsorted(broken, k))
-        until = int(broken[nearest]) if nearest < len(broken) else len(starts)
+        nearest = bisect.bisect_left(broken, k)
+        until = broken[nearest] if nearest < len(broken) else len(all_starts)
         if until > k:  # epochs k to until (not inside) are as they say
             if course.usable():
                 chosen = np.arange(k, until)[flag[k:until] < 2]
                 taken.stretch(line[chosen], course.current, flag[chosen], body + first[chosen], count[chosen], step)
-            place = int(starts[until]) if until < len(starts) else total
+            place = all_starts[until] if until < len(all_starts) else total
             continue
-        where = body + place + 1
+        odd += 1
+        if odd > MOST_ODD_STEPS:
+            course.end(
+                body + place + 1, f"more than {MOST_ODD_STEPS} epochs with other lines behind them than they say"
+            )
+            break
         if not good[k]:
-            problems.note(where, "the epoch line has no flag of 0 to 6 or no number of satellites")
+            problems.note(body + place + 1, "the epoch line has no flag of 0 to 6 or no number of satellites",
+                          kind="epoch lines without a flag or a number of satellites")  # fmt: skip
             place += 1
         elif 2 <= flag[k] <= 5:
-            stop = min(place + 1 + int(count[k]), total)
-            epochs_inside = timed[(timed > place) & (timed < stop)]  # a count that would swallow an epoch is wrong
-            if len(epochs_inside):
-                stop = int(epochs_inside[0])
-            if stop - place - 1 != count[k]:
-                what = f"the event says {count[k]} lines follow, {stop - place - 1} do"
-                problems.note(where, what, "took those that do")
+            announced = int(count[k])
+            stop = min(place + 1 + announced, total)
+            inside = bisect.bisect_right(all_timed, place)
+            if inside < len(all_timed):  # a count that would swallow an epoch is wrong
+                stop = min(stop, all_timed[inside])
+            if stop - place - 1 != announced:
+                what = f"the event says {announced} lines follow, {stop - place - 1} do"
+                problems.note(body + place + 1, what, "took those that do", kind=_OTHER_EVENTS)
             course.event(body + place, int(flag[k]), stop - place - 1)
             place = stop
         else:
             _untidy_2(text, body, k, place, first, behind, count, flag, step, total, course, taken, problems)
             place = int(behind[k])
-        if _lines_each(course.states[-1]) != step:
-            step = _lines_each(course.states[-1])
-            broken = _broken_2(first, behind, count, flag, good, step)
-    if course.ended:
-        problems.note(course.ended, "another site is occupied from here on", "left out what follows")
+        changed = _lines_each(course.states[course.current])
+        if changed != step:
+            step = changed
+            broken = broken_for(step)
+    course.tell_end()
     return taken.layout(text, course.states, header, problems)
 
 
@@ -472,10 +580,10 @@ def _skip_to(
     text: Text, body: int, place: int, stop: int, course: _Course, problems: Problems, *, quiet: bool = False
 ) -> bool:
     """Lines that belong to no epoch: header lines are taken in, others reported; True where the header changed."""
-    states = len(course.states)
+    changes = course.changes
     stray = [k for k in range(place, min(stop, place + LONGEST_HEADER)) if _stray(text, body + k)]
     if stray:
         course.outside_events(np.array(stray) + body)
     elif not quiet and text.raw[text.begin[body + place] : text.end[body + stop - 1]].strip():
         problems.note(body + place + 1, f"{stop - place} lines belong to no epoch", kind="lines of no epoch")
-    return len(course.states) > states
+    return course.changes > changes

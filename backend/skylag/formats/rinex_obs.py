@@ -53,7 +53,7 @@ def parse(
         raise FormatError(f"{name}: the file is empty; an observation file has a header and epochs", path=name, line=0)
     if b"\r" in data:
         data = data.replace(b"\r\n", b"\n").replace(b"\r", b"\n")
-    text = lines_of(data)
+    text = lines_of(data, name)
     header, body = _top(text, name, problems)
     if header.version >= 3:
         layout = layout_3(text, body, header, problems)
@@ -218,12 +218,13 @@ def _assemble(
     )
     shape = (len(kept), len(identities))
     values, lock = _columns(text, layout.states, table, shape, wanted, problems, name)
-    last = layout.states[-1]
+    told = [state.position_m for state in layout.states if state.position_m is not None]
+    removed = {letter: who for state in layout.states for letter, who in state.biases_removed.items()}
     kept_resets = np.zeros(len(kept), dtype=bool)
     kept_resets[into[np.flatnonzero(resets & (into < len(kept)))]] = True
     receiver = Receiver(
         name=header.marker or _marker_from(name),
-        position_m=header.position_m or last.position_m or (np.nan, np.nan, np.nan),
+        position_m=header.position_m or (told[0] if told else (np.nan, np.nan, np.nan)),
         antenna=header.antenna,
         type=header.receiver_type,
     )
@@ -231,7 +232,7 @@ def _assemble(
         problems.note(0, "the header has no marker name", f"named {receiver.name} after the file")
     if np.isnan(receiver.position_m[0]):
         problems.note(0, "the header has no approximate position", "left it open")
-    for letter, who in last.biases_removed.items():
+    for letter, who in removed.items():
         problems.note(0, f"code biases of {letter or 'all'} were already removed: {who}", "kept the values as they are")
     signals = Signals(
         receiver=receiver,
@@ -251,7 +252,7 @@ def _assemble(
         "stated_interval_s": header.interval_s,
         "declared": {s: header.names(s) for s in CARRIED if any(header.names(s))},
         "skipped_systems": skipped,
-        "biases_removed": dict(last.biases_removed),
+        "biases_removed": removed,
         "clock_applied": header.clock_applied,
     }
     return Reading(signals, problems.all(), facts)
@@ -327,8 +328,9 @@ def _columns(
     """Every wanted column of every constellation, dense."""
     jobs: list[tuple[Header, str, Ints, list[int]]] = []  # state, system, rows, columns
     for state_number, state in enumerate(states):
+        own = np.flatnonzero(rows.state == state_number) if len(states) > 1 else np.arange(len(rows.state))
         for letter in CARRIED:
-            chosen = np.flatnonzero((rows.state == state_number) & (rows.system == ord(letter)))
+            chosen = own[rows.system[own] == ord(letter)]
             codes = state.names(letter)
             if len(chosen) and not codes:
                 problems.note(
