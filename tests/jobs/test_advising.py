@@ -1,16 +1,18 @@
 """Advice over kept days: what is shared is made once, days beside are joined, hours are local."""
 
 from collections.abc import Iterator
+from dataclasses import replace
 
 import numpy as np
 import pytest
-from tests.builders import CALM_DAY, REGION, STORM_DAY, write_archive
+from tests.builders import CALM_DAY, REGION, STORM_DAY, invented_day, write_archive
 
 from skylag.archive import Archive, open_archive
 from skylag.errors import Missing, Refused
 from skylag.impact import survey
 from skylag.impact.survey import Job
-from skylag.jobs.advising import Desk, local_span
+from skylag.jobs.advising import DayAdvice, Desk, local_span, prepare
+from skylag.tables import HOLDS, Site
 
 
 @pytest.fixture(scope="module")
@@ -88,3 +90,61 @@ def test_a_day_without_coefficients_says_so(kept: Archive) -> None:
     day = Desk(kept).day(REGION.name, str(STORM_DAY))
     with pytest.raises(Missing, match="not known for this day"):
         day.broadcast_model(REGION.sites[0])
+
+
+def test_what_takes_seconds_is_kept_and_gives_the_same(kept: Archive, monkeypatch: pytest.MonkeyPatch) -> None:
+    """The first answer, made from the lines of sight, equals all later ones, which read no line of sight."""
+    assert prepare(kept, REGION.name, str(STORM_DAY))
+    sites = [site for site in REGION.sites if site.kind == "aerodrome"]
+    record = kept.day(REGION.name, STORM_DAY)
+    first = DayAdvice(kept, record)
+    monkeypatch.setattr(kept.outlooks, "hours", lambda *_: None)
+    made = first.approaches(sites)
+    monkeypatch.undo()
+    later = DayAdvice(kept, record)
+    monkeypatch.setattr(kept, "samples", lambda *_: pytest.fail("the lines of sight were read again"))
+    again = later.approaches(sites)
+    assert later.sky.source == first.sky.source
+    for name in ("vertical_m", "horizontal_m", "route_m", "available", "in_view", "used"):
+        np.testing.assert_array_equal(getattr(again, name), getattr(made, name))
+    assert again.outages == made.outages
+
+
+def test_a_day_without_an_aerodrome_is_not_prepared(archive: Archive) -> None:
+    day = invented_day(STORM_DAY)
+    region = replace(REGION, sites=tuple(site for site in REGION.sites if site.kind != "aerodrome"))
+    archive.save(replace(day, region=region, site_states=day.site_states[:, [0, 3]],
+                         site_reasons=(day.site_reasons[0], day.site_reasons[3])))  # fmt: skip
+    assert not prepare(archive, REGION.name, str(STORM_DAY))
+
+
+def test_sites_that_came_later_are_judged_from_what_was_kept(archive: Archive) -> None:
+    """A new site in the cell of an old one has its states; one off the map is unseen; order and kind are in force."""
+    archive.save(invented_day(STORM_DAY))
+    desk = Desk(archive)
+    before = desk.day(REGION.name, str(STORM_DAY)).site_states()
+    assert before.sites == REGION.sites
+    old = REGION.sites[1]
+    beside = Site("Beside", old.lat + 0.01, old.lon + 0.01, "survey")
+    archive.sites.change(
+        REGION.name, "test",
+        lambda now: now.with_site(beside).with_site(Site("Far", 10, 10)).with_site(replace(old, kind="port"))
+        .without("Northport"),
+    )  # fmt: skip
+    day = desk.day(REGION.name, str(STORM_DAY))
+    found = day.site_states()
+    assert [site.name for site in found.sites] == ["Gannet Field", "Kelp Island", "Southmere quarry", "Beside", "Far"]
+    assert found.sites[0].kind == "port"
+    np.testing.assert_array_equal(found.codes[:, :3], before.codes[:, 1:])
+    assert found.reasons[:3] == before.reasons[1:]
+    cell = day.record.cell_of(beside.lat, beside.lon)
+    assert cell is not None
+    np.testing.assert_array_equal(found.codes[:, 3], day.fields.state[:, cell[0], cell[1]])
+    told = zip(found.reasons[3], found.codes[:, 3], strict=True)
+    assert all(bool(reason) == (code != HOLDS) for reason, code in told)
+    assert any("slopes by" in reason for reason in found.reasons[3])
+    assert not found.codes[:, 4].any()
+    assert set(found.reasons[4]) == {"outside the map: nothing can be said"}
+    assert day.site("Beside").kind == "survey"
+    with pytest.raises(Missing):
+        day.site("Northport")

@@ -1,33 +1,44 @@
 """What a kept day means for work: brings the archive's maps, flags and lines of sight to `impact`.
 
 One `DayAdvice` per day holds what several questions share (satellites, grid confidence) once it was asked for; `Desk`
-keeps the last few.  Never changes the archive, never judges: `impact` does.
+keeps the last few.  What takes seconds is kept beside the day in the archive, where it may be thrown away.  Never
+changes a day, never judges: `impact` does.
 """
 
 import contextlib
+import hashlib
 import threading
 from collections import OrderedDict
 from collections.abc import Sequence
 from datetime import datetime, timedelta
 from datetime import time as clock
 from functools import cached_property
+from typing import Any
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 import numpy as np
 from threadpoolctl import threadpool_limits
 
 from skylag import timescales
-from skylag.archive import Archive, DayRecord
-from skylag.errors import Missing, NotEnough, Refused
-from skylag.impact import correction_grid, ground_augmentation, satellite_augmentation, single_frequency, sky, survey
-from skylag.impact.correction_grid import GridConfidence
+from skylag.archive import Archive, DayRecord, SiteStates
+from skylag.errors import Missing, NotEnough, Refused, SkylagError
+from skylag.impact import (
+    at_places,
+    correction_grid,
+    ground_augmentation,
+    satellite_augmentation,
+    single_frequency,
+    sky,
+    survey,
+)
+from skylag.impact.correction_grid import ConfidenceChoices, GridConfidence
 from skylag.impact.ground_augmentation import StationChoices, StationDay
 from skylag.impact.satellite_augmentation import Availability, ServiceChoices
 from skylag.impact.single_frequency import LeftOver
 from skylag.impact.sky import Sky
 from skylag.impact.survey import Advice, Explanation, Job
 from skylag.ionosphere.geometry import geodetic
-from skylag.tables import Fields, Flag, Samples, Site
+from skylag.tables import Fields, Flag, Samples, Site, Times
 
 Span = tuple[np.datetime64, np.datetime64]
 
@@ -59,29 +70,54 @@ class DayAdvice:
         """Of the region's maps."""
         return self.record.region.shell_height_km * 1000.0
 
-    def _samples(self) -> Samples:
-        head = self.record.head
-        return self._archive.samples(head.region, head.day, head.version)
-
     @property
     def sky(self) -> Sky:
         """The satellites that the network tracked, minute by minute.  Raises NotEnough where it tracked none."""
         with self._lock:
             if self._sky is None:
-                self._sky = _sky_of(self._samples(), self.record.head.day)
+                self._fill(with_grid=False)
+            assert self._sky is not None
             return self._sky
 
     @property
     def grid(self) -> GridConfidence:
-        """Confidence at the correction grid at the epochs of the maps; some seconds of work, done once."""
+        """Confidence at the correction grid at the epochs of the maps; some seconds of work, done once and kept."""
         with self._lock:
             if self._grid is None:
-                samples = self._samples()
-                if self._sky is None:
-                    self._sky = _sky_of(samples, self.record.head.day)
-                with threadpool_limits(1):
-                    self._grid = correction_grid.confidence(samples, self.record.times)
+                self._fill(with_grid=True)
+            assert self._grid is not None
             return self._grid
+
+    def _fill(self, with_grid: bool) -> None:
+        """Take the sky and the grid from beside the day, or make them and keep them there."""
+        head, mark = self.record.head, _mark()
+        there = self._archive.outlooks.hours(head.region, str(head.day), head.version, mark)
+        if there is None:
+            samples = self._archive.samples(head.region, head.day, head.version)
+            if not with_grid:
+                self._sky = _rounded(_sky_of(samples, head.day))
+                return
+            there = _prepared(samples, self.record.times, head.day)
+            with contextlib.suppress(SkylagError):  # it can be made again
+                self._archive.outlooks.keep_hours(head.region, str(head.day), head.version, mark, there)
+        self._sky, self._grid = _sky_from(there), _grid_from(there, self.record.times)
+
+    def site_states(self) -> SiteStates:
+        """States of the sites in force: as kept where a site is where it was, from the kept maps for the others."""
+        head, sites = self.record.head, self.record.region.sites
+        kept = self._archive.site_states(head.region, head.day, head.version)
+        if sites == kept.sites:
+            return kept
+        column = {(one.name, one.lat, one.lon): number for number, one in enumerate(kept.sites)}
+        fresh = [one for one in sites if (one.name, one.lat, one.lon) not in column]
+        codes, together = kept.codes, kept.reasons
+        if fresh:
+            more, reasons = at_places.judge(fresh, self.fields, self.flags, self.record.region.thresholds)
+            codes, together = np.concatenate([codes, more], axis=1), (*together, *reasons)
+        for number, one in enumerate(fresh):
+            column[one.name, one.lat, one.lon] = len(kept.sites) + number
+        order = [column[one.name, one.lat, one.lon] for one in sites]
+        return SiteStates(kept.times, sites, codes[:, order], tuple(together[n] for n in order))
 
     def site(self, name: str) -> Site:
         """A site of the region by name.  Raises Missing where it has no such site."""
@@ -111,7 +147,7 @@ class DayAdvice:
     def survey(self, job: Job, beside: "Sequence[DayAdvice]" = ()) -> Advice:
         """A survey job through the day, and through days beside it that its hours reach into.
 
-        Without satellites a usual geometry is taken, and said.
+        Without satellites the geometry of the nominal constellation is taken, and said.
         """
         days = sorted((self, *beside), key=lambda one: one.record.head.day)
         days = [one for one in days if _same_grid(one.record, self.record)]
@@ -176,6 +212,61 @@ def _joined_sky(parts: Sequence[Sky]) -> Sky:
     return Sky(times, names, position, parts[0].source)
 
 
+# What is kept beside a day; another number where the meaning of the arrays, or how they are made, changes.
+_KEPT_FORM = 1
+
+
+def _mark() -> str:
+    """Names what is kept: it depends on the choices."""
+    choices = hashlib.sha256(repr(ConfidenceChoices()).encode()).hexdigest()[:16]
+    return f"correction grid and sky {_KEPT_FORM} {choices}"
+
+
+def _prepared(samples: Samples, times: Times, day: np.datetime64) -> dict[str, Any]:
+    """Sky and grid as arrays to keep: positions to some metres, delays to some millimetres."""
+    found = _sky_of(samples, day)
+    with threadpool_limits(1):
+        grid = correction_grid.confidence(samples, times)
+    return {
+        "sky_minutes": found.times.astype(np.int64), "sky_satellites": found.satellites.astype("S8"),
+        "sky_position_m": found.position_m.astype(np.float32), "sky_source": np.array([found.source.encode()]),
+        "lat": grid.lat, "lon": grid.lon, "delay_m": grid.delay_m.astype(np.float32),
+        "sigma_m": grid.sigma_m.astype(np.float32), "step": grid.step.astype(np.uint8), "irregular": grid.irregular,
+        "rays": grid.rays.astype(np.uint16),
+    }  # fmt: skip
+
+
+def _sky_from(there: dict[str, Any]) -> Sky:
+    return Sky(
+        there["sky_minutes"].astype("datetime64[ns]"), there["sky_satellites"].astype(np.str_),
+        there["sky_position_m"].astype(np.float64), bytes(there["sky_source"][0]).decode(),
+    )  # fmt: skip
+
+
+def _rounded(made: Sky) -> Sky:
+    """The sky as it would be kept, so that the first answer is the same as all others."""
+    return Sky(made.times, made.satellites, made.position_m.astype(np.float32).astype(np.float64), made.source)
+
+
+def _grid_from(there: dict[str, Any], times: Times) -> GridConfidence:
+    return GridConfidence(
+        times, there["lat"].astype(np.int64), there["lon"].astype(np.int64), there["delay_m"].astype(np.float64),
+        there["sigma_m"].astype(np.float64), there["step"].astype(np.int64), there["irregular"],
+        there["rays"].astype(np.int64),
+    )  # fmt: skip
+
+
+def prepare(archive: Archive, region: str, day: str, version: int | None = None) -> bool:
+    """Make and keep what questions about approaches share, before anybody asks; False where no site is an aerodrome.
+
+    Raises NotEnough where the day has no line of sight high enough.
+    """
+    record = archive.day(region, day, version)
+    if not any(site.kind == "aerodrome" for site in record.region.sites):
+        return False
+    return len(DayAdvice(archive, record).grid.lat) > 0
+
+
 def _sky_of(samples: Samples, day: np.datetime64) -> Sky:
     minutes = day.astype("datetime64[ns]") + np.arange(1440) * np.timedelta64(60 * 10**9, "ns")
     return sky.from_rays(samples.rays, minutes)
@@ -215,6 +306,7 @@ class Desk:
         with self._lock:
             if key not in self._days:
                 self._days[key] = DayAdvice(self._archive, record)
+            self._days[key].record = record  # the sites may have changed
             self._days.move_to_end(key)
             while len(self._days) > self._most:
                 self._days.popitem(last=False)

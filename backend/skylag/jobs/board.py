@@ -10,7 +10,7 @@ import socket
 import threading
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from concurrent.futures import BrokenExecutor, Executor
-from contextlib import ExitStack
+from contextlib import ExitStack, suppress
 from dataclasses import asdict, dataclass
 from datetime import date
 from functools import cache, partial
@@ -23,8 +23,9 @@ from skylag.archive import Archive, Ending, Task
 from skylag.archive.records import region_from
 from skylag.chain import Choices
 from skylag.errors import FormatError, NotEnough, Refused, SkylagError, Unsolvable
-from skylag.jobs import kept, work
+from skylag.jobs import advising, kept, work
 from skylag.jobs.executor import open_executor
+from skylag.jobs.upkeep import Upkeep
 from skylag.settings import Estimation
 from skylag.tables import Products, Region
 
@@ -43,7 +44,6 @@ class Policy:
     held_s        a claim runs out so long after its holder was last heard of
     most_attempts tries that may end in an error; waits between them grow from first_wait_s by wait_factor
     most_losses   times the process may vanish in the middle
-    kept_s        so long receiver-days are kept
     """
 
     held_s: float = 60.0
@@ -52,7 +52,6 @@ class Policy:
     wait_factor: float = 4.0
     longest_wait_s: float = 3600.0
     most_losses: int = 10
-    kept_s: float = 3 * 86_400.0
     beat_s: float = 0.5
 
     def wait_s(self, attempts: int) -> float:
@@ -175,7 +174,7 @@ class Worker:
 
     def run(self, stop: threading.Event, *, until_empty: bool = False, idle_s: float = 0.5) -> int:
         """Work until told to stop, or until nothing is waiting or running; gives how many tasks were taken."""
-        taken = 0
+        taken, upkeep = 0, Upkeep(self._archive, self._log)
         while not stop.is_set():
             with open_executor(self._place) as executor:
                 try:
@@ -186,6 +185,7 @@ class Worker:
                         counts = self._archive.tasks.counts()
                         if until_empty and not counts["waiting"] and not counts["running"]:
                             return taken
+                        upkeep.turn()  # while there is nothing else to do
                         stop.wait(idle_s)
                 except BrokenExecutor as failure:  # one of its processes was ended: take new ones
                     self._log("executor lost", worker=self.name, why=str(failure))
@@ -202,7 +202,7 @@ class Worker:
         if task is None:
             return False
         self._log("task begun", task=task.id, title=task.title, worker=self.name, losses=task.losses)
-        keeping = kept.KeepingExecutor(executor, kept_folder(self._archive))
+        keeping = kept.KeepingExecutor(executor, kept.folder_of(self._archive))
         beat = _Beat(self._archive, task, self.name, self._clock, policy)
         try:
             with ExitStack() as stack:
@@ -216,6 +216,7 @@ class Worker:
             }  # fmt: skip
             version = self._archive.save(products, ending=Ending(task.id, self.name, self._clock(), result))
             self._log("task done", task=task.id, title=task.title, version=version, given=keeping.given)
+            self._prepare(products, version)
         except Withdrawn:
             keeping.drop()
             self._log("task withdrawn", task=task.id, title=task.title)
@@ -226,6 +227,12 @@ class Worker:
             keeping.drop()
             self._fail(task, failure)
         return True
+
+    def _prepare(self, products: Products, version: int) -> None:
+        """Where no other task waits, make what questions about approaches need; else the first to ask waits for it."""
+        with suppress(SkylagError):
+            if not self._archive.tasks.counts()["waiting"]:
+                advising.prepare(self._archive, products.region.name, str(products.day), version)
 
     def _fail(self, task: Task, failure: Exception) -> None:
         """Write down a failed try, and when the next is due."""
@@ -280,11 +287,6 @@ class _Beat:
             if not going:
                 self._withdrawn.set()
                 return
-
-
-def kept_folder(archive: Archive) -> Path:
-    """Where receiver-days of an archive are kept: beside its slant tables."""
-    return archive.slant_folder.with_name(f"{archive.slant_folder.name}.receivers")
 
 
 # ---------------------------------------------------------------------------------------------- who is alive

@@ -46,9 +46,8 @@ def flags_geojson(request: Request, region: str, day: str, version: int | None =
 
 @router.get("/api/days/{region}/{day}/site-states", summary="States of the sites through a day")
 def site_states(request: Request, region: str, day: str, version: int | None = None) -> Response:
-    """One row of states per site, with the reason of each."""
-    archive: Archive = request.app.state.archive
-    return payloads.reply(payloads.site_states(archive.site_states(region, asking.day(day), version)))
+    """One row of states per site in force, with the reason of each."""
+    return payloads.reply(payloads.site_states(_day(request, region, day, version).site_states()))
 
 
 # ---------------------------------------------------------------------------------------------- work at a site
