@@ -6,7 +6,7 @@
 import * as api from "./api.js";
 import { begin } from "./drawing.js";
 import { save } from "./exporting.js";
-import { medianMap, sameGrid } from "./figures/compare.js";
+import { medianDelay, medianMap, sameGrid } from "./figures/compare.js";
 import { frameOf } from "./figures/map.js";
 import { nearest } from "./figures/strip.js";
 import { Live } from "./live.js";
@@ -35,6 +35,7 @@ import { dayText, FILE_WORDS, WORDS } from "./words.js";
  * @property {import("./api.js").SiteStates|null} siteStates
  * @property {import("./api.js").Series|null} series  of the chosen place, null while it is on its way
  * @property {{fields?: import("./api.js").Window, index?: number, label?: string, trouble?: string}|null} other  the map compared with
+ * @property {{label: string, place: string, delay: number[]}|null} otherSeries  the delay at the place on the days compared with
  * @property {{lat: number, lon: number, elevation: number, receiver: string}[]} rays
  * @property {number} raysTime  the time they belong to, NaN where none were asked for
  * @property {[number, number][][]} coast
@@ -55,11 +56,11 @@ const reading = new ReadingPanel(
   { answer: at("answer"), form: at("place-form"), site: at("place-site"), lat: at("place-lat"), lon: at("place-lon"), error: at("place-error") },
   state,
 );
-const series = new SeriesPanel({ plot: at("series"), line: at("series-now"), table: at("series-table") });
+const series = new SeriesPanel({ plot: at("series"), line: at("series-now"), note: at("series-note"), table: at("series-table") });
 const flags = new FlagsPanel(at("flag-table"), state);
 const year = new YearPanel(
   {
-    strip: at("year-strip"), marks: at("year-marks"), who: at("year-who"), span: at("year-span"), worst: at("year-worst"), table: at("year-table"),
+    strip: at("year-strip"), marks: at("year-marks"), who: at("year-who"), span: at("year-span"), worst: at("year-worst"), field: at("year-field"), table: at("year-table"),
     note: at("year-note"), versus: at("versus"), how: at("versus-how"),
   },
   state,
@@ -265,7 +266,7 @@ async function loadDay() {
     const view = state.view;
     const time = view.minute === null ? firstTime(found) : found.times[nearest(found.times, found.start + view.minute * 60000)];
     settling = true;
-    scene = { view, day: found, time, fields: null, index: 0, siteStates, series: null, rays: [], raysTime: NaN, other: null, coast: sameRegion ? scene.coast : [], theme: masthead.theme };
+    scene = { view, day: found, time, fields: null, index: 0, siteStates, series: null, rays: [], raysTime: NaN, other: null, otherSeries: null, coast: sameRegion ? scene.coast : [], theme: masthead.theme };
     state.change(
       { minute: view.ask === "now" && view.minute === null ? null : Math.round((time - found.start) / 60000), place: view.place ?? /** @type {[number, number]} */ (firstPlace(found, siteStates, time)) },
       { step: "none" },
@@ -274,7 +275,7 @@ async function loadDay() {
     scene.view = state.view;
     at("main").dataset.loading = "false";
     showAll();
-    await Promise.all([loadFields(), sameRegion ? null : loadCoast(signal), loadPlace(), loadRays(), loadOther()]);
+    await Promise.all([loadFields(), sameRegion ? null : loadCoast(signal), loadPlace(), loadRays(), loadOther(), loadOtherSeries()]);
   } catch (error) {
     if (!gone(error)) fail(error, loadDay);
   }
@@ -309,6 +310,32 @@ function hourOf(time, other = "") {
   return promise;
 }
 
+/** The days to compare with, and what they are called. */
+function othersOf({ versus, region, day }) {
+  const dates = versus === "quiet" ? quietDays(days.filter((entry) => entry.region === region), day) : [versus];
+  return { dates, label: versus === "quiet" ? WORDS.quietMedian(dates.length) : dayText(versus) };
+}
+
+/** The delay at the chosen place on the days compared with. Without it the map still compares. */
+async function loadOtherSeries() {
+  const mine = scene;
+  const { view, day } = mine;
+  running.otherSeries?.abort();
+  mine.otherSeries = null;
+  if (!view.versus || view.ask !== "past" || !view.place) return;
+  const { dates, label } = othersOf(view);
+  const signal = only("otherSeries");
+  try {
+    const found = await Promise.all(dates.map((date) => api.series(view.region, date, view.place, day.region.unseenSigma, { signal })));
+    if (mine !== scene || scene.view.versus !== view.versus || !found.length) return;
+    const shifts = dates.map((date) => Date.parse(date) - Date.parse(view.day));
+    mine.otherSeries = { label, place: view.place.join(), delay: medianDelay(found, shifts, day.times) };
+    series.show(scene);
+  } catch (error) {
+    if (!gone(error)) at("announce").textContent = error.message;
+  }
+}
+
 /** The map to compare with, at the same time of day: of one day, or the median of the quiet days around. */
 async function loadOther() {
   const mine = scene;
@@ -317,9 +344,7 @@ async function loadOther() {
     mine.other = null;
     return;
   }
-  const here = days.filter((entry) => entry.region === view.region);
-  const dates = view.versus === "quiet" ? quietDays(here, view.day) : [view.versus];
-  const label = view.versus === "quiet" ? WORDS.quietMedian(dates.length) : dayText(view.versus);
+  const { dates, label } = othersOf(view);
   try {
     if (!dates.length) throw new Error(WORDS.noQuiet);
     const windows = await Promise.all(dates.map((date) => hourOf(time, date)));
@@ -485,9 +510,13 @@ state.addEventListener("change", (event) => {
   if (changed.has("ask") || changed.has("versus") || (changed.has("minute") && scene.view.versus)) {
     if (changed.has("versus")) scene.other = null;
     loadOther();
+    if (!changed.has("minute")) loadOtherSeries();
   }
   if (changed.has("show")) loadRays();
-  if (changed.has("place")) loadPlace();
+  if (changed.has("place")) {
+    loadPlace();
+    if (scene.view.versus) loadOtherSeries();
+  }
   showAll();
 });
 

@@ -26,6 +26,9 @@ export const VERDICT_WORDS = { work: "work", avoid: "avoid", unseen: "unseen, no
 /** Seasons by their months, so that they mean the same in both halves of the world. */
 export const SEASON_WORDS = { "dec-feb": "December to February", "mar-may": "March to May", "jun-aug": "June to August", "sep-nov": "September to November" };
 
+/** The magnetic field by the day's highest Kp. @type {Record<string, string>} */
+export const FIELD_WORDS = { "": "any", quiet: "quiet, Kp below 4", disturbed: "disturbed, Kp 4", storm: "storm, Kp 5 and more" };
+
 export const KIND_WORDS = {
   slope: { name: "Steep slope", short: "slope" },
   front: { name: "Moving front", short: "front" },
@@ -77,6 +80,9 @@ export const WORDS = {
   notAmongThese: "not among the days shown",
   noSuchDay: "No stored day is like that; choose another span or state.",
   yearCaption: "Shares are of all cells and times, or of the site’s time; the slope is what 99 of 100 seen cells stay under.",
+  noActivity: "No indices of geomagnetic activity of these days are in the archive, so it cannot filter them.",
+  /** @param {string} kp */
+  kp: (kp) => `Kp up to ${kp}`,
   /** @param {string} slope */
   slopeUpTo: (slope) => `slope up to ${slope} mm/km`,
   /** @param {number} shown @param {number} all */
@@ -154,9 +160,11 @@ export const WORDS = {
   curvesAbout: "Vertical delay along single lines of sight that pass within 250 km, 45 minutes to either side; most changed satellites first. A true wall passes one receiver after the other; a fault shows on one line only.",
   curvesTable: "Lines of sight as a table",
   curvesFile: "these lines of sight, CSV",
-  curvesFile: "these lines of sight, CSV",
   /** @param {string} satellite @param {string} lines */
   curvesOf: (satellite, lines) => `Vertical delay along lines of sight to ${satellite}; change within the span: ${lines}.`,
+  /** @param {string} what */
+  dashedIs: (what) => `Dashed: ${what}.`,
+  verticalDelay: "Vertical delay",
   verticalDelayM: "vertical delay, m",
   asTable: "As a table",
   takeAway: "Take away:",
@@ -182,12 +190,13 @@ export const AHEAD_WORDS = {
   beside: { persistence: "the day before again", recurrence: "27 days before again", climatology: "climatology", usual: "the usual of late" },
   /** @param {string} outlooks */
   over: (outlooks) => `All together, ${outlooks}, over all places of the map; delay errors as root mean squares.`,
-  leads: ["The day ahead", "The day after"],
-  lead: "Of",
-  cases: "Hours",
-  own: "Outlook",
-  crps: "Ranked probability",
-  insides: ["Within 50 %", "Within 80 %", "Within 95 %"],
+  leads: { 1: "The day ahead", 2: "The day after" },
+  off: "Off by",
+  cases: "Hours and places",
+  own: "The outlook",
+  crps: "Its ranked probability score",
+  /** @param {string} share */
+  inside: (share) => `Its ${share} % range held`,
   /** @param {string} level @param {string} use */
   reliability: (level, use) => `Chances of ${level}, told and come, for ${use}`,
   /** @param {string} own @param {string} often @param {string} same */

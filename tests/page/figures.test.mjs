@@ -4,14 +4,16 @@ import { readdirSync, readFileSync } from "node:fs";
 import test from "node:test";
 import { STATES } from "../../frontend/js/colour.js";
 import { outline, rowsOf } from "../../frontend/js/figures/cells.js";
-import { differenceMap, medianMap } from "../../frontend/js/figures/compare.js";
+import { differenceMap, medianDelay, medianMap } from "../../frontend/js/figures/compare.js";
 import { legendFigure } from "../../frontend/js/figures/legend.js";
 import { aspectOf, bareWarnings, dottedNumbers, frameOf, heightOf, mapFigure } from "../../frontend/js/figures/map.js";
+import { outlookFigure } from "../../frontend/js/figures/outlook.js";
 import { bandOutline, seriesFigure } from "../../frontend/js/figures/series.js";
 import { front, gradations, offset, placeAt, scaleBarKm, widthKm } from "../../frontend/js/figures/signs.js";
 import { keyStep, nearest, runs, stripFigure } from "../../frontend/js/figures/strip.js";
 import { freeSpot, projection } from "../../frontend/js/painting.js";
-import { mapRows } from "../../frontend/js/exporting.js";
+import { calendarText, mapRows } from "../../frontend/js/exporting.js";
+import { chosenDays, fieldOf } from "../../frontend/js/figures/year.js";
 import { unpack } from "../../frontend/js/api.js";
 
 const DAY = Date.UTC(2031, 4, 11);
@@ -295,7 +297,57 @@ test("the series has no line where nothing is known, and never below zero", () =
   const figure = seriesFigure({ series, span: [TIMES[0], TIMES[2]], theme: "day", clock: "utc", zone: "UTC", top: 10 });
   assert.deepEqual(named(figure, "delay").y, [1, null, 0.1]);
   assert.equal(named(figure, "delay").connectgaps, false);
+  assert.equal(named(figure, "other"), undefined);
+  const beside = seriesFigure({ series, other: [2, NaN, 12], span: [TIMES[0], TIMES[2]], theme: "day", clock: "utc", zone: "UTC", top: 10 });
+  assert.deepEqual(named(beside, "other").y, [2, null, 12]);
+  assert.equal(beside.layout.yaxis.range[1], 12);
   assert.ok(named(figure, "band").y.every((v) => v === null || v >= 0));
+});
+
+test("the delay of other days at the same times of day: their median, where most tell one", () => {
+  const own = [DAY, DAY + 30 * MINUTE, DAY + 300 * MINUTE];
+  const shifts = [-1, -2, -3].map((days) => days * 86400000);
+  const others = [[1, 5], [2, NaN], [9, NaN]].map((delay, i) => ({ times: own.slice(0, 2).map((ms) => ms + shifts[i] + 4 * MINUTE), delay }));
+  assert.deepEqual(medianDelay(others, shifts, own), [2, NaN, NaN]);
+});
+
+test("days of the year by season, state, site and magnetic field", () => {
+  const entry = (day, kp, broken, siteBroken = 0) => ({ day, kp, ap: 1, slope: 12, flags: 0, shares: { holds: 1 - broken, broken }, siteShares: { Port: { holds: 1, broken: siteBroken } } });
+  const all = [entry("2031-01-05", 2, 0), entry("2031-03-12", 7.33, 0.1, 0.2), entry("2031-07-01", 4.33, 0), entry("2032-01-02", NaN, 0.1)];
+  const days = (wish, who = "") => chosenDays(all, { span: "", worst: "", field: "", ...wish }, who).map(({ day }) => day.slice(2));
+  assert.deepEqual([2, 3.67, 4.33, 4.67, NaN].map(fieldOf), ["quiet", "disturbed", "disturbed", "storm", ""]);
+  assert.deepEqual(days({ field: "storm" }), ["31-03-12"]);
+  assert.deepEqual(days({ field: "quiet" }), ["31-01-05"]);
+  assert.deepEqual(days({ span: "dec-feb" }), ["31-01-05", "32-01-02"]);
+  assert.deepEqual(days({ span: "2031", worst: "broken" }), ["31-03-12"]);
+  assert.deepEqual(days({ worst: "broken" }, "Port"), ["31-03-12"]);
+});
+
+test("the outlook as shapes: bands inside each other, chances that stand on each other, hours of the zone", () => {
+  const hours = Array.from({ length: 48 }, (_, i) => DAY + i * 60 * MINUTE);
+  const delay = hours.map((_, i) => (i === 5 ? NaN : 2));
+  const range = (half) => ({ low: delay.map((v) => v - half), high: delay.map((v) => v + half) });
+  const outlook = { hours, delay, ranges: { 50: range(0.2), 95: range(1) }, strained: hours.map(() => 0.5), broken: hours.map(() => 0.25) };
+  const figure = outlookFigure({ outlook, width: 800, zone: "Etc/GMT-10" });
+  assert.equal(figure.top, 3);
+  assert.deepEqual(figure.bands.map((one) => one.share), ["95", "50"]);
+  assert.equal(figure.bands[0].path.match(/M/g).length, 2); // the hour without a number parts it
+  assert.equal(figure.line.match(/M/g).length, 2);
+  const [column] = figure.columns;
+  assert.equal(column.strained.tall, column.broken.tall);
+  assert.equal(column.strained.y + column.strained.tall, column.broken.y);
+  assert.equal(column.broken.y + column.broken.tall, figure.base);
+  assert.equal(figure.ticks[0].text, "12:00"); // the first third hour of the zone after 10:00
+  assert.deepEqual(figure.ticks.filter((tick) => tick.day).map((tick) => tick.text), ["00:00", "00:00"]);
+});
+
+test("a calendar of spans: folded, escaped, in UTC", () => {
+  const text = calendarText([{ start: DAY - 18000, end: DAY + 3600000, summary: "Port, north; ä".repeat(9), about: "a\nb" }], DAY);
+  assert.ok(text.split("\r\n").every((line) => new TextEncoder().encode(line).length <= 75));
+  const plain = text.replaceAll("\r\n ", "");
+  assert.match(plain, /DTSTART:20310511T000000Z\r\nDTEND:20310511T010000Z/);
+  assert.ok(plain.includes("Port\\, north\\; ä") && plain.includes("DESCRIPTION:a\\nb"));
+  assert.equal(plain.match(/\r\n/g).length, text.split(/\r\n(?! )/).length - 1);
 });
 
 test("legend marks run from end to end", () => {

@@ -4,6 +4,7 @@
 
 import { roundEnd } from "../colour.js";
 import { told } from "./map.js";
+import { nearest } from "./strip.js";
 import { median } from "./year.js";
 
 const NUMBERS = ["delay", "uncertainty", "slope"];
@@ -30,6 +31,23 @@ export function medianMap(maps, unseenSigma) {
     layers.support[at] = Number.isFinite(layers.delay[at]) ? 1 : 0;
   }
   return { fields: { times: [maps[0].fields.times[maps[0].index]], lats, lons, layers }, index: 0 };
+}
+
+/**
+ * The delay of other days at one place, brought to the times of this day: the median of what they tell at the same time
+ * of day. NaN where fewer than half tell a number.
+ * @param {{times: number[], delay: number[]}[]} others @param {number[]} shifts  ms from this day's midnight to theirs
+ * @param {number[]} times  of this day
+ */
+export function medianDelay(others, shifts, times) {
+  const near = 15 * 60000;
+  return times.map((ms) => {
+    const values = others.map(({ times: theirs, delay }, i) => {
+      const at = nearest(theirs, ms + shifts[i]);
+      return Math.abs(theirs[at] - ms - shifts[i]) <= near ? delay[at] : NaN;
+    });
+    return 2 * values.filter(Number.isFinite).length > values.length ? median(values) : NaN;
+  });
 }
 
 /** Do two windows stand on one grid? @param {import("../api.js").Window} a @param {import("../api.js").Window} b */

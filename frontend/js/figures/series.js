@@ -11,6 +11,7 @@ export const LEFT = 44;
 /**
  * @param {object} contents
  * @param {{times: number[], delay: number[], sigma: number[], slope: number[]}} contents.series  m, m, mm/km
+ * @param {number[]|null} [contents.other]  the delay of other days at the same times of day [m]
  * @param {[number, number]} contents.span  ends of the time axis, as on the strip
  * @param {import("../colour.js").Theme} contents.theme
  * @param {"utc"|"local"} contents.clock
@@ -18,7 +19,7 @@ export const LEFT = 44;
  * @param {number} contents.top  end of the delay axis [m]
  * @param {number} [contents.width]
  */
-export function seriesFigure({ series, span, theme, clock, zone, top, width = 700 }) {
+export function seriesFigure({ series, other = null, span, theme, clock, zone, top, width = 700 }) {
   const palette = PALETTES[theme];
   const x = series.times.map((ms) => new Date(ms).toISOString());
   const known = series.delay.map((v, i) => Number.isFinite(v) && Number.isFinite(series.sigma[i]));
@@ -30,7 +31,7 @@ export function seriesFigure({ series, span, theme, clock, zone, top, width = 70
   const every = (width > 900 ? 2 : width > 460 ? 3 : 6) * hour;
   const ticks = [];
   for (let ms = Math.ceil((span[0] - 60000) / every) * every; ms <= span[1] + 60000; ms += every) ticks.push(ms);
-  const highest = Math.max(top, ...upper.filter((v) => v !== null));
+  const highest = Math.max(top, ...upper.filter((v) => v !== null), ...(other ?? []).filter(Number.isFinite));
   const axisFont = { size: 11, color: palette.muted };
   return {
     data: [
@@ -43,6 +44,7 @@ export function seriesFigure({ series, span, theme, clock, zone, top, width = 70
         line: { color: palette.accent, width: 1.8 },
         connectgaps: false,
       },
+      ...(other ? [{ ...quiet, name: "other", x, y: other.map((v) => (Number.isFinite(v) ? v : null)), line: { color: palette.ink, width: 1.4, dash: "dash" }, connectgaps: false }] : []),
     ],
     layout: {
       paper_bgcolor: "rgba(0,0,0,0)",

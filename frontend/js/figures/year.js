@@ -26,16 +26,27 @@ export function sharesOf(entry, who) {
 }
 
 /**
+ * How the magnetic field was, by the highest Kp of the day: from 5 a storm, from 4 disturbed; "" where no Kp is known.
+ * Source: NOAA space weather scales, where Kp 5 is the least storm (G1) and 4 is called active.
+ * @param {number} kp
+ */
+export function fieldOf(kp) {
+  return !Number.isFinite(kp) ? "" : kp >= 4.67 ? "storm" : kp >= 3.67 ? "disturbed" : "quiet";
+}
+
+/**
  * The stored days that a wish leaves, oldest first.
  * @param {import("../api.js").DayEntry[]} entries  of one region
- * @param {{span: string, worst: string}} wish  span: "", a year or a key of SEASONS; worst: "" or a state at least
+ * @param {{span: string, worst: string, field: string}} wish  span: "", a year or a key of SEASONS; worst: "" or a state at
+ *   least; field: "" or what fieldOf gives
  * @param {string} who
  */
-export function chosenDays(entries, { span, worst }, who) {
+export function chosenDays(entries, { span, worst, field }, who) {
   const least = { "": 0, strained: 1, broken: 2 }[worst] ?? 0;
   const rank = { unseen: 0, holds: 0, strained: 1, broken: 2 };
   return entries
     .filter(({ day }) => !span || (SEASONS[span] ? SEASONS[span].includes(Number(day.slice(5, 7)) - 1) : day.startsWith(span)))
+    .filter((entry) => !field || fieldOf(entry.kp) === field)
     .filter((entry) => rank[worstOf(sharesOf(entry, who))] >= least)
     .sort((a, b) => (a.day < b.day ? -1 : 1));
 }

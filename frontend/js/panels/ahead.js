@@ -148,12 +148,16 @@ function record(last, all, use) {
     const others = names.filter((name) => best.against[name]).map((name) => `${words.beside[name]} ${fixed(best.against[name].other_rms, 2)} m`);
     box.append(make("p", { class: "record-said", text: words.lastOne(fixed(best.rms_m, 2), others.join(", "), shareText(best.inside["95"])) }));
   }
-  const rows = [["1", words.leads[0]], ["2", words.leads[1]]].filter(([lead]) => all.leads[lead]).map(([lead, text]) => {
-    const one = all.leads[lead];
-    return [text, String(one.hours), `${fixed(one.rms_m, 2)} m`, ...names.map((name) => (one.against[name] ? `${fixed(one.against[name].other_rms, 2)} m` : "–")), `${fixed(one.crps_m, 2)} m`, ...["50", "80", "95"].map((share) => shareText(one.inside[share]))];
-  });
+  const leads = ["1", "2"].filter((lead) => all.leads[lead]);
+  const row = (text, pick) => [text, ...leads.map((lead) => pick(all.leads[lead]))];
   box.append(make("p", { class: "fine", text: words.over(countText(all.outlooks, "outlook")) }),
-    tableOf({ label: words.record, heads: [words.lead, words.cases, words.own, ...names.map((name) => words.beside[name]), words.crps, ...words.insides], numbers: [1, 2, 3, 4, 5, 6, 7, 8, 9, 10], rows }));
+    tableOf({ label: words.record, heads: [words.off, ...leads.map((lead) => words.leads[lead])], numbers: [1, 2], rows: [
+      row(words.own, (one) => `${fixed(one.rms_m, 2)} m`),
+      ...names.map((name) => row(words.beside[name], (one) => (one.against[name] ? `${fixed(one.against[name].other_rms, 2)} m` : "–"))),
+      row(words.crps, (one) => `${fixed(one.crps_m, 2)} m`),
+      ...["50", "80", "95"].map((share) => row(words.inside(share), (one) => shareText(one.inside[share]))),
+      row(words.cases, (one) => String(one.hours)),
+    ] }));
   for (const [level, one] of Object.entries(all.states[use] ?? {})) {
     if (!one.cases) continue;
     box.append(make("details", {}, make("summary", { text: words.reliability(level, use) }),

@@ -6,7 +6,7 @@ import { draw, erase } from "../drawing.js";
 import { csvText, save, SERIES_HEADS, seriesRows } from "../exporting.js";
 import { LEFT, seriesFigure } from "../figures/series.js";
 import { nearest } from "../figures/strip.js";
-import { placeText, timeText, withSigma, WORDS } from "../words.js";
+import { fixed, placeText, timeText, withSigma, WORDS } from "../words.js";
 import { make } from "./parts.js";
 
 export class SeriesPanel {
@@ -17,7 +17,7 @@ export class SeriesPanel {
   #drawn = "";
   #size = [0, 0];
 
-  /** @param {{plot: HTMLElement, line: HTMLElement, table: HTMLElement}} elements */
+  /** @param {{plot: HTMLElement, line: HTMLElement, note: HTMLElement, table: HTMLElement}} elements */
   constructor(elements) {
     this.#elements = elements;
     this.#watcher = new ResizeObserver(() => {
@@ -50,6 +50,12 @@ export class SeriesPanel {
     if (this.#series) save(csvText(SERIES_HEADS, seriesRows(this.#series)), `skylag-${day.day}-${this.#series.lat}-${this.#series.lon}-day.csv`, "text/csv");
   }
 
+  /** The delay compared with, where it is of this place. */
+  #other() {
+    const { otherSeries, view } = this.#scene;
+    return view.versus && view.ask === "past" && otherSeries && otherSeries.place === this.#series.place.join() ? otherSeries : null;
+  }
+
   close() {
     this.#watcher.disconnect();
     this.#elements.table.closest("details")?.removeEventListener("toggle", this.#fillTable);
@@ -71,10 +77,13 @@ export class SeriesPanel {
       `Vertical delay at ${placeText(series.lat, series.lon)} over the day; ${withSigma(series.delay[at], series.sigma[at], "m")} at ${timeText(time)}.`,
     );
     const [width, height] = this.#size;
-    const key = JSON.stringify([series.lat, series.lon, day.region.key, day.day, view.clock, theme, width, height]);
+    const other = this.#other();
+    const key = JSON.stringify([series.lat, series.lon, day.region.key, day.day, view.clock, theme, width, height, other?.label]);
     if (key === this.#drawn || !width) return;
     this.#drawn = key;
-    const figure = seriesFigure({ series, theme, clock: view.clock, zone: day.region.timezone, span, top: day.ends.delay[1], width });
+    this.#elements.note.textContent = other ? WORDS.dashedIs(other.label) : "";
+    this.#fillTable();
+    const figure = seriesFigure({ series, other: other?.delay ?? null, theme, clock: view.clock, zone: day.region.timezone, span, top: day.ends.delay[1], width });
     draw(plot, figure).catch(() => {
       this.#drawn = "";
     });
@@ -89,19 +98,21 @@ export class SeriesPanel {
     const { view, day } = this.#scene;
     const how = { clock: view.clock, zone: day.region.timezone };
     const series = this.#series;
+    const other = this.#other();
     const body = make("tbody");
     series.times.forEach((ms, i) => {
       body.append(
         make("tr", {},
           make("th", { scope: "row", text: timeText(ms, how) }),
           make("td", { class: "number", text: withSigma(series.delay[i], series.sigma[i], "m") }),
+          ...(other ? [make("td", { class: "number", text: `${fixed(other.delay[i], 2)} m` })] : []),
           make("td", { class: "number", text: withSigma(series.slope[i], series.slopeSigma[i], "mm/km", 1) }),
         ),
       );
     });
     table.replaceChildren(
       make("table", {},
-        make("thead", {}, make("tr", {}, make("th", { scope: "col", text: "Time" }), make("th", { scope: "col", class: "number", text: "Vertical delay" }), make("th", { scope: "col", class: "number", text: "Slope" }))),
+        make("thead", {}, make("tr", {}, make("th", { scope: "col", text: "Time" }), make("th", { scope: "col", class: "number", text: WORDS.verticalDelay }), ...(other ? [make("th", { scope: "col", class: "number", text: other.label })] : []), make("th", { scope: "col", class: "number", text: "Slope" }))),
         body,
       ),
     );

@@ -3,7 +3,8 @@
  */
 
 import { chosenDays, sharesOf, SEASONS, worstOf, yearFigure } from "../figures/year.js";
-import { dayText, fixed, monthText, SEASON_WORDS, shareText, STATE_WORDS, WORDS } from "../words.js";
+import { FIELD } from "../state.js";
+import { dayText, FIELD_WORDS, fixed, monthText, SEASON_WORDS, shareText, STATE_WORDS, WORDS } from "../words.js";
 import { draft, make, stateWord } from "./parts.js";
 
 export class YearPanel {
@@ -19,16 +20,16 @@ export class YearPanel {
   #watcher;
 
   /**
-   * @param {Record<"strip"|"marks"|"who"|"span"|"worst"|"table"|"note"|"versus"|"how", any>} elements
+   * @param {Record<"strip"|"marks"|"who"|"span"|"worst"|"field"|"table"|"note"|"versus"|"how", any>} elements
    * @param {import("../state.js").State} state
    */
   constructor(elements, state) {
     this.#elements = elements;
     this.#state = state;
-    const { strip, who, span, worst, table, versus, how } = elements;
+    const { strip, who, span, worst, field, table, versus, how } = elements;
     strip.addEventListener("click", this.#click);
     strip.addEventListener("keydown", this.#key);
-    for (const [element, name] of [[who, "who"], [span, "span"], [worst, "worst"]]) {
+    for (const [element, name] of [[who, "who"], [span, "span"], [worst, "worst"], [field, "field"]]) {
       element.addEventListener("change", () => state.change({ [name]: element.value }, { step: "none" }));
     }
     versus.addEventListener("change", () => state.change({ versus: versus.value }));
@@ -54,10 +55,10 @@ export class YearPanel {
     const { view, day } = scene;
     if (view.ask !== "past") return;
     // A step in time concerns nothing here, and asking for sizes would cost a layout of the page each time.
-    const told = JSON.stringify([view.region, day.day, view.who, view.span, view.worst, view.versus, view.beside, this.#width]);
+    const told = JSON.stringify([view.region, day.day, view.who, view.span, view.worst, view.field, view.versus, view.beside, this.#width]);
     if (told === this.#told) return;
     this.#told = told;
-    const { strip, who, span, worst, versus, how, note } = this.#elements;
+    const { strip, who, span, worst, field, versus, how, note } = this.#elements;
     const here = this.#days.filter((entry) => entry.region === view.region);
     const sites = [...new Set(here.flatMap((entry) => Object.keys(entry.siteShares)))];
     const fill = JSON.stringify([view.region, sites, here.length, view.day]);
@@ -70,6 +71,8 @@ export class YearPanel {
         ...years.map((text) => make("option", { value: text, text })),
         ...Object.keys(SEASONS).map((value) => make("option", { value, text: SEASON_WORDS[value] })),
       );
+      field.replaceChildren(...["", ...FIELD].map((value) => make("option", { value, text: FIELD_WORDS[value] })));
+      field.disabled = !here.some((entry) => Number.isFinite(entry.kp));
       versus.replaceChildren(
         make("option", { value: "", text: WORDS.noOther }),
         make("option", { value: "quiet", text: WORDS.quietDays }),
@@ -79,6 +82,7 @@ export class YearPanel {
     who.value = sites.includes(view.who) ? view.who : "";
     span.value = view.span;
     worst.value = view.worst;
+    field.value = view.field;
     versus.value = view.versus;
     how.hidden = !view.versus;
     for (const input of how.querySelectorAll("input")) input.checked = (input.value === "beside") === view.beside;
@@ -90,7 +94,7 @@ export class YearPanel {
       this.#draw(chosen, who.value, width);
       this.#fillTable();
     }
-    note.textContent = chosen.length ? WORDS.yearSpan(chosen.length, here.length) : WORDS.noSuchDay;
+    note.textContent = `${chosen.length ? WORDS.yearSpan(chosen.length, here.length) : WORDS.noSuchDay}${field.disabled ? ` ${WORDS.noActivity}` : ""}`;
     const number = this.#figure?.columns.findIndex((column) => column.entry.day === day.day) ?? -1;
     for (const [i, mark] of [...strip.querySelectorAll(".day-mark")].entries()) mark.classList.toggle("chosen", i === number);
     const column = this.#figure?.columns[number];
@@ -131,7 +135,7 @@ export class YearPanel {
   #fillTable() {
     const { table, who } = this.#elements;
     if (!table.closest("details").open || !this.#figure) return;
-    const heads = ["Day", "Worst state", "Broken", "Strained", "Unseen", "Slope", "Flags"];
+    const heads = ["Day", "Worst state", "Broken", "Strained", "Unseen", "Slope", "Highest Kp", "ap", "Flags"];
     const body = make("tbody");
     for (const { entry, state } of [...this.#figure.columns].reverse()) {
       const shares = sharesOf(entry, who.value) ?? {};
@@ -141,6 +145,8 @@ export class YearPanel {
           make("td", {}, stateWord(state)),
           ...["broken", "strained", "unseen"].map((name) => make("td", { class: "number", text: shareText(shares[name]) })),
           make("td", { class: "number", text: Number.isFinite(entry.slope) ? `${fixed(entry.slope, 1)} mm/km` : "–" }),
+          make("td", { class: "number", text: fixed(entry.kp, 1) }),
+          make("td", { class: "number", text: fixed(entry.ap, 0) }),
           make("td", { class: "number", text: entry.flags }),
         ),
       );
@@ -177,5 +183,6 @@ export class YearPanel {
 
 function sentence({ entry, state }) {
   const slope = Number.isFinite(entry.slope) ? `, ${WORDS.slopeUpTo(fixed(entry.slope, 0))}` : "";
-  return `${dayText(entry.day)}: ${STATE_WORDS[state].name}${slope}`;
+  const kp = Number.isFinite(entry.kp) ? `, ${WORDS.kp(fixed(entry.kp, 1))}` : "";
+  return `${dayText(entry.day)}: ${STATE_WORDS[state].name}${slope}${kp}`;
 }
