@@ -402,7 +402,7 @@ def test_a_day_cut_off_goes_on_with_what_was_kept(tmp_path: Path, real_files: li
             one.one(executor)
         task = archive.tasks.one(number)
         assert (task.state, task.result["given"], task.result["computed"]) == ("done", 1, 0)
-        folder = board.kept_folder(archive)
+        folder = kept.folder_of(archive)
         (file,) = folder.rglob("*.npz")
         assert file.stat().st_size > 10_000
         assert kept.tidy(folder, 10.0, file.stat().st_mtime + 5) == 0

@@ -9,7 +9,7 @@ stamps its own rows.
 import threading
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import replace
 from pathlib import Path
 from typing import Any, Self, TypeVar
@@ -34,6 +34,7 @@ BUSY_WAIT_S = 30.0
 
 _POOL = 20  # connections kept, and as many more for a rush: the web serves up to forty requests at a time
 _MOST_VERSIONS = 2**31 - 1  # what the column holds
+_SLANTS_LOCK = 0x536B7453  # any number that is ours
 _HOUR_NS = 3600 * 10**9
 Day = np.datetime64 | str  # a GPS-time day, like 2031-05-11
 _Result = TypeVar("_Result")
@@ -176,12 +177,33 @@ class Archive:
         sha256 = slants.write(products.samples, self.slant_folder)
 
         def keep(connection: Connection) -> int:
+            _hold_slants(connection, shared=True)
+            if not slants.path_of(self.slant_folder, sha256).is_file():  # swept as a stray in this very moment
+                slants.write(products.samples, self.slant_folder)
             version = self._save(connection, products, sha256, provisional)
             if ending is not None:
                 end_in(connection, ending, version)
             return version
 
         return self._write(keep)
+
+    def sweep(self, older_than_s: float) -> int:
+        """Remove slant tables that no version names and that were last written before a time [s, of the folder's own
+        file system]; gives how many.  Saves wait meanwhile, and one that named such a table writes it anew.
+        """
+
+        def remove(connection: Connection) -> int:
+            _hold_slants(connection, shared=False)
+            named = set(connection.scalars(sa.select(schema.product.c.slant_sha256)))
+            gone = 0
+            for path in slants.strays(self.slant_folder, named):
+                with suppress(FileNotFoundError):  # it has just been finished, or thrown away by another
+                    if path.stat().st_mtime < older_than_s:
+                        path.unlink()
+                        gone += 1
+            return gone
+
+        return self._write(remove)
 
     def pin(self, region: str, day: Day, version: int | None) -> None:
         """Make a version the one that is shown even when newer ones come; None takes the pin off."""
@@ -600,6 +622,13 @@ def _explained(name: str, doing: str) -> Iterator[None]:
             archive=name,
             reason=reason,
         ) from cause
+
+
+def _hold_slants(connection: Connection, *, shared: bool) -> None:
+    """Keep a sweep and saves apart until the transaction ends.  SQLite's write transactions take turns anyway."""
+    if connection.dialect.name == "postgresql":
+        lock = sa.func.pg_advisory_xact_lock_shared if shared else sa.func.pg_advisory_xact_lock
+        connection.execute(sa.select(lock(_SLANTS_LOCK)))
 
 
 def _insert_if_absent(connection: Connection) -> Any:

@@ -114,6 +114,11 @@ class Received:
     sha256: str
 
 
+def inbox_folder(archive: Archive) -> Path:
+    """Where what people send lies: beside the slant tables."""
+    return archive.slant_folder.with_name(f"{archive.slant_folder.name}.inbox")
+
+
 class Inbox:
     """A folder of batches; each batch a folder of files that were sent together."""
 

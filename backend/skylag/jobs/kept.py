@@ -6,27 +6,32 @@ as before is given at once, to the bit; so are, to one that is told so, hours wh
 and JSON: nothing that is read can run.
 """
 
+import contextlib
 import hashlib
 import io
 import json
 import os
 import tempfile
 import zipfile
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Collection, Mapping, Sequence
 from concurrent.futures import Executor, Future
-from dataclasses import asdict, fields, is_dataclass
+from dataclasses import asdict, dataclass, fields, is_dataclass
 from functools import cache
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 import skylag
+from skylag import formats
 from skylag.chain import ReceiverDay
 from skylag.ionosphere.field import Hour
 from skylag.jobs import work
 from skylag.jobs.closed_hours import ClosedHours
-from skylag.tables import Problem, Rays, Receiver, SignalPair
+from skylag.tables import Problem, Rays, Reading, Receiver, SignalPair, Signals
+
+if TYPE_CHECKING:
+    from skylag.archive import Archive  # workers need no database
 
 
 class KeepingExecutor(Executor):
@@ -55,7 +60,8 @@ class KeepingExecutor(Executor):
             self.given += 1
             return _done(there)
         self.computed += 1
-        future = self._watched(self._inner.submit(function, *arguments))
+        more = (ReadOnce(self._folder),) if len(arguments[1]) > 1 else ()  # of one file the receiver-day is kept itself
+        future = self._watched(self._inner.submit(function, *arguments, *more))
         if mark:
             future.add_done_callback(lambda one: _keep(self._folder, mark, one))
         return future
@@ -98,6 +104,30 @@ class KeepingExecutor(Executor):
             return ""
         facts = [program(), key, files, str(day), self._sources[1], repr(choices), shell_height_m]
         return hashlib.sha256(json.dumps(facts).encode()).hexdigest()
+
+
+@dataclass(frozen=True)
+class ReadOnce:
+    """Reads as `formats.read` does, and keeps what an observation file holds: hours of a day are read once each."""
+
+    folder: Path
+
+    def __call__(self, path: Path, *, wanted: Mapping[str, Collection[str]], thin_to_s: float | None) -> Reading:
+        """Raises FormatError as `formats.read` does."""
+        codes = {system: sorted(wanted[system]) for system in sorted(wanted)}
+        try:
+            facts = [program(), hashlib.sha256(path.read_bytes()).hexdigest(), str(path), codes, thin_to_s]
+        except OSError:
+            return formats.read(path, wanted=wanted, thin_to_s=thin_to_s)  # which says what is wrong
+        mark = hashlib.sha256(json.dumps(facts).encode()).hexdigest()
+        there = read_signals(self.folder, mark)
+        if there is not None:
+            return there
+        reading = formats.read(path, wanted=wanted, thin_to_s=thin_to_s)
+        if isinstance(reading.table, Signals):
+            with contextlib.suppress(OSError):  # a full disk only costs the time to read it again
+                write_signals(self.folder, mark, reading.table, reading.problems)
+        return reading
 
 
 def _done(result: Any) -> Future[Any]:
@@ -171,29 +201,15 @@ def write(folder: Path, mark: str, result: work.ReceiverResult) -> None:
         "shell_height_m": rays.shell_height_m,
         "interval_s": rays.interval_s,
     }
-    arrays = {name: getattr(rays, name) for name in (*Rays.COLUMNS, "satellites")}
-    content = io.BytesIO()
-    np.savez(content, facts=np.frombuffer(json.dumps(facts).encode(), dtype=np.uint8), **arrays)
-    goal = _path(folder, mark)
-    goal.parent.mkdir(parents=True, exist_ok=True)
-    handle, passing = tempfile.mkstemp(dir=goal.parent, prefix="writing-")
-    try:
-        with os.fdopen(handle, "wb") as file:
-            file.write(content.getbuffer())
-        Path(passing).replace(goal)
-    finally:
-        Path(passing).unlink(missing_ok=True)
+    _write(folder, mark, facts, {name: getattr(rays, name) for name in (*Rays.COLUMNS, "satellites")})
 
 
 def read(folder: Path, mark: str) -> work.ReceiverResult | None:
     """A kept receiver-day; None where there is none or it is damaged."""
-    path = _path(folder, mark)
-    try:
-        with np.load(path, allow_pickle=False) as there:
-            arrays = {name: there[name] for name in there.files}
-    except (OSError, ValueError, EOFError, zipfile.BadZipFile):
+    found = _read(folder, mark)
+    if found is None:
         return None
-    facts = json.loads(bytes(arrays.pop("facts")))
+    facts, arrays = found
     rays = Rays(
         receivers=tuple(_receiver(one) for one in facts["receivers"]),
         pairs=tuple(SignalPair(**one) for one in facts["pairs"]),
@@ -207,16 +223,84 @@ def read(folder: Path, mark: str) -> work.ReceiverResult | None:
     )
 
 
+def write_signals(folder: Path, mark: str, signals: Signals, problems: Sequence[Problem]) -> None:
+    """Keep what an observation file holds."""
+    facts = {
+        "receiver": asdict(signals.receiver),
+        "values": list(signals.values),
+        "lock": list(signals.lock),
+        "channels": dict(signals.channels),
+        "interval_s": signals.interval_s,
+        "problems": [asdict(one) for one in problems],
+    }
+    shape = (0, len(signals.times), len(signals.satellites))
+    arrays = {
+        "times": signals.times, "satellites": signals.satellites, "resets": signals.resets,
+        "values": np.stack(list(signals.values.values())) if signals.values else np.zeros(shape),
+        "lock": np.stack(list(signals.lock.values())) if signals.lock else np.zeros(shape, dtype=np.uint8),
+    }  # fmt: skip
+    _write(folder, mark, facts, arrays)
+
+
+def read_signals(folder: Path, mark: str) -> Reading | None:
+    """What an observation file holds, the problems of its reading too; None where it is not kept, or damaged."""
+    found = _read(folder, mark)
+    if found is None:
+        return None
+    facts, arrays = found
+    signals = Signals(
+        receiver=_receiver(facts["receiver"]), times=arrays["times"], satellites=arrays["satellites"],
+        values=dict(zip(facts["values"], arrays["values"], strict=True)),
+        lock=dict(zip(facts["lock"], arrays["lock"], strict=True)),
+        channels=facts["channels"], resets=arrays["resets"], interval_s=facts["interval_s"],
+    )  # fmt: skip
+    return Reading(signals, tuple(Problem(**one) for one in facts["problems"]))
+
+
+def _write(folder: Path, mark: str, facts: dict[str, Any], arrays: dict[str, Any]) -> None:
+    """Write facts and arrays; a half-written file never has its name."""
+    content = io.BytesIO()
+    np.savez(content, facts=np.frombuffer(json.dumps(facts).encode(), dtype=np.uint8), **arrays)
+    goal = _path(folder, mark)
+    goal.parent.mkdir(parents=True, exist_ok=True)
+    handle, passing = tempfile.mkstemp(dir=goal.parent, prefix="writing-")
+    try:
+        with os.fdopen(handle, "wb") as file:
+            file.write(content.getbuffer())
+        Path(passing).replace(goal)
+    finally:
+        Path(passing).unlink(missing_ok=True)
+
+
+def _read(folder: Path, mark: str) -> tuple[dict[str, Any], dict[str, Any]] | None:
+    """Facts and arrays as they were written; None where they are not there or damaged."""
+    path = _path(folder, mark)
+    try:
+        with np.load(path, allow_pickle=False) as there:
+            arrays = {name: there[name] for name in there.files}
+        with contextlib.suppress(OSError):
+            os.utime(path)  # it is of use still
+        return json.loads(bytes(arrays.pop("facts"))), arrays
+    except (OSError, ValueError, EOFError, KeyError, zipfile.BadZipFile):
+        return None
+
+
 def _receiver(facts: dict[str, Any]) -> Receiver:
     x, y, z = facts["position_m"]
     return Receiver(facts["name"], (x, y, z), facts["antenna"], facts["type"])
 
 
+def folder_of(archive: "Archive") -> Path:
+    """Where receiver-days of an archive are kept: beside its slant tables."""
+    return archive.slant_folder.with_name(f"{archive.slant_folder.name}.receivers")
+
+
 def tidy(folder: Path, older_than_s: float, now_s: float) -> int:
-    """Throw away what was written longer ago than a span, by the files' own times; gives how many."""
+    """Throw away what was last of use longer ago than a span, by the files' own times; gives how many."""
     gone = 0
     for path in folder.rglob("*") if folder.is_dir() else ():
-        if path.is_file() and now_s - path.stat().st_mtime > older_than_s:
-            path.unlink(missing_ok=True)
-            gone += 1
+        with contextlib.suppress(FileNotFoundError):  # another has just thrown it away
+            if path.is_file() and now_s - path.stat().st_mtime > older_than_s:
+                path.unlink()
+                gone += 1
     return gone

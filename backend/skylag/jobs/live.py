@@ -23,6 +23,7 @@ from skylag.formats.glance import glance
 from skylag.ionosphere.geometry import geodetic
 from skylag.jobs import alerts, board, kept, work
 from skylag.jobs.closed_hours import ClosedHours, Nearness
+from skylag.jobs.upkeep import Upkeep
 from skylag.tables import HOLDS, UNSEEN, Fields, Products, Region
 from skylag.timescales import utc_to_gps
 
@@ -277,10 +278,11 @@ class Watch:
     ) -> None:
         self._archive, self._clock, self._region, self._rules = archive, clock, region, rules
         self._hours = ClosedHours(nearness)
-        self._executor = kept.KeepingExecutor(executor, board.kept_folder(archive), self._hours)
+        self._executor = kept.KeepingExecutor(executor, kept.folder_of(archive), self._hours)
         self._choices, self._patience = choices or Choices(), patience or Patience()
         self._simulated = simulated
         self._log: board.Log = log or (lambda event, **facts: None)
+        self._upkeep = Upkeep(archive, self._log)
         self._folder = Folder(path)
         self._days: dict[str, np.datetime64 | None] = {}  # file -> day
         self.state = State()
@@ -305,6 +307,8 @@ class Watch:
                 alerts.keep(self._archive, told, self._clock())
         if self._rules:
             alerts.deliver(self._archive, self._clock, self._log)
+        if not made:
+            self._upkeep.turn()
         return made
 
     def _now(self) -> np.datetime64:

@@ -31,8 +31,8 @@ class Ages:
 
     kept_s: float = 3 * _DAY_S
     sent_s: float = 30 * _DAY_S
-    stray_s: float = _DAY_S
-    every_s: float = 3600.0
+    stray_s: float = 3600.0
+    every_s: float = 900.0
 
 
 @dataclass(frozen=True)

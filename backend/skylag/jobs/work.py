@@ -34,6 +34,7 @@ from skylag.tables import (
     PreciseOrbits,
     Problem,
     Products,
+    Reading,
     Region,
     Signals,
     concatenate,
@@ -45,6 +46,7 @@ if TYPE_CHECKING:
 
 # Biases of an earlier day, by the name of the region and the day; None where there are none (`earlier_biases`).
 Earlier = Callable[[str, np.datetime64], Biases | None]
+Read = Callable[..., Reading]  # as `formats.read`
 # Told the stage, the share of it done (0 to 1), and a word on what is being done.
 Progress = Callable[[str, float, str], None]
 
@@ -246,10 +248,14 @@ def receiver_unit(
     sources: Sequence[Ephemerides | PreciseOrbits],
     choices: Choices,
     shell_height_m: float,
+    read: Read = formats.read,
 ) -> ReceiverResult:
-    """Read the files of one receiver and take the wanted day to rays."""
+    """Read the files of one receiver and take the wanted day to rays.
+
+    read  `formats.read`, or what gives the same but has read some files before
+    """
     with threadpool_limits(1):
-        return _receiver_unit(key, paths, day, sources, choices, shell_height_m)
+        return _receiver_unit(key, paths, day, sources, choices, shell_height_m, read)
 
 
 def hour_unit(hour: Hour) -> Made:
@@ -277,6 +283,7 @@ def _receiver_unit(
     sources: Sequence[Ephemerides | PreciseOrbits],
     choices: Choices,
     shell_height_m: float,
+    read: Read,
 ) -> ReceiverResult:
     problems: list[Problem] = []
     left_out: list[LeftOut] = []
@@ -284,7 +291,7 @@ def _receiver_unit(
     wanted = wanted_codes(choices.signals)
     for path in paths:
         try:
-            reading = formats.read(Path(path), wanted=wanted, thin_to_s=choices.thin_to_s)
+            reading = read(Path(path), wanted=wanted, thin_to_s=choices.thin_to_s)
             signals = reading.table
             if not isinstance(signals, Signals):
                 raise FormatError(f"{path}: is no observation file", path=path, line=0)

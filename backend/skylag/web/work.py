@@ -20,7 +20,7 @@ from skylag.archive import Archive, Task
 from skylag.archive.notices import Delivery, Notice
 from skylag.errors import Refused, SkylagError
 from skylag.jobs import board
-from skylag.jobs.guard import Inbox, Limits
+from skylag.jobs.guard import Inbox, Limits, inbox_folder
 from skylag.web import asking, payloads
 from skylag.web.access import Traffic
 
@@ -32,8 +32,7 @@ _SHOWN = 200
 
 def inbox_of(archive: Archive, limits: Limits) -> Inbox:
     """The folder for what people send: beside the slant tables."""
-    folder: Path = archive.slant_folder
-    return Inbox(folder.with_name(f"{folder.name}.inbox"), limits)
+    return Inbox(inbox_folder(archive), limits)
 
 
 def _inbox(request: Request) -> Inbox:
