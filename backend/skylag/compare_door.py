@@ -5,6 +5,7 @@ Thin: parses, calls, prints or writes one file.
 
 import argparse
 import json
+import sys
 from pathlib import Path
 from typing import Any
 
@@ -30,7 +31,8 @@ def add(commands: Any, caution: str) -> None:
         "theirs, where our map sees something. The day is a kept one, or a folder that `skylag day --out` wrote.",
         epilog="examples:\n"
         "  skylag compare map.24i.Z --archive skylag-archive --day 2024-03-30\n"
-        "  skylag compare map.INX.gz --results results/ --format netcdf --out difference.nc\n\n" + caution,
+        "  skylag compare map.INX.gz --results results/ --format netcdf --out difference.nc\n\n"
+        "exit status: 0 all of the map was read; 1 done, parts of it were broken (named); 3 no result.\n\n" + caution,
     )
     parser.add_argument("map", type=Path, metavar="MAP", help="the published map, an IONEX file")
     parser.add_argument("--results", type=Path, metavar="DIR", help="a folder of results, instead of an archive")
@@ -50,6 +52,9 @@ def _compare(options: argparse.Namespace) -> int:
         raise Refused("--format netcdf is a file: say where with --out FILE", name="out", value=None, allowed="a file")
     reading = formats.read(options.map)
     maps, their_biases = published_maps(reading, options.map.name)
+    for problem in reading.problems:
+        print(f"noticed: {problem}", file=sys.stderr)
+    status = 1 if reading.problems else 0
     if options.results is not None:
         ours, our_biases, height_km, simulated = _of_folder(options.results)
     else:
@@ -61,7 +66,7 @@ def _compare(options: argparse.Namespace) -> int:
             options.out, found.times, found.lats, found.lons, found.ours, found.theirs, found.sigma, options.map.name
         )
         print("\n".join([*said, f"difference maps: {options.out}"]))
-        return 0
+        return status
     if options.format == "csv":
         text = hours_csv(found)
     else:
@@ -70,7 +75,7 @@ def _compare(options: argparse.Namespace) -> int:
         options.out.write_text(text, encoding="utf-8")
     else:
         print(text, end="")
-    return 0
+    return status
 
 
 def _text(found: Beside, said: list[str]) -> str:

@@ -28,6 +28,7 @@ def routes() -> list[APIRoute]:
 
 
 ADDRESSES = sorted(route.path for route in routes())
+ASKED = sorted(route.path for route in routes() if "GET" in route.methods)
 GOOD = {"lat": "-41", "lon": "147", "time": "2031-05-11T05:00:00Z", "site": "Gannet Field", "use": "ground"}
 
 
@@ -51,13 +52,13 @@ def test_a_wrong_method(client: TestClient, address: str) -> None:
     check_shape(client.post(re.sub(r"\{\w+\}", "x", address)), 405, "Refused")
 
 
-@pytest.mark.parametrize("address", [a for a in ADDRESSES if "{region}" in a and "{day}" not in a])
+@pytest.mark.parametrize("address", [a for a in ASKED if "{region}" in a and "{day}" not in a])
 def test_an_unknown_region(client: TestClient, address: str) -> None:
     there = address.replace("{region}", "nowhere")
     assert REGION.name in check_shape(client.get(there, params=GOOD), 404, "Missing")["error"]
 
 
-@pytest.mark.parametrize("address", [a for a in ADDRESSES if "{day}" in a and "/pins/" not in a])
+@pytest.mark.parametrize("address", [a for a in ASKED if "{day}" in a and "/pins/" not in a])
 def test_an_unknown_region_and_a_wrong_day(client: TestClient, address: str) -> None:
     there = address.replace("{region}", "nowhere").replace("{day}", "2031-05-11")
     assert REGION.name in check_shape(client.get(there, params=GOOD), 404, "Missing")["error"]
@@ -92,7 +93,7 @@ class Broken:
         (RuntimeError("a secret that must not leave"), 500, "Defect"),
     ],
 )
-@pytest.mark.parametrize("address", [a for a in ADDRESSES if a.startswith(("/api/days", "/healthz"))])
+@pytest.mark.parametrize("address", [a for a in ASKED if a.startswith(("/api/days", "/healthz"))])
 def test_a_failing_archive(address: str, failure: Exception, status: int, kind: str) -> None:
     client = TestClient(create_app(Broken(failure)), raise_server_exceptions=False)
     there = address.replace("{region}", REGION.name).replace("{day}", str(STORM_DAY))

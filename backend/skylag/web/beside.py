@@ -116,5 +116,8 @@ def _answer(archive: Archive, region: str, day: str, name: str, version: int | N
     found = lay_beside(
         ours, maps, archive.biases(region, record.head.day, number), biases, record.region.shell_height_km * 1000.0
     )
-    return payloads.reply(payloads.beside(found, told(found, short, record.origin.simulated), short))
+    return payloads.reply(payloads.beside(
+        found, [*told(found, short, record.origin.simulated),
+         *(f"Noticed in the file: {problem}" for problem in reading.problems[:10])], short,
+    ))  # fmt: skip
 
