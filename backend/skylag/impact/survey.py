@@ -40,6 +40,8 @@ WORK, AVOID, NOT_SEEN = "work", "avoid", "unseen"
 INDEX_CLASSES = ((2.0, "negligible"), (4.0, "weak"), (8.0, "strong"), (np.inf, "very strong"))
 INDEX_REACH_KM = 150.0
 LONGEST_KM = 100.0  # baselines beyond are not spoken of
+MOST_PLACES = 400
+_ALONE = 20  # so many places have a geometry each
 _FIX_ELEVATION_DEG = 30.0
 _OF_THE_DAY = 0.95  # where no satellites are known: what this share of a day stays under counts
 
@@ -48,7 +50,8 @@ _OF_THE_DAY = 0.95  # where no satellites are known: what this share of a day st
 class Job:
     """A piece of survey work.
 
-    places        (lat, lon) [deg]: one, or the corners of an area or the points of a route; all must be workable
+    places        (lat, lon) [deg]: one, or all that a route or area touches (`shapes.places_of`); all must be workable
+    shape         of `shapes.SHAPES`, as it was asked; only told
     method        of METHODS; baseline_km to the base or reference
     references    (lat, lon) of the reference stations of a network, three at least; else empty
     horizontal_mm, vertical_mm  tolerances at 95 %
@@ -72,11 +75,12 @@ class Job:
     least_satellites: int = 5
     most_dilution: float = 6.0
     fixing_chance: float = 0.1
+    shape: str = "points"
 
     def __post_init__(self) -> None:
         rules = (
             ("method", self.method, self.method in METHODS, f"one of {', '.join(METHODS)}"),
-            ("places", len(self.places), 1 <= len(self.places) <= 200, "1 to 200 places"),
+            ("places", len(self.places), 1 <= len(self.places) <= MOST_PLACES, f"1 to {MOST_PLACES} places"),
             ("baseline_km", self.baseline_km, 0 < self.baseline_km <= LONGEST_KM, f"above 0 to {LONGEST_KM:g} km"),
             ("horizontal_mm", self.horizontal_mm, 0 < self.horizontal_mm <= 1e5, "above 0 to 100 000 mm"),
             ("vertical_mm", self.vertical_mm, 0 < self.vertical_mm <= 1e5, "above 0 to 100 000 mm"),
@@ -85,6 +89,10 @@ class Job:
             ("session_min", self.session_min, 5 <= self.session_min <= 1440, "5 to 1440 minutes"),
             ("references", len(self.references), self.method != "network" or len(self.references) >= 3,
              "three or more reference stations for the method network"),
+            ("references", len(self.references), len(self.references) <= MOST_PLACES, f"up to {MOST_PLACES} of them"),
+            ("least_min", self.least_min, 0 <= self.least_min <= 1440, "0 to 1440 minutes"),
+            ("least_satellites", self.least_satellites, 4 <= self.least_satellites <= 40, "4 to 40 satellites"),
+            ("most_dilution", self.most_dilution, 1 <= self.most_dilution <= 50, "1 to 50"),
         )  # fmt: skip
         for name, value, good, allowed in rules:
             if not good:
@@ -148,7 +156,7 @@ def quantile(share: float, middle: Floats, sigma: Floats) -> Floats:
     middle, sigma = np.abs(np.asarray(middle, dtype=np.float64)), np.asarray(sigma, dtype=np.float64)
     low, high = np.zeros(np.shape(middle)), middle + 9.0 * sigma
     tiny = np.maximum(sigma, 1e-12)
-    for _ in range(60):
+    for _ in range(42):
         half = 0.5 * (low + high)
         below = ndtr((half - middle) / tiny) - ndtr((-half - middle) / tiny) < share
         low, high = np.where(below, half, low), np.where(below, high, half)
@@ -174,7 +182,7 @@ def advise(
     """
     limits = thresholds or Thresholds()
     seen, warned, middle, sigma, own = _differential(job, fields, limits)
-    geometry = [_geometry(job, sky, fields.times, place, shell_height_m) for place in job.places]
+    geometry = _geometries(job, sky, fields.times, shell_height_m)
     horizontal = np.stack([one[0] for one in geometry])
     vertical = np.stack([one[1] for one in geometry])
     d68, d95 = quantile(0.68, middle, sigma), quantile(0.95, middle, sigma)
@@ -279,6 +287,22 @@ def _off_network(
         left[number] = np.abs(delay[:, row[number], column[number]] - stations @ share)
         sigma[number] = slope_sigma[number] * away_km.min()
     return np.where(np.isfinite(slope), left, np.nan), sigma
+
+
+def _geometries(
+    job: Job, sky: Sky | None, times: Times, shell_height_m: float
+) -> list[tuple[Floats, Floats, Ints, Floats]]:
+    """`_geometry` of each place.  Of many places, those of one degree by one share that of the first: satellites stand
+    less than a degree apart there."""
+    few = len(job.places) <= _ALONE
+    shared: dict[tuple[float, float], tuple[Floats, Floats, Ints, Floats]] = {}
+    found = []
+    for place in job.places:
+        key = place if few else (float(round(place[0])), float(round(place[1])))
+        if key not in shared:
+            shared[key] = _geometry(job, sky, times, place, shell_height_m)
+        found.append(shared[key])
+    return found
 
 
 def _geometry(
@@ -462,6 +486,10 @@ def _assumptions(job: Job, sky: Sky | None, shell_height_m: float) -> tuple[str,
         if sky is not None
         else _without_sky(job, shell_height_m)
     )
+    where = {
+        "route": f"All {len(job.places)} cells of the map on the way are looked at; the worst counts.",
+        "area": f"All {len(job.places)} cells of the map that the area touches are looked at; the worst counts.",
+    }.get(job.shape, f"{len(job.places)} places are looked at; the worst counts." if len(job.places) > 1 else "")
     network = (
         "What interpolation leaves: the place's vertical delay against the plane through the nearest reference "
         "stations' (up to six); waves smaller than the map's cells are not in it."
@@ -469,7 +497,9 @@ def _assumptions(job: Job, sky: Sky | None, shell_height_m: float) -> tuple[str,
         else f"Differential delay: slope of the map at the place times {job.baseline_km:g} km, in the worst direction."
     )
     return (
-        f"Method: {METHODS[job.method]}.",
+        f"Method: {METHODS[job.method]}"
+        + (f"; the slope is that of the mean over {job.session_min:g} minutes." if job.method == "static" else "."),
+        *((where,) if where else ()),
         network,
         geometry,
         "Only the ionosphere counts here: multipath, noise, orbits, lower atmosphere and the age of corrections come "
