@@ -41,6 +41,8 @@ export const WORDS = {
   dotted: "Dotted: unseen, not enough data to say; dots over a colour: the delay is known, not whether corrections hold.",
   dotsOver: "over a colour: delay known, not whether corrections hold",
   bareWarning: "by what was seen near by; no number here",
+  flags: "Flags",
+  show: "Show",
   receivers: "Receivers",
   receiversHeard: "Receivers; empty where no data came",
   sites: "Sites",
@@ -167,6 +169,8 @@ export const WORDS = {
   verticalDelay: "Vertical delay",
   verticalDelayM: "vertical delay, m",
   asTable: "As a table",
+  /** @param {string} date @param {string} time @param {string} address */
+  printed: (date, time, address) => `Printed ${date}, ${time}. This view: ${address}`,
   takeAway: "Take away:",
   print: "print",
   play: "Play",

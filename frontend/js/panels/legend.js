@@ -36,7 +36,7 @@ export class LegendPanel {
     const difference = differs(scene);
     const bare = difference ? [] : bareWarnings(fields, index, view.layer);
     const dots = !difference && dottedNumbers({ fields, index, layer: view.layer, unseenSigma: day.region.unseenSigma });
-    const fingerprint = JSON.stringify([bare, dots, difference, view.layer, day.ends, theme, [...view.show]]);
+    const fingerprint = JSON.stringify([bare, dots, difference, view.layer, day.ends, theme, [...view.show], day.flags.length > 0]);
     if (fingerprint === this.#shown) return;
     this.#shown = fingerprint;
     const focused = this.#element.contains(document.activeElement) ? document.activeElement.name : "";
@@ -53,20 +53,20 @@ export class LegendPanel {
     }
     colours.append(states);
     const narrow = window.matchMedia("(max-width: 599px)").matches;
-    const foldable = (name, text) => {
-      const details = make("details", { open: this.#folds[name] ?? !narrow }, make("summary", { text }));
+    const foldable = (name, text, wanted = true) => {
+      const details = make("details", { open: this.#folds[name] ?? (wanted && !narrow) }, make("summary", { text }));
       details.addEventListener("toggle", () => {
         this.#folds[name] = details.open;
       });
       return details;
     };
-    const signs = foldable("signs", "Flags");
+    const signs = foldable("signs", WORDS.flags, day.flags.length > 0);
     const list = make("ul", { class: "key" });
     for (const [kind, words] of Object.entries(KIND_WORDS)) {
       list.append(make("li", {}, sign(kind), make("span", { text: kind === "front" ? `${words.name}; ${WORDS.lengthUnknown}` : words.name })));
     }
     signs.append(list);
-    const show = foldable("show", "Show");
+    const show = foldable("show", WORDS.show);
     const choices = make("ul", { class: "key" });
     const rows = [
       ["receivers", view.show.has("rays") ? WORDS.receiversHeard : WORDS.receivers, receiverSign()],

@@ -3,7 +3,7 @@
  */
 
 import * as api from "../api.js";
-import { agoText, dayText, LAYER_WORDS, WORDS, zoneName } from "../words.js";
+import { agoText, dateText, dayText, LAYER_WORDS, timeText, WORDS, zoneName } from "../words.js";
 import { toQuery } from "../state.js";
 import { make } from "./parts.js";
 
@@ -12,6 +12,7 @@ export class MastheadPanel {
   #state;
   #days = [];
   #actions;
+  #before = "day";
 
   /**
    * @param {Record<string, any>} elements
@@ -33,6 +34,8 @@ export class MastheadPanel {
     elements.asks.addEventListener("click", this.#ask);
     elements.theme.addEventListener("click", this.#turn);
     window.matchMedia("(prefers-color-scheme: dark)").addEventListener("change", this.#system);
+    window.addEventListener("beforeprint", this.#toPaper);
+    window.addEventListener("afterprint", this.#fromPaper);
     this.#name();
   }
 
@@ -89,6 +92,8 @@ export class MastheadPanel {
   }
 
   close() {
+    window.removeEventListener("beforeprint", this.#toPaper);
+    window.removeEventListener("afterprint", this.#fromPaper);
     window.matchMedia("(prefers-color-scheme: dark)").removeEventListener("change", this.#system);
   }
 
@@ -140,6 +145,17 @@ export class MastheadPanel {
       // A browser that keeps nothing still turns the page for this visit.
     }
     this.#set(next);
+  };
+
+  /** Paper is light; the address leads back to this view. */
+  #toPaper = () => {
+    this.#before = this.theme;
+    this.#elements.printed.textContent = WORDS.printed(dateText(Date.now()), timeText(Date.now()), window.location.href);
+    if (this.#before === "night") this.#set("day");
+  };
+
+  #fromPaper = () => {
+    if (this.#before === "night") this.#set("night");
   };
 
   #system = (event) => {
