@@ -76,12 +76,7 @@ def _observations() -> list[bytes]:
 
 def _navigation() -> list[bytes]:
     kepler = orbit_values(INVENTED)
-    state = [0.0] * 12
-    state[:12] = [
-        *GLONASS_STATE_KM[0:1], *GLONASS_STATE_KM[3:4], 0.0, 0.0,
-        GLONASS_STATE_KM[1], GLONASS_STATE_KM[4], 0.0, 1.0,
-        GLONASS_STATE_KM[2], GLONASS_STATE_KM[7], 0.0, 0.0,
-    ]  # fmt: skip
+    state = [*GLONASS_STATE_KM[:3], 0.0, *GLONASS_STATE_KM[3:6], 1.0, *GLONASS_STATE_KM[6:], 0.0]
     epoch = "2020-06-25 12:00:00"
     out = []
     for version, kind in ((2.11, "N"), (3.05, "N"), (4.00, "N")):

@@ -9,16 +9,20 @@ from collections.abc import Callable
 from concurrent.futures import ProcessPoolExecutor
 from multiprocessing import get_context
 from pathlib import Path
+from typing import Any
 
 import hatanaka
 import ncompress
 import numpy as np
 import pytest
+from tests.formats.navigation_text import INVENTED, orbit_values, record
+from tests.formats.navigation_text import header as navigation_header
 from tests.properties.rinex_text import Text, labelled, simple, write
 
 from skylag import formats
 from skylag.errors import FormatError, NotEnough, Refused
 from skylag.formats import PARSERS, kind_of, wrappers
+from skylag.formats.glance import glance
 from skylag.tables import Biases, Ephemerides, PreciseOrbits, Reading, Signals
 
 
@@ -151,11 +155,70 @@ def test_wrappers_without_end_are_refused(tmp_path: Path) -> None:
         formats.read(place)
 
 
-def test_a_zip_of_several_files_asks_to_be_unpacked(tmp_path: Path) -> None:
+def a_zip(**files: bytes) -> bytes:
+    out = io.BytesIO()
+    with zipfile.ZipFile(out, "w", zipfile.ZIP_DEFLATED) as folder:
+        folder.mkdir("folder")
+        for name, data in files.items():
+            folder.writestr(f"folder/{name}", data)
+    return out.getvalue()
+
+
+def an_hour(hour: int, **more: Any) -> bytes:
+    return write(simple(start=f"2031-05-10T{hour:02d}:00:00", epochs=120, **more))
+
+
+def test_a_zip_of_hours_is_a_day_of_one_receiver(tmp_path: Path) -> None:
+    hours = {"c": an_hour(2), "a": gzip.compress(an_hour(0)), "b": hatanaka.rnx2crx(an_hour(1)), "readme": b"hello"}
     place = tmp_path / "several.zip"
-    place.write_bytes(zipped(write(simple()), "a.rnx", "b.rnx"))
-    with pytest.raises(FormatError, match="holds 2 files"):
-        formats.read(place)
+    place.write_bytes(a_zip(**hours))
+    reading = formats.read(place, thin_to_s=60)
+    table = reading.table
+    assert isinstance(table, Signals)
+    assert np.array_equal(table.times, np.datetime64("2031-05-10", "ns") + 60 * np.arange(180).astype("timedelta64[s]"))
+    assert reading.header["pieces"] == 3
+    assert len(reading.problems) == 1
+    assert reading.problems[0].path == f"{place}/folder/readme"
+    assert "no format known" in reading.problems[0].what
+    whole = formats.merge([formats.read_bytes(an_hour(k), "x") for k in range(3)], thin_to_s=60)
+    assert all(np.array_equal(table.values[code], whole.values[code], equal_nan=True) for code in whole.values)
+    assert glance(place).kind == "observations"
+    assert glance(place).day == np.datetime64("2031-05-10")
+
+
+def test_a_zip_of_several_receivers_asks_to_be_unpacked() -> None:
+    with pytest.raises(FormatError, match=r"LARK is not WREN.*unpack"):
+        formats.read_bytes(a_zip(a=an_hour(0), b=an_hour(0, marker="LARK")), "several.zip")
+
+
+def test_what_lies_beside_observations_in_a_zip_is_told() -> None:
+    kepler = orbit_values(INVENTED)
+    nav = [(navigation_header(3.05) + record(name, "2020-06-25 12:00:00", kepler)).encode() for name in ("G05", "G06")]
+    reading = formats.read_bytes(a_zip(nav=nav[0], obs=an_hour(0)), "both.zip")
+    assert isinstance(reading.table, Signals)
+    assert [str(problem) for problem in reading.problems] == [
+        "both.zip: the zip holds navigation beside observations (left out; unpack it to use both)"
+    ]
+    reading = formats.read_bytes(a_zip(a=nav[0], b=nav[1]), "nav.zip")
+    assert isinstance(reading.table, Ephemerides)
+    assert list(reading.table.satellites) == ["G05", "G06"]
+    assert reading.problems == ()
+
+
+@pytest.mark.parametrize(
+    ("packed", "words"),
+    [
+        (a_zip(a=b"hello", b=b"you"), "none holds observations"),
+        (a_zip(), "holds 0 files"),
+        (gzip.compress(a_zip(a=b"hello", b=b"you")), "within another wrapper"),
+        (a_zip(**{f"a{k}": b" " for k in range(1001)}), "holds 1001 files"),
+        (a_zip(**{f"a{k}": b" " * 2**20 for k in range(20)}), "swell to more"),
+    ],
+    ids=["no data", "nothing", "wrapped", "too many", "together too large"],
+)
+def test_a_zip_of_no_use_is_refused(packed: bytes, words: str) -> None:
+    with pytest.raises(FormatError, match=words):
+        formats.read_bytes(packed, "several.zip")
 
 
 @pytest.mark.parametrize("head", [b"\x1f\x8b\x08\x00", b"\x1f\x9d\x90\x41", b"BZh91AY&SY", b"PK\x03\x04", b"\x1f\x9d"])

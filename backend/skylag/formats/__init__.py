@@ -12,10 +12,10 @@ from collections.abc import Collection, Mapping
 from pathlib import Path
 from typing import Any
 
-from skylag.errors import FormatError
-from skylag.formats.joining import merge, thin
-from skylag.formats.wrappers import is_hatanaka, unwrap
-from skylag.tables import Reading
+from skylag.errors import FormatError, Refused
+from skylag.formats.joining import merge, thin, together
+from skylag.formats.wrappers import is_hatanaka, members, unwrap
+from skylag.tables import Ephemerides, Problem, Reading
 
 __all__ = ["fingerprint", "kind_of", "mark_of", "merge", "read", "read_bytes", "thin"]
 
@@ -29,6 +29,8 @@ PARSERS = {
     "indices": "indices",
 }
 
+_FEW_LINES, _SHORTEST_MEAN = 2**16, 10  # texts of more lines than this have longer lines than that in the mean
+
 _YEAR_FIRST = re.compile(rb"^(19|20)\d\d +\d{1,2} +\d{1,2} ")
 
 
@@ -40,7 +42,8 @@ def read(
 ) -> Reading:
     """The table a file holds, the problems met, and facts of its header.
 
-    path       a file of any known format, plain or wrapped (.gz, .Z, .bz2, .zip, Hatanaka)
+    path       a file of any known format, plain or wrapped (.gz, .Z, .bz2, .zip, Hatanaka); a zip may hold several
+               pieces of one receiver's observations, or several navigation files
     wanted     for observations: system letter -> code observables to keep, with the phases and strengths of their
                bands; None keeps all
     thin_to_s  for observations: keep the epochs on multiples of so many seconds
@@ -61,9 +64,19 @@ def read_bytes(
     short = Path(name).name
     if not packed[:1000].strip() and not packed.strip():
         raise FormatError(f"{short}: the file is empty; fetch it again", path=name, line=0)
+    pieces = members(packed, name)
+    if len(pieces) > 1:
+        del packed
+        return _read_members(pieces, name, wanted, thin_to_s)
     data, wrapping = unwrap(packed, name)
-    del packed
+    del packed, pieces
     kind = kind_of(data)
+    lines = 0 if kind == "observations" else data.count(b"\n")
+    if lines > max(_FEW_LINES, len(data) // _SHORTEST_MEAN):
+        raise FormatError(
+            f"{short}: nearly all of {lines} lines are empty or of a few characters; fetch it again",
+            path=name, line=0,
+        )  # fmt: skip
     if kind == "unknown":
         beginning = data[:60].split(b"\n")[0].decode("latin-1")
         raise FormatError(
@@ -75,6 +88,49 @@ def read_bytes(
     choices: dict[str, Any] = {"wanted": wanted, "thin_to_s": thin_to_s} if kind == "observations" else {}
     reading: Reading = parser.parse(data, name, **choices)
     return Reading(reading.table, (*wrapping, *reading.problems), {**reading.header, "kind": kind})
+
+
+def _read_members(
+    pieces: list[tuple[str, bytes, list[Problem]]],
+    name: str,
+    wanted: Mapping[str, Collection[str]] | None,
+    thin_to_s: float | None,
+) -> Reading:
+    """The files of a zip as one table: pieces of one receiver's observations, or else navigation files.
+
+    What is neither, or stands beside observations, is left out and told.
+    """
+    readings: list[Reading] = []
+    problems: list[Problem] = []
+    for member, data, trouble in sorted(pieces, key=lambda piece: piece[0]):
+        where = f"{name}/{member}"
+        problems += trouble
+        try:
+            if members(data, where)[1:]:
+                raise FormatError(f"{where}: a zip of several files within a zip", path=where, line=0)
+            readings.append(read_bytes(data, where, wanted=wanted, thin_to_s=thin_to_s))
+        except FormatError as error:
+            problems.append(Problem(where, int(error.details.get("line", 0)), error.message, "left the file out"))
+    kinds = {reading.header["kind"] for reading in readings}
+    kind = "observations" if "observations" in kinds else "navigation"
+    chosen = [reading for reading in readings if reading.header["kind"] == kind]
+    if not chosen:
+        raise FormatError(
+            f"{name}: of the {len(pieces)} files in the zip none holds observations or navigation data that can be "
+            "read; unpack it and give the files",
+            path=name, line=0,
+        )  # fmt: skip
+    for other in sorted(kinds - {kind}):
+        problems.append(Problem(name, 0, f"the zip holds {other} beside {kind}", "left out; unpack it to use both"))
+    for reading in chosen:
+        problems += reading.problems
+    header = {**chosen[0].header, "pieces": len(chosen)}
+    if kind == "navigation":
+        return Reading(together([r.table for r in chosen if isinstance(r.table, Ephemerides)]), tuple(problems), header)
+    try:
+        return Reading(merge(chosen), tuple(problems), header)
+    except Refused as error:
+        raise FormatError(f"{name}: {error.message}; unpack the zip and give the files", path=name, line=0) from error
 
 
 def kind_of(data: bytes) -> str:

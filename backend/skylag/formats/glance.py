@@ -19,6 +19,9 @@ from skylag.formats import kind_of, mark_of
 
 _PEEK = 65_536
 _DEEPEST = 4
+_PEEK_PACKED = 2**20  # of what lies in a zip: a block of bzip2 must be whole
+_DAMAGED = (OSError, ValueError, EOFError, RuntimeError, zlib.error, zipfile.BadZipFile)
+_MOST_MEMBERS = 100  # of a zip, that are looked into
 _INVENTED = b"INVENTED DATA"  # a comment in every observation file of the sample days
 
 
@@ -49,7 +52,7 @@ def glance(path: Path) -> Glance:
         return Glance("empty", mark, None)
     try:
         head = _head(packed)
-    except (OSError, ValueError, EOFError, zlib.error, zipfile.BadZipFile):
+    except _DAMAGED:
         return Glance("unknown", mark, None)
     kind = kind_of(head)
     observed = kind == "observations"
@@ -66,11 +69,29 @@ def _head(data: bytes) -> bytes:
         elif data[:2] == b"\x1f\x9d":
             data = _compress_head(data)
         elif data[:2] == b"PK":
-            with zipfile.ZipFile(io.BytesIO(data)) as folder, folder.open(folder.namelist()[0]) as member:
-                data = member.read(_PEEK)
+            data = _zip_head(data)
         else:
             break
     return data
+
+
+def _zip_head(data: bytes) -> bytes:
+    """The beginning of the file in a zip; of several, of the first of observations, else the first that is known."""
+    heads: list[bytes] = []
+    with zipfile.ZipFile(io.BytesIO(data)) as folder:
+        entries = [entry for entry in folder.infolist() if not entry.is_dir()]
+        for entry in entries[:_MOST_MEMBERS]:
+            with folder.open(entry) as member:
+                head = member.read(_PEEK_PACKED)
+            if len(entries) == 1:
+                return head
+            if head[:2] != b"PK":
+                with contextlib.suppress(*_DAMAGED):
+                    heads.append(_head(head))
+            if heads and kind_of(heads[-1]) == "observations":
+                return heads[-1]
+    known = [head for head in heads if kind_of(head) != "unknown"]
+    return (known or heads or [b""])[0]
 
 
 def _first_day(head: bytes) -> np.datetime64 | None:

@@ -1,5 +1,7 @@
 """Pieces of one receiver's observations made one: hours to days, overlaps once, thinned to a spacing.
 
+Navigation files are put together likewise.
+
 Never mixes receivers, never interpolates: an epoch is kept or it is not.
 """
 
@@ -8,7 +10,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from skylag.errors import NotEnough, Refused
-from skylag.tables import Bytes, Floats, Ints, Reading, Signals, Times
+from skylag.tables import Bytes, Ephemerides, Floats, Ints, Reading, Signals, Times
 
 # Epochs of two pieces that lie closer than this share of the spacing are one epoch (receiver clocks wander by up to
 # a millisecond, and by much more in old files).
@@ -155,3 +157,17 @@ def _common_times(series: Sequence[Times], interval_s: float) -> tuple[Times, li
     for rows, own in zip(reversed(into), reversed(series), strict=True):
         times[rows] = own
     return times, into
+
+
+def together(parts: Sequence[Ephemerides]) -> Ephemerides:
+    """The records of several navigation files; ionospheric coefficients of the first that tells them."""
+    names = ("satellites", "messages", "toe", "sent", "healthy", "accuracy_m", "kepler", "state", "channels",
+             "group_delays_s")  # fmt: skip
+    ionosphere: dict[str, tuple[float, ...]] = {}
+    for part in reversed(parts):
+        ionosphere.update(part.ionosphere)
+    rates = [np.zeros((len(part.toe), 2)) if part.rates is None else part.rates for part in parts]
+    return Ephemerides(
+        **{name: np.concatenate([getattr(part, name) for part in parts]) for name in names},
+        ionosphere=ionosphere, rates=np.concatenate(rates),
+    )  # fmt: skip

@@ -14,7 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from skylag.errors import FormatError
-from skylag.formats.rinex_layout import Problems
+from skylag.formats.rinex_layout import MOST_PROBLEMS, Problems
 from skylag.tables import Bools, Ephemerides, Floats, Ints, Reading, Times
 from skylag.timescales import BDT_BEHIND_GPS_S, utc_to_gps
 
@@ -42,6 +42,7 @@ _MORE_AT = {
     "CNV1": (29, -1, -1, -1, 32), "CNV2": (29, -1, -1, -1, 32), "CNV3": (25, -1, -1, -1, 28),
 }  # fmt: skip
 
+_TOO_FEW = "records with too few lines"  # what they are counted as once the list of problems is full
 _ALLOWED = np.zeros(256, dtype=bool)
 _ALLOWED[list(b"0123456789+-.Ee ")] = True
 
@@ -156,6 +157,7 @@ def _records(
     """First lines of the ephemeris records, with (lines in the record, satellite, system, message); checks lengths."""
     found: list[tuple[int, str, str, str]] = []  # line, satellite, system, message
     ionosphere: dict[str, tuple[float, ...]] = {}
+    told: set[tuple[str, str]] = set()  # ionospheric coefficients met, by system and message
     borders: list[int] = []
     if version < 4:
         for number in range(end, len(lines)):
@@ -180,6 +182,9 @@ def _records(
                 continue
             satellite = _satellite(words[2].encode("latin-1", "replace")[:3].ljust(3), "")
             if words[1] == "ION":
+                if (words[2][:1], words[3]) in told:
+                    continue
+                told.add((words[2][:1], words[3]))
                 _ion_record(lines, number, words[2][:1], words[3], ionosphere)
             elif words[1] == "EPH":
                 if satellite is None:
@@ -190,17 +195,21 @@ def _records(
     ends = np.searchsorted(np.array(borders), [entry[0] for entry in found], side="right")
     starts: list[int] = []
     records: list[tuple[int, str, str, str]] = []
-    for (number, satellite, system, message), after in zip(found, ends, strict=True):
+    short = 0
+    for (number, satellite, system, message), after in zip(found, ends.tolist(), strict=True):
         needed = _LINES["FDMA"] if system == "R" else _LINES.get(message, _LINES_OTHERWISE)
-        length = borders[min(int(after), len(borders) - 1)] - number
+        length = borders[min(after, len(borders) - 1)] - number
         if system in _SKIPPED:
             needed = 0
         if length < needed:
-            what = f"{satellite}: record has {length} lines, {needed} are needed"
-            problems.note(number + 1, what, kind="records with too few lines")
+            short += 1
+            if short <= MOST_PROBLEMS:
+                problems.note(number + 1, f"{satellite}: record has {length} lines, {needed} are needed", kind=_TOO_FEW)
             continue
         starts.append(number)
         records.append((length, satellite, system, message))
+    if short > MOST_PROBLEMS:
+        problems.more[_TOO_FEW] += short - MOST_PROBLEMS
     return starts, records, ionosphere
 
 

@@ -14,6 +14,8 @@ from skylag.tables import PreciseOrbits, Reading
 from skylag.timescales import BDT_BEHIND_GPS_S, utc_to_gps
 
 _SYSTEMS = "GRECJSIL"
+_SPARSEST = 40  # the dense arrays may take this many bytes per byte of text ...
+_SMALL = 64 * 2**20  # ... once they are larger than this
 _BAD_CLOCK = 999_999.0  # microseconds; this and above mean "none"
 
 
@@ -67,6 +69,13 @@ def parse(data: bytes, name: str) -> Reading:
         raise FormatError(f"{name}: no position behind any epoch; the file is cut or empty", path=name, line=len(lines))
     if not ended:
         problems.note(len(lines), "no EOF line; the file is cut", "what came before is used")
+    dense = len(set(names)) * len(epochs) * 32
+    if dense > max(_SMALL, _SPARSEST * len(data)):
+        raise FormatError(
+            f"{name}: {len(epochs)} epochs of {len(set(names))} satellites, nearly all without a position; no orbit file "
+            "is like that; fetch it again",
+            path=name, line=0,
+        )  # fmt: skip
     table = _table(np.array(epochs), np.array(rows), np.array(names), np.array(values), system)
     header = {"version": head[1], "time_system": system, "agency": head[56:60].strip()}
     return Reading(table, problems.all(), header)

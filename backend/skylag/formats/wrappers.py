@@ -23,8 +23,11 @@ from skylag.errors import FormatError
 from skylag.tables import Problem
 
 LARGEST_TEXT = 2 * 2**30  # bytes; a day of one-second data of five constellations is about half of it
-_SWELLS = 200  # times: text written by receivers shrinks 3 to 30 times, a trap a thousand times and more
-_HARMLESS = 64 * 2**20  # bytes, below which nobody asks how much it swelled
+_SWELLS = 100  # times: text written by receivers shrinks 3 to 30 times, a trap a thousand times and more
+_HARMLESS = 16 * 2**20  # bytes, below which nobody asks how much it swelled
+_AT_ONCE = 64 * 2**20  # bytes taken out of a wrapper at once
+_MOST_MEMBERS = 1000  # of a zip: a day of pieces of fifteen minutes has 96
+_ZIP_MARKS = (b"PK\x03\x04", b"PK\x05\x06")
 _DEEPEST = 4  # wrappers within wrappers
 
 
@@ -38,7 +41,7 @@ class Unwrapped(NamedTuple):
 def unwrap(data: bytes, name: str) -> Unwrapped:
     """The text within all wrappers.
 
-    Raises FormatError for a wrapper that holds nothing, more than one file, or more than can be real.
+    Raises FormatError for a wrapper that holds nothing, more than can be real, or more than one file (`members` first).
     """
     problems: list[Problem] = []
     for _ in range(_DEEPEST):
@@ -48,7 +51,7 @@ def unwrap(data: bytes, name: str) -> Unwrapped:
             data = _compress(data, name)
         elif data[:3] == b"BZh":
             data = _bzip2(data, name, problems)
-        elif data[:4] in (b"PK\x03\x04", b"PK\x05\x06"):
+        elif data[:4] in _ZIP_MARKS:
             data = _zip(data, name, problems)
         elif is_hatanaka(data):
             return Unwrapped(_hatanaka(data, name, problems), problems)
@@ -85,7 +88,7 @@ def _gzip(data: bytes, name: str, problems: list[Problem]) -> bytes:
         waiting = rest
         try:
             while not member.eof:
-                part = member.decompress(waiting, _HARMLESS)
+                part = member.decompress(waiting, _AT_ONCE)
                 waiting = member.unconsumed_tail
                 parts.append(part)
                 size += len(part)
@@ -110,7 +113,7 @@ def _bzip2(data: bytes, name: str, problems: list[Problem]) -> bytes:
         waiting = rest
         try:
             while not member.eof:
-                part = member.decompress(waiting, _HARMLESS)
+                part = member.decompress(waiting, _AT_ONCE)
                 waiting = b""
                 parts.append(part)
                 size += len(part)
@@ -152,28 +155,56 @@ def _compress(data: bytes, name: str) -> bytes:
     return out.getvalue()
 
 
-def _zip(data: bytes, name: str, problems: list[Problem]) -> bytes:
+def members(data: bytes, name: str) -> list[tuple[str, bytes, list[Problem]]]:
+    """The files in a zip, with their names within it and what was wrong with them; none where it is no zip.
+
+    All of them together may swell no more than one file may.  Raises FormatError for a zip that holds nothing, more
+    than can be real, or cannot be unpacked.
+    """
+    if data[:4] not in _ZIP_MARKS:
+        return []
+    out: list[tuple[str, bytes, list[Problem]]] = []
+    size = 0
     try:
         with zipfile.ZipFile(io.BytesIO(data)) as folder:
-            members = [entry for entry in folder.infolist() if not entry.is_dir()]
-            if len(members) != 1:
+            entries = [entry for entry in folder.infolist() if not entry.is_dir()]
+            if not 0 < len(entries) <= _MOST_MEMBERS:
                 raise FormatError(
-                    f"{name}: the zip file holds {len(members)} files, one is wanted; unpack it and give the files",
+                    f"{name}: the zip file holds {len(entries)} files; from 1 to {_MOST_MEMBERS} can be read",
                     path=name, line=0,
                 )  # fmt: skip
-            parts: list[bytes] = []
-            size = 0
-            with folder.open(members[0]) as member:
-                try:
-                    while part := member.read(_HARMLESS // 4):
-                        parts.append(part)
-                        size += len(part)
-                        _check_size(size, len(data), name)
-                except (zipfile.BadZipFile, zlib.error, EOFError):
-                    _cut(name, "zip file", size, problems)
-            return b"".join(parts)
-    except (zipfile.BadZipFile, zlib.error, RuntimeError, OSError, ValueError) as error:
+            for entry in entries:
+                problems: list[Problem] = []
+                where = name if len(entries) == 1 else f"{name}/{entry.filename}"
+                parts: list[bytes] = []
+                got = 0
+                with folder.open(entry) as member:
+                    try:
+                        while part := member.read(_AT_ONCE // 16):
+                            parts.append(part)
+                            got += len(part)
+                            _check_size(size + got, len(data), name)
+                    except (zipfile.BadZipFile, zlib.error, EOFError):
+                        if len(entries) == 1 or got:
+                            _cut(where, "zip file", got, problems)
+                        else:
+                            problems.append(Problem(where, 0, "cannot be unpacked", "left out"))
+                size += got
+                out.append((entry.filename, b"".join(parts), problems))
+    except (zipfile.BadZipFile, zlib.error, RuntimeError, NotImplementedError, OSError, ValueError) as error:
         raise FormatError(f"{name}: the zip file cannot be unpacked: {error}", path=name, line=0) from error
+    return out
+
+
+def _zip(data: bytes, name: str, problems: list[Problem]) -> bytes:
+    found = members(data, name)
+    if len(found) != 1:
+        raise FormatError(
+            f"{name}: a zip file of {len(found)} files within another wrapper; unpack it and give the files",
+            path=name, line=0,
+        )  # fmt: skip
+    problems += found[0][2]
+    return found[0][1]
 
 
 def _hatanaka(data: bytes, name: str, problems: list[Problem]) -> bytes:
