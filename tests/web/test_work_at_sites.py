@@ -43,7 +43,7 @@ def test_approaches(client: TestClient) -> None:
 
 def test_ground_and_the_front_that_comes(client: TestClient) -> None:
     content = client.get(f"{BASE}/ground", params={**SITE, "time": "2031-05-11T04:30:00Z"}).json()
-    assert set(content["minutes"]) == {"nominal", "announced", "threat", "unseen"}
+    assert set(content["minutes"]) == {"within", "nominal", "announced", "threat", "unseen"}
     coming = content["next_front"]
     assert coming is None or coming["expected_utc"] > "2031-05-11T04:30:00Z"
     assert client.get(f"{BASE}/ground", params=SITE).json()["next_front"] is None
@@ -91,13 +91,81 @@ def test_the_style_of_sheets(client: TestClient) -> None:
     assert "@media print" in client.get("/api/sheet.css").text
 
 
+AREA = "-40.5,146;-40.5,147.5;-41.6,147.5;-41.6,146"
+
+
+def test_routes_and_areas(client: TestClient) -> None:
+    """The more of the map a job touches, the fewer epochs it can work; each touched cell is told."""
+    told = {}
+    for shape in ("points", "route", "area"):
+        content = client.get(f"{BASE}/survey", params={"places": AREA, "shape": shape, "method": "dgnss",
+                                                       "horizontal_mm": 150, "vertical_mm": 250}).json()  # fmt: skip
+        told[shape] = (len(content["job"]["places"]), content["verdict"].count("work"))
+        assert content["job"]["shape"] == shape
+        assert content["job"]["name"].endswith({"points": "and 3 more"}.get(shape, "from -40.5, 146"))
+    cells, good = zip(*told.values(), strict=True)
+    assert cells == (4, 9, 12)  # corners; three sides of a ring; rows 40.5 to 41.5, columns 146 to 147.5
+    assert list(good) == sorted(good, reverse=True)
+    assert good[2] > 0
+    one = client.get(f"{BASE}/survey", params={"places": "-41,147"}).json()
+    assert one["job"]["name"] == "-41, 147"
+    assert any("cells of the map" in text for text in content["assumptions"])
+    assert not any("cells of the map" in text for text in one["assumptions"])
+
+
+def test_reference_stations_in_use(client: TestClient) -> None:
+    """Named stations set the baseline; for a network they are what is interpolated between."""
+    near = client.get(f"{BASE}/survey", params={**SITE, "references": "GULL"}).json()
+    assert near["job"]["baseline_km"] == pytest.approx(59.7, abs=0.5)  # 41.1 S 147.1 E to 41.2 S 146.4 E
+    both = client.get(f"{BASE}/survey", params={**SITE, "references": "gull; -41.15,147.1"}).json()
+    assert both["job"]["baseline_km"] == pytest.approx(5.6, abs=0.1)
+    network = {**SITE, "method": "network"}
+    some = client.get(f"{BASE}/survey", params={**network, "references": "GULL;FERN;HULL;IRON"}).json()
+    every = client.get(f"{BASE}/survey", params=network).json()
+    assert (len(some["job"]["references"]), len(every["job"]["references"])) == (4, 10)
+    assert some["differential_95"] != every["differential_95"]
+
+
+@pytest.mark.parametrize("method", ["static", "rtk", "network", "dgnss"])
+def test_every_method(client: TestClient, method: str) -> None:
+    content = client.get(f"{BASE}/survey", params={**SITE, "method": method}).json()
+    assert content["job"]["method"] == method
+    assert any(known is not None for known in content["horizontal_95"])
+    assert all(known is None for known in content["fixing"]) == (method == "dgnss")
+    sheet = client.get(f"{BASE}/sheet", params={**SITE, "method": method}).text
+    assert f"Survey ({method}, " in sheet
+
+
+def test_what_the_service_is_assumed_to_send(client: TestClient) -> None:
+    """A looser bound of clock and orbit makes wider levels, and each figure is told with the answer."""
+    one = client.get(f"{BASE}/approaches", params=SITE).json()
+    two = client.get(f"{BASE}/approaches", params={**SITE, "correction_m": 15, "noise_m": 0.5, "lowest_deg": 10}).json()
+    for text in ("bounded by 15 m", "divergence 0.5 m", "above 10 degrees"):
+        assert any(text in sentence for sentence in two["assumptions"])
+        assert not any(text in sentence for sentence in one["assumptions"])
+    for before, after in zip(one["sites"][0]["vertical_m"], two["sites"][0]["vertical_m"], strict=True):
+        assert after is None or after > before
+    sheet = client.get(f"{BASE}/sheet", params={**SITE, "correction_m": 15, "levels": "APV-II"}).text
+    assert "bounded by 15 m" in sheet
+    assert "APV-II" in sheet
+    assert "LPV-200" not in sheet
+
+
 @pytest.mark.parametrize(
     ("route", "asked", "word"),
     [
         ("survey", {"method": "magic"}, "method"), ("survey", {"baseline_km": 0}, "baseline_km"),
         ("survey", {"hours": "9to5"}, "hours"), ("approaches", {"levels": "CAT-IX"}, "service level"),
         ("approaches", {"correction_m": 2.2}, "no step"), ("ground", {"sigma_mm_per_km": 99}, "sigma"),
-        ("survey", {"site": "Atlantis"}, "no site"),
+        ("survey", {"site": "Atlantis"}, "no site"), ("survey", {"site": ""}, "no place is named"),
+        ("survey", {"places": "-41;147"}, "is no place"), ("survey", {"places": "-41,147", "shape": "area"}, "needs 3"),
+        ("survey", {"shape": "star"}, "not known"), ("survey", {"references": "NONE"}, "no receiver"),
+        ("survey", {"references": "-20,147"}, "baseline_km"), ("survey", {"fixing_chance": "nan"}, "fixing_chance"),
+        ("survey", {"vertical_mm": "nan"}, "vertical_mm"),
+        ("survey", {"method": "network", "references": "GULL"}, "three"),
+        ("approaches", {"systems": "X"}, "systems"), ("approaches", {"noise_m": 99}, "noise_m"),
+        ("ground", {"speed_m_s": 0}, "speed_m_s"), ("sheet", {"correction_m": 2.2}, "no step"),
+        ("sheet.pdf", {"places": "x"}, "is no place"),
     ],
 )  # fmt: skip
 def test_wrong_questions(client: TestClient, route: str, asked: dict[str, object], word: str) -> None:

@@ -61,6 +61,7 @@ USUAL_LEVELS = ("NPA", "APV-I", "LPV-200")
 # Vertical delay sigma [m] a receiver assumes without a grid, by absolute geomagnetic latitude up to 20, up to 55, above
 # (RTCA DO-229, appendix A; from memory).
 WITHOUT_GRID_M = ((20.0, 9.0), (55.0, 4.5), (90.0, 6.0))
+_SYSTEMS = "GRECJ"  # letters of RINEX
 # Pole of the centred dipole of 2020, from IGRF coefficients.
 _POLE_LAT, _POLE_LON = 80.589, -72.680
 
@@ -88,12 +89,19 @@ class ServiceChoices:
             raise Refused(
                 f"correction_m: {self.correction_m:g} m is no step of the table; choose from "
                 + ", ".join(f"{step:g}" for step in protection.CORRECTION_M),
-                name="correction_m", value=self.correction_m, allowed=protection.CORRECTION_M,
+                name="correction_m", value=str(self.correction_m), allowed=protection.CORRECTION_M,
             )  # fmt: skip
-        if not 5.0 <= self.mask_deg <= 40.0:
+        for name, low, high in (("mask_deg", 5.0, 40.0), ("noise_m", 0.05, 5.0), ("usual_grid_m", 0.3, 45.0)):
+            value = getattr(self, name)
+            if not low <= value <= high:
+                raise Refused(
+                    f"{name}: {value:g} is outside {low:g} to {high:g}", name=name, value=str(value),
+                    allowed=f"{low:g} to {high:g}",
+                )  # fmt: skip
+        if not self.systems or set(self.systems) - set(_SYSTEMS):
             raise Refused(
-                f"mask_deg: {self.mask_deg:g} is outside 5 to 40 degrees", name="mask_deg", value=self.mask_deg,
-                allowed="5 to 40",
+                f"systems: {self.systems!r} must be letters of {_SYSTEMS}, like G or GE", name="systems",
+                value=self.systems, allowed=_SYSTEMS,
             )  # fmt: skip
 
     @property

@@ -10,6 +10,7 @@ import hashlib
 import threading
 from collections import OrderedDict
 from collections.abc import Sequence
+from dataclasses import dataclass
 from datetime import datetime, timedelta
 from datetime import time as clock
 from functools import cached_property
@@ -27,6 +28,7 @@ from skylag.impact import (
     correction_grid,
     ground_augmentation,
     satellite_augmentation,
+    shapes,
     single_frequency,
     sky,
     survey,
@@ -37,10 +39,68 @@ from skylag.impact.satellite_augmentation import Availability, ServiceChoices
 from skylag.impact.single_frequency import LeftOver
 from skylag.impact.sky import Sky
 from skylag.impact.survey import Advice, Explanation, Job
+from skylag.ionosphere.covariance import plane_km
 from skylag.ionosphere.geometry import geodetic
 from skylag.tables import Fields, Flag, Samples, Site, Times
 
 Span = tuple[np.datetime64, np.datetime64]
+
+
+@dataclass(frozen=True)
+class AskedJob:
+    """A survey job as a person asks for it, the same words over HTTP and on the command line.
+
+    site        of the region; places: others instead, as `lat,lon;lat,lon`; shape: what the places mean (points, route,
+                area)
+    method, baseline_km  as in `survey.Job`; references: stations in use, names of the network's receivers or
+                `lat,lon`, with `;` between: for the method network all receivers without, for others the baseline is
+                the longest way to the nearest of them
+    horizontal_mm, vertical_mm  tolerances at 95 %; hours: local, like 07:00-16:30
+    the rest    as in `survey.Job`
+    """
+
+    site: str = ""
+    places: str = ""
+    shape: str = "points"
+    method: str = "rtk"
+    baseline_km: float = 10.0
+    references: str = ""
+    horizontal_mm: float = 30.0
+    vertical_mm: float = 50.0
+    hours: str = ""
+    session_min: float = 60.0
+    least_min: float = 15.0
+    mask_deg: float = 15.0
+    least_satellites: int = 5
+    most_dilution: float = 6.0
+    fixing_chance: float = 0.1
+
+
+@dataclass(frozen=True)
+class AskedService:
+    """What the region's satellite-based service is assumed to send, and which of its levels are asked for.
+
+    levels  names with commas between, the usual ones without; systems: letters of the satellites augmented; the rest
+    as in `satellite_augmentation.ServiceChoices`
+    """
+
+    levels: str = ""
+    systems: str = "G"
+    lowest_deg: float = 5.0
+    correction_m: float = 3.0
+    noise_m: float = 0.36
+    usual_grid_m: float = 3.0
+
+    @property
+    def choices(self) -> ServiceChoices:
+        """Raises Refused where one is outside its range."""
+        return ServiceChoices(self.systems, self.lowest_deg, self.correction_m, self.noise_m, self.usual_grid_m)
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Of the levels."""
+        found = tuple(dict.fromkeys(part.strip() for part in self.levels.split(",") if part.strip()))
+        return found or satellite_augmentation.USUAL_LEVELS
 
 
 class DayAdvice:
@@ -129,6 +189,50 @@ class DayAdvice:
             f"{self.record.region.name} has no site {name}; it has {', '.join(known) or 'none'}", what=name,
             nearest=known,
         )  # fmt: skip
+
+    def job(self, asked: AskedJob) -> Job:
+        """The job that is asked for.  Raises Missing for a site or receiver that is not there, Refused for the rest."""
+        if not asked.places.strip() and not asked.site:
+            raise Refused(
+                "no place is named; name a site of the region, or places like -40.1,146.2;-40.3,146.5", name="site",
+                value="", allowed="a site, or places",
+            )  # fmt: skip
+        record = self.record
+        points = places_in(asked.places, "places")
+        site = self.site(asked.site) if not points else None
+        if site is not None:
+            points = ((site.lat, site.lon),)
+        node = (float(record.lats[0]), float(record.lons[0]))
+        places = shapes.places_of(points, asked.shape, record.region.step_deg, node)
+        references = self._references(asked.references)
+        baseline_km = asked.baseline_km
+        if references and asked.method != "network":
+            lat, lon = np.array(references, dtype=np.float64).T
+            ways = [np.hypot(*plane_km(lat, lon, place)).min() for place in places]
+            baseline_km = float(np.round(max(ways), 1)) or 0.1
+        elif asked.method == "network":
+            references = references or tuple(self.receiver_places())
+        return Job(
+            asked.site or name_of(points, asked.shape), places, asked.method, baseline_km, references,
+            asked.horizontal_mm, asked.vertical_mm, self.local_hours(asked.hours), asked.session_min, asked.least_min,
+            asked.mask_deg, asked.least_satellites, asked.most_dilution, asked.fixing_chance, asked.shape,
+        )  # fmt: skip
+
+    def _references(self, text: str) -> tuple[tuple[float, float], ...]:
+        """Stations by receiver name or place."""
+        parts = [part.strip() for part in text.split(";") if part.strip()]
+        named = [part for part in parts if "," not in part]
+        names = [one.name.upper() for one in self.record.receivers]
+        known = dict(zip(names, self.receiver_places(), strict=True))
+        for name in named:
+            if name.upper() not in known:
+                raise Missing(
+                    f"{self.record.region.name} has no receiver {name}; it has {', '.join(known)}", what=name,
+                    nearest=list(known),
+                )  # fmt: skip
+        return tuple(
+            known[part.upper()] if part in named else places_in(part, "references")[0] for part in parts
+        )
 
     def receiver_places(self) -> list[tuple[float, float]]:
         """Latitude and longitude of the network's receivers [deg]."""
@@ -289,6 +393,37 @@ def local_span(text: str, day: str, timezone: str) -> Span:
     utc = [np.datetime64(int(moment.timestamp()) * 10**9, "ns") for moment in (first, last)]
     gps = timescales.utc_to_gps(np.array(utc))
     return np.datetime64(gps[0], "ns"), np.datetime64(gps[1], "ns")
+
+
+def places_in(text: str, name: str) -> tuple[tuple[float, float], ...]:
+    """Places written as `lat,lon;lat,lon`.  Raises Refused where one cannot be read or lies nowhere."""
+    found = []
+    for part in text.split(";"):
+        if not part.strip():
+            continue
+        try:
+            lat, lon = (float(word) for word in part.split(","))
+        except ValueError:
+            lat = lon = float("nan")
+        if not (-90.0 <= lat <= 90.0 and -180.0 <= lon <= 360.0):
+            raise Refused(
+                f"{name}: {part.strip()!r} is no place; write latitude and longitude in degrees like -40.1,146.2, "
+                "and ; between places",
+                name=name, value=part.strip(), allowed="-90 to 90, -180 to 360",
+            )  # fmt: skip
+        found.append((lat, lon))
+    return tuple(found)
+
+
+def name_of(points: Sequence[tuple[float, float]], shape: str = "points") -> str:
+    """What to call places that are no site."""
+    lat, lon = points[0]
+    first = f"{lat:g}, {lon:g}"
+    if len(points) == 1:
+        return first
+    if shape == "points":
+        return f"{first} and {len(points) - 1} more"
+    return f"{shape} of {len(points)} points from {first}"
 
 
 class Desk:

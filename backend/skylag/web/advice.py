@@ -1,19 +1,21 @@
 """Routes about what to beware of: flags, the states of sites, and what a day means for work at a site.
 
-A question about work names a site of the region; sizes have sensible defaults, which the answer tells.
+A question about work names a site of the region or places; sizes have sensible defaults, which the answer tells.
 """
 
 import threading
+from typing import Annotated
 
-from fastapi import APIRouter, Request
+from fastapi import APIRouter, Depends, Request
 from fastapi.responses import Response
 
 from skylag.archive import Archive
 from skylag.formats import calendar, sheet
 from skylag.impact.ground_augmentation import StationChoices, next_front
-from skylag.impact.satellite_augmentation import USUAL_LEVELS, Availability, ServiceChoices
-from skylag.impact.survey import Advice, Job
-from skylag.jobs.advising import DayAdvice, Desk
+from skylag.impact.satellite_augmentation import Availability
+from skylag.impact.survey import Advice
+from skylag.jobs.advising import AskedJob, AskedService, DayAdvice, Desk
+from skylag.tables import Site
 from skylag.web import asking, payloads, report
 
 router = APIRouter()
@@ -66,96 +68,93 @@ def _day(request: Request, region: str, day: str, version: int | None) -> DayAdv
     return _desk(request).day(region, asking.day(day), version)
 
 
-def _survey(
-    desk: Desk, kept: DayAdvice, site: str, method: str, baseline_km: float, horizontal_mm: float, vertical_mm: float,
-    hours: str,
-) -> Advice:  # fmt: skip
-    place = kept.site(site)
-    references = tuple(kept.receiver_places()) if method == "network" else ()
-    job = Job(
-        place.name, ((place.lat, place.lon),), method, baseline_km, references, horizontal_mm, vertical_mm,
-        kept.local_hours(hours),
-    )  # fmt: skip
-    return desk.survey(kept, job)
+def _asked(request: Request, kept: DayAdvice, asked: AskedJob) -> Advice:
+    return _desk(request).survey(kept, kept.job(asked))
 
 
-def _approaches(kept: DayAdvice, site: str, levels: str, correction_m: float) -> Availability:
+def _approaches(kept: DayAdvice, site: str, service: AskedService) -> Availability:
     sites = [kept.site(site)] if site else [one for one in kept.record.region.sites if one.kind == "aerodrome"]
-    names = tuple(part.strip() for part in levels.split(",") if part.strip()) or USUAL_LEVELS
-    return kept.approaches(sites, ServiceChoices(correction_m=correction_m), names)
+    return kept.approaches(sites, service.choices, service.names)
 
 
 def _name(kept: DayAdvice, site: str, what: str) -> str:
     return f"{site or kept.record.region.name}-{kept.record.head.day}-{what}"
 
 
-@router.get("/api/days/{region}/{day}/survey", summary="Survey windows at a site")
+@router.get("/api/days/{region}/{day}/survey", summary="Survey windows of a job")
 def survey_windows(
-    request: Request, region: str, day: str, site: str, method: str = "rtk", baseline_km: float = 10.0,
-    horizontal_mm: float = 30.0, vertical_mm: float = 50.0, hours: str = "", version: int | None = None,
-) -> Response:  # fmt: skip
-    """Errors, verdicts and windows of a job; method static, rtk, network or dgnss; hours local, like 07:00-16:30."""
+    request: Request, region: str, day: str, asked: Annotated[AskedJob, Depends()], version: int | None = None
+) -> Response:
+    """Errors, verdicts and windows at a site, at places, on a route or over an area.
+
+    places are written `lat,lon;lat,lon`, shape is points, route or area; method static, rtk, network or dgnss;
+    references are names of receivers or `lat,lon`, with `;` between; hours are local, like 07:00-16:30
+    """
     kept = _day(request, region, day, version)
-    found = _survey(_desk(request), kept, site, method, baseline_km, horizontal_mm, vertical_mm, hours)
-    return payloads.reply(payloads.survey(found))
+    return payloads.reply(payloads.survey(_asked(request, kept, asked)))
 
 
 @router.get("/api/days/{region}/{day}/survey.ics", summary="Survey windows as a calendar")
 def survey_calendar(
-    request: Request, region: str, day: str, site: str, method: str = "rtk", baseline_km: float = 10.0,
-    horizontal_mm: float = 30.0, vertical_mm: float = 50.0, hours: str = "", version: int | None = None,
-) -> Response:  # fmt: skip
+    request: Request, region: str, day: str, asked: Annotated[AskedJob, Depends()], version: int | None = None
+) -> Response:
     """The same windows as calendar entries (RFC 5545)."""
     kept = _day(request, region, day, version)
-    found = _survey(_desk(request), kept, site, method, baseline_km, horizontal_mm, vertical_mm, hours)
-    text = calendar.to_ics(report.survey_entries(found), f"Survey at {site}", kept.record.head.saved_at)
-    return payloads.file(text.encode("utf-8"), _name(kept, site, "survey.ics"), _CALENDAR)
+    found = _asked(request, kept, asked)
+    text = calendar.to_ics(report.survey_entries(found), f"Survey at {found.job.name}", kept.record.head.saved_at)
+    return payloads.file(text.encode("utf-8"), _name(kept, found.job.name, "survey.ics"), _CALENDAR)
 
 
 @router.get("/api/days/{region}/{day}/survey/why", summary="Was it the ionosphere")
 def survey_why(
-    request: Request, region: str, day: str, site: str, time: str, method: str = "rtk", baseline_km: float = 10.0,
+    request: Request, region: str, day: str, time: str, asked: Annotated[AskedJob, Depends()],
     version: int | None = None,
 ) -> Response:  # fmt: skip
-    """For a UTC instant at which fixing failed: verdict and evidence."""
+    """For a UTC instant at which fixing failed: verdict and evidence, for the job as it was."""
     kept = _day(request, region, day, version)
-    place = kept.site(site)
-    references = tuple(kept.receiver_places()) if method == "network" else ()
-    job = Job(place.name, ((place.lat, place.lon),), method, baseline_km, references)
-    return payloads.reply(payloads.explanation(kept.explain(job, asking.instant(time, "time"))))
+    return payloads.reply(payloads.explanation(kept.explain(kept.job(asked), asking.instant(time, "time"))))
 
 
 @router.get("/api/days/{region}/{day}/approaches", summary="Availability of approaches")
 def approaches(
-    request: Request, region: str, day: str, site: str = "", levels: str = "", correction_m: float = 3.0,
+    request: Request, region: str, day: str, service: Annotated[AskedService, Depends()], site: str = "",
     version: int | None = None,
 ) -> Response:  # fmt: skip
-    """Protection levels, availability, outages with causes, of a site or of all aerodromes; some seconds at first."""
+    """Protection levels, availability, outages with causes, of a site or of all aerodromes; some seconds at first.
+
+    levels with commas between; correction_m is the bound of clock and orbit corrections that the service is taken to
+    send (a step of the published table), systems the satellites it augments, lowest_deg the aircraft's mask, noise_m
+    its receiver; usual_grid_m parts outages of geometry from those of the ionosphere
+    """
     kept = _day(request, region, day, version)
-    return payloads.reply(payloads.approaches(_approaches(kept, site, levels, correction_m)))
+    return payloads.reply(payloads.approaches(_approaches(kept, site, service)))
 
 
 @router.get("/api/days/{region}/{day}/approaches.ics", summary="Outages of approaches as a calendar")
 def approaches_calendar(
-    request: Request, region: str, day: str, site: str = "", levels: str = "", correction_m: float = 3.0,
+    request: Request, region: str, day: str, service: Annotated[AskedService, Depends()], site: str = "",
     version: int | None = None,
 ) -> Response:  # fmt: skip
     """The same outages as calendar entries (RFC 5545)."""
     kept = _day(request, region, day, version)
-    found = _approaches(kept, site, levels, correction_m)
+    found = _approaches(kept, site, service)
     text = calendar.to_ics(report.approach_entries(found), "Outages of approaches", kept.record.head.saved_at)
     return payloads.file(text.encode("utf-8"), _name(kept, site, "approaches.ics"), _CALENDAR)
 
 
 @router.get("/api/days/{region}/{day}/ground", summary="Ground-based augmentation at a site")
 def ground(
-    request: Request, region: str, day: str, site: str, sigma_mm_per_km: float = 4.0, time: str = "",
+    request: Request, region: str, day: str, site: str, station: Annotated[StationChoices, Depends()], time: str = "",
     version: int | None = None,
 ) -> Response:  # fmt: skip
-    """The slope against the station's assumptions; with a UTC instant also the front that comes next."""
+    """The slope against the station's assumptions; with a UTC instant also the front that comes next.
+
+    sigma_mm_per_km is the spread that the station announces; distance_km, speed_m_s, smoothing_s and lowest_deg are
+    those of the aircraft
+    """
     kept = _day(request, region, day, version)
     place = kept.site(site)
-    found = kept.station(place, StationChoices(sigma_mm_per_km=sigma_mm_per_km))
+    found = kept.station(place, station)
     coming = next_front(place, kept.flags, asking.instant(time, "time")) if time else None
     return payloads.reply(payloads.station(found, coming))
 
@@ -167,21 +166,36 @@ def broadcast_model(request: Request, region: str, day: str, site: str, version:
     return payloads.reply(payloads.broadcast_model(kept.broadcast_model(kept.site(site))))
 
 
+def _sheet(
+    request: Request, kept: DayAdvice, asked: AskedJob, service: AskedService
+) -> tuple[str, list[sheet.Block]]:
+    found = _asked(request, kept, asked)
+    lat, lon = found.job.places[0]
+    site = Site(found.job.name, lat, lon, "job") if asked.places.strip() else kept.site(asked.site)
+    return report.of_site(kept, site, found, service.choices, service.names)
+
+
 @router.get("/api/days/{region}/{day}/sheet", summary="Sheet of a site and day")
-def site_sheet(request: Request, region: str, day: str, site: str, version: int | None = None) -> Response:
-    """One page to print: verdict, chart, evidence, assumptions, cautions."""
+def site_sheet(
+    request: Request, region: str, day: str, asked: Annotated[AskedJob, Depends()],
+    service: Annotated[AskedService, Depends()], version: int | None = None,
+) -> Response:  # fmt: skip
+    """One page to print: verdict, chart, evidence, assumptions, cautions; for a job as in `survey`."""
     kept = _day(request, region, day, version)
-    title, blocks = report.of_site(kept, kept.site(site))
+    title, blocks = _sheet(request, kept, asked, service)
     return payloads.page(sheet.to_html(title, blocks, "/api/sheet.css"))
 
 
 @router.get("/api/days/{region}/{day}/sheet.pdf", summary="Sheet of a site and day as PDF")
-def site_sheet_pdf(request: Request, region: str, day: str, site: str, version: int | None = None) -> Response:
+def site_sheet_pdf(
+    request: Request, region: str, day: str, asked: Annotated[AskedJob, Depends()],
+    service: Annotated[AskedService, Depends()], version: int | None = None,
+) -> Response:  # fmt: skip
     """The same as PDF."""
     kept = _day(request, region, day, version)
-    title, blocks = report.of_site(kept, kept.site(site))
+    title, blocks = _sheet(request, kept, asked, service)
     content = sheet.to_pdf(title, blocks, kept.record.head.saved_at)
-    return payloads.file(content, _name(kept, site, "sheet.pdf"), "application/pdf")
+    return payloads.file(content, _name(kept, asked.site or "places", "sheet.pdf"), "application/pdf")
 
 
 @router.get("/api/sheet.css", summary="Style of sheets", include_in_schema=False)

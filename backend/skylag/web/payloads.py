@@ -525,7 +525,9 @@ def survey(advice: Advice) -> dict[str, Any]:
     job = advice.job
     return {
         "job": {
-            "name": job.name, "places": [list(place) for place in job.places], "method": job.method,
+            "name": job.name, "shape": job.shape, "places": [list(place) for place in job.places],
+            "method": job.method, "references": [list(place) for place in job.references],
+            "session_min": job.session_min, "least_min": job.least_min,
             "baseline_km": job.baseline_km, "horizontal_mm": job.horizontal_mm, "vertical_mm": job.vertical_mm,
             "mask_deg": job.mask_deg, "least_satellites": job.least_satellites, "most_dilution": job.most_dilution,
             "fixing_chance": job.fixing_chance,

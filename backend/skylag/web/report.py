@@ -16,7 +16,7 @@ from skylag.errors import Missing, NotEnough
 from skylag.formats.calendar import Entry
 from skylag.formats.sheet import Block, DayChart, Heading, Sentence, Table
 from skylag.impact.ground_augmentation import StationDay
-from skylag.impact.satellite_augmentation import Availability, Outage, ServiceChoices
+from skylag.impact.satellite_augmentation import USUAL_LEVELS, Availability, Outage, ServiceChoices
 from skylag.impact.survey import AVOID, NOT_SEEN, WORK, Advice, Job, Window, touches
 from skylag.jobs.advising import DayAdvice
 from skylag.tables import Site
@@ -63,7 +63,8 @@ class Clock:
 
 
 def of_site(
-    day: DayAdvice, site: Site, advice: Advice | None = None, choices: ServiceChoices | None = None
+    day: DayAdvice, site: Site, advice: Advice | None = None, choices: ServiceChoices | None = None,
+    levels: Sequence[str] = USUAL_LEVELS,
 ) -> tuple[str, list[Block]]:
     """Title and blocks of a site's sheet: its survey job (a usual one without), and for an aerodrome its approaches."""
     record = day.record
@@ -75,7 +76,7 @@ def of_site(
     if site.kind == "aerodrome":
         station = day.station(site)
         try:
-            approaches = day.approaches([site], choices)
+            approaches = day.approaches([site], choices, levels)
         except NotEnough as trouble:
             missing = trouble.message
     title = f"{site.name}, {record.head.day}"
