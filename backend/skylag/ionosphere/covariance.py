@@ -56,6 +56,11 @@ class Epoch:
         matrix[np.diag_indices_from(matrix)] += self.own**2 + self.arc**2
         return np.asarray(matrix)
 
+    def bias_variance(self, covariance: Floats) -> Floats:
+        """What the biases give to the variance of each ray [TECU^2]."""
+        a, b = self.rows[:, 0], self.rows[:, 1]
+        return np.asarray(self.factor**2 * (covariance[a, a] + covariance[b, b] + 2.0 * covariance[a, b]))
+
     def distances(self) -> Floats:
         """Distances [km] between the pierce points."""
         return np.asarray(np.sqrt((self.x[:, None] - self.x) ** 2 + (self.y[:, None] - self.y) ** 2))

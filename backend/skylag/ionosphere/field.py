@@ -56,7 +56,7 @@ class FieldChoices:
     place_sigma_km  how far from its pierce point the content of a ray may belong: 50 km of height, as in
                     AdjustmentChoices, seen at 45 degrees
     fade_km         so far beyond what a ray carries, the field is the background alone
-    widen_km        sigmas are widened where the rays within about this distance fit worse than they should
+    widen_km        sigmas are brought to how well the rays within about this distance agree (`kriging.Surroundings`)
     """
 
     minimum_elevation: float = 15.0

@@ -22,6 +22,9 @@ from skylag.tables import Floats, Ints
 # Places at a time: five matrices of places by rays must stay in the cache of a processor (measured with 216 rays: 1681
 # at a time took 1.5 times as long as 200 or 400).
 _PLACES_AT_A_TIME = 256
+_WITHIN = 1.959964  # 95 % of a normal error lie within so many sigmas
+_MEDIAN_OF_SQUARE = 0.4549  # of a unit normal: the median of chi-square with one degree of freedom
+_ENOUGH_TO_TELL = 10  # rays from which the median of a region is worth something
 
 
 @dataclass(frozen=True)
@@ -31,7 +34,7 @@ class System:
     whitening  inverse of the Cholesky factor of all covariances: whitening @ data is free of covariance
     weights    (N, 1 + leanings): data less the plane, weighted; plane (3, 1 + leanings)
     precision_diagonal  of P = K^-1 - K^-1 F (F' K^-1 F)^-1 F' K^-1
-    chi_square of the data less plane, with N - 3 degrees of freedom
+    chi_square of the data less plane, with N - 3 degrees of freedom; covariance of the biases [ns^2]
     """
 
     part: Epoch
@@ -43,6 +46,7 @@ class System:
     plane: Floats
     precision_diagonal: Floats
     chi_square: float
+    covariance: Floats
 
     @property
     def strangeness(self) -> Floats:
@@ -89,18 +93,19 @@ def solve(part: Epoch, covariance: Floats, residual: Residual) -> System:
     precision_diagonal -= np.einsum("ij,jk,ik->i", of_drift, normal_inverse, of_drift)
     return System(
         part, residual, whitening, white_drift, normal_inverse, weights, plane, precision_diagonal,
-        float(white_rest[:, 0] @ white_rest[:, 0]),
+        float(white_rest[:, 0] @ white_rest[:, 0]), covariance,
     )  # fmt: skip
 
 
-def at(system: System, x: Floats, y: Floats, over_km: float, widen_km: float) -> Estimates:
+def at(system: System, x: Floats, y: Floats, over_km: float, around_km: float) -> Estimates:
     """Content and slopes at places [km].
 
-    over_km   length over which slopes are taken
-    widen_km  where the rays within about this distance fit worse than their sigmas say, sigmas are widened
+    over_km    length over which slopes are taken
+    around_km  sigmas are brought to how well the rays within about this distance agree with what is said of them
+               (`Surroundings`); 0: the covariance alone speaks
     """
     pieces = [
-        _at(system, x[first : first + _PLACES_AT_A_TIME], y[first : first + _PLACES_AT_A_TIME], over_km, widen_km)
+        _at(system, x[first : first + _PLACES_AT_A_TIME], y[first : first + _PLACES_AT_A_TIME], over_km, around_km)
         for first in range(0, len(x), _PLACES_AT_A_TIME)
     ]
     return Estimates(**{
@@ -108,24 +113,29 @@ def at(system: System, x: Floats, y: Floats, over_km: float, widen_km: float) ->
     })
 
 
-def _at(system: System, x: Floats, y: Floats, over_km: float, widen_km: float) -> Estimates:
+def _at(system: System, x: Floats, y: Floats, over_km: float, around_km: float) -> Estimates:
     part, residual = system.part, system.residual
     spread2, reach = residual.spread**2, residual.reach_km
     east_km, north_km = x[:, None] - part.x, y[:, None] - part.y
     distance = np.sqrt(east_km**2 + north_km**2)
-    widened = _widened(system, distance, widen_km)
+    around = surroundings(system, x, y, distance, around_km)
 
-    def estimate(k: npt.NDArray[Any], f: Floats, own: float) -> tuple[Floats, Floats]:
+    def estimate(
+        k: npt.NDArray[Any], f: Floats, own: float, factor: Floats, more: Floats | float
+    ) -> tuple[Floats, Floats]:
         white = k @ system.whitening.T.astype(k.dtype)  # (places, rays)
         answer = k @ system.weights.astype(k.dtype) + f @ system.plane
         open_drift = f - white @ system.white_drift.astype(k.dtype)
         variance = own - np.einsum("ij,ij->i", white, white).astype(np.float64)
         variance += np.einsum("ij,jk,ik->i", open_drift, system.normal_inverse, open_drift)
         together = np.sum(answer[:, 1:] ** 2, axis=1)
-        return answer[:, 0], np.sqrt(np.maximum(variance, 0.0) * widened + together)
+        return answer[:, 0], np.sqrt(np.maximum(variance, 0.0) * factor + more + together)
 
     # A cell's value is that of a place in it, so the unresolved grain is part of its uncertainty.
-    value, sigma = estimate(spread2 * np.exp(distance / -reach), plane_terms(x, y), spread2 + residual.grain**2)
+    value, sigma = estimate(
+        spread2 * np.exp(distance / -reach), plane_terms(x, y), spread2 + residual.grain**2,
+        np.maximum(around.roughness, 1.0), 0.0,
+    )  # fmt: skip
     # Slopes need no more than single precision: measured on a storm to differ by less than 1e-4 of their sigma.
     half, decay = np.float32(0.5 * over_km), np.float32(-1.0 / reach)
     east4, north4 = east_km.astype(np.float32), north_km.astype(np.float32)
@@ -140,23 +150,70 @@ def _at(system: System, x: Floats, y: Floats, over_km: float, widen_km: float) -
 
     apart = 2.0 * spread2 * (1.0 - np.exp(-over_km / reach))
     still, step = np.zeros(len(x)), np.full(len(x), over_km / 1000.0)
-    east, east_sigma = estimate(difference(east4, north4), np.stack([still, step, still], axis=1), apart)
-    north, north_sigma = estimate(difference(north4, east4), np.stack([still, still, step], axis=1), apart)
+    # Two places this far apart may each depart from the local plane on their own.
+    steps = 2.0 * around.departure2
+    ways = ((east4, north4, np.stack([still, step, still], axis=1)),
+            (north4, east4, np.stack([still, still, step], axis=1)))  # fmt: skip
+    (east, east_sigma), (north, north_sigma) = (
+        estimate(difference(along, across), drift, apart, around.usual_roughness, steps)
+        for along, across, drift in ways
+    )
     return Estimates(value, sigma, east / over_km, east_sigma / over_km, north / over_km, north_sigma / over_km)
 
 
-def _widened(system: System, distance: Floats, widen_km: float) -> Floats:
-    """Factor, at least 1, on the variance at places: how badly the rays around agree with one another.
+@dataclass(frozen=True)
+class Surroundings:
+    """How content behaves around places (P,), told by the rays near them.
 
-    The covariance is one for the whole region; a wall makes content rougher along a line than anywhere else.  The
-    squared strangeness of the rays around, weighted by distance, says how much rougher; one ray's worth of belief in
-    the covariance itself keeps a lonely ray from deciding.
+    The covariance is one for the whole region; a wall makes content rougher along a line than anywhere else, and
+    smoother elsewhere than the covariance of its hour says.
+    roughness        factor on variances: the squared strangeness of the rays around, weighted by distance, with one
+                     ray's worth of belief in the covariance itself, so that a lonely ray does not decide
+    usual_roughness  the same with one ray's worth of belief that it is here as at most rays of the moment
+    departure2       square [TECU^2] by which content departs from a plane fitted around, beyond the rays' own errors,
+                     widened as of a variance known from few rays only (Student's t: Fisher 1925; expansion in 1/nu)
     """
+
+    roughness: Floats
+    usual_roughness: Floats
+    departure2: Floats
+
+
+def surroundings(system: System, x: Floats, y: Floats, distance: Floats, around_km: float) -> Surroundings:
+    """How content behaves around places [km]; distance (P, N) from them to the rays."""
+    count = len(x)
+    if around_km <= 0.0:
+        return Surroundings(np.ones(count), np.ones(count), np.zeros(count))
     odd = system.strangeness**2
-    if widen_km <= 0.0 or odd.max(initial=0.0) < 4.0:
-        return np.ones(len(distance))
-    weight = np.exp((distance.astype(np.float32) / np.float32(widen_km)) ** 2 * np.float32(-0.5))
-    return np.asarray(np.maximum(1.0, (1.0 + weight @ odd) / (1.0 + weight.sum(axis=1, dtype=np.float64))))
+    weight = np.exp((distance.astype(np.float32) / np.float32(around_km)) ** 2 * np.float32(-0.5)).astype(np.float64)
+    total = weight.sum(axis=1)
+    strange = weight @ odd
+    usual = float(np.median(odd)) / _MEDIAN_OF_SQUARE if len(odd) >= _ENOUGH_TO_TELL else 1.0
+    # Moments of the rays around each place: the plane's terms in hundreds of km, what content departs from the whole
+    # region's plane, and its noise.
+    part = system.part
+    east, north = part.x / 100.0, part.y / 100.0
+    rest = part.vtec - part.drift() @ system.plane[:, 0]
+    noise = part.own**2 + part.arc**2 + part.bias_variance(system.covariance)
+    one = np.ones(len(part))
+    columns = np.stack(
+        [one, east, north, east**2, east * north, north**2, rest, rest * east, rest * north, rest**2, noise], axis=1
+    )
+    s = weight @ columns
+    normal = s[:, [0, 1, 2, 1, 3, 4, 2, 4, 5]].reshape(count, 3, 3)
+    normal += 1e-6 * (s[:, 3] + s[:, 5] + 1e-6)[:, None, None] * np.eye(3)
+    fit = np.linalg.solve(normal, s[:, 6:9, None])[:, :, 0]
+    left = np.maximum(s[:, 9] - np.einsum("pi,pi->p", fit, s[:, 6:9]), 0.0)
+    # How many rays of equal weight these are worth (Kish 1965), less the plane's three numbers.
+    worth = total**2 / np.maximum((weight**2).sum(axis=1), 1e-12)
+    beyond = left * worth / np.maximum(worth - 3.0, 1.0) - s[:, 10]
+    free = np.maximum(worth - 3.0, 2.0)
+    z = _WITHIN
+    student = z + (z**3 + z) / (4.0 * free) + (5.0 * z**5 + 16.0 * z**3 + 3.0 * z) / (96.0 * free**2)
+    departure2 = np.maximum(beyond, 0.0) / np.maximum(total, 1e-12) * (student / z) ** 2
+    return Surroundings(
+        (1.0 + strange) / (1.0 + total), (usual + strange) / (1.0 + total), np.where(total > 1e-9, departure2, 0.0)
+    )
 
 
 def left_out(system: System, rows: Ints) -> tuple[Floats, Floats]:
