@@ -191,3 +191,54 @@ def test_what_one_receiver_says_changes_no_state():
     judged = states.judge(flat_fields(), steep, moving, alone, REGION)
     assert (judged.fields.state == HOLDS).all()
     assert judged.flags[0].confirmed is False and "unconfirmed" in judged.flags[0].evidence
+
+
+def test_ways_of_seeing_a_slope_are_told_side_by_side(stormy):
+    _, steep, moving, ragged, found, told = stormy
+    judged = states.judge(flat_fields(), steep, moving, ragged, REGION, found, told)
+    (front,) = [flag for flag in judged.flags if flag.kind == "front"]
+    # Pairs see the wall; the map of this test is flat, and so much is said.
+    assert "mm/km by receiver pairs, which agrees" in front.evidence
+    assert "up to 1 ± 0 mm/km by the map, which sees little of it" in front.evidence
+    nowhere = flat_fields(slope=np.nan)
+    blind = states.judge(nowhere, steep, moving, ragged, REGION, found, told)
+    assert "the map says nothing there" in next(flag.evidence for flag in blind.flags if flag.kind == "front")
+    bare = replace(moving, fronts=())
+    alone = states.judge(flat_fields(), steep, bare, ragged, REGION)
+    claim = max((flag for flag in alone.flags if flag.kind == "slope"), key=lambda flag: flag.slope_mm_per_km)
+    assert claim.confirmed and "it changes within arcs, where no bias can feign it" in claim.evidence
+    assert claim.evidence.endswith("the map says nothing there")  # it is steepest off the map of this test
+    here = replace(max(steep.claims, key=lambda one: one.slope), lat=-39.0, lon=145.5)
+    one = replace(steep, claims=(here,))
+    same = f"the map agrees: {here.slope:.0f} ± 0 mm/km"
+    for slope, words in ((1.0, "the map disagrees: 1 ± 0 mm/km"), (here.slope, same)):
+        flags = states.judge(flat_fields(slope=slope, sigma=0.4), one, bare, ragged, REGION).flags
+        assert any(words in flag.evidence for flag in flags)
+
+
+def test_what_is_not_confirmed_says_so_in_its_evidence(stormy):
+    """flags.csv has no column for it: whoever reads the table must read it in the evidence."""
+    _, steep, moving, ragged, found, told = stormy
+    fields = flat_fields()
+    fields.slope[6:12, 1:4, 0:3] = 20.0
+    first = replace(steep.claims[0], confirmed=False, why="unconfirmed: every witness includes RX03",
+                    lat=20.0, cell_lat=steep.claims[0].cell_lat + 60.0)  # fmt: skip
+    doubtful = replace(steep, claims=(*steep.claims, first))
+    alone = replace(ragged, patches=(some_patch(confirmed=False),))
+    flags = states.judge(fields, doubtful, moving, alone, REGION, found, told).flags
+    flags += states.judge(fields, *nothing(), REGION).flags  # the map alone
+    open_ones = [flag for flag in flags if not flag.confirmed]
+    assert sorted(flag.kind for flag in open_ones) == ["irregular", "slope", "slope"]
+    assert all("unconfirmed" in flag.evidence for flag in open_ones)
+    assert not any("unconfirmed" in flag.evidence for flag in flags if flag.confirmed)
+
+
+def test_a_front_of_unknown_slope_never_says_that_corrections_hold(stormy):
+    _, steep, moving, ragged, _, _ = stormy
+    for slope, sigma in ((np.nan, np.nan), (60.0, 500.0)):
+        vague = replace(moving, fronts=(replace(moving.fronts[0], slope=slope, slope_sigma=sigma),))
+        flag = next(f for f in states.judge(flat_fields(), steep, vague, ragged, REGION).flags if f.kind == "front")
+        assert flag.state == "unseen"
+    gentle = replace(moving, fronts=(replace(moving.fronts[0], slope=3.0, slope_sigma=1.0),))
+    flag = next(f for f in states.judge(flat_fields(), steep, gentle, ragged, REGION).flags if f.kind == "front")
+    assert flag.state == "holds"

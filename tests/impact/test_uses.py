@@ -202,6 +202,20 @@ def test_a_front_is_one_event_and_a_patch_another(stormy):
     assert sum(event.cell_epochs for event in listed) == int((both.state >= STRAINED).sum())
 
 
+def test_a_patch_stops_satellite_based_corrections_where_no_plane_fits():
+    """By the chi-square test that such services make (Walter et al. 2000), whatever the index of the patch."""
+    steep, moving, none = nothing()
+    got = {}
+    cases = {"fails": (80.0, 55.0, 0.8), "passes": (20.0, 55.0, 1.4), "unknown": (np.nan, np.nan, 1.4)}
+    for words, (chi_square, limit, index) in cases.items():
+        ragged = Patches((some_patch(planar=(chi_square, limit), index_highest=index),),
+                         *(getattr(none, name) for name in list(Patches.__dataclass_fields__)[1:]))  # fmt: skip
+        judged = states.judge(flat_fields(), steep, moving, ragged, REGION)
+        said = [uses.judge_for(use, judged.fields, judged.flags, REGION) for use in (SATELLITE, GROUND)]
+        got[words] = tuple(int(one.states[18].max()) for one in said)
+    assert got == {"fails": (BROKEN, STRAINED), "passes": (STRAINED, BROKEN), "unknown": (BROKEN, BROKEN)}
+
+
 def test_map_alone_makes_an_unconfirmed_event_and_specks_make_none():
     fields = flat_fields()
     fields.slope[6:12, 4:7, 5:8] = 20.0

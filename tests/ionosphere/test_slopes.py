@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from tests.simulated.moving_wall import PLACES, changed, quiet, samples_of, simulate, wall
 
-from skylag.ionosphere import slopes
+from skylag.ionosphere import slips, slopes
 from skylag.tables import Receiver
 
 
@@ -16,7 +16,30 @@ def test_published_examples(evidence):
     evidence("time-step slope", source=source, expected=166.667, got=got, tolerance=1e-3, unit="mm/km")
     worst = float(slopes.between(np.array(8.2688), np.array(0.0), np.array(9.72)))
     evidence("largest slope seen in Brazil, 9.72 km apart", source="Yoon et al. 2017, NAVIGATION 64(3)",
-             expected=slopes.BRAZIL_WORST, got=worst, tolerance=0.01, unit="mm/km")  # fmt: skip
+             expected=850.7, got=worst, tolerance=0.01, unit="mm/km")  # fmt: skip
+    assert worst == pytest.approx(slopes.BRAZIL_WORST, abs=0.01)
+
+
+def test_scale_of_slopes_on_other_carriers(evidence):
+    """Published frequencies, and the squares of the whole-number ratios that their documents give."""
+    source = "IS-GPS-200, IS-GPS-705, Galileo and BeiDou signal documents; references 1.2"
+    for carrier, expected in (
+        ("1575.42 MHz", 1.0), ("1227.60 MHz", 1.646944444), ("1176.45 MHz", 1.793270321), ("1207.14 MHz", 1.703246194),
+        ("1278.75 MHz", 1.517824000),
+    ):  # fmt: skip
+        evidence(f"slope on {carrier} over slope on 1575.42 MHz", source=source, expected=expected,
+                 got=slopes.CARRIER_SCALE[carrier], tolerance=1e-8)  # fmt: skip
+    for carrier, factor in slopes.CARRIER_SCALE.items():
+        assert factor == pytest.approx((1575.42 / float(carrier.split()[0])) ** 2, rel=1e-12)
+
+
+def test_the_published_threat_space(evidence):
+    """Its corner: the steepest wall at its greatest speed changes the slant delay by so much a second."""
+    fastest = slopes.MODEL_WORST * slopes.MODEL_SPEED_M_S[1] / 1e6
+    evidence("fastest change of delay in the threat space", source="425 mm/km (Datta-Barua et al. 2010) at 750 m/s "
+             "(from memory)", expected=0.31875, got=fastest, tolerance=1e-9, unit="m/s")  # fmt: skip
+    assert abs(slips.FASTEST_TECU_S - fastest / 0.162372448) < 1e-6  # arcs hold through it
+    assert slopes.MODEL_WORST * slopes.MODEL_WIDTH_KM[1] / 1000.0 > slopes.MODEL_DELAY_M  # the three bounds cut corners
 
 
 def test_units_and_bound(evidence):

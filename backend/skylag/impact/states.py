@@ -25,6 +25,7 @@ from skylag.constants import L1_M_PER_TECU
 from skylag.events import Arrival, Fault, Patch, Patches
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.fronts import ahead_km
+from skylag.ionosphere.slopes import field_slope_at
 from skylag.tables import (
     BROKEN,
     HOLDS,
@@ -45,6 +46,8 @@ from skylag.tables import (
 )
 
 NOTHING = float("nan")
+# What a patch's evidence says of the planar-fit test of satellite-based services; `impact.uses` goes by it.
+PLANAR_FAILS, PLANAR_PASSES = "planar fit fails", "planar fit passes"
 
 
 @dataclass(frozen=True)
@@ -120,9 +123,12 @@ def judge(
 
     site_states, site_reasons = _judge_sites(fields, state, by_field, slopes, fronts, patches, region, choices)
     flags = [
-        *(_front_flag(front, limits, number, arrivals) for number, front in enumerate(fronts.fronts)),
+        *(
+            _front_flag(front, limits, number, arrivals, _beside_front(front, fields, slopes, choices))
+            for number, front in enumerate(fronts.fronts)
+        ),
         *(_patch_flag(patch, limits) for patch in patches.patches),
-        *_claim_flags(slopes, fronts, patches, faults, limits, choices),
+        *_claim_flags(fields, slopes, fronts, patches, faults, limits, choices),
         *_field_flags(fields, by_field, explained, slopes, choices),
         *(_fault_flag(fault) for fault in faults),
     ]
@@ -172,7 +178,10 @@ class _Places:
 def _front_state(front: Front, limits: Thresholds) -> int:
     if not front.confirmed:
         return UNSEEN
-    return int(state_of_slope(np.array(front.slope), np.array(front.slope_sigma), limits))
+    state = int(state_of_slope(np.array(front.slope), np.array(front.slope_sigma), limits))
+    if state == HOLDS and not stays_under(front.slope, front.slope_sigma, limits.strained_mm_per_km):
+        return UNSEEN  # a wall whose slope is hardly known is no reason to say that corrections hold
+    return state
 
 
 def _patch_state(patch: Patch, limits: Thresholds) -> int:
@@ -380,23 +389,62 @@ def patch_sentence(patch: Patch) -> str:
     if patch.slips or patch.losses:
         text += f", {patch.slips} broken arcs, {patch.losses} lost signals"
     if np.isfinite(patch.planar[0]):
-        verdict = "fails" if patch.planar[0] > patch.planar[1] else "passes"
-        text += f", planar fit {verdict} (chi-square {patch.planar[0]:.0f}, limit {patch.planar[1]:.0f})"
+        verdict = PLANAR_FAILS if patch.planar[0] > patch.planar[1] else PLANAR_PASSES
+        text += f", {verdict} (chi-square {patch.planar[0]:.0f}, limit {patch.planar[1]:.0f})"
     return text if patch.confirmed else f"unconfirmed: one receiver only, {text}"
 
 
-def _front_flag(front: Front, limits: Thresholds, number: int, arrivals: Sequence[Arrival]) -> Flag:
-    """A front as one flag, drawn by its track; how its forecasts fared is part of the evidence."""
+def _beside_front(front: Front, fields: Fields, slopes: Slopes, choices: JudgeChoices) -> str:
+    """What pairs of receivers and the map say of the slope where a front stands: agreement, or how they part.
+
+    Both are means over a way (between pierce points; over a cell), so less than the front's own is no contradiction
+    while they are steep at all; more is.
+    """
+    said = []
+    best: tuple[float, float] | None = None
+    for claim in slopes.claims:
+        if not claim.confirmed or claim.start > front.end or claim.end < front.start or not len(claim.cell_time):
+            continue
+        places = _Places(claim.cell_lat, claim.cell_lon)
+        moments, at = np.unique(claim.cell_time, return_inverse=True)
+        under = in_front(front, places, moments, choices)[at, np.arange(len(at))]
+        for number in np.flatnonzero(under):
+            one = float(claim.cell_slope[number]), float(claim.cell_sigma[number])
+            best = one if best is None or one[0] - one[1] > best[0] - best[1] else best
+    said.append(_compared("receiver pairs", best, front))
+    lon, lat = np.meshgrid(fields.lons, fields.lats)
+    over = in_front(front, _Places(lat.ravel(), lon.ravel()), fields.times, choices).reshape(fields.slope.shape)
+    height = np.where(over & np.isfinite(fields.slope - fields.slope_sigma), fields.slope - fields.slope_sigma, -np.inf)
+    top = np.unravel_index(int(np.argmax(height)), height.shape) if height.size else None
+    steepest = None
+    if top is not None and np.isfinite(height[top]):
+        steepest = float(fields.slope[top]), float(fields.slope_sigma[top])
+    said.append(_compared("the map", steepest, front))
+    return "; ".join(said)
+
+
+def _compared(who: str, slope: tuple[float, float] | None, front: Front) -> str:
+    """One way of seeing a slope against a front's own."""
+    if slope is None:
+        return f"{who} {'say' if who.endswith('s') else 'says'} nothing there"
+    text = f"up to {slope[0]:.0f} ± {slope[1]:.0f} mm/km by {who}"
+    more = slope[0] - front.slope > 2.0 * float(np.hypot(slope[1], front.slope_sigma))
+    less = slope[0] + 2.0 * slope[1] < 0.25 * front.slope
+    return text + (", which disagrees" if more else ", which sees little of it" if less else ", which agrees")
+
+
+def _front_flag(front: Front, limits: Thresholds, number: int, arrivals: Sequence[Arrival], beside: str) -> Flag:
+    """A front as one flag, drawn by its track; other ways and how its forecasts fared are part of the evidence."""
     middle = front.track[len(front.track) // 2] if front.track else (front.epoch, front.centre[0], front.centre[1])
     own = [arrival for arrival in arrivals if arrival.front == number and arrival.came_true is not None]
-    text = front_sentence(front)
+    text = f"{front_sentence(front)}; {beside}"
     if own:
         good = sum(1 for arrival in own if arrival.came_true)
         text += f"; {good} of {len(own)} forecasts of its arrival came true within two sigmas"
     return Flag(
         start=front.start, end=front.end, lat=float(middle[1]), lon=float(middle[2]), kind="front",
         slope_mm_per_km=front.slope, sigma_mm_per_km=front.slope_sigma, speed_m_s=front.speed_m_s,
-        heading_deg=front.heading_deg, state=STATE_NAMES[max(HOLDS, _front_state(front, limits))], evidence=text,
+        heading_deg=front.heading_deg, state=STATE_NAMES[_front_state(front, limits)], evidence=text,
         confirmed=front.confirmed, track=front.track, speed_sigma_m_s=front.speed_sigma_m_s,
     )  # fmt: skip
 
@@ -419,8 +467,9 @@ def _fault_flag(fault: Fault) -> Flag:
 
 
 def _claim_flags(
-    slopes: Slopes, fronts: Fronts, patches: Patches, faults: Sequence[Fault], limits: Thresholds, choices: JudgeChoices
-) -> list[Flag]:
+    fields: Fields, slopes: Slopes, fronts: Fronts, patches: Patches, faults: Sequence[Fault], limits: Thresholds,
+    choices: JudgeChoices,
+) -> list[Flag]:  # fmt: skip
     """Slopes that no front, patch or receiver at fault explains; of the unconfirmed the steepest few."""
     flags: list[Flag] = []
     doubtful: list[Flag] = []
@@ -431,11 +480,27 @@ def _claim_flags(
         flag = Flag(
             start=claim.start, end=claim.end, lat=claim.lat, lon=claim.lon, kind="slope",
             slope_mm_per_km=claim.slope, sigma_mm_per_km=claim.sigma, speed_m_s=NOTHING, heading_deg=NOTHING,
-            state=STATE_NAMES[state if claim.confirmed else UNSEEN], evidence=claim.why, confirmed=claim.confirmed,
+            state=STATE_NAMES[state if claim.confirmed else UNSEEN], confirmed=claim.confirmed,
+            evidence=claim.why + _map_beside(claim, fields),
         )  # fmt: skip
         (flags if claim.confirmed else doubtful).append(flag)
     doubtful.sort(key=lambda flag: -flag.slope_mm_per_km)
     return flags + doubtful[: choices.most_unconfirmed]
+
+
+def _map_beside(claim: SlopeClaim, fields: Fields) -> str:
+    """What the map says where a claim is steepest: that it agrees, or by how much it does not."""
+    if not len(fields.times):
+        return ""
+    slope, sigma = (
+        float(values[0])
+        for values in field_slope_at(fields, np.array([claim.start + (claim.end - claim.start) // 2]),
+                                     np.array([claim.lat]), np.array([claim.lon]))
+    )  # fmt: skip
+    if not np.isfinite(slope):
+        return "; the map says nothing there"
+    apart = abs(slope - claim.slope) > 2.0 * float(np.hypot(sigma, claim.sigma))
+    return f"; the map {'disagrees' if apart else 'agrees'}: {slope:.0f} ± {sigma:.0f} mm/km"
 
 
 def _by_fault(claim: SlopeClaim, faults: Sequence[Fault]) -> bool:

@@ -11,6 +11,8 @@ the neighbourhood follows, `single` by what the broadcast model leaves.  Publish
   25.5 mm/km, the largest a station can announce (8 bits of 0.1 mm/km: ICAO Annex 10, Appendix B to chapter 3).
 - satellite: vertical delay about the plane through all within 800 km, whose nominal spread is 0.35 m (Walter et al.
   2000, from memory): `strained` from 2 of these, `broken` from 3.29, the bound at 0.1 % that such services announce.
+  A ragged patch is `broken` where the chi-square test of the planar fit through the lines of sight around it fails, as
+  the service then stops correcting there, and `strained` where it passes.
 - single: vertical error that the broadcast model leaves: `strained` from 4.5 m, the standard error that receivers take
   for it at middle latitudes, `broken` from 9 m, what they take near the equator (RTCA DO-229, appendix J.2.3).  Without
   the model at hand half of the delay: it is designed to remove half (IS-GPS-200, 20.3.3.5.2.5).
@@ -25,7 +27,15 @@ import numpy as np
 
 from skylag.constants import L1_M_PER_TECU
 from skylag.errors import Refused
-from skylag.impact.states import JudgeChoices, content_known, field_states, nearest_cells, stays_under
+from skylag.impact.states import (
+    PLANAR_FAILS,
+    PLANAR_PASSES,
+    JudgeChoices,
+    content_known,
+    field_states,
+    nearest_cells,
+    stays_under,
+)
 from skylag.ionosphere.background import ERROR_SHARE, Background
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.geometry import mapping
@@ -278,6 +288,10 @@ def flag_state(use: Use, flag: Flag, limits: tuple[float, float], choices: Judge
     if flag.kind == "irregular":
         # Ragged content breaks phases; whoever lives on one frequency's code is merely served worse.
         own = STATE_NAMES.index(flag.state)
+        if use.kind == "satellite" and PLANAR_FAILS in flag.evidence:
+            return BROKEN  # the service's own test finds no plane there: it stops correcting
+        if use.kind == "satellite" and PLANAR_PASSES in flag.evidence:
+            return min(own, STRAINED)
         return min(own, STRAINED) if use.kind == "single" else own
     spread = flag.sigma_mm_per_km if np.isfinite(flag.sigma_mm_per_km) else 0.0
     sure = flag.slope_mm_per_km - choices.sigmas * spread

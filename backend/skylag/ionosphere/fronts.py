@@ -331,10 +331,11 @@ def fit_walls(onsets: Onsets, rays: Rays, choices: FrontChoices | None = None) -
                 points = _points(onsets.where(left), centre, rays.shell_height_m, choices, epoch)
                 wall = _both_ways(points, wall, choices)
             found.append((wall, left[wall.inside]))
-            # Broken runs within the wall's own breadth are the same wall, not another beside it.
+            # Broken runs of the wall and of its feet are the same wall, not another beside it: of a smooth step all but
+            # two hundredths lie within its breadth (jump over steepest slope) on either side.
             steep = steepness(wall, onsets.where(left[wall.inside]), _taken(points, wall.inside))
             lean = points.lean_x * np.sin(wall.heading) + points.lean_y * np.cos(wall.heading)
-            within = np.abs(wall.distance(points)) < 0.5 * steep.seen_width(lean) + 3.0 * points.place_sigma
+            within = np.abs(wall.distance(points)) < steep.seen_width(lean) + 3.0 * points.place_sigma
             free[left[wall.inside | within]] = False
             left = rows[free[rows]]
 

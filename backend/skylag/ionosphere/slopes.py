@@ -35,8 +35,25 @@ MODEL_WORST = 425.0  # conterminous United States threat model: Datta-Barua et a
 MODEL_LOW_ELEVATION = 375.0  # the same at 15 degrees; linear up to 65 degrees (from memory)
 MODEL_SPEED_M_S = (0.0, 750.0)  # (from memory)
 MODEL_WIDTH_KM = (25.0, 200.0)  # (from memory)
+MODEL_DELAY_M = 50.0  # largest change of delay across a wall (from memory)
 BRAZIL_WORST = 850.7  # 1 March 2014, 9.72 km baseline: Yoon et al. 2017, NAVIGATION 64(3)
+BRAZIL_SPEED_M_S, BRAZIL_WIDTH_KM, BRAZIL_DELAY_M = (40.0, 250.0), (20.0, 450.0), 35.0  # the same source
 ASIA_PACIFIC_BOUND = 600.0  # Saito et al. 2017, GPS Solut. 21 (value from memory)
+
+# Slopes and delays here are on 1575.42 MHz; on another carrier they are so many times as large (square of the ratio of
+# frequencies: IS-GPS-200, 20.3.3.3.3.2, for the second; IS-GPS-705 and the Galileo and BeiDou signal documents).
+CARRIER_SCALE = {
+    "1575.42 MHz": 1.0,
+    "1561.098 MHz": (1575.42 / 1561.098) ** 2,
+    "1278.75 MHz": (1575.42 / 1278.75) ** 2,
+    "1268.52 MHz": (1575.42 / 1268.52) ** 2,
+    "1227.60 MHz": (77.0 / 60.0) ** 2,
+    "1207.14 MHz": (154.0 / 118.0) ** 2,
+    "1176.45 MHz": (154.0 / 115.0) ** 2,
+}
+# Parts per million by which positions on one carrier shrink a baseline per TECU of vertical content, for cut-offs near
+# 15 to 20 degrees: Beutler et al. 1988 (from memory).
+SHRINKS_PPM_PER_TECU = 0.10
 
 
 def model_bound(elevation_deg: Floats) -> Floats:
@@ -109,7 +126,9 @@ def measure(rays: Rays, samples: Samples, fields: Fields | None = None, choices:
     order = np.argsort(columns["time"], kind="stable")
     columns = {name: values[order] for name, values in columns.items()}
     claims = _claims(columns, rays, choices)
-    summary = {**pair_facts, **path_facts, **_compare(columns, fields)}
+    sure = sum(claim.confirmed for claim in claims)
+    told = {"claims_confirmed": sure, "claims_unconfirmed": len(claims) - sure}
+    summary = {**pair_facts, **path_facts, **_compare(columns, fields), **told}
     return Slopes(**columns, claims=claims, summary=summary)
 
 
@@ -287,6 +306,8 @@ def _claim(columns: Mapping[str, Any], rows: Ints, cell: Ints, rays: Rays) -> Sl
     if not confirmed and np.all(way == PAIR):
         why += "; steady through the arc, so more likely the level of an arc than weather"
     ways = tuple(SLOPE_WAYS[code] for code in np.unique(way))
+    if confirmed:
+        why += _beside(columns, rows, way)
     # Paths mix time and space: they give no size where a pair does.
     sized = rows[way != PATH] if np.any(way != PATH) else rows
     best = sized[np.argmax(columns["slope"][sized] - columns["sigma"][sized])]
@@ -316,6 +337,20 @@ def _claim(columns: Mapping[str, Any], rows: Ints, cell: Ints, rays: Rays) -> Sl
         cell_slope=columns["slope"][steepest[own_size]],
         cell_sigma=columns["sigma"][steepest[own_size]],
     )
+
+
+def _beside(columns: Mapping[str, Any], rows: Ints, way: Any) -> str:
+    """What the bias-free ways say beside the pairs' own slopes, which arc levels may spoil: agreement or none."""
+    said = []
+    free = int((way == PAIR_CHANGE).sum())
+    if np.any(way == PAIR) and free == 0:
+        said.append("not seen to change within arcs, so levels could feign a part")
+    elif free:
+        said.append("it changes within arcs, where no bias can feign it")
+    along = np.unique(columns["receiver"][rows[way == PATH]] * 1000 + columns["satellite"][rows[way == PATH]])
+    if len(along):
+        said.append(f"steep along {_count(len(along), 'path')} of pierce points too")
+    return "".join(f"; {one}" for one in said)
 
 
 def agreement(
