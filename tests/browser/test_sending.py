@@ -1,6 +1,6 @@
 """The page beside a server that works: files sent and computed, alerts that come, the record of outlooks, a key.
 
-One server without a key that works on its queue, one on another address that asks for keys; both are the command line's.
+One server that works on its queue, one on another address that asks for keys; both are the command line's.
 """
 
 import base64
@@ -95,7 +95,8 @@ def test_from_dropped_files_to_the_day_on_the_page(
     with v.page.expect_download() as download:
         v.page.click("#ahead-ics")
     calendar = Path(download.value.path()).read_text()
-    assert calendar.count("BEGIN:VEVENT") == len(told["windows"]) and "not for navigation" in calendar.replace("\n ", "")
+    assert calendar.count("BEGIN:VEVENT") == len(told["windows"])
+    assert "not for navigation" in calendar.replace("\n ", "")
 
     letter, nothing = tmp_path / "letter.txt", tmp_path / "nothing.rnx"
     letter.write_text("Dear surveyor,\n")
@@ -106,7 +107,8 @@ def test_from_dropped_files_to_the_day_on_the_page(
     v.page.wait_for_selector("dialog[open] #files-input")
     assert "files=open" in v.page.evaluate("location.search")
     v.page.set_input_files("#files-input", [str(path) for path in (good[0], letter, nothing)])
-    v.page.wait_for_function("() => document.getElementById('files-said').textContent === '1 of 3 files sent, 2 refused.'")
+    said = "() => document.getElementById('files-said').textContent"
+    v.page.wait_for_function(f"{said} === '1 of 3 files sent, 2 refused.'")
     rows = [" ".join(text.split()) for text in v.page.locator("#files-list li").all_inner_texts()]
     assert rows[0].endswith("observations") and "of no kind that is known" in rows[1] and "the file is empty" in rows[2]
     # A drop anywhere on the page, here onto the open window.
@@ -115,16 +117,18 @@ def test_from_dropped_files_to_the_day_on_the_page(
           const carried = new DataTransfer();
           carried.items.add(new File([Uint8Array.from(atob(text), (c) => c.charCodeAt(0))], name));
           for (const type of ["dragover", "drop"]) {
-            document.body.dispatchEvent(new DragEvent(type, { dataTransfer: carried, bubbles: true, cancelable: true }));
+            const how = { dataTransfer: carried, bubbles: true, cancelable: true };
+            document.body.dispatchEvent(new DragEvent(type, how));
           }
         }""",
         [good[1].name, base64.b64encode(good[1].read_bytes()).decode()],
     )
-    v.page.wait_for_function("() => document.getElementById('files-said').textContent.startsWith('2 of 4 files sent')")
+    v.page.wait_for_function(f"{said}.startsWith('2 of 4 files sent')")
     v.page.select_option("#files-region", "")
     v.page.focus("#files-begin")
     v.page.keyboard.press("Enter")
-    v.page.wait_for_selector("#files-tasks li[data-state=running] progress, #files-tasks li[data-state=done]", timeout=60_000)
+    stages = "#files-tasks li[data-state=running] progress, #files-tasks li[data-state=done]"
+    v.page.wait_for_selector(stages, timeout=60_000)
     v.page.wait_for_selector("#files-tasks li[data-state=done] button", timeout=120_000)
     v.page.go_back()
     assert not v.page.is_visible("dialog"), "the window of files is a step of the history"
