@@ -6,6 +6,7 @@ from collections.abc import Iterator
 from concurrent.futures import Executor, ThreadPoolExecutor
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 import hatanaka
 import numpy as np
@@ -15,7 +16,7 @@ from tests.builders import STORM_DAY, invented_day
 from skylag.archive import Archive, open_archive
 from skylag.chain import Choices
 from skylag.ionosphere.geometry import geodetic
-from skylag.jobs import live
+from skylag.jobs import live, work
 from skylag.jobs.alerts import Rule
 from skylag.jobs.live import DayMade, Fell, FileCame, Folder, Make, Patience, State, Tick, Watch, step
 from skylag.tables import HOLDS, UNSEEN, Fields
@@ -155,9 +156,10 @@ def test_a_file_counts_when_it_is_whole(tmp_path: Path) -> None:
 class Pieces:
     """A day of a receiver cut into hours, as a receiver would send it."""
 
-    def __init__(self, sample_folder: Path, marker: str) -> None:
-        self.name = next((sample_folder / str(DAY)).glob(f"{marker}*")).name[:9]
-        text = hatanaka.decompress(next((sample_folder / str(DAY)).glob(f"{marker}*")).read_bytes())
+    def __init__(self, sample_folder: Path, marker: str, day: np.datetime64 = DAY) -> None:
+        path = next((sample_folder / str(day)).glob(f"{marker}*"))
+        self.name, self._day = path.name[:9], path.name[12:19]
+        text = hatanaka.decompress(path.read_bytes())
         head, rest = text.split(b"END OF HEADER", 1)
         first, *epochs = rest.split(b"\n> ")
         self._head, self._epochs = head + b"END OF HEADER" + first, epochs
@@ -167,17 +169,18 @@ class Pieces:
         wanted = [one for one in self._epochs if first_hour <= int(one[11:13]) < last_hour]
         passing = folder / f".{self.name}"
         passing.write_bytes(self._head + b"\n> " + b"\n> ".join(wanted) + b"\n")
-        passing.rename(folder / f"{self.name}_R_2031070{first_hour:02}00_{last_hour - first_hour:02}H_30S_MO.rnx")
+        passing.rename(folder / f"{self.name}_R_{self._day}{first_hour:02}00_{last_hour - first_hour:02}H_30S_MO.rnx")
 
 
 class Clock:
     """UTC at a GPS time that is set by hand."""
 
-    def __init__(self, text: str) -> None:
+    def __init__(self, text: str, day: np.datetime64 = DAY) -> None:
+        self._day = day
         self.set(text)
 
     def set(self, text: str) -> None:
-        self._utc = gps_to_utc(np.array([at(text)]))[0]
+        self._utc = gps_to_utc(np.array([at(text, self._day)]))[0]
 
     def __call__(self) -> np.datetime64:
         return self._utc
@@ -225,6 +228,8 @@ def test_each_arrival_moves_the_maps_and_a_silent_one_turns_unseen(
         assert second.times[-1] == at("12:30") and head.version == 2
         made = [facts for event, facts in log if event == "day made"]
         assert [(one["computed"], one["given"]) for one in made] == [(2, 0), (1, 1)], "only what changed"
+        assert [one["hours_given"] + one["hours_made"] for one in made] == [3, 5], "every hour is one or the other"
+        almost_whole(second, incoming, executor)
         silent = [facts["receiver"] for event, facts in log if event == "receiver silent"]
         assert silent == [far.name]
         assert far.name in (tmp_path / "told").read_text()
@@ -255,46 +260,87 @@ def test_a_file_that_is_none_is_left_out_and_the_rest_goes_on(
     assert log == [("file left out", {"file": "letter.rnx", "why": "is unknown"})]
 
 
-@pytest.mark.slow
-def test_sixteen_receivers_within_twenty_seconds(
-    tmp_path: Path, sample_folder: Path, executor: Executor, evidence
-) -> None:
-    """The last quarter of the day comes for all receivers at once, the worst moment: from then to kept maps.
+# How far maps made step by step may be from the same made whole: content and its sigma [TECU], slopes [mm/km], and the
+# share of cells whose state differs.  An hour is kept while its rays moved by less than 0.1 TECU.
+NEAR = {"vtec": 0.25, "vtec_sigma": 0.25, "slope": 0.6, "slope_sigma": 0.6}
+NEAR_STATES = 0.005
 
-    The sample network has fourteen; two more stand beside others under names of their own.
+
+def almost_whole(steps: Fields, incoming: Path, executor: Executor, **named: Any) -> dict[str, float]:
+    """Assert that maps made step by step are near those made of the same files at once; gives the differences.
+
+    States are compared where the whole day sees: those that a silent receiver turned unseen are of another kind.
+    """
+    named = {"choices": Choices(epoch_step_s=1800.0), **named}
+    whole = work.network_day([incoming], executor=executor, simulated=True, **named).products.fields
+    np.testing.assert_array_equal(steps.times, whole.times)
+    np.testing.assert_array_equal(steps.support, whole.support)
+    off = {name: float(np.nanmax(np.abs(getattr(steps, name) - getattr(whole, name)))) for name in NEAR}
+    assert all(off[name] <= NEAR[name] for name in NEAR), off
+    off["states"] = float(np.mean((steps.state != whole.state) & (steps.state != UNSEEN)))
+    assert off["states"] <= NEAR_STATES, off
+    return off
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("day", [DAY, DAY + 1])
+def test_sixteen_receivers_within_twenty_seconds(
+    tmp_path: Path, sample_folder: Path, executor: Executor, evidence, day: np.datetime64
+) -> None:
+    """Hours come for all receivers at once, the worst moment: from then to kept maps, on a calm and on a stormy day.
+
+    The sample network has fourteen; two more stand beside others under names of their own.  At the end the maps are
+    near those made at once, and once the day is over they are the same to the bit.
     """
     incoming = tmp_path / "in"
     incoming.mkdir()
-    markers = sorted({p.name[:4] for p in (sample_folder / str(DAY)).glob("*_MO.crx.gz")})
-    pieces = [Pieces(sample_folder, marker) for marker in markers]
-    for number, twin in enumerate([Pieces(sample_folder, marker) for marker in markers[:2]]):
+    markers = sorted({p.name[:4] for p in (sample_folder / str(day)).glob("*_MO.crx.gz")})
+    pieces = [Pieces(sample_folder, marker, day) for marker in markers]
+    for number, twin in enumerate([Pieces(sample_folder, marker, day) for marker in markers[:2]]):
         old, twin.name = twin.name[:4].encode(), f"TWN{number}00XBS"
         twin._head = twin._head.replace(old, twin.name[:4].encode())
         pieces.append(twin)
     pieces = pieces[:16]
-    shutil.copy(next((sample_folder / str(DAY)).glob("TARN*")), incoming)
-    clock = Clock("23:00:05")
+    shutil.copy(next((sample_folder / str(day)).glob("TARN*")), incoming)
+    clock, log = Clock("06:00:05", day), []
+    region = region_of(sample_folder)
     with open_archive(tmp_path / "archive.sqlite") as archive:
-        watch = Watch(archive, incoming, executor, clock, region=region_of(sample_folder), simulated=True,
-                      patience=Patience(calm_s=0.0))  # fmt: skip
-        for piece in pieces:
-            piece.write(incoming, 0, 23)
-        assert turn_until_made(watch) == 1
-        clock.set("23:30:00")
-        for piece in pieces:
-            piece.write(incoming, 23, 24)
-        began, busy = time.perf_counter(), time.process_time()
-        assert turn_until_made(watch, 3) == 1
-        wall_s, busy_s = time.perf_counter() - began, time.process_time() - busy
+        watch = Watch(archive, incoming, executor, clock, region=region, simulated=True,
+                      patience=Patience(calm_s=0.0), log=lambda event, **facts: log.append((event, facts)))  # fmt: skip
+        first, taken = 0, []
+        for hour in (6, 7, 12, 13, 18, 22, 23, 24):
+            for number in range(first, hour):
+                for piece in pieces:
+                    piece.write(incoming, number, number + 1)
+            clock.set(f"{hour - 1:02}:59:55")
+            began, busy = time.perf_counter(), time.process_time()
+            made_now = turn_until_made(watch, 3)
+            assert made_now == 1 or (made_now == 2 and hour - first > 1), "after a gap all were silent for a moment"
+            if hour - first == 1:
+                taken.append((hour, time.perf_counter() - began, time.process_time() - busy))
+            first = hour
         (head,) = archive.days()
-        assert head.receiver_count == len(pieces) and head.version == 2
-        states = archive.fields(head.region, DAY).state
-        assert (states == HOLDS).any()
-    print(f"{len(pieces)} receivers: {wall_s:.1f} s of time, {busy_s:.1f} s of one processor")
+        assert head.receiver_count == len(pieces) and head.provisional
+        steps = archive.fields(head.region, day)
+        assert (steps.state == HOLDS).any()
+        off = almost_whole(steps, incoming, executor, region=region, choices=Choices())
+        clock = Clock("02:05:00", day + 1)
+        watch._clock = clock
+        assert turn_until_made(watch, 3) == 1
+        (head,) = archive.days()
+        assert not head.provisional
+        final = archive.fields(head.region, day)
+        whole = work.network_day([incoming], executor=executor, simulated=True, region=region).products
+        for name in ("vtec", "slope", "slope_sigma", "support"):
+            np.testing.assert_array_equal(getattr(final, name), getattr(whole.fields, name))
+    for hour, wall_s, busy_s in taken:
+        print(f"{day} {len(pieces)} receivers, hour {hour}: {wall_s:.1f} s of time, {busy_s:.1f} s of one processor")
+    made = [facts for event, facts in log if event == "day made"]
+    print([(one["hours_given"], one["hours_made"]) for one in made], off)
     evidence(
-        "live: an hour of all 16 receivers at the end of a day, to kept maps (processor time)",
-        source="own requirement: 20 s for a 16-receiver network", expected=20.0, got=round(busy_s, 1), tolerance=0.0,
-        unit="s", at_most=True,
+        f"live: an hour of all 16 receivers at the end of {day}, to kept maps (processor time)",
+        source="own requirement: 20 s for a 16-receiver network", expected=20.0, got=round(taken[-1][2], 1),
+        tolerance=0.0, unit="s", at_most=True,
     )  # fmt: skip
 
 

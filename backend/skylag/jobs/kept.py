@@ -276,7 +276,7 @@ def _read(folder: Path, mark: str) -> tuple[dict[str, Any], dict[str, Any]] | No
     """Facts and arrays as they were written; None where they are not there or damaged."""
     path = _path(folder, mark)
     try:
-        with np.load(path, allow_pickle=False) as there:
+        with path.open("rb") as file, np.load(file, allow_pickle=False) as there:
             arrays = {name: there[name] for name in there.files}
         with contextlib.suppress(OSError):
             os.utime(path)  # it is of use still
