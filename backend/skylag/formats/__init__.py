@@ -29,7 +29,7 @@ PARSERS = {
     "indices": "indices",
 }
 
-_FEW_LINES, _SHORTEST_MEAN = 2**16, 10  # texts of more lines than this have longer lines than that in the mean
+_FEW_LINES, _SHORTEST_MEAN = 2**16, 30  # texts of more lines than this have longer lines than that in the mean
 
 _YEAR_FIRST = re.compile(rb"^(19|20)\d\d +\d{1,2} +\d{1,2} ")
 

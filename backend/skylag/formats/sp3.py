@@ -6,6 +6,8 @@ accuracy codes are passed over.  A broken line is a `Problem`, and reading goes 
 Layout: the SP3-d description (Hilla 2016): epoch lines `*`, position lines `P` of columns 5-60, header line `%c`.
 """
 
+from functools import lru_cache
+
 import numpy as np
 
 from skylag.errors import FormatError
@@ -37,7 +39,7 @@ def parse(data: bytes, name: str) -> Reading:
     if system not in ("GPS", "GAL", "QZS", "UTC", "GLO", "BDT", "BDS", "TAI", "IRN"):
         raise FormatError(f"{name}: time system {system!r} of SP3 is not known here", path=name, line=0)
     problems = Problems(name)
-    epochs: list[np.datetime64] = []
+    epochs: list[int] = []
     rows: list[int] = []
     names: list[str] = []
     values: list[list[float]] = []
@@ -72,11 +74,11 @@ def parse(data: bytes, name: str) -> Reading:
     dense = len(set(names)) * len(epochs) * 32
     if dense > max(_SMALL, _SPARSEST * len(data)):
         raise FormatError(
-            f"{name}: {len(epochs)} epochs of {len(set(names))} satellites, nearly all without a position; no orbit file "
-            "is like that; fetch it again",
+            f"{name}: {len(epochs)} epochs of {len(set(names))} satellites, nearly all without a position; no orbit "
+            "file is like that; fetch it again",
             path=name, line=0,
         )  # fmt: skip
-    table = _table(np.array(epochs), np.array(rows), np.array(names), np.array(values), system)
+    table = _table(np.array(epochs).astype("datetime64[ns]"), np.array(rows), np.array(names), np.array(values), system)
     header = {"version": head[1], "time_system": system, "agency": head[56:60].strip()}
     return Reading(table, problems.all(), header)
 
@@ -101,18 +103,23 @@ def _numbers(line: bytes) -> list[float] | None:
     return [*position, clock] if all(abs(p) < 1e6 for p in position) else None
 
 
-def _epoch(line: bytes) -> np.datetime64 | None:
-    """Time of an epoch line as written."""
+@lru_cache(maxsize=64)
+def _midnight(year: int, month: int, day: int) -> int:
+    return int(np.datetime64(f"{year:04d}-{month:02d}-{day:02d}", "ns").astype(np.int64))
+
+
+def _epoch(line: bytes) -> int | None:
+    """Time of an epoch line as written, in nanoseconds since 1970."""
     words = line[1:].split()
     try:
         year, month, day, hour, minute = (int(word) for word in words[:5])
         second = float(words[5])
         if not (1980 <= year < 2200 and 0 <= hour < 24 and 0 <= minute < 60 and 0 <= second < 61):
             return None
-        midnight = np.datetime64(f"{year:04d}-{month:02d}-{day:02d}", "ns")
+        midnight = _midnight(year, month, day)
     except (ValueError, IndexError):
         return None
-    return np.datetime64(midnight + np.timedelta64(round((hour * 3600 + minute * 60 + second) * 1e9), "ns"))
+    return midnight + round((hour * 3600 + minute * 60 + second) * 1e9)
 
 
 def _table(
