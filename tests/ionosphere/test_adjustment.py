@@ -14,7 +14,7 @@ from tests.ionosphere.ray_world import GALILEO, GLONASS, GPS, GPS_CIVIL, World
 from skylag.errors import NotEnough, Refused
 from skylag.ionosphere.adjustment import AdjustmentChoices, apply, content_per_ns, relative_mapping_sigma, solve
 from skylag.ionosphere.bias_algebra import join
-from skylag.ionosphere.geometry import mapping
+from skylag.ionosphere.geometry import mapping, modified_mapping
 from skylag.tables import Calibration
 
 
@@ -81,9 +81,13 @@ def test_factor_of_the_reference_pair(world: World) -> None:
 
 
 def test_mapping_doubt_is_the_derivative_of_the_mapping() -> None:
+    """Of either mapping; the modified one by its own formula, with a layer a kilometre higher."""
     elevation = np.array([15.0, 30.0, 60.0])
     both = mapping(elevation, 401e3) / mapping(elevation, 400e3) - 1.0
-    assert relative_mapping_sigma(elevation, 400e3, 1e3) == pytest.approx(-both, rel=5e-3)
+    assert relative_mapping_sigma(mapping(elevation, 400e3), 400e3, 1e3) == pytest.approx(-both, rel=5e-3)
+    angle = np.radians(0.9782 * (90.0 - elevation))
+    higher = (1.0 - (6371.0 / (6371.0 + 507.7) * np.sin(angle)) ** 2) ** -0.5 / modified_mapping(elevation) - 1.0
+    assert relative_mapping_sigma(modified_mapping(elevation), 400e3, 1e3) == pytest.approx(-higher, rel=0.025)
 
 
 # ---------------------------------------------------------------------------------------------- laws
@@ -107,7 +111,10 @@ def test_the_zero_mean_datum_is_as_good_for_content_as_a_product(world: World, c
 
 @pytest.mark.parametrize("what", ["two of six receivers", "a third of the day", "every other arc", "a constellation"])
 def test_sigma_never_shrinks_when_rays_are_removed(what: str, world: World, calibration: Calibration) -> None:
-    """The variances are found anew from fewer residuals, so single biases are granted a tenth."""
+    """What noise and levels leave; variances are found anew from fewer residuals, so single biases are granted a sixth.
+
+    The leanings are no noise: how far a wrong shape moves one satellite depends on where the rays happen to pass, and
+    may shrink; of the receivers, which they move together, by a third at most."""
     rays = world.rays
     hours = (rays.time - rays.time.min()).astype("timedelta64[s]").astype(float) / 3600.0
     keep = {
@@ -116,10 +123,14 @@ def test_sigma_never_shrinks_when_rays_are_removed(what: str, world: World, cali
         "every other arc": rays.arc % 2 == 0,
         "a constellation": np.array([p.system for p in rays.pairs])[rays.pair] == "G",
     }[what]
-    fewer, all_of_them = by_key(solve(rays.where(keep))), by_key(calibration)
-    ratio = [fewer[key][1] / all_of_them[key][1] for key in fewer]
-    assert min(ratio) > 0.9
+    less = solve(rays.where(keep))
+    own = [{key: np.sqrt(variance) for key, variance in zip(by_key(c), np.diag(c.covariance), strict=True)}
+           for c in (less, calibration)]  # fmt: skip
+    ratio = [own[0][key] / own[1][key] for key in own[0]]
+    assert min(ratio) > 0.85
     assert np.median(ratio) > 1.0
+    fewer, all_of_them = by_key(less), by_key(calibration)
+    assert min(fewer[key][1] / all_of_them[key][1] for key in fewer if key[0] == "receiver") > 0.67
 
 
 def test_order_of_rays_does_not_matter(world: World, calibration: Calibration, rng: np.random.Generator) -> None:
@@ -432,11 +443,10 @@ def test_a_bad_receiver_gets_larger_sigmas(world: World, calibration: Calibratio
 # ---------------------------------------------------------------------------------------------- the plasmasphere
 
 
-def test_growth_toward_the_feet_is_found_where_asked() -> None:
+def test_growth_toward_the_feet_is_found_from_the_day() -> None:
     """A world whose plasmasphere does not grow at all toward its feet: held at 1 all receivers err together."""
     world = ray_world.make(np.random.default_rng(4), foot_exponent=0.0)
-    held = solve(world.rays)
-    found = solve(world.rays, None, AdjustmentChoices(foot_exponent=None))
+    held, found = solve(world.rays, None, AdjustmentChoices(foot_exponent=1.0)), solve(world.rays)
     assert held.summary["high_layer_foot_exponent"] == 1.0
     assert abs(found.summary["high_layer_foot_exponent"]) < 0.15
     common = [float(world.errors(c.biases)[receivers(c)].mean()) for c in (held, found)]

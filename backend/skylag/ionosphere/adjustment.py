@@ -22,7 +22,9 @@ from skylag.ionosphere.normal import Design, Knowledge, Normal, place_terms, tim
 from skylag.ionosphere.plasmasphere import (
     FOOT_EXPONENT,
     FOOT_EXPONENT_REST,
+    FOOT_EXPONENT_REST_FEW,
     FOOT_EXPONENT_SIGMA,
+    HIDDEN_AMPLITUDE,
     HighLayer,
     along_rays,
 )
@@ -42,9 +44,8 @@ class AdjustmentChoices:
                         use for the same data, 350 to 450 km (broadcast model, IONEX maps)
     high_layer, high_layer_sigma  amplitude expected of the plasmasphere model: between drained and twice saturated
     foot_exponent, foot_exponent_sigma  how the plasmasphere grows toward its feet (see `plasmasphere`); None: found
-                        from the rays of the day, about 1.  Invented networks are much the better for that; on a real
-                        active day one receiver (ZIMM, 2015-08-23) moves by -0.3 ns, away from the published bias, since
-                        it takes up horizontal structure.  So it is held unless asked for, and its sigma leans on all
+                        from the rays of the day, about 1.  Also where the true one has another shape, level errors are
+                        a third to a half of those with the exponent held; what is not known of it leans on all
     drift_hours         None: one bias per receiver and day; otherwise one per so many hours, walking by about
                         drift_sigma_ns from one span to the next (receivers are seen to move by 0.5 to 3 ns in a day)
     prior_walk_ns_per_day  None: satellites named in the prior are held at it; otherwise the prior is drawn upon as the
@@ -60,7 +61,7 @@ class AdjustmentChoices:
     shell_height_sigma_m: float = 50_000.0
     high_layer: float = 1.0
     high_layer_sigma: float = 1.0
-    foot_exponent: float | None = FOOT_EXPONENT
+    foot_exponent: float | None = None
     foot_exponent_sigma: float = FOOT_EXPONENT_SIGMA
     robust_limit: float = 2.0
     rounds: int = 5
@@ -143,7 +144,7 @@ def apply(calibration: Calibration, rays: Rays) -> Samples:
     low = (stec - high) / rays.mapping
     vtec = low + high_vertical
     mapping_sigma = np.abs(low) * relative_mapping_sigma(
-        rays.elevation, rays.shell_height_m, calibration.shell_height_sigma_m
+        rays.mapping, rays.shell_height_m, calibration.shell_height_sigma_m
     )
     arc_sigma = calibration.arc_sigma / rays.mapping
     # Half of the mapping's doubt is taken as a ray's own (the profile differs by direction); all of it leans together.
@@ -165,13 +166,14 @@ def apply(calibration: Calibration, rays: Rays) -> Samples:
     )
 
 
-def relative_mapping_sigma(elevation: Floats, shell_height_m: float, height_sigma_m: float) -> Floats:
-    """Relative sigma of the vertical content through the single-shell mapping, for a shell height known to a sigma.
+def relative_mapping_sigma(mapping: Floats, shell_height_m: float, height_sigma_m: float) -> Floats:
+    """Relative sigma of the vertical content through a mapping whose shell height is known to a sigma; any shape.
 
-    d(ln M)/dh of M = 1/sqrt(1 - (R cos E/(R + h))^2), times the height sigma; any shape.  0.015 at 30 deg for 50 km.
+    Both mappings are M = 1/sqrt(1 - u^2) with u proportional to 1/(R + h): d(ln M)/dh = -(M^2 - 1)/(R + h), whatever
+    the angle in u is.  0.015 at 30 deg for 50 km.  The modified single layer stands 107 km higher than the shell of
+    the pierce points: its sigma comes out 1.6 % too large.
     """
-    u2 = (SHELL_EARTH_RADIUS_M * np.cos(np.radians(elevation)) / (SHELL_EARTH_RADIUS_M + shell_height_m)) ** 2
-    return np.asarray(height_sigma_m * u2 / (1.0 - u2) / (SHELL_EARTH_RADIUS_M + shell_height_m))
+    return np.asarray(height_sigma_m * (mapping**2 - 1.0) / (SHELL_EARTH_RADIUS_M + shell_height_m))
 
 
 # ---------------------------------------------------------------------------------------------- the equations
@@ -274,7 +276,7 @@ def _iterate(
     hour = ((part.time - part.time.min()).astype("timedelta64[ns]").astype(np.int64) // 3_600_000_000_000).astype(int)
     model = np.full(hour.max() + 1, 1.0)  # vertical, TECU; found from the residuals of each hour
     model_arc = 0.5  # slant-level error of the model along an arc, TECU; found from the scatter of arc effects
-    relative = relative_mapping_sigma(part.elevation, part.shell_height_m, choices.shell_height_sigma_m)
+    relative = relative_mapping_sigma(part.mapping, part.shell_height_m, choices.shell_height_sigma_m)
     loosen_arc, loosen_row = np.ones(arcs), np.ones(len(part))
     # A receiver whose levels or rows scatter more than is told of them gets larger sigmas, itself and for the others.
     worse_arc, worse_row = np.ones(len(part.receivers)), np.ones(len(part.receivers))
@@ -282,6 +284,7 @@ def _iterate(
     x = np.zeros(design.size)
     widened = 1.0
     exponent, exponent_sigma = _expected_feet(choices), choices.foot_exponent_sigma
+    few = len(np.unique(part.receiver)) < 4
     for turn in range(choices.rounds):
         told = part.noise_sigma**2 + (part.mapping * model[hour]) ** 2
         told += (part.mapping * relative * np.maximum(vertical_content, 0.0)) ** 2
@@ -314,13 +317,13 @@ def _iterate(
             loosen_row = np.minimum(loosen_row, 3.0)  # the first residuals still hold the whole model
         elif choices.foot_exponent is None and turn < choices.rounds - 1:
             change = layer.slant(exponent)[1] * x[-1]
-            step, exponent_sigma = _foot_step(normal, design, residual, change, exponent, choices)
+            step, exponent_sigma = _foot_step(normal, design, residual, change, exponent, few, choices)
             exponent = float(np.clip(exponent + step, *_FEET))
             design = replace(design, high=layer.slant(exponent)[0])
     amplitude = float(x[-1])
     disturbances = [
         part.mapping * relative * vertical_content,  # the height a single shell stands for
-        amplitude * _one_sigma(layer.slant, exponent, exponent_sigma),  # the shape of the plasmasphere
+        _doubt(layer.slant, exponent, exponent_sigma, amplitude, choices),  # the shape of the plasmasphere
     ]
     moved = np.array([normal.respond(disturbance) for disturbance in disturbances])
     covariance = normal.covariance()
@@ -343,23 +346,36 @@ def _expected_feet(choices: AdjustmentChoices) -> float:
 
 
 def _foot_step(
-    normal: Normal, design: Design, residual: Floats, change: Floats, exponent: float, choices: AdjustmentChoices
-) -> tuple[float, float]:
+    normal: Normal, design: Design, residual: Floats, change: Floats, exponent: float, few: bool,
+    choices: AdjustmentChoices,
+) -> tuple[float, float]:  # fmt: skip
     """By how much the foot exponent should grow, by what the rays have left over, and its sigma.
 
     change  (N,) slant content [TECU] per unit of the exponent.  One Gauss-Newton step beside all other unknowns.
+    few     there are fewer than four receivers
     """
     away = normal.weigh(change - design.predict(normal.respond(change)))
     told = choices.foot_exponent_sigma**-2
     known = float(change @ away) + told
     asked = float(change @ normal.weigh(residual)) + told * (FOOT_EXPONENT - exponent)
-    rest = min(FOOT_EXPONENT_REST, choices.foot_exponent_sigma)
+    rest = min(FOOT_EXPONENT_REST_FEW if few else FOOT_EXPONENT_REST, choices.foot_exponent_sigma)
     return asked / known, float(np.hypot(known**-0.5, rest))
 
 
-def _one_sigma(shape: Callable[[float], tuple[Floats, Floats]], exponent: float, sigma: float) -> Floats:
-    """How a shape changes when it grows one sigma faster toward its feet, the larger of the two ways [TECU]."""
-    return shape(exponent + sigma)[0] - shape(exponent)[0]
+def _doubt(
+    shape: Callable[[float], tuple[Floats, Floats]], exponent: float, sigma: float, amplitude: float,
+    choices: AdjustmentChoices,
+) -> Floats:  # fmt: skip
+    """One sigma of what the high layer may be off by, per ray [TECU]: growth toward the feet, the mean of both ways.
+
+    A plasmasphere of another shape is taken for a weaker or no layer of this one, and pulls the biases all the same: so
+    the doubt goes with the amplitude found and with what may hide from it.  Where no high layer is allowed for, all of
+    the usual one is left out.
+    """
+    if choices.high_layer_sigma < 0.01:
+        return HIDDEN_AMPLITUDE * shape(exponent)[0]
+    change = 0.5 * (shape(exponent + sigma)[0] - shape(exponent - sigma)[0])
+    return np.asarray(np.hypot(amplitude, HIDDEN_AMPLITUDE) * change)
 
 
 def _scatter_by(group: Ints, ratio: Floats, groups: int) -> Floats:
@@ -549,14 +565,16 @@ def _leanings(
     First the height that the single shell stands for, second how the plasmasphere grows toward its feet.  Each moves
     the biases, the amplitude of the high layer, and the way from slant to vertical together.
     """
-    relative = relative_mapping_sigma(rays.elevation, rays.shell_height_m, choices.shell_height_sigma_m)
+    relative = relative_mapping_sigma(rays.mapping, rays.shell_height_m, choices.shell_height_sigma_m)
     moved, amplitude = estimate.moved, float(estimate.x[-1])
     slant, above = layer.slant(estimate.exponent)[0], layer.above(estimate.exponent)[0]
-    slant_step = _one_sigma(layer.slant, estimate.exponent, estimate.exponent_sigma)
-    above_step = _one_sigma(layer.above, estimate.exponent, estimate.exponent_sigma)
+    slant_step, above_step = (
+        _doubt(shape, estimate.exponent, estimate.exponent_sigma, amplitude, choices)
+        for shape in (layer.slant, layer.above)
+    )
     by_bias = per_ns * (moved[:, rows[:, 0]] + moved[:, rows[:, 1]]) / rays.mapping
     by_amplitude = moved[:, -1:] * (above - slant / rays.mapping)
     leanings = by_bias + by_amplitude
     leanings[0] += relative * low_slant / rays.mapping
-    leanings[1] += amplitude * (slant_step / rays.mapping - above_step)
+    leanings[1] += slant_step / rays.mapping - above_step
     return np.asarray(leanings)

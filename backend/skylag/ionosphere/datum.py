@@ -25,6 +25,11 @@ _ANY_BIAS_NS = 100.0
 # satellites in January 2004, 1.27 ns over 32 in August 2015.
 _FIRST_CODES_SIGMA_NS = 1.3
 _FIRST_CODES = {"C1C", "C1W", "C1P"}
+# Numbers up to this are satellites of BeiDou-2, later ones of BeiDou-3 (BDS-SIS-ICD; as launched).
+_LAST_BEIDOU_2 = 18
+# Systems whose receiver biases come in parts that a table of biases does not tell apart: GLONASS by channel, BeiDou by
+# generation.
+_IN_PARTS = {"R": "by channel", "C": "by generation"}
 # Sigma of a record that tells none: scatter of published biases between agencies is
 # some tenths of a nanosecond (common practice).
 _UNTOLD_SIGMA_NS = 0.3
@@ -34,14 +39,14 @@ _UNTOLD_SIGMA_NS = 0.3
 class Unknowns:
     """The list of biases and each ray's two rows in it.
 
-    kind, name, pair (row number of the ray table's pairs), channel (GLONASS; 0 elsewhere), block (which span of the
-    day, where receivers are found per few hours; else 0); receiver_row, satellite_row (rays,)
+    kind, name, pair (row number of the ray table's pairs), part (GLONASS: channel, BeiDou: generation 2 or 3, else 0),
+    block (which span of the day, where receivers are found per few hours; else 0); receiver_row, satellite_row (rays,)
     """
 
     kind: tuple[str, ...]
     name: tuple[str, ...]
     pair: Ints
-    channel: Ints
+    part: Ints
     block: Ints
     receiver_row: Ints
     satellite_row: Ints
@@ -51,18 +56,21 @@ class Unknowns:
 
 
 def number(rays: Rays, channels: Mapping[str, int], block: Ints) -> Unknowns:
-    """Number the biases: one per receiver, pair, block and (GLONASS) channel; one per satellite and pair.
+    """Number the biases: one per receiver, pair, block and part (GLONASS channel, BeiDou generation); one per satellite
+    and pair.
 
+    The broadcast group delays of the two generations of BeiDou stand 6 ns apart in level (over one receiver of
+    2020-06-25 and one of 2024-03-30): held at them, one receiver bias cannot serve both.
     block  (rays,) number of the span of the day
     """
-    channel_of = np.array([channels.get(str(s), 0) if str(s)[0] == "R" else 0 for s in rays.satellites], dtype=np.int64)
-    channel = channel_of[rays.satellite]
+    part_of = np.array([_part(str(name), channels) for name in rays.satellites], dtype=np.int64)
+    part = part_of[rays.satellite]
     # A code bias belongs to the two codes, whatever phases go with them.
     codes = [(pair.system, pair.code1, pair.code2) for pair in rays.pairs]
     same = np.array([codes.index(code) for code in codes], dtype=np.int64)[rays.pair]
     pairs, blocks = len(rays.pairs), int(block.max(initial=0)) + 1
     # Channels run from -7 to +6 (ICD GLONASS 5.1); keys are few, so a table of those present beats sorting rays.
-    receiver_key, receiver_row = _present(((rays.receiver * pairs + same) * 32 + channel + 8) * blocks + block)
+    receiver_key, receiver_row = _present(((rays.receiver * pairs + same) * 32 + part + 8) * blocks + block)
     satellite_key, satellite_row = _present(rays.satellite * pairs + same)
     receiver_list = np.stack(
         [receiver_key // (blocks * 32 * pairs), receiver_key // (blocks * 32) % pairs,
@@ -75,11 +83,18 @@ def number(rays: Rays, channels: Mapping[str, int], block: Ints) -> Unknowns:
         name=(*(rays.receivers[i].name for i in receiver_list[:, 0]),
               *(str(rays.satellites[i]) for i in satellite_list[:, 0])),
         pair=np.concatenate([receiver_list[:, 1], satellite_list[:, 1]]),
-        channel=np.concatenate([receiver_list[:, 2], channel_of[satellite_list[:, 0]]]),
+        part=np.concatenate([receiver_list[:, 2], part_of[satellite_list[:, 0]]]),
         block=np.concatenate([receiver_list[:, 3], np.zeros(len(satellite_list), dtype=np.int64)]),
         receiver_row=receiver_row,
         satellite_row=satellite_row + count,
     )  # fmt: skip
+
+
+def _part(satellite: str, channels: Mapping[str, int]) -> int:
+    """The GLONASS channel or BeiDou generation of a satellite, 0 elsewhere."""
+    if satellite[0] == "R":
+        return channels.get(satellite, 0)
+    return (2 if int(satellite[1:]) <= _LAST_BEIDOU_2 else 3) if satellite[0] == "C" else 0
 
 
 def _present(key: Ints) -> tuple[Ints, Ints]:
@@ -205,7 +220,7 @@ class _Book:
         told = {row: found for row in satellites if (found := self.told(row)) is not None}
         pair = self.rays.pairs[self.unknowns.pair[rows[0]]]
         partners = self._partners(satellites)
-        what = f"{pair.system} {pair.name}" + (" by channel" if pair.system == "R" else "")
+        what = f"{pair.system} {pair.name}" + (f" {_IN_PARTS[pair.system]}" if pair.system in _IN_PARTS else "")
         if told and self.walk is None:
             for row, (value, sigma) in told.items():
                 self.hold(np.array([row]), np.ones(1), value, sigma)
@@ -237,15 +252,15 @@ class _Book:
         """Earlier biases as weak knowledge: the mean of the satellites is kept, each may have walked from there.
 
         Of receivers only the differences are used: what all of them err by together is not known to their sigmas.  Of
-        GLONASS not even these, since a table of biases does not tell a receiver's channels apart.
+        GLONASS and BeiDou not even these, since a table of biases does not tell a receiver's parts apart.
         """
         count = len(told)
         mean = float(np.mean([value for value, _ in told.values()]))
         self.knowledge.append(known(np.array(list(told)), np.full(count, 1.0 / count), mean, _EXACT))
-        by_channel = self.rays.pairs[self.unknowns.pair[rows[0]]].system == "R"
+        in_parts = self.rays.pairs[self.unknowns.pair[rows[0]]].system in _IN_PARTS
         receivers = {
             int(row): found for row in rows
-            if not by_channel and self.unknowns.kind[row] == "receiver" and (found := self.told(int(row))) is not None
+            if not in_parts and self.unknowns.kind[row] == "receiver" and (found := self.told(int(row))) is not None
         }  # fmt: skip
         for part, only_differences in ((told, False), (receivers, True)):
             if not part:
@@ -328,8 +343,8 @@ class _Book:
         return total, float(np.sqrt(variance))
 
     def _say(self, rows: Ints, what: str, words: str) -> None:
-        channel = int(self.unknowns.channel[rows[0]])
-        where = f"channel {channel:+d}: " if what.startswith("R") else ""
+        part = int(self.unknowns.part[rows[0]])
+        where = {"R": f"channel {part:+d}: ", "C": f"BeiDou-{part}: "}.get(what[0], "")
         for row in rows:
             self.words[row] = self.words[row] or where + words
         line = f"{what}: {words}"
@@ -352,11 +367,11 @@ def connect_blocks(unknowns: Unknowns, sigma_ns: float) -> list[Knowledge]:
 
 
 def _blocks_of_receivers(unknowns: Unknowns) -> list[list[int]]:
-    """The rows of each receiver, pair and channel, one per span of the day, in order of time."""
+    """The rows of each receiver, pair and part, one per span of the day, in order of time."""
     groups: dict[tuple[str, int, int], list[int]] = {}
     for row in np.argsort(unknowns.block, kind="stable"):
         if unknowns.kind[row] == "receiver":
-            key = (unknowns.name[row], int(unknowns.pair[row]), int(unknowns.channel[row]))
+            key = (unknowns.name[row], int(unknowns.pair[row]), int(unknowns.part[row]))
             groups.setdefault(key, []).append(int(row))
     return list(groups.values())
 

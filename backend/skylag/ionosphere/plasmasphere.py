@@ -16,8 +16,12 @@ from skylag.tables import Floats, Ints, Rays
 # J. Geophys. Res. 97, 1097-1108; coefficients from memory).
 _LOG_DENSITY, _LOG_SLOPE = 3.9043, -0.3145
 # Along a field line the density grows toward its feet as a power of (top radius / radius); inside the plasmasphere the
-# exponent is about 1, mostly between 0 and 2 (Denton et al. 2004, J. Geophys. Res. 109, A03215; from memory).
-FOOT_EXPONENT, FOOT_EXPONENT_SIGMA = 1.0, 0.5
+# exponent is about 1, mostly between 0 and 2 (Denton et al. 2004, J. Geophys. Res. 109, A03215; from memory).  Real
+# days need not follow the power law at all, so the whole of that range is taken as one sigma.
+FOOT_EXPONENT, FOOT_EXPONENT_SIGMA = 1.0, 1.0
+# A plasmasphere of another shape can look like none of this one and still pull the biases: what may hide so is taken to
+# be as strong as the usual one.
+HIDDEN_AMPLITUDE = 1.0
 # Outside the plasmapause the density falls by one to two orders of magnitude; a quiet plasmapause lies near L = 4.5
 # (5.6 - 0.46 Kp, the same paper; from memory).
 _PLASMAPAUSE_L, _PLASMAPAUSE_WIDTH = 4.5, 0.3
@@ -28,9 +32,10 @@ BASE_HEIGHT_M, TOP_HEIGHT_M = 1.0e6, 2.02e7
 _NODES = np.polynomial.legendre.leggauss(14)
 
 
-# Once a day's data have told the exponent, it still differs by hour and field line within the network: half of how it
-# strays from day to day is kept (judgement).
-FOOT_EXPONENT_REST = 0.25
+# Once a day's data have told the exponent, what the shape still lacks is taken as so much of exponent: for a network,
+# and for fewer than four receivers, which tell slopes of the dense layer and the plasmasphere's one side less well
+# apart.  Calibrated on invented days with plasmaspheres of other shapes (tests/simulated/test_other_plasmaspheres.py).
+FOOT_EXPONENT_REST, FOOT_EXPONENT_REST_FEW = 0.33, 0.75
 # Exponents at which shapes are worked out; between them the logarithm of a shape is taken as a parabola.
 _EXPONENTS = (0.0, 1.0, 2.0)
 
