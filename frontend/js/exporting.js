@@ -33,6 +33,8 @@ export function mapRows(fields, index, states, unseenSigma) {
 }
 
 export const MAP_HEADS = ["time_utc", "lat_deg", "lon_deg", "vertical_delay_m", "vertical_delay_sigma_m", "slope_mm_per_km", "state"];
+export const YEAR_HEADS = ["day", "worst_state", "share_broken", "share_strained", "share_unseen", "slope_mm_per_km", "kp_highest", "ap_daily", "flags"];
+export const NETWORK_HEADS = ["day", "receiver", "received", "gaps", "slips", "arcs", "level_sigma_tecu", "left_out_rms_tecu", "biases_ns", "said"];
 export const SERIES_HEADS = ["time_utc", "vertical_delay_m", "vertical_delay_sigma_m", "slope_mm_per_km", "slope_sigma_mm_per_km", "state"];
 
 /** @param {import("./api.js").Series} series */

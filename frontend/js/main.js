@@ -101,7 +101,7 @@ const present = later((view) => view.ask === "now", async () => {
 });
 const network = later((view) => view.ask === "network", async () => {
   const { NetworkPanel } = await import("./panels/network.js");
-  return new NetworkPanel({ said: at("network-said"), table: at("network-table") }, state);
+  return new NetworkPanel({ said: at("network-said"), table: at("network-table"), csv: at("network-csv") }, state);
 });
 const ahead = later((view) => view.ask === "ahead", async () => {
   const { AheadPanel } = await import("./panels/ahead.js");
@@ -121,7 +121,7 @@ const masthead = new MastheadPanel(
   {
     name: at("region-name"), day: at("day"), before: at("day-before"), after: at("day-after"), clock: at("clock"), layer: at("layer"),
     theme: at("theme"), simulated: at("simulated"), age: at("age"), origin: at("origin"), caution: at("caution"),
-    csv: at("flags-csv"), geojson: at("flags-geojson"), png: at("map-png"), svg: at("map-svg"), print: at("print"),
+    csv: at("flags-csv"), geojson: at("flags-geojson"), png: at("map-png"), svg: at("map-svg"),
     netcdf: at("day-netcdf"), ionex: at("day-ionex"), asks: at("asks"), printed: at("printed"), announce: at("announce"),
   },
   state,
@@ -176,6 +176,7 @@ document.addEventListener("click", async (event) => {
   }
 });
 at("map-csv").addEventListener("click", () => chart.textTable());
+at("year-csv").addEventListener("click", () => year.textTable());
 at("series-csv").addEventListener("click", () => series.textTable());
 
 /** @type {import("./api.js").DayEntry[]} */ let days = [];

@@ -87,10 +87,13 @@ export class ChartPanel {
     this.#note.textContent = text;
   }
 
-  /** The numbers of the map as a text table. */
+  /** The numbers of the map on the screen as a text table: of a difference, the differences. */
   textTable() {
-    const { fields, index } = this.#scene;
-    if (fields && index >= 0) save(csvText(MAP_HEADS, mapRows(fields, index, STATES, this.#scene.day.region.unseenSigma)), this.#name("map.csv"), "text/csv");
+    const { fields, index, difference, unseenSigma } = this.#contents();
+    if (!fields || index < 0) return;
+    const rows = mapRows(fields, index, STATES, unseenSigma);
+    if (difference) save(csvText(MAP_HEADS.slice(0, -1), rows.map((row) => row.slice(0, -1))), this.#name("difference.csv"), "text/csv");
+    else save(csvText(MAP_HEADS, rows), this.#name("map.csv"), "text/csv");
   }
 
   #name(ending) {
@@ -117,24 +120,27 @@ export class ChartPanel {
       make("thead", {}, make("tr", {}, make("td"), ...Array.from(lons, (lon) => make("th", { scope: "col", class: "number", text: lonText(lon) })))), body));
   }
 
-  /** A picture of the chart as it stands, with title, colour bar and caution. @param {"png"|"svg"} format */
+  /** A picture of the chart as it stands, with title, colour bar and caution; of two side by side, one of each. @param {"png"|"svg"} format */
   async picture(format) {
-    const { day, view, time } = this.#scene;
+    const { day, view, time, other } = this.#scene;
     const contents = this.#contents();
-    const frame = contents.frame;
     const height = 1000;
-    const figure = mapFigure({
-      ...contents,
-      width: 1200,
-      title: `<b>${day.region.name}</b>  ${LAYER_WORDS[view.layer].title}${contents.difference ? `, ${WORDS.lessThat} ${this.#scene.other.label}` : ""}<br>${dateText(time)}, ${bothClocks(time, day.region.timezone, view.clock)}`,
-      foot: [day.simulated ? WORDS.simulated : "", WORDS.dotted, day.caution].filter(Boolean).join("<br>"),
-    });
-    await takePicture(figure, {
-      width: Math.round((height - 172) * aspectOf(frame) + 236),
-      height,
-      format,
-      name: this.#name(`${view.layer}.${format}`),
-    });
+    const take = (what, heading, ending) =>
+      takePicture(
+        mapFigure({ ...what, width: 1200, title: `<b>${day.region.name}</b>  ${heading}`, foot: [day.simulated ? WORDS.simulated : "", WORDS.dotted, day.caution].filter(Boolean).join("<br>") }),
+        { width: Math.round((height - 172) * aspectOf(contents.frame) + 236), height, format, name: this.#name(`${view.layer}${ending}.${format}`) },
+      );
+    const { title } = LAYER_WORDS[view.layer];
+    const when = `<br>${dateText(time)}, ${bothClocks(time, day.region.timezone, view.clock)}`;
+    await take(contents, `${title}${contents.difference ? `, ${WORDS.lessThat} ${other.label}` : ""}${when}`, contents.difference ? "-difference" : "");
+    if (!this.#other.box.hidden && other?.fields) await take(this.#otherContents(contents), `${title}<br>${other.label}, ${bothClocks(time, day.region.timezone, view.clock)}`, "-other");
+  }
+
+  /** The map compared with: the same frame and scale, without this day's flags and states. */
+  #otherContents(contents) {
+    const { other } = this.#scene;
+    const sites = contents.sites.map(({ state, ...site }) => site);
+    return { ...contents, fields: other?.fields ?? null, index: other?.index ?? -1, flags: [], rays: [], sites };
   }
 
   close() {
@@ -204,7 +210,7 @@ export class ChartPanel {
     }
   }
 
-  /** The other day's map beside: the same frame and scale, without this day's flags and states. */
+  /** The other day's map beside. */
   #paintOther(contents) {
     const { box, element, cells, frame, framed } = this.#other;
     const width = box.hidden ? 0 : element.clientWidth;
@@ -212,8 +218,7 @@ export class ChartPanel {
     const { other } = this.#scene;
     const height = heightOf(contents.frame, width);
     element.style.height = `${height}px`;
-    const sites = contents.sites.map(({ state, ...site }) => site);
-    const figure = mapFigure({ ...contents, fields: other?.fields ?? null, index: other?.index ?? -1, flags: [], rays: [], sites, width });
+    const figure = mapFigure({ ...this.#otherContents(contents), width });
     paint(cells, figure, projection(figure.layout, width, height));
     element.dataset.drawn = other?.fields ? "fields" : "base";
     const key = JSON.stringify([contents.frame, contents.theme, width, height]);

@@ -30,7 +30,7 @@ export class MastheadPanel {
     elements.layer.addEventListener("change", (event) => state.change({ layer: event.target.value }));
     elements.png.addEventListener("click", () => this.#picture("png"));
     elements.svg.addEventListener("click", () => this.#picture("svg"));
-    elements.print.addEventListener("click", () => window.print());
+    for (const button of document.querySelectorAll("[data-print]")) button.addEventListener("click", () => window.print());
     elements.asks.addEventListener("click", this.#ask);
     elements.theme.addEventListener("click", this.#turn);
     window.matchMedia("(prefers-color-scheme: dark)").addEventListener("change", this.#system);

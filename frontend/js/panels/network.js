@@ -3,6 +3,7 @@
  */
 
 import * as api from "../api.js";
+import { csvText, NETWORK_HEADS, save } from "../exporting.js";
 import { median } from "../figures/year.js";
 import { asSentence, dayText, fixed, shareText, WORDS, withSigma } from "../words.js";
 import { draft, make, trouble } from "./parts.js";
@@ -18,10 +19,11 @@ export class NetworkPanel {
   #shown = "";
   #asking = null;
 
-  /** @param {{said: HTMLElement, table: HTMLElement}} elements @param {import("../state.js").State} state */
+  /** @param {{said: HTMLElement, table: HTMLElement, csv: HTMLElement}} elements @param {import("../state.js").State} state */
   constructor(elements, state) {
     this.#elements = elements;
     this.#state = state;
+    elements.csv.addEventListener("click", this.#take);
   }
 
   /** @param {import("../main.js").Scene} scene */
@@ -45,7 +47,17 @@ export class NetworkPanel {
 
   close() {
     this.#asking?.abort();
+    this.#elements.csv.removeEventListener("click", this.#take);
   }
+
+  /** What each receiver gave on the chosen day, as a text table. */
+  #take = () => {
+    const date = this.#state.view.day;
+    const today = this.#days?.find((one) => one.day === date);
+    const rows = (today?.receivers ?? []).map((one) => [date, one.name, one.received, one.gaps, one.slips, one.arcs, one.level, one.leftOut,
+      one.biases.map((bias) => `${bias.pair} ${bias.value.toFixed(3)} +- ${bias.sigma.toFixed(3)}`).join("; "), one.faults.join(" ")]);
+    save(csvText(NETWORK_HEADS, rows), `skylag-receivers-${date}.csv`, "text/csv");
+  };
 
   async #load(region, day) {
     this.#asking?.abort();

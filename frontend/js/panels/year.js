@@ -2,6 +2,7 @@
  * Past: the stored days of a span as a strip, filtered by site, season and worst state; and the day to compare with.
  */
 
+import { csvText, save, YEAR_HEADS } from "../exporting.js";
 import { chosenDays, sharesOf, SEASONS, worstOf, yearFigure } from "../figures/year.js";
 import { FIELD } from "../state.js";
 import { dayText, FIELD_WORDS, fixed, monthText, SEASON_WORDS, shareText, STATE_WORDS, WORDS } from "../words.js";
@@ -155,6 +156,16 @@ export class YearPanel {
       make("table", {}, make("caption", { text: WORDS.yearCaption }),
         make("thead", {}, make("tr", {}, ...heads.map((text, i) => make("th", { scope: "col", text, class: i > 1 ? "number" : undefined })))), body),
     );
+  }
+
+  /** The days shown as a text table. */
+  textTable() {
+    const { who } = this.#elements;
+    const rows = (this.#figure?.columns ?? []).map(({ entry, state }) => {
+      const shares = sharesOf(entry, who.value) ?? {};
+      return [entry.day, state, ...["broken", "strained", "unseen"].map((name) => shares[name] ?? null), entry.slope, entry.kp, entry.ap, entry.flags];
+    });
+    save(csvText(YEAR_HEADS, rows), `skylag-days-${this.#scene.view.region.toLowerCase().replace(/[^\p{L}\p{N}]+/gu, "-")}.csv`, "text/csv");
   }
 
   #open(column) {
