@@ -120,22 +120,21 @@ def _at(system: System, x: Floats, y: Floats, over_km: float, around_km: float) 
     distance = np.sqrt(east_km**2 + north_km**2)
     around = surroundings(system, x, y, distance, around_km)
 
-    def estimate(
-        k: npt.NDArray[Any], f: Floats, own: float, factor: Floats, more: Floats | float
-    ) -> tuple[Floats, Floats]:
+    def estimate(k: npt.NDArray[Any], f: Floats, own: float) -> tuple[Floats, Floats, Floats]:
+        """Value, variance by the covariance, and the square by which all contents lean together."""
         white = k @ system.whitening.T.astype(k.dtype)  # (places, rays)
         answer = k @ system.weights.astype(k.dtype) + f @ system.plane
         open_drift = f - white @ system.white_drift.astype(k.dtype)
         variance = own - np.einsum("ij,ij->i", white, white).astype(np.float64)
         variance += np.einsum("ij,jk,ik->i", open_drift, system.normal_inverse, open_drift)
-        together = np.sum(answer[:, 1:] ** 2, axis=1)
-        return answer[:, 0], np.sqrt(np.maximum(variance, 0.0) * factor + more + together)
+        return answer[:, 0], np.maximum(variance, 0.0), np.sum(answer[:, 1:] ** 2, axis=1)
 
     # A cell's value is that of a place in it, so the unresolved grain is part of its uncertainty.
-    value, sigma = estimate(
-        spread2 * np.exp(distance / -reach), plane_terms(x, y), spread2 + residual.grain**2,
-        np.maximum(around.roughness, 1.0), 0.0,
-    )  # fmt: skip
+    alone = spread2 + residual.grain**2
+    value, variance, together = estimate(spread2 * np.exp(distance / -reach), plane_terms(x, y), alone)
+    # Of what content departs from a plane around, the rays leave unknown the share that they leave of the residual.
+    unknown = np.minimum(variance / alone, 1.0) * around.departure2
+    sigma = np.sqrt(variance * np.maximum(around.roughness, 1.0) + unknown + together)
     # Slopes need no more than single precision: measured on a storm to differ by less than 1e-4 of their sigma.
     half, decay = np.float32(0.5 * over_km), np.float32(-1.0 / reach)
     east4, north4 = east_km.astype(np.float32), north_km.astype(np.float32)
@@ -150,15 +149,18 @@ def _at(system: System, x: Floats, y: Floats, over_km: float, around_km: float) 
 
     apart = 2.0 * spread2 * (1.0 - np.exp(-over_km / reach))
     still, step = np.zeros(len(x)), np.full(len(x), over_km / 1000.0)
-    # Two places this far apart may each depart from the local plane on their own.
-    steps = 2.0 * around.departure2
-    ways = ((east4, north4, np.stack([still, step, still], axis=1)),
-            (north4, east4, np.stack([still, still, step], axis=1)))  # fmt: skip
-    (east, east_sigma), (north, north_sigma) = (
-        estimate(difference(along, across), drift, apart, around.usual_roughness, steps)
-        for along, across, drift in ways
-    )
-    return Estimates(value, sigma, east / over_km, east_sigma / over_km, north / over_km, north_sigma / over_km)
+    slopes = []
+    for along, across, drift in (
+        (east4, north4, np.stack([still, step, still], axis=1)),
+        (north4, east4, np.stack([still, still, step], axis=1)),
+    ):
+        change, variance, together = estimate(difference(along, across), drift, apart)
+        # Two places this far apart may each depart from the local plane on their own.
+        slopes += [
+            change / over_km,
+            np.sqrt(variance * around.usual_roughness + 2.0 * around.departure2 + together) / over_km,
+        ]
+    return Estimates(value, sigma, *slopes)
 
 
 @dataclass(frozen=True)
