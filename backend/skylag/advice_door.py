@@ -6,20 +6,23 @@ Thin: parses, calls, prints, writes the files asked for.
 import argparse
 import json
 import sys
+from collections.abc import Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from skylag import settings
-from skylag.errors import FormatError, Missing, Refused
+from skylag.errors import FormatError, Missing, NotEnough, Refused
 from skylag.formats import calendar, sheet, site_lists
-from skylag.impact.satellite_augmentation import LEVEL, USUAL_LEVELS, ServiceChoices
+from skylag.impact.ground_augmentation import StationChoices, next_front
+from skylag.impact.satellite_augmentation import LEVEL, USUAL_LEVELS
+from skylag.impact.shapes import SHAPES
 from skylag.impact.survey import METHODS, Job
 from skylag.tables import Site
 
 if TYPE_CHECKING:
-    from skylag.jobs.advising import DayAdvice, Desk
+    from skylag.jobs.advising import AskedService, DayAdvice, Desk
 
 
 def add(commands: Any, caution: str) -> None:
@@ -46,16 +49,41 @@ def _advise_parser(commands: Any, caution: str) -> None:
     parser.add_argument("--day", default="", metavar="YYYY-MM-DD", help="the newest day without")
     parser.add_argument("--site", default="", metavar="NAME", help="a site of the region; without, all in a line each")
     parser.add_argument("--at", nargs=2, type=float, action="append", metavar=("LAT", "LON"),
-                        help="a place that is no site; several make an area or a route")  # fmt: skip
+                        help="a place that is no site; give several with --shape")  # fmt: skip
+    parser.add_argument("--shape", default="points", choices=tuple(SHAPES), help="what several places mean")
     parser.add_argument("--method", default="rtk", choices=tuple(METHODS))
     parser.add_argument("--baseline", type=float, default=10.0, metavar="KM", help="to the base or reference (10)")
+    parser.add_argument("--reference", action="append", default=[], metavar="NAME",
+                        help="a receiver in use, may come again: sets the baseline, or is of the network")  # fmt: skip
+    parser.add_argument("--reference-at", nargs=2, type=float, action="append", default=[], metavar=("LAT", "LON"),
+                        help="the same by place, for other stations")  # fmt: skip
     parser.add_argument("--tolerance", nargs=2, type=float, default=(30.0, 50.0), metavar=("ACROSS", "HEIGHT"),
                         help="in mm, at 95 %% (30 50)")  # fmt: skip
     parser.add_argument("--hours", default="", metavar="HH:MM-HH:MM", help="working hours in the region's own time")
+    parser.add_argument("--session", type=float, default=60.0, metavar="MINUTES", help="of the method static (60)")
+    parser.add_argument("--least-window", type=float, default=15.0, metavar="MINUTES", help="shorter is of no use (15)")
+    parser.add_argument("--mask", type=float, default=15.0, metavar="DEG", help="lowest elevation in survey (15)")
+    parser.add_argument("--satellites", type=int, default=5, metavar="N", help="needed at least (5)")
+    parser.add_argument("--dilution", type=float, default=6.0, metavar="N", help="dilution of position at most (6)")
+    parser.add_argument("--fixing", type=float, default=0.1, metavar="CHANCE", help="that fixing suffers, at most (.1)")
     parser.add_argument("--failed", default="", metavar="UTC", help="was it the ionosphere, at 2031-03-12T07:05:00Z?")
-    parser.add_argument("--levels", default=",".join(USUAL_LEVELS), metavar="LIST", help="service levels of approaches")
-    parser.add_argument("--corrections", type=float, default=3.0, metavar="METRES",
-                        help="bound of clock and orbit corrections, one of the published steps (3)")  # fmt: skip
+    service = parser.add_argument_group("what the region's service and the aircraft are assumed to do")
+    service.add_argument("--levels", default="", metavar="LIST",
+                         help=f"service levels of approaches ({','.join(USUAL_LEVELS)})")  # fmt: skip
+    service.add_argument("--corrections", type=float, default=3.0, metavar="METRES",
+                         help="bound of clock and orbit corrections, one of the published steps (3)")  # fmt: skip
+    service.add_argument("--systems", default="G", metavar="LETTERS", help="satellites that are augmented (G)")
+    service.add_argument("--lowest", type=float, default=5.0, metavar="DEG", help="lowest elevation in approaches (5)")
+    service.add_argument("--noise", type=float, default=0.36, metavar="METRES", help="of the aircraft's receiver (.36)")
+    service.add_argument("--usual-grid", type=float, default=3.0, metavar="METRES",
+                         help="grid confidence of a usual day, which parts geometry from ionosphere (3)")  # fmt: skip
+    station = parser.add_argument_group("what a ground-based station and its aircraft are assumed to do")
+    station.add_argument("--spread", type=float, default=4.0, metavar="MM_PER_KM", help="announced by the station (4)")
+    station.add_argument("--distance", type=float, default=6.0, metavar="KM", help="from station to aircraft (6)")
+    station.add_argument("--speed", type=float, default=70.0, metavar="M_PER_S", help="of the aircraft (70)")
+    station.add_argument("--smoothing", type=float, default=100.0, metavar="S", help="of the aircraft's receiver (100)")
+    station.add_argument("--station-lowest", type=float, default=15.0, metavar="DEG", help="lowest elevation used (15)")
+    station.add_argument("--coming", default="", metavar="UTC", help="the front that comes next after this instant")
     parser.add_argument("--sheet", type=Path, metavar="FILE", help="write a sheet: .html or .pdf")
     parser.add_argument("--calendar", type=Path, metavar="FILE", help="write windows and outages as .ics")
     parser.set_defaults(run=_advise)
@@ -102,14 +130,22 @@ def _advise(options: argparse.Namespace) -> int:
     return 0
 
 
-def _job(day: "DayAdvice", site: Site, options: argparse.Namespace) -> Job:
-    places = tuple((lat, lon) for lat, lon in options.at) if options.at else ((site.lat, site.lon),)
-    references = tuple(day.receiver_places()) if options.method == "network" else ()
+def _job(day: "DayAdvice", site: str, options: argparse.Namespace) -> Job:
+    from skylag.jobs.advising import AskedJob
+
     across, height = options.tolerance
-    return Job(
-        site.name, places, options.method, options.baseline, references, across, height,
-        day.local_hours(options.hours),
+    stations = [*options.reference, *_pairs(options.reference_at)]
+    return day.job(
+        AskedJob(
+            site, ";".join(_pairs(options.at or ())), options.shape, options.method, options.baseline,
+            ";".join(stations), across, height, options.hours, options.session, options.least_window, options.mask,
+            options.satellites, options.dilution, options.fixing,
+        )
     )  # fmt: skip
+
+
+def _pairs(places: Iterable[Sequence[float]]) -> list[str]:
+    return [f"{lat!r},{lon!r}" for lat, lon in places]
 
 
 def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
@@ -118,55 +154,49 @@ def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
     clock = report.Clock(day.record.region.timezone)
     if day.record.origin.simulated:
         print("Invented data: nothing here was measured.")
-    if options.at:
-        places = [asking.place(*pair) for pair in options.at]
-        lat, lon = places[0]
-        more = f" and {len(options.at) - 1} more" if len(options.at) > 1 else ""
-        site = Site(options.site or f"{lat:g}, {lon:g}{more}", lat, lon)
-    elif options.site:
-        site = day.site(options.site)
-    else:
+    if not options.at and not options.site:
         for one in day.record.region.sites:
-            print(f"{one.name}: {report.survey_verdict(desk.survey(day, _job(day, one, options)), clock)}")
+            advice = desk.survey(day, _job(day, one.name, options))
+            print(f"{one.name}: {report.survey_verdict(advice, clock)}")
         print("For one of them, with reasons and assumptions: --site NAME")
         return
-    job = _job(day, site, options)
+    for pair in options.at or ():
+        asking.place(*pair)
+    job = _job(day, options.site, options)
+    site = Site(job.name, *job.places[0], "job") if options.at else day.site(options.site)
     advice = desk.survey(day, job)
     entries = report.survey_entries(advice)
     print(f"{site.name}, {day.record.head.day}, {day.record.region.name} (times UTC)")
     print(report.survey_verdict(advice, clock))
     for window in advice.windows:
         print(f"  {clock.utc(window.start)} - {clock.utc(window.end)}  {window.verdict:7} {window.why}")
+    for sentence in report.survey_figures(advice, clock):
+        print(sentence)
     if options.failed:
         found = day.explain(job, asking.instant(options.failed, "failed"))
         print(f"Was it the ionosphere at {options.failed}? {found.verdict.capitalize()}.")
         for sentence in found.evidence:
             print(f"  {sentence}")
     assumed = [*advice.assumptions]
-    choices = ServiceChoices(correction_m=options.corrections)
+    service = _service(options)
     if site.kind == "aerodrome":
-        names = tuple(part.strip() for part in options.levels.split(",") if part.strip())
-        approaches = day.approaches([site], choices, names)
-        station = day.station(site)
-        print(report.approach_verdict(approaches, clock))
-        for outage in approaches.outages:
-            span = f"{clock.utc(outage.start)} - {clock.utc(outage.end)}"
-            print(f"  {span}  no {outage.level:8} {outage.cause}: {outage.why}")
-        print(report.station_verdict(station))
-        entries += report.approach_entries(approaches)
-        assumed += [*approaches.assumptions, *station.assumptions]
+        told, more, entries_of_approaches = _aerodrome(day, site, options)
+        print("\n".join(told))
+        assumed += more
+        entries += entries_of_approaches
     try:
         left = day.broadcast_model(site)
         if np.isfinite(left.day_range_95_m):
             print(f"Users of one frequency: the broadcast model leaves {left.day_range_95_m:.1f} m of range (95 %).")
-    except Missing as trouble:
+            assumed += left.assumptions
+    except (Missing, NotEnough) as trouble:
         print(f"Users of one frequency: {trouble.message}")
     print("Assumed:")
     for sentence in dict.fromkeys(assumed):
         print(f"  {sentence}")
     print(advice.caution)
     if options.sheet:
-        title, blocks = report.of_site(day, site, advice, choices)
+        title, blocks = report.of_site(day, site, advice, service.choices, service.names)
         if options.sheet.suffix == ".pdf":
             options.sheet.write_bytes(sheet.to_pdf(title, blocks, day.record.head.saved_at))
         else:
@@ -176,6 +206,44 @@ def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
         text = calendar.to_ics(entries, site.name, day.record.head.saved_at)
         options.calendar.write_bytes(text.encode("utf-8"))
         print(f"calendar: {options.calendar}")
+
+
+def _service(options: argparse.Namespace) -> "AskedService":
+    from skylag.jobs.advising import AskedService
+
+    return AskedService(
+        options.levels, options.systems, options.lowest, options.corrections, options.noise, options.usual_grid
+    )
+
+
+def _aerodrome(
+    day: "DayAdvice", site: Site, options: argparse.Namespace
+) -> tuple[list[str], list[str], list[calendar.Entry]]:
+    """Lines on approaches and the ground-based station, what they assume, and entries of a calendar."""
+    from skylag.web import asking, report
+
+    clock, service = report.Clock(day.record.region.timezone), _service(options)
+    station = day.station(
+        site,
+        StationChoices(options.spread, options.distance, options.speed, options.smoothing, options.station_lowest),
+    )
+    told, assumed, entries = [], [*station.assumptions], []
+    try:
+        approaches = day.approaches([site], service.choices, service.names)
+    except NotEnough as trouble:
+        told.append(f"Approaches cannot be judged: {trouble.message}")
+    else:
+        told.append(report.approach_verdict(approaches, clock))
+        for outage in approaches.outages:
+            span = f"{clock.utc(outage.start)} - {clock.utc(outage.end)}"
+            told.append(f"  {span}  no {outage.level:8} {outage.cause}: {outage.why}")
+        assumed = [*approaches.assumptions, *assumed]
+        entries = report.approach_entries(approaches)
+    told.append(report.station_verdict(station))
+    if options.coming:
+        coming = next_front(site, day.flags, asking.instant(options.coming, "coming"))
+        told.append(f"Next front after {options.coming}: {coming.words if coming else 'none is on its way'}.")
+    return told, assumed, entries
 
 
 def _sites(options: argparse.Namespace) -> int:

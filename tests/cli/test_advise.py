@@ -46,6 +46,40 @@ def test_a_place_that_is_no_site(place: str, capsys: pytest.CaptureFixture[str])
     assert " 0 min to work" in told  # the second place is off the map
 
 
+def test_a_job_with_every_word(place: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """What was asked comes back with the answer, and the same job over an area has no more time to work."""
+    ring = ["--at", "-41", "146.5", "--at", "-41", "147.5", "--at", "-41.6", "147.5"]
+    words = ["--method", "static", "--session", "30", "--least-window", "10", "--mask", "10", "--satellites", "6",
+             "--dilution", "5", "--fixing", "0.2", "--tolerance", "150", "250", "--reference", "GULL",
+             "--reference-at", "-41.2", "147"]  # fmt: skip
+    assert main(["advise", "--archive", place, *ring, "--shape", "area", *words]) == 0
+    told = capsys.readouterr().out
+    for word in ("area of 3 points from -41, 146.5", "Survey (static, over ", "150 mm across", "mean over 30 minutes",
+                 "above 10 degrees", "cells of the map that the area touches", "Longest baseline within tolerance",
+                 "Hourly index", "Differential delay at"):  # fmt: skip
+        assert word in told
+    assert main(["advise", "--archive", place, *ring[:3], "--shape", "route"]) == 3
+    assert "needs 2 places" in capsys.readouterr().err
+    assert main(["advise", "--archive", place, *ring[:3], "--reference", "NONE"]) == 3
+    assert "no receiver NONE" in capsys.readouterr().err
+
+
+def test_what_service_and_station_are_assumed_to_do(place: str, capsys: pytest.CaptureFixture[str]) -> None:
+    words = ["--levels", "APV-II,CAT-I", "--corrections", "6", "--systems", "GE", "--lowest", "7", "--noise", "0.2",
+             "--usual-grid", "4.5", "--spread", "6", "--distance", "9", "--speed", "80", "--smoothing", "30",
+             "--station-lowest", "10", "--coming", "2031-05-11T04:30:00Z"]  # fmt: skip
+    assert main(["advise", "--archive", place, "--site", "Gannet Field", *words]) == 0
+    told = capsys.readouterr().out
+    for word in ("APV-II", "CAT-I", "bounded by 6 m", "systems GE, above 7 degrees", "divergence 0.2 m", "4.5 m",
+                 "a spread of 6 mm/km", "9 km away at 80 m/s", "over 30 s", "at 10 degrees sees",
+                 "Next front after 2031-05-11T04:30:00Z"):  # fmt: skip
+        assert word in told
+    assert "LPV-200" not in told
+    for wrong in (["--corrections", "2"], ["--noise", "0"], ["--spread", "30"], ["--levels", "X"]):
+        assert main(["advise", "--archive", place, "--site", "Gannet Field", *wrong]) == 3
+        assert capsys.readouterr().err
+
+
 @pytest.mark.parametrize(
     ("more", "word"),
     [(["--day", "2031-01-01"], "keeps no such day"), (["--site", "Atlantis"], "has no site"),

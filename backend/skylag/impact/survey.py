@@ -181,7 +181,7 @@ def advise(
     sky  satellites at the epochs of the maps; without it the geometry is that of the nominal constellation, and said
     """
     limits = thresholds or Thresholds()
-    seen, warned, middle, sigma, own = _differential(job, fields, limits)
+    seen, looked, warned, middle, sigma, own = _differential(job, fields, limits)
     geometry = _geometries(job, sky, fields.times, shell_height_m)
     horizontal = np.stack([one[0] for one in geometry])
     vertical = np.stack([one[1] for one in geometry])
@@ -204,7 +204,9 @@ def advise(
         "vertical_95": vertical * d95, "fixing": fixing,
     }  # fmt: skip
     told = {name: values.max(axis=0) for name, values in worst.items()}  # NaN anywhere stays NaN
-    verdict, reasons = _verdicts(job, np.asarray(seen.all(axis=0)), warned.max(axis=0), told, count, dilution)
+    verdict, reasons = _verdicts(
+        job, np.asarray(seen.all(axis=0)), np.asarray(looked.all(axis=0)), warned.max(axis=0), told, count, dilution
+    )
     hours, index = hourly_index(fields, job.places)
     return Advice(
         job=job, times=fields.times, longest_km=longest.min(axis=0), count=count, dilution=dilution, verdict=verdict,
@@ -218,10 +220,10 @@ def advise(
 
 
 def _differential(job: Job, fields: Fields, limits: Thresholds) -> tuple[
-    Bools, npt.NDArray[np.uint8], Floats, Floats, tuple[Floats, Floats]
+    Bools, Bools, npt.NDArray[np.uint8], Floats, Floats, tuple[Floats, Floats]
 ]:  # fmt: skip
-    """Per place and epoch (P, T): seen; warned beyond the map; differential vertical delay and sigma [mm] at the
-    baseline; slope and sigma [mm/km]."""
+    """Per place and epoch (P, T): seen; a line of sight near, whether known well enough or not; warned beyond the map;
+    differential vertical delay and sigma [mm] at the baseline; slope and sigma [mm/km]."""
     lat, lon = np.array(job.places, dtype=np.float64).T
     row, column, inside = nearest_cells(fields, lat, lon)
 
@@ -233,7 +235,8 @@ def _differential(job: Job, fields: Fields, limits: Thresholds) -> tuple[
         east, north = (_session_mean(values, fields.times, job.session_min) for values in (east, north))
     slope, slope_sigma = np.hypot(east, north), cells("slope_sigma")
     state = fields.state[:, row, column].T
-    seen = inside[:, None] & (state != UNSEEN) & (cells("support") > 0)
+    looked = inside[:, None] & (cells("support") > 0)
+    seen = looked & (state != UNSEEN)
     seen &= np.isfinite(slope) & np.isfinite(slope_sigma) & np.isfinite(cells("vtec"))
     by_map = state_of_slope(cells("slope"), cells("slope_sigma"), limits)
     warned = np.where((state >= STRAINED) & (state > by_map), state, 0).astype(np.uint8)
@@ -242,7 +245,7 @@ def _differential(job: Job, fields: Fields, limits: Thresholds) -> tuple[
     if job.method == "network":
         middle, sigma = _off_network(job, fields, row, column, slope, slope_sigma)
         seen = seen & np.isfinite(middle)
-    return seen, warned, middle, sigma, (slope, slope_sigma)
+    return seen, looked, warned, middle, sigma, (slope, slope_sigma)
 
 
 def _session_mean(values: Floats, times: Times, session_min: float) -> Floats:
@@ -375,8 +378,9 @@ def hourly_index(fields: Fields, places: Sequence[tuple[float, float]]) -> tuple
 
 
 def _verdicts(
-    job: Job, seen: Bools, warned: npt.NDArray[np.uint8], told: dict[str, Floats], count: Ints, dilution: Floats
-) -> tuple[npt.NDArray[np.str_], tuple[str, ...]]:
+    job: Job, seen: Bools, looked: Bools, warned: npt.NDArray[np.uint8], told: dict[str, Floats], count: Ints,
+    dilution: Floats,
+) -> tuple[npt.NDArray[np.str_], tuple[str, ...]]:  # fmt: skip
     """Verdict and reason per epoch: the first of unseen, warnings, satellites, an unknown slope, height, horizontal,
     fixing."""
     known = count >= 0
@@ -387,7 +391,11 @@ def _verdicts(
         why, seen_well = "", True
         if not seen[t]:
             seen_well = False
-            why = "the map does not see the place: nothing can be said"
+            why = (
+                "delay or slope are not known well enough here: nothing can be said"
+                if looked[t]
+                else "the map does not see the place: nothing can be said"
+            )
         elif warned[t]:
             why = f"{STATE_NAMES[int(warned[t])]}: a front, an irregular patch or a steep slope is reported here"
         elif known[t] and count[t] < job.least_satellites:

@@ -141,6 +141,33 @@ def survey_verdict(advice: Advice, clock: Clock) -> str:
     return f"{head} Longest away from work: {clock.utc(worst.start)} to {clock.utc(worst.end)} UTC, {worst.why}."
 
 
+def survey_figures(advice: Advice, clock: Clock) -> list[str]:
+    """The figures behind the verdict in sentences: longest baseline, errors at the middle and the worst, the index."""
+    told = []
+    known = np.isfinite(advice.longest_km)
+    if known.any():
+        least = int(np.nanargmin(advice.longest_km))
+        told.append(
+            f"Longest baseline within tolerance: {np.nanmedian(advice.longest_km):.0f} km in the middle of the day's "
+            f"values, {advice.longest_km[least]:.1f} km at {clock.utc(advice.times[least])} UTC."
+        )
+    if np.isfinite(advice.differential_95).any():
+        worst = int(np.nanargmax(advice.differential_95))
+        told.append(
+            f"Differential delay at the job's distance: {np.nanmedian(advice.differential_68):.0f} mm (68 %) and "
+            f"{np.nanmedian(advice.differential_95):.0f} mm (95 %) in the middle, "
+            f"{advice.differential_68[worst]:.0f} and {advice.differential_95[worst]:.0f} mm at "
+            f"{clock.utc(advice.times[worst])} UTC."
+        )
+    index = [
+        f"{clock.utc(hour)[:2]} {ppm:.1f}" for hour, ppm in zip(advice.hours, advice.index, strict=True)
+        if np.isfinite(ppm)
+    ]  # fmt: skip
+    if index:
+        told.append(f"Hourly index, ppm that 95 % of the surroundings stay under: {', '.join(index)}.")
+    return told
+
+
 def approach_verdict(found: Availability, clock: Clock) -> str:
     """An aerodrome's approaches in a sentence or two."""
     parts = [
