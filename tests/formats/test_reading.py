@@ -155,6 +155,28 @@ def test_wrappers_without_end_are_refused(tmp_path: Path) -> None:
         formats.read(place)
 
 
+@pytest.mark.parametrize("version", [2.11, 3.04])
+@pytest.mark.parametrize("tail", [b"\x1a", b"\x1a\r\n", b"\0" * 5000, b"\n\0\0"], ids=["mark", "line", "zeros", "few"])
+def test_what_old_systems_put_behind_a_text_costs_no_epoch(tail: bytes, version: float) -> None:
+    data = write(simple(version))
+    reading = formats.read_bytes(data + tail, "x")
+    assert same(signals(reading), signals(formats.read_bytes(data, "x")))
+    assert [problem.what for problem in reading.problems] == [f"{len(tail) + 1} filling bytes behind the text"]
+
+
+def test_a_byte_order_mark_is_passed_over(tmp_path: Path) -> None:
+    data = write(simple())
+    place = tmp_path / "marked"
+    for text in (data, hatanaka.rnx2crx(data)):
+        marked = wrappers.BYTE_ORDER_MARK + text
+        for packed in (marked, gzip.compress(marked)):
+            reading = formats.read_bytes(packed, "x")
+            assert reading.problems == ()
+            assert same(signals(reading), signals(formats.read_bytes(data, "x")))
+            place.write_bytes(packed)
+            assert glance(place).kind == "observations"
+
+
 def a_zip(**files: bytes) -> bytes:
     out = io.BytesIO()
     with zipfile.ZipFile(out, "w", zipfile.ZIP_DEFLATED) as folder:

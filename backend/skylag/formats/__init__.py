@@ -14,7 +14,7 @@ from typing import Any
 
 from skylag.errors import FormatError, Refused
 from skylag.formats.joining import merge, thin, together
-from skylag.formats.wrappers import is_hatanaka, members, unwrap
+from skylag.formats.wrappers import BYTE_ORDER_MARK, is_hatanaka, members, unwrap
 from skylag.tables import Ephemerides, Problem, Reading
 
 __all__ = ["fingerprint", "kind_of", "mark_of", "merge", "read", "read_bytes", "thin"]
@@ -137,7 +137,7 @@ def kind_of(data: bytes) -> str:
     """What a text is, by its first lines: a key of PARSERS, or "unknown"."""
     if is_hatanaka(data):
         return "observations"
-    head = data[:4096]
+    head = data[:4096].removeprefix(BYTE_ORDER_MARK)
     lines = head.splitlines()[:40]
     for line in lines:
         label = line[60:80].strip()

@@ -22,6 +22,7 @@ import ncompress
 from skylag.errors import FormatError
 from skylag.tables import Problem
 
+BYTE_ORDER_MARK = b"\xef\xbb\xbf"  # some editors write it
 LARGEST_TEXT = 2 * 2**30  # bytes; a day of one-second data of five constellations is about half of it
 _SWELLS = 100  # times: text written by receivers shrinks 3 to 30 times, a trap a thousand times and more
 _HARMLESS = 16 * 2**20  # bytes, below which nobody asks how much it swelled
@@ -45,6 +46,7 @@ def unwrap(data: bytes, name: str) -> Unwrapped:
     """
     problems: list[Problem] = []
     for _ in range(_DEEPEST):
+        data = data.removeprefix(BYTE_ORDER_MARK)
         if data[:2] == b"\x1f\x8b":
             data = _gzip(data, name, problems)
         elif data[:2] == b"\x1f\x9d":
@@ -54,10 +56,19 @@ def unwrap(data: bytes, name: str) -> Unwrapped:
         elif data[:4] in _ZIP_MARKS:
             data = _zip(data, name, problems)
         elif is_hatanaka(data):
-            return Unwrapped(_hatanaka(data, name, problems), problems)
+            return Unwrapped(_hatanaka(_without_filling(data, name, problems), name, problems), problems)
         else:
-            return Unwrapped(data, problems)
+            return Unwrapped(_without_filling(data, name, problems), problems)
     raise FormatError(f"{name}: more than {_DEEPEST} wrappers within each other; unpack it by hand", path=name, line=0)
+
+
+def _without_filling(data: bytes, name: str, problems: list[Problem]) -> bytes:
+    """The text without what stands behind it: an end mark of old systems, zeros of a block that was never filled."""
+    if data[-64:].rstrip(b"\r\n")[-1:] not in (b"\x1a", b"\0"):
+        return data
+    text = data.rstrip(b"\x1a\0\r\n")
+    problems.append(Problem(name, 0, f"{len(data) - len(text)} filling bytes behind the text", "left out"))
+    return text + b"\n"
 
 
 def is_hatanaka(data: bytes) -> bool:
