@@ -23,7 +23,7 @@ from skylag.chain import Choices
 from skylag.errors import Refused, SkylagError
 from skylag.formats import results
 from skylag.ionosphere.pairs import USABLE_PAIRS, parse_wanted
-from skylag.jobs import work
+from skylag.jobs import hindcast, work
 from skylag.jobs.executor import open_executor
 from skylag.tables import STATE_NAMES, Indices, Products
 from skylag.web.sentences import CAUTION
@@ -215,6 +215,7 @@ def _day(options: argparse.Namespace) -> int:
 
         with open_archive(options.archive) as archive:
             archive.save(made.products)
+            hindcast.day_kept(archive, made.products.region.name, made.products.day, _say)
     if not options.quiet:
         _tell_day(made.products)
         print("results: " + ", ".join(str(path) for path in paths))
@@ -236,6 +237,12 @@ def _earlier(opened: contextlib.ExitStack, place: str, days: int) -> work.Earlie
     from skylag.archive import open_archive  # a database is opened only where one is asked for
 
     return work.earlier_biases(opened.enter_context(open_archive(place)), days)
+
+
+def _say(event: str, **facts: object) -> None:
+    """What went wrong after a day was kept; what went well is not worth a line."""
+    if "why" in facts:
+        print(f"noticed: {event}: {facts['why']}", file=sys.stderr)
 
 
 def _tell_day(products: Products) -> None:
@@ -302,6 +309,7 @@ def _demo(options: argparse.Namespace) -> int:
                 bar = _Bar(f"sample day {path.name}")
                 made = work.network_day([path], region=region, executor=pool, simulated=True, progress=bar.tell)
                 own.save(made.products)
+                hindcast.day_kept(own, region.name, made.products.day, _say, more=path != some[-1])
                 bar.close()
 
     if options.no_serve:
@@ -372,7 +380,6 @@ def _open_page(
 def _hindcast(options: argparse.Namespace) -> int:
     from skylag import formats
     from skylag.archive import open_archive
-    from skylag.jobs import hindcast
 
     indices: Indices | None = None
     if options.indices:

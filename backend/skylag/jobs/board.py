@@ -23,7 +23,7 @@ from skylag.archive import Archive, Ending, Task
 from skylag.archive.records import region_from
 from skylag.chain import Choices
 from skylag.errors import FormatError, NotEnough, Refused, SkylagError, Unsolvable
-from skylag.jobs import advising, kept, work
+from skylag.jobs import advising, hindcast, kept, work
 from skylag.jobs.executor import open_executor
 from skylag.jobs.upkeep import Upkeep
 from skylag.settings import Estimation
@@ -33,7 +33,7 @@ Clock = Callable[[], np.datetime64]  # present UTC
 Log = Callable[..., None]  # event, facts by name
 
 # The input itself is at fault: trying again cannot help.
-_HOPELESS = (FormatError, NotEnough, Unsolvable, Refused)
+HOPELESS = (FormatError, NotEnough, Unsolvable, Refused)
 NETWORK_DAY = "network day"
 
 
@@ -172,8 +172,14 @@ class Worker:
         self._compute = compute or partial(_compute, archive=archive)
         self.name = f"{process_name()}/{name or threading.get_ident()}"
 
-    def run(self, stop: threading.Event, *, until_empty: bool = False, idle_s: float = 0.5) -> int:
-        """Work until told to stop, or until nothing is waiting or running; gives how many tasks were taken."""
+    def run(
+        self, stop: threading.Event, *, until_empty: bool = False, idle_s: float = 0.5, away_s: float = 10.0
+    ) -> int:
+        """Work until told to stop, or until nothing is waiting or running; gives how many tasks were taken.
+
+        Where the archive cannot be reached or written that is told every `away_s`, and work goes on when it is back; a
+        run `until_empty` raises SkylagError instead.
+        """
         taken, upkeep = 0, Upkeep(self._archive, self._log)
         while not stop.is_set():
             with open_executor(self._place) as executor:
@@ -189,6 +195,11 @@ class Worker:
                         stop.wait(idle_s)
                 except BrokenExecutor as failure:  # one of its processes was ended: take new ones
                     self._log("executor lost", worker=self.name, why=str(failure))
+                except SkylagError as failure:
+                    if until_empty:
+                        raise
+                    self._log("archive away", worker=self.name, why=failure.message)
+                    stop.wait(away_s)
         return taken
 
     def one(self, executor: Executor) -> bool:
@@ -229,16 +240,21 @@ class Worker:
         return True
 
     def _prepare(self, products: Products, version: int) -> None:
-        """Where no other task waits, make what questions about approaches need; else the first to ask waits for it."""
+        """What the day ahead rests on; where no other task waits, the outlook and what questions about approaches need.
+
+        Else whoever asks first waits for these.
+        """
         with suppress(SkylagError):
-            if not self._archive.tasks.counts()["waiting"]:
+            more = bool(self._archive.tasks.counts()["waiting"])
+            hindcast.day_kept(self._archive, products.region.name, products.day, self._log, more)
+            if not more:
                 advising.prepare(self._archive, products.region.name, str(products.day), version)
 
     def _fail(self, task: Task, failure: Exception) -> None:
         """Write down a failed try, and when the next is due."""
         said = failure.message if isinstance(failure, SkylagError) else f"{type(failure).__name__}: {failure}"
         attempts, now = task.attempts + 1, self._clock()
-        hopeless = isinstance(failure, _HOPELESS) or attempts >= self._policy.most_attempts
+        hopeless = isinstance(failure, HOPELESS) or attempts >= self._policy.most_attempts
         wait = np.timedelta64(round(self._policy.wait_s(attempts) * 1e9), "ns")
         known = self._archive.tasks.fail(task.id, self.name, said, now, None if hopeless else now + wait)
         self._log("task failed", task=task.id, title=task.title, why=said, again=not hopeless, known=known)

@@ -2,7 +2,8 @@
 
 Reads with `archive`, computes with `ionosphere.outlook`.  When a day is kept, its hours at the places of the outlook
 are made and kept, outlooks whose days are in are scored, once, and the next outlook is made and kept (`day_kept`).  A
-replay keeps nothing.  Never lets an outlook see a day after the one it is made on, nor an outlook of activity made after it.
+replay keeps nothing.  Never lets an outlook see a later day than the one it is made on, nor an outlook of activity made
+later.
 """
 
 import hashlib
@@ -223,20 +224,25 @@ def _mark(heads: Sequence[DayHead], drivers: Drivers) -> str:
     return checksum.hexdigest()[:32]
 
 
-def day_kept(archive: Archive, region: str, log: Callable[..., None] | None = None) -> Kept | None:
-    """After a day of a region was kept: its hours, scores that are due, the next outlook.  None where that failed.
+def day_kept(
+    archive: Archive, region: str, day: np.datetime64, log: Callable[..., None] | None = None, more: bool = False
+) -> None:  # fmt: skip
+    """After a day of a region was kept: its hours, and with them the scores that are due and the next outlook.
 
-    log  told what happened; a failure is told there and raises nothing, since the day itself is kept
+    more  other days are about to follow: the outlook is left to the last of them
+    log   told what happened; a failure is told there and raises nothing, since the day itself is kept
     """
+    tell: Callable[..., None] = log or (lambda event, **facts: None)
     try:
+        if more:
+            history_of(archive, region, until=day, since=day)
+            return
         made = newest(archive, region)
+        tell("outlook kept", region=region, known_until=str(made.outlook.known_until), number=made.number)
     except SkylagError as failure:
-        if log is not None:
-            log("outlook not made", region=region, why=failure.message)
-        return None
-    if log is not None:
-        log("outlook made", region=region, known_until=str(made.outlook.known_until), number=made.number)
-    return made
+        tell("outlook not made", region=region, day=str(day), why=failure.message)
+    except Exception as failure:  # whatever it is, the day is kept, and the outlook is made when it is asked for
+        tell("outlook not made", region=region, day=str(day), why=f"{type(failure).__name__}: {failure}")
 
 
 def newest(

@@ -18,10 +18,10 @@ import numpy as np
 
 from skylag.archive import Archive
 from skylag.chain import Choices
-from skylag.errors import SkylagError
+from skylag.errors import Missing, SkylagError
 from skylag.formats.glance import glance
 from skylag.ionosphere.geometry import geodetic
-from skylag.jobs import alerts, board, kept, work
+from skylag.jobs import alerts, board, hindcast, kept, work
 from skylag.jobs.closed_hours import ClosedHours, Nearness
 from skylag.jobs.upkeep import Upkeep
 from skylag.tables import HOLDS, UNSEEN, Fields, Products, Region
@@ -278,33 +278,54 @@ class Watch:
     ) -> None:
         self._archive, self._clock, self._region, self._rules = archive, clock, region, rules
         self._hours = ClosedHours(nearness)
-        self._executor = kept.KeepingExecutor(executor, kept.folder_of(archive), self._hours)
+        self.use(executor)
         self._choices, self._patience = choices or Choices(), patience or Patience()
         self._simulated = simulated
         self._log: board.Log = log or (lambda event, **facts: None)
         self._upkeep = Upkeep(archive, self._log)
         self._folder = Folder(path)
         self._days: dict[str, np.datetime64 | None] = {}  # file -> day
+        self._owed: tuple[Asked, ...] = ()  # what was asked for while the archive could not be reached
         self.state = State()
 
-    def run(self, stop: threading.Event, every_s: float = 0.5) -> None:
-        """Follow the folder until told to stop."""
+    def use(self, executor: Executor) -> None:
+        """Compute with another executor from now on."""
+        self._executor = kept.KeepingExecutor(executor, kept.folder_of(self._archive), self._hours)
+
+    def run(self, stop: threading.Event, every_s: float = 0.5, away_s: float = 10.0) -> None:
+        """Follow the folder until told to stop.
+
+        While the archive cannot be reached or written, that is told every `away_s`, and what was asked for is made up
+        for afterwards.  Raises BrokenExecutor where the executor is of no more use: `use` another and run again.
+        """
         while not stop.is_set():
-            self.turn()
+            try:
+                self.turn()
+            except SkylagError as failure:
+                self._log("archive away", why=failure.message, owed=len(self._owed))
+                stop.wait(away_s)
             stop.wait(every_s)
 
     def turn(self) -> int:
-        """One look at the folder and at the clock; gives how many days were made."""
+        """One look at the folder and at the clock; gives how many days were made.
+
+        Raises SkylagError where the archive cannot be reached or written: what is owed is done at the next turn.
+        """
         for path in self._folder.look():
             self._came(path)
+        asked = tuple(dict.fromkeys((*self._owed, *self._step(Tick(self._now())))))
+        whole = {one.day for one in asked if isinstance(one, Make) and one.final}
+        self._owed = tuple(one for one in asked if not (isinstance(one, Make) and not one.final and one.day in whole))
         made = 0
-        for one in self._step(Tick(self._now())):
+        while self._owed:
+            one = self._owed[0]
             if isinstance(one, Make):
                 made += self._make(one)
             else:
                 self._log("receiver silent", receiver=one.receiver, since=str(one.since))
                 told = alerts.silences(self._rules, one.receiver, one.since, self._now())
                 alerts.keep(self._archive, told, self._clock())
+            self._owed = self._owed[1:]
         if self._rules:
             alerts.deliver(self._archive, self._clock, self._log)
         if not made:
@@ -347,7 +368,7 @@ class Watch:
             if not asked.final:
                 products = unseen_until(products, self._now(), self._patience.silent_s)
             version = self._archive.save(products, provisional=not asked.final)
-        except SkylagError as failure:
+        except (*board.HOPELESS, Missing) as failure:  # the files themselves are at fault
             self._log("day not made", day=str(asked.day), why=failure.message)
             return 0
         finally:
@@ -364,6 +385,8 @@ class Watch:
             for number, receiver in enumerate(rays.receivers) if np.any(rays.receiver == number)
         }  # fmt: skip
         self._step(DayMade(asked.day, ends))
-        if not asked.final:
+        if asked.final:
+            hindcast.day_kept(self._archive, products.region.name, products.day, self._log)
+        else:
             alerts.keep(self._archive, alerts.occasions(self._rules, products), self._clock())
         return 1
