@@ -31,18 +31,23 @@ def june(open_data: Path, executor: Executor) -> work.DayResult:
     return work.network_day(paths, executor=executor)
 
 
+# Lowest and highest hour of the vertical content up to 2000 km over ESBC on 2020-06-25, F10.7 = 70: the climatology IRI
+# by way of PyIRI 0.1.7, run once for this test (CCIR coefficients).  The plasmasphere above adds about 1 TECU.
+LOWEST_TECU, HIGHEST_TECU, ABOVE_TECU = 2.0, 6.0, 1.0
+
+
 def test_quiet_june_day_of_one_receiver(june: work.DayResult, evidence: Evidence) -> None:
-    """Low at night, highest in the day, between about 3 and 15 TECU at 55 N in the quiet June of 2020."""
+    """Low at night and highest in the day, as the climatology of a quiet June has it; days scatter by 20 to 30 %."""
     samples = june.products.samples
     rays = samples.rays
     hour = ((rays.time - np.datetime64("2020-06-25", "ns")) // np.timedelta64(3600, "s")).astype(int)
     high = rays.elevation > 40
     by_hour = np.array([np.median(samples.vtec[high & (hour == h)]) for h in range(24)])
-    common = "common practice: quiet mid-latitude summer day near solar minimum"
-    evidence("ESBC 2020-06-25: lowest hourly vertical content", source=common, expected=3.0, got=float(by_hour.min()),
-             tolerance=2.0, unit="TECU")  # fmt: skip
-    evidence("ESBC 2020-06-25: highest hourly vertical content", source=common, expected=15.0, got=float(by_hour.max()),
-             tolerance=0, at_most=True, unit="TECU")  # fmt: skip
+    source = "IRI (PyIRI 0.1.7), 1 TECU above 2000 km"
+    evidence("ESBC 2020-06-25: lowest hourly vertical content", source=source, expected=LOWEST_TECU + ABOVE_TECU,
+             got=float(by_hour.min()), tolerance=1.2, unit="TECU")  # fmt: skip
+    evidence("ESBC 2020-06-25: highest hourly vertical content", source=source, expected=HIGHEST_TECU + ABOVE_TECU,
+             got=float(by_hour.max()), tolerance=2.5, unit="TECU")  # fmt: skip
     assert 6 <= int(np.argmax(by_hour)) <= 18, "the peak is in the day"
     assert by_hour[[0, 1, 2, 23]].mean() < 0.6 * by_hour[8:16].mean(), "the night is low"
 
@@ -56,8 +61,9 @@ def test_it_says_what_one_receiver_cannot_know(june: work.DayResult) -> None:
 
 @pytest.mark.parametrize(("system", "limit_ns"), [("G", 0.30), ("E", 0.35)])
 def test_satellites_against_broadcast_group_delays(
-    june: work.DayResult, open_data: Path, evidence: Evidence, system: str, limit_ns: float
+    june: work.DayResult, open_data: Path, system: str, limit_ns: float
 ) -> None:
+    """As `tests/ionosphere/test_adjustment_real.py` finds it, by way of files and jobs; the figure is kept there."""
     (path,) = (open_data / "2020-177" / "nav").glob("ESBC*")
     records = formats.read(path).table
     assert isinstance(records, Ephemerides)
@@ -71,15 +77,12 @@ def test_satellites_against_broadcast_group_delays(
         if known is not None:
             errors.append(found.value_ns[i] - known[0])
     assert len(errors) > 15
-    evidence(
-        f"ESBC 2020-06-25: {system} satellite biases minus broadcast group delays, RMS of {len(errors)}, mean removed",
-        source="IS-GPS-200, Galileo OS SIS ICD: values broadcast that day", expected=limit_ns,
-        got=float(np.std(errors)), tolerance=0, at_most=True, unit="ns",
-    )  # fmt: skip
+    assert np.std(errors) < limit_ns
 
 
-def test_satellites_held_at_a_published_product(open_data: Path, executor: Executor, evidence: Evidence) -> None:
-    """The monthly P1-P2 values of August 2015 held; the receiver then has to come out at its published value."""
+def test_satellites_held_at_a_published_product(open_data: Path, executor: Executor) -> None:
+    """The monthly P1-P2 values of August 2015 held; the receiver then has to come out at its published value, within
+    two sigmas of both: ours, and 0.53 ns of modelling as the published one is made (`test_adjustment_real.py`)."""
     folder = open_data / "2015-235"
     paths = [
         folder / "obs" / "ZIMM2350.15O.gz", *(folder / "sp3").iterdir(), folder / "bias" / "P1C11508.DCB",
@@ -92,8 +95,6 @@ def test_satellites_held_at_a_published_product(open_data: Path, executor: Execu
     (receiver,) = np.flatnonzero(found.biases.kind == "receiver")
     # The receiver gives C1C and C2W: DCB(C1C-C2W) = DCB(P1-P2) - DCB(P1-C1); the published value is P1-P2.
     assert (found.biases.code1[receiver], found.biases.code2[receiver]) == ("C1C", "C2W")
-    evidence(
-        "ZIMM 2015-08-23: receiver bias with satellites held at the month's published values",
-        source="CODE monthly P1-P2 of 2015-08 (ZIMM -11.149 ns)", expected=-11.149,
-        got=float(found.biases.value_ns[receiver]), tolerance=1.5, unit="ns",
-    )  # fmt: skip
+    apart = float(found.biases.value_ns[receiver]) + 11.149  # CODE monthly P1-P2 of 2015-08, ZIMM
+    assert abs(apart) < 2.0 * np.hypot(found.biases.sigma_ns[receiver], 0.53)
+    assert found.biases.sigma_ns[receiver] < 0.5

@@ -61,16 +61,25 @@ def test_slant_content(name: str) -> None:
 
 
 @DAYS
-def test_vertical_sigma_is_not_too_small(name: str) -> None:
-    """The level is one draw a day, so the sigma may be wide of it; it must not be narrow."""
+def test_vertical_sigma_is_as_large_as_the_errors(name: str) -> None:
+    """The level is one draw a day, so the whole sigma may be wide of it; it must not be narrow.  With the leanings,
+    which all contents share, taken out of error and sigma, the rest must be neither."""
     samples = day(name).products.samples
     rows, _ = true_slant(samples, name)
     rows = rows[:: max(1, len(rows) // 1500)]
     rays = samples.rays
     true = truth_of(name).vertical_content(rays.pierce_lat[rows], rays.pierce_lon[rows], rays.time[rows])
-    z = (samples.vtec[rows] - true) / samples.sigma[rows]
+    error, sigma = samples.vtec[rows] - true, samples.sigma[rows]
+    z = error / sigma
     assert np.sqrt(np.mean(np.clip(z, -6, 6) ** 2)) < 1.5
     assert np.mean(np.abs(z) < 1.96) > 0.9
+    shared = np.stack([samples.lean_shell[rows], samples.lean_high[rows]], axis=1)
+    own = np.sqrt(sigma**2 - np.sum(shared**2, axis=1))
+    drawn = np.linalg.lstsq(shared / own[:, None], error / own, rcond=None)[0]
+    assert np.all(np.abs(drawn) < 3.0), "how many sigmas each leaning of the day was off"
+    spread = 1.4826 * np.median(np.abs((error - shared @ drawn) / own))
+    print(f"{name}: leanings off by {drawn.round(2)} sigmas, the rest over sigma {spread:.2f}")
+    assert 0.5 < spread < 1.3
 
 
 @pytest.mark.parametrize(
