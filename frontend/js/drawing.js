@@ -2,6 +2,8 @@
  * The only file that meets plotly: draws figures, tells where a pointer is on a chart, makes pictures to take away.
  */
 
+import { WORDS } from "./words.js";
+
 const CONFIG = { displayModeBar: false, scrollZoom: false, doubleClick: false, staticPlot: false, responsive: false };
 
 /** @type {Promise<any>|null} */
@@ -47,7 +49,7 @@ function plotly() {
       done();
       waiting = null;
       script.remove();
-      reject(new Error("plotly.js did not load from this server"));
+      reject(new Error(WORDS.noPlotly));
     });
     document.head.append(script);
   });

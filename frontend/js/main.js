@@ -22,7 +22,7 @@ import { ReadingPanel, readingOf } from "./panels/reading.js";
 import { SeriesPanel } from "./panels/series.js";
 import { YearPanel } from "./panels/year.js";
 import { State } from "./state.js";
-import { dayText, FILE_WORDS, WORDS } from "./words.js";
+import { dayText, FILE_WORDS, PAGE_WORDS, WORDS } from "./words.js";
 
 /**
  * What the panels draw from.
@@ -41,6 +41,14 @@ import { dayText, FILE_WORDS, WORDS } from "./words.js";
  * @property {[number, number][][]} coast
  * @property {import("./colour.js").Theme} theme
  */
+
+for (const [name, put] of Object.entries({
+  say: (element, words) => element.prepend(words),
+  label: (element, words) => element.setAttribute("aria-label", words),
+  role: (element, words) => element.setAttribute("aria-roledescription", words),
+})) {
+  for (const element of /** @type {NodeListOf<HTMLElement>} */ (document.querySelectorAll(`[data-${name}]`))) put(element, PAGE_WORDS[element.dataset[name] ?? ""]);
+}
 
 const at = (id) => /** @type {any} */ (document.getElementById(id));
 

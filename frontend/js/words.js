@@ -171,6 +171,18 @@ export const WORDS = {
   asTable: "As a table",
   /** @param {string} date @param {string} time @param {string} address */
   printed: (date, time, address) => `Printed ${date}, ${time}. This view: ${address}`,
+  noPlotly: "plotly.js did not load from this server",
+  /** @param {number} count @param {string} from @param {string} to */
+  curvesCaption: (count, from, to) => `${countText(count, "line")} of sight, ${from} – ${to}`,
+  /** @param {string} speed @param {string} wind */
+  movesTo: (speed, wind) => `${speed} m/s to the ${wind}`,
+  /** @param {string} ago */
+  written: (ago) => `Results written ${ago}.`,
+  /** @param {string} place @param {string} delay @param {string} time */
+  seriesAbout: (place, delay, time) => `Vertical delay at ${place} over the day; ${delay} at ${time}.`,
+  /** @param {string} region */
+  mapOf: (region) => `Map of ${region}.`,
+  files: { sheet: "sheet", pdf: "sheet, PDF", calendar: "calendar" },
   takeAway: "Take away:",
   print: "print",
   play: "Play",
@@ -206,6 +218,145 @@ export const AHEAD_WORDS = {
   /** @param {string} own @param {string} often @param {string} same */
   brier: (own, often, same) => `Brier score ${own}; telling the usual frequency ${often}, the day before again ${same}. Smaller is better.`,
   tenths: ["Cases", "Chance told", "Came true"],
+};
+
+/** Heads of the tables. */
+export const HEADS = {
+  strip: ["Site", "Span", "Corrections", "Reason"],
+  curves: ["Line", "First", "Last", "Change", "Elevation"],
+  flags: ["Time", "Kind", "Corrections", "Slope", "Moves", "Place", "Evidence"],
+  network: ["Receiver", "Data received", "Gaps", "Slips", "Arcs", "Level, one sigma", "Left out, off by", "Biases", "Said of it"],
+  year: ["Day", "Worst state", "Broken", "Strained", "Unseen", "Slope", "Highest Kp", "ap", "Flags"],
+  series: ["Time", "Slope"],
+};
+
+/** The reading of the chosen place. */
+export const READING_WORDS = {
+  /** @param {string} [kind] */
+  goTo: (kind = "flag") => `Go to this ${kind}`,
+  why: "Why",
+  degrees: "Write degrees, like 40.25 S and 146.5 E, or −40.25 and 146.5.",
+  /** @param {string} south @param {string} north @param {string} west @param {string} east */
+  outside: (south, north, west, east) => `That is outside the region: ${south} to ${north}, ${west} to ${east}.`,
+  corrections: "Corrections here",
+  /** @param {string} content */
+  content: (content) => `${content} of electron content`,
+  /** @param {string} wind */
+  toward: (wind) => `growing toward the ${wind}`,
+  carriedBy: "Carried by",
+  /** @param {number} count */
+  lines: (count) => countText(count, "line of sight", "lines of sight"),
+  notKnown: "not known",
+  /** @param {number} km */
+  away: (km) => `, ${km} km away`,
+};
+
+/** The page's own frame: index.html names these keys in data-say (text), data-label (aria-label), data-role (aria-roledescription). @type {Record<string, string>} */
+export const PAGE_WORDS = {
+  questions: "Questions",
+  day: "Day",
+  dayBefore: "Day before",
+  dayAfter: "Day after",
+  aboutTheseData: "About these data",
+  receiversAsATable: "Receivers as a table",
+  map: "Map",
+  mapOfTheOther: "Map of the other day",
+  legend: "Legend",
+  sites: "Sites",
+  timeOfDay: "Time of day",
+  theMapAsA: "The map as a table",
+  statesOfTheSites: "States of the sites as a table",
+  storedDays: "Stored days",
+  theStoredDaysAs: "The stored days as a table",
+  delayOverTheDay: "Delay over the day",
+  delayAsATable: "Delay over the day as a table",
+  tableOfTheFlags: "Table of the flags",
+  mapRole: "map",
+  skipToTheDay: "Skip to the day strip",
+  skipToTheReading: "Skip to the reading",
+  ahead: "Ahead",
+  canWeWorkTomorrow: "can we work tomorrow?",
+  now: "Now",
+  whatFailsAtThis: "what fails at this moment?",
+  past: "Past",
+  whatHappenedThatDay: "what happened that day?",
+  network: "Network",
+  whoGaveWhat: "who gave what?",
+  timesIn: "Times in",
+  utc: "UTC",
+  local: "Local",
+  yourFiles: "Your files",
+  night: "Night",
+  backToTheNewest: "Back to the newest",
+  doesNotHold: "Does not hold",
+  flagsNow: "Flags now",
+  predictedToArrive: "Predicted to arrive",
+  alerts: "Alerts",
+  theDayAhead: "The day ahead",
+  theReceivers: "The receivers",
+  noPlotly: "plotly.js did not load from this server",
+  /** @param {number} count @param {string} from @param {string} to */
+  curvesCaption: (count, from, to) => `${countText(count, "line")} of sight, ${from} – ${to}`,
+  /** @param {string} speed @param {string} wind */
+  movesTo: (speed, wind) => `${speed} m/s to the ${wind}`,
+  /** @param {string} ago */
+  written: (ago) => `Results written ${ago}.`,
+  /** @param {string} place @param {string} delay @param {string} time */
+  seriesAbout: (place, delay, time) => `Vertical delay at ${place} over the day; ${delay} at ${time}.`,
+  /** @param {string} region */
+  mapOf: (region) => `Map of ${region}.`,
+  files: { sheet: "sheet", pdf: "sheet, PDF", calendar: "calendar" },
+  takeAway: "Take away:",
+  receiversCsv: "receivers, CSV",
+  print: "print",
+  verticalDelay: "Vertical delay",
+  compareWith: "Compare with",
+  howToCompare: "How to compare",
+  sideBySide: "Side by side",
+  difference: "Difference",
+  layerOfTheMap: "Layer of the map",
+  delay: "Delay",
+  uncertainty: "Uncertainty",
+  slope: "Slope",
+  state: "State",
+  arrowKeysMoveThe: "Arrow keys move the chosen place by one cell of the grid. The reading beside the map tells what holds there.",
+  theDay: "The day",
+  dragOrUseThe: "Drag, or use the arrow keys: 5 minutes a step, with shift an hour, Home and End for the ends.",
+  play: "Play",
+  mapsASecond: "maps a second",
+  time: "Time",
+  mapAsATable: "Map as a table",
+  theDayAsA: "The day as a table",
+  theDays: "The days",
+  of: "of",
+  in: "in",
+  thatWere: "that were",
+  goodOrBad: "good or bad",
+  strainedOrBroken: "strained or broken",
+  broken: "broken",
+  magneticField: "magnetic field",
+  theseDaysCsv: "these days, CSV",
+  asATable: "As a table",
+  readingOfTheChosen: "Reading of the chosen place",
+  place: "Place",
+  chosenOnTheMap: "Chosen on the map",
+  latitude: "Latitude",
+  longitude: "Longitude",
+  read: "Read",
+  openingTheDay: "Opening the day …",
+  forYourWorkHere: "For your work here",
+  curvesOfTheLines: "Curves of the lines of sight near here",
+  planningAidNotFor: "Planning aid, not for navigation: official notices, the service provider, the receiver maker and local rules decide.",
+  thisPlaceThroughThe: "This place through the day",
+  flagsOfTheDay: "Flags of the day",
+  flagsCsv: "flags, CSV",
+  flagsGeojson: "flags, GeoJSON",
+  mapPng: "map, PNG",
+  mapSvg: "map, SVG",
+  mapCsv: "map, CSV",
+  thisPlaceCsv: "this place, CSV",
+  dayNetcdf: "day, NetCDF",
+  dayIonex: "day, IONEX",
 };
 
 /** Sending files, and the work that is made of them. */

@@ -128,6 +128,44 @@ def test_controls_have_names(page: _Elements) -> None:
             assert page.tags[number - 1][0] == "label", attributes
 
 
+# Names of the platform, of keys and of the URL's own vocabulary, which nobody reads.
+_NO_WORDS = {
+    "AbortError",
+    "ServiceError",
+    "Offline",
+    "Accept",
+    "Authorization",
+    "Bearer ${key}",
+    "Files",
+    "Home",
+    "End",
+}
+
+
+def test_english_stands_in_one_file(page: _Elements) -> None:
+    """What a person reads is written in words.js alone: the other scripts name it there, as does the page's frame."""
+    for path in SCRIPTS:
+        if path.name == "words.js":
+            continue
+        text = re.sub(r"/\*[\s\S]*?\*/|(?<!:)//.*", "", path.read_text(encoding="utf-8"))
+        said = re.findall(r"[\"`]([A-Z][a-z]+(?: [^\"`]*)?)[\"`]", text)
+        assert not set(said) - _NO_WORDS, f"{path.name}: {set(said) - _NO_WORDS}"
+        sentences = re.findall(r"[\"`]([^\"`]*[a-z]{2,}(?: [a-z]{2,}){3,}[^\"`]*)[\"`]", text)
+        assert not [one for one in sentences if not re.search(r"[.#:\[(=]", one)], path.name
+    frame = (FRONTEND / "index.html").read_text(encoding="utf-8").split("<body>")[1]
+    frame = re.sub(r"<noscript>.*?</noscript>", "", frame)
+    shown = [part.strip() for part in re.findall(r">([^<>]+)<", frame) if re.search("[A-Za-z]", part)]
+    assert set(shown) <= {"Skylag", "&nbsp;"}, shown
+    assert not [attributes for _tag, attributes in page.tags if "aria-label" in attributes or "title" in attributes]
+    asked = {
+        attributes[name] for _tag, attributes in page.tags for name in ("data-say", "data-label", "data-role")
+        if name in attributes
+    }  # fmt: skip
+    words = (FRONTEND / "js" / "words.js").read_text(encoding="utf-8")
+    known = set(re.findall(r"^  (\w+): \"", words.split("PAGE_WORDS = {")[1].split("\n};")[0], re.MULTILINE))
+    assert asked == known, asked ^ known
+
+
 def test_page_is_light() -> None:
     """Without plotly.js the page weighs under 250 kB (budget of the project), as the server sends it: compressed."""
     sent = sum(len(gzip.compress(path.read_bytes(), 5)) for path in FRONTEND.rglob("*") if path.is_file())

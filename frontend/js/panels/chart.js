@@ -63,7 +63,7 @@ export class ChartPanel {
     const { day, view, time } = scene;
     this.#title.textContent = LAYER_WORDS[view.layer].title;
     this.#time.textContent = `${dateText(time)}, ${bothClocks(time, day.region.timezone, view.clock)}`;
-    this.#element.setAttribute("aria-label", `Map of ${day.region.name}. ${LAYER_WORDS[view.layer].title}, ${bothClocks(time, day.region.timezone, view.clock)}`);
+    this.#element.setAttribute("aria-label", `${WORDS.mapOf(day.region.name)} ${LAYER_WORDS[view.layer].title}, ${bothClocks(time, day.region.timezone, view.clock)}`);
     const frame = frameOf(day.grid);
     this.#element.closest(".chart-body").style.setProperty("--aspect", aspectOf(frame).toFixed(4));
     this.#compare();

@@ -4,7 +4,7 @@
 
 import { STATES } from "../colour.js";
 import { keyStep, nearest, stepOf, stripFigure } from "../figures/strip.js";
-import { asSentence, KIND_WORDS, siteSentence, spanText, timeText, WORDS, zoneName } from "../words.js";
+import { asSentence, HEADS, KIND_WORDS, siteSentence, spanText, timeText, WORDS, zoneName } from "../words.js";
 import { draft, make, stateWord } from "./parts.js";
 
 /**
@@ -151,7 +151,7 @@ export class ClockPanel {
     for (const bar of this.#figure.bars) {
       body.append(make("tr", {}, make("th", { scope: "row", text: rows[bar.row].name }), make("td", { class: "nowrap", text: spanText(Math.max(bar.from, day.times[0]), bar.to, how) }), make("td", {}, stateWord(bar.state)), make("td", { text: asSentence(bar.reason ?? "") })));
     }
-    table.replaceChildren(make("table", {}, make("thead", {}, make("tr", {}, ...["Site", "Span", "Corrections", "Reason"].map((text) => make("th", { scope: "col", text })))), body));
+    table.replaceChildren(make("table", {}, make("thead", {}, make("tr", {}, ...HEADS.strip.map((text) => make("th", { scope: "col", text })))), body));
   }
 
   #names(rows) {

@@ -4,7 +4,7 @@
 
 import * as api from "../api.js";
 import { curvesFigure, DASHES } from "../figures/curves.js";
-import { countText, fixed, hourText, timeText, WORDS, withSigma } from "../words.js";
+import { fixed, HEADS, hourText, timeText, withSigma, WORDS } from "../words.js";
 import { draft, make, trouble } from "./parts.js";
 
 const HALF = 45 * 60000;
@@ -97,8 +97,8 @@ export class CurvesPanel {
     }
     const table = make("details", { class: "table-behind" }, make("summary", { text: WORDS.asTable }),
       make("div", { class: "scroll", tabindex: 0, role: "region", "aria-label": WORDS.curvesTable },
-        make("table", {}, make("caption", { text: `${countText(lines.length, "line")} of sight, ${timeText(span[0], how)} – ${timeText(span[1], how)}` }),
-          make("thead", {}, make("tr", {}, ...["Line", "First", "Last", "Change", "Elevation"].map((text, i) => make("th", { scope: "col", text, class: i ? "number" : undefined })))), body)));
+        make("table", {}, make("caption", { text: WORDS.curvesCaption(lines.length, timeText(span[0], how), timeText(span[1], how)) }),
+          make("thead", {}, make("tr", {}, ...HEADS.curves.map((text, i) => make("th", { scope: "col", text, class: i ? "number" : undefined })))), body)));
     const { view, day } = this.#scene;
     const file = `${api.dayFile(view.region, day.day, "slant.csv")}?${new URLSearchParams({ lat: String(view.place[0]), lon: String(view.place[1]), time: new Date(time).toISOString(), minutes: String(HALF / 60000), reach_km: "250" })}`;
     this.#body.replaceChildren(...out, table, make("p", { class: "fine" }, make("a", { href: file, download: "", text: WORDS.curvesFile })));

@@ -2,7 +2,7 @@
  * The table of the day's flags: a row leads to its time and place.
  */
 
-import { compass, evidenceText, fixed, KIND_WORDS, placeText, spanText, withSigma, WORDS } from "../words.js";
+import { compass, evidenceText, fixed, HEADS, KIND_WORDS, placeText, spanText, withSigma, WORDS } from "../words.js";
 import { sign } from "./legend.js";
 import { make, stateWord, viewOf } from "./parts.js";
 
@@ -41,7 +41,7 @@ export class FlagsPanel {
       return;
     }
     const how = { clock: view.clock, zone: day.region.timezone };
-    const heads = ["Time", "Kind", "Corrections", "Slope", "Moves", "Place", "Evidence"];
+    const heads = HEADS.flags;
     const body = make("tbody");
     for (const flag of day.flags) {
       body.append(
@@ -50,7 +50,7 @@ export class FlagsPanel {
           make("td", { class: "nowrap" }, make("span", { class: "state-word" }, sign(flag.kind), KIND_WORDS[flag.kind]?.name ?? flag.kind)),
           make("td", { class: "nowrap" }, flag.state ? stateWord(flag.state) : ""),
           make("td", { class: "number", "data-head": heads[3], "data-none": !Number.isFinite(flag.slope), text: Number.isFinite(flag.slope) ? withSigma(flag.slope, flag.sigma, "mm/km", 0) : "–" }),
-          make("td", { class: "nowrap", "data-head": heads[4], "data-none": !Number.isFinite(flag.speed), text: Number.isFinite(flag.speed) ? `${fixed(flag.speed, 0)} m/s to the ${compass(flag.heading)}` : "–" }),
+          make("td", { class: "nowrap", "data-head": heads[4], "data-none": !Number.isFinite(flag.speed), text: Number.isFinite(flag.speed) ? WORDS.movesTo(fixed(flag.speed, 0), compass(flag.heading)) : "–" }),
           make("td", { class: "nowrap", "data-head": heads[5], text: placeText(flag.lat, flag.lon, 1) }),
           make("td", {}, evidenceText(flag)),
         ),

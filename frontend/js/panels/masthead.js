@@ -3,7 +3,7 @@
  */
 
 import * as api from "../api.js";
-import { agoText, dateText, dayText, LAYER_WORDS, timeText, WORDS, zoneName } from "../words.js";
+import { agoText, countText, dateText, dayText, LAYER_WORDS, timeText, WORDS, zoneName } from "../words.js";
 import { toQuery } from "../state.js";
 import { make } from "./parts.js";
 
@@ -83,8 +83,8 @@ export class MastheadPanel {
     this.#elements.caution.textContent = day.caution;
     simulated.hidden = !day.simulated;
     simulated.textContent = day.simulated ? WORDS.simulated : "";
-    age.textContent = day.processed ? `Results written ${agoText(Date.now() - day.processed)}.` : "";
-    origin.textContent = [day.receivers.length ? `${day.receivers.length} receivers.` : "", ...day.warnings.slice(0, 2)].filter(Boolean).join(" ");
+    age.textContent = day.processed ? WORDS.written(agoText(Date.now() - day.processed)) : "";
+    origin.textContent = [day.receivers.length ? `${countText(day.receivers.length, "receiver")}.` : "", ...day.warnings.slice(0, 2)].filter(Boolean).join(" ");
     csv.href = api.flagsFile(view.region, view.day, "csv");
     geojson.href = api.flagsFile(view.region, view.day, "geojson");
     netcdf.href = api.dayFile(view.region, view.day, "field.nc");
@@ -176,6 +176,5 @@ export class MastheadPanel {
   #name() {
     const night = this.theme === "night";
     this.#elements.theme.setAttribute("aria-pressed", String(night));
-    this.#elements.theme.textContent = "Night";
   }
 }

@@ -5,7 +5,7 @@
 import * as api from "../api.js";
 import { csvText, NETWORK_HEADS, save } from "../exporting.js";
 import { median } from "../figures/year.js";
-import { asSentence, dayText, fixed, shareText, WORDS, withSigma } from "../words.js";
+import { asSentence, dayText, fixed, HEADS, shareText, withSigma, WORDS } from "../words.js";
 import { draft, make, trouble } from "./parts.js";
 
 /** A receiver disagrees where the others' field misses it by this many times the median miss. */
@@ -97,21 +97,21 @@ export class NetworkPanel {
       body.append(
         make("tr", { class: one.faults.length || one.far ? "loud" : undefined },
           make("th", { scope: "row" }, one.name, ...(one.far ? [make("small", { text: WORDS.disagrees })] : [])),
-          cell("Data received", shareText(one.received), bars(history(one.name, (r) => r?.received ?? NaN), date, 1)),
-          cell("Gaps", ...count(one.name, one, "gaps")),
-          cell("Slips", ...count(one.name, one, "slips")),
-          cell("Arcs", plain(one.arcs)),
-          cell("Level", Number.isFinite(one.level) ? `${fixed(one.level, 2)} TECU` : "–"),
-          cell("Left out", Number.isFinite(one.leftOut) ? `${fixed(one.leftOut, 1)} TECU` : "–", bars(history(one.name, (r) => r?.leftOut ?? NaN), date)),
-          make("td", { class: "biases", "data-head": "Biases" },
+          cell(HEADS.network[1], shareText(one.received), bars(history(one.name, (r) => r?.received ?? NaN), date, 1)),
+          cell(HEADS.network[2], ...count(one.name, one, "gaps")),
+          cell(HEADS.network[3], ...count(one.name, one, "slips")),
+          cell(HEADS.network[4], plain(one.arcs)),
+          cell(HEADS.network[5], Number.isFinite(one.level) ? `${fixed(one.level, 2)} TECU` : "–"),
+          cell(HEADS.network[6], Number.isFinite(one.leftOut) ? `${fixed(one.leftOut, 1)} TECU` : "–", bars(history(one.name, (r) => r?.leftOut ?? NaN), date)),
+          make("td", { class: "biases", "data-head": HEADS.network[7] },
             ...(one.biases.length
               ? one.biases.map((bias) => make("p", {}, make("small", { text: bias.pair }), ` ${withSigma(bias.value, bias.sigma, "ns")} `, track(history(one.name, (r) => r?.biases.find((b) => b.pair === bias.pair)?.value ?? NaN), bias.sigma, date)))
               : ["–"])),
-          make("td", { "data-head": "Said of it", "data-none": !one.faults.length }, ...one.faults.map((text) => make("p", { text: asSentence(text) }))),
+          make("td", { "data-head": HEADS.network[8], "data-none": !one.faults.length }, ...one.faults.map((text) => make("p", { text: asSentence(text) }))),
         ),
       );
     }
-    const heads = ["Receiver", "Data received", "Gaps", "Slips", "Arcs", "Level, one sigma", "Left out, off by", "Biases", "Said of it"];
+    const heads = HEADS.network;
     table.replaceChildren(
       make("table", {}, make("caption", { text: WORDS.networkCaption(days.length) }),
         make("thead", {}, make("tr", {}, ...heads.map((text, i) => make("th", { scope: "col", text, class: i > 0 && i < 7 ? "number" : undefined })))), body),

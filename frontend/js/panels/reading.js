@@ -2,7 +2,7 @@
  * The reading of the chosen place: the sentence first, the numbers second, the evidence under "why".
  */
 
-import { asSentence, bothClocks, compass, countText, evidenceText, flagSentence, KIND_WORDS, latText, limitsSentence, lonText, placeText, spanText, STATE_WORDS, withSigma, WORDS } from "../words.js";
+import { asSentence, bothClocks, compass, evidenceText, flagSentence, KIND_WORDS, latText, LAYER_WORDS, limitsSentence, lonText, PAGE_WORDS, placeText, READING_WORDS, spanText, STATE_WORDS, withSigma, WORDS } from "../words.js";
 import { away } from "../figures/arrivals.js";
 import { placeAt } from "../figures/signs.js";
 import { make, stateWord, trouble, viewOf } from "./parts.js";
@@ -56,7 +56,7 @@ export class ReadingPanel {
     if (day !== this.#day) {
       this.#day = day;
       site.replaceChildren(
-        make("option", { value: "", text: "Chosen on the map" }),
+        make("option", { value: "", text: PAGE_WORDS.chosenOnTheMap }),
         ...day.sites.map((s, number) => make("option", { value: number, text: `${s.name} (${s.kind})` })),
       );
     }
@@ -123,18 +123,18 @@ export class ReadingPanel {
     if (reason && !repeated) list.append(make("li", {}, make("p", { text: asSentence(reason) })));
     for (const flag of reading.flags) {
       const how = { clock: view.clock, zone: day.region.timezone };
-      const distance = Number.isFinite(flag.distanceKm) ? `, ${Math.round(flag.distanceKm)} km away` : "";
+      const distance = Number.isFinite(flag.distanceKm) ? READING_WORDS.away(Math.round(flag.distanceKm)) : "";
       list.append(
         make("li", {},
           make("p", {}, make("strong", { text: flagSentence(flag) }), `${distance}, ${spanText(flag.start, flag.end, how)}.`),
           make("p", { text: evidenceText(flag) }),
-          make("button", { type: "button", class: "linklike", text: `Go to this ${KIND_WORDS[flag.kind]?.short ?? "flag"}`, click: () => this.#state.change(viewOf(tracked(flag, day), day)) }),
+          make("button", { type: "button", class: "linklike", text: READING_WORDS.goTo(KIND_WORDS[flag.kind]?.short), click: () => this.#state.change(viewOf(tracked(flag, day), day)) }),
         ),
       );
     }
     if (!list.children.length) list.append(make("li", {}, make("p", { text: WORDS.noFlagsNear })));
     list.append(make("li", {}, make("p", { text: limitsSentence(day.region.thresholds) })));
-    const details = make("details", { class: "why", open: this.#open || reading.state === "broken" || reading.state === "strained" }, make("summary", { text: "Why" }), list);
+    const details = make("details", { class: "why", open: this.#open || reading.state === "broken" || reading.state === "strained" }, make("summary", { text: READING_WORDS.why }), list);
     details.addEventListener("toggle", () => {
       this.#open = details.open;
     });
@@ -153,12 +153,12 @@ export class ReadingPanel {
     const place = [degrees(lat.value, "S"), degrees(lon.value, "W")];
     const region = this.#day?.region;
     if (!region || !Number.isFinite(place[0]) || !Number.isFinite(place[1])) {
-      error.textContent = "Write degrees, like 40.25 S and 146.5 E, or −40.25 and 146.5.";
+      error.textContent = READING_WORDS.degrees;
       (Number.isFinite(place[0]) ? lon : lat).focus();
       return;
     }
     if (place[0] < region.south || place[0] > region.north || place[1] < region.west || place[1] > region.east) {
-      error.textContent = `That is outside the region: ${latText(region.south, 1)} to ${latText(region.north, 1)}, ${lonText(region.west, 1)} to ${lonText(region.east, 1)}.`;
+      error.textContent = READING_WORDS.outside(latText(region.south, 1), latText(region.north, 1), lonText(region.west, 1), lonText(region.east, 1));
       return;
     }
     this.#state.change({ place: /** @type {[number, number]} */ (place) });
@@ -189,17 +189,17 @@ export function degrees(text, negative) {
 function numbers(reading) {
   const row = (name, value, small) =>
     make("div", {}, make("dt", { text: name }), make("dd", {}, make("strong", { text: value }), ...(small ? [make("small", { text: small })] : [])));
-  const state = make("div", {}, make("dt", { text: "Corrections here" }), make("dd", {}, stateWord(reading.state)));
+  const state = make("div", {}, make("dt", { text: READING_WORDS.corrections }), make("dd", {}, stateWord(reading.state)));
   // 40.308193 TECU m² s⁻² over the square of 1575.42 MHz: 0.1624 m of delay for each TECU.
   const perTecu = 0.1624;
-  const content = Number.isFinite(reading.delay) ? `${withSigma(reading.delay / perTecu, reading.delaySigma / perTecu, "TECU", 1)} of electron content` : "";
-  const toward = Number.isFinite(reading.slopeHeading) && reading.slope > 0 ? `growing toward the ${compass(reading.slopeHeading)}` : "";
+  const content = Number.isFinite(reading.delay) ? READING_WORDS.content(withSigma(reading.delay / perTecu, reading.delaySigma / perTecu, "TECU", 1)) : "";
+  const toward = Number.isFinite(reading.slopeHeading) && reading.slope > 0 ? READING_WORDS.toward(compass(reading.slopeHeading)) : "";
   return make(
     "dl",
     { class: "numbers" },
-    row("Vertical delay", withSigma(reading.delay, reading.delaySigma, "m"), content),
-    row("Slope", withSigma(reading.slope, reading.slopeSigma, "mm/km", 1), toward),
+    row(WORDS.verticalDelay, withSigma(reading.delay, reading.delaySigma, "m"), content),
+    row(LAYER_WORDS.slope.name, withSigma(reading.slope, reading.slopeSigma, "mm/km", 1), toward),
     state,
-    row("Carried by", Number.isFinite(reading.support) ? countText(reading.support, "line of sight", "lines of sight") : "not known"),
+    row(READING_WORDS.carriedBy, Number.isFinite(reading.support) ? READING_WORDS.lines(reading.support) : READING_WORDS.notKnown),
   );
 }

@@ -6,7 +6,7 @@ import { draw, erase } from "../drawing.js";
 import { csvText, save, SERIES_HEADS, seriesRows } from "../exporting.js";
 import { LEFT, seriesFigure } from "../figures/series.js";
 import { nearest } from "../figures/strip.js";
-import { fixed, placeText, timeText, withSigma, WORDS } from "../words.js";
+import { fixed, HEADS, placeText, timeText, withSigma, WORDS } from "../words.js";
 import { make } from "./parts.js";
 
 export class SeriesPanel {
@@ -74,7 +74,7 @@ export class SeriesPanel {
     const at = nearest(series.times, time);
     plot.setAttribute(
       "aria-label",
-      `Vertical delay at ${placeText(series.lat, series.lon)} over the day; ${withSigma(series.delay[at], series.sigma[at], "m")} at ${timeText(time)}.`,
+      WORDS.seriesAbout(placeText(series.lat, series.lon), withSigma(series.delay[at], series.sigma[at], "m"), timeText(time)),
     );
     const [width, height] = this.#size;
     const other = this.#other();
@@ -112,7 +112,7 @@ export class SeriesPanel {
     });
     table.replaceChildren(
       make("table", {},
-        make("thead", {}, make("tr", {}, make("th", { scope: "col", text: "Time" }), make("th", { scope: "col", class: "number", text: WORDS.verticalDelay }), ...(other ? [make("th", { scope: "col", class: "number", text: other.label })] : []), make("th", { scope: "col", class: "number", text: "Slope" }))),
+        make("thead", {}, make("tr", {}, make("th", { scope: "col", text: HEADS.series[0] }), make("th", { scope: "col", class: "number", text: WORDS.verticalDelay }), ...(other ? [make("th", { scope: "col", class: "number", text: other.label })] : []), make("th", { scope: "col", class: "number", text: HEADS.series[1] }))),
         body,
       ),
     );

@@ -60,7 +60,7 @@ export class WorkPanel {
       const found = flies ? await api.approaches(view.region, day.day, site.name, how) : await api.survey(view.region, day.day, site.name, this.#job, how);
       const parts = flies ? this.#approaches(found) : this.#survey(found);
       this.#body.replaceChildren(make("h3", { text: flies ? WORDS.approachesAt(site.name) : WORDS.surveyAt(site.name) }), ...(flies ? [] : [this.#form()]), ...parts,
-        make("p", { class: "exports" }, ...[["sheet", "sheet"], ["sheet.pdf", "sheet, PDF"], [flies ? "approaches.ics" : "survey.ics", "calendar"]].map(([file, text]) => make("a", { href: api.siteFile(view.region, day.day, site.name, file, flies ? null : this.#job), text }))),
+        make("p", { class: "exports" }, ...[["sheet", WORDS.files.sheet], ["sheet.pdf", WORDS.files.pdf], [flies ? "approaches.ics" : "survey.ics", WORDS.files.calendar]].map(([file, text]) => make("a", { href: api.siteFile(view.region, day.day, site.name, file, flies ? null : this.#job), text }))),
         make("details", {}, make("summary", { text: WORDS.assumptions }), make("ul", {}, ...found.assumptions.map((text) => make("li", { text })))));
     } catch (error) {
       if (error?.name === "AbortError") return;

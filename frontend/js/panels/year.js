@@ -3,9 +3,9 @@
  */
 
 import { csvText, save, YEAR_HEADS } from "../exporting.js";
-import { chosenDays, sharesOf, SEASONS, worstOf, yearFigure } from "../figures/year.js";
+import { chosenDays, sharesOf, SEASONS, yearFigure } from "../figures/year.js";
 import { FIELD } from "../state.js";
-import { dayText, FIELD_WORDS, fixed, monthText, SEASON_WORDS, shareText, STATE_WORDS, WORDS } from "../words.js";
+import { dayText, FIELD_WORDS, fixed, HEADS, monthText, SEASON_WORDS, shareText, STATE_WORDS, WORDS } from "../words.js";
 import { draft, make, stateWord } from "./parts.js";
 
 export class YearPanel {
@@ -136,7 +136,7 @@ export class YearPanel {
   #fillTable() {
     const { table, who } = this.#elements;
     if (!table.closest("details").open || !this.#figure) return;
-    const heads = ["Day", "Worst state", "Broken", "Strained", "Unseen", "Slope", "Highest Kp", "ap", "Flags"];
+    const heads = HEADS.year;
     const body = make("tbody");
     for (const { entry, state } of [...this.#figure.columns].reverse()) {
       const shares = sharesOf(entry, who.value) ?? {};
