@@ -26,7 +26,7 @@ from starlette.middleware.gzip import GZipMiddleware
 import skylag
 from skylag.archive import Archive
 from skylag.errors import FormatError, Missing, NotEnough, Refused, SkylagError, Unsolvable
-from skylag.web import advice, beside, maps, network, outlook, payloads, slant_files, ways, work
+from skylag.web import advice, beside, maps, network, outlook, payloads, sites, slant_files, ways, work
 from skylag.web.access import Access, Gate, Traffic
 
 Clock = Callable[[], np.datetime64]
@@ -88,8 +88,9 @@ def create_app(
     access = access or Access()
     app.state.traffic = Traffic()
     app.state.limits = access.limits
+    app.state.writing = access.writing
     app.state.feed = work.Feed(archive)
-    for part in (network.router, maps.router, advice.router, ways.router, work.router, outlook.router,
+    for part in (network.router, maps.router, advice.router, ways.router, sites.router, work.router, outlook.router,
                  beside.router, slant_files.router):  # fmt: skip
         app.include_router(part)
     _add_small_routes(app)

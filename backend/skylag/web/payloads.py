@@ -22,6 +22,7 @@ from skylag import quantities, timescales
 from skylag.archive import DayHead, DayRecord, SiteStates
 from skylag.archive.activity import DayActivity
 from skylag.archive.outlooks import Kept
+from skylag.archive.sites import SiteChanges
 from skylag.constants import L1_M_PER_TECU
 from skylag.impact.ground_augmentation import NextFront, StationDay
 from skylag.impact.satellite_augmentation import Availability
@@ -30,7 +31,7 @@ from skylag.impact.survey import Advice, Explanation
 from skylag.ionosphere.beside import Beside
 from skylag.ionosphere.geometry import geodetic
 from skylag.ionosphere.outlook import RANGES, Span
-from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Rays, Region
+from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Problem, Rays, Region, Site
 from skylag.web import nearby, sentences
 from skylag.web.witnesses import DayNetwork, Sightline
 
@@ -547,6 +548,29 @@ def survey(advice: Advice) -> dict[str, Any]:
         "windows": [{**_span(w.start, w.end), "verdict": w.verdict, "why": w.why} for w in advice.windows],
         "assumptions": list(advice.assumptions),
         "caution": advice.caution,
+    }  # fmt: skip
+
+
+def sites(
+    record: DayRecord, listed: Sequence[Site], now: SiteChanges, history: Sequence[SiteChanges],
+    problems: Sequence[Problem], writing: str,
+) -> dict[str, Any]:  # fmt: skip
+    """The sites of a region, what was changed lately, what a list had that could not be taken, who may change."""
+    changed = {one.name for one in now.sites}
+    return {
+        "region": record.region.name, "revision": now.revision, "writing": writing,
+        "sites": [
+            {"name": one.name, "lat": one.lat, "lon": one.lon, "kind": one.kind, "changed": one.name in changed,
+             "on_map": record.cell_of(one.lat, one.lon) is not None}
+            for one in listed
+        ],
+        "gone": list(now.gone),
+        "history": [
+            {"revision": one.revision, "said": one.said,
+             "made_utc": None if one.made_at is None else f"{np.datetime_as_string(one.made_at, unit='s')}Z"}
+            for one in history
+        ],
+        "problems": [{"line": one.line, "what": one.what} for one in problems],
     }  # fmt: skip
 
 
