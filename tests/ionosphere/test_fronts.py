@@ -1,9 +1,12 @@
 """Fronts: found, sized, followed and foretold on a simulated sky; not seen where there is none."""
 
+import re
+
 import numpy as np
 import pytest
 from tests.simulated.moving_wall import CENTRE, PLACES, START, changed, quiet, samples_of, simulate, wall
 
+from skylag.impact import states
 from skylag.ionosphere import fronts
 from skylag.tables import Site
 
@@ -85,6 +88,44 @@ def test_a_steady_front_keeps_its_pace_in_all_stretches():
     over = (front.segments[:, 2] - 0.1) / front.segments[:, 5]
     assert np.sqrt(np.mean(over**2)) < 2.5
     assert np.abs(np.degrees(front.segments[:, 3]) % 360.0 - 40.0).max() < 3.0
+
+
+@pytest.mark.parametrize(("before", "after", "heading"), [(150, 300, 320), (300, 120, 40)])
+def test_a_wall_that_changes_its_pace_at_once_is_one_front(before, after, heading):
+    at_s = 2 * 3600
+    turn = np.radians(heading)
+
+    def content(x, y, t):
+        late = t - at_s
+        way = np.where(late < 0, before, after) / 1000.0 * late
+        ahead = x * np.sin(turn) + y * np.cos(turn) - way
+        return quiet(x, y, t) + 120.0 / 162.372448 * np.clip(30.0 - ahead, 0.0, 60.0)
+
+    rays, samples = simulate(content, np.random.default_rng(before), hours=4.0)
+    found = fronts.track(rays, samples)
+    assert len(found.fronts) == 1
+    front = found.fronts[0]
+    assert (found.onsets.front == 0).sum() == front.onsets > 120
+    assert front.speed_m_s == pytest.approx(after, rel=0.03)  # the pace it has now: that is what foretells
+    assert front.slope == pytest.approx(120.0, rel=0.1)
+    late_s = np.array([-2400, -1200, 0, 1200, 2400])
+    moments = START + np.timedelta64(at_s, "s") + late_s.astype("timedelta64[s]")
+    true_km = np.where(late_s < 0, before, after) / 1000.0 * late_s
+    assert np.abs(fronts.position(front, moments) - true_km).max() < 30.0
+    times = [point[0] for point in front.track]
+    assert times == sorted(times) and times[0] < START + np.timedelta64(at_s, "s") < times[-1]
+    least, most = re.search(r"\((\d+) to (\d+) m/s on its way\)", states.front_sentence(front)).groups()
+    assert abs(int(least) - min(before, after)) < 10 and abs(int(most) - max(before, after)) < 10
+
+
+def test_walls_alike_that_follow_each_other_stay_two():
+    first, second = wall(120, 60, 200, 320, 1.5 * 3600), wall(120, 60, 200, 320, 3.0 * 3600)
+    rays, samples = simulate(
+        lambda x, y, t: quiet(x, y, t) + first(x, y, t) + second(x, y, t), np.random.default_rng(14), hours=5.0
+    )
+    found = fronts.track(rays, samples).fronts
+    assert len(found) == 2
+    assert [round(front.speed_m_s, -1) for front in found] == [200, 200]
 
 
 def test_two_breadths_add_somewhere_between_plainly_and_as_squares():

@@ -375,9 +375,16 @@ def front_sentence(front: Front) -> str:
     return (
         f"front of {front.slope:.0f} ± {front.slope_sigma:.0f} mm/km over {front.width_km:.0f} km, moving toward "
         f"{front.heading_deg:.0f} ± {front.heading_sigma_deg:.0f}° at {front.speed_m_s:.0f} ± "
-        f"{front.speed_sigma_m_s:.0f} m/s: {front.onsets} onsets on {len(front.receivers)} receivers and "
-        f"{len(front.satellites)} satellites agree"
+        f"{front.speed_sigma_m_s:.0f} m/s{_paces(front)}: {front.onsets} onsets on {len(front.receivers)} receivers "
+        f"and {len(front.satellites)} satellites agree"
     )
+
+
+def _paces(front: Front) -> str:
+    """Where it changed its pace on its way by a fifth and more: from what to what."""
+    pace = front.segments[:, 2] * 1000.0 if len(front.segments) else np.array([front.speed_m_s])
+    least, most = float(pace.min()), float(pace.max())
+    return f" ({least:.0f} to {most:.0f} m/s on its way)" if most - least > 0.2 * max(most, 50.0) else ""
 
 
 def patch_sentence(patch: Patch) -> str:

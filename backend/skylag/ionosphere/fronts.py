@@ -19,7 +19,7 @@ from numpy.lib.stride_tricks import sliding_window_view
 from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.events import Arrival
 from skylag.ionosphere.field import plane_km
-from skylag.ionosphere.front_segments import follow, line_at
+from skylag.ionosphere.front_segments import follow, joined, line_at, meeting
 from skylag.ionosphere.sightlines import Sightlines, from_plane, lay_out, middle
 from skylag.ionosphere.slopes import MM_PER_TECU
 from skylag.tables import Bools, Floats, Front, Fronts, Ints, Onsets, Rays, Samples, Site, Slopes, Times
@@ -344,11 +344,23 @@ def fit_walls(onsets: Onsets, rays: Rays, choices: FrontChoices | None = None) -
     for rows in _stretches(onsets, choices, (0.0,)):
         seek(rows, two_ways=True)
     found.sort(key=lambda item: onsets.time[item[1]].min())
-    fronts = []
-    for number, (wall, rows) in enumerate(found):
+    pieces = [(_front(wall, onsets.where(rows), rays, centre, choices), rows) for wall, rows in found]
+    pieces = _whole(pieces)
+    for number, (_, rows) in enumerate(pieces):
         belongs[rows] = number
-        fronts.append(_front(wall, onsets.where(rows), rays, centre, choices))
-    return Fronts(tuple(fronts), replace(onsets, front=belongs))
+    return Fronts(tuple(front for front, _ in pieces), replace(onsets, front=belongs))
+
+
+def _whole(pieces: list[tuple[Front, Ints]]) -> list[tuple[Front, Ints]]:
+    """Fronts by their start, the pieces of one wall that changed its pace at once put together."""
+    pieces = sorted(pieces, key=lambda piece: piece[0].start)
+    for number, (first, rows) in enumerate(pieces):
+        for later in range(number + 1, len(pieces)):
+            at = meeting(first, pieces[later][0])
+            if at is not None:
+                one = joined(first, pieces[later][0], at), np.concatenate([rows, pieces[later][1]])
+                return _whole([*pieces[:number], one, *pieces[number + 1 : later], *pieces[later + 1 :]])
+    return pieces
 
 
 def _reachable(onsets: Onsets, rows: Ints, free: Bools, points: _Points, choices: FrontChoices) -> Ints:
