@@ -263,6 +263,15 @@ class Indices:
     f107_observed: Floats
 
 
+@dataclass(frozen=True)
+class ActivityOutlook:
+    """ap foretold for UTC days, one row for each day and telling: day (N,), made (N,) UTC, ap (N, 8)."""
+
+    day: npt.NDArray[np.datetime64]
+    made: Times
+    ap: Floats
+
+
 # ---------------------------------------------------------------------------------------------- the region
 
 

@@ -6,7 +6,7 @@ from tests.builders import CALM_DAY
 
 from skylag.archive import Archive
 from skylag.errors import Refused
-from skylag.tables import Indices
+from skylag.tables import ActivityOutlook, Indices
 
 NOW = np.datetime64("2031-05-20T12:00", "ns")
 
@@ -30,28 +30,31 @@ def test_measured_days(archive: Archive) -> None:
     assert np.isnan(listed[str(CALM_DAY + 1)].kp_highest)
 
 
+def outlook(made: str, *told: tuple[np.datetime64, float]) -> ActivityOutlook:
+    days, ap = np.array([one[0] for one in told]), np.array([np.full(8, one[1]) for one in told])
+    return ActivityOutlook(days, np.full(len(told), np.datetime64(made, "ns")), ap)
+
+
 def test_outlooks_keep_the_time_they_were_made(archive: Archive) -> None:
-    evening = np.datetime64("2031-05-09T12:30", "ns")
-    days = [CALM_DAY, CALM_DAY + 1]
-    assert archive.activity.keep_foretold(days, np.full((2, 8), 10.0), evening, "office", NOW) == 2
-    assert archive.activity.keep_foretold(days, np.full((2, 8), 10.0), evening, "office", NOW) == 0
-    later = evening + np.timedelta64(12, "h")
-    assert archive.activity.keep_foretold(days[1:], np.full((1, 8), 80.0), later, "office", NOW) == 1
+    evening, later = "2031-05-09T12:30", "2031-05-10T00:30"
+    both = outlook(evening, (CALM_DAY, 10.0), (CALM_DAY + 1, 10.0))
+    assert archive.activity.keep_foretold(both, "office", NOW) == 2
+    assert archive.activity.keep_foretold(both, "office", NOW) == 0
+    assert archive.activity.keep_foretold(outlook(later, (CALM_DAY + 1, 80.0)), "office", NOW) == 1
     told = archive.activity.foretold(CALM_DAY, CALM_DAY + 1)
     assert [(str(one.day), one.ap[0]) for one in told] == [
         (str(CALM_DAY), 10.0), (str(CALM_DAY + 1), 10.0), (str(CALM_DAY + 1), 80.0)]  # fmt: skip
-    assert told[0].made == evening and told[2].made == later and told[0].source == "office"
+    assert told[0].made == np.datetime64(evening) and told[2].made == np.datetime64(later)
+    assert told[0].source == "office"
     assert archive.activity.foretold(CALM_DAY + 2) == ()
+    archive.activity.keep_foretold(outlook(later, (CALM_DAY + 1, 60.0)), "corrected", NOW)
+    assert [one.ap[0] for one in archive.activity.foretold(CALM_DAY + 1)] == [10.0, 60.0]
 
 
 def test_what_is_no_outlook_is_refused(archive: Archive) -> None:
-    day = [CALM_DAY]
-    made = np.datetime64("2031-05-09T12:30", "ns")
-    with pytest.raises(Refused, match="later than now"):
-        archive.activity.keep_foretold(day, np.full((1, 8), 9.0), NOW + 1, "", NOW)
     with pytest.raises(Refused, match="was over by then"):
-        archive.activity.keep_foretold(day, np.full((1, 8), 9.0), NOW, "", NOW)
-    for wrong in (np.full((1, 8), 401.0), np.full((1, 8), np.nan), np.full((1, 3), 9.0)):
+        archive.activity.keep_foretold(outlook("2031-05-11", (CALM_DAY, 9.0)), "", NOW)
+    for wrong in (401.0, np.nan, -1.0):
         with pytest.raises(Refused, match="eight values from 0 to 400"):
-            archive.activity.keep_foretold(day, wrong, made, "", NOW)
+            archive.activity.keep_foretold(outlook("2031-05-09", (CALM_DAY, wrong)), "", NOW)
     assert archive.activity.foretold() == ()

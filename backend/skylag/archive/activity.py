@@ -17,7 +17,7 @@ from sqlalchemy.engine import Connection
 
 from skylag.archive import records, schema
 from skylag.errors import Refused
-from skylag.tables import Floats, Indices
+from skylag.tables import ActivityOutlook, Floats, Indices
 
 Day = np.datetime64 | str  # a UTC day, like 2031-05-11
 _ROWS_AT_ONCE = 2000
@@ -99,42 +99,33 @@ class Activity:
 
     # ------------------------------------------------------------------------------------------ foretold
 
-    def keep_foretold(
-        self, days: Sequence[np.datetime64], ap: Floats, made: np.datetime64, source: str, now: np.datetime64
-    ) -> int:
-        """Keep an outlook of ap (D, 8) for UTC days, made at a UTC instant; gives how many days were new.
+    def keep_foretold(self, outlook: ActivityOutlook, source: str, now: np.datetime64) -> int:
+        """Keep an outlook of ap; gives how many of its rows were new.
 
-        Raises Refused where it was made after now, after the day it speaks of was over, or where ap is out of range.
+        Raises Refused where a row was made after the day it speaks of was over, or where ap is out of range.
         """
-        values = np.asarray(ap, dtype=np.float64)
-        if values.shape != (len(days), 8) or not np.all((values >= 0) & (values <= 400)):
+        if not np.all((outlook.ap >= 0) & (outlook.ap <= 400)):
             raise Refused("outlook of ap: give eight values from 0 to 400 for each day", name="ap",
-                          value=str(values.tolist())[:80], allowed="0 to 400")  # fmt: skip
-        made_ns = _ns(made)
-        if made_ns > _ns(now):
-            raise Refused(f"outlook of ap made {made}: that is later than now; give the time it was issued",
-                          name="made", value=str(made), allowed=f"up to {now}")  # fmt: skip
-        past = [str(day) for day in days if _ns(day + np.timedelta64(1, "D")) <= made_ns]
-        if past:
+                          value=str(outlook.ap.tolist())[:80], allowed="0 to 400")  # fmt: skip
+        late = outlook.made >= (outlook.day + np.timedelta64(1, "D")).astype("datetime64[ns]")
+        if late.any():
+            day, made = outlook.day[late][0], np.datetime_as_string(outlook.made[late][0], unit="m")
             raise Refused(
-                f"outlook of ap made {made}: {', '.join(past)} was over by then, so it is no outlook; import measured "
-                "indices instead, or give the time it was issued",
-                name="day", value=past[0], allowed=f"days not over at {made}",
+                f"outlook of ap for {day}, made {made} UTC: the day was over by then, so it is no outlook; import "
+                "measured indices instead, or give the time it was made",
+                name="day", value=str(day), allowed=f"days not over at {made} UTC",
             )  # fmt: skip
         table = schema.activity_outlook
 
         def insert(connection: Connection) -> int:
             count = 0
-            for day, row in zip(days, values, strict=True):
+            for day, made, row in zip(outlook.day, outlook.made, outlook.ap, strict=True):
+                key = {"day": str(day), "made_ns": _ns(made)}
                 facts = records.to_text({"ap": _list(row)})
-                query = (
-                    sa.select(table.c.facts)
-                    .where(table.c.day == str(day), table.c.made_ns == made_ns)
-                    .order_by(table.c.id.desc())
-                )
-                if connection.scalar(query.limit(1)) != facts:
-                    entered = {"day": str(day), "made_ns": made_ns, "facts": facts}
-                    connection.execute(sa.insert(table).values(**entered, source=source[:200], entered_ns=_ns(now)))
+                query = sa.select(table.c.facts).where(*(table.c[name] == value for name, value in key.items()))
+                if connection.scalar(query.order_by(table.c.id.desc()).limit(1)) != facts:
+                    row_of = {**key, "facts": facts, "source": source[:200], "entered_ns": _ns(now)}
+                    connection.execute(sa.insert(table).values(**row_of))
                     count += 1
             return count
 
