@@ -9,6 +9,7 @@ import sys
 import threading
 import time
 from collections.abc import Callable
+from concurrent.futures import BrokenExecutor
 from datetime import date
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -119,18 +120,24 @@ def _watch(options: argparse.Namespace) -> int:
 
     region = settings.read_region(options.region) if options.region else None
     rules = alerts.read_rules(options.alerts) if options.alerts else ()
+    choices = settings.estimation_from(options, options.region).choices(Choices(epoch_step_s=options.every * 60.0))
     if not options.folder.is_dir():
         raise Refused(f"{options.folder}: is no folder", name="DIR", value=str(options.folder), allowed="a folder")
-    with _opened(options) as archive, open_executor(_workers(options)) as executor:
-        watch = live.Watch(
-            archive, options.folder.resolve(), executor, clock, region=region, rules=rules,
-            choices=settings.estimation_from(options, options.region).choices(
-                Choices(epoch_step_s=options.every * 60.0)
-            ),
-            simulated=options.simulated,
-            patience=live.Patience(silent_s=options.silent * 60.0), log=Journal(sys.stderr, clock),
-        )  # fmt: skip
-        watch.run(_stopping())
+    stop, journal, watch = _stopping(), Journal(sys.stderr, clock), None
+    with _opened(options) as archive:
+        while not stop.is_set():
+            with open_executor(_workers(options)) as executor:
+                if watch is None:
+                    watch = live.Watch(
+                        archive, options.folder.resolve(), executor, clock, region=region, rules=rules,
+                        choices=choices, simulated=options.simulated,
+                        patience=live.Patience(silent_s=options.silent * 60.0), log=journal,
+                    )  # fmt: skip
+                try:
+                    watch.use(executor)
+                    watch.run(stop)
+                except BrokenExecutor as failure:  # one of its processes was ended: take new ones
+                    journal("executor lost", why=str(failure))
     return 0
 
 

@@ -1,6 +1,7 @@
 """Today as its files come in: what is asked for when, silence, maps that follow each arrival."""
 
 import shutil
+import threading
 import time
 from collections.abc import Iterator
 from concurrent.futures import Executor, ThreadPoolExecutor
@@ -15,6 +16,7 @@ from tests.builders import STORM_DAY, invented_day
 
 from skylag.archive import Archive, open_archive
 from skylag.chain import Choices
+from skylag.errors import NotEnough, SkylagError
 from skylag.ionosphere.geometry import geodetic
 from skylag.jobs import live, work
 from skylag.jobs.alerts import Rule
@@ -80,6 +82,24 @@ def test_silence_is_told_once_and_ends() -> None:
     assert replay(later) == [Fell("A", at("10:00"))]
     again = [*later, DayMade(DAY, {"A": at("11:00"), "B": at("11:00")}), Tick(at("11:45"))]
     assert replay(again)[1:] == [Fell("A", at("11:00")), Fell("B", at("11:00"))]
+
+
+def test_who_sends_hours_is_silent_after_an_hour_and_a_quarter() -> None:
+    came = [FileCame("f", DAY, at("10:00:05"), 3600.0), Tick(at("10:00:15")), DayMade(DAY, {"A": at("10:00")})]
+    assert replay([*came, Tick(at("11:14:50"))]) == [Make(DAY, False)]
+    assert replay([*came, Tick(at("11:15:00"))])[1] == Fell("A", at("10:00"))
+    quarter = [FileCame("f", DAY, at("10:00:05"), 900.0), *came[1:]]
+    assert replay([*quarter, Tick(at("10:45:00"))])[1] == Fell("A", at("10:00")), "45 minutes are more"
+
+
+@pytest.mark.parametrize(
+    ("name", "span_s"),
+    [("FENN00XBS_R_20310700800_01H_30S_MO.rnx", 3600), ("FENN00XBS_R_20310700800_15M_01S_MO.crx.gz", 900),
+     ("FENN00XBS_R_20310700800_03H_30S_MO.rnx", 0), ("FENN00XBS_R_20310700000_01D_30S_MO.rnx", 0),
+     ("fenn070i.31o", 3600), ("fenn070i15.31d.Z", 900), ("fenn0700.31o", 0), ("letter.txt", 0)],
+)  # fmt: skip
+def test_the_span_that_a_name_tells(name: str, span_s: float) -> None:
+    assert live.span_of(name) == span_s
 
 
 def test_while_all_are_silent_the_maps_go_on_unseen() -> None:
@@ -148,6 +168,59 @@ def test_a_file_counts_when_it_is_whole(tmp_path: Path) -> None:
     (tmp_path / "deep").mkdir()
     (tmp_path / "deep" / "d.rnx").write_text("x")
     assert [*folder.look(), *folder.look()] == [tmp_path / "deep" / "d.rnx"]
+
+
+# ---------------------------------------------------------------------------------------------- the archive is away
+
+
+class AwayArchive:
+    """An archive that now and then cannot be written; takes turns with a real one."""
+
+    def __init__(self, real: Archive) -> None:
+        self._real, self.away = real, True
+
+    def __getattr__(self, name: str) -> Any:
+        return getattr(self._real, name)
+
+    def save(self, *what: Any, **named: Any) -> int:
+        if self.away:
+            raise SkylagError("cannot write to the archive: disk is full; nothing was changed")
+        return self._real.save(*what, **named)
+
+
+def test_what_was_asked_for_while_the_archive_was_away_is_made_up_for(
+    tmp_path: Path, executor: Executor, archive: Archive, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """A day that goes on and then its last version, both owed; files at fault are owed nothing."""
+    made: list[str] = []
+
+    def network_day(*_: Any, day: Any, **named: Any) -> Any:
+        made.append(str(day))
+        if len(made) == 1:
+            raise NotEnough("no receiver can be used", had=0, needed=1, where="")
+        return work.DayResult(invented_day(DAY, satellites=2, step_minutes=120), (), ())
+
+    monkeypatch.setattr(work, "network_day", network_day)
+    log: list[str] = []
+    clock, away = Clock("11:00:00"), AwayArchive(archive)
+    watch = Watch(away, tmp_path, executor, clock, log=lambda event, **_: log.append(event))  # type: ignore[arg-type]
+    watch._step(FileCame("f", DAY, at("10:59:00")))
+    assert watch.turn() == 0 and log == ["day not made"]
+    watch._step(FileCame("g", DAY, at("10:59:00")))
+    for _ in range(2):
+        with pytest.raises(SkylagError, match="disk is full"):
+            watch.turn()
+    clock.set("23:59:59")
+    clock._utc = clock._utc + np.timedelta64(3, "h")
+    stop = threading.Event()
+    watch._log = lambda event, **facts: (log.append(event), stop.set())
+    watch.run(stop, every_s=0.0, away_s=0.0)
+    assert log[-1] == "archive away" and archive.days() == ()
+    away.away = False
+    assert watch.turn() == 1
+    (head,) = archive.days()
+    assert not head.provisional and head.version == 1 and watch.turn() == 0
+    assert len(made) == 5, "the whole day, once; not the part of it that was owed as well"
 
 
 # ---------------------------------------------------------------------------------------------- files as they come

@@ -43,6 +43,11 @@ def bring_up(connection: Connection, name: str) -> None:
     _take_steps(connection, found)
 
 
+def is_present(connection: Connection) -> bool:
+    """Whether the database has the form this program knows, so that nothing need be done."""
+    return _form_of(connection) == schema.SCHEMA_VERSION
+
+
 def _form_of(connection: Connection) -> int:
     """Number of the form; 0 for an empty database."""
     if not sa.inspect(connection).has_table(schema.schema_version.name):

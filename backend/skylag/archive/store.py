@@ -146,7 +146,10 @@ class Archive:
         else:
             self._read_engine = self._write_engine = _postgresql_engine(url)
         try:
-            self._write(lambda connection: forms.bring_up(connection, self.name))
+            with self._reading() as connection:  # an archive that can only be read is opened too, a standby server's
+                present = forms.is_present(connection)
+            if not present:
+                self._write(lambda connection: forms.bring_up(connection, self.name))
         except BaseException:
             self.close()
             raise

@@ -6,6 +6,7 @@ again only when its files changed, and an hour of maps is made again only when i
 that goes on is kept as provisional; once it is over it is made whole.
 """
 
+import re
 import threading
 from collections.abc import Callable, Mapping, Sequence
 from concurrent.futures import Executor
@@ -33,11 +34,16 @@ _DAY = np.timedelta64(1, "D")
 @dataclass(frozen=True)
 class Patience:
     """How long is waited: s without new files before computing (and at most so long after the first), without data
-    before a receiver is silent, after the end of a day before it is final; days back that still count as live."""
+    before a receiver is silent, after the end of a day before it is final; days back that still count as live.
+
+    late_s  so much later than the span of its files a receiver may be and is not silent yet: files of an hour come
+            every hour, whatever `silent_s` says
+    """
 
     calm_s: float = 1.0
     at_most_s: float = 5.0
     silent_s: float = 2700.0
+    late_s: float = 900.0
     settle_s: float = 7200.0
     days_back: int = 2
 
@@ -47,11 +53,13 @@ class Patience:
 
 @dataclass(frozen=True)
 class FileCame:
-    """A file is whole or has changed: its path, the GPS-time day it begins on (None for orbits and biases), now."""
+    """A file is whole or has changed: its path, the GPS-time day it begins on (None for orbits and biases), now, and
+    the span [s] that its name says it covers, 0 where that is not told or is more than an hour."""
 
     path: str
     day: np.datetime64 | None
     now: np.datetime64
+    span_s: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -92,13 +100,14 @@ Asked = Make | Fell
 @dataclass(frozen=True)
 class State:
     """What is known: days that go on, when their files began and last came (not computed yet), last data of receivers,
-    who is silent."""
+    who is silent, the longest span of a file."""
 
     open_days: frozenset[np.datetime64] = frozenset()
     waiting: Mapping[np.datetime64, tuple[np.datetime64, np.datetime64]] = field(default_factory=dict)
     last: Mapping[str, np.datetime64] = field(default_factory=dict)
     silent: frozenset[str] = frozenset()
     told: Mapping[np.datetime64, np.datetime64] = field(default_factory=dict)  # day -> when silence was last drawn
+    span_s: float = 0.0
 
 
 def step(state: State, event: Event, patience: Patience) -> tuple[State, tuple[Asked, ...]]:
@@ -111,7 +120,8 @@ def step(state: State, event: Event, patience: Patience) -> tuple[State, tuple[A
         for day in days:
             first, _ = waiting.get(day, (event.now, event.now))
             waiting[day] = (first, event.now)
-        return replace(state, open_days=state.open_days | days, waiting=waiting), ()
+        span_s = max(state.span_s, event.span_s)
+        return replace(state, open_days=state.open_days | days, waiting=waiting, span_s=span_s), ()
     if isinstance(event, DayMade):
         last = {**state.last}
         for name, time in event.last.items():
@@ -125,9 +135,10 @@ def step(state: State, event: Event, patience: Patience) -> tuple[State, tuple[A
             asked.append(Make(day, False))
             del waiting[day]
     # Files that came and are not computed yet may be of one who seems silent: that is asked at the next tick.
+    silent_s = max(patience.silent_s, state.span_s + patience.late_s if state.span_s else 0.0)
     fallen = {
         name: time for name, time in state.last.items()
-        if name not in state.silent and event.now - time >= _s(patience.silent_s) and not state.waiting
+        if name not in state.silent and event.now - time >= _s(silent_s) and not state.waiting
     }  # fmt: skip
     asked += [Fell(name, time) for name, time in sorted(fallen.items())]
     silent = state.silent | fallen.keys()
@@ -144,7 +155,7 @@ def step(state: State, event: Event, patience: Patience) -> tuple[State, tuple[A
             asked.append(Make(today, False))
     told = {day: time for day, time in told.items() if day not in over}
     known = {name: t for name, t in state.last.items() if event.now - t < patience.days_back * _DAY}
-    new = State(state.open_days - over, waiting, known, frozenset(silent & known.keys()), told)
+    new = State(state.open_days - over, waiting, known, frozenset(silent & known.keys()), told, state.span_s)
     return new, tuple(asked)
 
 
@@ -227,6 +238,21 @@ def silent_areas(products: Products, silent_s: float) -> Products:
 
 
 # ---------------------------------------------------------------------------------------------- the folder
+
+
+# What of a usual file name tells its span: 01H or 15M in long names, the letter of an hour and minutes in short ones.
+_LONG_SPAN = re.compile(r"[A-Z0-9]{9}_[A-Z]_\d{11}_(\d\d)([MH])_", re.ASCII)
+_SHORT_SPAN = re.compile(r"[A-Za-z0-9]{4}\d{3}[a-xA-X](\d\d)?\.\d\d", re.ASCII)
+
+
+def span_of(name: str) -> float:
+    """The span [s] that a file's name tells, as the RINEX descriptions have it; 0 for none, and for over an hour."""
+    found = _LONG_SPAN.match(name)
+    if found:
+        span_s = int(found.group(1)) * (60.0 if found.group(2) == "M" else 3600.0)
+        return span_s if span_s <= 3600.0 else 0.0
+    short = _SHORT_SPAN.match(name)
+    return 0.0 if short is None else 900.0 if short.group(1) else 3600.0
 
 
 class Folder:
@@ -350,7 +376,7 @@ class Watch:
             return
         self._days[str(path)] = found.day
         self._log("file came", file=path.name, kind=found.kind, day=str(found.day))
-        self._step(FileCame(str(path), found.day, self._now()))
+        self._step(FileCame(str(path), found.day, self._now(), span_of(path.name)))
 
     def _make(self, asked: Make) -> int:
         """Compute a day from all its files and keep it; gives 1 where that went well."""
