@@ -245,6 +245,8 @@ def test_wanted_codes_bring_their_phases_and_strengths() -> None:
     table = signals(simple(types=types), wanted={"G": {"C1W", "C2W"}})
     assert set(table.values) == {"C1W", "L1C", "S1C", "C2W", "L2W", "S2W"}
     assert list(table.satellites) == ["G05", "G12"]
+    one_band = signals(simple(types=types), wanted={"G": {"C1W", "C2W", "S1"}})
+    assert set(one_band.values) == {"C1W", "L1C", "S1C", "C2W", "L2W"}
     everything = signals(simple(types=types))
     assert set(everything.values) == set(types["G"]) - {"D1C"}
 

@@ -144,7 +144,7 @@ def test_choices_read() -> None:
     wanted = parse_wanted("G=C1W-C2W, E=C1C-C5Q,")
     assert wanted == {"G": ("C1W", "C2W"), "E": ("C1C", "C5Q")}
     assert parse_wanted("") == {}
-    assert wanted_codes(wanted)["G"] == {"C1W", "C2W"}
+    assert wanted_codes(wanted)["G"] == {"C1W", "C2W", "S1"}
     assert wanted_codes()["C"] >= {"C2I", "C6I", "C1P", "C5P"}
 
 

@@ -28,9 +28,13 @@ _BLOCK = 2**20  # bytes of text looked through at once for line ends
 _RUBBISH = "lines that are neither an epoch nor a satellite record"
 _OTHER_EVENTS = "events of another length than they say"
 
-_SYSTEM_NUMBER = np.full(256, -1, dtype=np.int64)
+_HUNDREDS = np.zeros(256, dtype=np.int16)  # letter of a constellation -> letter * 100, 0 for any other character
 for _letter in SYSTEMS:
-    _SYSTEM_NUMBER[ord(_letter)] = ord(_letter)
+    _HUNDREDS[ord(_letter)] = 100 * ord(_letter)
+_FIGURE = np.full(256, -100, dtype=np.int16)  # figure -> its number, far below 0 for any other character
+_FIGURE[ord("0") : ord("9") + 1] = range(10)
+_TENS = 10 * _FIGURE
+_TENS[ord(" ")] = 0
 
 
 class Problems(list[Problem]):
@@ -366,15 +370,15 @@ def _satellites(text: Text, lines: Ints, column: Ints, blank: int = 0) -> Ints:
     """
     at = text.begin[lines] + column
     inside = at + 2 < text.end[lines]
-    name = fixed_columns.windows(text.data, 3)[np.where(inside, at, 0)].view(np.uint8).reshape(-1, 3).astype(np.int64)
-    letter, tens, units = name[:, 0], name[:, 1], name[:, 2] - 0x30
+    if not inside.all():
+        at = np.where(inside, at, 0)
+    letter = text.data[at]
     if blank:
-        letter = np.where(letter == 0x20, blank, letter)
-    tens = np.where(tens == 0x20, 0x30, tens) - 0x30
-    number = tens * 10 + units
-    good = inside & (_SYSTEM_NUMBER[letter] > 0) & (number > 0)
-    good &= (tens >= 0) & (tens <= 9) & (units >= 0) & (units <= 9)
-    return np.where(good, letter * 100 + number, -1)
+        letter = np.where(letter == 0x20, np.uint8(blank), letter)
+    hundreds = _HUNDREDS[letter]
+    number = _TENS[text.data[at + 1]] + _FIGURE[text.data[at + 2]]
+    good = inside & (hundreds > 0) & (number > 0)
+    return np.where(good, hundreds + number, -1).astype(np.int64)
 
 
 # ------------------------------------------------------------------------------------------------ RINEX 2

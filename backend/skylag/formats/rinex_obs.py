@@ -44,7 +44,8 @@ def parse(
 
     data       the decompressed text
     name       the file's name, for messages and for a marker name where the header has none
-    wanted     system letter -> code observables to keep, with phases and strengths of the same bands; None keeps all
+    wanted     system letter -> code observables to keep, with phases and strengths of the same bands; where bands of
+               strength are named too (S1), only strengths of those; None keeps all
     thin_to_s  keep epochs on multiples of so many seconds only; lost locks and power failures in between are kept
     Raises FormatError when there is no header, no list of observation types, or no epoch that can be read.
     """
@@ -425,7 +426,11 @@ def _is_wanted(letter: str, code: str, wanted: Mapping[str, Collection[str]] | N
     if wanted is None:
         return True
     codes = wanted.get(letter, ())
-    return code in codes if code[0] == "C" else any(code[1] == kept[1] for kept in codes)
+    if code[0] == "C":
+        return code in codes
+    if code[0] == "S" and any(kept[0] == "S" for kept in codes):
+        return code[:2] in codes
+    return any(code[1] == kept[1] for kept in codes if kept[0] == "C")
 
 
 def _without_squared(state: Header, code: str, satellite: Ints, values: Floats) -> Floats:

@@ -66,10 +66,16 @@ def parse_wanted(text: str) -> dict[str, tuple[str, str]]:
 
 
 def wanted_codes(wanted: Mapping[str, tuple[str, str]] | None = None) -> dict[str, set[str]]:
-    """The code observables worth reading: system -> codes; the phases and strengths of their bands go with them."""
+    """What is worth reading: system -> code observables, and the bands of strength (S1) that are looked at.
+
+    The phases of the codes' bands go with them.  Strengths are only looked at on first signals.
+    """
     codes = {system: {code for pair in pairs for code in pair} for system, pairs in USABLE_PAIRS.items()}
     for system, pair in (wanted or {}).items():
         codes[system] = set(pair)
+    for system, pairs in USABLE_PAIRS.items():
+        chosen = (wanted[system],) if wanted and system in wanted else pairs
+        codes[system] |= {"S" + first[1] for first, _ in chosen}
     return codes
 
 
