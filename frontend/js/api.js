@@ -130,11 +130,11 @@ export const hasKey = () => key !== "";
 /** @param {string} [accept] @returns {Record<string, string>} */
 const headers = (accept = "application/json") => (key ? { Accept: accept, Authorization: `Bearer ${key}` } : { Accept: accept });
 
-/** @param {string} address @param {How & {method?: string}} [how] */
-async function ask(address, { signal, method = "GET" } = {}) {
+/** @param {string} address @param {How & {method?: string, body?: Blob}} [how] */
+async function ask(address, { signal, method = "GET", body } = {}) {
   let answer;
   try {
-    answer = await fetch(address, { method, signal, headers: headers() });
+    answer = await fetch(address, { method, signal, body, headers: headers() });
   } catch (error) {
     if (error.name === "AbortError") throw error;
     throw new ServiceError(WORDS.offline, "Offline", 0);
@@ -510,24 +510,59 @@ export async function network(region, how) {
 }
 
 const spanOf = (raw) => ({ ...raw, start: milliseconds(raw.start_utc), end: milliseconds(raw.end_utc) });
-const jobQuery = (job) => (job ? `&method=${job.method}&baseline_km=${job.km}` : "");
+/** Words of a question, without those that are empty. @param {Record<string, string|number>} words */
+const query = (words) => Object.entries(words).filter(([, value]) => value !== "").map(([name, value]) => `${name}=${encodeURIComponent(value)}`).join("&");
 
-/** Address of a site's sheet or calendar. @param {string} region @param {string} date @param {string} site @param {string} file @param {{method: string, km: number}|null} job */
-export function siteFile(region, date, site, file, job) {
-  return `${dayAddress(region, date)}/${file}?site=${encodeURIComponent(site)}${file.startsWith("survey") ? jobQuery(job) : ""}`;
+/** Address of what a day means for a job or a site, in the service's own words. @param {string} region @param {string} date @param {string} file @param {Record<string, string|number>} words */
+export function siteFile(region, date, file, words) {
+  return `${dayAddress(region, date)}/${file}?${query(words)}`;
 }
 
-/** Windows of survey work. @param {string} region @param {string} date @param {string} site @param {{method: string, km: number}} job @param {How} [how] */
-export async function survey(region, date, site, job, how) {
-  const raw = await ask(siteFile(region, date, site, "survey", job), how);
-  return { windows: raw.windows.map(spanOf), assumptions: raw.assumptions };
+/** Windows of survey work, and the numbers behind them. @param {string} region @param {string} date @param {Record<string, string>} job @param {How} [how] */
+export async function survey(region, date, job, how) {
+  const raw = await ask(siteFile(region, date, "survey", job), how);
+  return {
+    name: raw.job.name, windows: raw.windows.map(spanOf), assumptions: raw.assumptions, times: raw.times_utc.map(milliseconds), hours: raw.hours_utc.map(milliseconds),
+    index: numbers(raw.index_ppm), indexWords: raw.index_words, longest: numbers(raw.longest_km), fixing: numbers(raw.fixing),
+    differential68: numbers(raw.differential_68), differential95: numbers(raw.differential_95),
+  };
 }
 
-/** Approaches of an aerodrome. @param {string} region @param {string} date @param {string} site @param {How} [how] */
-export async function approaches(region, date, site, how) {
-  const raw = await ask(siteFile(region, date, site, "approaches", null), how);
+/** Was it the ionosphere? @param {string} region @param {string} date @param {Record<string, string>} job @param {string} time @param {How} [how] */
+export async function surveyWhy(region, date, job, time, how) {
+  return ask(siteFile(region, date, "survey/why", { ...job, time }), how);
+}
+
+/** Approaches of an aerodrome. @param {string} region @param {string} date @param {Record<string, string>} service @param {How} [how] */
+export async function approaches(region, date, service, how) {
+  const raw = await ask(siteFile(region, date, "approaches", service), how);
   return { levels: raw.levels.map((one) => one.name), share: raw.sites[0]?.share ?? {}, outages: raw.outages.map(spanOf), assumptions: raw.assumptions };
 }
+
+/** Ground-based augmentation of an aerodrome: minutes of each kind, and the front that comes next. @param {string} region @param {string} date @param {string} site @param {number} time @param {How} [how] */
+export async function ground(region, date, site, time, how) {
+  const raw = await ask(siteFile(region, date, "ground", { site, time: new Date(time).toISOString() }), how);
+  return { minutes: raw.minutes, next: raw.next_front?.words ?? "", assumptions: raw.assumptions };
+}
+
+const sitesOf = (raw) => ({
+  revision: raw.revision, writing: raw.writing, problems: raw.problems, gone: raw.gone,
+  sites: raw.sites.map((one) => ({ name: one.name, lat: one.lat, lon: one.lon, kind: one.kind, onMap: one.on_map })),
+  history: raw.history.map((one) => ({ said: one.said, made: milliseconds(one.made_utc) })),
+});
+const sitesAddress = (region) => `/api/sites/${encodeURIComponent(region)}`;
+
+/** The sites of a region. @param {string} region @param {How} [how] */
+export const sites = async (region, how) => sitesOf(await ask(sitesAddress(region), how));
+
+/** Add or change a site. @param {string} region @param {Record<string, string|number>} words */
+export const putSite = async (region, words) => sitesOf(await ask(`${sitesAddress(region)}?${query(words)}`, { method: "PUT" }));
+
+/** Take a site away. @param {string} region @param {string} name @param {number} after */
+export const removeSite = async (region, name, after) => sitesOf(await ask(`${sitesAddress(region)}?${query({ name, after })}`, { method: "DELETE" }));
+
+/** Take in a list. @param {string} region @param {Blob} body @param {number} after */
+export const takeInSites = async (region, body, after) => sitesOf(await ask(`${sitesAddress(region)}/list?${query({ after })}`, { method: "POST", body }));
 
 /** Ways of working a day can be judged for. @param {string} region @param {string} date @param {How} [how] @returns {Promise<{name: string}[]>} */
 export async function uses(region, date, how) {

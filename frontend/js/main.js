@@ -123,7 +123,11 @@ const curves = later(() => at("curves").open, async () => {
   const { CurvesPanel } = await import("./panels/curves.js");
   return new CurvesPanel(at("curves"), at("curves-body"));
 });
-for (const fold of ["work", "curves"]) at(fold).addEventListener("toggle", () => scene && (fold === "work" ? work : curves).show(scene));
+const sites = later(() => at("sites").open, async () => {
+  const { SitesPanel } = await import("./panels/sites.js");
+  return new SitesPanel(at("sites"), at("sites-body"), () => loadDay());
+});
+for (const [fold, panel] of Object.entries({ work, curves, sites })) at(fold).addEventListener("toggle", () => scene && panel.show(scene));
 const player = new PlayerPanel({ button: at("play"), rate: at("rate") }, state, () => Boolean(scene?.fields) && scene.index >= 0);
 const masthead = new MastheadPanel(
   {
@@ -207,7 +211,7 @@ function showAll() {
   at("main").dataset.ask = scene.view.ask;
   live.want("now", scene.view.ask === "now");
   if (files) showFiles();
-  for (const panel of [masthead, year, present, network, chart, legend, clock, reading, series, flags, ahead, work, curves, player]) panel.show(scene);
+  for (const panel of [masthead, year, present, network, chart, legend, clock, reading, series, flags, ahead, work, curves, sites, player]) panel.show(scene);
 }
 
 /**

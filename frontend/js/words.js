@@ -345,6 +345,7 @@ export const PAGE_WORDS = {
   read: "Read",
   openingTheDay: "Opening the day …",
   forYourWorkHere: "For your work here",
+  sitesOfTheRegion: "Sites of the region",
   curvesOfTheLines: "Curves of the lines of sight near here",
   planningAidNotFor: "Planning aid, not for navigation: official notices, the service provider, the receiver maker and local rules decide.",
   thisPlaceThroughThe: "This place through the day",
