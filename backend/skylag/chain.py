@@ -13,7 +13,18 @@ import numpy as np
 from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.errors import NotEnough
 from skylag.impact import arrivals, states
-from skylag.ionosphere import adjustment, background, faults, fronts, geometry, irregularity, left_out, orbits, slopes
+from skylag.ionosphere import (
+    adjustment,
+    background,
+    displacement,
+    faults,
+    fronts,
+    geometry,
+    irregularity,
+    left_out,
+    orbits,
+    slopes,
+)
 from skylag.ionosphere import field as vertical_field
 from skylag.ionosphere.adjustment import AdjustmentChoices
 from skylag.ionosphere.arcs import ArcChoices, cut, reasons, slip_list
@@ -42,6 +53,8 @@ Progress = Callable[[str, float], None]
 
 # What becomes of published satellite biases: the adjustment holds them, draws upon them, or does without.
 HOLD, DRAW, IGNORE = "hold", "draw", "ignore"
+# What maps fade into where nobody looks.
+BROADCAST, CLIMATOLOGICAL = "broadcast", "climatological"
 
 
 @dataclass(frozen=True)
@@ -54,6 +67,8 @@ class Choices:
     earlier_days       how far back the archive may be asked for biases of an earlier day, 0: not at all; they are
                        drawn upon where no published ones are in use
     bias_walk_ns_per_day  by how much a bias that is drawn upon may have walked in a day (`AdjustmentChoices`)
+    background         BROADCAST (the climatological one where nothing is broadcast) or CLIMATOLOGICAL
+    solar_flux         of the climatological model, in the unit of the 10.7 cm radio flux; 0: a mean day's
     """
 
     signals: Mapping[str, tuple[str, str]] = field(default_factory=dict)
@@ -63,6 +78,8 @@ class Choices:
     published_biases: str = HOLD
     earlier_days: int = 0
     bias_walk_ns_per_day: float = 0.1
+    background: str = BROADCAST
+    solar_flux: float = 0.0
     epoch_step_s: float = 300.0
     thin_to_s: float | None = None
     arcs: ArcChoices = field(default_factory=ArcChoices)
@@ -156,10 +173,15 @@ def channels_of(sources: Sequence[Ephemerides | PreciseOrbits]) -> dict[str, int
     return channels
 
 
-def background_of(sources: Sequence[Ephemerides | PreciseOrbits]) -> Background | None:
-    """The broadcast model of the navigation records, the first that tells one; None where none does."""
+def background_of(sources: Sequence[Ephemerides | PreciseOrbits], choices: Choices | None = None) -> Background:
+    """What maps fade into: the broadcast model of the first navigation records that tell one, else, or where it is
+    chosen, the climatological one."""
+    choices = choices or Choices()
     told = (background.broadcast(source.ionosphere) for source in sources if isinstance(source, Ephemerides))
-    return next((model for model in told if model is not None), None)
+    known = next((model for model in told if model is not None), None)
+    if known is not None and choices.background == BROADCAST:
+        return known
+    return background.climatological(choices.solar_flux)
 
 
 def estimate(
@@ -212,6 +234,7 @@ def estimate(
         "receivers_left_out": dict(foretold.facts()),
         "beyond_sight": (beyond or background.PLAIN).name,
     }
+    samples = displacement.widened(samples, fields, choices.adjustment.shell_height_sigma_m)
     return Estimate(
         calibration, samples, judged.fields, judged.flags, judged.site_states, judged.site_reasons, facts,
         limits_of_sight(rays, calibration),

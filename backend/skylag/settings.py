@@ -11,7 +11,7 @@ from dataclasses import dataclass, fields, replace
 from pathlib import Path
 from typing import Any, NoReturn
 
-from skylag.chain import DRAW, HOLD, IGNORE, Choices
+from skylag.chain import BROADCAST, CLIMATOLOGICAL, DRAW, HOLD, IGNORE, Choices
 from skylag.errors import FormatError, Refused
 from skylag.ionosphere.geometry import MODIFIED_SINGLE_LAYER, SINGLE_LAYER
 from skylag.tables import USE_KINDS, Region, Site, Thresholds, Use
@@ -43,6 +43,9 @@ class Estimation:
     bias_walk_ns_per_day  by how much a bias that is drawn upon may have walked in a day, 0.01 to 5
     drift_hours          0: one bias per receiver and day; or one per so many hours, 1 to 24
     repair_slips         repair cycle slips whose whole numbers are certain, instead of cutting the arc
+    background           what maps fade into where nobody looks: the model "broadcast" in the navigation files (the
+                         climatological one where they tell none), or always the "climatological" one
+    solar_flux           of the climatological model: solar flux at 10.7 cm, 60 to 300; 0: a mean day's, 63.7
     """
 
     mapping: str = "single"
@@ -52,6 +55,8 @@ class Estimation:
     bias_walk_ns_per_day: float = 0.1
     drift_hours: float = 0.0
     repair_slips: bool = False
+    background: str = BROADCAST
+    solar_flux: float = 0.0
 
     def __post_init__(self) -> None:
         for name, allowed in WORDS.items():
@@ -84,14 +89,20 @@ class Estimation:
             bias_walk_ns_per_day=self.bias_walk_ns_per_day,
             adjustment=adjustment,
             arcs=replace(base.arcs, repair=self.repair_slips),
+            background=self.background,
+            solar_flux=self.solar_flux,
         )
 
 
-WORDS = {"mapping": ("single", "modified"), "published_biases": (HOLD, DRAW, IGNORE)}
+WORDS = {
+    "mapping": ("single", "modified"), "published_biases": (HOLD, DRAW, IGNORE),
+    "background": (BROADCAST, CLIMATOLOGICAL),
+}  # fmt: skip
 # Least, most, and whether 0 says "not at all".
 RANGES = {
     "shell_height_km": (100.0, 1000.0, True), "earlier_days": (1, 60, True),
     "bias_walk_ns_per_day": (0.01, 5.0, False), "drift_hours": (1.0, 24.0, True),
+    "solar_flux": (60.0, 300.0, True),
 }  # fmt: skip
 
 
@@ -152,6 +163,15 @@ def add_estimation(parser: argparse.ArgumentParser) -> None:
     group.add_argument(
         "--repair-slips", action=argparse.BooleanOptionalAction, default=None,
         help="repair cycle slips whose whole numbers are certain, instead of cutting there (no)",
+    )  # fmt: skip
+    group.add_argument(
+        "--background", choices=WORDS["background"],
+        help="what maps fade into where no line of sight passes: the model that the navigation files broadcast "
+        "(broadcast; climatological where they tell none), or always the climatological one; unseen either way",
+    )  # fmt: skip
+    group.add_argument(
+        "--solar-flux", type=float, metavar="SFU",
+        help="of the climatological model: solar radio flux at 10.7 cm, 60 to 300 (0: a mean day, 63.7)",
     )  # fmt: skip
 
 

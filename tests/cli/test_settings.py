@@ -118,10 +118,12 @@ def test_command_line_wins_over_the_region_file_wins_over_the_usual(tmp_path: Pa
 def test_choices_say_what_was_asked_for() -> None:
     made = settings.estimation_from(command(
         "--mapping", "modified", "--shell-height-km", "500", "--published-biases", "draw", "--earlier-days", "5",
-        "--bias-walk-ns-per-day", "0.3", "--drift-hours", "2", "--repair-slips"), None).choices()  # fmt: skip
+        "--bias-walk-ns-per-day", "0.3", "--drift-hours", "2", "--repair-slips",
+        "--background", "climatological", "--solar-flux", "140"), None).choices()  # fmt: skip
     assert (made.mapping_function, made.shell_height_km) == ("modified single layer", 500.0)
     assert (made.published_biases, made.earlier_days, made.bias_walk_ns_per_day) == ("draw", 5, 0.3)
     assert made.adjustment.drift_hours == 2.0 and made.arcs.repair
+    assert (made.background, made.solar_flux) == ("climatological", 140.0)
     assert made.adjustment.high_layer == 0.0, "this mapping has a plasmasphere in it"
 
 
@@ -137,6 +139,8 @@ def test_choices_say_what_was_asked_for() -> None:
         ('mapping = "cosine"', "single or modified"),
         ('published_biases = "believe"', "hold or draw or ignore"),
         ("repair_slips = 1", "true or false"),
+        ('background = "none"', "broadcast or climatological"),
+        ("solar_flux = 20", "60 to 300, or 0"),
         ("height = 3", "knows nothing of height"),
     ],
 )

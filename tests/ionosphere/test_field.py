@@ -8,13 +8,14 @@ import pytest
 from tests.conftest import Evidence
 from tests.simulated.moving_wall import CENTRE, PLACES, START, changed, flat, quiet, simulate, wall
 
+from skylag import chain
 from skylag.errors import NotEnough, Refused
 from skylag.ionosphere import augmentation_grid, field, kriging, left_out
 from skylag.ionosphere.background import PLAIN, Background, broadcast
 from skylag.ionosphere.covariance import Epoch, Residual, gather, plane_terms
 from skylag.ionosphere.field import FieldChoices, epochs_between, fit
 from skylag.ionosphere.interpolation import slant_at
-from skylag.tables import HOLDS, UNSEEN, Fields, Samples
+from skylag.tables import HOLDS, UNSEEN, Ephemerides, Fields, Samples
 
 # A grid whose middle is the middle of the small world's plane, so that a plane is a plane in both.
 LATS, LONS = CENTRE[0] + np.arange(-3.0, 3.01, 0.5), CENTRE[1] + np.arange(-3.5, 3.51, 0.5)
@@ -281,6 +282,25 @@ def test_a_background_never_touches_what_is_seen() -> None:
     assert seen.any() and not seen.all()
     np.testing.assert_array_equal(one.vtec[seen], two.vtec[seen])
     assert np.any(two.vtec[~seen] > one.vtec[~seen] + 1.0)
+
+
+def no_orbits() -> Ephemerides:
+    never, none = np.zeros(0, "datetime64[ns]"), np.zeros(0)
+    words = np.zeros(0, "U3")
+    return Ephemerides(words, words, never, never, none > 0, none, np.zeros((0, 16)), np.zeros((0, 9)),
+                       np.zeros(0, np.int64), np.zeros((0, 2)))  # fmt: skip
+
+
+def test_which_background_is_chosen() -> None:
+    """The first model that is broadcast, unless the climatological one is asked for; that one by its flux."""
+    silent, told = (replace(no_orbits(), ionosphere=known) for known in ({}, {"GAL": (60.0, 0.1, 0.0)}))
+    usual, always = chain.Choices(), chain.Choices(background=chain.CLIMATOLOGICAL, solar_flux=140.0)
+    assert chain.background_of([silent, told], usual).coefficients == (60.0, 0.1, 0.0)
+    assert chain.background_of([silent], usual) == PLAIN
+    asked = chain.background_of([silent, told], always)
+    assert asked.coefficients == (140.0, 0.0, 0.0) and "140" in asked.name
+    noon = (np.array([-40.0]), np.array([145.0]), np.datetime64("2030-03-05T03:00:00", "ns"))
+    assert asked.vertical(*noon)[0] > 1.5 * PLAIN.vertical(*noon)[0]
 
 
 def test_which_background_is_broadcast() -> None:

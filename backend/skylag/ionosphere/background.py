@@ -46,6 +46,13 @@ class Background:
 PLAIN = Background("a plain model of a mean day", "ntcm", (63.7, 0.0, 0.0))
 
 
+def climatological(solar_flux: float = 0.0) -> Background:
+    """NTCM-G at a solar radio flux (the unit of 10.7 cm measurements, in which its coefficient is told); 0: `PLAIN`."""
+    if not solar_flux:
+        return PLAIN
+    return Background(f"a climatological model at a solar flux of {solar_flux:g}", "ntcm", (solar_flux, 0.0, 0.0))
+
+
 def broadcast(ionosphere: Mapping[str, tuple[float, ...]]) -> Background | None:
     """The model that navigation records tell (`Ephemerides.ionosphere`): Galileo's first, else GPS's, else None."""
     galileo = ionosphere.get("GAL", ())

@@ -422,7 +422,8 @@ def network_day(
     # the processor time with two of them).
     with threadpool_limits(1):
         made = chain.estimate(
-            rays, place, wanted_day, choices, prior, channels, stage, chain.background_of(sources),
+            rays, place, wanted_day, choices, prior, channels, stage,
+            chain.background_of(sources, choices),
             lambda make, hours: executor.map(_UNITS[make], hours),
         )  # fmt: skip
     clock.enter("")
