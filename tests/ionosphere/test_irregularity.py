@@ -111,6 +111,17 @@ def test_a_patch_is_found_where_it_is(calm):
     assert len(patch.receivers) >= 2 and patch.index_highest > 0.5
 
 
+@pytest.mark.parametrize(("speed", "heading", "seed"), [(70.0, 285.0, 3), (110.0, 60.0, 6), (40.0, 150.0, 2)])
+def test_the_drift_of_a_patch_is_told(calm, speed, heading, seed):
+    drift = speed * np.sin(np.radians(heading)), speed * np.cos(np.radians(heading))
+    rays, samples = ragged(
+        *calm, centre=(20.0, 10.0), radius_km=130.0, first_h=1.0, last_h=2.8, drift_m_s=drift, seed=seed
+    )
+    (patch,) = [p for p in irregularity.assess(rays, NO_ONSETS, None, samples).patches if p.confirmed]
+    assert abs(patch.drift_m_s - speed) < min(3.0 * patch.drift_sigma_m_s, 0.25 * speed)
+    assert abs((patch.drift_heading_deg - heading + 180.0) % 360.0 - 180.0) < 15.0
+
+
 def test_a_passing_wall_is_not_ragged():
     ramp = wall(200.0, 50.0, 250.0, 30.0, 2 * 3600)
     rays, samples = simulate(lambda x, y, t: quiet(x, y, t) + ramp(x, y, t), np.random.default_rng(62), hours=4.0)

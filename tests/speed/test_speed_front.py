@@ -1,8 +1,9 @@
 """Budget: slopes, fronts, patches, faults, forecasts and states of a 16-receiver day, for all uses, with events.
 
-The mark is 15 s on two cores; this runs on one.
+The mark is 15 s on two cores; this runs on one, in processor time, so that other programs' load does not count.
 """
 
+import time
 from typing import Any
 
 import numpy as np
@@ -37,5 +38,14 @@ def test_a_day_of_sixteen_receivers(benchmark: Any) -> None:
             found.append(events.of_use(seen, judged.fields, judged.flags, REGION))
         return len(found)
 
-    assert benchmark.pedantic(all_of_it, rounds=2, iterations=1) == 5
-    assert benchmark.stats.stats.min < 15.0
+    spent = []
+
+    def timed() -> int:
+        began = time.process_time()
+        made = all_of_it()
+        spent.append(time.process_time() - began)
+        return made
+
+    assert benchmark.pedantic(timed, rounds=2, iterations=1) == 5
+    print(f"slopes to events: {min(spent):.1f} s of processor time")
+    assert min(spent) < 15.0
