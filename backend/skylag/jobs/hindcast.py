@@ -387,6 +387,12 @@ def told(found: Hindcast) -> tuple[str, ...]:
         f"{found.region}, {found.first} to {found.last}: {facts['outlooks']} outlooks scored; the archive has data on "
         f"{found.days_with_data} of the days up to then"
     ]
+    return (*lines, *scored(facts))
+
+
+def scored(facts: Mapping[str, Any]) -> tuple[str, ...]:
+    """What `summary` tells, in lines."""
+    lines: list[str] = []
     for lead, name in (("1", "the day ahead"), ("2", "the day after it")):
         one = facts["leads"].get(lead)
         if one is None:

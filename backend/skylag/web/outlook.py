@@ -1,9 +1,9 @@
 """Routes about the day ahead: the outlook after the newest day of a region, at a place or on a map, and its record.
 
-Made and kept at the first request after a new day.  An outlook is a planning aid, not for navigation.
+Made and kept when a day is kept, or at the first request after it.  An outlook is a planning aid, not for navigation.
 """
 
-from typing import Annotated
+from typing import Annotated, Any
 
 import numpy as np
 from fastapi import APIRouter, Query, Request
@@ -14,13 +14,13 @@ from skylag.errors import Missing, Refused
 from skylag.impact import outlook_advice, uses
 from skylag.ionosphere import outlook as science
 from skylag.jobs import hindcast
-from skylag.tables import Outlook
+from skylag.tables import Floats, Outlook
 from skylag.web import asking, payloads
 
 router = APIRouter()
 
 
-def _entered(expected_ap: str) -> np.ndarray[tuple[int, ...], np.dtype[np.float64]] | None:
+def _entered(expected_ap: str) -> Floats | None:
     """Two values of ap for the two days ahead, as they are asked: `12,80`; None without."""
     if not expected_ap.strip():
         return None
@@ -63,8 +63,19 @@ def at_place(
     A place outside the map is refused.
     """
     archive: Archive = request.app.state.archive
+    return payloads.reply(ahead(archive, _known(archive, region), lat, lon, use, _entered(expected_ap), most))
+
+
+def ahead(
+    archive: Archive, region: str, lat: float, lon: float, use: str = "", expected_ap: Floats | None = None,
+    most: float = 0.1,
+) -> dict[str, Any]:  # fmt: skip
+    """What the outlook tells of a place for a use, as plain facts; one with entered activity is not kept.
+
+    Raises Missing for a region without days, Refused for a place outside its map.
+    """
     lat, lon = asking.place(lat, lon)
-    kept = hindcast.newest(archive, _known(archive, region), expected_ap=_entered(expected_ap), keep=False)
+    kept = hindcast.newest(archive, region, expected_ap=expected_ap, keep=False)
     made = kept.outlook
     record = archive.day(region, made.known_until)
     wanted = uses.find_use(record.region, use) if use else uses.uses_of(record.region)[0]
@@ -77,11 +88,8 @@ def at_place(
     number = [str(name) for name in made.uses].index(wanted.name)
     spans = science.windows(made, place, number, most)
     storm = any(word not in ("untold", "quiet") for word in made.phases)
-    return payloads.reply(
-        payloads.outlook_at(
-            kept, place, away_km, number, spans, outlook_advice.advice(wanted, spans, storm), record.origin.simulated
-        )
-    )
+    advice = outlook_advice.advice(wanted, spans, storm)
+    return payloads.outlook_at(kept, place, away_km, number, spans, advice, record.origin.simulated)
 
 
 @router.get("/api/outlook/{region}/record", summary="How often outlooks were right")
