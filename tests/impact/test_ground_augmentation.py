@@ -119,10 +119,13 @@ def test_when_the_next_front_comes() -> None:
     assert abs(found.expected - (DAY + np.timedelta64(385, "m"))) < np.timedelta64(10, "s")
     assert found.sigma_s == pytest.approx(0.3 * 1200, rel=0.01)
     assert "in 20 ± 6 minutes" in found.words
-    # A front that tells the sigma of its own speed: 20 minutes times 25 over 200.
+    # A front that tells the sigma of its own speed: 20 minutes times 25 over 200, and 6 km of its place at 200 m/s.
     known = ground.next_front(SITE, [replace(a_front(), speed_sigma_m_s=25.0)], now)
     assert known is not None
-    assert known.sigma_s == pytest.approx(1200 * 25 / 200, rel=0.01)
+    assert known.sigma_s == pytest.approx(np.hypot(1200 * 25 / 200, 6000 / 200), rel=0.01)
+    sharp = ground.next_front(SITE, [replace(a_front(), speed_sigma_m_s=0.5)], now)
+    assert sharp is not None
+    assert sharp.sigma_s >= 30.0  # a speed known well does not place the line to the second
 
 
 @pytest.mark.parametrize("minute", [300, 400, 600])

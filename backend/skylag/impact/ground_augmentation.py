@@ -27,6 +27,7 @@ QUANTILE = 3.29  # 99.9 %: a slope beyond so many spreads is not nominal (our ch
 _THREAT_LOW, _THREAT_HIGH = (15.0, 375.0), (65.0, 425.0)
 # Speeds of fronts from few stations carry about 30 % (Radio Science 48, 2013): for flags that tell no sigma of theirs.
 SPEED_DOUBT = 0.3
+PLACE_DOUBT_KM = 6.0  # of a front's line: five walls through invented three-dimensional content lay off by up to 7 km
 _ONE_SIDED_95 = 1.645  # of a normal error: what holds is said with this confidence, as for the states of a map
 
 
@@ -209,7 +210,8 @@ def next_front(site: Site, flags: Sequence[Flag], now: np.datetime64, horizon_s:
         if not 0 < wait_s <= horizon_s:
             continue
         known_speed = np.isfinite(flag.speed_sigma_m_s)
-        sigma_s = (flag.speed_sigma_m_s / flag.speed_m_s if known_speed else SPEED_DOUBT) * wait_s
+        share = flag.speed_sigma_m_s / flag.speed_m_s if known_speed else SPEED_DOUBT
+        sigma_s = float(np.hypot(share * wait_s, PLACE_DOUBT_KM * 1000.0 / flag.speed_m_s))
         expected = now + np.timedelta64(round(wait_s * 1e9), "ns")
         found.append(
             NextFront(
