@@ -287,6 +287,7 @@ async function loadDay() {
     settling = false;
     scene.view = state.view;
     at("main").dataset.loading = "false";
+    delete at("main").dataset.bare;
     showAll();
     await Promise.all([loadFields(), sameRegion ? null : loadCoast(signal), loadPlace(), loadRays(), loadOther(), loadOtherSeries()]);
   } catch (error) {
@@ -383,8 +384,8 @@ async function loadOther() {
 async function loadFields() {
   const mine = scene;
   const wanted = scene.time;
+  const slow = setTimeout(() => mine === scene && wanted === scene.time && chart.note(WORDS.loadingMap), 250);
   try {
-    const slow = setTimeout(() => mine === scene && wanted === scene.time && chart.note(WORDS.loadingMap), 250);
     const fields = await hourOf(wanted);
     clearTimeout(slow);
     if (mine !== scene || wanted !== scene.time) return;
@@ -401,8 +402,9 @@ async function loadFields() {
       if (next >= day.times[0] && next <= day.times[day.times.length - 1]) hourOf(next).catch(() => {});
     }
   } catch (error) {
+    clearTimeout(slow);
     begin();
-    if (mine === scene && wanted === scene.time) chart.note(error.message);
+    if (mine === scene && wanted === scene.time) chart.note(error.message, loadFields);
   }
 }
 
@@ -477,17 +479,22 @@ async function loadRays() {
   }
 }
 
-function fail(error, again) {
+/** Without a day there is nothing but words and the way out. @param {...Node} words */
+function bare(...words) {
   at("main").dataset.loading = "false";
-  at("answer").replaceChildren(trouble(error, () => again()));
+  at("main").dataset.bare = "true";
+  at("answer").setAttribute("aria-busy", "false");
+  at("answer").replaceChildren(...words);
   chart.note("");
 }
 
+function fail(error, again) {
+  bare(trouble(error, () => again()));
+}
+
 function empty() {
-  at("main").dataset.loading = "false";
   at("region-name").textContent = WORDS.emptyArchive;
-  at("answer").replaceChildren();
-  at("answer").append(make("p", { text: WORDS.emptyArchiveHow }), make("button", { type: "button", text: FILE_WORDS.title, click: () => state.change({ files: true }) }));
+  bare(make("p", { class: "lead", text: WORDS.emptyArchive }), make("p", { class: "reason", text: WORDS.emptyArchiveHow }), make("button", { type: "button", text: FILE_WORDS.title, click: () => state.change({ files: true }) }));
 }
 
 state.addEventListener("change", (event) => {

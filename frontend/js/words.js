@@ -53,7 +53,7 @@ export const WORDS = {
   loadingMap: "Fetching this hour …",
   loadingReading: "Reading the archive at this place …",
   emptyArchive: "The archive holds no day yet.",
-  emptyArchiveHow: "The archive holds no day yet. Send your files here, process a day with “skylag day”, or run “skylag demo” for the invented sample days.",
+  emptyArchiveHow: "Send your files here, process a day with “skylag day”, or run “skylag demo” for the invented sample days.",
   choosePlace: "Click the map, or choose a site, to ask about a place.",
   noFlags: "No flag was raised on this day.",
   noFlagsNear: "No flag was raised near here within the hour.",

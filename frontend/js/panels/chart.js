@@ -82,9 +82,10 @@ export class ChartPanel {
     this.#compared.textContent = view.versus ? other?.trouble || (other?.label ? WORDS.comparedWith(other.label, difference) + states : WORDS.loadingMap) : "";
   }
 
-  /** @param {string} text */
-  note(text) {
+  /** @param {string} text @param {() => void} [again]  may it be tried again */
+  note(text, again) {
     this.#note.textContent = text;
+    if (again) this.#note.append(" ", make("button", { type: "button", text: WORDS.tryAgain, click: () => again() }));
   }
 
   /** The numbers of the map on the screen as a text table: of a difference, the differences. */

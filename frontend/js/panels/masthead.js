@@ -60,6 +60,7 @@ export class MastheadPanel {
         : regions.flatMap(options)),
     );
     day.disabled = !days.length;
+    day.closest(".day-picker").hidden = !days.length;
   }
 
   /** @param {import("../main.js").Scene} scene */
