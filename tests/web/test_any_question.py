@@ -32,7 +32,8 @@ GOOD = {"region": REGION.name, "day": str(STORM_DAY), "lat": "-41", "lon": "147"
         "places": "-41.1,147.1;-41.3,147.4", "shape": "route", "references": "GULL;-41,147", "session_min": "60",
         "least_min": "15", "mask_deg": "15", "least_satellites": "5", "most_dilution": "6", "fixing_chance": "0.1",
         "systems": "G", "lowest_deg": "15", "noise_m": "0.36", "usual_grid_m": "3", "distance_km": "6",
-        "speed_m_s": "70", "smoothing_s": "100", "newest": "30", "revision": "0", "reach_km": "100", "minutes": "30"}  # fmt: skip
+        "speed_m_s": "70", "smoothing_s": "100", "newest": "30",
+        "revision": "0", "reach_km": "100", "minutes": "30"}  # fmt: skip
 MANY = settings(max_examples=100, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 
 
