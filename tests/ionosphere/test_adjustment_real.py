@@ -203,7 +203,7 @@ def test_level_of_one_receiver_on_a_real_day(open_data: Path, evidence: Evidence
     evidence("ZIMM 2015-08-23: receiver bias, satellites held; single layer and high layer (two sigmas of both ways)",
              source=source, expected=told[0], got=value[1], tolerance=2.0 * float(np.hypot(*sigma)),
              unit="ns")  # fmt: skip
-    assert sigma[1] < 0.5 and sigma[0] < 0.8, "honest is not the same as vast"
+    assert sigma[1] < 0.5 and sigma[0] < 1.0, "honest is not the same as vast"
     usual = float(np.mean(NIGHT_TECU)) + ABOVE_TECU
     evidence("ZIMM 2015-08-23: vertical content from 01 to 05 UT", source="IRI (PyIRI 0.1.7), 1 TECU above 2000 km",
              expected=usual, got=night[1], tolerance=1.5, unit="TECU")  # fmt: skip

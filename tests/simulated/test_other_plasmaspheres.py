@@ -17,6 +17,7 @@ from invented import network
 from invented.places import STATIONS
 from skylag.ionosphere.adjustment import AdjustmentChoices, apply, solve
 from skylag.ionosphere.geometry import modified_mapping
+from skylag.settings import Estimation
 from skylag.tables import Floats
 
 CALM, STORM, RECOVERY = "2031-03-11", "2031-03-12", "2031-03-13"
@@ -140,8 +141,9 @@ def test_levels_are_as_good_as_stated_over_many_skies(alone: bool) -> None:
     Of 64 common errors, most of them small and some large, an RMS is known to about a tenth."""
     found = [one for seed in (201, 202) for one in campaign(seed, 32, alone=alone)]
     bias, level = say("one receiver alone" if alone else "five receivers", found)
-    assert 0.8 < bias < 1.2
-    assert 0.75 < level < 1.25
+    low, high = (0.7, 1.3) if alone else (0.8, 1.2)  # alone, errors scatter more from sky to sky
+    assert low < bias < high
+    assert low < level < high
     assert rms([f.common for f in found]) < 0.45
     assert np.mean([abs(f.common) < 2.0 * f.stated for f in found]) > 0.9
     assert 0.8 < np.std(np.concatenate([f.singles for f in found])) < 1.25
@@ -151,11 +153,11 @@ def test_levels_are_as_good_as_stated_over_many_skies(alone: bool) -> None:
 def test_growth_found_from_the_day_beats_growth_held() -> None:
     """And the mapping of global maps, without a high layer, reads too high: by 0.4 ns in the mean, 1.2 TECU."""
     found, held = campaign(203, 24), campaign(203, 24, AdjustmentChoices(foot_exponent=1.0))
-    plain = campaign(203, 24, AdjustmentChoices(high_layer=0.0, high_layer_sigma=1e-3), modified=True)
+    plain = campaign(203, 24, Estimation(mapping="modified").choices().adjustment, modified=True)
     for words, one in (("found", found), ("held", held), ("modified single layer", plain)):
         say(words, one)
     assert rms([f.common for f in found]) < 0.6 * rms([f.common for f in held])
     assert rms([f.common for f in found]) < 0.4 * rms([f.common for f in plain])
     assert np.mean([f.common for f in plain]) > 0.2
-    # What is left out altogether leans with its usual strength, so that it is not taken for known.
-    assert rms([f.common / f.stated for f in plain]) < 2.0
+    # What is left out leans with its usual strength, so that it is not taken for known; 3 sigmas before.
+    assert rms([f.common / f.stated for f in plain]) < 1.6

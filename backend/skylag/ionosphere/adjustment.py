@@ -369,11 +369,12 @@ def _doubt(
     """One sigma of what the high layer may be off by, per ray [TECU]: growth toward the feet, the mean of both ways.
 
     A plasmasphere of another shape is taken for a weaker or no layer of this one, and pulls the biases all the same: so
-    the doubt goes with the amplitude found and with what may hide from it.  Where no high layer is allowed for, all of
-    the usual one is left out.
+    the doubt goes with the amplitude found and with what may hide from it.  Where the amplitude is held instead, it is
+    as far off as it is from the usual one, and as that strays.
     """
     if choices.high_layer_sigma < 0.01:
-        return HIDDEN_AMPLITUDE * shape(exponent)[0]
+        usual = AdjustmentChoices()
+        return np.asarray(np.hypot(choices.high_layer - usual.high_layer, usual.high_layer_sigma) * shape(exponent)[0])
     change = 0.5 * (shape(exponent + sigma)[0] - shape(exponent - sigma)[0])
     return np.asarray(np.hypot(amplitude, HIDDEN_AMPLITUDE) * change)
 

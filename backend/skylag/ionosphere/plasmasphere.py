@@ -35,7 +35,7 @@ _NODES = np.polynomial.legendre.leggauss(14)
 # Once a day's data have told the exponent, what the shape still lacks is taken as so much of exponent: for a network,
 # and for fewer than four receivers, which tell slopes of the dense layer and the plasmasphere's one side less well
 # apart.  Calibrated on invented days with plasmaspheres of other shapes (tests/simulated/test_other_plasmaspheres.py).
-FOOT_EXPONENT_REST, FOOT_EXPONENT_REST_FEW = 0.33, 0.75
+FOOT_EXPONENT_REST, FOOT_EXPONENT_REST_FEW = 0.33, 0.67
 # Exponents at which shapes are worked out; between them the logarithm of a shape is taken as a parabola.
 _EXPONENTS = (0.0, 1.0, 2.0)
 
