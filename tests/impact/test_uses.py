@@ -281,6 +281,18 @@ def test_geojson_is_cut_at_the_antimeridian(stormy, west, east, south, north, ki
     assert feature["bbox"] == bounds
 
 
+def test_a_track_is_cut_at_the_antimeridian():
+    east = event_files.line([179.0, 181.0, 182.0], [-40.0, -41.0, -41.5])
+    assert east == {"type": "MultiLineString", "coordinates": [
+        [[179.0, -40.0], [180.0, -40.5]], [[-180.0, -40.5], [-179.0, -41.0], [-178.0, -41.5]],
+    ]}  # fmt: skip
+    west = event_files.line([-179.5, 179.5], [10.0, 11.0])
+    assert west["coordinates"] == [[[-179.5, 10.0], [-180.0, 10.5]], [[180.0, 10.5], [179.5, 11.0]]]
+    assert event_files.line([145.0, 146.0], [-40.0, -39.0]) == {
+        "type": "LineString", "coordinates": [[145.0, -40.0], [146.0, -39.0]],
+    }  # fmt: skip
+
+
 def test_a_wall_over_the_antimeridian_is_one_event_cut_for_geojson():
     fields = flat_fields()
     fields.slope[6:12, 4:7, 5:12] = 20.0

@@ -94,6 +94,25 @@ def _shape(event: Event) -> dict[str, Any]:
     return {"type": f"Multi{whole}", "coordinates": parts}
 
 
+def line(lons: Sequence[float], lats: Sequence[float]) -> dict[str, Any]:
+    """A track [deg] as GeoJSON, cut where it crosses the antimeridian: there two parts meet at 180 and -180."""
+    parts: list[list[list[float]]] = [[]]
+    before: tuple[float, float] | None = None
+    for lon, lat in zip(lons, lats, strict=True):
+        here = (float(lon) + 180.0) % 360.0 - 180.0
+        if before is not None and abs(here - before[0]) > 180.0:
+            side = 180.0 if before[0] > 0.0 else -180.0
+            share = (side - before[0]) / (here + 2.0 * side - before[0])
+            crossing = round(before[1] + share * (float(lat) - before[1]), 4)
+            parts[-1].append([side, crossing])
+            parts.append([[-side, crossing]])
+        parts[-1].append([round(here, 4), round(float(lat), 4)])
+        before = here, float(lat)
+    if len(parts) == 1:
+        return {"type": "LineString", "coordinates": parts[0]}
+    return {"type": "MultiLineString", "coordinates": parts}
+
+
 def to_json(events: Sequence[Event], simulated: bool) -> str:
     """A list of objects under `events`."""
     return json.dumps({"simulated": simulated, "events": [facts(event) for event in events]}, allow_nan=False)

@@ -24,6 +24,7 @@ from skylag.archive.activity import DayActivity
 from skylag.archive.outlooks import Kept
 from skylag.archive.sites import SiteChanges
 from skylag.constants import L1_M_PER_TECU
+from skylag.formats import events as event_files
 from skylag.impact.ground_augmentation import NextFront, StationDay
 from skylag.impact.satellite_augmentation import Availability
 from skylag.impact.single_frequency import LeftOver
@@ -422,7 +423,7 @@ def flags_geojson(table: Sequence[Flag], name: str, simulated: bool) -> Response
         geometry: dict[str, Any] = {"type": "Point", "coordinates": [_number(flag.lon), _number(flag.lat)]}
         facts = _flag(flag)
         if len(flag.track) > 1:
-            geometry = {"type": "LineString", "coordinates": [[_number(p[2]), _number(p[1])] for p in flag.track]}
+            geometry = event_files.line([p[2] for p in flag.track], [p[1] for p in flag.track])
             facts["track_utc"] = [utc(p[0]) for p in flag.track]
         features.append({"type": "Feature", "geometry": geometry, "properties": facts})
     content = {"type": "FeatureCollection", "simulated": simulated, "features": features}
