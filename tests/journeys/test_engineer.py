@@ -39,7 +39,8 @@ def years(newcomer: Newcomer, tmp_path_factory: pytest.TempPathFactory) -> Path:
 def taken(page: Any, words: str, folder: Path) -> Path:
     """The file that a link of the page gives."""
     with page.expect_download() as waiting:
-        page.get_by_role("link", name=words).or_(page.get_by_role("button", name=words)).first.click()
+        page.get_by_role("link", name=words).or_(page.get_by_role("button", name=words)).first.focus()
+        page.keyboard.press("Enter")
     path = folder / str(waiting.value.suggested_filename)
     waiting.value.save_as(path)
     return path
@@ -47,7 +48,7 @@ def taken(page: Any, words: str, folder: Path) -> Path:
 
 def test_a_storm_is_found_compared_played_and_carried_away(years: Path, browser: Any, tmp_path: Path) -> None:
     with open_archive(years) as archive:
-        worst = max((head for head in archive.days() if head.region == REGION.name), key=lambda head: head.slope_99)
+        worst = max((head for head in archive.days() if head.region == REGION.name), key=lambda head: head.highest["slope"])
     with served(years) as address:
         page = browser.new_page(viewport={"width": 1366, "height": 900}, accept_downloads=True)
         page.set_default_timeout(30_000)
@@ -70,8 +71,7 @@ def test_a_storm_is_found_compared_played_and_carried_away(years: Path, browser:
 
         # Laid beside the median of the quiet days around it.
         page.select_option("#versus", "quiet")
-        page.wait_for_function("() => !document.querySelector('#compared').hidden")
-        assert re.search(r"\d", page.inner_text("#compared"))
+        page.wait_for_function("() => /\\d/.test(document.querySelector('#compared').innerText)")
 
         # Played: the time moves on by itself.
         before = page.get_attribute("#map", "data-time")
@@ -84,7 +84,8 @@ def test_a_storm_is_found_compared_played_and_carried_away(years: Path, browser:
         page.wait_for_selector("#map[data-drawn=fields]")
         assert page.locator("#simulated").is_visible() and "not for navigation" in page.inner_text(".caution")
         field, ionex = taken(page, "day, NetCDF", tmp_path), taken(page, "day, IONEX", tmp_path)
-        page.locator("summary", has_text="Curves of the lines of sight").click()
+        page.locator("summary", has_text="Curves of the lines of sight").focus()
+        page.keyboard.press("Enter")
         slant = taken(page, "these lines of sight, CSV", tmp_path)
         page.close()
 
@@ -92,10 +93,10 @@ def test_a_storm_is_found_compared_played_and_carried_away(years: Path, browser:
     assert len(rows) > 200 and rows.receiver.nunique() >= 2 and rows.satellite.nunique() >= 2
     assert rows.vtec_tecu.max() - rows.vtec_tecu.min() > 15.0, "the wall stands in the slant data"
 
-    # Our own map as published: nothing but rounding is left when it is laid beside the day it came from.
+    # Our own map as if it were a published one: what comes every quarter of an hour is between maps a little off.
     told = compare(ionex, years)
     assert re.search(r"mean [+-]?0\.0\d TECU", told), told
-    assert "simulated" in told.lower()
+    assert "Invented data" in told
 
     # In a notebook, with the lines that the README shows.
     shutil.copy(field, tmp_path / "field.nc")
@@ -110,7 +111,8 @@ def test_a_storm_is_found_compared_played_and_carried_away(years: Path, browser:
 def compare(published: Path, place: Path) -> str:
     """What `skylag compare` says."""
     run = subprocess.run(
-        [sys.executable, "-m", "skylag.cli", "compare", str(published), "--archive", str(place), "--day", STORM],
+        [sys.executable, "-m", "skylag.cli", "compare", str(published), "--archive", str(place), "--day", STORM,
+         "--region", "Tarn Strait"],
         capture_output=True, text=True, check=False,
     )  # fmt: skip
     assert run.returncode == 0, run.stderr
