@@ -16,7 +16,7 @@ import numpy as np
 
 from skylag import settings
 from skylag.errors import Missing, Refused
-from skylag.tables import ActivityOutlook, Floats, Indices
+from skylag.tables import ActivityOutlook, Floats, Indices, Region
 
 if TYPE_CHECKING:
     from skylag.archive import Archive
@@ -42,8 +42,9 @@ def add(commands: Any, caution: str, clock: Clock) -> None:
     ahead.add_argument("--record", action="store_true", help="how often outlooks were right, instead")
     ahead.add_argument("--format", default="text", choices=("text", "csv", "json"))
     ahead.add_argument("--out", type=Path, metavar="FILE", help="write here; printed without")
-    ahead.add_argument("--region", default="", metavar="NAME", help="of several regions in the archive, this one")
-    ahead.set_defaults(run=_ahead)
+    ahead.add_argument("--region", default="", metavar="NAME_OR_FILE",
+                       help="of several regions, this one; or a region.toml, also of one without days")  # fmt: skip
+    ahead.set_defaults(run=lambda options: _ahead(options, clock))
     activity = commands.add_parser(
         "activity",
         help="keep measured indices and outlooks of geomagnetic activity",
@@ -82,25 +83,33 @@ def _say(event: str, **facts: object) -> None:
 # ---------------------------------------------------------------------------------------------- ahead
 
 
-def _ahead(options: argparse.Namespace) -> int:
+def _ahead(options: argparse.Namespace, clock: Clock) -> int:
     from skylag.jobs import hindcast
     from skylag.web import outlook
 
+    if options.format == "csv" and options.record:
+        raise Refused("--record: is told as text or json", name="format", value="csv", allowed=("text", "json"))
+    given = settings.read_region(Path(options.region)) if options.region.endswith(".toml") else None
     with _opened(options) as archive:
         known = archive.regions()
-        region = options.region or (known[0] if len(known) == 1 else "")
-        if region not in known:
-            raise Missing(f"name a region with --region: the archive has {', '.join(known) or 'none yet'}", what=region,
-                          nearest=list(known))  # fmt: skip
+        region = given.name if given else options.region or (known[0] if len(known) == 1 else "")
+        if region in known:
+            given = archive.day(region, archive.days(region)[0].day).region
+        if given is None:
+            raise Missing(f"name a region with --region: the archive has {', '.join(known) or 'none yet'}; or give a "
+                          "region.toml, for climatology alone", what=region, nearest=list(known))  # fmt: skip
+        lat, lon = options.at or _site(given, options.site)
         if options.record:
             facts: Mapping[str, Any] = hindcast.summary(hindcast.track_record(archive, region))
             lines = [f"{region}: {facts['outlooks']} outlooks whose days came", *hindcast.scored(facts)]
-        else:
-            lat, lon = options.at or _site(archive, region, options.site)
+        elif region in known:
             facts = outlook.ahead(archive, region, lat, lon, options.use, _two(options.expect), options.most)
             lines = _told(facts)
-    if options.format == "csv" and options.record:
-        raise Refused("--record: is told as text or json", name="format", value="csv", allowed=("text", "json"))
+        else:
+            yesterday = clock().astype("datetime64[D]") - np.timedelta64(1, "D")
+            kept = hindcast.without_days(archive, given, yesterday, _two(options.expect))
+            facts = outlook.of_place(kept, given, lat, lon, options.use, options.most, False)
+            lines = _told(facts)
     text = {"text": lambda: "\n".join(lines) + "\n", "csv": lambda: _table(facts),
             "json": lambda: json.dumps(facts, indent=1) + "\n"}[options.format]()  # fmt: skip
     if options.out:
@@ -110,14 +119,12 @@ def _ahead(options: argparse.Namespace) -> int:
     return 0
 
 
-def _site(archive: "Archive", region: str, name: str) -> tuple[float, float]:
-    heads = [head for head in archive.days(region) if not head.provisional]
-    sites = archive.day(region, heads[0].day).region.sites if heads else ()
-    for site in sites:
+def _site(region: Region, name: str) -> tuple[float, float]:
+    for site in region.sites:
         if name in ("", site.name):
             return site.lat, site.lon
-    raise Refused(f"site {name!r}: {region} has {', '.join(site.name for site in sites) or 'none'}; or give --at",
-                  name="site", value=name, allowed=[site.name for site in sites])  # fmt: skip
+    raise Refused(f"site {name!r}: {region.name} has {', '.join(site.name for site in region.sites) or 'none'}; or "
+                  "give --at", name="site", value=name, allowed=[site.name for site in region.sites])  # fmt: skip
 
 
 def _two(text: str) -> Floats | None:

@@ -99,5 +99,20 @@ def test_refusals(place: str, capsys: pytest.CaptureFixture[str], words: tuple[s
 
 
 def test_an_archive_without_days(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """Nothing to learn from: climatology where the region is told, and it says so; no window, no promise."""
     status, _, err = run(capsys, "ahead", "--archive", str(tmp_path / "new"))
     assert status == 3 and "the archive has none yet" in err
+    file = tmp_path / "region.toml"
+    file.write_text('[region]\nname = "Here"\nsouth = 50.0\nnorth = 54.0\nwest = 8.0\neast = 14.0\n')
+    words = ("ahead", "--archive", str(tmp_path / "new"), "--region", str(file), "--at", "52", "10")
+    status, text, err = run(capsys, *words)
+    assert status == 0, err
+    assert "seen on 0 of the last 27 days" in text and "climatology alone, with a wide range" in text
+    assert ": not known, " in text and "likely holds" not in text and "not covered" in text
+    _, text, _ = run(capsys, *words, "--format", "csv")
+    rows = list(csv.DictReader(io.StringIO(text)))
+    noon, night = (max(float(row["vertical_delay_m"]) for row in rows if row["start_utc"][11:13] == hour) for hour in (
+        "13", "01"))  # fmt: skip
+    assert noon > 1.5 * night > 0
+    for row in rows:
+        assert float(row["delay_95_high_m"]) > 4.0 * float(row["delay_95_low_m"])

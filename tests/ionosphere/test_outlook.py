@@ -69,6 +69,15 @@ def test_an_outlook_does_not_feel_later_days_changed(year: Year, whole: list[Out
     assert not same(whole[last + 2], again[last + 2])  # the change can be felt
 
 
+def test_many_places_are_learned_from_by_some_and_told_to_all() -> None:
+    year = simulate(12, days=6, places=75)
+    assert len(year.history.lats) > outlook.LEARNING_PLACES
+    *_, last = replay(year.history, year.drivers)
+    assert same(last, tomorrow(year.history, year.drivers))
+    assert last.strained.shape == (3, 48, 75) and np.isfinite(last.strained).all()
+    assert (last.strained.std(axis=2) > 0).any(axis=1).all()
+
+
 def test_it_speaks_of_the_hours_after_the_last_day(year: Year, whole: list[Outlook]) -> None:
     made = whole[-1]
     assert made.known_until == year.history.days[-1]

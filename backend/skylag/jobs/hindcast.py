@@ -20,9 +20,9 @@ from skylag.errors import Missing, NotEnough, Refused, SkylagError
 from skylag.impact import uses
 from skylag.impact.states import nearest_cells
 from skylag.ionosphere import outlook_score
-from skylag.ionosphere.outlook import Drivers, History, Limits, climate_of, no_drivers, replay, tomorrow
+from skylag.ionosphere.outlook import ROTATION, Drivers, History, Limits, climate_of, no_drivers, replay, tomorrow
 from skylag.ionosphere.outlook_score import Tally
-from skylag.tables import HOLDS, STRAINED, UNSEEN, Bools, Bytes, Fields, Floats, Indices, Region
+from skylag.tables import HOLDS, STRAINED, UNSEEN, Bools, Bytes, Fields, Floats, Indices, Region, Words
 
 SCORED_WITHIN = 60  # days after which an outlook whose days never came is given up
 HOURS_FORM = "1"  # of what is kept of a day; another one makes all of them anew
@@ -108,6 +108,15 @@ def _hours(archive: Archive, head: DayHead, places: Region, lats: Floats, lons: 
     return Hour(delay, sigma, slope, kept["states"].astype(np.uint8))
 
 
+def _places_of(region: Region, lat_axis: Floats, lon_axis: Floats) -> tuple[Words, Floats, Floats]:
+    """Names, latitudes, longitudes: sites first, cells of the grid after them, thinned where it has many."""
+    step = int(np.ceil(np.sqrt(len(lat_axis) * len(lon_axis) / MOST_CELLS)))
+    lon, lat = np.meshgrid(lon_axis[::step], lat_axis[::step])
+    names = np.array([site.name for site in region.sites] + [""] * lat.size, dtype=np.str_)
+    lats = np.concatenate([[site.lat for site in region.sites], lat.ravel()])
+    return names, lats, np.concatenate([[site.lon for site in region.sites], lon.ravel()])
+
+
 def history_of(
     archive: Archive, region: str, until: np.datetime64 | None = None, since: np.datetime64 | None = None,
     progress: Progress | None = None,
@@ -128,13 +137,7 @@ def history_of(
         raise Missing(f"region {region}: no day within {MOST_DAYS} days before {last}", what=region, nearest=())
     newest = archive.day(region, heads[-1].day)
     places = newest.region
-    lat_axis, lon_axis = newest.lats, newest.lons
-    step = int(np.ceil(np.sqrt(len(lat_axis) * len(lon_axis) / MOST_CELLS)))
-    lon, lat = np.meshgrid(lon_axis[::step], lat_axis[::step])
-    sites = places.sites
-    names = np.array([site.name for site in sites] + [""] * lat.size, dtype=np.str_)
-    lats = np.concatenate([[site.lat for site in sites], lat.ravel()])
-    lons = np.concatenate([[site.lon for site in sites], lon.ravel()])
+    names, lats, lons = _places_of(places, newest.lats, newest.lons)
     limits = limits_for(places)
     of_places = f"{places.thresholds} {uses.uses_of(places)} {lats.tolist()} {lons.tolist()}"
     mark = hashlib.sha256(f"{HOURS_FORM} {of_places}".encode())
@@ -245,6 +248,21 @@ def day_kept(
         tell("outlook not made", region=region, day=str(day), why=f"{type(failure).__name__}: {failure}")
 
 
+def without_days(
+    archive: Archive, region: Region, last: np.datetime64, expected_ap: Floats | None = None
+) -> Kept:  # fmt: skip
+    """The outlook after a day for a region of which nothing was seen: climatology, which it says.  It is not kept."""
+    days = np.arange(last - np.timedelta64(ROTATION - 1, "D"), last + np.timedelta64(1, "D")).astype("datetime64[D]")
+    names, lats, lons = _places_of(region, region.lats, region.lons)
+    limits = limits_for(region)
+    shape = (len(days), 24, len(lats))
+    unseen = np.full(shape, np.nan)
+    states = np.zeros((len(limits), *shape), dtype=np.uint8)
+    drivers, said = known_then(archive, days, None, expected_ap, now=True)
+    made = tomorrow(History(days, names, lats, lons, unseen, unseen, unseen, states, limits), drivers)
+    return Kept(0, region.name, "", np.datetime64("NaT", "s"), replace(made, basis=(*made.basis, *said)))
+
+
 def newest(
     archive: Archive, region: str, indices: Indices | None = None, expected_ap: Floats | None = None,
     keep: bool = True,
@@ -253,9 +271,15 @@ def newest(
 
     keep  False: one with entered activity is made and not kept, so that asking what if fills no archive
 
-    Outlooks whose days have come in the meantime are scored on the way.  Raises Missing where the region has no day.
+    Outlooks whose days have come in the meantime are scored on the way.  While the first day of a region still goes on
+    there is nothing to learn from: climatology then.  Raises Missing where the region has no day.
     """
-    heads = sorted((head for head in archive.days(region) if not head.provisional), key=lambda head: head.day)
+    there = archive.days(region)
+    heads = sorted((head for head in there if not head.provisional), key=lambda head: head.day)
+    if there and not heads:
+        first_day = there[-1].day
+        known = archive.day(region, first_day).region
+        return without_days(archive, known, first_day - np.timedelta64(1, "D"), expected_ap)
     if heads:
         last = heads[-1].day
         first = max(heads[0].day, last - np.timedelta64(MOST_DAYS - 1, "D"))

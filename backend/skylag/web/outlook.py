@@ -10,11 +10,12 @@ from fastapi import APIRouter, Query, Request
 from fastapi.responses import Response
 
 from skylag.archive import Archive
+from skylag.archive.outlooks import Kept
 from skylag.errors import Missing, Refused
 from skylag.impact import outlook_advice, uses
 from skylag.ionosphere import outlook as science
 from skylag.jobs import hindcast
-from skylag.tables import Floats, Outlook
+from skylag.tables import Floats, Outlook, Region
 from skylag.web import asking, payloads
 
 router = APIRouter()
@@ -70,26 +71,35 @@ def ahead(
     archive: Archive, region: str, lat: float, lon: float, use: str = "", expected_ap: Floats | None = None,
     most: float = 0.1,
 ) -> dict[str, Any]:  # fmt: skip
-    """What the outlook tells of a place for a use, as plain facts; one with entered activity is not kept.
+    """What the outlook of a kept region tells of a place for a use; one with entered activity is not kept.
 
     Raises Missing for a region without days, Refused for a place outside its map.
     """
-    lat, lon = asking.place(lat, lon)
     kept = hindcast.newest(archive, region, expected_ap=expected_ap, keep=False)
+    record = archive.day(region, archive.days(region)[0].day)
+    return of_place(kept, record.region, lat, lon, use, most, record.origin.simulated)
+
+
+def of_place(
+    kept: Kept, region: Region, lat: float, lon: float, use: str, most: float, simulated: bool
+) -> dict[str, Any]:  # fmt: skip
+    """What an outlook tells of a place for a use ("" the region's first), as plain facts."""
+    lat, lon = asking.place(lat, lon)
     made = kept.outlook
-    record = archive.day(region, made.known_until)
-    wanted = uses.find_use(record.region, use) if use else uses.uses_of(record.region)[0]
-    place, away_km = _place(made, lat, lon)
-    if record.cell_of(lat, lon) is None:
+    wanted = uses.find_use(region, use) if use else uses.uses_of(region)[0]
+    half = 0.5 * region.step_deg + 1e-9
+    east = (lon - region.lons[0] + half) % 360.0
+    if not region.lats[0] - half <= lat <= region.lats[-1] + half or east > region.lons[-1] - region.lons[0] + 2 * half:
         raise Refused(
-            f"{lat}, {lon} lies outside the map of {region}: nothing can be told there; choose a place inside",
+            f"{lat}, {lon} lies outside the map of {region.name}: nothing can be told there; choose a place inside",
             name="lat, lon", value=f"{lat}, {lon}", allowed="a place inside the map",
         )  # fmt: skip
+    place, away_km = _place(made, lat, lon)
     number = [str(name) for name in made.uses].index(wanted.name)
     spans = science.windows(made, place, number, most)
     storm = any(word not in ("untold", "quiet") for word in made.phases)
     advice = outlook_advice.advice(wanted, spans, storm)
-    return payloads.outlook_at(kept, place, away_km, number, spans, advice, record.origin.simulated)
+    return payloads.outlook_at(kept, place, away_km, number, spans, advice, simulated)
 
 
 @router.get("/api/outlook/{region}/record", summary="How often outlooks were right")
