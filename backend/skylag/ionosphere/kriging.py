@@ -132,8 +132,9 @@ def _at(system: System, x: Floats, y: Floats, over_km: float, around_km: float) 
     # A cell's value is that of a place in it, so the unresolved grain is part of its uncertainty.
     alone = spread2 + residual.grain**2
     value, variance, together = estimate(spread2 * np.exp(distance / -reach), plane_terms(x, y), alone)
-    # Of what content departs from a plane around, the rays leave unknown the share that they leave of the residual.
-    unknown = np.minimum(variance / alone, 1.0) * around.departure2
+    # Of what content departs from a plane around, beyond what was expected, the rays leave unknown the share that they
+    # leave of the residual.
+    unknown = np.minimum(variance / alone, 1.0) * around.unexpected2
     sigma = np.sqrt(variance * np.maximum(around.roughness, 1.0) + unknown + together)
     # Slopes need no more than single precision: measured on a storm to differ by less than 1e-4 of their sigma.
     half, decay = np.float32(0.5 * over_km), np.float32(-1.0 / reach)
@@ -174,18 +175,20 @@ class Surroundings:
     usual_roughness  the same with one ray's worth of belief that it is here as at most rays of the moment
     departure2       square [TECU^2] by which content departs from a plane fitted around, beyond the rays' own errors,
                      widened as of a variance known from few rays only (Student's t: Fisher 1925; expansion in 1/nu)
+    unexpected2      the same beyond what the covariance lets expect
     """
 
     roughness: Floats
     usual_roughness: Floats
     departure2: Floats
+    unexpected2: Floats
 
 
 def surroundings(system: System, x: Floats, y: Floats, distance: Floats, around_km: float) -> Surroundings:
     """How content behaves around places [km]; distance (P, N) from them to the rays."""
     count = len(x)
     if around_km <= 0.0:
-        return Surroundings(np.ones(count), np.ones(count), np.zeros(count))
+        return Surroundings(np.ones(count), np.ones(count), np.zeros(count), np.zeros(count))
     odd = system.strangeness**2
     weight = np.exp((distance.astype(np.float32) / np.float32(around_km)) ** 2 * np.float32(-0.5)).astype(np.float64)
     total = weight.sum(axis=1)
@@ -209,13 +212,19 @@ def surroundings(system: System, x: Floats, y: Floats, distance: Floats, around_
     # How many rays of equal weight these are worth (Kish 1965), less the plane's three numbers.
     worth = total**2 / np.maximum((weight**2).sum(axis=1), 1e-12)
     beyond = left * worth / np.maximum(worth - 3.0, 1.0) - s[:, 10]
+    # What the covariance lets expect of it: rays around a place are so far apart in the mean; a plane takes half of
+    # what changes slowly, and little of what does not.
+    alike = np.exp(-np.sqrt(np.pi) * around_km / system.residual.reach_km)
+    expected = system.residual.spread**2 * (1.0 - alike) * (1.0 - 0.5 * alike) + system.residual.grain**2
     free = np.maximum(worth - 3.0, 2.0)
     z = _WITHIN
     student = z + (z**3 + z) / (4.0 * free) + (5.0 * z**5 + 16.0 * z**3 + 3.0 * z) / (96.0 * free**2)
-    departure2 = np.maximum(beyond, 0.0) / np.maximum(total, 1e-12) * (student / z) ** 2
+    known = np.where(total > 1e-9, (student / z) ** 2, 0.0) / np.maximum(total, 1e-12)
+    roughness, by_usual = (1.0 + strange) / (1.0 + total), (usual + strange) / (1.0 + total)
     return Surroundings(
-        (1.0 + strange) / (1.0 + total), (usual + strange) / (1.0 + total), np.where(total > 1e-9, departure2, 0.0)
-    )
+        roughness, by_usual, np.maximum(beyond, 0.0) * known,
+        np.maximum(beyond - expected * np.maximum(roughness, 1.0) * total, 0.0) * known,
+    )  # fmt: skip
 
 
 def left_out(system: System, rows: Ints) -> tuple[Floats, Floats]:
