@@ -199,6 +199,7 @@ def test_a_day_is_kept_in_an_archive(sample_folder: Path, tmp_path: Path, capsys
     with open_archive(place) as archive:
         (head,) = archive.days()
         assert head.versions == (1, 2), "the same day again is a new version"
+        assert len(archive.outlooks.unscored(head.region)) == 2, "and the outlook after it is kept with each"
 
 
 def test_progress_is_a_bar_on_a_terminal() -> None:

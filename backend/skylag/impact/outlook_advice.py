@@ -32,16 +32,28 @@ def advice(use: Use, spans: tuple[Span, ...], storm_told: bool) -> tuple[str, ..
     else:
         said.append("No hour of the outlook is likely to hold; another day may do.")
     if storm_told:
-        said.append("A geomagnetic storm or its aftermath is told: such effects mostly subside after a couple of days.")
+        said.append(
+            "A geomagnetic storm or its aftermath is told: effects begin at high latitudes, reach lower ones within about "
+            "a day and mostly subside after a couple of days (common practice)."
+        )
     if use.kind == "differential":
         said.append(
-            "A shorter baseline may help: the error grows with the distance, and half of "
+            "A shorter baseline may help: the error grows with the distance (slope times distance), and half of "
             f"{use.baseline_km:g} km halves it."
         )
-        said.append("Two frequencies may help: they take the delay itself away; fixing of whole cycles still feels it.")
-        said.append("Longer static sessions may help: what changes within them averages out; check on known points.")
+        said.append(
+            "Two frequencies may help: they take the delay itself away but for a small rest (IS-GPS-200, 20.3.3.3.3.3); "
+            "fixing of whole cycles still feels it."
+        )
+        said.append(
+            "Longer static sessions may help: what changes within them averages out (common practice); check on known "
+            "points."
+        )
     elif use.kind == "single":
-        said.append("Two frequencies may help: they take the delay itself away, at the price of more noise.")
+        said.append(
+            "Two frequencies may help: they take the delay itself away but for a small rest, at the price of more noise "
+            "(IS-GPS-200, 20.3.3.3.3.3)."
+        )
     else:
         said.append(
             "Approaches: have an alternative that does not lean on these corrections; official notices and the service "
