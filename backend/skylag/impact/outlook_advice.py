@@ -33,8 +33,8 @@ def advice(use: Use, spans: tuple[Span, ...], storm_told: bool) -> tuple[str, ..
         said.append("No hour of the outlook is likely to hold; another day may do.")
     if storm_told:
         said.append(
-            "A geomagnetic storm or its aftermath is told: effects begin at high latitudes, reach lower ones within about "
-            "a day and mostly subside after a couple of days (common practice)."
+            "A geomagnetic storm or its aftermath is told: effects begin at high latitudes, reach lower ones within "
+            "about a day and mostly subside after a couple of days (common practice)."
         )
     if use.kind == "differential":
         said.append(
@@ -42,8 +42,8 @@ def advice(use: Use, spans: tuple[Span, ...], storm_told: bool) -> tuple[str, ..
             f"{use.baseline_km:g} km halves it."
         )
         said.append(
-            "Two frequencies may help: they take the delay itself away but for a small rest (IS-GPS-200, 20.3.3.3.3.3); "
-            "fixing of whole cycles still feels it."
+            "Two frequencies may help: they take the delay itself away but for a small rest (IS-GPS-200, "
+            "20.3.3.3.3.3); fixing of whole cycles still feels it."
         )
         said.append(
             "Longer static sessions may help: what changes within them averages out (common practice); check on known "
@@ -51,8 +51,8 @@ def advice(use: Use, spans: tuple[Span, ...], storm_told: bool) -> tuple[str, ..
         )
     elif use.kind == "single":
         said.append(
-            "Two frequencies may help: they take the delay itself away but for a small rest, at the price of more noise "
-            "(IS-GPS-200, 20.3.3.3.3.3)."
+            "Two frequencies may help: they take the delay itself away but for a small rest, at the price of more "
+            "noise (IS-GPS-200, 20.3.3.3.3.3)."
         )
     else:
         said.append(
