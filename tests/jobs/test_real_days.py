@@ -82,7 +82,7 @@ def test_satellites_against_broadcast_group_delays(
 
 def test_satellites_held_at_a_published_product(open_data: Path, executor: Executor) -> None:
     """The monthly P1-P2 values of August 2015 held; the receiver then has to come out at its published value, within
-    two sigmas of both: ours, and 0.53 ns of modelling as the published one is made (`test_adjustment_real.py`)."""
+    two sigmas of both: ours, and 0.74 ns of modelling as the published one is made (`test_adjustment_real.py`)."""
     folder = open_data / "2015-235"
     paths = [
         folder / "obs" / "ZIMM2350.15O.gz", *(folder / "sp3").iterdir(), folder / "bias" / "P1C11508.DCB",
@@ -96,5 +96,5 @@ def test_satellites_held_at_a_published_product(open_data: Path, executor: Execu
     # The receiver gives C1C and C2W: DCB(C1C-C2W) = DCB(P1-P2) - DCB(P1-C1); the published value is P1-P2.
     assert (found.biases.code1[receiver], found.biases.code2[receiver]) == ("C1C", "C2W")
     apart = float(found.biases.value_ns[receiver]) + 11.149  # CODE monthly P1-P2 of 2015-08, ZIMM
-    assert abs(apart) < 2.0 * np.hypot(found.biases.sigma_ns[receiver], 0.53)
+    assert abs(apart) < 2.0 * np.hypot(found.biases.sigma_ns[receiver], 0.74)
     assert found.biases.sigma_ns[receiver] < 0.5
