@@ -27,7 +27,8 @@ def theirs(step: float = 1.0) -> Fields:
     content = np.broadcast_to(lats[None, :, None] - 30.0, (count, len(lats), 61))
     table = published_on(content, np.full(content.shape, 0.5), step)
     # Wide enough to be turned by an hour on either side.
-    return replace(table, lons=table.lons - 18.0, times=START + np.timedelta64(18, "s") + np.arange(count) * np.timedelta64(1, "h"))
+    times = START + np.timedelta64(18, "s") + np.arange(count) * np.timedelta64(1, "h")
+    return replace(table, lons=table.lons - 18.0, times=times)
 
 
 def ours(extra: np.ndarray | float = 0.0, sigma: float = 1.0) -> Fields:

@@ -7,12 +7,13 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 from tests.conftest import Evidence
+from tests.ionosphere import zimm_day
 
 from skylag import formats
 from skylag.constants import L1_HZ, L2_HZ, REFRACTION_M3_S2, SPEED_OF_LIGHT_M_S, TECU, WGS84_F
 from skylag.errors import NotEnough
 from skylag.ionosphere import arcs, bias_algebra, geometry, orbits, pairs
-from skylag.ionosphere.interpolation import vertical_at
+from skylag.ionosphere.interpolation import slant_at, vertical_at
 from skylag.tables import Fields, Reading, Signals
 
 START = np.datetime64("2024-03-30", "ns")
@@ -190,3 +191,34 @@ def test_a_station_against_the_map_of_its_day(
              got=float(np.median(apart)), tolerance=1.0)  # fmt: skip
     evidence(f"scatter of vertical content at {receiver} minus map", source=source, unit="TECU", expected=2.5,
              got=float(np.std(apart)), tolerance=0, at_most=True)  # fmt: skip
+
+
+@pytest.mark.open_data
+def test_what_the_product_answers_for_a_station_beside_the_published_map(open_data: Path, evidence: Evidence) -> None:
+    """The maps that a day's files gave, asked along the station's own lines of sight; against its measurements, and
+    against the published map asked the same way, less what the one known offset of the receiver's bias explains."""
+    day, (table, biases) = zimm_day.products(open_data), zimm_day.published(open_data)
+    rays, samples = day.samples.rays, day.samples
+    every = np.flatnonzero((rays.elevation > 20.0) & (np.arange(len(rays)) % 7 == 0))
+    lat, lon, _ = geometry.geodetic(np.asarray(rays.receivers[0].position_m))
+    asked = (lat, lon, rays.elevation[every], rays.azimuth[every])
+    ours, sigma = slant_at(day.fields, *asked, rays.time[every], rays.shell_height_m)
+    told = np.isfinite(ours)
+    assert told.sum() > 1000  # lines of sight that pierce the shell within the region around the one receiver
+    apart = (ours - samples.stec[every])[told]
+    assert np.std(apart / rays.mapping[every][told]) < 0.5
+    assert np.mean(np.abs(apart) <= 1.96 * sigma[told]) > 0.93
+    # The published map, at the pierce points of its own shell.
+    pierce_lat, pierce_lon = geometry.pierce(*asked, 450e3)
+    geocentric = np.degrees(np.arctan((1 - WGS84_F) ** 2 * np.tan(np.radians(pierce_lat))))
+    inside = np.clip(rays.time[every], table.times[0], table.times[-1])
+    theirs = vertical_at(table, geocentric, pierce_lon, inside)[0] * geometry.mapping(asked[2], 450e3)
+    both = told & np.isfinite(theirs)
+    found = day.calibration.biases
+    known = biases.value_ns[(biases.name == "ZIMM") & (biases.system == "G")][0]
+    by_bias = day.calibration.ray_per_ns[every] * -(found.value_ns[found.kind == "receiver"][0] - known)
+    rest = ((ours - theirs - by_bias) / rays.mapping[every])[both]
+    evidence("slant content the product answers at ZIMM minus published map, less its bias, median vertical",
+             source=zimm_day.MAP, unit="TECU", expected=0.0, got=float(np.median(rest)), tolerance=1.0)  # fmt: skip
+    evidence("the same, scatter", source=zimm_day.MAP, unit="TECU", expected=1.5, got=float(np.std(rest)), tolerance=0,
+             at_most=True)  # fmt: skip
