@@ -48,7 +48,8 @@ def taken(page: Any, words: str, folder: Path) -> Path:
 
 def test_a_storm_is_found_compared_played_and_carried_away(years: Path, browser: Any, tmp_path: Path) -> None:
     with open_archive(years) as archive:
-        worst = max((head for head in archive.days() if head.region == REGION.name), key=lambda head: head.highest["slope"])
+        heads = [head for head in archive.days() if head.region == REGION.name]
+        worst = max(heads, key=lambda head: head.highest["slope"])
     with served(years) as address:
         page = browser.new_page(viewport={"width": 1366, "height": 900}, accept_downloads=True)
         page.set_default_timeout(30_000)
