@@ -149,11 +149,13 @@ def _pairs(places: Iterable[Sequence[float]]) -> list[str]:
 
 
 def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
-    from skylag.web import asking, report
+    from skylag.web import asking, report, sentences
 
     clock = report.Clock(day.record.region.timezone)
     if day.record.origin.simulated:
         print("Invented data: nothing here was measured.")
+    if day.record.head.provisional:
+        print(sentences.GOES_ON)
     if not options.at and not options.site:
         for one in day.record.region.sites:
             advice = desk.survey(day, _job(day, one.name, options))

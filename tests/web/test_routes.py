@@ -6,6 +6,7 @@ import io
 import json
 import re
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -13,7 +14,7 @@ from fastapi.testclient import TestClient
 from tests.builders import CALM_DAY, REGION, STORM_DAY, invented_day
 
 from skylag import quantities, timescales
-from skylag.archive import Archive
+from skylag.archive import Archive, open_archive
 from skylag.constants import L1_M_PER_TECU
 from skylag.tables import BROKEN, HOLDS, STATE_NAMES, STRAINED, UNSEEN
 from skylag.web import payloads
@@ -280,3 +281,20 @@ def test_answers_are_json_of_the_standard(client: TestClient) -> None:
     """No bare NaN: a browser would refuse the whole answer."""
     for address in (DAY, f"{DAY}/flags", f"{DAY}/series?lat=-43&lon=142", f"{DAY}/biases"):
         json.loads(client.get(address).text, parse_constant=lambda word: pytest.fail(f"{word} in an answer"))
+
+
+def test_a_day_that_goes_on_is_never_shown_as_final(tmp_path: Path, page_folder: Path) -> None:
+    """In the list, among the notices of the day, on the sheet and in the file of maps; and no more once it is whole."""
+    said = "This day goes on"
+    address = f"/api/days/{REGION.name}/{STORM_DAY}"
+    with open_archive(tmp_path) as archive, TestClient(create_app(archive, frontend=page_folder)) as client:
+        for provisional in (True, False):
+            archive.save(invented_day(STORM_DAY, step_minutes=60, satellites=6), provisional=provisional)
+            (listed,) = client.get("/api/days").json()["days"]
+            day = client.get(address).json()
+            assert listed["provisional"] is day["provisional"] is provisional
+            assert any(notice.startswith(said) for notice in day["warnings"][:2]) is provisional, "the page shows two"
+            sheet = client.get(f"{address}/sheet", params={"site": "Southmere quarry"})
+            maps = client.get(f"{address}/maps.inx")
+            assert sheet.status_code == maps.status_code == 200
+            assert (said in sheet.text) is provisional and (said in maps.text) is provisional

@@ -113,7 +113,11 @@ def maps_ionex(request: Request, region: str, day: str, version: int | None = No
     thin = replace(
         held, times=held.times[every], **{name: getattr(held, name)[every] for name in Fields.LAYERS}
     )  # fmt: skip
-    about = f"{record.region.name}. {sentences.INVENTED if record.origin.simulated else ''} {sentences.CAUTION}"
+    told = [
+        f"{record.region.name}.", sentences.INVENTED if record.origin.simulated else "",
+        sentences.GOES_ON if record.head.provisional else "", sentences.CAUTION,
+    ]  # fmt: skip
+    about = " ".join(filter(None, told))
     saved_at = np.datetime64(timescales.utc_to_gps(record.head.saved_at.astype("datetime64[ns]")).item(), "ns")
     text = ionex.write(thin, saved_at, record.region.shell_height_km, description=about)
     return payloads.file(text.encode("ascii", "replace"), f"{region}-{day}.inx", "text/plain")

@@ -152,6 +152,7 @@ def _head(head: DayHead) -> dict[str, Any]:
         "pinned": head.pinned,
         "saved_at_utc": f"{head.saved_at}Z",
         "simulated": head.simulated,
+        "provisional": head.provisional,
         "state_shares": dict(head.state_shares),
         "site_shares": {name: dict(shares) for name, shares in head.site_shares.items()},
         "flag_counts": dict(head.flag_counts),
@@ -216,6 +217,8 @@ def day(record: DayRecord, heads: Sequence[DayHead]) -> dict[str, Any]:
     notices = list(record.origin.warnings)
     if record.origin.simulated and sentences.INVENTED not in notices:
         notices.insert(0, sentences.INVENTED)
+    if record.head.provisional:
+        notices.insert(0, sentences.GOES_ON)
     return {
         **_head(record.head),
         "warnings": notices,

@@ -83,6 +83,8 @@ def of_site(
     blocks: list[Block] = [Heading(title, 1), Sentence(_place(site, record.region.name), "small")]
     if record.origin.simulated:
         blocks.append(Sentence(sentences.INVENTED, "strong"))
+    if record.head.provisional:
+        blocks.append(Sentence(sentences.GOES_ON, "strong"))
     if approaches is not None:
         blocks.append(Sentence(approach_verdict(approaches, clock), "strong"))
     elif missing:

@@ -14,6 +14,7 @@ CAUTION = (
     "local rules and licensed practice come first."
 )
 INVENTED = "Invented data: nothing here was measured."
+GOES_ON = "This day goes on: more files are to come, and what is said of it may change."
 OUTSIDE = "Unseen here: the place lies outside the map of this region."
 _NOT_COVERED = "Treat it as not covered."
 _EIGHT = ("north", "north-east", "east", "south-east", "south", "south-west", "west", "north-west")
