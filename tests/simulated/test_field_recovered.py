@@ -98,7 +98,7 @@ def honest_slope_sigmas(
     groups = {
         "calm": (calm, np.ones(calm["slope"].shape, dtype=bool), 0.93, 0.6),
         "steep": (storm, storm["true"] > 25.5, 0.90, 0.3), "near": (storm, storm["wall"] <= 150.0, 0.93, 0.3),
-        "far": (storm, storm["wall"] > 150.0, 0.93, 0.15),
+        "far": (storm, storm["wall"] > 150.0, 0.93, 0.2),
     }  # fmt: skip
     found = {name: (*of(got, rows), least, spread) for name, (got, rows, least, spread) in groups.items()}
     return {name: held >= least and is_ > spread for name, (held, is_, least, spread) in found.items()}
