@@ -5,8 +5,10 @@ import subprocess
 import sys
 from pathlib import Path
 
+import jsonschema
 import pytest
 import yaml
+from check_jsonschema.builtin_schemas import get_builtin_schema
 
 ROOT = Path(__file__).resolve().parents[2]
 
@@ -88,6 +90,27 @@ def test_the_words_are_those_of_the_specification(compose: dict) -> None:
     text = (ROOT / "docker-compose.yml").read_text(encoding="utf-8")
     for asked in re.findall(r"\$\{([^}]*)\}", text):
         assert re.fullmatch(r"[A-Z_]+(:?[-?+].*)?", asked), asked
+
+
+def by_the_schema(compose: dict) -> list[str]:
+    """What the Compose Specification's own JSON schema has against a file, one sentence each."""
+    schema = get_builtin_schema("vendor.compose-spec")
+    check = jsonschema.validators.validator_for(schema)(schema)
+    return [f"{'.'.join(map(str, error.absolute_path))}: {error.message}" for error in check.iter_errors(compose)]
+
+
+def test_the_schema_of_the_specification_is_content(compose: dict, evidence) -> None:
+    """And it does find what is wrong: a word it does not know, a wrong shape, a condition that there is none of."""
+    evidence(
+        "faults that the schema finds in the compose file",
+        source="Compose Specification, JSON schema compose_spec.json (as shipped by check-jsonschema)", expected=0,
+        got=len(by_the_schema(compose)), tolerance=0,
+    )  # fmt: skip
+    changes = [("restrat", "always"), ("ports", "8017:8017"), ("depends_on", {"db": {"condition": "healthy"}}),
+               ("healthcheck", {"retires": 3}), ("read_only", [])]  # fmt: skip
+    for word, value in changes:
+        broken = {**compose, "services": {**compose["services"], "web": {**compose["services"]["web"], word: value}}}
+        assert by_the_schema(broken), (word, value)
 
 
 def test_only_the_loopback_address_is_published(compose: dict) -> None:
