@@ -390,7 +390,7 @@ export const FILE_WORDS = {
   because: (file, line, reason) => `${file}${line ? `, line ${line}` : ""}: ${reason}`,
   /** @param {string} days */
   queued: (days) => `${days} queued; the work is told below.`,
-  inQueue: "waits for its turn",
+  inQueue: "waits for its turn; “skylag work” or “skylag serve --work” computes what waits",
   /** @param {number} seconds */
   nextTry: (seconds) => `failed once; tried again in ${seconds < 90 ? countText(Math.max(1, Math.round(seconds)), "second") : countText(Math.round(seconds / 60), "minute")}`,
   /** @param {string} stage @param {string} word */
