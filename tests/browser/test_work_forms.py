@@ -114,6 +114,11 @@ def test_sites_and_jobs_by_keyboard(server: str, place: Path, visit: Open, tmp_p
     v.page.wait_for_selector("#work-body > .trouble")
     assert "07:30-16:00" in v.text("#work-body .trouble")
 
+    # The sheets of a stormy aerodrome and of the job: one page of paper each, from the browser too.
+    for address in (f"/api/days/{REGION}/{STORM_DAY}/sheet?site=Gannet%20Field", href):
+        v.page.goto(server + address)
+        assert len(re.findall(rb"/Type\s*/Page\b", v.page.pdf(prefer_css_page_size=True))) == 1
+
     with open_archive(place) as own:
         names = [site.name for site in own.day(REGION, STORM_DAY).region.sites]
     assert names == ["Gannet Field", "Kelp Island", "Southmere quarry", "Old pier", "Brook"]

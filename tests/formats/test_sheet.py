@@ -5,7 +5,7 @@ from html.parser import HTMLParser
 
 import numpy as np
 
-from skylag.formats.sheet import MARKS, STYLE, Bullets, DayChart, Heading, Sentence, Table, to_html, to_pdf
+from skylag.formats.sheet import MARKS, STYLE, Bullets, DayChart, Heading, Sentence, Table, _laid_out, to_html, to_pdf
 
 MADE = np.datetime64("2031-03-13T01:02:03")
 BLOCKS = (
@@ -70,6 +70,21 @@ def test_pdf_is_one_page_and_repeats_itself() -> None:
     assert first.startswith(b"%PDF-")
     assert first.rstrip().endswith(b"%%EOF")
     assert len(re.findall(rb"/Type /Page\b", first)) == 1
+
+
+def test_type_shrinks_until_all_is_on_one_page() -> None:
+    """Both writers take the same step; nothing is left out; a sheet that fits is not shrunk."""
+    rows = tuple((f"{k:02d}:00", "why " * 20) for k in range(24))
+    long = (*BLOCKS, Table(("UTC", "Why"), rows, (1, 5)), Sentence("word " * 900, "small"))
+    pages = [len(_laid_out("Long", long, MADE, scale).pages) for scale in (1.0, 0.74)]
+    assert pages == [2, 1]
+    assert len(re.findall(rb"/Type /Page\b", to_pdf("Long", long, MADE))) == 1
+    page = to_html("Long", long)
+    step = re.search(r'<body class="fit-(\d)">', page)
+    assert step is not None
+    assert f"body.fit-{step.group(1)} " in STYLE
+    assert page.count("why why") == 24
+    assert "<body>" in to_html("Dam", BLOCKS)
 
 
 def test_a_long_pdf_turns_pages() -> None:

@@ -1,5 +1,7 @@
 """Routes about work at a site: every answer has its assumptions and caution, files are what they say."""
 
+import re
+
 import pytest
 from fastapi.testclient import TestClient
 from tests.builders import REGION, STORM_DAY
@@ -84,6 +86,7 @@ def test_sheets(client: TestClient, site: str) -> None:
     assert ("Approaches available" in text or "Approaches cannot" in text) == (site in ("Gannet Field", "Kelp Island"))
     paper = client.get(f"{BASE}/sheet.pdf", params={"site": site})
     assert paper.content.startswith(b"%PDF-")
+    assert len(re.findall(rb"/Type /Page\b", paper.content)) == 1
     assert paper.headers["content-disposition"].endswith('-sheet.pdf"')
 
 

@@ -79,26 +79,34 @@ h2 { font-size: 1.1rem; margin: 1.4rem 0 .4rem; border-bottom: 1px solid #d9d1bf
 p { margin: .3rem 0; } .strong { font-size: 1.15rem; font-weight: 600; } .small { color: #5a6070; font-size: .87rem; }
 table { border-collapse: collapse; width: 100%; font-variant-numeric: tabular-nums; }
 th, td { text-align: left; vertical-align: top; padding: .15rem .6rem .15rem 0; border-bottom: 1px solid #d9d1bf; }
-th { font-weight: 600; } ul { margin: .3rem 0; padding-left: 1.2rem; } figure { margin: .6rem 0; }
+th { font-weight: 600; } th, td:not(:last-child) { white-space: nowrap; } ul { margin: .3rem 0; padding-left: 1.2rem; } figure { margin: .6rem 0; }
 svg { width: 100%; height: auto; display: block; } svg text { fill: #1f2430; font-size: 11px; }
-@media print { @page { size: A4; margin: 14mm; }
-  body { max-width: none; margin: 0; padding: 0; background: none; font-size: 8.5pt; line-height: 1.3; }
-  h1 { font-size: 15pt; } h2 { font-size: 10.5pt; margin: .6rem 0 .2rem; } .strong { font-size: 10.5pt; }
-  td, th { padding: .05rem .5rem .05rem 0; } .small { font-size: 7.2pt; } figure { max-width: 80%; }
+@media print { @page { size: A4; margin: 10mm 14mm; }
+  body { max-width: none; margin: 0; padding: 0; background: none; font-size: 8.3pt; line-height: 1.25; }
+  body.fit-1 { font-size: 7.6pt; } body.fit-2 { font-size: 7.1pt; } body.fit-3 { font-size: 6.7pt; }
+  body.fit-4 { font-size: 6.3pt; } body.fit-5 { font-size: 5.9pt; }
+  h1 { font-size: 1.75em; } h2 { font-size: 1.22em; margin: .6em 0 .15em; } .strong { font-size: 1.2em; }
+  p { margin: .2em 0; } td, th { padding: .02em .5em .02em 0; } .small { font-size: .85em; }
+  figure { max-width: 74%; margin: .4em 0; } .fit-2 figure, .fit-3 figure, .fit-4 figure, .fit-5 figure { max-width: 64%; }
   h2 { break-after: avoid; } tr, figure, li { break-inside: avoid; }
   svg { -webkit-print-color-adjust: exact; print-color-adjust: exact; } }
 """
 
 
 def to_html(title: str, blocks: Sequence[Block], style_address: str = "") -> str:
-    """The sheet as a page; its style inside, or at an address where a policy forbids inline styles."""
+    """The sheet as a page; its style inside, or at an address where a policy forbids inline styles.
+
+    On paper its type is as small as it must be on one page, by the measure of the PDF.
+    """
     link = f'<link rel="stylesheet" href="{html.escape(style_address)}">'
     style = link if style_address else f"<style>{STYLE}</style>"
     body = "\n".join(_html_block(block, number) for number, block in enumerate(blocks))
+    fit = _fitted(title, blocks, np.datetime64("2000-01-01", "s"))[0]
+    kind = f' class="fit-{fit}"' if fit else ""
     return (
         '<!doctype html>\n<html lang="en">\n<head>\n<meta charset="utf-8">\n'
         '<meta name="viewport" content="width=device-width, initial-scale=1">\n'
-        f"<title>{html.escape(title)}</title>\n{style}\n</head>\n<body>\n<main>\n{body}\n</main>\n</body>\n</html>\n"
+        f"<title>{html.escape(title)}</title>\n{style}\n</head>\n<body{kind}>\n<main>\n{body}\n</main>\n</body>\n</html>\n"
     )
 
 
@@ -163,17 +171,44 @@ def _svg(chart: DayChart, number: int) -> str:
 # ---------------------------------------------------------------------------------------------- PDF
 
 
+# How far type and spacing shrink, step by step, until all is on one page.
+_SCALES = (1.0, 0.95, 0.89, 0.84, 0.79, 0.74)
+
+
+class _Paper(FPDF):
+    """Paper on which all sizes are scaled."""
+
+    scale = 1.0
+
+
 def to_pdf(title: str, blocks: Sequence[Block], made: np.datetime64) -> bytes:
-    """The sheet as A4 pages; the same sheet, made at the same UTC instant, gives the same bytes."""
-    pdf = FPDF(format="A4")
+    """The sheet on one A4 page, in type as small as that needs; on more where the smallest is too large.
+
+    The same sheet, made at the same UTC instant, gives the same bytes.
+    """
+    return bytes(_fitted(title, blocks, made)[1].output())
+
+
+def _fitted(title: str, blocks: Sequence[Block], made: np.datetime64) -> tuple[int, _Paper]:
+    """Number of the largest scale at which the sheet is one page, and the paper."""
+    for number, scale in enumerate(_SCALES):
+        paper = _laid_out(title, blocks, made, scale)
+        if len(paper.pages) == 1:
+            return number, paper
+    return len(_SCALES) - 1, paper
+
+
+def _laid_out(title: str, blocks: Sequence[Block], made: np.datetime64, scale: float) -> _Paper:
+    pdf = _Paper(format="A4")
+    pdf.scale = scale
     pdf.set_creation_date(datetime.fromtimestamp(int(made.astype("datetime64[s]").astype(np.int64)), UTC))
     pdf.set_title(_latin(title))
-    pdf.set_margins(14, 11, 14)
-    pdf.set_auto_page_break(True, 10)
+    pdf.set_margins(14, 10, 14)
+    pdf.set_auto_page_break(True, 9)
     pdf.add_page()
     for block in blocks:
         _pdf_block(pdf, block)
-    return bytes(pdf.output())
+    return pdf
 
 
 def _latin(text: str) -> str:
@@ -183,15 +218,16 @@ def _latin(text: str) -> str:
     return "".join(c for c in decomposed if not unicodedata.combining(c)).encode("latin-1", "replace").decode("latin-1")
 
 
-def _line(pdf: FPDF, text: str, size: float, style: str = "", grey: bool = False) -> None:
+def _line(pdf: _Paper, text: str, size: float, style: str = "", grey: bool = False) -> None:
+    size *= pdf.scale
     pdf.set_font("helvetica", style, size)
     pdf.set_text_color(*(90, 96, 112) if grey else (31, 36, 48))
-    pdf.multi_cell(0, size * 0.46, _latin(text), new_x=XPos.LMARGIN, new_y=YPos.NEXT)
+    pdf.multi_cell(0, size * 0.46, _latin(text), align="L", new_x=XPos.LMARGIN, new_y=YPos.NEXT)
 
 
-def _pdf_block(pdf: FPDF, block: Block) -> None:
+def _pdf_block(pdf: _Paper, block: Block) -> None:
     if isinstance(block, Heading):
-        pdf.ln(0 if block.level == 1 else 1.5)
+        pdf.ln(0 if block.level == 1 else 1.5 * pdf.scale)
         _line(pdf, block.text, 15 if block.level == 1 else 10.5, "B")
         pdf.ln(0.5)
     elif isinstance(block, Sentence):
@@ -207,14 +243,15 @@ def _pdf_block(pdf: FPDF, block: Block) -> None:
         _pdf_chart(pdf, block)
 
 
-def _pdf_table(pdf: FPDF, block: Table) -> None:
-    pdf.set_font("helvetica", "", 7.5)
+def _pdf_table(pdf: _Paper, block: Table) -> None:
+    pdf.set_font("helvetica", "", 7.5 * pdf.scale)
     pdf.set_text_color(31, 36, 48)
     pdf.set_draw_color(217, 209, 191)
+    pdf.set_fill_color(255, 255, 255)
     total = sum(block.widths)
     with pdf.table(
         col_widths=tuple(100 * share / total for share in block.widths), borders_layout="HORIZONTAL_LINES",
-        text_align="LEFT", line_height=3.4, padding=0.4,
+        text_align="LEFT", line_height=3.3 * pdf.scale, padding=0.35,
     ) as table:  # fmt: skip
         for row in (block.heading, *block.rows):
             cells = table.row()
@@ -227,7 +264,7 @@ def _rgb(colour: str) -> tuple[int, int, int]:
     return int(colour[1:3], 16), int(colour[3:5], 16), int(colour[5:7], 16)
 
 
-def _pdf_mark(pdf: FPDF, x: float, y: float, wide: float, high: float, mark: str) -> None:
+def _pdf_mark(pdf: _Paper, x: float, y: float, wide: float, high: float, mark: str) -> None:
     fill, edge, hatch = MARKS[mark]
     pdf.set_fill_color(*_rgb(fill))
     pdf.set_draw_color(*_rgb(edge))
@@ -247,18 +284,18 @@ def _pdf_mark(pdf: FPDF, x: float, y: float, wide: float, high: float, mark: str
         at += 1.5
 
 
-def _pdf_chart(pdf: FPDF, chart: DayChart) -> None:
-    left, width, row_height = 56.0, 138.0, 5.5
+def _pdf_chart(pdf: _Paper, chart: DayChart) -> None:
+    left, width, row_height = 56.0, 138.0, 5.2 * pdf.scale
     need = row_height * len(chart.rows) + 16
     if pdf.get_y() + need > pdf.h - 14:
         pdf.add_page()
     top = pdf.get_y() + 1
-    pdf.set_font("helvetica", "", 7.5)
+    pdf.set_font("helvetica", "", 7.5 * pdf.scale)
     pdf.set_text_color(31, 36, 48)
     bottom = top + row_height * len(chart.rows)
     for row, (label, spans) in enumerate(chart.rows):
         y = top + row * row_height
-        pdf.text(14, y + 3.2, _latin(label[:30]))
+        pdf.text(14, y + 0.56 * row_height, _latin(label[:30]))
         for a, b, mark in spans:
             _pdf_mark(pdf, left + a * width, y, max((b - a) * width, 0.15), row_height - 1.5, mark)
     for share, word in chart.ticks:
@@ -271,4 +308,4 @@ def _pdf_chart(pdf: FPDF, chart: DayChart) -> None:
         _pdf_mark(pdf, x, bottom + 6, 3.5, 3, mark)
         pdf.text(x + 5, bottom + 8.4, _latin(meaning))
         x += 10 + pdf.get_string_width(_latin(meaning))
-    pdf.set_y(bottom + 12)
+    pdf.set_y(bottom + 10.5)

@@ -59,7 +59,7 @@ class Clock:
     def table(self, heading: tuple[str, ...], rows: Sequence[tuple[str, ...]], widths: tuple[float, ...]) -> Table:
         """A table whose rows begin with the cells of `span`."""
         names = ("UTC",) if self.zone is None else ("UTC", "Local")
-        return Table((*names, *heading), tuple(rows), (*(1.5,) * len(names), *widths))
+        return Table((*names, *heading), tuple(rows), (*(1.15,) * len(names), *widths))
 
 
 def of_site(
@@ -278,7 +278,7 @@ def _survey_rows(advice: Advice, clock: Clock) -> list[Block]:
     shown, rest = _longest(advice.windows)
     rows = [(*clock.span(one.start, one.end), _WORDS[one.verdict], one.why) for one in shown]
     index = [
-        (clock.utc(hour), f"{ppm:.1f}" if np.isfinite(ppm) else "-", word)
+        (clock.utc(hour)[:2], f"{ppm:.1f}" if np.isfinite(ppm) else "-", word)
         for hour, ppm, word in zip(advice.hours, advice.index, advice.index_words, strict=True)
     ]
     highest = max(index, key=lambda row: float(row[1]) if row[1] != "-" else -1.0, default=None)
@@ -292,7 +292,7 @@ def _survey_rows(advice: Advice, clock: Clock) -> list[Block]:
         blocks.append(Sentence(
             "Differential delay that 95 % of the surroundings stay under, by hour (ppm of the baseline): "
             + ", ".join(f"{hour} {ppm}" for hour, ppm, _ in index)
-            + f". Highest {highest[1]} at {highest[0]} UTC: {highest[2]}."
+            + f". Highest {highest[1]} in the hour from {highest[0]} UTC: {highest[2]}."
         ))  # fmt: skip
     return blocks
 
