@@ -18,6 +18,7 @@ from skylag.ionosphere import (
     background,
     displacement,
     faults,
+    front_witness,
     fronts,
     geometry,
     irregularity,
@@ -220,7 +221,7 @@ def estimate(
     tell("slopes", 0.0)
     steep = slopes.measure(rays, samples, fields, choices.slopes)
     tell("fronts", 0.0)
-    moving = fronts.track(rays, samples, steep, choices.fronts)
+    moving = front_witness.at_least(fronts.track(rays, samples, steep, choices.fronts), steep)
     tell("irregular", 0.0)
     ragged = irregularity.assess(rays, moving, choices.irregularity, samples)
     broken = faults.find(rays, samples, ragged, steep, moving)
