@@ -21,11 +21,12 @@ from tests.builders import REGION, invented_day
 from skylag.archive import Archive, Task, open_archive
 from skylag.chain import Choices
 from skylag.errors import Missing, NotEnough, Refused, SkylagError
-from skylag.jobs import board, kept, work
+from skylag.jobs import board, hindcast, kept, work
 from skylag.jobs.board import Policy, Worker
 from skylag.tables import Fields, Products
 
 T0 = np.datetime64("2031-05-12T08:00:00", "ns")
+NAME = REGION.name
 QUICK = Policy(beat_s=0.02, held_s=60)
 
 
@@ -70,7 +71,83 @@ def worker(archive: Archive, clock: Callable[[], np.datetime64], compute: Any = 
 
 
 def run_all(one: Worker) -> int:
-    return one.run(threading.Event(), until_empty=True, idle_s=0.01)
+    """Until nothing is left; for ten minutes at most, since what waits for a clock that stands would wait for ever."""
+    stop = threading.Event()
+    guard = threading.Timer(600.0, stop.set)
+    guard.start()
+    try:
+        return one.run(stop, until_empty=True, idle_s=0.01)
+    finally:
+        guard.cancel()
+        guard.join()
+
+
+# ---------------------------------------------------------------------------------------------- outlooks
+
+
+def queue_day(archive: Archive, number: int) -> int:
+    return archive.tasks.add(board.NETWORK_DAY, f"day {number}", {"number": number}, T0)
+
+
+def test_a_day_queues_the_outlook_after_it(archive: Archive) -> None:
+    """Behind all days that wait; what was made is told and kept, and asked for again it is the same."""
+    for number in range(2):
+        queue_day(archive, number)
+    one = worker(archive, HandClock())
+    with ThreadPoolExecutor(1) as executor:
+        one.one(executor)
+        waiting = archive.tasks.newest(states=("waiting",))
+        assert {task.kind for task in waiting} == {board.NETWORK_DAY, board.OUTLOOK}
+        one.one(executor)
+        one.one(executor)
+        assert {task.title for task in archive.tasks.newest(states=("waiting",))} == {f"2031-01-02 outlook of {NAME}"}
+    assert run_all(one) == 1
+    ended = {task.title: task for task in archive.tasks.newest()}
+    assert {task.state for task in ended.values()} == {"done"} and len(ended) == 4
+    results = [ended[f"2031-01-0{day} outlook of {NAME}"].result for day in (1, 2)]
+    assert [result["known_until"] for result in results] == ["2031-01-02"] * 2, "of the newest day, made once"
+    kept_one = hindcast.newest(archive, NAME)
+    assert {result["outlook"] for result in results} == {kept_one.number}
+
+
+def test_an_outlook_that_fails_is_tried_again_and_the_day_stays(archive: Archive, monkeypatch: Any) -> None:
+    real, calls = hindcast.newest, []
+
+    def newest(*arguments: Any, **named: Any) -> Any:
+        calls.append(1)
+        if len(calls) == 1:
+            raise OSError("cut off")
+        return real(*arguments, **named)
+
+    monkeypatch.setattr(hindcast, "newest", newest)
+    clock = HandClock()
+    queue_day(archive, 1)
+    one = worker(archive, clock)
+    with ThreadPoolExecutor(1) as executor:
+        one.one(executor)
+        one.one(executor)
+        (task,) = (task for task in archive.tasks.newest() if task.kind == board.OUTLOOK)
+        assert (task.state, task.said) == ("waiting", "OSError: cut off") and len(archive.days()) == 1
+        clock.move(60)
+        one.one(executor)
+    assert archive.tasks.one(task.id).state == "done"
+
+
+def test_an_outlook_cancelled_meanwhile_is_not_done(archive: Archive, monkeypatch: Any) -> None:
+    real = hindcast.newest
+
+    def newest(*arguments: Any, **named: Any) -> Any:
+        (task,) = archive.tasks.newest(states=("running",))
+        archive.tasks.cancel(task.id, T0)
+        return real(*arguments, **named)
+
+    monkeypatch.setattr(hindcast, "newest", newest)
+    queue_day(archive, 1)
+    log: list[str] = []
+    one = Worker(archive, "threads:1", HandClock(), QUICK, compute=tiny, log=lambda event, **_: log.append(event))
+    run_all(one)
+    states = {task.kind: task.state for task in archive.tasks.newest()}
+    assert states == {board.NETWORK_DAY: "done", board.OUTLOOK: "cancelled"} and "task done" in log
 
 
 # ---------------------------------------------------------------------------------------------- the ordinary course
@@ -323,7 +400,7 @@ def _kill_many(place: str, days: int, kills: int, seed: int) -> int:
             process.join()
             _consistent(place, days)
         else:
-            process.join(60)
+            process.join(600)
             assert process.exitcode == 0
     return met
 

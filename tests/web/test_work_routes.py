@@ -78,7 +78,10 @@ def test_from_files_to_a_stored_day(own: Archive, client: TestClient, sample_fol
     assert done["state"] == "done", done["said"]
     address = f"/api/days/{done['result']['region']}/2031-03-11"
     assert client.get(address).json()["receivers"][0]["name"] == "MRGT00XBS"
-    assert client.get("/api/work").json()["counts"]["done"] == 1
+    work = client.get("/api/work").json()
+    assert work["counts"]["done"] == 2, "the day, and the outlook after it"
+    outlook = next(one for one in work["tasks"] if one["kind"] == "outlook")
+    assert (outlook["region"], outlook["day"]) == (done["result"]["region"], "2031-03-11")
 
 
 # ---------------------------------------------------------------------------------------------- names and sizes

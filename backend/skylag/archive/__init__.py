@@ -2,6 +2,6 @@
 
 from skylag.archive.records import DayHead, DayRecord, SiteStates
 from skylag.archive.store import Archive, open_archive
-from skylag.archive.tasks import Ending, Task
+from skylag.archive.tasks import Ending, Task, Wanted
 
-__all__ = ["Archive", "DayHead", "DayRecord", "Ending", "SiteStates", "Task", "open_archive"]
+__all__ = ["Archive", "DayHead", "DayRecord", "Ending", "SiteStates", "Task", "Wanted", "open_archive"]

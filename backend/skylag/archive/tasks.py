@@ -54,13 +54,24 @@ class Task:
 
 
 @dataclass(frozen=True)
+class Wanted:
+    """Work to be queued: kind, title, and what to compute, as plain facts."""
+
+    kind: str
+    title: str
+    spec: Mapping[str, Any]
+
+
+@dataclass(frozen=True)
 class Ending:
-    """That a task is done, to be written together with what it made: task, its holder, UTC time, plain facts."""
+    """That a task is done, to be written together with what it made: task, its holder, UTC time, plain facts, and the
+    work that follows from it."""
 
     task: int
     holder: str
     now: np.datetime64
     result: Mapping[str, Any]
+    then: tuple[Wanted, ...] = ()
 
 
 class Tasks:
@@ -75,29 +86,8 @@ class Tasks:
 
     def add(self, kind: str, title: str, spec: Mapping[str, Any], now: np.datetime64) -> int:
         """Queue work; gives its number.  The same work that is waiting or running already is not queued twice."""
-        text = records.to_text(spec)
-        sha256 = hashlib.sha256(f"{kind}\n{text}".encode()).hexdigest()
-
-        def insert(connection: Connection) -> int:
-            _take_turns(connection)
-            there = connection.scalar(
-                sa.select(schema.task.c.id).where(
-                    schema.task.c.spec_sha256 == sha256, schema.task.c.state.in_(("waiting", "running"))
-                )
-            )
-            if there is not None:
-                return int(there)
-            made = connection.execute(
-                sa.insert(schema.task).values(
-                    kind=kind, title=title[:300], spec=text, spec_sha256=sha256, state="waiting", attempts=0, losses=0,
-                    not_before_ns=_ns(now), holder="", held_until_ns=0, stage="", share=0.0, word="", said="",
-                    result="{}", added_ns=_ns(now), changed_ns=_ns(now),
-                )
-            ).inserted_primary_key  # fmt: skip
-            assert made is not None  # the database gives a key to every row
-            return int(made[0])
-
-        return int(self._write(insert))
+        wanted = Wanted(kind, title, spec)
+        return int(self._write(lambda connection: _queue(connection, wanted, now)))
 
     def claim(self, holder: str, now: np.datetime64, held_s: float, most_losses: int) -> Task | None:
         """Take the oldest work that is due, or whose holder let the claim run out; None where there is none.
@@ -161,6 +151,13 @@ class Tasks:
             return bool(changed.rowcount)
 
         return bool(self._write(end))
+
+    def finish(self, ending: Ending) -> None:
+        """Write that a task is done whose result is kept already, by a verb that keeps the same thing once.
+
+        Raises SkylagError where the claim was lost.
+        """
+        self._write(lambda connection: end_in(connection, ending, None))
 
     def give_back(self, holders: Collection[str], now: np.datetime64) -> int:
         """Let go of what these holders hold, since they are known to be gone; gives how many there were."""
@@ -249,23 +246,50 @@ class Tasks:
         return found
 
 
-def end_in(connection: Connection, ending: Ending, version: int) -> None:
+def _queue(connection: Connection, wanted: Wanted, now: np.datetime64) -> int:
+    """Queue work, unless the same is waiting or running; gives its number."""
+    text = records.to_text(wanted.spec)
+    sha256 = hashlib.sha256(f"{wanted.kind}\n{text}".encode()).hexdigest()
+    _take_turns(connection)
+    there = connection.scalar(
+        sa.select(schema.task.c.id).where(
+            schema.task.c.spec_sha256 == sha256, schema.task.c.state.in_(("waiting", "running"))
+        )
+    )
+    if there is not None:
+        return int(there)
+    made = connection.execute(
+        sa.insert(schema.task).values(
+            kind=wanted.kind, title=wanted.title[:300], spec=text, spec_sha256=sha256, state="waiting", attempts=0,
+            losses=0, not_before_ns=_ns(now), holder="", held_until_ns=0, stage="", share=0.0, word="", said="",
+            result="{}", added_ns=_ns(now), changed_ns=_ns(now),
+        )
+    ).inserted_primary_key  # fmt: skip
+    assert made is not None  # the database gives a key to every row
+    return int(made[0])
+
+
+def end_in(connection: Connection, ending: Ending, version: int | None) -> None:
     """Write that a task is done, in the transaction that writes what it made.
 
+    version  of the day it made, None where it made none
     Raises SkylagError where the claim was lost, so that nothing of the transaction stays.
     """
+    result = dict(ending.result) if version is None else {**ending.result, "version": version}
     changed = connection.execute(
         sa.update(schema.task)
         .where(_held(ending.task, ending.holder))
         .values(
             state="done", holder="", held_until_ns=0, share=1.0, word="", said="",
-            result=records.to_text({**ending.result, "version": version}), changed_ns=_ns(ending.now),
+            result=records.to_text(result), changed_ns=_ns(ending.now),
         )
     )  # fmt: skip
     if not changed.rowcount:
         raise SkylagError(
             f"work {ending.task} was cancelled or is done by another by now; its result is not kept", task=ending.task
         )
+    for wanted in ending.then:
+        _queue(connection, wanted, ending.now)
 
 
 def _due(now: np.datetime64) -> Any:

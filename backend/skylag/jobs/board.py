@@ -1,8 +1,9 @@
 """The queue at work: files become tasks, workers take tasks, errors are tried again, vanished workers are replaced.
 
-A task is one network day; its receiver-days run side by side on an executor and are kept, so that a day that was cut
-off goes on where it stopped.  What a task makes and that it is done are written in one transaction: a day is never
-stored twice for one task, and never half.  The clock is handed in.
+A task is one network day or one outlook.  The receiver-days of a day run side by side on an executor and are kept, so
+that a day that was cut off goes on where it stopped.  What a task makes, that it is done, and the outlook that follows
+from a day are written in one transaction: a day is never stored twice for one task, and never half.  The clock is
+handed in.
 """
 
 import os
@@ -19,7 +20,7 @@ from typing import Any
 
 import numpy as np
 
-from skylag.archive import Archive, Ending, Task
+from skylag.archive import Archive, Ending, Task, Wanted
 from skylag.archive.records import region_from
 from skylag.chain import Choices
 from skylag.errors import FormatError, NotEnough, Refused, SkylagError, Unsolvable
@@ -34,7 +35,7 @@ Log = Callable[..., None]  # event, facts by name
 
 # The input itself is at fault: trying again cannot help.
 HOPELESS = (FormatError, NotEnough, Unsolvable, Refused)
-NETWORK_DAY = "network day"
+NETWORK_DAY, OUTLOOK = "network day", "outlook"
 
 
 @dataclass(frozen=True)
@@ -113,6 +114,11 @@ def add(
     return numbers, inputs.left_out
 
 
+def outlook_after(region: str, day: np.datetime64) -> Wanted:
+    """The work that a day of a region brings about: the outlook."""
+    return Wanted(OUTLOOK, f"{day} outlook of {region}", {"region": region, "day": str(day)})
+
+
 def _beside(observed: Sequence[str], others: Sequence[str]) -> list[str]:
     folders = {Path(path).parent for path in observed}
     near = [path for path in others if Path(path).parent in folders]
@@ -133,7 +139,7 @@ def compute(task: Task, executor: Executor, tell: work.Progress, archive: Archiv
     if task.kind != NETWORK_DAY:
         raise Refused(
             f"work {task.id} is of kind {task.kind!r}, which this program does not do; update the program",
-            name="kind", value=task.kind, allowed=(NETWORK_DAY,),
+            name="kind", value=task.kind, allowed=(NETWORK_DAY, OUTLOOK),
         )  # fmt: skip
     signals = {system: (pair[0], pair[1]) for system, pair in spec["signals"].items()}
     choices = Estimation(**spec.get("estimation", {})).choices(
@@ -219,15 +225,20 @@ class Worker:
             with ExitStack() as stack:
                 stack.callback(beat.end)
                 beat.start()
+                if task.kind == OUTLOOK:
+                    self._outlook(task, beat)
+                    return True
                 products = self._compute(task, keeping, beat.tell)
                 beat.check()
             result = {
                 "region": products.region.name, "day": str(products.day), "given": keeping.given,
                 "computed": keeping.computed, "warnings": len(products.origin.warnings),
             }  # fmt: skip
-            version = self._archive.save(products, ending=Ending(task.id, self.name, self._clock(), result))
+            then = (outlook_after(products.region.name, products.day),) if task.kind == NETWORK_DAY else ()
+            ending = Ending(task.id, self.name, self._clock(), result, then)
+            version = self._archive.save(products, ending=ending)
             self._log("task done", task=task.id, title=task.title, version=version, given=keeping.given)
-            self._prepare(products, version)
+            self._prepare(task, products, version)
         except Withdrawn:
             keeping.drop()
             self._log("task withdrawn", task=task.id, title=task.title)
@@ -239,16 +250,30 @@ class Worker:
             self._fail(task, failure)
         return True
 
-    def _prepare(self, products: Products, version: int) -> None:
-        """What the day ahead rests on; where no other task waits, the outlook and what questions about approaches need.
+    def _outlook(self, task: Task, beat: "_Beat") -> None:
+        """Make and keep the outlook after the newest day of a region, and the scores that are due.
 
-        Else whoever asks first waits for these.
+        The same outlook is kept once, whoever makes it and how often; so one that was made before its task was
+        cancelled or lost stays.
         """
+        beat.tell("outlook", 0.0, task.spec["region"])
+        made = hindcast.newest(self._archive, task.spec["region"])
+        beat.check()
+        result = {"region": made.region, "known_until": str(made.outlook.known_until), "outlook": made.number}
+        self._archive.tasks.finish(Ending(task.id, self.name, self._clock(), result))
+        self._log("task done", task=task.id, title=task.title, outlook=made.number)
+
+    def _prepare(self, task: Task, products: Products, version: int) -> None:
+        """What others will ask of a day that is done: its hours for outlooks and, where no other day waits, what
+        questions about approaches need; else the first to ask waits for that.
+        """
+        region, day = products.region.name, products.day
         with suppress(SkylagError):
-            more = bool(self._archive.tasks.counts()["waiting"])
-            hindcast.day_kept(self._archive, products.region.name, products.day, self._log, more)
-            if not more:
-                advising.prepare(self._archive, products.region.name, str(products.day), version)
+            waiting = self._archive.tasks.newest(2, ("waiting",))
+            if task.kind == NETWORK_DAY:
+                hindcast.day_kept(self._archive, region, day, self._log, more=True)
+            if all(one.kind == OUTLOOK for one in waiting):
+                advising.prepare(self._archive, region, str(day), version)
 
     def _fail(self, task: Task, failure: Exception) -> None:
         """Write down a failed try, and when the next is due."""

@@ -64,7 +64,7 @@ def task_shape(task: Task) -> dict[str, Any]:
     return {
         "id": task.id, "kind": task.kind, "title": task.title, "state": task.state, "stage": task.stage,
         "share": round(task.share, 4), "word": task.word, "attempts": task.attempts, "losses": task.losses,
-        "said": task.said, "day": spec.get("day"), "region": region["name"] if region else None,
+        "said": task.said, "day": spec.get("day"), "region": region["name"] if isinstance(region, dict) else region,
         "files": [Path(path).name for path in spec.get("paths", ())], "result": dict(task.result),
         "added_utc": _utc(task.added), "changed_utc": _utc(task.changed),
         "next_try_utc": _utc(task.not_before) if task.state == "waiting" and task.attempts else None,
