@@ -30,7 +30,7 @@ def _service(server: str, path: str) -> Any:
 
 def test_the_days_at_a_glance(visit: Open) -> None:
     """Both days stand in the strip with their worst state; filter, keys and click open days; the table agrees."""
-    v = visit(plotly=False).go(f"{STORM}&time=05:30")
+    v = visit(plotly=False, accept_downloads=True).go(f"{STORM}&time=05:30")
     assert v.page.locator("#year-strip .day-mark").count() == 2
     told = [str(v.page.locator("#year-strip title").nth(n).text_content()) for n in (0, 1)]
     assert told[0].startswith("Sat, 10 May 2031: holds") and told[1].startswith("Sun, 11 May 2031: broken")
@@ -45,13 +45,19 @@ def test_the_days_at_a_glance(visit: Open) -> None:
     v.page.wait_for_function("() => document.getElementById('chart-time').textContent.startsWith('11 May 2031')")
     slope = _service(v.server, "/api/days?since=2031-05-11")["days"][0]["highest"]["slope"]
     assert f"{slope:.1f} mm/km" in v.text("#year-table tbody tr")
+    with v.page.expect_download() as download:
+        v.page.click("#year-csv")
+    (row,) = csv.DictReader(io.StringIO(Path(download.value.path()).read_text()))
+    assert row["day"] == "2031-05-11" and row["worst_state"] == "broken" and row["kp_highest"] == ""
+    assert float(row["slope_mm_per_km"]) == pytest.approx(slope, rel=1e-4)
+    assert v.page.is_disabled("#year-field") and "No indices of geomagnetic activity" in v.text("#year-note")
     v.page.select_option("#year-span", "dec-feb")
     assert "No stored day is like that" in v.text("#year-note")
 
 
 def test_two_days_side_by_side_and_their_difference(visit: Open) -> None:
     """The other map is the other day's; the difference is this day's number less the other's, cell by cell."""
-    v = visit(plotly=False).go(f"{STORM}&time=06:00&versus=2031-05-10")
+    v = visit(plotly=False, accept_downloads=True).go(f"{STORM}&time=06:00&versus=2031-05-10")
     v.page.wait_for_selector(".map-other[data-drawn=fields]")
     assert "Right: Sat, 10 May 2031" in v.text("#compared")
     v.page.click("#versus-how label:has(input[value=difference])")
@@ -73,8 +79,24 @@ def test_two_days_side_by_side_and_their_difference(visit: Open) -> None:
     wanted = (first - second).reshape(15, 17)[0]  # south to north: the last row shown
     for text, value in zip(shown[2:], wanted, strict=True):
         assert text == "unseen" if np.isnan(value) else abs(float(text) - value) < 0.0051
+    with v.page.expect_download() as download:
+        v.page.click("#map-csv")
+    assert download.value.suggested_filename.endswith("-0600-difference.csv")
+    rows = list(csv.DictReader(io.StringIO(Path(download.value.path()).read_text())))
+    for row, value in zip(rows[:17], wanted, strict=True):
+        told = row["vertical_delay_m"]
+        assert told == "" if np.isnan(value) else float(told) == pytest.approx(value, abs=1e-4)
     v.page.select_option("#versus", "quiet")
     v.page.wait_for_function("() => document.getElementById('compared').textContent.includes('median of 1 quiet day')")
+    # The day at the place beside that of the quiet day, in the table behind the plot.
+    v.page.click(".through-day .table-behind summary")
+    v.page.wait_for_function("() => document.querySelectorAll('#series-table thead th').length === 4")
+    assert "median of 1 quiet day" in v.text("#series-table thead")
+    # On paper it is day, without controls, with the way back.
+    v.page.emulate_media(media="print")
+    v.page.evaluate("window.dispatchEvent(new Event('beforeprint'))")
+    assert not any(v.page.is_visible(one) for one in ("#asks", "#play", "#place-form", ".exports", "#year-strip"))
+    assert v.page.is_visible(".caution") and "versus=quiet" in v.text("#printed")
 
 
 def test_now_tells_the_age_and_what_comes(visit: Open) -> None:
@@ -95,13 +117,17 @@ def test_now_tells_the_age_and_what_comes(visit: Open) -> None:
 
 def test_the_network_and_ahead(visit: Open) -> None:
     """Receivers with their biases, the suspected one first; the outlook, or the service's words why there is none."""
-    v = visit(plotly=False)
+    v = visit(plotly=False, accept_downloads=True)
     v.go("?ask=network&day=2031-05-11", wait=False)
     v.page.wait_for_selector("#network-table tbody tr")
     assert v.page.locator("#network-table tbody tr").count() == 10
     assert v.text("#network-table tbody tr").startswith("HULL")
     assert "HULL stands out of 10 receivers" in v.text("#network-said")
     assert not v.page.is_visible("#map")
+    with v.page.expect_download() as download:
+        v.page.click("#network-csv")
+    rows = list(csv.DictReader(io.StringIO(Path(download.value.path()).read_text())))
+    assert len(rows) == 10 and all(row["day"] == "2031-05-11" and "+-" in row["biases_ns"] for row in rows)
     v.page.click("#asks a[data-ask=ahead]")
     v.page.wait_for_function("() => document.querySelector('#ahead-body :is(.chances, .trouble)')")
     v.page.click("#asks a[data-ask=past]")
