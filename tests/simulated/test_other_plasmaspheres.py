@@ -159,5 +159,6 @@ def test_growth_found_from_the_day_beats_growth_held() -> None:
     assert rms([f.common for f in found]) < 0.6 * rms([f.common for f in held])
     assert rms([f.common for f in found]) < 0.4 * rms([f.common for f in plain])
     assert np.mean([f.common for f in plain]) > 0.2
-    # What is left out leans with its usual strength, so that it is not taken for known; 3 sigmas before.
-    assert rms([f.common / f.stated for f in plain]) < 1.6
+    # Asked for, it says so in its sigma: without what was left out leaning on it, errors were 3 sigmas.
+    assert 0.7 < rms([f.common / f.stated for f in plain]) < 1.3
+    assert 0.7 < rms([f.level / f.level_stated for f in plain]) < 1.5
