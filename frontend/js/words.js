@@ -102,9 +102,9 @@ export const WORDS = {
   /** @param {string} at @param {string} ago */
   fresh: (at, ago) => `Newest data: ${at}, ${ago}.`,
   /** @param {string} at @param {string} ago */
-  stale: (at, ago) => `Newest data: ${at}, ${ago}. This is not the present: nothing newer has come in.`,
+  stale: (at, ago) => `Newest data: ${at}, ${ago}: not the present.`,
   /** @param {string} at */
-  aheadOfClock: (at) => `Newest data: ${at}, later than this machine’s clock. Invented or wrongly dated days look so; this is not the present.`,
+  aheadOfClock: (at) => `Newest data: ${at}, later than this machine’s clock: not the present.`,
   /** @param {number} minutes */
   lookingBack: (minutes) => `You look at ${minutes < 120 ? `${minutes} minutes` : `${Math.round(minutes / 60)} hours`} before that.`,
   noFlagsNow: "No flag is raised at this time.",
@@ -258,6 +258,7 @@ export const PAGE_WORDS = {
   dayBefore: "Day before",
   dayAfter: "Day after",
   aboutTheseData: "About these data",
+  ageOfTheData: "Age of the data",
   receiversAsATable: "Receivers as a table",
   map: "Map",
   mapOfTheOther: "Map of the other day",
