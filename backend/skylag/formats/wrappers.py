@@ -202,7 +202,7 @@ def members(data: bytes, name: str) -> list[tuple[str, bytes, list[Problem]]]:
                             problems.append(Problem(where, 0, "cannot be unpacked", "left out"))
                 size += got
                 out.append((entry.filename, b"".join(parts), problems))
-    except (zipfile.BadZipFile, zlib.error, RuntimeError, NotImplementedError, OSError, ValueError) as error:
+    except (zipfile.BadZipFile, zlib.error, RuntimeError, OSError, ValueError) as error:
         raise FormatError(f"{name}: the zip file cannot be unpacked: {error}", path=name, line=0) from error
     return out
 
