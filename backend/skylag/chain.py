@@ -15,6 +15,7 @@ from skylag.errors import NotEnough
 from skylag.impact import arrivals, states
 from skylag.ionosphere import (
     adjustment,
+    augmentation_grid,
     background,
     displacement,
     faults,
@@ -234,6 +235,9 @@ def estimate(
         "arrivals": arrivals.facts(told),
         "receivers_left_out": dict(foretold.facts()),
         "beyond_sight": (beyond or background.PLAIN).name,
+        "planar_fit": augmentation_grid.planar_facts(
+            samples, (region.south, region.north, region.west, region.east), epochs
+        ),
     }
     samples = displacement.widened(samples, fields, choices.adjustment.shell_height_sigma_m)
     return Estimate(

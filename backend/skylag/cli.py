@@ -18,7 +18,7 @@ from typing import TextIO
 
 import numpy as np
 
-from skylag import advice_door, compare_door, events_door, outlook_door, settings, work_door
+from skylag import advice_door, compare_door, events_door, maps_door, outlook_door, settings, work_door
 from skylag.chain import Choices
 from skylag.errors import Refused, SkylagError
 from skylag.formats import results
@@ -82,6 +82,7 @@ def command_parser() -> argparse.ArgumentParser:
     events_door.add(commands, CAUTION)
     outlook_door.add(commands, CAUTION, work_door.clock)
     compare_door.add(commands, CAUTION)
+    maps_door.add(commands, CAUTION)
     work_door.add(commands, CAUTION, _date, _minutes)
     return parser
 

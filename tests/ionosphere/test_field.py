@@ -507,6 +507,19 @@ def test_the_planar_fit_finds_a_wall() -> None:
     assert chi_calm[0, 0] < limit[0, 0] < chi_wild[0, 0]
 
 
+def test_the_fit_test_is_kept_by_hour_and_point() -> None:
+    when = epochs(1.0, 600.0)
+    calm, wild = (augmentation_grid.planar_facts(sky(content)[1], (-42.0, -36.0, 143.0, 148.0), when)
+                  for content in (quiet, storm))  # fmt: skip
+    assert calm["points"] == [[-40.0, 145.0]] and list(calm["worst_chi_square_over_limit"]) == ["2030-03-05T00"]
+    assert calm["worst_chi_square_over_limit"]["2030-03-05T00"][0] < 1.0 < wild["worst_chi_square_over_limit"][
+        "2030-03-05T00"
+    ][0]
+    assert calm["maps_not_planar"] == 0 < wild["maps_not_planar"] <= len(when)
+    small = augmentation_grid.planar_facts(sky(quiet)[1], (-39.5, -38.5, 145.2, 146.2), when)
+    assert small["points"] == [[-39.0, 145.7]]  # no standard point: the middle
+
+
 def test_grid_points_across_the_date_line_and_refusals() -> None:
     points = augmentation_grid.points_in(-12.0, 12.0, 174.0, 187.0)
     assert set(points.lon) == {175.0, -180.0, -175.0}

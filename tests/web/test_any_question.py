@@ -28,7 +28,7 @@ GOOD = {"region": REGION.name, "day": str(STORM_DAY), "lat": "-41", "lon": "147"
         "number": "1", "batch": "0" * 32, "name": "x.rnx",
         "use": "ground", "site": "Gannet Field", "method": "rtk", "baseline_km": "10", "horizontal_mm": "30",
         "vertical_mm": "50", "hours": "07:00-16:00", "levels": "LPV-200", "correction_m": "3", "sigma_mm_per_km": "4",
-        "expected_ap": "", "most": "0.1",
+        "expected_ap": "", "most": "0.1", "step_m": "0.5",
         "places": "-41.1,147.1;-41.3,147.4", "shape": "route", "references": "GULL;-41,147", "session_min": "60",
         "least_min": "15", "mask_deg": "15", "least_satellites": "5", "most_dilution": "6", "fixing_chance": "0.1",
         "systems": "G", "lowest_deg": "15", "noise_m": "0.36", "usual_grid_m": "3", "distance_km": "6",

@@ -8,13 +8,15 @@ import csv
 import io
 from collections.abc import Sequence
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
+from skylag.constants import L1_M_PER_TECU
 from skylag.errors import FormatError
-from skylag.tables import Biases, Bools, Calibration, Flag, Samples
+from skylag.tables import STATE_NAMES, Biases, Bools, Calibration, Fields, Flag, Samples, Times
 from skylag.timescales import gps_to_utc
 
 BIAS_COLUMNS = ("kind", "name", "system", "code1", "code2", "bias_ns", "sigma_ns", "datum")
@@ -65,6 +67,51 @@ def flags_csv(flags: Sequence[Flag]) -> str:
             _number(flag.slope_mm_per_km, 1), _number(flag.sigma_mm_per_km, 1), _number(flag.speed_m_s, 0),
             _number(flag.heading_deg, 0), flag.state, flag.evidence,
         ])  # fmt: skip
+    return out.getvalue()
+
+
+MAP_COLUMNS = ("time_utc", "lat_deg", "lon_deg", "vertical_delay_m", "vertical_delay_sigma_m", "support",
+               "slope_mm_per_km", "slope_sigma_mm_per_km", "state")  # fmt: skip
+
+
+def maps_csv(fields: Fields) -> str:
+    """One row per map and cell; numbers that are not known are empty."""
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    writer.writerow(MAP_COLUMNS)
+    for number, time in enumerate(fields.times):
+        text = utc_text(time)
+        for row, lat in enumerate(fields.lats):
+            for column, lon in enumerate(fields.lons):
+                at = (number, row, column)
+                writer.writerow([
+                    text, f"{lat:g}", f"{lon:g}", _number(float(fields.vtec[at]) * L1_M_PER_TECU, 4),
+                    _number(float(fields.vtec_sigma[at]) * L1_M_PER_TECU, 4), int(fields.support[at]),
+                    _number(float(fields.slope[at]), 3), _number(float(fields.slope_sigma[at]), 3),
+                    STATE_NAMES[int(fields.state[at])],
+                ])  # fmt: skip
+    return out.getvalue()
+
+
+GRID_POINT_COLUMNS = ("time_utc", "band", "number", "lat_deg", "lon_deg", "vertical_delay_m", "vertical_delay_sigma_m",
+                      "support", "chi_square", "chi_square_limit")  # fmt: skip
+
+
+def grid_points_csv(times: Times, points: Sequence[Sequence[float]], values: Sequence[Any]) -> str:
+    """The field at the standard augmentation grid points, a row per time and point.
+
+    points  (band, number, latitude, longitude) each; values (T, P): delay [m], sigma [m], support, chi-square, limit
+    """
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    writer.writerow(GRID_POINT_COLUMNS)
+    for number, time in enumerate(times):
+        for place, (band, igp, lat, lon) in enumerate(points):
+            delay, sigma, support, chi_square, limit = (layer[number, place] for layer in values)
+            writer.writerow([
+                utc_text(time), int(band), int(igp), f"{lat:g}", f"{lon:g}", _number(float(delay), 4),
+                _number(float(sigma), 4), int(support), _number(float(chi_square), 2), _number(float(limit), 2),
+            ])  # fmt: skip
     return out.getvalue()
 
 

@@ -243,11 +243,12 @@ def _biases(header: _Header, times: np.ndarray, name: str) -> Biases:
 
 def write(
     fields: Fields, created: np.datetime64, shell_height_km: float, program: str = "SKYLAG", description: str = "",
-    base_radius_km: float = 6371.0,
+    base_radius_km: float = 6371.0, biases: Biases | None = None,
 ) -> str:  # fmt: skip
     """IONEX 1.0 text of maps of content and its sigma (as RMS maps); to 0.1 TECU, epochs in UT to the second.
 
     created  GPS time written as the time of making
+    biases   written as the header's auxiliary block, see `_auxiliary`
     Raises Refused for a grid that is not on whole tenths of a degree, since the format has nothing finer.
     """
     lat_step, lon_step = _step(fields.lats, "latitudes"), _step(fields.lons, "longitudes")
@@ -272,6 +273,7 @@ def write(
         _line(f"  {fields.lats[-1]:6.1f}{fields.lats[0]:6.1f}{-lat_step:6.1f}", "LAT1 / LAT2 / DLAT"),
         _line(f"  {fields.lons[0]:6.1f}{fields.lons[-1]:6.1f}{lon_step:6.1f}", "LON1 / LON2 / DLON"),
         _line(f"{-1:6d}", "EXPONENT"),
+        *(_auxiliary(biases) if biases is not None and len(biases) else ()),
         _line("", "END OF HEADER"),
     ]
     body: list[str] = []
@@ -294,6 +296,50 @@ def write(
                 )
             body.append(_line(f"{place + 1:6d}", f"END OF {kind} MAP"))
     return "\n".join([*head, *body, _line("", "END OF FILE"), ""])
+
+
+_SYSTEM_WORDS = {"G": "GPS", "R": "GLONASS", "E": "Galileo", "C": "BeiDou"}
+_BLOCK = "DIFFERENTIAL CODE BIASES"
+
+
+def _auxiliary(biases: Biases) -> list[str]:
+    """The block of code biases [ns]: satellites of each constellation's most used pair, receivers of every pair.
+
+    The satellites of a pair have zero mean, as is the use in such files; the level goes to the receivers.  A receiver
+    with a bias per channel (GLONASS) has the mean of them here.  The names are cut to four letters.
+    """
+    pairs: dict[tuple[str, str, str], dict[str, dict[str, list[tuple[float, float]]]]] = {}
+    for row in np.flatnonzero((biases.code2 != "") & np.isfinite(biases.value_ns)):
+        pair = (str(biases.system[row]), str(biases.code1[row]), str(biases.code2[row]))
+        name = str(biases.name[row])[:4] if biases.kind[row] == "receiver" else str(biases.name[row])
+        of_pair = pairs.setdefault(pair, {"satellite": {}, "receiver": {}})
+        of_pair[str(biases.kind[row])].setdefault(name, []).append(
+            (float(biases.value_ns[row]), float(biases.sigma_ns[row]))
+        )
+    lines = [_line(_BLOCK, "START OF AUX DATA")]
+    for system in sorted({pair[0] for pair in pairs} & set(_SYSTEM_WORDS)):
+        own = {pair: of_pair for pair, of_pair in pairs.items() if pair[0] == system}
+        main = max(own, key=lambda pair: (len(own[pair]["satellite"]), pair))
+        told = f"Reference observables for {_SYSTEM_WORDS[system]:7s}: {main[1]}-{main[2]}"
+        lines.append(_line(told, "COMMENT"))
+        for pair, of_pair in sorted(own.items(), key=lambda item: item[0] != main):
+            level = float(np.mean([values[0][0] for values in of_pair["satellite"].values()] or [0.0]))
+            if pair == main:
+                for name, values in sorted(of_pair["satellite"].items()):
+                    value, spread = values[0][0] - level, values[0][1]
+                    lines.append(_line(f"   {name:3.3s}{value:10.3f}{_spread(spread)}", "PRN / BIAS / RMS"))
+            for name, values in sorted(of_pair["receiver"].items()):
+                lines.append(_line(f"Reference observables for {name} ({system}): {pair[1]}-{pair[2]}", "COMMENT"))
+                value = float(np.mean([one[0] for one in values])) + level
+                spread = max(one[1] for one in values)
+                text = f"   {system}  {name:4.4s} {'':15s}{value:10.3f}{_spread(spread)}"
+                lines.append(_line(text, "STATION / BIAS / RMS"))
+    return [*lines, _line(_BLOCK, "END OF AUX DATA")]
+
+
+def _spread(sigma: float) -> str:
+    """F10.3 of a sigma, blank where it is not known."""
+    return f"{sigma:10.3f}" if np.isfinite(sigma) else " " * 10
 
 
 def _line(text: str, label: str) -> str:

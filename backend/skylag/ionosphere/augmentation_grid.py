@@ -8,8 +8,10 @@ Source: RTCA DO-229, appendix A: bands of grid points (table A-14), shell of 350
 """
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
+import numpy.typing as npt
 
 from skylag.constants import L1_M_PER_TECU, SBAS_EARTH_RADIUS_M, SBAS_SHELL_HEIGHT_M
 from skylag.errors import Refused
@@ -127,6 +129,42 @@ def delays_at(samples: Samples, points: GridPoints, epochs: Times, choices: Fiel
         epochs, points, np.asarray(content, dtype=np.float64) * L1_M_PER_TECU,
         np.asarray(sigma, dtype=np.float64) * L1_M_PER_TECU, support.astype(np.int64), chi_square, limit,
     )  # fmt: skip
+
+
+def planar_facts(samples: Samples, box: tuple[float, float, float, float], epochs: Times) -> dict[str, Any]:
+    """The fit test kept with a day's maps: of each hour the worst chi-square over its limit at the standard points.
+
+    box  south, north, west, east [deg]; where no standard point lies in it, its middle stands for them.  Above one the
+    region is no plane around that point at that hour.
+    """
+    points = points_in(*box)
+    lat, lon = points.lat, points.lon
+    if not len(points):
+        lat, lon = np.array([0.5 * (box[0] + box[1])]), np.array([0.5 * (box[2] + box[3])])
+    placed = on_the_standard_shell(samples)
+    chi_square, limit = planar_fits(placed, lat, lon, epochs)
+    hour = epochs.astype("datetime64[h]")
+    with np.errstate(invalid="ignore"):
+        share = np.where(np.isfinite(chi_square), chi_square / limit, -1.0)
+    worst = {
+        str(one): [round(float(value), 3) if value >= 0.0 else None for value in share[hour == one].max(axis=0)]
+        for one in np.unique(hour)
+    }
+    return {
+        "points": [[round(float(a), 3), round(float(b), 3)] for a, b in zip(lat, lon, strict=True)],
+        "worst_chi_square_over_limit": worst,
+        "maps_not_planar": int((share > 1.0).any(axis=1).sum()),
+    }
+
+
+def rows_of(delays: GridDelays) -> tuple[Times, list[tuple[int, int, float, float]], tuple[npt.NDArray[Any], ...]]:
+    """Times, points as (band, number, latitude, longitude), and the layers, as tables take them."""
+    points = delays.points
+    places = [
+        (int(band), int(number), float(lat), float(lon))
+        for band, number, lat, lon in zip(points.band, points.number, points.lat, points.lon, strict=True)
+    ]
+    return delays.times, places, (delays.delay_m, delays.sigma_m, delays.support, delays.chi_square, delays.limit)
 
 
 def planar_fits(

@@ -12,9 +12,10 @@ from fastapi.responses import Response
 from skylag import timescales
 from skylag.archive import Archive, DayRecord, slants
 from skylag.errors import Missing
-from skylag.formats import coast, ionex, netcdf
+from skylag.formats import coast, contours, delimited, ionex, netcdf
 from skylag.tables import Fields
 from skylag.web import asking, nearby, payloads, sentences, witnesses
+from skylag.web.frames import Answers
 
 router = APIRouter()
 
@@ -34,7 +35,12 @@ def fields(
     first = asking.instant(start, "from") if start else None
     last = asking.instant(end, "to") if end else None
     names = asking.layers(layers)
-    return payloads.reply(payloads.maps(archive.fields(region, asking.day(day), first, last, version), names))
+    shown = archive.version_of(region, asking.day(day), version)
+    answers: Answers = request.app.state.answers
+    return answers.answer(
+        request, (region, day, shown, str(first), str(last), names),
+        lambda: payloads.reply(payloads.maps(archive.fields(region, day, first, last, shown), names)),
+    )  # fmt: skip
 
 
 @router.get("/api/days/{region}/{day}/rays", summary="Lines of sight of one moment")
@@ -104,7 +110,7 @@ def field_netcdf(request: Request, region: str, day: str, version: int | None = 
 
 @router.get("/api/days/{region}/{day}/maps.inx", summary="Maps of a day as IONEX")
 def maps_ionex(request: Request, region: str, day: str, version: int | None = None) -> Response:
-    """Maps of content and its uncertainty, every quarter of an hour, as IONEX 1.0."""
+    """Maps of content and its uncertainty, every quarter of an hour, with the day's biases, as IONEX 1.0."""
     archive: Archive = request.app.state.archive
     record = archive.day(region, asking.day(day), version)
     held = archive.fields(region, record.head.day, None, None, record.head.version)
@@ -119,8 +125,37 @@ def maps_ionex(request: Request, region: str, day: str, version: int | None = No
     ]  # fmt: skip
     about = " ".join(filter(None, told))
     saved_at = np.datetime64(timescales.utc_to_gps(record.head.saved_at.astype("datetime64[ns]")).item(), "ns")
-    text = ionex.write(thin, saved_at, record.region.shell_height_km, description=about)
+    biases = archive.biases(region, record.head.day, record.head.version)
+    text = ionex.write(thin, saved_at, record.region.shell_height_km, description=about, biases=biases)
     return payloads.file(text.encode("ascii", "replace"), f"{region}-{day}.inx", "text/plain")
+
+
+@router.get("/api/days/{region}/{day}/map.csv", summary="A map as CSV")
+def map_csv(request: Request, region: str, day: str, time: str, version: int | None = None) -> Response:
+    """Delay, slope, their uncertainty and the state of every cell of the map nearest to a UTC instant."""
+    held, record = _one_map(request, region, day, time, version)
+    held = replace(held, state=payloads.honest_state(held))
+    return payloads.file(delimited.maps_csv(held).encode(), f"{region}-{record.head.day}-map.csv", "text/csv")
+
+
+@router.get("/api/days/{region}/{day}/lines.geojson", summary="Lines of equal delay of a map as GeoJSON")
+def delay_lines(
+    request: Request, region: str, day: str, time: str, step_m: float = 0.5, version: int | None = None
+) -> Response:
+    """Lines every `step_m` metres of vertical delay on the map nearest to a UTC instant, where it sees something."""
+    held, record = _one_map(request, region, day, time, version)
+    text = contours.to_geojson(held, 0, step_m, record.origin.simulated)
+    return payloads.file(text.encode(), f"{region}-{record.head.day}-lines.geojson", "application/geo+json")
+
+
+def _one_map(request: Request, region: str, day: str, time: str, version: int | None) -> tuple[Fields, DayRecord]:
+    """The map nearest to a UTC instant, and the day it is of."""
+    archive: Archive = request.app.state.archive
+    moment = asking.instant(time, "time")
+    record = archive.day(region, asking.day(day), version)
+    epoch = _nearest(record, moment)
+    after = epoch + np.timedelta64(1, "ns")
+    return archive.fields(region, record.head.day, epoch, after, record.head.version), record
 
 
 @router.get("/api/coast", summary="Coast lines within a box")

@@ -1,0 +1,106 @@
+"""The command `maps`: every open format from an archive and from a folder of results; what cannot be written."""
+
+import csv
+import io
+import json
+from pathlib import Path
+
+import numpy as np
+import pytest
+import xarray as xr
+from tests.builders import STORM_DAY, write_archive
+
+from skylag import cli, formats
+from skylag.archive import open_archive
+from skylag.formats import netcdf
+from skylag.tables import Biases, Fields
+
+
+@pytest.fixture(scope="module")
+def archive(tmp_path_factory: pytest.TempPathFactory) -> str:
+    return str(write_archive(tmp_path_factory.mktemp("kept")))
+
+
+def test_ionex_with_rms_maps_and_biases(archive: str, tmp_path: Path) -> None:
+    out = tmp_path / "storm.31i"
+    assert cli.main(["maps", "--archive", archive, "--format", "ionex", "--every", "60", "--out", str(out)]) == 0
+    reading = formats.read(out)
+    assert reading.problems == () and isinstance(reading.table, Fields)
+    with open_archive(archive) as kept:
+        name = kept.regions()[0]
+        ours, known = kept.fields(name, str(STORM_DAY)), kept.biases(name, str(STORM_DAY))
+    np.testing.assert_allclose(reading.table.vtec, ours.vtec[::4], atol=0.0501)
+    np.testing.assert_allclose(reading.table.vtec_sigma, ours.vtec_sigma[::4], atol=0.0501)
+    found = reading.header["biases"]
+    assert isinstance(found, Biases) and set(found.kind) == {"satellite", "receiver"}
+    for pair in {(s, a, b) for s, a, b in zip(found.system, found.code1, found.code2, strict=True)}:
+        def rows(table: Biases, pair: tuple[str, str, str] = pair) -> np.ndarray:
+            return (table.system == pair[0]) & (table.code1 == pair[1]) & (table.code2 == pair[2])
+
+        here = found.value_ns[rows(found) & (found.kind == "satellite")]
+        if len(here):
+            assert abs(here.sum()) < 0.001 * len(here)  # zero mean, to the last digit written
+        # What a receiver and a satellite do together is what it was.
+        for who in found.name[rows(found) & (found.kind == "receiver")]:
+            for sat in found.name[rows(found) & (found.kind == "satellite")][:3]:
+                sums = [
+                    table.value_ns[rows(table) & np.char.startswith(table.name, str(who))][0]
+                    + table.value_ns[rows(table) & (table.name == sat)][0]
+                    for table in (found, known)
+                ]
+                assert sums[0] == pytest.approx(sums[1], abs=0.002)
+
+
+def test_lines_tables_and_grid_points(archive: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    asked = ["maps", "--archive", archive, "--day", str(STORM_DAY)]
+    assert cli.main([*asked, "--format", "geojson", "--at", "05:00", "--step", "0.2"]) == 0
+    told = json.loads(capsys.readouterr().out)
+    assert told["features"] and told["time_utc"] == "2031-05-11T04:59:42Z"
+    assert cli.main([*asked, "--at", "05:00"]) == 0
+    rows = list(csv.DictReader(io.StringIO(capsys.readouterr().out)))
+    with open_archive(archive) as kept:
+        ours = kept.fields(kept.regions()[0], str(STORM_DAY))
+    assert len(rows) == ours.vtec[0].size and {row["time_utc"] for row in rows} == {"2031-05-11T04:59:42Z"}
+    unseen = [row for row in rows if row["support"] == "0"]
+    assert unseen and all(row["state"] != "holds" for row in unseen)
+    assert cli.main([*asked, "--format", "gridpoints", "--every", "240"]) == 0
+    points = list(csv.DictReader(io.StringIO(capsys.readouterr().out)))
+    assert {(row["lat_deg"], row["lon_deg"]) for row in points} >= {("-40", "145")}
+    known = [row for row in points if row["chi_square"]]
+    assert known and all(float(row["chi_square_limit"]) > 0 for row in known)
+
+
+def test_netcdf_and_a_folder_of_results(archive: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    out = tmp_path / "day.nc"
+    assert cli.main(["maps", "--archive", archive, "--format", "netcdf", "--every", "60", "--out", str(out)]) == 0
+    with xr.open_dataset(out, engine="h5netcdf") as held:
+        assert len(held["time"]) == 24 and held.attrs["Conventions"].startswith("CF")
+    with open_archive(archive) as kept:
+        name = kept.regions()[0]
+        netcdf.write(kept.fields(name, str(STORM_DAY)), kept.day(name, str(STORM_DAY)).region, tmp_path / "field.nc")
+    folder = ["maps", "--results", str(tmp_path)]
+    assert cli.main([*folder, "--format", "ionex", "--every", "120"]) == 0
+    assert "START OF RMS MAP" in capsys.readouterr().out
+    assert cli.main([*folder, "--format", "gridpoints"]) == 3
+    assert "lines of sight" in capsys.readouterr().err
+
+
+@pytest.mark.parametrize(
+    ("words", "said"),
+    [
+        (["--format", "netcdf"], "--out FILE"),
+        (["--format", "geojson"], "--at HH:MM"),
+        (["--at", "25:00"], "a time of day is written like"),
+        (["--at", "noon"], "a time of day is written like"),
+        (["--every", "0"], "minutes above 0"),
+        (["--every", "nan"], "minutes above 0"),
+        (["--format", "geojson", "--at", "05:00", "--step", "0"], "more than 0"),
+        (["--day", "2001-01-01"], "is not kept here"),
+        (["--results", "/nowhere"], "holds no field.nc"),
+    ],
+)
+def test_what_cannot_be_written_is_said(
+    archive: str, words: list[str], said: str, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert cli.main(["maps", "--archive", archive, *words]) == 3
+    assert said in capsys.readouterr().err
