@@ -109,7 +109,7 @@ const present = later((view) => view.ask === "now", async () => {
 });
 const network = later((view) => view.ask === "network", async () => {
   const { NetworkPanel } = await import("./panels/network.js");
-  return new NetworkPanel({ said: at("network-said"), table: at("network-table"), csv: at("network-csv") }, state);
+  return new NetworkPanel({ said: at("network-said"), table: at("network-table"), csv: at("network-csv"), days: at("network-days") }, state);
 });
 const ahead = later((view) => view.ask === "ahead", async () => {
   const { AheadPanel } = await import("./panels/ahead.js");

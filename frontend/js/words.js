@@ -226,6 +226,7 @@ export const HEADS = {
   curves: ["Line", "First", "Last", "Change", "Elevation"],
   flags: ["Time", "Kind", "Corrections", "Slope", "Moves", "Place", "Evidence"],
   network: ["Receiver", "Data received", "Gaps", "Slips", "Arcs", "Level, one sigma", "Left out, off by", "Biases", "Said of it"],
+  networkDays: ["Receiver", "Day", "Data received", "Gaps", "Slips", "Left out, off by", "Biases"],
   year: ["Day", "Worst state", "Broken", "Strained", "Unseen", "Slope", "Highest Kp", "ap", "Flags"],
   series: ["Time", "Slope"],
 };
@@ -260,6 +261,7 @@ export const PAGE_WORDS = {
   aboutTheseData: "About these data",
   ageOfTheData: "Age of the data",
   receiversAsATable: "Receivers as a table",
+  allTheseDays: "All these days as a table",
   map: "Map",
   mapOfTheOther: "Map of the other day",
   legend: "Legend",
@@ -295,18 +297,6 @@ export const PAGE_WORDS = {
   alerts: "Alerts",
   theDayAhead: "The day ahead",
   theReceivers: "The receivers",
-  noPlotly: "plotly.js did not load from this server",
-  /** @param {number} count @param {string} from @param {string} to */
-  curvesCaption: (count, from, to) => `${countText(count, "line")} of sight, ${from} – ${to}`,
-  /** @param {string} speed @param {string} wind */
-  movesTo: (speed, wind) => `${speed} m/s to the ${wind}`,
-  /** @param {string} ago */
-  written: (ago) => `Results written ${ago}.`,
-  /** @param {string} place @param {string} delay @param {string} time */
-  seriesAbout: (place, delay, time) => `Vertical delay at ${place} over the day; ${delay} at ${time}.`,
-  /** @param {string} region */
-  mapOf: (region) => `Map of ${region}.`,
-  files: { sheet: "sheet", pdf: "sheet, PDF", calendar: "calendar" },
   takeAway: "Take away:",
   receiversCsv: "receivers, CSV",
   print: "print",

@@ -324,10 +324,21 @@ def test_a_failure_is_shown_in_the_services_words_and_can_be_tried_again(visit: 
     assert words in v.text(".trouble")
     v.complaints.clear()  # Chromium itself notes a reply of 503 in the console
     v.page.unroute("**/api/days/*/2031-05-11")
+    # The map of another hour is on its way, then fails: said over the chart, with the way out.
+    held: list[Any] = []
+    v.page.route("**/fields?*", lambda route: held.append(route))
     v.page.click(".trouble button")
+    v.page.wait_for_function("() => document.getElementById('map-note').textContent === 'Fetching this hour …'")
+    for route in held:
+        route.fulfill(status=503, json=content)
+    v.page.wait_for_selector("#map-note button")
+    assert words in v.text("#map-note") and v.page.get_attribute("#map", "data-drawn") == "base"
+    v.complaints.clear()
+    v.page.unroute("**/fields?*")
+    v.page.click("#map-note button")
     v.page.wait_for_selector("#map[data-drawn=fields]")
     v.settled()
-    assert v.text(".lead").startswith("Corrections")
+    assert v.text(".lead").startswith("Corrections") and v.text("#map-note") == ""
 
 
 def test_speed(visit: Open, record_property: Callable[[str, object], None]) -> None:

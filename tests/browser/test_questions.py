@@ -130,6 +130,8 @@ def test_the_network_and_ahead(visit: Open) -> None:
         v.page.click("#network-csv")
     rows = list(csv.DictReader(io.StringIO(Path(download.value.path()).read_text())))
     assert len(rows) == 10 and all(row["day"] == "2031-05-11" and "+-" in row["biases_ns"] for row in rows)
+    v.page.click("#network-all summary")
+    assert v.page.locator("#network-days tbody tr").count() == 20  # ten receivers on two days
     v.page.click("#asks a[data-ask=ahead]")
     v.page.wait_for_function("() => document.querySelector('#ahead-body :is(.chances, .trouble)')")
     v.page.click("#asks a[data-ask=past]")

@@ -105,20 +105,27 @@ export class ChartPanel {
   #fillTable() {
     const details = this.#table.closest("details");
     if (!details.open || !this.#scene) return;
-    const { difference, fields, index, layer, unseenSigma } = this.#contents();
-    if (!fields || index < 0) return;
+    const contents = this.#contents();
+    if (!contents.fields || contents.index < 0) return;
+    const { other } = this.#scene;
+    const tables = [this.#tableOf(contents, contents.difference ? `, ${WORDS.lessThat} ${other.label}` : "")];
+    if (!this.#other.box.hidden && other?.fields) tables.push(this.#tableOf(this.#otherContents(contents), `, ${other.label}`));
+    this.#table.replaceChildren(...tables);
+  }
+
+  /** One map as a table. @param {string} more  what the caption says besides */
+  #tableOf({ fields, index, layer, unseenSigma }, more) {
     const { lats, lons, layers } = fields;
     const rows = Array.from(lats, (_, r) => r).reverse();
     const decimals = { delay: 2, uncertainty: 2, slope: 1 }[layer];
     const text = (at) => (told(fields, at, layer, unseenSigma) ? `${fixed(layers[layer][at], decimals)}${layers.state[at] ? "" : "*"}` : STATE_WORDS[STATES[layers.state[at]]].name);
     const { title, unit } = LAYER_WORDS[layer];
-    const what = `${title}${unit ? `, ${unit}` : ""}${difference ? `, ${WORDS.lessThat} ${this.#scene.other.label}` : ""}`;
     const body = make("tbody");
     for (const r of rows) {
       body.append(make("tr", {}, make("th", { scope: "row", text: latText(lats[r]) }), ...Array.from(lons, (_, c) => make("td", { class: "number", text: text((index * lats.length + r) * lons.length + c) }))));
     }
-    this.#table.replaceChildren(make("table", {}, make("caption", { text: WORDS.mapCaption(what, timeText(this.#scene.time)) }),
-      make("thead", {}, make("tr", {}, make("td"), ...Array.from(lons, (lon) => make("th", { scope: "col", class: "number", text: lonText(lon) })))), body));
+    return make("table", {}, make("caption", { text: WORDS.mapCaption(`${title}${unit ? `, ${unit}` : ""}${more}`, timeText(this.#scene.time)) }),
+      make("thead", {}, make("tr", {}, make("td"), ...Array.from(lons, (lon) => make("th", { scope: "col", class: "number", text: lonText(lon) })))), body);
   }
 
   /** A picture of the chart as it stands, with title, colour bar and caution; of two side by side, one of each. @param {"png"|"svg"} format */

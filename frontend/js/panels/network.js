@@ -5,8 +5,8 @@
 import * as api from "../api.js";
 import { csvText, NETWORK_HEADS, save } from "../exporting.js";
 import { median } from "../figures/year.js";
-import { asSentence, dayText, fixed, HEADS, shareText, withSigma, WORDS } from "../words.js";
-import { draft, make, trouble } from "./parts.js";
+import { asSentence, dayText, fixed, HEADS, PAGE_WORDS, shareText, withSigma, WORDS } from "../words.js";
+import { draft, make, tableOf, trouble } from "./parts.js";
 
 /** A receiver disagrees where the others' field misses it by this many times the median miss. */
 const FAR = 2;
@@ -19,11 +19,12 @@ export class NetworkPanel {
   #shown = "";
   #asking = null;
 
-  /** @param {{said: HTMLElement, table: HTMLElement, csv: HTMLElement}} elements @param {import("../state.js").State} state */
+  /** @param {{said: HTMLElement, table: HTMLElement, csv: HTMLElement, days: HTMLElement}} elements @param {import("../state.js").State} state */
   constructor(elements, state) {
     this.#elements = elements;
     this.#state = state;
     elements.csv.addEventListener("click", this.#take);
+    elements.days.closest("details").addEventListener("toggle", () => this.#fillDays());
   }
 
   /** @param {import("../main.js").Scene} scene */
@@ -58,6 +59,16 @@ export class NetworkPanel {
       one.biases.map((bias) => `${bias.pair} ${bias.value.toFixed(3)} +- ${bias.sigma.toFixed(3)}`).join("; "), one.faults.join(" ")]);
     save(csvText(NETWORK_HEADS, rows), `skylag-receivers-${date}.csv`, "text/csv");
   };
+
+  /** The table behind the small bars and points: every receiver on every day they show. */
+  #fillDays() {
+    const { days } = this.#elements;
+    if (!days.closest("details").open || !this.#days) return;
+    const names = [...new Set(this.#days.flatMap((one) => one.receivers.map((receiver) => receiver.name)))].sort();
+    const rows = names.flatMap((name) => this.#days.map((one) => ({ day: one.day, found: one.receivers.find((receiver) => receiver.name === name) })).filter(({ found }) => found)
+      .map(({ day, found }) => [name, day, shareText(found.received), plain(found.gaps), plain(found.slips), Number.isFinite(found.leftOut) ? `${fixed(found.leftOut, 1)} TECU` : "–", found.biases.map((bias) => `${bias.pair} ${withSigma(bias.value, bias.sigma, "ns")}`).join("; ")]));
+    days.replaceChildren(tableOf({ label: PAGE_WORDS.allTheseDays, heads: HEADS.networkDays, rows, numbers: [2, 3, 4, 5] }));
+  }
 
   async #load(region, day) {
     this.#asking?.abort();
@@ -112,6 +123,7 @@ export class NetworkPanel {
       );
     }
     const heads = HEADS.network;
+    this.#fillDays();
     table.replaceChildren(
       make("table", {}, make("caption", { text: WORDS.networkCaption(days.length) }),
         make("thead", {}, make("tr", {}, ...heads.map((text, i) => make("th", { scope: "col", text, class: i > 0 && i < 7 ? "number" : undefined })))), body),
