@@ -208,6 +208,13 @@ def test_a_zip_of_hours_is_a_day_of_one_receiver(tmp_path: Path) -> None:
     assert glance(place).day == np.datetime64("2031-05-10")
 
 
+def test_problems_of_many_pieces_are_not_all_listed() -> None:
+    bad = [an_hour(k).replace(b".123 ", b"x123 ") for k in range(3)]
+    reading = formats.read_bytes(a_zip(a=bad[0], b=bad[1], c=bad[2]), "bad.zip")
+    assert len(reading.problems) == 401
+    assert "more problems in the files of the zip" in reading.problems[-1].what
+
+
 def test_a_zip_of_several_receivers_asks_to_be_unpacked() -> None:
     with pytest.raises(FormatError, match=r"LARK is not WREN.*unpack"):
         formats.read_bytes(a_zip(a=an_hour(0), b=an_hour(0, marker="LARK")), "several.zip")

@@ -31,6 +31,8 @@ PARSERS = {
 
 _FEW_LINES, _SHORTEST_MEAN = 2**16, 30  # texts of more lines than this have longer lines than that in the mean
 
+_MOST_LISTED = 400  # problems of all files in a zip
+
 _YEAR_FIRST = re.compile(rb"^(19|20)\d\d +\d{1,2} +\d{1,2} ")
 
 
@@ -124,6 +126,11 @@ def _read_members(
         problems.append(Problem(name, 0, f"the zip holds {other} beside {kind}", "left out; unpack it to use both"))
     for reading in chosen:
         problems += reading.problems
+    if len(problems) > _MOST_LISTED:
+        rest = len(problems) - _MOST_LISTED
+        problems[_MOST_LISTED:] = [
+            Problem(name, 0, f"{rest} more problems in the files of the zip", "as told of others")
+        ]
     header = {**chosen[0].header, "pieces": len(chosen)}
     if kind == "navigation":
         return Reading(together([r.table for r in chosen if isinstance(r.table, Ephemerides)]), tuple(problems), header)
