@@ -274,6 +274,20 @@ class Archive:
             versions = connection.scalar(sa.select(sa.func.count()).select_from(schema.product))
             return int(connection.scalar(sa.select(sa.func.count()).select_from(days)) or 0), int(versions or 0)
 
+    def version_of(self, region: str, day: Day, version: int | None = None) -> int:
+        """The version of a day that is shown, or the one named, if it is there; without reading anything of it."""
+        product, text = schema.product.c, _day_text(day)
+        with self._reading() as connection:
+            found = None
+            if _is_name(region) and (version is None or 1 <= version <= _MOST_VERSIONS):
+                query = sa.select(product.version).where(product.region == region, product.day == text)
+                if version is not None:
+                    query = query.where(product.version == version)
+                found = connection.scalar(query.order_by(product.pinned.desc(), product.version.desc()).limit(1))
+            if found is None:
+                raise self._missing(connection, region, text, version)
+        return int(found)
+
     def day(self, region: str, day: Day, version: int | None = None) -> DayRecord:
         """The plain facts of a day; the pinned or newest version when none is named.
 

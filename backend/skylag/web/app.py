@@ -7,7 +7,7 @@ import contextlib
 import gzip
 import re
 import socket
-from collections.abc import Awaitable, Callable
+from collections.abc import Callable, MutableMapping
 from concurrent.futures import Executor
 from functools import cache
 from importlib import metadata, resources
@@ -20,6 +20,7 @@ from fastapi import FastAPI, Request
 from fastapi.exceptions import RequestValidationError
 from fastapi.responses import Response
 from fastapi.staticfiles import StaticFiles
+from starlette.datastructures import MutableHeaders
 from starlette.exceptions import HTTPException
 from starlette.middleware.gzip import GZipMiddleware
 
@@ -27,7 +28,8 @@ import skylag
 from skylag.archive import Archive
 from skylag.errors import FormatError, Missing, NotEnough, Refused, SkylagError, Unsolvable
 from skylag.web import advice, beside, maps, network, outlook, payloads, sites, slant_files, ways, work
-from skylag.web.access import Access, Gate, Traffic
+from skylag.web.access import Access, Gate, Receive, Scope, Send, Traffic
+from skylag.web.frames import Answers
 
 Clock = Callable[[], np.datetime64]
 
@@ -67,6 +69,26 @@ def frontend_folder() -> Path:
     return Path(skylag.__file__).parents[2] / "frontend"
 
 
+class ProtectiveHeaders:
+    """ASGI middleware: what every answer tells browsers, unless the route has told otherwise."""
+
+    def __init__(self, app: Any) -> None:
+        self._app = app
+
+    async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
+        """Pass on; headers are added to the start of the answer."""
+
+        async def told(message: MutableMapping[str, Any]) -> None:
+            if message["type"] == "http.response.start":
+                headers = MutableHeaders(scope=message)
+                for name, value in HEADERS.items():
+                    headers.setdefault(name, value)
+                headers.setdefault("Cache-Control", "no-cache")  # may be kept, but asked for again each time
+            await send(message)
+
+        await self._app(scope, receive, told if scope["type"] == "http" else send)
+
+
 def create_app(
     archive: Archive,
     executor: Executor | None = None,
@@ -90,6 +112,7 @@ def create_app(
     app.state.limits = access.limits
     app.state.writing = access.writing
     app.state.feed = work.Feed(archive)
+    app.state.answers = Answers()
     for part in (network.router, maps.router, advice.router, ways.router, sites.router, work.router, outlook.router,
                  beside.router, slant_files.router):  # fmt: skip
         app.include_router(part)
@@ -97,15 +120,7 @@ def create_app(
     _add_errors(app)
     app.add_middleware(Gate, archive=archive, access=access, traffic=app.state.traffic)
     app.add_middleware(GZipMiddleware, minimum_size=1024, compresslevel=5)
-
-    @app.middleware("http")
-    async def protective_headers(request: Request, go_on: Callable[[Request], Awaitable[Response]]) -> Response:
-        answer = await go_on(request)
-        for name, value in HEADERS.items():
-            answer.headers.setdefault(name, value)
-        answer.headers.setdefault("Cache-Control", "no-cache")  # may be kept, but asked for again each time
-        return answer
-
+    app.add_middleware(ProtectiveHeaders)
     folder = frontend if frontend is not None else frontend_folder()
     if folder.is_dir():
         app.mount("/", StaticFiles(directory=folder, html=True), name="page")
