@@ -1,5 +1,6 @@
 """Real observation files: their counts against a scan by another program, their values against georinex."""
 
+import gzip
 import re
 import warnings
 from collections.abc import Callable
@@ -249,3 +250,42 @@ def compare(text: bytes, name: str, systems: str, epochs: int, tmp_path: Path) -
                 differing += int((lock != table.lock[code][np.ix_(rows, columns)])[np.isfinite(there)].sum())
     assert missed == 0
     return compared, differing
+
+
+@pytest.mark.parametrize(
+    "name",
+    ["2021-001/obs/zimm0010.21o.gz", "2024-090/obs/KIRU00SWE_R_20240900000_01D_30S_MO.rnx.gz",
+     "2004-001/obs/chpi0010.04o.gz"],
+)  # fmt: skip
+def test_header_facts_equal_georinex(name: str, open_data: Path, tmp_path: Path, evidence: Callable[..., None]) -> None:
+    """Version, marker, position, receiver, interval, first epoch, types of observation, GLONASS channels."""
+    import georinex
+
+    text = gzip.decompress((open_data / name).read_bytes())
+    text = text[: text.index(b"END OF HEADER") + 40_000]
+    place = tmp_path / "head.rnx"
+    place.write_bytes(text)
+    theirs = georinex.rinexheader(place)
+    reading = rinex_obs.parse(text, name)
+    table = reading.table
+    assert isinstance(table, Signals)
+    header = rinex_obs.Header()
+    lines = list(enumerate(text.decode("latin-1").splitlines()))
+    end = next(k for k, line in lines if "END OF HEADER" in line)
+    rinex_obs.rinex_header.absorb(header, lines[:end], name)
+    types = theirs["fields"]
+    words = theirs.get("GLONASS SLOT / FRQ #", "")
+    channels = {slot: int(k) for slot, k in re.findall(r"(R\d\d) +(-?\d+)", words)}
+    same = {
+        "version": reading.header["version"] == theirs["version"],
+        "marker": table.receiver.name == theirs["MARKER NAME"].strip(),
+        "position": list(table.receiver.position_m) == theirs["position"],
+        "receiver": table.receiver.type == theirs.get("rxmodel", table.receiver.type),
+        "interval": reading.header["stated_interval_s"] == theirs["interval"],
+        "first epoch": table.times[0] == np.datetime64(theirs["t0"], "ns"),
+        "types": header.types == (types if isinstance(types, dict) else {"": types}),
+        "channels": dict(table.channels) == channels,
+    }
+    evidence(f"header facts that differ, of {len(same)} of {Path(name).name}",
+             source=f"georinex {georinex.__version__} on the same file", expected=0,
+             got=len(same) - sum(same.values()), tolerance=0)  # fmt: skip
