@@ -192,6 +192,7 @@ def judged(seed: int, family: int, region: Region, live: bool = True) -> dict[st
         "slope": slope, "width": width, "speed": speed, "heading": heading, "lines": swept,
         "raised": float(bool(sure)), "fronts": len(found), "delay_s": float("nan"),
         "others": sum(flag.confirmed and flag.kind == "irregular" for flag in made.flags),
+        "checked": made.facts["arrivals"]["checked"], "came_true": made.facts["arrivals"]["came_true"],
     }  # fmt: skip
     if live and slope >= 60 and swept >= 4 and second_s >= STARTED_S:
         start = world.times[0]
@@ -246,6 +247,8 @@ def reckoned(rows: Sequence[dict[str, float]]) -> dict[str, float]:
     asked = [row["early"] for row in rows if "early" in row]
     return figures | {
         "raised before touched": sum(asked), "patches where none were": sum(row["others"] for row in rows),
+        "forecasts checked": sum(row["checked"] for row in rows),
+        "came true": sum(row["came_true"] for row in rows),
     }  # fmt: skip
 
 
