@@ -124,6 +124,17 @@ def test_other_systems_are_counted_and_passed_over() -> None:
     assert len(reading.table.toe) == 1  # type: ignore[union-attr]
 
 
+def test_messages_of_unknown_layout_are_counted_and_passed_over() -> None:
+    """RINEX 4.02 has messages of GLONASS and QZSS that say where a satellite is in ways not read here."""
+    text = header(4.02) + record("R01", "2020-06-25 12:00:00", [0.0] * 20, heading="L1OC")
+    text += record("C20", "2020-06-25 12:00:00", orbit_values(INVENTED), heading="D9")
+    text += record("G05", "2020-06-25 12:00:00", gps(), heading="LNAV")
+    reading = rinex_nav.parse(text.encode(), "made.nav")
+    assert reading.problems == ()
+    assert list(reading.table.satellites) == ["G05"]  # type: ignore[union-attr]
+    assert reading.header["skipped_records"] == {"R L1OC": 1, "C D9": 1}
+
+
 def test_header_facts() -> None:
     extra = (
         ("GPSA   4.6566e-09  1.4901e-08 -5.9605e-08 -1.1921E-07", "IONOSPHERIC CORR"),

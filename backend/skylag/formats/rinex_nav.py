@@ -22,7 +22,9 @@ _WIDTH = 80
 _WEEK_S, _DAY_S = 604_800.0, 86_400.0
 _LARGEST = 1e12  # no number of a record comes near, and squares stay finite
 _KEPLERIAN = "GECJ"
-_SKIPPED = "SI"
+# Messages of RINEX 4 that carry an orbit in a known layout; before, records do not name theirs.
+_MESSAGES = {"G": ("LNAV", "CNAV", "CNV2"), "J": ("LNAV", "CNAV", "CNV2"), "E": ("INAV", "FNAV"),
+             "C": ("D1", "D2", "CNV1", "CNV2", "CNV3"), "R": ("FDMA",)}  # fmt: skip
 # RINEX 2 has one system per file, told by the letter of the file type.
 _TYPE_OF_VERSION_2 = {"N": "G", "G": "R", "E": "E", "L": "E", "H": "S", "J": "J", "C": "C", "Q": "J"}
 _GEOSTATIONARY_BEIDOU = {f"C{n:02d}" for n in (1, 2, 3, 4, 5, 59, 60, 61, 62, 63)}
@@ -79,8 +81,8 @@ def parse(data: bytes, name: str) -> Reading:
     kinds = sorted({(system, message) for _, _, system, message in messages})
     for system, message in kinds:
         chosen = [k for k, entry in enumerate(messages) if entry[2:] == (system, message)]
-        if system not in _KEPLERIAN + "R":
-            skipped[system] = len(chosen)
+        if not _is_read(system, message):
+            skipped[f"{system} {message}" if system in _KEPLERIAN + "R" else system] = len(chosen)
             continue
         first = np.array([starts[k] for k in chosen])
         satellites = np.array([messages[k][1] for k in chosen])
@@ -94,6 +96,10 @@ def parse(data: bytes, name: str) -> Reading:
     header = {"version": version, "leap_seconds": leap_seconds, "skipped_records": skipped}
     problems.sort(key=lambda problem: problem.line)
     return Reading(table, problems.all(), header)
+
+
+def _is_read(system: str, message: str) -> bool:
+    return system in _MESSAGES and (not message or message in _MESSAGES[system])
 
 
 def _header(lines: list[bytes], name: str) -> tuple[float, str, int, dict[str, tuple[float, ...]], int | None]:
@@ -199,7 +205,7 @@ def _records(
     for (number, satellite, system, message), after in zip(found, ends.tolist(), strict=True):
         needed = _LINES["FDMA"] if system == "R" else _LINES.get(message, _LINES_OTHERWISE)
         length = borders[min(after, len(borders) - 1)] - number
-        if system in _SKIPPED:
+        if not _is_read(system, message):
             needed = 0
         if length < needed:
             short += 1
