@@ -17,7 +17,7 @@ from tests.simulated.day_results import CALM, RECOVERY, STORM, day, truth_of
 
 from invented import network, weather
 from skylag import chain
-from skylag.ionosphere import adjustment, field, geometry, left_out
+from skylag.ionosphere import adjustment, displacement, field, geometry, left_out
 from skylag.tables import HOLDS, Fields, concatenate
 
 WITHIN_95 = 1.959964
@@ -139,6 +139,28 @@ def test_sigmas_of_slopes_are_wide_at_a_wall_and_narrow_elsewhere() -> None:
     far = storm["seen"] & (storm["wall"] > 150.0)
     assert np.mean(storm["state"][far] == HOLDS) > 0.5
     assert not np.any((storm["state"] == HOLDS) & (storm["true"] > 8.0))
+
+
+def test_the_sigma_of_a_ray_beside_the_wall_has_what_the_height_of_the_shell_does() -> None:
+    products, known = day(STORM).products, truth_of(STORM)
+    samples, rays, maps = products.samples, products.samples.rays, products.fields
+    rows, true, wall = [], [], []
+    for time in maps.times[70:99:2]:
+        here = np.flatnonzero((rays.time == time) & (rays.elevation >= 20.0))
+        lat, lon = rays.pierce_lat[here], rays.pierce_lon[here]
+        rows.append(here)
+        true.append(known.vertical_content(lat, lon, time))
+        ahead = known.front.ahead_km(*weather.plane_of(lat, lon), float(weather.hours_since(time)))
+        wall.append(np.abs(ahead) if known.front.at(time) is not None else np.full(len(here), np.inf))
+    row = np.concatenate(rows)
+    misplaced = displacement.of_rays(samples, maps, 50e3)[row]
+    beside = (np.concatenate(wall) < 100.0) & (misplaced > 0.0)
+    assert beside.sum() > 60
+    off, sigma = (samples.vtec[row] - np.concatenate(true))[beside], samples.sigma[row][beside]
+    without = np.sqrt(np.maximum(sigma**2 - misplaced[beside] ** 2, 0.0))
+    held, held_without = (float(np.mean(np.abs(off) <= WITHIN_95 * one)) for one in (sigma, without))
+    assert held >= 0.85 and held_without <= 0.7
+    assert np.std(np.clip(off / sigma, -9.0, 9.0)) > 0.5
 
 
 @pytest.mark.slow
