@@ -37,9 +37,10 @@ _LEAST_DELAY_M, _LEAST_SLOPE = 0.05, 0.02
 _CLIMATE_SPREAD = 0.5
 # Slopes before any were seen: about 1 mm/km, and 4 mm/km the bound of nominal ones (Mayer et al. 2009, ION GNSS).
 _SLOPE_START, _SLOPE_SPREAD = 1.0, 0.6
-_DAY_SPREAD = 0.2  # day-to-day scatter of content, ionospheric meteorology: 15 to 35 % (Forbes et al. 2000, JASTP 62)
+_DAY_SPREAD = 0.25  # day-to-day scatter of content: the middle of 15 to 35 % (Forbes et al. 2000, JASTP 62)
 _CALM_WEIGHT = 0.3  # of hours in and after a storm, where usual days are sought
 _FEW_DAYS = 3.0
+_LOCAL = 0.5  # places of a region stray from its mean by half of what the region strays from climatology (from memory)
 
 
 @dataclass(frozen=True)
@@ -155,7 +156,7 @@ class _Series:
     whole: Floats  # (D, 1, 1) mean of `last` over hours and places
     late: Floats  # (D, 1, 1) the same of its last six hours
     turn: Floats  # (D, 24, P) departure from the usual of its time, over three hours; 0 where unseen
-    count: Floats  # (D, 24, P) days (weighted) behind `month`
+    unknown: Floats  # (D, 24, P) share of what is not known without any day that is not known yet
 
 
 _KNOWN = 8  # columns of _Series known beforehand
@@ -163,15 +164,22 @@ _PRIOR = np.array([0.0, 1.0, 0.3, 0.1, 0.2, 0.1, 0.15, 0.0])
 _PRIOR_SIGMA = np.array([0.1, 0.15, 0.2, 0.2, 0.3, 0.3, 0.2, 0.2])
 
 
-def _series(value: Floats, spread: Floats, calm: Bools, scatter: float) -> _Series:
-    """From the logarithm, its measurement sigma, and which hours (D, 24) were calm."""
+def _series(value: Floats, spread: Floats, calm: Bools, scatter: float, alone: float) -> _Series:
+    """From the logarithm, its measurement sigma, and which hours (D, 24) were calm.
+
+    scatter, alone  from day to day, and of what is expected without any day: their squares weigh the first days
+    """
     seen = np.isfinite(value)
     weight = np.where(seen, 1.0 / (1.0 + np.nan_to_num(spread, nan=1.0) ** 2 / scatter**2), 0.0)
     usual = weight * np.where(calm, 1.0, _CALM_WEIGHT)[:, :, None]
     filled = np.where(seen, value, 0.0)
     total, count = _trailing(usual * filled, ROTATION), _trailing(usual, ROTATION)
     everywhere = total.sum(axis=2, keepdims=True) / (count.sum(axis=2, keepdims=True) + 1e-9)
-    everywhere *= count.mean(axis=2, keepdims=True) / (count.mean(axis=2, keepdims=True) + 0.5)
+    days = _trailing(usual.max(axis=2, keepdims=True), ROTATION)  # on which the hour was seen anywhere
+    first = (scatter / alone) ** 2
+    everywhere *= days / (days + first)
+    few = _FEW_DAYS / (_FEW_DAYS + count)  # of the place itself, beside all places
+    unknown = np.sqrt(first / (days + first) + (_LOCAL * few) ** 2)
     month = (total + _FEW_DAYS * everywhere) / (count + _FEW_DAYS)
     last = np.where(seen, value - month, 0.0)
     recent = np.zeros_like(value)
@@ -186,7 +194,7 @@ def _series(value: Floats, spread: Floats, calm: Bools, scatter: float) -> _Seri
     late = last[:, 18:].sum(axis=(1, 2), keepdims=True) / np.maximum(rows, 1)
     wide = np.pad(last, ((0, 0), (1, 1), (0, 0)), mode="wrap")
     turn = (wide[:, :-2] + wide[:, 1:-1] + wide[:, 2:]) / 3.0
-    return _Series(value, weight, month, recent, last, whole, late, turn, count)
+    return _Series(value, weight, month, recent, last, whole, late, turn, unknown)
 
 
 def _trailing(values: Floats, days: int) -> Floats:
@@ -261,8 +269,7 @@ class _Quantity:
         first = known @ self.weights.now()
         middle = first + self.shifts.now(told)[:, None]
         sigma = self.spread.sigma(told, known.shape[1])
-        few = _FEW_DAYS / (_FEW_DAYS + series.count[last])
-        return _Told(known, first, middle, sigma, self.alone * few)
+        return _Told(known, first, middle, sigma, self.alone * series.unknown[last])
 
     def learn(self, what: _Told, series: _Series, day: int, told: npt.NDArray[Any], seen: npt.NDArray[Any]) -> None:
         value, weight = series.value[day], series.weight[day]
@@ -365,8 +372,8 @@ class _World:
             delay = np.log(np.maximum(history.delay, _LEAST_DELAY_M)) - np.log(self.climate[:count])
             rough = history.sigma / np.maximum(history.delay, _LEAST_DELAY_M)
             slope = np.log(np.maximum(history.slope, _LEAST_SLOPE)) - self.slope_base
-        self.delay = _series(delay, rough, calm, _DAY_SPREAD)
-        self.slope = _series(slope, np.zeros_like(slope), calm, 0.4)
+        self.delay = _series(delay, rough, calm, _DAY_SPREAD, _CLIMATE_SPREAD)
+        self.slope = _series(slope, np.zeros_like(slope), calm, 0.4, _SLOPE_SPREAD)
         seen = history.states != UNSEEN
         self.bad = [
             [_how_often(history.states[use] >= least, seen[use]) for least in (STRAINED, BROKEN)]
