@@ -564,6 +564,16 @@ export const removeSite = async (region, name, after) => sitesOf(await ask(`${si
 /** Take in a list. @param {string} region @param {Blob} body @param {number} after */
 export const takeInSites = async (region, body, after) => sitesOf(await ask(`${sitesAddress(region)}/list?${query({ after })}`, { method: "POST", body }));
 
+/** A published map beside a day. @param {string} region @param {string} date @param {File} file @param {How} [how] */
+export async function beside(region, date, file, how) {
+  const raw = await ask(`${dayAddress(region, date)}/beside?name=${encodeURIComponent(file.name)}`, { ...how, method: "POST", body: file });
+  const { mean_tecu: mean, rms_tecu: rms, cells } = raw.hours;
+  return {
+    said: /** @type {string[]} */ (raw.said), starts: raw.hours.start_utc.map(milliseconds), hours: { mean: numbers(mean), rms: numbers(rms), cells },
+    lats: numbers(raw.lats), lons: numbers(raw.lons), difference: /** @type {Float32Array} */ (unpack(raw.difference_m)),
+  };
+}
+
 /** Ways of working a day can be judged for. @param {string} region @param {string} date @param {How} [how] @returns {Promise<{name: string}[]>} */
 export async function uses(region, date, how) {
   return (await ask(`${dayAddress(region, date)}/uses`, how)).uses;

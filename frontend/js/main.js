@@ -127,7 +127,11 @@ const sites = later(() => at("sites").open, async () => {
   const { SitesPanel } = await import("./panels/sites.js");
   return new SitesPanel(at("sites"), at("sites-body"), () => loadDay());
 });
-for (const [fold, panel] of Object.entries({ work, curves, sites })) at(fold).addEventListener("toggle", () => scene && panel.show(scene));
+const compared = later(() => at("beside").open, async () => {
+  const { ComparedPanel } = await import("./panels/compared.js");
+  return new ComparedPanel(at("beside-body"));
+});
+for (const [fold, panel] of Object.entries({ work, curves, sites, beside: compared })) at(fold).addEventListener("toggle", () => scene && panel.show(scene));
 const player = new PlayerPanel({ button: at("play"), rate: at("rate") }, state, () => Boolean(scene?.fields) && scene.index >= 0);
 const masthead = new MastheadPanel(
   {
@@ -211,7 +215,7 @@ function showAll() {
   at("main").dataset.ask = scene.view.ask;
   live.want("now", scene.view.ask === "now");
   if (files) showFiles();
-  for (const panel of [masthead, year, present, network, chart, legend, clock, reading, series, flags, ahead, work, curves, sites, player]) panel.show(scene);
+  for (const panel of [masthead, year, present, network, chart, legend, clock, reading, series, flags, ahead, work, curves, sites, compared, player]) panel.show(scene);
 }
 
 /**

@@ -338,6 +338,7 @@ export const PAGE_WORDS = {
   forYourWorkHere: "For your work here",
   sitesOfTheRegion: "Sites of the region",
   curvesOfTheLines: "Curves of the lines of sight near here",
+  publishedMapBeside: "A published map beside this day",
   planningAidNotFor: "Planning aid, not for navigation: official notices, the service provider, the receiver maker and local rules decide.",
   thisPlaceThroughThe: "This place through the day",
   flagsOfTheDay: "Flags of the day",
