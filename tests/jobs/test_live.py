@@ -333,9 +333,11 @@ def test_a_file_that_is_none_is_left_out_and_the_rest_goes_on(
     assert log == [("file left out", {"file": "letter.rnx", "why": "is unknown"})]
 
 
-# How far maps made step by step may be from the same made whole: content and its sigma [TECU], slopes [mm/km], and the
-# share of cells whose state differs.  An hour is kept while its rays moved by less than 0.1 TECU.
-NEAR = {"vtec": 0.25, "vtec_sigma": 0.25, "slope": 0.6, "slope_sigma": 0.6}
+# How far maps made step by step may be from the same made whole, in any cell: content [TECU], slope [mm/km], and the
+# factor between sigmas (the spread of a residual is sought in steps of 1.41, so a small change may turn one step); and
+# the share of cells whose state differs.  An hour is kept while its rays moved by less than 0.1 TECU.
+NEAR = {"vtec": 0.25, "slope": 0.6}
+NEAR_SIGMAS = 1.5
 NEAR_STATES = 0.005
 
 
@@ -349,9 +351,13 @@ def almost_whole(steps: Fields, incoming: Path, executor: Executor, **named: Any
     np.testing.assert_array_equal(steps.times, whole.times)
     np.testing.assert_array_equal(steps.support, whole.support)
     off = {name: float(np.nanmax(np.abs(getattr(steps, name) - getattr(whole, name)))) for name in NEAR}
-    assert all(off[name] <= NEAR[name] for name in NEAR), off
+    for name in ("vtec_sigma", "slope_sigma"):
+        ratio = np.abs(np.log(getattr(steps, name) / getattr(whole, name)))
+        off[name] = float(np.exp(np.nanmax(ratio)))
     off["states"] = float(np.mean((steps.state != whole.state) & (steps.state != UNSEEN)))
-    assert off["states"] <= NEAR_STATES, off
+    print(off)
+    assert all(off[name] <= NEAR[name] for name in NEAR), off
+    assert off["vtec_sigma"] <= NEAR_SIGMAS and off["slope_sigma"] <= NEAR_SIGMAS and off["states"] <= NEAR_STATES, off
     return off
 
 
@@ -381,7 +387,7 @@ def test_sixteen_receivers_within_twenty_seconds(
         watch = Watch(archive, incoming, executor, clock, region=region, simulated=True,
                       patience=Patience(calm_s=0.0), log=lambda event, **facts: log.append((event, facts)))  # fmt: skip
         first, taken = 0, []
-        for hour in (6, 7, 12, 13, 18, 22, 23, 24):
+        for hour in (7, 22, 23, 24):
             for number in range(first, hour):
                 for piece in pieces:
                     piece.write(incoming, number, number + 1)
@@ -396,7 +402,10 @@ def test_sixteen_receivers_within_twenty_seconds(
         assert head.receiver_count == len(pieces) and head.provisional
         steps = archive.fields(head.region, day)
         assert (steps.state == HOLDS).any()
-        off = almost_whole(steps, incoming, executor, region=region, choices=Choices())
+        for hour, wall_s, busy_s in taken:
+            print(f"{day} hour {hour}: {wall_s:.1f} s of time, {busy_s:.1f} s of one processor")
+        print([(facts["hours_given"], facts["hours_made"]) for event, facts in log if event == "day made"])
+        almost_whole(steps, incoming, executor, region=region, choices=Choices())
         clock = Clock("02:05:00", day + 1)
         watch._clock = clock
         assert turn_until_made(watch, 3) == 1
@@ -406,10 +415,6 @@ def test_sixteen_receivers_within_twenty_seconds(
         whole = work.network_day([incoming], executor=executor, simulated=True, region=region).products
         for name in ("vtec", "slope", "slope_sigma", "support"):
             np.testing.assert_array_equal(getattr(final, name), getattr(whole.fields, name))
-    for hour, wall_s, busy_s in taken:
-        print(f"{day} {len(pieces)} receivers, hour {hour}: {wall_s:.1f} s of time, {busy_s:.1f} s of one processor")
-    made = [facts for event, facts in log if event == "day made"]
-    print([(one["hours_given"], one["hours_made"]) for one in made], off)
     evidence(
         f"live: an hour of all 16 receivers at the end of {day}, to kept maps (processor time)",
         source="own requirement: 20 s for a 16-receiver network", expected=20.0, got=round(taken[-1][2], 1),
