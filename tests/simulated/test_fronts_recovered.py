@@ -4,7 +4,10 @@ The benchmark itself, with all figures: `python -m tests.benchmarks.fronts`.
 """
 
 import pytest
+from tests.benchmarks import fronts_whole_way
 from tests.benchmarks.fronts import RECKONED, TARGETS, TESTED, calm_day, false_events, judged, marks, missed
+
+from skylag import settings
 
 
 def test_six_walls_of_the_threat_space():
@@ -37,3 +40,13 @@ def test_two_hundred_walls_of_the_threat_space():
 @pytest.mark.slow
 def test_ten_calm_network_days_raise_at_most_one_event():
     assert sum(false_events(calm_day(seed, family=TESTED)) for seed in range(10)) <= 1
+
+
+@pytest.mark.slow
+def test_a_wall_and_calm_hours_the_whole_way_from_signals():
+    region = settings.read_region(fronts_whole_way.REGION)
+    row = fronts_whole_way.judged(0, 1, region, live=False)
+    assert row["raised"] and row["fronts"] == 1 and row["others"] == 0
+    assert abs(row["slope_error"]) < 0.2 and abs(row["speed_error"]) < 0.15 and row["heading_error"] < 15.0
+    day = fronts_whole_way.calm_day(0, 1, region, (0.0, 6.0))
+    assert fronts_whole_way.false_events(day) == 0 and day["receivers blamed"] >= 1
