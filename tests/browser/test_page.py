@@ -207,7 +207,7 @@ def test_night_follows_the_system_and_the_button(visit: Open) -> None:
 @pytest.mark.parametrize("width", [360, 768, 2560])
 def test_nothing_is_cut_at_any_width(visit: Open, width: int, tmp_path: Path) -> None:
     """No scrolling sideways from 360 to 2560 pixels; strip and reading are there."""
-    v = visit(width=width, height=1100).go(f"{STORM}&time=05:30")
+    v = visit(width=width, height=1100, plotly=width == 360).go(f"{STORM}&time=05:30")
     assert v.page.evaluate("document.documentElement.scrollWidth") <= width
     for selector in ("#map", "#strip", ".lead", ".caution", "#flag-table"):
         box = v.page.locator(selector).first.bounding_box()

@@ -204,12 +204,16 @@ def axe() -> str:
 
 @pytest.mark.parametrize("dark", [False, True], ids=["day", "night"])
 def test_axe_finds_nothing(visit: Open, axe: str, dark: bool) -> None:
-    """All rules of WCAG 2.2 A and AA that axe-core knows, with every fold open, on every question and its states."""
+    """All rules of WCAG 2.2 A and AA that axe-core knows, with every fold open, on every question.
+
+    By night the colours alone are asked about: all else is the same page.
+    """
+    rules = ["color-contrast"] if dark else ["wcag2a", "wcag2aa", "wcag21a", "wcag21aa", "wcag22aa"]
     v = visit(dark=dark, bypass_csp=True, plotly=False)
     queries = {
-        f"{STORM}&time=05:30&versus=2031-05-10": "#map[data-drawn=fields]", f"{STORM}&time=05:30&layer=state": ".lead",
-        "?ask=now": "#present-alerts li", "?ask=ahead": "#ahead-body :is(.record, .trouble)",
-        "?ask=network": "#network-table tr", "?files=open": "#files-tasks li",
+        f"{STORM}&time=05:30&versus=2031-05-10": "#map[data-drawn=fields]", "?ask=now": "#present-alerts li",
+        "?ask=ahead": "#ahead-body :is(.record, .trouble)", "?ask=network": "#network-table tr",
+        "?files=open": "#files-tasks li",
     }  # fmt: skip
     for query, ready in queries.items():
         v.go(query, wait=False)
@@ -218,10 +222,8 @@ def test_axe_finds_nothing(visit: Open, axe: str, dark: bool) -> None:
         v.page.wait_for_timeout(400)
         v.page.wait_for_function("() => !document.querySelector('main [aria-busy=true]')")
         v.page.evaluate(axe)
-        found = v.page.evaluate(
-            "axe.run(document, { runOnly: ['wcag2a', 'wcag2aa', 'wcag21a', 'wcag21aa', 'wcag22aa'] })"
-        )
-        assert len(found["passes"]) > 10
+        found = v.page.evaluate("(runOnly) => axe.run(document, { runOnly })", rules)
+        assert len(found["passes"]) > (0 if dark else 10)
         told = [f"{one['id']}: {one['nodes'][0]['html'][:150]}" for one in found["violations"]]
         assert told == [], query
 

@@ -22,6 +22,7 @@ from tests.builders import CALM_DAY, STORM_DAY, invented_day
 
 from skylag.archive import Archive, open_archive
 from skylag.jobs import guard, hindcast
+from skylag.tables import Indices
 
 pytestmark = pytest.mark.browser
 Open = Callable[..., Any]
@@ -43,11 +44,14 @@ def _serve(place: Path, *more: str) -> "tuple[subprocess.Popen[str], str]":
 
 @pytest.fixture(scope="module")
 def archive(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Archive]:
-    """A calm day, the outlook made after it, then the day that came; and one alert."""
+    """A calm day, the outlook made after it, then the day that came; the magnetic field of both, and one alert."""
     with open_archive(tmp_path_factory.mktemp("sending") / "archive") as own:
         own.save(invented_day(CALM_DAY, storm=False, seed=10))
         hindcast.newest(own, "Strait of trials")
         own.save(invented_day(STORM_DAY, storm=True, seed=11))
+        kp = np.array([[1.0] * 8, [2.0] * 4 + [7.333] * 4])
+        days = Indices(np.array([CALM_DAY, STORM_DAY]), kp, 4.0 * kp, 4.0 * kp.mean(axis=1), np.array([120.0, 121.0]))
+        own.activity.keep_measured(days, "invented", NOW)
         own.notices.tell("one", "A front is expected at Gannet Field.", {"start_ns": 1, "end_ns": 2}, [], 0, NOW)
         yield own
 
@@ -80,6 +84,13 @@ def test_from_dropped_files_to_the_day_on_the_page(
     archive.notices.tell("two", "HULL has fallen silent.", {"start_ns": 1, "end_ns": 2}, [], 0, NOW)
     v.page.wait_for_function("() => document.getElementById('present-alerts').textContent.includes('fallen silent')")
     assert v.page.get_attribute("#present-alerts", "aria-live") == "polite"
+
+    v.go("?day=2031-05-10&time=05:30")
+    v.page.select_option("#year-field", "storm")
+    told = [str(text) for text in v.page.locator("#year-strip title").all_text_contents()]
+    assert len(told) == 1 and told[0].startswith("Sun, 11 May 2031: broken") and told[0].endswith("Kp up to 7.3")
+    assert "field=storm" in v.page.evaluate("location.search")
+    assert "No indices" not in v.text("#year-note")
 
     v.go("?ask=ahead", wait=False)
     v.page.wait_for_selector(".record-said")
