@@ -105,7 +105,8 @@ def say(words: str, found: list[Found]) -> tuple[float, float]:
     bias, level = rms([f.common / f.stated for f in found]), rms([f.level / f.level_stated for f in found])
     print(f"{words}: common error RMS {rms([f.common for f in found]):.3f} ns, mean "
           f"{np.mean([f.common for f in found]):+.3f}, stated {np.mean([f.stated for f in found]):.3f}, over sigma "
-          f"{bias:.2f} (at most {max(abs(f.common / f.stated) for f in found):.1f}); content RMS "
+          f"{bias:.2f} (at most {max(abs(f.common / f.stated) for f in found):.1f}, beyond two: "
+          f"{sum(abs(f.common) > 2.0 * f.stated for f in found)} of {len(found)}); content RMS "
           f"{rms([f.level for f in found]):.2f} TECU, over sigma {level:.2f}; satellites RMS "
           f"{rms([f.satellites for f in found]):.3f} ns, single errors over sigma "
           f"{np.std(np.concatenate([f.singles for f in found])):.2f}")  # fmt: skip
