@@ -211,3 +211,13 @@ def test_receiver_codes_of_a_real_map(open_data: Path) -> None:
     found = reading.header["biases"]
     zimm = (found.name == "ZIMM") & (found.system == "G")
     assert (found.code1[zimm][0], found.code2[zimm][0], found.value_ns[zimm][0]) == ("C1C", "C2W", -10.708)
+
+
+@pytest.mark.parametrize("told", ["  2024", "     x"])
+def test_an_impossible_unit_between_maps_ends_the_reading(told: str) -> None:
+    at = SAMPLE.index("\n", SAMPLE.index("END OF TEC MAP")) + 1
+    text = SAMPLE[:at] + f"{told:<60}EXPONENT\n" + SAMPLE[at:]
+    reading = ionex.parse(text.encode(), "made.inx")
+    assert isinstance(reading.table, Fields)
+    assert len(reading.table.times) == 1
+    assert "EXPONENT" in reading.problems[0].what

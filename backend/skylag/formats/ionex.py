@@ -175,7 +175,11 @@ def _maps(
             break
         if label not in ("START OF TEC MAP", "START OF RMS MAP"):
             if label == "EXPONENT":
-                exponent = _exponent(lines[number])
+                try:
+                    exponent = _exponent(lines[number])
+                except ValueError as what:  # the unit of all that follows is not known
+                    problems.note(number + 1, f"EXPONENT: {what}", "left out the maps behind it")
+                    break
             number += 1
             continue
         kind, begun = label.split()[2], number
