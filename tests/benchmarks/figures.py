@@ -1,8 +1,8 @@
 """The figures of the README, measured on the machine at hand: `python -m tests.benchmarks.figures`.
 
 Times and memory of `skylag day` for networks of several sizes, errors against the truth of the invented days, and the
-page's times in a real browser.  Prints a table; with --readme the table takes the place of the one there.  It takes some
-ten minutes for 64 receivers, most of them for making their files.
+page's times in a real browser.  Prints a table; with --readme the table takes the place of the one there.  It takes
+some ten minutes for 64 receivers, most of them for making their files.
 """
 
 import argparse
@@ -140,10 +140,12 @@ def accuracy() -> list[str]:
         got = compared(name)
         inside = got["hull"] & (got["support"] > 0) & (got["wall"] > 150.0)
         held = np.mean(np.abs(got["error"][inside]) <= 1.96 * got["sigma"][inside])
+        away = ", 150 km and more from the wall" if word == "storm" else ""
+        biases = f"{np.std(satellites):.3f}, {rms(receivers):.3f} ns"
+        content = f"{rms(got['error'][inside]):.2f} TECU; 95 % intervals hold {100 * held:.0f} %"
         rows += [
-            f"| {word} day: satellite, receiver biases against truth | {np.std(satellites):.3f}, {rms(receivers):.3f} ns |",
-            f"| {word} day: content of the map inside the network{', 150 km and more from the wall' if word == 'storm' else ''}"
-            f" | {rms(got['error'][inside]):.2f} TECU; 95 % intervals hold {100 * held:.0f} % |",
+            f"| {word} day: satellite, receiver biases against truth | {biases} |",
+            f"| {word} day: content of the map inside the network{away} | {content} |",
         ]
     return rows
 
@@ -162,7 +164,8 @@ def page() -> list[str]:
 
 def table(rows: list[str]) -> str:
     """The whole table with where it was measured."""
-    machine = f"{os.cpu_count()} processors, {psutil.virtual_memory().total / 2**30:.0f} GiB, Python {platform.python_version()}"
+    memory = psutil.virtual_memory().total / 2**30
+    machine = f"{os.cpu_count()} processors, {memory:.0f} GiB, Python {platform.python_version()}"
     head = [f"Measured on {machine}, no other load, by `python -m tests.benchmarks.figures --readme`:", ""]
     return "\n".join([*head, "| what | measured |", "|---|---|", *rows]) + "\n"
 

@@ -1,4 +1,4 @@
-"""The references of commands and of HTTP routes, from the program itself: `python -m tests.shape.references` writes them."""
+"""The references of commands and of HTTP routes, from the program: `python -m tests.shape.references` writes them."""
 
 import argparse
 import tempfile

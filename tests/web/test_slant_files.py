@@ -43,6 +43,8 @@ def test_lines_near_a_place_and_time_only(client: TestClient, small_archive: Arc
     assert [row["time"] for row in rows] == sorted(row["time"] for row in rows)
 
 
-@pytest.mark.parametrize("wrong", [{"reach_km": 0}, {"minutes": 1e9}, {"lat": 95}, {"time": "noon"}, {"reach_km": "nan"}])
+@pytest.mark.parametrize(
+    "wrong", [{"reach_km": 0}, {"minutes": 1e9}, {"lat": 95}, {"time": "noon"}, {"reach_km": "nan"}]
+)
 def test_what_cannot_be_asked(client: TestClient, wrong: dict[str, object]) -> None:
     assert client.get(f"{DAY}/slant.csv", params={**PLACE, "time": INSTANT, **wrong}).status_code == 422
