@@ -129,9 +129,47 @@ def test_every_place_up_to_75_degrees_lies_in_its_cell(lat: float, lon: float) -
     assert np.ptp(corner_lat) == (5 if abs(lat) < 55 else 10) or abs(lat) == 55
 
 
-def test_places_beyond_75_degrees_are_not_used() -> None:
-    lattice, monitored = _lattice()
-    assert not lattice.around(np.array([80.0, -88.0]), np.array([10.0, 20.0]), monitored).usable.any()
+def _whole_lattice() -> tuple[grid.Lattice, np.ndarray]:
+    every = all_points()
+    some = every.band <= 8
+    return grid.Lattice(every.lat[some].astype(int), every.lon[some].astype(int)), np.ones(some.sum(), dtype=bool)
+
+
+@given(st.floats(75.01, 90), st.floats(-180, 179.99), st.sampled_from([1, -1]))
+def test_the_caps_are_reached(size: float, lon: float, side: int) -> None:
+    """Beyond 75 degrees: shares are shares, of points at 75 and 85, and up to 85 latitude is carried as it is."""
+    lattice, monitored = _whole_lattice()
+    found = lattice.around(np.array([side * size]), np.array([lon]), monitored)
+    assert found.usable[0]
+    assert found.weight[0].sum() == pytest.approx(1)
+    assert (found.weight[0] >= -1e-9).all()
+    used = lattice.lat[found.point[0]]
+    assert set(np.abs(used).tolist()) <= ({75, 85} if size <= 85 else {85})
+    assert (np.sign(used) == side).all()
+    if size <= 85:
+        assert found.weight[0] @ np.abs(used) == pytest.approx(size, abs=1e-9)
+        turn = np.mod(lattice.lon[found.point[0]] - lon + 180, 360) - 180
+        assert (np.abs(turn) <= 90 + 1e-9).all()
+
+
+def test_at_the_poles_all_four_points_count_alike() -> None:
+    lattice, monitored = _whole_lattice()
+    found = lattice.around(np.array([90.0, -90.0, 85.0 + 1e-9, 85.0]), np.array([10.0, 20.0, 45.0, 45.0]), monitored)
+    assert found.weight[:2] == pytest.approx(np.full((2, 4), 0.25))
+    # On the parallel of 85 both rules agree: half of 0 E and half of 90 E.
+    for row in (2, 3):
+        shares = dict(zip(lattice.lon[found.point[row]].tolist(), found.weight[row].tolist(), strict=False))
+        by_lon = {lon: sum(w for p, w in zip(found.point[row], found.weight[row], strict=True)
+                           if lattice.lon[p] == lon and lattice.lat[p] == 85) for lon in shares}  # fmt: skip
+        assert by_lon[0] == pytest.approx(0.5, abs=1e-6)
+        assert by_lon[90] == pytest.approx(0.5, abs=1e-6)
+
+
+def test_a_cap_with_a_point_missing_carries_nobody() -> None:
+    lattice, monitored = _whole_lattice()
+    gone = (lattice.lat == 85) & (lattice.lon == 0)
+    found = lattice.around(np.array([80.0, 88.0, 80.0]), np.array([45.0, 45.0, -135.0]), monitored & ~gone)
+    assert found.usable.tolist() == [False, False, True]
 
 
 def test_two_missing_corners_leave_the_wide_cell() -> None:

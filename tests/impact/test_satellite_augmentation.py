@@ -155,18 +155,74 @@ def test_a_stricter_limit_never_adds_availability(seed: int, satellites: int, st
         assert not (stricter & ~looser).any()
 
 
+def _just_available(level: str, horizontal: bool) -> float:
+    """The largest protection level [m] with which a level is still available: what the program does."""
+    low, high = 0.0, 1e5
+    for _ in range(80):
+        middle = 0.5 * (low + high)
+        tried = np.array([middle if horizontal else 0.0]), np.array([0.0 if horizontal else middle])
+        good = augmentation._within(LEVEL[level], tried[1], tried[0], tried[0])[0]
+        low, high = (middle, high) if good else (low, middle)
+    return low
+
+
 def test_alert_limits(evidence: Evidence) -> None:
     for name, horizontal, vertical in (
         ("NPA", 556, np.inf), ("APV-I", 40, 50), ("LPV-200", 40, 35), ("APV-II", 40, 20), ("CAT-I", 40, 10),
     ):  # fmt: skip
-        for word, expected, got in (
-            ("horizontal", horizontal, LEVEL[name].horizontal_m), ("vertical", vertical, LEVEL[name].vertical_m)
-        ):  # fmt: skip
+        for across, expected in ((True, horizontal), (False, vertical)):
+            word, got = "horizontal" if across else "vertical", _just_available(name, across)
             if np.isfinite(expected):
-                evidence(f"{word} alert limit of {name}", source="ICAO Annex 10 volume I, table 3.7.2.4-1", unit="m",
-                         expected=expected, got=got, tolerance=0.0)  # fmt: skip
+                evidence(f"largest {word} protection level with which {name} is available", unit="m", expected=expected,
+                         source="ICAO Annex 10 volume I, table 3.7.2.4-1", got=got, tolerance=1e-6)  # fmt: skip
             else:
-                assert not np.isfinite(got)
+                assert got > 9e4
+
+
+def test_a_thousand_random_geometries_all_the_way(rng: np.random.Generator) -> None:
+    """Place to protection level, one satellite after another in plain arithmetic: pierce point, cell, table, weight."""
+    grid = a_grid()
+    point = {(int(la), int(lo)): n for n, (la, lo) in enumerate(zip(grid.lat, grid.lon, strict=True))}
+    grid = _with_step(grid, rng.integers(0, 15, grid.step.shape))
+    checked = 0
+    for seed in range(17):
+        satellites = int(rng.integers(5, 12))
+        world = a_sky(satellites, seed)
+        for minute in range(len(TIMES)):  # another geometry each
+            world.position_m[minute] = a_sky(satellites, 1000 + 60 * seed + minute).position_m[0]
+        site = Site("There", float(rng.uniform(-45, -35)), float(rng.uniform(140, 152)))
+        found = augmentation.availability(grid, world, [site])
+        elevation, azimuth = world.look(site.lat, site.lon)
+        for minute in range(len(TIMES)):
+            steps = grid.step[minute // 5]
+            rows, weights = [], []
+            for e, a in zip(np.radians(elevation[minute]), np.radians(azimuth[minute]), strict=True):
+                if not e >= np.radians(5.0):
+                    continue
+                psi = np.pi / 2 - e - np.arcsin(6378.1363 / 6728.1363 * np.cos(e))
+                b = np.radians(site.lat)
+                lat = np.arcsin(np.sin(b) * np.cos(psi) + np.cos(b) * np.sin(psi) * np.cos(a))
+                lon = np.degrees(np.radians(site.lon) + np.arcsin(np.sin(psi) * np.sin(a) / np.cos(lat)))
+                lat = np.degrees(lat)
+                south, west = int(lat // 5) * 5, int(lon // 5) * 5
+                x, y = (lon - west) / 5, (lat - south) / 5
+                vertical = sum(
+                    share * correction_grid.CONFIDENCE_VARIANCE_M2[steps[point[south + 5 * up, west + 5 * right]]]
+                    for up, right, share in ((0, 0, (1 - x) * (1 - y)), (0, 1, x * (1 - y)), (1, 0, (1 - x) * y),
+                                             (1, 1, x * y))
+                )  # fmt: skip
+                slant2 = 1 / (1 - (6378.1363 * np.cos(e) / 6728.1363) ** 2)
+                degrees = np.degrees(e)
+                noise = (0.13 + 0.53 * np.exp(-degrees / 10)) ** 2 + 0.36**2
+                troposphere = (0.12 * 1.001) ** 2 / (0.002001 + np.sin(e) ** 2)
+                weights.append(1 / (0.8315 + slant2 * vertical + noise + troposphere))
+                rows.append([np.cos(e) * np.sin(a), np.cos(e) * np.cos(a), np.sin(e), 1.0])
+            inverse = np.linalg.pinv(np.array(rows) * np.sqrt(weights)[:, None])
+            assert found.vertical_m[0, minute] == pytest.approx(5.33 * np.linalg.norm(inverse[2]), rel=1e-6)
+            major = np.linalg.svd(inverse[:2], compute_uv=False)[0]
+            assert found.horizontal_m[0, minute] == pytest.approx(6.0 * major, rel=1e-6)
+            checked += 1
+    assert checked >= 1000
 
 
 def test_assumptions_and_caution_come_with_every_result() -> None:

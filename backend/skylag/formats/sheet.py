@@ -79,7 +79,9 @@ h2 { font-size: 1.1rem; margin: 1.4rem 0 .4rem; border-bottom: 1px solid #d9d1bf
 p { margin: .3rem 0; } .strong { font-size: 1.15rem; font-weight: 600; } .small { color: #5a6070; font-size: .87rem; }
 table { border-collapse: collapse; width: 100%; font-variant-numeric: tabular-nums; }
 th, td { text-align: left; vertical-align: top; padding: .15rem .6rem .15rem 0; border-bottom: 1px solid #d9d1bf; }
-th { font-weight: 600; } th, td:not(:last-child) { white-space: nowrap; } ul { margin: .3rem 0; padding-left: 1.2rem; } figure { margin: .6rem 0; }
+th { font-weight: 600; }
+th, td:not(:last-child) { white-space: nowrap; }
+ul { margin: .3rem 0; padding-left: 1.2rem; } figure { margin: .6rem 0; }
 svg { width: 100%; height: auto; display: block; } svg text { fill: #1f2430; font-size: 11px; }
 @media print { @page { size: A4; margin: 10mm 14mm; }
   body { max-width: none; margin: 0; padding: 0; background: none; font-size: 8.3pt; line-height: 1.25; }
@@ -87,7 +89,8 @@ svg { width: 100%; height: auto; display: block; } svg text { fill: #1f2430; fon
   body.fit-4 { font-size: 6.3pt; } body.fit-5 { font-size: 5.9pt; }
   h1 { font-size: 1.75em; } h2 { font-size: 1.22em; margin: .6em 0 .15em; } .strong { font-size: 1.2em; }
   p { margin: .2em 0; } td, th { padding: .02em .5em .02em 0; } .small { font-size: .85em; }
-  figure { max-width: 74%; margin: .4em 0; } .fit-2 figure, .fit-3 figure, .fit-4 figure, .fit-5 figure { max-width: 64%; }
+  figure { max-width: 74%; margin: .4em 0; }
+  .fit-2 figure, .fit-3 figure, .fit-4 figure, .fit-5 figure { max-width: 64%; }
   h2 { break-after: avoid; } tr, figure, li { break-inside: avoid; }
   svg { -webkit-print-color-adjust: exact; print-color-adjust: exact; } }
 """
