@@ -468,6 +468,9 @@ export function dayFile(region, date, name) {
   return `${dayAddress(region, date)}/${name}`;
 }
 
+/** Where the lines of equal delay of a map lie. @param {string} region @param {string} date @param {number} time */
+export const linesFile = (region, date, time) => `${dayFile(region, date, "lines.geojson")}?time=${instant(time)}`;
+
 /**
  * Lines of sight that pass near a place around a time.
  * @param {string} region @param {string} date @param {[number, number]} place @param {number} time @param {How} [how]

@@ -138,7 +138,7 @@ const masthead = new MastheadPanel(
     name: at("region-name"), day: at("day"), before: at("day-before"), after: at("day-after"), clock: at("clock"), layer: at("layer"),
     theme: at("theme"), simulated: at("simulated"), age: at("age"), origin: at("origin"), caution: at("caution"),
     csv: at("flags-csv"), geojson: at("flags-geojson"), png: at("map-png"), svg: at("map-svg"),
-    netcdf: at("day-netcdf"), ionex: at("day-ionex"), asks: at("asks"), printed: at("printed"), announce: at("announce"),
+    netcdf: at("day-netcdf"), ionex: at("day-ionex"), lines: at("map-lines"), asks: at("asks"), printed: at("printed"), announce: at("announce"),
   },
   state,
   { picture: (format) => chart.picture(format), themeChanged: () => showAll() },

@@ -348,6 +348,7 @@ export const PAGE_WORDS = {
   mapSvg: "map, SVG",
   mapCsv: "map, CSV",
   thisPlaceCsv: "this place, CSV",
+  mapLines: "lines of equal delay, GeoJSON",
   dayNetcdf: "day, NetCDF",
   dayIonex: "day, IONEX",
 };

@@ -1,4 +1,4 @@
-"""A published map beside the day: chosen on the page, answered by the application, drawn; a wrong file is said."""
+"""A published map beside the day: chosen on the page, answered, drawn; a wrong file is said.  Lines to take."""
 
 from dataclasses import replace
 from pathlib import Path
@@ -30,6 +30,8 @@ def test_a_map_is_chosen_and_laid_beside_the_day(visit: Any, tmp_path: Path) -> 
                 told = asked.post(path, content=route.request.post_data_buffer)
                 route.fulfill(status=told.status_code, content_type="application/json", body=told.text)
 
+            lines = asked.get(str(one.page.get_attribute("#map-lines", "href"))).json()
+            assert lines["features"] and lines["time_utc"].startswith(str(STORM_DAY))
             one.page.route("**/beside?**", answer)
             one.page.click("#beside summary")
             chooser = "#beside-file"

@@ -64,8 +64,8 @@ export class MastheadPanel {
   }
 
   /** @param {import("../main.js").Scene} scene */
-  show({ view, day }) {
-    const { name, before, after, clock, layer, simulated, age, origin, csv, geojson, netcdf, ionex, asks } = this.#elements;
+  show({ view, day, time }) {
+    const { name, before, after, clock, layer, simulated, age, origin, csv, geojson, netcdf, ionex, lines, asks } = this.#elements;
     for (const link of asks.querySelectorAll("a")) {
       if (link.dataset.ask === view.ask) link.setAttribute("aria-current", "page");
       else link.removeAttribute("aria-current");
@@ -90,6 +90,7 @@ export class MastheadPanel {
     geojson.href = api.flagsFile(view.region, view.day, "geojson");
     netcdf.href = api.dayFile(view.region, view.day, "field.nc");
     ionex.href = api.dayFile(view.region, view.day, "maps.inx");
+    lines.href = api.linesFile(view.region, view.day, time);
   }
 
   close() {
