@@ -135,9 +135,10 @@ def test_choices_reach_the_day_and_earlier_biases_come_from_the_archive(
         found = ask(name, np.datetime64("2031-03-14"))
         assert found is not None and found.source == "network day 2031-03-11"
     calibration, rays = second.products.calibration, second.products.samples.rays
-    assert {words for words in calibration.datum_of_row if "network day" in words} == {
-        "mean of 24 satellites as in network day 2031-03-11"
-    }
+    drawn = "mean of 24 satellites as in network day 2031-03-11"
+    words = sorted(set(calibration.datum_of_row))
+    assert [one.split(" to ")[0] for one in words[:4]] == ["00:00", "06:00", "12:00", "18:00"]
+    assert all(one.endswith(f": {drawn}") for one in words[:4]) and words[4:] == [drawn]
     assert rays.shell_height_m == 450e3 and second.products.region.shell_height_km == 450.0
     assert rays.mapping == pytest.approx(modified_mapping(rays.elevation))
     assert abs(calibration.summary["high_layer_amplitude"]) < 0.01

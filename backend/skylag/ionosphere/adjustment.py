@@ -443,7 +443,7 @@ def _calibration(
         ray_bias_rows=bias_rows,
         ray_per_ns=-per_ns,
         covariance=estimate.covariance,
-        datum_of_row=datum.of_row,
+        datum_of_row=_words_of_rows(datum, table, choices),
         shell_height_sigma_m=choices.shell_height_sigma_m,
         leanings=leanings,
     )
@@ -459,6 +459,17 @@ def _validity(part: Rays, unknowns: Unknowns, choices: AdjustmentChoices) -> tup
         starts[receivers] = start + unknowns.block[receivers] * span
         ends[receivers] = np.minimum(starts[receivers] + span, end)
     return starts, ends
+
+
+def _words_of_rows(datum: Datum, table: Biases, choices: AdjustmentChoices) -> tuple[str, ...]:
+    """What the level of each bias refers to; of receivers found per few hours also the hours (GPS time)."""
+    if choices.drift_hours is None:
+        return datum.of_row
+    first, last = (np.datetime_as_string(times, unit="m") for times in (table.start, table.end))
+    return tuple(
+        f"{first[row][11:]} to {last[row][11:]}: {words}" if table.kind[row] == "receiver" else words
+        for row, words in enumerate(datum.of_row)
+    )
 
 
 def _receiver_sigma(rays: Rays, per_ns: Floats, unknowns: Unknowns, used: Ints, sigma: Floats) -> Floats:
