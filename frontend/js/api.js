@@ -34,6 +34,7 @@ import { WORDS } from "./words.js";
  * @property {number} slope  mm/km, NaN where it has none
  * @property {number} sigma
  * @property {number} speed  m/s
+ * @property {number} speedSigma  m/s, NaN where it is not known
  * @property {number} heading  degrees, toward
  * @property {import("./colour.js").StateName} state
  * @property {string} evidence
@@ -180,6 +181,7 @@ function flagOf(raw) {
     slope: number(raw.slope_mm_per_km),
     sigma: number(raw.sigma_mm_per_km),
     speed: number(raw.speed_m_s),
+    speedSigma: number(raw.speed_sigma_m_s),
     heading: number(raw.heading_deg),
     state: raw.state,
     evidence: raw.evidence,

@@ -32,7 +32,7 @@ export const FIELD_WORDS = { "": "any", quiet: "quiet, Kp below 4", disturbed: "
 export const KIND_WORDS = {
   slope: { name: "Steep slope", short: "slope" },
   front: { name: "Moving front", short: "front" },
-  irregular: { name: "Irregular patch", short: "irregular" },
+  irregular: { name: "Irregular patch", short: "patch" },
   fault: { name: "Fault in the data", short: "fault" },
 };
 
@@ -109,12 +109,12 @@ export const WORDS = {
   lookingBack: (minutes) => `You look at ${minutes < 120 ? `${minutes} minutes` : `${Math.round(minutes / 60)} hours`} before that.`,
   noFlagsNow: "No flag is raised at this time.",
   noArrivals: "No front is on its way to a named site within three hours.",
-  /** @param {number} minutes */
-  inMinutes: (minutes) => `in ${minutes} minutes`,
+  /** @param {number} minutes @param {number} spread  two sigmas */
+  inMinutes: (minutes, spread) => `in ${minutes} minutes, give or take ${spread}`,
   /** @param {string} from @param {string} speed */
   frontFrom: (from, speed) => `a front from the ${from} at ${speed} m/s`,
   /** @param {string} fronts */
-  ifItKeeps: (fronts) => `By ${fronts}, if course, speed and strength stay; how long a front is was not measured.`,
+  ifItKeeps: (fronts) => `By ${fronts}, if course, speed and strength stay; “give or take” is two standard deviations; how long a front is was not measured.`,
   loadingAlerts: "Asking for alerts …",
   noAlerts: "No alert was raised. Rules for alerts are given to “skylag watch”.",
   /** @param {number} count */

@@ -99,6 +99,11 @@ def test_an_arrival_within_the_time_asked_for(storm: Products) -> None:
     assert len(subjects(Rule("r", "arrival", within_min=120), at)) == 3
     (one,) = alerts.occasions([Rule("r", "arrival", site="Northport", within_min=120)], at)
     assert "toward 0 deg at 62 m/s" in one.sentence and "not for navigation" in one.sentence
+    # By hand: 3.7 degrees at 61.8 m/s take 6657 s; a speed sigma of 6.18 m/s is a tenth of it, 666 s; the line's place
+    # adds 6000 / 61.8 = 97 s: 673 s, twice that is 22 minutes.
+    sure = replace(front, speed_sigma_m_s=0.1 * front.speed_m_s)
+    (one,) = alerts.occasions([Rule("r", "arrival", site="Northport", within_min=120)], replace(at, flags=(sure,)))
+    assert "give or take 22 min" in one.sentence and abs(one.facts["sigma_s"] - 673) < 15
 
 
 # ---------------------------------------------------------------------------------------------- once

@@ -209,9 +209,7 @@ def next_front(site: Site, flags: Sequence[Flag], now: np.datetime64, horizon_s:
         wait_s = away / flag.speed_m_s * 1000.0
         if not 0 < wait_s <= horizon_s:
             continue
-        known_speed = np.isfinite(flag.speed_sigma_m_s)
-        share = flag.speed_sigma_m_s / flag.speed_m_s if known_speed else SPEED_DOUBT
-        sigma_s = float(np.hypot(share * wait_s, PLACE_DOUBT_KM * 1000.0 / flag.speed_m_s))
+        sigma_s = arrival_sigma_s(flag, wait_s)
         expected = now + np.timedelta64(round(wait_s * 1e9), "ns")
         found.append(
             NextFront(
@@ -221,6 +219,12 @@ def next_front(site: Site, flags: Sequence[Flag], now: np.datetime64, horizon_s:
             )
         )  # fmt: skip
     return min(found, key=lambda one: one.expected, default=None)
+
+
+def arrival_sigma_s(flag: Flag, wait_s: float) -> float:
+    """How uncertain an arrival is that is so far ahead [s], one sigma: by the front's own speed and by its place."""
+    share = flag.speed_sigma_m_s / flag.speed_m_s if np.isfinite(flag.speed_sigma_m_s) else SPEED_DOUBT
+    return float(np.hypot(share * wait_s, PLACE_DOUBT_KM * 1000.0 / flag.speed_m_s))
 
 
 def _exceeded(

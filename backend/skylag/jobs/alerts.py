@@ -21,6 +21,7 @@ from skylag.archive import Archive
 from skylag.archive.notices import Due
 from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.errors import FormatError, Refused
+from skylag.impact.ground_augmentation import arrival_sigma_s
 from skylag.tables import FLAG_KINDS, STATE_NAMES, UNSEEN, Flag, Products, Site
 from skylag.timescales import gps_to_utc
 
@@ -183,11 +184,14 @@ def _arrivals(rule: Rule, products: Products) -> list[Occasion]:
             expected = arrival(flag, site) if rule.site in ("", site.name) else None
             if expected is None or not newest <= expected <= newest + np.timedelta64(round(rule.within_min * 60), "s"):
                 continue
+            sigma_s = arrival_sigma_s(flag, float((expected - flag.track[-1][0]) / np.timedelta64(1, "s")))
             sentence = (
                 f"A front that moves toward {flag.heading_deg:.0f} deg at {flag.speed_m_s:.0f} m/s is expected at "
-                f"{site.name} about {_utc(expected)}, if it keeps its way. {CAUTION}"
+                f"{site.name} about {_utc(expected)}, give or take {max(1, round(2 * sigma_s / 60))} min, "
+                f"if it keeps its way. {CAUTION}"
             )
-            facts = {"site": site.name, "expected_utc": _utc(expected), "simulated": products.origin.simulated}
+            facts = {"site": site.name, "expected_utc": _utc(expected), "sigma_s": round(sigma_s),
+                     "simulated": products.origin.simulated}  # fmt: skip
             found.append(Occasion(f"{rule.name}: front to {site.name}", sentence, newest, expected, facts, rule))
     return found
 

@@ -379,7 +379,7 @@ def coast(lines: Sequence[npt.NDArray[np.float64]]) -> dict[str, Any]:
 # ---------------------------------------------------------------------------------------------- flags, states, biases
 
 _FLAG_COLUMNS = ("start_utc", "end_utc", "lat_deg", "lon_deg", "kind", "slope_mm_per_km", "sigma_mm_per_km",
-                 "speed_m_s", "heading_deg", "state", "evidence", "confirmed")  # fmt: skip
+                 "speed_m_s", "heading_deg", "state", "evidence", "confirmed", "speed_sigma_m_s")  # fmt: skip
 
 
 def _flag(flag: Flag) -> dict[str, Any]:
@@ -387,6 +387,7 @@ def _flag(flag: Flag) -> dict[str, Any]:
         "start_utc": utc(flag.start), "end_utc": utc(flag.end), "lat_deg": _number(flag.lat),
         "lon_deg": _number(flag.lon), "kind": flag.kind, "slope_mm_per_km": _number(flag.slope_mm_per_km),
         "sigma_mm_per_km": _number(flag.sigma_mm_per_km), "speed_m_s": _number(flag.speed_m_s),
+        "speed_sigma_m_s": _number(flag.speed_sigma_m_s),
         "heading_deg": _number(flag.heading_deg), "state": flag.state, "evidence": flag.evidence,
         "confirmed": flag.confirmed,
     }  # fmt: skip

@@ -57,7 +57,7 @@ export class PresentPanel {
     const coming = arrivals(day.flags, day.sites, time);
     fill(
       next,
-      coming.map((one) => make("li", {}, make("strong", { text: timeText(one.time, how) }), ` ${one.site}, ${WORDS.inMinutes(Math.round((one.time - time) / 60000))}`)),
+      coming.map((one) => make("li", {}, make("strong", { text: timeText(one.time, how) }), ` ${one.site}, ${WORDS.inMinutes(Math.round((one.time - time) / 60000), Math.max(1, Math.round((2 * one.spread) / 60000)))}`)),
       WORDS.noArrivals,
     );
     const fronts = [...new Set(coming.map((one) => WORDS.frontFrom(compass(one.flag.heading + 180), fixed(one.flag.speed, 0))))];
