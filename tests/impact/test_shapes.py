@@ -1,5 +1,7 @@
 """Points, routes and areas become the cells of the map that they touch."""
 
+from collections.abc import Iterator
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -8,6 +10,7 @@ from hypothesis import strategies as st
 from skylag.errors import Refused
 from skylag.impact import shapes
 from skylag.impact.shapes import places_of
+from skylag.tables import Floats
 
 CORNER = st.tuples(st.floats(-44, -36), st.floats(141, 150))
 
@@ -77,3 +80,39 @@ def test_what_cannot_be_looked_at(points: list[tuple[float, float]], shape: str,
     with pytest.raises(Refused, match=word):
         places_of(points, shape, 0.5)
     assert shapes.MOST_PLACES == 400
+
+
+def test_a_question_of_any_length_is_little_work(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Too many corners and too long a way are refused before a place is made; too many cells as soon as there are."""
+    made = 0
+    cells_of = shapes._cells
+
+    def counted(lat: Floats, lon: Floats, step_deg: float) -> Iterator[tuple[int, int]]:
+        nonlocal made
+        made += len(lat)
+        for cell in cells_of(lat, lon, step_deg):
+            yield cell
+
+    monkeypatch.setattr(shapes, "_cells", counted)
+    there_and_back = [(-41.0, 145.0), (-41.0, 145.1)]
+    assert len(places_of(there_and_back * 50, "route", 0.5)) == 1
+    made = 0
+    for shape in ("route", "area"):
+        with pytest.raises(Refused, match=f"shape {shape} takes at most 100 places, there are 101"):
+            places_of([*(there_and_back * 50), (-41.0, 145.0)], shape, 0.5)
+        assert made == 0
+        # 40 ways of 20 degrees, half a cell being 0.05: 16 000 steps within 201 cells
+        with pytest.raises(Refused, match="at most 8000 can be followed"):
+            places_of([(-41.0, 140.0), (-41.0, 160.0)] * 20, shape, 0.1)
+        assert made <= 41
+        made = 0
+    with pytest.raises(Refused, match="at most 400 places, there are 401"):
+        places_of([(-41.0, 145.0)] * 401, "points", 0.5)
+    # A third of the Earth at the finest step has over a million cells; the ring alone is too much.
+    with pytest.raises(Refused, match="at most 8000 can be followed"):
+        places_of([(-60.0, 0.0), (-60.0, 119.0), (60.0, 119.0), (60.0, 0.0)], "area", 0.1)
+    # A ring of 392 cells with nearly ten thousand inside: a few rows are enough to know.
+    made = 0
+    with pytest.raises(Refused, match="more than 400 cells"):
+        places_of([(0.0, 0.0), (0.0, 49.0), (49.0, 49.0), (49.0, 0.0)], "area", 0.5)
+    assert made < 1500
