@@ -102,10 +102,11 @@ def test_sites_and_jobs_by_keyboard(server: str, place: Path, visit: Open, tmp_p
     v.page.select_option("#work-body select[name=shape]", "area")
     v.page.press("#work-body input[name=hours]", "Enter")
     v.page.wait_for_function("() => document.getElementById('work-body').textContent.includes('12 cells of the map')")
-    assert "Old pier" in v.text("#work-body h3")
+    assert v.text("#work-body h3") == "Survey at area of 4 points from -40.5, 146"  # and no longer at Old pier
     href = v.page.get_attribute("#work-body .exports a", "href")
     for word in ("method=static", "references=GULL%3BHULL%3BIRON", "shape=area", "vertical_mm=250"):
         assert word in href
+    assert "site=" not in href
     v.page.fill("#work-body input[name=failed]", "05:30")
     v.page.press("#work-body input[name=failed]", "Enter")
     v.page.wait_for_selector("#work-body [role=status] li")
@@ -118,6 +119,8 @@ def test_sites_and_jobs_by_keyboard(server: str, place: Path, visit: Open, tmp_p
     for address in (f"/api/days/{REGION}/{STORM_DAY}/sheet?site=Gannet%20Field", href):
         v.page.goto(server + address)
         assert len(re.findall(rb"/Type\s*/Page\b", v.page.pdf(prefer_css_page_size=True))) == 1
+
+    assert "area of 4 points" in v.page.title() and "Old pier" not in v.page.content()
 
     with open_archive(place) as own:
         names = [site.name for site in own.day(REGION, STORM_DAY).region.sites]

@@ -90,8 +90,7 @@ def test_a_question_of_any_length_is_little_work(monkeypatch: pytest.MonkeyPatch
     def counted(lat: Floats, lon: Floats, step_deg: float) -> Iterator[tuple[int, int]]:
         nonlocal made
         made += len(lat)
-        for cell in cells_of(lat, lon, step_deg):
-            yield cell
+        yield from cells_of(lat, lon, step_deg)
 
     monkeypatch.setattr(shapes, "_cells", counted)
     there_and_back = [(-41.0, 145.0), (-41.0, 145.1)]

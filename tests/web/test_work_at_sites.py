@@ -116,6 +116,22 @@ def test_routes_and_areas(client: TestClient) -> None:
     assert not any("cells of the map" in text for text in one["assumptions"])
 
 
+@pytest.mark.parametrize("route", ["survey", "survey.ics", "survey/why", "sheet", "sheet.pdf"])
+@pytest.mark.parametrize("site", ["Gannet Field", "Atlantis", "x" * 5000])
+def test_a_site_gives_no_name_to_other_places(client: TestClient, route: str, site: str) -> None:
+    asked = {"site": site, "places": "-38,143", "time": f"{STORM_DAY}T05:30:00Z"}
+    answer = client.get(f"{BASE}/{route}", params=asked)
+    assert answer.status_code == 422
+    assert "a site and places are both named" in answer.json()["error"]
+    assert answer.json()["details"]["name"] == "site"
+
+
+def test_the_sheet_of_places_is_named_after_them(client: TestClient) -> None:
+    text = client.get(f"{BASE}/sheet", params={"places": "-38,143"}).text
+    assert f"<title>-38, 143, {STORM_DAY}" in text
+    assert "Gannet" not in text
+
+
 def test_reference_stations_in_use(client: TestClient) -> None:
     """Named stations set the baseline; for a network they are what is interpolated between."""
     near = client.get(f"{BASE}/survey", params={**SITE, "references": "GULL"}).json()
@@ -161,14 +177,19 @@ def test_what_the_service_is_assumed_to_send(client: TestClient) -> None:
         ("survey", {"hours": "9to5"}, "hours"), ("approaches", {"levels": "CAT-IX"}, "service level"),
         ("approaches", {"correction_m": 2.2}, "no step"), ("ground", {"sigma_mm_per_km": 99}, "sigma"),
         ("survey", {"site": "Atlantis"}, "no site"), ("survey", {"site": ""}, "no place is named"),
-        ("survey", {"places": "-41;147"}, "is no place"), ("survey", {"places": "-41,147", "shape": "area"}, "needs 3"),
+        ("survey", {"site": "", "places": "-41;147"}, "is no place"),
+        ("survey", {"site": "", "places": "-41,147", "shape": "area"}, "needs 3"),
+        ("survey", {"site": "", "places": ";"}, "needs 1"),
+        ("survey", {"site": "", "places": "-41,147;" * 401}, "at most 400"),
+        ("survey", {"site": "", "places": "-41,147;" * 101, "shape": "route"}, "at most 100"),
+        ("survey", {"references": "GULL;" * 401}, "at most 400"),
         ("survey", {"shape": "star"}, "not known"), ("survey", {"references": "NONE"}, "no receiver"),
         ("survey", {"references": "-20,147"}, "baseline_km"), ("survey", {"fixing_chance": "nan"}, "fixing_chance"),
         ("survey", {"vertical_mm": "nan"}, "vertical_mm"),
         ("survey", {"method": "network", "references": "GULL"}, "three"),
         ("approaches", {"systems": "X"}, "systems"), ("approaches", {"noise_m": 99}, "noise_m"),
         ("ground", {"speed_m_s": 0}, "speed_m_s"), ("sheet", {"correction_m": 2.2}, "no step"),
-        ("sheet.pdf", {"places": "x"}, "is no place"),
+        ("sheet.pdf", {"site": "", "places": "x"}, "is no place"),
     ],
 )  # fmt: skip
 def test_wrong_questions(client: TestClient, route: str, asked: dict[str, object], word: str) -> None:

@@ -50,8 +50,8 @@ Span = tuple[np.datetime64, np.datetime64]
 class AskedJob:
     """A survey job as a person asks for it, the same words over HTTP and on the command line.
 
-    site        of the region; places: others instead, as `lat,lon;lat,lon`; shape: what the places mean (points, route,
-                area)
+    site        of the region, or places instead of it, as `lat,lon;lat,lon`; shape: what the places mean (points,
+                route, area)
     method, baseline_km  as in `survey.Job`; references: stations in use, names of the network's receivers or
                 `lat,lon`, with `;` between: for the method network all receivers without, for others the baseline is
                 the longest way to the nearest of them
@@ -191,16 +191,27 @@ class DayAdvice:
         )  # fmt: skip
 
     def job(self, asked: AskedJob) -> Job:
-        """The job that is asked for.  Raises Missing for a site or receiver that is not there, Refused for the rest."""
-        if not asked.places.strip() and not asked.site:
+        """The job that is asked for, named after what gave its place.
+
+        Raises Missing for a site or receiver that is not there, Refused for the rest, also for a site and places at once.
+        """
+        elsewhere = bool(asked.places.strip())
+        if not elsewhere and not asked.site:
             raise Refused(
                 "no place is named; name a site of the region, or places like -40.1,146.2;-40.3,146.5", name="site",
                 value="", allowed="a site, or places",
             )  # fmt: skip
+        if elsewhere and asked.site:
+            raise Refused(
+                "a site and places are both named, and a job is at one or the other; leave out the site for a job at "
+                "the places, or the places for one at the site",
+                name="site", value=asked.site, allowed="a site, or places",
+            )  # fmt: skip
         record = self.record
-        points = places_in(asked.places, "places")
-        site = self.site(asked.site) if not points else None
-        if site is not None:
+        if elsewhere:
+            points = places_in(asked.places, "places")
+        else:
+            site = self.site(asked.site)
             points = ((site.lat, site.lon),)
         node = (float(record.lats[0]), float(record.lons[0]))
         places = shapes.places_of(points, asked.shape, record.region.step_deg, node)
@@ -213,14 +224,14 @@ class DayAdvice:
         elif asked.method == "network":
             references = references or tuple(self.receiver_places())
         return Job(
-            asked.site or name_of(points, asked.shape), places, asked.method, baseline_km, references,
+            name_of(points, asked.shape) if elsewhere else asked.site, places, asked.method, baseline_km, references,
             asked.horizontal_mm, asked.vertical_mm, self.local_hours(asked.hours), asked.session_min, asked.least_min,
             asked.mask_deg, asked.least_satellites, asked.most_dilution, asked.fixing_chance, asked.shape,
         )  # fmt: skip
 
     def _references(self, text: str) -> tuple[tuple[float, float], ...]:
         """Stations by receiver name or place."""
-        parts = [part.strip() for part in text.split(";") if part.strip()]
+        parts = _parts(text, "references")
         named = [part for part in parts if "," not in part]
         names = [one.name.upper() for one in self.record.receivers]
         known = dict(zip(names, self.receiver_places(), strict=True))
@@ -395,21 +406,30 @@ def local_span(text: str, day: str, timezone: str) -> Span:
     return np.datetime64(gps[0], "ns"), np.datetime64(gps[1], "ns")
 
 
+def _parts(text: str, name: str) -> list[str]:
+    """What stands between semicolons.  Raises Refused, before it is read, for more than can be looked at."""
+    parts = [part.strip() for part in text.split(";") if part.strip()]
+    if len(parts) > shapes.MOST_PLACES:
+        raise Refused(
+            f"{name}: there are {len(parts)}, at most {shapes.MOST_PLACES} can be looked at; ask in parts",
+            name=name, value=len(parts), allowed=shapes.MOST_PLACES,
+        )  # fmt: skip
+    return parts
+
+
 def places_in(text: str, name: str) -> tuple[tuple[float, float], ...]:
-    """Places written as `lat,lon;lat,lon`.  Raises Refused where one cannot be read or lies nowhere."""
+    """Places written as `lat,lon;lat,lon`.  Raises Refused for too many, or one that cannot be read or lies nowhere."""
     found = []
-    for part in text.split(";"):
-        if not part.strip():
-            continue
+    for part in _parts(text, name):
         try:
             lat, lon = (float(word) for word in part.split(","))
         except ValueError:
             lat = lon = float("nan")
         if not (-90.0 <= lat <= 90.0 and -180.0 <= lon <= 360.0):
             raise Refused(
-                f"{name}: {part.strip()!r} is no place; write latitude and longitude in degrees like -40.1,146.2, "
+                f"{name}: {part!r} is no place; write latitude and longitude in degrees like -40.1,146.2, "
                 "and ; between places",
-                name=name, value=part.strip(), allowed="-90 to 90, -180 to 360",
+                name=name, value=part, allowed="-90 to 90, -180 to 360",
             )  # fmt: skip
         found.append((lat, lon))
     return tuple(found)

@@ -64,7 +64,8 @@ export class WorkPanel {
     this.#body.setAttribute("aria-busy", "true");
     if (!this.#body.children.length) this.#body.append(make("p", { class: "empty", text: WORDS.working }));
     try {
-      const job = site.name || this.#job.places ? { ...this.#job, site: site.name } : { ...this.#job, places: `${site.lat},${site.lon}` };
+      // A job is at a site or at places: never both.
+      const job = site.name && !this.#job.places ? { ...this.#job, site: site.name } : { ...this.#job, places: this.#job.places || `${site.lat},${site.lon}` };
       const service = { ...this.#service, site: site.name };
       const found = flies ? await api.approaches(view.region, day.day, service, how) : await api.survey(view.region, day.day, job, how);
       const ground = flies ? await api.ground(view.region, day.day, site.name, this.#scene.time, how) : null;
