@@ -165,17 +165,21 @@ def _told(facts: Mapping[str, Any]) -> list[str]:
     if facts["simulated"]:
         lines.append("Invented data: nothing here was measured.")
     lines += [
-        f"  {_minute(one['start_utc'])} to {_minute(one['end_utc'])} UTC: {one['kind']}, strained or worse up to "
-        f"{100 * one['chance_strained']:.0f} %, broken up to {100 * one['chance_broken']:.0f} %"
+        f"  {_minute(one['start_utc'])} to {_minute(one['end_utc'])} UTC: {one['kind']}"
+        + (
+            f", strained or worse up to {100 * one['chance_strained']:.0f} %, broken up to "
+            f"{100 * one['chance_broken']:.0f} %"
+            if one["chance_strained"] is not None else ""
+        )
         for one in facts["windows"]
-    ]
+    ]  # fmt: skip
     lines += [f"  {sentence}" for sentence in facts["advice"]]
     levels = "/".join(f"{100 * float(level):g}" for level in facts["slope"])
     lines.append(f"hour (UTC)        delay m, ranges of 50, 80, 95 %; slope mm/km at {levels} %; strained, broken %")
     for start, phase, delay, *rest in _rows(facts):
         ends = ", ".join(f"{rest[2 * n]:.2f}-{rest[2 * n + 1]:.2f}" for n in range(3))
         slope = "/".join(f"{value:.1f}" for value in rest[6:-2])
-        chances = f"{100 * rest[-2]:.0f}, {100 * rest[-1]:.0f}"
+        chances = "not known" if None in rest[-2:] else f"{100 * rest[-2]:.0f}, {100 * rest[-1]:.0f}"
         storm = "" if phase == "untold" else f"; {phase}"
         lines.append(f"{_minute(start)}  {delay:.2f}, {ends}; {slope}; {chances}{storm}")
     return [*lines, *(f"note: {sentence}" for sentence in facts["basis"]), facts["caution"]]

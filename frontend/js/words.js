@@ -138,8 +138,9 @@ export const WORDS = {
   noOutlook: "No outlook can be given yet.",
   /** @param {string} place @param {string} use @param {string} until @param {number} seen */
   outlookFor: (place, use, until, seen) => `At ${place}, for ${use}; known until ${until}, this place seen on ${countText(seen, "day")}.`,
-  /** @param {string} strained @param {string} broken */
-  chances: (strained, broken) => `chance of strained ${strained}, of broken ${broken}`,
+  /** @param {number} strained @param {number} broken  shares; not finite where not known */
+  chances: (strained, broken) => (Number.isFinite(strained) && Number.isFinite(broken) ? `chance of strained ${shareText(strained)}, of broken ${shareText(broken)}` : "chances not known"),
+  chanceUnknown: "not known",
   /** @param {string} end @param {string} kind */
   firstSpan: (end, kind) => `Until ${end}: ${kind}.`,
   chancesAbout: "Chances hour by hour of being at least strained, and of being broken",
@@ -196,7 +197,7 @@ export const AHEAD_WORDS = {
   hoursCsv: "hours, CSV",
   windowsIcs: "windows, calendar",
   heads: ["Hour", "Vertical delay", "95 in 100 within", "Slope, 95 of 100 under", "Strained", "Broken", "Storm phase"],
-  chartKey: "Above: the expected vertical delay with the ranges that hold 50, 80 and 95 of 100 outcomes. Below: the chance of being at least strained, and of being broken.",
+  chartKey: "Above: the expected vertical delay with the ranges that hold 50, 80 and 95 of 100 outcomes. Below: the chance of being at least strained, and of being broken; dotted where it is not known.",
   /** @param {string} from @param {string} to */
   chartAbout: (from, to) => `Expected vertical delay hour by hour from ${from} to ${to}, with its ranges.`,
   record: "How outlooks turned out",

@@ -12,7 +12,8 @@ import { bandOutline, seriesFigure } from "../../frontend/js/figures/series.js";
 import { front, gradations, offset, placeAt, scaleBarKm, widthKm } from "../../frontend/js/figures/signs.js";
 import { keyStep, nearest, runs, stripFigure } from "../../frontend/js/figures/strip.js";
 import { freeSpot, projection } from "../../frontend/js/painting.js";
-import { calendarText, mapRows } from "../../frontend/js/exporting.js";
+import { calendarText, csvText, mapRows, outlookRows } from "../../frontend/js/exporting.js";
+import { WORDS } from "../../frontend/js/words.js";
 import { chosenDays, fieldOf } from "../../frontend/js/figures/year.js";
 import { unpack } from "../../frontend/js/api.js";
 
@@ -339,6 +340,21 @@ test("the outlook as shapes: bands inside each other, chances that stand on each
   assert.equal(column.broken.y + column.broken.tall, figure.base);
   assert.equal(figure.ticks[0].text, "12:00"); // the first third hour of the zone after 10:00
   assert.deepEqual(figure.ticks.filter((tick) => tick.day).map((tick) => tick.text), ["00:00", "00:00"]);
+});
+
+test("a chance that is not known is no zero: dotted over the whole scale, an empty cell in the file", () => {
+  const hours = [DAY, DAY + 60 * MINUTE, DAY + 120 * MINUTE];
+  const outlook = { hours, delay: [2, 2, 2], ranges: {}, strained: [NaN, 0, 0.5], broken: [NaN, 0, NaN], slope: [1, 1, 1], phase: ["untold", "untold", "untold"] };
+  const { columns, base } = outlookFigure({ outlook, width: 800, zone: "UTC", chanceHeight: 64 });
+  for (const i of [0, 2]) {
+    assert.deepEqual(columns[i].unknown, { y: base - 64, tall: 64 });
+    assert.deepEqual([columns[i].strained, columns[i].broken], [null, null]);
+  }
+  assert.equal(columns[1].unknown, null);
+  assert.deepEqual([columns[1].strained.tall, columns[1].broken.tall], [0, 0]);
+  assert.match(csvText(["head"], outlookRows(outlook).slice(0, 1)), /,1,,,untold\n$/);
+  assert.equal(WORDS.chances(NaN, NaN), "chances not known");
+  assert.equal(WORDS.chances(0.5, 0.25), "chance of strained 50 %, of broken 25 %");
 });
 
 test("a calendar of spans: folded, escaped, in UTC", () => {

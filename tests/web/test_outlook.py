@@ -1,6 +1,7 @@
 """The day ahead over HTTP: a place, a use, entered activity, the record, and what is refused."""
 
 import json
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -8,7 +9,10 @@ import pytest
 from fastapi.testclient import TestClient
 from tests.builders import REGION, STORM_DAY
 
+from skylag.ionosphere.outlook import LEAST_DAYS
+from skylag.jobs import hindcast
 from skylag.tables import Indices
+from skylag.web.outlook import of_place
 
 SITE = REGION.sites[1]
 ADDRESS = f"/api/outlook/{REGION.name}"
@@ -29,7 +33,6 @@ def test_a_site_hour_by_hour(client: TestClient) -> None:
         ends = [told["ranges"][share][end][hour] for share, end in (
             ("95", "low"), ("80", "low"), ("50", "low"), ("50", "high"), ("80", "high"), ("95", "high"))]  # fmt: skip
         assert ends == sorted(ends)
-        assert told["chance_broken"][hour] <= told["chance_strained"][hour]
     assert told["use"] == "ground-based augmentation"
     assert told["simulated"] is True and "not for navigation" in told["caution"]
 
@@ -39,6 +42,21 @@ def test_two_days_do_not_make_a_window(client: TestClient) -> None:
     assert {span["kind"] for span in told["windows"]} == {"not known"}
     assert told["seen_days"] <= 2 and any("first guesses" in sentence for sentence in told["basis"])
     assert any("not covered" in sentence for sentence in told["advice"])
+    assert set(told["chance_strained"]) == set(told["chance_broken"]) == {None}, "two days make no chance either"
+    assert {span[name] for span in told["windows"] for name in ("chance_strained", "chance_broken")} == {None}
+
+
+@pytest.mark.parametrize(("days", "known"), [(LEAST_DAYS - 1, False), (LEAST_DAYS, True)])
+def test_chances_are_told_from_seven_seen_days_on(client: TestClient, days: int, known: bool) -> None:
+    archive = client.app.state.archive  # type: ignore[attr-defined]
+    kept = hindcast.newest(archive, REGION.name, keep=False)
+    kept = replace(kept, outlook=replace(kept.outlook, seen_days=np.full_like(kept.outlook.seen_days, days)))
+    told = of_place(kept, REGION, SITE.lat, SITE.lon, "", 0.1, True)
+    hours = list(zip(told["chance_broken"], told["chance_strained"], strict=True))
+    assert len(hours) == 48
+    for broken, strained in hours:
+        assert (0 <= broken <= strained <= 1) if known else broken is strained is None
+    assert all((span["chance_strained"] is not None) is known for span in told["windows"])
 
 
 def test_entered_activity_is_used_and_said(client: TestClient) -> None:

@@ -31,7 +31,7 @@ from skylag.impact.single_frequency import LeftOver
 from skylag.impact.survey import Advice, Explanation
 from skylag.ionosphere.beside import Beside
 from skylag.ionosphere.geometry import geodetic
-from skylag.ionosphere.outlook import RANGES, Span
+from skylag.ionosphere.outlook import LEAST_DAYS, RANGES, Span
 from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Problem, Rays, Region, Site
 from skylag.web import nearby, sentences
 from skylag.web.witnesses import DayNetwork, Sightline
@@ -666,8 +666,15 @@ def page(text: str) -> Response:
 def outlook_at(
     kept: Kept, place: int, away_km: float, use: int, spans: Sequence[Span], advice: Sequence[str], simulated: bool
 ) -> dict[str, Any]:
-    """The outlook at one of its places for one of its uses; hours are starts, UTC."""
+    """The outlook at one of its places for one of its uses; hours are starts, UTC.
+
+    Chances are null at a place seen on too few days, as its windows are `not known`.
+    """
     made = kept.outlook
+    known = bool(made.seen_days[place] >= LEAST_DAYS)
+
+    def chances(of_hours: npt.NDArray[Any]) -> list[float | None]:
+        return _numbers(np.round(of_hours, 4)) if known else [None] * len(of_hours)
 
     def ends(low: float, high: float) -> dict[str, list[float | None]]:
         columns = [int(np.argmin(np.abs(made.levels - level))) for level in (low, high)]
@@ -692,14 +699,15 @@ def outlook_at(
             str(level): _numbers(np.round(made.slope_quantiles[:, place, number], 3))
             for number, level in enumerate(made.slope_levels)
         },
-        "chance_strained": _numbers(np.round(made.strained[use, :, place], 4)),
-        "chance_broken": _numbers(np.round(made.broken[use, :, place], 4)),
+        "chance_strained": chances(made.strained[use, :, place]),
+        "chance_broken": chances(made.broken[use, :, place]),
         "storm_phase": [str(word) for word in made.phases],
         "seen_days": int(made.seen_days[place]),
         "windows": [
             {
                 "start_utc": utc(span.start), "end_utc": utc(span.end), "kind": span.kind,
-                "chance_strained": _number(span.strained), "chance_broken": _number(span.broken),
+                "chance_strained": _number(span.strained) if known else None,
+                "chance_broken": _number(span.broken) if known else None,
             }
             for span in spans
         ],

@@ -25,6 +25,7 @@ function band(low, high, x, y) {
 }
 
 /**
+ * An hour whose chance is not known has no height: it is a column of its own, `unknown`, over the whole of the scale.
  * @param {object} contents
  * @param {{hours: number[], delay: number[], ranges: Record<string, {low: number[], high: number[]}>, strained: number[], broken: number[]}} contents.outlook
  * @param {number} contents.width  pixels
@@ -42,9 +43,11 @@ export function outlookFigure({ outlook, width, zone, left = 40, delayHeight = 1
   const line = delay.reduce((path, v, i) => (Number.isFinite(v) ? `${path}${Number.isFinite(delay[i - 1]) ? "L" : "M"}${middle(i)} ${y(v)}` : path), "");
   const base = delayHeight + 22 + chanceHeight;
   const columns = hours.map((ms, i) => {
-    const worse = (broken[i] || 0) * chanceHeight;
-    const bad = Math.max(worse, (strained[i] || 0) * chanceHeight);
-    return { ms, x: round(left + i * step), width: round(step), broken: { y: round(base - worse), tall: round(worse) }, strained: { y: round(base - bad), tall: round(bad - worse) } };
+    const place = { ms, x: round(left + i * step), width: round(step) };
+    if (!Number.isFinite(broken[i]) || !Number.isFinite(strained[i])) return { ...place, unknown: { y: round(base - chanceHeight), tall: chanceHeight }, broken: null, strained: null };
+    const worse = broken[i] * chanceHeight;
+    const bad = Math.max(worse, strained[i] * chanceHeight);
+    return { ...place, unknown: null, broken: { y: round(base - worse), tall: round(worse) }, strained: { y: round(base - bad), tall: round(bad - worse) } };
   });
   const every = step * 3 > 44 ? 3 : step * 6 > 44 ? 6 : 12;
   const ticks = hours.flatMap((ms, i) => {

@@ -85,7 +85,7 @@ export class AheadPanel {
     const use = make("select", { id: "ahead-use" }, ...this.#uses.list.map((one) => make("option", { value: one.name, text: one.name, selected: one.name === found.use })));
     use.addEventListener("change", () => this.#state.change({ use: use.value }));
     const spans = found.windows.map((one) =>
-      make("li", {}, make("strong", { text: `${this.#when(one.start)} – ${this.#when(one.end)}` }), `: ${one.kind}, ${WORDS.chances(shareText(one.strained), shareText(one.broken))}`));
+      make("li", {}, make("strong", { text: `${this.#when(one.start)} – ${this.#when(one.end)}` }), `: ${one.kind}, ${WORDS.chances(one.strained, one.broken)}`));
     this.#body.replaceChildren(
       make("p", { class: "network-said", text: found.windows.length ? WORDS.firstSpan(this.#when(found.windows[0].end), found.windows[0].kind) : WORDS.noOutlook }),
       make("p", { class: "job" }, make("label", {}, AHEAD_WORDS.for, " ", use)),
@@ -95,12 +95,12 @@ export class AheadPanel {
       make("p", { class: "fine", text: found.advice.join(" ") }),
       make("p", { class: "exports" }, WORDS.takeAway,
         make("button", { type: "button", class: "linklike", id: "ahead-csv", text: AHEAD_WORDS.hoursCsv, click: () => save(csvText(OUTLOOK_HEADS, outlookRows(found)), `${name}.csv`, "text/csv") }),
-        make("button", { type: "button", class: "linklike", id: "ahead-ics", text: AHEAD_WORDS.windowsIcs, click: () => save(calendarText(found.windows.map((one) => ({ start: one.start, end: one.end, summary: `${where}: ${one.kind}`, about: `${found.use}. ${WORDS.chances(shareText(one.strained), shareText(one.broken))}. ${day.caution}` })), Date.now()), `${name}.ics`, "text/calendar") }),
+        make("button", { type: "button", class: "linklike", id: "ahead-ics", text: AHEAD_WORDS.windowsIcs, click: () => save(calendarText(found.windows.map((one) => ({ start: one.start, end: one.end, summary: `${where}: ${one.kind}`, about: `${found.use}. ${WORDS.chances(one.strained, one.broken)}. ${day.caution}` })), Date.now()), `${name}.ics`, "text/calendar") }),
         make("button", { type: "button", class: "linklike", text: WORDS.print, click: () => window.print() })),
       make("details", { class: "table-behind" }, make("summary", { text: WORDS.asTable }), tableOf({
         label: WORDS.hourByHour, heads: AHEAD_WORDS.heads, numbers: [1, 2, 3, 4, 5],
         rows: found.hours.map((ms, i) => [this.#when(ms), `${fixed(found.delay[i], 2)} m`, `${fixed(found.ranges["95"]?.low[i], 2)} – ${fixed(found.ranges["95"]?.high[i], 2)} m`,
-          Number.isFinite(found.slope[i]) ? `${fixed(found.slope[i], 1)} mm/km` : "–", shareText(found.strained[i]), shareText(found.broken[i]), found.phase[i]]),
+          Number.isFinite(found.slope[i]) ? `${fixed(found.slope[i], 1)} mm/km` : "–", chanceText(found.strained[i]), chanceText(found.broken[i]), found.phase[i]]),
       })),
       make("details", {}, make("summary", { text: WORDS.basis }), make("ul", {}, ...found.basis.map((text) => make("li", { text })))),
       record(last, all, found.use),
@@ -125,14 +125,17 @@ export class AheadPanel {
     svg.append(draft("path", { class: "curve", d: figure.line }));
     figure.columns.forEach((one, i) => {
       const { ranges } = this.#found;
-      const words = `${this.#when(one.ms)}: ${fixed(this.#found.delay[i], 2)} m (${fixed(ranges["95"]?.low[i], 2)} – ${fixed(ranges["95"]?.high[i], 2)}), ${WORDS.chances(shareText(this.#found.strained[i]), shareText(this.#found.broken[i]))}`;
+      const words = `${this.#when(one.ms)}: ${fixed(this.#found.delay[i], 2)} m (${fixed(ranges["95"]?.low[i], 2)} – ${fixed(ranges["95"]?.high[i], 2)}), ${WORDS.chances(this.#found.strained[i], this.#found.broken[i])}`;
       svg.append(draft("g", {}, draft("title", { text: words }), draft("rect", { x: one.x, y: 0, width: one.width, height: base, fill: "transparent" }),
+        ...(one.unknown ? [draft("rect", { class: "unknown", x: one.x, y: one.unknown.y, width: one.width, height: one.unknown.tall, fill: "url(#pattern-unseen)" })] : [
         draft("rect", { x: one.x + 0.5, y: one.strained.y, width: Math.max(1, one.width - 1), height: one.strained.tall, fill: "url(#pattern-strained)" }),
-        draft("rect", { x: one.x + 0.5, y: one.broken.y, width: Math.max(1, one.width - 1), height: one.broken.tall, fill: "url(#pattern-broken)" })));
+        draft("rect", { x: one.x + 0.5, y: one.broken.y, width: Math.max(1, one.width - 1), height: one.broken.tall, fill: "url(#pattern-broken)" })])));
     });
     this.#chart.replaceChildren(make("p", { class: "fine", text: AHEAD_WORDS.chartKey }), svg);
   }
 }
+
+const chanceText = (share) => (Number.isFinite(share) ? shareText(share) : WORDS.chanceUnknown);
 
 /** How outlooks turned out, the last one first; for the use that is asked. */
 function record(last, all, use) {
