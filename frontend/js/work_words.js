@@ -28,8 +28,10 @@ export const JOB_WORDS = {
   shape: "The places are",
   shapes: { points: "places apart", route: "a route", area: "corners of an area" },
   hint: "07:00-16:30",
-  /** @param {string} middle @param {string} least @param {string} when */
-  longest: (middle, least, when) => `Longest baseline within tolerance: ${middle} km in the middle of the day's values, ${least} km at ${when}.`,
+  /** @param {string} middle @param {string} least @param {string} when @param {string} part  of the day, % */
+  longest: (middle, least, when, part) => `Longest baseline within tolerance, of the ${part} % of the day that is known: ${middle} km in the middle of the values, ${least} km at ${when}.`,
+  hardly: "less than 1",
+  noLongest: "Longest baseline within tolerance: not known at any time of the day.",
   hours: "Hour by hour",
   heads: ["Hour", "Index, ppm", "That is", "Error 68 %, mm", "Error 95 %, mm", "Longest baseline, km", "Fixing suffers"],
   failed: "Fixing failed at",

@@ -193,7 +193,7 @@ class DayAdvice:
     def job(self, asked: AskedJob) -> Job:
         """The job that is asked for, named after what gave its place.
 
-        Raises Missing for a site or receiver that is not there, Refused for the rest, also for a site and places at once.
+        Raises Missing for a site or receiver that is not there, Refused for the rest: also a site with places.
         """
         elsewhere = bool(asked.places.strip())
         if not elsewhere and not asked.site:

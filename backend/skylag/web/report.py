@@ -19,7 +19,7 @@ from skylag.impact.ground_augmentation import StationDay
 from skylag.impact.satellite_augmentation import USUAL_LEVELS, Availability, Outage, ServiceChoices
 from skylag.impact.survey import AVOID, NOT_SEEN, WORK, Advice, Job, Window, touches
 from skylag.jobs.advising import DayAdvice
-from skylag.tables import Site
+from skylag.tables import Bools, Site, Times
 from skylag.web import sentences
 
 _MARK = {WORK: "good", AVOID: "bad", NOT_SEEN: "unseen"}
@@ -143,24 +143,43 @@ def survey_verdict(advice: Advice, clock: Clock) -> str:
     return f"{head} Longest away from work: {clock.utc(worst.start)} to {clock.utc(worst.end)} UTC, {worst.why}."
 
 
+def known_part(known: Bools, times: Times) -> str:
+    """How much of the day, or days, the known ones (T,) of the epochs of its maps are: epochs without a map count."""
+    step = np.diff(times).min() if len(times) > 1 else np.timedelta64(5, "m")
+    days = len(np.unique(times.astype("datetime64[D]")))
+    percent = 100.0 * float(known.sum() * step / (days * np.timedelta64(1, "D")))
+    share = "less than 1" if percent < 1.0 else f"{np.floor(percent + 1e-6):.0f}"
+    return f"the {share} % of the {'day' if days == 1 else f'{days} days'} that is known"
+
+
 def survey_figures(advice: Advice, clock: Clock) -> list[str]:
-    """The figures behind the verdict in sentences: longest baseline, errors at the middle and the worst, the index."""
+    """The figures behind the verdict in sentences: longest baseline, errors at the middle and the worst, the index.
+
+    Each is of the known part of the day only, and says how much of the day that is.
+    """
     told = []
     known = np.isfinite(advice.longest_km)
     if known.any():
         least = int(np.nanargmin(advice.longest_km))
         told.append(
-            f"Longest baseline within tolerance: {np.nanmedian(advice.longest_km):.0f} km in the middle of the day's "
-            f"values, {advice.longest_km[least]:.1f} km at {clock.utc(advice.times[least])} UTC."
+            f"Longest baseline within tolerance, of {known_part(known, advice.times)}: "
+            f"{np.nanmedian(advice.longest_km):.0f} km in the middle of the values, "
+            f"{advice.longest_km[least]:.1f} km at {clock.utc(advice.times[least])} UTC."
         )
-    if np.isfinite(advice.differential_95).any():
+    else:
+        told.append("Longest baseline within tolerance: not known at any time of the day.")
+    known = np.isfinite(advice.differential_95)
+    if known.any():
         worst = int(np.nanargmax(advice.differential_95))
         told.append(
-            f"Differential delay at the job's distance: {np.nanmedian(advice.differential_68):.0f} mm (68 %) and "
-            f"{np.nanmedian(advice.differential_95):.0f} mm (95 %) in the middle, "
+            f"Differential delay at the job's distance, of {known_part(known, advice.times)}: "
+            f"{np.nanmedian(advice.differential_68):.0f} mm (68 %) and "
+            f"{np.nanmedian(advice.differential_95):.0f} mm (95 %) in the middle of the values, "
             f"{advice.differential_68[worst]:.0f} and {advice.differential_95[worst]:.0f} mm at "
             f"{clock.utc(advice.times[worst])} UTC."
         )
+    else:
+        told.append("Differential delay at the job's distance: not known at any time of the day.")
     index = [
         f"{clock.utc(hour)[:2]} {ppm:.1f}" for hour, ppm in zip(advice.hours, advice.index, strict=True)
         if np.isfinite(ppm)
@@ -308,13 +327,13 @@ def _evidence(day: DayAdvice, site: Site, advice: Advice, clock: Clock) -> list[
         for flag in sorted(near, key=lambda flag: (not flag.confirmed, flag.start))[:4]
     ]  # fmt: skip
     blocks: list[Block] = [Heading("Evidence")]
-    known = advice.slope[np.isfinite(advice.slope)]
-    if known.size:
+    known = np.isfinite(advice.slope)
+    if known.any():
         worst = int(np.nanargmax(advice.slope))
         blocks.append(Sentence(
-            f"The delay sloped by {float(np.median(known)):.1f} mm/km in the middle of the day's values and by "
-            f"{advice.slope[worst]:.1f} ± {advice.slope_sigma[worst]:.1f} mm/km at the most, at "
-            f"{clock.utc(advice.times[worst])} UTC."
+            f"Of {known_part(known, advice.times)}, the delay sloped by {np.nanmedian(advice.slope):.1f} mm/km in the "
+            f"middle of the values and by {advice.slope[worst]:.1f} ± {advice.slope_sigma[worst]:.1f} mm/km at the "
+            f"most, at {clock.utc(advice.times[worst])} UTC."
         ))  # fmt: skip
     else:
         blocks.append(Sentence("The maps of this day never saw the site."))

@@ -91,8 +91,12 @@ export function hourTable(found, how) {
   });
   const least = worst(found.longest, Math.min);
   const when = found.times[found.longest.indexOf(least)];
+  // Epochs without a map count as not known.
+  const [first, second] = found.times;
+  const days = Math.ceil((found.times[found.times.length - 1] - first + (second - first)) / 86400000);
+  const part = Math.floor((100 * found.longest.filter(Number.isFinite).length * (second - first)) / (days * 86400000) + 1e-6);
   return [
-    ...(Number.isFinite(least) ? [make("p", { class: "fine", text: JOB_WORDS.longest(shown(median(found.longest)), shown(least, 1), timeText(when, how)) })] : []),
+    make("p", { class: "fine", text: Number.isFinite(least) ? JOB_WORDS.longest(shown(median(found.longest)), shown(least, 1), timeText(when, how), part >= 1 ? String(part) : JOB_WORDS.hardly) : JOB_WORDS.noLongest }),
     make("details", { class: "table-behind" }, make("summary", { text: JOB_WORDS.hours }),
       make("div", { class: "scroll", tabindex: 0, role: "region", "aria-label": JOB_WORDS.hours },
         make("table", {}, make("thead", {}, make("tr", {}, ...JOB_WORDS.heads.map((text, at) => make("th", { scope: "col", text, class: at && at !== 2 ? "number" : undefined })))), body))),

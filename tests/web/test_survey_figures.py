@@ -1,0 +1,70 @@
+"""Figures of a survey day in sentences: of what is known only, and how much of the day that is."""
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from tests.builders import REGION, STORM_DAY
+
+from skylag.archive import Archive
+from skylag.impact import survey
+from skylag.impact.survey import Advice, Job
+from skylag.jobs.advising import DayAdvice
+from skylag.tables import Fields
+from skylag.web import report
+
+CLOCK = report.Clock("UTC")
+SITE = REGION.sites[3]
+
+
+@pytest.fixture(scope="module")
+def day(small_archive: Archive) -> DayAdvice:
+    return DayAdvice(small_archive, small_archive.day(REGION.name, STORM_DAY))
+
+
+def seen(day: DayAdvice, first: int, last: int, kept: int = 10**6) -> Advice:
+    """The day as it would be told, had the maps seen nothing but the epochs from first to last."""
+    whole = day.fields
+    state, slope, sigma, vtec = (getattr(whole, name).copy() for name in ("state", "slope", "slope_sigma", "vtec"))
+    east, north = np.full_like(slope, 0.5), np.full_like(slope, 0.5)
+    for layer, nothing, calm in ((state, 0, 1), (slope, np.nan, 0.7), (sigma, np.nan, 0.1), (vtec, np.nan, 10.0)):
+        layer[...] = nothing
+        layer[first:last] = calm
+    layers = {name: getattr(whole, name)[:kept] for name in Fields.LAYERS}
+    layers |= {"state": state[:kept], "slope": slope[:kept], "slope_sigma": sigma[:kept], "vtec": vtec[:kept],
+               "slope_east": east[:kept], "slope_north": north[:kept]}  # fmt: skip
+    layers["support"] = np.full_like(layers["support"], 9)
+    fields = replace(whole, times=whole.times[:kept], **layers)
+    return survey.advise(Job(SITE.name, ((SITE.lat, SITE.lon),)), fields)
+
+
+def test_a_day_of_which_a_tenth_is_known_does_not_read_calm(day: DayAdvice) -> None:
+    count = len(day.fields.times)
+    longest, delay, *_ = report.survey_figures(seen(day, 0, round(0.1 * count)), CLOCK)
+    part = f"of the {int(100 * round(0.1 * count) / count)} % of the day that is known: "
+    assert longest.startswith(f"Longest baseline within tolerance, {part}")
+    assert delay.startswith(f"Differential delay at the job's distance, {part}")
+    assert report.survey_figures(seen(day, 0, count), CLOCK)[0].startswith(
+        "Longest baseline within tolerance, of the 100 % of the day that is known: "
+    )
+    almost = int(100 * (count - 1) / count)  # never rounded up to all of it
+    assert f"of the {almost} % of the day" in report.survey_figures(seen(day, 0, count - 1), CLOCK)[0]
+    assert "of the less than 1 % of the day" in report.survey_figures(seen(day, 0, 1), CLOCK)[0]
+
+
+def test_epochs_that_have_no_map_yet_are_not_known(day: DayAdvice) -> None:
+    count = len(day.fields.times)
+    assert "of the 25 % of the day that is known" in report.survey_figures(seen(day, 0, count, count // 4), CLOCK)[0]
+
+
+def test_of_a_day_that_was_never_seen_nothing_is_said(day: DayAdvice) -> None:
+    assert report.survey_figures(seen(day, 0, 0), CLOCK) == [
+        "Longest baseline within tolerance: not known at any time of the day.",
+        "Differential delay at the job's distance: not known at any time of the day.",
+    ]
+
+
+def test_the_sheet_says_how_much_is_known(day: DayAdvice) -> None:
+    _, blocks = report.of_site(day, SITE, seen(day, 0, len(day.fields.times) // 2))
+    texts = [getattr(block, "text", "") for block in blocks]
+    assert any(text.startswith("Of the 50 % of the day that is known, the delay sloped by 0.7 mm/km") for text in texts)
