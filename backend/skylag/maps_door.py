@@ -14,6 +14,7 @@ from skylag import settings
 from skylag.archive import DayRecord, open_archive
 from skylag.errors import Missing, Refused
 from skylag.formats import contours, delimited, ionex, netcdf
+from skylag.impact.states import honest_state
 from skylag.ionosphere import augmentation_grid
 from skylag.tables import Biases, Fields, Region, Samples
 from skylag.timescales import gps_to_utc, utc_to_gps
@@ -67,6 +68,7 @@ def _maps(options: argparse.Namespace) -> int:
         )
     day = _of_folder(options.results) if options.results is not None else _of_archive(options)
     fields = _chosen(day.fields, options.every, options.at)
+    fields = replace(fields, state=honest_state(fields))
     if options.format == "netcdf":
         netcdf.write(fields, day.region, options.out, simulated=day.simulated)
         return 0

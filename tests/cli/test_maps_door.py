@@ -3,17 +3,18 @@
 import csv
 import io
 import json
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 import xarray as xr
-from tests.builders import STORM_DAY, write_archive
+from tests.builders import STORM_DAY, invented_day, write_archive
 
 from skylag import cli, formats
 from skylag.archive import open_archive
 from skylag.formats import netcdf
-from skylag.tables import Biases, Fields
+from skylag.tables import HOLDS, Biases, Fields
 
 
 @pytest.fixture(scope="module")
@@ -83,6 +84,25 @@ def test_netcdf_and_a_folder_of_results(archive: str, tmp_path: Path, capsys: py
     assert "START OF RMS MAP" in capsys.readouterr().out
     assert cli.main([*folder, "--format", "gridpoints"]) == 3
     assert "lines of sight" in capsys.readouterr().err
+
+
+def test_a_file_of_no_value_never_says_that_it_holds(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """A kept state that claims more than its cell knows leaves as unseen, from a folder as from an archive."""
+    whole = invented_day(STORM_DAY, step_minutes=60, satellites=6)
+    vtec, support = whole.fields.vtec.copy(), whole.fields.support.copy()
+    vtec[:, 0], vtec[:, 1], support[:, 0], support[:, 1] = np.nan, 5.0, 3, 0
+    state = np.full_like(whole.fields.state, HOLDS)
+    claims = replace(whole, fields=replace(whole.fields, vtec=vtec, support=support, state=state))
+    netcdf.write(claims.fields, claims.region, tmp_path / "field.nc")
+    with open_archive(tmp_path / "kept") as kept:
+        kept.save(claims)
+    for where in (["--results", str(tmp_path)], ["--archive", str(tmp_path / "kept")]):
+        assert cli.main(["maps", *where, "--at", "05:00"]) == 0
+        rows = list(csv.DictReader(io.StringIO(capsys.readouterr().out)))
+        held = [row["state"] for row in rows if row["support"] == "0" or not row["vertical_delay_m"]]
+        assert len(held) >= 2 * len(claims.fields.lons) and set(held) == {"unseen"}
+        assert cli.main(["maps", *where, "--format", "netcdf", "--out", str(tmp_path / "out.nc")]) == 0
+        assert not netcdf.read(tmp_path / "out.nc").state[:, :2].any()
 
 
 @pytest.mark.parametrize(

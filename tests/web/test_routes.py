@@ -16,6 +16,7 @@ from tests.builders import CALM_DAY, REGION, STORM_DAY, invented_day
 from skylag import quantities, timescales
 from skylag.archive import Archive, open_archive
 from skylag.constants import L1_M_PER_TECU
+from skylag.impact.states import honest_state
 from skylag.tables import BROKEN, HOLDS, STATE_NAMES, STRAINED, UNSEEN
 from skylag.web import payloads
 from skylag.web.app import create_app
@@ -245,9 +246,9 @@ def test_no_value_is_never_said_to_hold(small_archive: Archive) -> None:
     no_sight = {"vtec": np.ones_like(fields.vtec), "support": np.zeros_like(fields.support)}
     for lack in (no_value, no_sight):
         for stored, given in ((HOLDS, UNSEEN), (UNSEEN, UNSEEN), (STRAINED, STRAINED), (BROKEN, BROKEN)):
-            told = payloads.honest_state(replace(fields, state=np.full_like(fields.state, stored), **lack))
+            told = honest_state(replace(fields, state=np.full_like(fields.state, stored), **lack))
             assert (told == given).all(), (stored, given)
-    np.testing.assert_array_equal(payloads.honest_state(fields), fields.state)
+    np.testing.assert_array_equal(honest_state(fields), fields.state)
 
 
 @pytest.mark.parametrize(

@@ -8,7 +8,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from skylag.impact.states import nearest_cells, state_of_slope
+from skylag.impact.states import honest_state, nearest_cells, state_of_slope
 from skylag.impact.survey import touches
 from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Bytes, Fields, Flag, Site, Thresholds
 
@@ -26,15 +26,14 @@ def judge(
     lat, lon = (np.array([getattr(site, name) for site in sites], dtype=np.float64) for name in ("lat", "lon"))
     row, column, inside = nearest_cells(fields, lat, lon)
     warning = [flag for flag in flags if flag.confirmed and flag.kind != "fault"]
+    honest = honest_state(fields)
     told = []
     for number, site in enumerate(sites):
         if not inside[number]:
             told.append((_OFF,) * count)
             continue
         place = (slice(None), int(row[number]), int(column[number]))
-        state = fields.state[place].copy()
-        known = np.isfinite(fields.vtec[place]) & (fields.support[place] > 0)
-        state[(state == HOLDS) & ~known] = UNSEEN
+        state = honest[place]
         codes[:, number] = state
         told.append(_reasons(site, state, place[1:], fields, warning, limits))
     return codes, tuple(told)

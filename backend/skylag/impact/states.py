@@ -158,6 +158,16 @@ def content_known(fields: Fields, limits: Thresholds) -> Bools:
     return near
 
 
+def honest_state(fields: Fields) -> Bytes:
+    """The states as kept, but unseen for `holds` without a value or a line of sight behind it (T, lat, lon).
+
+    Whoever shows or writes kept states asks this.  Warnings stay: a front or patch seen near by may reach over cells
+    that have no value of their own.
+    """
+    known = np.isfinite(fields.vtec) & (fields.support > 0)
+    return np.where((fields.state == HOLDS) & ~known, UNSEEN, fields.state).astype(np.uint8)
+
+
 def stays_under(value: npt.ArrayLike, sigma: npt.ArrayLike, limit: float) -> Bools:
     """Where a value is below a limit with 95 % confidence; False where it is not known."""
     with np.errstate(invalid="ignore"):

@@ -13,6 +13,7 @@ from skylag import timescales
 from skylag.archive import Archive, DayRecord, slants
 from skylag.errors import Missing
 from skylag.formats import coast, contours, delimited, ionex, netcdf
+from skylag.impact.states import honest_state
 from skylag.tables import Fields
 from skylag.web import asking, nearby, payloads, sentences, witnesses
 from skylag.web.frames import Answers
@@ -102,7 +103,7 @@ def field_netcdf(request: Request, region: str, day: str, version: int | None = 
     held = archive.fields(region, record.head.day, None, None, record.head.version)
     with TemporaryDirectory() as folder:
         path = Path(folder) / "field.nc"
-        held = replace(held, state=payloads.honest_state(held))
+        held = replace(held, state=honest_state(held))
         netcdf.write(held, record.region, path, simulated=record.origin.simulated)
         data = path.read_bytes()
     return payloads.file(data, f"{region}-{day}-field.nc", "application/x-netcdf")
@@ -134,7 +135,7 @@ def maps_ionex(request: Request, region: str, day: str, version: int | None = No
 def map_csv(request: Request, region: str, day: str, time: str, version: int | None = None) -> Response:
     """Delay, slope, their uncertainty and the state of every cell of the map nearest to a UTC instant."""
     held, record = _one_map(request, region, day, time, version)
-    held = replace(held, state=payloads.honest_state(held))
+    held = replace(held, state=honest_state(held))
     return payloads.file(delimited.maps_csv(held).encode(), f"{region}-{record.head.day}-map.csv", "text/csv")
 
 

@@ -28,22 +28,14 @@ from skylag.formats import events as event_files
 from skylag.impact.ground_augmentation import NextFront, StationDay
 from skylag.impact.satellite_augmentation import Availability
 from skylag.impact.single_frequency import LeftOver
+from skylag.impact.states import honest_state
 from skylag.impact.survey import Advice, Explanation
 from skylag.ionosphere.beside import Beside
 from skylag.ionosphere.geometry import geodetic
 from skylag.ionosphere.outlook import LEAST_DAYS, RANGES, Span
-from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Bytes, Fields, Flag, Problem, Rays, Region, Site
+from skylag.tables import STATE_NAMES, UNSEEN, Biases, Fields, Flag, Problem, Rays, Region, Site
 from skylag.web import nearby, sentences
 from skylag.web.witnesses import DayNetwork, Sightline
-
-
-def honest_state(fields: Fields) -> Bytes:
-    """The states as stored, but unseen for `holds` without a value or a line of sight behind it.
-
-    Warnings stay: a front or patch seen near by may reach over cells that have no value of their own.
-    """
-    known = np.isfinite(fields.vtec) & (fields.support > 0)
-    return np.where((fields.state == HOLDS) & ~known, UNSEEN, fields.state).astype(np.uint8)
 
 
 def _metres(values: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
