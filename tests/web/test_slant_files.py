@@ -11,7 +11,9 @@ from tests.builders import REGION, STORM_DAY
 
 from skylag import timescales
 from skylag.archive import Archive
+from skylag.formats import delimited
 from skylag.formats.delimited import SLANT_COLUMNS
+from skylag.web import slant_files
 from skylag.web.witnesses import distance_km
 
 DAY = f"/api/days/{REGION.name}/{STORM_DAY}"
@@ -48,3 +50,22 @@ def test_lines_near_a_place_and_time_only(client: TestClient, small_archive: Arc
 )
 def test_what_cannot_be_asked(client: TestClient, wrong: dict[str, object]) -> None:
     assert client.get(f"{DAY}/slant.csv", params={**PLACE, "time": INSTANT, **wrong}).status_code == 422
+
+
+def test_more_rows_than_are_written_at_once(client: TestClient, monkeypatch: pytest.MonkeyPatch) -> None:
+    """As many as may be are written; one more is refused before any is, with the way out."""
+    asked = {**PLACE, "time": INSTANT, "reach_km": 1000, "minutes": 180}
+    rows = len(client.get(f"{DAY}/slant.csv", params=asked).text.splitlines()) - 1
+    assert rows > 100
+    assert slant_files.MOST_ROWS == 50_000
+    monkeypatch.setattr(slant_files, "MOST_ROWS", rows)
+    assert client.get(f"{DAY}/slant.csv", params=asked).status_code == 200
+    monkeypatch.setattr(slant_files, "MOST_ROWS", rows - 1)
+    monkeypatch.setattr(delimited, "slants_csv", lambda *_: pytest.fail("rows were written"))
+    answer = client.get(f"{DAY}/slant.csv", params=asked)
+    assert answer.status_code == 422
+    assert f"{rows} lines of sight" in answer.json()["error"]
+    assert "smaller reach_km or fewer minutes" in answer.json()["error"]
+    monkeypatch.undo()
+    monkeypatch.setattr(slant_files, "MOST_ROWS", rows - 1)
+    assert client.get(f"{DAY}/slant.csv", params={**asked, "minutes": 20}).status_code == 200

@@ -14,6 +14,7 @@ from skylag.web import asking, payloads, witnesses
 
 router = APIRouter()
 MOST_MINUTES, MOST_KM = 180.0, 1000.0
+MOST_ROWS = 50_000  # of CSV at once
 
 
 @router.get("/api/days/{region}/{day}/slant.parquet", summary="Slant data of a day as Parquet")
@@ -34,7 +35,10 @@ def near_a_place(
     request: Request, region: str, day: str, lat: float, lon: float, time: str,
     reach_km: float = 100.0, minutes: float = 30.0, version: int | None = None,
 ) -> Response:  # fmt: skip
-    """Every line of sight that pierces the shell near a place and a UTC instant, at full rate, one row each."""
+    """Every line of sight that pierces the shell near a place and a UTC instant, at full rate, one row each.
+
+    At most 50,000 rows at once; of more, a smaller reach or fewer minutes are to be asked, or slant.parquet.
+    """
     archive: Archive = request.app.state.archive
     lat, lon = asking.place(lat, lon)
     moment = asking.instant(time, "time")
@@ -48,5 +52,12 @@ def near_a_place(
     rays = samples.rays
     near = witnesses.distance_km(rays.pierce_lat, rays.pierce_lon, lat, lon) <= reach_km
     near &= np.abs(rays.time - moment) <= half
+    rows = int(near.sum())
+    if rows > MOST_ROWS:
+        raise Refused(
+            f"{rows} lines of sight lie within {reach_km:g} km and {minutes:g} minutes, at most {MOST_ROWS} are "
+            "written as CSV at once; ask for a smaller reach_km or fewer minutes, or take the whole day as slant.parquet",
+            name="rows", value=rows, allowed=MOST_ROWS,
+        )  # fmt: skip
     name = f"{region}-{day}-{str(moment)[11:16].replace(':', '')}-slant.csv"
     return payloads.file(delimited.slants_csv(samples, near).encode(), name, "text/csv")
