@@ -49,7 +49,9 @@ def test_a_day_of_which_a_tenth_is_known_does_not_read_calm(day: DayAdvice) -> N
     )
     almost = int(100 * (count - 1) / count)  # never rounded up to all of it
     assert f"of the {almost} % of the day" in report.survey_figures(seen(day, 0, count - 1), CLOCK)[0]
-    assert "of the less than 1 % of the day" in report.survey_figures(seen(day, 0, 1), CLOCK)[0]
+    times = STORM_DAY.astype("datetime64[ns]") + np.arange(0, 2 * 1440, 5).astype("timedelta64[m]")
+    assert report.known_part(np.arange(288) == 7, times[:288]) == "the less than 1 % of the day that is known"
+    assert report.known_part(np.arange(576) < 144, times) == "the 25 % of the 2 days that is known"
 
 
 def test_epochs_that_have_no_map_yet_are_not_known(day: DayAdvice) -> None:

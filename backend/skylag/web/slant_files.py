@@ -56,7 +56,8 @@ def near_a_place(
     if rows > MOST_ROWS:
         raise Refused(
             f"{rows} lines of sight lie within {reach_km:g} km and {minutes:g} minutes, at most {MOST_ROWS} are "
-            "written as CSV at once; ask for a smaller reach_km or fewer minutes, or take the whole day as slant.parquet",
+            "written as CSV at once; ask for a smaller reach_km or fewer minutes, or take the whole day as "
+            "slant.parquet",
             name="rows", value=rows, allowed=MOST_ROWS,
         )  # fmt: skip
     name = f"{region}-{day}-{str(moment)[11:16].replace(':', '')}-slant.csv"
