@@ -88,7 +88,8 @@ def survey_windows(
     """Errors, verdicts and windows at a site, at places, on a route or over an area.
 
     places, instead of a site, are written `lat,lon;lat,lon`; shape is points, route or area; method static, rtk,
-    network or dgnss; references are names of receivers or `lat,lon`, with `;` between; hours are local, like 07:00-16:30
+    network or dgnss; references are names of receivers or `lat,lon`, with `;` between; hours are local, like
+    07:00-16:30
     """
     kept = _day(request, region, day, version)
     return payloads.reply(payloads.survey(_asked(request, kept, asked)))
