@@ -16,7 +16,7 @@ from skylag.errors import Missing, Refused
 from skylag.formats import contours, delimited, ionex, netcdf
 from skylag.impact.states import honest_state
 from skylag.ionosphere import augmentation_grid
-from skylag.tables import Biases, Fields, Region, Samples
+from skylag.tables import Biases, Fields, Region, Samples, Thresholds
 from skylag.timescales import gps_to_utc, utc_to_gps
 from skylag.web.sentences import INVENTED
 
@@ -76,7 +76,7 @@ def _maps(options: argparse.Namespace) -> int:
         about = f"{day.region.name}. {INVENTED if day.simulated else ''}"
         text = ionex.write(fields, day.made, day.region.shell_height_km, description=about, biases=day.biases)
     elif options.format == "geojson":
-        text = contours.to_geojson(fields, 0, options.step, day.simulated) + "\n"
+        text = contours.to_geojson(fields, 0, options.step, day.simulated, day.region.thresholds.unseen_sigma_m) + "\n"
     elif options.format == "gridpoints":
         text = _grid_points(day, fields)
     else:
@@ -139,6 +139,7 @@ def _of_folder(folder: Path) -> _Day:
         str(facts.get("title", "")).removeprefix("Ionospheric delay over "), float(fields.lats[0]),
         float(fields.lats[-1]), float(fields.lons[0]), float(fields.lons[-1]), step_deg=round(step, 4),
         shell_height_km=float(facts.get("shell_height_km", 400.0)),
+        thresholds=Thresholds(unseen_sigma_m=float(facts.get("unseen_sigma_m", Thresholds().unseen_sigma_m))),
     )  # fmt: skip
     invented = str(facts.get("simulated", "")).startswith("yes")
     return _Day(fields, biases, region, invented, fields.times[-1], None)

@@ -105,6 +105,19 @@ def test_a_file_of_no_value_never_says_that_it_holds(tmp_path: Path, capsys: pyt
         assert not netcdf.read(tmp_path / "out.nc").state[:, :2].any()
 
 
+def test_lines_keep_to_the_limit_of_the_region(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """A folder of results remembers from which sigma on its region counts a cell as not seen."""
+    whole = invented_day(STORM_DAY, step_minutes=60, satellites=6)
+    counted = []
+    for limit_m in (1e-6, 50.0):
+        thresholds = replace(whole.region.thresholds, unseen_sigma_m=limit_m)
+        netcdf.write(whole.fields, replace(whole.region, thresholds=thresholds), tmp_path / "field.nc")
+        words = ["maps", "--results", str(tmp_path), "--format", "geojson", "--at", "05:00", "--step", "0.2"]
+        assert cli.main(words) == 0
+        counted.append(len(json.loads(capsys.readouterr().out)["features"]))
+    assert counted[0] == 0 < counted[1]
+
+
 @pytest.mark.parametrize(
     ("words", "said"),
     [

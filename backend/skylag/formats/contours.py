@@ -1,6 +1,7 @@
 """Lines of equal vertical delay of one map as GeoJSON (RFC 7946).
 
-Only where a line of sight carries all four cells around; a line ends where nobody looks.  Between the middles of cells
+Only where a line of sight carries all four cells around, and their delay is known well enough to count as seen; a line
+ends where nobody looks.  Between the middles of cells
 the delay is taken as linear along the sides (marching squares: Lorensen and Cline 1987, in the plane).  Never smooths,
 never closes a gap.
 """
@@ -20,14 +21,16 @@ _MOST_LEVELS = 400
 _SIDES = ((0, 1), (1, 2), (2, 3), (3, 0))
 
 
-def to_geojson(fields: Fields, number: int, step_m: float, simulated: bool) -> str:
+def to_geojson(fields: Fields, number: int, step_m: float, simulated: bool, unseen_sigma_m: float) -> str:
     """A feature per line: longitude first, -180 to 180; the delay [m], the content [TECU], its sigma along the line.
 
     number  of the map in `fields`; step_m between levels
+    unseen_sigma_m  sigma of the delay beyond which it counts as not seen: no line runs through there
     Raises Refused for a step that is not above zero or makes more than 400 levels.
     """
-    delay = np.where(fields.support[number] > 0, fields.vtec[number], np.nan).astype(np.float64) * L1_M_PER_TECU
     sigma = fields.vtec_sigma[number].astype(np.float64) * L1_M_PER_TECU
+    seen = (fields.support[number] > 0) & (fields.vtec_sigma[number] * L1_M_PER_TECU <= unseen_sigma_m)
+    delay = np.where(seen, fields.vtec[number], np.nan).astype(np.float64) * L1_M_PER_TECU
     features: list[dict[str, Any]] = []
     time = utc_text(fields.times[number])
     for level in _levels(delay, step_m):

@@ -59,6 +59,7 @@ def dataset(fields: Fields, region: Region, *, simulated: bool = False) -> xr.Da
             "title": f"Ionospheric delay over {region.name}",
             "source": "skylag",
             "shell_height_km": region.shell_height_km,
+            "unseen_sigma_m": region.thresholds.unseen_sigma_m,
             "simulated": "yes: invented data" if simulated else "no",
             "comment": _CAUTION,
         },

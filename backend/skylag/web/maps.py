@@ -145,7 +145,7 @@ def delay_lines(
 ) -> Response:
     """Lines every `step_m` metres of vertical delay on the map nearest to a UTC instant, where it sees something."""
     held, record = _one_map(request, region, day, time, version)
-    text = contours.to_geojson(held, 0, step_m, record.origin.simulated)
+    text = contours.to_geojson(held, 0, step_m, record.origin.simulated, record.region.thresholds.unseen_sigma_m)
     return payloads.file(text.encode(), f"{region}-{record.head.day}-lines.geojson", "application/geo+json")
 
 
