@@ -21,7 +21,7 @@ from tests.builders import REGION, invented_day
 from skylag.archive import Archive, Task, open_archive
 from skylag.chain import Choices
 from skylag.errors import Missing, NotEnough, Refused, SkylagError
-from skylag.jobs import board, hindcast, kept, work
+from skylag.jobs import advising, board, hindcast, kept, work
 from skylag.jobs.board import Policy, Worker
 from skylag.tables import Fields, Products
 
@@ -83,6 +83,21 @@ def run_all(one: Worker) -> int:
 
 
 # ---------------------------------------------------------------------------------------------- outlooks
+
+
+def test_a_day_that_is_done_stays_done_where_preparing_for_questions_fails(archive: Archive, monkeypatch: Any) -> None:
+    def prepare(*_: Any) -> None:
+        raise MemoryError("too large")
+
+    monkeypatch.setattr(advising, "prepare", prepare)
+    log: list[tuple[str, dict[str, Any]]] = []
+    (number,) = queue(archive, 1)
+    one = Worker(archive, "threads:1", HandClock(), QUICK, lambda event, **facts: log.append((event, facts)), tiny)
+    with ThreadPoolExecutor(1) as executor:
+        assert one.one(executor)
+    assert archive.tasks.one(number).state == "done"
+    assert [event for event, _ in log] == ["task begun", "task done", "day not prepared"]
+    assert log[-1][1]["why"] == "MemoryError: too large" and log[-1][1]["task"] == number
 
 
 def queue_day(archive: Archive, number: int) -> int:

@@ -11,7 +11,7 @@ import socket
 import threading
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from concurrent.futures import BrokenExecutor, Executor
-from contextlib import ExitStack, suppress
+from contextlib import ExitStack
 from dataclasses import asdict, dataclass
 from datetime import date
 from functools import cache, partial
@@ -238,7 +238,6 @@ class Worker:
             ending = Ending(task.id, self.name, self._clock(), result, then)
             version = self._archive.save(products, ending=ending)
             self._log("task done", task=task.id, title=task.title, version=version, given=keeping.given)
-            self._prepare(task, products, version)
         except Withdrawn:
             keeping.drop()
             self._log("task withdrawn", task=task.id, title=task.title)
@@ -248,6 +247,8 @@ class Worker:
         except Exception as failure:
             keeping.drop()
             self._fail(task, failure)
+        else:
+            self._prepare(task, products, version)
         return True
 
     def _outlook(self, task: Task, beat: "_Beat") -> None:
@@ -265,24 +266,31 @@ class Worker:
 
     def _prepare(self, task: Task, products: Products, version: int) -> None:
         """What others will ask of a day that is done: its hours for outlooks and, where no other day waits, what
-        questions about approaches need; else the first to ask waits for that.
+        questions about approaches need; else the first to ask waits for that.  The task is done whatever happens here.
         """
         region, day = products.region.name, products.day
-        with suppress(SkylagError):
+        try:
             waiting = self._archive.tasks.newest(2, ("waiting",))
             if task.kind == NETWORK_DAY:
                 hindcast.day_kept(self._archive, region, day, self._log, more=True)
             if all(one.kind == OUTLOOK for one in waiting):
                 advising.prepare(self._archive, region, str(day), version)
+        except Exception as failure:
+            self._log("day not prepared", task=task.id, region=region, day=str(day), why=_said(failure))
 
     def _fail(self, task: Task, failure: Exception) -> None:
         """Write down a failed try, and when the next is due."""
-        said = failure.message if isinstance(failure, SkylagError) else f"{type(failure).__name__}: {failure}"
+        said = _said(failure)
         attempts, now = task.attempts + 1, self._clock()
         hopeless = isinstance(failure, HOPELESS) or attempts >= self._policy.most_attempts
         wait = np.timedelta64(round(self._policy.wait_s(attempts) * 1e9), "ns")
         known = self._archive.tasks.fail(task.id, self.name, said, now, None if hopeless else now + wait)
         self._log("task failed", task=task.id, title=task.title, why=said, again=not hopeless, known=known)
+
+
+def _said(failure: Exception) -> str:
+    """What went wrong, in words."""
+    return failure.message if isinstance(failure, SkylagError) else f"{type(failure).__name__}: {failure}"
 
 
 class _Beat:
