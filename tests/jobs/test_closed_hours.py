@@ -143,3 +143,24 @@ def test_the_executor_gives_what_it_may(samples: Samples, tmp_path: Path) -> Non
     list(plain.map(work.hour_unit, (five,)))
     list(plain.map(work.hour_unit, (five,)))
     assert inner.ran.count("hour_unit") == 6, "without a place for them every hour is made"
+
+
+def test_what_was_forgotten_meanwhile_does_not_come_back(samples: Samples, tmp_path: Path) -> None:
+    """A result is kept by a thread of the executor, which may be later than who waits for the result."""
+    held: list[Future[Any]] = []
+
+    class Later(AtOnce):
+        def submit(self, function: Callable[..., Any], /, *_: Any, **__: Any) -> Future[Any]:
+            held.append(Future())
+            return held[-1]
+
+    hours = ClosedHours()
+    five, six = hours_of(samples)
+    with Later() as inner:
+        keeping = kept.KeepingExecutor(inner, tmp_path, hours)
+        keeping.submit(work.hour_unit, five)
+        hours.forget(STORM_DAY)
+        keeping.submit(work.hour_unit, six)
+        for future in held:
+            future.set_result("maps")
+    assert hours.given("hour_unit", five) is None and hours.given("hour_unit", six) == "maps"

@@ -6,6 +6,7 @@ that, and not the step before, is what is compared, so that small changes never 
 `Nearness`; a day that is final is made whole.  Never changes what was made.
 """
 
+import threading
 from dataclasses import dataclass
 from typing import Any
 
@@ -32,24 +33,34 @@ class Nearness:
 
 
 class ClosedHours:
-    """The hours of days that go on, as they were last made; for one thread at a time."""
+    """The hours of days that go on, as they were last made; any thread may keep and forget."""
 
     def __init__(self, nearness: Nearness | None = None) -> None:
         self._nearness = nearness or Nearness()
         self._kept: dict[tuple[str, np.datetime64], tuple[Hour, Any]] = {}
+        self._lock = threading.Lock()
+        self.age = 0  # how often was forgotten
 
     def given(self, use: str, hour: Hour) -> Any:
         """What was made of an hour that is near this one, for a use; None where it must be made."""
-        there = self._kept.get(_key(use, hour))
+        with self._lock:
+            there = self._kept.get(_key(use, hour))
         return there[1] if there is not None and near(there[0], hour, self._nearness) else None
 
-    def keep(self, use: str, hour: Hour, made: Any) -> None:
-        """Keep what was made of an hour, in place of what was there."""
-        self._kept[_key(use, hour)] = (hour, made)
+    def keep(self, use: str, hour: Hour, made: Any, age: int | None = None) -> None:
+        """Keep what was made of an hour, in place of what was there.
+
+        age  the `age` when it was begun: what has been forgotten since does not come back
+        """
+        with self._lock:
+            if age is None or age == self.age:
+                self._kept[_key(use, hour)] = (hour, made)
 
     def forget(self, day: np.datetime64) -> None:
         """Let go of the hours of a day and of all before it."""
-        self._kept = {key: value for key, value in self._kept.items() if key[1].astype("datetime64[D]") > day}
+        with self._lock:
+            self.age += 1
+            self._kept = {key: value for key, value in self._kept.items() if key[1].astype("datetime64[D]") > day}
 
 
 def near(before: Hour, now: Hour, nearness: Nearness) -> bool:

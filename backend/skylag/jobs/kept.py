@@ -73,11 +73,12 @@ class KeepingExecutor(Executor):
         self.hours_made += maps and there is None
         if there is not None:
             return _done(there)
+        age = hours.age
         future = self._watched(self._inner.submit(unit, hour))
 
-        def keep(one: Future[Any]) -> None:
+        def keep(one: Future[Any]) -> None:  # in a thread of the executor, perhaps after result() returned
             if not one.cancelled() and one.exception() is None:
-                hours.keep(unit.__name__, hour, one.result())
+                hours.keep(unit.__name__, hour, one.result(), age)
 
         future.add_done_callback(keep)
         return future
