@@ -128,6 +128,17 @@ test("a median tells what most tell, a difference what both tell", () => {
   assert.ok(Number.isNaN(less.fields.layers.delay[0]) && Number.isNaN(less.fields.layers.slope[5]));
 });
 
+test("a median holds only where more than half of the maps hold, else it is the worst of them or unseen", () => {
+  const stateOf = (/** @type {number[]} */ states) => medianMap(states.map((state) => {
+    const fields = fixture();
+    fields.layers.state[5] = state;
+    return { fields, index: 0 };
+  }), 1.5).fields.layers.state[5];
+  const cases = [[1, 1, 3, 1], [1, 2, 3, 3], [3, 3, 1, 3], [2, 2, 2, 2], [1, 2, 2, 2], [1, 1, 0, 1], [1, 2, 0, 2], [1, 0, 0, 0], [3, 0, 0, 0]];
+  for (const [a, b, c, expected] of cases) assert.equal(stateOf([a, b, c]), expected, `${a} ${b} ${c}`);
+  assert.deepEqual([stateOf([1, 1, 2, 3]), stateOf([1, 1, 0, 0])], [3, 0], "just half is not more than half");
+});
+
 test("a warning over a cell without a number keeps its pattern; what holds without a number is dotted", () => {
   const fields = fixture();
   fields.layers.delay[6] = NaN; // strained

@@ -12,9 +12,17 @@ const NUMBERS = ["delay", "uncertainty", "slope"];
 /** Layers of one map, empty. @param {number} size */
 const blank = (size) => ({ state: new Uint8Array(size), support: new Uint16Array(size), delay: new Float32Array(size).fill(NaN), uncertainty: new Float32Array(size).fill(NaN), slope: new Float32Array(size).fill(NaN) });
 
+/** The state that stands for several: never better than more than half of them. @param {number[]} states */
+const medianState = (states) => {
+  const most = (/** @type {(state: number) => boolean} */ kind) => 2 * states.filter(kind).length > states.length;
+  if (!most((state) => state > 0)) return 0;
+  return most((state) => state === 1) ? 1 : Math.max(...states);
+};
+
 /**
  * One map: the median over maps of the same grid, cell by cell, of what they tell. Where fewer than half tell a number
- * there is none; where fewer than half see that corrections hold, it is unseen.
+ * there is none. Corrections hold where more than half hold; else the worst that any map tells; where half or more see
+ * nothing, it is unseen.
  * @param {{fields: import("../api.js").Window, index: number}[]} maps @param {number} unseenSigma
  * @returns {{fields: import("../api.js").Window, index: number}}
  */
@@ -27,7 +35,7 @@ export function medianMap(maps, unseenSigma) {
       const values = maps.filter(({ fields, index }) => told(fields, index * size + at, name, unseenSigma)).map(({ fields, index }) => fields.layers[name][index * size + at]);
       if (2 * values.length > maps.length) layers[name][at] = median(values);
     }
-    layers.state[at] = 2 * maps.filter(({ fields, index }) => fields.layers.state[index * size + at] > 0).length > maps.length ? 1 : 0;
+    layers.state[at] = medianState(maps.map(({ fields, index }) => fields.layers.state[index * size + at]));
     layers.support[at] = Number.isFinite(layers.delay[at]) ? 1 : 0;
   }
   return { fields: { times: [maps[0].fields.times[maps[0].index]], lats, lons, layers }, index: 0 };
