@@ -178,7 +178,7 @@ def test_level_of_one_receiver_on_a_real_day(open_data: Path, evidence: Evidence
     CODE's value to a tenth of a nanosecond: so codes, levels and satellites are read alike.  With our own models it is
     some 1.2 ns lower.  On invented days with known truth the former reads too high by 0.4 ns in the mean and 0.8 ns RMS
     (tests/simulated/test_other_plasmaspheres.py), and before dawn, where next to nothing but the level is left, its
-    content lies 2.2 TECU above climatology, ours 1.1 below.  Both stated sigmas together cover the difference."""
+    content lies 2.2 TECU above climatology, ours 1.1 below.  Our own sigma does not cover the difference."""
     folder = open_data / "2015-235"
     tables = [formats.read(folder / "bias" / name).table for name in ("P1C11508.DCB", "P1P21508_ALL.DCB")]
     product = join([table for table in tables if isinstance(table, Biases)])
@@ -200,9 +200,11 @@ def test_level_of_one_receiver_on_a_real_day(open_data: Path, evidence: Evidence
     source = "CODE P1P21508_ALL.DCB (monthly, P1-P2)"
     evidence("ZIMM 2015-08-23: receiver bias, satellites held; modified single layer, no high layer", source=source,
              expected=told[0], got=value[0], tolerance=0.25, unit="ns")  # fmt: skip
-    evidence("ZIMM 2015-08-23: receiver bias, satellites held; single layer and high layer (two sigmas of both ways)",
-             source=source, expected=told[0], got=value[1], tolerance=2.0 * float(np.hypot(*sigma)),
+    # 1.5 ns is fixed, so that no larger sigma makes it easier; ours is off by four of its own.
+    evidence("ZIMM 2015-08-23: receiver bias, satellites held; single layer and high layer (1.2 ns off is 4 own sigmas)",
+             source=f"{source}; within 1.5 ns: a bound of this project", expected=told[0], got=value[1], tolerance=1.5,
              unit="ns")  # fmt: skip
+    assert 3.5 < abs(value[1] - told[0]) / sigma[1] < 4.5, "what the row above and the known limits tell"
     assert sigma[1] < 0.5 and sigma[0] < 1.0, "honest is not the same as vast"
     usual = float(np.mean(NIGHT_TECU)) + ABOVE_TECU
     evidence("ZIMM 2015-08-23: vertical content from 01 to 05 UT", source="IRI (PyIRI 0.1.7), 1 TECU above 2000 km",

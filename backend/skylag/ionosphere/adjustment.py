@@ -45,7 +45,7 @@ class AdjustmentChoices:
     high_layer, high_layer_sigma  amplitude expected of the plasmasphere model: between drained and twice saturated
     foot_exponent, foot_exponent_sigma  how the plasmasphere grows toward its feet (see `plasmasphere`); None: found
                         from the rays of the day, about 1.  Also where the true one has another shape, level errors are
-                        a third to a half of those with the exponent held; what is not known of it leans on all
+                        a quarter to a half of those with the exponent held; what is not known of it leans on all
     drift_hours         None: one bias per receiver and day; otherwise one per so many hours, walking by about
                         drift_sigma_ns from one span to the next (receivers are seen to move by 0.5 to 3 ns in a day)
     prior_walk_ns_per_day  None: satellites named in the prior are held at it; otherwise the prior is drawn upon as the
