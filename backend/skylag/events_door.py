@@ -14,6 +14,7 @@ from skylag.errors import Missing, Refused
 from skylag.formats import events as event_files
 from skylag.impact import arrivals, events, uses
 from skylag.tables import Flag
+from skylag.web import sentences
 
 if TYPE_CHECKING:
     from skylag.archive import DayRecord
@@ -57,7 +58,7 @@ def _events(options: argparse.Namespace) -> int:
         newest = max(heads, key=lambda head: head.day)
         record = archive.day(newest.region, newest.day)
         fields, flags = archive.fields(newest.region, newest.day), archive.flags(newest.region, newest.day)
-    simulated = record.origin.simulated
+    about = sentences.about(record.origin.simulated, record.head.provisional)
     if options.arrivals:
         _write(_arrivals(record, flags, options), options.out)
         return 0
@@ -67,8 +68,8 @@ def _events(options: argparse.Namespace) -> int:
     else:
         found = events.of_day(fields, flags, record.region)
     text = {
-        "csv": lambda: event_files.to_csv(found), "geojson": lambda: event_files.to_geojson(found, simulated) + "\n",
-        "json": lambda: event_files.to_json(found, simulated) + "\n",
+        "csv": lambda: event_files.to_csv(found), "geojson": lambda: event_files.to_geojson(found, about) + "\n",
+        "json": lambda: event_files.to_json(found, about) + "\n",
     }[options.format]()  # fmt: skip
     _write(text, options.out)
     return 0
@@ -82,7 +83,8 @@ def _arrivals(record: "DayRecord", flags: Sequence[Flag], options: argparse.Name
         )  # fmt: skip
     told, rows = arrivals.of_facts(record.origin.counts), arrivals.flag_rows(flags)
     if options.format == "json":
-        return event_files.arrivals_to_json(told, rows, record.origin.simulated) + "\n"
+        about = sentences.about(record.origin.simulated, record.head.provisional)
+        return event_files.arrivals_to_json(told, rows, about) + "\n"
     return event_files.arrivals_to_csv(told, rows)
 
 

@@ -18,7 +18,7 @@ from skylag.impact.states import honest_state
 from skylag.ionosphere import augmentation_grid
 from skylag.tables import Biases, Fields, Region, Samples, Thresholds
 from skylag.timescales import gps_to_utc, utc_to_gps
-from skylag.web.sentences import INVENTED
+from skylag.web import sentences
 
 
 @dataclass(frozen=True)
@@ -29,6 +29,7 @@ class _Day:
     biases: Biases | None
     region: Region
     simulated: bool
+    provisional: bool
     made: np.datetime64
     samples: Samples | None
 
@@ -70,13 +71,17 @@ def _maps(options: argparse.Namespace) -> int:
     fields = _chosen(day.fields, options.every, options.at)
     fields = replace(fields, state=honest_state(fields))
     if options.format == "netcdf":
-        netcdf.write(fields, day.region, options.out, simulated=day.simulated)
+        netcdf.write(
+            fields, day.region, options.out, simulated=day.simulated, provisional=day.provisional,
+            notices=sentences.notices(day.simulated, day.provisional),
+        )  # fmt: skip
         return 0
     if options.format == "ionex":
-        about = f"{day.region.name}. {INVENTED if day.simulated else ''}"
-        text = ionex.write(fields, day.made, day.region.shell_height_km, description=about, biases=day.biases)
+        description = sentences.description(day.region.name, day.simulated, day.provisional)
+        text = ionex.write(fields, day.made, day.region.shell_height_km, description=description, biases=day.biases)
     elif options.format == "geojson":
-        text = contours.to_geojson(fields, 0, options.step, day.simulated, day.region.thresholds.unseen_sigma_m) + "\n"
+        about = sentences.about(day.simulated, day.provisional)
+        text = contours.to_geojson(fields, 0, options.step, about, day.region.thresholds.unseen_sigma_m) + "\n"
     elif options.format == "gridpoints":
         text = _grid_points(day, fields)
     else:
@@ -141,8 +146,8 @@ def _of_folder(folder: Path) -> _Day:
         shell_height_km=float(facts.get("shell_height_km", 400.0)),
         thresholds=Thresholds(unseen_sigma_m=float(facts.get("unseen_sigma_m", Thresholds().unseen_sigma_m))),
     )  # fmt: skip
-    invented = str(facts.get("simulated", "")).startswith("yes")
-    return _Day(fields, biases, region, invented, fields.times[-1], None)
+    invented, goes_on = (str(facts.get(name, "")).startswith("yes") for name in ("simulated", "provisional"))
+    return _Day(fields, biases, region, invented, goes_on, fields.times[-1], None)
 
 
 def _of_archive(options: argparse.Namespace) -> _Day:
@@ -161,5 +166,5 @@ def _of_archive(options: argparse.Namespace) -> _Day:
         made = utc_to_gps(np.array([record.head.saved_at.astype("datetime64[ns]")]))[0]
         return _Day(
             archive.fields(newest.region, newest.day), archive.biases(newest.region, newest.day), record.region,
-            record.origin.simulated, made, samples,
+            record.origin.simulated, record.head.provisional, made, samples,
         )  # fmt: skip

@@ -105,6 +105,37 @@ def test_a_file_of_no_value_never_says_that_it_holds(tmp_path: Path, capsys: pyt
         assert not netcdf.read(tmp_path / "out.nc").state[:, :2].any()
 
 
+@pytest.mark.parametrize("provisional", [True, False])
+def test_files_say_what_must_be_known_of_the_day(
+    provisional: bool, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """That it goes on, that it is invented, the caution: from an archive, and from a folder that a file was put in."""
+    said = "This day goes on"
+    with open_archive(tmp_path / "kept") as kept:
+        kept.save(invented_day(STORM_DAY, step_minutes=60, satellites=6), provisional=provisional)
+    where = ["--archive", str(tmp_path / "kept")]
+    file = tmp_path / "field.nc"
+    assert cli.main(["maps", *where, "--format", "netcdf", "--out", str(file)]) == 0
+    comment = netcdf.read_with_facts(file)[1]["comment"]
+    assert (said in comment) is provisional and "Invented" in comment and "not for navigation" in comment
+    for place in (where, ["--results", str(tmp_path)]):
+        assert cli.main(["maps", *place, "--format", "ionex"]) == 0
+        lines = capsys.readouterr().out.splitlines()
+        words = "".join(line[:60] for line in lines if line[60:].startswith("DESCRIPTION"))
+        assert (said in words) is provisional and "Invented" in words and "not for navigation" in words
+        asked = [["maps", *place, "--format", "geojson", "--at", "05:00"]]
+        if place is where:
+            asked += [["events", *place, "--format", "geojson"], ["events", *place, "--format", "json"],
+                      ["events", *place, "--arrivals", "--format", "json"]]  # fmt: skip
+        for words_of in asked:
+            assert cli.main(words_of) == 0
+            told = json.loads(capsys.readouterr().out)
+            assert told["provisional"] is provisional and told["simulated"] is True
+            assert any(notice.startswith(said) for notice in told["notices"]) is provisional
+            assert any(notice.startswith("Invented") for notice in told["notices"])
+            assert "not for navigation" in told["caution"]
+
+
 def test_lines_keep_to_the_limit_of_the_region(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     """A folder of results remembers from which sigma on its region counts a cell as not seen."""
     whole = invented_day(STORM_DAY, step_minutes=60, satellites=6)

@@ -70,7 +70,7 @@ def fields(lon_shift: float = 0.0) -> Fields:
 
 
 def test_lines_of_a_map_as_geojson() -> None:
-    told = json.loads(contours.to_geojson(fields(), 0, 0.5, True, 1.5))
+    told = json.loads(contours.to_geojson(fields(), 0, 0.5, {"simulated": True}, 1.5))
     assert told["simulated"] is True and told["time_utc"].endswith("Z")
     levels = [one["properties"]["vertical_delay_m"] for one in told["features"]]
     assert levels == pytest.approx([0.5, 1.0, 1.5, 2.0, 2.5])  # 18 TECU are 2.92 m
@@ -83,10 +83,10 @@ def test_lines_of_a_map_as_geojson() -> None:
 
 def test_nothing_is_drawn_where_nobody_looks_and_lines_are_cut_at_the_antimeridian() -> None:
     blind = replace(fields(), support=np.zeros((1, 4, 7), np.uint16))
-    assert json.loads(contours.to_geojson(blind, 0, 0.5, False, 1.5))["features"] == []
+    assert json.loads(contours.to_geojson(blind, 0, 0.5, {"simulated": False}, 1.5))["features"] == []
     slanting = fields(347.0)  # 177 to 183 degrees east
     value = np.broadcast_to(np.arange(4.0)[:, None] * 3.0 - np.arange(7.0) * 1.2 + 10.0, (1, 4, 7)).astype(np.float32)
-    told = json.loads(contours.to_geojson(replace(slanting, vtec=value), 0, 0.4, False, 1.5))
+    told = json.loads(contours.to_geojson(replace(slanting, vtec=value), 0, 0.4, {"simulated": False}, 1.5))
     crossing = [one for one in told["features"] if one["geometry"]["type"] == "MultiLineString"]
     assert crossing
     for one in told["features"]:
@@ -103,7 +103,7 @@ def test_no_line_runs_where_the_delay_is_known_too_badly() -> None:
     maps = replace(fields(), vtec_sigma=vague)
 
     def levels(limit_m: float) -> list[float]:
-        told = json.loads(contours.to_geojson(maps, 0, 0.5, True, limit_m))
+        told = json.loads(contours.to_geojson(maps, 0, 0.5, {"simulated": True}, limit_m))
         return [one["properties"]["vertical_delay_m"] for one in told["features"]]
 
     assert levels(1.5) == pytest.approx([0.5])  # the three western columns reach 6 TECU, 0.97 m
@@ -116,4 +116,4 @@ def test_no_line_runs_where_the_delay_is_known_too_badly() -> None:
                                             (1e-4, "400 are the most")])  # fmt: skip
 def test_steps_that_make_no_lines_are_refused(step: float, said: str) -> None:
     with pytest.raises(Refused, match=said):
-        contours.to_geojson(fields(), 0, step, False, 1.5)
+        contours.to_geojson(fields(), 0, step, {"simulated": False}, 1.5)

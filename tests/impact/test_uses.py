@@ -216,6 +216,29 @@ def test_a_patch_stops_satellite_based_corrections_where_no_plane_fits():
     assert got == {"fails": (BROKEN, STRAINED), "passes": (STRAINED, BROKEN), "unknown": (BROKEN, BROKEN)}
 
 
+@pytest.mark.parametrize(
+    ("said", "expected"),
+    [
+        ("planar fit passes (chi-square 20, limit 55)", STRAINED),  # 30 lines of sight
+        ("planar fit passes (chi-square 24, limit 25)", BROKEN),  # ten: too few to see anything
+        ("planar fit passes (chi-square 50, limit 54)", BROKEN),  # 29
+        ("planar fit passes (chi-square 3, limit 55)", BROKEN),  # residuals far under their sigmas: these are too large
+        ("planar fit passes (chi-square 60, limit 55)", BROKEN),  # contradicts itself
+        ("planar fit passes", BROKEN),
+        ("planar fit passes (chi-square nan, limit 55)", BROKEN),
+        ("no planar fit passes here: chi-square 20, limit 55", BROKEN),
+    ],
+)
+def test_a_passed_planar_fit_lowers_only_where_it_means_something(said, expected):
+    steep, moving, none = nothing()
+    ragged = Patches((some_patch(planar=(20.0, 55.0), index_highest=1.4),),
+                     *(getattr(none, name) for name in list(Patches.__dataclass_fields__)[1:]))  # fmt: skip
+    (flag,) = states.judge(flat_fields(), steep, moving, ragged, REGION).flags
+    own = "planar fit passes (chi-square 20, limit 55)"  # as the sentence of a patch has it
+    assert own in flag.evidence and flag.state == "broken"
+    assert uses.flag_state(SATELLITE, replace(flag, evidence=flag.evidence.replace(own, said)), (0.7, 1.15)) == expected
+
+
 def test_map_alone_makes_an_unconfirmed_event_and_specks_make_none():
     fields = flat_fields()
     fields.slope[6:12, 4:7, 5:8] = 20.0
@@ -247,11 +270,11 @@ def test_events_leave_as_csv_geojson_and_json(stormy):
     table = event_files.to_csv(listed).splitlines()
     assert table[0].split(",") == list(event_files.COLUMNS) and len(table) == 1 + len(listed)
     assert "true" in table[1] and "Z," in table[1]
-    shapes = json.loads(event_files.to_geojson(listed, simulated=True))
+    shapes = json.loads(event_files.to_geojson(listed, {"simulated": True}))
     assert shapes["type"] == "FeatureCollection" and shapes["simulated"] is True
     ring = shapes["features"][0]["geometry"]["coordinates"][0]
     assert ring[0] == ring[-1] and len(ring) == 5 and 140 < ring[0][0] < 151
-    told = json.loads(event_files.to_json(listed, simulated=False))["events"]
+    told = json.loads(event_files.to_json(listed, {"simulated": False}))["events"]
     assert told[0]["state"] == "broken" and told[0]["reason"].startswith("front of")
 
 
@@ -276,7 +299,7 @@ def test_events_leave_as_csv_geojson_and_json(stormy):
 def test_geojson_is_cut_at_the_antimeridian(stormy, west, east, south, north, kind, coordinates, bounds):
     """RFC 7946: no part crosses the antimeridian (3.1.9), the outer ring runs against the clock (3.1.6), bbox (5.2)."""
     event = replace(events.of_day(*stormy, REGION)[0], west=west, east=east, south=south, north=north)
-    (feature,) = json.loads(event_files.to_geojson([event], simulated=False))["features"]
+    (feature,) = json.loads(event_files.to_geojson([event], {"simulated": False}))["features"]
     assert feature["geometry"] == {"type": kind, "coordinates": coordinates}
     assert feature["bbox"] == bounds
 
@@ -301,7 +324,7 @@ def test_a_wall_over_the_antimeridian_is_one_event_cut_for_geojson():
     judged = states.judge(moved, *nothing(), region)
     (event,) = events.of_day(judged.fields, judged.flags, region)
     assert event.west < 180.0 < event.east
-    (feature,) = json.loads(event_files.to_geojson([event], simulated=False))["features"]
+    (feature,) = json.loads(event_files.to_geojson([event], {"simulated": False}))["features"]
     assert feature["geometry"]["type"] == "MultiPolygon"
     longitudes = [[p[0] for p in part[0]] for part in feature["geometry"]["coordinates"]]
     assert [(min(part), max(part)) for part in longitudes] == [(178.5, 180.0), (-180.0, -178.5)]

@@ -16,6 +16,7 @@ from tests.builders import CALM_DAY, REGION, STORM_DAY, invented_day
 from skylag import quantities, timescales
 from skylag.archive import Archive, open_archive
 from skylag.constants import L1_M_PER_TECU
+from skylag.formats import netcdf
 from skylag.impact.states import honest_state
 from skylag.tables import BROKEN, HOLDS, STATE_NAMES, STRAINED, UNSEEN
 from skylag.web import payloads
@@ -299,3 +300,11 @@ def test_a_day_that_goes_on_is_never_shown_as_final(tmp_path: Path, page_folder:
             maps = client.get(f"{address}/maps.inx")
             assert sheet.status_code == maps.status_code == 200
             assert (said in sheet.text) is provisional and (said in maps.text) is provisional
+            for tail in ("lines.geojson", "arrivals", "events", "events.geojson", "flags.geojson"):
+                told = get(client, f"{address}/{tail}", **({"time": "2031-05-11T05:00:00Z"} if "lines" in tail else {}))
+                assert told["provisional"] is provisional and told["simulated"] is True, tail
+                assert any(notice.startswith(said) for notice in told["notices"]) is provisional, tail
+                assert "not for navigation" in told["caution"], tail
+            (tmp_path / "field.nc").write_bytes(client.get(f"{address}/field.nc").content)
+            comment = netcdf.read_with_facts(tmp_path / "field.nc")[1]["comment"]
+            assert (said in comment) is provisional and "Invented" in comment and "not for navigation" in comment

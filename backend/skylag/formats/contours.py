@@ -7,6 +7,7 @@ never closes a gap.
 """
 
 import json
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
@@ -21,10 +22,11 @@ _MOST_LEVELS = 400
 _SIDES = ((0, 1), (1, 2), (2, 3), (3, 0))
 
 
-def to_geojson(fields: Fields, number: int, step_m: float, simulated: bool, unseen_sigma_m: float) -> str:
+def to_geojson(fields: Fields, number: int, step_m: float, about: Mapping[str, Any], unseen_sigma_m: float) -> str:
     """A feature per line: longitude first, -180 to 180; the delay [m], the content [TECU], its sigma along the line.
 
     number  of the map in `fields`; step_m between levels
+    about   members of the collection, such as `simulated` and `caution`
     unseen_sigma_m  sigma of the delay beyond which it counts as not seen: no line runs through there
     Raises Refused for a step that is not above zero or makes more than 400 levels.
     """
@@ -47,7 +49,7 @@ def to_geojson(fields: Fields, number: int, step_m: float, simulated: bool, unse
                 "type": "MultiLineString", "coordinates": pieces}  # fmt: skip
             features.append({"type": "Feature", "geometry": shape, "properties": properties})
     return json.dumps(
-        {"type": "FeatureCollection", "simulated": simulated, "time_utc": time, "features": features}, allow_nan=False
+        {"type": "FeatureCollection", **about, "time_utc": time, "features": features}, allow_nan=False
     )
 
 

@@ -6,7 +6,7 @@ Times leave as UTC, unknown numbers as empty cells or null.  Never decides what 
 import csv
 import io
 import json
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
@@ -47,17 +47,18 @@ def to_csv(events: Sequence[Event]) -> str:
     return out.getvalue()
 
 
-def to_geojson(events: Sequence[Event], simulated: bool) -> str:
+def to_geojson(events: Sequence[Event], about: Mapping[str, Any]) -> str:
     """A feature per event: the box around the middles of its cells, longitude first, from -180 to 180.
 
     A box across the antimeridian is cut there in two, so that no part crosses it (RFC 7946, section 3.1.9); its `bbox`
-    then has a western edge greater than the eastern one (section 5.2).
+    then has a western edge greater than the eastern one (section 5.2).  about: members of the collection, such as
+    `simulated` and `caution`.
     """
     features = [
         {"type": "Feature", "bbox": _bounds(event), "geometry": _shape(event), "properties": facts(event)}
         for event in events
     ]
-    return json.dumps({"type": "FeatureCollection", "simulated": simulated, "features": features}, allow_nan=False)
+    return json.dumps({"type": "FeatureCollection", **about, "features": features}, allow_nan=False)
 
 
 def _bounds(event: Event) -> list[float]:
@@ -113,9 +114,9 @@ def line(lons: Sequence[float], lats: Sequence[float]) -> dict[str, Any]:
     return {"type": "MultiLineString", "coordinates": parts}
 
 
-def to_json(events: Sequence[Event], simulated: bool) -> str:
-    """A list of objects under `events`."""
-    return json.dumps({"simulated": simulated, "events": [facts(event) for event in events]}, allow_nan=False)
+def to_json(events: Sequence[Event], about: Mapping[str, Any]) -> str:
+    """A list of objects under `events`, beside the members of `about`."""
+    return json.dumps({**about, "events": [facts(event) for event in events]}, allow_nan=False)
 
 
 ARRIVAL_COLUMNS = ("flag", "site", "made_utc", "expected_utc", "sigma_s", "seen_utc", "came_true")
@@ -144,12 +145,14 @@ def arrivals_to_csv(arrivals: Sequence[Arrival], flag_rows: Sequence[int]) -> st
     return out.getvalue()
 
 
-def arrivals_to_json(arrivals: Sequence[Arrival], flag_rows: Sequence[int], simulated: bool) -> str:
-    """How many were told, could be checked and came true within two sigmas, and a list of objects under `arrivals`."""
+def arrivals_to_json(arrivals: Sequence[Arrival], flag_rows: Sequence[int], about: Mapping[str, Any]) -> str:
+    """How many were told, could be checked and came true within two sigmas; a list of objects under `arrivals`; and
+    the members of `about`.
+    """
     checked = [one for one in arrivals if one.came_true is not None]
     table = [arrival_facts(arrival, flag_rows) for arrival in arrivals]
     return json.dumps({
-        "simulated": simulated, "told": len(arrivals), "checked": len(checked),
+        **about, "told": len(arrivals), "checked": len(checked),
         "came_true": sum(1 for one in checked if one.came_true), "arrivals": table,
     }, allow_nan=False)  # fmt: skip
 

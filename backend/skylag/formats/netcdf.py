@@ -4,6 +4,7 @@ Writes and reads the result file; knows nothing of how maps are made.  Delay lea
 TECU, time in UTC seconds.
 """
 
+from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
@@ -21,8 +22,10 @@ _CAUTION = (
 )
 
 
-def dataset(fields: Fields, region: Region, *, simulated: bool = False) -> xr.Dataset:
-    """The maps with their CF attributes."""
+def dataset(
+    fields: Fields, region: Region, *, simulated: bool = False, provisional: bool = False, notices: Sequence[str] = ()
+) -> xr.Dataset:
+    """The maps with their CF attributes; what must be known of the day stands before the caution in `comment`."""
     axes = ("time", "lat", "lon")
     metres = L1_M_PER_TECU
 
@@ -61,15 +64,19 @@ def dataset(fields: Fields, region: Region, *, simulated: bool = False) -> xr.Da
             "shell_height_km": region.shell_height_km,
             "unseen_sigma_m": region.thresholds.unseen_sigma_m,
             "simulated": "yes: invented data" if simulated else "no",
-            "comment": _CAUTION,
+            "provisional": "yes: the day goes on" if provisional else "no",
+            "comment": " ".join([*notices, _CAUTION]),
         },
     )  # fmt: skip
     return held
 
 
-def write(fields: Fields, region: Region, path: Path, *, simulated: bool = False) -> None:
+def write(
+    fields: Fields, region: Region, path: Path, *, simulated: bool = False, provisional: bool = False,
+    notices: Sequence[str] = (),
+) -> None:  # fmt: skip
     """Write field.nc."""
-    held = dataset(fields, region, simulated=simulated)
+    held = dataset(fields, region, simulated=simulated, provisional=provisional, notices=notices)
     packing = {name: {"zlib": True, "complevel": 4} for name in held.data_vars}
     time = {"time": {"units": "seconds since 1980-01-06 00:00:00", "calendar": "standard", "dtype": "int64"}}
     held.to_netcdf(path, engine="h5netcdf", encoding={**packing, **time})

@@ -16,7 +16,7 @@ from skylag.impact.satellite_augmentation import Availability
 from skylag.impact.survey import Advice
 from skylag.jobs.advising import AskedJob, AskedService, DayAdvice, Desk
 from skylag.tables import Site
-from skylag.web import asking, payloads, report
+from skylag.web import asking, payloads, report, sentences
 
 router = APIRouter()
 _DESK_LOCK = threading.Lock()
@@ -43,7 +43,9 @@ def flags_geojson(request: Request, region: str, day: str, version: int | None =
     archive: Archive = request.app.state.archive
     record = archive.day(region, asking.day(day), version)
     table = archive.flags(region, record.head.day, record.head.version)
-    return payloads.flags_geojson(table, f"{region}-{day}", record.origin.simulated)
+    return payloads.flags_geojson(
+        table, f"{region}-{day}", sentences.about(record.origin.simulated, record.head.provisional)
+    )
 
 
 @router.get("/api/days/{region}/{day}/site-states", summary="States of the sites through a day")

@@ -101,10 +101,14 @@ def field_netcdf(request: Request, region: str, day: str, version: int | None = 
     archive: Archive = request.app.state.archive
     record = archive.day(region, asking.day(day), version)
     held = archive.fields(region, record.head.day, None, None, record.head.version)
+    simulated, provisional = record.origin.simulated, record.head.provisional
     with TemporaryDirectory() as folder:
         path = Path(folder) / "field.nc"
         held = replace(held, state=honest_state(held))
-        netcdf.write(held, record.region, path, simulated=record.origin.simulated)
+        netcdf.write(
+            held, record.region, path, simulated=simulated, provisional=provisional,
+            notices=sentences.notices(simulated, provisional),
+        )  # fmt: skip
         data = path.read_bytes()
     return payloads.file(data, f"{region}-{day}-field.nc", "application/x-netcdf")
 
@@ -120,11 +124,7 @@ def maps_ionex(request: Request, region: str, day: str, version: int | None = No
     thin = replace(
         held, times=held.times[every], **{name: getattr(held, name)[every] for name in Fields.LAYERS}
     )  # fmt: skip
-    told = [
-        f"{record.region.name}.", sentences.INVENTED if record.origin.simulated else "",
-        sentences.GOES_ON if record.head.provisional else "", sentences.CAUTION,
-    ]  # fmt: skip
-    about = " ".join(filter(None, told))
+    about = sentences.description(record.region.name, record.origin.simulated, record.head.provisional)
     saved_at = np.datetime64(timescales.utc_to_gps(record.head.saved_at.astype("datetime64[ns]")).item(), "ns")
     biases = archive.biases(region, record.head.day, record.head.version)
     text = ionex.write(thin, saved_at, record.region.shell_height_km, description=about, biases=biases)
@@ -145,7 +145,8 @@ def delay_lines(
 ) -> Response:
     """Lines every `step_m` metres of vertical delay on the map nearest to a UTC instant, where it sees something."""
     held, record = _one_map(request, region, day, time, version)
-    text = contours.to_geojson(held, 0, step_m, record.origin.simulated, record.region.thresholds.unseen_sigma_m)
+    about = sentences.about(record.origin.simulated, record.head.provisional)
+    text = contours.to_geojson(held, 0, step_m, about, record.region.thresholds.unseen_sigma_m)
     return payloads.file(text.encode(), f"{region}-{record.head.day}-lines.geojson", "application/geo+json")
 
 

@@ -206,11 +206,9 @@ def scales(heads: Sequence[DayHead]) -> dict[str, list[float]]:
 def day(record: DayRecord, heads: Sequence[DayHead]) -> dict[str, Any]:
     """All plain facts of a day; `heads` are the days of its region and year, for the scales."""
     region = record.region
-    notices = list(record.origin.warnings)
-    if record.origin.simulated and sentences.INVENTED not in notices:
-        notices.insert(0, sentences.INVENTED)
-    if record.head.provisional:
-        notices.insert(0, sentences.GOES_ON)
+    warnings = record.origin.warnings
+    first = sentences.notices(record.origin.simulated, record.head.provisional)
+    notices = [*(one for one in first if one not in warnings), *warnings]
     return {
         **_head(record.head),
         "warnings": notices,
@@ -412,7 +410,7 @@ def _harmless(value: Any) -> Any:
     return "'" + value if isinstance(value, str) and value[:1] in ("=", "+", "@", "-", "\t") else value
 
 
-def flags_geojson(table: Sequence[Flag], name: str, simulated: bool) -> Response:
+def flags_geojson(table: Sequence[Flag], name: str, about: Mapping[str, Any]) -> Response:
     """The flags of a day as GeoJSON (RFC 7946): points, and lines for those with a track; longitude first."""
     features = []
     for flag in table:
@@ -422,7 +420,7 @@ def flags_geojson(table: Sequence[Flag], name: str, simulated: bool) -> Response
             geometry = event_files.line([p[2] for p in flag.track], [p[1] for p in flag.track])
             facts["track_utc"] = [utc(p[0]) for p in flag.track]
         features.append({"type": "Feature", "geometry": geometry, "properties": facts})
-    content = {"type": "FeatureCollection", "simulated": simulated, "features": features}
+    content = {"type": "FeatureCollection", **about, "features": features}
     answer = reply(content, headers=_download(f"{name}-flags.geojson"))
     answer.headers["Content-Type"] = "application/geo+json"
     return answer

@@ -5,6 +5,7 @@ Never decides a state: it says the stored one in words, names what stands behind
 
 import math
 from collections.abc import Sequence
+from typing import Any
 
 from skylag.tables import BROKEN, HOLDS, STATE_NAMES, UNSEEN, Thresholds
 from skylag.web.nearby import NearFlag
@@ -18,6 +19,22 @@ GOES_ON = "This day goes on: more files are to come, and what is said of it may 
 OUTSIDE = "Unseen here: the place lies outside the map of this region."
 _NOT_COVERED = "Treat it as not covered."
 _EIGHT = ("north", "north-east", "east", "south-east", "south", "south-west", "west", "north-west")
+
+
+def notices(simulated: bool, provisional: bool) -> list[str]:
+    """What must be known of a day before its numbers are used: that it goes on, that it is invented."""
+    return [text for text, holds in ((GOES_ON, provisional), (INVENTED, simulated)) if holds]
+
+
+def about(simulated: bool, provisional: bool) -> dict[str, Any]:
+    """The members that a JSON or GeoJSON file of a day carries beside its table."""
+    told = notices(simulated, provisional)
+    return {"simulated": simulated, "provisional": provisional, "notices": told, "caution": CAUTION}
+
+
+def description(region: str, simulated: bool, provisional: bool) -> str:
+    """The same in words, for files that have a place for text."""
+    return " ".join([f"{region}.", *notices(simulated, provisional), CAUTION])
 
 
 def of_state(

@@ -3,14 +3,16 @@
 Worked out from the maps and flags that are kept, when asked.
 """
 
+from typing import Any
+
 from fastapi import APIRouter, Request
 from fastapi.responses import Response
 
-from skylag.archive import Archive, SiteStates
+from skylag.archive import Archive, DayRecord, SiteStates
 from skylag.events import Arrival, Event
 from skylag.formats import events as event_files
 from skylag.impact import arrivals, events, uses
-from skylag.web import asking, payloads
+from skylag.web import asking, payloads, sentences
 
 router = APIRouter()
 
@@ -43,24 +45,28 @@ def states_for(request: Request, region: str, day: str, use: str, version: int |
     return payloads.reply({"use": wanted.name, **payloads.site_states(table), "evidence": evidence})
 
 
+def _about(record: DayRecord) -> dict[str, Any]:
+    return sentences.about(record.origin.simulated, record.head.provisional)
+
+
 def _found(
     archive: Archive, region: str, day: str, use: str, version: int | None
-) -> tuple[tuple[Event, ...], bool]:
-    """The events of a stored day, for a use or by its own states; and whether the day is invented."""
+) -> tuple[tuple[Event, ...], dict[str, Any]]:
+    """The events of a stored day, for a use or by its own states; and what is to be known of the day."""
     record = archive.day(region, asking.day(day), version)
     fields = archive.fields(region, record.head.day, version=record.head.version)
     flags = archive.flags(region, record.head.day, record.head.version)
     if not use:
-        return events.of_day(fields, flags, record.region), record.origin.simulated
+        return events.of_day(fields, flags, record.region), _about(record)
     judged = uses.judge_for(uses.find_use(record.region, use), fields, flags, record.region)
-    return events.of_use(judged, fields, flags, record.region), record.origin.simulated
+    return events.of_use(judged, fields, flags, record.region), _about(record)
 
 
 @router.get("/api/days/{region}/{day}/events", summary="Events of a day")
 def listed(request: Request, region: str, day: str, use: str = "", version: int | None = None) -> Response:
     """Stretches of strained or broken cells with extent, worst value, cause; by the day's own states without `use`."""
-    found, simulated = _found(request.app.state.archive, region, day, use, version)
-    return Response(event_files.to_json(found, simulated), media_type="application/json")
+    found, about = _found(request.app.state.archive, region, day, use, version)
+    return Response(event_files.to_json(found, about), media_type="application/json")
 
 
 @router.get("/api/days/{region}/{day}/events.csv", summary="Events of a day as CSV")
@@ -73,25 +79,25 @@ def as_table(request: Request, region: str, day: str, use: str = "", version: in
 @router.get("/api/days/{region}/{day}/events.geojson", summary="Events of a day as GeoJSON")
 def as_shapes(request: Request, region: str, day: str, use: str = "", version: int | None = None) -> Response:
     """The same as boxes."""
-    found, simulated = _found(request.app.state.archive, region, day, use, version)
-    return Response(event_files.to_geojson(found, simulated), media_type="application/geo+json")
+    found, about = _found(request.app.state.archive, region, day, use, version)
+    return Response(event_files.to_geojson(found, about), media_type="application/geo+json")
 
 
 def _told(
     archive: Archive, region: str, day: str, site: str, version: int | None
-) -> tuple[list[Arrival], list[int], bool]:
-    """Forecasts of a stored day, row numbers of the flags that are its fronts, and whether the day is invented."""
+) -> tuple[list[Arrival], list[int], dict[str, Any]]:
+    """Forecasts of a stored day, row numbers of the flags that are its fronts, and what is to be known of the day."""
     record = archive.day(region, asking.day(day), version)
     rows = arrivals.flag_rows(archive.flags(region, record.head.day, record.head.version))
     told = [one for one in arrivals.of_facts(record.origin.counts) if site in ("", one.place)]
-    return told, rows, record.origin.simulated
+    return told, rows, _about(record)
 
 
 @router.get("/api/days/{region}/{day}/arrivals", summary="When fronts were foretold at the sites, and what came of it")
 def foretold(request: Request, region: str, day: str, site: str = "", version: int | None = None) -> Response:
     """Forecasts for the hour ahead, made each quarter hour from what was seen until then; of one site with `site`."""
-    told, rows, simulated = _told(request.app.state.archive, region, day, site, version)
-    return Response(event_files.arrivals_to_json(told, rows, simulated), media_type="application/json")
+    told, rows, about = _told(request.app.state.archive, region, day, site, version)
+    return Response(event_files.arrivals_to_json(told, rows, about), media_type="application/json")
 
 
 @router.get("/api/days/{region}/{day}/arrivals.csv", summary="Foretold arrivals of fronts as CSV")
