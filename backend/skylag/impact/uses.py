@@ -12,7 +12,8 @@ the neighbourhood follows, `single` by what the broadcast model leaves.  Publish
 - satellite: vertical delay about the plane through all within 800 km, whose nominal spread is 0.35 m (Walter et al.
   2000, from memory): `strained` from 2 of these, `broken` from 3.29, the bound at 0.1 % that such services announce.
   A ragged patch is `broken` where the chi-square test of the planar fit through the lines of sight around it fails, as
-  the service then stops correcting there, and `strained` where it passes.
+  the service then stops correcting there, and `strained` where it passes with 30 lines of sight or more and residuals
+  not smaller than their sigmas allow; any other pass says nothing.
 - single: vertical error that the broadcast model leaves: `strained` from 4.5 m, the standard error that receivers take
   for it at middle latitudes, `broken` from 9 m, what they take near the equator (RTCA DO-229, appendix J.2.3).  Without
   the model at hand half of the delay: it is designed to remove half (IS-GPS-200, 20.3.3.5.2.5).
@@ -20,10 +21,12 @@ the neighbourhood follows, `single` by what the broadcast model leaves.  Publish
 Never turns `unseen` into `holds`; a warning that reaches an unseen place stays a warning.  Not for navigation.
 """
 
+import re
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy.stats import chi2
 
 from skylag.constants import L1_M_PER_TECU
 from skylag.errors import Refused
@@ -70,6 +73,9 @@ PUBLISHED = (
     Use("single frequency", "single"),
 )
 BETWEEN = -2
+_PASSED = re.compile(rf"\b{PLANAR_PASSES} \(chi-square (?P<chi_square>\d+), limit (?P<limit>\d+)\)")
+_LEAST_LINES = 30
+_LIMITS = chi2.ppf(1.0 - 1e-3, np.arange(1, 2001))  # of the planar-fit test, by degrees of freedom: lines less 3
 _SEARCH_KM = 150.0  # a warned cell belongs to the wall whose line is nearest, within this
 
 
@@ -282,6 +288,20 @@ def _away_km(flag: Flag, lat: Floats, lon: Floats, time: np.datetime64) -> Float
     return np.asarray(np.abs(east * np.sin(heading_rad) + north * np.cos(heading_rad) - way))
 
 
+def plane_holds(evidence: str) -> bool:
+    """Does a patch's evidence tell of a passed planar fit that means something?
+
+    A few lines of sight, or sigmas far above the residuals, pass any test.  So the limit must be that of 30 lines, the
+    number such services seek (Walter et al. 2000, from memory), and chi-square no lower than its own 0.1 % point.
+    """
+    told = _PASSED.search(evidence)
+    if told is None:
+        return False
+    chi_square, limit = float(told["chi_square"]), float(told["limit"])
+    degrees = int((limit + 0.5 >= _LIMITS).sum())  # both are told in whole numbers
+    return degrees >= _LEAST_LINES - 3 and float(chi2.ppf(1e-3, degrees)) <= chi_square <= limit
+
+
 def flag_state(use: Use, flag: Flag, limits: tuple[float, float], choices: JudgeChoices | None = None) -> int:
     """The state that a confirmed flag gives to places it reaches, for a use; UNSEEN where it says nothing to it."""
     choices = choices or JudgeChoices()
@@ -290,7 +310,7 @@ def flag_state(use: Use, flag: Flag, limits: tuple[float, float], choices: Judge
         own = STATE_NAMES.index(flag.state)
         if use.kind == "satellite" and PLANAR_FAILS in flag.evidence:
             return BROKEN  # the service's own test finds no plane there: it stops correcting
-        if use.kind == "satellite" and PLANAR_PASSES in flag.evidence:
+        if use.kind == "satellite" and plane_holds(flag.evidence):
             return min(own, STRAINED)
         return min(own, STRAINED) if use.kind == "single" else own
     spread = flag.sigma_mm_per_km if np.isfinite(flag.sigma_mm_per_km) else 0.0
