@@ -201,7 +201,7 @@ def test_level_of_one_receiver_on_a_real_day(open_data: Path, evidence: Evidence
     evidence("ZIMM 2015-08-23: receiver bias, satellites held; modified single layer, no high layer", source=source,
              expected=told[0], got=value[0], tolerance=0.25, unit="ns")  # fmt: skip
     # 1.5 ns is fixed, so that no larger sigma makes it easier; ours is off by four of its own.
-    evidence("ZIMM 2015-08-23: receiver bias, satellites held; single layer and high layer (1.2 ns off is 4 own sigmas)",
+    evidence("ZIMM 2015-08-23: receiver bias, satellites held; single and high layer (1.2 ns off is 4 own sigmas)",
              source=f"{source}; within 1.5 ns: a bound of this project", expected=told[0], got=value[1], tolerance=1.5,
              unit="ns")  # fmt: skip
     assert 3.5 < abs(value[1] - told[0]) / sigma[1] < 4.5, "what the row above and the known limits tell"
