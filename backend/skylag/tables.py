@@ -537,6 +537,16 @@ class Fields:
         return replace(self, times=self.times[first:last], **layers)
 
 
+def cells_at(lats: Floats, lons: Floats, lat: Floats, lon: Floats) -> tuple[Ints, Ints, Bools]:
+    """Row and column (P,) of the cell of a map that is nearest to places, and whether the place is on the map at all:
+    within half a step of that cell's middle (and 0.1 m), whole turns of longitude aside.  The only such rule."""
+    steps = [abs(float(axis[1] - axis[0])) for axis in (lats, lons) if len(axis) > 1] or [1.0]
+    turn = np.abs((lon[:, None] - lons[None, :] + 180.0) % 360.0 - 180.0)
+    row, column = np.abs(lat[:, None] - lats[None, :]).argmin(axis=1), turn.argmin(axis=1)
+    inside = np.abs(lat - lats[row]) <= 0.5 * steps[0] + 1e-6
+    return row, column, np.asarray(inside & (turn.min(axis=1) <= 0.5 * steps[-1] + 1e-6))
+
+
 @dataclass(frozen=True)
 class Flag:
     """One place and span where corrections are doubtful or data are at fault: a row of flags.csv.

@@ -24,6 +24,7 @@ from skylag.tables import (
     Thresholds,
     Times,
     Use,
+    cells_at,
 )
 
 
@@ -81,14 +82,8 @@ class DayRecord:
 
     def cell_of(self, lat: float, lon: float) -> tuple[int, int] | None:
         """Row and column of the cell that holds a place, None outside the grid.  Cells reach half a step around."""
-        half = 0.5 * self.region.step_deg + 1e-9
-        middle = 0.5 * (self.lons[0] + self.lons[-1])
-        near_lon = lon - 360.0 * np.round((lon - middle) / 360.0)
-        row = int(np.argmin(np.abs(self.lats - lat)))
-        column = int(np.argmin(np.abs(self.lons - near_lon)))
-        if abs(self.lats[row] - lat) > half or abs(self.lons[column] - near_lon) > half:
-            return None
-        return row, column
+        row, column, inside = cells_at(self.lats, self.lons, np.array([lat]), np.array([lon]))
+        return (int(row[0]), int(column[0])) if inside[0] else None
 
 
 @dataclass(frozen=True)

@@ -43,6 +43,7 @@ from skylag.tables import (
     SlopeClaim,
     Slopes,
     Thresholds,
+    cells_at,
 )
 
 NOTHING = float("nan")
@@ -344,14 +345,7 @@ def _judge_sites(
 
 def nearest_cells(fields: Fields, lat: Floats, lon: Floats) -> tuple[Any, Any, Bools]:
     """Row and column of the cell of each place, and whether the map reaches it."""
-    half_lat = 0.5 * abs(float(fields.lats[1] - fields.lats[0])) if len(fields.lats) > 1 else 0.5
-    half_lon = 0.5 * abs(float(fields.lons[1] - fields.lons[0])) if len(fields.lons) > 1 else 0.5
-    row = np.abs(lat[:, None] - fields.lats[None, :]).argmin(axis=1)
-    turn = np.abs((lon[:, None] - fields.lons[None, :] + 180.0) % 360.0 - 180.0)
-    column = turn.argmin(axis=1)
-    inside = np.abs(lat - fields.lats[row]) <= half_lat * 1.001
-    inside &= turn.min(axis=1) <= half_lon * 1.001
-    return row, column, np.asarray(inside)
+    return cells_at(fields.lats, fields.lons, lat, lon)
 
 
 def _field_sentence(

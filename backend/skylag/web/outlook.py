@@ -15,7 +15,7 @@ from skylag.errors import Missing, Refused
 from skylag.impact import outlook_advice, uses
 from skylag.ionosphere import outlook as science
 from skylag.jobs import hindcast
-from skylag.tables import Floats, Outlook, Region
+from skylag.tables import Floats, Outlook, Region, cells_at
 from skylag.web import asking, payloads
 
 router = APIRouter()
@@ -87,9 +87,7 @@ def of_place(
     lat, lon = asking.place(lat, lon)
     made = kept.outlook
     wanted = uses.find_use(region, use) if use else uses.uses_of(region)[0]
-    half = 0.5 * region.step_deg + 1e-9
-    east = (lon - region.lons[0] + half) % 360.0
-    if not region.lats[0] - half <= lat <= region.lats[-1] + half or east > region.lons[-1] - region.lons[0] + 2 * half:
+    if not cells_at(region.lats, region.lons, np.array([lat]), np.array([lon]))[2][0]:
         raise Refused(
             f"{lat}, {lon} lies outside the map of {region.name}: nothing can be told there; choose a place inside",
             name="lat, lon", value=f"{lat}, {lon}", allowed="a place inside the map",
