@@ -47,6 +47,18 @@ def test_kp_and_ap(evidence: Evidence) -> None:
                  expected=ap, got=float(ap_of_kp(np.array([kp]))[0]), tolerance=0, unit="2 nT")  # fmt: skip
 
 
+def test_the_line_of_an_error_is_counted_in_the_file() -> None:
+    """Comments and empty lines count too."""
+    good = "2031-05-10,2031-05-11,12\n"
+    text = f"# by hand\n\nmade_utc,day,ap\n{good}# a remark\n\n2031-05-10,2031-05-12,twelve\n{good}"
+    with pytest.raises(FormatError, match="twelve") as told:
+        parse(text.encode(), "file")
+    assert told.value.details["line"] == 7
+    with pytest.raises(FormatError, match="made_utc is lacking") as told:
+        parse(f"# by hand\n\nday,ap\n{good}".encode(), "file")
+    assert told.value.details["line"] == 3
+
+
 @pytest.mark.parametrize(
     ("text", "said"),
     [

@@ -45,7 +45,11 @@ _Row = tuple[np.datetime64, np.datetime64, Floats]
 
 
 def _table(text: str, name: str) -> list[_Row]:
-    lines = [line for line in text.splitlines() if line.strip() and not line.startswith("#")]
+    numbered = [
+        (number, line) for number, line in enumerate(text.splitlines(), start=1)
+        if line.strip() and not line.startswith("#")
+    ]  # fmt: skip
+    lines = [line for _, line in numbered]
     columns = [word.strip().lower() for word in lines[0].split(",")] if lines else []
     index = next((one for one in ("ap", "kp") if one in columns or f"{one}1" in columns), None)
     wanted = [] if index is None else [index] if index in columns else [f"{index}{n}" for n in range(1, 9)]
@@ -54,10 +58,11 @@ def _table(text: str, name: str) -> list[_Row]:
         raise FormatError(
             f"{name}: is no outlook of activity; write a first line `made_utc,day,ap` (or kp, or ap1 to ap8, or kp1 to "
             f"kp8) and a line for each day{f'; {chr(44).join(lacking)} is lacking' if lacking and wanted else ''}",
-            path=name, line=1,
+            path=name, line=numbered[0][0] if numbered else 1,
         )  # fmt: skip
     rows: list[_Row] = []
-    for number, row in enumerate(csv.DictReader(lines), start=1):
+    reader = csv.DictReader(lines)
+    for row in reader:
         told = {(key or "").strip().lower(): (value or "").strip() if isinstance(value, str) else "" for key, value in
                 row.items()}  # fmt: skip
         try:
@@ -70,9 +75,10 @@ def _table(text: str, name: str) -> list[_Row]:
             if np.isnat(made) or np.isnat(day):
                 raise ValueError("a time is not told")
         except ValueError as cause:
+            number, line = numbered[reader.line_num - 1]
             raise FormatError(
-                f"{name}: {lines[number][:60]!r} is no line like 2031-05-10T12:30Z,2031-05-11,12 ({cause})",
-                path=name, line=number + 1,
+                f"{name}: {line[:60]!r} is no line like 2031-05-10T12:30Z,2031-05-11,12 ({cause})",
+                path=name, line=number,
             ) from cause  # fmt: skip
         rows.append((day, made, np.broadcast_to(ap_of_kp(values) if index == "kp" else values, 8)))
     return rows
