@@ -42,7 +42,7 @@ from skylag.impact.states import (
 from skylag.ionosphere.background import ERROR_SHARE, Background
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.geometry import mapping
-from skylag.ionosphere.slopes import MODEL_WIDTH_KM
+from skylag.ionosphere.slopes import MODEL_WIDTH_KM, NOMINAL_BOUND
 from skylag.tables import (
     BROKEN,
     HOLDS,
@@ -60,7 +60,6 @@ from skylag.tables import (
     Use,
 )
 
-NOMINAL_SLOPE = 4.0  # mm/km: Mayer et al. 2009, ION GNSS, 1091-1099
 BROADCAST_SLOPE = 25.5  # mm/km: 255 times 0.1, ICAO Annex 10, Appendix B to chapter 3
 PLANE_SPREAD_M, PLANE_KM = 0.35, 800.0  # Walter et al. 2000 (from memory)
 STRAINED_SPREADS, BROKEN_SPREADS = 2.0, 3.29  # 3.29: 99.9 %, as errors at grid points are announced
@@ -134,7 +133,7 @@ def limits_of(use: Use, shell_height_m: float = 400e3) -> tuple[float, float, st
         eaten = use.spare_mm / use.baseline_km
         return eaten / float(mapping(use.elevation_deg, shell_height_m)), eaten, unit
     if use.kind == "ground":
-        return NOMINAL_SLOPE, BROADCAST_SLOPE, unit
+        return NOMINAL_BOUND, BROADCAST_SLOPE, unit
     if use.kind == "satellite":
         return STRAINED_SPREADS * PLANE_SPREAD_M, BROKEN_SPREADS * PLANE_SPREAD_M, unit
     return MODEL_SIGMA_M, MODEL_WORST_M, unit

@@ -37,6 +37,7 @@ from skylag.ionosphere.phase_steps import (
     widened,
     worth_a_look,
 )
+from skylag.ionosphere.slopes import MODEL_SPEED_M_S, MODEL_WORST
 from skylag.tables import ARC_BEGAN, Bools, Floats, Ints, Observations
 
 FIRST, GAP, SLIP, RESET = (ARC_BEGAN.index(word) for word in ("first", "gap", "slip", "reset"))
@@ -44,7 +45,7 @@ FIRST, GAP, SLIP, RESET = (ARC_BEGAN.index(word) for word in ("first", "gap", "s
 # No wall of the published threat space changes slant content faster: 425 mm/km (Datta-Barua et al. 2010) at 750 m/s
 # (from memory) is 0.32 m/s of delay on 1575.42 MHz.  What does is a slip or a fault.  Seen were 0.35 TECU/s (J. Global
 # Positioning Systems 2018, 16:5); a limit there tears walls of 200 mm/km at 300 m/s to pieces.
-FASTEST_TECU_S = 0.425 * 0.75 / L1_M_PER_TECU
+FASTEST_TECU_S = MODEL_WORST * MODEL_SPEED_M_S[1] / 1e6 / L1_M_PER_TECU
 _AGREE = 16.0  # chi-square of three steps about the whole numbers that explain them
 
 

@@ -29,19 +29,23 @@ from skylag.tables import SLOPE_WAYS, Bools, Fields, Floats, Ints, Rays, Receive
 MM_PER_TECU = L1_M_PER_TECU * 1000.0  # 162.372448 mm of delay on 1575.42 MHz per TECU
 PAIR, PAIR_CHANGE, PATH, FIELD = (SLOPE_WAYS.index(way) for way in SLOPE_WAYS)
 
-# Published bounds of anomalous slant slopes [mm/km on L1], as constants with their source.
+# Published bounds of slant slopes [mm/km on L1], with their source.  The nominal bound is a limit of `impact.uses`;
+# those of the threat model give `model_bound`, the narrowest wall of `impact.uses` and the fastest change of content
+# that `slips` lets an arc hold through.
 NOMINAL_BOUND = 4.0  # quiet mid-latitude bound: Mayer et al. 2009, ION GNSS, 1091-1099
 MODEL_WORST = 425.0  # conterminous United States threat model: Datta-Barua et al. 2010, Radio Sci. 45
 MODEL_LOW_ELEVATION = 375.0  # the same at 15 degrees; linear up to 65 degrees (from memory)
 MODEL_SPEED_M_S = (0.0, 750.0)  # (from memory)
 MODEL_WIDTH_KM = (25.0, 200.0)  # (from memory)
 MODEL_DELAY_M = 50.0  # largest change of delay across a wall (from memory)
+# For readers of a found slope: what was published of steeper skies.  Nothing is computed from these.
 BRAZIL_WORST = 850.7  # 1 March 2014, 9.72 km baseline: Yoon et al. 2017, NAVIGATION 64(3)
 BRAZIL_SPEED_M_S, BRAZIL_WIDTH_KM, BRAZIL_DELAY_M = (40.0, 250.0), (20.0, 450.0), 35.0  # the same source
 ASIA_PACIFIC_BOUND = 600.0  # Saito et al. 2017, GPS Solut. 21 (value from memory)
 
 # Slopes and delays here are on 1575.42 MHz; on another carrier they are so many times as large (square of the ratio of
 # frequencies: IS-GPS-200, 20.3.3.3.3.2, for the second; IS-GPS-705 and the Galileo and BeiDou signal documents).
+# A table for readers who work on another carrier: every slope of this program stays on the first.
 CARRIER_SCALE = {
     "1575.42 MHz": 1.0,
     "1561.098 MHz": (1575.42 / 1561.098) ** 2,
@@ -51,9 +55,6 @@ CARRIER_SCALE = {
     "1207.14 MHz": (154.0 / 118.0) ** 2,
     "1176.45 MHz": (154.0 / 115.0) ** 2,
 }
-# Parts per million by which positions on one carrier shrink a baseline per TECU of vertical content, for cut-offs near
-# 15 to 20 degrees: Beutler et al. 1988 (from memory).
-SHRINKS_PPM_PER_TECU = 0.10
 
 
 def model_bound(elevation_deg: Floats) -> Floats:
