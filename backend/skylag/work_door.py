@@ -35,7 +35,10 @@ def add(
     watch = commands.add_parser("watch", help="follow a folder where today's files appear", epilog=caution)
     watch.add_argument("folder", type=Path, metavar="DIR")
     watch.add_argument("--alerts", type=Path, metavar="FILE", help="rules of alerts, [[alert]] entries")
-    watch.add_argument("--silent", type=minutes, default=45.0, metavar="MINUTES", help="silent after so long (45)")
+    watch.add_argument(
+        "--silent", type=minutes, default=45.0, metavar="MINUTES",
+        help="silent after so long (45), or 15 more than its files span",
+    )  # fmt: skip
     for parser in (adding, watch):
         parser.add_argument("--region", type=Path, metavar="FILE", help="region.toml; without it, around the receivers")
         parser.add_argument("--every", type=minutes, default=5.0, metavar="MINUTES", help="a map every 1 to 60 min (5)")

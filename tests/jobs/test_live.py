@@ -85,11 +85,22 @@ def test_silence_is_told_once_and_ends() -> None:
 
 
 def test_who_sends_hours_is_silent_after_an_hour_and_a_quarter() -> None:
-    came = [FileCame("f", DAY, at("10:00:05"), 3600.0), Tick(at("10:00:15")), DayMade(DAY, {"A": at("10:00")})]
+    came = [FileCame("f", DAY, at("10:00:05"), 3600.0, "A"), Tick(at("10:00:15")), DayMade(DAY, {"A": at("10:00")})]
     assert replay([*came, Tick(at("11:14:50"))]) == [Make(DAY, False)]
     assert replay([*came, Tick(at("11:15:00"))])[1] == Fell("A", at("10:00"))
-    quarter = [FileCame("f", DAY, at("10:00:05"), 900.0), *came[1:]]
+    quarter = [FileCame("f", DAY, at("10:00:05"), 900.0, "A"), *came[1:]]
     assert replay([*quarter, Tick(at("10:45:00"))])[1] == Fell("A", at("10:00")), "45 minutes are more"
+
+
+def test_a_file_of_an_hour_delays_the_silence_of_its_own_receiver_alone_and_not_for_good() -> None:
+    made = DayMade(DAY, {"A": at("10:00"), "B": at("10:00")})
+    hour = [FileCame("f", DAY, at("10:00:05"), 3600.0, "A"), Tick(at("10:00:15")), made]
+    asked = replay([*hour, Tick(at("10:45")), Tick(at("11:14")), Tick(at("11:15"))])
+    assert asked[1] == Fell("B", at("10:00")) and Fell("A", at("10:00")) in asked[2:]
+    assert Fell("A", at("10:00")) not in replay([*hour, Tick(at("10:45")), Tick(at("11:14"))])
+    whole = [FileCame("day", DAY, at("10:00:20"), 0.0, "A"), Tick(at("10:00:30")), made]
+    assert Fell("A", at("10:00")) in replay([*hour, *whole, Tick(at("10:45"))]), "it no longer sends hours"
+    assert step(State(), FileCame("nav", None, at("10:00"), 3600.0), Patience())[0].spans == {}
 
 
 @pytest.mark.parametrize(
@@ -126,6 +137,9 @@ def test_unseen_until_now() -> None:
     assert np.isnan(made.fields.vtec[new]).all() and (made.site_states[new] == UNSEEN).all()
     assert {one[-1] for one in made.site_reasons} == {"no data since 2031-05-11T09:45 GPS time"}
     np.testing.assert_array_equal(made.fields.vtec[~new], early.fields.vtec)
+    own = {one.name: 4500.0 for one in early.samples.rays.receivers}
+    assert live.unseen_until(early, at("10:45", STORM_DAY), 2700.0, own) is early
+    assert len(live.unseen_until(early, at("11:00", STORM_DAY), 2700.0, own).fields.times) > kept.sum()
     end = live.unseen_until(early, at("12:00", STORM_DAY + 1), 2700.0)
     assert end.fields.times[-1] == at("23:45", STORM_DAY), "not past the end of the day"
 
@@ -149,6 +163,10 @@ def test_the_surroundings_of_a_silent_receiver_turn_unseen_and_come_back() -> No
     gannet = made.site_states[:, 1] != day.site_states[:, 1]  # some 60 km from GULL, 70 from HULL
     assert gannet.any() and made.site_reasons[1][int(np.flatnonzero(gannet)[0])].startswith("GULL, the nearest")
     assert live.silent_areas(day, 2700.0) is day
+    slow = live.silent_areas(gap, 2700.0, {"GULL": 4500.0, "HULL": 60.0 * 86400.0})
+    late = day.fields.times[(slow.fields.state != day.fields.state).any(axis=(1, 2))]
+    assert late[0] > at("10:15", STORM_DAY) - np.timedelta64(1, "s"), "its own span"
+    assert (slow.fields.state == UNSEEN).sum() < (made.fields.state == UNSEEN).sum()
 
 
 # ---------------------------------------------------------------------------------------------- the folder

@@ -29,13 +29,15 @@ class Glance(NamedTuple):
     """What a file is.
 
     kind as `formats.kind_of` says, or "empty"; mark: name, sha256, bytes; day: of the first observation, or None;
-    invented: the header says that the data are invented.
+    invented: the header says that the data are invented; marker: the name of the receiver's place that the header of
+    an observation file tells, or "".
     """
 
     kind: str
     mark: dict[str, Any]
     day: np.datetime64 | None
     invented: bool = False
+    marker: str = ""
 
 
 def glance(path: Path) -> Glance:
@@ -56,7 +58,9 @@ def glance(path: Path) -> Glance:
         return Glance("unknown", mark, None)
     kind = kind_of(head)
     observed = kind == "observations"
-    return Glance(kind, mark, _first_day(head) if observed else None, observed and _INVENTED in head)
+    if not observed:
+        return Glance(kind, mark, None)
+    return Glance(kind, mark, _first_day(head), _INVENTED in head, _marker(head))
 
 
 def _head(data: bytes) -> bytes:
@@ -106,6 +110,15 @@ def _first_day(head: bytes) -> np.datetime64 | None:
         if line[60:80].strip() == b"END OF HEADER":
             return None
     return None
+
+
+def _marker(head: bytes) -> str:
+    """The header's MARKER NAME."""
+    for line in head.splitlines():
+        label = line[60:80].strip()
+        if label in (b"MARKER NAME", b"END OF HEADER"):
+            return line[:60].decode("ascii", "replace").strip() if label == b"MARKER NAME" else ""
+    return ""
 
 
 class _Peek(io.BytesIO):

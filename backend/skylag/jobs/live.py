@@ -54,12 +54,14 @@ class Patience:
 @dataclass(frozen=True)
 class FileCame:
     """A file is whole or has changed: its path, the GPS-time day it begins on (None for orbits and biases), now, and
-    the span [s] that its name says it covers, 0 where that is not told or is more than an hour."""
+    the span [s] that its name says it covers, 0 where that is not told or is more than an hour; the receiver whose
+    observations it holds, "" for none."""
 
     path: str
     day: np.datetime64 | None
     now: np.datetime64
     span_s: float = 0.0
+    receiver: str = ""
 
 
 @dataclass(frozen=True)
@@ -100,14 +102,21 @@ Asked = Make | Fell
 @dataclass(frozen=True)
 class State:
     """What is known: days that go on, when their files began and last came (not computed yet), last data of receivers,
-    who is silent, the longest span of a file."""
+    who is silent, the span [s] of each receiver's latest file."""
 
     open_days: frozenset[np.datetime64] = frozenset()
     waiting: Mapping[np.datetime64, tuple[np.datetime64, np.datetime64]] = field(default_factory=dict)
     last: Mapping[str, np.datetime64] = field(default_factory=dict)
     silent: frozenset[str] = frozenset()
     told: Mapping[np.datetime64, np.datetime64] = field(default_factory=dict)  # day -> when silence was last drawn
-    span_s: float = 0.0
+    spans: Mapping[str, float] = field(default_factory=dict)
+
+
+def limit_of(receiver: str, spans: Mapping[str, float], patience: Patience) -> float:
+    """After how long [s] without data a receiver is silent: what is asked for, but never while its next file, of the
+    span of its latest one, is not overdue."""
+    span_s = spans.get(receiver, 0.0)
+    return max(patience.silent_s, span_s + patience.late_s if span_s else 0.0)
 
 
 def step(state: State, event: Event, patience: Patience) -> tuple[State, tuple[Asked, ...]]:
@@ -120,8 +129,8 @@ def step(state: State, event: Event, patience: Patience) -> tuple[State, tuple[A
         for day in days:
             first, _ = waiting.get(day, (event.now, event.now))
             waiting[day] = (first, event.now)
-        span_s = max(state.span_s, event.span_s)
-        return replace(state, open_days=state.open_days | days, waiting=waiting, span_s=span_s), ()
+        spans = {**state.spans, event.receiver: event.span_s} if event.receiver else state.spans
+        return replace(state, open_days=state.open_days | days, waiting=waiting, spans=spans), ()
     if isinstance(event, DayMade):
         last = {**state.last}
         for name, time in event.last.items():
@@ -135,10 +144,10 @@ def step(state: State, event: Event, patience: Patience) -> tuple[State, tuple[A
             asked.append(Make(day, False))
             del waiting[day]
     # Files that came and are not computed yet may be of one who seems silent: that is asked at the next tick.
-    silent_s = max(patience.silent_s, state.span_s + patience.late_s if state.span_s else 0.0)
     fallen = {
         name: time for name, time in state.last.items()
-        if name not in state.silent and event.now - time >= _s(silent_s) and not state.waiting
+        if name not in state.silent and not state.waiting
+        and event.now - time >= _s(limit_of(name, state.spans, patience))
     }  # fmt: skip
     asked += [Fell(name, time) for name, time in sorted(fallen.items())]
     silent = state.silent | fallen.keys()
@@ -155,7 +164,7 @@ def step(state: State, event: Event, patience: Patience) -> tuple[State, tuple[A
             asked.append(Make(today, False))
     told = {day: time for day, time in told.items() if day not in over}
     known = {name: t for name, t in state.last.items() if event.now - t < patience.days_back * _DAY}
-    new = State(state.open_days - over, waiting, known, frozenset(silent & known.keys()), told, state.span_s)
+    new = State(state.open_days - over, waiting, known, frozenset(silent & known.keys()), told, state.spans)
     return new, tuple(asked)
 
 
@@ -163,11 +172,17 @@ def _s(seconds: float) -> np.timedelta64:
     return np.timedelta64(round(seconds * 1e9), "ns")
 
 
-def unseen_until(products: Products, now: np.datetime64, silent_s: float) -> Products:
+def unseen_until(
+    products: Products, now: np.datetime64, silent_s: float, limits: Mapping[str, float] | None = None
+) -> Products:
     """The day with maps that say unseen from the last one on until now, where none came for longer than a span.
 
+    limits  receiver -> span [s] where it has one of its own: the shortest of all that gave data counts
     Pure; never past the end of the day.
     """
+    used = np.unique(products.samples.rays.receiver)
+    names = [products.samples.rays.receivers[number].name for number in used]
+    silent_s = min(((limits or {}).get(name, silent_s) for name in names), default=silent_s)
     times = products.fields.times
     until = min(now, (products.day + _DAY).astype("datetime64[ns]") - np.timedelta64(1, "ns"))
     if not len(times) or until - times[-1] < _s(silent_s):
@@ -192,11 +207,13 @@ def unseen_until(products: Products, now: np.datetime64, silent_s: float) -> Pro
     )
 
 
-def silent_areas(products: Products, silent_s: float) -> Products:
+def silent_areas(products: Products, silent_s: float, limits: Mapping[str, float] | None = None) -> Products:
     """The day with cells and sites unseen, where they would hold, while the receiver nearest to them is silent.
 
     Silent: it gave data before, and none for longer than a span.  Neighbours may still look across such a place from
     afar, but what is small and near the ground of the silent one would pass unnoticed.  Warnings stay.  Pure.
+
+    limits  receiver -> span [s] where it has one of its own
     """
     fields, rays, region = products.fields, products.samples.rays, products.region
     receivers = rays.receivers
@@ -204,12 +221,13 @@ def silent_areas(products: Products, silent_s: float) -> Products:
         return products
     silent = np.zeros((len(fields.times), len(receivers)), dtype=bool)
     since = np.zeros(silent.shape, dtype="datetime64[ns]")
-    for number in range(len(receivers)):
+    for number, receiver in enumerate(receivers):
+        limit = _s((limits or {}).get(receiver.name, silent_s))
         had = np.unique(rays.time[rays.receiver == number])
         before = np.searchsorted(had, fields.times, side="right") - 1
         known = before >= 0
         since[known, number] = had[before[known]]
-        silent[known, number] = fields.times[known] - since[known, number] > _s(silent_s)
+        silent[known, number] = fields.times[known] - since[known, number] > limit
     if not silent.any():
         return products
     places = np.array([geodetic(np.asarray(one.position_m))[:2] for one in receivers], dtype=np.float64)
@@ -253,6 +271,11 @@ def span_of(name: str) -> float:
         return span_s if span_s <= 3600.0 else 0.0
     short = _SHORT_SPAN.match(name)
     return 0.0 if short is None else 900.0 if short.group(1) else 3600.0
+
+
+def marker_of(name: str) -> str:
+    """The receiver that a file's name tells: nine characters of long names, four of short ones."""
+    return name[:9].upper() if "_" in name[9:10] else name[:4].upper()
 
 
 class Folder:
@@ -348,7 +371,8 @@ class Watch:
             if isinstance(one, Make):
                 made += self._make(one)
             else:
-                self._log("receiver silent", receiver=one.receiver, since=str(one.since))
+                limit_s = limit_of(one.receiver, self.state.spans, self._patience)
+                self._log("receiver silent", receiver=one.receiver, since=str(one.since), after_s=limit_s)
                 told = alerts.silences(self._rules, one.receiver, one.since, self._now())
                 alerts.keep(self._archive, told, self._clock())
             self._owed = self._owed[1:]
@@ -376,7 +400,15 @@ class Watch:
             return
         self._days[str(path)] = found.day
         self._log("file came", file=path.name, kind=found.kind, day=str(found.day))
-        self._step(FileCame(str(path), found.day, self._now(), span_of(path.name)))
+        receiver = (found.marker or marker_of(path.name)) if found.kind == "observations" else ""
+        before = self.state.spans
+        self._step(FileCame(str(path), found.day, self._now(), span_of(path.name), receiver))
+        limit_s = limit_of(receiver, self.state.spans, self._patience)
+        if limit_s != limit_of(receiver, before, self._patience):
+            self._log(
+                "silence limit", receiver=receiver, after_s=limit_s, asked_s=self._patience.silent_s,
+                span_s=self.state.spans[receiver],
+            )  # fmt: skip
 
     def _make(self, asked: Make) -> int:
         """Compute a day from all its files and keep it; gives 1 where that went well."""
@@ -390,9 +422,12 @@ class Watch:
                 executor=self._executor, simulated=self._simulated,
                 earlier=work.earlier_biases(self._archive, self._choices.earlier_days),
             ).products  # fmt: skip
-            products = silent_areas(made, self._patience.silent_s)
+            # Of a day that is over no file is on its way.
+            spans = {} if asked.final else self.state.spans
+            limits = {name: limit_of(name, spans, self._patience) for name in spans}
+            products = silent_areas(made, self._patience.silent_s, limits)
             if not asked.final:
-                products = unseen_until(products, self._now(), self._patience.silent_s)
+                products = unseen_until(products, self._now(), self._patience.silent_s, limits)
             version = self._archive.save(products, provisional=not asked.final)
         except (*board.HOPELESS, Missing) as failure:  # the files themselves are at fault
             self._log("day not made", day=str(asked.day), why=failure.message)

@@ -119,7 +119,7 @@ def sort_inputs(paths: Iterable[Path]) -> Inputs:
     any_invented = False
     for path in _all_files(paths):
         try:
-            kind, mark, first_day, invented = glance(path)
+            kind, mark, first_day, invented = glance(path)[:4]
         except SkylagError as trouble:
             left_out.append(_left_out(path, trouble))
             continue
