@@ -1,14 +1,17 @@
 """The page in a real Chromium under the real headers: it draws, breaks no rule of the content policy, and asks no other
 host for anything."""
 
-import threading
+import subprocess
+import sys
 from collections.abc import Iterator
+from pathlib import Path
 from typing import Any
 
 import pytest
+from tests.builders import write_archive
+from tests.web.test_serve import PROGRAM, ROOT
 
-from skylag.archive import Archive
-from skylag.web.app import create_app, frontend_folder, serve
+from skylag.web.app import frontend_folder
 
 pytestmark = pytest.mark.browser
 
@@ -21,22 +24,24 @@ document.addEventListener("securitypolicyviolation",
 
 
 @pytest.fixture
-def address(small_archive: Archive) -> Iterator[str]:
-    """A server of the real page over the small archive, in a thread that ends with the tests."""
+def address(tmp_path: Path) -> Iterator[str]:
+    """A server of the real page over an archive of its own, in a process that ends with the test."""
     if not (frontend_folder() / "index.html").is_file():
         pytest.fail(f"the page's files are not at {frontend_folder()}")
-    told: list[str] = []
-    ready = threading.Event()
-
-    def tell(where: str) -> None:
-        told.append(where)
-        ready.set()
-
-    threading.Thread(
-        target=serve, args=(create_app(small_archive), "127.0.0.1", 0, tell), daemon=True
-    ).start()
-    assert ready.wait(20)
-    yield told[0]
+    place = str(write_archive(tmp_path))
+    process = subprocess.Popen([sys.executable, "-c", PROGRAM, place], cwd=ROOT, stdout=subprocess.PIPE, text=True)
+    try:
+        assert process.stdout is not None
+        where = process.stdout.readline().strip()
+        assert where.startswith("http://127.0.0.1:")
+        yield where
+    finally:
+        process.terminate()
+        try:
+            process.communicate(timeout=20)
+        except subprocess.TimeoutExpired:
+            process.kill()
+            process.communicate()
 
 
 def test_the_page_keeps_the_policy(address: str, browser: Any) -> None:
