@@ -82,6 +82,6 @@ export const SITE_WORDS = {
 const span = (minutes) => (minutes >= 90 ? `${(minutes / 60).toFixed(1)} h` : `${Math.round(minutes)} min`);
 
 export const GROUND_WORDS = {
-  day: (m) => `Ground-based augmentation: slope within nominal for ${span(m.within)}, beyond nominal for ${span(m.nominal)}, beyond what can be announced for ${span(m.announced)}, beyond the threat space for ${span(m.threat)}, not known for ${span(m.unseen)}.`,
+  day: (m) => `Ground-based augmentation: slope within nominal for ${span(m.within)}, beyond nominal for ${span(m.nominal)}, beyond what can be announced for ${span(m.announced)}, beyond the threat space for ${span(m.threat)}, under a warning beside that for ${span(m.warned)}, not known for ${span(m.unseen)}.`,
   next: (words) => `Next from this time on: ${words}.`,
 };

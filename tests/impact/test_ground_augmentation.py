@@ -7,10 +7,13 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from tests.conftest import Evidence
+from tests.impact.test_at_places import a_claim
+from tests.impact.test_states import REGION, flat_fields, nothing, some_patch
 from tests.impact.test_survey import DAY, TIMES, some_fields
 
 from skylag.errors import Refused
 from skylag.impact import ground_augmentation as ground
+from skylag.impact import states
 from skylag.impact.ground_augmentation import StationChoices
 from skylag.ionosphere.geometry import mapping
 from skylag.tables import BROKEN, HOLDS, STRAINED, UNSEEN, Flag, Site
@@ -52,7 +55,7 @@ def test_minutes_beyond_each_limit() -> None:
     fields.state[100:112] = UNSEEN
     found = ground.station_day(SITE, fields)
     exceeded = {"nominal": 45.0, "announced": 30.0, "threat": 15.0, "unseen": 60.0}
-    assert found.minutes == {"within": 1440.0 - 45.0 - 60.0, **exceeded}
+    assert found.minutes == {"within": 1440.0 - 45.0 - 60.0, "warned": 0.0, **exceeded}
     assert {one.what for one in found.exceeded} == {"nominal", "announced", "threat", "unseen"}
     first = next(one for one in found.exceeded if one.what == "nominal")
     assert (first.start, first.end) == (TIMES[10], TIMES[13])
@@ -147,9 +150,74 @@ def test_a_front_over_the_site_counts_with_its_own_slope() -> None:
     assert ground.station_day(SITE, fields, [a_front(False)]).minutes == quiet.minutes
 
 
+@pytest.mark.parametrize("code", [STRAINED, BROKEN])
+def test_a_warning_of_the_map_raises_where_its_slope_does_not(code: int) -> None:
+    fields = some_fields(2.0, 1.0)
+    fields.state[100:112] = code
+    found = ground.station_day(SITE, fields)
+    assert (found.state[100:112] == code).all()
+    assert found.minutes["within"] == 1440.0 - 60.0
+    assert found.minutes["warned"] == 60.0
+    assert found.minutes["unseen"] == 0.0
+    (told,) = found.exceeded
+    assert (told.what, told.start, told.end) == ("warned", TIMES[100], TIMES[112])
+    assert told.why.startswith(("strained by a warning", "broken by a warning")[code == BROKEN])
+
+
+@pytest.mark.parametrize("witness", ["claim", "patch"])
+def test_patches_and_slopes_between_receivers_count(witness: str) -> None:
+    """Over a quiet map of 2 ± 1 mm/km, judged as a day is; the site lies aside of its cell's middle."""
+    site = Site("Aside", -39.2, 145.72, "aerodrome")
+    fields = flat_fields(slope=2.0, sigma=1.0)
+    slopes, fronts, patches = nothing()
+    if witness == "claim":
+        slopes = replace(slopes, claims=(a_claim(fields, -39.27, 145.61),))
+    else:
+        patches = replace(patches, patches=(some_patch(),))
+    made = states.judge(fields, slopes, fronts, patches, replace(REGION, sites=(site,)))
+    quiet = ground.station_day(site, replace(fields, state=np.full_like(fields.state, HOLDS)))
+    assert (quiet.state == HOLDS).all()
+    found = ground.station_day(site, made.fields, made.flags)
+    assert (made.site_states[:, 0] >= STRAINED).any()
+    assert (found.state >= made.site_states[:, 0]).all()
+    assert found.minutes["warned"] > 0
+    assert found.minutes["within"] < quiet.minutes["within"]
+    words = "four pairs of three receivers agree" if witness == "claim" else "ragged content"
+    assert any(one.what == "warned" and words in one.why for one in found.exceeded)
+
+
+@settings(max_examples=50, deadline=None)
+@given(st.floats(0, 60), st.floats(0.01, 10), st.sampled_from([UNSEEN, HOLDS, STRAINED, BROKEN]))
+def test_never_better_than_the_map(slope: float, sigma: float, code: int) -> None:
+    fields = some_fields(slope, sigma)
+    fields.state[:] = code
+    found = ground.station_day(SITE, fields, [a_front()])
+    assert (found.state != HOLDS).all() or code == HOLDS
+    if code >= STRAINED:
+        assert (found.state >= code).all()
+
+
+def test_a_front_only_raises() -> None:
+    """A weak one over a cell that is not seen leaves it unseen; a strong one warns of it; none softens a steep map."""
+    fields = some_fields(1.0, 0.1)
+    fields.state[:] = UNSEEN
+    weak = replace(a_front(), slope_mm_per_km=5.0, sigma_mm_per_km=0.5, state="holds")
+    found = ground.station_day(SITE, fields, [weak])
+    assert (found.state == UNSEEN).all()
+    assert np.isnan(found.slope).all()
+    assert found.minutes["unseen"] == 1440.0
+    strong = ground.station_day(SITE, fields, [weak, a_front()])
+    assert set(strong.state.tolist()) == {UNSEEN, BROKEN}
+    vague = replace(a_front(), slope_mm_per_km=60.0, sigma_mm_per_km=59.0)
+    steep = ground.station_day(SITE, some_fields(30.0, 1.0), [vague])
+    assert (steep.state == BROKEN).all()
+
+
 def test_off_the_map_all_is_unseen() -> None:
     found = ground.station_day(Site("Far", 10.0, 10.0), some_fields())
-    assert found.minutes == {"within": 0.0, "nominal": 0.0, "announced": 0.0, "threat": 0.0, "unseen": 1440.0}
+    assert found.minutes == {
+        "within": 0.0, "nominal": 0.0, "announced": 0.0, "threat": 0.0, "warned": 0.0, "unseen": 1440.0
+    }  # fmt: skip
     assert not found.state.any()
 
 

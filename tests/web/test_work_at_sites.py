@@ -45,7 +45,7 @@ def test_approaches(client: TestClient) -> None:
 
 def test_ground_and_the_front_that_comes(client: TestClient) -> None:
     content = client.get(f"{BASE}/ground", params={**SITE, "time": "2031-05-11T04:30:00Z"}).json()
-    assert set(content["minutes"]) == {"within", "nominal", "announced", "threat", "unseen"}
+    assert set(content["minutes"]) == {"within", "nominal", "announced", "threat", "warned", "unseen"}
     coming = content["next_front"]
     assert coming is None or coming["expected_utc"] > "2031-05-11T04:30:00Z"
     assert client.get(f"{BASE}/ground", params=SITE).json()["next_front"] is None

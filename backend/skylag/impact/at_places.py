@@ -1,16 +1,39 @@
 """States of places that a day was not judged for when it was computed: from its kept maps and flags.
 
-What reached a cell of the map is in the cell's state already; here each state only gets its reason.  A place off the
-map, and a cell that nobody saw, is unseen.  Never changes what was kept.
+What reached a cell of the map is in the cell's state already.  That was judged at the cell's middle: a place aside of
+it also takes the warnings of the cells around, and those whose flag lies over it, so that it is never told better than
+it would have been at the time, though sometimes worse.  A place off the map, and a cell that nobody saw or warned of,
+is unseen.  Never changes what was kept.
 """
 
 from collections.abc import Sequence
 
 import numpy as np
+import numpy.typing as npt
 
-from skylag.impact.states import honest_state, nearest_cells, state_of_slope
+from skylag.impact.states import JudgeChoices, field_states, honest_state, nearest_cells, state_of_slope
 from skylag.impact.survey import touches
-from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Bytes, Fields, Flag, Site, Thresholds
+from skylag.ionosphere.covariance import plane_km
+from skylag.tables import (
+    HOLDS,
+    STATE_NAMES,
+    STRAINED,
+    UNSEEN,
+    Bools,
+    Bytes,
+    Fields,
+    Flag,
+    Site,
+    Thresholds,
+    Times,
+)
+
+_KM_PER_DEG = 111.2
+_SPARE = np.timedelta64(450, "s")  # a witness speaks for so long before and after: the longest of `JudgeChoices`
+_MIDDLE = 0.05  # of a step: so near to its middle a place is where its cell was judged
+# Of a step: cells farther off carry no warning over a place that the nearer ones lack, as long as a warning reaches
+# at least half the diagonal of a cell (a claim's 60 km does so for steps up to 0.75 degrees).
+_AROUND = 1.25
 
 _OFF, _NOBODY = "outside the map: nothing can be said", "no line of sight passes near: nothing can be said"
 
@@ -27,16 +50,106 @@ def judge(
     row, column, inside = nearest_cells(fields, lat, lon)
     warning = [flag for flag in flags if flag.confirmed and flag.kind != "fault"]
     honest = honest_state(fields)
+    beyond = np.where(honest > field_states(fields, limits), honest, 0)
+    beyond[beyond < STRAINED] = 0
+    coarse = _half_diagonal_km(fields) > JudgeChoices().claim_reach_km
     told = []
     for number, site in enumerate(sites):
         if not inside[number]:
             told.append((_OFF,) * count)
             continue
         place = (slice(None), int(row[number]), int(column[number]))
-        state = honest[place]
+        state = np.maximum(honest[place], _around(site, place[1:], fields, honest, beyond, warning))
+        for flag in warning:
+            if coarse or flag.kind == "irregular":
+                state = np.maximum(state, np.where(over(flag, site, fields.times), _level(flag), 0))
+        state = state.astype(np.uint8)
         codes[:, number] = state
         told.append(_reasons(site, state, place[1:], fields, warning, limits))
     return codes, tuple(told)
+
+
+def _half_diagonal_km(fields: Fields) -> float:
+    """From the middle of a cell to its corner [km], where cells are widest."""
+    sides = [abs(float(axis[1] - axis[0])) if len(axis) > 1 else 0.0 for axis in (fields.lats, fields.lons)]
+    return 0.5 * _KM_PER_DEG * float(np.hypot(sides[0], sides[1] * np.cos(np.radians(fields.lats)).max()))
+
+
+def _level(flag: Flag) -> int:
+    """The state that a flag gives where it lies, 0 where it is no warning."""
+    code = STATE_NAMES.index(flag.state)
+    return code if code >= STRAINED else 0
+
+
+def _around(
+    site: Site, cell: tuple[int, int], fields: Fields, honest: Bytes, beyond: Bytes, warning: Sequence[Flag]
+) -> Bytes:
+    """The worst warning (T,) of the cells around a place, 0 where none or where the place is in its cell's middle.
+
+    beyond: states that are worse than the map's own slope makes them.  Where the slope itself hides a warning, a flag
+    near by counts instead.
+    """
+    worst = np.zeros(len(fields.times), dtype=np.uint8)
+    north = _steps(fields.lats, site.lat)
+    east = _steps(fields.lons, site.lon)
+    if max(abs(north[cell[0]]), abs(east[cell[1]])) <= _MIDDLE:
+        return worst
+    near_rows, near_columns = (np.flatnonzero(np.abs(away) < _AROUND) for away in (north, east))
+    block = np.ix_(np.arange(len(worst)), near_rows, near_columns)
+    np.maximum(worst, beyond[block].max(axis=(1, 2)), out=worst)
+    steep = honest[block].max(axis=(1, 2))
+    for epoch in np.flatnonzero(steep > np.maximum(worst, HOLDS)):
+        near = [
+            _level(flag) for flag in warning
+            if touches(flag, site.lat, site.lon, fields.times[epoch], _SPARE)
+        ]  # fmt: skip
+        worst[epoch] = max(int(worst[epoch]), min(int(steep[epoch]), max(near, default=0)))
+    return worst
+
+
+def _steps(axis: npt.NDArray[np.float64], value: float) -> npt.NDArray[np.float64]:
+    """How many steps of an axis [deg] its middles lie from a value, whole turns aside."""
+    step = abs(float(axis[1] - axis[0])) if len(axis) > 1 else 1.0
+    return np.asarray(((axis - value + 180.0) % 360.0 - 180.0) / step)
+
+
+def over(flag: Flag, site: Site, times: Times) -> Bools:
+    """Epochs (T,) at which a confirmed flag lies over a place, as far as a flag alone tells.
+
+    A front: within 25 km of its line and half a step of its way.  A patch: 25 km around its middle, which drifts; its
+    size is not kept, the cells of the map tell it.  A slope: 60 km around its steepest place, all the while.
+    """
+    choices = JudgeChoices()
+    found: Bools = np.zeros(len(times), dtype=bool)
+    spare = np.timedelta64(round(choices.patch_spare_s if flag.kind == "irregular" else 0.0), "s")
+    active = np.flatnonzero((times >= flag.start - spare) & (times <= flag.end + spare))
+    if not flag.confirmed:
+        return found
+    if flag.kind == "front":
+        if not flag.track or not np.isfinite(flag.heading_deg):
+            return found
+        step_s = float(np.median(np.diff(times)) / np.timedelta64(1, "s")) if len(times) > 1 else 300.0
+        half_km = choices.front_margin_km + 0.5 * flag.speed_m_s * step_s / 1000.0
+        for number in active:
+            found[number] = abs(ahead_of(flag, site.lat, site.lon, times[number])) <= half_km
+    elif flag.kind in ("irregular", "slope"):
+        x, y = (float(way[0]) for way in plane_km(np.array([site.lat]), np.array([site.lon]), (flag.lat, flag.lon)))
+        drifts = flag.kind == "irregular" and np.isfinite(flag.speed_m_s) and np.isfinite(flag.heading_deg)
+        late_s = (times[active] - (flag.start + (flag.end - flag.start) // 2)) / np.timedelta64(1, "s")
+        way = flag.speed_m_s / 1000.0 * late_s if drifts else np.zeros(len(active))
+        heading_rad = np.radians(flag.heading_deg) if drifts else 0.0
+        reach = choices.patch_margin_km if flag.kind == "irregular" else choices.claim_reach_km
+        found[active] = np.hypot(x - way * np.sin(heading_rad), y - way * np.cos(heading_rad)) <= reach
+    return found
+
+
+def ahead_of(flag: Flag, lat: float, lon: float, time: np.datetime64) -> float:
+    """How far [km] a place lies ahead of a front's line at a time, by the flag's track, speed and heading."""
+    moment, line_lat, line_lon = min(flag.track, key=lambda point: abs(point[0] - time))
+    x, y = plane_km(np.array([lat]), np.array([lon]), (line_lat, line_lon))
+    heading_rad = np.radians(flag.heading_deg)
+    late_s = float((time - moment) / np.timedelta64(1, "s"))
+    return float(x[0] * np.sin(heading_rad) + y[0] * np.cos(heading_rad)) - flag.speed_m_s * late_s / 1000.0
 
 
 def _reasons(
@@ -46,7 +159,6 @@ def _reasons(
     place = (slice(None), *cell)
     slope, sigma = fields.slope[place], fields.slope_sigma[place]
     by_map = state_of_slope(slope, sigma, limits)
-    step = np.timedelta64(1, "m")
     said = []
     for epoch, code in enumerate(state.tolist()):
         if code == HOLDS:
@@ -61,7 +173,7 @@ def _reasons(
                 f"is {limit:g}"
             )
         else:
-            near = [flag for flag in warning if touches(flag, site.lat, site.lon, fields.times[epoch], step)]
+            near = [flag for flag in warning if touches(flag, site.lat, site.lon, fields.times[epoch], _SPARE)]
             near.sort(key=lambda flag: (flag.state != STATE_NAMES[code], flag.kind != "front"))
             said.append(near[0].evidence if near else "a front, an irregular patch or a steep slope reaches here")
     return tuple(said)

@@ -12,11 +12,26 @@ import numpy as np
 import numpy.typing as npt
 
 from skylag.errors import Refused
+from skylag.impact import at_places
+from skylag.impact.at_places import ahead_of
 from skylag.impact.satellite_augmentation import CAUTION, spans
 from skylag.impact.states import nearest_cells
-from skylag.ionosphere.covariance import plane_km
 from skylag.ionosphere.geometry import mapping
-from skylag.tables import BROKEN, HOLDS, STRAINED, UNSEEN, Bools, Bytes, Fields, Flag, Floats, Site, Times
+from skylag.tables import (
+    BROKEN,
+    HOLDS,
+    STATE_NAMES,
+    STRAINED,
+    UNSEEN,
+    Bools,
+    Bytes,
+    Fields,
+    Flag,
+    Floats,
+    Site,
+    Thresholds,
+    Times,
+)
 
 ANNOUNCED_MOST = 25.5  # mm/km: 255 times 0.1; ICAO Annex 10, Appendix B to chapter 3
 # A spread of 4 mm/km bounds nominal slopes over CONUS: Mayer et al. 2009, ION GNSS, 1091-1099.
@@ -84,7 +99,8 @@ class StationChoices:
 class Exceeded:
     """A span in which an assumption of a site's station is exceeded, or nothing is seen; GPS time; why in words.
 
-    what  "nominal", "announced", "threat" or "unseen"
+    what  "nominal", "announced", "threat", "warned" (a warning lies over the site that its own slope does not tell of)
+          or "unseen"
     """
 
     site: str
@@ -111,8 +127,8 @@ class StationDay:
 
     slope, slope_sigma [mm/km, vertical]; seen; error_95_m: 95 % differential delay of an aircraft at the lowest
     elevation; state: holds where the slope stays within what is nominal with 95 % confidence, strained beyond it by one
-    sigma, broken beyond what can be announced, unseen where neither can be said; minutes: per kind of `Exceeded.what`,
-    and "within", how many minutes of the day
+    sigma, broken beyond what can be announced, unseen where neither can be said, and never better than what the map and
+    the warnings over the site say; minutes: per kind of `Exceeded.what`, and "within", how many minutes of the day
     """
 
     site: Site
@@ -130,13 +146,19 @@ class StationDay:
 
 def station_day(
     site: Site, fields: Fields, flags: Sequence[Flag] = (), choices: StationChoices | None = None,
-    shell_height_m: float = 400e3,
+    shell_height_m: float = 400e3, limits: Thresholds | None = None,
 ) -> StationDay:  # fmt: skip
     """The slope at an aerodrome through the day against the station's assumptions.
 
-    A confirmed front that passes within the maps' cell of the site counts with its own slope, which maps smear out.
+    A confirmed front that passes within the maps' cell of the site counts with its own slope, which maps smear out.  It
+    only ever raises: a place that the map does not see stays unseen under a front that is not beyond what is nominal.
+    Warnings of other kinds (patches, slopes between receivers) raise the state without a slope at the site.
+    limits  those of the region by which the map was judged
     """
     choices = choices or StationChoices()
+    nominal = QUANTILE * choices.sigma_mm_per_km
+    codes, reasons = at_places.judge([site], fields, flags, limits or Thresholds())
+    judged, told = codes[:, 0], reasons[0]
     row, column, inside = nearest_cells(fields, np.array([site.lat]), np.array([site.lon]))
     place = (slice(None), int(row[0]), int(column[0]))
     slope = np.asarray(fields.slope[place], dtype=np.float64)
@@ -145,55 +167,41 @@ def station_day(
     seen &= (fields.state[place] != UNSEEN) & (fields.support[place] > 0)
     step_s = float(np.median(np.diff(fields.times)) / np.timedelta64(1, "s")) if len(fields.times) > 1 else 300.0
     for flag in flags:
-        over = _front_over(flag, site, fields.times, step_s)
-        steeper = over & (~seen | (flag.slope_mm_per_km > slope))
+        if flag.kind != "front":
+            continue
+        over = at_places.over(flag, site, fields.times)
+        sure = slope - sigma
+        front_sure = flag.slope_mm_per_km - flag.sigma_mm_per_km
+        more = (flag.slope_mm_per_km > slope) & ((front_sure >= sure) | ~(sure > nominal))
+        steeper = over & np.where(seen, more, front_sure > nominal)
         slope = np.where(steeper, flag.slope_mm_per_km, slope)
         sigma = np.where(steeper, flag.sigma_mm_per_km, sigma)
-        seen = seen | over
+        seen = seen | steeper
     slope, sigma = np.where(seen, slope, np.nan), np.where(seen, sigma, np.nan)
     factor = float(mapping(choices.lowest_deg, shell_height_m))
     way_km = choices.distance_km + 2.0 * choices.smoothing_s * choices.speed_m_s / 1000.0
     most = slope + _ONE_SIDED_95 * sigma
     error = factor * most * 1e-3 * way_km
     sure = slope - sigma
-    nominal = QUANTILE * choices.sigma_mm_per_km
     with np.errstate(invalid="ignore"):
-        within = most <= min(nominal, ANNOUNCED_MOST)
+        within = (most <= min(nominal, ANNOUNCED_MOST)) & (judged == HOLDS)
         marks = {
             "nominal": sure > nominal,
             "announced": sure > ANNOUNCED_MOST,
             "threat": factor * sure > float(threat_mm_per_km(choices.lowest_deg)),
         }
-        marks["unseen"] = ~(within | marks["nominal"] | marks["announced"])  # neither can be said
-    state = np.full(len(slope), UNSEEN, dtype=np.uint8)
+    by_slope = np.where(marks["announced"], BROKEN, np.where(marks["nominal"], STRAINED, UNSEEN))
+    marks["warned"] = (judged >= STRAINED) & (judged > by_slope)
+    marks["unseen"] = ~(within | marks["nominal"] | marks["announced"] | marks["warned"])  # nothing can be said
+    state = np.where(judged >= STRAINED, judged, UNSEEN).astype(np.uint8)
     for mark, code in ((within, HOLDS), (marks["nominal"], STRAINED), (marks["announced"], BROKEN)):
-        state[mark] = code
+        state[mark] = np.maximum(state[mark], code)
     return StationDay(
         site, fields.times, slope, sigma, seen, error, state,
-        tuple(_exceeded(site, fields.times, slope, sigma, marks, choices, step_s)),
+        tuple(_exceeded(site, fields.times, slope, sigma, marks, choices, step_s, judged, told)),
         {name: float(mark.sum()) * step_s / 60.0 for name, mark in {"within": within, **marks}.items()},
         _assumptions(choices, factor, shell_height_m),
     )  # fmt: skip
-
-
-def _front_over(flag: Flag, site: Site, times: Times, step_s: float) -> Bools:
-    """Epochs at which a confirmed front's line passes a site within half a step of its way, and 25 km."""
-    over: Bools = np.zeros(len(times), dtype=bool)
-    if flag.kind != "front" or not flag.confirmed or not flag.track or not np.isfinite(flag.heading_deg):
-        return over
-    for number in np.flatnonzero((times >= flag.start) & (times <= flag.end)):
-        away = ahead_of(flag, site.lat, site.lon, times[number])
-        over[number] = abs(away) <= 25.0 + 0.5 * flag.speed_m_s * step_s / 1000.0
-    return over
-
-
-def ahead_of(flag: Flag, lat: float, lon: float, time: np.datetime64) -> float:
-    """How far [km] a place lies ahead of a front's line at a time, by the flag's track, speed and heading."""
-    moment, line_lat, line_lon = min(flag.track, key=lambda point: abs(point[0] - time))
-    x, y = plane_km(np.array([lat]), np.array([lon]), (line_lat, line_lon))
-    heading_rad = np.radians(flag.heading_deg)
-    late_s = float((time - moment) / np.timedelta64(1, "s"))
-    return float(x[0] * np.sin(heading_rad) + y[0] * np.cos(heading_rad)) - flag.speed_m_s * late_s / 1000.0
 
 
 def next_front(site: Site, flags: Sequence[Flag], now: np.datetime64, horizon_s: float = 10_800.0) -> NextFront | None:
@@ -229,7 +237,7 @@ def arrival_sigma_s(flag: Flag, wait_s: float) -> float:
 
 def _exceeded(
     site: Site, times: Times, slope: Floats, sigma: Floats, marks: dict[str, Bools], choices: StationChoices,
-    step_s: float,
+    step_s: float, judged: Bytes, told: Sequence[str],
 ) -> list[Exceeded]:  # fmt: skip
     limit = {
         "nominal": f"{QUANTILE:g} times the announced spread of {choices.sigma_mm_per_km:g} mm/km",
@@ -248,7 +256,10 @@ def _exceeded(
                     f"the slope is known to ± {np.nanmax(run):.0f} mm/km only: that it is within {limit['nominal']} "
                     "cannot be said"
                 )
-            if what != "unseen":
+            if what == "warned":
+                worst = first + int(np.argmax(judged[first:last]))
+                why = f"{STATE_NAMES[int(judged[worst])]} by a warning over the aerodrome: {told[worst]}"
+            elif what != "unseen":
                 worst = first + int(np.nanargmax(slope[first:last]))
                 why = f"vertical slope up to {slope[worst]:.0f} ± {sigma[worst]:.0f} mm/km is beyond {limit[what]}"
             rows.append(Exceeded(site.name, times[first], times[last - 1] + step, what, why))

@@ -284,7 +284,8 @@ class DayAdvice:
 
     def station(self, site: Site, choices: StationChoices | None = None) -> StationDay:
         """The slope at an aerodrome against its station's assumptions."""
-        return ground_augmentation.station_day(site, self.fields, self.flags, choices, self.shell_height_m)
+        limits = self.record.region.thresholds
+        return ground_augmentation.station_day(site, self.fields, self.flags, choices, self.shell_height_m, limits)
 
     def broadcast_model(self, site: Site, mask_deg: float = 10.0) -> LeftOver:
         """What the broadcast model leaves.  Raises Missing where the day knows no coefficients."""

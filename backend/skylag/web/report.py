@@ -211,7 +211,8 @@ def station_verdict(found: StationDay) -> str:
     return (
         f"Ground-based augmentation: slope within nominal for {_hours(minutes['within'])}, beyond nominal for "
         f"{_hours(minutes['nominal'])}, beyond what can be announced for {_hours(minutes['announced'])}, beyond the "
-        f"threat space for {_hours(minutes['threat'])}, not known for {_hours(minutes['unseen'])}."
+        f"threat space for {_hours(minutes['threat'])}, under a warning beside that for {_hours(minutes['warned'])}, "
+        f"not known for {_hours(minutes['unseen'])}."
     )
 
 
