@@ -55,6 +55,8 @@ def stations(count: int) -> tuple[places.Station, ...]:
 def _make(folder: Path, station: places.Station) -> None:
     path = folder / files.observation_name(station.marker, np.datetime64(STORM), 30.0)
     if not path.is_file():
+        if station not in places.STATIONS:  # headers look them up there; this process serves nothing else
+            places.STATIONS = (*places.STATIONS, station)
         made = network.simulate(STORM, stations=[station])
         files.write(path, files.compact_bytes(files.observation_text(made.signals[0])))
 
