@@ -37,8 +37,9 @@ MODEL_WORST = 425.0  # conterminous United States threat model: Datta-Barua et a
 MODEL_LOW_ELEVATION = 375.0  # the same at 15 degrees; linear up to 65 degrees (from memory)
 MODEL_SPEED_M_S = (0.0, 750.0)  # (from memory)
 MODEL_WIDTH_KM = (25.0, 200.0)  # (from memory)
+# For readers of a found slope: the model's third bound, and what was published of steeper skies.  Nothing is computed
+# from these.
 MODEL_DELAY_M = 50.0  # largest change of delay across a wall (from memory)
-# For readers of a found slope: what was published of steeper skies.  Nothing is computed from these.
 BRAZIL_WORST = 850.7  # 1 March 2014, 9.72 km baseline: Yoon et al. 2017, NAVIGATION 64(3)
 BRAZIL_SPEED_M_S, BRAZIL_WIDTH_KM, BRAZIL_DELAY_M = (40.0, 250.0), (20.0, 450.0), 35.0  # the same source
 ASIA_PACIFIC_BOUND = 600.0  # Saito et al. 2017, GPS Solut. 21 (value from memory)
