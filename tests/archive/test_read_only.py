@@ -3,6 +3,8 @@
 import contextlib
 import os
 import shutil
+import subprocess
+import sys
 import tempfile
 import threading
 from collections.abc import Iterator
@@ -24,6 +26,28 @@ from skylag.web.app import create_app
 
 T0 = np.datetime64("2031-05-12T08:00:00", "ns")
 NOBODY = 65534
+ROOT = Path(__file__).resolve().parents[2]
+# Rights do not hold root, who therefore turns into nobody; that is for a whole process, so these tests have their own.
+ALONE = "SKYLAG_TEST_AS_NOBODY"
+OWN_PROCESS = os.geteuid() == 0 and ALONE not in os.environ
+
+
+@pytest.fixture(params=["postgresql"] if OWN_PROCESS else ["sqlite", "postgresql"])
+def archive_place(request: pytest.FixtureRequest, tmp_path: Path) -> str:
+    """Where a new, empty archive can be opened."""
+    if request.param == "sqlite":
+        return str(tmp_path / "archive.sqlite")
+    return f"{request.getfixturevalue('postgres_server').empty_database()}&slant_folder={tmp_path / 'slants'}"
+
+
+@pytest.mark.skipif(not OWN_PROCESS, reason="this process has no rights beyond those of files, or is the one meant")
+def test_an_archive_of_files_in_a_process_of_its_own() -> None:
+    done = subprocess.run(
+        [sys.executable, "-m", "pytest", "-q", "-p", "no:cacheprovider", "-k", "sqlite", __file__],
+        cwd=ROOT, env={**os.environ, ALONE: "1"}, capture_output=True, text=True, check=False, timeout=300,
+    )  # fmt: skip
+    assert done.returncode == 0 and "4 passed" in done.stdout, done.stdout + done.stderr
+    assert os.geteuid() == 0
 
 
 @pytest.fixture(scope="module")
@@ -41,6 +65,7 @@ def without_rights(folder: Path) -> Iterator[None]:
     process_name()  # reads what later it may not
     root = os.geteuid() == 0
     if root:  # who is not held by rights
+        assert ALONE in os.environ, "all threads of a process change with it"
         os.seteuid(NOBODY)
     try:
         yield
