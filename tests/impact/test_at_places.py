@@ -105,3 +105,10 @@ def test_unconfirmed_witnesses_warn_of_nothing() -> None:
     made = states.judge(fields, slopes, Fronts((), nothing()[1].onsets), patches, REGION)
     later, _ = at_places.judge([Site("aside", -39.2, 145.7)], made.fields, made.flags, REGION.thresholds)
     assert (later == HOLDS).all()
+
+
+def test_a_steep_map_is_told_by_its_slope() -> None:
+    made = states.judge(flat_fields(slope=12.0), *nothing(), REGION)
+    later, reasons = at_places.judge([Site("aside", -39.2, 145.7)], made.fields, made.flags, REGION.thresholds)
+    assert (later == STRAINED).all()
+    assert all("slopes by 12 ± 0 mm/km" in reason for reason in reasons[0])

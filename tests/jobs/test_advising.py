@@ -119,7 +119,7 @@ def test_a_day_without_an_aerodrome_is_not_prepared(archive: Archive) -> None:
 
 
 def test_sites_that_came_later_are_judged_from_what_was_kept(archive: Archive) -> None:
-    """A new site in the cell of an old one has its states; one off the map is unseen; order and kind are in force."""
+    """A new site has at least the states of its cell; one off the map is unseen; order and kind are in force."""
     archive.save(invented_day(STORM_DAY))
     desk = Desk(archive)
     before = desk.day(REGION.name, str(STORM_DAY)).site_states()
@@ -139,10 +139,14 @@ def test_sites_that_came_later_are_judged_from_what_was_kept(archive: Archive) -
     assert found.reasons[:3] == before.reasons[1:]
     cell = day.record.cell_of(beside.lat, beside.lon)
     assert cell is not None
-    np.testing.assert_array_equal(found.codes[:, 3], day.fields.state[:, cell[0], cell[1]])
+    # Never better than its cell; worse only as far as the cells around warn.
+    own = day.fields.state[:, cell[0], cell[1]]
+    around = day.fields.state[:, cell[0] - 1 : cell[0] + 2, cell[1] - 1 : cell[1] + 2].max(axis=(1, 2))
+    assert (found.codes[:, 3] >= own).all()
+    assert (found.codes[:, 3] <= around).all()
+    assert (found.codes[:, 3] == own).mean() > 0.9
     told = zip(found.reasons[3], found.codes[:, 3], strict=True)
     assert all(bool(reason) == (code != HOLDS) for reason, code in told)
-    assert any("slopes by" in reason for reason in found.reasons[3])
     assert not found.codes[:, 4].any()
     assert set(found.reasons[4]) == {"outside the map: nothing can be said"}
     assert day.site("Beside").kind == "survey"
