@@ -57,6 +57,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except KeyboardInterrupt:
         print("skylag: stopped; nothing unfinished was kept", file=sys.stderr)
         return 130
+    except BrokenPipeError:  # whoever read the answer has seen enough
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 141
     except OSError as trouble:
         where = f"{trouble.filename}: " if trouble.filename else ""
         print(f"skylag: {where}{trouble.strerror or trouble}", file=sys.stderr)
