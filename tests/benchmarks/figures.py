@@ -1,8 +1,9 @@
 """The figures of the README, measured on the machine at hand: `python -m tests.benchmarks.figures`.
 
-Times and memory of `skylag day` for networks of several sizes, errors against the truth of the invented days, and the
-page's times in a real browser.  Prints a table; with --readme the table takes the place of the one there.  It takes
-some ten minutes for 64 receivers, most of them for making their files.
+Times and memory of `skylag day` for networks of several sizes, errors against the truth of the invented days and
+against what is known of real ones (from the table of outside checks), and the page's times in a real browser.  Prints a
+table; with --readme the table takes the place of the one there.  It takes some ten minutes for 64 receivers, most of
+them for making their files.
 """
 
 import argparse
@@ -152,6 +153,30 @@ def accuracy() -> list[str]:
     return rows
 
 
+# What of the table of outside checks is worth a row here: by the beginning of its subject, and how many digits.
+REAL = {
+    "ESBC 2020-06-25: GPS C1W-C2W against T_GD": 2,
+    "ESBC 2020-06-25: Galileo C1C-C5Q against BGD": 2,
+    "ESBC 2020-06-25: GPS-only less Galileo-only": 2,
+    "broadcast minus precise 2020-06-25, G, rms": 1,
+    "field near ZIMM minus published map, mean": 1,
+    "field near ZIMM minus published map, scatter": 2,
+}
+
+
+def real() -> list[str]:
+    """Rows of real days, out of the table that the last whole test run wrote."""
+    lines = (ROOT / "tests" / "EVIDENCE.md").read_text(encoding="utf-8").splitlines()
+    rows = []
+    for start, digits in REAL.items():
+        cells = [line.split(" | ") for line in lines if f"| {start}" in line]
+        if len(cells) != 1:
+            raise SystemExit(f"tests/EVIDENCE.md has {len(cells)} rows of {start!r}; run the tests with the real files")
+        _, subject, _, _, got, _, unit, _ = cells[0]
+        rows.append(f"| real day, {subject} | {float(got):.{digits}f} {unit} |")
+    return rows
+
+
 def page() -> list[str]:
     """Rows of the page's times, as its browser test prints them."""
     told = subprocess.run(
@@ -184,7 +209,7 @@ def main() -> None:
     parser.add_argument("--readme", action="store_true", help="put the table into README.md")
     chosen = parser.parse_args()
     with tempfile.TemporaryDirectory() as scratch:
-        text = table([*sizes(chosen.receivers, chosen.folder or Path(scratch)), *accuracy(), *page()])
+        text = table([*sizes(chosen.receivers, chosen.folder or Path(scratch)), *accuracy(), *real(), *page()])
     print(text)
     if chosen.readme:
         before, rest = README.read_text(encoding="utf-8").split(START, 1)
