@@ -4,8 +4,7 @@
  */
 
 import * as api from "../api.js";
-import { fixed, shareText, timeText } from "../words.js";
-import { JOB_WORDS, SERVICE_WORDS } from "../work_words.js";
+import { fixed, shareText, timeText, JOB_WORDS, SERVICE_WORDS } from "../words.js";
 import { make, trouble } from "./parts.js";
 
 /** What is asked where nothing was written. */

@@ -3,8 +3,7 @@
  */
 
 import * as api from "../api.js";
-import { dateText, latText, lonText } from "../words.js";
-import { SITE_WORDS } from "../work_words.js";
+import { dateText, latText, lonText, SITE_WORDS } from "../words.js";
 import { make, trouble } from "./parts.js";
 import { degrees } from "./reading.js";
 

@@ -3,10 +3,9 @@
  */
 
 import * as api from "../api.js";
-import { shareText, spanText, VERDICT_WORDS, WORDS } from "../words.js";
+import { shareText, spanText, VERDICT_WORDS, WORDS, GROUND_WORDS } from "../words.js";
 import { hourTable, jobForm, serviceForm, USUAL_JOB, USUAL_SERVICE, whyForm } from "./job.js";
 import { make, trouble } from "./parts.js";
-import { GROUND_WORDS } from "../work_words.js";
 
 export class WorkPanel {
   #details;
