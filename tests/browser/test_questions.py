@@ -131,6 +131,7 @@ def test_the_network_and_ahead(visit: Open) -> None:
     rows = list(csv.DictReader(io.StringIO(Path(download.value.path()).read_text())))
     assert len(rows) == 10 and all(row["day"] == "2031-05-11" and "+-" in row["biases_ns"] for row in rows)
     v.page.click("#network-all summary")
+    v.page.wait_for_function("() => document.querySelectorAll('#network-days tbody tr').length > 0")
     assert v.page.locator("#network-days tbody tr").count() == 20  # ten receivers on two days
     v.page.click("#asks a[data-ask=ahead]")
     v.page.wait_for_function("() => document.querySelector('#ahead-body :is(.chances, .trouble)')")
