@@ -38,6 +38,7 @@ def test_the_days_at_a_glance(visit: Open) -> None:
     v.page.keyboard.press("ArrowLeft")
     v.page.wait_for_function("() => document.getElementById('chart-time').textContent.startsWith('10 May 2031')")
     v.page.select_option("#year-worst", "broken")
+    v.page.wait_for_function("() => document.querySelectorAll('#year-strip .day-mark').length < 2")
     assert v.page.locator("#year-strip .day-mark").count() == 1
     assert "worst=broken" in v.page.evaluate("location.search")
     v.page.click(".year .table-behind summary")
@@ -104,12 +105,14 @@ def test_now_tells_the_age_and_what_comes(visit: Open) -> None:
     v = visit(plotly=False).go("?ask=now")
     assert v.minute() == "None"
     assert v.page.get_attribute("#strip", "aria-valuetext") == "23:45 UTC"
+    v.page.wait_for_function("() => document.getElementById('present-age').textContent")
     assert v.text("#present-age").startswith("Newest data: 23:45 UTC, 11 May 2031")
     assert "not the present" in v.text("#present-age")
     v.page.evaluate("window.scrollTo(0, document.body.scrollHeight)")
     assert 0 <= v.page.locator("#present-age").bounding_box()["y"] < 60, "the age stays in sight"
     v.go("?ask=now&day=2031-05-11&time=05:00")
     # The invented front stands at 41.5 S at 05:00 and moves north at two degrees an hour: Gannet Field at 41.1 S.
+    v.page.wait_for_function("() => document.getElementById('present-next').textContent.includes('Gannet')")
     assert "05:12 UTC Gannet Field, in 12 minutes, give or take " in v.text("#present-next")
     assert "Moving front" in v.text("#present-flags")
     v.page.click("#present-back")
