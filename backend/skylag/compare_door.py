@@ -13,7 +13,7 @@ import numpy as np
 
 from skylag import formats, settings
 from skylag.errors import Missing, Refused
-from skylag.formats import delimited, netcdf
+from skylag.formats import delimited, netcdf, results
 from skylag.formats.results import plain
 from skylag.ionosphere.beside import Beside, lay_beside
 from skylag.tables import Biases, Fields
@@ -97,14 +97,7 @@ def _json(found: Beside, said: list[str]) -> str:
 
 def _of_folder(folder: Path) -> tuple[Fields, Biases | None, float, bool]:
     """Maps, biases, shell height [km] and whether they are invented, of a folder of results."""
-    path = folder / "field.nc"
-    if not path.is_file():
-        raise Missing(
-            f"{folder}: holds no field.nc; give a folder that `skylag day --out` wrote", what=str(path), nearest=None
-        )
-    fields, facts = netcdf.read_with_facts(path)
-    table = folder / "biases.csv"
-    biases = delimited.read_biases_csv(table.read_text(encoding="utf-8"), str(table)) if table.is_file() else None
+    fields, facts, biases = results.read_maps(folder)
     return fields, biases, float(facts.get("shell_height_km", 400.0)), str(facts.get("simulated", "")).startswith("yes")
 
 

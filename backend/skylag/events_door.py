@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from skylag import settings
-from skylag.errors import Missing, Refused
+from skylag.errors import Refused
 from skylag.formats import events as event_files
 from skylag.impact import arrivals, events, uses
 from skylag.tables import Flag
@@ -48,14 +48,7 @@ def _events(options: argparse.Namespace) -> int:
 
     place = options.archive or settings.from_environment().archive
     with open_archive(place) as archive:
-        heads = [
-            head for head in archive.days()
-            if options.region in ("", head.region) and options.day in ("", str(head.day))
-        ]  # fmt: skip
-        if not heads:
-            wanted = " ".join(part for part in (options.region, options.day) if part) or "any day"
-            raise Missing(f"{place}: {wanted} is not kept here; see `skylag day --archive`", what=wanted, nearest=None)
-        newest = max(heads, key=lambda head: head.day)
+        newest = archive.newest(options.region, options.day, place)
         record = archive.day(newest.region, newest.day)
         fields, flags = archive.fields(newest.region, newest.day), archive.flags(newest.region, newest.day)
     about = sentences.about(record.origin.simulated, record.head.provisional)

@@ -12,8 +12,8 @@ import numpy as np
 
 from skylag import settings
 from skylag.archive import DayRecord, open_archive
-from skylag.errors import Missing, Refused
-from skylag.formats import contours, delimited, ionex, netcdf
+from skylag.errors import Refused
+from skylag.formats import contours, delimited, ionex, netcdf, results
 from skylag.impact.states import honest_state
 from skylag.ionosphere import augmentation_grid
 from skylag.tables import Biases, Fields, Region, Samples, Thresholds
@@ -131,14 +131,7 @@ def _chosen(fields: Fields, every_min: float, at: str) -> Fields:
 
 
 def _of_folder(folder: Path) -> _Day:
-    path = folder / "field.nc"
-    if not path.is_file():
-        raise Missing(
-            f"{folder}: holds no field.nc; give a folder that `skylag day --out` wrote", what=str(path), nearest=None
-        )
-    fields, facts = netcdf.read_with_facts(path)
-    table = folder / "biases.csv"
-    biases = delimited.read_biases_csv(table.read_text(encoding="utf-8"), str(table)) if table.is_file() else None
+    fields, facts, biases = results.read_maps(folder)
     step = float(fields.lats[1] - fields.lats[0]) if len(fields.lats) > 1 else 0.5
     region = Region(
         str(facts.get("title", "")).removeprefix("Ionospheric delay over "), float(fields.lats[0]),
@@ -153,14 +146,7 @@ def _of_folder(folder: Path) -> _Day:
 def _of_archive(options: argparse.Namespace) -> _Day:
     place = options.archive or settings.from_environment().archive
     with open_archive(place) as archive:
-        heads = [
-            head for head in archive.days()
-            if options.region in ("", head.region) and options.day in ("", str(head.day))
-        ]  # fmt: skip
-        if not heads:
-            wanted = " ".join(part for part in (options.region, options.day) if part) or "any day"
-            raise Missing(f"{place}: {wanted} is not kept here; see `skylag day --archive`", what=wanted, nearest=None)
-        newest = max(heads, key=lambda head: head.day)
+        newest = archive.newest(options.region, options.day, place)
         record: DayRecord = archive.day(newest.region, newest.day)
         samples = archive.samples(newest.region, newest.day) if options.format == "gridpoints" else None
         made = utc_to_gps(np.array([record.head.saved_at.astype("datetime64[ns]")]))[0]

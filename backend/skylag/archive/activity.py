@@ -5,8 +5,7 @@ last counts, of outlooks that which was made last before the moment asked for.  
 """
 
 import math
-from collections.abc import Callable, Mapping, Sequence
-from contextlib import AbstractContextManager
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -16,6 +15,7 @@ import sqlalchemy as sa
 from sqlalchemy.engine import Connection
 
 from skylag.archive import records, schema
+from skylag.archive.part import Part
 from skylag.errors import Refused
 from skylag.tables import ActivityOutlook, Floats, Indices
 
@@ -42,15 +42,8 @@ class Foretold:
     source: str
 
 
-class Activity:
+class Activity(Part):
     """The activity kept in an archive."""
-
-    def __init__(
-        self,
-        write: Callable[[Callable[[Connection], Any]], Any],
-        reading: Callable[[], AbstractContextManager[Connection]],
-    ) -> None:
-        self._write, self._reading = write, reading
 
     # ------------------------------------------------------------------------------------------ measured
 

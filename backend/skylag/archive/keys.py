@@ -1,15 +1,13 @@
 """Keys of access in the database: their names, scopes and hashes.  Never sees a key itself, and never makes one."""
 
-from collections.abc import Callable
-from contextlib import AbstractContextManager
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 import sqlalchemy as sa
 from sqlalchemy.engine import Connection
 
 from skylag.archive import schema
+from skylag.archive.part import Part
 from skylag.errors import Missing, Refused
 
 SCOPES = ("read", "write", "admin")  # each may do what those before it may
@@ -25,15 +23,8 @@ class Key:
     revoked: np.datetime64
 
 
-class Keys:
+class Keys(Part):
     """The keys of an archive."""
-
-    def __init__(
-        self,
-        write: Callable[[Callable[[Connection], Any]], Any],
-        reading: Callable[[], AbstractContextManager[Connection]],
-    ) -> None:
-        self._write, self._reading = write, reading
 
     def add(self, name: str, scope: str, sha256: str, now: np.datetime64) -> None:
         """Keep a key's hash.  Raises Refused for a name that is taken or empty, or a scope there is not."""

@@ -1,8 +1,7 @@
 """What somebody is to be told, kept until each of those who asked has it.  Never delivers anything itself."""
 
 import hashlib
-from collections.abc import Callable, Mapping, Sequence
-from contextlib import AbstractContextManager
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -11,6 +10,7 @@ import sqlalchemy as sa
 from sqlalchemy.engine import Connection
 
 from skylag.archive import records, schema
+from skylag.archive.part import Part
 
 _NEVER_NS = 2**62
 
@@ -45,15 +45,8 @@ class Delivery:
     said: str
 
 
-class Notices:
+class Notices(Part):
     """The notices of an archive."""
-
-    def __init__(
-        self,
-        write: Callable[[Callable[[Connection], Any]], Any],
-        reading: Callable[[], AbstractContextManager[Connection]],
-    ) -> None:
-        self._write, self._reading = write, reading
 
     def tell(
         self, subject: str, sentence: str, facts: Mapping[str, Any], targets: Sequence[str], quiet_s: float,

@@ -3,8 +3,7 @@
 import contextlib
 import hashlib
 import io
-from collections.abc import Callable, Mapping
-from contextlib import AbstractContextManager
+from collections.abc import Mapping
 from dataclasses import dataclass, fields
 from typing import Any
 
@@ -14,6 +13,7 @@ import sqlalchemy as sa
 from sqlalchemy.engine import Connection
 
 from skylag.archive import records, schema
+from skylag.archive.part import Part
 from skylag.errors import FormatError
 from skylag.tables import Outlook
 
@@ -29,15 +29,8 @@ class Kept:
     outlook: Outlook
 
 
-class Outlooks:
+class Outlooks(Part):
     """The outlooks of an archive."""
-
-    def __init__(
-        self,
-        write: Callable[[Callable[[Connection], Any]], Any],
-        reading: Callable[[], AbstractContextManager[Connection]],
-    ) -> None:
-        self._write, self._reading = write, reading
 
     def keep(self, region: str, outlook: Outlook, entered: str = "") -> int:
         """Keep an outlook; gives its number.  One of the same region, day and inputs is there for good: it stays.

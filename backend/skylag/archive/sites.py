@@ -5,7 +5,6 @@ Never judges a place: that a site lies on the map is asked by whoever takes the 
 """
 
 from collections.abc import Callable, Sequence
-from contextlib import AbstractContextManager
 from dataclasses import asdict, dataclass
 from typing import Any
 
@@ -14,6 +13,7 @@ import sqlalchemy as sa
 from sqlalchemy.engine import Connection
 
 from skylag.archive import records, schema
+from skylag.archive.part import Part
 from skylag.errors import Refused
 from skylag.tables import Site
 
@@ -60,15 +60,8 @@ class SiteChanges:
 NOTHING_CHANGED = SiteChanges()
 
 
-class Sites:
+class Sites(Part):
     """The changes of an archive's regions."""
-
-    def __init__(
-        self,
-        write: Callable[[Callable[[Connection], Any]], Any],
-        reading: Callable[[], AbstractContextManager[Connection]],
-    ) -> None:
-        self._write, self._reading = write, reading
 
     def of(self, region: str) -> SiteChanges:
         """What is in force."""

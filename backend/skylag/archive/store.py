@@ -288,6 +288,17 @@ class Archive:
                 raise self._missing(connection, region, text, version)
         return int(found)
 
+    def newest(self, region: str, day: str, place: str) -> DayHead:
+        """The newest kept day, of one region and one date where they are not empty.
+
+        place  how a message names this archive.  Raises Missing where no such day is kept.
+        """
+        heads = [head for head in self.days() if region in ("", head.region) and day in ("", str(head.day))]
+        if not heads:
+            wanted = " ".join(part for part in (region, day) if part) or "any day"
+            raise Missing(f"{place}: {wanted} is not kept here; see `skylag day --archive`", what=wanted, nearest=None)
+        return max(heads, key=lambda head: head.day)
+
     def day(self, region: str, day: Day, version: int | None = None) -> DayRecord:
         """The plain facts of a day; the pinned or newest version when none is named.
 

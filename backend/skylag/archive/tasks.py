@@ -6,8 +6,7 @@ never asks what time it is.
 """
 
 import hashlib
-from collections.abc import Callable, Collection, Mapping
-from contextlib import AbstractContextManager
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -16,6 +15,7 @@ import sqlalchemy as sa
 from sqlalchemy.engine import Connection
 
 from skylag.archive import records, schema
+from skylag.archive.part import Part
 from skylag.errors import Missing, Refused, SkylagError
 
 STATES = ("waiting", "running", "done", "failed", "cancelled")
@@ -74,15 +74,8 @@ class Ending:
     then: tuple[Wanted, ...] = ()
 
 
-class Tasks:
+class Tasks(Part):
     """The queue of an archive."""
-
-    def __init__(
-        self,
-        write: Callable[[Callable[[Connection], Any]], Any],
-        reading: Callable[[], AbstractContextManager[Connection]],
-    ) -> None:
-        self._write, self._reading = write, reading
 
     def add(self, kind: str, title: str, spec: Mapping[str, Any], now: np.datetime64) -> int:
         """Queue work; gives its number.  The same work that is waiting or running already is not queued twice."""

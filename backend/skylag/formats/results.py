@@ -12,8 +12,9 @@ from typing import Any
 
 import numpy as np
 
+from skylag.errors import Missing
 from skylag.formats import delimited, netcdf
-from skylag.tables import STATE_NAMES, Origin, Products
+from skylag.tables import STATE_NAMES, Biases, Fields, Origin, Products
 
 NAMES = ("biases.csv", "slant.parquet", "field.nc", "flags.csv", "day.json")
 
@@ -36,6 +37,22 @@ def write(products: Products, folder: Path) -> tuple[Path, ...]:
     finally:
         shutil.rmtree(fresh, ignore_errors=True)
     return tuple(folder / name for name in NAMES)
+
+
+def read_maps(folder: Path) -> tuple[Fields, dict[str, Any], Biases | None]:
+    """Maps, the facts told with them, and the biases if they are there, of a folder that `write` made.
+
+    Raises Missing where there is no field.nc, FormatError where a file is not whole.
+    """
+    path = folder / "field.nc"
+    if not path.is_file():
+        raise Missing(
+            f"{folder}: holds no field.nc; give a folder that `skylag day --out` wrote", what=str(path), nearest=None
+        )
+    fields, facts = netcdf.read_with_facts(path)
+    table = folder / "biases.csv"
+    biases = delimited.read_biases_csv(table.read_text(encoding="utf-8"), str(table)) if table.is_file() else None
+    return fields, facts, biases
 
 
 def day_facts(products: Products) -> dict[str, Any]:
