@@ -16,7 +16,7 @@ from tests.builders import CALM_DAY, REGION, STORM_DAY, invented_day, one_site_l
 
 from skylag.archive import Archive, chunks, open_archive, schema, slants
 from skylag.errors import FormatError, Missing, Refused, SkylagError
-from skylag.tables import STATE_NAMES, UNSEEN, Biases, Fields, Products, Rays, Samples
+from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Fields, Products, Rays, Samples
 
 NAME = REGION.name
 
@@ -72,6 +72,24 @@ def test_the_record_of_a_day(archive: Archive, storm: Products) -> None:
     np.testing.assert_array_equal(record.times, storm.fields.times)
     seen = storm.fields.vtec[np.isfinite(storm.fields.vtec)]
     assert record.head.highest["vtec"] == pytest.approx(np.quantile(seen, 0.99))
+
+
+def test_hours_that_no_map_reaches_count_as_unseen(archive: Archive, storm: Products) -> None:
+    """A day of which six hours came and all held is no day that held."""
+    fields = storm.fields
+    rows = slice(0, len(fields.times) // 4)
+    layers = {name: getattr(fields, name)[rows] for name in Fields.LAYERS} | {
+        "state": np.full(fields.state[rows].shape, HOLDS, dtype=np.uint8)
+    }
+    sites = np.full(storm.site_states[rows].shape, HOLDS, dtype=np.uint8)
+    reasons = tuple(one[rows] for one in storm.site_reasons)
+    part = replace(
+        storm, fields=replace(fields, times=fields.times[rows], **layers), site_states=sites, site_reasons=reasons
+    )
+    archive.save(part)
+    head = archive.day(NAME, STORM_DAY).head
+    for shares in (head.state_shares, *head.site_shares.values()):
+        assert shares == pytest.approx({"unseen": 0.75, "holds": 0.25, "strained": 0.0, "broken": 0.0})
 
 
 def test_flags_and_biases_come_back(archive: Archive, storm: Products) -> None:

@@ -241,6 +241,53 @@ def test_a_network_takes_out_a_plane_and_leaves_a_wave() -> None:
     assert set(wave.verdict) == {survey.AVOID}
 
 
+@pytest.mark.parametrize("blind", ["no line of sight", "wide sigma", "no value"])
+def test_a_reference_station_that_nobody_sees_is_no_station(blind: str) -> None:
+    """Where nobody looks a map holds a background: a plane through that must not call a place workable."""
+    references = ((-39.0, 145.0), (-39.0, 147.0), (-41.0, 146.0))
+    job = a_job(method="network", references=references)
+    fields = some_fields(0.1, 0.01)
+    assert set(survey.advise(job, fields).verdict) == {survey.WORK}
+    station = (slice(100, 120), LATS == -41.0, LONS == 146.0)
+    {"no line of sight": fields.support, "wide sigma": fields.vtec_sigma, "no value": fields.vtec}[blind][station] = {
+        "no line of sight": 0, "wide sigma": 30.0, "no value": np.nan
+    }[blind]  # fmt: skip
+    found = survey.advise(job, fields)
+    assert set(found.verdict[100:120]) == {survey.NOT_SEEN}
+    assert np.isnan(found.differential_95[100:120]).all()
+    assert set(found.verdict[:100]) | set(found.verdict[120:]) == {survey.WORK}
+
+
+def test_a_warning_over_the_place_counts_where_its_cell_has_none() -> None:
+    fields = some_fields(0.1, 0.05)
+    judged = np.full((len(TIMES), 1), HOLDS, dtype=np.uint8)
+    judged[50:53] = BROKEN
+    found = survey.advise(a_job(), fields, judged=judged)
+    assert set(found.verdict[50:53]) == {survey.AVOID}
+    assert "broken" in found.reasons[51]
+    assert set(found.verdict[:50]) | set(found.verdict[53:]) == {survey.WORK}
+
+
+def kept_maps(fields: Fields, rows: np.ndarray) -> Fields:
+    return replace(fields, times=fields.times[rows], **{name: getattr(fields, name)[rows] for name in Fields.LAYERS})
+
+
+def test_hours_without_maps_are_unseen_not_part_of_a_window() -> None:
+    """A day that broke off at noon before one that began at six: the hours between are nobody's."""
+    fields = some_fields(0.1, 0.05)
+    rows = np.r_[12:144, 216:288]
+    broken_off = kept_maps(fields, rows)
+    verdicts = [(str(w.start)[11:16], str(w.end)[11:16], w.verdict) for w in survey.advise(a_job(), broken_off).windows]
+    assert verdicts == [("00:00", "01:00", "unseen"), ("01:00", "12:00", "work"), ("12:00", "18:00", "unseen"),
+                        ("18:00", "00:00", "work")]  # fmt: skip
+    asked = a_job(spans=((TIMES[120], TIMES[240]),))
+    windows = survey.advise(asked, broken_off).windows
+    assert [(str(w.start)[11:16], str(w.end)[11:16], w.verdict) for w in windows] == [
+        ("10:00", "12:00", "work"), ("12:00", "18:00", "unseen"), ("18:00", "20:00", "work")
+    ]  # fmt: skip
+    assert sum((w.end - w.start for w in windows), np.timedelta64(0, "ns")) == TIMES[240] - TIMES[120]
+
+
 def test_a_session_averages_a_passing_slope() -> None:
     fields = some_fields(0.5, 0.1)
     fields.slope_north[100] = 8.0
@@ -263,6 +310,10 @@ def test_afterwards() -> None:
     assert any("Front: four receivers agree" in one for one in likely.evidence)
     assert survey.was_it_the_ionosphere(advice, [], TIMES[20]).verdict == "unlikely"
     assert survey.was_it_the_ionosphere(advice, [], TIMES[126]).verdict == "cannot be told"
+    # Nor where some of the maps around saw nothing: what they missed may have been the reason.
+    beside = survey.was_it_the_ionosphere(advice, [], TIMES[119])
+    assert beside.verdict == "cannot be told"
+    assert any("Of 5 maps around that time 2 did not see" in one for one in beside.evidence)
     with pytest.raises(Refused, match="no map lies within"):
         survey.was_it_the_ionosphere(advice, [], DAY - np.timedelta64(5, "h"))
 

@@ -12,7 +12,7 @@ from skylag.errors import Missing, Refused
 from skylag.impact import survey
 from skylag.impact.survey import Job
 from skylag.jobs.advising import DayAdvice, Desk, local_span, prepare
-from skylag.tables import HOLDS, Site
+from skylag.tables import BROKEN, HOLDS, Site
 
 
 @pytest.fixture(scope="module")
@@ -84,6 +84,34 @@ def test_unseen_cells_are_never_work(kept: Archive) -> None:
         assert cell is not None
         unseen = day.fields.state[:, cell[0], cell[1]] == 0
         assert not (unseen & (advice.verdict == survey.WORK)).any()
+
+
+def test_a_warning_beside_the_middle_of_the_cell_is_heard_by_job_and_place(kept: Archive) -> None:
+    """A place stands aside of its cell's middle: what warns of the neighbouring cell only may lie over the place."""
+    day = DayAdvice(kept, kept.day(REGION.name, CALM_DAY))
+    fields = day.fields
+    row, column = 4, 6
+    aside = Site("aside", float(fields.lats[row]), float(fields.lons[column]) + 0.2)
+    state, slope = np.full_like(fields.state, HOLDS), np.full_like(fields.slope, 0.1)
+    state[10:14, row, column + 1] = BROKEN
+    day.__dict__["fields"] = replace(
+        fields, state=state, slope=slope, slope_sigma=slope, slope_east=slope, slope_north=slope,
+        vtec=np.full_like(slope, 10.0), vtec_sigma=np.full_like(slope, 0.5), support=np.full_like(fields.support, 9),
+    )  # fmt: skip
+    day.__dict__["flags"] = ()
+    asked = Job("aside", ((aside.lat, aside.lon),), baseline_km=1.0, horizontal_mm=500.0, vertical_mm=500.0)
+    found = day.survey(asked)
+    assert set(found.verdict[10:14]) == {survey.AVOID}
+    assert survey.WORK in found.verdict
+    np.testing.assert_array_equal(day.states_at(aside)[8:16], [1, 1, 3, 3, 3, 3, 1, 1])
+
+
+def test_a_site_has_the_states_it_was_kept_with(kept: Archive) -> None:
+    day = DayAdvice(kept, kept.day(REGION.name, STORM_DAY))
+    known = kept.site_states(REGION.name, STORM_DAY)
+    for number, site in enumerate(REGION.sites):
+        np.testing.assert_array_equal(day.states_at(site), known.codes[:, number])
+    assert not day.states_at(Site("off the map", 10.0, 10.0)).any()
 
 
 def test_a_day_without_coefficients_says_so(kept: Archive) -> None:

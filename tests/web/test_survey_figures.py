@@ -7,6 +7,7 @@ import pytest
 from tests.builders import REGION, STORM_DAY
 
 from skylag.archive import Archive
+from skylag.formats.sheet import DayChart
 from skylag.impact import survey
 from skylag.impact.survey import Advice, Job
 from skylag.jobs.advising import DayAdvice
@@ -64,6 +65,18 @@ def test_of_a_day_that_was_never_seen_nothing_is_said(day: DayAdvice) -> None:
         "Longest baseline within tolerance: not known at any time of the day.",
         "Differential delay at the job's distance: not known at any time of the day.",
     ]
+
+
+def test_the_sheet_draws_the_states_of_the_site_not_of_its_cell(day: DayAdvice) -> None:
+    _, blocks = report.of_site(day, SITE, seen(day, 0, 10))
+    rows = dict(next(block for block in blocks if isinstance(block, DayChart)).rows)
+    start = STORM_DAY.astype("datetime64[ns]")
+    marks = ("unseen", "good", "doubt", "bad")
+    codes = day.states_at(SITE)
+    assert len(set(codes.tolist())) > 1
+    for time, code in zip(day.fields.times, codes, strict=True):
+        share = float((time - start) / np.timedelta64(1, "D")) + 1e-6
+        assert [mark for a, b, mark in rows["Corrections at the site"] if a <= share < b] == [marks[code]]
 
 
 def test_the_sheet_says_how_much_is_known(day: DayAdvice) -> None:

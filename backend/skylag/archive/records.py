@@ -13,6 +13,7 @@ import numpy.typing as npt
 
 from skylag.tables import (
     STATE_NAMES,
+    UNSEEN,
     Bytes,
     Fields,
     Floats,
@@ -121,9 +122,18 @@ def from_text(text: str) -> Any:
     return json.loads(text)
 
 
-def _shares(codes: npt.NDArray[np.uint8]) -> dict[str, float]:
+def _shares(codes: npt.NDArray[np.uint8], mapped: float) -> dict[str, float]:
+    """Shares of the day by state; what no map of the day reaches is unseen.  mapped: share of the day with maps."""
     counts = np.bincount(codes.reshape(-1), minlength=len(STATE_NAMES))[: len(STATE_NAMES)]
-    return {name: float(counts[k] / max(codes.size, 1)) for k, name in enumerate(STATE_NAMES)}
+    shares = {name: mapped * float(counts[k] / max(codes.size, 1)) for k, name in enumerate(STATE_NAMES)}
+    shares[STATE_NAMES[UNSEEN]] = max(0.0, 1.0 - sum(shares[name] for k, name in enumerate(STATE_NAMES) if k != UNSEEN))
+    return shares
+
+
+def _mapped(times: Times) -> float:
+    """Share of a day that maps at these times speak for."""
+    step = np.median(np.diff(times)) if len(times) > 1 else np.timedelta64(300, "s")
+    return min(1.0, len(times) * float(step / np.timedelta64(1, "D")))
 
 
 def _highest(fields: Fields) -> dict[str, float]:
@@ -138,11 +148,12 @@ def _highest(fields: Fields) -> dict[str, float]:
 def summarise(products: Products) -> dict[str, Any]:
     """The part of a `DayHead` that follows from the products."""
     kinds = [flag.kind for flag in products.flags]
+    mapped = _mapped(products.fields.times)
     return {
         "highest": _highest(products.fields),
-        "state_shares": _shares(products.fields.state),
+        "state_shares": _shares(products.fields.state, mapped),
         "site_shares": {
-            site.name: _shares(products.site_states[:, k]) for k, site in enumerate(products.region.sites)
+            site.name: _shares(products.site_states[:, k], mapped) for k, site in enumerate(products.region.sites)
         },
         "flag_counts": {kind: kinds.count(kind) for kind in sorted(set(kinds))},
         "warning_count": len(products.origin.warnings),

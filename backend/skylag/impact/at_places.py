@@ -23,6 +23,7 @@ from skylag.tables import (
     Bytes,
     Fields,
     Flag,
+    Ints,
     Site,
     Thresholds,
     Times,
@@ -42,31 +43,47 @@ def judge(
     sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: Thresholds
 ) -> tuple[Bytes, tuple[tuple[str, ...], ...]]:
     """Codes (T, sites) and reasons, per site and epoch, "" where corrections hold."""
-    count = len(fields.times)
-    codes = np.zeros((count, len(sites)), dtype=np.uint8)
-    if not len(sites):
-        return codes, ()
-    lat, lon = (np.array([getattr(site, name) for site in sites], dtype=np.float64) for name in ("lat", "lon"))
-    row, column, inside = nearest_cells(fields, lat, lon)
-    warning = [flag for flag in flags if flag.confirmed and flag.kind != "fault"]
+    found = codes(sites, fields, flags, limits)
+    row, column, inside = _cells(sites, fields)
+    warning = _warning(flags)
+    told = [
+        _reasons(site, found[:, number], (int(row[number]), int(column[number])), fields, warning, limits)
+        if inside[number] else (_OFF,) * len(fields.times)
+        for number, site in enumerate(sites)
+    ]  # fmt: skip
+    return found, tuple(told)
+
+
+def codes(sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: Thresholds) -> Bytes:
+    """The same without the reasons (T, sites)."""
+    found = np.zeros((len(fields.times), len(sites)), dtype=np.uint8)
+    row, column, inside = _cells(sites, fields)
+    warning = _warning(flags)
     honest = honest_state(fields)
     beyond = np.where(honest > field_states(fields, limits), honest, 0)
     beyond[beyond < STRAINED] = 0
     coarse = _half_diagonal_km(fields) > JudgeChoices().claim_reach_km
-    told = []
     for number, site in enumerate(sites):
         if not inside[number]:
-            told.append((_OFF,) * count)
             continue
         place = (slice(None), int(row[number]), int(column[number]))
         state = np.maximum(honest[place], _around(site, place[1:], fields, honest, beyond, warning))
         for flag in warning:
             if coarse or flag.kind == "irregular":
                 state = np.maximum(state, np.where(over(flag, site, fields.times), _level(flag), 0))
-        state = state.astype(np.uint8)
-        codes[:, number] = state
-        told.append(_reasons(site, state, place[1:], fields, warning, limits))
-    return codes, tuple(told)
+        found[:, number] = state
+    return found
+
+
+def _cells(sites: Sequence[Site], fields: Fields) -> tuple[Ints, Ints, Bools]:
+    """Row and column of each site's cell, and whether the map reaches it."""
+    lat, lon = (np.array([getattr(site, name) for site in sites], dtype=np.float64) for name in ("lat", "lon"))
+    return nearest_cells(fields, lat, lon)
+
+
+def _warning(flags: Sequence[Flag]) -> list[Flag]:
+    """The flags that warn of anything."""
+    return [flag for flag in flags if flag.confirmed and flag.kind != "fault"]
 
 
 def _half_diagonal_km(fields: Fields) -> float:

@@ -19,10 +19,10 @@ from skylag.errors import Refused
 from skylag.impact import sky as satellites
 from skylag.impact.satellite_augmentation import spans
 from skylag.impact.sky import Sky
-from skylag.impact.states import nearest_cells, state_of_slope
+from skylag.impact.states import content_known, nearest_cells, state_of_slope
 from skylag.ionosphere.covariance import plane_km
 from skylag.ionosphere.geometry import mapping
-from skylag.tables import STATE_NAMES, STRAINED, UNSEEN, Bools, Fields, Flag, Floats, Ints, Thresholds, Times
+from skylag.tables import STATE_NAMES, STRAINED, UNSEEN, Bools, Bytes, Fields, Flag, Floats, Ints, Thresholds, Times
 
 CAUTION = (
     "Planning aid, not for navigation and no substitute for checks in the field: official notices, the correction "
@@ -175,13 +175,16 @@ def advise(
     sky: Sky | None = None,
     thresholds: Thresholds | None = None,
     shell_height_m: float = 400e3,
+    judged: Bytes | None = None,
 ) -> Advice:
     """A job through the day of the maps.
 
-    sky  satellites at the epochs of the maps; without it the geometry is that of the nominal constellation, and said
+    sky     satellites at the epochs of the maps; without it the geometry is that of the nominal constellation, and said
+    judged  states (T, places) of the places themselves (`at_places.codes`), which warnings may reach that miss the
+            middles of their cells; without it those of the cells count
     """
     limits = thresholds or Thresholds()
-    seen, looked, warned, middle, sigma, own = _differential(job, fields, limits)
+    seen, looked, warned, middle, sigma, own = _differential(job, fields, limits, judged)
     geometry = _geometries(job, sky, fields.times, shell_height_m)
     horizontal = np.stack([one[0] for one in geometry])
     vertical = np.stack([one[1] for one in geometry])
@@ -219,7 +222,7 @@ def advise(
 # ---------------------------------------------------------------------------------------------- the error budget
 
 
-def _differential(job: Job, fields: Fields, limits: Thresholds) -> tuple[
+def _differential(job: Job, fields: Fields, limits: Thresholds, judged: Bytes | None) -> tuple[
     Bools, Bools, npt.NDArray[np.uint8], Floats, Floats, tuple[Floats, Floats]
 ]:  # fmt: skip
     """Per place and epoch (P, T): seen; a line of sight near, whether known well enough or not; warned beyond the map;
@@ -239,11 +242,12 @@ def _differential(job: Job, fields: Fields, limits: Thresholds) -> tuple[
     seen = looked & (state != UNSEEN)
     seen &= np.isfinite(slope) & np.isfinite(slope_sigma) & np.isfinite(cells("vtec"))
     by_map = state_of_slope(cells("slope"), cells("slope_sigma"), limits)
-    warned = np.where((state >= STRAINED) & (state > by_map), state, 0).astype(np.uint8)
+    worst = state if judged is None else np.maximum(state, judged.T)
+    warned = np.where((worst >= STRAINED) & (worst > by_map), worst, 0).astype(np.uint8)
     slope, slope_sigma = np.where(seen, slope, np.nan), np.where(seen, slope_sigma, np.nan)
     middle, sigma = slope * job.baseline_km, slope_sigma * job.baseline_km
     if job.method == "network":
-        middle, sigma = _off_network(job, fields, row, column, slope, slope_sigma)
+        middle, sigma = _off_network(job, fields, limits, row, column, slope, slope_sigma)
         seen = seen & np.isfinite(middle)
     return seen, looked, warned, middle, sigma, (slope, slope_sigma)
 
@@ -260,16 +264,19 @@ def _session_mean(values: Floats, times: Times, session_min: float) -> Floats:
 
 
 def _off_network(
-    job: Job, fields: Fields, row: Ints, column: Ints, slope: Floats, slope_sigma: Floats
+    job: Job, fields: Fields, limits: Thresholds, row: Ints, column: Ints, slope: Floats, slope_sigma: Floats
 ) -> tuple[Floats, Floats]:
     """What interpolation between reference stations leaves (P, T) [mm of vertical delay], and its sigma.
 
     The plane through the stations' own vertical delays against that of the place; the sigma is that of the slope over
-    the way to the nearest station.  Places outside the stations' reach, or stations off the map, are not known.
+    the way to the nearest station.  Not known where fewer than three stations are on the map or all stand in line, and
+    at each time at which the map does not see one of those that are used.
     """
     lat, lon = np.array(job.references, dtype=np.float64).T
     station_row, station_column, inside = nearest_cells(fields, lat, lon)
-    delay = np.asarray(fields.vtec, dtype=np.float64) * L1_M_PER_TECU * 1000.0
+    # Where nobody looks the maps hold a background: a plane through that says nothing.
+    content = np.where(content_known(fields, limits), fields.vtec, np.nan)
+    delay = np.asarray(content, dtype=np.float64) * L1_M_PER_TECU * 1000.0
     known = inside & np.isfinite(delay[:, station_row, station_column]).any(axis=0)
     left = np.full(slope.shape, np.nan)
     sigma = left.copy()
@@ -431,28 +438,32 @@ def _only_sigma(job: Job, told: dict[str, Floats], t: int) -> bool:
 def _windows(
     job: Job, times: Times, verdict: npt.NDArray[np.str_], reasons: Sequence[str]
 ) -> tuple[Window, ...]:
-    """Runs of one verdict within the working hours; a run of work that is too short is to be avoided."""
+    """Runs of one verdict within the working hours, or the days of the maps; a run of work that is too short is to be
+    avoided.  What no map reaches, before, between or after them, is unseen."""
     if not len(times):
         return ()
     step = np.median(np.diff(times)) if len(times) > 1 else np.timedelta64(300, "s")
     least = np.timedelta64(round(job.least_min * 60e9), "ns")
     found: list[Window] = []
     edges = np.append(times, times[-1] + step)
-    for start, end in job.spans or ((edges[0], edges[-1]),):
+    whole = times[0].astype("datetime64[D]"), times[-1].astype("datetime64[D]") + np.timedelta64(1, "D")
+    for start, end in job.spans or (tuple(one.astype("datetime64[ns]") for one in whole),):
         start, end = _snapped(start, edges), _snapped(end, edges)
         inside = (times >= start) & (times < end)
         found += _beyond(start, min(end, times[0]))
         for first, last in spans(inside):  # one run: times increase
             at = first
             while at < last:
-                stop = at
-                while stop < last and verdict[stop] == verdict[at]:
+                stop = at + 1
+                while stop < last and verdict[stop] == verdict[at] and not _apart(times, stop, step):
                     stop += 1
                 run = reasons[at:stop]
                 window = Window(times[at], min(times[stop - 1] + step, end), str(verdict[at]), _most(run))
                 if window.verdict == WORK and window.end - window.start < least:
                     window = replace(window, verdict=AVOID, why=f"good for less than {job.least_min:g} minutes only")
                 found.append(window)
+                if stop < last and _apart(times, stop, step):
+                    found += _beyond(window.end, times[stop])
                 at = stop
         found += _beyond(max(start, times[-1] + step), end)
     joined: list[Window] = []
@@ -463,6 +474,11 @@ def _windows(
         else:
             joined.append(window)
     return tuple(joined)
+
+
+def _apart(times: Times, at: int, step: np.timedelta64) -> bool:
+    """Whether maps are missing before one of them, as between two days of which the first broke off."""
+    return bool(times[at] - times[at - 1] > 1.5 * step)
 
 
 def _snapped(time: np.datetime64, edges: Times) -> np.datetime64:
@@ -593,6 +609,9 @@ def was_it_the_ionosphere(
         verdict = "cannot be told"
     elif chance > advice.job.fixing_chance or (np.isfinite(ppm) and ppm > 4.0):
         verdict = "possible"
+    elif not seen.all():
+        verdict = "cannot be told"
+        said.append(f"Of {len(at)} maps around that time {int((~seen).sum())} did not see the place well enough.")
     else:
         verdict = "unlikely"
         said.append("Nothing in the ionosphere explains a failure: look for masks, multipath, links and settings.")

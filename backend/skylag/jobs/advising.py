@@ -41,7 +41,7 @@ from skylag.impact.sky import Sky
 from skylag.impact.survey import Advice, Explanation, Job
 from skylag.ionosphere.covariance import plane_km
 from skylag.ionosphere.geometry import geodetic
-from skylag.tables import Fields, Flag, Samples, Site, Times
+from skylag.tables import Bytes, Fields, Flag, Samples, Site, Times
 
 Span = tuple[np.datetime64, np.datetime64]
 
@@ -179,6 +179,14 @@ class DayAdvice:
         order = [column[one.name, one.lat, one.lon] for one in sites]
         return SiteStates(kept.times, sites, codes[:, order], tuple(together[n] for n in order))
 
+    def states_at(self, site: Site) -> Bytes:
+        """States (T,) of a place: as kept where it is a site of the day, else from the kept maps and flags."""
+        states = self.site_states()
+        for number, one in enumerate(states.sites):
+            if (one.lat, one.lon) == (site.lat, site.lon):
+                return states.codes[:, number]
+        return at_places.codes([site], self.fields, self.flags, self.record.region.thresholds)[:, 0]
+
     def site(self, name: str) -> Site:
         """A site of the region by name.  Raises Missing where it has no such site."""
         for one in self.record.region.sites:
@@ -269,7 +277,10 @@ class DayAdvice:
         fields = _joined_fields([one.fields for one in days])
         skies = [one.known_sky for one in days]
         whole = None if any(one is None for one in skies) else _joined_sky([one for one in skies if one is not None])
-        return survey.advise(job, fields, whole, self.record.region.thresholds, self.shell_height_m)
+        limits = self.record.region.thresholds
+        places = [Site(job.name, lat, lon) for lat, lon in job.places]
+        judged = at_places.codes(places, fields, [flag for one in days for flag in one.flags], limits)
+        return survey.advise(job, fields, whole, limits, self.shell_height_m, judged)
 
     def explain(self, job: Job, time: np.datetime64) -> Explanation:
         """Was it the ionosphere, at the job's place and a time."""

@@ -248,11 +248,9 @@ def _chart(
 def _state_spans(
     day: DayAdvice, site: Site, share: Callable[[np.datetime64], float]
 ) -> tuple[tuple[float, float, str], ...]:
-    cell = day.record.cell_of(site.lat, site.lon)
-    fields = day.fields
-    if cell is None or not len(fields.times):
+    fields, codes = day.fields, day.states_at(site)
+    if not len(fields.times):
         return ((0.0, 1.0, "unseen"),)
-    codes = fields.state[:, cell[0], cell[1]]
     edges = [0, *(np.flatnonzero(np.diff(codes)) + 1).tolist(), len(codes)]
     step = np.median(np.diff(fields.times)) if len(fields.times) > 1 else np.timedelta64(300, "s")
     return tuple(
