@@ -57,7 +57,8 @@ def test_no_place_reads_better_later_than_at_the_time(witness: str, axes: str) -
     later, reasons = at_places.judge(sites, at_the_time.fields, at_the_time.flags, region.thresholds)
     assert (at_the_time.site_states >= STRAINED).any()
     assert (later >= at_the_time.site_states).all()
-    np.testing.assert_array_equal(at_places.codes(sites, at_the_time.fields, at_the_time.flags, region.thresholds), later)
+    codes = at_places.codes(sites, at_the_time.fields, at_the_time.flags, region.thresholds)
+    np.testing.assert_array_equal(codes, later)
     row, column, _ = states.nearest_cells(
         fields, np.array([site.lat for site in sites]), np.array([site.lon for site in sites])
     )

@@ -16,7 +16,7 @@ from skylag.impact import ground_augmentation as ground
 from skylag.impact import states
 from skylag.impact.ground_augmentation import StationChoices
 from skylag.ionosphere.geometry import mapping
-from skylag.tables import BROKEN, HOLDS, STRAINED, UNSEEN, Flag, Site
+from skylag.tables import BROKEN, HOLDS, STRAINED, UNSEEN, Fields, Flag, Site
 
 SITE = Site("Here", -40.0, 146.0, "aerodrome")
 
@@ -45,7 +45,7 @@ def test_errors_from_a_front(
 ) -> None:
     evidence(f"error from {slope} mm/km, 6 km, {speed} m/s, {smoothing} s", unit="m", expected=expected,
              source="slope times (distance + 2 x smoothing x speed)", tolerance=digit * 1.001,
-             got=ground.front_error_m(slope, 6.0, speed, smoothing))  # fmt: skip
+             got=float(ground.front_error_m(slope, 6.0, speed, smoothing)))  # fmt: skip
 
 
 def test_minutes_beyond_each_limit() -> None:
@@ -61,6 +61,13 @@ def test_minutes_beyond_each_limit() -> None:
     assert (first.start, first.end) == (TIMES[10], TIMES[13])
     assert "14 ± 0 mm/km" in first.why
     assert np.isnan(found.error_95_m[100:112]).all()
+
+
+def test_hours_without_maps_are_minutes_of_which_nothing_is_known() -> None:
+    fields = some_fields(1.0, 0.1)
+    part = replace(fields, times=fields.times[:72], **{name: getattr(fields, name)[:72] for name in Fields.LAYERS})
+    minutes = ground.station_day(SITE, part).minutes
+    assert (minutes["within"], minutes["unseen"]) == (360.0, 1080.0)
 
 
 @pytest.mark.parametrize(

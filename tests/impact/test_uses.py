@@ -14,10 +14,10 @@ from skylag.constants import L1_M_PER_TECU
 from skylag.errors import Refused
 from skylag.events import Patches
 from skylag.formats import events as event_files
-from skylag.impact import events, states, uses
+from skylag.impact import at_places, events, states, uses
 from skylag.ionosphere import fronts, irregularity, slopes
 from skylag.ionosphere.background import Background
-from skylag.tables import BROKEN, HOLDS, STATE_NAMES, STRAINED, UNSEEN, Use
+from skylag.tables import BROKEN, HOLDS, STATE_NAMES, STRAINED, UNSEEN, Site, Use
 
 DIFFERENTIAL, GROUND, SATELLITE, SINGLE = uses.PUBLISHED
 
@@ -178,6 +178,33 @@ def test_a_front_is_told_in_terms_of_the_use(stormy):
     assert said["ground"].site_states[early, 0] == HOLDS and said["ground"].site_evidence[0][early] == ()
     bold = Use("next door", "differential", baseline_km=0.5)
     assert uses.judge_for(bold, fields, flags, REGION).site_states[at, 0] == HOLDS
+
+
+@pytest.mark.parametrize("use", [DIFFERENTIAL, GROUND], ids=lambda use: use.kind)
+def test_a_site_aside_of_its_cells_middle_takes_the_warnings_that_lie_over_it(use):
+    fields = flat_fields(slope=0.5)
+    aside = Site("aside", float(fields.lats[7]), float(fields.lons[9]) + 0.2)
+    fields.state[5:8, 7, 10] = BROKEN  # the cell to the east, by more than the map's own slope
+    region = replace(REGION, sites=(aside,))
+    judged = uses.judge_for(use, fields, (), region)
+    assert (judged.site_states[5:8, 0] == BROKEN).all()
+    assert all("reaches the site and makes" in reason for reason in judged.site_reasons[0][5:8])
+    assert (np.delete(judged.site_states[:, 0], [5, 6, 7]) == HOLDS).all()
+    assert judged.states[6, 7, 9] == HOLDS  # of the cell's middle nothing else is said
+
+
+def test_a_front_over_a_site_counts_by_the_limits_of_the_use(stormy):
+    """Wherever the day's own judging warns a site by a front, a slope use says what the front's slope means to it."""
+    fields, flags = stormy
+    rng = np.random.default_rng(3)
+    places = zip(rng.uniform(-40.5, -38.0, 40), rng.uniform(144.5, 146.5, 40), strict=True)
+    region = replace(REGION, sites=tuple(Site(f"{n}", float(a), float(b)) for n, (a, b) in enumerate(places)))
+    day, _ = at_places.judge(region.sites, fields, flags, region.thresholds)
+    ground = uses.judge_for(GROUND, fields, flags, region).site_states
+    assert (day >= STRAINED).any()
+    assert (ground[day >= STRAINED] >= STRAINED).all()
+    easy = uses.judge_for(Use("next door", "differential", baseline_km=0.5), fields, flags, region).site_states
+    assert (easy[day == BROKEN] < BROKEN).any()
 
 
 def test_a_front_is_one_event_and_a_patch_another(stormy):

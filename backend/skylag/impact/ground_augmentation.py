@@ -53,20 +53,26 @@ def threat_mm_per_km(elevation: npt.ArrayLike) -> Floats:
 
 
 def nominal_error_m(
-    factor: npt.ArrayLike, sigma_mm_per_km: float, distance_km: float, speed_m_s: float, smoothing_s: float = 100.0
-) -> Floats:
+    factor: npt.ArrayLike, sigma_mm_per_km: npt.ArrayLike, distance_km: float, speed_m_s: float,
+    smoothing_s: float = 100.0,
+) -> Floats:  # fmt: skip
     """Sigma [m] of the differential delay of an approaching aircraft on a line of sight.
 
-    factor  slant over vertical; smoothing of 100 s (or 30 s) drags the past along: twice its length times the speed.
+    factor  slant over vertical; the rest as in `front_error_m`
     Source: ICAO Annex 10, Appendix B, 3.6.5.4 (formula from memory).
     """
+    return np.asarray(factor, dtype=np.float64) * front_error_m(sigma_mm_per_km, distance_km, speed_m_s, smoothing_s)
+
+
+def front_error_m(
+    slope_mm_per_km: npt.ArrayLike, distance_km: float, speed_m_s: float, smoothing_s: float = 100.0
+) -> Floats:
+    """Differential delay [m] that a slope makes for an approaching aircraft.
+
+    Smoothing of 100 s (or 30 s) drags the past along: twice its length times the speed (DO-253; from memory).
+    """
     way_km = distance_km + 2.0 * smoothing_s * speed_m_s / 1000.0
-    return np.asarray(np.asarray(factor, dtype=np.float64) * sigma_mm_per_km * 1e-3 * way_km)
-
-
-def front_error_m(slope_mm_per_km: float, distance_km: float, speed_m_s: float, smoothing_s: float = 100.0) -> float:
-    """Differential delay [m] that a slope makes for an approaching aircraft: slope times the way as above."""
-    return slope_mm_per_km * 1e-3 * (distance_km + 2.0 * smoothing_s * speed_m_s / 1000.0)
+    return np.asarray(np.asarray(slope_mm_per_km, dtype=np.float64) * 1e-3 * way_km)
 
 
 @dataclass(frozen=True)
@@ -179,9 +185,8 @@ def station_day(
         seen = seen | steeper
     slope, sigma = np.where(seen, slope, np.nan), np.where(seen, sigma, np.nan)
     factor = float(mapping(choices.lowest_deg, shell_height_m))
-    way_km = choices.distance_km + 2.0 * choices.smoothing_s * choices.speed_m_s / 1000.0
     most = slope + _ONE_SIDED_95 * sigma
-    error = factor * most * 1e-3 * way_km
+    error = nominal_error_m(factor, most, choices.distance_km, choices.speed_m_s, choices.smoothing_s)
     sure = slope - sigma
     with np.errstate(invalid="ignore"):
         within = (most <= min(nominal, ANNOUNCED_MOST)) & (judged == HOLDS)
@@ -196,10 +201,11 @@ def station_day(
     state = np.where(judged >= STRAINED, judged, UNSEEN).astype(np.uint8)
     for mark, code in ((within, HOLDS), (marks["nominal"], STRAINED), (marks["announced"], BROKEN)):
         state[mark] = np.maximum(state[mark], code)
+    minutes = {name: float(mark.sum()) * step_s / 60.0 for name, mark in {"within": within, **marks}.items()}
+    minutes["unseen"] += max(0.0, 1440.0 - len(fields.times) * step_s / 60.0)  # hours that no map reaches
     return StationDay(
         site, fields.times, slope, sigma, seen, error, state,
-        tuple(_exceeded(site, fields.times, slope, sigma, marks, choices, step_s, judged, told)),
-        {name: float(mark.sum()) * step_s / 60.0 for name, mark in {"within": within, **marks}.items()},
+        tuple(_exceeded(site, fields.times, slope, sigma, marks, choices, step_s, judged, told)), minutes,
         _assumptions(choices, factor, shell_height_m),
     )  # fmt: skip
 

@@ -30,6 +30,8 @@ from scipy.stats import chi2
 
 from skylag.constants import L1_M_PER_TECU
 from skylag.errors import Refused
+from skylag.impact import at_places
+from skylag.impact.ground_augmentation import front_error_m
 from skylag.impact.states import (
     PLANAR_FAILS,
     PLANAR_PASSES,
@@ -56,6 +58,7 @@ from skylag.tables import (
     Floats,
     Ints,
     Region,
+    Site,
     Times,
     Use,
 )
@@ -140,8 +143,8 @@ def limits_of(use: Use, shell_height_m: float = 400e3) -> tuple[float, float, st
 
 
 def approach_error_m(use: Use, slope_mm_per_km: float) -> float:
-    """Error [m] of an approach under a slope: slope times (distance + 2 x smoothing x speed); DO-253 (from memory)."""
-    return slope_mm_per_km * (use.baseline_km + 2.0 * use.smoothing_s * use.speed_m_s / 1000.0) / 1000.0
+    """Error [m] of an approach under a slope, as a ground-based station's."""
+    return float(front_error_m(slope_mm_per_km, use.baseline_km, use.speed_m_s, use.smoothing_s))
 
 
 def judge_for(
@@ -174,7 +177,7 @@ def judge_for(
     measure = np.where(seen, measure, np.nan)
     judged = JudgedUse(use, fields.times, state, flag_of, owner, measure, np.zeros((0, 0), np.uint8), (), (),
                        (strained, broken), unit)  # fmt: skip
-    states, reasons, evidence = _at_sites(judged, sigma, flags, fields, region)
+    states, reasons, evidence = _at_sites(judged, sigma, flags, fields, region, choices)
     return replace(judged, site_states=states, site_reasons=reasons, site_evidence=evidence)
 
 
@@ -329,9 +332,9 @@ def flag_state(use: Use, flag: Flag, limits: tuple[float, float], choices: Judge
 
 
 def _at_sites(
-    judged: JudgedUse, sigma: Floats, flags: Sequence[Flag], fields: Fields, region: Region
+    judged: JudgedUse, sigma: Floats, flags: Sequence[Flag], fields: Fields, region: Region, choices: JudgeChoices
 ) -> tuple[Bytes, tuple[tuple[str, ...], ...], tuple[tuple[tuple[int, ...], ...], ...]]:
-    """States, sentences and flags of the sites, by the cells they stand in."""
+    """States, sentences and flags of the sites: by the cells they stand in, and by what lies over the sites alone."""
     lat = np.array([site.lat for site in region.sites], dtype=np.float64)
     lon = np.array([site.lon for site in region.sites], dtype=np.float64)
     count = len(judged.times)
@@ -339,8 +342,11 @@ def _at_sites(
         return np.zeros((count, 0), dtype=np.uint8), (), ()
     row, column, inside = nearest_cells(fields, lat, lon)
     states = np.where(inside[None, :], judged.states[:, row, column], UNSEEN).astype(np.uint8)
+    warned, told = at_places.judge(region.sites, fields, flags, region.thresholds)
+    beside = warned > np.maximum(fields.state[:, row, column], HOLDS)  # a warning that the cell itself does not have
     reasons, evidence = [], []
-    for number in range(len(lat)):
+    for number, site in enumerate(region.sites):
+        over = _over_site(judged, site, beside[:, number], warned[:, number], flags, choices)
         sentences: list[str] = []
         rows: list[tuple[int, ...]] = []
         for epoch in range(count):
@@ -349,12 +355,39 @@ def _at_sites(
                 sentences.append("outside the map: nothing can be said")
                 rows.append(())
                 continue
+            if over[epoch] > states[epoch, number]:
+                states[epoch, number] = over[epoch]
+                sentences.append(f"{told[number][epoch]}; it reaches the site and makes {judged.use.name} "
+                                 f"{STATE_NAMES[int(over[epoch])]}")  # fmt: skip
+                rows.append(())
+                continue
             behind = int(judged.flag_of[place])
             sentences.append(sentence(judged, place, float(sigma[place]), flags))
             rows.append((behind,) if behind >= 0 else ())
         reasons.append(tuple(sentences))
         evidence.append(tuple(rows))
     return states, tuple(reasons), tuple(evidence)
+
+
+def _over_site(
+    judged: JudgedUse, site: Site, beside: Bools, warned: Bytes, flags: Sequence[Flag], choices: JudgeChoices
+) -> Bytes:
+    """States (T,) that warnings give to a site alone, where its cell has none; 0 elsewhere.
+
+    By the flags that lie over the site; where none does, receivers nearby warn, which counts as it is for what slopes
+    hurt.
+    """
+    found, explained = np.zeros(len(warned), dtype=np.uint8), np.zeros(len(warned), dtype=bool)
+    if not beside.any():
+        return found
+    for flag in flags:
+        if flag.confirmed and flag.kind != "fault":
+            over = beside & at_places.over(flag, site, judged.times)
+            found = np.maximum(found, np.where(over, flag_state(judged.use, flag, judged.limits, choices), UNSEEN))
+            explained |= over
+    if judged.use.kind in ("differential", "ground"):
+        found = np.where(beside & ~explained, warned, found)
+    return found.astype(np.uint8)
 
 
 def sentence(judged: JudgedUse, place: tuple[int, int, int], sigma: float, flags: Sequence[Flag]) -> str:
