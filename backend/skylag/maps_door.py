@@ -14,7 +14,7 @@ from skylag import settings
 from skylag.archive import DayRecord, open_archive
 from skylag.errors import Refused
 from skylag.formats import contours, delimited, ionex, netcdf, results
-from skylag.impact.states import honest_state
+from skylag.impact.states import carried, honest_state
 from skylag.ionosphere import augmentation_grid
 from skylag.tables import Biases, Fields, Region, Samples, Thresholds
 from skylag.timescales import gps_to_utc, utc_to_gps
@@ -78,14 +78,16 @@ def _maps(options: argparse.Namespace) -> int:
         return 0
     if options.format == "ionex":
         description = sentences.description(day.region.name, day.simulated, day.provisional)
-        text = ionex.write(fields, day.made, day.region.shell_height_km, description=description, biases=day.biases)
+        text = ionex.write(
+            carried(fields), day.made, day.region.shell_height_km, description=description, biases=day.biases
+        )
     elif options.format == "geojson":
         about = sentences.about(day.simulated, day.provisional)
         text = contours.to_geojson(fields, 0, options.step, about, day.region.thresholds.unseen_sigma_m) + "\n"
     elif options.format == "gridpoints":
         text = _grid_points(day, fields)
     else:
-        text = delimited.maps_csv(fields)
+        text = delimited.maps_csv(carried(fields))
     if options.out:
         options.out.write_text(text, encoding="utf-8")
     else:

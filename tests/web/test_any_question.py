@@ -1,6 +1,7 @@
 """Whatever is asked, the answer is a good one or a failure in words: never a defect."""
 
 import json
+import re
 
 import numpy as np
 import pytest
@@ -44,6 +45,30 @@ def names_of(route: APIRoute) -> list[str]:
 
 
 QUESTIONS = {route.path: names_of(route) for route in routes() if "GET" in route.methods and names_of(route)}
+
+
+# Answers about single lines of sight, receivers and queues tell no state of a place, but may use the same words.
+_NO_STATES = ("/api/network", "/api/work", "/api/coast", "/rays", "/witnesses", "/biases")
+
+
+def test_whoever_is_told_a_state_or_a_verdict_is_told_the_caution(client: TestClient) -> None:
+    telling = {"state", "states", "verdict", "state_shares", "strained_from", "chance_strained"}
+    asked = set()
+    for address in sorted({*QUESTIONS, "/api/quantities"}):
+        path = address
+        for name in ("region", "day", "number"):
+            path = path.replace("{" + name + "}", GOOD[name])
+        left = {name for name in QUESTIONS.get(address, ()) if "{" + name + "}" in address} | {"places", "shape"}
+        names = [name for name in QUESTIONS.get(address, ()) if name not in left]
+        answer = client.get(path, params={name: GOOD[name] for name in names if GOOD[name]})
+        json_told = answer.status_code == 200 and "json" in answer.headers.get("content-type", "")
+        if any(part in address for part in _NO_STATES) or not json_told:
+            continue
+        if telling & set(re.findall(r"\w+", answer.text)):
+            assert "not for navigation" in answer.json()["caution"], address
+            asked.add(address.removeprefix("/api/").removeprefix("days/{region}/{day}"))
+    assert asked >= {"quantities", "days", "", "/fields", "/reading", "/series", "/flags", "/flags.geojson", "/events",
+                     "/site-states", "/site-states-for", "/uses", "/survey", "/survey/why", "/ground"}  # fmt: skip
 
 
 @pytest.mark.parametrize("address", QUESTIONS)

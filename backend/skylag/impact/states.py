@@ -169,6 +169,20 @@ def honest_state(fields: Fields) -> Bytes:
     return np.where((fields.state == HOLDS) & ~known, UNSEEN, fields.state).astype(np.uint8)
 
 
+def carried(fields: Fields) -> Fields:
+    """The maps with the states as `honest_state` has them, and no number where no line of sight carries a cell.
+
+    There the maps hold what they fade into: the background, which nobody saw.  Whoever gives numbers to a reader who
+    cannot see the support beside them asks this.
+    """
+    blind = fields.support == 0
+    layers: dict[str, Any] = {
+        name: np.where(blind, np.float32(np.nan), getattr(fields, name)).astype(np.float32)
+        for name in ("vtec", "vtec_sigma", "slope", "slope_sigma", "slope_east", "slope_north")
+    }
+    return replace(fields, state=honest_state(fields), **layers)
+
+
 def stays_under(value: npt.ArrayLike, sigma: npt.ArrayLike, limit: float) -> Bools:
     """Where a value is below a limit with 95 % confidence; False where it is not known."""
     with np.errstate(invalid="ignore"):

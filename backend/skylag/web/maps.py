@@ -13,7 +13,7 @@ from skylag import timescales
 from skylag.archive import Archive, DayRecord, slants
 from skylag.errors import Missing
 from skylag.formats import coast, contours, delimited, ionex, netcdf
-from skylag.impact.states import honest_state
+from skylag.impact.states import carried, honest_state
 from skylag.tables import Fields
 from skylag.web import asking, nearby, payloads, sentences, witnesses
 from skylag.web.frames import Answers
@@ -115,7 +115,10 @@ def field_netcdf(request: Request, region: str, day: str, version: int | None = 
 
 @router.get("/api/days/{region}/{day}/maps.inx", summary="Maps of a day as IONEX")
 def maps_ionex(request: Request, region: str, day: str, version: int | None = None) -> Response:
-    """Maps of content and its uncertainty, every quarter of an hour, with the day's biases, as IONEX 1.0."""
+    """Maps of content and its uncertainty, every quarter of an hour, with the day's biases, as IONEX 1.0.
+
+    Where no line of sight carries a cell it has the format's 9999.
+    """
     archive: Archive = request.app.state.archive
     record = archive.day(region, asking.day(day), version)
     held = archive.fields(region, record.head.day, None, None, record.head.version)
@@ -127,7 +130,7 @@ def maps_ionex(request: Request, region: str, day: str, version: int | None = No
     about = sentences.description(record.region.name, record.origin.simulated, record.head.provisional)
     saved_at = np.datetime64(timescales.utc_to_gps(record.head.saved_at.astype("datetime64[ns]")).item(), "ns")
     biases = archive.biases(region, record.head.day, record.head.version)
-    text = ionex.write(thin, saved_at, record.region.shell_height_km, description=about, biases=biases)
+    text = ionex.write(carried(thin), saved_at, record.region.shell_height_km, description=about, biases=biases)
     return payloads.file(text.encode("ascii", "replace"), f"{region}-{day}.inx", "text/plain")
 
 
@@ -135,8 +138,7 @@ def maps_ionex(request: Request, region: str, day: str, version: int | None = No
 def map_csv(request: Request, region: str, day: str, time: str, version: int | None = None) -> Response:
     """Delay, slope, their uncertainty and the state of every cell of the map nearest to a UTC instant."""
     held, record = _one_map(request, region, day, time, version)
-    held = replace(held, state=honest_state(held))
-    return payloads.file(delimited.maps_csv(held).encode(), f"{region}-{record.head.day}-map.csv", "text/csv")
+    return payloads.file(delimited.maps_csv(carried(held)).encode(), f"{region}-{record.head.day}-map.csv", "text/csv")
 
 
 @router.get("/api/days/{region}/{day}/lines.geojson", summary="Lines of equal delay of a map as GeoJSON")

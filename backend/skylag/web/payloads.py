@@ -28,7 +28,7 @@ from skylag.formats import events as event_files
 from skylag.impact.ground_augmentation import NextFront, StationDay
 from skylag.impact.satellite_augmentation import Availability
 from skylag.impact.single_frequency import LeftOver
-from skylag.impact.states import honest_state
+from skylag.impact.states import carried
 from skylag.impact.survey import Advice, Explanation
 from skylag.ionosphere.beside import Beside
 from skylag.ionosphere.geometry import geodetic
@@ -42,7 +42,7 @@ def _metres(values: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
     return np.asarray(values * np.float32(L1_M_PER_TECU))
 
 
-# Layer name, as in the vocabulary, -> how it follows from the stored maps.
+# Layer name, as in the vocabulary, -> how it follows from maps that are `carried`.
 LAYERS: dict[str, Callable[[Fields], npt.NDArray[Any]]] = {
     "vertical_delay": lambda fields: _metres(fields.vtec),
     "vertical_delay_sigma": lambda fields: _metres(fields.vtec_sigma),
@@ -53,7 +53,7 @@ LAYERS: dict[str, Callable[[Fields], npt.NDArray[Any]]] = {
     "slope_sigma": lambda fields: fields.slope_sigma,
     "slope_east": lambda fields: fields.slope_east,
     "slope_north": lambda fields: fields.slope_north,
-    "state": honest_state,
+    "state": lambda fields: fields.state,
 }
 USUAL_LAYERS = ("vertical_delay", "vertical_delay_sigma", "slope", "state")
 
@@ -165,7 +165,9 @@ def days(heads: Sequence[DayHead], activity: Mapping[str, DayActivity]) -> dict[
     (observed F10.7), each null where not told; `activity` itself is null where no indices of the day were imported.
     """
     listed = [{**_head(head), "activity": _activity(activity.get(str(head.day)))} for head in heads]
-    return {"days": listed, "regions": sorted({head.region for head in heads})}
+    return {
+        "days": listed, "regions": sorted({head.region for head in heads}), "caution": sentences.CAUTION
+    }  # fmt: skip
 
 
 def _activity(told: DayActivity | None) -> dict[str, Any] | None:
@@ -255,13 +257,15 @@ def _region(region: Region) -> dict[str, Any]:
 
 
 def maps(fields: Fields, layers: Sequence[str]) -> dict[str, Any]:
-    """Maps of a span of time."""
+    """Maps of a span of time; no number where no line of sight carries a cell."""
+    fields = carried(fields)
     return {
         "times_utc": utc_texts(fields.times),
         "lats": _numbers(fields.lats),
         "lons": _numbers(fields.lons),
         "layers": {name: array(LAYERS[name](fields)) for name in layers},
         "units": {name: quantities.BY_NAME[name].unit for name in layers},
+        "caution": sentences.CAUTION,
     }
 
 
@@ -284,7 +288,8 @@ def series(
     cell: Fields, record: DayRecord, near: Sequence[Sequence[nearby.NearFlag]], inside: bool
 ) -> dict[str, Any]:
     """The day at one cell; `near` holds the flags near it at each of its times."""
-    metres, metres_sigma, state = _metres(cell.vtec), _metres(cell.vtec_sigma), honest_state(cell).reshape(-1)
+    cell = carried(cell)
+    metres, metres_sigma, state = _metres(cell.vtec), _metres(cell.vtec_sigma), cell.state.reshape(-1)
     sentence = [sentences.OUTSIDE] * len(cell.times)
     if inside:
         sentence = [
@@ -309,6 +314,7 @@ def series(
         "support": [int(n) for n in cell.support.reshape(-1)],
         "state": [STATE_NAMES[int(k)] for k in state],
         "sentence": sentence,
+        "caution": sentences.CAUTION,
     }
 
 
@@ -317,7 +323,8 @@ def reading(
 ) -> dict[str, Any]:
     """What is known at a place and time: `cell` holds one map of one cell.  Unseen places have no numbers."""
     inside = record.cell_of(lat, lon) is not None
-    code = int(honest_state(cell)[0, 0, 0])
+    cell = carried(cell)
+    code = int(cell.state[0, 0, 0])
     delay_m, sigma_m = float(_metres(cell.vtec)[0, 0, 0]), float(_metres(cell.vtec_sigma)[0, 0, 0])
     slope, slope_sigma = float(cell.slope[0, 0, 0]), float(cell.slope_sigma[0, 0, 0])
     support = int(cell.support[0, 0, 0])
@@ -389,7 +396,8 @@ def flags(table: Sequence[Flag]) -> dict[str, Any]:
         "flags": [
             {**_flag(flag), "track": [[utc(t), _number(lat), _number(lon)] for t, lat, lon in flag.track]}
             for flag in table
-        ]
+        ],
+        "caution": sentences.CAUTION,
     }
 
 
@@ -439,6 +447,7 @@ def site_states(states: SiteStates) -> dict[str, Any]:
         "states": list(STATE_NAMES),
         "codes": states.codes.T.tolist(),
         "reasons": [list(one) for one in states.reasons],
+        "caution": sentences.CAUTION,
     }
 
 

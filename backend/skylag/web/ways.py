@@ -27,7 +27,7 @@ def known_uses(request: Request, region: str, day: str, version: int | None = No
         strained, broken, unit = uses.limits_of(use, known.shell_height_km * 1000.0)
         rows.append({"name": use.name, "kind": use.kind, "baseline_km": use.baseline_km, "spare_mm": use.spare_mm,
                      "strained_from": round(strained, 4), "broken_from": round(broken, 4), "unit": unit})  # fmt: skip
-    return payloads.reply({"uses": rows})
+    return payloads.reply({"uses": rows, "caution": sentences.CAUTION})
 
 
 @router.get("/api/days/{region}/{day}/site-states-for", summary="States of the sites for one use")
