@@ -810,9 +810,10 @@ class Outlook:
     names (P,)     of sites, "" for cells; lats, lons (P,) [deg]
     delay (H, P)   expected vertical delay on 1575.42 MHz [m]
     levels (Q,)    of delay_quantiles (H, P, Q) [m]; slope_levels (S,) of slope_quantiles (H, P, S) [mm/km]
-    uses (U,)      names; strained, broken (U, H, P) chance that the hour is strained or worse, and broken
+    uses (U,)      names; strained, broken (U, H, P) chance that the hour is strained or worse, and broken; NaN for an
+                   hour of the day that was hardly seen at the place
     phases (H,)    where each hour stands in a storm, as told
-    seen_days (P,) of the last 27 days on which the place was seen at all
+    seen_days (P,) of the last 27 days on which anything was said of corrections at the place
     basis          what it rests on, in words
     """
 

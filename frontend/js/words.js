@@ -64,6 +64,7 @@ export const WORDS = {
   tryAgain: "Try again",
   notConfirmed: "Not confirmed.",
   allHold: "Corrections hold at every site.",
+  allHeld: "At that time corrections held at every site; how it is now is not known.",
   /** @param {string[]} names */
   also: (names) =>
     names.length < 4 ? `Not good either: ${names.join(", ")}.` : `Not good either: ${names.slice(0, 2).join(", ")} and ${names.length - 2} more sites.`,
@@ -85,10 +86,12 @@ export const WORDS = {
   noActivity: "No indices of geomagnetic activity of these days are in the archive, so it cannot filter them.",
   /** @param {string} kp */
   kp: (kp) => `Kp up to ${kp}`,
+  /** @param {string} share */
+  partUnseen: (share) => `${share} of it unseen`,
   /** @param {string} slope */
   slopeUpTo: (slope) => `slope up to ${slope} mm/km`,
   /** @param {number} shown @param {number} all */
-  yearSpan: (shown, all) => `${shown === all ? "All" : `${shown} of`} ${all} stored ${all === 1 ? "day" : "days"}. State: the worst that was seen at any time; bars: the slope that 99 of 100 seen cells stay under.`,
+  yearSpan: (shown, all) => `${shown === all ? "All" : `${shown} of`} ${all} stored ${all === 1 ? "day" : "days"}. State: the worst that was seen at any time, dotted as far as nothing was; bars: the slope that 99 of 100 seen cells stay under.`,
   /** @param {string} what @param {boolean} difference */
   comparedWith: (what, difference) => (difference ? `This day less ${what}, at the same time of day.` : `Right: ${what}, at the same time of day.`),
   /** @param {number} count */
@@ -108,7 +111,7 @@ export const WORDS = {
   /** @param {number} minutes */
   lookingBack: (minutes) => `You look at ${minutes < 120 ? `${minutes} minutes` : `${Math.round(minutes / 60)} hours`} before that.`,
   noFlagsNow: "No flag is raised at this time.",
-  noArrivals: "No front is on its way to a named site within three hours.",
+  noArrivals: "No front is known to be on its way to a named site within three hours.",
   /** @param {number} minutes @param {number} spread  two sigmas */
   inMinutes: (minutes, spread) => `in ${minutes} minutes, give or take ${spread}`,
   /** @param {string} from @param {string} speed */

@@ -29,6 +29,11 @@ def test_a_place_that_is_not_known_gets_one_caution() -> None:
     assert "not covered" in said
 
 
+def test_hours_that_are_not_known_are_spoken_of() -> None:
+    said = " ".join(advice(PUBLISHED[0], spans((HOLDS, 20), (UNKNOWN, 6), (HOLDS, 22)), storm_told=False))
+    assert "Hours that are not known" in said and "not covered" in said
+
+
 @pytest.mark.parametrize(
     ("use", "wanted"),
     [

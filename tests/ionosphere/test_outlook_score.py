@@ -1,5 +1,7 @@
 """Scores of outlooks against their definitions, sums of them, and what is left out."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from tests.conftest import Evidence
@@ -51,6 +53,11 @@ def test_scores_by_hand() -> None:
     assert cases == int((states > 0).sum())
     came_often = sum(tenth.came * tenth.cases for tenth in reliability(tally, "long baselines", "strained"))
     assert came_often == pytest.approx(int((states >= 2).sum()))
+    dark = made.strained.copy()
+    dark[:, 5] = np.nan  # an hour of which no chance was told cannot be right or wrong
+    fewer = score(replace(made, strained=dark, broken=dark), year.history, year.drivers)
+    cases = sum(tenth.cases for tenth in reliability(fewer, "long baselines", "strained"))
+    assert cases == int((states > 0).sum() - (states[5] > 0).sum())
 
 
 def test_simple_ways_use_only_what_was_known() -> None:

@@ -14,7 +14,7 @@ import { keyStep, nearest, runs, stripFigure } from "../../frontend/js/figures/s
 import { freeSpot, projection } from "../../frontend/js/painting.js";
 import { calendarText, csvText, mapRows, outlookRows } from "../../frontend/js/exporting.js";
 import { WORDS } from "../../frontend/js/words.js";
-import { chosenDays, fieldOf } from "../../frontend/js/figures/year.js";
+import { chosenDays, fieldOf, yearFigure } from "../../frontend/js/figures/year.js";
 import { unpack } from "../../frontend/js/api.js";
 
 const DAY = Date.UTC(2031, 4, 11);
@@ -333,6 +333,15 @@ test("days of the year by season, state, site and magnetic field", () => {
   assert.deepEqual(days({ span: "dec-feb" }), ["31-01-05", "32-01-02"]);
   assert.deepEqual(days({ span: "2031", worst: "broken" }), ["31-03-12"]);
   assert.deepEqual(days({ worst: "broken" }, "Port"), ["31-03-12"]);
+});
+
+test("a day that held as far as it was seen shows how much of it was not", () => {
+  const entry = (day, shares) => ({ day, kp: NaN, ap: NaN, slope: 2, flags: 0, shares, siteShares: { Port: shares } });
+  const entries = [entry("2031-01-05", { holds: 0.75, unseen: 0.25 }), entry("2031-01-06", { holds: 0.4, unseen: 0.6 }), entry("2031-01-07", undefined)];
+  for (const who of ["", "Port"]) {
+    const { columns } = yearFigure({ entries, who, width: 300 });
+    assert.deepEqual(columns.map(({ state, unseen }) => [state, unseen]), [["holds", 0.25], ["unseen", 0.6], ["unseen", 1]]);
+  }
 });
 
 test("the outlook as shapes: bands inside each other, chances that stand on each other, hours of the zone", () => {

@@ -12,7 +12,7 @@ import numpy as np
 from skylag.ionosphere.outlook import SPAN_KINDS, Span
 from skylag.tables import Use
 
-_HOLDS, _DOUBTFUL, _NOT, _UNKNOWN = SPAN_KINDS
+_HOLDS, *_, _UNKNOWN = SPAN_KINDS
 _HOUR = np.timedelta64(1, "h")
 
 
@@ -31,6 +31,8 @@ def advice(use: Use, spans: tuple[Span, ...], storm_told: bool) -> tuple[str, ..
         said.append(f"Another hour may do: the longest stretch likely to hold is {hours} h; see the windows.")
     else:
         said.append("No hour of the outlook is likely to hold; another day may do.")
+    if _UNKNOWN in kinds:
+        said.append("Hours that are not known were seen here on too few days lately: treat them as not covered.")
     if storm_told:
         said.append(
             "A geomagnetic storm or its aftermath is told: effects begin at high latitudes, reach lower ones within "

@@ -496,18 +496,31 @@ def _outlook(
                 columns = what.columns[use][level]
                 chance = lead.chances[use][level].now(columns.reshape(24 * places, -1), usual)
                 chances[level, use, rows] = chance.reshape(24, places)
+    seen_days, dark = _seen(history.states[:, max(0, last + 1 - ROTATION) : last + 1])
+    chances[:, np.tile(dark, (1, len(leads), 1))] = np.nan
     start = (history.days[last] + np.timedelta64(1, "D")).astype("datetime64[ns]")
     hours: Times = start + np.arange(24 * len(leads)) * np.timedelta64(3600, "s")
-    seen = np.isfinite(history.delay[max(0, last + 1 - ROTATION) : last + 1])
     return Outlook(
         known_until=history.days[last], hours=hours, names=history.names, lats=history.lats, lons=history.lons,
         delay=np.concatenate(delay), levels=LEVELS, delay_quantiles=np.concatenate(quantiles),
         slope_levels=SLOPE_LEVELS, slope_quantiles=np.concatenate(slopes),
         uses=np.array([limits.use for limits in history.limits], dtype=np.str_),
         strained=chances[0], broken=np.minimum(chances[1], chances[0]),
-        phases=np.array(activity.words(told), dtype=np.str_), seen_days=seen.any(axis=1).sum(axis=0).astype(np.float64),
+        phases=np.array(activity.words(told), dtype=np.str_), seen_days=seen_days,
         basis=_basis(world, last, told),
     )  # fmt: skip
+
+
+def _seen(states: Bytes) -> tuple[Floats, Bools]:
+    """Days (P,) on which anything was said of corrections at a place, and the hours of the day of which too little was.
+
+    states  (uses, days, 24, P) of the last days.  The second, (uses, 24, P): where the place itself was seen on seven
+    days and more, an hour that was seen on fewer, and on fewer than half of them, has no chance: what other hours and
+    places taught would call it good though nobody looks there then.
+    """
+    told = states != UNSEEN
+    days = told.any(axis=(0, 2)).sum(axis=0).astype(np.float64)
+    return days, np.asarray((days >= LEAST_DAYS) & (told.sum(axis=1) < np.minimum(LEAST_DAYS, days / 2.0)))
 
 
 def _basis(world: _World, last: int, told: npt.NDArray[Any]) -> tuple[str, ...]:
@@ -555,12 +568,14 @@ def windows(outlook: Outlook, place: int, use: int, most: float = 0.1) -> tuple[
     """Spans of hours for a place and use (row numbers), by the chance that an hour is strained or worse.
 
     most  the chance up to which an hour counts as likely to hold; from one half on it is `likely not`
-    A place seen on fewer than seven of the last 27 days has no window: it is `not known`.
+    A place seen on fewer than seven of the last 27 days has no window: it is `not known`, and so is an hour of the day
+    without a chance.
     """
     if not 0.0 < most < 0.5:
         raise Refused(f"most: {most:g} is no chance between 0 and 0.5", name="most", value=most, allowed="0 to 0.5")
     strained, broken = outlook.strained[use, :, place], outlook.broken[use, :, place]
     kind = np.where(strained <= most, 0, np.where(strained < 0.5, 1, 2))
+    kind[~np.isfinite(strained)] = 3
     if outlook.seen_days[place] < LEAST_DAYS:
         kind = np.full(len(kind), 3)
     edges = np.flatnonzero(np.diff(kind)) + 1

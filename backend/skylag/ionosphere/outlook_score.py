@@ -169,12 +169,13 @@ def _score_states(
     month = history.states[use, max(0, last + 1 - ROTATION) : last + 1]
     yesterday = history.states[use, last]
     for level, least, chances in zip(_LEVELS, (STRAINED, BROKEN), (outlook.strained, outlook.broken), strict=True):
-        chance = chances[use, rows][seen]
-        happened = (came[seen] >= least).astype(np.float64)
+        told = seen & np.isfinite(chances[use, rows])
+        chance = chances[use, rows][told]
+        happened = (came[told] >= least).astype(np.float64)
         known = (month != UNSEEN).sum(axis=0)
-        often = ((month >= least).sum(axis=0) / np.maximum(known, 1))[seen]
-        same = (yesterday >= least)[seen].astype(np.float64)
-        both = (known[seen] > 0) & (yesterday[seen] != UNSEEN)
+        often = ((month >= least).sum(axis=0) / np.maximum(known, 1))[told]
+        same = (yesterday >= least)[told].astype(np.float64)
+        both = (known[told] > 0) & (yesterday[told] != UNSEEN)
         row = [float(both.sum()), float(((chance - happened)[both] ** 2).sum()),
                float(((often - happened)[both] ** 2).sum()), float(((same - happened)[both] ** 2).sum())]  # fmt: skip
         before = tally.brier.setdefault(name, {}).setdefault(level, [0.0] * 4)

@@ -667,7 +667,8 @@ def outlook_at(
 ) -> dict[str, Any]:
     """The outlook at one of its places for one of its uses; hours are starts, UTC.
 
-    Chances are null at a place seen on too few days, as its windows are `not known`.
+    Chances are null at a place seen on too few days, and at hours of the day that were, as their windows are `not
+    known`.
     """
     made = kept.outlook
     known = bool(made.seen_days[place] >= LEAST_DAYS)

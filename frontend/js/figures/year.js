@@ -20,6 +20,11 @@ export function worstOf(shares) {
   return shares.unseen > 0.5 || !(shares.holds > 0) ? "unseen" : "holds";
 }
 
+/** The share of a day that nobody saw. @param {Record<string, number>|undefined} shares */
+export function unseenOf(shares) {
+  return shares ? shares.unseen ?? 0 : 1;
+}
+
 /** @param {import("../api.js").DayEntry} entry @param {string} who  a site, or "" for the region */
 export function sharesOf(entry, who) {
   return who ? entry.siteShares[who] : entry.shares;
@@ -73,6 +78,7 @@ export function yearFigure({ entries, who, width, slopeHeight = 44, stateHeight 
     return {
       entry,
       state: worstOf(sharesOf(entry, who)),
+      unseen: unseenOf(sharesOf(entry, who)),
       x: Number((at[i] * step).toFixed(2)),
       width: Number(step.toFixed(2)),
       y: Number((slopeHeight - tall).toFixed(2)),

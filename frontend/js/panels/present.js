@@ -33,7 +33,7 @@ export class PresentPanel {
     this.#elements = elements;
     this.#state = state;
     elements.back.addEventListener("click", () => state.change({ minute: null }));
-    this.#timer = window.setInterval(() => this.#age(), 10000);
+    this.#timer = window.setInterval(() => this.#scene && this.show(this.#scene), 10000);
   }
 
   /** @param {import("../main.js").Scene} scene */
@@ -43,7 +43,7 @@ export class PresentPanel {
     this.#age();
     if (!this.#asked) this.#ask();
     const { day, time, view, siteStates } = scene;
-    const key = JSON.stringify([day.region.key, day.day, time, view.clock, siteStates?.serial]);
+    const key = JSON.stringify([day.region.key, day.day, time, view.clock, siteStates?.serial, this.#stale()]);
     if (key === this.#shown) return;
     this.#shown = key;
     const how = { clock: view.clock, zone: day.region.timezone };
@@ -51,7 +51,7 @@ export class PresentPanel {
     const bad = day.sites
       .map((site, number) => ({ site, state: siteStates?.stateOf(number, time) ?? "unseen" }))
       .filter(({ state }) => state !== "holds");
-    fill(fails, bad.map(({ site, state }) => make("li", {}, stateWord(state), " ", make("button", { type: "button", class: "linklike", text: site.name, click: () => this.#state.change({ place: [site.lat, site.lon] }) }))), day.sites.length ? WORDS.allHold : WORDS.noSites);
+    fill(fails, bad.map(({ site, state }) => make("li", {}, stateWord(state), " ", make("button", { type: "button", class: "linklike", text: site.name, click: () => this.#state.change({ place: [site.lat, site.lon] }) }))), day.sites.length ? (this.#stale() ? WORDS.allHeld : WORDS.allHold) : WORDS.noSites);
     const active = day.flags.filter((flag) => flag.start <= time && time <= flag.end);
     fill(flags, active.map((flag) => make("li", {}, make("button", { type: "button", class: "linklike", text: KIND_WORDS[flag.kind]?.name ?? flag.kind, click: () => this.#state.change({ place: viewOf(flag, day).place }) }), ` ${flagSentence(flag).split(", ").slice(1).join(", ") || flag.evidence.split(/[:;]/)[0]}`)), WORDS.noFlagsNow);
     const coming = arrivals(day.flags, day.sites, time);
@@ -101,6 +101,12 @@ export class PresentPanel {
     const item = (one) => make("li", {}, make("strong", { text: `${dateText(one.made, how.clock === "local" ? zone : "UTC")}, ${timeText(one.made, how)}` }), ` ${one.sentence}`, ...(one.facts.simulated ? [make("small", { text: ` ${WORDS.simulatedShort}` })] : []));
     fill(alerts, found.slice(0, MOST_ALERTS).map(item), WORDS.noAlerts);
     if (found.length > MOST_ALERTS) alerts.append(make("li", { class: "fine", text: WORDS.olderAlerts(found.length - MOST_ALERTS) }));
+  }
+
+  /** Is what is shown older, or later, than the present? */
+  #stale() {
+    const old = Date.now() - this.#scene.time;
+    return old < 0 || old > STALE_AFTER;
   }
 
   #age() {

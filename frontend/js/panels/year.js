@@ -124,6 +124,10 @@ export class YearPanel {
           draft("rect", { class: "day-hit", x: column.x, y: 0, width: column.width, height: figure.height }),
           draft("rect", { class: "day-slope", x: column.x + gap, y: column.y, width: Math.max(1, column.width - 2 * gap), height: column.tall }),
           draft("rect", { class: `edge-${column.state}`, x: column.x + gap / 2, y: figure.slopeHeight + 4, width: Math.max(1, column.width - gap), height: figure.stateHeight, fill: `url(#pattern-${column.state})` }),
+          // The part of a good day that nobody saw is not good: it takes its share of the box.
+          ...(column.state === "holds" && column.unseen >= 0.01
+            ? [draft("rect", { class: "edge-unseen", x: column.x + gap / 2, y: figure.slopeHeight + 4 + figure.stateHeight * (1 - column.unseen), width: Math.max(1, column.width - gap), height: figure.stateHeight * column.unseen, fill: "url(#pattern-unseen)" })]
+            : []),
           draft("path", { class: "day-pointer", d: `M${column.x + column.width / 2} ${figure.slopeHeight + 2}V0m-4.5 0h9l-4.5 7z` }),
         ),
       );
@@ -192,8 +196,9 @@ export class YearPanel {
   };
 }
 
-function sentence({ entry, state }) {
+function sentence({ entry, state, unseen }) {
+  const dark = state !== "unseen" && unseen >= 0.01 ? `, ${WORDS.partUnseen(shareText(unseen))}` : "";
   const slope = Number.isFinite(entry.slope) ? `, ${WORDS.slopeUpTo(fixed(entry.slope, 0))}` : "";
   const kp = Number.isFinite(entry.kp) ? `, ${WORDS.kp(fixed(entry.kp, 1))}` : "";
-  return `${dayText(entry.day)}: ${STATE_WORDS[state].name}${slope}${kp}`;
+  return `${dayText(entry.day)}: ${STATE_WORDS[state].name}${dark}${slope}${kp}`;
 }
