@@ -48,6 +48,7 @@ from skylag.tables import (
     Region,
     Samples,
     Signals,
+    Thresholds,
 )
 
 Progress = Callable[[str, float], None]
@@ -186,6 +187,12 @@ def background_of(sources: Sequence[Ephemerides | PreciseOrbits], choices: Choic
     return background.climatological(choices.solar_flux)
 
 
+def ragged_from(choices: IrregularityChoices, limits: Thresholds) -> IrregularityChoices:
+    """The choices with the region's own index from which content is ragged; what is restless keeps its share of it."""
+    share = choices.restless_tecu_min / choices.ragged_tecu_min
+    return replace(choices, ragged_tecu_min=limits.strained_roti, restless_tecu_min=share * limits.strained_roti)
+
+
 def estimate(
     rays: Rays,
     region: Region,
@@ -224,7 +231,7 @@ def estimate(
     tell("fronts", 0.0)
     moving = front_witness.at_least(fronts.track(rays, samples, steep, choices.fronts), steep)
     tell("irregular", 0.0)
-    ragged = irregularity.assess(rays, moving, choices.irregularity, samples)
+    ragged = irregularity.assess(rays, moving, ragged_from(choices.irregularity, region.thresholds), samples)
     broken = faults.find(rays, samples, ragged, steep, moving)
     tell("states", 0.0)
     told = fronts.arrivals(moving, rays, region.sites)

@@ -4,6 +4,7 @@ The only place that reads environment variables and region files.  Never reaches
 """
 
 import argparse
+import math
 import os
 import tomllib
 from collections.abc import Mapping
@@ -244,7 +245,7 @@ def read_region(path: Path) -> Region:
                 f"{path}: [thresholds] knows nothing of {name}; it may hold {', '.join(sorted(allowed))}",
                 name=name, value=limits[name], allowed=sorted(allowed),
             )  # fmt: skip
-    thresholds = Thresholds(**{name: _number(path, name, value) for name, value in limits.items()})
+    thresholds = _in_order(path, Thresholds(**{name: _number(path, name, limits[name]) for name in limits}))
     uses = tuple(_use(path, entry) for entry in content.get("use", []))
     names = [use.name for use in uses]
     if len(set(names)) < len(names):
@@ -265,6 +266,17 @@ def _number(path: Path, name: str, value: object) -> float:
     if isinstance(value, bool) or not isinstance(value, int | float):
         raise Refused(f"{path}: {name} must be a number, not {value!r}", name=name, value=value, allowed="a number")
     return float(value)
+
+
+def _in_order(path: Path, limits: Thresholds) -> Thresholds:
+    """The same; Refused where a limit is none, or `broken` begins before `strained`."""
+    for name in Thresholds.__dataclass_fields__:
+        value = getattr(limits, name)
+        least = getattr(limits, name.replace("broken", "strained")) if name.startswith("broken") else 0.0
+        if not (math.isfinite(value) and value > 0.0 and value >= least):
+            allowed = "a number above 0" + (f", {least:g} or more as strained begins there" if least else "")
+            raise Refused(f"{path}: {name} is {value:g}; it must be {allowed}", name=name, value=value, allowed=allowed)
+    return limits
 
 
 def _site(path: Path, entry: Mapping[str, Any]) -> Site:

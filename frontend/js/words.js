@@ -131,7 +131,6 @@ export const WORDS = {
   assumptions: "Assumptions",
   methods: { rtk: "RTK from an own base", static: "static", network: "network corrections", dgnss: "DGNSS, one frequency" },
   method: "Method",
-  baseline: "baseline",
   noWindows: "No window could be told for this day.",
   noOutages: "No outage on this day.",
   /** @param {string} share */

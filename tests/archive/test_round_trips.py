@@ -35,11 +35,6 @@ def test_any_array(array: np.ndarray) -> None:
     assert got.tobytes() == array.astype(array.dtype.newbyteorder("=")).tobytes(), "to the bit, not-a-number included"
 
 
-@given(TEXT)
-def test_any_text(text: str) -> None:
-    assert chunks.unpack_text(chunks.pack_text(text, "label"), "label") == text
-
-
 @settings(max_examples=15, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(flags=st.lists(FLAGS, max_size=6).map(tuple))
 def test_any_flags(tmp_path: Path, flags: tuple[Flag, ...]) -> None:

@@ -56,6 +56,19 @@ def test_a_region_is_read(tmp_path: Path) -> None:
 
 
 @pytest.mark.parametrize(
+    ("limits", "said"),
+    [("strained_mm_per_km = 60", "broken_mm_per_km is 50"), ("unseen_sigma_m = inf", "unseen_sigma_m is inf"),
+     ("strained_roti = 0", "strained_roti is 0"), ("broken_roti = 0.4", "0.5 or more as strained begins there"),
+     ("unseen_sigma_m = nan", "unseen_sigma_m is nan"), ("strained_mm_per_km = -1", "a number above 0")],
+)  # fmt: skip
+def test_limits_that_are_none_are_refused(tmp_path: Path, limits: str, said: str) -> None:
+    """Such limits would call everything good, or nothing, without a word."""
+    text = GOOD.replace("broken_mm_per_km = 50", f"broken_mm_per_km = 50\n{limits}")
+    with pytest.raises(Refused, match=said):
+        settings.read_region(write(tmp_path, text))
+
+
+@pytest.mark.parametrize(
     ("old", "new", "kind", "said"),
     [
         ("[region]", "[realm]", FormatError, "no \\[region\\] table"),

@@ -9,6 +9,7 @@ from tests.simulated.moving_wall import PLACES, START, changed, flat, quiet, sam
 from skylag import chain, formats
 from skylag.errors import NotEnough
 from skylag.ionosphere import faults, fronts, irregularity, slopes
+from skylag.tables import Thresholds
 
 SERIES = np.array([20.00, 20.12, 20.30, 20.15, 20.60, 21.30, 21.10, 21.55, 21.70, 22.40, 22.35])
 NO_ONSETS = fronts.Fronts((), fronts._no_onsets())
@@ -96,6 +97,19 @@ def test_a_calm_sky_has_no_patch(calm):
     assert found.patches == ()
     assert np.nanmedian(found.index) < 0.2
     assert np.isfinite(found.aatr).all()
+
+
+@pytest.mark.parametrize(("share", "found"), [(1.1, False), (0.9, True)])
+def test_a_regions_own_index_decides_what_is_ragged(calm, share, found):
+    """`strained_roti` of a region file, just above and just below the highest index of a patch."""
+    rays, samples = ragged(*calm, centre=(40.0, -60.0), radius_km=130.0, first_h=1.0, last_h=2.5)
+    (patch,) = [p for p in irregularity.assess(rays, NO_ONSETS, None, samples).patches if p.confirmed]
+    usual = irregularity.IrregularityChoices()
+    assert chain.ragged_from(usual, Thresholds()) == usual
+    own = chain.ragged_from(usual, Thresholds(strained_roti=share * patch.index_highest, broken_roti=9.0))
+    assert own.restless_tecu_min == pytest.approx(0.5 * own.ragged_tecu_min)
+    own = replace(own, fewest_ragged=1)
+    assert any(p.confirmed for p in irregularity.assess(rays, NO_ONSETS, own, samples).patches) is found
 
 
 def test_a_patch_is_found_where_it_is(calm):

@@ -60,13 +60,3 @@ def unpack(packed: Packed, label: str) -> npt.NDArray[Any]:
     planes = np.frombuffer(zlib.decompress(packed.data), dtype=np.uint8)
     flat = np.ascontiguousarray(planes.reshape(dtype.itemsize, -1).T).view(dtype)
     return flat.reshape(shape).astype(dtype.newbyteorder("="), copy=False)
-
-
-def pack_text(text: str, label: str) -> Packed:
-    """Bytes of a text."""
-    return pack(np.frombuffer(text.encode("utf-8"), dtype=np.uint8), label)
-
-
-def unpack_text(packed: Packed, label: str) -> str:
-    """The text again; raises as `unpack` does."""
-    return bytes(unpack(packed, label)).decode("utf-8")

@@ -17,6 +17,7 @@ from skylag.impact.at_places import ahead_of
 from skylag.impact.satellite_augmentation import CAUTION, spans
 from skylag.impact.states import nearest_cells
 from skylag.ionosphere.geometry import mapping
+from skylag.ionosphere.slopes import NOMINAL_BOUND, model_bound
 from skylag.tables import (
     BROKEN,
     HOLDS,
@@ -34,22 +35,11 @@ from skylag.tables import (
 )
 
 ANNOUNCED_MOST = 25.5  # mm/km: 255 times 0.1; ICAO Annex 10, Appendix B to chapter 3
-# A spread of 4 mm/km bounds nominal slopes over CONUS: Mayer et al. 2009, ION GNSS, 1091-1099.
-NOMINAL_SIGMA = 4.0
 QUANTILE = 3.29  # 99.9 %: a slope beyond so many spreads is not nominal (our choice of share)
-# Slant slopes [mm/km on 1575.42 MHz] up to which fronts are foreseen: 375 at 15 degrees of elevation to 425 at 65
-# (Datta-Barua et al. 2010, 425 opened; the line between from memory).
-_THREAT_LOW, _THREAT_HIGH = (15.0, 375.0), (65.0, 425.0)
 # Speeds of fronts from few stations carry about 30 % (Radio Science 48, 2013): for flags that tell no sigma of theirs.
 SPEED_DOUBT = 0.3
 PLACE_DOUBT_KM = 6.0  # of a front's line: five walls through invented three-dimensional content lay off by up to 7 km
 _ONE_SIDED_95 = 1.645  # of a normal error: what holds is said with this confidence, as for the states of a map
-
-
-def threat_mm_per_km(elevation: npt.ArrayLike) -> Floats:
-    """Steepest slant slope [mm/km] of the CONUS threat space at elevations [deg]."""
-    ends, slopes = zip(_THREAT_LOW, _THREAT_HIGH, strict=True)
-    return np.asarray(np.interp(np.asarray(elevation, dtype=np.float64), ends, slopes))
 
 
 def nominal_error_m(
@@ -83,7 +73,7 @@ class StationChoices:
     smoothing_s of the aircraft; lowest_deg: lowest elevation used, for the slant slope
     """
 
-    sigma_mm_per_km: float = NOMINAL_SIGMA
+    sigma_mm_per_km: float = NOMINAL_BOUND
     distance_km: float = 6.0
     speed_m_s: float = 70.0
     smoothing_s: float = 100.0
@@ -193,7 +183,7 @@ def station_day(
         marks = {
             "nominal": sure > nominal,
             "announced": sure > ANNOUNCED_MOST,
-            "threat": factor * sure > float(threat_mm_per_km(choices.lowest_deg)),
+            "threat": factor * sure > float(model_bound(np.array(choices.lowest_deg))),
         }
     by_slope = np.where(marks["announced"], BROKEN, np.where(marks["nominal"], STRAINED, UNSEEN))
     marks["warned"] = (judged >= STRAINED) & (judged > by_slope)
@@ -248,7 +238,7 @@ def _exceeded(
     limit = {
         "nominal": f"{QUANTILE:g} times the announced spread of {choices.sigma_mm_per_km:g} mm/km",
         "announced": f"the largest spread that can be announced, {ANNOUNCED_MOST:g} mm/km",
-        "threat": f"the threat space, {float(threat_mm_per_km(choices.lowest_deg)):.0f} mm/km of slant slope at "
+        "threat": f"the threat space, {float(model_bound(np.array(choices.lowest_deg))):.0f} mm/km of slant slope at "
         f"{choices.lowest_deg:g} degrees",
     }
     step = np.timedelta64(round(step_s * 1e9), "ns")

@@ -31,7 +31,7 @@ from scipy.stats import chi2
 from skylag.constants import L1_M_PER_TECU
 from skylag.errors import Refused
 from skylag.impact import at_places
-from skylag.impact.ground_augmentation import front_error_m
+from skylag.impact.ground_augmentation import ANNOUNCED_MOST, front_error_m
 from skylag.impact.states import (
     PLANAR_FAILS,
     PLANAR_PASSES,
@@ -63,7 +63,6 @@ from skylag.tables import (
     Use,
 )
 
-BROADCAST_SLOPE = 25.5  # mm/km: 255 times 0.1, ICAO Annex 10, Appendix B to chapter 3
 PLANE_SPREAD_M, PLANE_KM = 0.35, 800.0  # Walter et al. 2000 (from memory)
 STRAINED_SPREADS, BROKEN_SPREADS = 2.0, 3.29  # 3.29: 99.9 %, as errors at grid points are announced
 MODEL_SIGMA_M, MODEL_WORST_M = 4.5, 9.0  # RTCA DO-229, appendix J.2.3: middle latitudes; below 20 degrees
@@ -136,7 +135,7 @@ def limits_of(use: Use, shell_height_m: float = 400e3) -> tuple[float, float, st
         eaten = use.spare_mm / use.baseline_km
         return eaten / float(mapping(use.elevation_deg, shell_height_m)), eaten, unit
     if use.kind == "ground":
-        return NOMINAL_BOUND, BROADCAST_SLOPE, unit
+        return NOMINAL_BOUND, ANNOUNCED_MOST, unit
     if use.kind == "satellite":
         return STRAINED_SPREADS * PLANE_SPREAD_M, BROKEN_SPREADS * PLANE_SPREAD_M, unit
     return MODEL_SIGMA_M, MODEL_WORST_M, unit

@@ -15,7 +15,6 @@ from skylag.tables import Floats
 STORM_AP = 39.0  # Kp 5-, from where the scale of the space weather services counts a storm (Kp to ap: GFZ table)
 UNTOLD, QUIET, ONSET, MAIN, AFTER, LATER = range(6)
 PHASES = ("untold", "quiet", "onset", "main phase", "first day after", "second day after")
-STORMY = (ONSET, MAIN)
 
 _ONSET_H, _DAY_H, _PAUSE_H = 12, 24, 12
 

@@ -29,9 +29,9 @@ from skylag.tables import SLOPE_WAYS, Bools, Fields, Floats, Ints, Rays, Receive
 MM_PER_TECU = L1_M_PER_TECU * 1000.0  # 162.372448 mm of delay on 1575.42 MHz per TECU
 PAIR, PAIR_CHANGE, PATH, FIELD = (SLOPE_WAYS.index(way) for way in SLOPE_WAYS)
 
-# Published bounds of slant slopes [mm/km on L1], with their source.  The nominal bound is a limit of `impact.uses`;
-# those of the threat model give `model_bound`, the narrowest wall of `impact.uses` and the fastest change of content
-# that `slips` lets an arc hold through.
+# Published bounds of slant slopes [mm/km on L1], with their source.  The nominal bound is a limit of `impact.uses` and
+# the spread that a ground station is taken to announce; those of the threat model give `model_bound`, the narrowest
+# wall of `impact.uses` and the fastest change of content that `slips` lets an arc hold through.
 NOMINAL_BOUND = 4.0  # quiet mid-latitude bound: Mayer et al. 2009, ION GNSS, 1091-1099
 MODEL_WORST = 425.0  # conterminous United States threat model: Datta-Barua et al. 2010, Radio Sci. 45
 MODEL_LOW_ELEVATION = 375.0  # the same at 15 degrees; linear up to 65 degrees (from memory)

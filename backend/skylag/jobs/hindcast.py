@@ -28,7 +28,6 @@ SCORED_WITHIN = 60  # days after which an outlook whose days never came is given
 HOURS_FORM = "1"  # of what is kept of a day; another one makes all of them anew
 MOST_DAYS = 400  # further back an outlook does not look
 MOST_CELLS = 400  # of the grid; every second, third ... row and column where it has more: a year is a minute of work
-CALM_AP = 7.0  # ap of an outlook that tells of no storm
 
 Progress = Callable[[int, int], None]
 

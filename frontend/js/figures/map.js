@@ -3,7 +3,7 @@
  */
 
 import { PALETTES, STATES, ramp, scale, withAlpha } from "../colour.js";
-import { fixed, KIND_WORDS, LAYER_WORDS, latText, lonText, shortened, STATE_WORDS } from "../words.js";
+import { fixed, LAYER_WORDS, latText, lonText, shortened, STATE_WORDS } from "../words.js";
 import { outline, rowsOf } from "./cells.js";
 import { brokenBar, front, gradations, offset, placeAt, scaleBarKm, waves, wedge, widthKm, within } from "./signs.js";
 
@@ -557,6 +557,3 @@ function colourBar(layer, palette) {
     x: 1.02,
   };
 }
-
-/** What each drawn sign means, for the legend. */
-export const SIGNS = Object.entries(KIND_WORDS).map(([kind, words]) => ({ kind, name: words.name }));
