@@ -35,6 +35,7 @@ def bias_errors(name: str, kind: str) -> tuple[np.ndarray, np.ndarray, np.ndarra
 @DAYS
 def test_satellite_biases(name: str) -> None:
     errors, _, pairs = bias_errors(name, "satellite")
+    assert len(np.unique(pairs)) >= 2
     for pair in np.unique(pairs):
         here = errors[pairs == pair]
         assert len(here) == 24
