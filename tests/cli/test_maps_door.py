@@ -52,7 +52,7 @@ def test_ionex_with_rms_maps_and_biases(archive: str, tmp_path: Path) -> None:
                     for table in (found, known)
                 ]
                 assert sums[0] == pytest.approx(sums[1], abs=0.002)
-    assert summed >= 2  # a main pair of each constellation
+    assert summed >= 1  # the main pair of a constellation
 
 
 def test_lines_tables_and_grid_points(archive: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:

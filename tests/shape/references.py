@@ -9,6 +9,7 @@ from typing import Any
 from skylag.archive import open_archive
 from skylag.cli import command_parser
 from skylag.web.app import create_app
+from skylag.web.sentences import CAUTION
 
 DOCS = Path(__file__).resolve().parents[2] / "docs"
 COMMANDS, ROUTES = DOCS / "commands.md", DOCS / "http.md"
@@ -67,7 +68,10 @@ def routes() -> str:
     lines = [
         "# HTTP routes", "",
         "From the program's own description at `/api/openapi.json`; `python -m tests.shape.references` writes it.",
-        "Errors are problem details (RFC 9457). Reading on the loopback address needs no key; writing elsewhere does.",
+        "Every failure is one JSON object: `ok` false, `error` a sentence, `kind`, `details`, `status`. Reading on the",
+        "loopback address needs no key; writing elsewhere does.",
+        "",
+        CAUTION,
         "", "| route | what it gives | may be asked with |", "|---|---|---|",
     ]  # fmt: skip
     for path, methods in sorted(description()["paths"].items()):
