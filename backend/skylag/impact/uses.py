@@ -15,8 +15,8 @@ the neighbourhood follows, `single` by what the broadcast model leaves.  Publish
   the service then stops correcting there, and `strained` where it passes with 30 lines of sight or more and residuals
   not smaller than their sigmas allow; any other pass says nothing.
 - single: vertical error that the broadcast model leaves: `strained` from 4.5 m, the standard error that receivers take
-  for it at middle latitudes, `broken` from 9 m, what they take near the equator (RTCA DO-229, appendix J.2.3).  Without
-  the model at hand half of the delay: it is designed to remove half (IS-GPS-200, 20.3.3.5.2.5).
+  for it at middle latitudes, `broken` from 9 m, what they take near the equator (RTCA DO-229, appendix J.2.3; from
+  memory).  Without the model at hand half of the delay: it is designed to remove half (IS-GPS-200, 20.3.3.5.2.5).
 
 Never turns `unseen` into `holds`; a warning that reaches an unseen place stays a warning.  Not for navigation.
 """
@@ -65,7 +65,7 @@ from skylag.tables import (
 
 PLANE_SPREAD_M, PLANE_KM = 0.35, 800.0  # Walter et al. 2000 (from memory)
 STRAINED_SPREADS, BROKEN_SPREADS = 2.0, 3.29  # 3.29: 99.9 %, as errors at grid points are announced
-MODEL_SIGMA_M, MODEL_WORST_M = 4.5, 9.0  # RTCA DO-229, appendix J.2.3: middle latitudes; below 20 degrees
+MODEL_SIGMA_M, MODEL_WORST_M = 4.5, 9.0  # RTCA DO-229, J.2.3: middle latitudes; below 20 degrees (from memory)
 
 PUBLISHED = (
     Use("differential over 10 km", "differential"),
