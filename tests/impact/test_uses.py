@@ -280,6 +280,20 @@ def test_map_alone_makes_an_unconfirmed_event_and_specks_make_none():
     assert [flag.kind for flag in (judged.flags[n] for n in event.flags)] == ["slope"]
 
 
+def test_what_nobody_saw_is_no_worst_value_of_an_event():
+    """A warning reaches over cells that no line of sight carries; what the maps fade into there is not its slope."""
+    fields = flat_fields(slope=30.0)
+    fields.state[:] = HOLDS
+    fields.state[10:14, 5:8, 5:8] = BROKEN
+    fields.support[:, :, 7:] = 0
+    fields.slope[:, :, 7:] = 300.0
+    (event,) = events.of_day(fields, (), REGION)
+    assert event.slope == 30.0 and event.cells == 9
+    fields.support[:] = 0
+    (blind,) = events.of_day(fields, (), REGION)
+    assert np.isnan(blind.slope) and blind.reason == "slopes between receivers nearby reach over 9 cells"
+
+
 def test_a_short_calm_does_not_part_an_event():
     fields = flat_fields()
     fields.slope[6:16, 4:7, 5:8] = 20.0

@@ -12,7 +12,7 @@ from scipy.ndimage import distance_transform_edt, find_objects, label
 
 from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.events import Event
-from skylag.impact.states import nearest_cells
+from skylag.impact.states import carried, nearest_cells
 from skylag.impact.uses import JudgedUse, owners
 from skylag.tables import STATE_NAMES, STRAINED, Bytes, Fields, Flag, Floats, Ints, Region
 
@@ -57,6 +57,7 @@ def _events(
 
     Cells that no flag explains go with the nearest explained cell of their stretch; a stretch without any is its own.
     """
+    fields = carried(fields)  # what nobody saw is no worst value
     alarmed = states >= STRAINED
     bridged = alarmed.copy()
     for shift in range(2, choices.join_steps + 2):
@@ -106,6 +107,7 @@ def _event(
     cause = flags[lead].kind if lead is not None else "map"
     reason = flags[lead].evidence if lead is not None else (
         f"the map is steep over {int(touched.sum())} cells, up to {slope:.0f} ± {sigma:.0f} mm/km"
+        if np.isfinite(slope) else f"slopes between receivers nearby reach over {int(touched.sum())} cells"
     )  # fmt: skip
     sides = fields.lats, fields.lons
     spacing = [abs(float(axis[1] - axis[0])) if len(axis) > 1 else region.step_deg for axis in sides]
