@@ -161,6 +161,7 @@ def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
             advice = desk.survey(day, _job(day, one.name, options))
             print(f"{one.name}: {report.survey_verdict(advice, clock)}")
         print("For one of them, with reasons and assumptions: --site NAME")
+        print(sentences.CAUTION)
         return
     for pair in options.at or ():
         asking.place(*pair)

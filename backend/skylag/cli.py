@@ -259,7 +259,7 @@ def _tell_day(products: Products) -> None:
         f"lines of sight {counts['rays']}, arcs {counts['arcs']} ({counts['slips']} began with a slip), "
         f"maps {counts['maps']}"
     )
-    seen = fields.state > 0
+    seen = (fields.state > 0) & (fields.support > 0)
     if seen.any():
         from skylag.constants import L1_M_PER_TECU
 
@@ -281,6 +281,7 @@ def _tell_day(products: Products) -> None:
     for warning in products.origin.warnings:
         if not warning.startswith("left out:"):
             print(f"note: {warning}")
+    print(CAUTION)
 
 
 def sample_folder() -> Path:

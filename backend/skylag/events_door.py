@@ -5,6 +5,7 @@ Thin: parses, calls, prints or writes one file.
 """
 
 import argparse
+import sys
 from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -53,7 +54,7 @@ def _events(options: argparse.Namespace) -> int:
         fields, flags = archive.fields(newest.region, newest.day), archive.flags(newest.region, newest.day)
     about = sentences.about(record.origin.simulated, record.head.provisional)
     if options.arrivals:
-        _write(_arrivals(record, flags, options), options.out)
+        _write(_arrivals(record, flags, options), options)
         return 0
     if options.use:
         judged = uses.judge_for(uses.find_use(record.region, options.use), fields, flags, record.region)
@@ -64,7 +65,7 @@ def _events(options: argparse.Namespace) -> int:
         "csv": lambda: event_files.to_csv(found), "geojson": lambda: event_files.to_geojson(found, about) + "\n",
         "json": lambda: event_files.to_json(found, about) + "\n",
     }[options.format]()  # fmt: skip
-    _write(text, options.out)
+    _write(text, options)
     return 0
 
 
@@ -81,8 +82,10 @@ def _arrivals(record: "DayRecord", flags: Sequence[Flag], options: argparse.Name
     return event_files.arrivals_to_csv(told, rows)
 
 
-def _write(text: str, out: Path | None) -> None:
-    if out:
-        out.write_text(text, encoding="utf-8")
+def _write(text: str, options: argparse.Namespace) -> None:
+    if options.out:
+        options.out.write_text(text, encoding="utf-8")
     else:
         print(text, end="")
+    if options.format == "csv":  # a table has no place for it
+        print(sentences.CAUTION, file=sys.stderr)

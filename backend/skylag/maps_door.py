@@ -4,6 +4,7 @@ Thin: parses, calls, prints or writes one file.
 """
 
 import argparse
+import sys
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -88,6 +89,7 @@ def _maps(options: argparse.Namespace) -> int:
         text = _grid_points(day, fields)
     else:
         text = delimited.maps_csv(carried(fields))
+        print(sentences.CAUTION, file=sys.stderr)  # a table has no place for it
     if options.out:
         options.out.write_text(text, encoding="utf-8")
     else:

@@ -19,7 +19,7 @@ def test_all_sites_in_a_line_each(place: str, capsys: pytest.CaptureFixture[str]
     told = capsys.readouterr().out
     for name in ("Northport", "Gannet Field", "Kelp Island", "Southmere quarry"):
         assert f"{name}: Survey (rtk, over 10 km" in told
-    assert told.startswith("Invented data")
+    assert told.startswith("Invented data") and "not for navigation" in told
 
 
 def test_a_site_with_sheet_and_calendar(place: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:

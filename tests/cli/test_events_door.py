@@ -16,8 +16,10 @@ def archive(tmp_path_factory: pytest.TempPathFactory) -> str:
 
 def test_events_of_a_day_are_printed(archive: str, capsys: pytest.CaptureFixture[str]) -> None:
     assert cli.main(["events", "--archive", archive, "--day", str(STORM_DAY)]) == 0
-    lines = capsys.readouterr().out.splitlines()
+    said = capsys.readouterr()
+    lines = said.out.splitlines()
     assert lines[0].startswith("use,start_utc,end_utc,state,cause") and len(lines) > 1
+    assert "not for navigation" in said.err  # a table has no place for it
 
 
 def test_events_for_a_use_are_written(archive: str, tmp_path: Path) -> None:

@@ -61,7 +61,9 @@ def test_lines_tables_and_grid_points(archive: str, tmp_path: Path, capsys: pyte
     told = json.loads(capsys.readouterr().out)
     assert told["features"] and told["time_utc"] == "2031-05-11T04:59:42Z"
     assert cli.main([*asked, "--at", "05:00"]) == 0
-    rows = list(csv.DictReader(io.StringIO(capsys.readouterr().out)))
+    said = capsys.readouterr()
+    assert "not for navigation" in said.err  # a table has no place for it
+    rows = list(csv.DictReader(io.StringIO(said.out)))
     with open_archive(archive) as kept:
         ours = kept.fields(kept.regions()[0], str(STORM_DAY))
     assert len(rows) == ours.vtec[0].size and {row["time_utc"] for row in rows} == {"2031-05-11T04:59:42Z"}
