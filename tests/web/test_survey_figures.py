@@ -11,7 +11,7 @@ from skylag.formats.sheet import DayChart
 from skylag.impact import survey
 from skylag.impact.survey import Advice, Job
 from skylag.jobs.advising import DayAdvice
-from skylag.tables import Fields
+from skylag.tables import Fields, Site
 from skylag.web import report
 
 CLOCK = report.Clock("UTC")
@@ -77,6 +77,22 @@ def test_the_sheet_draws_the_states_of_the_site_not_of_its_cell(day: DayAdvice) 
     for time, code in zip(day.fields.times, codes, strict=True):
         share = float((time - start) / np.timedelta64(1, "D")) + 1e-6
         assert [mark for a, b, mark in rows["Corrections at the site"] if a <= share < b] == [marks[code]]
+
+
+def test_the_sheet_has_no_blank_hours(small_archive: Archive) -> None:
+    """Of a day that came from six to nine, site and job are unseen before and after."""
+    part = DayAdvice(small_archive, small_archive.day(REGION.name, STORM_DAY))
+    whole = part.fields
+    rows = slice(len(whole.times) // 4, 3 * len(whole.times) // 8)
+    part.__dict__["fields"] = replace(
+        whole, times=whole.times[rows], **{name: getattr(whole, name)[rows] for name in Fields.LAYERS}
+    )
+    place = Site("a field", SITE.lat + 0.01, SITE.lon, "job")
+    _, blocks = report.of_site(part, place)
+    rows_of = dict(next(block for block in blocks if isinstance(block, DayChart)).rows)
+    for name in ("Corrections at the site", "Survey"):
+        assert {mark for start, end, mark in rows_of[name] if end <= 0.25 or start >= 0.375} == {"unseen"}
+        assert sum(end - start for start, end, _ in rows_of[name]) == pytest.approx(1.0)
 
 
 def test_the_sheet_says_how_much_is_known(day: DayAdvice) -> None:

@@ -94,7 +94,8 @@ def _hours(archive: Archive, head: DayHead, places: Region, lats: Floats, lons: 
     if kept is None:
         fields = archive.fields(head.region, head.day, version=head.version)
         flags = archive.flags(head.region, head.day, head.version)
-        judged = [uses.judge_for(use, fields, flags, places).states for use in uses.uses_of(places)]
+        grid = replace(places, sites=())  # the cells are enough, and sentences about sites take time
+        judged = [uses.judge_for(use, fields, flags, grid).states for use in uses.uses_of(places)]
         rows, columns, inside = nearest_cells(fields, lats, lons)
         found = _hours_of(fields, judged, rows, columns, head.day)
         kept = {

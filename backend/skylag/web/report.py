@@ -253,10 +253,13 @@ def _state_spans(
         return ((0.0, 1.0, "unseen"),)
     edges = [0, *(np.flatnonzero(np.diff(codes)) + 1).tolist(), len(codes)]
     step = np.median(np.diff(fields.times)) if len(fields.times) > 1 else np.timedelta64(300, "s")
-    return tuple(
+    spans = [
         (share(fields.times[a]), share(fields.times[b - 1] + step), _STATE_MARK[int(codes[a])])
         for a, b in itertools.pairwise(edges)
-    )
+    ]
+    # What no map of the day reaches is unseen, not blank.
+    around = ((0.0, spans[0][0], "unseen"), (spans[-1][1], 1.0, "unseen"))
+    return tuple(span for span in (around[0], *spans, around[1]) if span[1] > span[0])
 
 
 def _longest(spans: Sequence[_Span]) -> tuple[list[_Span], str]:
