@@ -268,6 +268,20 @@ def test_a_warning_over_the_place_counts_where_its_cell_has_none() -> None:
     assert set(found.verdict[:50]) | set(found.verdict[53:]) == {survey.WORK}
 
 
+def test_an_hour_of_which_little_was_seen_is_not_called_calm() -> None:
+    fields = some_fields(1.0, 0.1)
+    others = np.flatnonzero(LATS != -40.0)
+    fields.state[:12, others] = UNSEEN  # of the first hour one row is left
+    fields.state[12:24, LATS < -40.0] = UNSEEN  # of the second more than half of what lies within reach
+    fields.state[24:36, others] = UNSEEN
+    fields.slope[24:36] = 9.0  # what is left of the third is bad enough to be told
+    found = survey.advise(a_job(), fields)
+    assert np.isnan(found.index[0]) and found.index_words[0] == "not known"
+    assert found.index[1:4].tolist() == pytest.approx([1.0, 9.0, 1.0])
+    fields.slope[24:36] = 3.9
+    assert np.isnan(survey.advise(a_job(), fields).index[2])
+
+
 def kept_maps(fields: Fields, rows: np.ndarray) -> Fields:
     return replace(fields, times=fields.times[rows], **{name: getattr(fields, name)[rows] for name in Fields.LAYERS})
 

@@ -38,6 +38,7 @@ METHODS = {
 WORK, AVOID, NOT_SEEN = "work", "avoid", "unseen"
 # Class limits of the hourly index [ppm]: Wanninger 2004, ION GNSS, 2849-2854, as two state operators give them.
 INDEX_CLASSES = ((2.0, "negligible"), (4.0, "weak"), (8.0, "strong"), (np.inf, "very strong"))
+_WEAK_PPM = INDEX_CLASSES[1][0]
 INDEX_REACH_KM = 150.0
 LONGEST_KM = 100.0  # baselines beyond are not spoken of
 MOST_PLACES = 400
@@ -362,7 +363,8 @@ def hourly_index(fields: Fields, places: Sequence[tuple[float, float]]) -> tuple
     """Starts of hours, and what 95 % of the vertical slopes seen within 150 km stay under in each [ppm = mm/km].
 
     Made in the manner of the published hourly index (Wanninger 2004), from maps instead of a network's own corrections;
-    +-1 unit is its stated meaning over a state.  NaN for an hour in which nothing was seen.
+    +-1 unit is its stated meaning over a state.  NaN for an hour in which nothing was seen, and for one of which less
+    than half was and that seems no worse than weak: what was not seen may be why.
     """
     lon_grid, lat_grid = np.meshgrid(fields.lons, fields.lats)
     near = np.zeros(lat_grid.shape, dtype=bool)
@@ -375,9 +377,10 @@ def hourly_index(fields: Fields, places: Sequence[tuple[float, float]]) -> tuple
     hours = np.unique(hour)
     index = np.full(len(hours), np.nan)
     for number, one in enumerate(hours):
-        values = slope[hour == one][good[hour == one]]
-        if values.size:
-            index[number] = np.quantile(values, 0.95)
+        seen = good[hour == one]
+        if seen.any():
+            ppm = np.quantile(slope[hour == one][seen], 0.95)
+            index[number] = ppm if seen.mean() >= 0.5 or ppm > _WEAK_PPM else np.nan
     return hours.astype("datetime64[ns]"), index
 
 
