@@ -294,6 +294,20 @@ def test_what_nobody_saw_is_no_worst_value_of_an_event():
     assert np.isnan(blind.slope) and blind.reason == "slopes between receivers nearby reach over 9 cells"
 
 
+def test_an_event_that_ends_out_of_sight_says_so():
+    fields = flat_fields(slope=30.0)
+    fields.state[:] = HOLDS
+    fields.state[10:14, 5:8, 5:8] = BROKEN
+    (over,) = events.of_day(fields, (), REGION)
+    assert "unseen" not in over.reason
+    fields.state[14, 5:7, 5:8] = UNSEEN
+    (lost,) = events.of_day(fields, (), REGION)
+    assert lost.reason == f"{over.reason}; 6 of its last 9 cells turn unseen: it may have gone on"
+    fields.state[10:, 5:8, 5:8] = BROKEN  # to the last map
+    (open_end,) = events.of_day(fields, (), REGION)
+    assert open_end.reason == over.reason
+
+
 def test_a_short_calm_does_not_part_an_event():
     fields = flat_fields()
     fields.slope[6:16, 4:7, 5:8] = 20.0

@@ -14,7 +14,7 @@ from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.events import Event
 from skylag.impact.states import carried, nearest_cells
 from skylag.impact.uses import JudgedUse, owners
-from skylag.tables import STATE_NAMES, STRAINED, Bytes, Fields, Flag, Floats, Ints, Region
+from skylag.tables import STATE_NAMES, STRAINED, UNSEEN, Bytes, Fields, Flag, Floats, Ints, Region
 
 _KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
 AS_STORED = "all corrections"  # name of the day's own states, by the region's thresholds
@@ -109,6 +109,7 @@ def _event(
         f"the map is steep over {int(touched.sum())} cells, up to {slope:.0f} ± {sigma:.0f} mm/km"
         if np.isfinite(slope) else f"slopes between receivers nearby reach over {int(touched.sum())} cells"
     )  # fmt: skip
+    reason += _lost_sight(states, epochs, box, member)
     sides = fields.lats, fields.lons
     spacing = [abs(float(axis[1] - axis[0])) if len(axis) > 1 else region.step_deg for axis in sides]
     area = float((np.cos(np.radians(fields.lats[rows])) * spacing[0] * spacing[1]).sum() * _KM_PER_DEG**2)
@@ -121,6 +122,16 @@ def _event(
         area_km2=area, cause=cause, reason=reason, flags=tuple(behind),
         confirmed=any(flags[n].confirmed for n in behind), sites=_sites(box, touched, fields, region),
     )  # fmt: skip
+
+
+def _lost_sight(states: Bytes, epochs: Ints, box: Any, member: Any) -> str:
+    """Said of an event that ends because nobody looks any more: half or more of its last cells turn unseen."""
+    last = int(epochs[-1])
+    if last + 1 >= len(states):
+        return ""
+    cells = states[last + 1, box[1], box[2]][member[last - box[0].start]]
+    lost = int((cells == UNSEEN).sum())
+    return f"; {lost} of its last {len(cells)} cells turn unseen: it may have gone on" if 2 * lost >= len(cells) else ""
 
 
 def _height(box: Any, measure: Floats | None, fields: Fields) -> Floats:
