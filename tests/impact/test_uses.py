@@ -115,6 +115,28 @@ def test_a_calm_map_holds_for_every_use(use):
     assert set(judged.site_reasons[2]) == {"outside the map: nothing can be said"}
 
 
+@pytest.mark.parametrize("use", uses.PUBLISHED, ids=lambda use: use.kind)
+def test_around_a_silent_receiver_nothing_holds_for_any_use(use):
+    """The day took back what its map would let hold; beside it a cell of which the slope is hardly known."""
+    fields = flat_fields(slope=0.5)
+    fields.state[:] = HOLDS
+    fields.state[5:8, 6:9, 8:11] = UNSEEN
+    fields.slope_sigma[5:8, 6, 8] = 30.0
+    judged = uses.judge_for(use, fields, (), REGION)
+    assert (judged.states[5:8, 6:9, 8:11] == UNSEEN).all()
+    rest = np.ones(judged.states.shape, dtype=bool)
+    rest[5:8, 6:9, 8:11] = False
+    assert (judged.states[rest] == HOLDS).all()
+
+
+def test_what_is_unseen_for_its_slope_may_hold_for_an_easier_use():
+    fields = flat_fields(slope=0.5, sigma=10.0)
+    fields.state[:] = states.field_states(fields, REGION.thresholds)
+    assert (fields.state == UNSEEN).all()
+    easy = Use("next door", "differential", baseline_km=0.5)
+    assert (uses.judge_for(easy, fields, (), REGION).states == HOLDS).all()
+
+
 def test_one_slope_means_different_things():
     fields = flat_fields(slope=8.0, sigma=0.5)
     fields = states.judge(fields, *nothing(), REGION).fields
@@ -134,7 +156,7 @@ def test_a_bump_hurts_satellite_based_corrections_and_a_plane_does_not():
     fields = flat_fields()
     lon, lat = np.meshgrid(LONS, LATS)
     fields.vtec[:] = 20.0 + 1.5 * (lat + 39.0) - 0.7 * (lon - 145.0)
-    fields = replace(fields, vtec_sigma=np.full_like(fields.vtec, 0.5))
+    fields = replace(fields, vtec_sigma=np.full_like(fields.vtec, 0.5), state=np.full_like(fields.state, HOLDS))
     assert (uses.judge_for(SATELLITE, fields, (), REGION).states == HOLDS).all()
     bumped = fields.vtec + 14.0 * np.exp(-((lat + 39.3) ** 2 + (lon - 145.5) ** 2))
     judged = uses.judge_for(SATELLITE, replace(fields, vtec=bumped.astype(np.float32)), (), REGION)
@@ -184,6 +206,7 @@ def test_a_front_is_told_in_terms_of_the_use(stormy):
 def test_a_site_aside_of_its_cells_middle_takes_the_warnings_that_lie_over_it(use):
     fields = flat_fields(slope=0.5)
     aside = Site("aside", float(fields.lats[7]), float(fields.lons[9]) + 0.2)
+    fields.state[:] = HOLDS
     fields.state[5:8, 7, 10] = BROKEN  # the cell to the east, by more than the map's own slope
     region = replace(REGION, sites=(aside,))
     judged = uses.judge_for(use, fields, (), region)

@@ -26,6 +26,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy.ndimage import label
 from scipy.stats import chi2
 
 from skylag.constants import L1_M_PER_TECU
@@ -168,6 +169,7 @@ def judge_for(
         state = np.where(sure > broken, BROKEN, np.where(sure > strained, STRAINED, HOLDS)).astype(np.uint8)
     state[~seen | ~np.isfinite(sure)] = UNSEEN
     state[(state == HOLDS) & ~stays_under(measure, sigma, strained)] = UNSEEN
+    state[(state == HOLDS) & taken_back(fields, region, choices)] = UNSEEN
     owner = owners(fields, flags, region, choices)
     given = _given(use, fields, flags, owner, (strained, broken), choices)
     flag_of = np.where(given > state, owner, -1)
@@ -178,6 +180,19 @@ def judge_for(
                        (strained, broken), unit)  # fmt: skip
     states, reasons, evidence = _at_sites(judged, sigma, flags, fields, region, choices)
     return replace(judged, site_states=states, site_reasons=reasons, site_evidence=evidence)
+
+
+def taken_back(fields: Fields, region: Region, choices: JudgeChoices | None = None) -> Bools:
+    """Cells (T, lat, lon) that the day calls unseen though its map alone would let them hold, and the unseen ones that
+    touch those: around a receiver that fell silent nothing holds, for no use."""
+    unseen = fields.state == UNSEEN
+    taken: Bools = unseen & (field_states(fields, region.thresholds, choices) == HOLDS)
+    if not taken.any():
+        return taken
+    beside = np.zeros((3, 3, 3), dtype=bool)
+    beside[1] = True  # within one map, not from map to map
+    marks, _ = label(unseen, structure=beside)
+    return np.asarray(unseen & np.isin(marks, np.unique(marks[taken])))
 
 
 # ---------------------------------------------------------------------------------------------- what the map says

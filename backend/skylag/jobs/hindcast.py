@@ -25,7 +25,7 @@ from skylag.ionosphere.outlook_score import Tally
 from skylag.tables import HOLDS, STRAINED, UNSEEN, Bools, Bytes, Fields, Floats, Indices, Region, Words
 
 SCORED_WITHIN = 60  # days after which an outlook whose days never came is given up
-HOURS_FORM = "1"  # of what is kept of a day; another one makes all of them anew
+HOURS_FORM = "2"  # of what is kept of a day; another one makes all of them anew
 MOST_DAYS = 400  # further back an outlook does not look
 MOST_CELLS = 400  # of the grid; every second, third ... row and column where it has more: a year is a minute of work
 
