@@ -172,7 +172,7 @@ def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
     print(f"{site.name}, {day.record.head.day}, {day.record.region.name} (times UTC)")
     print(report.survey_verdict(advice, clock))
     for window in advice.windows:
-        print(f"  {clock.utc(window.start)} - {clock.utc(window.end)}  {window.verdict:7} {window.why}")
+        print(f"  {clock.utc(window.start)} - {clock.utc_end(window.end)}  {window.verdict:7} {window.why}")
     for sentence in report.survey_figures(advice, clock):
         print(sentence)
     if options.failed:
@@ -238,7 +238,7 @@ def _aerodrome(
     else:
         told.append(report.approach_verdict(approaches, clock))
         for outage in approaches.outages:
-            span = f"{clock.utc(outage.start)} - {clock.utc(outage.end)}"
+            span = f"{clock.utc(outage.start)} - {clock.utc_end(outage.end)}"
             told.append(f"  {span}  no {outage.level:8} {outage.cause}: {outage.why}")
         assumed = [*approaches.assumptions, *assumed]
         entries = report.approach_entries(approaches)

@@ -91,7 +91,7 @@ export const WORDS = {
   /** @param {string} slope */
   slopeUpTo: (slope) => `slope up to ${slope} mm/km`,
   /** @param {number} shown @param {number} all */
-  yearSpan: (shown, all) => `${shown === all ? "All" : `${shown} of`} ${all} stored ${all === 1 ? "day" : "days"}. State: the worst that was seen at any time, dotted as far as nothing was; bars: the slope that 99 of 100 seen cells stay under.`,
+  yearSpan: (shown, all) => `${all === 1 && shown === all ? "One stored day" : `${shown === all ? "All" : `${shown} of`} ${all} stored ${all === 1 ? "day" : "days"}`}. State: the worst that was seen at any time, dotted as far as nothing was; bars: the slope that 99 of 100 seen cells stay under.`,
   /** @param {string} what @param {boolean} difference */
   comparedWith: (what, difference) => (difference ? `This day less ${what}, at the same time of day.` : `Right: ${what}, at the same time of day.`),
   /** @param {number} count */

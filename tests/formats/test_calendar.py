@@ -28,6 +28,14 @@ def test_an_entry() -> None:
     assert "LOCATION:Dam" in lines
 
 
+def test_times_are_minutes_as_on_the_sheet() -> None:
+    """Maps stand at minutes of GPS time, 18 s before those of UTC (IERS Bulletin C 52)."""
+    whole = np.datetime64("2031-03-12T06:00:00", "ns")
+    lines = _unfolded(to_ics([Entry(whole, whole + np.timedelta64(95, "m"), "Work")], "Dam", MADE))
+    assert "DTSTART:20310312T060000Z" in lines
+    assert "DTEND:20310312T073500Z" in lines
+
+
 def test_the_same_windows_have_the_same_names() -> None:
     entry = Entry(START, START + np.timedelta64(90, "m"), "Work")
     other = Entry(START, START + np.timedelta64(95, "m"), "Work")

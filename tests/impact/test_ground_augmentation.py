@@ -86,7 +86,7 @@ def test_within_is_only_said_where_the_slope_excludes_worse(slope: float, sigma:
     assert found.minutes["within"] == (1440.0 if what == "within" else 0.0)
     assert found.minutes["unseen"] == (1440.0 if what == "unseen" else 0.0)
     if what == "unseen":
-        assert f"known to ± {sigma:.0f} mm/km only" in found.exceeded[0].why
+        assert f"known to ± {sigma:.{1 if sigma < 1 else 0}f} mm/km only" in found.exceeded[0].why
 
 
 @settings(max_examples=50, deadline=None)

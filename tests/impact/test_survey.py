@@ -164,6 +164,8 @@ def test_an_unknown_slope_is_unseen_not_steep() -> None:
     found = survey.advise(a_job(), some_fields(0.5, 40.0))
     assert set(found.verdict) == {survey.NOT_SEEN}
     assert "known to ± 40 mm/km only" in found.reasons[0]
+    over_a_long_way = survey.advise(a_job(baseline_km=60.0), some_fields(0.0, 0.4))
+    assert "known to ± 0.4 mm/km only" in over_a_long_way.reasons[0], "a sigma is never read as nought"
 
 
 def test_one_bad_corner_spoils_an_area() -> None:

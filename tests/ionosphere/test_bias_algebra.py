@@ -57,6 +57,23 @@ def test_chains() -> None:
     assert of(table(), "C1W", "C2W") is None
 
 
+@pytest.mark.parametrize(
+    ("start", "end", "within_days", "meets"),
+    [
+        ("2024-03-30", "2024-03-31", 0.0, True), ("2024-03-01", "2024-04-01", 0.0, True), ("", "", 0.0, True),
+        ("", "2024-03-30T01:00", 0.0, True), ("2024-03-29", "2024-03-30", 0.0, False),
+        ("2024-03-31", "2024-04-01", 0.0, False), ("2024-03-30T06:00", "2024-03-30T06:00", 0.0, True),
+        ("2024-03-20", "2024-03-21", 10.0, True), ("2024-03-20", "2024-03-21", 9.0, False),
+        ("2024-05-29T12:00", "2024-05-30", 60.0, True), ("2024-05-30", "2024-05-31", 60.0, False),
+    ],
+)  # fmt: skip
+def test_whether_a_table_is_of_a_day(start: str, end: str, within_days: float, meets: bool) -> None:
+    known = table(row("C1W", "C2W", -7.7, start=start, end=end), row("C1W", "C2W", 1.0, start="1999-01-01",
+                                                                    end="1999-01-02"))  # fmt: skip
+    assert bias_algebra.of_day(known, NOON.astype("datetime64[D]"), within_days) is meets
+    assert not bias_algebra.of_day(table(), NOON.astype("datetime64[D]"))
+
+
 def test_single_code_biases_make_pairs() -> None:
     known = table(row("C1C", "", 9.2873, 0.0035), row("C2W", "", 17.7562, 0.0))
     assert of(known, "C1C", "C2W") == pytest.approx((9.2873 - 17.7562, 0.0035))

@@ -180,6 +180,37 @@ def test_files_come_before_earlier_days(word: str, used: str, walk: float | None
     assert chain.known_biases(choices, None, None)[0] is None
 
 
+BIASES = """%=BIA 1.00 XYZ 2031:074:00000 XYZ 2031:{first}:00000 2031:{last}:00000 R 00000003
+*-------------------------------------------------------------------------------
++BIAS/SOLUTION
+*BIAS SVN_ PRN STATION__ OBS1 OBS2 BIAS_START____ BIAS_END______ UNIT __ESTIMATED_VALUE____ _STD_DEV___
+ DSB  G063 G01           C1W  C2W  2031:{first}:00000 2031:{last}:00000 ns                 -7.5000      0.0100
+-BIAS/SOLUTION
+%=ENDBIA
+"""
+
+
+def test_biases_of_another_day_are_told_not_called_used(
+    sample_folder: Path, tmp_path: Path, executor: Executor
+) -> None:
+    """Day 070 is that of the files.  Where a file of the day is there too, the others are only marked."""
+    for first, last in (("110", "111"), ("200", "201")):
+        (tmp_path / f"{first}.BIA").write_text(BIASES.format(first=first, last=last))
+    paths = [*files(sample_folder, "MRGT", "TARN"), tmp_path]
+    choices = Choices(epoch_step_s=3600.0)
+    made = work.network_day(paths, executor=executor, choices=choices)
+    why = {Path(item.path).name: item.reason for item in made.left_out}
+    assert "are of 2031-04-20, not of 2031-03-11" in why["110.BIA"] and "draw draws upon them" in why["110.BIA"]
+    assert "draw draws upon them" not in why["200.BIA"], "too far for that"
+    assert all("zero mean" in words for words in made.products.calibration.datum_of_row)
+    used = {one["name"]: one["used"] for one in made.products.origin.inputs}
+    assert not used["110.BIA"] and not used["200.BIA"]
+
+    _, _, left_out, others = work.read_biases([str(p) for p in sorted(tmp_path.iterdir())], np.datetime64(DAY), 60.0)
+    assert not left_out and [Path(one.path).name for one in others] == ["200.BIA"]
+    assert "more than 60 days" in others[0].reason
+
+
 def test_pieces_under_short_names(sample_folder: Path, tmp_path: Path, executor: Executor) -> None:
     """Short names, pieces of a day, and plain text: what counts is inside."""
     whole = hatanaka.decompress(files(sample_folder, "MRGT")[0].read_bytes())

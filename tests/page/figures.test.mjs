@@ -398,6 +398,15 @@ test("legend marks run from end to end", () => {
   assert.equal(texts(0.05), "0.00 0.01 0.02 0.03 0.04 0.05");
 });
 
+test("the scale bar goes to a corner that no site and its name need", () => {
+  const bars = (sites) => mapFigure(contents({ sites })).layout.annotations.filter((note) => / km$/.test(note.text ?? ""));
+  const { south, north, west, east } = contents().frame;
+  const [usual] = bars([]);
+  const [moved] = bars([{ name: "Corner field", lat: usual.y + 0.02 * (north - south), lon: usual.x }]);
+  assert.ok(usual.x < west + 0.1 * (east - west) && usual.y < south + 0.1 * (north - south));
+  assert.ok(moved.x > west + 0.5 * (east - west) && moved.y === usual.y);
+});
+
 test("gradations are round and few; the scale bar is a round length", () => {
   assert.deepEqual(gradations(141.75, 150.25, 8), { step: 2, values: [142, 144, 146, 148, 150] });
   assert.ok(gradations(0, 359, 6).values.length <= 6);

@@ -30,7 +30,7 @@ def said(code: int, slope: float, slope_sigma: float, delay: float, sigma: float
         (BROKEN, (95.0, 9.0, 5.0, 0.5, 7),
          "Corrections are broken here: the delay changes by 95 ± 9 mm per km. The vertical delay is 5.00 ± 0.50 m."),
         (HOLDS, (1.4, 0.6, 1.5, 0.1, 12),
-         "Corrections hold here: the vertical delay is 1.50 ± 0.10 m, and the delay changes by 1 ± 1 mm per km."),
+         "Corrections hold here: the vertical delay is 1.50 ± 0.10 m, and the delay changes by 1.4 ± 0.6 mm per km."),
         (HOLDS, (NAN, NAN, 1.5, 0.1, 3), "Corrections hold here: the vertical delay is 1.50 ± 0.10 m."),
         (STRAINED, (NAN, NAN, 1.5, NAN, 3),
          "Corrections are strained here: receivers near by see more than the map shows. "

@@ -21,7 +21,7 @@ class Entry:
 
 
 def to_ics(entries: Sequence[Entry], name: str, made: np.datetime64) -> str:
-    """The calendar; times are UTC.
+    """The calendar; times are UTC, to the nearest minute, as sheets tell them: maps stand at minutes of GPS time.
 
     made  UTC instant that the entries were made (of the day's keeping, say): the standard asks for one
     """
@@ -32,8 +32,8 @@ def to_ics(entries: Sequence[Entry], name: str, made: np.datetime64) -> str:
             "BEGIN:VEVENT",
             f"UID:{hashlib.sha256(key.encode()).hexdigest()[:32]}@skylag",
             f"DTSTAMP:{_stamp(made)}",
-            f"DTSTART:{_stamp(gps_to_utc(entry.start))}",
-            f"DTEND:{_stamp(gps_to_utc(entry.end))}",
+            f"DTSTART:{_minute(entry.start)}",
+            f"DTEND:{_minute(entry.end)}",
             f"SUMMARY:{_escaped(entry.title)}",
         ]
         if entry.place:
@@ -43,6 +43,10 @@ def to_ics(entries: Sequence[Entry], name: str, made: np.datetime64) -> str:
         lines += ["TRANSP:TRANSPARENT", "END:VEVENT"]
     lines.append("END:VCALENDAR")
     return "".join(_folded(line) for line in lines)
+
+
+def _minute(gps: np.datetime64) -> str:
+    return _stamp(np.datetime64(gps_to_utc(gps + np.timedelta64(30, "s")), "m"))
 
 
 def _stamp(utc: object) -> str:

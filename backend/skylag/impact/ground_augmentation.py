@@ -15,7 +15,7 @@ from skylag.errors import Refused
 from skylag.impact import at_places
 from skylag.impact.at_places import ahead_of
 from skylag.impact.satellite_augmentation import CAUTION, spans
-from skylag.impact.states import nearest_cells
+from skylag.impact.states import nearest_cells, plus_minus
 from skylag.ionosphere.geometry import mapping
 from skylag.ionosphere.slopes import NOMINAL_BOUND, model_bound
 from skylag.tables import (
@@ -249,7 +249,7 @@ def _exceeded(
             run = sigma[first:last]
             if what == "unseen" and np.isfinite(run).any():
                 why = (
-                    f"the slope is known to ± {np.nanmax(run):.0f} mm/km only: that it is within {limit['nominal']} "
+                    f"the slope is known to {plus_minus(np.nanmax(run))} mm/km only: that it is within {limit['nominal']} "
                     "cannot be said"
                 )
             if what == "warned":

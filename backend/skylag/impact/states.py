@@ -47,6 +47,7 @@ from skylag.tables import (
 )
 
 NOTHING = float("nan")
+FINE_SIGMA_MM_PER_KM = 0.95  # below it slopes are told to tenths
 # What a patch's evidence says of the planar-fit test of satellite-based services; `impact.uses` goes by it.
 PLANAR_FAILS, PLANAR_PASSES = "planar fit fails", "planar fit passes"
 
@@ -357,6 +358,11 @@ def _judge_sites(
     return states, tuple(reasons)
 
 
+def plus_minus(sigma: float) -> str:
+    """A sigma of a slope [mm/km] as it is read: whole numbers, tenths below one, so that none reads as nought."""
+    return f"± {sigma:.0f}" if sigma >= FINE_SIGMA_MM_PER_KM else f"± {sigma:.1f}"
+
+
 def nearest_cells(fields: Fields, lat: Floats, lon: Floats) -> tuple[Any, Any, Bools]:
     """Row and column of the cell of each place, and whether the map reaches it."""
     return cells_at(fields.lats, fields.lons, lat, lon)
@@ -377,7 +383,7 @@ def _field_sentence(
         sigma_m = float(fields.vtec_sigma[place]) * L1_M_PER_TECU
         if np.isfinite(sigma_m) and sigma_m > limits.unseen_sigma_m:
             return f"vertical delay known to {sigma_m:.1f} m only, {limits.unseen_sigma_m:.1f} m is needed"
-        return f"slope known to ± {float(fields.slope_sigma[place]):.0f} mm/km only: nothing can be said"
+        return f"slope known to {plus_minus(float(fields.slope_sigma[place]))} mm/km only: nothing can be said"
     limit = limits.broken_mm_per_km if state == BROKEN else limits.strained_mm_per_km
     return (
         f"the map slopes by {float(fields.slope[place]):.0f} ± {float(fields.slope_sigma[place]):.0f} mm/km, "

@@ -19,7 +19,7 @@ from skylag.errors import Refused
 from skylag.impact import sky as satellites
 from skylag.impact.satellite_augmentation import spans
 from skylag.impact.sky import Sky
-from skylag.impact.states import content_known, nearest_cells, state_of_slope
+from skylag.impact.states import content_known, nearest_cells, plus_minus, state_of_slope
 from skylag.ionosphere.covariance import plane_km
 from skylag.ionosphere.geometry import mapping
 from skylag.tables import STATE_NAMES, STRAINED, UNSEEN, Bools, Bytes, Fields, Flag, Floats, Ints, Thresholds, Times
@@ -416,7 +416,7 @@ def _verdicts(
             why = f"the satellites above {job.mask_deg:g} degrees do not always give a position"
         elif _only_sigma(job, told, t):
             seen_well = False
-            why = f"the slope is known to ± {told['slope_sigma'][t]:.0f} mm/km only: nothing can be said"
+            why = f"the slope is known to {plus_minus(told['slope_sigma'][t])} mm/km only: nothing can be said"
         elif not told["vertical_95"][t] <= job.vertical_mm:
             why = f"height error {told['vertical_95'][t]:.0f} mm (95 %) {over}, tolerance {job.vertical_mm:g} mm"
         elif not told["horizontal_95"][t] <= job.horizontal_mm:

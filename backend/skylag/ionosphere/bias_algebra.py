@@ -80,6 +80,16 @@ def _distance_days(biases: Biases, rows: Ints, when: np.datetime64) -> Floats:
     return np.asarray(np.where((before <= 0) & (after < 0), 0.0, np.maximum(np.maximum(before, after), 0.0)))
 
 
+def of_day(biases: Biases, day: np.datetime64, within_days: float = 0.0) -> bool:
+    """Whether the span of any record meets a GPS-time day, or lies up to so many days from it (open ends do)."""
+    begin = day.astype("datetime64[ns]")
+    margin = np.timedelta64(round(within_days * 86_400e9), "ns")
+    start, end = biases.start, biases.end
+    begun = np.isnat(start) | (start < begin + np.timedelta64(1, "D") + margin)
+    over = ~np.isnat(end) & ((end < begin - margin) | ((end == begin - margin) & (start < end)))
+    return bool((begun & ~over).any())
+
+
 def _shortest(edges: dict[str, dict[str, tuple[float, float]]], first: str, last: str) -> tuple[float, float] | None:
     """Sum and sigma along the chain of fewest records, then least variance."""
     queue: list[tuple[int, float, str, float, float]] = [(0, 0.0, first, 0.0, 0.0)]

@@ -17,6 +17,8 @@ from skylag.ionosphere.bias_algebra import pair_bias
 from skylag.ionosphere.normal import Knowledge, known
 from skylag.tables import Biases, Floats, Ints, Rays
 
+# Biases of so many days away still are drawn upon.
+DRAWN_WITHIN_DAYS = 60.0
 # Weight [1/ns^2] of what is held: a hundred-thousandth of a nanosecond.
 _EXACT = 1e10
 # Nothing is known of a bias: GPS receiver biases lie within -22 to +46 ns (product of 2017-001).
@@ -193,7 +195,7 @@ class _Book:
             return None
         pair = self.rays.pairs[self.unknowns.pair[row]]
         kind, name = self.unknowns.kind[row], self.unknowns.name[row]
-        within = 0.0 if self.walk is None else 60.0
+        within = 0.0 if self.walk is None else DRAWN_WITHIN_DAYS
         found = pair_bias(self.prior, kind, name, pair.system, pair.code1, pair.code2, self.when, within)
         return found if found is not None and np.isfinite(found[0]) else None
 

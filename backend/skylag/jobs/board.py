@@ -109,7 +109,8 @@ def add(
         }
         if estimation is not None and estimation != Estimation():
             spec["estimation"] = asdict(estimation)
-        title = f"{name} {region.name if region else 'around its receivers'}, {len(observed)} observation files"
+        files = "1 observation file" if len(observed) == 1 else f"{len(observed)} observation files"
+        title = f"{name} {region.name if region else 'around its receivers'}, {files}"
         numbers.append(archive.tasks.add(NETWORK_DAY, title, spec, now))
     return numbers, inputs.left_out
 

@@ -407,8 +407,9 @@ def summary(tally: Tally) -> Mapping[str, Any]:
 def told(found: Hindcast) -> tuple[str, ...]:
     """What a replay found, in lines."""
     facts = summary(found.tally)
+    scored_ones = "1 outlook" if facts["outlooks"] == 1 else f"{facts['outlooks']} outlooks"
     lines = [
-        f"{found.region}, {found.first} to {found.last}: {facts['outlooks']} outlooks scored; the archive has data on "
+        f"{found.region}, {found.first} to {found.last}: {scored_ones} scored; the archive has data on "
         f"{found.days_with_data} of the days up to then"
     ]
     return (*lines, *scored(facts))

@@ -20,11 +20,12 @@ import numpy as np
 from threadpoolctl import threadpool_limits
 
 from skylag import chain, formats
-from skylag.chain import Choices, ReceiverDay
+from skylag.chain import DRAW, Choices, ReceiverDay
 from skylag.errors import FormatError, NotEnough, SkylagError
 from skylag.formats.glance import glance
 from skylag.ionosphere import bias_algebra
 from skylag.ionosphere import left_out as left_out_receivers
+from skylag.ionosphere.datum import DRAWN_WITHIN_DAYS
 from skylag.ionosphere.field import Hour, Made, make
 from skylag.ionosphere.pairs import wanted_codes
 from skylag.tables import (
@@ -52,6 +53,9 @@ Progress = Callable[[str, float, str], None]
 
 _STATION_NAME = re.compile(r"^([A-Z0-9]{4}\d{2}[A-Z]{3})_|^([A-Za-z0-9]{4})\d{3}[0-9a-xA-X]\d{0,2}\.", re.ASCII)
 _NOT_DATA = (".toml", ".md")  # a region file and a note may lie beside the data
+_NO_INPUT = {  # what is read, but not for making a day; and what it is good for
+    "ionex": "holds a published map (IONEX), which a network day does not use; `skylag compare` lays it beside the day",
+}
 _LIBRARIES = ("numpy", "scipy", "hatanaka", "pandas", "xarray", "sqlalchemy")
 
 
@@ -144,7 +148,7 @@ def sort_inputs(paths: Iterable[Path]) -> Inputs:
             except SkylagError as trouble:
                 left_out.append(_left_out(path, trouble))
         else:
-            left_out.append(LeftOut(str(path), 0, f"holds {kind}, which a network day does not use"))
+            left_out.append(LeftOut(str(path), 0, _NO_INPUT.get(kind, f"holds {kind}, which a network day does not use")))
     return Inputs(
         {key: tuple(sorted(names)) for key, names in sorted(observations.items())}, tuple(orbits), tuple(biases),
         tuple(left_out), tuple(files), days, any_invented,
@@ -205,13 +209,44 @@ def read_orbits(paths: Sequence[str]) -> tuple[list[Ephemerides | PreciseOrbits]
     return [*tabulated, *(table for table in tables if isinstance(table, Ephemerides))], problems, left_out
 
 
-def read_biases(paths: Sequence[str]) -> tuple[Biases | None, list[Problem], list[LeftOut]]:
-    """All published biases as one table, None where there are none; problems met; files left out."""
-    tables, problems, left_out = _read_each(paths)
-    known = [table for table in tables if isinstance(table, Biases)]
+def read_biases(
+    paths: Sequence[str], day: np.datetime64, within_days: float = 0.0
+) -> tuple[Biases | None, list[Problem], list[LeftOut], list[LeftOut]]:
+    """All published biases as one table, None where there are none; problems met; files left out; files of other days.
+
+    day          of files of several days only those of this day are used, or of up to `within_days` away
+    Files of other days are among those left out where none is of the day: then their biases are missed.
+    """
+    known: list[Biases] = []
+    problems: list[Problem] = []
+    left_out: list[LeftOut] = []
+    others: list[LeftOut] = []
+    for path in paths:
+        tables, more_problems, more_left_out = _read_each([path])
+        problems += more_problems
+        left_out += more_left_out
+        for table in tables:
+            if isinstance(table, Biases):
+                if bias_algebra.of_day(table, day, within_days):
+                    known.append(table)
+                else:
+                    others.append(LeftOut(path, 0, _of_other_days(table, day, within_days)))
     if not known:
-        return None, problems, left_out
-    return replace(bias_algebra.join(known), datum="as published"), problems, left_out
+        return None, problems, [*left_out, *others], others
+    return replace(bias_algebra.join(known), datum="as published"), problems, left_out, others
+
+
+def _of_other_days(biases: Biases, day: np.datetime64, within_days: float) -> str:
+    """Why biases cannot be used on a day, and what would take them."""
+    if not len(biases):
+        return "tells no bias"
+    first, last = str(biases.start.min())[:10], str((biases.end - np.timedelta64(1, "s")).max())[:10]
+    span = first if first == last else f"{first} to {last}"
+    if within_days:
+        return f"its biases are of {span}, more than {within_days:g} days from {day}: too far to draw upon"
+    near = bias_algebra.of_day(biases, day, DRAWN_WITHIN_DAYS)
+    hint = "; --published-biases draw draws upon them" if near else ""
+    return f"its biases are of {span}, not of {day}: satellites are not held at them{hint}"
 
 
 def earlier_biases(archive: "Archive", within_days: int) -> Earlier:
@@ -378,7 +413,8 @@ def network_day(
     clock.enter("orbits")
     tell("orbits", 0.0, "orbits and biases")
     sources, problems, left_out = read_orbits(inputs.orbits)
-    prior, more_problems, more_left_out = read_biases(inputs.biases)
+    within_days = DRAWN_WITHIN_DAYS if choices.published_biases == DRAW else 0.0
+    prior, more_problems, more_left_out, of_other_days = read_biases(inputs.biases, wanted_day, within_days)
     problems += more_problems
     left_out = [*inputs.left_out, *left_out, *more_left_out]
     if not sources:
@@ -430,7 +466,7 @@ def network_day(
     warnings = [*made.warnings, *said, *(note for item in usable for note in item.notes)]
     warnings += [f"left out: {item}" for item in left_out]
     origin = Origin(
-        inputs=_with_use(inputs.files, left_out),
+        inputs=_with_use(inputs.files, [*left_out, *of_other_days]),
         options=_options(choices, place, wanted_day),
         versions=versions(),
         timings_s={name: round(seconds, 3) for name, seconds in clock.seconds.items()},

@@ -59,8 +59,9 @@ def told(found: Beside, name: str, simulated: bool) -> list[str]:
             f"{one.satellites} satellites are in both and scatter by {one.satellite_scatter_ns:.2f} ns"
             if one.satellites else "no satellite is in both on these codes"
         )  # fmt: skip
+        receivers = "1 receiver is" if one.receivers == 1 else f"{one.receivers} receivers are"
         said.append(
-            f"Biases of {one.system} {one.code1}-{one.code2}: {one.receivers} receivers are in both, together with the "
+            f"Biases of {one.system} {one.code1}-{one.code2}: {receivers} in both, together with the "
             f"satellites {one.together_ns:+.2f} ns from the published ones, which moves our content by "
             f"{one.straight_up_tecu:+.2f} TECU straight up (seen at 45 deg); {satellites}."
         )

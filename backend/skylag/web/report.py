@@ -46,6 +46,10 @@ class Clock:
         """Hour and minute, to the nearest."""
         return str(np.datetime_as_string(timescales.gps_to_utc(time + _HALF_MINUTE), unit="m"))[11:]
 
+    def utc_end(self, time: np.datetime64) -> str:
+        """The same of an end: midnight is the 24th hour of the day that ends."""
+        return "24:00" if (text := self.utc(time)) == "00:00" else text
+
     def local(self, time: np.datetime64) -> str:
         """The same in the region's own time; as UTC where it has none."""
         instant = timescales.gps_to_utc(time + _HALF_MINUTE).astype("datetime64[s]").astype(np.int64)
@@ -53,7 +57,7 @@ class Clock:
 
     def span(self, start: np.datetime64, end: np.datetime64) -> tuple[str, ...]:
         """Cells of a table: the span in UTC, and in local time where the region has one."""
-        cells = (f"{self.utc(start)} - {self.utc(end)}", f"{self.local(start)} - {self.local(end)}")
+        cells = (f"{self.utc(start)} - {self.utc_end(end)}", f"{self.local(start)} - {self.local(end)}")
         return cells[:1] if self.zone is None else cells
 
     def table(self, heading: tuple[str, ...], rows: Sequence[tuple[str, ...]], widths: tuple[float, ...]) -> Table:
@@ -140,7 +144,7 @@ def survey_verdict(advice: Advice, clock: Clock) -> str:
     if not bad:
         return head
     worst = max(bad, key=lambda window: window.end - window.start)
-    return f"{head} Longest away from work: {clock.utc(worst.start)} to {clock.utc(worst.end)} UTC, {worst.why}."
+    return f"{head} Longest away from work: {clock.utc(worst.start)} to {clock.utc_end(worst.end)} UTC, {worst.why}."
 
 
 def known_part(known: Bools, times: Times) -> str:
@@ -200,7 +204,7 @@ def approach_verdict(found: Availability, clock: Clock) -> str:
     worst = max(found.outages, key=lambda outage: outage.end - outage.start)
     return (
         f"{head} {len(found.outages)} outages; the longest, {worst.level} {clock.utc(worst.start)} to "
-        f"{clock.utc(worst.end)} UTC, is of {'the ' if worst.cause != 'unseen' else ''}"
+        f"{clock.utc_end(worst.end)} UTC, is of {'the ' if worst.cause != 'unseen' else ''}"
         f"{worst.cause if worst.cause != 'unseen' else 'want of data'}."
     )
 
@@ -324,7 +328,7 @@ def _evidence(day: DayAdvice, site: Site, advice: Advice, clock: Clock) -> list[
                                                   np.timedelta64(1, "m"))]  # fmt: skip
     near += [flag for flag in day.flags if flag.kind == "front" and flag not in near and flag.confirmed]
     rows = [
-        (f"{clock.utc(flag.start)} to {clock.utc(flag.end)}", flag.kind, flag.state,
+        (f"{clock.utc(flag.start)} to {clock.utc_end(flag.end)}", flag.kind, flag.state,
          _brief(flag.evidence if flag.confirmed else f"unconfirmed: {flag.evidence}"))
         for flag in sorted(near, key=lambda flag: (not flag.confirmed, flag.start))[:4]
     ]  # fmt: skip

@@ -7,6 +7,7 @@ import math
 from collections.abc import Sequence
 from typing import Any
 
+from skylag.impact.states import FINE_SIGMA_MM_PER_KM
 from skylag.tables import BROKEN, HOLDS, STATE_NAMES, UNSEEN, Thresholds
 from skylag.web.nearby import NearFlag
 
@@ -57,7 +58,8 @@ def of_state(
     if code == UNSEEN or (code == HOLDS and not known):
         return _unseen(delay_m, delay_sigma_m, support, limits)
     delay = f"the vertical delay is {with_sigma(delay_m, delay_sigma_m, 'm', 2)}" if known else ""
-    change = f"the delay changes by {with_sigma(slope, slope_sigma, 'mm per km', 0)}" if math.isfinite(slope) else ""
+    digits = 1 if slope_sigma < FINE_SIGMA_MM_PER_KM else 0
+    change = f"the delay changes by {with_sigma(slope, slope_sigma, 'mm per km', digits)}" if math.isfinite(slope) else ""
     if code == HOLDS:
         return f"Corrections hold here: {delay}" + (f", and {change}." if change else ".")
     limit = limits.broken_mm_per_km if code == BROKEN else limits.strained_mm_per_km

@@ -462,9 +462,9 @@ function layoutOf(contents, palette) {
       tickvals: lat.values,
       ticktext: lat.values.map((v) => latText(v, decimals(lat.step))),
     },
-    shapes: [...ladder(frame, lon, lat, palette), ...scaleBar(frame, palette)],
+    shapes: [...ladder(frame, lon, lat, palette), ...scaleBar(frame, palette, contents.sites)],
     annotations: [
-      scaleBarNote(frame, palette, sizeFactor(width)),
+      scaleBarNote(frame, palette, sizeFactor(width), contents.sites),
       ...(printed
         ? [
             { xref: "paper", yref: "paper", x: 0, y: 1, xanchor: "left", yanchor: "bottom", yshift: 16, align: "left", showarrow: false, text: contents.title, font: { size: 15, color: palette.ink } },
@@ -505,15 +505,20 @@ function ladder(frame, lon, lat, palette) {
   return bars;
 }
 
-function scaleBarPlace(frame) {
+/** Where the scale bar lies: below on the left, or in the next corner that no site and its name need. */
+function scaleBarPlace(frame, sites = []) {
   const km = scaleBarKm(frame);
-  const lat = frame.south + 0.045 * (frame.north - frame.south);
-  const lon = frame.west + 0.04 * (frame.east - frame.west);
-  return { km, lat, lon };
+  const [high, wide] = [frame.north - frame.south, frame.east - frame.west];
+  const long = offset(frame.south, 0, km, 0)[1];
+  const corners = [[0.045, 0.04 * wide], [0.045, 0.96 * wide - long], [0.93, 0.04 * wide], [0.93, 0.96 * wide - long]]
+    .map(([up, along]) => ({ km, lat: frame.south + up * high, lon: frame.west + along }));
+  const crowded = ({ lat, lon }) => sites.some((site) =>
+    Math.abs(site.lat - lat) < 0.12 * high && site.lon > lon - 0.2 * wide && site.lon < lon + long + 0.2 * wide);
+  return corners.find((corner) => !crowded(corner)) ?? corners[0];
 }
 
-function scaleBar(frame, palette) {
-  const { km, lat, lon } = scaleBarPlace(frame);
+function scaleBar(frame, palette, sites) {
+  const { km, lat, lon } = scaleBarPlace(frame, sites);
   return [0, 1].map((half) => ({
     type: "rect",
     xref: "x",
@@ -530,8 +535,8 @@ function scaleBar(frame, palette) {
   }));
 }
 
-function scaleBarNote(frame, palette, k) {
-  const { km, lat, lon } = scaleBarPlace(frame);
+function scaleBarNote(frame, palette, k, sites) {
+  const { km, lat, lon } = scaleBarPlace(frame, sites);
   return {
     x: lon,
     y: lat,

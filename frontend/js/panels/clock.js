@@ -98,9 +98,9 @@ export class ClockPanel {
     const { strip, names } = this.#elements;
     const rowHeight = 21; // and 3 between: a name is a target of 24 pixels
     // The names take the room they need, and the map leaves the strip its room on the first screen.
-    const longest = Math.max(...rows.map((row) => row.name.length));
+    const longest = Math.max(...rows.map((row) => row.name.length), 0.86 * zoneName(day.region.timezone).length);
     const root = document.documentElement.style;
-    root.setProperty("--names", `${Math.min(13, Math.max(6.5, 0.46 * longest + 0.6)).toFixed(1)}rem`);
+    root.setProperty("--names", `${Math.min(13, Math.max(6.5, 0.53 * longest + 0.8)).toFixed(1)}rem`);
     root.setProperty("--strip", `${Math.min(320, rows.length * (rowHeight + 3))}px`);
     names.style.setProperty("--row", `${rowHeight}px`);
     const figure = stripFigure({ rows, times: day.times, flags: day.flags, width, rowHeight, zone: day.region.timezone });
