@@ -47,6 +47,21 @@ def test_a_map_that_is_sent_is_laid_beside_the_day(open_client: TestClient, smal
         assert any("Invented" in sentence for sentence in told["said"])
 
 
+def test_a_map_whose_biases_are_a_receivers_alone(open_client: TestClient, small_archive: Archive) -> None:
+    """Maps of real days tell receivers on codes that their satellites are not told on: no scatter of satellites."""
+    region = small_archive.regions()[0]
+    ours = small_archive.biases(region, str(CALM_DAY), small_archive.day(region, str(CALM_DAY)).head.version)
+    of_receivers = ours.kind == "receiver"
+    columns = ("kind", "name", "system", "code1", "code2", "value_ns", "sigma_ns", "start", "end")
+    told = replace(ours, **{name: getattr(ours, name)[of_receivers] for name in columns})
+    fields = small_archive.fields(region, str(CALM_DAY))
+    data = ionex.write(fields, fields.times[0], 400.0, biases=told).encode()
+    answer = open_client.post(f"/api/days/{region}/{CALM_DAY}/beside", content=data)
+    assert answer.status_code == 200, answer.text
+    (one,) = answer.json()["facts"]["biases"]
+    assert one["receivers"] > 0 and one["satellites"] == 0 and one["satellite_scatter_ns"] is None
+
+
 def test_what_is_no_map_is_refused(
     open_client: TestClient, client: TestClient, small_archive: Archive, monkeypatch: pytest.MonkeyPatch
 ) -> None:

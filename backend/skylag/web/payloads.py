@@ -732,7 +732,7 @@ def beside(found: Beside, said: Sequence[str], name: str) -> dict[str, Any]:
     return {
         "name": name,
         "said": list(said),
-        "facts": found.facts(),
+        "facts": _plain(found.facts()),
         "hours": {
             "start_utc": utc_texts(start), "mean_tecu": _numbers(mean), "rms_tecu": _numbers(rms),
             "cells": [int(one) for one in count],
