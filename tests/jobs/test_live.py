@@ -351,6 +351,20 @@ def test_a_file_that_is_none_is_left_out_and_the_rest_goes_on(
     assert log == [("file left out", {"file": "letter.rnx", "why": "is unknown"})]
 
 
+def test_a_file_of_a_past_day_is_told_with_the_way_out(
+    archive: Archive, sample_folder: Path, executor: Executor, tmp_path: Path
+) -> None:
+    (tmp_path / "in").mkdir()
+    shutil.copy(next((sample_folder / "2031-03-11").glob("MRGT*")), tmp_path / "in")
+    log: list[tuple[str, dict]] = []
+    clock = Clock("11:00")
+    watch = Watch(archive, tmp_path / "in", executor, lambda: clock() + np.timedelta64(3, "D"),
+                  log=lambda event, **f: log.append((event, f)))  # fmt: skip
+    assert turn_until_made(watch) == 0
+    ((event, facts),) = log
+    assert event == "file left out" and "is of 2031-03-11" in facts["why"] and "skylag add" in facts["why"]
+
+
 # How far maps made step by step may be from the same made whole, in any cell: content [TECU] and slope [mm/km]; the
 # factor between sigmas in 99 of 100 cells (the spread of a residual is sought in steps of 1.41, and whether an epoch
 # tells its own by a threshold: small changes may turn either); and the share of cells whose state differs.  An hour is

@@ -46,7 +46,7 @@ def to_ics(entries: Sequence[Entry], name: str, made: np.datetime64) -> str:
 
 
 def _minute(gps: np.datetime64) -> str:
-    return _stamp(np.datetime64(gps_to_utc(gps + np.timedelta64(30, "s")), "m"))
+    return _stamp(gps_to_utc(gps + np.timedelta64(30, "s")).astype("datetime64[m]"))
 
 
 def _stamp(utc: object) -> str:

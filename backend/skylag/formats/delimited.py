@@ -35,7 +35,8 @@ def biases_csv(calibration: Calibration) -> str:
     for row in range(len(table)):
         writer.writerow([
             table.kind[row], table.name[row], table.system[row], table.code1[row], table.code2[row],
-            f"{round(float(table.value_ns[row]), 4) + 0.0:.4f}", f"{table.sigma_ns[row]:.4f}", calibration.datum_of_row[row],
+            f"{round(float(table.value_ns[row]), 4) + 0.0:.4f}",  # so that nought has no sign
+            f"{table.sigma_ns[row]:.4f}", calibration.datum_of_row[row],
         ])  # fmt: skip
     return out.getvalue()
 

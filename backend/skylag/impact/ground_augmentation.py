@@ -249,8 +249,8 @@ def _exceeded(
             run = sigma[first:last]
             if what == "unseen" and np.isfinite(run).any():
                 why = (
-                    f"the slope is known to {plus_minus(np.nanmax(run))} mm/km only: that it is within {limit['nominal']} "
-                    "cannot be said"
+                    f"the slope is known to {plus_minus(np.nanmax(run))} mm/km only: that it is within "
+                    f"{limit['nominal']} cannot be said"
                 )
             if what == "warned":
                 worst = first + int(np.argmax(judged[first:last]))

@@ -398,6 +398,10 @@ class Watch:
         if found.kind in ("unknown", "empty"):
             self._log("file left out", file=path.name, why=f"is {found.kind}")
             return
+        if found.day is not None and found.day < self._now().astype("datetime64[D]") - self._patience.days_back * _DAY:
+            why = f"is of {found.day}, and only today and the {self._patience.days_back} days before are followed"
+            self._log("file left out", file=path.name, why=f"{why}: `skylag add` takes days that are past")
+            return
         self._days[str(path)] = found.day
         self._log("file came", file=path.name, kind=found.kind, day=str(found.day))
         receiver = (found.marker or marker_of(path.name)) if found.kind == "observations" else ""

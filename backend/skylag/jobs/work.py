@@ -148,7 +148,8 @@ def sort_inputs(paths: Iterable[Path]) -> Inputs:
             except SkylagError as trouble:
                 left_out.append(_left_out(path, trouble))
         else:
-            left_out.append(LeftOut(str(path), 0, _NO_INPUT.get(kind, f"holds {kind}, which a network day does not use")))
+            why = _NO_INPUT.get(kind, f"holds {kind}, which a network day does not use")
+            left_out.append(LeftOut(str(path), 0, why))
     return Inputs(
         {key: tuple(sorted(names)) for key, names in sorted(observations.items())}, tuple(orbits), tuple(biases),
         tuple(left_out), tuple(files), days, any_invented,

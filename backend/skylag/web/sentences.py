@@ -59,7 +59,8 @@ def of_state(
         return _unseen(delay_m, delay_sigma_m, support, limits)
     delay = f"the vertical delay is {with_sigma(delay_m, delay_sigma_m, 'm', 2)}" if known else ""
     digits = 1 if slope_sigma < FINE_SIGMA_MM_PER_KM else 0
-    change = f"the delay changes by {with_sigma(slope, slope_sigma, 'mm per km', digits)}" if math.isfinite(slope) else ""
+    steep = with_sigma(slope, slope_sigma, "mm per km", digits)
+    change = f"the delay changes by {steep}" if math.isfinite(slope) else ""
     if code == HOLDS:
         return f"Corrections hold here: {delay}" + (f", and {change}." if change else ".")
     limit = limits.broken_mm_per_km if code == BROKEN else limits.strained_mm_per_km
