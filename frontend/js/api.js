@@ -508,6 +508,7 @@ export async function network(region, how) {
       arcs: number(one.arcs),
       level: number(one.level_sigma_tecu),
       leftOut: number(one.left_out_rms_tecu),
+      leftOutSigma: number(one.left_out_sigma_tecu),
       faults: one.faults,
       biases: one.biases.map((bias) => ({ pair: bias.pair, value: number(bias.bias_ns), sigma: number(bias.sigma_ns) })),
     })),

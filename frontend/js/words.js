@@ -149,6 +149,8 @@ export const WORDS = {
   hourByHour: "Hour by hour",
   basis: "What this rests on",
   loadingNetwork: "Asking what each receiver gave …",
+  /** @param {number} count */
+  moreNotes: (count) => `${countText(count, "more note")} on this day`,
   noNetworkDay: "Of this day nothing is kept about the receivers.",
   disagrees: "disagrees with the others",
   /** @param {string[]} names @param {number} all @param {boolean} checked */

@@ -286,6 +286,17 @@ def test_the_quiet_day_on_the_page(kept: Kept, window: Window, tmp_path: Path) -
     assert page.inner_text("#flags-title") and "No flag was raised on this day" in page.inner_text("main")
     assert "6 receivers" in page.inner_text("footer")
 
+    notes = page.locator("footer details")
+    notes.locator("summary").click()
+    assert LATE_BIASES in notes.inner_text(), "what was left out is told on the page too"
+
+    page.goto(f"{window.address}/?region={LOWLAND.replace(' ', '+')}&day={QUIET}&ask=network")
+    page.wait_for_selector("#network-table tbody tr")
+    told = page.inner_text("#network-table")
+    assert all(name in told for name in RECEIVERS)
+    # ZIMM is 450 km from all others, whose field misses it by more; they say so, and it does not stand out.
+    assert "None of 6 receivers stands out" in page.inner_text("#network-said")
+
     unseen = window.go(LOWLAND, QUIET, "11:00", "45.2,1.2")
     assert "Unseen here: no line of sight passes near enough" in unseen and "not covered" in unseen
     assert "not known" in unseen and "TECU" not in unseen

@@ -50,7 +50,7 @@ def test_the_network_day_by_day(tmp_path: Path) -> None:
     name = RECEIVERS[7].name
     facts = {"receiver": name, "epochs": 1440, "interval_s": 30.0, "satellites": 8, "rays": 11, "arcs": 9, "slips": 3,
              "arcs_began": {"gap": 2, "slip": 3, "reset": 1}, "level_sigma_median_tecu": 0.4}  # fmt: skip
-    left_out = {"by_receiver": {name: {"rms_tecu": 1.7}}}
+    left_out = {"by_receiver": {name: {"rms_tecu": 1.7, "sigma_tecu": 0.9}}}
     counts = {**made.origin.counts, "by_receiver": [facts], "receivers_left_out": left_out}
     with open_archive(tmp_path) as archive:
         archive.save(replace(made, origin=replace(made.origin, counts=counts)))
@@ -60,6 +60,7 @@ def test_the_network_day_by_day(tmp_path: Path) -> None:
     by_name = {one["name"]: one for one in told[0]["receivers"]}
     one = by_name[name]
     assert (one["received"], one["gaps"], one["slips"], one["resets"], one["left_out_rms_tecu"]) == (0.5, 2, 3, 1, 1.7)
+    assert one["left_out_sigma_tecu"] == 0.9
     assert one["faults"] == ["Only HULL sees a step on G07; no neighbour agrees, so the receiver is suspected."]
     value = float(biases.value_ns[(biases.kind == "receiver") & (biases.name == name)][0])
     assert math.isclose(one["biases"][0]["bias_ns"], value, rel_tol=1e-6)

@@ -499,6 +499,7 @@ def network(days: Sequence[DayNetwork]) -> dict[str, Any]:
                         "rays": r.rays, "arcs": r.arcs, "gaps": r.gaps, "slips": r.slips, "resets": r.resets,
                         "level_sigma_tecu": _number(r.level_sigma_tecu),
                         "left_out_rms_tecu": _number(r.left_out_rms_tecu),
+                        "left_out_sigma_tecu": _number(r.left_out_sigma_tecu),
                         "faults": list(r.faults),
                         "biases": [
                             {"pair": pair, "bias_ns": _number(value), "sigma_ns": _number(sigma)}

@@ -101,6 +101,7 @@ class ReceiverDay:
     received           share of the day's epochs that it has data for; NaN where not told
     gaps, slips, resets  arcs that began so
     left_out_rms_tecu  how far the field of the others misses its lines of sight, NaN where not computed
+    left_out_sigma_tecu  how far it may: what that field and the lines of sight state, more for a receiver far away
     faults             what was said of it by flags of the kind fault
     biases             (signal pair, value [ns], sigma [ns])
     """
@@ -115,6 +116,7 @@ class ReceiverDay:
     resets: int | None
     level_sigma_tecu: float
     left_out_rms_tecu: float
+    left_out_sigma_tecu: float
     faults: tuple[str, ...]
     biases: tuple[tuple[str, float, float], ...]
 
@@ -173,6 +175,7 @@ def _receiver(
         gaps=count(began, "gap"), slips=count(facts, "slips"), resets=count(began, "reset"),
         level_sigma_tecu=float(facts.get("level_sigma_median_tecu", math.nan)),
         left_out_rms_tecu=float(foretold.get("rms_tecu", math.nan)),
+        left_out_sigma_tecu=float(foretold.get("sigma_tecu", math.nan)),
         faults=tuple(flag.evidence for flag in flags if flag.kind == "fault" and name in flag.evidence),
         biases=tuple(
             (pair, float(np.mean([v for v, _ in spans])), float(np.mean([s for _, s in spans])))

@@ -9,6 +9,7 @@ import { make } from "./parts.js";
 
 export class MastheadPanel {
   #elements;
+  #noted = null;
   #state;
   #days = [];
   #actions;
@@ -63,6 +64,15 @@ export class MastheadPanel {
     day.closest(".day-picker").hidden = !days.length;
   }
 
+  /** What the day rests on, and its notes: two at once, all others behind a summary. @param {import("../api.js").Day} day */
+  #note(day) {
+    const { origin } = this.#elements;
+    this.#noted = day;
+    const more = day.warnings.slice(2);
+    origin.replaceChildren([day.receivers.length ? `${countText(day.receivers.length, "receiver")}.` : "", ...day.warnings.slice(0, 2)].filter(Boolean).join(" "),
+      ...(more.length ? [make("details", {}, make("summary", { text: WORDS.moreNotes(more.length) }), make("ul", {}, ...more.map((text) => make("li", { text }))))] : []));
+  }
+
   /** @param {import("../main.js").Scene} scene */
   show({ view, day, time }) {
     const { name, before, after, clock, layer, simulated, age, origin, csv, geojson, netcdf, ionex, lines, asks } = this.#elements;
@@ -85,7 +95,7 @@ export class MastheadPanel {
     simulated.hidden = !day.simulated;
     simulated.textContent = day.simulated ? WORDS.simulated : "";
     age.textContent = day.processed ? WORDS.written(agoText(Date.now() - day.processed)) : "";
-    origin.textContent = [day.receivers.length ? `${countText(day.receivers.length, "receiver")}.` : "", ...day.warnings.slice(0, 2)].filter(Boolean).join(" ");
+    if (this.#noted !== day) this.#note(day);
     csv.href = api.flagsFile(view.region, view.day, "csv");
     geojson.href = api.flagsFile(view.region, view.day, "geojson");
     netcdf.href = api.dayFile(view.region, view.day, "field.nc");

@@ -8,7 +8,10 @@ import { median } from "../figures/year.js";
 import { asSentence, dayText, fixed, HEADS, PAGE_WORDS, shareText, withSigma, WORDS } from "../words.js";
 import { draft, make, tableOf, trouble } from "./parts.js";
 
-/** A receiver disagrees where the others' field misses it by this many times the median miss. */
+/**
+ * A receiver disagrees where the others' field misses it by this many times the median miss, and of what that field
+ * itself says it may miss by: it knows less of a receiver that is far from all others.
+ */
 const FAR = 2;
 
 export class NetworkPanel {
@@ -97,7 +100,7 @@ export class NetworkPanel {
       return;
     }
     const usual = median(today.receivers.map((one) => one.leftOut));
-    const rows = today.receivers.map((one) => ({ ...one, far: usual > 0 && one.leftOut > FAR * usual }));
+    const rows = today.receivers.map((one) => ({ ...one, far: usual > 0 && one.leftOut > FAR * Math.max(usual, Number.isFinite(one.leftOutSigma) ? one.leftOutSigma : 0) }));
     rows.sort((a, b) => Number(b.faults.length > 0) - Number(a.faults.length > 0) || Number(b.far) - Number(a.far) || (a.name < b.name ? -1 : 1));
     const loud = rows.filter((one) => one.faults.length || one.far).map((one) => one.name);
     said.textContent = `${dayText(date)}: ${WORDS.disagree(loud, rows.length, Number.isFinite(usual))}`;
