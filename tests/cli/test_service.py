@@ -84,7 +84,7 @@ def test_queued_from_the_command_line(tmp_path: Path, sample_folder: Path, capsy
     place = ["--archive", str(tmp_path / "a")]
     assert cli.main(["add", *files, str(tmp_path / "letter.txt"), *place]) == 1
     said = capsys.readouterr()
-    assert said.out == "queued 1: 2031-03-11 around its receivers, 1 observation files\n" and "letter.txt" in said.err
+    assert said.out == "queued 1: 2031-03-11 around its receivers, 1 observation file\n" and "letter.txt" in said.err
     assert cli.main(["add", *files, "--date", "2031-04-01", *place]) == 3
     assert cli.main(["watch", str(tmp_path / "nowhere"), *place]) == 3
 
