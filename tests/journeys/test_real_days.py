@@ -100,12 +100,12 @@ class Kept:
     said: dict[str, "subprocess.CompletedProcess[str]"]
 
     def skylag(self, *words: str, status: int = 0) -> str:
-        """What a command says about the archive; it must end with the status.  Here in this process, which is quick."""
+        """What a command says about the archive, or why it failed; it must end with the status.  In this process."""
         out, err = io.StringIO(), io.StringIO()
         with contextlib.chdir(self.folder), contextlib.redirect_stdout(out), contextlib.redirect_stderr(err):
             ended = cli.main([*words, "--archive", "archive"])
         assert ended == status, (words, out.getvalue()[-2000:], err.getvalue()[-2000:])
-        return out.getvalue() + err.getvalue()
+        return err.getvalue() if status else out.getvalue()
 
 
 def command(folder: Path, *words: str) -> "subprocess.CompletedProcess[str]":
