@@ -10,7 +10,8 @@ from tests.simulated.year_of_content import Year, simulate
 from skylag.errors import NotEnough, Refused
 from skylag.ionosphere import activity, outlook
 from skylag.ionosphere.activity import AFTER, LATER, MAIN, ONSET, QUIET, UNTOLD
-from skylag.ionosphere.outlook import Drivers, History, climatology, replay, tomorrow, windows
+from skylag.ionosphere.climatology import climate_of
+from skylag.ionosphere.outlook import Drivers, History, replay, tomorrow, windows
 from skylag.tables import HOLDS, UNSEEN, Outlook
 
 
@@ -93,7 +94,7 @@ def test_an_empty_archive_gives_climatology_and_says_so(year: Year) -> None:
     empty = unseen(year.history.until(1))
     made = tomorrow(empty)
     ahead = empty.days[-1] + np.arange(1, 3)
-    model = climatology(ahead, empty.lats, empty.lons, np.full(2, np.nan)).reshape(48, -1)
+    model = climate_of(ahead, empty.lats, empty.lons).delay(slice(None), np.full(2, np.nan)).reshape(48, -1)
     middle = made.delay_quantiles[..., int(np.argmin(np.abs(made.levels - 0.5)))]
     assert np.allclose(middle, model, rtol=0.02)
     assert "climatology alone" in made.basis[0]
@@ -227,14 +228,3 @@ def test_hours_without_an_index_are_untold() -> None:
 def test_the_storm_limit(evidence: Evidence) -> None:
     evidence("ap from where a storm is counted", source="Kp 5- is ap 39: conversion table of the index's makers (GFZ)",
              expected=39, got=activity.STORM_AP, tolerance=0, unit="2 nT")  # fmt: skip
-
-
-def test_climatology_follows_activity_and_hour() -> None:
-    days = np.array(["2031-03-20", "2031-03-21"], dtype="datetime64[D]")
-    low = climatology(days, np.array([45.0]), np.array([10.0]), np.array([80.0, 80.0]))
-    high = climatology(days, np.array([45.0]), np.array([10.0]), np.array([200.0, 200.0]))
-    assert (high > low).all()
-    assert 11 <= int(np.argmax(low[0, :, 0])) <= 15  # the top lies after local noon
-    unknown = climatology(days, np.array([45.0]), np.array([10.0]), np.full(2, np.nan))
-    usual = np.full(2, outlook.USUAL_FLUX)
-    assert np.allclose(unknown, climatology(days, np.array([45.0]), np.array([10.0]), usual))

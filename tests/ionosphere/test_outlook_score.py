@@ -9,7 +9,8 @@ from tests.simulated.year_of_content import simulate
 
 from skylag.errors import NotEnough
 from skylag.ionosphere import outlook_score
-from skylag.ionosphere.outlook import climate_of, replay
+from skylag.ionosphere.climatology import climate_of
+from skylag.ionosphere.outlook import replay
 from skylag.ionosphere.outlook_score import Tally, crps, from_facts, reliability, score, simple_ways, verdict
 
 

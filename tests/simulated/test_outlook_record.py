@@ -13,7 +13,8 @@ from scipy.stats import norm
 from tests.simulated.year_of_content import Year, simulate
 
 from skylag.ionosphere import outlook_score
-from skylag.ionosphere.outlook import Drivers, climate_of, replay
+from skylag.ionosphere.climatology import climate_of
+from skylag.ionosphere.outlook import Drivers, replay
 from skylag.ionosphere.outlook_score import Tally, reliability, score, verdict
 
 SEED = 20310321

@@ -124,7 +124,7 @@ class Spread:
 
     start: float
     days: float = 90.0
-    few: float = 6.0
+    few: float = 12.0
     square: Floats = field(default_factory=lambda: np.zeros((3, _BLOCKS)))
     count: Floats = field(default_factory=lambda: np.zeros((3, _BLOCKS)))
     shape: Floats = field(init=False)
@@ -200,7 +200,7 @@ class Chances:
     prior: Floats
     prior_sigma: Floats
     days: float = 365.0
-    day_worth: float = 2.0
+    day_worth: float = 1.0
     weights: Floats = field(init=False)
     precision: Floats = field(init=False)
 

@@ -1,7 +1,7 @@
 """The day ahead: expected vertical delay and slope with their ranges, and the chance that corrections stop holding.
 
-What is foretold is the logarithm of delay over a climatological value (NTCM-G, whose activity is F10.7), so that season
-and time of day come from the model and the rest from the archive: the mean of the last 27 days at the same hour, recent
+What is foretold is the logarithm of delay over a climatological value (IRI at F10.7: `climatology`), so that season and
+time of day come from the model and the rest from the archive: the mean of the last 27 days at the same hour, recent
 days weighted toward the newest, the same day one solar rotation (27 days) before.  Their weights are learned from the
 archive itself.  Geomagnetic activity told beforehand shifts hours to analogues: what earlier hours of the same storm
 phase did (`activity`); what they did on the last day, where that was one of storm, is taken off before it is carried
@@ -17,24 +17,23 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from skylag.constants import L1_M_PER_TECU
 from skylag.errors import NotEnough, Refused
 from skylag.ionosphere import activity
-from skylag.ionosphere.broadcast_delay import ntcm_vertical
+from skylag.ionosphere.climatology import LEAST_DELAY_M, USUAL_FLUX, climate_of, smoothed
 from skylag.ionosphere.learning import Chances, Shifts, Spread, Weights, storm_columns
 from skylag.tables import BROKEN, STRAINED, UNSEEN, Bools, Bytes, Floats, Outlook, Times, Words
 
 LEVELS = np.array([0.01, 0.025, 0.05, 0.1, 0.2, 0.25, 0.3, 0.4, 0.5, 0.6, 0.7, 0.75, 0.8, 0.9, 0.95, 0.975, 0.99])
 SLOPE_LEVELS = np.array([0.5, 0.8, 0.95, 0.99])
 RANGES = {50: (0.25, 0.75), 80: (0.1, 0.9), 95: (0.025, 0.975)}
-USUAL_FLUX = 120.0  # F10.7 where none is told: about its mean over a solar cycle (from memory)
 LEAST_DAYS = 7  # seen at a place before a stretch of hours is called likely to hold
 LEARNING_PLACES = 60  # more of them tell little new of one day, and take time
 ROTATION = 27  # days of the Sun as seen from Earth
 
-_LEAST_DELAY_M, _LEAST_SLOPE = 0.05, 0.02
+_LEAST_SLOPE = 0.02
 # Climatology by itself: half of the delay may be wrong, as IS-GPS-200 20.3.3.5.2.5 says of the broadcast model.
 _CLIMATE_SPREAD = 0.5
+_SHAPE_SPREAD = 0.3  # of that between the hours of a month: 20 to 30 % (from memory)
 # Slopes before any were seen: about 1 mm/km, and 4 mm/km the bound of nominal ones (Mayer et al. 2009, ION GNSS).
 _SLOPE_START, _SLOPE_SPREAD = 1.0, 0.6
 _DAY_SPREAD = 0.25  # day-to-day scatter of content: the middle of 15 to 35 % (Forbes et al. 2000, JASTP 62)
@@ -115,32 +114,6 @@ def no_drivers(days: int) -> Drivers:
     return Drivers(np.full((days, 8), np.nan), np.full((days, 2, 8), np.nan), np.full(days, np.nan))
 
 
-@dataclass(frozen=True)
-class Climate:
-    """NTCM-G over days and places, linear in activity: content [TECU] (D, 24, P) at F10.7 of 100, and rise to 200."""
-
-    low: Floats
-    rise: Floats
-
-    def delay(self, rows: Any, flux: Floats) -> Floats:
-        """Vertical delay [m] of some days under F10.7 of (rows,), NaN where it is not known."""
-        known = np.where(np.isfinite(flux), flux, USUAL_FLUX)
-        content = self.low[rows] + self.rise[rows] * ((known - 100.0) / 100.0)[:, None, None]
-        return np.asarray(np.maximum(content * L1_M_PER_TECU, _LEAST_DELAY_M))
-
-
-def climate_of(days: npt.NDArray[np.datetime64], lats: Floats, lons: Floats) -> Climate:
-    """The model at the middles of the hours of days."""
-    middles = days.astype("datetime64[ns]")[:, None] + (np.arange(24) * 3600 + 1800).astype("timedelta64[s]")
-    low = ntcm_vertical((100.0, 0.0, 0.0), lats, lons, middles[:, :, None])
-    return Climate(low, ntcm_vertical((200.0, 0.0, 0.0), lats, lons, middles[:, :, None]) - low)
-
-
-def climatology(days: npt.NDArray[np.datetime64], lats: Floats, lons: Floats, flux: Floats) -> Floats:
-    """Vertical delay [m] (D, 24, P) that NTCM-G gives for the middles of hours; flux (D,) is F10.7 or NaN."""
-    return climate_of(days, lats, lons).delay(slice(None), flux)
-
-
 # ---------------------------------------------------------------------------------------------- what is known when
 
 
@@ -164,22 +137,28 @@ _PRIOR = np.array([0.0, 1.0, 0.3, 0.1, 0.2, 0.1, 0.15, 0.0])
 _PRIOR_SIGMA = np.array([0.1, 0.15, 0.2, 0.2, 0.3, 0.3, 0.2, 0.2])
 
 
-def _series(value: Floats, spread: Floats, calm: Bools, scatter: float, alone: float) -> _Series:
+def _series(value: Floats, spread: Floats, calm: Bools, scatter: float, alone: float, shape: float) -> _Series:
     """From the logarithm, its measurement sigma, and which hours (D, 24) were calm.
 
-    scatter, alone  from day to day, and of what is expected without any day: their squares weigh the first days
+    scatter, alone, shape  from day to day; of what is expected without any day, and of that how hours stray from their
+    mean: their squares weigh the first days
     """
     seen = np.isfinite(value)
     weight = np.where(seen, 1.0 / (1.0 + np.nan_to_num(spread, nan=1.0) ** 2 / scatter**2), 0.0)
     usual = weight * np.where(calm, 1.0, _CALM_WEIGHT)[:, :, None]
     filled = np.where(seen, value, 0.0)
     total, count = _trailing(usual * filled, ROTATION), _trailing(usual, ROTATION)
-    everywhere = total.sum(axis=2, keepdims=True) / (count.sum(axis=2, keepdims=True) + 1e-9)
+    # All hours and places tell the level first, then the hour its departure from it, then the place its own.
     days = _trailing(usual.max(axis=2, keepdims=True), ROTATION)  # on which the hour was seen anywhere
-    first = (scatter / alone) ** 2
-    everywhere *= days / (days + first)
+    any_hour = days.mean(axis=1, keepdims=True)
+    hourly = total.sum(axis=2, keepdims=True) / (count.sum(axis=2, keepdims=True) + 1e-9)
+    level = (hourly * days).sum(axis=1, keepdims=True) / (days.sum(axis=1, keepdims=True) + 1e-9)
+    first, later = scatter**2 / (alone**2 - shape**2), (scatter / shape) ** 2
+    level *= any_hour / (any_hour + first)
+    everywhere = level + (hourly - level) * days / (days + later)
     few = _FEW_DAYS / (_FEW_DAYS + count)  # of the place itself, beside all places
-    unknown = np.sqrt(first / (days + first) + (_LOCAL * few) ** 2)
+    unknown = np.sqrt((alone**2 - shape**2) * first / (any_hour + first) + shape**2 * later / (days + later)
+                      + (alone * _LOCAL * few) ** 2) / alone  # fmt: skip
     month = (total + _FEW_DAYS * everywhere) / (count + _FEW_DAYS)
     last = np.where(seen, value - month, 0.0)
     recent = np.zeros_like(value)
@@ -360,20 +339,21 @@ class _World:
         count = len(history.days)
         self.history, self.drivers = history, drivers
         ahead = history.days[-1] + np.arange(1, 3)
-        flux = np.concatenate([_held(drivers.flux), np.repeat(_held(drivers.flux)[-1:], 2)])
         # The flux of a day is not known before it: each day is given that of two days before.
-        flux = np.concatenate([flux[:1], flux[:1], flux[:-2]])
-        self.climate = climatology(np.concatenate([history.days, ahead]), history.lats, history.lons, flux)
+        smooth = smoothed(drivers.flux)
+        flux = np.concatenate([smooth[:1], smooth[:1], smooth])
+        climate = climate_of(np.concatenate([history.days, ahead]), history.lats, history.lons)
+        self.climate = climate.delay(slice(None), flux)
         self.slope_base = float(np.log(_SLOPE_START))
         measured = activity.phases(activity.hourly(drivers.ap)).reshape(count, 24)
         self.measured = measured
         calm = measured <= activity.QUIET
         with np.errstate(invalid="ignore", divide="ignore"):
-            delay = np.log(np.maximum(history.delay, _LEAST_DELAY_M)) - np.log(self.climate[:count])
-            rough = history.sigma / np.maximum(history.delay, _LEAST_DELAY_M)
+            delay = np.log(np.maximum(history.delay, LEAST_DELAY_M)) - np.log(self.climate[:count])
+            rough = history.sigma / np.maximum(history.delay, LEAST_DELAY_M)
             slope = np.log(np.maximum(history.slope, _LEAST_SLOPE)) - self.slope_base
-        self.delay = _series(delay, rough, calm, _DAY_SPREAD, _CLIMATE_SPREAD)
-        self.slope = _series(slope, np.zeros_like(slope), calm, 0.4, _SLOPE_SPREAD)
+        self.delay = _series(delay, rough, calm, _DAY_SPREAD, _CLIMATE_SPREAD, _SHAPE_SPREAD)
+        self.slope = _series(slope, np.zeros_like(slope), calm, 0.4, _SLOPE_SPREAD, 0.4)
         seen = history.states != UNSEEN
         self.bad = [
             [_how_often(history.states[use] >= least, seen[use]) for least in (STRAINED, BROKEN)]

@@ -4,7 +4,7 @@
   2007, JASA 102, 359-378; Laio and Tamea 2007, HESS 11); of a single value it is the absolute error
 - Brier score of the chances (Brier 1950, Monthly Weather Review 78, 1-3), and reliability by tenths
 Beside it stand: `persistence`, the last day known; `recurrence`, the day one solar rotation before; `climatology`,
-NTCM-G times one factor that fits the last 27 days; `usual`, the median of the last 27 days at the same hour, which is
+IRI times one factor that fits the last 27 days; `usual`, the median of the last 27 days at the same hour, which is
 common practice.  Each is compared over the hours that both speak of.  Hours not seen are never scored.
 """
 
@@ -16,7 +16,8 @@ import numpy as np
 import numpy.typing as npt
 
 from skylag.errors import NotEnough
-from skylag.ionosphere.outlook import RANGES, ROTATION, Climate, Drivers, History, climate_of
+from skylag.ionosphere.climatology import Climate, climate_of, smoothed
+from skylag.ionosphere.outlook import RANGES, ROTATION, Drivers, History
 from skylag.tables import BROKEN, STRAINED, UNSEEN, Floats, Outlook
 
 OTHERS = ("persistence", "recurrence", "climatology", "usual")
@@ -138,7 +139,7 @@ def simple_ways(
     """What simple ways would have told (24, P) [m] of row `day` at the end of row `last`; NaN where they cannot."""
     nothing = np.full(history.delay.shape[1:], np.nan)
     month = history.delay[max(0, last + 1 - ROTATION) : last + 1]
-    flux = np.full(len(month), np.nan) if drivers is None else drivers.flux[max(0, last + 1 - ROTATION) : last + 1]
+    flux = np.full(len(month), np.nan) if drivers is None else smoothed(drivers.flux[: last + 1])[-len(month) :]
     rows = np.append(np.arange(last + 1 - len(month), last + 1), day)
     if climate is None:
         climate, rows = climate_of(history.days[rows], history.lats, history.lons), np.arange(len(rows))

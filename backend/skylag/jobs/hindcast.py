@@ -20,7 +20,8 @@ from skylag.errors import Missing, NotEnough, Refused, SkylagError
 from skylag.impact import uses
 from skylag.impact.states import nearest_cells
 from skylag.ionosphere import outlook_score
-from skylag.ionosphere.outlook import ROTATION, Drivers, History, Limits, climate_of, no_drivers, replay, tomorrow
+from skylag.ionosphere.climatology import climate_of
+from skylag.ionosphere.outlook import ROTATION, Drivers, History, Limits, no_drivers, replay, tomorrow
 from skylag.ionosphere.outlook_score import Tally
 from skylag.tables import HOLDS, STRAINED, UNSEEN, Bools, Bytes, Fields, Floats, Indices, Region, Words
 
