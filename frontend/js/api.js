@@ -545,6 +545,19 @@ export async function approaches(region, date, service, how) {
   return { levels: raw.levels.map((one) => one.name), share: raw.sites[0]?.share ?? {}, outages: raw.outages.map(spanOf), assumptions: raw.assumptions };
 }
 
+/**
+ * @typedef {{site: string, time: number, minutes: number, giveOrTake: number, speed: number, heading: number}} Coming
+ * a front on its way to a site: when (ms UTC), in how many minutes, two sigmas of that in minutes
+ */
+/** The front that reaches each site next after a time. @param {string} region @param {string} date @param {number} time @param {How} [how] @returns {Promise<{hours: number, coming: Coming[]}>} */
+export async function coming(region, date, time, how) {
+  const raw = await ask(`${dayAddress(region, date)}/coming?time=${instant(time)}`, how);
+  return {
+    hours: raw.hours_ahead,
+    coming: raw.coming.map((one) => ({ site: one.site, time: milliseconds(one.expected_utc), minutes: one.minutes, giveOrTake: one.give_or_take_min, speed: number(one.speed_m_s), heading: number(one.heading_deg) })),
+  };
+}
+
 /** Ground-based augmentation of an aerodrome: minutes of each kind, and the front that comes next. @param {string} region @param {string} date @param {string} site @param {number} time @param {How} [how] */
 export async function ground(region, date, site, time, how) {
   const raw = await ask(siteFile(region, date, "ground", { site, time: new Date(time).toISOString() }), how);

@@ -111,7 +111,10 @@ export const WORDS = {
   /** @param {number} minutes */
   lookingBack: (minutes) => `You look at ${minutes < 120 ? `${minutes} minutes` : `${Math.round(minutes / 60)} hours`} before that.`,
   noFlagsNow: "No flag is raised at this time.",
-  noArrivals: "No front is known to be on its way to a named site within three hours.",
+  noFront: "No front has been seen on this day until now.",
+  loadingArrivals: "Asking when fronts arrive …",
+  /** @param {number} hours */
+  noArrivals: (hours) => `No front is known to be on its way to a named site within ${hours} hours.`,
   /** @param {number} minutes @param {number} spread  two sigmas */
   inMinutes: (minutes, spread) => `in ${minutes} minutes, give or take ${spread}`,
   /** @param {string} from @param {string} speed */

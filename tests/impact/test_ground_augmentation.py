@@ -122,32 +122,6 @@ def a_front(confirmed: bool = True) -> Flag:
     return Flag(start, track[-1][0], -41.0, 146.0, "front", 60.0, 3.0, 200.0, 0.0, "broken", "seen", confirmed, track)
 
 
-def test_when_the_next_front_comes() -> None:
-    now = DAY + np.timedelta64(365, "m")  # 60 km later: 240 km to go, 20 minutes
-    found = ground.next_front(SITE, [a_front(False), a_front()], now)
-    assert found is not None
-    assert found.distance_km == pytest.approx(240.0, abs=1.0)
-    assert abs(found.expected - (DAY + np.timedelta64(385, "m"))) < np.timedelta64(10, "s")
-    assert found.sigma_s == pytest.approx(0.3 * 1200, rel=0.01)
-    assert "in 20 ± 6 minutes" in found.words
-    # A front that tells the sigma of its own speed: 20 minutes times 25 over 200, and 6 km of its place at 200 m/s.
-    known = ground.next_front(SITE, [replace(a_front(), speed_sigma_m_s=25.0)], now)
-    assert known is not None
-    assert known.sigma_s == pytest.approx(np.hypot(1200 * 25 / 200, 6000 / 200), rel=0.01)
-    sharp = ground.next_front(SITE, [replace(a_front(), speed_sigma_m_s=0.5)], now)
-    assert sharp is not None
-    assert sharp.sigma_s >= 30.0  # a speed known well does not place the line to the second
-
-
-@pytest.mark.parametrize("minute", [300, 400, 600])
-def test_no_front_before_it_is_seen_or_after_it_passed(minute: int) -> None:
-    assert ground.next_front(SITE, [a_front()], DAY + np.timedelta64(minute, "m")) is None
-
-
-def test_an_unconfirmed_front_is_not_announced() -> None:
-    assert ground.next_front(SITE, [a_front(False)], DAY + np.timedelta64(365, "m")) is None
-
-
 def test_a_front_over_the_site_counts_with_its_own_slope() -> None:
     fields = some_fields(5.0, 0.5)
     quiet = ground.station_day(SITE, fields)

@@ -79,19 +79,6 @@ def test_events_of_a_kind(storm: Products) -> None:
     assert subjects(Rule("r", "event"), until(storm, "12:30")) == [], "over for long"
 
 
-def test_a_front_reaches_a_site_when_its_speed_says(storm: Products) -> None:
-    """Worked by hand: 1 degree of latitude is 111.2 km; at 61.8 m/s that takes 1799 s."""
-    front = replace(storm.flags[0], track=storm.flags[0].track[:5])
-    time, lat, lon = front.track[-1]
-    north = alerts.arrival(front, Site("there", lat + 1.0, lon, "site"))
-    assert north is not None and abs((north - time) / np.timedelta64(1, "s") - 111_194.9 / 61.8) < 1.0
-    assert alerts.arrival(front, Site("behind", lat - 1.0, lon, "site")) is None
-    assert alerts.arrival(front, Site("aside", lat + 1.0, lon + 5.0, "site")) is None
-    east = replace(front, heading_deg=90.0, track=((time, 0.0, 179.5),))
-    assert alerts.arrival(east, Site("over the date line", 0.0, -179.5, "site")) is not None
-    assert alerts.arrival(replace(front, speed_m_s=float("nan")), Site("there", lat + 1, lon, "site")) is None
-
-
 def test_an_arrival_within_the_time_asked_for(storm: Products) -> None:
     front = replace(storm.flags[0], track=storm.flags[0].track[:5], end=storm.flags[0].track[4][0])
     at = replace(until(storm, "05:15"), flags=(front,))  # at -41.5 then; Gannet Field at -41.1, Northport at -37.8
@@ -104,6 +91,26 @@ def test_an_arrival_within_the_time_asked_for(storm: Products) -> None:
     sure = replace(front, speed_sigma_m_s=0.1 * front.speed_m_s)
     (one,) = alerts.occasions([Rule("r", "arrival", site="Northport", within_min=120)], replace(at, flags=(sure,)))
     assert "give or take 22 min" in one.sentence and abs(one.facts["sigma_s"] - 673) < 15
+
+
+def test_arrivals_are_told_for_the_sites_in_force(storm: Products) -> None:
+    """A site that was added since is told, one that was taken away is not."""
+    front = replace(storm.flags[0], track=storm.flags[0].track[:5], end=storm.flags[0].track[4][0])
+    at, rule = replace(until(storm, "05:15"), flags=(front,)), Rule("r", "arrival", within_min=120)
+    sites = (*(site for site in REGION.sites if site.name != "Northport"), Site("New quay", -40.5, 146.0, "port"))
+    told = {one.facts["site"] for one in alerts.occasions([rule], at, sites)}
+    assert told == {one.facts["site"] for one in alerts.occasions([rule], at)} - {"Northport"} | {"New quay"}
+
+
+@pytest.mark.parametrize("within", ["0", "-5", "181", "nan", "true", '"60"'])
+def test_no_arrival_is_told_farther_ahead_than_any(tmp_path: Path, within: str) -> None:
+    rules = tmp_path / "rules.toml"
+    text = '[[alert]]\nwhen = "arrival"\nto = [{file = "told"}]\nwithin_min = '
+    rules.write_text(f"{text}{within}\n", encoding="utf-8")
+    with pytest.raises(Refused, match="up to 180"):
+        alerts.read_rules(rules)
+    rules.write_text(f"{text}180\n", encoding="utf-8")
+    assert alerts.read_rules(rules)[0].within_min == 180
 
 
 # ---------------------------------------------------------------------------------------------- once

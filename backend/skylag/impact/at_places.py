@@ -11,6 +11,7 @@ from collections.abc import Sequence
 import numpy as np
 import numpy.typing as npt
 
+from skylag.impact.coming import from_line
 from skylag.impact.states import JudgeChoices, field_states, honest_state, nearest_cells, state_of_slope
 from skylag.impact.survey import touches
 from skylag.ionosphere.covariance import plane_km
@@ -163,10 +164,8 @@ def over(flag: Flag, site: Site, times: Times) -> Bools:
 def ahead_of(flag: Flag, lat: float, lon: float, time: np.datetime64) -> float:
     """How far [km] a place lies ahead of a front's line at a time, by the flag's track, speed and heading."""
     moment, line_lat, line_lon = min(flag.track, key=lambda point: abs(point[0] - time))
-    x, y = plane_km(np.array([lat]), np.array([lon]), (line_lat, line_lon))
-    heading_rad = np.radians(flag.heading_deg)
     late_s = float((time - moment) / np.timedelta64(1, "s"))
-    return float(x[0] * np.sin(heading_rad) + y[0] * np.cos(heading_rad)) - flag.speed_m_s * late_s / 1000.0
+    return from_line(flag, (line_lat, line_lon), lat, lon)[0] - flag.speed_m_s * late_s / 1000.0
 
 
 def _reasons(

@@ -1,19 +1,18 @@
 """Ground-based augmentation of an aerodrome: the slope against what such a station may assume.
 
 Three questions per minute of the maps: is the slope within the nominal spread that the station announces; could it be
-announced at all; is it within the published threat space.  And: which front comes next, and when.  A planning aid, not
-for navigation: an approved station has its own monitors and its own threat space, which decide.
+announced at all; is it within the published threat space.  Which front comes next is told by `coming`.  A planning aid,
+not for navigation: an approved station has its own monitors and its own threat space, which decide.
 """
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
 
 from skylag.errors import Refused
 from skylag.impact import at_places
-from skylag.impact.at_places import ahead_of
 from skylag.impact.satellite_augmentation import CAUTION, spans
 from skylag.impact.states import nearest_cells, plus_minus
 from skylag.ionosphere.geometry import mapping
@@ -36,9 +35,6 @@ from skylag.tables import (
 
 ANNOUNCED_MOST = 25.5  # mm/km: 255 times 0.1; ICAO Annex 10, Appendix B to chapter 3
 QUANTILE = 3.29  # 99.9 %: a slope beyond so many spreads is not nominal (our choice of share)
-# Speeds of fronts from few stations carry about 30 % (Radio Science 48, 2013): for flags that tell no sigma of theirs.
-SPEED_DOUBT = 0.3
-PLACE_DOUBT_KM = 6.0  # of a front's line: five walls through invented three-dimensional content lay off by up to 7 km
 _ONE_SIDED_95 = 1.645  # of a normal error: what holds is said with this confidence, as for the states of a map
 
 
@@ -104,17 +100,6 @@ class Exceeded:
     end: np.datetime64
     what: str
     why: str
-
-
-@dataclass(frozen=True)
-class NextFront:
-    """The front that reaches a site next after a time: when, its spread [s], its distance [km] then; in words."""
-
-    expected: np.datetime64
-    sigma_s: float
-    distance_km: float
-    slope_mm_per_km: float
-    words: str
 
 
 @dataclass(frozen=True)
@@ -198,37 +183,6 @@ def station_day(
         tuple(_exceeded(site, fields.times, slope, sigma, marks, choices, step_s, judged, told)), minutes,
         _assumptions(choices, factor, shell_height_m),
     )  # fmt: skip
-
-
-def next_front(site: Site, flags: Sequence[Flag], now: np.datetime64, horizon_s: float = 10_800.0) -> NextFront | None:
-    """The nearest confirmed front seen before `now` that still comes toward a site; None where there is none."""
-    found: list[NextFront] = []
-    for flag in flags:
-        if flag.kind != "front" or not flag.confirmed or not flag.track or not flag.start <= now:
-            continue
-        if not flag.speed_m_s >= 5.0 or now > flag.end + np.timedelta64(1, "h"):
-            continue
-        known = tuple(point for point in flag.track if point[0] <= now) or flag.track[:1]
-        away = ahead_of(replace(flag, track=known), site.lat, site.lon, now)
-        wait_s = away / flag.speed_m_s * 1000.0
-        if not 0 < wait_s <= horizon_s:
-            continue
-        sigma_s = arrival_sigma_s(flag, wait_s)
-        expected = now + np.timedelta64(round(wait_s * 1e9), "ns")
-        found.append(
-            NextFront(
-                expected, sigma_s, away, flag.slope_mm_per_km,
-                f"front of {flag.slope_mm_per_km:.0f} mm/km, {away:.0f} km away, at {flag.speed_m_s:.0f} m/s toward "
-                f"{flag.heading_deg:.0f} degrees: in {wait_s / 60:.0f} ± {sigma_s / 60:.0f} minutes",
-            )
-        )  # fmt: skip
-    return min(found, key=lambda one: one.expected, default=None)
-
-
-def arrival_sigma_s(flag: Flag, wait_s: float) -> float:
-    """How uncertain an arrival is that is so far ahead [s], one sigma: by the front's own speed and by its place."""
-    share = flag.speed_sigma_m_s / flag.speed_m_s if np.isfinite(flag.speed_sigma_m_s) else SPEED_DOUBT
-    return float(np.hypot(share * wait_s, PLACE_DOUBT_KM * 1000.0 / flag.speed_m_s))
 
 
 def _exceeded(

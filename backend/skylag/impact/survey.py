@@ -17,6 +17,7 @@ from scipy.special import ndtr
 from skylag.constants import L1_HZ, L1_M_PER_TECU, SPEED_OF_LIGHT_M_S
 from skylag.errors import Refused
 from skylag.impact import sky as satellites
+from skylag.impact.coming import from_line
 from skylag.impact.satellite_augmentation import spans
 from skylag.impact.sky import Sky
 from skylag.impact.states import content_known, nearest_cells, plus_minus, state_of_slope
@@ -630,12 +631,9 @@ def touches(flag: Flag, lat: float, lon: float, time: np.datetime64, reach: np.t
     """Whether a flag was active around a time within 150 km of a place, by its track where it has one."""
     if not flag.start - reach <= time <= flag.end + reach:
         return False
-    where = (flag.lat, flag.lon)
     if flag.kind == "front" and flag.track:
-        where = min(flag.track, key=lambda point: abs(point[0] - time))[1:]
+        place = min(flag.track, key=lambda point: abs(point[0] - time))[1:]
         # Of a wall only the way across counts: it reaches far to both sides.
-        x, y = plane_km(np.array([lat]), np.array([lon]), where)
-        heading_rad = np.radians(flag.heading_deg)
-        return bool(abs(x[0] * np.sin(heading_rad) + y[0] * np.cos(heading_rad)) <= 100.0)
-    x, y = plane_km(np.array([lat]), np.array([lon]), where)
+        return abs(from_line(flag, place, lat, lon)[0]) <= 100.0
+    x, y = plane_km(np.array([lat]), np.array([lon]), (flag.lat, flag.lon))
     return bool(np.hypot(x[0], y[0]) <= INDEX_REACH_KM)

@@ -28,6 +28,7 @@ _KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
 _LEAST_MISFIT = 0.05  # the scatter allowed to a run's place is for thick walls; agreement makes sigmas smaller, not nil
 _TWO_WAYS_KM_S = 0.1  # pierce points overtake walls slower than this and see them from the other side
 _SLOW_KM_S, _SLOW_BIAS_KM_S = 0.1, 0.005  # speed error of a wall near rest, less and less up to 100 m/s (simulated)
+SLOWEST_M_S = 5.0  # nothing is foretold of a wall near rest: the bias above is as large as its speed
 _PIERCE_KM_S = 0.06  # usual speed of a pierce point: even a wall at rest is swept over by them
 
 
@@ -761,7 +762,7 @@ def expected_at(front: Front, lat: float, lon: float) -> tuple[np.datetime64, fl
 
     The spread holds the sigmas of line and speed and the scatter of the lines of sight about the line.
     """
-    if front.speed_m_s < 5.0:
+    if front.speed_m_s < SLOWEST_M_S:
         return np.datetime64("NaT"), float("nan")
     speed = front.speed_m_s / 1000.0
     moment, right = front.epoch, 0.0

@@ -19,16 +19,14 @@ import numpy as np
 
 from skylag.archive import Archive
 from skylag.archive.notices import Due
-from skylag.constants import SHELL_EARTH_RADIUS_M
 from skylag.errors import FormatError, Refused
-from skylag.impact.ground_augmentation import arrival_sigma_s
-from skylag.tables import FLAG_KINDS, STATE_NAMES, UNSEEN, Flag, Products, Site
+from skylag.impact.coming import HORIZON, coming
+from skylag.tables import FLAG_KINDS, STATE_NAMES, UNSEEN, Products, Site
 from skylag.timescales import gps_to_utc
 
 OCCASIONS = ("state", "event", "arrival", "silence")
 CAUTION = "Planning aid, not for navigation."
 _LATELY = np.timedelta64(30, "m")  # what ended longer ago than this before the newest map is no news
-_HALF_WIDTH_KM = 300.0  # a front is taken to reach so far to each side of where it was tracked
 _GIVE_UP_AFTER = 40  # tries, the last ones ten minutes apart: six hours
 
 
@@ -39,7 +37,7 @@ class Rule:
     when        of OCCASIONS: a site's state, an event of a kind anywhere, a front that will reach a site, a silent
                 receiver
     site        its name; any where empty.  state: from this one on, or `unseen` alone; kind: of FLAG_KINDS, or any
-    within_min  of an arrival; targets: JSON texts of where to tell it
+    within_min  of an arrival, at most as far ahead as any is told; targets: JSON texts of where to tell it
     """
 
     name: str
@@ -90,6 +88,13 @@ def _rule(path: Path, entry: Mapping[str, Any]) -> Rule:
     check("when", entry.get("when"), OCCASIONS)
     check("state", entry.get("state", "broken"), ("unseen", "strained", "broken"))
     check("kind", entry.get("kind", ""), ("", *FLAG_KINDS))
+    farthest_min = HORIZON / np.timedelta64(1, "m")
+    within_min = entry.get("within_min", Rule.within_min)
+    if isinstance(within_min, bool) or not isinstance(within_min, int | float) or not 0 < within_min <= farthest_min:
+        raise Refused(
+            f"{path}: within_min = {within_min!r} is no number of minutes up to {farthest_min:g}: farther ahead no "
+            "arrival is told", name="within_min", value=within_min, allowed=(0, farthest_min),
+        )  # fmt: skip
     targets = []
     for target in entry.get("to", []):
         way, value = next(iter(target.items())) if isinstance(target, dict) and len(target) == 1 else ("", None)
@@ -114,8 +119,11 @@ def _rule(path: Path, entry: Mapping[str, Any]) -> Rule:
 # ---------------------------------------------------------------------------------------------- occasions
 
 
-def occasions(rules: Sequence[Rule], products: Products) -> list[Occasion]:
-    """What the newest maps have for the rules: only what goes on at the newest map, or ended shortly before.  Pure."""
+def occasions(rules: Sequence[Rule], products: Products, sites: Sequence[Site] | None = None) -> list[Occasion]:
+    """What the newest maps have for the rules: only what goes on at the newest map, or ended shortly before.  Pure.
+
+    sites  where fronts may arrive: those in force, the products' own when None
+    """
     found: list[Occasion] = []
     if not len(products.fields.times):
         return found
@@ -125,7 +133,7 @@ def occasions(rules: Sequence[Rule], products: Products) -> list[Occasion]:
         elif rule.when == "event":
             found += _events(rule, products)
         elif rule.when == "arrival":
-            found += _arrivals(rule, products)
+            found += _arrivals(rule, products, products.region.sites if sites is None else sites)
     return found
 
 
@@ -175,48 +183,21 @@ def _events(rule: Rule, products: Products) -> list[Occasion]:
     return found
 
 
-def _arrivals(rule: Rule, products: Products) -> list[Occasion]:
+def _arrivals(rule: Rule, products: Products, sites: Sequence[Site]) -> list[Occasion]:
     newest, found = products.fields.times[-1], []
-    for flag in products.flags:
-        if flag.kind != "front" or not flag.confirmed or flag.end < newest - _LATELY:
+    latest = newest + np.timedelta64(round(rule.within_min * 60), "s")
+    for one in coming(products.flags, sites, newest):
+        site, flag = one.site.name, one.flag
+        if rule.site not in ("", site) or one.expected > latest:
             continue
-        for site in products.region.sites:
-            expected = arrival(flag, site) if rule.site in ("", site.name) else None
-            if expected is None or not newest <= expected <= newest + np.timedelta64(round(rule.within_min * 60), "s"):
-                continue
-            sigma_s = arrival_sigma_s(flag, float((expected - flag.track[-1][0]) / np.timedelta64(1, "s")))
-            sentence = (
-                f"A front that moves toward {flag.heading_deg:.0f} deg at {flag.speed_m_s:.0f} m/s is expected at "
-                f"{site.name} about {_utc(expected)}, give or take {max(1, round(2 * sigma_s / 60))} min, "
-                f"if it keeps its way. {CAUTION}"
-            )
-            facts = {"site": site.name, "expected_utc": _utc(expected), "sigma_s": round(sigma_s),
-                     "simulated": products.origin.simulated}  # fmt: skip
-            found.append(Occasion(f"{rule.name}: front to {site.name}", sentence, newest, expected, facts, rule))
+        sentence = (
+            f"A front that moves toward {flag.heading_deg:.0f} deg at {flag.speed_m_s:.0f} m/s is expected at {site} "
+            f"about {_utc(one.expected)}, give or take {one.give_or_take_min} min, if it keeps its way. {CAUTION}"
+        )
+        facts = {"site": site, "expected_utc": _utc(one.expected), "sigma_s": round(one.sigma_s),
+                 "simulated": products.origin.simulated}  # fmt: skip
+        found.append(Occasion(f"{rule.name}: front to {site}", sentence, newest, one.expected, facts, rule))
     return found
-
-
-def arrival(flag: Flag, site: Site) -> np.datetime64 | None:
-    """When a front reaches a site if it keeps its speed and heading from its last known place; GPS time.
-
-    None where it has no speed, moves away, or passes by at more than 300 km.
-    """
-    if not (flag.speed_m_s > 1.0 and np.isfinite(flag.heading_deg) and flag.track):
-        return None
-    time, lat, lon = flag.track[-1]
-    per_deg = np.radians(1.0) * SHELL_EARTH_RADIUS_M / 1000.0
-    east = (site.lon - lon + 180.0) % 360.0 - 180.0
-    east_km = east * per_deg * np.cos(np.radians(0.5 * (site.lat + lat)))
-    north_km = (site.lat - lat) * per_deg
-    heading_rad = np.radians(flag.heading_deg)
-    ahead_km = east_km * np.sin(heading_rad) + north_km * np.cos(heading_rad)
-    aside_km = abs(east_km * np.cos(heading_rad) - north_km * np.sin(heading_rad))
-    if ahead_km <= 0 or aside_km > _HALF_WIDTH_KM:
-        return None
-    expected: np.datetime64 = time.astype("datetime64[ns]") + np.timedelta64(
-        round(ahead_km * 1e12 / flag.speed_m_s), "ns"
-    )
-    return expected
 
 
 def _utc(time: np.datetime64) -> str:

@@ -453,5 +453,6 @@ class Watch:
         if asked.final:
             hindcast.day_kept(self._archive, products.region.name, products.day, self._log)
         else:
-            alerts.keep(self._archive, alerts.occasions(self._rules, products), self._clock())
+            sites = self._archive.day(products.region.name, products.day, version).region.sites  # those in force
+            alerts.keep(self._archive, alerts.occasions(self._rules, products, sites), self._clock())
         return 1

@@ -11,7 +11,8 @@ from fastapi.responses import Response
 
 from skylag.archive import Archive
 from skylag.formats import calendar, sheet
-from skylag.impact.ground_augmentation import StationChoices, next_front
+from skylag.impact.coming import coming
+from skylag.impact.ground_augmentation import StationChoices
 from skylag.impact.satellite_augmentation import Availability
 from skylag.impact.survey import Advice
 from skylag.jobs.advising import AskedJob, AskedService, DayAdvice, Desk
@@ -28,6 +29,17 @@ def flags(request: Request, region: str, day: str, version: int | None = None) -
     """Slopes, fronts, irregular patches and faults, with the tracks of fronts."""
     archive: Archive = request.app.state.archive
     return payloads.reply(payloads.flags(archive.flags(region, asking.day(day), version)))
+
+
+@router.get("/api/days/{region}/{day}/coming", summary="Fronts on their way to the sites")
+def fronts_coming(request: Request, region: str, day: str, time: str, version: int | None = None) -> Response:
+    """The front that reaches each site next after a UTC instant, soonest first, if it keeps speed and heading."""
+    archive: Archive = request.app.state.archive
+    record = archive.day(region, asking.day(day), version)
+    flags = archive.flags(region, record.head.day, record.head.version)
+    found = coming(flags, record.region.sites, asking.instant(time, "time"))
+    return payloads.reply({**sentences.about(record.origin.simulated, record.head.provisional),
+                           **payloads.coming_fronts(found)})  # fmt: skip
 
 
 @router.get("/api/days/{region}/{day}/flags.csv", summary="Flags of a day as CSV")
@@ -158,8 +170,8 @@ def ground(
     kept = _day(request, region, day, version)
     place = kept.site(site)
     found = kept.station(place, station)
-    coming = next_front(place, kept.flags, asking.instant(time, "time")) if time else None
-    return payloads.reply(payloads.station(found, coming))
+    fronts = coming(kept.flags, (place,), asking.instant(time, "time")) if time else ()
+    return payloads.reply(payloads.station(found, fronts))
 
 
 @router.get("/api/days/{region}/{day}/broadcast-model", summary="What the broadcast model leaves at a site")

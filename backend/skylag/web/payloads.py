@@ -25,7 +25,8 @@ from skylag.archive.outlooks import Kept
 from skylag.archive.sites import SiteChanges
 from skylag.constants import L1_M_PER_TECU
 from skylag.formats import events as event_files
-from skylag.impact.ground_augmentation import NextFront, StationDay
+from skylag.impact.coming import HORIZON, Coming
+from skylag.impact.ground_augmentation import StationDay
 from skylag.impact.satellite_augmentation import Availability
 from skylag.impact.single_frequency import LeftOver
 from skylag.impact.states import carried
@@ -619,7 +620,24 @@ def approaches(found: Availability) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def station(found: StationDay, coming: NextFront | None) -> dict[str, Any]:
+def _coming(one: Coming) -> dict[str, Any]:
+    return {
+        "expected_utc": utc(one.expected), "minutes": one.minutes, "give_or_take_min": one.give_or_take_min,
+        "sigma_s": round(one.sigma_s), "distance_km": _number(one.away_km), "aside_km": _number(one.aside_km),
+        "slope_mm_per_km": _number(one.flag.slope_mm_per_km), "speed_m_s": _number(one.flag.speed_m_s),
+        "heading_deg": _number(one.flag.heading_deg), "words": one.words,
+    }  # fmt: skip
+
+
+def coming_fronts(found: Sequence[Coming]) -> dict[str, Any]:
+    """Fronts on their way, one row per site that one reaches within the hours named; two sigmas are given or taken."""
+    return {
+        "hours_ahead": float(HORIZON / np.timedelta64(1, "h")),
+        "coming": [{"site": one.site.name, **_coming(one)} for one in found],
+    }
+
+
+def station(found: StationDay, coming: Sequence[Coming]) -> dict[str, Any]:
     """An aerodrome's ground-based augmentation through a day, and the front that comes next, if any."""
     return {
         "site": found.site.name,
@@ -630,10 +648,7 @@ def station(found: StationDay, coming: NextFront | None) -> dict[str, Any]:
         "state": [STATE_NAMES[int(code)] for code in found.state],
         "minutes": dict(found.minutes),
         "exceeded": [{**_span(one.start, one.end), "what": one.what, "why": one.why} for one in found.exceeded],
-        "next_front": None if coming is None else {
-            "expected_utc": utc(coming.expected), "sigma_s": round(coming.sigma_s), "words": coming.words,
-            "distance_km": _number(coming.distance_km), "slope_mm_per_km": _number(coming.slope_mm_per_km),
-        },
+        "next_front": _coming(coming[0]) if coming else None,
         "assumptions": list(found.assumptions),
         "caution": found.caution,
     }  # fmt: skip

@@ -17,6 +17,16 @@ export function offset(lat, lon, eastKm, northKm) {
   return [lat + northKm / KM_PER_DEGREE, lon + eastKm / (KM_PER_DEGREE * Math.cos((lat * Math.PI) / 180))];
 }
 
+/**
+ * Kilometres east and north from one place to another, on a plane: good to a few per cent over a region.
+ * @param {number} lat @param {number} lon @param {number} toLat @param {number} toLon
+ * @returns {[number, number]}
+ */
+export function away(lat, lon, toLat, toLon) {
+  const turn = ((((toLon - lon + 180) % 360) + 360) % 360) - 180;
+  return [turn * KM_PER_DEGREE * Math.cos((((lat + toLat) / 2) * Math.PI) / 180), (toLat - lat) * KM_PER_DEGREE];
+}
+
 /** @param {number} lat @param {number} lon @param {Frame} frame */
 export function within(lat, lon, frame) {
   return lat >= frame.south && lat <= frame.north && lon >= frame.west && lon <= frame.east;

@@ -3,7 +3,6 @@
  */
 
 import * as api from "../api.js";
-import { arrivals } from "../figures/arrivals.js";
 import { agoText, compass, dateText, fixed, flagSentence, KIND_WORDS, timeText, WORDS } from "../words.js";
 import { make, stateWord, trouble, viewOf } from "./parts.js";
 
@@ -21,6 +20,7 @@ export class PresentPanel {
   #shown = "";
   /** @type {Map<number, import("../api.js").Notice>|null} */ #notices = null;
   #asked = false;
+  /** @type {AbortController|null} */ #coming = null;
   #live;
 
   /**
@@ -47,26 +47,48 @@ export class PresentPanel {
     if (key === this.#shown) return;
     this.#shown = key;
     const how = { clock: view.clock, zone: day.region.timezone };
-    const { fails, flags, next, note } = this.#elements;
+    const { fails, flags } = this.#elements;
     const bad = day.sites
       .map((site, number) => ({ site, state: siteStates?.stateOf(number, time) ?? "unseen" }))
       .filter(({ state }) => state !== "holds");
     fill(fails, bad.map(({ site, state }) => make("li", {}, stateWord(state), " ", make("button", { type: "button", class: "linklike", text: site.name, click: () => this.#state.change({ place: [site.lat, site.lon] }) }))), day.sites.length ? (this.#stale() ? WORDS.allHeld : WORDS.allHold) : WORDS.noSites);
     const active = day.flags.filter((flag) => flag.start <= time && time <= flag.end);
     fill(flags, active.map((flag) => make("li", {}, make("button", { type: "button", class: "linklike", text: KIND_WORDS[flag.kind]?.name ?? flag.kind, click: () => this.#state.change({ place: viewOf(flag, day).place }) }), ` ${flagSentence(flag).split(", ").slice(1).join(", ") || flag.evidence.split(/[:;]/)[0]}`)), WORDS.noFlagsNow);
-    const coming = arrivals(day.flags, day.sites, time);
-    fill(
-      next,
-      coming.map((one) => make("li", {}, make("strong", { text: timeText(one.time, how) }), ` ${one.site}, ${WORDS.inMinutes(Math.round((one.time - time) / 60000), Math.max(1, Math.round((2 * one.spread) / 60000)))}`)),
-      WORDS.noArrivals,
-    );
-    const fronts = [...new Set(coming.map((one) => WORDS.frontFrom(compass(one.flag.heading + 180), fixed(one.flag.speed, 0))))];
-    note.hidden = !coming.length;
-    note.textContent = WORDS.ifItKeeps(fronts.join(", "));
+    this.#foretell();
+  }
+
+  /** What comes is reckoned by the service alone, as for its alerts; nothing is asked before a front was seen. */
+  async #foretell() {
+    const { day, time, view } = this.#scene;
+    const { next, note } = this.#elements;
+    this.#coming?.abort();
+    note.hidden = true;
+    if (!day.flags.some((flag) => flag.kind === "front" && flag.start <= time)) {
+      fill(next, [], WORDS.noFront);
+      return;
+    }
+    const asked = new AbortController();
+    this.#coming = asked;
+    fill(next, [], WORDS.loadingArrivals);
+    try {
+      const { coming, hours } = await api.coming(day.region.key, day.day, time, { signal: asked.signal });
+      const how = { clock: view.clock, zone: day.region.timezone };
+      fill(
+        next,
+        coming.map((one) => make("li", {}, make("strong", { text: timeText(one.time, how) }), ` ${one.site}, ${WORDS.inMinutes(one.minutes, one.giveOrTake)}`)),
+        WORDS.noArrivals(hours),
+      );
+      const fronts = [...new Set(coming.map((one) => WORDS.frontFrom(compass(one.heading + 180), fixed(one.speed, 0))))];
+      note.hidden = !coming.length;
+      note.textContent = WORDS.ifItKeeps(fronts.join(", "));
+    } catch (error) {
+      if (error.name !== "AbortError" && this.#coming === asked) next.replaceChildren(make("li", {}, trouble(error, () => this.#foretell())));
+    }
   }
 
   close() {
     clearInterval(this.#timer);
+    this.#coming?.abort();
     this.#live.removeEventListener("notice", this.#heard);
   }
 

@@ -3,8 +3,7 @@
  */
 
 import { asSentence, bothClocks, compass, evidenceText, flagSentence, KIND_WORDS, latText, LAYER_WORDS, limitsSentence, lonText, PAGE_WORDS, placeText, READING_WORDS, spanText, STATE_WORDS, withSigma, WORDS } from "../words.js";
-import { away } from "../figures/arrivals.js";
-import { placeAt } from "../figures/signs.js";
+import { away, placeAt } from "../figures/signs.js";
 import { make, stateWord, trouble, viewOf } from "./parts.js";
 
 const RANK = { holds: 0, unseen: 1, strained: 2, broken: 3 };
