@@ -14,7 +14,7 @@ from typing import Any
 
 from skylag.errors import FormatError, Refused
 from skylag.formats.joining import merge, thin, together
-from skylag.formats.wrappers import BYTE_ORDER_MARK, is_hatanaka, members, unwrap
+from skylag.formats.wrappers import BYTE_ORDER_MARK, LARGEST_TEXT, decode, is_hatanaka, members, unpack
 from skylag.tables import Ephemerides, Problem, Reading
 
 __all__ = ["fingerprint", "kind_of", "mark_of", "merge", "read", "read_bytes", "thin"]
@@ -61,18 +61,35 @@ def read_bytes(
     *,
     wanted: Mapping[str, Collection[str]] | None = None,
     thin_to_s: float | None = None,
+    only: Collection[str] | None = None,
+    largest: int = LARGEST_TEXT,
 ) -> Reading:
-    """The same for bytes that are already here, as of a file sent in; `name` stands in messages and problems."""
+    """The same for bytes that are already here, as of a file sent in; `name` stands in messages and problems.
+
+    only     kinds that are wanted: anything else is refused before its parser, or its decoder, sees it
+    largest  so many bytes of text are read, packed or not
+    """
     short = Path(name).name
     if not packed[:1000].strip() and not packed.strip():
         raise FormatError(f"{short}: the file is empty; fetch it again", path=name, line=0)
-    pieces = members(packed, name)
+    pieces = members(packed, name, largest)
     if len(pieces) > 1:
+        if only is not None:
+            raise FormatError(f"{short}: a zip of {len(pieces)} files; give the one that is meant", path=name, line=0)
         del packed
         return _read_members(pieces, name, wanted, thin_to_s)
-    data, wrapping = unwrap(packed, name)
+    found = unpack(packed, name, largest)
     del packed, pieces
-    kind = kind_of(data)
+    kind = kind_of(found.data)
+    if only is not None and kind not in ("unknown", *only):
+        raise FormatError(f"{short}: holds {kind}, and {' or '.join(only)} is needed", path=name, line=1)
+    if len(found.data) > largest:
+        raise FormatError(f"{short}: more than {largest} bytes of text", path=name, line=0)
+    if is_hatanaka(found.data):
+        found = decode(found, name)
+        kind = kind_of(found.data)
+    data, wrapping = found
+    del found
     lines = 0 if kind == "observations" else data.count(b"\n")
     if lines > max(_FEW_LINES, len(data) // _SHORTEST_MEAN):
         raise FormatError(

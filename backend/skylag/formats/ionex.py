@@ -184,8 +184,7 @@ def _maps(
             continue
         kind, begun = label.split()[2], number
         epoch: np.datetime64 | None = None
-        values = np.full(shape, np.nan)
-        rows = 0
+        rows: dict[int, Floats] = {}  # a map takes room only as it is read: its size is a claim of the header
         try:
             number += 1
             while lines[number][60:80].strip() != f"END OF {kind} MAP":
@@ -199,15 +198,14 @@ def _maps(
                     if not 0 <= row < shape[0]:
                         raise ValueError("a latitude that is not in the header")
                     count = -(-shape[1] // _PER_LINE)
-                    values[row] = _row(lines[number + 1 : number + 1 + count], shape[1]) * 10.0**exponent
+                    rows[row] = _row(lines[number + 1 : number + 1 + count], shape[1]) * 10.0**exponent
                     number += count
-                    rows += 1
                 elif label.startswith("START OF"):
                     raise ValueError("no end of the map before the next one")
                 number += 1
-            if epoch is None or rows != shape[0]:
-                raise ValueError("epoch missing" if epoch is None else f"{rows} of {shape[0]} latitudes")
-            (content if kind == "TEC" else spread)[epoch] = values
+            if epoch is None or len(rows) != shape[0]:
+                raise ValueError("epoch missing" if epoch is None else f"{len(rows)} of {shape[0]} latitudes")
+            (content if kind == "TEC" else spread)[epoch] = np.stack([rows[row] for row in range(shape[0])])
             number += 1
         except (ValueError, IndexError) as what:
             said = "the file is cut within" if isinstance(what, IndexError) else str(what)

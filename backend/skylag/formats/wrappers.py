@@ -39,24 +39,35 @@ class Unwrapped(NamedTuple):
     problems: list[Problem]
 
 
-def unwrap(data: bytes, name: str) -> Unwrapped:
+def unwrap(data: bytes, name: str, largest: int = LARGEST_TEXT) -> Unwrapped:
     """The text within all wrappers.
 
-    Raises FormatError for a wrapper that holds nothing, more than can be real, or more than one file (`members` first).
+    Raises FormatError for a wrapper that holds nothing, more than can be real or than `largest` bytes, or more than one
+    file (`members` first).
     """
+    found = unpack(data, name, largest)
+    return decode(found, name) if is_hatanaka(found.data) else found
+
+
+def decode(found: Unwrapped, name: str) -> Unwrapped:
+    """Plain RINEX of unpacked Compact RINEX."""
+    problems = list(found.problems)
+    return Unwrapped(_hatanaka(found.data, name, problems), problems)
+
+
+def unpack(data: bytes, name: str, largest: int = LARGEST_TEXT) -> Unwrapped:
+    """The same, but Compact RINEX is left as it is: what a file is can be seen before its decoder runs."""
     problems: list[Problem] = []
     for _ in range(_DEEPEST):
         data = data.removeprefix(BYTE_ORDER_MARK)
         if data[:2] == b"\x1f\x8b":
-            data = _gzip(data, name, problems)
+            data = _gzip(data, name, problems, largest)
         elif data[:2] == b"\x1f\x9d":
-            data = _compress(data, name)
+            data = _compress(data, name, largest)
         elif data[:3] == b"BZh":
-            data = _bzip2(data, name, problems)
+            data = _bzip2(data, name, problems, largest)
         elif data[:4] in _ZIP_MARKS:
-            data = _zip(data, name, problems)
-        elif is_hatanaka(data):
-            return Unwrapped(_hatanaka(_without_filling(data, name, problems), name, problems), problems)
+            data = _zip(data, name, problems, largest)
         else:
             return Unwrapped(_without_filling(data, name, problems), problems)
     raise FormatError(f"{name}: more than {_DEEPEST} wrappers within each other; unpack it by hand", path=name, line=0)
@@ -76,10 +87,10 @@ def is_hatanaka(data: bytes) -> bool:
     return b"CRINEX VERS   / TYPE" in data[:100]
 
 
-def _check_size(size: int, packed: int, name: str) -> None:
-    if size > LARGEST_TEXT or (size > _HARMLESS and size > _SWELLS * packed):
+def _check_size(size: int, packed: int, name: str, largest: int) -> None:
+    if size > largest or (size > _HARMLESS and size > _SWELLS * packed):
         raise FormatError(
-            f"{name}: {packed} bytes swell to more than {size}; no observation file does, and at most {LARGEST_TEXT} "
+            f"{name}: {packed} bytes swell to more than {size}; no observation file does, and at most {largest} "
             "are read; split it by hours if it is real",
             path=name, line=0,
         )  # fmt: skip
@@ -91,7 +102,7 @@ def _cut(name: str, what: str, got: int, problems: list[Problem]) -> None:
     problems.append(Problem(name, 0, f"the {what} is cut short or damaged", f"took the {got} bytes before that"))
 
 
-def _gzip(data: bytes, name: str, problems: list[Problem]) -> bytes:
+def _gzip(data: bytes, name: str, problems: list[Problem], largest: int) -> bytes:
     parts: list[bytes] = []
     size, rest = 0, data
     while rest[:2] == b"\x1f\x8b":
@@ -103,7 +114,7 @@ def _gzip(data: bytes, name: str, problems: list[Problem]) -> bytes:
                 waiting = member.unconsumed_tail
                 parts.append(part)
                 size += len(part)
-                _check_size(size, len(data), name)
+                _check_size(size, len(data), name, largest)
                 if not part and not waiting and not member.eof:
                     break
         except zlib.error:
@@ -116,7 +127,7 @@ def _gzip(data: bytes, name: str, problems: list[Problem]) -> bytes:
     return b"".join(parts) if len(parts) != 1 else parts[0]
 
 
-def _bzip2(data: bytes, name: str, problems: list[Problem]) -> bytes:
+def _bzip2(data: bytes, name: str, problems: list[Problem], largest: int) -> bytes:
     parts: list[bytes] = []
     size, rest = 0, data
     while rest[:3] == b"BZh":
@@ -128,7 +139,7 @@ def _bzip2(data: bytes, name: str, problems: list[Problem]) -> bytes:
                 waiting = b""
                 parts.append(part)
                 size += len(part)
-                _check_size(size, len(data), name)
+                _check_size(size, len(data), name, largest)
                 if not part and member.needs_input:
                     break
         except (OSError, ValueError):
@@ -144,17 +155,17 @@ def _bzip2(data: bytes, name: str, problems: list[Problem]) -> bytes:
 class _Bounded(io.BytesIO):
     """A buffer that refuses to grow beyond reason."""
 
-    def __init__(self, packed: int, name: str) -> None:
+    def __init__(self, packed: int, name: str, largest: int) -> None:
         super().__init__()
-        self.packed, self.name = packed, name
+        self.packed, self.name, self.largest = packed, name, largest
 
     def write(self, part: bytes, /) -> int:  # type: ignore[override]
-        _check_size(self.tell() + len(part), self.packed, self.name)
+        _check_size(self.tell() + len(part), self.packed, self.name, self.largest)
         return super().write(part)
 
 
-def _compress(data: bytes, name: str) -> bytes:
-    out = _Bounded(len(data), name)
+def _compress(data: bytes, name: str, largest: int) -> bytes:
+    out = _Bounded(len(data), name, largest)
     try:
         ncompress.decompress(data, out)
     except FormatError:
@@ -166,7 +177,7 @@ def _compress(data: bytes, name: str) -> bytes:
     return out.getvalue()
 
 
-def members(data: bytes, name: str) -> list[tuple[str, bytes, list[Problem]]]:
+def members(data: bytes, name: str, largest: int = LARGEST_TEXT) -> list[tuple[str, bytes, list[Problem]]]:
     """The files in a zip, with their names within it and what was wrong with them; none where it is no zip.
 
     All of them together may swell no more than one file may.  Raises FormatError for a zip that holds nothing, more
@@ -194,7 +205,7 @@ def members(data: bytes, name: str) -> list[tuple[str, bytes, list[Problem]]]:
                         while part := member.read(_AT_ONCE // 16):
                             parts.append(part)
                             got += len(part)
-                            _check_size(size + got, len(data), name)
+                            _check_size(size + got, len(data), name, largest)
                     except (zipfile.BadZipFile, zlib.error, EOFError):
                         if len(entries) == 1 or got:
                             _cut(where, "zip file", got, problems)
@@ -207,8 +218,8 @@ def members(data: bytes, name: str) -> list[tuple[str, bytes, list[Problem]]]:
     return out
 
 
-def _zip(data: bytes, name: str, problems: list[Problem]) -> bytes:
-    found = members(data, name)
+def _zip(data: bytes, name: str, problems: list[Problem], largest: int) -> bytes:
+    found = members(data, name, largest)
     if len(found) != 1:
         raise FormatError(
             f"{name}: a zip file of {len(found)} files within another wrapper; unpack it and give the files",

@@ -12,6 +12,8 @@ import re
 import secrets
 import shutil
 import threading
+from collections import Counter
+from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -88,6 +90,31 @@ class Rates:
         full = [c for c, (level, since) in self._levels.items() if level + (now_s - since) * self._per_s >= self._burst]
         for caller in full or list(self._levels)[: self._most // 10 + 1]:
             del self._levels[caller]
+
+
+class AtOnce:
+    """How many questions that cost much may be at work at once: in all, and of one caller."""
+
+    def __init__(self, total: int, each: int) -> None:
+        self._total, self._each = total, each
+        self._at_work: Counter[str] = Counter()
+        self._lock = threading.Lock()
+
+    @contextlib.contextmanager
+    def place(self, caller: str) -> Iterator[bool]:
+        """Whether there is a place for one more, which is the caller's until the block ends."""
+        with self._lock:
+            free = self._at_work.total() < self._total and self._at_work[caller] < self._each
+            if free:
+                self._at_work[caller] += 1
+        try:
+            yield free
+        finally:
+            with self._lock:
+                if free:
+                    self._at_work[caller] -= 1
+                if not self._at_work[caller]:
+                    del self._at_work[caller]
 
 
 # ---------------------------------------------------------------------------------------------- what is sent

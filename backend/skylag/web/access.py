@@ -1,10 +1,11 @@
 """Who may ask and who may change: the gate before all routes.
 
 On the loopback address everybody of this machine may do all; elsewhere changing needs a key, and reading too where that
-is chosen.  A page of another address can change nothing through a visitor's browser.  Counts what passes, for
-/metrics.  Never keeps a key, and never reads a body.
+is chosen.  A question that a file goes with is reading: what is sent is not kept.  A page of another address can change
+nothing through a visitor's browser.  Counts what passes, for /metrics.  Never keeps a key, and never reads a body.
 """
 
+import re
 import threading
 import time
 from collections import Counter
@@ -30,6 +31,7 @@ Send = Callable[[MutableMapping[str, Any]], Awaitable[None]]
 LOOPBACK = ("127.0.0.1", "::1", "localhost")
 _READING = ("GET", "HEAD", "OPTIONS")
 _ADMIN = ("/api/pins/",)
+_WITH_A_FILE = re.compile(r"/api/days/[^/]+/[^/]+/beside")  # questions that are sent by POST and change nothing
 _OPEN_ALWAYS = ("/healthz",)  # whoever keeps the server running asks without a key
 _BUCKETS_S = (0.005, 0.01, 0.025, 0.05, 0.1, 0.3, 1.0, 3.0, 10.0)
 
@@ -40,7 +42,8 @@ class Access:
 
     writing   "open", "key" or "nobody"; reading "open" or "key"
     hosts     names under which changes are taken; any where empty
-    limits    on what is sent; rates per second and at once, per caller: changes, questions, wrong keys
+    limits    on what is sent; rates per second and at once, per caller: changes, questions, questions that a file goes
+              with, wrong keys
     """
 
     writing: str = "nobody"
@@ -49,6 +52,7 @@ class Access:
     limits: Limits = field(default_factory=Limits)
     changes: tuple[float, float] = (20.0, 2500.0)  # a whole network's day of files at once, and then twenty a second
     questions: tuple[float, float] = (200.0, 2000.0)
+    with_a_file: tuple[float, float] = (0.1, 10.0)  # each costs seconds of work
     wrong_keys: tuple[float, float] = (0.2, 10.0)
 
 
@@ -98,7 +102,7 @@ class Gate:
     def __init__(self, app: Any, archive: Archive, access: Access, traffic: Traffic) -> None:
         self._app, self._archive, self._access, self._traffic = app, archive, access, traffic
         self._changes, self._questions = Rates(*access.changes), Rates(*access.questions)
-        self._wrong_keys = Rates(*access.wrong_keys)
+        self._with_a_file, self._wrong_keys = Rates(*access.with_a_file), Rates(*access.wrong_keys)
 
     async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
         """Pass on, or answer in the one shape of failures."""
@@ -136,9 +140,12 @@ class Gate:
         method, path, headers = scope["method"], scope["path"], Headers(scope=scope)
         caller = str((scope.get("client") or ("unknown",))[0])
         now_s = time.perf_counter()
-        changing = method not in _READING
-        self._in_rate(self._changes if changing else self._questions, caller, now_s)
-        if changing:
+        sending = method not in _READING
+        with_a_file = method == "POST" and _WITH_A_FILE.fullmatch(path) is not None
+        changing = sending and not with_a_file
+        rates = self._with_a_file if with_a_file else self._changes if changing else self._questions
+        self._in_rate(rates, caller, now_s)
+        if sending:
             self._own_page(headers)
         mode = self._access.writing if changing else self._access.reading
         if not changing and (path in _OPEN_ALWAYS or not path.startswith(("/api/", "/metrics"))):
@@ -158,15 +165,15 @@ class Gate:
             raise _TurnedAway(429, "Refused", f"too many requests; ask again in {seconds} s", Retry_After=seconds)
 
     def _own_page(self, headers: Headers) -> None:
-        """Changes come from this server's own page or from a program, never from another page in a browser."""
+        """What is sent comes from this server's own page or from a program, never from another page in a browser."""
         host = urlsplit(f"//{headers.get('host', '')}")
         if self._access.hosts and host.hostname not in self._access.hosts:
-            raise _TurnedAway(403, "Refused", "changes are taken under a loopback name only, like 127.0.0.1")
+            raise _TurnedAway(403, "Refused", "what is sent is taken under a loopback name only, like 127.0.0.1")
         origin = headers.get("origin")
         if origin is not None and urlsplit(origin).netloc != host.netloc:
-            raise _TurnedAway(403, "Refused", "changes are taken from this server's own page only")
+            raise _TurnedAway(403, "Refused", "what is sent is taken from this server's own page only")
         if headers.get("sec-fetch-site", "none") not in ("same-origin", "none"):
-            raise _TurnedAway(403, "Refused", "changes are taken from this server's own page only")
+            raise _TurnedAway(403, "Refused", "what is sent is taken from this server's own page only")
 
     async def _with_key(self, headers: Headers, wanted: str, caller: str, now_s: float) -> None:
         kind, _, key = headers.get("authorization", "").partition(" ")

@@ -27,6 +27,7 @@ from starlette.middleware.gzip import GZipMiddleware
 import skylag
 from skylag.archive import Archive
 from skylag.errors import FormatError, Missing, NotEnough, Refused, SkylagError, Unsolvable
+from skylag.jobs.guard import AtOnce
 from skylag.web import advice, beside, maps, network, outlook, payloads, sites, slant_files, ways, work
 from skylag.web.access import Access, Gate, Receive, Scope, Send, Traffic
 from skylag.web.frames import Answers
@@ -113,6 +114,7 @@ def create_app(
     app.state.writing = access.writing
     app.state.feed = work.Feed(archive)
     app.state.answers = Answers()
+    app.state.beside_at_once = AtOnce(beside.MOST_AT_ONCE, beside.MOST_OF_ONE)
     for part in (network.router, maps.router, advice.router, ways.router, sites.router, work.router, outlook.router,
                  beside.router, slant_files.router):  # fmt: skip
         app.include_router(part)

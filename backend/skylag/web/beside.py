@@ -1,8 +1,10 @@
 """A published map beside a kept day: the route, and the comparison put into words.
 
-The map is sent with the question and not kept.  A route parses, asks and encodes.
+The map is sent with the question and not kept: who may read may ask, and what is sent is trusted in nothing.  So many
+bytes are taken, so much text unpacked, nothing but a map is parsed, and few are at work at once.
 """
 
+import asyncio
 from pathlib import PurePath
 from typing import Annotated
 
@@ -20,7 +22,9 @@ from skylag.tables import Biases, Fields, Reading
 from skylag.web import asking, payloads, sentences
 
 router = APIRouter()
-MOST_BYTES = 64 * 2**20  # a day of global maps every five minutes, as plain text
+MOST_BYTES = 64 * 2**20  # a day of global maps every five minutes, as plain text; packed it holds no more either
+MOST_AT_ONCE, MOST_OF_ONE = 3, 1  # questions at work, in all and of one caller: each may need hundreds of megabytes
+SENT_WITHIN_S = 120.0  # a place at work is not held by whoever sends slowly
 
 
 def published_maps(reading: Reading, name: str) -> tuple[Fields, Biases | None]:
@@ -81,17 +85,24 @@ def hours_csv(found: Beside) -> str:
 
 
 async def _body(request: Request) -> bytes:
-    """What was sent, up to the limit."""
+    """What was sent, up to the limit.  Raises Refused for more, TimeoutError where it takes too long to come."""
+    announced = request.headers.get("content-length", "")
+    if announced.isdecimal() and int(announced[:20]) > MOST_BYTES:
+        raise _too_large(int(announced[:20]))
     parts, size = [], 0
     async for part in request.stream():
         size += len(part)
         if size > MOST_BYTES:
-            raise Refused(
-                f"the map file is larger than {MOST_BYTES // 2**20} MiB; send it compressed or with fewer maps",
-                name="map", value=size, allowed=MOST_BYTES,
-            )  # fmt: skip
+            raise _too_large(size)
         parts.append(part)
     return b"".join(parts)
+
+
+def _too_large(size: int) -> Refused:
+    return Refused(
+        f"the map file is larger than {MOST_BYTES // 2**20} MiB; send it compressed or with fewer maps",
+        name="map", value=size, allowed=MOST_BYTES,
+    )  # fmt: skip
 
 
 @router.post("/api/days/{region}/{day}/beside", summary="A published map beside the day's own")
@@ -99,16 +110,31 @@ async def beside(
     request: Request, region: str, day: str, name: Annotated[str, Query(max_length=300)] = "map",
     version: int | None = None,
 ) -> Response:  # fmt: skip
-    """The body is an IONEX file, plain or compressed: differences by hour, what they are made of, hourly maps."""
-    data = await _body(request)
-    return await run_in_threadpool(_answer, request.app.state.archive, region, asking.day(day), name, version, data)
+    """The body is an IONEX file, plain or compressed: differences by hour, what they are made of, hourly maps.
+
+    Nothing is kept or changed: whoever may read may ask, a few at once.
+    """
+    caller = request.client.host if request.client else "unknown"
+    with request.app.state.beside_at_once.place(caller) as free:
+        if not free:
+            sentence = "other maps are being laid beside days just now; ask again in 5 s"
+            answer = payloads.error(sentence, "Refused", {"name": "map", "allowed": MOST_OF_ONE}, 429)
+            answer.headers["Retry-After"] = "5"
+            return answer
+        try:
+            async with asyncio.timeout(SENT_WITHIN_S):
+                data = await _body(request)
+        except TimeoutError:
+            sentence = f"the map file did not come within {SENT_WITHIN_S:g} s; send it compressed"
+            return payloads.error(sentence, "Refused", {"name": "map", "allowed": SENT_WITHIN_S}, 408)
+        return await run_in_threadpool(_answer, request.app.state.archive, region, asking.day(day), name, version, data)
 
 
 def _answer(archive: Archive, region: str, day: str, name: str, version: int | None, data: bytes) -> Response:
     record = archive.day(region, day, version)
     short = PurePath(name.replace("\\", "/")).name or "map"
     try:
-        reading = formats.read_bytes(data, short)
+        reading = formats.read_bytes(data, short, only=("ionex",), largest=MOST_BYTES)
     except FormatError as trouble:  # here the file was sent: it is the question that is wrong, not the store
         raise Refused(trouble.message, name="map", value=short, allowed="IONEX, plain or compressed") from trouble
     maps, biases = published_maps(reading, short)
