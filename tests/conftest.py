@@ -9,13 +9,16 @@ from typing import Any
 
 import numpy as np
 import pytest
+from tests import evidence_table
 from tests.journeys.newcomer import Newcomer, demo
 from tests.postgres_server import NoServer, PostgresServer
 
 from skylag.archive import Archive, open_archive
 
 ROOT = Path(__file__).resolve().parent.parent
-EVIDENCE_ROWS: dict[tuple[str, str], dict[str, str]] = {}
+EVIDENCE_ROWS: evidence_table.Rows = {}
+_RAN: set[str] = set()  # cases that came to an end, well or not
+_NOT_CHOSEN: list[str] = []
 
 
 def pytest_addoption(parser: pytest.Parser) -> None:
@@ -29,6 +32,17 @@ def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item
     for item in items:
         if "browser" in item.keywords:
             item.add_marker(skip)
+
+
+def pytest_deselected(items: list[pytest.Item]) -> None:
+    """Cases that were found and not chosen: their rows of outside checks stay."""
+    _NOT_CHOSEN.extend(item.nodeid for item in items)
+
+
+def pytest_runtest_logreport(report: pytest.TestReport) -> None:
+    """Which cases came to an end."""
+    if report.when == "call" and report.outcome in ("passed", "failed"):
+        _RAN.add(report.nodeid)
 
 
 @pytest.hookimpl(wrapper=True)
@@ -147,8 +161,7 @@ def evidence(request: pytest.FixtureRequest) -> Evidence:
     ) -> None:
         """Assert |got - expected| <= tolerance, or got <= expected when `at_most`; the row is written either way."""
         good = got <= expected if at_most else abs(got - expected) <= tolerance
-        EVIDENCE_ROWS[(request.node.nodeid.split("::")[0], subject)] = {
-            "subject": subject,
+        EVIDENCE_ROWS[(evidence_table.name_of(request.node.nodeid), subject)] = {
             "source": source,
             "expected": f"{'at most ' if at_most else ''}{expected:.12g}",
             "got": f"{got:.12g}",
@@ -162,42 +175,19 @@ def evidence(request: pytest.FixtureRequest) -> Evidence:
 
 
 def pytest_sessionfinish(session: pytest.Session) -> None:
-    """Write the table of outside checks: rows of files not run this time are kept from the last run."""
+    """Write the table of outside checks, if this run made any."""
     if not EVIDENCE_ROWS:
         return
-    path = ROOT / "tests" / "EVIDENCE.md"
-    ran = {str(item.nodeid.split("::")[0]) for item in session.items}
-    write_evidence(path, EVIDENCE_ROWS, ran)
-
-
-_COLUMNS = ("test file", "subject", "source", "expected", "got", "tolerance", "unit", "verdict")
-
-
-def write_evidence(path: Path, rows: dict[tuple[str, str], dict[str, str]], ran: set[str]) -> None:
-    """Merge new rows into the table on disk, sorted by file and subject."""
-    merged: dict[tuple[str, str], dict[str, str]] = {}
-    if path.is_file():
-        for line in path.read_text(encoding="utf-8").splitlines():
-            cells = [c.strip().replace("&#124;", "|") for c in line.strip().strip("|").split("|")]
-            if len(cells) == len(_COLUMNS) and cells[0].startswith("tests/"):
-                old = dict(zip(_COLUMNS, cells, strict=True))
-                if old["test file"] not in ran and (path.parent.parent / old["test file"]).is_file():
-                    merged[(old["test file"], old["subject"])] = old
-    for (file, subject), row in rows.items():
-        merged[(file, subject)] = {"test file": file, **row}
-    lines = [
-        "# Checks against the outside world",
-        "",
-        "Written by the test run. Each row: what was checked, the published source (or \"common practice\", or \"from",
-        "memory\"), the expected value, the value got, the tolerance.",
-        "",
-        "| " + " | ".join(_COLUMNS) + " |",
-        "|" + "---|" * len(_COLUMNS),
-    ]
-    for key in sorted(merged):
-        lines.append("| " + " | ".join(merged[key][c].replace("|", "&#124;") for c in _COLUMNS) + " |")
-    text = "\n".join(lines) + "\n"
-    if not path.is_file() or path.read_text(encoding="utf-8") != text:
+    root = session.config.rootpath
+    path = root / "tests" / "EVIDENCE.md"
+    before = path.read_text(encoding="utf-8") if path.is_file() else ""
+    cases = [item.nodeid for item in session.items] + _NOT_CHOSEN
+    whole = evidence_table.ran_whole(cases, _RAN, by_case=any("[" in word for word in session.config.args))
+    rows = evidence_table.merged(
+        evidence_table.read(before), EVIDENCE_ROWS, whole, evidence_table.exists_under(root)
+    )  # fmt: skip
+    text = evidence_table.written(rows)
+    if text != before:
         path.write_text(text, encoding="utf-8")
 
 
