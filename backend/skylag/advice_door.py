@@ -45,9 +45,7 @@ def _advise_parser(commands: Any, caution: str) -> None:
         '  skylag advise --archive skylag-demo --day 2031-03-12 --site "Kelm Isle airstrip" --sheet kelm.pdf\n\n'
         + caution,
     )
-    parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
-    parser.add_argument("--region", default="", metavar="NAME", help="of several regions in the archive, this one")
-    parser.add_argument("--day", default="", metavar="YYYY-MM-DD", help="the newest day without")
+    settings.add_kept_day(parser)
     parser.add_argument("--site", default="", metavar="NAME", help="a site of the region; without, all in a line each")
     parser.add_argument("--at", nargs=2, type=float, action="append", metavar=("LAT", "LON"),
                         help="a place that is no site; give several with --shape")  # fmt: skip

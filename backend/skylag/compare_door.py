@@ -36,9 +36,7 @@ def add(commands: Any, caution: str) -> None:
     )
     parser.add_argument("map", type=Path, metavar="MAP", help="the published map, an IONEX file")
     parser.add_argument("--results", type=Path, metavar="DIR", help="a folder of results, instead of an archive")
-    parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
-    parser.add_argument("--region", default="", metavar="NAME", help="of several regions in the archive, this one")
-    parser.add_argument("--day", default="", metavar="YYYY-MM-DD", help="without: the day of the map, if it is kept")
+    settings.add_kept_day(parser, without="without: the day of the map, if it is kept")
     parser.add_argument(
         "--format", default="text", choices=("text", "csv", "json", "netcdf"),
         help="text; csv, a row per hour; json, all facts; netcdf, the difference maps",

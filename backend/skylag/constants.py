@@ -1,5 +1,7 @@
 """Numbers of nature and of the signals, each with its source.  Holds no formula longer than a line."""
 
+import math
+
 SPEED_OF_LIGHT_M_S = 299_792_458.0  # SI, exact
 
 # Ionospheric refraction: delay [m] = K * content [electrons/m^2] / f^2.  40.3 is the convention of IS-GPS-200 and
@@ -46,6 +48,7 @@ L1_M_PER_TECU = REFRACTION_M3_S2 * TECU / L1_HZ**2
 
 # Mean Earth radius of thin-shell geometry: IONEX maps use 6371 km (IONEX 1.0, Schaer et al. 1998).
 SHELL_EARTH_RADIUS_M = 6_371_000.0
+KM_PER_DEG = math.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0  # of latitude, on that sphere
 # Satellite-based augmentation uses its own pair of radius and height (RTCA DO-229, A.4.4.10).
 SBAS_EARTH_RADIUS_M = 6_378_136.3
 SBAS_SHELL_HEIGHT_M = 350_000.0

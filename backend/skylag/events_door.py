@@ -34,9 +34,7 @@ def add(commands: Any, caution: str) -> None:
         "  skylag events --archive skylag-demo --day 2031-03-12 --use ground --format geojson --out storm.geojson\n\n"
         + caution,
     )
-    parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
-    parser.add_argument("--region", default="", metavar="NAME", help="of several regions in the archive, this one")
-    parser.add_argument("--day", default="", metavar="YYYY-MM-DD", help="the newest day without")
+    settings.add_kept_day(parser)
     parser.add_argument("--use", default="", metavar="NAME", help="a use or its kind; the day's own states without")
     parser.add_argument("--format", default="csv", choices=("csv", "geojson", "json"))
     parser.add_argument("--arrivals", action="store_true", help="foretold arrivals of fronts instead, as CSV or JSON")

@@ -50,9 +50,7 @@ def add(commands: Any, caution: str) -> None:
         "  skylag maps --archive skylag-archive --format gridpoints --every 60\n\n" + caution,
     )
     parser.add_argument("--results", type=Path, metavar="DIR", help="a folder of results, instead of an archive")
-    parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
-    parser.add_argument("--region", default="", metavar="NAME", help="of several regions in the archive, this one")
-    parser.add_argument("--day", default="", metavar="YYYY-MM-DD", help="the newest day without")
+    settings.add_kept_day(parser)
     parser.add_argument("--format", default="csv", choices=("ionex", "netcdf", "geojson", "csv", "gridpoints"))
     parser.add_argument("--every", type=float, default=15.0, metavar="MINUTES", help="a map every so many minutes (15)")
     parser.add_argument("--at", default="", metavar="HH:MM", help="only the map nearest to this time of day (UTC)")

@@ -131,6 +131,13 @@ def read_estimation(path: Path) -> Estimation:
         raise Refused(f"{path}: [estimation] {trouble.message}", **trouble.details) from None
 
 
+def add_kept_day(parser: argparse.ArgumentParser, without: str = "the newest day without") -> None:
+    """Add what names a kept day; `without` tells what it is where no day is named."""
+    parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
+    parser.add_argument("--region", default="", metavar="NAME", help="of several regions in the archive, this one")
+    parser.add_argument("--day", default="", metavar="YYYY-MM-DD", help=without)
+
+
 def add_estimation(parser: argparse.ArgumentParser) -> None:
     """Add the options of `Estimation` to a command; what is not given is as the region file says, or as usual."""
     group = parser.add_argument_group(

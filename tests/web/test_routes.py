@@ -17,6 +17,7 @@ from skylag import quantities, timescales
 from skylag.archive import Archive, open_archive
 from skylag.constants import L1_M_PER_TECU
 from skylag.formats import netcdf
+from skylag.formats.delimited import harmless
 from skylag.impact.states import honest_state
 from skylag.tables import BROKEN, HOLDS, STATE_NAMES, STRAINED, UNSEEN
 from skylag.web import payloads
@@ -266,9 +267,9 @@ def test_what_json_cannot_say_is_a_defect() -> None:
 
 
 def test_a_cell_that_looks_like_a_formula() -> None:
-    assert payloads._harmless("=1+1") == "'=1+1"
-    assert payloads._harmless("-40 TECU") == "'-40 TECU"
-    assert payloads._harmless(-40.0) == -40.0
+    assert harmless("=1+1") == "'=1+1"
+    assert harmless("-40 TECU") == "'-40 TECU"
+    assert harmless(-40.0) == -40.0
 
 
 def test_utc_text_keeps_milliseconds_only_where_needed() -> None:

@@ -14,7 +14,7 @@ from skylag.archive import Archive
 from skylag.formats import delimited
 from skylag.formats.delimited import SLANT_COLUMNS
 from skylag.web import slant_files
-from skylag.web.witnesses import distance_km
+from skylag.web.nearby import great_circle_km
 
 DAY = f"/api/days/{REGION.name}/{STORM_DAY}"
 PLACE = {"lat": -41.1, "lon": 147.1}
@@ -37,7 +37,7 @@ def test_lines_near_a_place_and_time_only(client: TestClient, small_archive: Arc
     stored = small_archive.samples(REGION.name, STORM_DAY)
     rays = stored.rays
     moment = timescales.utc_to_gps(np.array([np.datetime64(INSTANT[:-1], "ns")]))[0]
-    wanted = (distance_km(rays.pierce_lat, rays.pierce_lon, PLACE["lat"], PLACE["lon"]) <= 150.0) & (
+    wanted = (great_circle_km(rays.pierce_lat, rays.pierce_lon, PLACE["lat"], PLACE["lon"]) <= 150.0) & (
         np.abs(rays.time - moment) <= np.timedelta64(20, "m")
     )
     assert 0 < wanted.sum() < len(rays)

@@ -26,6 +26,11 @@ SLANT_COLUMNS = ("time", "receiver", "satellite", "arc", "elevation_deg", "azimu
                  "pierce_lon_deg", "stec_tecu", "vtec_tecu", "sigma_tecu")  # fmt: skip
 
 
+def harmless(value: Any) -> Any:
+    """Text that a spreadsheet would take for a formula gets a leading apostrophe."""
+    return "'" + value if isinstance(value, str) and value[:1] in ("=", "+", "@", "-", "\t") else value
+
+
 def biases_csv(calibration: Calibration) -> str:
     """biases.csv: bias of code1 minus bias of code2 [ns], as in Bias-SINEX differential records."""
     out = io.StringIO()

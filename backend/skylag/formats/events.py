@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 
 from skylag.events import Arrival, Event
-from skylag.formats.delimited import utc_text
+from skylag.formats.delimited import harmless, utc_text
 
 COLUMNS = ("use", "start_utc", "end_utc", "state", "cause", "confirmed", "south_deg", "north_deg", "west_deg",
            "east_deg", "worst_lat_deg", "worst_lon_deg", "worst_utc", "slope_mm_per_km", "sigma_mm_per_km", "cells",
@@ -43,7 +43,7 @@ def to_csv(events: Sequence[Event]) -> str:
         row["confirmed"] = "true" if event.confirmed else "false"
         row["sites"] = ";".join(event.sites)
         row["flags"] = ";".join(str(number) for number in event.flags)
-        writer.writerow({key: _harmless("" if value is None else value) for key, value in row.items()})
+        writer.writerow({key: harmless("" if value is None else value) for key, value in row.items()})
     return out.getvalue()
 
 
@@ -141,7 +141,7 @@ def arrivals_to_csv(arrivals: Sequence[Arrival], flag_rows: Sequence[int]) -> st
     for arrival in arrivals:
         row = arrival_facts(arrival, flag_rows)
         row["came_true"] = "" if arrival.came_true is None else str(arrival.came_true).lower()
-        writer.writerow({key: _harmless("" if value is None else value) for key, value in row.items()})
+        writer.writerow({key: harmless("" if value is None else value) for key, value in row.items()})
     return out.getvalue()
 
 
@@ -159,8 +159,3 @@ def arrivals_to_json(arrivals: Sequence[Arrival], flag_rows: Sequence[int], abou
 
 def _round(value: float, digits: int) -> float | None:
     return round(float(value), digits) if np.isfinite(value) else None
-
-
-def _harmless(value: Any) -> Any:
-    """Text that a spreadsheet would take for a formula gets a leading apostrophe."""
-    return "'" + value if isinstance(value, str) and value[:1] in ("=", "+", "@", "-", "\t") else value

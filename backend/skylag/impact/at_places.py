@@ -11,6 +11,7 @@ from collections.abc import Sequence
 import numpy as np
 import numpy.typing as npt
 
+from skylag.constants import KM_PER_DEG
 from skylag.impact.coming import from_line
 from skylag.impact.states import JudgeChoices, field_states, honest_state, nearest_cells, state_of_slope
 from skylag.impact.survey import touches
@@ -30,7 +31,6 @@ from skylag.tables import (
     Times,
 )
 
-_KM_PER_DEG = 111.2
 _SPARE = np.timedelta64(450, "s")  # a witness speaks for so long before and after: the longest of `JudgeChoices`
 _MIDDLE = 0.05  # of a step: so near to its middle a place is where its cell was judged
 # Of a step: cells farther off carry no warning over a place that the nearer ones lack, as long as a warning reaches
@@ -90,7 +90,7 @@ def _warning(flags: Sequence[Flag]) -> list[Flag]:
 def _half_diagonal_km(fields: Fields) -> float:
     """From the middle of a cell to its corner [km], where cells are widest."""
     sides = [abs(float(axis[1] - axis[0])) if len(axis) > 1 else 0.0 for axis in (fields.lats, fields.lons)]
-    return 0.5 * _KM_PER_DEG * float(np.hypot(sides[0], sides[1] * np.cos(np.radians(fields.lats)).max()))
+    return 0.5 * KM_PER_DEG * float(np.hypot(sides[0], sides[1] * np.cos(np.radians(fields.lats)).max()))
 
 
 def _level(flag: Flag) -> int:

@@ -10,13 +10,12 @@ from typing import Any
 import numpy as np
 from scipy.ndimage import distance_transform_edt, find_objects, label
 
-from skylag.constants import SHELL_EARTH_RADIUS_M
+from skylag.constants import KM_PER_DEG
 from skylag.events import Event
 from skylag.impact.states import carried, nearest_cells
 from skylag.impact.uses import JudgedUse, owners
 from skylag.tables import STATE_NAMES, STRAINED, UNSEEN, Bytes, Fields, Flag, Floats, Ints, Region
 
-_KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
 AS_STORED = "all corrections"  # name of the day's own states, by the region's thresholds
 
 
@@ -112,7 +111,7 @@ def _event(
     reason += _lost_sight(states, epochs, box, member)
     sides = fields.lats, fields.lons
     spacing = [abs(float(axis[1] - axis[0])) if len(axis) > 1 else region.step_deg for axis in sides]
-    area = float((np.cos(np.radians(fields.lats[rows])) * spacing[0] * spacing[1]).sum() * _KM_PER_DEG**2)
+    area = float((np.cos(np.radians(fields.lats[rows])) * spacing[0] * spacing[1]).sum() * KM_PER_DEG**2)
     return Event(
         use=use, start=start, end=end,
         south=float(fields.lats[rows].min()), north=float(fields.lats[rows].max()),
@@ -151,7 +150,7 @@ def _behind(
         if flag.kind != "slope" or not (flag.start <= end and flag.end >= start):
             continue
         turn = (lons - flag.lon + 180.0) % 360.0 - 180.0
-        apart = np.hypot(lats - flag.lat, turn * np.cos(np.radians(flag.lat))) * _KM_PER_DEG
+        apart = np.hypot(lats - flag.lat, turn * np.cos(np.radians(flag.lat))) * KM_PER_DEG
         if apart.min() <= 75.0:
             spoken.add(number)
     return sorted(spoken)

@@ -21,7 +21,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.ndimage import find_objects, label
 
-from skylag.constants import L1_M_PER_TECU
+from skylag.constants import KM_PER_DEG, L1_M_PER_TECU
 from skylag.events import Arrival, Fault, Patch, Patches
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.fronts import ahead_km
@@ -270,7 +270,7 @@ def in_claim(
         return state, steepest
     each = state_of_slope(claim.cell_slope, claim.cell_sigma, limits, choices.sigmas)
     reach = np.timedelta64(round(choices.claim_reach_s / 2.0 * 1e9), "ns")
-    half_deg = choices.claim_reach_km / 111.2
+    half_deg = choices.claim_reach_km / KM_PER_DEG
     for number in range(len(times)):
         now = np.flatnonzero(np.abs(claim.cell_time - times[number]) <= reach)
         if len(now) == 0:
@@ -598,4 +598,4 @@ def _near(claim: SlopeClaim, lat: float, lon: float) -> bool:
     turn = (claim.cell_lon - lon + 180.0) % 360.0 - 180.0
     if len(turn) == 0:
         return False
-    return bool((np.hypot(claim.cell_lat - lat, turn * np.cos(np.radians(lat))) * 111.2).min() <= 300.0)
+    return bool((np.hypot(claim.cell_lat - lat, turn * np.cos(np.radians(lat))) * KM_PER_DEG).min() <= 300.0)

@@ -8,14 +8,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from skylag.constants import SHELL_EARTH_RADIUS_M
+from skylag.constants import KM_PER_DEG
 from skylag.events import Fault, Patches
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.sightlines import lay_out, middle
 from skylag.tables import Bools, Floats, Fronts, Ints, Rays, Samples, Slopes
 
 WINDOW_S = 300.0
-_KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
 
 
 @dataclass(frozen=True)
@@ -175,7 +174,7 @@ def _contradicted(apart: Bools, rays: Rays, samples: Samples, patches: Patches, 
                 continue
             turn = (rays.pierce_lon[own][:, None] - rays.pierce_lon[others][None, :] + 180.0) % 360.0 - 180.0
             north = rays.pierce_lat[own][:, None] - rays.pierce_lat[others][None, :]
-            away = np.hypot(north, turn * np.cos(np.radians(rays.pierce_lat[own]))[:, None]) * _KM_PER_DEG
+            away = np.hypot(north, turn * np.cos(np.radians(rays.pierce_lat[own]))[:, None]) * KM_PER_DEG
             nearest = others[away.argmin(axis=1)]
             beside = away.min(axis=1) <= choices.same_place_km
             differs = np.abs(samples.vtec[own] - samples.vtec[nearest]) > choices.level_tecu

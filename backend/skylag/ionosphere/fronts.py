@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
 
-from skylag.constants import SHELL_EARTH_RADIUS_M
+from skylag.constants import KM_PER_DEG, SHELL_EARTH_RADIUS_M
 from skylag.events import Arrival
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.front_segments import follow, joined, line_at, meeting
@@ -24,7 +24,6 @@ from skylag.ionosphere.sightlines import Sightlines, from_plane, lay_out, middle
 from skylag.ionosphere.slopes import MM_PER_TECU
 from skylag.tables import Bools, Floats, Front, Fronts, Ints, Onsets, Rays, Samples, Site, Slopes, Times
 
-_KM_PER_DEG = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
 _LEAST_MISFIT = 0.05  # the scatter allowed to a run's place is for thick walls; agreement makes sigmas smaller, not nil
 _TWO_WAYS_KM_S = 0.1  # pierce points overtake walls slower than this and see them from the other side
 _SLOW_KM_S, _SLOW_BIAS_KM_S = 0.1, 0.005  # speed error of a wall near rest, less and less up to 100 m/s (simulated)
@@ -237,12 +236,12 @@ def _places(lines: Sightlines, rays: Rays, epoch: Ints, line: Ints, when: Floats
     span = np.where(span > 0, span, np.nan)
     turn = (rays.pierce_lon[ahead] - rays.pierce_lon[behind] + 180.0) % 360.0 - 180.0
     shrink = np.cos(np.radians(rays.pierce_lat[row]))
-    north = np.nan_to_num((rays.pierce_lat[ahead] - rays.pierce_lat[behind]) * _KM_PER_DEG * 1000.0 / span)
-    east = np.nan_to_num(turn * _KM_PER_DEG * 1000.0 * shrink / span)
+    north = np.nan_to_num((rays.pierce_lat[ahead] - rays.pierce_lat[behind]) * KM_PER_DEG * 1000.0 / span)
+    east = np.nan_to_num(turn * KM_PER_DEG * 1000.0 * shrink / span)
     late = when - (rays.time[row] - lines.times[0]).astype(np.int64) / 1e9
     return {
-        "lat": rays.pierce_lat[row] + north * late / (_KM_PER_DEG * 1000.0),
-        "lon": rays.pierce_lon[row] + east * late / (_KM_PER_DEG * 1000.0 * shrink),
+        "lat": rays.pierce_lat[row] + north * late / (KM_PER_DEG * 1000.0),
+        "lon": rays.pierce_lon[row] + east * late / (KM_PER_DEG * 1000.0 * shrink),
         "elevation": rays.elevation[row],
         "azimuth": rays.azimuth[row],
         "east_speed": east,

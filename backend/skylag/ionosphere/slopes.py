@@ -21,7 +21,7 @@ from scipy.sparse import coo_matrix
 from scipy.sparse.csgraph import connected_components
 from scipy.spatial import cKDTree
 
-from skylag.constants import L1_M_PER_TECU, SHELL_EARTH_RADIUS_M
+from skylag.constants import KM_PER_DEG, L1_M_PER_TECU
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.sightlines import Sightlines, lay_out, middle
 from skylag.tables import SLOPE_WAYS, Bools, Fields, Floats, Ints, Rays, Receiver, Samples, SlopeClaim, Slopes, Times
@@ -147,9 +147,9 @@ def _pairs(
         return layers[name][epoch, one], layers[name][epoch, two]
 
     lat, lon = at("lat"), at("lon")
-    north = (lat[1] - lat[0]) * (np.pi / 180.0) * SHELL_EARTH_RADIUS_M / 1000.0
+    north = (lat[1] - lat[0]) * KM_PER_DEG
     turn = (lon[1] - lon[0] + 180.0) % 360.0 - 180.0
-    east = turn * (np.pi / 180.0) * SHELL_EARTH_RADIUS_M / 1000.0 * np.cos(np.radians(0.5 * (lat[0] + lat[1])))
+    east = turn * KM_PER_DEG * np.cos(np.radians(0.5 * (lat[0] + lat[1])))
     distance = np.hypot(east, north)
     kept = (distance >= choices.nearest_km) & (distance <= choices.farthest_km)
     epoch, pair, one, two = epoch[kept], pair[kept], one[kept], two[kept]
@@ -238,9 +238,8 @@ def _paths(rays: Rays, samples: Samples, choices: SlopeChoices) -> tuple[dict[st
     noise = lines.layer(rays.noise_sigma / rays.mapping)
     mapping = lines.layer(rays.mapping)
     arcs = lines.numbers(rays.arc)
-    km = np.pi / 180.0 * SHELL_EARTH_RADIUS_M / 1000.0
-    north = np.diff(lat, axis=0) * km
-    east = ((np.diff(lon, axis=0) + 180.0) % 360.0 - 180.0) * km * np.cos(np.radians(lat[1:]))
+    north = np.diff(lat, axis=0) * KM_PER_DEG
+    east = ((np.diff(lon, axis=0) + 180.0) % 360.0 - 180.0) * KM_PER_DEG * np.cos(np.radians(lat[1:]))
     distance = np.hypot(east, north)
     same = (arcs[1:] == arcs[:-1]) & (arcs[1:] >= 0)
     moving = distance > 0.02 * lines.step_s  # slower than 20 m/s tells nothing of space

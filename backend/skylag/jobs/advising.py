@@ -61,19 +61,19 @@ class AskedJob:
 
     site: str = ""
     places: str = ""
-    shape: str = "points"
-    method: str = "rtk"
-    baseline_km: float = 10.0
+    shape: str = Job.shape
+    method: str = Job.method
+    baseline_km: float = Job.baseline_km
     references: str = ""
-    horizontal_mm: float = 30.0
-    vertical_mm: float = 50.0
+    horizontal_mm: float = Job.horizontal_mm
+    vertical_mm: float = Job.vertical_mm
     hours: str = ""
-    session_min: float = 60.0
-    least_min: float = 15.0
-    mask_deg: float = 15.0
-    least_satellites: int = 5
-    most_dilution: float = 6.0
-    fixing_chance: float = 0.1
+    session_min: float = Job.session_min
+    least_min: float = Job.least_min
+    mask_deg: float = Job.mask_deg
+    least_satellites: int = Job.least_satellites
+    most_dilution: float = Job.most_dilution
+    fixing_chance: float = Job.fixing_chance
 
 
 @dataclass(frozen=True)

@@ -6,9 +6,10 @@ Takes flags and gives flags with distances; a front is where its track has it at
 from dataclasses import dataclass
 
 import numpy as np
+import numpy.typing as npt
 
 from skylag.constants import SHELL_EARTH_RADIUS_M
-from skylag.tables import Flag
+from skylag.tables import Flag, Floats
 
 # A flag is told with a place up to this distance: beyond it, another part of the map is meant.
 REACH_KM = 300.0
@@ -51,12 +52,17 @@ def position_at(flag: Flag, time: np.datetime64) -> tuple[float, float]:
     return float(np.interp(now, seconds, lats)), float(np.interp(now, seconds, lons))
 
 
+def great_circle_km(lats: npt.ArrayLike, lons: npt.ArrayLike, lat: float, lon: float) -> Floats:
+    """Distances [km] of places from one, on the mean sphere."""
+    a, b = np.deg2rad(lats), np.deg2rad(lat)
+    half = np.sin((a - b) / 2) ** 2 + np.cos(a) * np.cos(b) * np.sin(np.deg2rad(np.asarray(lons) - lon) / 2) ** 2
+    return np.asarray(2 * SHELL_EARTH_RADIUS_M / 1000.0 * np.arcsin(np.sqrt(np.minimum(half, 1.0))))
+
+
 def distance_and_bearing(lat1: float, lon1: float, lat2: float, lon2: float) -> tuple[float, float]:
     """Great-circle distance [km] on the mean sphere and initial bearing [deg from north over east]."""
     lat1_rad, lat2_rad = np.deg2rad(lat1), np.deg2rad(lat2)
     lon_rad = np.deg2rad(lon2 - lon1)
-    half = np.sin((lat2_rad - lat1_rad) / 2) ** 2 + np.cos(lat1_rad) * np.cos(lat2_rad) * np.sin(lon_rad / 2) ** 2
-    distance_km = 2 * SHELL_EARTH_RADIUS_M / 1000.0 * np.arcsin(np.sqrt(min(half, 1.0)))
     east = np.sin(lon_rad) * np.cos(lat2_rad)
     north = np.cos(lat1_rad) * np.sin(lat2_rad) - np.sin(lat1_rad) * np.cos(lat2_rad) * np.cos(lon_rad)
-    return float(distance_km), float(np.rad2deg(np.arctan2(east, north)) % 360.0)
+    return float(great_circle_km(lat2, lon2, lat1, lon1)), float(np.rad2deg(np.arctan2(east, north)) % 360.0)

@@ -11,6 +11,7 @@ from fastapi.responses import Response
 
 from skylag.archive import Archive
 from skylag.archive.outlooks import Kept
+from skylag.constants import KM_PER_DEG
 from skylag.errors import Missing, Refused
 from skylag.impact import outlook_advice, uses
 from skylag.ionosphere import outlook as science
@@ -38,7 +39,7 @@ def _place(made: Outlook, lat: float, lon: float) -> tuple[int, float]:
     """Row of the nearest place and its distance [km]."""
     north = made.lats - lat
     east = ((made.lons - lon + 180.0) % 360.0 - 180.0) * np.cos(np.radians(lat))
-    away = np.hypot(north, east) * 111.2
+    away = np.hypot(north, east) * KM_PER_DEG
     return int(np.argmin(away)), float(away.min())
 
 

@@ -25,6 +25,7 @@ from skylag.archive.outlooks import Kept
 from skylag.archive.sites import SiteChanges
 from skylag.constants import L1_M_PER_TECU
 from skylag.formats import events as event_files
+from skylag.formats.delimited import harmless
 from skylag.impact.coming import HORIZON, Coming
 from skylag.impact.ground_augmentation import StationDay
 from skylag.impact.satellite_augmentation import Availability
@@ -410,13 +411,8 @@ def flags_csv(table: Sequence[Flag], name: str) -> Response:
     for flag in table:
         row = _flag(flag)
         row["confirmed"] = "true" if flag.confirmed else "false"
-        writer.writerow({key: _harmless(value) for key, value in row.items()})
+        writer.writerow({key: harmless(value) for key, value in row.items()})
     return Response(text.getvalue(), media_type="text/csv", headers=_download(f"{name}-flags.csv"))
-
-
-def _harmless(value: Any) -> Any:
-    """Text that a spreadsheet would take for a formula gets a leading apostrophe."""
-    return "'" + value if isinstance(value, str) and value[:1] in ("=", "+", "@", "-", "\t") else value
 
 
 def flags_geojson(table: Sequence[Flag], name: str, about: Mapping[str, Any]) -> Response:

@@ -10,7 +10,8 @@ from fastapi.responses import Response
 from skylag.archive import Archive, slants
 from skylag.errors import Refused
 from skylag.formats import delimited
-from skylag.web import asking, payloads, witnesses
+from skylag.web import asking, payloads
+from skylag.web.nearby import great_circle_km
 
 router = APIRouter()
 MOST_MINUTES, MOST_KM = 180.0, 1000.0
@@ -50,7 +51,7 @@ def near_a_place(
     half = np.timedelta64(round(minutes * 60.0), "s")
     samples = slants.read(archive.slant_folder, record.slant_sha256, moment - half, moment + half)
     rays = samples.rays
-    near = witnesses.distance_km(rays.pierce_lat, rays.pierce_lon, lat, lon) <= reach_km
+    near = great_circle_km(rays.pierce_lat, rays.pierce_lon, lat, lon) <= reach_km
     near &= np.abs(rays.time - moment) <= half
     rows = int(near.sum())
     if rows > MOST_ROWS:

@@ -11,8 +11,9 @@ from typing import Any
 import numpy as np
 
 from skylag.archive import DayRecord
-from skylag.constants import L1_M_PER_TECU, SHELL_EARTH_RADIUS_M
+from skylag.constants import L1_M_PER_TECU
 from skylag.tables import Biases, Flag, Floats, Samples, Times
+from skylag.web.nearby import great_circle_km
 
 # A page draws a few curves well and a hundred badly.
 MOST_SATELLITES = 4
@@ -50,7 +51,7 @@ def near(samples: Samples, lat: float, lon: float) -> tuple[Sightline, ...]:
     rays = samples.rays
     if not len(rays):
         return ()
-    away_km = distance_km(rays.pierce_lat, rays.pierce_lon, lat, lon)
+    away_km = great_circle_km(rays.pierce_lat, rays.pierce_lon, lat, lon)
     every = max(1, round(THIN_TO_S / max(rays.interval_s, 1.0)))
     # The same epochs for every line, so that two receivers compare.
     _, epoch = np.unique(rays.time, return_inverse=True)
@@ -85,13 +86,6 @@ def near(samples: Samples, lat: float, lon: float) -> tuple[Sightline, ...]:
     # A satellite that two receivers see says more than one that a single receiver sees.
     worth = sorted(groups.values(), key=lambda g: (len(g) < 2, -max(line.change_m for line in g)))
     return tuple(line for group in worth[:MOST_SATELLITES] for line in group[:MOST_OF_ONE_SATELLITE])
-
-
-def distance_km(lats: Floats, lons: Floats, lat: float, lon: float) -> Floats:
-    """Great-circle distances on the mean sphere [km]."""
-    a, b = np.deg2rad(lats), np.deg2rad(lat)
-    half = np.sin((a - b) / 2) ** 2 + np.cos(a) * np.cos(b) * np.sin(np.deg2rad(lons - lon) / 2) ** 2
-    return np.asarray(2 * SHELL_EARTH_RADIUS_M / 1000.0 * np.arcsin(np.sqrt(np.minimum(half, 1.0))))
 
 
 @dataclass(frozen=True)
