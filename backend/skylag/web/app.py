@@ -28,7 +28,7 @@ import skylag
 from skylag.archive import Archive
 from skylag.errors import FormatError, Missing, NotEnough, Refused, SkylagError, Unsolvable
 from skylag.jobs.guard import AtOnce
-from skylag.web import advice, beside, maps, network, outlook, payloads, sites, slant_files, ways, work
+from skylag.web import advice, beside, described, maps, network, outlook, payloads, sites, slant_files, ways, work
 from skylag.web.access import Access, Gate, Receive, Scope, Send, Traffic
 from skylag.web.frames import Answers
 
@@ -120,6 +120,7 @@ def create_app(
         app.include_router(part)
     _add_small_routes(app)
     _add_errors(app)
+    app.openapi = described.describe(app)  # type: ignore[method-assign]
     app.add_middleware(Gate, archive=archive, access=access, traffic=app.state.traffic)
     app.add_middleware(GZipMiddleware, minimum_size=1024, compresslevel=5)
     app.add_middleware(ProtectiveHeaders)

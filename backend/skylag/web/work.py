@@ -142,7 +142,7 @@ def again(request: Request, number: int) -> Response:
 # ---------------------------------------------------------------------------------------------- sending files
 
 
-@router.post("/api/batches", summary="Begin to send files")
+@router.post("/api/batches", summary="Begin to send files", status_code=201)
 def open_batch(request: Request) -> Response:
     """A new batch; files are sent into it one by one, then work is begun with all of them."""
     inbox = _inbox(request)
@@ -153,7 +153,7 @@ def open_batch(request: Request) -> Response:
     )  # fmt: skip
 
 
-@router.put("/api/batches/{batch}/files", summary="Send a file")
+@router.put("/api/batches/{batch}/files", summary="Send a file", status_code=201)
 async def send_file(request: Request, batch: str, name: Annotated[str, Query(max_length=300)]) -> Response:
     """The body is the file as it is; its kind is told by its content, its name only tells the receiver."""
     inbox = _inbox(request)
