@@ -41,9 +41,13 @@ def _advise_parser(commands: Any, caution: str) -> None:
         "and single-frequency errors at a site of a kept day, with the assumptions behind them.",
         epilog="methods of survey:\n"
         + "\n".join(f"  {name:8} {meaning}" for name, meaning in METHODS.items())
-        + "\n\nservice levels: " + ", ".join(LEVEL) + "\n\nexample:\n"
-        '  skylag advise --archive skylag-demo --day 2031-03-12 --site "Kelm Isle airstrip" --sheet kelm.pdf\n\n'
-        + caution,
+        + "\n\nservice levels: "
+        + ", ".join(LEVEL)
+        + "\n\nexamples:\n"
+        '  skylag advise --archive skylag-demo --day 2031-03-12 --site "Kelm Isle airstrip" --sheet kelm.pdf\n'
+        '  skylag advise --archive skylag-demo --site "Hobbinstead dam survey" --failed 2031-03-12T07:05:00Z\n'
+        "  skylag advise --archive skylag-demo --at -40.1 146.2 --at -39.8 146.9 --shape route --baseline 20\n\n"
+        "exit status: 0 told; 2 bad command; 3 no answer (the reason is told).\n\n" + caution,
     )
     settings.add_kept_day(parser)
     parser.add_argument("--site", default="", metavar="NAME", help="a site of the region; without, all in a line each")
@@ -92,9 +96,14 @@ def _sites_parser(commands: Any, caution: str) -> None:
     parser = commands.add_parser(
         "sites",
         help="take a list of sites into a region file",
-        description="Take sites from CSV (name, lat, lon, kind) or GeoJSON points and add them to a region file. Sites "
-        "whose name the region already has are left as they are.",
-        epilog=caution,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+        description="Take sites from CSV (name, lat, lon, kind) or GeoJSON points and add them to a region file.\n"
+        "Sites whose name the region already has are left as they are.",
+        epilog="examples:\n"
+        "  skylag sites aerodromes.csv --region region.toml --kind aerodrome\n"
+        "  skylag sites places.geojson --region region.toml\n\n"
+        "exit status: 0 all sites are in the region file; 1 done, some lines were left out (each named); 2 bad\n"
+        "command; 3 the region file was left as it was.\n\n" + caution,
     )
     parser.add_argument("list", type=Path, metavar="FILE", help="CSV or GeoJSON")
     parser.add_argument("--region", type=Path, required=True, metavar="FILE", help="region.toml to add to")

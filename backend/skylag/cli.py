@@ -128,9 +128,15 @@ def _demo_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]"
     parser = commands.add_parser(
         "demo",
         help="compute the invented sample days and open the page",
-        description="Compute the three invented sample days (calm, storm, recovery) into an embedded archive and open "
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+        description="Compute the three invented sample days (calm, storm, recovery) into an embedded archive and open\n"
         "the page on the loopback address as soon as the first is there. Days already there are not computed again.",
-        epilog=CAUTION,
+        epilog="examples:\n"
+        "  skylag demo\n"
+        "  skylag demo --archive /tmp/sample --port 0 --no-browser\n"
+        "  skylag demo --no-serve\n\n"
+        "exit status: 0 ended as asked; 2 bad command; 3 no page (the reason is told); 130 stopped by Ctrl-C.\n\n"
+        + CAUTION,
     )
     parser.add_argument("--archive", default="skylag-demo", metavar="PLACE", help="folder of the archive (skylag-demo)")
     parser.add_argument("--port", default="", metavar="PORT", help="port of the page (8017; 0 takes a free one)")
@@ -144,9 +150,16 @@ def _serve_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]
     parser = commands.add_parser(
         "serve",
         help="serve what an archive holds",
-        description="Serve the page over what the archive holds. Settings may come from the environment: "
-        "SKYLAG_ARCHIVE, SKYLAG_HOST, SKYLAG_PORT.",
-        epilog=CAUTION,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+        description="Serve the page over what the archive holds, until Ctrl-C. Settings may come from the\n"
+        "environment: SKYLAG_ARCHIVE, SKYLAG_HOST, SKYLAG_PORT. On another address than loopback files are\n"
+        "taken only with a key (`skylag token`), and --reading key asks readers for one too.",
+        epilog="examples:\n"
+        "  skylag serve --archive skylag-archive\n"
+        "  skylag serve --archive skylag-archive --work --port 0\n"
+        "  skylag serve --archive skylag-archive --host 0.0.0.0 --reading key\n\n"
+        "exit status: 0 ended as asked; 2 bad command; 3 no page (the reason is told); 130 stopped by Ctrl-C.\n\n"
+        + CAUTION,
     )
     parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
     parser.add_argument("--host", default="", help="address to listen on (127.0.0.1)")
@@ -160,10 +173,14 @@ def _hindcast_parser(commands: "argparse._SubParsersAction[argparse.ArgumentPars
     parser = commands.add_parser(
         "hindcast",
         help="replay outlooks over an archive and tell how often they were right",
-        description="For each day from FROM to TO, make the outlook as it would have been made the evening before, "
-        "from earlier days alone, and score it with the day itself: errors, ranges, chances, beside persistence, "
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+        description="For each day from FROM to TO, make the outlook as it would have been made the evening before,\n"
+        "from earlier days alone, and score it with the day itself: errors, ranges, chances, beside persistence,\n"
         "recurrence after 27 days, climatology, and the usual of the last 27 days. Keeps no outlook.",
-        epilog=CAUTION,
+        epilog="examples:\n"
+        "  skylag hindcast 2031-03-01 2031-04-30 --archive skylag-archive\n"
+        "  skylag hindcast 2031-03-12 2031-03-13 --archive skylag-demo --indices Kp_ap_Ap_SN_F107_since_1932.txt\n\n"
+        "exit status: 0 told; 2 bad command; 3 no result (the reason is told).\n\n" + CAUTION,
     )
     parser.add_argument("first", type=_date, metavar="FROM", help="first day foretold, YYYY-MM-DD")
     parser.add_argument("last", type=_date, metavar="TO", help="last day foretold")
@@ -353,9 +370,7 @@ def _serve(options: argparse.Namespace) -> int:
     )  # fmt: skip
 
 
-def _open_page(
-    place: str, host: str, port: str, *, browser: bool, reading: str = "open", workers: str = ""
-) -> int:
+def _open_page(place: str, host: str, port: str, *, browser: bool, reading: str = "open", workers: str = "") -> int:
     from skylag.archive import open_archive
     from skylag.jobs.board import Worker
     from skylag.web.access import for_host

@@ -30,9 +30,12 @@ def add(commands: Any, caution: str) -> None:
         description="Stretches of strained or broken cells that touch in space and time, parted by their cause, with\n"
         "extent, worst value, sites reached and reason; for one use where asked.  With --arrivals: when fronts were\n"
         "foretold at the sites within the hour, with the spread, and whether they came within two spreads.",
-        epilog="uses where the region names none: " + ", ".join(use.name for use in uses.PUBLISHED) + "\n\nexample:\n"
-        "  skylag events --archive skylag-demo --day 2031-03-12 --use ground --format geojson --out storm.geojson\n\n"
-        + caution,
+        epilog="uses where the region names none:\n"
+        + "\n".join(f"  {use.name}" for use in uses.PUBLISHED)
+        + "\n\nexamples:\n"
+        "  skylag events --archive skylag-demo --day 2031-03-12 --use ground --format geojson --out storm.geojson\n"
+        "  skylag events --archive skylag-demo --arrivals\n\n"
+        "exit status: 0 told; 2 bad command; 3 no answer (the reason is told).\n\n" + caution,
     )
     settings.add_kept_day(parser)
     parser.add_argument("--use", default="", metavar="NAME", help="a use or its kind; the day's own states without")

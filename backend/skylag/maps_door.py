@@ -47,7 +47,8 @@ def add(commands: Any, caution: str) -> None:
         epilog="examples:\n"
         "  skylag maps --archive skylag-archive --day 2031-03-12 --format ionex --out storm.31i\n"
         "  skylag maps --archive skylag-archive --format geojson --at 07:00 --step 0.5 --out lines.geojson\n"
-        "  skylag maps --archive skylag-archive --format gridpoints --every 60\n\n" + caution,
+        "  skylag maps --archive skylag-archive --format gridpoints --every 60\n\n"
+        "exit status: 0 written; 2 bad command; 3 no result (the reason is told).\n\n" + caution,
     )
     parser.add_argument("--results", type=Path, metavar="DIR", help="a folder of results, instead of an archive")
     settings.add_kept_day(parser)
@@ -105,9 +106,9 @@ def _grid_points(day: _Day, fields: Fields) -> str:
         )  # fmt: skip
     box = day.region
     points = augmentation_grid.points_in(box.south, box.north, box.west, box.east)
-    return delimited.grid_points_csv(*augmentation_grid.rows_of(
-        augmentation_grid.delays_at(day.samples, points, fields.times)
-    ))
+    return delimited.grid_points_csv(
+        *augmentation_grid.rows_of(augmentation_grid.delays_at(day.samples, points, fields.times))
+    )
 
 
 def _chosen(fields: Fields, every_min: float, at: str) -> Fields:

@@ -32,7 +32,10 @@ def add(commands: Any, caution: str, clock: Clock) -> None:
         formatter_class=argparse.RawDescriptionHelpFormatter,
         description="Hour by hour: expected vertical delay with its 50, 80 and 95 % ranges, quantiles of the slope,\n"
         "the chance that corrections are strained or broken for a use; windows, advice, and what it all rests on.",
-        epilog='example:\n  skylag ahead --archive skylag-demo --site "Kelm Isle airstrip" --use ground\n\n' + caution,
+        epilog='examples:\n  skylag ahead --archive skylag-demo --site "Kelm Isle airstrip" --use ground\n'
+        "  skylag ahead --archive skylag-demo --at -40.1 146.2 --format csv --out ahead.csv\n"
+        "  skylag ahead --archive skylag-demo --record\n\n"
+        "exit status: 0 told; 2 bad command; 3 no answer (the reason is told).\n\n" + caution,
     )
     ahead.add_argument("--site", default="", metavar="NAME", help="a site of the region; the first without")
     ahead.add_argument("--at", nargs=2, type=float, metavar=("LAT", "LON"), help="a place that is no site")
@@ -55,7 +58,8 @@ def add(commands: Any, caution: str, clock: Clock) -> None:
         "forecast text with its line `:Issued:`.\n\nexamples:\n"
         "  skylag activity --archive skylag-archive --measured Kp_ap_Ap_SN_F107_since_1932.txt\n"
         "  skylag activity --archive skylag-archive --outlook forecast.txt\n"
-        "  skylag activity --archive skylag-archive --expect 2031-03-14 80 --expect 2031-03-15 20\n\n" + caution,
+        "  skylag activity --archive skylag-archive --expect 2031-03-14 80 --expect 2031-03-15 20\n\n"
+        "exit status: 0 kept, or told what is kept; 2 bad command; 3 nothing kept (the reason is told).\n\n" + caution,
     )
     activity.add_argument("--measured", type=Path, action="append", default=[], metavar="FILE",
                           help="indices, GFZ tables or WDC form; may come again")  # fmt: skip
