@@ -26,6 +26,9 @@ if TYPE_CHECKING:
     from skylag.jobs.advising import AskedService, DayAdvice, Desk
 
 
+_SHEETS = (".html", ".pdf")
+
+
 def add(commands: Any, caution: str) -> None:
     """Add the two commands to the command line."""
     _advise_parser(commands, caution)
@@ -115,16 +118,22 @@ def _advise(options: argparse.Namespace) -> int:
     from skylag.archive import open_archive
     from skylag.jobs.advising import Desk
 
+    if options.sheet and options.sheet.suffix.lower() not in _SHEETS:
+        raise Refused(
+            f"--sheet {options.sheet}: a sheet is HTML or PDF; end its name with {' or '.join(_SHEETS)}",
+            name="sheet", value=str(options.sheet), allowed=_SHEETS,
+        )  # fmt: skip
     place = options.archive or settings.from_environment().archive
-    with open_archive(place) as archive:
+    with open_archive(place, existing=True) as archive:
         heads = [head for head in archive.days() if not options.region or head.region == options.region]
         if options.day:
             heads = [head for head in heads if str(head.day) == options.day]
         if not heads:
             known = sorted({f"{head.region} {head.day}" for head in archive.days()})
             raise Missing(
-                f"{place} keeps no such day; it keeps {', '.join(known[-10:]) or 'none'}", what=options.day,
-                nearest=known[-10:],
+                f"{place} keeps no such day{_named(options.region, options.day)}; it keeps "
+                f"{', '.join(known[-10:]) or 'none'}",
+                what=options.day, nearest=known[-10:],
             )  # fmt: skip
         if len({head.region for head in heads}) > 1:
             names = sorted({head.region for head in heads})
@@ -136,6 +145,12 @@ def _advise(options: argparse.Namespace) -> int:
         day = desk.day(heads[0].region, str(heads[0].day))
         _tell(desk, day, options)
     return 0
+
+
+def _named(*words: str) -> str:
+    """What was asked for, in brackets; nothing where nothing was named."""
+    said = " ".join(word for word in words if word)
+    return f" ({said})" if said else ""
 
 
 def _job(day: "DayAdvice", site: str, options: argparse.Namespace) -> Job:
@@ -160,16 +175,13 @@ def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
     from skylag.web import asking, report, sentences
 
     clock = report.Clock(day.record.region.timezone)
-    if day.record.origin.simulated:
-        print("Invented data: nothing here was measured.")
-    if day.record.head.provisional:
-        print(sentences.GOES_ON)
+    lines = sentences.notices(day.record.origin.simulated, day.record.head.provisional)
     if not options.at and not options.site:
+        lines.append(f"{day.record.region.name}, {day.record.head.day} (times UTC)")
         for one in day.record.region.sites:
             advice = desk.survey(day, _job(day, one.name, options))
-            print(f"{one.name}: {report.survey_verdict(advice, clock)}")
-        print("For one of them, with reasons and assumptions: --site NAME")
-        print(sentences.CAUTION)
+            lines.append(f"{one.name}: {report.survey_verdict(advice, clock)}")
+        print("\n".join([*lines, "For one of them, with reasons and assumptions: --site NAME", sentences.CAUTION]))
         return
     for pair in options.at or ():
         asking.place(*pair)
@@ -177,38 +189,37 @@ def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
     site = Site(job.name, *job.places[0], "job") if options.at else day.site(options.site)
     advice = desk.survey(day, job)
     entries = report.survey_entries(advice)
-    print(f"{site.name}, {day.record.head.day}, {day.record.region.name} (times UTC)")
-    print(report.survey_verdict(advice, clock))
+    lines.append(f"{site.name}, {day.record.head.day}, {day.record.region.name} (times UTC)")
+    lines.append(report.survey_verdict(advice, clock))
     for window in advice.windows:
-        print(f"  {clock.utc(window.start)} - {clock.utc_end(window.end)}  {window.verdict:7} {window.why}")
-    for sentence in report.survey_figures(advice, clock):
-        print(sentence)
+        span = f"{clock.utc(window.start)} - {clock.utc_end(window.end)}"
+        lines.append(f"  {span}  {window.verdict:7} {window.why}".rstrip())
+    lines += report.survey_figures(advice, clock)
     if options.failed:
         found = day.explain(job, asking.instant(options.failed, "failed"))
-        print(f"Was it the ionosphere at {options.failed}? {found.verdict.capitalize()}.")
-        for sentence in found.evidence:
-            print(f"  {sentence}")
+        lines.append(f"Was it the ionosphere at {options.failed}? {found.verdict.capitalize()}.")
+        lines += [f"  {sentence}" for sentence in found.evidence]
     assumed = [*advice.assumptions]
     service = _service(options)
     if site.kind == "aerodrome":
         told, more, entries_of_approaches = _aerodrome(day, site, options)
-        print("\n".join(told))
+        lines += told
         assumed += more
         entries += entries_of_approaches
     try:
         left = day.broadcast_model(site)
         if np.isfinite(left.day_range_95_m):
-            print(f"Users of one frequency: the broadcast model leaves {left.day_range_95_m:.1f} m of range (95 %).")
+            lines.append(
+                f"Users of one frequency: the broadcast model leaves {left.day_range_95_m:.1f} m of range (95 %)."
+            )
             assumed += left.assumptions
     except (Missing, NotEnough) as trouble:
-        print(f"Users of one frequency: {trouble.message}")
-    print("Assumed:")
-    for sentence in dict.fromkeys(assumed):
-        print(f"  {sentence}")
-    print(advice.caution)
+        lines.append(f"Users of one frequency: {trouble.message}")
+    # Printed as one, so that no verdict is read without its caution because a later question was refused.
+    print("\n".join([*lines, "Assumed:", *(f"  {sentence}" for sentence in dict.fromkeys(assumed)), advice.caution]))
     if options.sheet:
         title, blocks = report.of_site(day, site, advice, service.choices, service.names)
-        if options.sheet.suffix == ".pdf":
+        if options.sheet.suffix.lower() == ".pdf":
             options.sheet.write_bytes(sheet.to_pdf(title, blocks, day.record.head.saved_at))
         else:
             options.sheet.write_text(sheet.to_html(title, blocks), encoding="utf-8")
@@ -274,8 +285,13 @@ def _sites(options: argparse.Namespace) -> int:
     before = options.region.read_text(encoding="utf-8").rstrip("\n")
     pieces = [_toml(site, options.kind) for site in fresh]
     if pieces:
-        options.region.write_text("\n".join([before, *pieces]), encoding="utf-8")
-        settings.read_region(options.region)
+        passing = options.region.with_name(options.region.name + ".writing")
+        try:  # in place only when it is whole and understood
+            passing.write_text("\n".join([before, *pieces]), encoding="utf-8")
+            settings.read_region(passing)
+            passing.replace(options.region)
+        finally:
+            passing.unlink(missing_ok=True)
     print(f"sites added to {options.region}: {len(fresh)}; it has {len(there) + len(fresh)}")
     return 1 if problems else 0
 

@@ -6,6 +6,7 @@ Exit status: 0 all went well; 1 done, but some inputs were left out (each is nam
 
 import argparse
 import contextlib
+import errno
 import os
 import sys
 import threading
@@ -62,8 +63,20 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return 141
     except OSError as trouble:
         where = f"{trouble.filename}: " if trouble.filename else ""
-        print(f"skylag: {where}{trouble.strerror or trouble}", file=sys.stderr)
+        way_out = _WAYS_OUT.get(trouble.errno or 0, "")
+        print(f"skylag: {where}{trouble.strerror or trouble}{way_out and '; ' + way_out}", file=sys.stderr)
         return 3
+
+
+_WAYS_OUT = {
+    errno.ENOENT: "check the path; a folder to write into must be there first",
+    errno.EACCES: "change its rights, or choose a place where you may read and write",
+    errno.EROFS: "choose a place where you may write",
+    errno.ENOSPC: "make room on the disk and try again",
+    errno.EISDIR: "name a file",
+    errno.ENOTDIR: "a file stands where a folder is wanted; choose another place",
+    errno.EEXIST: "a file stands where a folder is wanted; choose another place",
+}
 
 
 def command_parser() -> argparse.ArgumentParser:
@@ -76,7 +89,7 @@ def command_parser() -> argparse.ArgumentParser:
         epilog=f"{CAUTION} Start with `skylag demo`.",
     )
     parser.add_argument("--version", action="version", version=f"skylag {work.own_version()}")
-    commands = parser.add_subparsers(title="commands", metavar="")
+    commands = parser.add_subparsers(title="commands", metavar="COMMAND")
     _day_parser(commands)
     _demo_parser(commands)
     _serve_parser(commands)
@@ -135,8 +148,8 @@ def _demo_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]"
         "  skylag demo\n"
         "  skylag demo --archive /tmp/sample --port 0 --no-browser\n"
         "  skylag demo --no-serve\n\n"
-        "exit status: 0 ended as asked; 2 bad command; 3 no page (the reason is told); 130 stopped by Ctrl-C.\n\n"
-        + CAUTION,
+        "exit status: 0 ended as asked, also by Ctrl-C once the page is there; 2 bad command; 3 no page (the\n"
+        "reason is told); 130 stopped by Ctrl-C while the first day was computed.\n\n" + CAUTION,
     )
     parser.add_argument("--archive", default="skylag-demo", metavar="PLACE", help="folder of the archive (skylag-demo)")
     parser.add_argument("--port", default="", metavar="PORT", help="port of the page (8017; 0 takes a free one)")
@@ -158,8 +171,7 @@ def _serve_parser(commands: "argparse._SubParsersAction[argparse.ArgumentParser]
         "  skylag serve --archive skylag-archive\n"
         "  skylag serve --archive skylag-archive --work --port 0\n"
         "  skylag serve --archive skylag-archive --host 0.0.0.0 --reading key\n\n"
-        "exit status: 0 ended as asked; 2 bad command; 3 no page (the reason is told); 130 stopped by Ctrl-C.\n\n"
-        + CAUTION,
+        "exit status: 0 ended by Ctrl-C or SIGTERM; 2 bad command; 3 no page (the reason is told).\n\n" + CAUTION,
     )
     parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
     parser.add_argument("--host", default="", help="address to listen on (127.0.0.1)")
@@ -215,6 +227,7 @@ def _day(options: argparse.Namespace) -> int:
     choices = settings.estimation_from(options, options.region).choices(
         Choices(signals=parse_wanted(options.signals), epoch_step_s=options.every * 60.0)
     )
+    _look_ahead(options.out, options.archive)
     bar = _Bar("day", quiet=options.quiet)
     with contextlib.ExitStack() as opened:
         executor = opened.enter_context(open_executor(options.workers or settings.default_workers()))
@@ -242,6 +255,22 @@ def _day(options: argparse.Namespace) -> int:
         _tell_day(made.products)
         print("results: " + ", ".join(str(path) for path in paths))
     return 1 if made.left_out else 0
+
+
+def _look_ahead(out: Path, archive: str) -> None:
+    """Say before the work, not after it, that its results have no place to go.
+
+    Raises Refused or OSError as writing would.
+    """
+    there = next(path for path in (out, *out.absolute().parents) if path.exists())
+    if not there.is_dir():
+        raise Refused(f"--out {out}: {there} is a file; name a folder", name="out", value=str(out), allowed="a folder")
+    if not os.access(there, os.W_OK | os.X_OK):
+        raise PermissionError(errno.EACCES, os.strerror(errno.EACCES), str(there))
+    if archive and Path(archive).exists():
+        from skylag.archive import open_archive  # a database is opened only where one is asked for
+
+        open_archive(archive).close()
 
 
 def _earlier(opened: contextlib.ExitStack, place: str, days: int) -> work.Earlier | None:
@@ -337,6 +366,10 @@ def _demo(options: argparse.Namespace) -> int:
 
     if options.no_serve:
         compute(todo)
+        print(
+            f"{options.archive}: {len(days)} invented days of {region.name}; `skylag serve --archive "
+            f"{options.archive}` shows them, `skylag advise --archive {options.archive}` tells what they mean for work"
+        )
         return 0
     # The page opens with the first day; the others follow while it is looked at.
     if not there:
@@ -411,7 +444,7 @@ def _hindcast(options: argparse.Namespace) -> int:
             raise Refused(f"{options.indices}: holds no geomagnetic indices; give a GFZ table or WDC cards",
                           name="indices", value=str(options.indices), allowed="GFZ or WDC form")  # fmt: skip
     first, last = (np.datetime64(day.isoformat(), "D") for day in (options.first, options.last))
-    with open_archive(options.archive or settings.from_environment().archive) as archive:
+    with open_archive(options.archive or settings.from_environment().archive, existing=True) as archive:
         known = archive.regions()
         if not options.region and len(known) != 1:
             raise Refused(f"name a region with --region: the archive has {', '.join(known) or 'none'}", name="region",

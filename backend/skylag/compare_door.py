@@ -105,7 +105,7 @@ def _of_archive(options: argparse.Namespace, maps: Fields) -> tuple[Fields, Bias
     place = options.archive or settings.from_environment().archive
     middle = maps.times[len(maps.times) // 2]
     day = options.day or str(np.datetime64(middle, "D"))
-    with open_archive(place) as archive:
+    with open_archive(place, existing=True) as archive:
         heads = [head for head in archive.days() if options.region in ("", head.region) and day == str(head.day)]
         if not heads:
             raise Missing(

@@ -148,7 +148,7 @@ def _of_folder(folder: Path) -> _Day:
 
 def _of_archive(options: argparse.Namespace) -> _Day:
     place = options.archive or settings.from_environment().archive
-    with open_archive(place) as archive:
+    with open_archive(place, existing=True) as archive:
         newest = archive.newest(options.region, options.day, place)
         record: DayRecord = archive.day(newest.region, newest.day)
         samples = archive.samples(newest.region, newest.day) if options.format == "gridpoints" else None

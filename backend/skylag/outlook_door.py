@@ -17,6 +17,8 @@ import numpy as np
 from skylag import settings
 from skylag.errors import Missing, Refused
 from skylag.tables import ActivityOutlook, Floats, Indices, Region
+from skylag.web import sentences
+from skylag.web.sentences import CAUTION
 
 if TYPE_CHECKING:
     from skylag.archive import Archive
@@ -73,10 +75,10 @@ def add(commands: Any, caution: str, clock: Clock) -> None:
         parser.add_argument("--archive", default="", metavar="PLACE", help="folder, or a PostgreSQL URL")
 
 
-def _opened(options: argparse.Namespace) -> "Archive":
+def _opened(options: argparse.Namespace, *, existing: bool = False) -> "Archive":
     from skylag.archive import open_archive  # a database is opened only where one is asked for
 
-    return open_archive(options.archive or settings.from_environment().archive)
+    return open_archive(options.archive or settings.from_environment().archive, existing=existing)
 
 
 def _say(event: str, **facts: object) -> None:
@@ -94,7 +96,7 @@ def _ahead(options: argparse.Namespace, clock: Clock) -> int:
     if options.format == "csv" and options.record:
         raise Refused("--record: is told as text or json", name="format", value="csv", allowed=("text", "json"))
     given = settings.read_region(Path(options.region)) if options.region.endswith(".toml") else None
-    with _opened(options) as archive:
+    with _opened(options, existing=given is None) as archive:
         known = archive.regions()
         region = given.name if given else options.region or (known[0] if len(known) == 1 else "")
         if region in known:
@@ -105,7 +107,7 @@ def _ahead(options: argparse.Namespace, clock: Clock) -> int:
         lat, lon = options.at or _site(given, options.site)
         if options.record:
             facts: Mapping[str, Any] = hindcast.summary(hindcast.track_record(archive, region))
-            lines = [f"{region}: {facts['outlooks']} outlooks whose days came", *hindcast.scored(facts)]
+            lines = [f"{region}: {facts['outlooks']} outlooks whose days came", *hindcast.scored(facts), CAUTION]
         elif region in known:
             facts = outlook.ahead(archive, region, lat, lon, options.use, _two(options.expect), options.most)
             lines = _told(facts)
@@ -120,6 +122,8 @@ def _ahead(options: argparse.Namespace, clock: Clock) -> int:
         options.out.write_text(text, encoding="utf-8")
     else:
         print(text, end="")
+    if options.format == "csv":  # a table has no place for it
+        print("\n".join([*sentences.notices(facts["simulated"], False), CAUTION]), file=sys.stderr)
     return 0
 
 

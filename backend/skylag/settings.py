@@ -11,6 +11,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, fields, replace
 from pathlib import Path
 from typing import Any, NoReturn
+from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 from skylag.chain import BROADCAST, CLIMATOLOGICAL, DRAW, HOLD, IGNORE, Choices
 from skylag.errors import FormatError, Refused
@@ -222,6 +223,13 @@ def default_workers() -> str:
     return f"local:{os.cpu_count() or 1}"
 
 
+# What a region file may hold, and how it is written.
+_TABLES = {
+    "region": "[region]", "site": "[[site]]", "estimation": "[estimation]", "thresholds": "[thresholds]",
+    "use": "[[use]]",
+}  # fmt: skip
+
+
 def read_region(path: Path) -> Region:
     """The region of a region.toml: [region] with its rectangle, [[site]] entries, optional [thresholds] and [[use]].
 
@@ -231,6 +239,16 @@ def read_region(path: Path) -> Region:
     box = content.get("region")
     if not isinstance(box, dict):
         raise FormatError(f"{path}: has no [region] table; see README, 'Your own region'", path=str(path), line=0)
+    strange = sorted(set(content) - set(_TABLES))
+    if strange:
+        raise Refused(
+            f"{path}: knows nothing of {', '.join(strange)}; a region file may hold {', '.join(_TABLES.values())}",
+            name=strange[0], value=None, allowed=list(_TABLES),
+        )  # fmt: skip
+    for name, written in _TABLES.items():
+        wanted = list if written.startswith("[[") else dict
+        if not isinstance(content.get(name, wanted()), wanted):
+            raise Refused(f"{path}: write {name} as {written}", name=name, value=None, allowed=written)
     known = {item.name for item in fields(Region)} - {"sites", "thresholds", "uses"}
     unknown = sorted(set(box) - known)
     if unknown:
@@ -244,6 +262,9 @@ def read_region(path: Path) -> Region:
     numbers = {"south", "north", "west", "east", "step_deg", "shell_height_km"}
     values = {name: _number(path, name, value) if name in numbers else str(value) for name, value in box.items()}
     sites = tuple(_site(path, entry) for entry in content.get("site", []))
+    twice = sorted({site.name for site in sites if [other.name for other in sites].count(site.name) > 1})
+    if twice:
+        raise Refused(f"{path}: two [[site]] are named {twice[0]}", name="site", value=twice, allowed="names apart")
     limits = content.get("thresholds", {})
     allowed = {item.name for item in fields(Thresholds)}
     for name in limits:
@@ -257,7 +278,17 @@ def read_region(path: Path) -> Region:
     names = [use.name for use in uses]
     if len(set(names)) < len(names):
         raise Refused(f"{path}: two [[use]] have one name", name="use", value=names, allowed="names apart")
-    return Region(**values, sites=sites, thresholds=thresholds, uses=uses)  # type: ignore[arg-type]
+    try:
+        region = Region(**values, sites=sites, thresholds=thresholds, uses=uses)  # type: ignore[arg-type]
+        ZoneInfo(region.timezone)
+    except Refused as trouble:
+        raise Refused(f"{path}: {trouble.message}", **trouble.details) from None
+    except (ZoneInfoNotFoundError, ValueError, OSError):
+        raise Refused(
+            f"{path}: timezone {values['timezone']!r} is not known; write one like Australia/Melbourne or Etc/UTC",
+            name="timezone", value=values["timezone"], allowed="a name of the time zone database",
+        ) from None  # fmt: skip
+    return region
 
 
 def _toml(path: Path) -> dict[str, Any]:
@@ -287,9 +318,17 @@ def _in_order(path: Path, limits: Thresholds) -> Thresholds:
 
 
 def _site(path: Path, entry: Mapping[str, Any]) -> Site:
+    which = f"site {entry['name']}" if "name" in entry else "a [[site]]"
+    known = {item.name for item in fields(Site)}
+    unknown = sorted(set(entry) - known)
+    if unknown:
+        raise Refused(
+            f"{path}: {which} knows nothing of {', '.join(unknown)}; it may hold {', '.join(sorted(known))}",
+            name=unknown[0], value=entry[unknown[0]], allowed=sorted(known),
+        )  # fmt: skip
     missing = [name for name in ("name", "lat", "lon") if name not in entry]
     if missing:
-        raise Refused(f"{path}: a [[site]] lacks {', '.join(missing)}", name=missing[0], value=None, allowed="a value")
+        raise Refused(f"{path}: {which} lacks {', '.join(missing)}", name=missing[0], value=None, allowed="a value")
     lat, lon = _number(path, "lat", entry["lat"]), _number(path, "lon", entry["lon"])
     if not (-90 <= lat <= 90 and -180 <= lon <= 360):
         raise Refused(

@@ -151,10 +151,10 @@ def clock() -> np.datetime64:
     return np.datetime64(time.time_ns(), "ns")
 
 
-def _opened(options: argparse.Namespace) -> "Archive":
+def _opened(options: argparse.Namespace, *, existing: bool = False) -> "Archive":
     from skylag.archive import open_archive  # a database is opened only where one is asked for
 
-    return open_archive(options.archive or settings.from_environment().archive)
+    return open_archive(options.archive or settings.from_environment().archive, existing=existing)
 
 
 def _workers(options: argparse.Namespace) -> str:
@@ -207,7 +207,10 @@ def _watch(options: argparse.Namespace) -> int:
     rules = alerts.read_rules(options.alerts) if options.alerts else ()
     choices = settings.estimation_from(options, options.region).choices(Choices(epoch_step_s=options.every * 60.0))
     if not options.folder.is_dir():
-        raise Refused(f"{options.folder}: is no folder", name="DIR", value=str(options.folder), allowed="a folder")
+        raise Refused(
+            f"{options.folder}: is no folder; make it first, or name the one where files appear",
+            name="DIR", value=str(options.folder), allowed="a folder",
+        )  # fmt: skip
     stop, journal, watch = _stopping(), Journal(sys.stderr, clock), None
     with _opened(options) as archive:
         while not stop.is_set():
@@ -227,7 +230,7 @@ def _watch(options: argparse.Namespace) -> int:
 
 
 def _check(options: argparse.Namespace) -> int:
-    with _opened(options) as archive:
+    with _opened(options, existing=True) as archive:
         found = () if options.quick else archive.check()
         days, versions = archive.size()
     for line in found:
@@ -241,7 +244,7 @@ def _check(options: argparse.Namespace) -> int:
 def _backup(options: argparse.Namespace) -> int:
     from skylag.archive.backups import backup
 
-    with _opened(options) as archive:
+    with _opened(options, existing=True) as archive:
         counts = backup(archive, options.folder)
     print(f"{options.folder}: {counts['product']} versions of days, {sum(counts.values())} rows in all")
     return 0
@@ -265,7 +268,7 @@ def _token(options: argparse.Namespace) -> int:
             "`skylag token list`",
             name="name", value=options.name, allowed="a name to make or revoke, none to list",
         )  # fmt: skip
-    with _opened(options) as archive:
+    with _opened(options, existing=options.what != "make") as archive:
         if options.what == "make":
             print(guard.make_key(archive, options.name, options.scope, clock()))
             print(f"this is the only time the key is shown; it may {options.scope}", file=sys.stderr)

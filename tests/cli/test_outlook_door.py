@@ -104,7 +104,10 @@ def test_refusals(place: str, capsys: pytest.CaptureFixture[str], words: tuple[s
 def test_an_archive_without_days(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     """Nothing to learn from: climatology where the region is told, and it says so; no window, no promise."""
     status, _, err = run(capsys, "ahead", "--archive", str(tmp_path / "new"))
-    assert status == 3 and "the archive has none yet" in err
+    assert status == 3 and "no archive is there" in err and not (tmp_path / "new").exists()
+    open_archive(tmp_path / "empty").close()
+    status, _, err = run(capsys, "ahead", "--archive", str(tmp_path / "empty"))
+    assert status == 3 and "the archive has none yet" in err and "region.toml" in err
     file = tmp_path / "region.toml"
     file.write_text('[region]\nname = "Here"\nsouth = 50.0\nnorth = 54.0\nwest = 8.0\neast = 14.0\n')
     words = ("ahead", "--archive", str(tmp_path / "new"), "--region", str(file), "--at", "52", "10")

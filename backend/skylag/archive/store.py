@@ -40,8 +40,15 @@ Day = np.datetime64 | str  # a GPS-time day, like 2031-05-11
 _Result = TypeVar("_Result")
 
 
-def open_archive(place: str | Path, *, slant_folder: str | Path | None = None) -> "Archive":
+_SUFFIXES = (".sqlite", ".db")  # of a file that is named as an archive itself
+
+
+def open_archive(
+    place: str | Path, *, slant_folder: str | Path | None = None, existing: bool = False
+) -> "Archive":
     """Open an archive, made new where there is none.
+
+    Raises Missing where `existing` is asked for and nothing is there, Refused where the place is no archive.
 
     place         a folder (its archive.sqlite is meant), a file ending in .sqlite or .db, or a URL: sqlite:///path,
                   postgresql://user@host/name
@@ -60,6 +67,17 @@ def open_archive(place: str | Path, *, slant_folder: str | Path | None = None) -
                 name="archive", value=str(place), allowed="a path or a database URL",
             )  # fmt: skip
         path = Path(url.database)
+        if existing and not path.is_file():
+            raise Missing(
+                f"{place}: no archive is there; name one with --archive or SKYLAG_ARCHIVE, or begin one with "
+                "`skylag demo` or `skylag day --archive`",
+                what=str(place), nearest=None,
+            )  # fmt: skip
+        if path.suffix not in _SUFFIXES and path.is_file():
+            raise Refused(
+                f"{place}: is a file and no archive; name the folder of an archive, or one that is not there yet",
+                name="archive", value=str(place), allowed="a folder, a .sqlite or .db file, or a database URL",
+            )  # fmt: skip
         path.parent.mkdir(parents=True, exist_ok=True)
         folder = folder if folder is not None else path.with_name(path.name + ".slants")
     elif folder is None:
@@ -74,7 +92,7 @@ def open_archive(place: str | Path, *, slant_folder: str | Path | None = None) -
 def _url_of(place: str | Path) -> URL:
     if isinstance(place, Path) or "://" not in place:
         path = Path(place)
-        file = path if path.is_file() or path.suffix in (".sqlite", ".db") else path / "archive.sqlite"
+        file = path if path.is_file() or path.suffix in _SUFFIXES else path / "archive.sqlite"
         return URL.create("sqlite", database=str(file))
     try:
         url = make_url(place)
@@ -296,7 +314,11 @@ class Archive:
         heads = [head for head in self.days() if region in ("", head.region) and day in ("", str(head.day))]
         if not heads:
             wanted = " ".join(part for part in (region, day) if part) or "any day"
-            raise Missing(f"{place}: {wanted} is not kept here; see `skylag day --archive`", what=wanted, nearest=None)
+            kept = sorted({f"{head.region} {head.day}" for head in self.days()})[-10:]
+            raise Missing(
+                f"{place}: {wanted} is not kept here; it keeps {', '.join(kept) or 'none'}; see `skylag day --archive`",
+                what=wanted, nearest=kept,
+            )  # fmt: skip
         return max(heads, key=lambda head: head.day)
 
     def day(self, region: str, day: Day, version: int | None = None) -> DayRecord:

@@ -24,6 +24,7 @@ from skylag.impact.states import content_known, nearest_cells, plus_minus, state
 from skylag.ionosphere.covariance import plane_km
 from skylag.ionosphere.geometry import mapping
 from skylag.tables import STATE_NAMES, STRAINED, UNSEEN, Bools, Bytes, Fields, Flag, Floats, Ints, Thresholds, Times
+from skylag.timescales import gps_to_utc
 
 CAUTION = (
     "Planning aid, not for navigation and no substitute for checks in the field: official notices, the correction "
@@ -561,6 +562,11 @@ class Explanation:
     caution: str = CAUTION
 
 
+def _second(time: np.datetime64) -> str:
+    """A GPS time as a person writes it in UTC."""
+    return f"{np.datetime_as_string(gps_to_utc(time), unit='s')}Z"
+
+
 def was_it_the_ionosphere(
     advice: Advice, flags: Sequence[Flag], time: np.datetime64, around_min: float = 10.0
 ) -> Explanation:
@@ -572,8 +578,8 @@ def was_it_the_ionosphere(
     at = np.flatnonzero(np.abs(advice.times - time) <= reach)
     if not len(at):
         raise Refused(
-            f"{time}: no map lies within {around_min:g} minutes; the maps reach from {advice.times[0]} to "
-            f"{advice.times[-1]} GPS time",
+            f"{_second(time)}: no map lies within {around_min:g} minutes; the maps of this day reach from "
+            f"{_second(advice.times[0])} to {_second(advice.times[-1])}; choose the day that holds the time",
             name="time", value=str(time), allowed=f"{advice.times[0]} to {advice.times[-1]}",
         )  # fmt: skip
     said: list[str] = []

@@ -235,7 +235,8 @@ def _listen(host: str, port: int) -> socket.socket:
             raise
     except OSError as cause:
         raise Refused(
-            f"cannot listen on {host} port {port}: {cause.strerror}; choose another with --port, or 0 for any free one",
+            f"cannot listen on {host} port {port}: {cause.strerror}; choose another with --port, or 0 for any free "
+            "one; or another address of this machine with --host",
             name="port", value=port, allowed="a free port of this machine",
         ) from cause  # fmt: skip
     return listening
