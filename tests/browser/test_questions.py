@@ -125,6 +125,7 @@ def test_the_network_and_ahead(visit: Open) -> None:
     v = visit(plotly=False, accept_downloads=True)
     v.go("?ask=network&day=2031-05-11", wait=False)
     v.page.wait_for_selector("#network-table tbody tr")
+    assert v.page.is_visible("#network-caution") and "not for navigation" in v.text("#network-caution")
     assert v.page.locator("#network-table tbody tr").count() == 10
     assert v.text("#network-table tbody tr").startswith("HULL")
     assert "HULL stands out of 10 receivers" in v.text("#network-said")

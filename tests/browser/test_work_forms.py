@@ -52,6 +52,11 @@ def test_sites_and_jobs_by_keyboard(server: str, place: Path, visit: Open, tmp_p
     v.page.keyboard.press("Enter")
     v.page.wait_for_selector("#sites-body table")
     assert v.page.locator("#sites-body tr").count() == 4
+    for width in (1400, 390):  # what may be pressed is not cut off
+        v.page.set_viewport_size({"width": width, "height": 900})
+        beyond = "() => [...document.querySelectorAll('#sites-body .scroll')].map((e) => e.scrollWidth - e.clientWidth)"
+        assert v.page.evaluate(beyond) == [0], width
+        assert v.page.evaluate("() => document.querySelector('#sites-body input[type=file]').clientWidth") > 200
     v.page.focus("#sites-body input[name=name]")
     v.page.keyboard.type("New pier")
     v.page.keyboard.press("Tab")

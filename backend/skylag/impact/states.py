@@ -458,7 +458,8 @@ def _compared(who: str, slope: tuple[float, float] | None, front: Front) -> str:
     """One way of seeing a slope against a front's own."""
     if slope is None:
         return f"{who} {'say' if who.endswith('s') else 'says'} nothing there"
-    text = f"up to {slope[0]:.0f} ± {slope[1]:.0f} mm/km by {who}"
+    digits = int(slope[1] < 1.0)  # "± 0" would claim to be exact
+    text = f"up to {slope[0]:.{digits}f} ± {slope[1]:.{digits}f} mm/km by {who}"
     more = slope[0] - front.slope > 2.0 * float(np.hypot(slope[1], front.slope_sigma))
     less = slope[0] + 2.0 * slope[1] < 0.25 * front.slope
     return text + (", which disagrees" if more else ", which sees little of it" if less else ", which agrees")

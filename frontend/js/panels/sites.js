@@ -78,7 +78,7 @@ export class SitesPanel {
             make("button", { type: "button", class: "linklike", text: SITE_WORDS.remove, "aria-label": SITE_WORDS.removeOf(one.name), click: () => this.#remove(one.name) }))
         : "";
       body.append(make("tr", {}, make("th", { scope: "row", text: one.name }), make("td", { text: one.kind }),
-        make("td", { class: "number nowrap", text: `${latText(one.lat)}, ${lonText(one.lon)}${one.onMap ? "" : `, ${SITE_WORDS.offMap}`}` }), ...(may ? [buttons] : [])));
+        make("td", { class: "number" }, make("span", { text: `${latText(one.lat)},` }), " ", make("span", { text: lonText(one.lon) }), one.onMap ? "" : `, ${SITE_WORDS.offMap}`), ...(may ? [buttons] : [])));
     }
     return make("div", { class: "scroll", tabindex: 0, role: "region", "aria-label": SITE_WORDS.about }, make("table", {}, body));
   }
