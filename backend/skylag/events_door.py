@@ -6,7 +6,7 @@ Thin: parses, calls, prints or writes one file.
 
 import argparse
 import sys
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -49,13 +49,13 @@ def _events(options: argparse.Namespace) -> int:
     from skylag.archive import open_archive  # a database is opened only where one is asked for
 
     place = options.archive or settings.from_environment().archive
-    with open_archive(place) as archive:
+    with open_archive(place, existing=True) as archive:
         newest = archive.newest(options.region, options.day, place)
         record = archive.day(newest.region, newest.day)
         fields, flags = archive.fields(newest.region, newest.day), archive.flags(newest.region, newest.day)
     about = sentences.about(record.origin.simulated, record.head.provisional)
     if options.arrivals:
-        _write(_arrivals(record, flags, options), options)
+        _write(_arrivals(record, flags, options), options, about)
         return 0
     if options.use:
         judged = uses.judge_for(uses.find_use(record.region, options.use), fields, flags, record.region)
@@ -66,7 +66,7 @@ def _events(options: argparse.Namespace) -> int:
         "csv": lambda: event_files.to_csv(found), "geojson": lambda: event_files.to_geojson(found, about) + "\n",
         "json": lambda: event_files.to_json(found, about) + "\n",
     }[options.format]()  # fmt: skip
-    _write(text, options)
+    _write(text, options, about)
     return 0
 
 
@@ -83,10 +83,10 @@ def _arrivals(record: "DayRecord", flags: Sequence[Flag], options: argparse.Name
     return event_files.arrivals_to_csv(told, rows)
 
 
-def _write(text: str, options: argparse.Namespace) -> None:
+def _write(text: str, options: argparse.Namespace, about: Mapping[str, Any]) -> None:
     if options.out:
         options.out.write_text(text, encoding="utf-8")
     else:
         print(text, end="")
     if options.format == "csv":  # a table has no place for it
-        print(sentences.CAUTION, file=sys.stderr)
+        print("\n".join([*about["notices"], about["caution"]]), file=sys.stderr)

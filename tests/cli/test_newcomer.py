@@ -174,7 +174,7 @@ def test_a_whole_day_does_not_read_as_none() -> None:
     start = np.datetime64("2031-03-12T00:00:18", "ns")  # midnight UTC in GPS time
     end = start + np.timedelta64(24, "h")
     assert clock.span(start, end) == ("00:00 - 24:00", "10:00 - 10:00")
-    assert clock.until(start + np.timedelta64(6, "h")) == "06:00"
+    assert clock.utc_end(start + np.timedelta64(6, "h")) == "06:00"
 
 
 def test_an_interruption_is_answered_in_words_from_the_first_moment() -> None:
