@@ -16,21 +16,24 @@ from invented import files, network
 
 pytestmark = pytest.mark.browser
 BASE = "KELM"
-DAY_BEFORE = "2031-03-10"
+DAYS_BEFORE = ("2031-03-06", "2031-03-07", "2031-03-08", "2031-03-09", "2031-03-10")
 STORM = "2031-03-12"
 
 
 def own_files(folder: Path) -> list[Path]:
-    """A morning of the firm's own base of a day that the archive lacks, its orbits, and a letter got among them."""
-    made = network.simulate(DAY_BEFORE, [BASE], (0.0, 8.0), 60.0)
-    signals = made.signals[0]
-    observations = folder / files.observation_name(signals.receiver.name[:9], made.day, 60.0)
-    files.write(observations, files.compact_bytes(files.observation_text(signals)))
-    orbits = folder / files.navigation_name(made.day)
-    files.write(orbits, files.packed(made.navigation_text()))
+    """Working days of the firm's own base which the archive lacks, their orbits, and a letter got among them."""
+    paths = []
+    for day in DAYS_BEFORE:
+        made = network.simulate(day, [BASE], (0.0, 8.0), 60.0)
+        signals = made.signals[0]
+        observations = folder / files.observation_name(signals.receiver.name[:9], made.day, 60.0)
+        files.write(observations, files.compact_bytes(files.observation_text(signals)))
+        orbits = folder / files.navigation_name(made.day)
+        files.write(orbits, files.packed(made.navigation_text()))
+        paths += [observations, orbits]
     letter = folder / "letter.txt"
     letter.write_text("Dear colleagues,\n", encoding="utf-8")
-    return [observations, orbits, letter]
+    return [*paths, letter]
 
 
 def test_the_afternoon_before_and_the_evening_after(newcomer: Newcomer, browser: Any, tmp_path: Path) -> None:
@@ -45,12 +48,15 @@ def test_the_afternoon_before_and_the_evening_after(newcomer: Newcomer, browser:
         # Own files: each told what it is or why not; then the day that is made of them is there.
         page.click("#files-open")
         page.set_input_files("#files-input", [str(path) for path in own_files(tmp_path)])
-        page.wait_for_function("() => document.querySelectorAll('#files-list li[data-state=sent]').length === 2")
+        page.wait_for_function("() => document.querySelectorAll('#files-list li[data-state=sent]').length === 10")
         assert "letter.txt" in page.inner_text("#files-list li[data-state=refused]")
         page.click("#files-begin")
-        page.wait_for_selector("#files-tasks li[data-state=done]", timeout=300_000)
+        page.wait_for_function(
+            "() => document.querySelectorAll('#files-tasks li[data-state=done]').length === 5", timeout=400_000
+        )
         page.keyboard.press("Escape")
-        page.wait_for_selector(f"#day option[value$='{DAY_BEFORE}']", state="attached")
+        for day in DAYS_BEFORE:
+            page.wait_for_selector(f"#day option[value$='{day}']", state="attached")
 
         # The place of work becomes a site, which all days know from now on.
         page.focus("#sites > summary")
@@ -62,18 +68,25 @@ def test_the_afternoon_before_and_the_evening_after(newcomer: Newcomer, browser:
         page.wait_for_function("() => document.getElementById('place-site').textContent.includes('Weir three')")
         page.select_option("#place-site", label="Weir three (survey)")
 
-        # Tomorrow: three days of an archive are few, and the page says so instead of promising.
+        # Tomorrow: eight mornings tell of mornings; of the hours that nobody saw nothing is promised.
         page.click("#asks a[data-ask=ahead]")
-        page.wait_for_function("() => document.getElementById('ahead-body').textContent.includes('Too few days')")
+        page.wait_for_function("() => document.getElementById('ahead-body').textContent.includes('seen on 8 days')")
         told = page.inner_text("#ahead-body")
-        assert "not known" in told and "not for navigation" in page.inner_text(".caution")
+        spans = [line for line in told.splitlines() if " – " in line and " UTC: " in line]
+        assert len(spans) == 4, told
+        for tomorrow in ("14", "15"):
+            assert any(f"{tomorrow} March 2031, 00:00 UTC – {tomorrow} March 2031, 08:00 UTC: likely holds" in line
+                       for line in spans), spans  # fmt: skip
+        assert all("likely holds" in line or "chances not known" in line for line in spans)
+        assert "How outlooks turned out" in told and "not for navigation" in page.inner_text(".caution")
         link = page.url
         assert "ask=ahead" in link and "at=-41.2" in link
 
         # The link that is mailed shows the same to the one who opens it.
         other = browser.new_page()
         other.goto(link)
-        other.wait_for_function("() => document.getElementById('ahead-body').textContent.includes('Too few days')")
+        other.wait_for_function("() => document.getElementById('ahead-body').textContent.includes('likely holds')")
+        assert [line for line in other.inner_text("#ahead-body").splitlines() if line in spans] == spans
         other.close()
 
         # The evening after: fixing failed while the wall passed.
