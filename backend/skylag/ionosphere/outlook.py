@@ -513,7 +513,7 @@ def _basis(world: _World, last: int, told: npt.NDArray[Any]) -> tuple[str, ...]:
         first = f"no day of the last {ROTATION} in the archive: climatology, and what {count} earlier days taught"
     else:
         first = f"climatology scaled to {month} of the last {ROTATION} days; {count} days in all"
-    notes = [first]
+    notes = [first, "climatology: International Reference Ionosphere (CCIR coefficients) at the mean flux of 81 days"]
     if count and last + 1 < ROTATION:
         notes.append("no whole solar rotation yet: recurrence after 27 days is not known")
     if 0 < count < 30:
