@@ -13,7 +13,7 @@ from pathlib import Path
 import numpy as np
 
 from skylag.archive import open_archive
-from skylag.constants import L1_M_PER_TECU
+from skylag.constants import L1_M_PER_TECU, WGS84_F
 from skylag.events import Arrival
 from skylag.impact import arrivals
 from skylag.ionosphere.geometry import earth_fixed
@@ -61,6 +61,12 @@ _PLACES = {
     "EDDY": (-39.9, 143.9), "FERN": (-40.9, 145.3), "GULL": (-41.2, 146.4), "HULL": (-41.4, 147.8),
     "IRON": (-40.1, 148.0), "JETT": (-42.9, 147.3),
 }  # fmt: skip
+
+
+def at_geocentric(layer: Floats, lats: Floats, rows: Floats) -> Floats:
+    """Maps (T, lat, lon) at geocentric latitudes: what a file of them must hold, reckoned column by column."""
+    geographic = np.degrees(np.arctan(np.tan(np.radians(rows)) / (1.0 - WGS84_F) ** 2))
+    return np.apply_along_axis(lambda column: np.interp(geographic, lats, column), 1, layer.astype(np.float64))
 
 
 def _receiver(name: str, lat: float, lon: float) -> Receiver:

@@ -17,6 +17,7 @@ from skylag.errors import Refused
 from skylag.formats import contours, delimited, ionex, netcdf, results
 from skylag.impact.states import carried, honest_state
 from skylag.ionosphere import augmentation_grid
+from skylag.ionosphere.interpolation import at_geocentric_rows
 from skylag.tables import Biases, Fields, Region, Samples, Thresholds
 from skylag.timescales import gps_to_utc, utc_to_gps
 from skylag.web import sentences
@@ -42,7 +43,8 @@ def add(commands: Any, caution: str) -> None:
         help="write a day's maps in an open format",
         formatter_class=argparse.RawDescriptionHelpFormatter,
         description="The maps of a kept day, or of a folder that `skylag day --out` wrote: IONEX 1.0 with rms maps\n"
-        "and biases; NetCDF with CF conventions; lines of equal delay as GeoJSON, of one map; CSV, a row per cell;\n"
+        "and biases, at geocentric latitudes as the format counts them; NetCDF with CF conventions; lines of equal\n"
+        "delay as GeoJSON, of one map; CSV, a row per cell;\n"
         "the field at the standard augmentation grid points (350 km) with the test of the local planar fit, as CSV.",
         epilog="examples:\n"
         "  skylag maps --archive skylag-archive --day 2031-03-12 --format ionex --out storm.31i\n"
@@ -79,8 +81,9 @@ def _maps(options: argparse.Namespace) -> int:
     if options.format == "ionex":
         description = sentences.description(day.region.name, day.simulated, day.provisional)
         text = ionex.write(
-            carried(fields), day.made, day.region.shell_height_km, description=description, biases=day.biases
-        )
+            at_geocentric_rows(carried(fields)), day.made, day.region.shell_height_km, description=description,
+            biases=day.biases, comment=sentences.GEOCENTRIC,
+        )  # fmt: skip
     elif options.format == "geojson":
         about = sentences.about(day.simulated, day.provisional)
         text = contours.to_geojson(fields, 0, options.step, about, day.region.thresholds.unseen_sigma_m) + "\n"

@@ -67,6 +67,14 @@ def test_lines_are_as_the_format_has_them() -> None:
     assert lines[first + 2] == "  123" * 4
 
 
+def test_a_comment_is_broken_between_words() -> None:
+    said = "Latitudes are geocentric: values lie between two rows of the map, and none beyond the last."
+    text = ionex.write(invented(np.ones((1, 3, 3))), np.datetime64("2024-03-31", "ns"), 400.0, comment=said)
+    lines = [line[:60].rstrip() for line in text.splitlines() if line[60:] == f"{'COMMENT':20s}"]
+    assert len(lines) == 2 and " ".join(lines) == said
+    assert ionex.parse(text.encode(), "made").problems == ()
+
+
 def test_a_grid_the_format_cannot_hold_is_refused() -> None:
     with pytest.raises(Refused, match="tenths"):
         written(invented(np.ones((1, 3, 3)), step=0.25))

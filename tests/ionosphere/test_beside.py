@@ -10,7 +10,9 @@ from tests.formats.test_ionex import invented as published_on
 
 from skylag.constants import WGS84_F
 from skylag.errors import NotEnough
+from skylag.formats import ionex
 from skylag.ionosphere.beside import Beside, lay_beside
+from skylag.ionosphere.interpolation import at_geocentric_rows
 from skylag.tables import Biases, Fields
 
 LATS, LONS = np.arange(42.0, 48.1, 0.5), np.arange(-168.0, -157.9, 0.5)
@@ -55,6 +57,24 @@ def test_equal_maps_differ_by_nothing_though_their_latitudes_are_counted_otherwi
     assert found.facts()["within_95"] == 1.0
     # A map read at our latitudes as they stand would be off by 0.19 degrees, 0.19 TECU.
     assert geocentric(np.array(45.0)) == pytest.approx(44.8076, abs=1e-3)
+
+
+def test_our_own_map_through_the_format_is_our_own_map() -> None:
+    """Written at geocentric latitudes and read there again: a tenth of a TECU is what the format rounds to.
+
+    Written at geographic latitudes all of it would come back 0.19 TECU off, less or more by what the format rounds.
+    """
+    told = ionex.write(at_geocentric_rows(ours()), START, 400.0)
+    back = ionex.parse(told.encode(), "ours").table
+    assert isinstance(back, Fields)
+    found = lay_beside(ours(), back)
+    assert np.nanmax(np.abs(found.difference)) < 0.06
+    assert abs(found.facts()["mean_tecu"]) < 0.02
+    row = np.isfinite(found.difference).any(axis=(0, 2))
+    assert row.sum() >= len(LATS) - 2
+    plain = ionex.parse(ionex.write(ours(), START, 400.0).encode(), "as it stood").table
+    assert isinstance(plain, Fields)
+    assert lay_beside(ours(), plain).facts()["mean_tecu"] > 0.15
 
 
 def test_each_part_is_told_apart() -> None:

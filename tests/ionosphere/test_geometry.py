@@ -104,6 +104,13 @@ def test_geodetic_undoes_earth_fixed(lat: float, lon: float, height_m: float) ->
     assert back[2] == pytest.approx(height_m, abs=1e-4)
 
 
+@given(LATS)
+def test_geocentric_latitude_is_the_angle_at_the_centre(lat: float) -> None:
+    x, _, z = geometry.earth_fixed(lat, 0.0, 0.0)
+    assert geometry.geocentric_latitude(lat) == pytest.approx(np.degrees(np.arctan2(z, x)), abs=1e-9)
+    assert geometry.geodetic_latitude(geometry.geocentric_latitude(lat)) == pytest.approx(lat, abs=1e-9)
+
+
 def test_poles_and_the_axis() -> None:
     lat, _, height = geometry.geodetic(np.array([[0.0, 0.0, 6_356_752.3142], [0.0, 0.0, -6_356_852.3142]]))
     assert lat.tolist() == [90.0, -90.0]

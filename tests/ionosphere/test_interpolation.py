@@ -4,7 +4,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import assume, given
 from hypothesis import strategies as st
 from tests.conftest import Evidence
 from tests.ionosphere import zimm_day
@@ -13,7 +13,7 @@ from skylag import formats
 from skylag.constants import L1_HZ, L2_HZ, REFRACTION_M3_S2, SPEED_OF_LIGHT_M_S, TECU, WGS84_F
 from skylag.errors import NotEnough
 from skylag.ionosphere import arcs, bias_algebra, geometry, orbits, pairs
-from skylag.ionosphere.interpolation import slant_at, vertical_at
+from skylag.ionosphere.interpolation import at_geocentric_rows, slant_at, vertical_at
 from skylag.tables import Fields, Reading, Signals
 
 START = np.datetime64("2024-03-30", "ns")
@@ -108,6 +108,53 @@ def test_a_missing_node_is_not_bridged() -> None:
     assert np.isnan(vertical_at(field, 48.0, 22.0, HALF_PAST, turning=False)[0])
     assert np.isfinite(vertical_at(field, 48.0, 12.0, START, turning=False)[0])
     assert np.isfinite(vertical_at(field, 48.0, 22.0, field.times[1], turning=False)[0])
+
+
+def latitude_of(rows: np.ndarray) -> np.ndarray:
+    """Geographic latitude of geocentric rows: the other way round by its own formula."""
+    return np.degrees(np.arctan(np.tan(np.radians(rows)) / (1.0 - WGS84_F) ** 2))
+
+
+@given(st.integers(-800, 650), st.sampled_from([1, 2, 5, 10, 25]), st.integers(3, 30))
+def test_geocentric_rows_are_regular_within_the_map_and_lose_little(south: int, step: int, count: int) -> None:
+    """On tenths of a degree, for the format; what is given up at the edges is less than a step and two tenths."""
+    lats = (south + step * np.arange(count)) / 10.0
+    assume(lats[-1] < 89.0)
+    content = np.broadcast_to(lats[None, :, None] + 100.0, (1, count, 2))
+    found = at_geocentric_rows(maps(content, lats, np.array([5.0, 6.0])))
+    assert np.allclose(found.lats * 10, np.rint(found.lats * 10), atol=1e-6)
+    assert np.allclose(np.diff(found.lats), step / 10.0)
+    where = latitude_of(found.lats)
+    assert lats[0] - 1e-9 <= where[0] and where[-1] <= lats[-1] + 1e-9
+    assert (where[0] - lats[0]) + (lats[-1] - where[-1]) < step / 10.0 + 0.2
+    # Content that grows with geographic latitude is told as the geographic latitude of the row.
+    assert found.vtec[0, :, 0] == pytest.approx(where + 100.0, abs=2e-4)
+    assert found.vtec_sigma[0, :, 1] == pytest.approx((where + 100.0) / 10.0, abs=2e-4)
+
+
+def test_geocentric_rows_of_a_region() -> None:
+    """48 to 56 N in half degrees: rows 0.192 degrees further south, so 48.3 to 55.8 lie closest; one row is lost."""
+    lats = np.arange(48.0, 56.1, 0.5)
+    found = at_geocentric_rows(maps(np.ones((1, 17, 2)), lats, np.array([5.0, 6.0])))
+    assert found.lats == pytest.approx(np.arange(48.3, 55.9, 0.5))
+    mirrored = at_geocentric_rows(maps(np.ones((1, 17, 2)), -lats[::-1], np.array([5.0, 6.0])))
+    assert mirrored.lats == pytest.approx(-found.lats[::-1])
+    # Two rows have room for two of a finer step; of one, or of a strip of a tenth, no map can be made.
+    assert len(at_geocentric_rows(maps(np.ones((1, 2, 2)), lats[:2], np.array([5.0, 6.0]))).lats) == 2
+    for few in (lats[:1], np.array([45.0, 45.1])):
+        with pytest.raises(NotEnough, match="larger region"):
+            at_geocentric_rows(maps(np.ones((1, len(few), 2)), few, np.array([5.0, 6.0])))
+
+
+def test_geocentric_rows_have_no_number_beside_a_row_that_has_none() -> None:
+    lats = np.arange(48.0, 56.1, 0.5)
+    content = np.ones((2, 17, 2))
+    content[1, 8, 0] = np.nan  # 52.0 N: between the rows of 51.5 and 52.0, and of 52.0 and 52.5
+    found = at_geocentric_rows(maps(content, lats, np.array([5.0, 6.0])))
+    none = np.isnan(found.vtec)
+    beside = (latitude_of(found.lats) > 51.5) & (latitude_of(found.lats) < 52.5)
+    assert none[1, :, 0].tolist() == beside.tolist() and none.sum() == beside.sum() == 2
+    assert np.isnan(found.vtec_sigma).sum() == 2
 
 
 def test_one_map_serves_its_own_time_only() -> None:

@@ -6,7 +6,7 @@ from pathlib import Path
 
 import numpy as np
 from fastapi.testclient import TestClient
-from tests.builders import RECEIVERS, REGION, STORM_DAY, invented_day, write_archive
+from tests.builders import RECEIVERS, REGION, STORM_DAY, at_geocentric, invented_day, write_archive
 
 from skylag import timescales
 from skylag.archive import Archive, open_archive
@@ -79,9 +79,9 @@ def test_the_day_as_files(client: TestClient, small_archive: Archive, tmp_path: 
     answer = client.get(f"{DAY}/maps.inx")
     assert answer.status_code == 200 and "Planning aid" in answer.text and "Invented data" in answer.text
     back = ionex.parse(answer.content, "maps.inx").table
-    seen = np.isfinite(stored.vtec)
-    assert back.vtec.shape == stored.vtec.shape
-    assert np.nanmax(np.abs(back.vtec[seen] - stored.vtec[seen])) <= 0.051
+    expected = at_geocentric(np.where(stored.support > 0, stored.vtec, np.nan), stored.lats, back.lats)
+    assert np.isfinite(expected).any() and "Latitudes are geocentric" in answer.text
+    np.testing.assert_allclose(back.vtec, expected, atol=0.051)
 
 
 def test_the_series_says_what_the_reading_says(client: TestClient) -> None:

@@ -9,6 +9,7 @@ Layout: IONEX 1.0 (Schaer, Gurtner and Feltens 1998): labels in columns 61-80, v
 
 import re
 from dataclasses import dataclass, field
+from textwrap import wrap
 from typing import Any
 
 import numpy as np
@@ -245,12 +246,14 @@ def _biases(header: _Header, times: np.ndarray, name: str) -> Biases:
 
 def write(
     fields: Fields, created: np.datetime64, shell_height_km: float, program: str = "SKYLAG", description: str = "",
-    base_radius_km: float = 6371.0, biases: Biases | None = None,
+    base_radius_km: float = 6371.0, biases: Biases | None = None, comment: str = "",
 ) -> str:  # fmt: skip
     """IONEX 1.0 text of maps of content and its sigma (as RMS maps); to 0.1 TECU, epochs in UT to the second.
 
     created  GPS time written as the time of making
+    fields   on geocentric latitudes, which the format counts
     biases   written as the header's auxiliary block, see `_auxiliary`
+    comment  written as COMMENT lines, broken between words
     Raises Refused for a grid that is not on whole tenths of a degree, since the format has nothing finer.
     """
     lat_step, lon_step = _step(fields.lats, "latitudes"), _step(fields.lons, "longitudes")
@@ -262,6 +265,7 @@ def write(
         _line(f"{1.0:8.1f}{'':12s}{'IONOSPHERE MAPS':20s}{'GNSS':20s}", "IONEX VERSION / TYPE"),
         _line(f"{program[:20]:20s}{'':20s}{made:20s}", "PGM / RUN BY / DATE"),
         *(_line(description[k : k + 60], "DESCRIPTION") for k in range(0, len(description), 60)),
+        *(_line(part, "COMMENT") for part in wrap(comment, 60)),
         _line(_six(times[0]), "EPOCH OF FIRST MAP"),
         _line(_six(times[-1]), "EPOCH OF LAST MAP"),
         _line(f"{interval:6d}", "INTERVAL"),

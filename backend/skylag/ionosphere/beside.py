@@ -14,9 +14,9 @@ import numpy as np
 import numpy.typing as npt
 from scipy.ndimage import uniform_filter
 
-from skylag.constants import REFRACTION_M3_S2, SPEED_OF_LIGHT_M_S, TECU, WGS84_F, carrier_hz
+from skylag.constants import REFRACTION_M3_S2, SPEED_OF_LIGHT_M_S, TECU, carrier_hz
 from skylag.errors import NotEnough
-from skylag.ionosphere.geometry import mapping
+from skylag.ionosphere.geometry import geocentric_latitude, mapping
 from skylag.ionosphere.interpolation import vertical_at
 from skylag.tables import Biases, Fields, Floats, Times
 from skylag.timescales import gps_to_utc, utc_to_gps
@@ -152,7 +152,7 @@ def lay_beside(
         )  # fmt: skip
     times = ours.times[inside]
     lon, lat = np.meshgrid(ours.lons, ours.lats)
-    geocentric = np.degrees(np.arctan((1.0 - WGS84_F) ** 2 * np.tan(np.radians(lat))))
+    geocentric = geocentric_latitude(lat)
     shape = (len(times), *lat.shape)
     when = np.clip(times.astype(np.int64), first.astype(np.int64), last.astype(np.int64)).astype("datetime64[ns]")
     told, told_sigma = vertical_at(

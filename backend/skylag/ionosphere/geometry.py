@@ -36,6 +36,16 @@ def geodetic(position_m: npt.ArrayLike) -> tuple[Floats, Floats, Floats]:
     return np.degrees(lat_rad), np.degrees(np.arctan2(y, x)), height
 
 
+def geocentric_latitude(lat: npt.ArrayLike) -> Floats:
+    """Geocentric latitude [deg], the angle at the Earth's centre, of places of geodetic latitude [deg] (WGS 84)."""
+    return np.asarray(np.degrees(np.arctan((1.0 - WGS84_F) ** 2 * np.tan(np.radians(lat)))))
+
+
+def geodetic_latitude(geocentric: npt.ArrayLike) -> Floats:
+    """Geodetic latitude [deg] of places of geocentric latitude [deg], on the ellipsoid."""
+    return np.asarray(np.degrees(np.arctan(np.tan(np.radians(geocentric)) / (1.0 - WGS84_F) ** 2)))
+
+
 def earth_fixed(lat: npt.ArrayLike, lon: npt.ArrayLike, height_m: npt.ArrayLike) -> Floats:
     """Earth-fixed positions (..., 3) [m] of geodetic latitude, longitude [deg] and height [m] (WGS 84)."""
     lat_rad, lon_rad = np.radians(lat), np.radians(lon)

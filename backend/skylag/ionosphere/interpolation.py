@@ -2,14 +2,17 @@
 
 Four nodes around a place, two maps around a time.  Maps turn with the Sun between their epochs where asked: the day's
 bulge stays under the Sun while the Earth turns away below.  A place without all four nodes and a time outside the
-maps are NaN.  Never extrapolates, never smooths.
+maps are NaN.  Our own maps are read at the geocentric latitudes that such files count (section 2).  Never extrapolates,
+never smooths.
 """
+
+from dataclasses import replace
 
 import numpy as np
 import numpy.typing as npt
 
 from skylag.errors import NotEnough
-from skylag.ionosphere.geometry import mapping, pierce
+from skylag.ionosphere.geometry import geocentric_latitude, geodetic_latitude, mapping, pierce
 from skylag.tables import Fields, Floats, Ints, Times
 
 _DEGREES_PER_SECOND = 360.0 / 86_400.0
@@ -64,6 +67,53 @@ def slant_at(
     content, sigma = vertical_at(maps, pierce_lat, pierce_lon, times, turning)
     factor = np.where(up > 0.0, mapping(upward, shell_height_m), np.nan)
     return content * factor, sigma * factor
+
+
+def at_geocentric_rows(maps: Fields) -> Fields:
+    """Content and its sigma of our maps on rows that are regular in geocentric latitude; `lats` are geocentric.
+
+    Values are read between two rows of the map, linear in latitude: NaN where either of them is, never beyond the first
+    or last row.  The other layers are empty.  The rows: see `_geocentric_rows`.
+    """
+    rows = _geocentric_rows(maps.lats)
+    vtec, sigma = vertical_at(
+        maps, geodetic_latitude(rows)[:, None], maps.lons, maps.times[:, None, None], turning=False
+    )  # fmt: skip
+    blank = np.full(vtec.shape, np.nan, dtype=np.float32)
+    return replace(
+        maps, lats=rows, vtec=vtec.astype(np.float32), vtec_sigma=sigma.astype(np.float32),
+        support=np.zeros(vtec.shape, dtype=np.uint16), slope=blank, slope_sigma=blank, slope_east=blank,
+        slope_north=blank, state=np.zeros(vtec.shape, dtype=np.uint8),
+    )  # fmt: skip
+
+
+def _geocentric_rows(lats: Floats) -> Floats:
+    """Geocentric latitudes on whole tenths of a degree, the map's own step apart, that lie within its rows.
+
+    Of the places where such rows may begin the one that loses fewest, and of those the one whose rows lie closest to
+    the map's, so that least is taken between two.  Both counts give the map nearly the same width, so that all its rows
+    would have to lie on tenths for none to be lost: mostly one is.  A map of two rows has room for a finer step only.
+    Raises NotEnough where not even two rows of the finest step lie within.
+    """
+    own = geocentric_latitude(lats)
+    first, last = (int(np.ceil(own[0] * 10.0 - 1e-9)), int(np.floor(own[-1] * 10.0 + 1e-9))) if len(own) > 1 else (0, 0)
+    if last <= first:
+        raise NotEnough(
+            f"the map's rows, {', '.join(f'{lat:g}' for lat in lats[:3])} N, leave no room for two geocentric "
+            "latitudes on tenths of a degree: take a larger region",
+            had=len(lats), needed=3, where="latitudes",
+        )  # fmt: skip
+    step = min(max(round(float(lats[1] - lats[0]) * 10.0), 1), last - first)
+    choices = [np.arange(first + k, last + 1e-9, step) / 10.0 for k in range(step)]
+    most = max(len(rows) for rows in choices)
+    return min(
+        (rows for rows in choices if len(rows) == most), key=lambda rows: float(_away(rows, own).sum())
+    )  # fmt: skip
+
+
+def _away(rows: Floats, own: Floats) -> Floats:
+    """How far each row is from the nearest of the map's own [deg]."""
+    return np.asarray(np.abs(rows[:, None] - own[None, :]).min(axis=1))
 
 
 def _between_nodes(maps: Fields, layer: npt.NDArray[np.float32], number: Ints, lat: Floats, lon: Floats) -> Floats:

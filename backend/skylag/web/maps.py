@@ -14,6 +14,7 @@ from skylag.archive import Archive, DayRecord, slants
 from skylag.errors import Missing
 from skylag.formats import coast, contours, delimited, ionex, netcdf
 from skylag.impact.states import carried, honest_state
+from skylag.ionosphere.interpolation import at_geocentric_rows
 from skylag.tables import Fields
 from skylag.web import asking, nearby, payloads, sentences, witnesses
 from skylag.web.frames import Answers
@@ -117,7 +118,8 @@ def field_netcdf(request: Request, region: str, day: str, version: int | None = 
 def maps_ionex(request: Request, region: str, day: str, version: int | None = None) -> Response:
     """Maps of content and its uncertainty, every quarter of an hour, with the day's biases, as IONEX 1.0.
 
-    Where no line of sight carries a cell it has the format's 9999.
+    Latitudes are geocentric, as the format counts them: values lie between two rows of the map.  Where no line of sight
+    carries a cell of either there is the format's 9999.
     """
     archive: Archive = request.app.state.archive
     record = archive.day(region, asking.day(day), version)
@@ -130,7 +132,10 @@ def maps_ionex(request: Request, region: str, day: str, version: int | None = No
     about = sentences.description(record.region.name, record.origin.simulated, record.head.provisional)
     saved_at = np.datetime64(timescales.utc_to_gps(record.head.saved_at.astype("datetime64[ns]")).item(), "ns")
     biases = archive.biases(region, record.head.day, record.head.version)
-    text = ionex.write(carried(thin), saved_at, record.region.shell_height_km, description=about, biases=biases)
+    text = ionex.write(
+        at_geocentric_rows(carried(thin)), saved_at, record.region.shell_height_km, description=about, biases=biases,
+        comment=sentences.GEOCENTRIC,
+    )  # fmt: skip
     return payloads.file(text.encode("ascii", "replace"), f"{region}-{day}.inx", "text/plain")
 
 

@@ -17,6 +17,10 @@ CAUTION = (
 )
 INVENTED = "Invented data: nothing here was measured."
 GOES_ON = "This day goes on: more files are to come, and what is said of it may change."
+GEOCENTRIC = (
+    "Latitudes are geocentric. The maps were computed on geographic ones (WGS 84): values are interpolated between two "
+    "of their rows, linear in latitude; none where either row has none, none beyond the last row."
+)
 OUTSIDE = "Unseen here: the place lies outside the map of this region."
 _NOT_COVERED = "Treat it as not covered."
 _EIGHT = ("north", "north-east", "east", "south-east", "south", "south-west", "west", "north-west")
