@@ -293,9 +293,9 @@ def limits_of_sight(rays: Rays, calibration: Calibration) -> tuple[str, ...]:
     datum = str(calibration.summary.get("datum", ""))
     if "zero mean" in datum:
         said.append(
-            "No satellite biases were given for every signal pair: where none were, the satellites' mean is set to "
-            "zero. Maps do not depend on it; single biases compare with a product only after both are brought to one "
-            "mean."
+            "Not every signal pair has published satellite biases of this day: where it has none, the satellites' "
+            "mean is set to zero. Maps do not depend on it; single biases compare with a product only after both are "
+            "brought to one mean."
         )
     said += [str(note) for note in calibration.summary.get("notes", ())]
     return tuple(said)

@@ -207,7 +207,7 @@ export async function openBatch(how) {
 /**
  * Send one file as it is; `progress` hears the share that is sent.
  * @param {string} batch @param {File} file @param {{signal: AbortSignal, progress: (share: number) => void}} how
- * @returns {Promise<{kind: string, keptAs: string}>}
+ * @returns {Promise<{kind: string, keptAs: string, marker: string, day: string}>}
  */
 export function sendFile(batch, file, { signal, progress }) {
   return new Promise((resolve, reject) => {
@@ -218,7 +218,7 @@ export function sendFile(batch, file, { signal, progress }) {
     request.upload.addEventListener("progress", ({ loaded, total }) => progress(total ? loaded / total : 0));
     request.addEventListener("load", () => {
       const content = request.response;
-      if (request.status === 201) resolve({ kind: content.kind, keptAs: content.kept_as });
+      if (request.status === 201) resolve({ kind: content.kind, keptAs: content.kept_as, marker: content.marker, day: content.day ?? "" });
       else reject(new ServiceError(content?.error ?? `${WORDS.strangeAnswer} (${request.status})`, content?.kind ?? "", request.status));
     });
     request.addEventListener("error", () => reject(new ServiceError(WORDS.offline, "Offline", 0)));

@@ -384,6 +384,8 @@ export const FILE_WORDS = {
   /** @param {string} what */
   progressOf: (what) => `Progress of ${what}`,
   kinds: { observations: "observations", navigation: "navigation data", orbits: "orbits", biases: "biases", ionex: "a map", indices: "indices of activity" },
+  /** What a file is. @param {{kind: string, marker: string, day: string}} told  marker and day where observations tell them */
+  holds: ({ kind, marker, day }) => [`${FILE_WORDS.kinds[kind] ?? kind}${marker ? ` of ${marker}` : ""}`, day && dayText(day)].filter(Boolean).join(", "),
   /** @param {number} sent @param {number} refused @param {number} all */
   soFar: (sent, refused, all) => `${sent} of ${countText(all, "file")} sent${refused ? `, ${refused} refused` : ""}.`,
   leftOut: "Left out",

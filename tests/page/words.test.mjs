@@ -19,6 +19,13 @@ test("what is not known is said, never shown as a number", () => {
   assert.equal(words.fixed(NaN, 1), "–");
 });
 
+test("a file's line says what it holds, of which receiver and day where it tells them", () => {
+  const { holds } = words.FILE_WORDS;
+  assert.equal(holds({ kind: "observations", marker: "ARDN", day: "2031-03-11" }), "observations of ARDN, Tue, 11 March 2031");
+  assert.equal(holds({ kind: "observations", marker: "", day: "2031-03-11" }), "observations, Tue, 11 March 2031");
+  assert.equal(holds({ kind: "biases", marker: "", day: "" }), "biases");
+});
+
 test("no minus before a zero", () => assert.equal(words.fixed(-0.004, 2), "0.00"));
 
 test("places name their hemispheres", () => {

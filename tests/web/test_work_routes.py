@@ -18,9 +18,12 @@ from fastapi.testclient import TestClient
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from tests.builders import REGION, STORM_DAY, invented_day
+from tests.formats.test_biases import HEAD as BIAS_HEAD
+from tests.formats.test_biases import ROWS, TAIL
 from tests.web.test_serve import ROOT
 
 from skylag.archive import Archive, open_archive
+from skylag.formats import ionex
 from skylag.jobs import guard
 from skylag.jobs.board import Policy, Worker
 from skylag.jobs.guard import Inbox, Limits
@@ -33,6 +36,7 @@ HEAD = (
     "     2.11           OBSERVATION DATA    G (GPS)             RINEX VERSION / TYPE\n"
     "  2031     5    11     0     0    0.0000000     GPS         TIME OF FIRST OBS\n"
 )
+BIASES = BIAS_HEAD + ROWS + TAIL
 
 
 @pytest.fixture
@@ -63,21 +67,31 @@ def files_of(archive: Archive) -> list[Path]:
 
 def test_from_files_to_a_stored_day(own: Archive, client: TestClient, sample_folder: Path) -> None:
     batch = client.post("/api/batches").json()["batch"]
-    for marker, kind in (("MRGT", "observations"), ("TARN", "navigation")):
+    for marker, kind, told in (
+        ("MRGT", "observations", ("MRGT00XBS", "2031-03-11")), ("TARN", "navigation", ("", None)),
+    ):  # fmt: skip
         path = next((sample_folder / "2031-03-11").glob(f"{marker}*"))
         sent = send(client, batch, path.name, path.read_bytes())
         assert sent.status_code == 201 and sent.json()["kind"] == kind
         assert sent.json()["bytes"] == path.stat().st_size
+        assert (sent.json()["marker"], sent.json()["day"]) == told
+    assert send(client, batch, "of another\n year.BIA", BIASES.encode()).json()["kind"] == "biases"
     begun = client.post(f"/api/batches/{batch}/work")
     assert begun.status_code == 202
     (task,) = begun.json()["tasks"]
-    assert (task["state"], task["day"], len(task["files"])) == ("waiting", "2031-03-11", 2)
+    assert (task["state"], task["day"], len(task["files"])) == ("waiting", "2031-03-11", 3)
     assert not any("/" in name for name in task["files"]), "paths of the server are not told"
     Worker(own, "threads:1", lambda: T0, Policy(beat_s=0.05)).run(threading.Event(), until_empty=True)
     done = client.get(f"/api/work/{task['id']}").json()
     assert done["state"] == "done", done["said"]
     address = f"/api/days/{done['result']['region']}/2031-03-11"
-    assert client.get(address).json()["receivers"][0]["name"] == "MRGT00XBS"
+    day = client.get(address).json()
+    assert day["receivers"][0]["name"] == "MRGT00XBS"
+    # A file that is of no use is told by the name it was sent under, at once, and never by where it lies.
+    said = "left out: of another year.BIA: its biases are of 2021-03-19 to 2021-03-20, not of 2031-03-11"
+    assert any(warning.startswith(said) for warning in day["warnings"]) and ".inbox" not in json.dumps(day)
+    names = {one["name"] for one in own.day(done["result"]["region"], "2031-03-11").origin.inputs}
+    assert "of another year.BIA" in names and any(name.startswith("MRGT00XBS_R_") for name in names)
     work = client.get("/api/work").json()
     assert work["counts"]["done"] == 2, "the day, and the outlook after it"
     outlook = next(one for one in work["tasks"] if one["kind"] == "outlook")
@@ -97,8 +111,22 @@ def test_a_name_never_becomes_a_path(own: Archive, client: TestClient, name: str
     sent = send(client, batch, name, HEAD.encode())
     assert sent.status_code == 201, sent.text
     assert {path for path in tmp_path.rglob("*") if "inbox" not in str(path)} == before
-    (kept,) = files_of(own)
-    assert kept.parent.name == batch and re.fullmatch(r"([A-Z0-9]{9}_)?[0-9a-f]{64}", kept.name)
+    usual = r"([A-Z0-9]{9}_)?[0-9a-f]{64}"
+    (kept,) = [path for path in files_of(own) if not path.name.startswith(".")]
+    assert kept.parent.name == batch and re.fullmatch(usual, kept.name)
+    for note in set(files_of(own)) - {kept}:  # the name as text, on one line
+        assert note == kept.with_name(f".{kept.name}.sent")
+        assert note.read_text(encoding="utf-8").isprintable()
+
+
+def test_why_no_work_begins_is_told_by_the_names_that_were_sent(client: TestClient) -> None:
+    batch = client.post("/api/batches").json()["batch"]
+    for name in ("ours.BIA", "map.31i"):
+        told = ionex.write(invented_day(STORM_DAY, step_minutes=60, satellites=6).fields, T0, 400.0)
+        assert send(client, batch, name, (BIASES if name == "ours.BIA" else told).encode()).status_code == 201
+    refused = client.post(f"/api/batches/{batch}/work")
+    assert refused.status_code == 422 and "\n  map.31i: holds a published map" in refused.json()["error"]
+    assert ".inbox" not in refused.text
 
 
 def test_usual_names_keep_what_tells_the_receiver() -> None:

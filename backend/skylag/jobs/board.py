@@ -12,7 +12,7 @@ import threading
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from concurrent.futures import BrokenExecutor, Executor
 from contextlib import ExitStack
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from datetime import date
 from functools import cache, partial
 from pathlib import Path
@@ -24,7 +24,7 @@ from skylag.archive import Archive, Ending, Task, Wanted
 from skylag.archive.records import region_from
 from skylag.chain import Choices
 from skylag.errors import FormatError, NotEnough, Refused, SkylagError, Unsolvable
-from skylag.jobs import advising, hindcast, kept, work
+from skylag.jobs import advising, guard, hindcast, kept, work
 from skylag.jobs.executor import open_executor
 from skylag.jobs.upkeep import Upkeep
 from skylag.settings import Estimation
@@ -132,7 +132,7 @@ def region_of(facts: Mapping[str, Any] | None) -> Region | None:
 
 
 def compute(task: Task, executor: Executor, tell: work.Progress, archive: Archive | None = None) -> Products:
-    """The products of a task.
+    """The products of a task; files that were sent go by the names they were sent under.
 
     archive  where biases of earlier days are kept, for tasks that draw upon them
     """
@@ -146,12 +146,24 @@ def compute(task: Task, executor: Executor, tell: work.Progress, archive: Archiv
     choices = Estimation(**spec.get("estimation", {})).choices(
         Choices(signals=signals, epoch_step_s=spec["epoch_step_s"])
     )
-    return work.network_day(
-        [Path(path) for path in spec["paths"]],
-        region=region_of(spec["region"]), day=date.fromisoformat(spec["day"]), choices=choices, executor=executor,
-        simulated=spec["simulated"], progress=tell,
-        earlier=None if archive is None else work.earlier_biases(archive, choices.earlier_days),
-    ).products  # fmt: skip
+    paths = [Path(path) for path in spec["paths"]]
+    names = guard.sent_names(paths)
+    try:
+        products = work.network_day(
+            paths,
+            region=region_of(spec["region"]), day=date.fromisoformat(spec["day"]), choices=choices, executor=executor,
+            simulated=spec["simulated"], progress=tell,
+            earlier=None if archive is None else work.earlier_biases(archive, choices.earlier_days),
+        ).products  # fmt: skip
+    except SkylagError as failure:
+        failure.message = guard.by_sent_names(failure.message, names)
+        raise
+    origin = products.origin
+    shown = {Path(path).name: name for path, name in names.items()}
+    return replace(products, origin=replace(
+        origin, warnings=tuple(guard.by_sent_names(warning, names) for warning in origin.warnings),
+        inputs=tuple({**one, "name": shown.get(one["name"], one["name"])} for one in origin.inputs),
+    ))  # fmt: skip
 
 
 # ---------------------------------------------------------------------------------------------- working

@@ -2,7 +2,8 @@
 
 A key is shown once, when it is made; only its hash is kept.  It holds 256 random bits, so that a plain hash cannot be
 guessed back (common practice for keys that are not chosen by people).  A name that somebody sends never becomes a
-path.  The clock is handed in.
+path: it lies as text in a hidden note beside the file, so that who sent it is told of it by that name.  The clock is
+handed in.
 """
 
 import contextlib
@@ -13,7 +14,7 @@ import secrets
 import shutil
 import threading
 from collections import Counter
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -25,6 +26,7 @@ from skylag.errors import Missing, NotEnough, Refused
 from skylag.formats.glance import glance
 
 _PREFIX = "skylag-"
+_NOTE = ".sent"  # ends the name of the note that tells under which name a file was sent
 _BATCH = re.compile(r"[0-9a-f]{32}", re.ASCII)
 # What of a usual file name tells the receiver: the long and the short names of the RINEX descriptions.
 _LONG_NAME = re.compile(r"([A-Z0-9]{4}\d{2}[A-Z]{3})_[A-Za-z0-9_.]*", re.ASCII)
@@ -132,13 +134,18 @@ class Limits:
 
 @dataclass(frozen=True)
 class Received:
-    """A file that was sent: the name it was sent under, the name it is kept under, its kind, size and hash."""
+    """A file that was sent: the name it was sent under, the name it is kept under, its kind, size and hash.
+
+    marker, day  of an observation file, as far as its header tells: else "" and None
+    """
 
     name: str
     kept_as: str
     kind: str
     size: int
     sha256: str
+    marker: str = ""
+    day: np.datetime64 | None = None
 
 
 def inbox_folder(archive: Archive) -> Path:
@@ -169,6 +176,8 @@ class Inbox:
         folder, limits = self.path_of(batch), self.limits
         there = []
         for path in folder.iterdir():
+            if path.name.endswith(_NOTE):
+                continue
             with contextlib.suppress(FileNotFoundError):  # another file of the batch has just been put in its place
                 there.append(path.stat().st_size)
         room = min(limits.file_bytes, limits.batch_bytes - sum(there))
@@ -218,7 +227,8 @@ class Receiving:
         self._file.flush()
         os.fsync(self._file.fileno())
         self._file.close()
-        kind = glance(self._passing).kind
+        seen = glance(self._passing)
+        kind = seen.kind
         if kind in ("unknown", "empty"):
             self.abandon()
             raise Refused(
@@ -228,13 +238,38 @@ class Receiving:
             )  # fmt: skip
         sha256 = self._hash.hexdigest()
         kept_as = kept_name(self._name, sha256)
+        shown = "".join(letter for letter in self._name if letter.isprintable()).strip()
+        if shown:
+            _note_of(self._folder / kept_as).write_text(shown, encoding="utf-8")
         self._passing.replace(self._folder / kept_as)
-        return Received(self._name, kept_as, kind, self._size, sha256)
+        return Received(self._name, kept_as, kind, self._size, sha256, seen.marker, seen.day)
 
     def abandon(self) -> None:
         """Leave nothing of it."""
         self._file.close()
         self._passing.unlink(missing_ok=True)
+
+
+def _note_of(path: Path) -> Path:
+    """Where the name lies under which a kept file was sent."""
+    return path.with_name(f".{path.name}{_NOTE}")
+
+
+def sent_names(paths: Iterable[Path]) -> dict[str, str]:
+    """Path of a kept file -> the name it was sent under; only of files that were sent.  Folders are looked into."""
+    names = {}
+    for path in paths:
+        for one in path.iterdir() if path.is_dir() else (path,):
+            with contextlib.suppress(OSError):
+                names[str(one)] = _note_of(one).read_text(encoding="utf-8")
+    return names
+
+
+def by_sent_names(text: str, names: Mapping[str, str]) -> str:
+    """A text with the names that files were sent under in place of where they lie on the server."""
+    for path, name in names.items():
+        text = text.replace(path, name)
+    return text
 
 
 def kept_name(name: str, sha256: str) -> str:

@@ -95,7 +95,7 @@ def _tidy_inbox(archive: Archive, older_than_s: float) -> int:
     named = {str(Path(path).parent) for task in going for path in task.spec.get("paths", ())}
     for batch in old:
         if str(batch) not in named and str(batch.resolve()) not in named:
-            gone += sum(1 for path in batch.iterdir())
+            gone += sum(1 for path in batch.iterdir() if not path.name.startswith("."))
             shutil.rmtree(batch, ignore_errors=True)
     return gone
 

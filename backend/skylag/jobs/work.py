@@ -464,8 +464,9 @@ def network_day(
             lambda make, hours: executor.map(_UNITS[make], hours),
         )  # fmt: skip
     clock.enter("")
-    warnings = [*made.warnings, *said, *(note for item in usable for note in item.notes)]
-    warnings += [f"left out: {item}" for item in left_out]
+    # A whole file weighs more than a satellite of a receiver; the page shows the first notes at once.
+    warnings = [*made.warnings, *said, *(f"left out: {item}" for item in left_out)]
+    warnings += [note for item in usable for note in item.notes]
     origin = Origin(
         inputs=_with_use(inputs.files, [*left_out, *of_other_days]),
         options=_options(choices, place, wanted_day),

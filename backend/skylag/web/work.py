@@ -18,9 +18,9 @@ from starlette.requests import ClientDisconnect
 
 from skylag.archive import Archive, Task
 from skylag.archive.notices import Delivery, Notice
-from skylag.errors import Refused, SkylagError
+from skylag.errors import NotEnough, Refused, SkylagError
 from skylag.jobs import board
-from skylag.jobs.guard import Inbox, Limits, inbox_folder
+from skylag.jobs.guard import Inbox, Limits, by_sent_names, inbox_folder, sent_names
 from skylag.web import asking, payloads
 from skylag.web.access import Traffic
 
@@ -155,7 +155,10 @@ def open_batch(request: Request) -> Response:
 
 @router.put("/api/batches/{batch}/files", summary="Send a file", status_code=201)
 async def send_file(request: Request, batch: str, name: Annotated[str, Query(max_length=300)]) -> Response:
-    """The body is the file as it is; its kind is told by its content, its name only tells the receiver."""
+    """The body is the file as it is; its kind is told by its content, its name only tells the receiver.
+
+    Of observations the answer tells the receiver's marker and the day, as far as the header has them.
+    """
     inbox = _inbox(request)
     told = request.headers.get("content-length", "")
     coming = await run_in_threadpool(inbox.receive, batch, name, int(told) if told.isdigit() else None)
@@ -170,7 +173,8 @@ async def send_file(request: Request, batch: str, name: Annotated[str, Query(max
     except BaseException:
         coming.abandon()
         raise
-    shape = {"name": got.name, "kept_as": got.kept_as, "kind": got.kind, "bytes": got.size, "sha256": got.sha256}
+    shape = {"name": got.name, "kept_as": got.kept_as, "kind": got.kind, "bytes": got.size, "sha256": got.sha256,
+             "marker": got.marker, "day": None if got.day is None else str(got.day)}  # fmt: skip
     return payloads.reply(shape, 201)
 
 
@@ -183,14 +187,21 @@ def begin(request: Request, batch: str, region: str = "", day: str = "") -> Resp
     if region:
         heads = archive.days(region)
         wanted = archive.day(region, heads[0].day if heads else "2000-01-01").region
-    numbers, left_out = board.add(
-        archive, [inbox.path_of(batch)], now=_now(request), region=wanted,
-        day=np.datetime64(asking.day(day), "D").item() if day else None,
-    )  # fmt: skip
+    folder = inbox.path_of(batch)
+    names = sent_names([folder])
+    try:
+        numbers, left_out = board.add(
+            archive, [folder], now=_now(request), region=wanted,
+            day=np.datetime64(asking.day(day), "D").item() if day else None,
+        )  # fmt: skip
+    except NotEnough as failure:
+        files = [by_sent_names(str(one), names) for one in failure.details["left_out"]]
+        raise NotEnough(by_sent_names(failure.message, names), **{**failure.details, "left_out": files}) from None
     return payloads.reply(
         {
             "tasks": [task_shape(archive.tasks.one(number)) for number in numbers],
-            "left_out": [{"file": Path(item.path).name, "line": item.line, "reason": item.reason} for item in left_out],
+            "left_out": [{"file": Path(item.path).name, "line": item.line, "reason": by_sent_names(item.reason, names)}
+                         for item in left_out],
         },
         202,
     )  # fmt: skip

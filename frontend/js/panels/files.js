@@ -158,7 +158,7 @@ export class FilesPanel {
       // Said here, since the server would hang up in the middle.
       if (row.file.size > fileBytes) throw new Error(FILE_WORDS.tooLarge(bytesText(fileBytes)));
       if (!row.file.size) throw new Error(FILE_WORDS.empty);
-      const { kind, keptAs } = await api.sendFile(batch, row.file, {
+      const { keptAs, ...told } = await api.sendFile(batch, row.file, {
         signal: this.#asking.signal,
         progress: (share) => {
           row.bar.value = share;
@@ -166,7 +166,7 @@ export class FilesPanel {
         },
       });
       row.keptAs = keptAs;
-      this.#turn(row, "sent", FILE_WORDS.kinds[kind] ?? kind);
+      this.#turn(row, "sent", FILE_WORDS.holds(told));
     } catch (error) {
       if (error?.name === "AbortError") return;
       if (error.status === 401) this.#key(error, () => this.#retry());
