@@ -341,6 +341,35 @@ def test_a_failure_is_shown_in_the_services_words_and_can_be_tried_again(visit: 
     assert v.text(".lead").startswith("Corrections") and v.text("#map-note") == ""
 
 
+def test_weight(visit: Open, record_property: Callable[[str, object], None]) -> None:
+    """Bytes of the page's own files as this browser got them: the first view, then every file; data are not counted.
+
+    As sent (encodedBodySize of Resource Timing, W3C) and unpacked (decodedBodySize); without plotly.js.
+    """
+    v = visit(plotly=False).go(f"{STORM}&time=05:30")
+    weigh = """() => [...performance.getEntriesByType("navigation"), ...performance.getEntriesByType("resource")]
+      .filter((one) => !/[/](api|vendor)[/]/.test(one.name))
+      .map((one) => [new URL(one.name).pathname, one.encodedBodySize, one.decodedBodySize])"""
+    first = {path: sizes for path, *sizes in v.page.evaluate(weigh)}
+    frontend = Path(__file__).resolve().parents[2] / "frontend"
+    all_files = [f"/{path.relative_to(frontend).as_posix()}" for path in frontend.rglob("*") if path.is_file()]
+    missing = [path for path in all_files if path not in first and path != "/index.html"]
+    v.page.evaluate("(paths) => Promise.all(paths.map((path) => fetch(path).then((answer) => answer.text())))", missing)
+    whole = {path: sizes for path, *sizes in v.page.evaluate(weigh)}
+    assert "/" in first and "/js/main.js" in first and set(missing) <= set(whole)
+    sent, unpacked = (sum(sizes[k] for sizes in first.values()) for k in (0, 1))
+    all_sent, all_unpacked = (sum(sizes[k] for sizes in whole.values()) for k in (0, 1))
+    told = {"first_sent": sent, "first_unpacked": unpacked, "whole_sent": all_sent, "whole_unpacked": all_unpacked}
+    for name, size in told.items():
+        record_property(f"{name}_kb", round(size / 1000))
+    print("first view {:.0f} kB, unpacked {:.0f}; whole page {:.0f} kB, unpacked {:.0f}; {} of {} files".format(
+        *(size / 1000 for size in told.values()), len(first), len(whole)))  # fmt: skip
+    on_disk = sum(path.stat().st_size for path in frontend.rglob("*") if path.is_file())
+    assert all_unpacked == on_disk, "every file was weighed, and nothing else"
+    assert sent < all_sent < 250_000, "the budget of the project"
+    assert unpacked > 2 * sent, "files are sent compressed"
+
+
 def test_speed(visit: Open, record_property: Callable[[str, object], None]) -> None:
     """Time to the first map and from key to paint, measured; the bounds allow for a busy machine.
 
