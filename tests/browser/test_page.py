@@ -197,11 +197,14 @@ def test_night_follows_the_system_and_the_button(visit: Open) -> None:
     """Dark where the system asks for it; the reader's own choice is kept over a reload."""
     v = visit(dark=True, plotly=False).go(STORM)
     assert v.paper() == "rgb(18, 22, 31)"
+    line = "(selector) => getComputedStyle(document.querySelector(selector)).borderColor"
+    assert v.page.evaluate(line, "#theme") != v.page.evaluate(line, "#files-open"), "a pressed button looks pressed"
     v.page.click("#theme")
     assert v.paper() == "rgb(251, 248, 241)"
     v.page.reload()
     assert v.paper() == "rgb(251, 248, 241)"
     assert v.page.get_attribute("#theme", "aria-pressed") == "false"
+    assert v.page.evaluate(line, "#theme") == v.page.evaluate(line, "#files-open")
 
 
 @pytest.mark.parametrize("width", [360, 768, 2560])

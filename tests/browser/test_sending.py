@@ -122,6 +122,7 @@ def test_from_dropped_files_to_the_day_on_the_page(
     v.page.wait_for_function(f"{said} === '1 of 3 files sent, 2 refused.'")
     rows = [" ".join(text.split()) for text in v.page.locator("#files-list li").all_inner_texts()]
     assert rows[0].endswith("observations of MRGT00XBS, Tue, 11 March 2031")
+    assert not v.page.locator("#files-list progress").first.is_visible(), "what is sent needs no bar"
     assert "of no kind that is known" in rows[1] and "the file is empty" in rows[2]
     # A drop anywhere on the page, here onto the open window.
     v.page.evaluate(

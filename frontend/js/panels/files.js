@@ -123,9 +123,8 @@ export class FilesPanel {
   #turn(row, state, words, anew = false) {
     row.state = row.item.dataset.state = state;
     row.word.textContent = words;
-    row.bar.hidden = state === "refused";
+    row.bar.hidden = state === "sent" || state === "refused"; // a full bar takes the room of what the file is
     row.again.hidden = state !== "refused" || !anew;
-    if (state === "sent") row.bar.value = 1;
     this.#tell();
   }
 
