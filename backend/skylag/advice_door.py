@@ -24,6 +24,7 @@ from skylag.tables import Site
 
 if TYPE_CHECKING:
     from skylag.jobs.advising import AskedService, DayAdvice, Desk
+    from skylag.web.report import Clock
 
 
 _SHEETS = (".html", ".pdf")
@@ -53,7 +54,8 @@ def _advise_parser(commands: Any, caution: str) -> None:
         "exit status: 0 told; 2 bad command; 3 no answer (the reason is told).\n\n" + caution,
     )
     settings.add_kept_day(parser)
-    parser.add_argument("--site", default="", metavar="NAME", help="a site of the region; without, all in a line each")
+    parser.add_argument("--site", default="", metavar="NAME",
+                        help="a site of the region; without, all in a line each (aerodromes: approaches)")  # fmt: skip
     parser.add_argument("--at", nargs=2, type=float, action="append", metavar=("LAT", "LON"),
                         help="a place that is no site; give several with --shape")  # fmt: skip
     parser.add_argument("--shape", default="points", choices=tuple(SHAPES), help="what several places mean")
@@ -178,9 +180,7 @@ def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
     lines = sentences.notices(day.record.origin.simulated, day.record.head.provisional)
     if not options.at and not options.site:
         lines.append(f"{day.record.region.name}, {day.record.head.day} (times UTC)")
-        for one in day.record.region.sites:
-            advice = desk.survey(day, _job(day, one.name, options))
-            lines.append(f"{one.name}: {report.survey_verdict(advice, clock)}")
+        lines += _all_sites(desk, day, options)
         print("\n".join([*lines, "For one of them, with reasons and assumptions: --site NAME", sentences.CAUTION]))
         return
     for pair in options.at or ():
@@ -228,6 +228,33 @@ def _tell(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> None:
         text = calendar.to_ics(entries, site.name, day.record.head.saved_at)
         options.calendar.write_bytes(text.encode("utf-8"))
         print(f"calendar: {options.calendar}")
+
+
+def _all_sites(desk: "Desk", day: "DayAdvice", options: argparse.Namespace) -> list[str]:
+    """A line per site: approaches of aerodromes, survey at all others."""
+    from skylag.web import report
+
+    clock, sites = report.Clock(day.record.region.timezone), day.record.region.sites
+    # All aerodromes at once, and before the survey: what is prepared for them is the sky of all.
+    told = _flown(day, [one for one in sites if one.kind == "aerodrome"], options, clock)
+    for one in sites:
+        if one.name not in told:
+            told[one.name] = report.survey_verdict(desk.survey(day, _job(day, one.name, options)), clock)
+    return [f"{one.name}: {told[one.name]}" for one in sites]
+
+
+def _flown(day: "DayAdvice", aerodromes: Sequence[Site], options: argparse.Namespace, clock: "Clock") -> dict[str, str]:
+    """Name of each aerodrome -> its approaches in a sentence or two."""
+    from skylag.web import report
+
+    service = _service(options)
+    if not aerodromes:
+        return {}
+    try:
+        found = day.approaches(aerodromes, service.choices, service.names)
+    except NotEnough as trouble:
+        return {one.name: f"Approaches cannot be judged: {trouble.message}" for one in aerodromes}
+    return {one.name: report.approach_verdict(found.of_site(number), clock) for number, one in enumerate(aerodromes)}
 
 
 def _service(options: argparse.Namespace) -> "AskedService":

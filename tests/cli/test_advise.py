@@ -1,11 +1,13 @@
 """The commands advise and sites."""
 
 from pathlib import Path
+from typing import Any
 
 import pytest
-from tests.builders import write_archive
+from tests.builders import CALM_DAY, write_archive
 
 from skylag import settings
+from skylag.archive import Archive
 from skylag.cli import main
 
 
@@ -14,12 +16,46 @@ def place(tmp_path_factory: pytest.TempPathFactory) -> str:
     return str(write_archive(tmp_path_factory.mktemp("advise")))
 
 
+def _lines(told: str) -> dict[str, str]:
+    """What is said of each site that a line begins with."""
+    return dict(line.split(": ", 1) for line in told.splitlines() if ": " in line)
+
+
 def test_all_sites_in_a_line_each(place: str, capsys: pytest.CaptureFixture[str]) -> None:
+    """Aerodromes by their approaches, all others by survey."""
     assert main(["advise", "--archive", place]) == 0
     told = capsys.readouterr().out
-    for name in ("Northport", "Gannet Field", "Kelp Island", "Southmere quarry"):
-        assert f"{name}: Survey (rtk, over 10 km" in told
-    assert told.startswith("Invented data") and "not for navigation" in told
+    lines = _lines(told)
+    for name in ("Northport", "Southmere quarry"):
+        assert lines[name].startswith("Survey (rtk, over 10 km")
+    for name in ("Gannet Field", "Kelp Island"):
+        assert lines[name].startswith("Approaches available of the day: NPA ") and "Survey" not in lines[name]
+    assert told.startswith("Invented data") and "not for navigation" in told.rstrip().split("\n")[-1]
+
+
+@pytest.mark.parametrize("name", ["Gannet Field", "Kelp Island"])
+def test_an_aerodrome_reads_the_same_alone(place: str, name: str, capsys: pytest.CaptureFixture[str]) -> None:
+    """Levels and what the service is assumed to do count for all sites as for one."""
+    words = ["advise", "--archive", place, "--levels", "APV-I,LPV-200", "--corrections", "6"]
+    assert main(words) == 0
+    among = _lines(capsys.readouterr().out)[name]
+    assert main([*words, "--site", name]) == 0
+    assert among in capsys.readouterr().out.splitlines()
+    assert "APV-I " in among and "outage" in among.lower()
+
+
+def test_all_sites_share_one_sky_and_grid(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Lines of sight are read once, however many sites there are."""
+    place, read = str(write_archive(tmp_path)), []
+    whole = Archive.samples
+
+    def samples(self: Archive, *asked: Any) -> Any:
+        read.append(asked)
+        return whole(self, *asked)
+
+    monkeypatch.setattr(Archive, "samples", samples)
+    assert main(["advise", "--archive", place, "--day", str(CALM_DAY)]) == 0
+    assert len(read) == 1
 
 
 def test_a_site_with_sheet_and_calendar(place: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:

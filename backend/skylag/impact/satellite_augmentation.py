@@ -8,7 +8,7 @@ speaks for is not available, and an outage says why.  A planning aid, not for na
 
 import itertools
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -153,6 +153,16 @@ class Availability:
     def share(self) -> Floats:
         """Share of the minutes in which a level is available (levels, sites)."""
         return np.asarray(self.available.mean(axis=2))
+
+    def of_site(self, number: int) -> "Availability":
+        """The same of one of its sites alone."""
+        one = slice(number, number + 1)
+        site = self.sites[number]
+        return replace(
+            self, sites=(site,), vertical_m=self.vertical_m[one], horizontal_m=self.horizontal_m[one],
+            route_m=self.route_m[one], in_view=self.in_view[one], used=self.used[one],
+            available=self.available[:, one], outages=tuple(out for out in self.outages if out.site == site.name),
+        )  # fmt: skip
 
 
 def availability(

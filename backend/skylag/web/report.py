@@ -202,9 +202,10 @@ def approach_verdict(found: Availability, clock: Clock) -> str:
     if not found.outages:
         return f"{head} No outage."
     worst = max(found.outages, key=lambda outage: outage.end - outage.start)
+    many = len(found.outages)
     return (
-        f"{head} {len(found.outages)} outages; the longest, {worst.level} {clock.utc(worst.start)} to "
-        f"{clock.utc_end(worst.end)} UTC, is of {'the ' if worst.cause != 'unseen' else ''}"
+        f"{head} {f'{many} outages; the longest' if many > 1 else 'One outage'}, {worst.level} "
+        f"{clock.utc(worst.start)} to {clock.utc_end(worst.end)} UTC, is of {'the ' if worst.cause != 'unseen' else ''}"
         f"{worst.cause if worst.cause != 'unseen' else 'want of data'}."
     )
 
