@@ -20,6 +20,7 @@ from skylag.impact.ground_augmentation import StationChoices
 from skylag.impact.satellite_augmentation import LEVEL, USUAL_LEVELS
 from skylag.impact.shapes import SHAPES
 from skylag.impact.survey import METHODS, Job
+from skylag.spelling import SITE_KINDS, kind_trouble
 from skylag.tables import Site
 
 if TYPE_CHECKING:
@@ -296,6 +297,8 @@ def _aerodrome(
 
 
 def _sites(options: argparse.Namespace) -> int:
+    if trouble := kind_trouble(options.kind):
+        raise Refused(f"--kind: {trouble}", name="kind", value=options.kind, allowed=SITE_KINDS)
     try:
         text = options.list.read_text(encoding="utf-8")
     except UnicodeDecodeError as cause:

@@ -16,6 +16,7 @@ import numpy as np
 
 from skylag import settings
 from skylag.errors import Missing, Refused
+from skylag.spelling import no_such
 from skylag.tables import ActivityOutlook, Floats, Indices, Region
 from skylag.web import sentences
 from skylag.web.sentences import CAUTION
@@ -131,8 +132,9 @@ def _site(region: Region, name: str) -> tuple[float, float]:
     for site in region.sites:
         if name in ("", site.name):
             return site.lat, site.lon
-    raise Refused(f"site {name!r}: {region.name} has {', '.join(site.name for site in region.sites) or 'none'}; or "
-                  "give --at", name="site", value=name, allowed=[site.name for site in region.sites])  # fmt: skip
+    if not name:
+        raise Refused(f"{region.name} has no sites; give --at", name="site", value=name, allowed="--at LAT LON")
+    raise no_such(region.name, "site", name, [site.name for site in region.sites], "give --at")
 
 
 def _two(text: str) -> Floats | None:

@@ -16,6 +16,7 @@ from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 from skylag.chain import BROADCAST, CLIMATOLOGICAL, DRAW, HOLD, IGNORE, Choices
 from skylag.errors import FormatError, Refused
 from skylag.ionosphere.geometry import MODIFIED_SINGLE_LAYER, SINGLE_LAYER
+from skylag.spelling import SITE_KINDS, kind_trouble
 from skylag.tables import USE_KINDS, Region, Site, Thresholds, Use
 
 
@@ -335,7 +336,10 @@ def _site(path: Path, entry: Mapping[str, Any]) -> Site:
             f"{path}: site {entry['name']} stands at {lat}, {lon}; latitude is -90 to 90, longitude -180 to 360",
             name="site", value=[lat, lon], allowed="-90..90, -180..360",
         )  # fmt: skip
-    return Site(name=str(entry["name"]), lat=lat, lon=lon, kind=str(entry.get("kind", "site")))
+    kind = str(entry.get("kind", "site"))
+    if trouble := kind_trouble(kind):
+        raise Refused(f"{path}: site {entry['name']}: {trouble}", name="kind", value=kind, allowed=SITE_KINDS)
+    return Site(name=str(entry["name"]), lat=lat, lon=lon, kind=kind)
 
 
 def _use(path: Path, entry: Mapping[str, Any]) -> Use:

@@ -81,6 +81,38 @@ def test_a_refused_question_leaves_no_half_verdict(place: str, capsys: pytest.Ca
     assert "choose the day" in told.err and ".000" not in told.err
 
 
+@pytest.mark.parametrize("words", [["advise"], ["ahead"]])
+@pytest.mark.parametrize(
+    ("name", "meant"), [("Ganet Field", "Gannet Field"), ("gannet field", "Gannet Field"), ("kelp", "Kelp Island")]
+)  # fmt: skip
+def test_a_misspelt_site(
+    words: list[str], name: str, meant: str, place: str, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main([*words, "--archive", place, "--site", name]) == 3
+    told = capsys.readouterr()
+    assert f"has no site {name}; did you mean {meant}? It has Northport, " in told.err and not told.out
+
+
+KIND_SAID = "looks like aerodrome misspelt; known kinds are aerodrome, survey, port, site"
+
+
+@pytest.mark.parametrize("kind", ["aerodrom", "Aerodrome", "areodrome", "aerodromes"])
+def test_a_misspelt_kind_of_site(kind: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """By the option, in the list and in the region file; a word of one's own is taken as it is."""
+    region, listed = tmp_path / "region.toml", tmp_path / "sites.csv"
+    region.write_text(REGION_TEXT, encoding="utf-8")
+    listed.write_text(f"name,lat,lon,kind\nAtoll,52,9,{kind}\nMast,52,9,lighthouse\n", encoding="utf-8")
+    assert main(["sites", str(listed), "--region", str(region), "--kind", kind]) == 3
+    assert f"--kind: kind {kind!r} {KIND_SAID}" in capsys.readouterr().err
+    assert region.read_text(encoding="utf-8") == REGION_TEXT
+    assert main(["sites", str(listed), "--region", str(region)]) == 1
+    assert f"{listed}:2: Atoll: kind {kind!r} {KIND_SAID}" in capsys.readouterr().err
+    assert [site.kind for site in settings.read_region(region).sites] == ["site", "site", "lighthouse"]
+    region.write_text(REGION_TEXT.replace("lon = 10.0", f'lon = 10.0\nkind = "{kind}"'), encoding="utf-8")
+    with pytest.raises(Refused, match="site Field: kind"):
+        settings.read_region(region)
+
+
 def test_a_sheet_of_another_kind(place: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     asked = ["advise", "--archive", place, "--site", "Gannet Field", "--sheet"]
     assert main([*asked, str(tmp_path / "a.doc")]) == 3

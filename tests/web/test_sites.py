@@ -89,7 +89,8 @@ def test_lists(own: Archive, page_folder: Path, body: str, problems: int) -> Non
 @pytest.mark.parametrize(
     ("asked", "word"),
     [({"lat": 10}, "outside the map"), ({"lat": 95}, "lat"), ({"lat": "nan"}, "lat"), ({"name": " "}, "name"),
-     ({"name": "Northport"}, "already"), ({"was": "Atlantis"}, "no site"), ({"kind": "k" * 60}, "kind")],
+     ({"name": "Northport"}, "already"), ({"was": "Atlantis"}, "no site"), ({"kind": "k" * 60}, "kind"),
+     ({"kind": "aerodrom"}, "looks like aerodrome misspelt"), ({"was": "Nortport"}, "did you mean Northport?")],
 )  # fmt: skip
 def test_what_is_no_site(own: Archive, page_folder: Path, asked: dict[str, object], word: str) -> None:
     with _client(own, page_folder, for_host("127.0.0.1")) as client:
@@ -97,6 +98,16 @@ def test_what_is_no_site(own: Archive, page_folder: Path, asked: dict[str, objec
         assert answer.status_code in (404, 422)
         assert word in answer.json()["error"]
         assert client.get(SITES).json()["revision"] == 0
+
+
+def test_a_misspelt_kind_in_a_list(own: Archive, page_folder: Path) -> None:
+    with _client(own, page_folder, for_host("127.0.0.1")) as client:
+        body = b"name,lat,lon,kind\nBrook,-40.2,146,aerodrom\nMast,-40.2,146,lighthouse\n"
+        found = client.post(f"{SITES}/list", content=body).json()
+        assert [site["kind"] for site in found["sites"] if site["name"] in ("Brook", "Mast")] == ["lighthouse"]
+        assert "looks like aerodrome misspelt" in str(found["problems"][0])
+        answer = client.post(f"{SITES}/list", params={"kind": "aerodrom"}, content=body)
+        assert (answer.status_code, "known kinds are" in answer.json()["error"]) == (422, True)
 
 
 @pytest.mark.parametrize("body", [b"", b"\xff\xfe", b"a,b\n1,2\n", b"{", b'{"a": 1}', b"x" * 2_100_000])

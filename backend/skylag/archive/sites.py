@@ -15,6 +15,7 @@ from sqlalchemy.engine import Connection
 from skylag.archive import records, schema
 from skylag.archive.part import Part
 from skylag.errors import Refused
+from skylag.spelling import SITE_KINDS, kind_trouble
 from skylag.tables import Site
 
 MOST_SITES = 5000
@@ -128,7 +129,8 @@ def _changes(row: Any) -> SiteChanges:
 
 
 def checked(name: str, lat: float, lon: float, kind: str) -> Site:
-    """A site as a person wrote it.  Raises Refused where a name is empty or too long, or a place is none."""
+    """A site as a person wrote it.  Raises Refused where the name is empty or too long, the place none, the
+    kind misspelt."""
     name, kind = " ".join(name.split()), " ".join(kind.split()) or "site"
     rules = (
         ("name", name, 0 < len(name) <= _LONGEST_NAME and name.isprintable(), f"1 to {_LONGEST_NAME} printable signs"),
@@ -141,4 +143,6 @@ def checked(name: str, lat: float, lon: float, kind: str) -> Site:
             raise Refused(
                 f"site: {word} is {value!r}, it must be {allowed}", name=word, value=str(value), allowed=allowed
             )
+    if trouble := kind_trouble(kind):
+        raise Refused(f"site {name}: {trouble}", name="kind", value=kind, allowed=SITE_KINDS)
     return Site(name, lat, lon, kind)

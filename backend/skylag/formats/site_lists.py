@@ -12,6 +12,7 @@ from collections.abc import Iterator
 from typing import Any
 
 from skylag.errors import FormatError
+from skylag.spelling import kind_trouble
 from skylag.tables import Problem, Site
 
 _NAMES = {
@@ -22,7 +23,8 @@ _MOST_SITES = 5000
 
 
 def sites_from(text: str, path: str = "sites") -> tuple[tuple[Site, ...], tuple[Problem, ...]]:
-    """Sites and problems of a text; path only names it in messages.  A name that comes twice is left out.
+    """Sites and problems of a text; path only names it in messages.  A name that comes twice is left
+    out, and so is a kind that is nearly a known one.
 
     Raises FormatError where the text is neither.
     """
@@ -39,6 +41,8 @@ def sites_from(text: str, path: str = "sites") -> tuple[tuple[Site, ...], tuple[
             what = f"{name} has no place"
         elif not (-90 <= lat <= 90 and -180 <= lon <= 360):
             what = f"{name} stands at {lat:g}, {lon:g}; latitude is -90 to 90, longitude -180 to 360"
+        elif trouble := kind_trouble(kind):
+            what = f"{name}: {trouble}"
         elif len(sites) >= _MOST_SITES:
             what = f"more than {_MOST_SITES} sites"
         if what:

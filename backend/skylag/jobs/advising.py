@@ -41,6 +41,7 @@ from skylag.impact.sky import Sky
 from skylag.impact.survey import Advice, Explanation, Job
 from skylag.ionosphere.covariance import plane_km
 from skylag.ionosphere.geometry import geodetic
+from skylag.spelling import no_such
 from skylag.tables import Bytes, Fields, Flag, Samples, Site, Times
 
 Span = tuple[np.datetime64, np.datetime64]
@@ -192,11 +193,7 @@ class DayAdvice:
         for one in self.record.region.sites:
             if one.name == name:
                 return one
-        known = [one.name for one in self.record.region.sites]
-        raise Missing(
-            f"{self.record.region.name} has no site {name}; it has {', '.join(known) or 'none'}", what=name,
-            nearest=known,
-        )  # fmt: skip
+        raise no_such(self.record.region.name, "site", name, [one.name for one in self.record.region.sites])
 
     def job(self, asked: AskedJob) -> Job:
         """The job that is asked for, named after what gave its place.
@@ -245,10 +242,7 @@ class DayAdvice:
         known = dict(zip(names, self.receiver_places(), strict=True))
         for name in named:
             if name.upper() not in known:
-                raise Missing(
-                    f"{self.record.region.name} has no receiver {name}; it has {', '.join(known)}", what=name,
-                    nearest=list(known),
-                )  # fmt: skip
+                raise no_such(self.record.region.name, "receiver", name, list(known))
         return tuple(
             known[part.upper()] if part in named else places_in(part, "references")[0] for part in parts
         )

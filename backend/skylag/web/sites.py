@@ -16,6 +16,7 @@ from skylag.archive import Archive, DayRecord
 from skylag.archive.sites import SiteChanges, checked
 from skylag.errors import FormatError, Missing, Refused
 from skylag.formats import site_lists
+from skylag.spelling import SITE_KINDS, kind_trouble, no_such
 from skylag.tables import Problem, Site
 from skylag.web import payloads
 
@@ -126,10 +127,7 @@ def remove(
 
 
 def _unknown(record: DayRecord, name: str) -> Missing:
-    known = [one.name for one in record.region.sites]
-    return Missing(
-        f"{record.region.name} has no site {name}; it has {', '.join(known) or 'none'}", what=name, nearest=known
-    )
+    return no_such(record.region.name, "site", name, [one.name for one in record.region.sites])
 
 
 @router.post("/api/sites/{region}/list", summary="Take in a list of sites")
@@ -154,6 +152,8 @@ async def take_in(
 def _taken_in(request: Request, region: str, data: bytes, kind: str, after: int | None) -> Response:
     archive: Archive = request.app.state.archive
     record = _newest(archive, region)
+    if trouble := kind_trouble(kind):
+        raise Refused(trouble, name="kind", value=kind, allowed=SITE_KINDS)
     try:
         sites, problems = site_lists.sites_from(data.decode("utf-8"), "list")
     except UnicodeDecodeError as cause:
