@@ -79,7 +79,8 @@ def test_a_place_that_is_no_site(place: str, capsys: pytest.CaptureFixture[str])
     assert main(["advise", "--archive", place, "--at", "-40", "146.5", "--at", "-20", "146.5"]) == 0
     told = capsys.readouterr().out
     assert "-40, 146.5 and 1 more" in told
-    assert " 0 min to work" in told  # the second place is off the map
+    assert " 0 min to work" in told
+    assert "-20, 146.5 lies off the map of this region, which reaches from latitude " in told
 
 
 def test_a_job_with_every_word(place: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:

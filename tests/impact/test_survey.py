@@ -156,8 +156,20 @@ def test_unseen_is_never_workable(lost: str) -> None:
 
 
 def test_off_the_map_is_unseen() -> None:
+    """And said, with how far the map reaches, to be told from a place on it that nobody sees."""
     found = survey.advise(a_job(places=((-30.0, 146.0),)), some_fields())
     assert set(found.verdict) == {survey.NOT_SEEN}
+    said = (
+        "-30, 146 lies off the map of this region, which reaches from latitude -42 to -38 and from longitude 144 to "
+        "148: nothing can be said there"
+    )
+    assert set(found.reasons) == {said} == {found.windows[0].why}
+    told = " ".join(survey.was_it_the_ionosphere(found, (), TIMES[100]).evidence)
+    assert said in told
+    several = survey.advise(a_job(places=(PLACE, (-30.0, 146.0), (-30.0, 150.0)), shape="area"), some_fields())
+    assert several.reasons[0].startswith("-30, 146 and 1 more lie off the map")
+    blind = replace(some_fields(), support=np.zeros_like(some_fields().support))
+    assert "off the map" not in survey.advise(a_job(), blind).reasons[0]
 
 
 def test_an_unknown_slope_is_unseen_not_steep() -> None:

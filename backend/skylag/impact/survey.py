@@ -211,8 +211,9 @@ def advise(
     }  # fmt: skip
     told = {name: values.max(axis=0) for name, values in worst.items()}  # NaN anywhere stays NaN
     verdict, reasons = _verdicts(
-        job, np.asarray(seen.all(axis=0)), np.asarray(looked.all(axis=0)), warned.max(axis=0), told, count, dilution
-    )
+        job, np.asarray(seen.all(axis=0)), np.asarray(looked.all(axis=0)), warned.max(axis=0), told, count, dilution,
+        _off_the_map(job, fields),
+    )  # fmt: skip
     hours, index = hourly_index(fields, job.places)
     return Advice(
         job=job, times=fields.times, longest_km=longest.min(axis=0), count=count, dilution=dilution, verdict=verdict,
@@ -391,10 +392,10 @@ def hourly_index(fields: Fields, places: Sequence[tuple[float, float]]) -> tuple
 
 def _verdicts(
     job: Job, seen: Bools, looked: Bools, warned: npt.NDArray[np.uint8], told: dict[str, Floats], count: Ints,
-    dilution: Floats,
+    dilution: Floats, off_the_map: str,
 ) -> tuple[npt.NDArray[np.str_], tuple[str, ...]]:  # fmt: skip
     """Verdict and reason per epoch: the first of unseen, warnings, satellites, an unknown slope, height, horizontal,
-    fixing."""
+    fixing.  off_the_map: why it is unseen where that is for good, else ""."""
     known = count >= 0
     over = f"over {job.baseline_km:g} km" if job.method != "network" else "between the reference stations"
     reasons = []
@@ -406,7 +407,7 @@ def _verdicts(
             why = (
                 "delay or slope are not known well enough here: nothing can be said"
                 if looked[t]
-                else "the map does not see the place: nothing can be said"
+                else off_the_map or "the map does not see the place: nothing can be said"
             )
         elif warned[t]:
             why = f"{STATE_NAMES[int(warned[t])]}: a front, an irregular patch or a steep slope is reported here"
@@ -431,6 +432,22 @@ def _verdicts(
             verdict[t] = AVOID if seen_well else NOT_SEEN
         reasons.append(why)
     return verdict, tuple(reasons)
+
+
+def _off_the_map(job: Job, fields: Fields) -> str:
+    """Which of the job's places the map does not reach, and how far it does reach; "" where all are on it."""
+    lat, lon = np.array(job.places, dtype=np.float64).T
+    inside = nearest_cells(fields, lat, lon)[2]
+    if inside.all():
+        return ""
+    first = int(np.flatnonzero(~inside)[0])
+    others = int((~inside).sum()) - 1
+    places = f"{lat[first]:g}, {lon[first]:g}" + (f" and {others} more lie" if others else " lies")
+    south, north, west, east = (float(edge) for axis in (fields.lats, fields.lons) for edge in (axis.min(), axis.max()))
+    return (
+        f"{places} off the map of this region, which reaches from latitude {south:g} to {north:g} and from longitude "
+        f"{west:g} to {east:g}: nothing can be said there"
+    )
 
 
 def _only_sigma(job: Job, told: dict[str, Floats], t: int) -> bool:
@@ -598,7 +615,8 @@ def was_it_the_ionosphere(
         share = float((day <= steep).mean())
         said.append(f"That is more than {100 * share:.0f} % of the day at this place.")
     else:
-        said.append("The map did not see the place at that time.")
+        why = _most([advice.reasons[k] for k in at])
+        said.append(f"The map did not see the place at that time. {why[:1].upper()}{why[1:]}.")
     hour = advice.hours == time.astype("datetime64[h]")
     ppm = float(advice.index[hour][0]) if hour.any() else float("nan")
     if np.isfinite(ppm):
