@@ -594,7 +594,7 @@ export function agoText(ms) {
  */
 export function flagSentence(flag) {
   const parts = [KIND_WORDS[flag.kind]?.name ?? flag.kind];
-  if (Number.isFinite(flag.slope)) parts.push(withSigma(flag.slope, flag.sigma, "mm/km", 0));
+  if (Number.isFinite(flag.slope)) parts.push(withSigma(flag.slope, flag.sigma, "mm/km"));
   if (Number.isFinite(flag.speed) && Number.isFinite(flag.heading)) {
     parts.push(`moving ${compass(flag.heading)} at ${fixed(flag.speed, 0)} m/s`);
   }

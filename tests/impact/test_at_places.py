@@ -113,4 +113,4 @@ def test_a_steep_map_is_told_by_its_slope() -> None:
     made = states.judge(flat_fields(slope=12.0), *nothing(), REGION)
     later, reasons = at_places.judge([Site("aside", -39.2, 145.7)], made.fields, made.flags, REGION.thresholds)
     assert (later == STRAINED).all()
-    assert all("slopes by 12 ± 0 mm/km" in reason for reason in reasons[0])
+    assert all("slopes by 12.0 ± 0.5 mm/km" in reason for reason in reasons[0])

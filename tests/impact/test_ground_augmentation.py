@@ -60,7 +60,7 @@ def test_minutes_beyond_each_limit() -> None:
     assert {one.what for one in found.exceeded} == {"nominal", "announced", "threat", "unseen"}
     first = next(one for one in found.exceeded if one.what == "nominal")
     assert (first.start, first.end) == (TIMES[10], TIMES[13])
-    assert "14 ± 0 mm/km" in first.why
+    assert "14.0 ± 0.1 mm/km" in first.why
     assert np.isnan(found.error_95_m[100:112]).all()
 
 

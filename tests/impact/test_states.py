@@ -210,10 +210,23 @@ def test_ways_of_seeing_a_slope_are_told_side_by_side(stormy):
     assert claim.evidence.endswith("the map says nothing there")  # it is steepest off the map of this test
     here = replace(max(steep.claims, key=lambda one: one.slope), lat=-39.0, lon=145.5)
     one = replace(steep, claims=(here,))
-    same = f"the map agrees: {here.slope:.0f} ± 0 mm/km"
-    for slope, words in ((1.0, "the map disagrees: 1 ± 0 mm/km"), (here.slope, same)):
+    same = f"the map agrees: {here.slope:.1f} ± 0.4 mm/km"
+    for slope, words in ((1.0, "the map disagrees: 1.0 ± 0.4 mm/km"), (here.slope, same)):
         flags = states.judge(flat_fields(slope=slope, sigma=0.4), one, bare, ragged, REGION).flags
         assert any(words in flag.evidence for flag in flags)
+
+
+@pytest.mark.parametrize(
+    ("sigma", "heading", "speed", "slope"),
+    [(6.2, "320 ± 6°", "181 ± 6 m/s", "95 ± 6 mm/km"), (0.31, "320.4 ± 0.3°", "180.6 ± 0.3 m/s", "95.2 ± 0.3 mm/km"),
+     (0.02, "320.38 ± 0.02°", "180.61 ± 0.02 m/s", "95.22 ± 0.02 mm/km")],
+)  # fmt: skip
+def test_no_number_of_a_front_reads_as_exact(stormy, sigma, heading, speed, slope):
+    sigmas = {"slope_sigma": sigma, "heading_sigma_deg": sigma, "speed_sigma_m_s": sigma}
+    front = replace(stormy[2].fronts[0], heading_deg=320.38, speed_m_s=180.61, slope=95.22, **sigmas)
+    told = states.front_sentence(front)
+    assert f"toward {heading} at {speed}" in told and f"front of {slope}" in told
+    assert "± 0 " not in told and "± 0°" not in told
 
 
 def test_what_is_not_confirmed_says_so_in_its_evidence(stormy):

@@ -66,6 +66,7 @@ test("a reason is joined to its site without saying the state twice", () => {
 test("flags in a line", () => {
   const flag = { kind: "front", slope: 95.2, sigma: 9.1, speed: 61.8, heading: 315 };
   assert.equal(words.flagSentence(flag), "Moving front, 95 ± 9 mm/km, moving north-west at 62 m/s");
+  assert.match(words.flagSentence({ ...flag, sigma: 0.31 }), /95.2 ± 0.3 mm/, "a sigma is never read as nought");
   assert.equal(words.flagSentence({ ...flag, kind: "fault", slope: NaN, speed: NaN }), "Fault in the data");
 });
 

@@ -13,7 +13,14 @@ import numpy.typing as npt
 
 from skylag.constants import KM_PER_DEG
 from skylag.impact.coming import from_line
-from skylag.impact.states import JudgeChoices, field_states, honest_state, nearest_cells, state_of_slope
+from skylag.impact.states import (
+    JudgeChoices,
+    field_states,
+    honest_state,
+    nearest_cells,
+    state_of_slope,
+    with_its_sigma,
+)
 from skylag.impact.survey import touches
 from skylag.ionosphere.covariance import plane_km
 from skylag.tables import (
@@ -185,8 +192,8 @@ def _reasons(
         elif by_map[epoch] >= code:
             limit = limits.broken_mm_per_km if STATE_NAMES[code] == "broken" else limits.strained_mm_per_km
             said.append(
-                f"the map slopes by {slope[epoch]:.0f} ± {sigma[epoch]:.0f} mm/km, the limit of {STATE_NAMES[code]} "
-                f"is {limit:g}"
+                f"the map slopes by {with_its_sigma(float(slope[epoch]), float(sigma[epoch]))} mm/km, the limit of "
+                f"{STATE_NAMES[code]} is {limit:g}"
             )
         else:
             near = [flag for flag in warning if touches(flag, site.lat, site.lon, fields.times[epoch], _SPARE)]

@@ -12,7 +12,7 @@ from scipy.ndimage import distance_transform_edt, find_objects, label
 
 from skylag.constants import KM_PER_DEG
 from skylag.events import Event
-from skylag.impact.states import carried, nearest_cells
+from skylag.impact.states import carried, nearest_cells, with_its_sigma
 from skylag.impact.uses import JudgedUse, owners
 from skylag.tables import STATE_NAMES, STRAINED, UNSEEN, Bytes, Fields, Flag, Floats, Ints, Region
 
@@ -105,7 +105,7 @@ def _event(
         slope, sigma = flags[lead].slope_mm_per_km, flags[lead].sigma_mm_per_km
     cause = flags[lead].kind if lead is not None else "map"
     reason = flags[lead].evidence if lead is not None else (
-        f"the map is steep over {int(touched.sum())} cells, up to {slope:.0f} ± {sigma:.0f} mm/km"
+        f"the map is steep over {int(touched.sum())} cells, up to {with_its_sigma(slope, sigma)} mm/km"
         if np.isfinite(slope) else f"slopes between receivers nearby reach over {int(touched.sum())} cells"
     )  # fmt: skip
     reason += _lost_sight(states, epochs, box, member)

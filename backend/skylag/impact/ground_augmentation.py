@@ -14,7 +14,7 @@ import numpy.typing as npt
 from skylag.errors import Refused
 from skylag.impact import at_places
 from skylag.impact.satellite_augmentation import CAUTION, spans
-from skylag.impact.states import nearest_cells, plus_minus
+from skylag.impact.states import nearest_cells, plus_minus, with_its_sigma
 from skylag.ionosphere.geometry import mapping
 from skylag.ionosphere.slopes import NOMINAL_BOUND, model_bound
 from skylag.tables import (
@@ -211,7 +211,8 @@ def _exceeded(
                 why = f"{STATE_NAMES[int(judged[worst])]} by a warning over the aerodrome: {told[worst]}"
             elif what != "unseen":
                 worst = first + int(np.nanargmax(slope[first:last]))
-                why = f"vertical slope up to {slope[worst]:.0f} ± {sigma[worst]:.0f} mm/km is beyond {limit[what]}"
+                told_slope = with_its_sigma(float(slope[worst]), float(sigma[worst]))
+                why = f"vertical slope up to {told_slope} mm/km is beyond {limit[what]}"
             rows.append(Exceeded(site.name, times[first], times[last - 1] + step, what, why))
     return sorted(rows, key=lambda one: (one.start, one.what))
 

@@ -47,7 +47,6 @@ from skylag.tables import (
 )
 
 NOTHING = float("nan")
-FINE_SIGMA_MM_PER_KM = 0.95  # below it slopes are told to tenths
 # What a patch's evidence says of the planar-fit test of satellite-based services; `impact.uses` goes by it.
 PLANAR_FAILS, PLANAR_PASSES = "planar fit fails", "planar fit passes"
 
@@ -358,9 +357,19 @@ def _judge_sites(
     return states, tuple(reasons)
 
 
+def digits_of(sigma: float) -> int:
+    """Decimals of a sigma and its value: none; tenths, or hundredths, where it would read as nought."""
+    return 0 if not sigma < 0.95 else 1 if sigma >= 0.095 else 2
+
+
 def plus_minus(sigma: float) -> str:
-    """A sigma of a slope [mm/km] as it is read: whole numbers, tenths below one, so that none reads as nought."""
-    return f"± {sigma:.0f}" if sigma >= FINE_SIGMA_MM_PER_KM else f"± {sigma:.1f}"
+    """A sigma as it is read, so that none reads as nought."""
+    return f"± {sigma:.{digits_of(sigma)}f}"
+
+
+def with_its_sigma(value: float, sigma: float) -> str:
+    """A value with the digits that its sigma has, like 38 ± 6 or 1.4 ± 0.6."""
+    return f"{value:.{digits_of(sigma)}f} {plus_minus(sigma)}"
 
 
 def nearest_cells(fields: Fields, lat: Floats, lon: Floats) -> tuple[Any, Any, Bools]:
@@ -386,7 +395,7 @@ def _field_sentence(
         return f"slope known to {plus_minus(float(fields.slope_sigma[place]))} mm/km only: nothing can be said"
     limit = limits.broken_mm_per_km if state == BROKEN else limits.strained_mm_per_km
     return (
-        f"the map slopes by {float(fields.slope[place]):.0f} ± {float(fields.slope_sigma[place]):.0f} mm/km, "
+        f"the map slopes by {with_its_sigma(float(fields.slope[place]), float(fields.slope_sigma[place]))} mm/km, "
         f"the limit of {STATE_NAMES[state]} is {limit:g}"
     )
 
@@ -397,10 +406,10 @@ def _field_sentence(
 def front_sentence(front: Front) -> str:
     """A front in one sentence, with its numbers and their uncertainty."""
     return (
-        f"front of {front.slope:.0f} ± {front.slope_sigma:.0f} mm/km over {front.width_km:.0f} km, moving toward "
-        f"{front.heading_deg:.0f} ± {front.heading_sigma_deg:.0f}° at {front.speed_m_s:.0f} ± "
-        f"{front.speed_sigma_m_s:.0f} m/s{_paces(front)}: {front.onsets} onsets on {len(front.receivers)} receivers "
-        f"and {len(front.satellites)} satellites agree"
+        f"front of {with_its_sigma(front.slope, front.slope_sigma)} mm/km over {front.width_km:.0f} km, moving toward "
+        f"{with_its_sigma(front.heading_deg, front.heading_sigma_deg)}° at "
+        f"{with_its_sigma(front.speed_m_s, front.speed_sigma_m_s)} m/s{_paces(front)}: {front.onsets} onsets on "
+        f"{len(front.receivers)} receivers and {len(front.satellites)} satellites agree"
     )
 
 
@@ -458,8 +467,7 @@ def _compared(who: str, slope: tuple[float, float] | None, front: Front) -> str:
     """One way of seeing a slope against a front's own."""
     if slope is None:
         return f"{who} {'say' if who.endswith('s') else 'says'} nothing there"
-    digits = int(slope[1] < 1.0)  # "± 0" would claim to be exact
-    text = f"up to {slope[0]:.{digits}f} ± {slope[1]:.{digits}f} mm/km by {who}"
+    text = f"up to {with_its_sigma(*slope)} mm/km by {who}"
     more = slope[0] - front.slope > 2.0 * float(np.hypot(slope[1], front.slope_sigma))
     less = slope[0] + 2.0 * slope[1] < 0.25 * front.slope
     return text + (", which disagrees" if more else ", which sees little of it" if less else ", which agrees")
@@ -532,7 +540,7 @@ def _map_beside(claim: SlopeClaim, fields: Fields) -> str:
     if not np.isfinite(slope):
         return "; the map says nothing there"
     apart = abs(slope - claim.slope) > 2.0 * float(np.hypot(sigma, claim.sigma))
-    return f"; the map {'disagrees' if apart else 'agrees'}: {slope:.0f} ± {sigma:.0f} mm/km"
+    return f"; the map {'disagrees' if apart else 'agrees'}: {with_its_sigma(slope, sigma)} mm/km"
 
 
 def _by_fault(claim: SlopeClaim, faults: Sequence[Fault]) -> bool:

@@ -7,7 +7,7 @@ import math
 from collections.abc import Sequence
 from typing import Any
 
-from skylag.impact.states import FINE_SIGMA_MM_PER_KM
+from skylag.impact.states import digits_of
 from skylag.tables import BROKEN, HOLDS, STATE_NAMES, UNSEEN, Thresholds
 from skylag.web.nearby import NearFlag
 
@@ -62,8 +62,7 @@ def of_state(
     if code == UNSEEN or (code == HOLDS and not known):
         return _unseen(delay_m, delay_sigma_m, support, limits)
     delay = f"the vertical delay is {with_sigma(delay_m, delay_sigma_m, 'm', 2)}" if known else ""
-    digits = 1 if slope_sigma < FINE_SIGMA_MM_PER_KM else 0
-    steep = with_sigma(slope, slope_sigma, "mm per km", digits)
+    steep = with_sigma(slope, slope_sigma, "mm per km", digits_of(slope_sigma))
     change = f"the delay changes by {steep}" if math.isfinite(slope) else ""
     if code == HOLDS:
         return f"Corrections hold here: {delay}" + (f", and {change}." if change else ".")
@@ -98,7 +97,7 @@ def _witness(code: int, near: Sequence[NearFlag]) -> str:
     if not speaking:
         return "receivers near by see more than the map shows"
     flag = speaking[0]
-    steep = with_sigma(flag.slope_mm_per_km, flag.sigma_mm_per_km, "mm per km", 0)
+    steep = with_sigma(flag.slope_mm_per_km, flag.sigma_mm_per_km, "mm per km", digits_of(flag.sigma_mm_per_km))
     has_slope = math.isfinite(flag.slope_mm_per_km)
     if flag.kind == "front":
         moving = f", moving {compass(flag.heading_deg)}" if math.isfinite(flag.heading_deg) else ""

@@ -49,7 +49,7 @@ export class FlagsPanel {
           make("td", { class: "nowrap" }, make("button", { type: "button", class: "linklike", text: spanText(flag.start, flag.end, how), click: () => this.#go(flag, day) })),
           make("td", { class: "nowrap" }, make("span", { class: "state-word" }, sign(flag.kind), KIND_WORDS[flag.kind]?.name ?? flag.kind)),
           make("td", { class: "nowrap" }, flag.state ? stateWord(flag.state) : ""),
-          make("td", { class: "number", "data-head": heads[3], "data-none": !Number.isFinite(flag.slope), text: Number.isFinite(flag.slope) ? withSigma(flag.slope, flag.sigma, "mm/km", 0) : "–" }),
+          make("td", { class: "number", "data-head": heads[3], "data-none": !Number.isFinite(flag.slope), text: Number.isFinite(flag.slope) ? withSigma(flag.slope, flag.sigma, "mm/km") : "–" }),
           make("td", { class: "nowrap", "data-head": heads[4], "data-none": !Number.isFinite(flag.speed), text: Number.isFinite(flag.speed) ? WORDS.movesTo(fixed(flag.speed, 0), compass(flag.heading)) : "–" }),
           make("td", { class: "nowrap", "data-head": heads[5], text: placeText(flag.lat, flag.lon, 1) }),
           make("td", {}, evidenceText(flag)),
