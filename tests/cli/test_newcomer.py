@@ -1,5 +1,6 @@
 """What somebody new types wrongly: messages name what is wrong, where, and a way out; no verdict lacks its caution."""
 
+import errno
 import os
 import signal
 import subprocess
@@ -143,6 +144,34 @@ def test_no_place_for_results_is_told_before_the_work(
     assert main(["day", str(tmp_path), "--out", str(tmp_path / "new")]) == 3
     told = capsys.readouterr().err
     assert f"{tmp_path}: Permission denied; change its rights, or choose a place" in told
+
+
+@pytest.mark.parametrize("how", ["no names", "no files"])
+def test_a_folder_that_may_not_be_looked_into(
+    how: str, tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Named, it is refused; below a named one, it is told among what was left out."""
+    inputs, below = tmp_path / "inputs", tmp_path / "inputs" / "below"
+    below.mkdir(parents=True)
+    (below / "there.obs").write_text("not for you", encoding="utf-8")
+    names, rights = os.scandir, os.access
+
+    def scandir(place: str) -> object:
+        if how == "no names" and Path(place) == below:
+            raise PermissionError(errno.EACCES, os.strerror(errno.EACCES), str(place))
+        return names(place)
+
+    def access(place: str, mode: int) -> bool:
+        return not (how == "no files" and Path(place) == below) and rights(place, mode)
+
+    monkeypatch.setattr(os, "scandir", scandir)
+    monkeypatch.setattr(os, "access", access)
+    said = f"{below}: may not be read; change its rights, or take the files from elsewhere (Permission denied)"
+    assert main(["day", str(below), "--out", str(tmp_path / "out")]) == 3
+    assert capsys.readouterr().err.rstrip().endswith(f"skylag: {said}")
+    assert main(["day", str(inputs), "--out", str(tmp_path / "out")]) == 3
+    told = capsys.readouterr().err
+    assert "no observation file is among the inputs" in told and said in told and "there.obs" not in told
 
 
 REGION_TEXT = """[region]

@@ -4,6 +4,8 @@ Units are top-level functions with picklable arguments, so that any standard Exe
 named and left out; the rest goes on.  Never writes to the archive: whoever asked keeps the products.
 """
 
+import errno
+import os
 import platform
 import re
 import time
@@ -111,17 +113,17 @@ class _Clock:
 def sort_inputs(paths: Iterable[Path]) -> Inputs:
     """Look into every file (folders are searched) and sort by kind; what is of no use is left out with a reason.
 
-    Raises FormatError where a path does not exist.
+    Raises FormatError where a path does not exist, or may not be looked into.
     """
     observations: dict[str, list[str]] = {}
     orbits: list[str] = []
     biases: list[str] = []
-    left_out: list[LeftOut] = []
     files: list[Mapping[str, Any]] = []
     seen: dict[str, str] = {}
     days: dict[str, np.datetime64 | None] = {}
     any_invented = False
-    for path in _all_files(paths):
+    found, left_out = _all_files(paths)
+    for path in found:
         try:
             kind, mark, first_day, invented = glance(path)[:4]
         except SkylagError as trouble:
@@ -156,20 +158,52 @@ def sort_inputs(paths: Iterable[Path]) -> Inputs:
     )  # fmt: skip
 
 
-def _all_files(paths: Iterable[Path]) -> list[Path]:
+def _all_files(paths: Iterable[Path]) -> tuple[list[Path], list[LeftOut]]:
+    """Files that are named or lie in folders that are, and what may not be looked into below these.
+
+    Raises FormatError for a path that does not exist or may not be looked into.
+    """
     found: list[Path] = []
+    barred: list[LeftOut] = []
     for path in paths:
-        if path.is_dir():
-            # A folder may hold the region, notes and truth beside the data: hidden files and these are passed over.
-            found += [
-                p for p in sorted(path.rglob("*"))
-                if p.is_file() and not p.name.startswith(".") and p.suffix not in _NOT_DATA
-            ]  # fmt: skip
-        elif path.exists():
-            found.append(path)
-        else:
-            raise FormatError(f"{path}: there is no such file or folder", path=str(path), line=0)
-    return list(dict.fromkeys(found))
+        try:
+            if path.is_dir():
+                files, below = _within(path)
+                found += files
+                barred += below
+            elif path.exists():
+                found.append(path)
+            else:
+                raise FormatError(f"{path}: there is no such file or folder", path=str(path), line=0)
+        except OSError as trouble:
+            raise FormatError(f"{path}: {_BARRED} ({trouble.strerror})", path=str(path), line=0) from trouble
+    return list(dict.fromkeys(found)), barred
+
+
+_BARRED = "may not be read; change its rights, or take the files from elsewhere"
+
+
+def _within(folder: Path) -> tuple[list[Path], list[LeftOut]]:
+    """Files of a folder and those below it, in order, and the folders below it that may not be looked into.
+
+    A folder may hold the region, notes and truth beside the data: hidden files and these are passed over.  Raises
+    OSError where the folder itself may not be looked into.
+    """
+    found: list[Path] = []
+    barred: list[LeftOut] = []
+
+    def bar(trouble: OSError) -> None:
+        if Path(trouble.filename) == folder:
+            raise trouble
+        barred.append(LeftOut(str(trouble.filename), 0, f"{_BARRED} ({trouble.strerror})"))
+
+    for place, _, names in os.walk(folder, onerror=bar):
+        if not os.access(place, os.X_OK):  # its names may be read, its files not
+            bar(PermissionError(errno.EACCES, os.strerror(errno.EACCES), place))
+            continue
+        inside = [Path(place) / name for name in names]
+        found += [p for p in inside if p.is_file() and not p.name.startswith(".") and p.suffix not in _NOT_DATA]
+    return sorted(found), sorted(barred, key=str)
 
 
 def _station_key(path: Path) -> str:
@@ -396,7 +430,8 @@ def network_day(
     """From files and folders to the products of one network day.
 
     earlier  where biases of an earlier day are asked for, if `choices.earlier_days` wants them (`earlier_biases`)
-    Raises NotEnough where no receiver can be used, FormatError where a path does not exist.
+    Raises NotEnough where no receiver can be used, FormatError where a path does not exist or may not be
+    looked into.
     """
     tell = progress or (lambda stage, share, word: None)
     choices = choices or Choices()
