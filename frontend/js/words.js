@@ -572,7 +572,15 @@ export function bothClocks(ms, zone, first = "utc") {
  * @param {Record<string, number>} limits
  */
 export function limitsSentence({ strained_mm_per_km: strained, broken_mm_per_km: broken, unseen_sigma_m: unseen }) {
-  return `The limits here: strained from ${strained} mm/km, broken from ${broken} mm/km, unseen where the delay is not known to ${unseen} m.`;
+  return `The limits here: strained from ${strained} mm/km, broken from ${broken} mm/km, unseen where the delay is not known to ${unseen} m, or where it cannot be said (95 %) that the slope stays under ${strained} mm/km.`;
+}
+
+/**
+ * What "holds" asks for, and what it does not: a job may ask for more.
+ * @param {Record<string, number>} limits
+ */
+export function holdsSentence({ strained_mm_per_km: strained }) {
+  return `Corrections hold where the slope stays under ${strained} mm/km (95 %), whatever the distance to the base. Whether that is enough for your baseline and tolerance is told under “${PAGE_WORDS.forYourWorkHere}”.`;
 }
 
 /**

@@ -10,9 +10,9 @@ from scipy.stats import norm
 from tests.conftest import Evidence
 
 from skylag.errors import Refused
-from skylag.impact import sky, survey
+from skylag.impact import sky, states, survey
 from skylag.impact.survey import Job
-from skylag.tables import BROKEN, HOLDS, UNSEEN, Fields, Flag
+from skylag.tables import BROKEN, HOLDS, UNSEEN, Fields, Flag, Thresholds
 
 DAY = np.datetime64("2031-03-12", "ns")
 TIMES = DAY + np.arange(0, 1440, 5).astype("timedelta64[m]")
@@ -176,8 +176,27 @@ def test_an_unknown_slope_is_unseen_not_steep() -> None:
     found = survey.advise(a_job(), some_fields(0.5, 40.0))
     assert set(found.verdict) == {survey.NOT_SEEN}
     assert "known to ± 40 mm/km only" in found.reasons[0]
+    assert "which leaves up to " in found.reasons[0] and "mm (95 %) of height error over 10 km" in found.reasons[0]
     over_a_long_way = survey.advise(a_job(baseline_km=60.0), some_fields(0.0, 0.4))
     assert "known to ± 0.4 mm/km only" in over_a_long_way.reasons[0], "a sigma is never read as nought"
+
+
+def test_a_slope_that_holds_may_be_too_little_known_for_a_job() -> None:
+    """1 ± 3 mm/km stays under 8 mm/km with 95 %, but leaves decimetres over 10 km: each rule says what it asks."""
+    fields = some_fields(1.0, 3.0)
+    assert (states.field_states(fields, Thresholds()) == HOLDS).all()
+    found = survey.advise(a_job(), fields)
+    error = found.vertical_95[0]
+    assert error > 100.0
+    leaves = f"which leaves up to {error:.0f} mm (95 %) of height error over 10 km, tolerance 50 mm"
+    assert f"known to ± 3 mm/km only, {leaves}" in found.reasons[0] and set(found.verdict) == {survey.NOT_SEEN}
+    assert any("under 8 mm/km (95 %)" in one and "The job's own distance" in one for one in found.assumptions)
+    nearby = survey.advise(a_job(baseline_km=1.0), fields)
+    assert set(nearby.verdict) == {survey.WORK}
+    flat = survey.advise(a_job(baseline_km=1.0, vertical_mm=1e3, horizontal_mm=5.0), fields)
+    assert "of horizontal error over 1 km, tolerance 5 mm" in flat.reasons[0]
+    unfixed = survey.advise(a_job(vertical_mm=1e4, horizontal_mm=1e4, baseline_km=60.0), fields)
+    assert "% that fixing suffers over 60 km: nothing can be said" in unfixed.reasons[0]
 
 
 def test_one_bad_corner_spoils_an_area() -> None:

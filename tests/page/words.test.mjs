@@ -83,7 +83,13 @@ test("the chosen clock comes first", () => {
 
 test("the limits are told with their units", () => {
   const said = words.limitsSentence({ strained_mm_per_km: 8, broken_mm_per_km: 30, unseen_sigma_m: 1.5 });
-  assert.match(said, /strained from 8 mm\/km, broken from 30 mm\/km, unseen .* 1\.5 m/);
+  assert.match(said, /strained from 8 mm\/km, broken from 30 mm\/km, unseen .* 1\.5 m, or where it cannot be said/);
+});
+
+test("that corrections hold is not said of every job", () => {
+  const said = words.holdsSentence({ strained_mm_per_km: 8 });
+  assert.match(said, /under 8 mm\/km \(95 %\), whatever the distance to the base/);
+  assert.ok(said.includes(`“${words.PAGE_WORDS.forYourWorkHere}”`), "the panel is named as the page names it");
 });
 
 test("no hemisphere where there is none", () => {

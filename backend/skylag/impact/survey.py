@@ -218,8 +218,8 @@ def advise(
     return Advice(
         job=job, times=fields.times, longest_km=longest.min(axis=0), count=count, dilution=dilution, verdict=verdict,
         reasons=reasons, hours=hours, index=index, index_words=tuple(index_class(float(one)) for one in index),
-        windows=_windows(job, fields.times, verdict, reasons), assumptions=_assumptions(job, sky, shell_height_m),
-        **told,
+        windows=_windows(job, fields.times, verdict, reasons),
+        assumptions=_assumptions(job, sky, shell_height_m, limits), **told,
     )  # fmt: skip
 
 
@@ -419,7 +419,10 @@ def _verdicts(
             why = f"the satellites above {job.mask_deg:g} degrees do not always give a position"
         elif _only_sigma(job, told, t):
             seen_well = False
-            why = f"the slope is known to {plus_minus(told['slope_sigma'][t])} mm/km only: nothing can be said"
+            why = (
+                f"the slope is known to {plus_minus(told['slope_sigma'][t])} mm/km only, which leaves "
+                f"{_left_open(job, told, t, over)}: nothing can be said"
+            )
         elif not told["vertical_95"][t] <= job.vertical_mm:
             why = f"height error {told['vertical_95'][t]:.0f} mm (95 %) {over}, tolerance {job.vertical_mm:g} mm"
         elif not told["horizontal_95"][t] <= job.horizontal_mm:
@@ -455,6 +458,16 @@ def _only_sigma(job: Job, told: dict[str, Floats], t: int) -> bool:
     within = told["vertical_95"][t] <= job.vertical_mm and told["horizontal_95"][t] <= job.horizontal_mm
     fixed = not told["fixing"][t] > job.fixing_chance
     return bool(told["slope_sigma"][t] > told["slope"][t] and not (within and fixed))
+
+
+def _left_open(job: Job, told: dict[str, Floats], t: int, over: str) -> str:
+    """What an unknown slope leaves possible: the first tolerance of the job that it passes, with both numbers."""
+    for what, error, limit in (
+        ("height", told["vertical_95"][t], job.vertical_mm), ("horizontal", told["horizontal_95"][t], job.horizontal_mm)
+    ):  # fmt: skip
+        if not error <= limit:
+            return f"up to {error:.0f} mm (95 %) of {what} error {over}, tolerance {limit:g} mm"
+    return f"a chance of {100 * told['fixing'][t]:.0f} % that fixing suffers {over}"
 
 
 def _windows(
@@ -525,7 +538,7 @@ def _most(reasons: Sequence[str]) -> str:
     return sorted(most)[len(most) // 2]
 
 
-def _assumptions(job: Job, sky: Sky | None, shell_height_m: float) -> tuple[str, ...]:
+def _assumptions(job: Job, sky: Sky | None, shell_height_m: float, limits: Thresholds) -> tuple[str, ...]:
     geometry = (
         f"Satellites: {sky.source}, above {job.mask_deg:g} degrees, weighted by the squared sine of the elevation; "
         "their delays unrelated or all alike, whichever hurts more."
@@ -554,6 +567,9 @@ def _assumptions(job: Job, sky: Sky | None, shell_height_m: float) -> tuple[str,
         f"half a cycle, {HALF_CYCLE_MM:.1f} mm on 1575.42 MHz (9.5 ppm over 10 km); thin shell at "
         f"{shell_height_m / 1000:g} km.",
         "Tolerances are compared with what 95 % of errors stay under.",
+        "The job's own distance and tolerances decide here. That corrections hold, on the map, asks only that the "
+        f"slope stays under {limits.strained_mm_per_km:g} mm/km (95 %), which may be too little, or more than is "
+        "needed, for this job.",
     )
 
 

@@ -2,7 +2,7 @@
  * The reading of the chosen place: the sentence first, the numbers second, the evidence under "why".
  */
 
-import { asSentence, bothClocks, compass, evidenceText, flagSentence, KIND_WORDS, latText, LAYER_WORDS, limitsSentence, lonText, PAGE_WORDS, placeText, READING_WORDS, spanText, STATE_WORDS, withSigma, WORDS } from "../words.js";
+import { asSentence, bothClocks, compass, evidenceText, flagSentence, holdsSentence, KIND_WORDS, latText, LAYER_WORDS, limitsSentence, lonText, PAGE_WORDS, placeText, READING_WORDS, spanText, STATE_WORDS, withSigma, WORDS } from "../words.js";
 import { away, placeAt } from "../figures/signs.js";
 import { make, stateWord, trouble, viewOf } from "./parts.js";
 
@@ -98,6 +98,7 @@ export class ReadingPanel {
       ...lead.slice(1).map((text) => make("p", { class: "reason", text })),
       numbers({ ...reading, state }),
       make("p", { class: "fine", text: WORDS.sigma }),
+      ...(state === "holds" ? [make("p", { class: "fine", text: holdsSentence(day.region.thresholds) })] : []),
       why,
     );
     answer.setAttribute("aria-busy", "false");
