@@ -66,6 +66,13 @@ def test_an_unconfirmed_front_is_not_announced() -> None:
     assert alone(replace(a_front(), kind="slope")) is None
 
 
+@pytest.mark.parametrize("name", ["slope_mm_per_km", "sigma_mm_per_km", "speed_sigma_m_s"])
+def test_what_is_not_known_of_a_front_takes_no_arrival_away(name: str) -> None:
+    known, vague = alone(a_front()), alone(replace(a_front(), **{name: float("nan")}))
+    assert known is not None and vague is not None
+    assert (vague.expected, vague.sigma_s) == (known.expected, known.sigma_s) and "nan" not in vague.words
+
+
 def test_each_limit() -> None:
     """A front is told a little on this side of each limit, and not a little beyond."""
     still = replace(a_front(), track=((NOW, -40.2, 146.0),), end=NOW)

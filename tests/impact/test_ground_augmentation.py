@@ -132,6 +132,17 @@ def test_a_front_over_the_site_counts_with_its_own_slope() -> None:
     assert ground.station_day(SITE, fields, [a_front(False)]).minutes == quiet.minutes
 
 
+def test_a_front_whose_sigma_is_not_known_counts_all_the_same() -> None:
+    blind = some_fields(5.0, 0.5)
+    blind.state[:] = UNSEEN
+    for fields in (some_fields(5.0, 0.5), blind):
+        sure = ground.station_day(SITE, fields, [replace(a_front(), sigma_mm_per_km=0.0)])
+        vague = ground.station_day(SITE, fields, [replace(a_front(), sigma_mm_per_km=float("nan"))])
+        np.testing.assert_array_equal(vague.state, sure.state)
+        assert (vague.state == BROKEN).any() and vague.minutes["announced"] == sure.minutes["announced"] > 0
+        assert not any("nan" in one.why for one in vague.exceeded)
+
+
 @pytest.mark.parametrize("code", [STRAINED, BROKEN])
 def test_a_warning_of_the_map_raises_where_its_slope_does_not(code: int) -> None:
     fields = some_fields(2.0, 1.0)

@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from tests.simulated.moving_wall import CENTRE, START, quiet, simulate, wall
 
 from skylag.events import Patch, Patches
-from skylag.impact import states
+from skylag.impact import at_places, states
 from skylag.ionosphere import faults, fronts, irregularity, slopes
 from skylag.tables import (
     BROKEN,
@@ -244,6 +244,67 @@ def test_what_is_not_confirmed_says_so_in_its_evidence(stormy):
     assert sorted(flag.kind for flag in open_ones) == ["irregular", "slope", "slope"]
     assert all("unconfirmed" in flag.evidence for flag in open_ones)
     assert not any("unconfirmed" in flag.evidence for flag in flags if flag.confirmed)
+
+
+@pytest.mark.parametrize("name", ["slope_sigma", "speed_sigma_m_s", "heading_sigma_deg", "width_sigma_km"])
+def test_a_sigma_that_is_not_known_takes_no_warning_away(stormy, name):
+    _, steep, moving, ragged, _, _ = stormy
+    none = replace(steep, claims=())
+    known = states.judge(flat_fields(), none, moving, ragged, REGION)
+    (front,) = moving.fronts
+    vague = replace(moving, fronts=(replace(front, **{name: np.nan}),))
+    judged = states.judge(flat_fields(), none, vague, ragged, REGION)
+    assert (known.fields.state == BROKEN).any() and (known.site_states == BROKEN).any()
+    np.testing.assert_array_equal(judged.fields.state, known.fields.state)
+    np.testing.assert_array_equal(judged.site_states, known.site_states)
+    flag = next(one for one in judged.flags if one.kind == "front")
+    assert flag.state == "broken" and "nan" not in flag.evidence
+    gentle = replace(moving, fronts=(replace(front, slope=3.0, slope_sigma=np.nan),))
+    flag = next(f for f in states.judge(flat_fields(), none, gentle, ragged, REGION).flags if f.kind == "front")
+    assert flag.state == "unseen", "nor does it say that corrections hold"
+
+
+def test_a_slope_between_receivers_without_a_sigma_warns(stormy):
+    _, steep, moving, ragged, _, _ = stormy
+    bare, unknown = replace(moving, fronts=()), []
+    for claim in steep.claims:
+        unknown.append(replace(claim, sigma=np.nan, cell_sigma=np.full(len(claim.cell_slope), np.nan)))
+    known = states.judge(flat_fields(), steep, bare, ragged, REGION)
+    judged = states.judge(flat_fields(), replace(steep, claims=tuple(unknown)), bare, ragged, REGION)
+    assert (known.fields.state >= STRAINED).any()
+    assert (judged.fields.state >= known.fields.state).all()
+    told = [flag.state for flag in judged.flags if flag.kind == "slope" and flag.confirmed]
+    assert told and "unseen" not in told
+
+
+def test_nothing_holds_under_a_front_of_unknown_slope(stormy):
+    """Fewer than three lines of sight tell how steep it is: it is there, and the map smears it out."""
+    _, steep, moving, ragged, _, _ = stormy
+    unknown = dict.fromkeys(("slope", "slope_sigma", "width_km", "width_sigma_km", "jump_sigma_tecu"), np.nan)
+    none = replace(steep, claims=())
+    vague = replace(moving, fronts=(replace(moving.fronts[0], **unknown),))
+    known = states.judge(flat_fields(), none, moving, ragged, REGION)
+    judged = states.judge(flat_fields(), none, vague, ragged, REGION)
+    assert (judged.fields.state[known.fields.state == BROKEN] == UNSEEN).all()
+    under = known.site_states == BROKEN
+    assert under.any() and (judged.site_states[under] == UNSEEN).all()
+    assert (judged.fields.state[0] == HOLDS).all()
+    assert "front of unknown slope, moving toward" in judged.flags[0].evidence
+    epochs = np.flatnonzero(under[:, 0])
+    epoch, site = int(epochs[len(epochs) // 2]), 0
+    assert judged.site_reasons[site][epoch] == states.DOUBTED
+    later, reasons = at_places.judge(REGION.sites, flat_fields_of(judged, HOLDS), judged.flags, REGION.thresholds)
+    assert later[epoch, site] == UNSEEN and reasons[site][epoch] == states.DOUBTED
+    assert (later[0, :2] == HOLDS).all()
+    steeper = flat_fields()
+    steeper.slope[epoch, 4:7, 5:8] = 20.0
+    flags = states.judge(steeper, none, vague, ragged, REGION).flags
+    assert [one.state for one in flags if one.kind == "slope"] == ["strained"], "it explains no steep map away"
+
+
+def flat_fields_of(judged, state):
+    """The maps of a judged day with one state everywhere, as where their middles lay just beyond a front."""
+    return replace(judged.fields, state=np.full_like(judged.fields.state, state))
 
 
 def test_a_front_of_unknown_slope_never_says_that_corrections_hold(stormy):

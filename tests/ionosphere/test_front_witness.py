@@ -52,3 +52,13 @@ def test_one_receiver_raises_nothing(slow):
     assert front_witness.at_least(told, star) == told
     nobody = replace(steep, **{name: getattr(steep, name)[:0] for name in slopes.Slopes.COLUMNS})
     assert front_witness.at_least(told, nobody) == told
+
+
+def test_pairs_speak_for_a_front_that_does_not_know_its_slope(slow):
+    """Nor is their word lost where the front's own sigma is not known.  Half of the wall's slope at the least: of an
+    unknown breadth only the narrowest published one is searched for pairs."""
+    found, steep = slow
+    best = flattened(found, 0.3).fronts[0]
+    for unknown in ({"slope": np.nan, "slope_sigma": np.nan, "width_km": np.nan}, {"slope_sigma": np.nan}):
+        (front,) = front_witness.at_least(Fronts((replace(best, **unknown),), found.onsets), steep).fronts
+        assert front.slope > 100.0 and 0.0 < front.slope_sigma < 60.0 and np.isfinite(front.jump_tecu)

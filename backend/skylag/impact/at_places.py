@@ -14,6 +14,7 @@ import numpy.typing as npt
 from skylag.constants import KM_PER_DEG
 from skylag.impact.coming import from_line
 from skylag.impact.states import (
+    DOUBTED,
     JudgeChoices,
     field_states,
     honest_state,
@@ -79,6 +80,9 @@ def codes(sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: 
         for flag in warning:
             if coarse or flag.kind == "irregular":
                 state = np.maximum(state, np.where(over(flag, site, fields.times), _level(flag), 0))
+        for flag in flags:
+            if flag.confirmed and flag.kind == "front" and flag.state == STATE_NAMES[UNSEEN]:
+                state = np.where((state == HOLDS) & over(flag, site, fields.times), UNSEEN, state)
         found[:, number] = state
     return found
 
@@ -187,6 +191,9 @@ def _reasons(
         if code == HOLDS:
             said.append("")
         elif code == UNSEEN:
+            if by_map[epoch] == HOLDS and fields.state[epoch, cell[0], cell[1]] != UNSEEN:
+                said.append(DOUBTED)
+                continue
             nobody = fields.support[epoch, cell[0], cell[1]] == 0 or not np.isfinite(sigma[epoch])
             said.append(_NOBODY if nobody else "delay or slope are not known well enough: nothing can be said")
         elif by_map[epoch] >= code:

@@ -57,8 +57,10 @@ class Coming:
     @property
     def words(self) -> str:
         """The same in words."""
+        slope = self.flag.slope_mm_per_km
+        steep = f"{slope:.0f} mm/km" if np.isfinite(slope) else "unknown slope"
         return (
-            f"front of {self.flag.slope_mm_per_km:.0f} mm/km, {self.away_km:.0f} km away, at "
+            f"front of {steep}, {self.away_km:.0f} km away, at "
             f"{self.flag.speed_m_s:.0f} m/s toward {self.flag.heading_deg:.0f} degrees: in {self.minutes} minutes, "
             f"give or take {self.give_or_take_min} (two sigmas), if it keeps its way"
         )

@@ -152,7 +152,7 @@ def station_day(
             continue
         over = at_places.over(flag, site, fields.times)
         sure = slope - sigma
-        front_sure = flag.slope_mm_per_km - flag.sigma_mm_per_km
+        front_sure = flag.slope_mm_per_km - float(np.nan_to_num(flag.sigma_mm_per_km))  # unknown: warns as it stands
         more = (flag.slope_mm_per_km > slope) & ((front_sure >= sure) | ~(sure > nominal))
         steeper = over & np.where(seen, more, front_sure > nominal)
         slope = np.where(steeper, flag.slope_mm_per_km, slope)
@@ -162,7 +162,7 @@ def station_day(
     factor = float(mapping(choices.lowest_deg, shell_height_m))
     most = slope + _ONE_SIDED_95 * sigma
     error = nominal_error_m(factor, most, choices.distance_km, choices.speed_m_s, choices.smoothing_s)
-    sure = slope - sigma
+    sure = slope - np.where(seen, np.nan_to_num(sigma), np.nan)  # a front's own sigma may not be known
     with np.errstate(invalid="ignore"):
         within = (most <= min(nominal, ANNOUNCED_MOST)) & (judged == HOLDS)
         marks = {

@@ -25,7 +25,7 @@ from skylag.constants import KM_PER_DEG, L1_M_PER_TECU
 from skylag.events import Arrival, Fault, Patch, Patches
 from skylag.ionosphere.field import plane_km
 from skylag.ionosphere.fronts import ahead_km
-from skylag.ionosphere.slopes import field_slope_at
+from skylag.ionosphere.slopes import MODEL_WIDTH_KM, field_slope_at
 from skylag.tables import (
     BROKEN,
     HOLDS,
@@ -47,6 +47,7 @@ from skylag.tables import (
 )
 
 NOTHING = float("nan")
+DOUBTED = "a front whose slope is hardly known passes here: nothing can be said"
 # What a patch's evidence says of the planar-fit test of satellite-based services; `impact.uses` goes by it.
 PLANAR_FAILS, PLANAR_PASSES = "planar fit fails", "planar fit passes"
 
@@ -100,6 +101,15 @@ def state_of_slope(slope: npt.ArrayLike, sigma: npt.ArrayLike, thresholds: Thres
     return state
 
 
+def warning_of_slope(
+    slope: npt.ArrayLike, sigma: npt.ArrayLike, thresholds: Thresholds, sigmas: float = 1.0
+) -> Bytes:
+    """The same for what witnesses tell: a slope whose sigma is not known warns as it stands, and never says `holds`."""
+    known = np.isfinite(np.asarray(sigma, dtype=np.float64))
+    state = state_of_slope(slope, np.where(known, sigma, 0.0), thresholds, sigmas)
+    return np.where(~known & (state == HOLDS), UNSEEN, state).astype(np.uint8)
+
+
 def judge(
     fields: Fields,
     slopes: Slopes,
@@ -119,8 +129,10 @@ def judge(
 
     by_field = field_states(fields, limits, choices)
     warned, _ = _warnings(fields.times, cells, slopes, fronts, patches, limits, choices, reasons=False)
-    explained = _reached(fields.times, cells, fronts, patches, choices).reshape(shape)
+    telling = replace(fronts, fronts=tuple(one for one in fronts.fronts if _front_state(one, limits) != UNSEEN))
+    explained = _reached(fields.times, cells, telling, patches, choices).reshape(shape)
     state = np.maximum(by_field, warned.reshape(shape))
+    state[(state == HOLDS) & _doubted(fields.times, cells, fronts, limits, choices).reshape(shape)] = UNSEEN
 
     site_states, site_reasons = _judge_sites(fields, state, by_field, slopes, fronts, patches, region, choices)
     flags = [
@@ -129,7 +141,7 @@ def judge(
             for number, front in enumerate(fronts.fronts)
         ),
         *(_patch_flag(patch, limits) for patch in patches.patches),
-        *_claim_flags(fields, slopes, fronts, patches, faults, limits, choices),
+        *_claim_flags(fields, slopes, telling, patches, faults, limits, choices),
         *_field_flags(fields, by_field, explained, slopes, choices),
         *(_fault_flag(fault) for fault in faults),
     ]
@@ -203,7 +215,7 @@ class _Places:
 def _front_state(front: Front, limits: Thresholds) -> int:
     if not front.confirmed:
         return UNSEEN
-    state = int(state_of_slope(np.array(front.slope), np.array(front.slope_sigma), limits))
+    state = int(warning_of_slope(front.slope, front.slope_sigma, limits))
     if state == HOLDS and not stays_under(front.slope, front.slope_sigma, limits.strained_mm_per_km):
         return UNSEEN  # a wall whose slope is hardly known is no reason to say that corrections hold
     return state
@@ -222,7 +234,8 @@ def in_front(front: Front, places: Any, times: Any, choices: JudgeChoices) -> Bo
     """
     steps_ns = np.diff(times).astype("timedelta64[ns]").astype(np.int64)
     step_s = float(np.median(steps_ns)) / 1e9 if len(times) > 1 else 300.0
-    half = 0.5 * front.width_km + choices.front_margin_km + front.speed_m_s / 1000.0 * step_s / 2.0
+    width_km = front.width_km if np.isfinite(front.width_km) else MODEL_WIDTH_KM[1]  # the broadest published
+    half = 0.5 * width_km + choices.front_margin_km + front.speed_m_s / 1000.0 * step_s / 2.0
     over: Bools = np.zeros((len(times), len(places.lat)), dtype=bool)
     spare = np.timedelta64(round(step_s * 1e9), "ns")
     for number in np.flatnonzero((times >= front.start - spare) & (times <= front.end + spare)):
@@ -267,7 +280,7 @@ def in_claim(
     steepest = np.zeros(state.shape)
     if len(claim.cell_time) == 0:
         return state, steepest
-    each = state_of_slope(claim.cell_slope, claim.cell_sigma, limits, choices.sigmas)
+    each = warning_of_slope(claim.cell_slope, claim.cell_sigma, limits, choices.sigmas)
     reach = np.timedelta64(round(choices.claim_reach_s / 2.0 * 1e9), "ns")
     half_deg = choices.claim_reach_km / KM_PER_DEG
     for number in range(len(times)):
@@ -326,6 +339,16 @@ def _reached(times: Any, places: Any, fronts: Fronts, patches: Patches, choices:
     return over
 
 
+def _doubted(times: Any, places: Any, fronts: Fronts, limits: Thresholds, choices: JudgeChoices) -> Bools:
+    """(T, P) whether a confirmed front lies over places whose slope is hardly known: it may break what the map, which
+    smears walls out, lets hold."""
+    over: Bools = np.zeros((len(times), len(places.lat)), dtype=bool)
+    for front in fronts.fronts:
+        if front.confirmed and _front_state(front, limits) == UNSEEN:
+            over |= in_front(front, places, times, choices)
+    return over
+
+
 # ---------------------------------------------------------------------------------------------- sites
 
 
@@ -343,11 +366,16 @@ def _judge_sites(
     row, column, inside = nearest_cells(fields, lat, lon)
     cell = np.where(inside[None, :], by_field[:, row, column], UNSEEN).astype(np.uint8)
     states = np.maximum(cell, warned)
+    doubted = _doubted(times, _Places(lat, lon), fronts, region.thresholds, choices) & (states == HOLDS)
+    states[doubted] = UNSEEN
     reasons = []
     for number in range(len(sites)):
         sentences = why[number]
         for epoch in range(len(times)):
             if warned[epoch, number] >= max(STRAINED, int(cell[epoch, number])):
+                continue
+            if doubted[epoch, number]:
+                sentences[epoch] = DOUBTED
                 continue
             sentences[epoch] = _field_sentence(
                 fields, int(cell[epoch, number]), epoch, int(row[number]), int(column[number]),
@@ -368,7 +396,9 @@ def plus_minus(sigma: float) -> str:
 
 
 def with_its_sigma(value: float, sigma: float) -> str:
-    """A value with the digits that its sigma has, like 38 ± 6 or 1.4 ± 0.6."""
+    """A value with the digits that its sigma has, like 38 ± 6 or 1.4 ± 0.6; in whole numbers where it has none."""
+    if not np.isfinite(sigma):
+        return f"{value:.0f} (sigma not known)"
     return f"{value:.{digits_of(sigma)}f} {plus_minus(sigma)}"
 
 
@@ -405,9 +435,10 @@ def _field_sentence(
 
 def front_sentence(front: Front) -> str:
     """A front in one sentence, with its numbers and their uncertainty."""
+    slope = f"{with_its_sigma(front.slope, front.slope_sigma)} mm/km" if np.isfinite(front.slope) else "unknown slope"
+    over = f" over {front.width_km:.0f} km" if np.isfinite(front.width_km) else ""
     return (
-        f"front of {with_its_sigma(front.slope, front.slope_sigma)} mm/km over {front.width_km:.0f} km, moving toward "
-        f"{with_its_sigma(front.heading_deg, front.heading_sigma_deg)}° at "
+        f"front of {slope}{over}, moving toward {with_its_sigma(front.heading_deg, front.heading_sigma_deg)}° at "
         f"{with_its_sigma(front.speed_m_s, front.speed_sigma_m_s)} m/s{_paces(front)}: {front.onsets} onsets on "
         f"{len(front.receivers)} receivers and {len(front.satellites)} satellites agree"
     )
@@ -516,7 +547,7 @@ def _claim_flags(
     for claim in slopes.claims:
         if _mostly_explained(claim, fronts, patches, choices) or _by_fault(claim, faults):
             continue
-        state = int(state_of_slope(np.array(claim.slope), np.array(claim.sigma), limits, choices.sigmas))
+        state = int(warning_of_slope(claim.slope, claim.sigma, limits, choices.sigmas))
         flag = Flag(
             start=claim.start, end=claim.end, lat=claim.lat, lon=claim.lon, kind="slope",
             slope_mm_per_km=claim.slope, sigma_mm_per_km=claim.sigma, speed_m_s=NOTHING, heading_deg=NOTHING,
