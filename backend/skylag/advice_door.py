@@ -15,7 +15,6 @@ import numpy as np
 from skylag import settings
 from skylag.errors import FormatError, Missing, NotEnough, Refused
 from skylag.formats import calendar, sheet, site_lists
-from skylag.impact.coming import coming
 from skylag.impact.ground_augmentation import StationChoices
 from skylag.impact.satellite_augmentation import LEVEL, USUAL_LEVELS
 from skylag.impact.shapes import SHAPES
@@ -291,7 +290,7 @@ def _aerodrome(
         entries = report.approach_entries(approaches)
     told.append(report.station_verdict(station))
     if options.coming:
-        fronts = coming(day.flags, (site,), asking.instant(options.coming, "coming"))
+        fronts = day.coming(site, asking.instant(options.coming, "coming"))
         told.append(f"Next front after {options.coming}: {fronts[0].words if fronts else 'none is on its way'}.")
     return told, assumed, entries
 

@@ -7,12 +7,14 @@ from collections.abc import Iterator
 from concurrent.futures import Executor, ThreadPoolExecutor
 from dataclasses import replace
 from pathlib import Path
+from types import SimpleNamespace
 from typing import Any
 
 import hatanaka
 import numpy as np
 import pytest
 from tests.builders import STORM_DAY, invented_day
+from tests.web.test_coming import over_midnight, until
 
 from skylag.archive import Archive, open_archive
 from skylag.chain import Choices
@@ -460,3 +462,24 @@ def region_of(sample_folder: Path):
     from skylag.settings import read_region
 
     return read_region(sample_folder / "region.toml")
+
+
+def test_a_front_that_the_day_before_saw_last_is_told_by_the_first_maps_of_a_day(
+    tmp_path: Path, executor: Executor, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    first, second = over_midnight()
+    second = until(second, 1)
+    monkeypatch.setattr(work, "network_day", lambda *_asked, **_named: SimpleNamespace(products=second))
+    rules = [Rule("r", "arrival", site="Northport", within_min=180, targets=(f'{{"file": "{tmp_path / "told"}"}}',))]
+    clock = Clock("00:05:00", second.day)
+    (tmp_path / "in").mkdir()
+    for kept in (False, True):
+        with open_archive(tmp_path / f"{kept}.sqlite") as archive:
+            if kept:
+                archive.save(first)
+            watch = Watch(archive, tmp_path / "in", executor, clock, rules=rules, patience=Patience(calm_s=0.0))
+            came = second.day.astype("datetime64[ns]")
+            watch.state = State(frozenset({second.day}), {second.day: (came, came)})
+            assert watch.turn() == 1
+            assert (tmp_path / "told").exists() is kept
+    assert "front to Northport" in (tmp_path / "told").read_text()

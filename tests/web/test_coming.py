@@ -15,8 +15,10 @@ from tests.builders import REGION, STORM_DAY, invented_day
 from tests.simulated import day_results
 
 from skylag.archive import Archive, open_archive
+from skylag.cli import main
 from skylag.jobs import alerts
 from skylag.jobs.alerts import Rule
+from skylag.jobs.under_way import of_day_before
 from skylag.tables import Flag, Products
 from skylag.web import payloads
 from skylag.web.app import create_app
@@ -101,6 +103,63 @@ def test_they_agree_on_any_fronts_and_sites(
     client = TestClient(create_app(own))
     for count in counts:
         agreed(client, products, version, count, [sites[1].name])
+
+
+def over_midnight() -> tuple[Products, Products]:
+    """The stormy day with a front that it sees until ten to midnight, and the day after, which sees none."""
+    first, second = invented_day(STORM_DAY), invented_day(STORM_DAY + 1, storm=False)
+    shift = np.timedelta64(15 * 60 + 50, "m")  # seen until 08:00 in the invention
+    (front,) = (flag for flag in first.flags if flag.kind == "front")
+    track = tuple((time + shift, lat, lon) for time, lat, lon in front.track if lat < -41.0)
+    late = replace(front, start=track[0][0], end=front.end + shift, track=track)
+    late = replace(late, track=(*track[:-1], (late.end, -41.5, 146.0)))
+    return replace(first, flags=(late,)), replace(second, flags=())
+
+
+def test_a_front_that_was_last_seen_before_midnight_is_told_after_it(
+    own: Archive, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    first, second = over_midnight()
+    version = own.save(second)
+    client, site = TestClient(create_app(own)), "Northport"
+    midnight = second.day.astype("datetime64[ns]")
+
+    def told(minutes: int) -> tuple[bool, bool, bool]:
+        """By the page, by a ground station's warning and by an alert."""
+        now = midnight + np.timedelta64(minutes, "m")
+        words = {"time": payloads.utc(now), "version": version}
+        base = f"/api/days/{REGION.name}/{second.day}"
+        shown = client.get(f"{base}/coming", params=words).json()["coming"]
+        warned = client.get(f"{base}/ground", params={**words, "site": site}).json()["next_front"]
+        until_now = until(second, minutes // 15 + 1)
+        before = of_day_before(own, REGION.name, second.day, until_now.fields.times[-1])
+        found = alerts.occasions([replace(RULE, site=site)], until_now, None, before)
+        return site in {one["site"] for one in shown}, warned is not None, bool(found)
+
+    assert told(15) == (False, False, False), "the day before is not kept"
+    own.save(first)
+    assert told(0) == told(15) == told(45) == (True, True, True)
+    assert told(60) == (False, False, False), "an hour after it was last seen"
+    read: list[object] = []
+    flags = own.flags
+    monkeypatch.setattr(own, "flags", lambda *asked, **named: read.append(named) or flags(*asked, **named))
+    assert told(120) == (False, False, False)
+    assert not any(read), "later in the day the day before is not read"
+    (late,) = of_day_before(own, REGION.name, second.day, midnight + np.timedelta64(10, "m"))
+    assert late.track == first.flags[0].track
+    assert of_day_before(own, REGION.name, second.day, midnight + np.timedelta64(55, "m")) == ()
+
+
+def test_the_command_tells_it_too(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    first, second = over_midnight()
+    with open_archive(tmp_path) as archive:
+        for one in (first, second):
+            archive.save(one)
+    words = ["advise", "--archive", str(tmp_path), "--day", str(second.day), "--site", "Kelp Island"]
+    assert main([*words, "--coming", f"{second.day}T00:10:00Z"]) == 0
+    assert f"Next front after {second.day}T00:10:00Z: front of 95 mm/km" in capsys.readouterr().out
+    assert main([*words, "--coming", f"{second.day}T01:10:00Z"]) == 0
+    assert "none is on its way" in capsys.readouterr().out
 
 
 def test_the_page_reckons_no_arrival_itself() -> None:

@@ -392,12 +392,18 @@ class Archive:
             return _nothing_seen(record.times, lat, lon)
         return _cut(self.fields(region, day, version=record.head.version), cell)
 
-    def flags(self, region: str, day: Day, version: int | None = None) -> tuple[Flag, ...]:
-        """The flags of a day, in the order they were saved."""
+    def flags(
+        self, region: str, day: Day, version: int | None = None, *, kind: str = "", since: np.datetime64 | None = None
+    ) -> tuple[Flag, ...]:
+        """The flags of a day, in the order they were saved; of one kind, and those that end at a GPS time or later."""
         table = schema.flag
         with self._reading() as connection:
             product = self._product_row(connection, region, day, version)
             query = sa.select(table).where(table.c.product == product.id).order_by(table.c.number)
+            if kind:
+                query = query.where(table.c.kind == kind)
+            if since is not None:
+                query = query.where(table.c.end_ns >= _nanoseconds(since))
             rows = connection.execute(query).all()
         return tuple(_flag(row) for row in rows)
 

@@ -33,6 +33,7 @@ from skylag.impact import (
     sky,
     survey,
 )
+from skylag.impact.coming import Coming, coming
 from skylag.impact.correction_grid import ConfidenceChoices, GridConfidence
 from skylag.impact.ground_augmentation import StationChoices, StationDay
 from skylag.impact.satellite_augmentation import Availability, ServiceChoices
@@ -41,6 +42,7 @@ from skylag.impact.sky import Sky
 from skylag.impact.survey import Advice, Explanation, Job
 from skylag.ionosphere.covariance import plane_km
 from skylag.ionosphere.geometry import geodetic
+from skylag.jobs.under_way import with_day_before
 from skylag.spelling import no_such
 from skylag.tables import Bytes, Fields, Flag, Samples, Site, Times
 
@@ -291,6 +293,11 @@ class DayAdvice:
         """The slope at an aerodrome against its station's assumptions."""
         limits = self.record.region.thresholds
         return ground_augmentation.station_day(site, self.fields, self.flags, choices, self.shell_height_m, limits)
+
+    def coming(self, site: Site, now: np.datetime64) -> tuple[Coming, ...]:
+        """The front that reaches a site next after a GPS time, if any: of this day, or seen late the day before."""
+        head = self.record.head
+        return coming(with_day_before(self._archive, head.region, head.day, self.flags, now), (site,), now)
 
     def broadcast_model(self, site: Site, mask_deg: float = 10.0) -> LeftOver:
         """What the broadcast model leaves.  Raises Missing where the day knows no coefficients."""

@@ -21,7 +21,7 @@ from skylag.archive import Archive
 from skylag.archive.notices import Due
 from skylag.errors import FormatError, Refused
 from skylag.impact.coming import HORIZON, coming
-from skylag.tables import FLAG_KINDS, STATE_NAMES, UNSEEN, Products, Site
+from skylag.tables import FLAG_KINDS, STATE_NAMES, UNSEEN, Flag, Products, Site
 from skylag.timescales import gps_to_utc
 
 OCCASIONS = ("state", "event", "arrival", "silence")
@@ -119,10 +119,13 @@ def _rule(path: Path, entry: Mapping[str, Any]) -> Rule:
 # ---------------------------------------------------------------------------------------------- occasions
 
 
-def occasions(rules: Sequence[Rule], products: Products, sites: Sequence[Site] | None = None) -> list[Occasion]:
+def occasions(
+    rules: Sequence[Rule], products: Products, sites: Sequence[Site] | None = None, before: Sequence[Flag] = ()
+) -> list[Occasion]:
     """What the newest maps have for the rules: only what goes on at the newest map, or ended shortly before.  Pure.
 
-    sites  where fronts may arrive: those in force, the products' own when None
+    sites   where fronts may arrive: those in force, the products' own when None
+    before  flags of the day before whose fronts may be on their way still
     """
     found: list[Occasion] = []
     if not len(products.fields.times):
@@ -133,7 +136,7 @@ def occasions(rules: Sequence[Rule], products: Products, sites: Sequence[Site] |
         elif rule.when == "event":
             found += _events(rule, products)
         elif rule.when == "arrival":
-            found += _arrivals(rule, products, products.region.sites if sites is None else sites)
+            found += _arrivals(rule, products, products.region.sites if sites is None else sites, before)
     return found
 
 
@@ -183,10 +186,10 @@ def _events(rule: Rule, products: Products) -> list[Occasion]:
     return found
 
 
-def _arrivals(rule: Rule, products: Products, sites: Sequence[Site]) -> list[Occasion]:
+def _arrivals(rule: Rule, products: Products, sites: Sequence[Site], before: Sequence[Flag]) -> list[Occasion]:
     newest, found = products.fields.times[-1], []
     latest = newest + np.timedelta64(round(rule.within_min * 60), "s")
-    for one in coming(products.flags, sites, newest):
+    for one in coming((*products.flags, *before), sites, newest):
         site, flag = one.site.name, one.flag
         if rule.site not in ("", site) or one.expected > latest:
             continue

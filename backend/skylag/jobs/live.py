@@ -24,6 +24,7 @@ from skylag.formats.glance import glance
 from skylag.ionosphere.geometry import geodetic
 from skylag.jobs import alerts, board, hindcast, kept, work
 from skylag.jobs.closed_hours import ClosedHours, Nearness
+from skylag.jobs.under_way import of_day_before
 from skylag.jobs.upkeep import Upkeep
 from skylag.tables import HOLDS, UNSEEN, Fields, Products, Region
 from skylag.timescales import utc_to_gps
@@ -454,5 +455,7 @@ class Watch:
             hindcast.day_kept(self._archive, products.region.name, products.day, self._log)
         else:
             sites = self._archive.day(products.region.name, products.day, version).region.sites  # those in force
-            alerts.keep(self._archive, alerts.occasions(self._rules, products, sites), self._clock())
+            newest = products.fields.times[-1] if len(products.fields.times) else products.day.astype("datetime64[ns]")
+            late = of_day_before(self._archive, products.region.name, products.day, newest)
+            alerts.keep(self._archive, alerts.occasions(self._rules, products, sites, late), self._clock())
         return 1

@@ -16,6 +16,7 @@ from skylag.impact.ground_augmentation import StationChoices
 from skylag.impact.satellite_augmentation import Availability
 from skylag.impact.survey import Advice
 from skylag.jobs.advising import AskedJob, AskedService, DayAdvice, Desk
+from skylag.jobs.under_way import with_day_before
 from skylag.tables import Site
 from skylag.web import asking, payloads, report, sentences
 
@@ -33,11 +34,15 @@ def flags(request: Request, region: str, day: str, version: int | None = None) -
 
 @router.get("/api/days/{region}/{day}/coming", summary="Fronts on their way to the sites")
 def fronts_coming(request: Request, region: str, day: str, time: str, version: int | None = None) -> Response:
-    """The front that reaches each site next after a UTC instant, soonest first, if it keeps speed and heading."""
+    """The front that reaches each site next after a UTC instant, soonest first, if it keeps speed and heading.
+
+    In the first hour of a day also those that the day before saw last.
+    """
     archive: Archive = request.app.state.archive
     record = archive.day(region, asking.day(day), version)
-    flags = archive.flags(region, record.head.day, record.head.version)
-    found = coming(flags, record.region.sites, asking.instant(time, "time"))
+    now = asking.instant(time, "time")
+    own = archive.flags(region, record.head.day, record.head.version)
+    found = coming(with_day_before(archive, region, record.head.day, own, now), record.region.sites, now)
     return payloads.reply({**sentences.about(record.origin.simulated, record.head.provisional),
                            **payloads.coming_fronts(found)})  # fmt: skip
 
@@ -170,7 +175,7 @@ def ground(
     kept = _day(request, region, day, version)
     place = kept.site(site)
     found = kept.station(place, station)
-    fronts = coming(kept.flags, (place,), asking.instant(time, "time")) if time else ()
+    fronts = kept.coming(place, asking.instant(time, "time")) if time else ()
     return payloads.reply(payloads.station(found, fronts))
 
 
