@@ -102,6 +102,29 @@ def test_arrivals_are_told_for_the_sites_in_force(storm: Products) -> None:
     assert told == {one.facts["site"] for one in alerts.occasions([rule], at)} - {"Northport"} | {"New quay"}
 
 
+def test_states_are_told_for_the_sites_in_force(storm: Products) -> None:
+    """A site that was added or moved since is told from the kept maps, one that was taken away is not."""
+    at, rule = until(storm, "05:30"), Rule("r", "state", state="broken")
+    lat, lon = storm.fields.lats, storm.fields.lons
+    row, column = np.argwhere(at.fields.state[-1] == BROKEN)[0]
+    quay = Site("New quay", float(lat[row]), float(lon[column]), "port")
+    moved = Site("Northport", quay.lat, quay.lon, "port")
+    calm = Site("Calm", *(float(axis[k]) for axis, k in zip((lat, lon), np.argwhere(at.fields.state[-1] == HOLDS)[0],
+                                                           strict=True)))  # fmt: skip
+    others = tuple(site for site in REGION.sites if site.name not in ("Northport", "Gannet Field"))
+    own = {one.facts["site"] for one in alerts.occasions([rule], at)}
+    assert own == {"Gannet Field"}
+    told = alerts.occasions([rule], at, (*others, moved, quay, calm))
+    assert {one.facts["site"] for one in told} == {"Northport", "New quay"}
+    assert all(one.facts["reason"] and one.facts["reason"] in one.sentence for one in told)
+    assert all("not for navigation" in one.sentence for one in told)
+    named = alerts.occasions([replace(rule, site="New quay")], at, (*others, quay))
+    assert [one.subject for one in named] == ["r: New quay"]
+    assert alerts.occasions([rule], at, others) == []
+    assert alerts.occasions([rule], at, (*others, REGION.sites[1]))[0].start == alerts.occasions([rule], at)[0].start
+    assert alerts.occasions([Rule("r", "state", state="unseen")], at, (Site("Far", 10.0, 20.0),)) != []
+
+
 @pytest.mark.parametrize("within", ["0", "-5", "181", "nan", "true", '"60"'])
 def test_no_arrival_is_told_farther_ahead_than_any(tmp_path: Path, within: str) -> None:
     rules = tmp_path / "rules.toml"

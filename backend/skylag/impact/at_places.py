@@ -63,6 +63,29 @@ def judge(
     return found, tuple(told)
 
 
+def in_force(
+    sites: Sequence[Site], known: Sequence[Site], kept: Bytes, told: Sequence[tuple[str, ...]], fields: Fields,
+    flags: Sequence[Flag], limits: Thresholds,
+) -> tuple[Bytes, tuple[tuple[str, ...], ...]]:
+    """Codes (T, sites) and reasons of the sites in force: as the day was kept where a site is where it was.
+
+    known  the sites that the day was judged for, kept (T, known) their codes and told their reasons
+    """
+    column = {_place(one): number for number, one in enumerate(known)}
+    fresh = [one for one in sites if _place(one) not in column]
+    if fresh:
+        more, reasons = judge(fresh, fields, flags, limits)
+        kept, told = np.concatenate([kept, more], axis=1), (*told, *reasons)
+    column |= {_place(one): len(known) + number for number, one in enumerate(fresh)}
+    order = [column[_place(one)] for one in sites]
+    return kept[:, order], tuple(told[number] for number in order)
+
+
+def _place(site: Site) -> tuple[str, float, float]:
+    """What makes a site the same for a day that judged it."""
+    return site.name, site.lat, site.lon
+
+
 def codes(sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: Thresholds) -> Bytes:
     """The same without the reasons (T, sites)."""
     found = np.zeros((len(fields.times), len(sites)), dtype=np.uint8)

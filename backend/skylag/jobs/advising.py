@@ -171,16 +171,10 @@ class DayAdvice:
         kept = self._archive.site_states(head.region, head.day, head.version)
         if sites == kept.sites:
             return kept
-        column = {(one.name, one.lat, one.lon): number for number, one in enumerate(kept.sites)}
-        fresh = [one for one in sites if (one.name, one.lat, one.lon) not in column]
-        codes, together = kept.codes, kept.reasons
-        if fresh:
-            more, reasons = at_places.judge(fresh, self.fields, self.flags, self.record.region.thresholds)
-            codes, together = np.concatenate([codes, more], axis=1), (*together, *reasons)
-        for number, one in enumerate(fresh):
-            column[one.name, one.lat, one.lon] = len(kept.sites) + number
-        order = [column[one.name, one.lat, one.lon] for one in sites]
-        return SiteStates(kept.times, sites, codes[:, order], tuple(together[n] for n in order))
+        codes, reasons = at_places.in_force(
+            sites, kept.sites, kept.codes, kept.reasons, self.fields, self.flags, self.record.region.thresholds
+        )
+        return SiteStates(kept.times, sites, codes, reasons)
 
     def states_at(self, site: Site) -> Bytes:
         """States (T,) of a place: as kept where it is a site of the day, else from the kept maps and flags."""

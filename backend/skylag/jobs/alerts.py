@@ -20,8 +20,9 @@ import numpy as np
 from skylag.archive import Archive
 from skylag.archive.notices import Due
 from skylag.errors import FormatError, Refused
+from skylag.impact import at_places
 from skylag.impact.coming import HORIZON, coming
-from skylag.tables import FLAG_KINDS, STATE_NAMES, UNSEEN, Flag, Products, Site
+from skylag.tables import FLAG_KINDS, STATE_NAMES, UNSEEN, Bytes, Flag, Products, Site
 from skylag.timescales import gps_to_utc
 
 OCCASIONS = ("state", "event", "arrival", "silence")
@@ -124,19 +125,21 @@ def occasions(
 ) -> list[Occasion]:
     """What the newest maps have for the rules: only what goes on at the newest map, or ended shortly before.  Pure.
 
-    sites   where fronts may arrive: those in force, the products' own when None
+    sites   those in force, whose states are told and where fronts may arrive; the products' own when None
     before  flags of the day before whose fronts may be on their way still
     """
     found: list[Occasion] = []
     if not len(products.fields.times):
         return found
+    sites = products.region.sites if sites is None else sites
+    judged = _judged(products, sites) if any(rule.when == "state" for rule in rules) else ()
     for rule in rules:
         if rule.when == "state":
-            found += _states(rule, products)
+            found += _states(rule, products, judged)
         elif rule.when == "event":
             found += _events(rule, products)
         elif rule.when == "arrival":
-            found += _arrivals(rule, products, products.region.sites if sites is None else sites, before)
+            found += _arrivals(rule, products, sites, before)
     return found
 
 
@@ -149,12 +152,22 @@ def silences(rules: Sequence[Rule], receiver: str, since: np.datetime64, now: np
     ]  # fmt: skip
 
 
-def _states(rule: Rule, products: Products) -> list[Occasion]:
+def _judged(products: Products, sites: Sequence[Site]) -> tuple[tuple[Site, Bytes, tuple[str, ...]], ...]:
+    """Each site in force with its states (T,) and reasons."""
+    states, reasons = at_places.in_force(
+        sites, products.region.sites, products.site_states, products.site_reasons, products.fields, products.flags,
+        products.region.thresholds,
+    )  # fmt: skip
+    return tuple(zip(sites, states.T, reasons, strict=True))
+
+
+def _states(
+    rule: Rule, products: Products, judged: Sequence[tuple[Site, Bytes, tuple[str, ...]]]
+) -> list[Occasion]:
     times, found = products.fields.times, []
-    for column, site in enumerate(products.region.sites):
+    for site, codes, reasons in judged:
         if rule.site not in ("", site.name):
             continue
-        codes = products.site_states[:, column]
         wanted = STATE_NAMES.index(rule.state)
         on = codes == UNSEEN if wanted == UNSEEN else codes >= wanted
         lately = np.flatnonzero(on & (times >= times[-1] - _LATELY))
@@ -163,7 +176,7 @@ def _states(rule: Rule, products: Products) -> list[Occasion]:
         last = int(lately[-1])
         off = np.flatnonzero(~on[: last + 1])
         first = int(off[-1]) + 1 if len(off) else 0
-        reason = products.site_reasons[column][last]
+        reason = reasons[last]
         name = STATE_NAMES[int(codes[last])]
         sentence = f"{site.name} is {name} since {_utc(times[first])}: {reason}. {CAUTION}".replace("..", ".")
         facts = {"site": site.name, "state": name, "reason": reason, "simulated": products.origin.simulated}
