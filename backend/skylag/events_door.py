@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING, Any
 from skylag import settings
 from skylag.errors import Refused
 from skylag.formats import events as event_files
-from skylag.impact import arrivals, events, uses
+from skylag.impact import arrivals, events, silence, uses
 from skylag.tables import Flag
 from skylag.web import sentences
 
@@ -58,7 +58,8 @@ def _events(options: argparse.Namespace) -> int:
         _write(_arrivals(record, flags, options), options, about)
         return 0
     if options.use:
-        judged = uses.judge_for(uses.find_use(record.region, options.use), fields, flags, record.region)
+        silent = silence.of_facts(record.origin.counts, record.receivers)
+        judged = uses.judge_for(uses.find_use(record.region, options.use), fields, flags, record.region, silent=silent)
         found = events.of_use(judged, fields, flags, record.region)
     else:
         found = events.of_day(fields, flags, record.region)

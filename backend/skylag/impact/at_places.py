@@ -13,6 +13,7 @@ import numpy.typing as npt
 
 from skylag.constants import KM_PER_DEG
 from skylag.impact.coming import from_line
+from skylag.impact.silence import Silences
 from skylag.impact.states import (
     DOUBTED,
     JudgeChoices,
@@ -49,23 +50,42 @@ _OFF, _NOBODY = "outside the map: nothing can be said", "no line of sight passes
 
 
 def judge(
-    sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: Thresholds
+    sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: Thresholds, silent: Sequence[Silences] = ()
 ) -> tuple[Bytes, tuple[tuple[str, ...], ...]]:
-    """Codes (T, sites) and reasons, per site and epoch, "" where corrections hold."""
-    found = codes(sites, fields, flags, limits)
+    """Codes (T, sites) and reasons, per site and epoch, "" where corrections hold.
+
+    silent  of the days the maps are of: a place goes with the receiver nearest to itself
+    """
+    found = codes(sites, fields, flags, limits, silent)
     row, column, inside = _cells(sites, fields)
     warning = _warning(flags)
     told = [
-        _reasons(site, found[:, number], (int(row[number]), int(column[number])), fields, warning, limits)
+        _reasons(
+            site, found[:, number], (int(row[number]), int(column[number])), fields, warning, limits,
+            doubts(site, fields.times, flags, silent),
+        )
         if inside[number] else (_OFF,) * len(fields.times)
         for number, site in enumerate(sites)
     ]  # fmt: skip
     return found, tuple(told)
 
 
+def doubts(site: Site, times: Times, flags: Sequence[Flag], silent: Sequence[Silences] = ()) -> list[str]:
+    """Per time why nothing may hold at a place, whatever its cell says: its nearest receiver is silent, or a confirmed
+    front of hardly known slope passes; "" where neither."""
+    said = [""] * len(times)
+    for flag in flags:
+        if flag.confirmed and flag.kind == "front" and flag.state == STATE_NAMES[UNSEEN]:
+            for row in np.flatnonzero(over(flag, site, times)):
+                said[row] = DOUBTED
+    for one in silent:
+        said = [more or before for more, before in zip(one.told(site.lat, site.lon, times), said, strict=True)]
+    return said
+
+
 def in_force(
     sites: Sequence[Site], known: Sequence[Site], kept: Bytes, told: Sequence[tuple[str, ...]], fields: Fields,
-    flags: Sequence[Flag], limits: Thresholds,
+    flags: Sequence[Flag], limits: Thresholds, silent: Sequence[Silences] = (),
 ) -> tuple[Bytes, tuple[tuple[str, ...], ...]]:
     """Codes (T, sites) and reasons of the sites in force: as the day was kept where a site is where it was.
 
@@ -74,7 +94,7 @@ def in_force(
     column = {_place(one): number for number, one in enumerate(known)}
     fresh = [one for one in sites if _place(one) not in column]
     if fresh:
-        more, reasons = judge(fresh, fields, flags, limits)
+        more, reasons = judge(fresh, fields, flags, limits, silent)
         kept, told = np.concatenate([kept, more], axis=1), (*told, *reasons)
     column |= {_place(one): len(known) + number for number, one in enumerate(fresh)}
     order = [column[_place(one)] for one in sites]
@@ -86,7 +106,9 @@ def _place(site: Site) -> tuple[str, float, float]:
     return site.name, site.lat, site.lon
 
 
-def codes(sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: Thresholds) -> Bytes:
+def codes(
+    sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: Thresholds, silent: Sequence[Silences] = ()
+) -> Bytes:
     """The same without the reasons (T, sites)."""
     found = np.zeros((len(fields.times), len(sites)), dtype=np.uint8)
     row, column, inside = _cells(sites, fields)
@@ -103,10 +125,8 @@ def codes(sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: 
         for flag in warning:
             if coarse or flag.kind == "irregular":
                 state = np.maximum(state, np.where(over(flag, site, fields.times), _level(flag), 0))
-        for flag in flags:
-            if flag.confirmed and flag.kind == "front" and flag.state == STATE_NAMES[UNSEEN]:
-                state = np.where((state == HOLDS) & over(flag, site, fields.times), UNSEEN, state)
-        found[:, number] = state
+        doubted = np.array([bool(one) for one in doubts(site, fields.times, flags, silent)], dtype=bool)
+        found[:, number] = np.where((state == HOLDS) & doubted, UNSEEN, state)
     return found
 
 
@@ -203,8 +223,9 @@ def ahead_of(flag: Flag, lat: float, lon: float, time: np.datetime64) -> float:
 
 
 def _reasons(
-    site: Site, state: Bytes, cell: tuple[int, int], fields: Fields, warning: Sequence[Flag], limits: Thresholds
-) -> tuple[str, ...]:
+    site: Site, state: Bytes, cell: tuple[int, int], fields: Fields, warning: Sequence[Flag], limits: Thresholds,
+    doubted: Sequence[str],
+) -> tuple[str, ...]:  # fmt: skip
     """The sentences of one site."""
     place = (slice(None), *cell)
     slope, sigma = fields.slope[place], fields.slope_sigma[place]
@@ -214,11 +235,9 @@ def _reasons(
         if code == HOLDS:
             said.append("")
         elif code == UNSEEN:
-            if by_map[epoch] == HOLDS and fields.state[epoch, cell[0], cell[1]] != UNSEEN:
-                said.append(DOUBTED)
-                continue
             nobody = fields.support[epoch, cell[0], cell[1]] == 0 or not np.isfinite(sigma[epoch])
-            said.append(_NOBODY if nobody else "delay or slope are not known well enough: nothing can be said")
+            unsure = doubted[epoch] or "delay or slope are not known well enough: nothing can be said"
+            said.append(_NOBODY if nobody else unsure)
         elif by_map[epoch] >= code:
             limit = limits.broken_mm_per_km if STATE_NAMES[code] == "broken" else limits.strained_mm_per_km
             said.append(

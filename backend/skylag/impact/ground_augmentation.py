@@ -14,6 +14,7 @@ import numpy.typing as npt
 from skylag.errors import Refused
 from skylag.impact import at_places
 from skylag.impact.satellite_augmentation import CAUTION, spans
+from skylag.impact.silence import SILENT, Silences
 from skylag.impact.states import nearest_cells, plus_minus, with_its_sigma
 from skylag.ionosphere.geometry import mapping
 from skylag.ionosphere.slopes import NOMINAL_BOUND, model_bound
@@ -127,7 +128,7 @@ class StationDay:
 
 def station_day(
     site: Site, fields: Fields, flags: Sequence[Flag] = (), choices: StationChoices | None = None,
-    shell_height_m: float = 400e3, limits: Thresholds | None = None,
+    shell_height_m: float = 400e3, limits: Thresholds | None = None, silent: Sequence[Silences] = (),
 ) -> StationDay:  # fmt: skip
     """The slope at an aerodrome through the day against the station's assumptions.
 
@@ -138,7 +139,7 @@ def station_day(
     """
     choices = choices or StationChoices()
     nominal = QUANTILE * choices.sigma_mm_per_km
-    codes, reasons = at_places.judge([site], fields, flags, limits or Thresholds())
+    codes, reasons = at_places.judge([site], fields, flags, limits or Thresholds(), silent)
     judged, told = codes[:, 0], reasons[0]
     row, column, inside = nearest_cells(fields, np.array([site.lat]), np.array([site.lon]))
     place = (slice(None), int(row[0]), int(column[0]))
@@ -206,6 +207,8 @@ def _exceeded(
                     f"the slope is known to {plus_minus(np.nanmax(run))} mm/km only: that it is within "
                     f"{limit['nominal']} cannot be said"
                 )
+            if what == "unseen":
+                why = next((one for one in told[first:last] if SILENT in one), why)
             if what == "warned":
                 worst = first + int(np.argmax(judged[first:last]))
                 why = f"{STATE_NAMES[int(judged[worst])]} by a warning over the aerodrome: {told[worst]}"

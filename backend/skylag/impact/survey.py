@@ -179,12 +179,14 @@ def advise(
     thresholds: Thresholds | None = None,
     shell_height_m: float = 400e3,
     judged: Bytes | None = None,
+    doubts: Sequence[Sequence[str]] = (),
 ) -> Advice:
     """A job through the day of the maps.
 
     sky     satellites at the epochs of the maps; without it the geometry is that of the nominal constellation, and said
     judged  states (T, places) of the places themselves (`at_places.codes`), which warnings may reach that miss the
             middles of their cells; without it those of the cells count
+    doubts  per place and epoch why nothing may hold there, "" where it may (`at_places.doubts`): no time to work
     """
     limits = thresholds or Thresholds()
     seen, looked, warned, middle, sigma, own = _differential(job, fields, limits, judged)
@@ -213,6 +215,7 @@ def advise(
     verdict, reasons = _verdicts(
         job, np.asarray(seen.all(axis=0)), np.asarray(looked.all(axis=0)), warned.max(axis=0), told, count, dilution,
         _off_the_map(job, fields),
+        [next(filter(None, one), "") for one in zip(*doubts, strict=True)] or [""] * len(fields.times),
     )  # fmt: skip
     hours, index = hourly_index(fields, job.places)
     return Advice(
@@ -392,10 +395,10 @@ def hourly_index(fields: Fields, places: Sequence[tuple[float, float]]) -> tuple
 
 def _verdicts(
     job: Job, seen: Bools, looked: Bools, warned: npt.NDArray[np.uint8], told: dict[str, Floats], count: Ints,
-    dilution: Floats, off_the_map: str,
+    dilution: Floats, off_the_map: str, doubted: Sequence[str],
 ) -> tuple[npt.NDArray[np.str_], tuple[str, ...]]:  # fmt: skip
     """Verdict and reason per epoch: the first of unseen, warnings, satellites, an unknown slope, height, horizontal,
-    fixing.  off_the_map: why it is unseen where that is for good, else ""."""
+    fixing, a silent receiver or another doubt.  off_the_map: why it is unseen where that is for good, else ""."""
     known = count >= 0
     over = f"over {job.baseline_km:g} km" if job.method != "network" else "between the reference stations"
     reasons = []
@@ -431,6 +434,8 @@ def _verdicts(
             )
         elif told["fixing"][t] > job.fixing_chance:
             why = f"fixing suffers with a chance of {100 * told['fixing'][t]:.0f} % {over}"
+        elif doubted[t]:
+            seen_well, why = False, doubted[t]
         if why:
             verdict[t] = AVOID if seen_well else NOT_SEEN
         reasons.append(why)

@@ -33,6 +33,7 @@ from skylag.constants import L1_M_PER_TECU
 from skylag.errors import Refused
 from skylag.impact import at_places
 from skylag.impact.ground_augmentation import ANNOUNCED_MOST, front_error_m
+from skylag.impact.silence import Silences
 from skylag.impact.states import (
     PLANAR_FAILS,
     PLANAR_PASSES,
@@ -154,10 +155,12 @@ def judge_for(
     region: Region,
     model: Background | None = None,
     choices: JudgeChoices | None = None,
+    silent: Silences | None = None,
 ) -> JudgedUse:
     """States of every cell and site for a use, each with its reason and the flags behind it.
 
     fields, flags  of a judged day: `fields.state` tells where fronts, patches and slopes between receivers reach
+    silent         who was silent: nothing holds where the receiver nearest to a cell's middle, or to a site, is
     model          the broadcast model, for `single`; without it half of the delay is taken as its error
     """
     choices = choices or JudgeChoices()
@@ -170,6 +173,8 @@ def judge_for(
     state[~seen | ~np.isfinite(sure)] = UNSEEN
     state[(state == HOLDS) & ~stays_under(measure, sigma, strained)] = UNSEEN
     state[(state == HOLDS) & taken_back(fields, region, choices)] = UNSEEN
+    if silent is not None and silent.spans:
+        state[(state == HOLDS) & silent.over(fields.lats[:, None], fields.lons[None, :], fields.times)] = UNSEEN
     owner = owners(fields, flags, region, choices)
     given = _given(use, fields, flags, owner, (strained, broken), choices)
     flag_of = np.where(given > state, owner, -1)
@@ -178,7 +183,7 @@ def judge_for(
     measure = np.where(seen, measure, np.nan)
     judged = JudgedUse(use, fields.times, state, flag_of, owner, measure, np.zeros((0, 0), np.uint8), (), (),
                        (strained, broken), unit)  # fmt: skip
-    states, reasons, evidence = _at_sites(judged, sigma, flags, fields, region, choices)
+    states, reasons, evidence = _at_sites(judged, sigma, flags, fields, region, choices, silent)
     return replace(judged, site_states=states, site_reasons=reasons, site_evidence=evidence)
 
 
@@ -346,7 +351,8 @@ def flag_state(use: Use, flag: Flag, limits: tuple[float, float], choices: Judge
 
 
 def _at_sites(
-    judged: JudgedUse, sigma: Floats, flags: Sequence[Flag], fields: Fields, region: Region, choices: JudgeChoices
+    judged: JudgedUse, sigma: Floats, flags: Sequence[Flag], fields: Fields, region: Region, choices: JudgeChoices,
+    silent: Silences | None,
 ) -> tuple[Bytes, tuple[tuple[str, ...], ...], tuple[tuple[tuple[int, ...], ...], ...]]:
     """States, sentences and flags of the sites: by the cells they stand in, and by what lies over the sites alone."""
     lat = np.array([site.lat for site in region.sites], dtype=np.float64)
@@ -361,6 +367,7 @@ def _at_sites(
     reasons, evidence = [], []
     for number, site in enumerate(region.sites):
         over = _over_site(judged, site, beside[:, number], warned[:, number], flags, choices)
+        doubted = at_places.doubts(site, fields.times, flags, () if silent is None else (silent,))
         sentences: list[str] = []
         rows: list[tuple[int, ...]] = []
         for epoch in range(count):
@@ -373,6 +380,11 @@ def _at_sites(
                 states[epoch, number] = over[epoch]
                 sentences.append(f"{told[number][epoch]}; it reaches the site and makes {judged.use.name} "
                                  f"{STATE_NAMES[int(over[epoch])]}")  # fmt: skip
+                rows.append(())
+                continue
+            if states[epoch, number] == HOLDS and doubted[epoch]:
+                states[epoch, number] = UNSEEN
+                sentences.append(f"{judged.use.name}: {doubted[epoch]}")
                 rows.append(())
                 continue
             behind = int(judged.flag_of[place])

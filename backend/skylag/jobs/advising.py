@@ -29,6 +29,7 @@ from skylag.impact import (
     ground_augmentation,
     satellite_augmentation,
     shapes,
+    silence,
     single_frequency,
     sky,
     survey,
@@ -37,6 +38,7 @@ from skylag.impact.coming import Coming, coming
 from skylag.impact.correction_grid import ConfidenceChoices, GridConfidence
 from skylag.impact.ground_augmentation import StationChoices, StationDay
 from skylag.impact.satellite_augmentation import Availability, ServiceChoices
+from skylag.impact.silence import Silences
 from skylag.impact.single_frequency import LeftOver
 from skylag.impact.sky import Sky
 from skylag.impact.survey import Advice, Explanation, Job
@@ -129,6 +131,11 @@ class DayAdvice:
         return self._archive.flags(head.region, head.day, head.version)
 
     @property
+    def silent(self) -> Silences:
+        """Which receivers were silent when."""
+        return silence.of_facts(self.record.origin.counts, self.record.receivers)
+
+    @property
     def shell_height_m(self) -> float:
         """Of the region's maps."""
         return self.record.region.shell_height_km * 1000.0
@@ -172,8 +179,9 @@ class DayAdvice:
         if sites == kept.sites:
             return kept
         codes, reasons = at_places.in_force(
-            sites, kept.sites, kept.codes, kept.reasons, self.fields, self.flags, self.record.region.thresholds
-        )
+            sites, kept.sites, kept.codes, kept.reasons, self.fields, self.flags, self.record.region.thresholds,
+            (self.silent,),
+        )  # fmt: skip
         return SiteStates(kept.times, sites, codes, reasons)
 
     def states_at(self, site: Site) -> Bytes:
@@ -182,7 +190,8 @@ class DayAdvice:
         for number, one in enumerate(states.sites):
             if (one.lat, one.lon) == (site.lat, site.lon):
                 return states.codes[:, number]
-        return at_places.codes([site], self.fields, self.flags, self.record.region.thresholds)[:, 0]
+        limits = self.record.region.thresholds
+        return at_places.codes([site], self.fields, self.flags, limits, (self.silent,))[:, 0]
 
     def site(self, name: str) -> Site:
         """A site of the region by name.  Raises Missing where it has no such site."""
@@ -269,8 +278,10 @@ class DayAdvice:
         whole = None if any(one is None for one in skies) else _joined_sky([one for one in skies if one is not None])
         limits = self.record.region.thresholds
         places = [Site(job.name, lat, lon) for lat, lon in job.places]
-        judged = at_places.codes(places, fields, [flag for one in days for flag in one.flags], limits)
-        return survey.advise(job, fields, whole, limits, self.shell_height_m, judged)
+        flags, silent = [flag for one in days for flag in one.flags], [one.silent for one in days]
+        judged = at_places.codes(places, fields, flags, limits, silent)
+        doubts = [at_places.doubts(place, fields.times, flags, silent) for place in places]
+        return survey.advise(job, fields, whole, limits, self.shell_height_m, judged, doubts)
 
     def explain(self, job: Job, time: np.datetime64) -> Explanation:
         """Was it the ionosphere, at the job's place and a time."""
@@ -286,7 +297,9 @@ class DayAdvice:
     def station(self, site: Site, choices: StationChoices | None = None) -> StationDay:
         """The slope at an aerodrome against its station's assumptions."""
         limits = self.record.region.thresholds
-        return ground_augmentation.station_day(site, self.fields, self.flags, choices, self.shell_height_m, limits)
+        return ground_augmentation.station_day(
+            site, self.fields, self.flags, choices, self.shell_height_m, limits, (self.silent,)
+        )
 
     def coming(self, site: Site, now: np.datetime64) -> tuple[Coming, ...]:
         """The front that reaches a site next after a GPS time, if any: of this day, or seen late the day before."""

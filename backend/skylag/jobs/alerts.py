@@ -20,7 +20,7 @@ import numpy as np
 from skylag.archive import Archive
 from skylag.archive.notices import Due
 from skylag.errors import FormatError, Refused
-from skylag.impact import at_places
+from skylag.impact import at_places, silence
 from skylag.impact.coming import HORIZON, coming
 from skylag.tables import FLAG_KINDS, STATE_NAMES, UNSEEN, Bytes, Flag, Products, Site
 from skylag.timescales import gps_to_utc
@@ -156,7 +156,7 @@ def _judged(products: Products, sites: Sequence[Site]) -> tuple[tuple[Site, Byte
     """Each site in force with its states (T,) and reasons."""
     states, reasons = at_places.in_force(
         sites, products.region.sites, products.site_states, products.site_reasons, products.fields, products.flags,
-        products.region.thresholds,
+        products.region.thresholds, (silence.of_facts(products.origin.counts, products.receivers),),
     )  # fmt: skip
     return tuple(zip(sites, states.T, reasons, strict=True))
 

@@ -17,7 +17,7 @@ from skylag.archive import Archive, DayHead
 from skylag.archive.outlooks import Kept
 from skylag.constants import L1_M_PER_TECU
 from skylag.errors import Missing, NotEnough, Refused, SkylagError
-from skylag.impact import uses
+from skylag.impact import silence, uses
 from skylag.impact.states import nearest_cells
 from skylag.ionosphere import outlook_score
 from skylag.ionosphere.climatology import climate_of
@@ -58,9 +58,12 @@ def limits_for(region: Region) -> tuple[Limits, ...]:
     return tuple(known)
 
 
-def _hours_of(fields: Fields, wanted: Sequence[Bytes], rows: Any, columns: Any, day: np.datetime64) -> Hour:
+def _hours_of(
+    fields: Fields, wanted: Sequence[Bytes], rows: Any, columns: Any, day: np.datetime64, silent: Bools
+) -> Hour:
     """Maps of a day as hours: means of delay and sigma, the steepest slope, the worst state.
 
+    silent  (T, places) whether the receiver nearest to a place is silent: nothing holds there
     An hour is unseen for a use where fewer than half of its maps see the place and none warns.
     """
     hour = ((fields.times - day.astype("datetime64[ns]")) / np.timedelta64(1, "h")).astype(np.int64)
@@ -83,6 +86,7 @@ def _hours_of(fields: Fields, wanted: Sequence[Bytes], rows: Any, columns: Any, 
                 goal[number, known] = make(source[now][:, known], axis=0)
         for use, codes in enumerate(wanted):
             mine = codes[now][:, rows, columns]
+            mine = np.where(silent[now] & (mine == HOLDS), UNSEEN, mine)
             worst = mine.max(axis=0)
             enough = (mine != UNSEEN).sum(axis=0) * 2 >= len(now)
             states[use, number] = np.where(worst >= STRAINED, worst, np.where(enough & (worst == HOLDS), HOLDS, UNSEEN))
@@ -96,9 +100,11 @@ def _hours(archive: Archive, head: DayHead, places: Region, lats: Floats, lons: 
         fields = archive.fields(head.region, head.day, version=head.version)
         flags = archive.flags(head.region, head.day, head.version)
         grid = replace(places, sites=())  # the cells are enough, and sentences about sites take time
-        judged = [uses.judge_for(use, fields, flags, grid).states for use in uses.uses_of(places)]
+        record = archive.day(head.region, head.day, head.version)
+        silent = silence.of_facts(record.origin.counts, record.receivers)
+        judged = [uses.judge_for(use, fields, flags, grid, silent=silent).states for use in uses.uses_of(places)]
         rows, columns, inside = nearest_cells(fields, lats, lons)
-        found = _hours_of(fields, judged, rows, columns, head.day)
+        found = _hours_of(fields, judged, rows, columns, head.day, silent.over(lats, lons, fields.times))
         kept = {
             name: np.where(inside, getattr(found, name), np.nan).astype(np.float32)
             for name in ("delay", "sigma", "slope")

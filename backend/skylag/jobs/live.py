@@ -21,7 +21,7 @@ from skylag.archive import Archive
 from skylag.chain import Choices
 from skylag.errors import Missing, SkylagError
 from skylag.formats.glance import glance
-from skylag.ionosphere.geometry import geodetic
+from skylag.impact import silence
 from skylag.jobs import alerts, board, hindcast, kept, work
 from skylag.jobs.closed_hours import ClosedHours, Nearness
 from skylag.jobs.under_way import of_day_before
@@ -211,49 +211,34 @@ def unseen_until(
 def silent_areas(products: Products, silent_s: float, limits: Mapping[str, float] | None = None) -> Products:
     """The day with cells and sites unseen, where they would hold, while the receiver nearest to them is silent.
 
-    Silent: it gave data before, and none for longer than a span.  Neighbours may still look across such a place from
-    afar, but what is small and near the ground of the silent one would pass unnoticed.  Warnings stay.  Pure.
+    Warnings stay.  Who was silent when is kept among the facts of the day, for places that are judged later (see
+    `impact.silence`).  Pure.
 
     limits  receiver -> span [s] where it has one of its own
     """
-    fields, rays, region = products.fields, products.samples.rays, products.region
-    receivers = rays.receivers
-    if not len(fields.times) or not receivers:
+    fields, rays = products.fields, products.samples.rays
+    if not len(fields.times) or not rays.receivers:
         return products
-    silent = np.zeros((len(fields.times), len(receivers)), dtype=bool)
-    since = np.zeros(silent.shape, dtype="datetime64[ns]")
-    for number, receiver in enumerate(receivers):
-        limit = _s((limits or {}).get(receiver.name, silent_s))
-        had = np.unique(rays.time[rays.receiver == number])
-        before = np.searchsorted(had, fields.times, side="right") - 1
-        known = before >= 0
-        since[known, number] = had[before[known]]
-        silent[known, number] = fields.times[known] - since[known, number] > limit
-    if not silent.any():
+    spans = [_s((limits or {}).get(receiver.name, silent_s)) for receiver in rays.receivers]
+    data = [np.unique(rays.time[rays.receiver == number]) for number in range(len(rays.receivers))]
+    silent = silence.find(rays.receivers, data, fields.times, spans)
+    if not silent.spans:
         return products
-    places = np.array([geodetic(np.asarray(one.position_m))[:2] for one in receivers], dtype=np.float64)
-
-    def nearest(lats: Any, lons: Any) -> Any:
-        """Row number of the receiver nearest to each place."""
-        lats, lons = np.asarray(lats, dtype=np.float64)[..., None], np.asarray(lons, dtype=np.float64)[..., None]
-        east = (lons - places[:, 1] + 180.0) % 360.0 - 180.0
-        return np.argmin(np.hypot(lats - places[:, 0], east * np.cos(np.radians(lats))), axis=-1)
-
-    cells = silent[:, nearest(fields.lats[:, None], fields.lons[None, :])]
+    cells = silent.over(fields.lats[:, None], fields.lons[None, :], fields.times)
     state = np.where(cells & (fields.state == HOLDS), UNSEEN, fields.state).astype(np.uint8)
     codes, reasons = products.site_states.copy(), []
-    for column, site in enumerate(region.sites):
-        number = int(nearest(site.lat, site.lon))
-        turned = silent[:, number] & (codes[:, column] == HOLDS)
-        codes[turned, column] = UNSEEN
+    for column, site in enumerate(products.region.sites):
         told = list(products.site_reasons[column])
-        for row in np.flatnonzero(turned):
-            last = np.datetime_as_string(since[row, number], unit="m")
-            told[row] = f"{receivers[number].name}, the nearest receiver, has been silent since {last} GPS time"
+        for row, why in enumerate(silent.told(site.lat, site.lon, fields.times)):
+            if why and codes[row, column] == HOLDS:
+                codes[row, column] = UNSEEN
+                told[row] = why
         reasons.append(tuple(told))
+    counts = {**products.origin.counts, silence.FACTS: silence.facts(silent)}
     return replace(
-        products, fields=replace(fields, state=state), site_states=codes, site_reasons=tuple(reasons)
-    )
+        products, fields=replace(fields, state=state), site_states=codes, site_reasons=tuple(reasons),
+        origin=replace(products.origin, counts=counts),
+    )  # fmt: skip
 
 
 # ---------------------------------------------------------------------------------------------- the folder

@@ -1,5 +1,6 @@
 """Routes about maps: fields, one place, one day at a place, lines of sight, coast.  A route parses, asks, encodes."""
 
+from collections.abc import Sequence
 from dataclasses import replace
 from pathlib import Path
 from tempfile import TemporaryDirectory
@@ -13,9 +14,10 @@ from skylag import timescales
 from skylag.archive import Archive, DayRecord, slants
 from skylag.errors import Missing
 from skylag.formats import coast, contours, delimited, ionex, netcdf
+from skylag.impact import at_places, silence
 from skylag.impact.states import carried, honest_state
 from skylag.ionosphere.interpolation import at_geocentric_rows
-from skylag.tables import Fields
+from skylag.tables import Fields, Flag, Site
 from skylag.web import asking, nearby, payloads, sentences, witnesses
 from skylag.web.frames import Answers
 
@@ -64,8 +66,16 @@ def reading(
     record = archive.day(region, asking.day(day), version)
     epoch = _nearest(record, moment)
     cell = archive.cell_at(record, lat, lon, epoch)
-    near = nearby.active_near(archive.flags(region, record.head.day, record.head.version), lat, lon, epoch)
-    return payloads.reply(payloads.reading(cell, record, lat, lon, near))
+    flags = archive.flags(region, record.head.day, record.head.version)
+    near = nearby.active_near(flags, lat, lon, epoch)
+    (doubt,) = _doubts(record, lat, lon, cell, flags)
+    return payloads.reply(payloads.reading(cell, record, lat, lon, near, doubt))
+
+
+def _doubts(record: DayRecord, lat: float, lon: float, cell: Fields, flags: Sequence[Flag]) -> list[str]:
+    """Why nothing may hold at a place at the times of a cell, whatever the cell says; "" where it may."""
+    silent = silence.of_facts(record.origin.counts, record.receivers)
+    return at_places.doubts(Site("", lat, lon), cell.times, flags, (silent,))
 
 
 @router.get("/api/days/{region}/{day}/series", summary="The day at a place")
@@ -79,7 +89,8 @@ def series(
     cell = archive.series(region, record.head.day, lat, lon, record.head.version)
     flags = archive.flags(region, record.head.day, record.head.version)
     near = [nearby.active_near(flags, lat, lon, time) for time in cell.times]
-    return payloads.reply(payloads.series(cell, record, near, record.cell_of(lat, lon) is not None))
+    doubts = _doubts(record, lat, lon, cell, flags)
+    return payloads.reply(payloads.series(cell, record, near, record.cell_of(lat, lon) is not None, doubts))
 
 
 @router.get("/api/days/{region}/{day}/witnesses", summary="Lines of sight behind what is said of a place")

@@ -12,6 +12,7 @@ import io
 import json
 import math
 from collections.abc import Callable, Mapping, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -35,7 +36,7 @@ from skylag.impact.survey import Advice, Explanation
 from skylag.ionosphere.beside import Beside
 from skylag.ionosphere.geometry import geodetic
 from skylag.ionosphere.outlook import LEAST_DAYS, RANGES, Span
-from skylag.tables import STATE_NAMES, UNSEEN, Biases, Fields, Flag, Problem, Rays, Region, Site
+from skylag.tables import HOLDS, STATE_NAMES, UNSEEN, Biases, Fields, Flag, Problem, Rays, Region, Site
 from skylag.web import nearby, sentences
 from skylag.web.witnesses import DayNetwork, Sightline
 
@@ -287,10 +288,11 @@ def rays(table: Rays, asked: np.datetime64) -> dict[str, Any]:
 
 
 def series(
-    cell: Fields, record: DayRecord, near: Sequence[Sequence[nearby.NearFlag]], inside: bool
+    cell: Fields, record: DayRecord, near: Sequence[Sequence[nearby.NearFlag]], inside: bool, doubts: Sequence[str]
 ) -> dict[str, Any]:
-    """The day at one cell; `near` holds the flags near it at each of its times."""
-    cell = carried(cell)
+    """The day at one cell; `near` holds the flags near it at each of its times, `doubts` why nothing may hold at the
+    place then, "" where it may."""
+    cell = _doubted(carried(cell), doubts)
     metres, metres_sigma, state = _metres(cell.vtec), _metres(cell.vtec_sigma), cell.state.reshape(-1)
     sentence = [sentences.OUTSIDE] * len(cell.times)
     if inside:
@@ -300,6 +302,7 @@ def series(
                 delay_m=float(metres[k, 0, 0]), delay_sigma_m=float(metres_sigma[k, 0, 0]),
                 support=int(cell.support[k, 0, 0]), limits=record.region.thresholds, near=near[k],
             )
+            if not (doubts[k] and state[k] == UNSEEN and cell.support[k, 0, 0]) else sentences.of_doubt(doubts[k])
             for k in range(len(cell.times))
         ]  # fmt: skip
     return {
@@ -320,19 +323,28 @@ def series(
     }
 
 
+def _doubted(cell: Fields, doubts: Sequence[str]) -> Fields:
+    """A cell with `unseen` for `holds` at the times with a doubt."""
+    doubted = np.array([bool(one) for one in doubts], dtype=bool)[:, None, None]
+    return replace(cell, state=np.where(doubted & (cell.state == HOLDS), UNSEEN, cell.state).astype(np.uint8))
+
+
 def reading(
-    cell: Fields, record: DayRecord, lat: float, lon: float, near: Sequence[nearby.NearFlag]
+    cell: Fields, record: DayRecord, lat: float, lon: float, near: Sequence[nearby.NearFlag], doubt: str
 ) -> dict[str, Any]:
-    """What is known at a place and time: `cell` holds one map of one cell.  Unseen places have no numbers."""
+    """What is known at a place and time: `cell` holds one map of one cell, `doubt` why nothing may hold at the place
+    then, "" where it may.  Unseen places have no numbers."""
     inside = record.cell_of(lat, lon) is not None
-    cell = carried(cell)
+    cell = _doubted(carried(cell), [doubt])
     code = int(cell.state[0, 0, 0])
     delay_m, sigma_m = float(_metres(cell.vtec)[0, 0, 0]), float(_metres(cell.vtec_sigma)[0, 0, 0])
     slope, slope_sigma = float(cell.slope[0, 0, 0]), float(cell.slope_sigma[0, 0, 0])
     support = int(cell.support[0, 0, 0])
     seen = code != UNSEEN
     sentence = sentences.OUTSIDE
-    if inside:
+    if inside and doubt and not seen and support:
+        sentence = sentences.of_doubt(doubt)
+    elif inside:
         sentence = sentences.of_state(
             code, slope=slope, slope_sigma=slope_sigma, delay_m=delay_m, delay_sigma_m=sigma_m, support=support,
             limits=record.region.thresholds, near=near,

@@ -78,6 +78,11 @@ def of_state(
     return " ".join(parts)
 
 
+def of_doubt(why: str) -> str:
+    """A place that is unseen whatever its map says, and why."""
+    return f"Unseen here: {why}. {_NOT_COVERED}"
+
+
 def _unseen(delay_m: float, delay_sigma_m: float, support: int, limits: Thresholds) -> str:
     if support == 0 or not math.isfinite(delay_m):
         return f"Unseen here: no line of sight passes near enough to say anything. {_NOT_COVERED}"

@@ -11,7 +11,7 @@ from fastapi.responses import Response
 from skylag.archive import Archive, DayRecord, SiteStates
 from skylag.events import Arrival, Event
 from skylag.formats import events as event_files
-from skylag.impact import arrivals, events, uses
+from skylag.impact import arrivals, events, silence, uses
 from skylag.web import asking, payloads, sentences
 
 router = APIRouter()
@@ -38,8 +38,9 @@ def states_for(request: Request, region: str, day: str, use: str, version: int |
     wanted = uses.find_use(record.region, use)
     fields = archive.fields(region, record.head.day, version=record.head.version)
     judged = uses.judge_for(
-        wanted, fields, archive.flags(region, record.head.day, record.head.version), record.region
-    )
+        wanted, fields, archive.flags(region, record.head.day, record.head.version), record.region,
+        silent=silence.of_facts(record.origin.counts, record.receivers),
+    )  # fmt: skip
     table = SiteStates(judged.times, record.region.sites, judged.site_states, judged.site_reasons)
     evidence = [[list(rows) for rows in site] for site in judged.site_evidence]
     return payloads.reply({"use": wanted.name, **payloads.site_states(table), "evidence": evidence})
@@ -58,7 +59,8 @@ def _found(
     flags = archive.flags(region, record.head.day, record.head.version)
     if not use:
         return events.of_day(fields, flags, record.region), _about(record)
-    judged = uses.judge_for(uses.find_use(record.region, use), fields, flags, record.region)
+    silent = silence.of_facts(record.origin.counts, record.receivers)
+    judged = uses.judge_for(uses.find_use(record.region, use), fields, flags, record.region, silent=silent)
     return events.of_use(judged, fields, flags, record.region), _about(record)
 
 
