@@ -288,9 +288,10 @@ def test_the_quiet_day_on_the_page(kept: Kept, window: Window, tmp_path: Path) -
     assert page.inner_text("#flags-title") and "No flag was raised on this day" in page.inner_text("main")
     assert "6 receivers" in page.inner_text("footer")
 
+    assert LATE_BIASES in page.inner_text("footer"), "what was left out is told on the page too, at once"
     notes = page.locator("footer details")
     notes.locator("summary").click()
-    assert LATE_BIASES in notes.inner_text(), "what was left out is told on the page too"
+    assert "no orbit for" in notes.inner_text(), "all notes of a day can be read"
 
     page.goto(f"{window.address}/?region={LOWLAND.replace(' ', '+')}&day={QUIET}&ask=network")
     page.wait_for_selector("#network-table tbody tr")
