@@ -219,6 +219,7 @@ def test_ways_of_seeing_a_slope_are_told_side_by_side(stormy):
 @pytest.mark.parametrize(
     ("sigma", "heading", "speed", "slope"),
     [(6.2, "320 ± 6°", "181 ± 6 m/s", "95 ± 6 mm/km"), (0.31, "320.4 ± 0.3°", "180.6 ± 0.3 m/s", "95.2 ± 0.3 mm/km"),
+     (0.06, "320.4 ± 0.1°", "180.6 ± 0.1 m/s", "95.2 ± 0.1 mm/km"),
      (0.02, "320.38 ± 0.02°", "180.61 ± 0.02 m/s", "95.22 ± 0.02 mm/km")],
 )  # fmt: skip
 def test_no_number_of_a_front_reads_as_exact(stormy, sigma, heading, speed, slope):

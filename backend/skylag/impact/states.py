@@ -387,7 +387,7 @@ def _judge_sites(
 
 def digits_of(sigma: float) -> int:
     """Decimals of a sigma and its value: none; tenths, or hundredths, where it would read as nought."""
-    return 0 if not sigma < 0.95 else 1 if sigma >= 0.095 else 2
+    return 0 if not sigma < 0.95 else 1 if sigma >= 0.05 else 2
 
 
 def plus_minus(sigma: float) -> str:
