@@ -580,7 +580,7 @@ export function limitsSentence({ strained_mm_per_km: strained, broken_mm_per_km:
  * @param {Record<string, number>} limits
  */
 export function holdsSentence({ strained_mm_per_km: strained }) {
-  return `Corrections hold where the slope stays under ${strained} mm/km (95 %), whatever the distance to the base. Whether that is enough for your baseline and tolerance is told under “${PAGE_WORDS.forYourWorkHere}”.`;
+  return `Corrections hold where the slope stays under ${strained} mm/km (95 %), whatever the distance to the base. Whether that is enough for your baseline and tolerances, or for an approach, is told under “${PAGE_WORDS.forYourWorkHere}”.`;
 }
 
 /**
