@@ -63,13 +63,15 @@ def test_quantile_of_a_size(middle: float, sigma: float, share: float) -> None:
 
 
 def test_size_of_errors_by_hand() -> None:
-    """2 mm/km, known exactly, over 10 km: 20 mm of vertical delay, and what the nominal constellation makes of it."""
+    """2 mm/km, known as well as any slope, 0.1 mm/km, over 10 km: 20 mm of vertical delay and 1.645 sigmas of 1 mm, and
+    what the nominal constellation makes of it."""
     found = survey.advise(a_job(), some_fields(2.0, 0.0))
     across, height = survey.nominal_factors(PLACE, 15.0, 400e3)
-    assert found.differential_95 == pytest.approx(20.0, abs=1e-3)
-    assert found.horizontal_95 == pytest.approx(20 * across, abs=1e-2)
-    assert found.vertical_95 == pytest.approx(20 * height, abs=1e-2)
-    assert found.longest_km == pytest.approx(min(50 / (2 * height), 30 / (2 * across)), abs=1e-3)
+    assert found.differential_68 == pytest.approx(20.0 + 0.4677, abs=1e-3)
+    assert found.differential_95 == pytest.approx(21.6449, abs=1e-3)
+    assert found.horizontal_95 == pytest.approx(21.6449 * across, abs=1e-2)
+    assert found.vertical_95 == pytest.approx(21.6449 * height, abs=1e-2)
+    assert found.longest_km == pytest.approx(min(50 / (2.16449 * height), 30 / (2.16449 * across)), abs=1e-3)
     assert set(found.verdict) == {survey.AVOID}
     assert found.index == pytest.approx(2.0)
     assert set(found.index_words) == {"negligible"}

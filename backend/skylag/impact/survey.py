@@ -42,6 +42,10 @@ WORK, AVOID, NOT_SEEN = "work", "avoid", "unseen"
 INDEX_CLASSES = ((2.0, "negligible"), (4.0, "weak"), (8.0, "strong"), (np.inf, "very strong"))
 _WEAK_PPM = INDEX_CLASSES[1][0]
 INDEX_REACH_KM = 150.0
+# No slope counts as known finer, whatever the map says of itself: a tenth of the part per million by which makers let
+# the error of a receiver pair grow with its distance (common practice).  What leans alike over a region all day is not
+# smaller on quiet days, and nothing in the field is decided by it.
+DOUBT_MM_PER_KM = 0.1
 LONGEST_KM = 100.0  # baselines beyond are not spoken of
 MOST_PLACES = 400
 _ALONE = 20  # so many places have a geometry each
@@ -252,10 +256,12 @@ def _differential(job: Job, fields: Fields, limits: Thresholds, judged: Bytes | 
     worst = state if judged is None else np.maximum(state, judged.T)
     warned = np.where((worst >= STRAINED) & (worst > by_map), worst, 0).astype(np.uint8)
     slope, slope_sigma = np.where(seen, slope, np.nan), np.where(seen, slope_sigma, np.nan)
-    middle, sigma = slope * job.baseline_km, slope_sigma * job.baseline_km
-    if job.method == "network":
+    if job.method == "network":  # a plane through stations takes away what leans alike
         middle, sigma = _off_network(job, fields, limits, row, column, slope, slope_sigma)
         seen = seen & np.isfinite(middle)
+    slope_sigma = np.hypot(slope_sigma, DOUBT_MM_PER_KM)
+    if job.method != "network":
+        middle, sigma = slope * job.baseline_km, slope_sigma * job.baseline_km
     return seen, looked, warned, middle, sigma, (slope, slope_sigma)
 
 
