@@ -318,15 +318,19 @@ def _in_order(path: Path, limits: Thresholds) -> Thresholds:
     return limits
 
 
-def _site(path: Path, entry: Mapping[str, Any]) -> Site:
-    which = f"site {entry['name']}" if "name" in entry else "a [[site]]"
-    known = {item.name for item in fields(Site)}
+def _only_known(path: Path, which: str, entry: Mapping[str, Any], known: set[str]) -> None:
+    """Refused where an entry of a region file holds names that nothing reads."""
     unknown = sorted(set(entry) - known)
     if unknown:
         raise Refused(
             f"{path}: {which} knows nothing of {', '.join(unknown)}; it may hold {', '.join(sorted(known))}",
             name=unknown[0], value=entry[unknown[0]], allowed=sorted(known),
         )  # fmt: skip
+
+
+def _site(path: Path, entry: Mapping[str, Any]) -> Site:
+    which = f"site {entry['name']}" if "name" in entry else "a [[site]]"
+    _only_known(path, which, entry, {item.name for item in fields(Site)})
     missing = [name for name in ("name", "lat", "lon") if name not in entry]
     if missing:
         raise Refused(f"{path}: {which} lacks {', '.join(missing)}", name=missing[0], value=None, allowed="a value")
@@ -344,13 +348,7 @@ def _site(path: Path, entry: Mapping[str, Any]) -> Site:
 
 def _use(path: Path, entry: Mapping[str, Any]) -> Use:
     """One [[use]]: name and kind, and what differs from the published values."""
-    known = {item.name for item in fields(Use)}
-    unknown = sorted(set(entry) - known)
-    if unknown:
-        raise Refused(
-            f"{path}: a [[use]] knows nothing of {', '.join(unknown)}; it may hold {', '.join(sorted(known))}",
-            name=unknown[0], value=entry[unknown[0]], allowed=sorted(known),
-        )  # fmt: skip
+    _only_known(path, "a [[use]]", entry, {item.name for item in fields(Use)})
     missing = [name for name in ("name", "kind") if name not in entry]
     if missing:
         raise Refused(

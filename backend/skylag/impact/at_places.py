@@ -56,13 +56,13 @@ def judge(
 
     silent  of the days the maps are of: a place goes with the receiver nearest to itself
     """
-    found = codes(sites, fields, flags, limits, silent)
+    doubted = [doubts(site, fields.times, flags, silent) for site in sites]
+    found = _codes(sites, fields, flags, limits, doubted)
     row, column, inside = _cells(sites, fields)
     warning = _warning(flags)
     told = [
         _reasons(
-            site, found[:, number], (int(row[number]), int(column[number])), fields, warning, limits,
-            doubts(site, fields.times, flags, silent),
+            site, found[:, number], (int(row[number]), int(column[number])), fields, warning, limits, doubted[number]
         )
         if inside[number] else (_OFF,) * len(fields.times)
         for number, site in enumerate(sites)
@@ -110,6 +110,13 @@ def codes(
     sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: Thresholds, silent: Sequence[Silences] = ()
 ) -> Bytes:
     """The same without the reasons (T, sites)."""
+    return _codes(sites, fields, flags, limits, [doubts(site, fields.times, flags, silent) for site in sites])
+
+
+def _codes(
+    sites: Sequence[Site], fields: Fields, flags: Sequence[Flag], limits: Thresholds, doubted: Sequence[Sequence[str]]
+) -> Bytes:
+    """Codes (T, sites), given per site and epoch why nothing may hold there."""
     found = np.zeros((len(fields.times), len(sites)), dtype=np.uint8)
     row, column, inside = _cells(sites, fields)
     warning = _warning(flags)
@@ -125,8 +132,8 @@ def codes(
         for flag in warning:
             if coarse or flag.kind == "irregular":
                 state = np.maximum(state, np.where(over(flag, site, fields.times), _level(flag), 0))
-        doubted = np.array([bool(one) for one in doubts(site, fields.times, flags, silent)], dtype=bool)
-        found[:, number] = np.where((state == HOLDS) & doubted, UNSEEN, state)
+        unsure = np.array([bool(one) for one in doubted[number]], dtype=bool)
+        found[:, number] = np.where((state == HOLDS) & unsure, UNSEEN, state)
     return found
 
 

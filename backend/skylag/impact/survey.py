@@ -256,13 +256,12 @@ def _differential(job: Job, fields: Fields, limits: Thresholds, judged: Bytes | 
     worst = state if judged is None else np.maximum(state, judged.T)
     warned = np.where((worst >= STRAINED) & (worst > by_map), worst, 0).astype(np.uint8)
     slope, slope_sigma = np.where(seen, slope, np.nan), np.where(seen, slope_sigma, np.nan)
+    doubted = np.hypot(slope_sigma, DOUBT_MM_PER_KM)
+    middle, sigma = slope * job.baseline_km, doubted * job.baseline_km
     if job.method == "network":  # a plane through stations takes away what leans alike
         middle, sigma = _off_network(job, fields, limits, row, column, slope, slope_sigma)
         seen = seen & np.isfinite(middle)
-    slope_sigma = np.hypot(slope_sigma, DOUBT_MM_PER_KM)
-    if job.method != "network":
-        middle, sigma = slope * job.baseline_km, slope_sigma * job.baseline_km
-    return seen, looked, warned, middle, sigma, (slope, slope_sigma)
+    return seen, looked, warned, middle, sigma, (slope, doubted)
 
 
 def _session_mean(values: Floats, times: Times, session_min: float) -> Floats:
