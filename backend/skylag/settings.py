@@ -250,13 +250,7 @@ def read_region(path: Path) -> Region:
         wanted = list if written.startswith("[[") else dict
         if not isinstance(content.get(name, wanted()), wanted):
             raise Refused(f"{path}: write {name} as {written}", name=name, value=None, allowed=written)
-    known = {item.name for item in fields(Region)} - {"sites", "thresholds", "uses"}
-    unknown = sorted(set(box) - known)
-    if unknown:
-        raise Refused(
-            f"{path}: [region] knows nothing of {', '.join(unknown)}; it may hold {', '.join(sorted(known))}",
-            name=unknown[0], value=box[unknown[0]], allowed=sorted(known),
-        )  # fmt: skip
+    _only_known(path, "[region]", box, {item.name for item in fields(Region)} - {"sites", "thresholds", "uses"})
     missing = [name for name in ("name", "south", "north", "west", "east") if name not in box]
     if missing:
         raise Refused(f"{path}: [region] lacks {', '.join(missing)}", name=missing[0], value=None, allowed="a value")
@@ -267,13 +261,7 @@ def read_region(path: Path) -> Region:
     if twice:
         raise Refused(f"{path}: two [[site]] are named {twice[0]}", name="site", value=twice, allowed="names apart")
     limits = content.get("thresholds", {})
-    allowed = {item.name for item in fields(Thresholds)}
-    for name in limits:
-        if name not in allowed:
-            raise Refused(
-                f"{path}: [thresholds] knows nothing of {name}; it may hold {', '.join(sorted(allowed))}",
-                name=name, value=limits[name], allowed=sorted(allowed),
-            )  # fmt: skip
+    _only_known(path, "[thresholds]", limits, {item.name for item in fields(Thresholds)})
     thresholds = _in_order(path, Thresholds(**{name: _number(path, name, limits[name]) for name in limits}))
     uses = tuple(_use(path, entry) for entry in content.get("use", []))
     names = [use.name for use in uses]
